@@ -1,0 +1,143 @@
+"""Settings of the planner, in groups named like the groups of the parameter file."""
+
+from __future__ import annotations
+
+import attrs
+
+from .parameter import parameter
+
+
+@attrs.frozen
+class Coupling:
+    """How strongly robots copy their neighbours."""
+
+    strength: float = parameter(
+        1.0, "price of turning differently from a neighbour (chi)", minimum=0.0, maximum=1e4, live=True
+    )
+    alignment: float = parameter(
+        0.0, "price of a heading that differs from a neighbour's; 0 turns it off", "1/m^2",
+        minimum=0.0, maximum=1e3, live=True,
+    )
+
+
+@attrs.frozen
+class Prices:
+    """Small prices beside the coupled cost, and the steep ones that stand for promises."""
+
+    curvature_rate: float = parameter(
+        0.02, "price of changing the curvature", "s^2", minimum=1e-6, maximum=100.0, live=True
+    )
+    acceleration: float = parameter(
+        0.02, "price of speeding up and braking", "s^4/m^4", minimum=1e-6, maximum=100.0, live=True
+    )
+    speed: float = parameter(
+        0.5, "price of leaving the asked speed, relative", "1/m^2", minimum=1e-4, maximum=1e3, live=True
+    )
+    clearance: float = parameter(
+        100.0, "price of each metre of missing clearance, per second", "1/(m^3 s)", above=0.0, maximum=1e6, live=True
+    )
+    end: float = parameter(
+        50.0, "price of each metre or radian by which an end is missed", "1/m^2", above=0.0, maximum=1e6, live=True
+    )
+
+
+@attrs.frozen
+class Horizon:
+    """How far and how often the planner looks ahead."""
+
+    intervals: int = parameter(24, "intervals of the horizon", minimum=4, maximum=200)
+    interval: float = parameter(0.25, "length of an interval", "s", minimum=0.05, maximum=2.0)
+    rate: float = parameter(10.0, "plans a second", "1/s", minimum=1.0, maximum=50.0)
+    budget: float = parameter(0.09, "time that one plan may take", "s", minimum=0.002, maximum=1.0)
+    lead: float = parameter(
+        1.0, "time given to making the rest of a manoeuvre anew while it runs", "s", minimum=0.2, maximum=10.0
+    )
+
+    @property
+    def duration(self) -> float:
+        """Length of the horizon in seconds."""
+        return self.intervals * self.interval
+
+
+@attrs.frozen
+class Commands:
+    """What is sent to the robots."""
+
+    rate: float = parameter(20.0, "commands a second", "1/s", minimum=2.0, maximum=100.0)
+    publish: bool = parameter(True, "false plans without driving: nothing is sent to the robots")
+    zeros_after_end: float = parameter(
+        1.0, "time for which a standing fleet is sent zeros after the end", "s", minimum=0.0, maximum=60.0
+    )
+
+
+@attrs.frozen
+class SiteRules:
+    """The rules of the site; they tighten the robots' limits and never loosen them."""
+
+    reference: str = parameter("the site's operating rules", "the site's own document that warnings quote")
+    min_clearance: float = parameter(
+        0.5, "smallest allowed distance between two robots' footprints", "m", minimum=0.0, maximum=100.0, live=True
+    )
+    max_speed: float = parameter(50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True)
+    max_lateral_acceleration: float = parameter(
+        20.0, "largest lateral acceleration for every robot on the site", "m/s^2", above=0.0, maximum=20.0, live=True
+    )
+
+
+@attrs.frozen
+class Clearance:
+    """What the planner keeps beyond the site's smallest clearance."""
+
+    pose_uncertainty: float = parameter(
+        0.05, "uncertainty of a pose, added for each robot of a pair", "m", minimum=0.0, maximum=5.0, live=True
+    )
+    response_uncertainty: float = parameter(
+        0.02, "part of a robot's response time that is not known; times its speed, added for each robot",
+        "s", minimum=0.0, maximum=2.0, live=True,
+    )
+    reach: float = parameter(
+        4.0, "pairs that come nearer than the smallest clearance plus this are watched by the optimisation",
+        "m", above=0.0, maximum=100.0,
+    )
+
+
+@attrs.frozen
+class Poses:
+    """Which poses are believed, and how noisy they are."""
+
+    max_age: float = parameter(0.5, "older poses are not used", "s", above=0.0, maximum=10.0, live=True)
+    max_future: float = parameter(0.1, "poses from further in the future are not used", "s", minimum=0.0, maximum=10.0, live=True)
+    max_jump: float = parameter(0.5, "a larger jump of a pose stops the group", "m", above=0.0, maximum=100.0, live=True)
+    noise_xy: float = parameter(0.02, "standard deviation of a pose's position", "m", above=0.0, maximum=5.0, live=True)
+    noise_heading_deg: float = parameter(
+        0.5, "standard deviation of a pose's heading", "deg", above=0.0, maximum=45.0, live=True
+    )
+
+
+@attrs.frozen
+class Progress:
+    """How the group's progress along the reference slows when a robot is held up."""
+
+    dead_band: float = parameter(0.05, "lag that slows nobody", "m", minimum=0.0, maximum=10.0, live=True)
+    full_lag: float = parameter(0.4, "lag beyond the dead band at which progress is slowest", "m", above=0.0, maximum=20.0, live=True)
+    look_ahead: float = parameter(
+        0.5, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0, live=True
+    )
+    filter_time: float = parameter(0.2, "time constant of the filter on each robot's lag", "s", minimum=0.0, maximum=5.0, live=True)
+    slowest: float = parameter(0.15, "slowest progress before the group is stopped", "", minimum=0.05, maximum=1.0, live=True)
+    recovery: float = parameter(0.5, "rate at which progress returns to full", "1/s", above=0.0, maximum=10.0, live=True)
+    max_lag: float = parameter(1.5, "a lag beyond this stops the group in step", "m", above=0.0, maximum=100.0, live=True)
+
+
+@attrs.frozen
+class Settings:
+    """All groups together; ``Settings()`` holds every default."""
+
+    coupling: Coupling = Coupling()
+    prices: Prices = Prices()
+    horizon: Horizon = Horizon()
+    commands: Commands = Commands()
+    site_rules: SiteRules = SiteRules()
+    clearance: Clearance = Clearance()
+    poses: Poses = Poses()
+    progress: Progress = Progress()

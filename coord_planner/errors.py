@@ -1,0 +1,30 @@
+"""The exception tree: every error that a user can cause says what to do about it."""
+
+
+class CoordPlannerError(Exception):
+    """Base of all errors that this package raises on purpose; its text is meant for people."""
+
+
+class SettingsError(CoordPlannerError):
+    """A parameter file or a parameter value that cannot be used.
+
+    The text names the file, the key, the value that was given and what is allowed.
+    """
+
+    def __init__(self, problem: str, *, key: str = "", file: str = "", allowed: str = "") -> None:
+        self.problem, self.key, self.file, self.allowed = problem, key, file, allowed
+        where = ": ".join(part for part in (file, key) if part)
+        text = f"{where}: {problem}" if where else problem
+        super().__init__(f"{text}; allowed: {allowed}" if allowed else text)
+
+
+class RefusedError(CoordPlannerError):
+    """A request that cannot be kept; nothing has moved because of it."""
+
+    def __init__(self, reason: str, remedy: str) -> None:
+        self.reason, self.remedy = reason, remedy
+        super().__init__(f"{reason}; {remedy}")
+
+
+class SolveError(CoordPlannerError):
+    """An optimisation gave no usable plan."""

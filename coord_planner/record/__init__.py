@@ -1,0 +1,1 @@
+"""Runs to and from files, their figures and their pages."""

@@ -1,0 +1,1 @@
+"""Simulated fleets and closed-loop rehearsals, without ROS."""
