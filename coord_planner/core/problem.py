@@ -1,0 +1,132 @@
+"""Problem: all that one plan depends on, as data that one can look at, save and solve again."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from .fleet import Fleet
+from .settings import Prices
+
+# Order of the state of a robot in every array: pose, what the machine has reached, what was commanded.
+STATES = ("x", "y", "theta", "curvature", "speed", "curvature_command", "speed_command")
+X, Y, THETA, CURVATURE, SPEED, CURVATURE_COMMAND, SPEED_COMMAND = range(len(STATES))
+POSE = slice(0, 3)
+
+
+@attrs.frozen(eq=False)
+class Bounds:
+    """Limits in force at nodes 1 .. M (or in intervals), each of shape (N, M)."""
+
+    max_curvature: np.ndarray
+    min_speed: np.ndarray
+    max_speed: np.ndarray
+    max_turn_rate: np.ndarray
+    max_lateral_acceleration: np.ndarray
+
+
+@attrs.frozen(eq=False)
+class Watch:
+    """Pairs whose clearance binds. P pairs.
+
+    Attributes:
+        pairs: positions of the robots, shape (P, 2).
+        normals: unit vectors from first to second at nodes 1 .. M, shape (P, M, 2), taken from exact geometry.
+        gaps: distance that must be kept along the normal, shape (P, M), metres.
+    """
+
+    pairs: np.ndarray
+    normals: np.ndarray
+    gaps: np.ndarray
+
+
+@attrs.frozen(eq=False)
+class Problem:
+    """N robots, M intervals, E edges.
+
+    Attributes:
+        fleet: limits, footprints and responses, in the order of the arrays.
+        edges, weights: neighbour graph, shapes (E, 2) and (E,).
+        coupling: chi. alignment: price of heading differences, 1/m^2.
+        prices: the small and the steep ones.
+        times: nodes, shape (M + 1,), seconds, increasing.
+        pace: progress rate of the reference that the times are laid out for (1 = as planned): costs are counted
+            per second of the reference, not of the clock, so that slowing the group re-prices nothing.
+        initial: state at the first node, shape (N, 7), in the order of STATES.
+        asked_speed: shape (N, M), m/s.
+        turn_speed: speed by which a turn rate is divided to give the turning u, shape (N,), m/s.
+        target: state at the last node, shape (N, 7); NaN where free.
+        bounds: limits in force.
+        watch: pairs with a clearance to keep.
+    """
+
+    fleet: Fleet
+    edges: np.ndarray
+    weights: np.ndarray
+    coupling: float
+    alignment: float
+    prices: Prices
+    times: np.ndarray
+    pace: float
+    initial: np.ndarray
+    asked_speed: np.ndarray
+    turn_speed: np.ndarray
+    target: np.ndarray
+    bounds: Bounds
+    watch: Watch
+
+    @property
+    def shape(self) -> Shape:
+        return Shape(
+            len(self.fleet), len(self.times) - 1,
+            tuple(map(tuple, self.edges.tolist())), tuple(map(tuple, self.watch.pairs.tolist())),
+        )
+
+    @property
+    def intervals(self) -> np.ndarray:
+        """Lengths of the intervals, shape (M,), seconds."""
+        return np.diff(self.times)
+
+
+@attrs.frozen
+class Shape:
+    """What a compiled problem depends on; everything else is a number handed to it."""
+
+    robots: int
+    intervals: int
+    edges: tuple[tuple[int, int], ...]
+    pairs: tuple[tuple[int, int], ...]
+
+
+def bounds_in_force(
+    fleet: Fleet, initial: np.ndarray, times: np.ndarray, end_time: float, end_speed: float,
+    speed_cap: float, lateral_cap: float,
+) -> Bounds:
+    """Limits at nodes 1 .. M, each an envelope that comes back at the braking or steering rate.
+
+    A state outside a limit (the limit was lowered, a disturbance, a stand-still below min_speed) could not
+    return at once; the envelope is the fastest return that the machine's own rates allow. After ``end_time``
+    the manoeuvre goes straight on at ``end_speed``.
+    """
+    elapsed = (times[1:] - times[0])[None, :]
+    after = (times[1:] > end_time - 1e-9)[None, :]
+    to_end = np.maximum(end_time - times[1:], 0.0)[None, :]
+
+    def column(name: str) -> np.ndarray:
+        return fleet.limit(name)[:, None]
+
+    steer, brake, speed_up = column("max_curvature_rate"), column("max_braking"), column("max_acceleration")
+    kappa = np.abs(initial[:, CURVATURE_COMMAND])[:, None]
+    speed = initial[:, SPEED_COMMAND][:, None]
+    kappa_back = np.maximum(kappa - steer * elapsed, 0.0)
+    speed_back = np.maximum(np.abs(speed) - brake * elapsed, 0.0)
+    # Straight on after the end: the last curvature and speed go back as fast as the machine allows.
+    curvature = np.maximum(np.where(after, 0.0, column("max_curvature")), kappa_back)
+    top = np.minimum(column("max_speed"), speed_cap)
+    upper = np.maximum(np.where(after, np.minimum(end_speed, top), top), speed_back)
+    lower = np.minimum(column("min_speed"), np.minimum(speed + speed_up * elapsed, end_speed + brake * to_end))
+    lower = np.where(after, np.minimum(lower, end_speed), lower)
+    back = speed_back * kappa_back
+    turn = np.maximum(column("max_turn_rate"), back)
+    lateral = np.maximum(np.minimum(column("max_lateral_acceleration"), lateral_cap), speed_back * back)
+    return Bounds(curvature, lower, upper, turn, lateral)
