@@ -1,24 +1,72 @@
-"""What is asked of the fleet, and from it an end for each robot (interface; bodies follow)."""
+"""What is asked of the fleet, and from it an end for each robot."""
 
 from __future__ import annotations
 
+import math
 from typing import Optional, Union
 
 import attrs
+import numpy as np
 
+from ..errors import RefusedError, SettingsError
+from . import outline
+from .dubins import ArcPath, paths, shortest
+from .fleet import Fleet, weakest
 from .parameter import parameter
+from .profile import SpeedProfile, speed_profile
+from .settings import Settings
+
+# Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
+_COMFORT = 0.7
+# Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
+_RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
+_LONGER = 1.12
 
 
 @attrs.frozen
 class EqualRadius:
-    """Everyone turns by the same angle at the same radius."""
+    """Everyone turns by the same angle at the same radius, easing in and out of the turn."""
 
     angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-720.0, maximum=720.0)
-    radius: float = parameter(5.0, "radius of the turn", "m", above=0.0, maximum=1000.0)
+    radius: float = parameter(5.0, "tightest radius of the turn", "m", above=0.0, maximum=1000.0)
     speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
     end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4)
-    alignment: Optional[float] = parameter(None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+
+@attrs.frozen
+class ToEnds:
+    """Named robots get an end pose or an end heading; the others copy their neighbours."""
+
+    ends_deg: tuple[str, ...] = parameter(
+        attrs.NOTHING, "an end for each named robot: 'NAME pose X Y HEADING_DEG' or 'NAME heading HEADING_DEG'"
+    )
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    duration: float = parameter(
+        0.0, "time for the manoeuvre; 0: worked out from the longest way", "s", minimum=0.0, maximum=600.0
+    )
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def ends(self) -> dict[str, End]:
+        """The end of each named robot; SettingsError for an entry that cannot be read."""
+        found: dict[str, End] = {}
+        for entry in self.ends_deg:
+            name, end = _read_end(entry)
+            if name in found:
+                raise SettingsError(f"{name!r} has two ends", key="ends_deg", allowed="one end a robot")
+            found[name] = end
+        return found
 
 
 @attrs.frozen
@@ -30,20 +78,296 @@ class End:
     y: Optional[float] = None
 
 
-@attrs.frozen
-class ToEnds:
-    """Named robots get an end pose or an end heading; the others copy their neighbours.
-
-    ``ends_deg`` entries: ``"mower_1 pose 12.0 8.0 90.0"`` or ``"mower_1 heading 90.0"``.
-    """
-
-    ends_deg: tuple[str, ...] = parameter(attrs.NOTHING, "an end for each named robot: 'NAME pose X Y HEADING_DEG' or 'NAME heading HEADING_DEG'")
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
-    duration: float = parameter(0.0, "time for the manoeuvre; 0: worked out from the longest way", "s", minimum=0.0, maximum=600.0)
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4)
-    alignment: Optional[float] = parameter(None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3)
-
-
 Manoeuvre = Union[EqualRadius, ToEnds]
 KINDS: dict[str, type] = {"equal_radius": EqualRadius, "to_ends": ToEnds}
+
+
+@attrs.frozen(eq=False)
+class Task:
+    """A manoeuvre worked out for the poses in which it begins. N robots.
+
+    Attributes:
+        name: of the manoeuvre.
+        ends: shape (N, 3), headings unwrapped; NaN where nothing is asked.
+        speed: asked speed of the fleet, m/s. asked: of each robot, shape (N,): who has a shorter way drives slower.
+        end_speed: m/s.
+        duration: seconds, a whole number of intervals.
+        ways: a guessed way for each robot.
+        profile: how far along its way, relative to the longest, a robot is at which time.
+        coupling, alignment: in force for this manoeuvre.
+    """
+
+    name: str
+    ends: np.ndarray
+    speed: float
+    asked: np.ndarray
+    end_speed: float
+    duration: float
+    ways: tuple[ArcPath, ...]
+    profile: SpeedProfile
+    coupling: float
+    alignment: float
+
+    def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
+        scale = self.profile.duration / self.duration
+        along, speed = self.profile.distance(times * scale), self.profile.speed(times * scale) * scale
+        longest = max(max(way.length for way in self.ways), 1e-9)
+        parts = [way.length / longest for way in self.ways]
+        poses = np.stack([way.sample(along * part) for way, part in zip(self.ways, parts)])
+        curvatures = np.stack([_curvatures(way, along * part) for way, part in zip(self.ways, parts)])
+        return poses, np.stack([speed * part for part in parts]), curvatures
+
+
+def work_out(
+    name: str, manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings, poses: np.ndarray, speed_now: float,
+    neighbours: np.ndarray,
+) -> Task:
+    """The task that a manoeuvre means from the poses at hand.
+
+    Args:
+        poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
+        neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+
+    Raises:
+        RefusedError: it cannot be kept, with the figures and what to do.
+    """
+    _check_speed(manoeuvre, fleet, settings)
+    _check_start(fleet, settings, poses)
+    if isinstance(manoeuvre, EqualRadius):
+        ways = _equal_ways(manoeuvre, fleet, settings, poses)
+        ends = np.stack([way.end for way in ways])
+        named = ends
+        fixed = 0.0
+    else:
+        named = _named_ends(manoeuvre, fleet)
+        ways, ends = _ways_to_ends(fleet, poses, named, neighbours)
+        fixed = manoeuvre.duration
+    _check_ends(fleet, settings, named)
+    return lay_out(
+        name, fleet, settings, ends, ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
+        speed_now=speed_now, duration=fixed, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
+    )
+
+
+def go_on(task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray) -> Task:
+    """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept."""
+    ways, ends = _ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
+    return lay_out(
+        task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
+        duration=0.0, coupling=task.coupling, alignment=task.alignment,
+    )
+
+
+def lay_out(
+    name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
+    end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
+) -> Task:
+    """Times and speeds for ways that are known; RefusedError when a given duration is too short."""
+    longest = max(way.length for way in ways)
+    profile = speed_profile(
+        longest, speed_now, speed, end_speed,
+        _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),
+    )
+    # Machines that answer late come to rest late; the end holds the whole state.
+    settle = 3.0 * float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
+    step = settings.horizon.interval
+    needed = profile.duration + settle
+    if 0.0 < duration < profile.duration:
+        raise RefusedError(
+            f"{name}: the longest way, {longest:.2f} m, takes {needed:.1f} s at {speed:g} m/s, and "
+            f"{duration:g} s are given",
+            f"give at least {needed:.1f} s, or 0 to have it worked out",
+        )
+    intervals = max(4, math.ceil((duration or needed) / step - 1e-9))
+    lengths = np.array([way.length for way in ways])
+    asked = speed * np.maximum(lengths / max(longest, 1e-9), 0.1)
+    return Task(
+        name, ends, speed, asked, end_speed, intervals * step, ways, profile,
+        settings.coupling.strength if coupling is None else coupling,
+        settings.coupling.alignment if alignment is None else alignment,
+    )
+
+
+def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.ndarray, pieces: int = 16) -> ArcPath:
+    """A turn that eases in and out: curvature rises to 1/radius at ``rate_per_metre``, holds, and falls again.
+
+    Clothoids (Fresnel integrals, DLMF 7.2) in short arcs. A turn too short to reach the radius stays wider.
+    """
+    turn = abs(angle)
+    peak = min(1.0 / radius, math.sqrt(turn * rate_per_metre))
+    ramp = peak / rate_per_metre
+    hold = turn / peak - ramp if peak > 0 else 0.0
+    side = math.copysign(1.0, angle)
+    rising = [(side * peak * (i + 0.5) / pieces, ramp / pieces) for i in range(pieces)]
+    return ArcPath(_start(start), "eased", tuple([*rising, (side * peak, hold), *rising[::-1]]))
+
+
+def _equal_ways(
+    manoeuvre: EqualRadius, fleet: Fleet, settings: Settings, poses: np.ndarray
+) -> tuple[ArcPath, ...]:
+    for robot in fleet.robots:
+        smallest = 1.0 / robot.limits.max_curvature
+        if manoeuvre.radius < smallest - 1e-9:
+            raise RefusedError(
+                f"a radius of {manoeuvre.radius:g} m is {smallest - manoeuvre.radius:.2f} m tighter than "
+                f"{robot.name} can turn (smallest radius {smallest:.2f} m)",
+                f"ask for a radius of at least {_smallest_radius(fleet):.2f} m",
+            )
+    _check_bend(manoeuvre, fleet, settings)
+    rate = _COMFORT * weakest(fleet.limit("max_curvature_rate")) / manoeuvre.speed
+    angle = math.radians(manoeuvre.angle_deg)
+    return tuple(eased_turn(angle, manoeuvre.radius, rate, pose) for pose in poses)
+
+
+def _smallest_radius(fleet: Fleet) -> float:
+    return 1.0 / weakest(fleet.limit("max_curvature"))
+
+
+def _check_bend(manoeuvre: EqualRadius, fleet: Fleet, settings: Settings) -> None:
+    """Turn rate and lateral acceleration at the asked speed and radius."""
+    speed, radius = manoeuvre.speed, manoeuvre.radius
+    for robot in fleet.robots:
+        lateral = min(robot.limits.max_lateral_acceleration, settings.site_rules.max_lateral_acceleration)
+        fastest = min(robot.limits.max_turn_rate * radius, math.sqrt(lateral * radius))
+        if speed > fastest + 1e-9:
+            raise RefusedError(
+                f"at {speed:g} m/s a radius of {radius:g} m asks {robot.name} for {speed / radius:.2f} rad/s and "
+                f"{speed**2 / radius:.2f} m/s^2 sideways; its limits allow {robot.limits.max_turn_rate:g} rad/s and "
+                f"{lateral:g} m/s^2",
+                f"ask for at most {fastest:.2f} m/s or for a wider radius",
+            )
+
+
+def _named_ends(manoeuvre: ToEnds, fleet: Fleet) -> np.ndarray:
+    ends = np.full((len(fleet), 3), np.nan)
+    for name, end in manoeuvre.ends().items():
+        if name not in fleet.names:
+            raise RefusedError(f"{name!r} has an end but is not in the fleet", "name one of " + ", ".join(fleet.names))
+        position = (end.x, end.y) if end.x is not None and end.y is not None else (np.nan, np.nan)
+        ends[fleet.index(name)] = [*position, end.heading]
+    if np.isnan(ends).all():
+        raise RefusedError("no robot has an end", "give at least one robot an end pose or an end heading")
+    return ends
+
+
+def _ways_to_ends(
+    fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False
+) -> tuple[tuple[ArcPath, ...], np.ndarray]:
+    """A way for each robot, and the ends with their windings chosen: those of the shortest way."""
+    wound = ends.copy()
+    found: dict[int, ArcPath] = {}
+    for k in np.flatnonzero(~np.isnan(ends[:, 2])):
+        turning = ends[k, 2] - poses[k, 2]
+        if not keep_winding:
+            turning = math.remainder(turning, 2 * math.pi)
+        if np.isnan(ends[k, 0]):
+            found[k] = _turn_only(fleet, k, poses[k], turning)
+        else:
+            found[k] = _way_to_pose(fleet, k, poses[k], ends[k], turning if keep_winding else None)
+        wound[k, 2] = poses[k, 2] + (found[k].turning if not np.isnan(ends[k, 0]) else turning)
+    leaders = list(found)
+    for k in range(len(fleet)):
+        if k not in found:
+            leader = min(leaders, key=lambda j: float(neighbours[k, j]))
+            joined = np.isfinite(neighbours[k, leader])
+            segments = found[leader].segments if joined else ((0.0, found[leader].length),)
+            found[k] = ArcPath(_start(poses[k]), "copied", segments)
+    return tuple(found[k] for k in range(len(fleet))), wound
+
+
+def _turn_only(fleet: Fleet, k: int, pose: np.ndarray, turning: float) -> ArcPath:
+    limits = fleet.robots[k].limits
+    rate = _COMFORT * limits.max_curvature_rate / limits.max_speed
+    return eased_turn(turning, 2.0 / limits.max_curvature, rate, pose)
+
+
+def _way_to_pose(fleet: Fleet, k: int, pose: np.ndarray, end: np.ndarray, turning: Optional[float]) -> ArcPath:
+    """The widest way that is hardly longer than the shortest, with the asked winding where one is asked."""
+    smallest = 1.0 / fleet.robots[k].limits.max_curvature
+    start, goal = _start(pose), _start(end)
+
+    def candidates(radius: float) -> list[ArcPath]:
+        if turning is None:
+            return [shortest(start, goal, radius)]
+        return [path for path in paths(start, goal, radius) if abs(path.turning - turning) < 0.1]
+
+    tightest = candidates(smallest * _RADII[-1])
+    if not tightest:
+        tightest = [shortest(start, goal, smallest * _RADII[-1])]
+    best = min(tightest, key=lambda path: path.length)
+    for multiple in _RADII:
+        same = [
+            path for path in candidates(smallest * multiple)
+            if path.length <= _LONGER * best.length and abs(path.turning - best.turning) < 0.1
+        ]
+        if same:
+            return min(same, key=lambda path: path.length)
+    return best
+
+
+def _start(pose: np.ndarray) -> tuple[float, float, float]:
+    return float(pose[0]), float(pose[1]), float(pose[2])
+
+
+def _curvatures(way: ArcPath, along: np.ndarray) -> np.ndarray:
+    curvatures = np.array([curvature for curvature, _ in way.segments])
+    ends = np.cumsum([length for _, length in way.segments])
+    return curvatures[np.minimum(np.searchsorted(ends, along), len(curvatures) - 1)]
+
+
+def _check_speed(manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings) -> None:
+    cap = settings.site_rules.max_speed
+    for robot in fleet.robots:
+        top = min(robot.limits.max_speed, cap)
+        if manoeuvre.speed > top + 1e-9:
+            raise RefusedError(
+                f"{manoeuvre.speed:g} m/s is asked and {robot.name} may drive {top:g} m/s",
+                f"ask for at most {min(weakest(fleet.limit('max_speed')), cap):g} m/s",
+            )
+
+
+def _check_start(fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:
+    _check_apart(fleet, settings, poses, np.arange(len(fleet)), "stand", "move them apart by hand before it begins")
+
+
+def _check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray) -> None:
+    placed = np.flatnonzero(~np.isnan(ends[:, 0]))
+    _check_apart(fleet, settings, ends, placed, "would end", "move the ends apart")
+
+
+def _check_apart(
+    fleet: Fleet, settings: Settings, poses: np.ndarray, which: np.ndarray, verb: str, remedy: str
+) -> None:
+    polygons = outline.outlines(fleet.corners()[which], poses[which])
+    gap, (k, j) = outline.closest(polygons, outline.all_pairs(len(which)))
+    allowed = settings.site_rules.min_clearance
+    if gap < allowed - 1e-6:
+        first, second = fleet.names[which[k]], fleet.names[which[j]]
+        raise RefusedError(
+            f"{first} and {second} {verb} {gap:.2f} m apart, {allowed - gap:.2f} m short of the site's "
+            f"smallest clearance of {allowed:g} m",
+            remedy,
+        )
+
+
+def _read_end(entry: str) -> tuple[str, End]:
+    words = entry.split()
+    try:
+        if len(words) == 5 and words[1] == "pose":
+            x, y, heading = (float(word) for word in words[2:])
+            return words[0], End(math.radians(_finite(heading)), _finite(x), _finite(y))
+        if len(words) == 3 and words[1] == "heading":
+            return words[0], End(math.radians(_finite(float(words[2]))))
+    except ValueError:
+        pass
+    raise SettingsError(
+        f"{entry!r} cannot be read", key="ends_deg",
+        allowed="'NAME pose X Y HEADING_DEG' or 'NAME heading HEADING_DEG', finite numbers",
+    )
+
+
+def _finite(number: float) -> float:
+    if not math.isfinite(number):
+        raise ValueError(number)
+    return number

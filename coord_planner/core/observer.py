@@ -1,0 +1,160 @@
+"""Where the robots are and what they have reached: measured poses joined with what they were sent."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import attrs
+import numpy as np
+
+from . import se2
+from .fleet import Fleet
+from .history import CommandHistory, Planned
+from .messages import PoseSample
+from .motion import drive, lags
+from .settings import Poses
+
+_SUBSTEP = 0.025  # seconds; fine against every response lag that matters
+# How much less a model of first order knows after a second: metres, radians, and the part of the asked speed
+# that a machine really reaches (it changes when wheels slip or a machine is held up).
+_DRIFT = np.array([0.02, 0.02, 0.01, 0.6])
+_FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
+
+
+@attrs.frozen(eq=False)
+class Estimate:
+    """N robots at one moment.
+
+    Attributes:
+        states: shape (N, 7), in the order of problem.STATES, headings unwrapped; NaN for robots never heard of.
+        speed_factor: part of its expected speed that each robot reaches, shape (N,).
+        age: seconds since the last believed pose of each robot, shape (N,), inf for none.
+        jumped: robots whose last pose lay further than max_jump from where it was expected.
+    """
+
+    states: np.ndarray
+    speed_factor: np.ndarray
+    age: np.ndarray
+    jumped: tuple[str, ...]
+
+
+class Observer:
+    """An extended Kalman filter for each robot over (x, y, heading, speed factor), all robots at once.
+
+    The motion model is the planner's own: commands take effect after a delay and are reached with a
+    first-order lag. (Filter: Thrun, Burgard & Fox, *Probabilistic Robotics*, 2005, ch. 3, from memory.)
+    """
+
+    def __init__(self, fleet: Fleet, settings: Poses, history: CommandHistory) -> None:
+        count = len(fleet)
+        self._fleet, self._settings, self._history = fleet, settings, history
+        self._lags = lags(fleet)
+        self._mean = np.full((count, 4), np.nan)
+        self._cov = np.zeros((count, 4, 4))
+        self._stamp = np.full(count, -np.inf)
+        self._reached = np.zeros((count, 2))  # speed, curvature, before the speed factor
+
+    def configure(self, fleet: Fleet, settings: Poses) -> None:
+        """New limits or noise; what is known about the robots stays."""
+        self._fleet, self._settings = fleet, settings
+        self._lags = lags(fleet)
+
+    def observe(self, poses: Mapping[str, PoseSample], planned: Planned | None) -> tuple[str, ...]:
+        """Take in newer poses; returns the names of robots that jumped (they start afresh where they are)."""
+        fresh = [
+            (k, poses[name]) for k, name in enumerate(self._fleet.names)
+            if name in poses and poses[name].stamp > self._stamp[k] + 1e-9
+        ]
+        first = [(k, pose) for k, pose in fresh if not np.isfinite(self._stamp[k])]
+        later = [(k, pose) for k, pose in fresh if np.isfinite(self._stamp[k])]
+        for k, pose in first:
+            self._restart(k, pose)
+        if not later:
+            return ()
+        which = np.array([k for k, _ in later])
+        measured = np.array([[pose.x, pose.y, pose.heading] for _, pose in later])
+        self._propagate(which, np.array([pose.stamp for _, pose in later]), planned)
+        jumps = self._correct(which, measured)
+        for place in np.flatnonzero(jumps):
+            self._restart(*later[place], keep_motion=True)
+        return tuple(self._fleet.names[k] for k in which[jumps])
+
+    def estimate(self, now: float, planned: Planned | None) -> Estimate:
+        """Predicted over to a moment, without changing what is known."""
+        known = np.flatnonzero(np.isfinite(self._stamp))
+        count = len(self._fleet)
+        states = np.full((count, 7), np.nan)
+        factor = np.ones(count)
+        if len(known):
+            to = np.full(len(known), now)
+            mean, reached, _ = self._predict(known, to, planned)
+            factor[known] = _doubted(mean[:, 3])
+            commands = self._history.in_effect(np.full((count, 1), now), planned)[known, 0]
+            states[known, :3] = mean[:, :3]
+            states[known, 3], states[known, 4] = reached[:, 1], reached[:, 0] * factor[known]
+            states[known, 5], states[known, 6] = commands[:, 1], commands[:, 0]
+        return Estimate(states, factor, now - self._stamp, ())
+
+    def _restart(self, k: int, pose: PoseSample, keep_motion: bool = False) -> None:
+        heading = pose.heading
+        if np.isfinite(self._mean[k, 2]):
+            heading = self._mean[k, 2] + float(se2.wrap(pose.heading - self._mean[k, 2]))
+        factor = self._mean[k, 3] if keep_motion else 1.0
+        self._mean[k] = [pose.x, pose.y, heading, factor]
+        self._cov[k] = np.diag(np.append(np.diag(self._noise()), 0.05**2))
+        self._stamp[k] = pose.stamp
+        if not keep_motion:
+            self._reached[k] = 0.0
+
+    def _noise(self) -> np.ndarray:
+        s = self._settings
+        return np.diag([s.noise_xy**2, s.noise_xy**2, np.radians(s.noise_heading_deg) ** 2])
+
+    def _predict(
+        self, which: np.ndarray, to: np.ndarray, planned: Planned | None
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Mean (n, 4), reached (n, 2) and the way made (n, 2) at each robot's own moment."""
+        span = np.maximum(to - self._stamp[which], 0.0)
+        steps = max(1, int(np.ceil(span.max() / _SUBSTEP)))
+        h = span / steps
+        times = np.zeros((len(self._fleet), steps))
+        times[which] = self._stamp[which, None] + h[:, None] * (np.arange(steps) + 0.5)
+        commands = self._history.in_effect(times, planned)[which]
+        mean = self._mean[which].copy()
+        path, reached = drive(mean[:, :3], self._reached[which], commands, h, self._lags[which], mean[:, 3])
+        mean[:, :3] = path[:, -1]
+        return mean, reached, path[:, -1, :2] - path[:, 0, :2]
+
+    def _propagate(self, which: np.ndarray, to: np.ndarray, planned: Planned | None) -> None:
+        before = self._mean[which].copy()
+        span = np.maximum(to - self._stamp[which], 0.0)
+        mean, reached, way = self._predict(which, to, planned)
+        jacobian = np.tile(np.eye(4), (len(which), 1, 1))
+        moved = mean - before
+        jacobian[:, 0, 2], jacobian[:, 1, 2] = -moved[:, 1], moved[:, 0]
+        factor = np.maximum(mean[:, 3], 0.05)
+        jacobian[:, 0, 3], jacobian[:, 1, 3] = (way / factor[:, None]).T
+        jacobian[:, 2, 3] = moved[:, 2] / factor
+        drift = np.diag(_DRIFT**2)[None] * span[:, None, None]
+        self._cov[which] = jacobian @ self._cov[which] @ np.swapaxes(jacobian, 1, 2) + drift
+        self._mean[which], self._reached[which], self._stamp[which] = mean, reached, to
+
+    def _correct(self, which: np.ndarray, measured: np.ndarray) -> np.ndarray:
+        """Kalman update; returns which poses lie too far off to be believed, shape (n,) of bool."""
+        innovation = measured - self._mean[which, :3]
+        innovation[:, 2] = se2.wrap(innovation[:, 2])
+        jumps = np.hypot(innovation[:, 0], innovation[:, 1]) > self._settings.max_jump
+        cov = self._cov[which]
+        gain = cov[:, :, :3] @ np.linalg.inv(cov[:, :3, :3] + self._noise())
+        good = ~jumps
+        corrected = self._mean[which] + np.einsum("nij,nj->ni", gain, innovation)
+        corrected[:, 3] = np.clip(corrected[:, 3], 0.05, 1.5)
+        self._mean[which[good]] = corrected[good]
+        self._cov[which[good]] = (cov - gain @ cov[:, :3, :])[good]
+        return jumps
+
+
+def _doubted(factor: np.ndarray) -> np.ndarray:
+    """The factor, drawn to 1 by what may be noise."""
+    off = factor - 1.0
+    return 1.0 + np.sign(off) * np.maximum(np.abs(off) - _FACTOR_DOUBT, 0.0)

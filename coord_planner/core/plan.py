@@ -1,0 +1,110 @@
+"""Plan: every robot's states from node to node, with what it costs and what it could not keep."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from . import outline, se2
+from .fleet import Fleet
+from .problem import POSE, STATES, Problem
+
+
+@attrs.frozen(eq=False)
+class Plan:
+    """N robots, M intervals.
+
+    Attributes:
+        fleet: in the order of the arrays.
+        times: nodes, shape (M + 1,), seconds.
+        states: shape (N, M + 1, 7), in the order of problem.STATES; headings unwrapped.
+        rates: curvature rate and acceleration of the commands in the intervals, shape (N, M, 2).
+        cost: what the optimisation reached.
+        short: missing clearance at nodes 1 .. M, shape (P, M), metres, >= 0 (along the separating line).
+        pairs: positions of the watched pairs, shape (P, 2).
+        missed: how far each end component is missed, shape (N, 7), in its own unit, >= 0.
+        solved: whether the solver reported convergence.
+        solve_time: seconds.
+        vector, multipliers: the solver's own primal and dual vectors, for the next start.
+    """
+
+    fleet: Fleet
+    times: np.ndarray
+    states: np.ndarray
+    rates: np.ndarray
+    cost: float
+    short: np.ndarray
+    pairs: np.ndarray
+    missed: np.ndarray
+    solved: bool
+    solve_time: float
+    vector: np.ndarray
+    multipliers: tuple[np.ndarray, np.ndarray]
+
+    @property
+    def poses(self) -> np.ndarray:
+        """Poses at the nodes, shape (N, M + 1, 3)."""
+        return self.states[:, :, POSE]
+
+    def state(self, time: float) -> np.ndarray:
+        """States at one moment, shape (N, 7). The pose follows the arc of the interval; the rest is linear."""
+        i = int(np.clip(np.searchsorted(self.times, time, side="right") - 1, 0, len(self.times) - 2))
+        part = float(np.clip((time - self.times[i]) / (self.times[i + 1] - self.times[i]), 0.0, 1.0))
+        before, after = self.states[:, i], self.states[:, i + 1]
+        mixed = (1.0 - part) * before + part * after
+        mixed[:, POSE] = _along_arc(before[:, POSE], after[:, POSE], part)
+        return mixed
+
+    def sample(self, times: np.ndarray) -> np.ndarray:
+        """States at several moments, shape (N, K, 7)."""
+        return np.stack([self.state(float(time)) for time in times], axis=1)
+
+    def closest(self, between: int = 2) -> tuple[float, tuple[int, int]]:
+        """Smallest exact clearance over all pairs, at the nodes and ``between`` moments in each interval."""
+        return closest_along(self.fleet, self._dense(between))
+
+    def _dense(self, between: int) -> np.ndarray:
+        parts = np.linspace(0.0, 1.0, between + 1, endpoint=False)
+        before, after = self.poses[:, :-1], self.poses[:, 1:]
+        pieces = np.stack([_along_arc(before, after, part) for part in parts], axis=2)
+        return np.concatenate([pieces.reshape(len(self.states), -1, 3), self.poses[:, -1:]], axis=1)
+
+
+def closest_along(fleet: Fleet, poses: np.ndarray) -> tuple[float, tuple[int, int]]:
+    """Smallest exact clearance and its pair over poses of shape (N, K, 3); pairs that stay far apart are skipped."""
+    pairs = near_pairs(fleet, poses, np.inf if poses.shape[0] < 7 else 3.0)
+    return outline.closest(outline.outlines(fleet.corners(), poses), pairs)
+
+
+def near_pairs(fleet: Fleet, poses: np.ndarray, gap: float) -> np.ndarray:
+    """Pairs whose circumscribed circles come within ``gap`` at equal times, shape (P, 2); at least the nearest pair.
+
+    Args:
+        poses: shape (N, K, 3).
+    """
+    pairs = outline.all_pairs(len(poses))
+    if not len(pairs) or not np.isfinite(gap):
+        return pairs
+    reach = np.linalg.norm(fleet.corners(), axis=2).max(axis=1)
+    apart = np.linalg.norm(poses[pairs[:, 0], :, :2] - poses[pairs[:, 1], :, :2], axis=2).min(axis=1)
+    free = apart - reach[pairs].sum(axis=1)
+    return pairs[free < max(gap, float(free.min()) + 1.0)]
+
+
+def _along_arc(before: np.ndarray, after: np.ndarray, part: float) -> np.ndarray:
+    """Pose a part of the way along the arc that joins two poses (constant twist), shapes (..., 3)."""
+    a, b = np.moveaxis(before, -1, 0), np.moveaxis(after, -1, 0)
+    twist = se2.log(*se2.compose(se2.inverse(tuple(a)), tuple(b)))
+    step = se2.exp(*(part * component for component in twist))
+    return np.stack(np.broadcast_arrays(*se2.compose(tuple(a), step)), axis=-1)
+
+
+def from_solution(problem: Problem, variables: dict[str, np.ndarray], **solver: object) -> Plan:
+    """A plan from the variables of a solved program, by name."""
+    states = np.stack([variables[name] for name in STATES], axis=2)
+    return Plan(
+        fleet=problem.fleet, times=problem.times, states=states,
+        rates=np.stack([variables["curvature_rate"], variables["acceleration"]], axis=2),
+        short=variables["short"], pairs=problem.watch.pairs, missed=variables["over"] + variables["under"],
+        **solver,  # type: ignore[arg-type]
+    )

@@ -1,0 +1,53 @@
+"""Commands over time as they take effect: straight pieces between moments common to all robots."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from .plan import Plan
+from .problem import CURVATURE_COMMAND, SPEED_COMMAND
+
+
+@attrs.frozen(eq=False)
+class Schedule:
+    """Speeds (m/s) and curvatures (1/m) in effect.
+
+    Attributes:
+        times: shape (K,), seconds, increasing. values: shape (N, K, 2). First and last values hold outside.
+    """
+
+    times: np.ndarray
+    values: np.ndarray
+
+    def at(self, times: np.ndarray) -> np.ndarray:
+        """Values at moments of each robot's own: shape (N,) -> (N, 2), or (N, K) -> (N, K, 2)."""
+        columns = [
+            [np.interp(times[k], self.times, self.values[k, :, column]) for column in range(2)]
+            for k in range(len(self.values))
+        ]
+        return np.moveaxis(np.array(columns), 1, -1)
+
+    def moment(self, time: float) -> np.ndarray:
+        """Values of all robots at one moment, shape (N, 2)."""
+        return self.at(np.full(len(self.values), time))
+
+    def splice(self, after: Schedule, switch: float, since: float) -> Schedule:
+        """This schedule until ``switch``, the other one from there on; what lies before ``since`` is dropped."""
+        early = (self.times > since) & (self.times < switch - 1e-6)
+        late = after.times > switch + 1e-6
+        times = np.concatenate([[since], self.times[early], [switch], after.times[late]])
+        values = [
+            self.moment(since)[:, None], self.values[:, early], after.moment(switch)[:, None], after.values[:, late],
+        ]
+        return Schedule(times, np.concatenate(values, axis=1))
+
+
+def of_plan(plan: Plan) -> Schedule:
+    """The commands of a plan."""
+    return Schedule(plan.times, plan.states[:, :, [SPEED_COMMAND, CURVATURE_COMMAND]])
+
+
+def constant(values: np.ndarray, time: float) -> Schedule:
+    """The same commands for ever, shape (N, 2)."""
+    return Schedule(np.array([time]), np.asarray(values, dtype=float)[:, None, :])

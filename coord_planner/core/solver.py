@@ -1,0 +1,109 @@
+"""NLP -> Plan with CasADi's interior-point interface: first solves from a guess, later ones from the last plan."""
+
+from __future__ import annotations
+
+from functools import lru_cache
+from typing import Any, Optional
+
+import attrs
+import casadi as ca
+import numpy as np
+
+from ..errors import SolveError
+from . import ocp
+from .plan import Plan, from_solution
+from .problem import STATES, Problem, Shape
+
+_ENDS = ("over", "under", "end")  # blocks of the last node alone: they do not shift
+_QUIET = {"print_time": False, "record_time": True, "calc_lam_p": False, "error_on_fail": False}
+_COLD = {"tol": 1e-8, "mu_strategy": "adaptive", "max_iter": 500}
+_WARM = {
+    "tol": 1e-5, "constr_viol_tol": 1e-6, "warm_start_init_point": "yes", "mu_init": 1e-4, "max_iter": 60,
+    "warm_start_bound_push": 1e-6, "warm_start_mult_bound_push": 1e-6, "warm_start_slack_bound_push": 1e-6,
+    "warm_start_bound_frac": 1e-6, "warm_start_slack_bound_frac": 1e-6, "mu_strategy": "monotone",
+}
+
+
+@attrs.frozen(eq=False)
+class Start:
+    """Where a solve starts: primal vector and, when known, the multipliers of bounds and rows."""
+
+    vector: np.ndarray
+    multipliers: Optional[tuple[np.ndarray, np.ndarray]] = None
+
+
+@lru_cache(maxsize=32)
+def _solver(shape: Shape, warm: bool, budget: float) -> ca.Function:
+    program = ocp.build(shape)
+    options = dict(_WARM if warm else _COLD)
+    options.update({"print_level": 0, "sb": "yes", "max_wall_time": budget, "fixed_variable_treatment": "make_parameter"})
+    nlp = {"x": program.x, "p": program.p, "f": program.f, "g": program.g}
+    return ca.nlpsol("solve", "ipopt", nlp, {**_QUIET, "ipopt": options})
+
+
+def prepare(shape: Shape, budget: float) -> None:
+    """Build the solvers of a shape ahead of time."""
+    _solver(shape, True, budget)
+
+
+def solve(problem: Problem, start: Start, *, warm: bool = False, budget: float = 60.0) -> Plan:
+    """Solve a problem.
+
+    Args:
+        start: first guess.
+        warm: start from the guess's multipliers with a small barrier, for a problem little different from the last.
+        budget: seconds that the solver may take; the best point so far is returned, marked as not solved.
+
+    Raises:
+        SolveError: the solver returned numbers that are not finite.
+    """
+    program = ocp.build(problem.shape)
+    lower, upper = ocp.variable_bounds(problem)
+    row_lower, row_upper = ocp.row_bounds(problem)
+    arguments = {
+        "x0": start.vector, "p": ocp.numbers(problem), "lbx": lower, "ubx": upper, "lbg": row_lower, "ubg": row_upper,
+    }
+    if start.multipliers is not None:
+        arguments["lam_x0"], arguments["lam_g0"] = start.multipliers
+    solver = _solver(problem.shape, warm, budget)
+    result = solver(**arguments)
+    stats = solver.stats()
+    vector = np.asarray(result["x"]).ravel()
+    if not np.all(np.isfinite(vector)):
+        raise SolveError("the solver returned numbers that are not finite")
+    return from_solution(
+        problem, program.variables.unpack(vector), cost=float(result["f"]), solved=bool(stats["success"]),
+        solve_time=float(stats["t_wall_total"]), vector=vector,
+        multipliers=(np.asarray(result["lam_x"]).ravel(), np.asarray(result["lam_g"]).ravel()),
+    )
+
+
+def start_from_states(problem: Problem, states: np.ndarray) -> Start:
+    """First guess from guessed states, shape (N, M + 1, 7); rates and slacks follow from them."""
+    h = problem.intervals[None, :]
+    named = {name: states[:, :, i] for i, name in enumerate(STATES)}
+    missed = np.nan_to_num(states[:, -1] - problem.target)
+    named["curvature_rate"] = np.diff(named["curvature_command"], axis=1) / h
+    named["acceleration"] = np.diff(named["speed_command"], axis=1) / h
+    named["short"] = np.zeros((len(problem.watch.pairs), len(problem.times) - 1))
+    named["over"], named["under"] = np.maximum(missed, 0.0), np.maximum(-missed, 0.0)
+    return Start(ocp.variable_blocks(problem.shape).pack(named))
+
+
+def start_from_plan(plan: Plan, shape: Shape, steps: int) -> Start:
+    """The last plan and its multipliers, shifted by whole intervals; the last column is repeated."""
+    layouts = (ocp.variable_blocks(shape), ocp.row_blocks(shape))
+    bounds, rows = plan.multipliers
+    moved = [
+        _shift(layout, vector, steps)
+        for layout, vector in ((layouts[0], plan.vector), (layouts[0], bounds), (layouts[1], rows))
+    ]
+    return Start(moved[0], (moved[1], moved[2]))
+
+
+def _shift(layout: Any, vector: np.ndarray, steps: int) -> np.ndarray:
+    blocks = layout.unpack(vector)
+    for name, block in blocks.items():
+        if name not in _ENDS and steps:
+            blocks[name] = np.concatenate([block[:, steps:], np.repeat(block[:, -1:], steps, axis=1)], axis=1)
+    return layout.pack(blocks)

@@ -1,0 +1,96 @@
+"""Controlled stops along the planned curves: in step, or each as hard as it may."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from .fleet import Fleet
+from .motion import drive, lags
+from .plan import closest_along
+from .problem import CURVATURE, POSE, SPEED
+from .schedule import Schedule
+
+_STEP = 0.05  # seconds
+_HARDEST = 0.95  # part of the braking limit that a stop uses; the rest is for rounding and jitter
+_LONGEST = 60.0  # seconds
+
+
+@attrs.frozen(eq=False)
+class Stop:
+    """A chosen stop.
+
+    Attributes:
+        schedule: commands down to standstill.
+        manner: "in step" or "apart".
+        clearance: smallest exact clearance predicted on the way, metres. pair: who comes that near.
+        duration: seconds to standstill of the commands.
+    """
+
+    schedule: Schedule
+    manner: str
+    clearance: float
+    pair: tuple[int, int]
+    duration: float
+
+
+def in_step(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
+    """Everybody's progress along the schedule slows by one common factor, as fast as the weakest brake allows."""
+    return _slow_down(schedule, at, fleet, together=True)
+
+
+def apart(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
+    """Each robot slows along its own curve as hard as its own brake allows."""
+    return _slow_down(schedule, at, fleet, together=False)
+
+
+def choose(schedule: Schedule, at: float, fleet: Fleet, states: np.ndarray, now: float, factor: np.ndarray) -> Stop:
+    """The stop with the larger predicted clearance; in step when both keep the same.
+
+    Args:
+        schedule: in effect so far. at: moment from which it can still be changed.
+        states: estimated, shape (N, 7), at ``now``. factor: part of its speed that each robot really makes, (N,).
+    """
+    stops = [
+        _predicted(now, fleet, states, factor, manner, make(schedule, at, fleet))
+        for manner, make in (("in step", in_step), ("apart", apart))
+    ]
+    return stops[1] if stops[1].clearance > stops[0].clearance + 1e-3 else stops[0]
+
+
+def _slow_down(schedule: Schedule, at: float, fleet: Fleet, together: bool) -> Schedule:
+    count = len(fleet)
+    braking = _HARDEST * fleet.limit("max_braking") * _STEP  # largest drop of speed in a step
+    along = np.full(count, at)
+    ratio = np.ones(count)
+    command = schedule.at(along)
+    times, values = [at], [command]
+    while np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST:
+        ahead = schedule.at(along + ratio * _STEP)
+        speed = np.abs(ahead[:, 0])
+        least = np.where(speed > 1e-9, (np.abs(command[:, 0]) - braking) / np.maximum(speed, 1e-9), 0.0)
+        wanted = np.clip(least, 0.0, ratio)
+        following = np.full(count, wanted.max()) if together else wanted
+        along = along + _STEP * (ratio + following) / 2
+        there = schedule.at(along)
+        slowest = np.maximum(np.abs(command[:, 0]) - braking, 0.0)
+        speeds = np.sign(there[:, 0]) * np.maximum(following * np.abs(there[:, 0]), slowest)
+        command = np.stack([speeds, there[:, 1]], axis=1)
+        ratio = following
+        times.append(times[-1] + _STEP)
+        values.append(command)
+    return Schedule(np.array(times), np.stack(values, axis=1))
+
+
+def _predicted(
+    now: float, fleet: Fleet, states: np.ndarray, factor: np.ndarray, manner: str, stop: Schedule
+) -> Stop:
+    settle = 4.0 * float(lags(fleet).max()) + _STEP
+    until = float(stop.times[-1]) + settle
+    steps = max(1, int(np.ceil((until - now) / _STEP)))
+    h = (until - now) / steps
+    moments = np.broadcast_to(now + h * (np.arange(steps) + 0.5), (len(fleet), steps))
+    reached = np.stack([states[:, SPEED] / np.maximum(factor, 0.05), states[:, CURVATURE]], axis=1)
+    path, _ = drive(states[:, POSE], reached, stop.at(moments), np.full(len(fleet), h), lags(fleet), factor)
+    clearance, pair = closest_along(fleet, path)
+    return Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0]))
