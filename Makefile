@@ -35,7 +35,7 @@ help:
 	@sed -n 's/^# \(make .*\)/\1/p' Makefile
 
 demo: .venv/run.stamp
-	$(PY) -m coord_planner.cli demo
+	.venv/bin/coord-planner demo
 
 test: lint types unit ros colcon
 	@echo "all tests passed"
@@ -66,11 +66,11 @@ clean:
 
 # Editable: changes of the code need no new installation, and parameter files are read from the tree.
 .venv/run.stamp: setup.py setup.cfg | .venv/bin/pip
-	$(PY) -m pip install --quiet --use-pep517 --editable '.[ros]'
+	$(PY) -m pip install -qq --use-pep517 --editable '.[ros]'
 	@touch $@
 
 .venv/test.stamp: .venv/run.stamp
-	$(PY) -m pip install --quiet --use-pep517 --editable '.[ros,test]'
+	$(PY) -m pip install -qq --use-pep517 --editable '.[ros,test]'
 	@touch $@
 
 .venv/bin/pip:
@@ -92,4 +92,4 @@ clean:
 	fi; \
 	echo "making .venv with $$chosen; the first time takes some minutes"; \
 	rm -rf .venv; $$chosen -m venv .venv || { rm -rf .venv; exit 1; }
-	@$(PY) -m pip install --quiet --upgrade pip
+	@$(PY) -m pip install -qq --upgrade pip
