@@ -1,0 +1,43 @@
+"""Where robots shall arrive, from the words of a parameter file, and for the point that is planned with."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+
+import attrs
+
+from ..core.manoeuvre import End, ToEnds
+from ..errors import SettingsError
+from .complaints import nearest, shown
+from .connection import Connection
+
+_FARTHEST = 1e6  # metres or degrees; beyond it lies a slip of the pen
+
+
+def for_turning_points(manoeuvre: ToEnds, connections: Mapping[str, Connection]) -> ToEnds:
+    """The same ends for the points that are planned with; end poses in a file mean the reported points.
+
+    Raises:
+        SettingsError: an end that cannot be used, an end for a robot that is not there, no end at all.
+    """
+    ends = manoeuvre.ends()
+    if not ends:
+        raise SettingsError("no robot has an end", key="ends_deg", allowed="an end for at least one robot")
+    entries = []
+    for entry, (name, end) in zip(manoeuvre.ends_deg, ends.items()):
+        if name not in connections:
+            raise SettingsError(f"{shown(entry)} names {shown(name)}, which is not in robots.names"
+                                f"{nearest(name, connections)}", key="ends_deg", allowed=", ".join(connections))
+        if any(number is not None and abs(number) > _FARTHEST for number in (end.x, end.y, math.degrees(end.heading))):
+            raise SettingsError(f"{shown(entry)} holds a number out of range", key="ends_deg",
+                                allowed=f"at most {_FARTHEST:g} in size")
+        entries.append(_shifted(entry, name, end, connections[name]))
+    return attrs.evolve(manoeuvre, ends_deg=tuple(entries))
+
+
+def _shifted(entry: str, name: str, end: End, connection: Connection) -> str:
+    if end.x is None or end.y is None or connection.pose_offset_x == 0.0:
+        return entry
+    x, y, heading = connection.planned_pose(end.x, end.y, end.heading)
+    return f"{name} pose {x!r} {y!r} {math.degrees(heading)!r}"
