@@ -5,6 +5,7 @@ from __future__ import annotations
 import attrs
 
 from ..core.parameter import parameter
+from ..errors import SettingsError
 
 
 @attrs.frozen
@@ -82,5 +83,17 @@ class Simulation:
         minimum=-1.0, maximum=2.0,
     )
     speed_factor: float = parameter(
-        1.0, "seconds of simulated time in a second of real time, in the simulator node", "", above=0.0, maximum=20.0
+        1.0, "part of the commanded speed that every machine reaches", above=0.0, maximum=2.0
     )
+    publish_clock: bool = parameter(
+        False, "true: the simulator node publishes /clock, for nodes with use_sim_time"
+    )
+    rate_factor: float = parameter(
+        1.0, "seconds of simulated time in a second of real time; other than 1 only with publish_clock",
+        above=0.0, maximum=20.0,
+    )
+
+    def __attrs_post_init__(self) -> None:
+        if self.rate_factor != 1.0 and not self.publish_clock:
+            raise SettingsError(f"{self.rate_factor:g} without publish_clock: nobody else would know the time",
+                                key="rate_factor", allowed="1, or publish_clock: true")
