@@ -1,12 +1,10 @@
 """Minima on few intervals: the curvatures are the only unknowns, the ends the only constraints.
 
-Newton's method on the Lagrangian, with an exact line search replaced by backtracking on cost plus exact penalty
+Newton's method on the Lagrangian, with backtracking on cost plus exact penalty and a second-order correction
 (Nocedal & Wright, *Numerical Optimization*, 2nd ed., ch. 18). Everything in units of the way's length.
 """
 
 from __future__ import annotations
-
-from typing import Optional
 
 import attrs
 import numpy as np
@@ -89,7 +87,7 @@ def _asked(problem: ClassicalProblem, intervals: int) -> _Asked:
 
 
 def _step(hessian: np.ndarray, jacobian: np.ndarray, gradient: np.ndarray,
-          miss: np.ndarray) -> Optional[tuple[np.ndarray, np.ndarray]]:
+          miss: np.ndarray) -> tuple[np.ndarray, np.ndarray] | None:
     """Newton step and new multipliers, or None where the Hessian is not positive definite on the constraints.
 
     Adding J'J to the Hessian changes nothing on the constraints; a little slack on the constraints keeps the step bounded where
@@ -116,7 +114,7 @@ def minimise(problem: ClassicalProblem, guess: np.ndarray, iterations: int = 60)
     asked = _asked(problem, guess.shape[1])
     flat_cost = np.kron(asked.weight, np.eye(asked.intervals)) / asked.intervals
     curvature, multipliers = np.array(guess, dtype=float), np.zeros(2 * len(asked.placed) + len(asked.headed))
-    reached, price, minimal, slope = reach(curvature), 0.0, False, np.inf
+    reached, minimal, slope = reach(curvature), False, np.inf
     for _ in range(iterations):
         miss, jacobian = asked.miss(reached, curvature), asked.jacobian(reached)
         gradient = (asked.weight @ curvature).ravel() / asked.intervals
@@ -131,7 +129,7 @@ def minimise(problem: ClassicalProblem, guess: np.ndarray, iterations: int = 60)
         slope = float(np.abs(gradient + jacobian.T @ multipliers).max()) * asked.intervals
         if np.abs(miss).max(initial=0.0) < 1e-11 and slope < 1e-9 * (1 + asked.cost(curvature)):
             break
-        price = max(price, 2 * float(np.abs(multipliers).max(initial=0.0)))
+        price = 1.5 * float(np.abs(multipliers).max(initial=0.0))
         curvature, reached = _search(asked, curvature, change, price, miss, gradient)
     return Coarse(curvature, asked.costate(multipliers), _end_moment(asked, multipliers), asked.cost(curvature),
                   float(np.abs(asked.miss(reached, curvature)).max(initial=0.0)), slope, minimal)
