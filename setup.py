@@ -55,7 +55,6 @@ setup(
         "plotly>=5.15",
         "pyyaml>=6.0",
         "rich>=13.7",
-        "rosbags>=0.10",
         "scipy>=1.11",
         "shapely>=2.0",
         "typer>=0.9,<0.29",  # 0.29 wants pydantic 2; other programs of Ubuntu 24.04 need its 1.10
