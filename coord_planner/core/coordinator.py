@@ -1,17 +1,57 @@
-"""The receding-horizon loop: Snapshot in, Decision out (interface; the body follows)."""
+"""The receding-horizon loop: Snapshot in, Decision out."""
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Mapping
-from typing import Any, Optional
+from typing import Optional
 
+import attrs
+import networkx as nx
+import numpy as np
+
+from ..errors import CoordPlannerError, RefusedError, SettingsError, SolveError
+from . import gate, manoeuvre, outline, reference, rules, solver, stopping
 from .fleet import Fleet
 from .graph import NeighbourGraph
-from .manoeuvre import Manoeuvre
-from .messages import Answer, Command, Decision, Snapshot, State
+from .history import CommandHistory, Planned
+from .manoeuvre import Manoeuvre, Task
+from .messages import Answer, Caution, Command, Decision, Level, PoseSample, Snapshot, State
+from .observer import Estimate, Observer
+from .plan import Plan, near_pairs
+from .problem import POSE, SPEED_COMMAND
+from .pursuit import Prepared, Pursuit
+from .reference import Reference
 from .settings import Settings
+from .tick import usable
 
-Job = Callable[[], Any]  # pure, slow, may run in any thread; its result goes to Coordinator.deliver
+_KEEP_PLAN = 1.0  # seconds for which an old plan is driven on when no new one comes
+_STANDING = 5e-3  # m/s
+_SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
+
+Answered = Callable[[Answer], None]
+
+
+@attrs.frozen(eq=False)
+class Outcome:
+    """What a job found: a reference, or why there is none."""
+
+    token: int
+    reference: Optional[Reference]
+    reason: str
+
+
+Job = Callable[[], Outcome]  # pure, slow, may run in any thread; its outcome goes to Coordinator.deliver
+
+
+@attrs.frozen(eq=False)
+class _Request:
+    """A reference that is being made, and what becomes of it."""
+
+    token: int
+    kind: str  # "begin", "resume" or "change"
+    answered: Answered
+    request_id: str
 
 
 class Coordinator:
@@ -23,43 +63,486 @@ class Coordinator:
         remembers what was sent. Returns None when nothing is to be published (idle, planning).
       * all requests (``begin``, ``halt``, ``resume``, ``abandon``, ``change``) from any thread; fast.
       * ``jobs()`` after every request and every step: slow work (making references). The caller
-        runs each job in a thread of its choice and hands the result to ``deliver(result, now)``.
+        runs each job in a thread of its choice and hands the outcome to ``deliver(outcome, now)``.
     """
 
-    def __init__(self, fleet: Fleet, graph: NeighbourGraph, settings: Settings,
-                 manoeuvres: Mapping[str, Manoeuvre]) -> None: ...
+    def __init__(
+        self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre]
+    ) -> None:
+        self._lock = threading.RLock()
+        self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
+        self._period = 1.0 / settings.commands.rate
+        self._history = CommandHistory(fleet.response("command_delay"), self._period)
+        self._observer = Observer(fleet, settings.poses, self._history)
+        self._state = State.IDLE
+        self._reason = ""
+        self._pursuit: Optional[Pursuit] = None
+        self._stop: Optional[stopping.Stop] = None
+        self._stop_over = 0.0
+        self._completed = False
+        self._request: Optional[_Request] = None
+        self._jobs: list[Job] = []
+        self._token = 0
+        self._planned_at = 0.0
+        self._ended_at = 0.0
+        self._refused_change = ""
+        self._decision = Decision(0.0, State.IDLE)
 
     @property
-    def state(self) -> State: ...
+    def state(self) -> State:
+        """What the fleet is doing."""
+        return self._state
 
     @property
     def decision(self) -> Decision:
         """The newest decision."""
-        ...
+        return self._decision
 
-    def step(self, snapshot: Snapshot) -> Decision: ...
+    @property
+    def ends(self) -> np.ndarray:
+        """Ends of the manoeuvre in hand or just ended, shape (N, 3), headings unwrapped; NaN where none."""
+        with self._lock:
+            if self._pursuit is None:
+                return np.full((len(self._fleet), 3), np.nan)
+            return self._pursuit.reference.task.ends
 
-    def commands(self, now: float) -> Optional[dict[str, Command]]: ...
+    @property
+    def reference(self) -> Optional[Reference]:
+        """The reference in force."""
+        return self._pursuit.reference if self._pursuit is not None else None
 
-    def begin(self, name: str, snapshot: Snapshot, *, overrides: Mapping[str, float] | None = None,
-              request_id: str = "", answered: Callable[[Answer], None] = lambda _answer: None) -> None:
+    # Requests
+
+    def begin(
+        self, name: str, snapshot: Snapshot, *, overrides: Optional[Mapping[str, float]] = None, request_id: str = "",
+        answered: Answered = lambda _answer: None,
+    ) -> None:
         """Ask for a manoeuvre. ``answered`` is called once: when it was refused or when it begins."""
+        with self._lock:
+            try:
+                wanted = self._manoeuvre(name, overrides or {})
+                self._check_free("begun")
+                estimate = self._look(snapshot)
+                self._check_fit(estimate, snapshot)
+            except CoordPlannerError as error:
+                answered(Answer(False, str(error), request_id))
+                return
+            # Nothing is known of what people sent the robots meanwhile; they must stand.
+            self._history.clear()
+            fleet, graph, settings, states = self._fleet, self._graph, self._settings, estimate.states
+            states[:, 3:] = 0.0
+
+            def make() -> Reference:
+                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, hops(graph))
+                return reference.make(task, fleet, graph, settings, states)
+
+            self._state, self._reason, self._completed = State.PLANNING, "", False
+            self._ask("begin", make, answered, request_id)
 
     def halt(self, now: float, reason: str) -> Answer:
         """A controlled stop of everyone; the fleet is then held."""
-        ...
+        with self._lock:
+            if self._state is State.PLANNING:
+                self._cancel("halted")
+                self._state, self._reason = State.IDLE, reason
+                return Answer(True, "nothing has moved")
+            if self._state is State.MOVING:
+                stop = self._begin_stop(now, reason, completed=False)
+                return Answer(True, f"stopping {stop.manner}, {stop.duration:.1f} s")
+            if self._state is State.HELD and self._request is not None:
+                self._cancel("halted")
+            return Answer(True, f"the fleet is {self._state.value}")
 
-    def resume(self, snapshot: Snapshot, answered: Callable[[Answer], None]) -> None:
+    def resume(self, snapshot: Snapshot, answered: Answered = lambda _answer: None) -> None:
         """Go on with a held manoeuvre, from where the robots stand."""
+        with self._lock:
+            if self._state is not State.HELD or self._pursuit is None or self._request is not None:
+                answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
+                return
+            estimate = self._look(snapshot)
+            try:
+                self._check_fit(estimate, snapshot)
+            except RefusedError as error:
+                answered(Answer(False, str(error)))
+                return
+            fleet, graph, settings = self._fleet, self._graph, self._settings
+            task, states = self._pursuit.reference.task, estimate.states
+            states[:, 4] = states[:, SPEED_COMMAND] = 0.0
+
+            def make() -> Reference:
+                rest = manoeuvre.go_on(task, fleet, settings, states[:, POSE], hops(graph))
+                return reference.make(rest, fleet, graph, settings, states)
+
+            self._ask("resume", make, answered, "")
 
     def abandon(self, now: float) -> Answer:
-        """Give up a held manoeuvre; the fleet is idle afterwards."""
-        ...
+        """Give up a held manoeuvre; the fleet is idle afterwards and people may drive."""
+        with self._lock:
+            if self._state not in (State.HELD, State.PLANNING):
+                return Answer(False, f"the fleet is {self._state.value}; halt it first, then abandon")
+            self._cancel("abandoned")
+            self._state, self._reason, self._pursuit = State.IDLE, "abandoned", None
+            return Answer(True, "abandoned; the robots are no longer commanded")
 
-    def change(self, now: float, *, settings: Settings | None = None, fleet: Fleet | None = None,
-               graph: NeighbourGraph | None = None) -> None:
-        """New settings, limits or neighbours; in motion the rest of the reference is made anew and swapped in."""
+    def change(
+        self, now: float, *, settings: Optional[Settings] = None, fleet: Optional[Fleet] = None,
+        graph: Optional[NeighbourGraph] = None,
+    ) -> None:
+        """New settings, limits or neighbours.
 
-    def jobs(self) -> list[Job]: ...
+        Limits bind the gate and the next tick at once. In motion the rest of the reference is made anew and
+        swapped in when the group reaches the moment from which it was made; the decision then shows the
+        coupling in force.
+        """
+        with self._lock:
+            self._settings = settings or self._settings
+            self._fleet = fleet or self._fleet
+            self._graph = graph or self._graph
+            self._observer.configure(self._fleet, self._settings.poses)
+            if self._state is State.MOVING and self._pursuit is not None:
+                self._remake(now, self._pursuit)
 
-    def deliver(self, result: Any, now: float) -> None: ...
+    # Slow work
+
+    def jobs(self) -> list[Job]:
+        """Work to be done elsewhere; each job is handed out once."""
+        with self._lock:
+            jobs, self._jobs = self._jobs, []
+            return jobs
+
+    def deliver(self, outcome: Outcome, now: float) -> None:
+        """The outcome of a job; outcomes that nobody waits for any more are dropped."""
+        with self._lock:
+            request = self._request
+            if request is None or request.token != outcome.token:
+                return
+            self._request = None
+            if request.kind == "change":
+                self._take_rest(outcome, now)
+                return
+            if outcome.reference is None:
+                if request.kind == "begin":
+                    self._state = State.IDLE
+                self._reason = outcome.reason
+                request.answered(Answer(False, outcome.reason, request.request_id))
+                return
+            self._start(outcome.reference, now)
+            text = f"{outcome.reference.task.name} takes {outcome.reference.end:.1f} s"
+            if np.isfinite(outcome.reference.clearance):
+                text += f", smallest clearance {outcome.reference.clearance:.2f} m"
+            request.answered(Answer(True, text, request.request_id))
+
+    # The loop
+
+    def step(self, snapshot: Snapshot) -> Decision:
+        """One tick: look, judge, plan, decide."""
+        with self._lock:
+            cautions: list[Caution] = []
+            jumped = self._observer.observe(self._believed(snapshot), self._planned)
+            estimate = self._observer.estimate(snapshot.time, self._planned)
+            self._settle(snapshot.time)
+            prepared = None
+            if self._state is State.MOVING and self._pursuit is not None:
+                self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
+                cautions += self._judge(snapshot, estimate, jumped)
+                if self._state is State.MOVING:
+                    prepared = self._prepare(snapshot.time)
+        plan = self._solve(prepared, cautions)
+        with self._lock:
+            if plan is not None and prepared is not None and self._state is State.MOVING and self._pursuit is not None:
+                self._pursuit.install(prepared, plan, snapshot.time - _SINCE)
+                self._planned_at = snapshot.time
+            self._decision = self._decide(snapshot.time, estimate, plan, cautions)
+            return self._decision
+
+    def commands(self, now: float) -> Optional[dict[str, Command]]:
+        """What to send now; None when nothing is to be sent."""
+        with self._lock:
+            if not self._state.holds_fleet or self._pursuit is None:
+                return None
+            wanted = self._pursuit.schedule.at(now + self._history.effect_delay)
+            last = self._history.last
+            before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
+            elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
+            allowed, nonsense = gate.allow(wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules)
+            self._history.add(now, allowed)
+            if nonsense.any() and self._state is State.MOVING:
+                self._begin_stop(now, "a plan held numbers that are not finite", completed=False)
+            return {
+                name: Command(float(speed), float(curvature))
+                for name, (speed, curvature) in zip(self._fleet.names, allowed)
+            }
+
+    # Requests, inside
+
+    def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
+        if name not in self._manoeuvres:
+            raise RefusedError(f"{name!r} is not a manoeuvre", "ask for one of " + ", ".join(self._manoeuvres))
+        wanted = self._manoeuvres[name]
+        known = {field.name: field for field in attrs.fields(type(wanted))}
+        for key, value in overrides.items():
+            if key not in known or isinstance(getattr(wanted, key), tuple):
+                numbers = [key for key in known if not isinstance(getattr(wanted, key), tuple)]
+                raise RefusedError(f"{name} has no number {key!r} to override", "override one of " + ", ".join(numbers))
+            if isinstance(value, bool) or not isinstance(value, (int, float)):
+                raise SettingsError(f"{value!r} is not a number", key=key, allowed="a number")
+        return attrs.evolve(wanted, **{key: float(value) for key, value in overrides.items()})
+
+    def _check_free(self, verb: str) -> None:
+        if self._state not in (State.IDLE, State.ENDED):
+            raise RefusedError(f"nothing can be {verb}: the fleet is {self._state.value}", "halt and abandon it first")
+
+    def _check_fit(self, estimate: Estimate, snapshot: Snapshot) -> None:
+        """Every robot has a fresh pose and may be driven."""
+        stale = [
+            name for name, age in zip(self._fleet.names, estimate.age) if not age <= self._settings.poses.max_age
+        ]
+        if stale:
+            raise RefusedError(
+                f"no fresh pose of {', '.join(stale)} ({self._settings.poses.max_age:g} s allowed)",
+                "check localisation, the topic, its frame and the clocks",
+            )
+        unready = sorted(snapshot.not_ready & set(self._fleet.names))
+        if unready:
+            raise RefusedError(f"{', '.join(unready)} not ready to be driven", "make them ready or disable them")
+
+    def _ask(self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str) -> None:
+        self._token += 1
+        token = self._token
+        intervals, budget = self._settings.horizon.intervals, self._settings.horizon.budget
+
+        def job() -> Outcome:
+            try:
+                made = make()
+            except (RefusedError, SolveError) as error:
+                return Outcome(token, None, str(error))
+            solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
+            return Outcome(token, made, "")
+
+        self._request = _Request(token, kind, answered, request_id)
+        self._jobs = [job]
+
+    def _cancel(self, why: str) -> None:
+        if self._request is not None:
+            self._request.answered(Answer(False, why, self._request.request_id))
+        self._request, self._jobs = None, []
+
+    def _remake(self, now: float, pursuit: Pursuit) -> None:
+        at = pursuit.s(now + self._settings.horizon.lead)
+        old = pursuit.reference
+        if at > old.end - 2 * self._settings.horizon.interval:
+            return
+        at = max(at, float(old.plan.times[0]))
+        fleet, graph, settings = self._fleet, self._graph, self._settings
+        task = self._in_force(old.task)
+        self._ask("change", lambda: reference.make_rest(task, fleet, graph, settings, old, at), lambda _a: None, "")
+
+    def _in_force(self, task: Task) -> Task:
+        """The task with the coupling that the settings ask for, where the manoeuvre has none of its own."""
+        own = self._manoeuvres.get(task.name)
+        coupling, alignment = self._settings.coupling.strength, self._settings.coupling.alignment
+        if own is not None and own.coupling is not None:
+            coupling = own.coupling
+        if own is not None and own.alignment is not None:
+            alignment = own.alignment
+        return attrs.evolve(task, coupling=coupling, alignment=alignment)
+
+    def _take_rest(self, outcome: Outcome, now: float) -> None:
+        if self._state is not State.MOVING or self._pursuit is None:
+            return
+        if outcome.reference is None:
+            self._refused_change = outcome.reason
+            return
+        late = self._pursuit.s(now + self._settings.horizon.budget) > outcome.reference.plan.times[0]
+        if late:  # it starts from a moment that has passed: make it again from a later one
+            self._remake(now, self._pursuit)
+        else:
+            self._pursuit.next_reference = outcome.reference
+
+    def _start(self, made: Reference, now: float) -> None:
+        begins = now + self._lead_time()
+        last = self._history.last
+        values = np.zeros((len(self._fleet), 2)) if last is None else last[1]
+        self._pursuit = Pursuit(made, begins, 0.0, values, self._fleet)
+        self._state, self._reason, self._stop = State.MOVING, "", None
+        self._planned_at, self._refused_change = begins, ""
+
+    # The loop, inside
+
+    def _lead_time(self) -> float:
+        """From a snapshot to the first moment at which a new plan can still change what every robot does."""
+        return self._settings.horizon.budget + float(self._history.effect_delay.max())
+
+    @property
+    def _planned(self) -> Optional[Planned]:
+        return self._pursuit.schedule.at if self._pursuit is not None and self._state.holds_fleet else None
+
+    def _believed(self, snapshot: Snapshot) -> dict[str, PoseSample]:
+        poses = self._settings.poses
+        return {
+            name: pose for name, pose in snapshot.poses.items()
+            if -poses.max_future <= snapshot.time - pose.stamp <= poses.max_age
+            and np.isfinite([pose.x, pose.y, pose.heading]).all()
+        }
+
+    def _look(self, snapshot: Snapshot) -> Estimate:
+        self._observer.observe(self._believed(snapshot), self._planned)
+        return self._observer.estimate(snapshot.time, self._planned)
+
+    def _settle(self, now: float) -> None:
+        """Changes of state that time alone brings."""
+        if self._state is State.STOPPING and now >= self._stop_over:
+            self._state = State.ENDED if self._completed else State.HELD
+            self._ended_at = now
+        elif self._state is State.ENDED and now >= self._ended_at + self._settings.commands.zeros_after_end:
+            self._state = State.IDLE
+        elif self._state is State.MOVING and self._pursuit is not None:
+            self._settle_end(now, self._pursuit)
+
+    def _settle_end(self, now: float, pursuit: Pursuit) -> None:
+        settle = float(self._history.effect_delay.max())
+        if pursuit.s(now - settle) < pursuit.reference.end:
+            return
+        standing = np.abs(pursuit.schedule.moment(now)[:, 0]).max() < _STANDING
+        if standing:
+            self._completed, self._state, self._ended_at = True, State.ENDED, now
+            self._reason = "completed"
+        elif pursuit.reference.task.end_speed > 0.0:
+            self._begin_stop(now, "completed", completed=True)
+
+    def _judge(self, snapshot: Snapshot, estimate: Estimate, jumped: tuple[str, ...]) -> list[Caution]:
+        """What goes wrong while moving, and the stops that follow from it."""
+        settings, names, now = self._settings, self._fleet.names, snapshot.time
+        pursuit = self._pursuit
+        assert pursuit is not None
+        found = [rules.pose_jumped(settings, name) for name in jumped]
+        found += [
+            rules.pose_old(settings, name, float(age), "the fleet stops")
+            for name, age in zip(names, estimate.age) if age > settings.poses.max_age
+        ]
+        found += [rules.not_ready(settings, name) for name in names if name in snapshot.not_ready]
+        found += self._judge_lag(pursuit)
+        if self._refused_change:
+            found.append(rules.change_refused(settings, self._refused_change))
+        if now - self._planned_at > _KEEP_PLAN:
+            found.append(rules.plan_failed(settings, f"no new plan for {now - self._planned_at:.1f} s", "the fleet stops"))
+        found += self._judge_clearance(estimate)
+        grave = [caution for caution in found if caution.level is not Level.WARN]
+        if grave:
+            self._begin_stop(now, grave[0].text, completed=False, estimate=estimate)
+        return found
+
+    def _judge_lag(self, pursuit: Pursuit) -> list[Caution]:
+        found = []
+        allowed = self._settings.progress.max_lag
+        for name, lag in zip(self._fleet.names, pursuit.progress.lag):
+            if lag > allowed:
+                found.append(rules.not_following(self._settings, name, lag, "the fleet stops", Level.ERROR))
+            elif lag > self._settings.progress.dead_band + self._settings.progress.full_lag / 2:
+                found.append(rules.not_following(self._settings, name, lag, "the group slows in step", Level.WARN))
+        return found
+
+    def _judge_clearance(self, estimate: Estimate) -> list[Caution]:
+        poses = estimate.states[:, None, POSE]
+        allowed = self._settings.site_rules.min_clearance
+        gap, pair = outline.closest(
+            outline.outlines(self._fleet.corners(), poses), near_pairs(self._fleet, poses, allowed + 0.5)
+        )
+        # The estimate itself is uncertain: only what is clearly short is called a breach.
+        doubt = self._settings.poses.noise_xy
+        if gap < allowed - doubt:
+            return [rules.clearance_breached(self._settings, self._names(pair), gap, "the fleet stops")]
+        return []
+
+    def _prepare(self, now: float) -> Optional[Prepared]:
+        pursuit = self._pursuit
+        assert pursuit is not None
+        at = now + self._lead_time()
+        pursuit.swap_when_due(at)
+        if pursuit.s(at) >= pursuit.reference.end:
+            self._planned_at = now  # nothing is left to plan: the commands run out in zeros
+            return None
+        if pursuit.s(at) < 0.0:
+            at = pursuit.clock(0.0)
+        predicted = self._observer.estimate(at, self._planned).states
+        return pursuit.prepare(at, predicted, self._fleet, self._settings)
+
+    def _solve(self, prepared: Optional[Prepared], cautions: list[Caution]) -> Optional[Plan]:
+        """Solve a tick; None, with a warning, when what comes out cannot be driven."""
+        if prepared is None:
+            return None
+        settings = self._settings
+        try:
+            warm = prepared.start.multipliers is not None
+            plan = solver.solve(prepared.problem, prepared.start, warm=True, budget=settings.horizon.budget)
+            if not usable(prepared.problem, plan) and warm:
+                cautions.append(rules.plan_late(settings, plan.solve_time))
+                return None
+        except SolveError as error:
+            cautions.append(rules.plan_failed(settings, str(error), "the last plan is driven on"))
+            return None
+        return plan
+
+    def _begin_stop(
+        self, now: float, reason: str, *, completed: bool, estimate: Optional[Estimate] = None
+    ) -> stopping.Stop:
+        pursuit = self._pursuit
+        assert pursuit is not None
+        estimate = estimate or self._observer.estimate(now, self._planned)
+        at = now + float(self._history.effect_delay.max())
+        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate.states, now, estimate.speed_factor)
+        pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
+        self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period
+        self._state, self._completed = State.STOPPING, completed
+        self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
+        if self._request is not None and self._request.kind == "change":
+            self._request, self._jobs = None, []
+        return stop
+
+    def _decide(
+        self, now: float, estimate: Estimate, plan: Optional[Plan], cautions: list[Caution]
+    ) -> Decision:
+        pursuit = self._pursuit
+        common = {
+            "time": now, "state": self._state, "reason": self._reason, "completed": self._completed,
+            "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
+        }
+        if pursuit is None:
+            return Decision(**common)
+        task = pursuit.reference.task
+        clearance, pair = (np.inf, (-1, -1)) if pursuit.tick is None else pursuit.tick.plan.closest(1)
+        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - 2e-3:
+            doing = "the plan widens it as far as it can"
+            cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance, doing))
+        done = np.clip(pursuit.s(now) / pursuit.reference.end, 0.0, 1.0)
+        return Decision(
+            **{**common, "warnings": tuple(cautions)},
+            manoeuvre=task.name, progress=float(done),
+            progress_rate=pursuit.pace if self._state is State.MOVING else 0.0,
+            coupling=task.coupling, alignment=task.alignment, lag=pursuit.behind,
+            plan_times=np.zeros(0) if pursuit.tick is None else pursuit.tick.plan.times,
+            plan_poses=np.zeros((len(self._fleet), 0, 3)) if pursuit.tick is None else pursuit.tick.plan.poses,
+            clearance=float(clearance), clearance_pair=self._names(pair) if np.isfinite(clearance) else None,
+            solve_time=0.0 if plan is None else plan.solve_time,
+        )
+
+    def _names(self, pair: tuple[int, int]) -> tuple[str, str]:
+        return self._fleet.names[pair[0]], self._fleet.names[pair[1]]
+
+
+def hops(graph: NeighbourGraph) -> np.ndarray:
+    """Edges on the shortest way from robot to robot, shape (N, N), inf where there is none."""
+    counted = np.full((len(graph.names),) * 2, np.inf)
+    where = {name: k for k, name in enumerate(graph.names)}
+    for name, lengths in nx.all_pairs_shortest_path_length(graph.networkx()):
+        for other, count in lengths.items():
+            counted[where[name], where[other]] = count
+    return counted
+
+
+def _shape(made: Reference) -> solver.Shape:
+    edges, pairs = made.graph.index_edges(), made.pairs
+    return solver.Shape(
+        len(made.graph.names), len(made.plan.times) - 1, tuple(map(tuple, edges.tolist())),
+        tuple(map(tuple, pairs.tolist())),
+    )

@@ -95,6 +95,7 @@ class Task:
         ways: a guessed way for each robot.
         profile: how far along its way, relative to the longest, a robot is at which time.
         coupling, alignment: in force for this manoeuvre.
+        max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
     """
 
     name: str
@@ -107,6 +108,7 @@ class Task:
     profile: SpeedProfile
     coupling: float
     alignment: float
+    max_curvature: float = math.inf
 
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
@@ -138,15 +140,16 @@ def work_out(
         ways = _equal_ways(manoeuvre, fleet, settings, poses)
         ends = np.stack([way.end for way in ways])
         named = ends
-        fixed = 0.0
+        fixed, tightest = 0.0, 1.0 / manoeuvre.radius
     else:
         named = _named_ends(manoeuvre, fleet)
         ways, ends = _ways_to_ends(fleet, poses, named, neighbours)
-        fixed = manoeuvre.duration
+        fixed, tightest = manoeuvre.duration, math.inf
     _check_ends(fleet, settings, named)
     return lay_out(
         name, fleet, settings, ends, ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
         speed_now=speed_now, duration=fixed, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
+        max_curvature=tightest,
     )
 
 
@@ -162,6 +165,7 @@ def go_on(task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neigh
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
+    max_curvature: float = math.inf,
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when a given duration is too short."""
     longest = max(way.length for way in ways)
@@ -186,6 +190,7 @@ def lay_out(
         name, ends, speed, asked, end_speed, intervals * step, ways, profile,
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
+        max_curvature,
     )
 
 

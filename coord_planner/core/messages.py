@@ -114,6 +114,7 @@ class Decision:
         clearance_pair: the two robots that come nearest.
         lag: how far each robot is behind its reference, shape (N,), metres.
         solve_time: seconds spent optimising in this tick.
+        completed: the last manoeuvre was carried through to its end.
         warnings: what is going wrong now.
     """
 
@@ -132,6 +133,7 @@ class Decision:
     clearance_pair: Optional[tuple[str, str]] = None
     lag: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
     solve_time: float = 0.0
+    completed: bool = False
     warnings: tuple[Caution, ...] = ()
 
 

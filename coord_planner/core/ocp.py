@@ -283,3 +283,18 @@ def _rows(row: Matrix, like: Matrix) -> Matrix:
 
 def _soft_abs(value: Matrix) -> Matrix:
     return ca.sqrt(value**2 + _ROUNDING**2)
+
+
+@lru_cache(maxsize=32)
+def _evaluated(shape: Shape) -> ca.Function:
+    program = build(shape)
+    return ca.Function("rows", [program.x, program.p], [program.g])
+
+
+def violation(problem: Problem, vector: np.ndarray) -> float:
+    """Largest violation of any row or bound by a primal vector, in the rows' own units; own evaluation."""
+    rows = np.asarray(_evaluated(problem.shape)(vector, numbers(problem))).ravel()
+    worst = 0.0
+    for values, (lower, upper) in ((rows, row_bounds(problem)), (vector, variable_bounds(problem))):
+        worst = max(worst, float(np.max(lower - values, initial=0.0)), float(np.max(values - upper, initial=0.0)))
+    return worst

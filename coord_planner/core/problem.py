@@ -100,7 +100,7 @@ class Shape:
 
 def bounds_in_force(
     fleet: Fleet, initial: np.ndarray, times: np.ndarray, end_time: float, end_speed: float,
-    speed_cap: float, lateral_cap: float,
+    speed_cap: float, lateral_cap: float, curvature_cap: float = np.inf,
 ) -> Bounds:
     """Limits at nodes 1 .. M, each an envelope that comes back at the braking or steering rate.
 
@@ -121,7 +121,7 @@ def bounds_in_force(
     kappa_back = np.maximum(kappa - steer * elapsed, 0.0)
     speed_back = np.maximum(np.abs(speed) - brake * elapsed, 0.0)
     # Straight on after the end: the last curvature and speed go back as fast as the machine allows.
-    curvature = np.maximum(np.where(after, 0.0, column("max_curvature")), kappa_back)
+    curvature = np.maximum(np.where(after, 0.0, np.minimum(column("max_curvature"), curvature_cap)), kappa_back)
     top = np.minimum(column("max_speed"), speed_cap)
     upper = np.maximum(np.where(after, np.minimum(end_speed, top), top), speed_back)
     lower = np.minimum(column("min_speed"), np.minimum(speed + speed_up * elapsed, end_speed + brake * to_end))

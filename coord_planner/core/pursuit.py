@@ -1,0 +1,109 @@
+"""A manoeuvre under way: where the group is along its reference, and the plan that is being driven."""
+
+from __future__ import annotations
+
+from typing import Optional
+
+import attrs
+import numpy as np
+
+from . import tick as ticks
+from .fleet import Fleet
+from .observer import Estimate
+from .plan import Plan
+from .problem import SPEED, SPEED_COMMAND, THETA, Problem
+from .progress import GroupProgress
+from .reference import Reference
+from .schedule import Schedule, constant, of_plan
+from .settings import Settings
+from .solver import Start
+from .tick import Tick
+
+_FALL = 0.9  # part of the weakest brake with which the pace may fall
+
+
+@attrs.frozen(eq=False)
+class Prepared:
+    """A tick that is ready to be solved."""
+
+    problem: Problem
+    s: np.ndarray
+    start: Start
+    reference: Reference
+
+
+class Pursuit:
+    """Not thread-safe by itself: the coordinator guards it.
+
+    Args:
+        begins: moment at which second 0 of the manoeuvre falls (or ``at`` of it), seconds on the clock.
+        values: commands in force until then, shape (N, 2).
+    """
+
+    def __init__(self, reference: Reference, begins: float, at: float, values: np.ndarray, fleet: Fleet) -> None:
+        self.reference = reference
+        self.progress = GroupProgress(len(fleet))
+        self.schedule: Schedule = constant(values, begins)
+        self.tick: Optional[Tick] = None
+        self.next_reference: Optional[Reference] = None
+        self._s, self._time = at, begins
+        self._updated = begins
+        self.behind = np.zeros(len(fleet))
+
+    @property
+    def pace(self) -> float:
+        """Seconds of the manoeuvre per second of the clock."""
+        return self.progress.pace
+
+    def s(self, time: float) -> float:
+        """Second of the manoeuvre at a moment."""
+        return self._s + self.pace * (time - self._time)
+
+    def clock(self, s: float) -> float:
+        """Moment at which a second of the manoeuvre is reached at the present pace."""
+        return self._time + (s - self._s) / self.pace
+
+    def advance(self, now: float, estimate: Estimate, fleet: Fleet, settings: Settings) -> None:
+        """Move the group on, and slow it when one of them is held up."""
+        s_now = self.s(now)
+        asked = self.reference.state(max(s_now, self.reference.plan.times[0]))
+        heading = asked[:, THETA]
+        ahead = np.stack([np.cos(heading), np.sin(heading)], axis=1)
+        self.behind = np.sum((asked[:, :2] - estimate.states[:, :2]) * ahead, axis=1)
+        expected = np.minimum(estimate.states[:, SPEED_COMMAND], self.pace * asked[:, SPEED])
+        deficit = np.maximum(expected - estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
+        elapsed = max(now - self._updated, 0.0)
+        fall = _FALL * float(np.min(fleet.limit("max_braking"))) / max(float(np.max(self.reference.task.asked)), 1e-3)
+        self._s, self._time, self._updated = s_now, now, now
+        if s_now >= 0.0:
+            self.progress.update(elapsed, self.behind, deficit, settings.progress, fall)
+
+    def swap_when_due(self, at: float) -> bool:
+        """Take over a reference made anew once the moment has come from which it starts."""
+        due = self.next_reference is not None and self.s(at) >= self.next_reference.plan.times[0] - 1e-9
+        if due and self.next_reference is not None:
+            self.reference, self.next_reference, self.tick = self.next_reference, None, self._carried()
+        return due
+
+    def prepare(self, at: float, initial: np.ndarray, fleet: Fleet, settings: Settings) -> Prepared:
+        """Pose the tick whose plan takes effect at a moment, from the state predicted for it."""
+        problem, s, start = ticks.pose_problem(
+            self.reference, fleet, settings, initial, max(self.s(at), 0.0), at, self.pace, self.tick
+        )
+        return Prepared(problem, s, start, self.reference)
+
+    def install(self, prepared: Prepared, plan: Plan, since: float) -> None:
+        """Drive a solved plan from its first node on."""
+        self.tick = Tick(plan, prepared.s, prepared.reference)
+        self.schedule = self.schedule.splice(of_plan(plan), float(plan.times[0]), since)
+
+    def _carried(self) -> Optional[Tick]:
+        """The last plan as a start for the new reference, where the problems have the same shape."""
+        if self.tick is None:
+            return None
+        same = (
+            np.array_equal(self.tick.reference.pairs, self.reference.pairs)
+            and np.array_equal(self.tick.reference.graph.index_edges(), self.reference.graph.index_edges())
+        )
+        return attrs.evolve(self.tick, reference=self.reference) if same else None
+

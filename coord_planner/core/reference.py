@@ -1,0 +1,230 @@
+"""The plan of a whole manoeuvre, made once when it begins, against which ticks are held."""
+
+from __future__ import annotations
+
+from typing import Optional
+
+import attrs
+import numpy as np
+
+from ..errors import RefusedError
+from . import grid, solver
+from .fleet import Fleet
+from .graph import NeighbourGraph
+from .manoeuvre import Task
+from .plan import Plan
+from .problem import (
+    CURVATURE,
+    CURVATURE_COMMAND,
+    POSE,
+    SPEED,
+    SPEED_COMMAND,
+    THETA,
+    Problem,
+    bounds_in_force,
+)
+from .settings import Settings
+from .watch import choose_pairs, watch
+
+_ROUNDS = 6  # re-solves with separating lines taken from the last solution
+_SETTLED = 2e-3  # metres: the smallest clearance no longer changes
+_END_KEPT = 5e-3  # metres or radians: an end missed by more is refused
+_CLEARANCE_KEPT = 2e-3  # metres
+_STRETCHES = (1.0, 1.25, 1.6, 2.0, 3.0)  # times tried for the rest of a manoeuvre, against the old one
+
+
+@attrs.frozen(eq=False)
+class Reference:
+    """A manoeuvre planned from ``plan.times[0]`` to its end, in seconds of the manoeuvre.
+
+    Attributes:
+        task: what was asked. plan: its nodes. pairs: watched, shape (P, 2).
+        graph: neighbours that it was made for.
+        clearance: smallest exact clearance, metres. pair: who comes that near.
+    """
+
+    task: Task
+    plan: Plan
+    pairs: np.ndarray
+    graph: NeighbourGraph
+    clearance: float
+    pair: tuple[int, int]
+
+    @property
+    def end(self) -> float:
+        """Seconds of the manoeuvre at which it ends."""
+        return self.task.duration
+
+    def state(self, s: float) -> np.ndarray:
+        """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
+        states = self.plan.state(min(s, self.end))
+        if s > self.end:
+            ahead = self.task.end_speed * (s - self.end)
+            heading = states[:, THETA]
+            states[:, 0] += ahead * np.cos(heading)
+            states[:, 1] += ahead * np.sin(heading)
+            states[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
+            states[:, [SPEED, SPEED_COMMAND]] = self.task.end_speed
+        return states
+
+    def states(self, s: np.ndarray) -> np.ndarray:
+        """States at several moments, shape (N, K, 7)."""
+        return np.stack([self.state(float(moment)) for moment in s], axis=1)
+
+
+def make(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, start: float = 0.0,
+    guess: Optional[np.ndarray] = None,
+) -> Reference:
+    """Plan a task from a state on.
+
+    Args:
+        initial: shape (N, 7), at ``start`` seconds of the manoeuvre.
+        guess: states at the nodes, shape (N, M + 1, 7); worked out from the task's ways when left out.
+
+    Raises:
+        RefusedError: an end or the site's clearance cannot be kept, with the figures.
+    """
+    times = grid.until(start, task.duration, settings.horizon.interval)
+    guess = _guess(task, times) if guess is None else guess
+    pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
+    problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs)
+    plan = solver.solve(problem, solver.start_from_states(problem, guess))
+    plan = _settle(problem, plan, settings, task.speed)
+    pairs_then = choose_pairs(fleet, settings, plan.poses)
+    if not _contains(pairs, pairs_then):  # the solution came near somebody whom the guess passed at a distance
+        pairs = np.unique(np.concatenate([pairs, pairs_then]), axis=0)
+        problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs)
+        plan = solver.solve(problem, solver.start_from_states(problem, plan.states))
+        plan = _settle(problem, plan, settings, task.speed)
+    clearance, pair = plan.closest()
+    _check_kept(task, plan, fleet, settings, clearance, pair)
+    return Reference(task, plan, pairs, graph, clearance, pair)
+
+
+def make_rest(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, old: Reference, start: float
+) -> Reference:
+    """The rest of a running manoeuvre, made anew from where the old reference is at ``start``.
+
+    What can no longer be kept in the old time (a limit was lowered) is tried in a longer one.
+
+    Raises:
+        RefusedError: it cannot be kept even at a third of the speed; the reason is that of the first try.
+    """
+    first: Optional[RefusedError] = None
+    for stretch in _STRETCHES:
+        try:
+            return make(*_stretched(task, fleet, graph, settings, old, start, stretch))
+        except RefusedError as refused:
+            first = first or refused
+    raise first or RefusedError(f"{task.name}: nothing is left to plan", "begin a new manoeuvre")
+
+
+def _stretched(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, old: Reference, start: float, stretch: float
+) -> tuple[Task, Fleet, NeighbourGraph, Settings, np.ndarray, float, np.ndarray]:
+    """Arguments of make for the rest in a longer time, with the old plan, slowed, as the guess."""
+    step = settings.horizon.interval
+    end = step * int(np.ceil((start + (task.duration - start) * stretch) / step - 1e-9))
+    top = np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
+    slower = attrs.evolve(task, duration=end, asked=np.minimum(task.asked / stretch, top))
+    times = grid.until(start, end, step)
+    guess = old.states(start + (times - start) * (task.duration - start) / max(end - start, step))
+    guess[:, 1:, [SPEED, SPEED_COMMAND]] /= stretch
+    return slower, fleet, graph, settings, old.state(start), start, guess
+
+
+def end_target(task: Task, count: int) -> np.ndarray:
+    """State asked at the end, shape (N, 7): the end, straight, at the end speed."""
+    target = np.full((count, 7), np.nan)
+    target[:, POSE] = task.ends
+    target[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
+    target[:, [SPEED, SPEED_COMMAND]] = task.end_speed
+    return target
+
+
+def _problem(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
+    guess: np.ndarray, pairs: np.ndarray,
+) -> Problem:
+    rules = settings.site_rules
+    asked = np.repeat(task.asked[:, None], len(times) - 1, axis=1)
+    return Problem(
+        fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
+        alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
+        turn_speed=task.asked, target=end_target(task, len(fleet)),
+        bounds=bounds_in_force(
+            fleet, initial, times, task.duration, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
+            task.max_curvature,
+        ),
+        watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
+    )
+
+
+def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> Plan:
+    """Solve again with separating lines from the solution until the smallest clearance stays."""
+    if not len(problem.watch.pairs):
+        return plan
+    clearance = plan.closest(0)[0]
+    for _ in range(_ROUNDS):
+        lines = watch(problem.fleet, settings, problem.watch.pairs, plan.poses, speed)
+        problem = attrs.evolve(problem, watch=lines)
+        plan = solver.solve(problem, solver.Start(plan.vector))
+        before, clearance = clearance, plan.closest(0)[0]
+        if abs(clearance - before) < _SETTLED:
+            break
+    return plan
+
+
+def _guess(task: Task, times: np.ndarray) -> np.ndarray:
+    poses, speeds, curvatures = task.guess(times)
+    return np.concatenate([poses, np.stack([curvatures, speeds, curvatures, speeds], axis=2)], axis=2)
+
+
+def _contains(pairs: np.ndarray, others: np.ndarray) -> bool:
+    return set(map(tuple, others.tolist())) <= set(map(tuple, pairs.tolist()))
+
+
+def _check_kept(
+    task: Task, plan: Plan, fleet: Fleet, settings: Settings, clearance: float, pair: tuple[int, int]
+) -> None:
+    missed = plan.missed[:, :3]
+    worst = int(np.argmax(missed.max(axis=1)))
+    if missed[worst].max() > _END_KEPT:
+        distance, angle = float(np.hypot(*missed[worst, :2])), float(np.degrees(missed[worst, 2]))
+        raise RefusedError(
+            f"{task.name}: {fleet.names[worst]} would miss its end by {distance:.2f} m and {angle:.1f} degrees; "
+            + _busiest_limit(plan, fleet, worst),
+            "give it more room, more time or a lower speed",
+        )
+    allowed = settings.site_rules.min_clearance
+    if clearance < allowed - _CLEARANCE_KEPT:
+        first, second = fleet.names[pair[0]], fleet.names[pair[1]]
+        raise RefusedError(
+            f"{task.name}: {first} and {second} would come within {clearance:.2f} m of each other, "
+            f"{allowed - clearance:.2f} m short of the site's smallest clearance of {allowed:g} m",
+            "widen the turn, the spacing or the ends",
+        )
+    if not plan.solved and plan.missed.max() > _END_KEPT:
+        raise RefusedError(f"{task.name}: no plan was found", "ask for a wider radius or more time")
+
+
+def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
+    """The limit that the robot meets for the largest part of the plan, in words."""
+    limits, states, rates = fleet.robots[k].limits, plan.states[k, 1:], plan.rates[k]
+    speed, bend = np.abs(states[:, SPEED_COMMAND]), np.abs(states[:, CURVATURE_COMMAND])
+    use = {
+        "max_curvature": bend / limits.max_curvature,
+        "max_speed": speed / limits.max_speed,
+        "max_turn_rate": speed * bend / limits.max_turn_rate,
+        "max_lateral_acceleration": speed**2 * bend / limits.max_lateral_acceleration,
+        "max_curvature_rate": np.abs(rates[:, 0]) / limits.max_curvature_rate,
+        "max_acceleration": rates[:, 1] / limits.max_acceleration,
+        "max_braking": -rates[:, 1] / limits.max_braking,
+    }
+    busy = {name: float(np.mean(part > 0.99)) for name, part in use.items()}
+    name = max(busy, key=lambda key: busy[key])
+    if busy[name] == 0.0:
+        return "the clearance to the others stands in the way"
+    return f"its {name} of {getattr(limits, name):g} is met for {100 * busy[name]:.0f}% of the time"

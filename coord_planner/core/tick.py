@@ -1,0 +1,113 @@
+"""One re-planning: the reference's problem over the horizon only, from the state at hand, ending on the reference."""
+
+from __future__ import annotations
+
+from typing import Optional
+
+import attrs
+import numpy as np
+
+from . import grid, ocp, solver
+from .fleet import Fleet
+from .plan import Plan
+from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
+from .reference import Reference
+from .settings import Settings
+from .watch import watch
+
+_SPEEDS = [SPEED, SPEED_COMMAND]
+_USABLE = 2e-2  # largest residual of the motion (metres, radians) with which an unfinished plan is still driven
+
+
+@attrs.frozen(eq=False)
+class Tick:
+    """A plan over the horizon and where its nodes lie in the manoeuvre.
+
+    Attributes:
+        plan: times on the clock.
+        s: the same nodes in seconds of the manoeuvre, shape (M + 1,).
+        reference: that it ends on.
+    """
+
+    plan: Plan
+    s: np.ndarray
+    reference: Reference
+
+
+def pose_problem(
+    reference: Reference, fleet: Fleet, settings: Settings, initial: np.ndarray, start: float, time: float,
+    pace: float, last: Optional[Tick],
+) -> tuple[Problem, np.ndarray, solver.Start]:
+    """The problem of a tick, its nodes in seconds of the manoeuvre, and where to start solving it.
+
+    Args:
+        initial: predicted state at ``time``, shape (N, 7). start: seconds of the manoeuvre at ``time``.
+        time: seconds on the clock at the first node. pace: seconds of the manoeuvre per second of the clock.
+        last: the tick before, when there is one for this reference.
+    """
+    task, rules = reference.task, settings.site_rules
+    s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
+    times = time + (s - start) / pace
+    guess, steps = _guess(reference, initial, s, pace, last)
+    after_end = s[1:] > reference.end + 1e-9
+    asked = np.where(after_end[None, :], task.end_speed, task.asked[:, None]) * pace
+    target = guess[:, -1].copy()
+    target[:] = paced(reference.state(float(s[-1])), pace)
+    graph = reference.graph
+    problem = Problem(
+        fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
+        alignment=task.alignment, prices=settings.prices, times=times, pace=pace, initial=initial, asked_speed=asked,
+        turn_speed=task.asked * pace, target=target,
+        bounds=bounds_in_force(
+            fleet, initial, times, time + (reference.end - start) / pace, task.end_speed * pace, rules.max_speed,
+            rules.max_lateral_acceleration, task.max_curvature,
+        ),
+        watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
+    )
+    if steps is None or last is None:
+        return problem, s, solver.start_from_states(problem, guess)
+    return problem, s, _shifted(problem, last, steps, guess)
+
+
+def paced(states: np.ndarray, pace: float) -> np.ndarray:
+    """States of the reference as they are passed at a pace: speeds scale, curvatures and poses stay."""
+    scaled = states.copy()
+    scaled[..., _SPEEDS] *= pace
+    return scaled
+
+
+def usable(problem: Problem, plan: Plan) -> bool:
+    """Whether a plan that the solver did not finish still moves as machines do and stays within limits."""
+    if plan.solved:
+        return True
+    worst = ocp.violation(problem, plan.vector)
+    return bool(worst < _USABLE)
+
+
+def _guess(
+    reference: Reference, initial: np.ndarray, s: np.ndarray, pace: float, last: Optional[Tick]
+) -> tuple[np.ndarray, Optional[int]]:
+    """Guessed states, shape (N, M + 1, 7), and by how many nodes the last plan is shifted (None: not usable)."""
+    guess = paced(reference.states(s), pace)
+    steps: Optional[int] = None
+    if last is not None and last.reference is reference:
+        place = np.flatnonzero(np.abs(last.s[1:] - s[1]) < 1e-6)
+        if len(place):
+            steps = int(place[0])
+            kept = last.plan.states[:, 1 + steps :]
+            guess[:, 1 : 1 + kept.shape[1]] = kept
+    guess[:, 0] = initial
+    return guess, steps
+
+
+def _shifted(problem: Problem, last: Tick, steps: int, guess: np.ndarray) -> solver.Start:
+    """The last plan shifted, with the nodes that are new taken from the guess."""
+    begun = solver.start_from_plan(last.plan, problem.shape, steps)
+    layout = ocp.variable_blocks(problem.shape)
+    blocks = layout.unpack(begun.vector)
+    for i, name in enumerate(STATES):
+        blocks[name] = guess[:, :, i]
+    h = problem.intervals
+    blocks["curvature_rate"] = np.diff(guess[:, :, CURVATURE_COMMAND], axis=1) / h
+    blocks["acceleration"] = np.diff(guess[:, :, SPEED_COMMAND], axis=1) / h
+    return solver.Start(layout.pack(blocks), begun.multipliers)
