@@ -1,0 +1,168 @@
+"""What the planner hears: subscriptions whose callbacks check a message, keep the newest and return."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from typing import Any, Optional
+
+from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped
+from nav_msgs.msg import Odometry
+from rclpy.node import Node
+from std_msgs.msg import Empty, String
+
+from ..config import Configuration, Connection
+from ..core.graph import NeighbourGraph
+from ..core.messages import PoseSample
+from ..errors import SettingsError
+from . import messages, qos
+
+_POSE_TYPES: dict[str, type] = {
+    "pose": PoseStamped, "pose_with_covariance": PoseWithCovarianceStamped, "odometry": Odometry,
+}
+
+
+class Inbox:
+    """Newest good pose of each robot, the neighbours in force, and counts of what was ignored.
+
+    Args:
+        node: gets the subscriptions. configuration: gives the live settings whenever it is called.
+        now: seconds on the clock of the stamps, 0 while there is none.
+        neighbours: called with each new graph. halt: called for each halt message.
+        request: called with each well-formed request.
+        trouble: called when a message was ignored and that is worth telling at once.
+
+    Raises:
+        SettingsError: a pose source that cannot be had on this machine.
+    """
+
+    def __init__(self, node: Node, configuration: Callable[[], Configuration], now: Callable[[], float], *,
+                 neighbours: Callable[[NeighbourGraph], None], halt: Callable[[], object],
+                 request: Callable[[messages.Request], None],
+                 trouble: Callable[[str, messages.IgnoredError], None]) -> None:
+        self._configuration, self._now = configuration, now
+        self._neighbours, self._request, self._trouble = neighbours, request, trouble
+        self.tallies = messages.Tallies()
+        self._poses: dict[str, PoseSample] = {}
+        self._neighbours_stamp = -math.inf
+        self._transforms = Transforms(node, configuration().frame) if _wants_transforms(configuration()) else None
+        self._subscriptions = [
+            node.create_subscription(String, "neighbours", self._on_neighbours, qos.NEWEST_LATCHED),
+            node.create_subscription(Empty, "halt", lambda _message: halt(), qos.RELIABLE),
+            node.create_subscription(String, "~/request", self._on_request, qos.RELIABLE),
+        ]
+        for name, connection in configuration().connections.items():
+            if connection.pose_source in _POSE_TYPES:
+                self._subscriptions.append(self._subscribe(node, name, connection))
+
+    def _subscribe(self, node: Node, name: str, connection: Connection) -> Any:
+        def callback(message: Any) -> None:
+            self._on_pose(name, connection, message)
+
+        return node.create_subscription(_POSE_TYPES[connection.pose_source], connection.pose_topic, callback, qos.POSES)
+
+    def poses(self) -> dict[str, PoseSample]:
+        """Newest good pose of each robot that has sent one, of the point that is planned with."""
+        if self._transforms is not None:
+            for name, connection in self._configuration().connections.items():
+                if connection.pose_source == "tf":
+                    self._look_up(name, connection, self._transforms)
+        return dict(self._poses)
+
+    def forget(self) -> None:
+        """Drop all poses and the stamp of the neighbours: the clock was set back."""
+        self._poses, self._neighbours_stamp = {}, -math.inf
+
+    def close(self, node: Node) -> None:
+        """Take the subscriptions off the node."""
+        for subscription in self._subscriptions:
+            node.destroy_subscription(subscription)
+        self._subscriptions = []
+
+    def _on_pose(self, name: str, connection: Connection, message: Any) -> None:
+        try:
+            self._keep(name, connection, message, connection.pose_source)
+        except messages.IgnoredError as error:
+            self._ignore(name, error)
+
+    def _look_up(self, name: str, connection: Connection, transforms: Transforms) -> None:
+        message = transforms.newest(connection.pose_topic)
+        last = self._poses.get(name)
+        if message is None:
+            return
+        if last is not None and messages.seconds(message.header.stamp) == last.stamp:
+            return  # seen at the last look
+        self._on_pose(name, connection, message)
+
+    def _keep(self, name: str, connection: Connection, message: Any, source: str) -> None:
+        configuration = self._configuration()
+        sample = messages.pose_sample(
+            message, "pose" if source == "tf" else source,
+            frame=configuration.frame, now=self._now(), poses=configuration.settings.poses,
+        )
+        messages.newest(sample, self._poses.get(name))
+        x, y, heading = connection.planned_pose(sample.x, sample.y, sample.heading)
+        self._poses[name] = PoseSample(sample.stamp, x, y, heading)
+        self.tallies.use(name)
+
+    def _on_neighbours(self, message: String) -> None:
+        names = self._configuration().fleet.names
+        try:
+            graph, stamp = messages.parse_neighbours(message.data, names, self._neighbours_stamp)
+        except messages.IgnoredError as error:
+            self._ignore("neighbours", error)
+            return
+        self._neighbours_stamp = stamp
+        self.tallies.use("neighbours")
+        self._neighbours(graph)
+
+    def _on_request(self, message: String) -> None:
+        try:
+            request = messages.parse_request(message.data)
+        except messages.IgnoredError as error:
+            self._ignore("request", error)
+            return
+        self.tallies.use("request")
+        self._request(request)
+
+    def _ignore(self, source: str, error: messages.IgnoredError) -> None:
+        if self.tallies.ignore(source, error, self._now()):
+            self._trouble(source, error)
+
+
+def _wants_transforms(configuration: Configuration) -> bool:
+    return any(connection.pose_source == "tf" for connection in configuration.connections.values())
+
+
+class Transforms:
+    """Poses from tf, where tf2_ros is installed.
+
+    Raises:
+        SettingsError: it is not.
+    """
+
+    def __init__(self, node: Node, frame: str) -> None:
+        try:
+            import tf2_ros
+        except ImportError:
+            raise SettingsError(
+                "'tf' needs tf2_ros, which is not installed: install ros-<distro>-tf2-ros-py, or take another source",
+                key="pose_source", allowed=", ".join(_POSE_TYPES),
+            ) from None
+        self._frame, self._failure = frame, tf2_ros.TransformException
+        self._buffer = tf2_ros.Buffer()
+        self._listener = tf2_ros.TransformListener(self._buffer, node)
+
+    def newest(self, child: str) -> Optional[PoseStamped]:
+        """The newest pose of a frame in the fleet's frame, or None while it is not known."""
+        from rclpy.time import Time  # newest common time of the chain
+
+        try:
+            found = self._buffer.lookup_transform(self._frame, child, Time())
+        except self._failure:
+            return None
+        message = PoseStamped(header=found.header)
+        position = found.transform.translation
+        message.pose.position.x, message.pose.position.y = position.x, position.y
+        message.pose.orientation = found.transform.rotation
+        return message

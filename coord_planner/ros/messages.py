@@ -1,0 +1,261 @@
+"""Messages as they come in: which are believed, which are ignored, and how that is counted.
+
+Nothing here imports ROS: a message is anything with the fields of its definition (geometry_msgs, nav_msgs,
+std_msgs, from memory), so that every check is tested without a middleware.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Mapping
+from typing import Any, Optional
+
+import attrs
+
+from ..core.graph import NeighbourGraph
+from ..core.messages import PoseSample
+from ..core.settings import Poses
+from ..errors import CoordPlannerError, SettingsError
+
+LONGEST_TEXT = 100_000  # characters of JSON that are read at all
+_NEIGHBOURS_VERSION = 1
+
+
+class IgnoredError(CoordPlannerError):
+    """A message that is not used.
+
+    Attributes:
+        why: a few fixed words, the same for every message with this fault: what is counted.
+        text: the figures and what to do about it.
+    """
+
+    def __init__(self, why: str, text: str) -> None:
+        self.why, self.text = why, text
+        super().__init__(f"{why}: {text}")
+
+
+@attrs.frozen
+class Request:
+    """What was asked for through ``~/request``."""
+
+    id: str
+    manoeuvre: str
+    overrides: Mapping[str, float] = attrs.field(factory=dict)
+
+
+@attrs.define
+class Tally:
+    """What came from one source: how many messages were used, how many ignored and why the last one was."""
+
+    used: int = 0
+    ignored: dict[str, int] = attrs.field(factory=dict)
+    last_text: str = ""
+    last_time: float = -math.inf  # of the last ignored message, on the caller's clock
+
+    def ignore(self, error: IgnoredError, now: float, quiet: float) -> bool:
+        """Count an ignored message; True when it is news (first of its kind, or after ``quiet`` seconds of none)."""
+        news = error.why not in self.ignored or now - self.last_time > quiet
+        self.ignored[error.why] = self.ignored.get(error.why, 0) + 1
+        self.last_text, self.last_time = str(error), now
+        return news
+
+    @property
+    def total_ignored(self) -> int:
+        return sum(self.ignored.values())
+
+
+@attrs.define
+class Tallies:
+    """Tallies by source: a robot's name, or the name of a topic."""
+
+    quiet: float = 5.0  # seconds without a bad message after which the next one is news
+    by_source: dict[str, Tally] = attrs.field(factory=dict)
+
+    def of(self, source: str) -> Tally:
+        """The tally of a source, made when it is first asked for."""
+        return self.by_source.setdefault(source, Tally())
+
+    def use(self, source: str) -> None:
+        """Count a message that was used."""
+        self.of(source).used += 1
+
+    def ignore(self, source: str, error: IgnoredError, now: float) -> bool:
+        """Count one that was not; True when that is worth telling at once."""
+        return self.of(source).ignore(error, now, self.quiet)
+
+    def troubled(self, source: str, now: float) -> bool:
+        """Whether the last ignored message is recent."""
+        return now - self.of(source).last_time <= self.quiet
+
+
+def seconds(stamp: Any) -> float:
+    """A builtin_interfaces/Time in seconds."""
+    return float(stamp.sec) + 1e-9 * float(stamp.nanosec)
+
+
+def heading(quaternion: Any) -> float:
+    """Direction of the x axis seen from above, radians, anticlockwise.
+
+    Raises:
+        IgnoredError: not finite, or not a rotation (its length is not 1).
+    """
+    x, y, z, w = (float(getattr(quaternion, field)) for field in "xyzw")
+    length = math.sqrt(x * x + y * y + z * z + w * w)
+    if not math.isfinite(length):
+        raise IgnoredError("not a number", f"the orientation is ({x:g}, {y:g}, {z:g}, {w:g}); mend what sends it")
+    if abs(length - 1.0) > 0.05:
+        raise IgnoredError("not a rotation",
+                           f"the orientation's length is {length:.3g}, it must be 1; mend what sends it")
+    return math.atan2(2.0 * (w * z + x * y), w * w + x * x - y * y - z * z)
+
+
+def pose_sample(message: Any, source: str, *, frame: str, now: float, poses: Poses) -> PoseSample:
+    """The pose in a message of a robot.
+
+    Args:
+        message: PoseStamped (source ``pose``), PoseWithCovarianceStamped or Odometry (any other source).
+        frame: the fleet's frame. now: seconds on the clock of the stamps. poses: which stamps are used.
+
+    Raises:
+        IgnoredError: wrong frame, not a number, not a rotation, too old, or from the future.
+    """
+    given = message.header.frame_id
+    if given != frame:
+        raise IgnoredError("wrong frame",
+                           f"the pose is in {given!r}, the fleet's frame is {frame!r}; {_frame_remedy(source, frame)}")
+    stamp = checked_stamp(seconds(message.header.stamp), now, poses)
+    pose = message.pose if source == "pose" else message.pose.pose
+    x, y = float(pose.position.x), float(pose.position.y)
+    if not (math.isfinite(x) and math.isfinite(y)):
+        raise IgnoredError("not a number", f"the position is ({x:g}, {y:g}); mend what sends it")
+    return PoseSample(stamp, x, y, heading(pose.orientation))
+
+
+def checked_stamp(stamp: float, now: float, poses: Poses) -> float:
+    """The stamp itself, if a pose with it may be used now.
+
+    Raises:
+        IgnoredError: older than ``poses.max_age`` or newer than ``poses.max_future``.
+    """
+    age = now - stamp
+    if age > poses.max_age:
+        raise IgnoredError("too old", f"stamped {age:.3f} s ago, poses.max_age is {poses.max_age:g} s; {_CLOCK_REMEDY}")
+    if -age > poses.max_future:
+        raise IgnoredError("from the future",
+                           f"stamped {-age:.3f} s ahead, poses.max_future is {poses.max_future:g} s; {_CLOCK_REMEDY}")
+    return stamp
+
+
+_CLOCK_REMEDY = "synchronise the clocks, and see that use_sim_time is the same everywhere"
+
+
+def _frame_remedy(source: str, frame: str) -> str:
+    if source == "odometry":
+        return (f"robots' own odometry frames cannot be compared: give a pose that is localised in {frame!r}"
+                " (pose_source pose or pose_with_covariance, or tf where tf2_ros is installed)")
+    return f"send it in {frame!r}, or set fleet.frame to the frame that all robots share"
+
+
+def newest(sample: PoseSample, last: Optional[PoseSample]) -> PoseSample:
+    """The sample, unless it is no newer than the last one that was used.
+
+    Raises:
+        IgnoredError: it was overtaken.
+    """
+    if last is not None and sample.stamp < last.stamp:
+        raise IgnoredError("overtaken", f"stamped {last.stamp - sample.stamp:.3f} s before the pose in use; "
+                                        "see whether two nodes send it")
+    return sample
+
+
+def parse_neighbours(text: str, names: tuple[str, ...], newest_stamp: float) -> tuple[NeighbourGraph, float]:
+    """The neighbour graph in a ``neighbours`` message, and its stamp in seconds.
+
+    Args:
+        text: JSON ``{"version": 1, "stamp": s, "edges": [["mower_1", "mower_2", 1.0], ...]}``; weights may be left out.
+        names: the fleet. newest_stamp: stamp of the graph in force, -inf when it came from the parameter file.
+
+    Raises:
+        IgnoredError: not such a text, a robot that is not in the fleet, or older than the one in force.
+    """
+    content = _json_object(text, {"version", "stamp", "edges"})
+    if content.get("version") != _NEIGHBOURS_VERSION or isinstance(content["version"], bool):
+        raise IgnoredError("unknown version",
+                           f"version is {_short(content.get('version'))}, it must be {_NEIGHBOURS_VERSION}")
+    stamp: Any = content.get("stamp")
+    if not _is_number(stamp):
+        raise IgnoredError("malformed", f"stamp is {_short(stamp)}, it must be seconds")
+    edges = content.get("edges")
+    if not isinstance(edges, list):
+        raise IgnoredError("malformed", f"edges is {_short(edges)}, it must be a list")
+    if stamp < newest_stamp:
+        raise IgnoredError("overtaken", f"its stamp is {newest_stamp - stamp:.3f} s before the one in force")
+    try:
+        return NeighbourGraph(names, tuple(_edge(edge) for edge in edges)), float(stamp)
+    except SettingsError as error:
+        unknown = any(name not in names for edge in edges for name in edge[:2])
+        raise IgnoredError("unknown robot" if unknown else "malformed", str(error)) from None
+
+
+def _edge(edge: Any) -> tuple[str, str, float]:
+    good = isinstance(edge, list) and len(edge) in (2, 3) and all(isinstance(name, str) for name in edge[:2])
+    if not good or not all(_is_number(weight) for weight in edge[2:]):
+        raise IgnoredError("malformed", f"edge {_short(edge)} must be [robot, robot] or [robot, robot, weight]")
+    return edge[0], edge[1], float(edge[2]) if len(edge) == 3 else 1.0
+
+
+def neighbours_text(graph: NeighbourGraph, stamp: float) -> str:
+    """The message for a graph, as :func:`parse_neighbours` reads it."""
+    edges = [list(edge) for edge in graph.edges]
+    return json.dumps({"version": _NEIGHBOURS_VERSION, "stamp": stamp, "edges": edges})
+
+
+def parse_request(text: str) -> Request:
+    """What a ``~/request`` message asks for.
+
+    Args:
+        text: JSON ``{"id": .., "manoeuvre": name, "overrides": {key: number}}``; overrides may be left out.
+
+    Raises:
+        IgnoredError: not such a text.
+    """
+    content = _json_object(text, {"id", "manoeuvre", "overrides"})
+    given = content.get("id")
+    if isinstance(given, bool) or not isinstance(given, (str, int)) or given == "":
+        raise IgnoredError("malformed", f"id is {_short(given)}, it must be a text or a whole number")
+    name = content.get("manoeuvre")
+    if not isinstance(name, str):
+        raise IgnoredError("malformed", f"manoeuvre is {_short(name)}, it must be a name")
+    overrides = content.get("overrides", {})
+    if not isinstance(overrides, dict) or not all(_is_number(value) for value in overrides.values()):
+        raise IgnoredError("malformed", f"overrides is {_short(overrides)}, it must hold a number for each key")
+    return Request(str(given), name, {key: float(value) for key, value in overrides.items()})
+
+
+def _json_object(text: str, keys: set[str]) -> dict[str, Any]:
+    if len(text) > LONGEST_TEXT:
+        raise IgnoredError("malformed", f"{len(text)} characters, at most {LONGEST_TEXT} are read")
+    try:
+        content = json.loads(text, parse_constant=_no_constant)
+    except (ValueError, RecursionError) as error:
+        raise IgnoredError("malformed", f"not JSON ({error}): {_short(text)}") from None
+    if not isinstance(content, dict):
+        raise IgnoredError("malformed", f"{_short(text)} must be an object with {', '.join(sorted(keys))}")
+    unknown = sorted(set(content) - keys)
+    if unknown:
+        raise IgnoredError("malformed", f"unknown key {_short(unknown[0])}; known: {', '.join(sorted(keys))}")
+    return content
+
+
+def _no_constant(word: str) -> float:
+    raise ValueError(f"{word} is not a number")
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)
+
+
+def _short(value: Any, longest: int = 80) -> str:
+    shown = repr(value)
+    return shown if len(shown) <= longest else shown[: longest - 3] + "..."

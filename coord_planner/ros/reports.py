@@ -1,0 +1,148 @@
+"""Status and diagnostics in words and figures."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from typing import Any, Optional
+
+import attrs
+from diagnostic_msgs.msg import DiagnosticStatus, KeyValue
+
+from ..config import Configuration
+from ..core.messages import Answer, Decision, Level, PoseSample, State
+from . import outgoing
+from .messages import Tallies
+
+
+@attrs.frozen
+class Change:
+    """A change that was asked for while the planner runs, and when the plan took it up.
+
+    Attributes:
+        text: what was changed. asked, in_force: seconds; ``in_force`` is None while the plan is being made anew.
+    """
+
+    text: str
+    asked: float
+    in_force: Optional[float] = None
+
+    def __str__(self) -> str:
+        if self.in_force is None:
+            return f"{self.text}: asked for at {self.asked:.3f} s, not in force yet"
+        return f"{self.text}: in force since {self.in_force:.3f} s"
+
+
+@attrs.frozen
+class Situation:
+    """All that a report is made of.
+
+    Attributes:
+        node: fully qualified name of the node. active: whether its lifecycle state is active.
+        now: seconds on the clock of the stamps; 0 while there is none.
+        state: of the fleet. decision: the newest. answer: to the newest request. change: the newest.
+        tick_ms: wall time of the last tick. overruns: ticks left out.
+        trouble: what went wrong in the node itself ("" for nothing).
+    """
+
+    node: str
+    configuration: Configuration
+    active: bool
+    now: float
+    state: State
+    decision: Decision
+    answer: Optional[Answer] = None
+    change: Optional[Change] = None
+    tick_ms: float = 0.0
+    overruns: int = 0
+    trouble: str = ""
+
+
+def status(at: Situation) -> DiagnosticStatus:
+    """The message on ``~/status``."""
+    decision, answer = at.decision, at.answer
+    coupling = at.configuration.settings.coupling
+    values = {
+        "state": at.state.value, "active": at.active, "manoeuvre": decision.manoeuvre,
+        "progress": f"{decision.progress:.4f}", "progress_rate": f"{decision.progress_rate:.3f}",
+        "reason": decision.reason or at.trouble,
+        "coupling": f"{decision.coupling:.6g}", "alignment": f"{decision.alignment:.6g}",
+        "coupling_asked": f"{coupling.strength:.6g}", "alignment_asked": f"{coupling.alignment:.6g}",
+        "change": "" if at.change is None else str(at.change),
+        "change_in_force": at.change is None or at.change.in_force is not None,
+        "request_id": "" if answer is None else answer.request_id,
+        "request_ok": "" if answer is None else answer.ok,
+        "request_text": "" if answer is None else answer.text,
+        "clearance_m": f"{decision.clearance:.3f}",
+        "clearance_pair": " and ".join(decision.clearance_pair or ()),
+        "tick_ms": f"{at.tick_ms:.2f}", "ticks_left_out": at.overruns,
+        "warnings": outgoing.cautions_text(decision.warnings),
+        "stamp": f"{at.now:.3f}",
+    }
+    level, words = _summary(at)
+    return _message(f"{at.node}: status", at.configuration.fleet_name, level, words, values)
+
+
+def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies) -> list[DiagnosticStatus]:
+    """Everything for ``/diagnostics``: the fleet, each warning, each robot's poses, each kind of message."""
+    level, words = _summary(at)
+    values = {
+        "state": at.state.value, "active": at.active, "coupling": f"{at.decision.coupling:.6g}",
+        "tick_ms": f"{at.tick_ms:.2f}", "ticks_left_out": at.overruns, "trouble": at.trouble,
+    }
+    found = [_message(f"{at.node}: fleet", at.configuration.fleet_name, level, words, values)]
+    for caution in at.decision.warnings:
+        found.append(_message(f"{at.node}: {caution.code}", caution.subject, caution.level, caution.text, {}))
+    for name in at.configuration.fleet.names:
+        found.append(_of_poses(at, name, poses.get(name), tallies))
+    for topic in ("neighbours", "request"):
+        found.append(_of_messages(at, f"{topic} messages", topic, tallies))
+    return found
+
+
+def _summary(at: Situation) -> tuple[Level, str]:
+    if at.now <= 0.0:
+        return Level.WARN, "no clock yet: use_sim_time is set and nothing has come on /clock"
+    if not at.active:
+        return Level.OK, "not active: nothing is planned"
+    if at.trouble:
+        return Level.ERROR, at.trouble
+    worst = max((caution.level for caution in at.decision.warnings), default=Level.OK)
+    return worst, f"{at.state.value}: {at.decision.reason}" if at.decision.reason else at.state.value
+
+
+def _of_poses(at: Situation, name: str, pose: Optional[PoseSample], tallies: Tallies) -> DiagnosticStatus:
+    message = _of_messages(at, f"poses of {name}", name, tallies)
+    limit = at.configuration.settings.poses.max_age
+    age = math.inf if pose is None else at.now - pose.stamp
+    message.values.append(KeyValue(key="age_s", value=f"{age:.3f}"))
+    if message.level != DiagnosticStatus.OK:
+        return message
+    if pose is None:
+        message.level, message.message = _level(Level.WARN), "no pose has come yet"
+    elif age > limit:
+        message.level = _level(Level.STALE)
+        message.message = f"the newest pose is {age:.2f} s old, poses.max_age is {limit:g} s"
+    return message
+
+
+def _of_messages(at: Situation, what: str, source: str, tallies: Tallies) -> DiagnosticStatus:
+    tally = tallies.of(source)
+    troubled = tallies.troubled(source, at.now)
+    values: dict[str, Any] = {"used": tally.used, "ignored": tally.total_ignored, "last_ignored": tally.last_text}
+    values |= {f"ignored: {why}": count for why, count in sorted(tally.ignored.items())}
+    words = f"a message was ignored, {tally.last_text}" if troubled else "fine"
+    return _message(f"{at.node}: {what}", source, Level.WARN if troubled else Level.OK, words, values)
+
+
+def _message(name: str, hardware: str, level: Level, words: str, values: Mapping[str, Any]) -> DiagnosticStatus:
+    pairs = [KeyValue(key=key, value=_word(value)) for key, value in values.items()]
+    return DiagnosticStatus(name=name, hardware_id=hardware, level=_level(level), message=words, values=pairs)
+
+
+def _word(value: Any) -> str:
+    return str(value).lower() if isinstance(value, bool) else str(value)
+
+
+def _level(level: Level) -> bytes:
+    return bytes([int(level)])

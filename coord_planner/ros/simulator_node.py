@@ -1,0 +1,202 @@
+"""Stands in for the robots: publishes their poses and obeys commands, each robot with its own time-out."""
+
+from __future__ import annotations
+
+import math
+import sys
+import time
+from collections.abc import Sequence
+from typing import Any, Optional
+
+import numpy as np
+from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, Twist, TwistStamped
+from nav_msgs.msg import Odometry
+from rclpy.clock import Clock
+from rclpy.clock_type import ClockType
+from rclpy.executors import SingleThreadedExecutor
+from rclpy.node import Node
+from rosgraph_msgs.msg import Clock as ClockMessage
+from std_msgs.msg import Float64
+
+from .. import config
+from ..core.messages import Command, PoseSample
+from ..errors import SettingsError
+from ..trial.vehicle import SimulatedFleet
+from . import outgoing, parameters, qos
+from .spinning import Signals, run, spin
+
+_STEP = 0.02  # steady seconds between two steps of the simulation
+_STANDING = 1e-9  # m/s; below it a twist does not say which way the wheels point
+
+
+class SimulatorNode(Node):
+    """All robots of a parameter file.
+
+    Publishes each robot's noisy pose by its ``pose_source``, and its true motion on
+    ``<robot>/simulated_state`` (Odometry; with no noise and no delay). ``<robot>/simulated_speed_factor``
+    (Float64) makes a machine reach only a part of its commanded speed; 1 heals it.
+
+    Args:
+        arguments: the command line, to name the parameter file in error messages.
+
+    Raises:
+        SettingsError: the parameters cannot be used.
+    """
+
+    def __init__(self, arguments: Sequence[str] = ()) -> None:
+        super().__init__("simulator")
+        flat = parameters.given(self)
+        self._configuration = configuration = config.from_parameters(flat, parameters.files(arguments))
+        parameters.declare(self, flat, live=False)
+        simulation = configuration.simulation
+        self._machines = SimulatedFleet(
+            configuration.fleet, configuration.all_starts(), simulation,
+            {name: connection.command_timeout for name, connection in configuration.connections.items()},
+            np.random.default_rng(simulation.seed), time=self._now() if not simulation.publish_clock else 0.0,
+        )
+        self._began, self._clock_began = time.monotonic(), self._machines.time
+        self._next_poses = self._clock_began
+        self._robots = {
+            name: _RobotLink(self, name, connection, configuration.frame, self._machines)
+            for name, connection in configuration.connections.items()
+        }
+        self._clock_publisher = (
+            self.create_publisher(ClockMessage, "/clock", qos.NEWEST) if simulation.publish_clock else None
+        )
+        # The steady clock drives the steps: a node that publishes /clock cannot wait for it.
+        self.create_timer(_STEP, self._step, clock=Clock(clock_type=ClockType.STEADY_TIME))
+
+    def now(self) -> float:
+        """Seconds on the clock that stamps the poses."""
+        simulation = self._configuration.simulation
+        if simulation.publish_clock:
+            return self._clock_began + simulation.rate_factor * (time.monotonic() - self._began)
+        return self._now()
+
+    def _now(self) -> float:
+        return float(self.get_clock().now().nanoseconds) * 1e-9
+
+    def _step(self) -> None:
+        now = self.now()
+        if now <= 0.0:
+            return  # use_sim_time, and nothing has come on /clock yet
+        if self._clock_publisher is not None:
+            self._clock_publisher.publish(ClockMessage(clock=outgoing.time_message(now)))
+        self._machines.advance(now)
+        if now >= self._next_poses:
+            self._next_poses = max(self._next_poses, now - 1.0) + 1.0 / self._configuration.simulation.pose_rate
+            self._publish(now)
+
+    def _publish(self, now: float) -> None:
+        measured = self._machines.measure(now)
+        speeds, curvatures, poses = self._machines.speeds(), self._machines.curvatures(), self._machines.poses()
+        for k, (name, robot) in enumerate(self._robots.items()):
+            robot.tell_pose(measured[name], Command(float(speeds[k]), float(curvatures[k])))
+            robot.tell_truth(now, poses[k], Command(float(speeds[k]), float(curvatures[k])))
+
+
+class _RobotLink:
+    """One robot's topics.
+
+    Raises:
+        SettingsError: a pose source or kind of command that cannot be simulated here.
+    """
+
+    def __init__(self, node: SimulatorNode, name: str, connection: config.Connection, frame: str,
+                 machines: SimulatedFleet) -> None:
+        self._node, self._name, self._connection, self._frame = node, name, connection, frame
+        self._machines = machines
+        self._curvature = 0.0  # as commanded last
+        self._poses = node.create_publisher(_pose_type(name, connection), connection.pose_topic, qos.POSES)
+        self._truth = node.create_publisher(Odometry, f"{name}/simulated_state", qos.RELIABLE)
+        node.create_subscription(Float64, f"{name}/curvature", self._on_curvature, qos.NEWEST)
+        motion = _command_type(name, connection)
+        node.create_subscription(motion, connection.command_topic, self._on_motion, qos.NEWEST)
+        node.create_subscription(Float64, f"{name}/simulated_speed_factor", self._on_factor, qos.RELIABLE)
+
+    def _on_curvature(self, message: Float64) -> None:
+        if math.isfinite(message.data):
+            self._curvature = message.data
+
+    def _on_motion(self, message: Any) -> None:
+        command = self._command(message)
+        if math.isfinite(command.speed) and math.isfinite(command.curvature):
+            self._curvature = command.curvature
+            self._machines.command(self._name, command, self._node.now())
+        else:
+            self._node.get_logger().warning(f"{self._name} ignores a command that is not a number")
+
+    def _command(self, message: Any) -> Command:
+        """A twist tells the curvature only while it moves; at standstill the curvature topic does."""
+        if self._connection.command_type == "steering":
+            angle = message.drive.steering_angle
+            return Command(float(message.drive.speed), math.tan(angle) / self._connection.wheelbase)
+        twist = message.twist if self._connection.command_type == "twist_stamped" else message
+        speed = float(twist.linear.x)
+        moving = abs(speed) > _STANDING
+        return Command(speed, float(twist.angular.z) / speed if moving else self._curvature)
+
+    def _on_factor(self, message: Float64) -> None:
+        try:
+            self._machines.slow(self._name, message.data)
+        except ValueError as error:
+            self._node.get_logger().warning(str(error))
+
+    def tell_pose(self, sample: PoseSample, motion: Command) -> None:
+        """What the robot's localisation says: a pose of its reported point."""
+        pose = outgoing.pose_message(*self._connection.reported_pose(sample.x, sample.y, sample.heading))
+        head = outgoing.header(self._frame, sample.stamp)
+        source = self._connection.pose_source
+        if source == "pose":
+            self._poses.publish(PoseStamped(header=head, pose=pose))
+            return
+        message = PoseWithCovarianceStamped(header=head) if source == "pose_with_covariance" else Odometry(header=head)
+        message.pose.pose = pose
+        if source == "odometry":
+            message.child_frame_id = f"{self._name}/base_link"
+            message.twist.twist = outgoing.twist(motion)
+        self._poses.publish(message)
+
+    def tell_truth(self, now: float, pose: np.ndarray, motion: Command) -> None:
+        """The true state of the point that is planned with."""
+        message = Odometry(header=outgoing.header(self._frame, now), child_frame_id=f"{self._name}/base_link")
+        message.pose.pose = outgoing.pose_message(*pose)
+        message.twist.twist = outgoing.twist(motion)
+        self._truth.publish(message)
+
+
+def _pose_type(name: str, connection: config.Connection) -> type:
+    types: dict[str, type] = {
+        "pose": PoseStamped, "pose_with_covariance": PoseWithCovarianceStamped, "odometry": Odometry,
+    }
+    if connection.pose_source not in types:
+        raise SettingsError(f"{connection.pose_source!r} cannot be simulated", key=f"robots.{name}.pose_source",
+                            allowed=", ".join(types))
+    return types[connection.pose_source]
+
+
+def _command_type(name: str, connection: config.Connection) -> type:
+    if connection.command_type == "steering":
+        try:
+            from ackermann_msgs.msg import AckermannDriveStamped
+        except ImportError:
+            raise SettingsError("'steering' needs ackermann_msgs, which is not installed",
+                                key=f"robots.{name}.command_type", allowed="twist_stamped, twist") from None
+        return AckermannDriveStamped
+    return TwistStamped if connection.command_type == "twist_stamped" else Twist
+
+
+def _body(arguments: Sequence[str], signals: Signals) -> int:
+    node = SimulatorNode(arguments)
+    executor = SingleThreadedExecutor()
+    executor.add_node(node)
+    return spin(executor, node, after=lambda: 0 if signals.count else None)
+
+
+def main(arguments: Optional[Sequence[str]] = None) -> int:
+    """Run the simulator until a signal ends it; returns the exit status."""
+    return run(arguments, _body)
+
+
+if __name__ == "__main__":
+    sys.exit(main())
