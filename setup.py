@@ -1,5 +1,6 @@
 """Installs coord_planner: with pip beside any Python, with colcon into a ROS 2 workspace."""
 
+import os
 from glob import glob
 
 from setuptools import find_packages, setup
@@ -7,26 +8,26 @@ from setuptools.command.develop import develop
 from setuptools.command.install import install
 
 PACKAGE = "coord_planner"
-SCRIPTS = f"$base/lib/{PACKAGE}"  # as setup.cfg has it: where `ros2 run` looks
+
+# setup.cfg puts the commands where `ros2 run` looks, which is right in a workspace. But pip, when it calls `setup.py
+# install` (up to 23.0, as in Debian 12) or `setup.py develop` (up to 25.2), must put them on the PATH.
+CALLED_BY_PIP = "PIP_BUILD_TRACKER" in os.environ
 
 
 class Install(install):
-    """setup.cfg is for a workspace, which has a prefix of its own; without one the commands belong on the PATH.
-
-    pip up to 23.0 (Debian 12) calls `setup.py install`, and all up to 25.2 may call `setup.py develop`.
-    """
+    """Puts commands on the PATH for pip."""
 
     def finalize_options(self):
-        if not self.prefix and self.install_scripts == SCRIPTS:
+        if CALLED_BY_PIP:
             self.install_scripts = None
         super().finalize_options()
 
 
 class Develop(develop):
-    """As Install, for editable installations."""
+    """Puts commands on the PATH for pip."""
 
     def finalize_options(self):
-        if not getattr(self, "prefix", None) and getattr(self, "script_dir", None) == SCRIPTS:
+        if CALLED_BY_PIP:
             self.script_dir = None
         super().finalize_options()
 
@@ -39,6 +40,7 @@ setup(
     maintainer="coord_planner maintainers",
     maintainer_email="maintainers@example.com",
     packages=find_packages(include=[PACKAGE, f"{PACKAGE}.*"]),
+    package_data={PACKAGE: ["record/*.css", "record/*.html", "record/*.js"]},
     data_files=[
         ("share/ament_index/resource_index/packages", [f"resource/{PACKAGE}"]),
         (f"share/{PACKAGE}", ["package.xml"]),
