@@ -79,6 +79,6 @@ def standing(at, *, count=1, **changes):
         fleet=fleet, edges=(), manoeuvre="none", times=times, poses=np.repeat(poses[:, None], count, axis=1),
         speeds=empty, curvatures=empty, command_times=np.zeros(0), commanded=np.zeros((len(poses), 0, 2)),
         end_poses=np.full((len(poses), 3), np.nan), min_clearance=0.5, state="ended", completed=True, began=0.0,
-        ended=float(times[-1]), cautions=(), tick_ms=np.zeros(0), wall_time=1.0,
+        ended=count * 0.05 - 0.05, cautions=(), tick_ms=np.zeros(0), wall_time=1.0,
     )
     return attrs.evolve(run, **changes)
