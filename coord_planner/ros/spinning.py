@@ -35,6 +35,11 @@ class Signals:
         for number in (signal.SIGINT, signal.SIGTERM):
             signal.signal(number, self._count)
 
+    def ignore(self) -> None:
+        """From now on neither has an effect: a late one must not change the exit status of a node that has ended well."""
+        for number in (signal.SIGINT, signal.SIGTERM):
+            signal.signal(number, signal.SIG_IGN)
+
     def _count(self, _number: int, _frame: Optional[FrameType]) -> None:
         now = self._clock()
         if now - self._last > _TOGETHER:
@@ -80,6 +85,7 @@ def run(arguments: Optional[Sequence[str]], body: Callable[[Sequence[str], Signa
         sys.stderr.write(f"{_first_line(error)}\n")
         return 2
     finally:
+        signals.ignore()
         rclpy.try_shutdown()
 
 
