@@ -64,13 +64,19 @@ class Coordinator:
       * all requests (``begin``, ``halt``, ``resume``, ``abandon``, ``change``) from any thread; fast.
       * ``jobs()`` after every request and every step: slow work (making references). The caller
         runs each job in a thread of its choice and hands the outcome to ``deliver(outcome, now)``.
+
+    Args:
+        budget: wall time that one tick's solve may take, seconds; ``settings.horizon.budget`` when left out. A
+            rehearsal gives more, so that its numbers do not depend on how busy the machine is.
     """
 
     def __init__(
-        self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre]
+        self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre],
+        budget: Optional[float] = None,
     ) -> None:
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
+        self._budget = settings.horizon.budget if budget is None else budget
         self._period = 1.0 / settings.commands.rate
         self._history = CommandHistory(fleet.response("command_delay"), self._period)
         self._observer = Observer(fleet, settings.poses, self._history)
@@ -309,7 +315,7 @@ class Coordinator:
     def _ask(self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str) -> None:
         self._token += 1
         token = self._token
-        intervals, budget = self._settings.horizon.intervals, self._settings.horizon.budget
+        intervals, budget = self._settings.horizon.intervals, self._budget
 
         def job() -> Outcome:
             try:
@@ -474,7 +480,7 @@ class Coordinator:
         settings = self._settings
         try:
             warm = prepared.start.multipliers is not None
-            plan = solver.solve(prepared.problem, prepared.start, warm=True, budget=settings.horizon.budget)
+            plan = solver.solve(prepared.problem, prepared.start, warm=True, budget=self._budget)
             if not usable(prepared.problem, plan) and warm:
                 cautions.append(rules.plan_late(settings, plan.solve_time))
                 return None

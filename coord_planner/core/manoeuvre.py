@@ -21,6 +21,8 @@ _COMFORT = 0.7
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
+_WIDER = 1.12  # a turn of equal radius is laid out this much wider than its tightest, to leave room for corrections
+_SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
 
 
 @attrs.frozen
@@ -91,7 +93,9 @@ class Task:
         ends: shape (N, 3), headings unwrapped; NaN where nothing is asked.
         speed: asked speed of the fleet, m/s. asked: of each robot, shape (N,): who has a shorter way drives slower.
         end_speed: m/s.
-        duration: seconds, a whole number of intervals.
+        arrival: seconds until the fleet is at its ends as far as commands go, a whole number of intervals.
+        duration: seconds until the machines have settled there too, a whole number of intervals; in between
+            the manoeuvre goes straight on at the end speed.
         ways: a guessed way for each robot.
         profile: how far along its way, relative to the longest, a robot is at which time.
         coupling, alignment: in force for this manoeuvre.
@@ -103,6 +107,7 @@ class Task:
     speed: float
     asked: np.ndarray
     end_speed: float
+    arrival: float
     duration: float
     ways: tuple[ArcPath, ...]
     profile: SpeedProfile
@@ -112,7 +117,7 @@ class Task:
 
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
-        scale = self.profile.duration / self.duration
+        scale = self.profile.duration / self.arrival
         along, speed = self.profile.distance(times * scale), self.profile.speed(times * scale) * scale
         longest = max(max(way.length for way in self.ways), 1e-9)
         parts = [way.length / longest for way in self.ways]
@@ -173,21 +178,22 @@ def lay_out(
         longest, speed_now, speed, end_speed,
         _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),
     )
-    # Machines that answer late come to rest late; the end holds the whole state.
-    settle = 3.0 * float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     step = settings.horizon.interval
-    needed = profile.duration + settle
-    if 0.0 < duration < profile.duration:
+    needed = profile.duration
+    if 0.0 < duration < needed - 1e-9:
         raise RefusedError(
             f"{name}: the longest way, {longest:.2f} m, takes {needed:.1f} s at {speed:g} m/s, and "
             f"{duration:g} s are given",
             f"give at least {needed:.1f} s, or 0 to have it worked out",
         )
-    intervals = max(4, math.ceil((duration or needed) / step - 1e-9))
+    arrival = step * max(4, math.ceil((duration or needed) / step - 1e-9))
+    # Machines that answer late come to rest late; the end holds the whole state.
+    slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
+    settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
     lengths = np.array([way.length for way in ways])
     asked = speed * np.maximum(lengths / max(longest, 1e-9), 0.1)
     return Task(
-        name, ends, speed, asked, end_speed, intervals * step, ways, profile,
+        name, ends, speed, asked, end_speed, arrival, settled, ways, profile,
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
         max_curvature,
@@ -222,7 +228,7 @@ def _equal_ways(
     _check_bend(manoeuvre, fleet, settings)
     rate = _COMFORT * weakest(fleet.limit("max_curvature_rate")) / manoeuvre.speed
     angle = math.radians(manoeuvre.angle_deg)
-    return tuple(eased_turn(angle, manoeuvre.radius, rate, pose) for pose in poses)
+    return tuple(eased_turn(angle, _WIDER * manoeuvre.radius, rate, pose) for pose in poses)
 
 
 def _smallest_radius(fleet: Fleet) -> float:

@@ -17,7 +17,7 @@ from .settings import Poses
 _SUBSTEP = 0.025  # seconds; fine against every response lag that matters
 # How much less a model of first order knows after a second: metres, radians, and the part of the asked speed
 # that a machine really reaches (it changes when wheels slip or a machine is held up).
-_DRIFT = np.array([0.02, 0.02, 0.01, 0.6])
+_DRIFT = np.array([0.02, 0.02, 0.01, 0.25])
 _FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
 
 

@@ -24,7 +24,7 @@ class Plan:
         pairs: positions of the watched pairs, shape (P, 2).
         missed: how far each end component is missed, shape (N, 7), in its own unit, >= 0.
         solved: whether the solver reported convergence.
-        solve_time: seconds.
+        solve_time: seconds. iterations: of the solver.
         vector, multipliers: the solver's own primal and dual vectors, for the next start.
     """
 
@@ -38,6 +38,7 @@ class Plan:
     missed: np.ndarray
     solved: bool
     solve_time: float
+    iterations: int
     vector: np.ndarray
     multipliers: tuple[np.ndarray, np.ndarray]
 

@@ -126,9 +126,11 @@ def _stretched(
 ) -> tuple[Task, Fleet, NeighbourGraph, Settings, np.ndarray, float, np.ndarray]:
     """Arguments of make for the rest in a longer time, with the old plan, slowed, as the guess."""
     step = settings.horizon.interval
-    end = step * int(np.ceil((start + (task.duration - start) * stretch) / step - 1e-9))
+    settle = task.duration - task.arrival
+    arrival = step * int(np.ceil((start + max(task.arrival - start, 0.0) * stretch) / step - 1e-9))
+    end = arrival + settle
     top = np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
-    slower = attrs.evolve(task, duration=end, asked=np.minimum(task.asked / stretch, top))
+    slower = attrs.evolve(task, arrival=arrival, duration=end, asked=np.minimum(task.asked / stretch, top))
     times = grid.until(start, end, step)
     guess = old.states(start + (times - start) * (task.duration - start) / max(end - start, step))
     guess[:, 1:, [SPEED, SPEED_COMMAND]] /= stretch
@@ -136,12 +138,20 @@ def _stretched(
 
 
 def end_target(task: Task, count: int) -> np.ndarray:
-    """State asked at the end, shape (N, 7): the end, straight, at the end speed."""
+    """State asked when the machines have settled, shape (N, 7): past the end, straight on, at the end speed."""
     target = np.full((count, 7), np.nan)
     target[:, POSE] = task.ends
+    past = task.end_speed * (task.duration - task.arrival)
+    target[:, 0] += past * np.cos(task.ends[:, 2])
+    target[:, 1] += past * np.sin(task.ends[:, 2])
     target[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
     target[:, [SPEED, SPEED_COMMAND]] = task.end_speed
     return target
+
+
+def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
+    """Asked speed in each interval between seconds of the manoeuvre, shape (N, M): the end speed after arrival."""
+    return np.where(s[None, 1:] > task.arrival + 1e-9, task.end_speed, task.asked[:, None])
 
 
 def _problem(
@@ -149,13 +159,13 @@ def _problem(
     guess: np.ndarray, pairs: np.ndarray,
 ) -> Problem:
     rules = settings.site_rules
-    asked = np.repeat(task.asked[:, None], len(times) - 1, axis=1)
+    asked = asked_speeds(task, times)
     return Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
         turn_speed=task.asked, target=end_target(task, len(fleet)),
         bounds=bounds_in_force(
-            fleet, initial, times, task.duration, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
+            fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
             task.max_curvature,
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),

@@ -31,7 +31,7 @@ class Prices:
         0.02, "price of speeding up and braking", "s^4/m^4", minimum=1e-6, maximum=100.0, live=True
     )
     speed: float = parameter(
-        0.5, "price of leaving the asked speed, relative", "1/m^2", minimum=1e-4, maximum=1e3, live=True
+        2.0, "price of leaving the asked speed, relative", "1/m^2", minimum=1e-4, maximum=1e3, live=True
     )
     clearance: float = parameter(
         100.0, "price of each metre of missing clearance, per second", "1/(m^3 s)", above=0.0, maximum=1e6, live=True

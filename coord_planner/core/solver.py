@@ -73,7 +73,7 @@ def solve(problem: Problem, start: Start, *, warm: bool = False, budget: float =
         raise SolveError("the solver returned numbers that are not finite")
     return from_solution(
         problem, program.variables.unpack(vector), cost=float(result["f"]), solved=bool(stats["success"]),
-        solve_time=float(stats["t_wall_total"]), vector=vector,
+        solve_time=float(stats["t_wall_total"]), iterations=int(stats["iter_count"]), vector=vector,
         multipliers=(np.asarray(result["lam_x"]).ravel(), np.asarray(result["lam_g"]).ravel()),
     )
 

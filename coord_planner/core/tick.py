@@ -11,7 +11,7 @@ from . import grid, ocp, solver
 from .fleet import Fleet
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
-from .reference import Reference
+from .reference import Reference, asked_speeds
 from .settings import Settings
 from .watch import watch
 
@@ -49,17 +49,15 @@ def pose_problem(
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
-    after_end = s[1:] > reference.end + 1e-9
-    asked = np.where(after_end[None, :], task.end_speed, task.asked[:, None]) * pace
-    target = guess[:, -1].copy()
-    target[:] = paced(reference.state(float(s[-1])), pace)
+    asked = asked_speeds(task, s) * pace
+    target = paced(reference.state(float(s[-1])), pace)
     graph = reference.graph
     problem = Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=pace, initial=initial, asked_speed=asked,
         turn_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
-            fleet, initial, times, time + (reference.end - start) / pace, task.end_speed * pace, rules.max_speed,
+            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
             rules.max_lateral_acceleration, task.max_curvature,
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),

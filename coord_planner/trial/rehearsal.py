@@ -17,6 +17,7 @@ from .run import Run, RunFrame
 from .vehicle import SimulatedFleet
 
 _LONGEST = 900.0  # seconds of simulated time
+_BUDGET = 60.0  # seconds of wall time for a tick's solve: never the reason for what a rehearsal shows
 _FRAME_EVERY = 2  # ticks between plans kept for the page
 _FRAME_POINTS = 13
 
@@ -86,7 +87,7 @@ def rehearse(
     rng = np.random.default_rng(simulation.seed if seed is None else seed)
     timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
     simulated = SimulatedFleet(configuration.fleet, configuration.starts, simulation, timeouts, rng)
-    coordinator = Coordinator(configuration.fleet, configuration.graph, settings, configuration.manoeuvres)
+    coordinator = Coordinator(configuration.fleet, configuration.graph, settings, configuration.manoeuvres, _BUDGET)
     log, answers = _Log(), []
     began_at = clock.perf_counter()
     period = 1.0 / settings.commands.rate

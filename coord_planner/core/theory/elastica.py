@@ -14,7 +14,8 @@ import attrs
 import numpy as np
 from scipy.special import ellipeinc, ellipj, ellipkinc
 
-_REL = 1e-12  # relative difference of h and C below which they count as equal
+_REL = 1e-13  # relative difference of h and C below which they count as equal
+_REST = 1e-15  # the same for h and -C: a straight line
 
 ARC = "arc"  # C = 0, or at rest on u = 0: an arc of constant curvature or a straight line
 INFLECTED = "inflected"  # |h| < C: the curvature changes sign
@@ -44,7 +45,8 @@ class Elastica:
         if regime == ARC or resting:
             return cls(u * u / 2, 0.0, 0.0, side)
         if regime == SOLITARY:
-            return cls(energy, tension, math.asinh(2 * (side or 1) * across / (u * u)) if u else math.inf, side or 1)
+            steep = math.acosh(max(2 * math.sqrt(tension) / abs(u), 1.0)) if abs(u) > 1e-150 else math.inf
+            return cls(energy, tension, math.copysign(steep, (side or 1) * across), side or 1)
         plain = cls(energy, tension, 0.0, side or 1)
         if regime == TURNING:
             half = math.atan2(plain.side * across, -along) / 2
@@ -78,7 +80,8 @@ class Elastica:
             return np.full(t.shape, self.side * math.sqrt(2 * max(self.energy, 0.0)))
         argument = self.rate * t + self.phase
         if self.regime == SOLITARY:
-            return 2 * self.side * self.rate / np.cosh(argument)
+            decay = np.exp(-np.abs(argument))  # 1/cosh without its overflow
+            return 4 * self.side * self.rate * decay / (1 + decay**2)
         _, cn, dn, _ = ellipj(argument, self.parameter)
         if self.regime == TURNING:
             return 2 * self.side * self.rate * dn
@@ -102,7 +105,7 @@ class Elastica:
         argument, m, rate = self.rate * t + self.phase, self.parameter, self.rate
         across = self.curvature(t) / self.tension
         if self.regime == SOLITARY:
-            return t - 2 * np.tanh(argument) / rate, across, self.side * (4 * np.arctan(np.exp(argument)))
+            return t - 2 * np.tanh(argument) / rate, across, np.pi + 4 * self.side * np.arctan(np.tanh(argument / 2))
         sn, _, dn, amplitude = ellipj(argument, m)
         second_kind = ellipeinc(amplitude, m)
         if self.regime == TURNING:
@@ -120,7 +123,7 @@ class Elastica:
 
 def _regime(energy: float, tension: float) -> str:
     scale = abs(energy) + tension
-    if tension <= _REL * scale or energy <= -tension * (1 - _REL) or scale == 0:
+    if tension <= _REL * scale or energy <= -tension * (1 - _REST) or scale == 0:
         return ARC
     if abs(energy - tension) <= _REL * scale:
         return SOLITARY

@@ -130,7 +130,7 @@ class _Aim:
         force = guess.costate[self.placed]
         nodes, at = np.linspace(0, 1, count + 1), np.arange(1, PIECES) / PIECES
         joints = [[np.interp(at, nodes, row) for row in rows] for rows in (path.real, path.imag, headings)]
-        return np.concatenate([force.real, force.imag, moment[self.headed], np.moveaxis(joints, 2, 0).ravel()])
+        return np.concatenate([force.real, force.imag, moment[self.headed], np.moveaxis(np.array(joints), 2, 0).ravel()])
 
     def unpack(self, known: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """p as a complex number and m, both (N,), from the unknowns that are not poses."""
