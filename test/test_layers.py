@@ -12,7 +12,7 @@ import pytest
 import coord_planner
 
 PACKAGE = Path(coord_planner.__file__).parent
-ORDER = ["errors", "core", "config", "trial", "record", "ros", "cli"]
+ORDER = ["errors", "core", "config", "trial", "record", "ros", "commands", "cli"]
 CORE_LIBRARIES = {"attrs", "casadi", "networkx", "numpy", "scipy", "shapely"}
 # Clocks, randomness, files, processes and prints: what core/ must be handed instead of fetching it.
 NOT_IN_CORE = {

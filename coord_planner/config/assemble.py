@@ -91,7 +91,9 @@ def assemble(flat: Mapping[str, Any], source: Source) -> Configuration:
         file=source.file, flat=dict(known.given), settings=settings,
         fleet=Fleet(tuple(robot for robot, _, _ in built)), edges=edges, manoeuvres=manoeuvres,
         frame=words.frame, fleet_name=words.name, connections=connections, simulation=simulation,
-        starts={robot.name: _start(place, connection) for robot, connection, place in built if place.start_x is not None},
+        starts={
+            robot.name: _start(place, connection) for robot, connection, place in built if place.start_x is not None
+        },
         enabled=frozenset(robot.name for robot, _, place in built if place.enabled),
         activate_on_start=_group(Node, "", known, complaints).activate_on_start,
     )
@@ -146,22 +148,23 @@ def _check_names(key: str, names: tuple[str, ...], complaints: Complaints) -> No
             complaints.add(f"{name} is given more than once", key, "each name once")
 
 
-def _unknown(key: str, slots: Mapping[str, Slot], robots: tuple[str, ...], kinds: Mapping[str, str]) -> tuple[str, str, str]:
+def _unknown(
+    key: str, slots: Mapping[str, Slot], robots: tuple[str, ...], kinds: Mapping[str, str]
+) -> tuple[str, str, str]:
     """Problem, key and what is allowed for a key that is not known."""
     for group, names in (("robots", robots), ("manoeuvres", tuple(kinds))):
         parts = key.split(".")
         if parts[0] == group and len(parts) > 2 and parts[1] not in names:
             problem = f"{shown(parts[1])} is not in {group}.names{nearest(parts[1], names)}"
             return problem, key, ", ".join(names) or f"no name, for {group}.names is empty"
-    close = nearest(key, slots)
-    if close:
-        return f"it is not a known key{close}", key, ""
-    group = key.rpartition(".")[0]
+    group, _, field = key.rpartition(".")
     fields = [other.rpartition(".")[2] for other in slots if other.rpartition(".")[0] == group]
     if group and fields:
-        return "it is not a known key", key, f"in {group}: {', '.join(fields)}"
+        close = nearest(field, fields, f"{group}.")
+        return f"it is not a known key{close}", key, "" if close else f"in {group}: {', '.join(fields)}"
+    close = nearest(key, slots)
     groups = dict.fromkeys(other.split(".")[0] for other in slots)
-    return "it is not a known key", key, f"at the top: {', '.join(groups)}"
+    return f"it is not a known key{close}", key, "" if close else f"at the top: {', '.join(groups)}"
 
 
 def _group(group: type[Group], prefix: str, known: Checked, complaints: Complaints) -> Group:
@@ -184,10 +187,9 @@ def _check_words(words: FleetWords, complaints: Complaints) -> None:
 
 def _edges(known: Checked, complaints: Complaints) -> tuple[Edge, ...]:
     graph: Graph = _group(Graph, "graph", known, complaints)
-    edges: tuple[Edge, ...] = ()
     with complaints.about("graph.edges"):
-        edges = NeighbourGraph(known.robots, tuple(_edge(entry) for entry in graph.edges)).edges
-    return edges
+        return NeighbourGraph(known.robots, tuple(_edge(entry) for entry in graph.edges)).edges
+    return ()
 
 
 def _edge(entry: str) -> Edge:

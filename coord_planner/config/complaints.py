@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import difflib
-from collections.abc import Iterable, Iterator, Mapping
-from contextlib import contextmanager
+from collections.abc import Iterable, Mapping
+from contextlib import AbstractContextManager
 from typing import Any
 
 import attrs
@@ -61,13 +61,9 @@ class Complaints:
         error = self._source.error(problem, key, allowed)
         self._errors.setdefault(str(error), error)
 
-    @contextmanager
-    def about(self, key: str) -> Iterator[None]:
+    def about(self, key: str) -> AbstractContextManager[None, bool]:
         """Turn a SettingsError raised inside into a complaint about ``key``."""
-        try:
-            yield
-        except SettingsError as error:
-            self.add(error.problem, key or error.key, error.allowed)
+        return _About(self, key)
 
     def raise_any(self) -> None:
         """Raise what was gathered: nothing, one SettingsError or SeveralSettingsErrors."""
@@ -76,6 +72,18 @@ class Complaints:
             raise errors[0]
         if errors:
             raise SeveralSettingsErrors(errors)
+
+
+@attrs.frozen
+class _About(AbstractContextManager[None, bool]):
+    complaints: Complaints
+    key: str
+
+    def __exit__(self, _kind: object, error: BaseException | None, _trace: object) -> bool:
+        if not isinstance(error, SettingsError):
+            return False
+        self.complaints.add(error.problem, self.key, error.allowed)
+        return True
 
 
 def shown(value: Any) -> str:
@@ -92,7 +100,7 @@ def one_line(key: str) -> str:
     return key if key.isprintable() else repr(key)
 
 
-def nearest(word: str, known: Iterable[str]) -> str:
-    """`` (did you mean ...?)`` for a word that is close to a known one, else nothing."""
+def nearest(word: str, known: Iterable[str], prefix: str = "") -> str:
+    """``; did you mean ...?`` for a word that is close to a known one, else nothing."""
     close = difflib.get_close_matches(word, list(known), n=1, cutoff=0.75)
-    return f"; did you mean {close[0]}?" if close else ""
+    return f"; did you mean {prefix}{close[0]}?" if close else ""

@@ -43,7 +43,8 @@ def _check_timeout(robot: RobotValues, settings: Settings, complaints: Complaint
     timeout, period = robot.values["command_timeout"], 1.0 / settings.commands.rate
     if timeout <= period:
         complaints.add(f"{timeout:g} s is over before the next command comes, every {period:g} s",
-                       robot.key("command_timeout"), f"above {period:g}, better three times that; or a higher commands.rate")
+                       robot.key("command_timeout"),
+                       f"above {period:g}, better three times that; or a higher commands.rate")
 
 
 def _check_slowest(

@@ -16,7 +16,7 @@ from ..errors import SettingsError
 from .complaints import one_line, shown
 
 _LARGEST = 4_000_000  # bytes; a parameter file has some thousands
-_BOOLEANS = {word: True for word in ("y", "yes", "true", "on")} | {word: False for word in ("n", "no", "false", "off")}
+_BOOLEANS = dict.fromkeys(("y", "yes", "true", "on"), True) | dict.fromkeys(("n", "no", "false", "off"), False)
 _SECTION = "ros__parameters"
 _EXPECTED = "/**: with ros__parameters: below it and the keys below that"
 Flat = dict[str, Any]

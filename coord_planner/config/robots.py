@@ -108,7 +108,7 @@ def _check_drive(robot: RobotValues, complaints: Complaints) -> None:
             _check_steering(robot, complaints)
         return
     for field in _STEERING:
-        if f"robots.{robot.name}.{field}" == robot.key(field) and robot.was_given(field):
+        if robot.values[field] > 0.0 and robot.key(field).startswith("robots."):  # robot_defaults may serve others
             complaints.add(f"{robot.name} is differential, and only a car_like robot has it", robot.key(field),
                            f"drive: car_like, or no {field}")
     if robot.values["command_type"] == "steering":

@@ -67,7 +67,8 @@ def _single(value: Any, kind: str, wanted: str, key: str, description: Descripti
         try:
             as_float = float(value)
         except OverflowError:
-            raise SettingsError(f"{shown(value)} is out of range", key=key, allowed=allowed(kind, description)) from None
+            raise SettingsError(f"{shown(value)} is out of range", key=key,
+                                allowed=allowed(kind, description)) from None
         return as_float if kind == "float" else value
     return value
 

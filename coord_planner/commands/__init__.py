@@ -1,0 +1,1 @@
+"""The commands of ``coord-planner``, one module each."""

@@ -1,0 +1,115 @@
+"""``coord-planner check``: is a parameter file sound, and what does it say?"""
+
+from __future__ import annotations
+
+from typing import Annotated
+
+import typer
+
+from .. import config
+from ..config.notes import notes
+from ..core.fleet import Robot
+from ..core.graph import hop_fraction
+from ..core.manoeuvre import EqualRadius, Manoeuvre
+from .speaking import CAUTION, errors_reported, table, write, write_heading, write_table
+
+
+def check(params: Annotated[str, typer.Argument(metavar="PARAMS", help="Parameter file (YAML).")]) -> None:
+    """Is this parameter file sound? A summary of it, or its errors."""
+    with errors_reported():
+        configuration = config.load(params)
+    write(f"{params}: sound. Fleet {configuration.fleet_name}, {len(configuration.fleet)} robots, "
+          f"poses in frame {configuration.frame}.\n")
+    _write_robots(configuration)
+    _write_graph(configuration)
+    _write_manoeuvres(configuration)
+    _write_rules(configuration)
+    _write_notes(configuration)
+    write(CAUTION)
+
+
+def _write_robots(configuration: config.Configuration) -> None:
+    write_heading("Robots and their limits")
+    shown = table("robot", "drive", "footprint m", "radius m", "steering 1/(m s)", "speed m/s", "speeding up m/s^2",
+                  "braking m/s^2", "turning rad/s", "sideways m/s^2", "time-out s")
+    for robot in configuration.fleet.robots:
+        shown.add_row(*_robot_row(robot, configuration.connections[robot.name]))
+    write_table(shown)
+
+
+def _robot_row(robot: Robot, connection: config.Connection) -> list[str]:
+    limits, footprint = robot.limits, robot.footprint
+    return [
+        robot.name,
+        connection.drive,
+        f"{footprint.footprint_length:g} x {footprint.footprint_width:g}",
+        f"from {1.0 / limits.max_curvature:.2f}",
+        f"{limits.max_curvature_rate:.3g}",
+        f"{limits.min_speed:g} to {limits.max_speed:g}",
+        f"{limits.max_acceleration:g}",
+        f"{limits.max_braking:g}",
+        f"{limits.max_turn_rate:g}",
+        f"{limits.max_lateral_acceleration:g}",
+        f"{connection.command_timeout:g}",
+    ]
+
+
+def _write_graph(configuration: config.Configuration) -> None:
+    graph, coupling = configuration.graph, configuration.settings.coupling
+    edges = ", ".join(f"{a} - {b}" + (f" ({weight:g})" if weight != 1.0 else "") for a, b, weight in graph.edges)
+    write_heading("Neighbours")
+    write(f"{edges or 'none'}. {'Connected.' if graph.connected else 'Not connected.'}")
+    write(f"Coupling {coupling.strength:g}, alignment {coupling.alignment:g} 1/m^2. Along a long line each further "
+          f"robot copies {100 * hop_fraction(coupling.strength):.0f}% of the turning of the one before it.\n")
+
+
+def _write_manoeuvres(configuration: config.Configuration) -> None:
+    write_heading("Manoeuvres")
+    shown = table("manoeuvre", "kind", "asked", "speed m/s", "coupling", "alignment 1/m^2")
+    for name, manoeuvre in configuration.manoeuvres.items():
+        shown.add_row(*_manoeuvre_row(name, manoeuvre, configuration))
+    write_table(shown)
+
+
+def _manoeuvre_row(name: str, manoeuvre: Manoeuvre, configuration: config.Configuration) -> list[str]:
+    coupling = configuration.settings.coupling
+    return [
+        name,
+        str(configuration.flat[f"manoeuvres.{name}.kind"]),
+        _asked(manoeuvre),
+        f"{manoeuvre.speed:g}",
+        f"{coupling.strength if manoeuvre.coupling is None else manoeuvre.coupling:g}",
+        f"{coupling.alignment if manoeuvre.alignment is None else manoeuvre.alignment:g}",
+    ]
+
+
+def _asked(manoeuvre: Manoeuvre) -> str:
+    if isinstance(manoeuvre, EqualRadius):
+        side = "left" if manoeuvre.angle_deg >= 0 else "right"
+        return f"everyone {abs(manoeuvre.angle_deg):g} degrees to the {side}, radius {manoeuvre.radius:g} m"
+    ends = manoeuvre.ends()
+    posed = [name for name, end in ends.items() if end.x is not None]
+    headed = [name for name in ends if name not in posed]
+    words = [("a pose for", posed), ("a heading for", headed)]
+    return "; ".join(f"{what} {', '.join(names)}" for what, names in words if names)
+
+
+def _write_rules(configuration: config.Configuration) -> None:
+    settings = configuration.settings
+    rules, margin, horizon = settings.site_rules, settings.clearance, settings.horizon
+    write_heading("Site rules and planning")
+    write(f"From {rules.reference}: at least {rules.min_clearance:g} m between any two robots, at most "
+          f"{rules.max_speed:g} m/s and {rules.max_lateral_acceleration:g} m/s^2 sideways.")
+    write(f"On top of the clearance, for each robot of a pair: {margin.pose_uncertainty:g} m, and its speed times "
+          f"{margin.response_uncertainty:g} s.")
+    write(f"{horizon.rate:g} plans a second over {horizon.duration:g} s in {horizon.intervals} intervals; commands "
+          f"{settings.commands.rate:g} times a second.\n")
+
+
+def _write_notes(configuration: config.Configuration) -> None:
+    found = notes(configuration)
+    if found:
+        write_heading("Worth knowing")
+        for note in found:
+            write(f"- {note}")
+        write()

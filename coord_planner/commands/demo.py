@@ -1,0 +1,40 @@
+"""``coord-planner demo``: real ROS nodes, a simulated fleet, one manoeuvre, a page to look at."""
+
+from __future__ import annotations
+
+from importlib.util import find_spec
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from .. import config
+from ..config.places import example
+from .speaking import BAD_INPUT, errors_reported, say
+
+_NO_ROS = (
+    "ROS 2 is not installed for this Python{reason}, and the demo runs real ROS nodes.\n"
+    "Install it with `pip install 'coord-planner[ros]'`, or try `coord-planner simulate`, which needs no ROS."
+)
+
+
+def demo(
+    out: Annotated[Path, typer.Option(help="Folder for the summary and the page.")] = Path("out/demo"),
+    params: Annotated[str, typer.Option(metavar="PARAMS", help="Parameter file; the solar park when left out.")] = "",
+) -> None:
+    """Real ROS nodes, a simulated fleet, one manoeuvre, a page to look at."""
+    with errors_reported():
+        file = params or str(example("solar_park.yaml"))
+        config.load(file).all_starts()  # a mistake in it is told here and not in the log of a node
+        if find_spec("rclpy") is None:
+            say(_NO_ROS.format(reason=""))
+            raise typer.Exit(BAD_INPUT)
+        try:
+            from ..ros.demo import run_demo
+        except ImportError as error:
+            if (error.name or "").startswith("coord_planner"):
+                raise
+            say(_NO_ROS.format(reason=f" in full ({error})"))
+            raise typer.Exit(BAD_INPUT) from None
+        status = run_demo(Path(file), out)
+    raise typer.Exit(status)

@@ -1,0 +1,134 @@
+"""``coord-planner simulate``: a closed-loop run of planner and simulated fleet, without ROS."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+from typing import Annotated, Any, Optional
+
+import attrs
+import typer
+from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+from .. import config
+from ..errors import RefusedError, SettingsError
+from ..trial.run import Run
+from .speaking import DID_NOT_HOLD, errors_reported, say, table, write, write_json, write_table
+
+
+def simulate(
+    params: Annotated[str, typer.Argument(metavar="PARAMS", help="Parameter file (YAML).")],
+    manoeuvre: Annotated[str, typer.Option(metavar="M", help="Name of the manoeuvre, as in manoeuvres.names.")],
+    as_json: Annotated[bool, typer.Option("--json", help="Print one JSON object instead of tables.")] = False,
+    seed: Annotated[
+        Optional[int], typer.Option(min=0, help="Seed of the random numbers; simulation.seed when left out.")
+    ] = None,
+    entries: Annotated[
+        Optional[list[str]],
+        typer.Option("--set", metavar="KEY=VALUE", help="Another value for a key of the file; may be repeated."),
+    ] = None,
+    page: Annotated[
+        Optional[Path], typer.Option(metavar="FILE", help="Also write a page to look at (HTML).")
+    ] = None,
+) -> None:
+    """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
+    with errors_reported():
+        configuration = _configured(params, entries or [])
+        configuration.manoeuvre(manoeuvre)
+        configuration.all_starts()
+        _make_writable(page)
+        try:
+            run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
+        except RefusedError as refused:
+            if as_json:
+                write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
+            raise
+        _report(run, as_json, page)
+
+
+def _configured(params: str, entries: list[str]) -> config.Configuration:
+    configuration = config.load(params)
+    if not entries:
+        return configuration
+    changed = config.from_parameters(config.set_values(configuration.flat, entries), f"{params} with --set")
+    return attrs.evolve(changed, file=params)
+
+
+def _make_writable(page: Path | None) -> None:
+    """See before a long run that the page can be written."""
+    if page is None:
+        return
+    try:
+        page.parent.mkdir(parents=True, exist_ok=True)
+        reason = "it is a folder" if page.is_dir() else "" if os.access(page.parent, os.W_OK) else "no permission"
+    except OSError as error:
+        reason = error.strerror or str(error)
+    if reason:
+        raise SettingsError(f"{page} cannot be written ({reason})", key="--page",
+                            allowed="a file in a folder that can be written to")
+
+
+def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
+    from ..trial.rehearsal import rehearse
+
+    console = Console(stderr=True)
+    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
+    with Progress(*columns, console=console, transient=True, disable=not console.is_terminal) as bar:
+        task = bar.add_task(manoeuvre, total=1.0)
+        return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
+
+
+def _report(run: Run, as_json: bool, page: Path | None) -> None:
+    from ..record.metrics import summary
+
+    figures = summary(run)
+    if as_json:
+        write_json(figures)
+    else:
+        _write_figures(run, figures)
+    if page is not None:
+        from ..record.page import write_page
+
+        write_page(run, page)
+        say(f"The page is in {page}.")
+    failures = _failures(run, figures)
+    if failures:
+        say(f"{run.manoeuvre} did not hold: {'; '.join(failures)}.")
+        raise typer.Exit(DID_NOT_HOLD)
+
+
+def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
+    """What the manoeuvre promised and did not keep."""
+    found = []
+    if not figures["completed"]:
+        found.append(f"it was not completed, the fleet is {figures['state']}")
+    if figures["contacts"]:
+        found.append(f"{figures['contacts']} contacts")
+    if figures["limit_violations"]:
+        found.append(f"{figures['limit_violations']} commands outside a limit")
+    nearest = figures["min_clearance_m"]
+    if nearest is not None and nearest < run.min_clearance:
+        found.append(f"two robots came within {nearest:.3f} m, and the site allows {run.min_clearance:g} m")
+    return found
+
+
+def _write_figures(run: Run, figures: dict[str, Any]) -> None:
+    write(f"{run.manoeuvre}: {figures['state']} after {_figure(figures['duration_s'], 1)} s; "
+          f"{figures['contacts']} contacts, {figures['limit_violations']} commands outside a limit; smallest clearance "
+          f"{_figure(figures['min_clearance_m'], 2)} m (the site allows {run.min_clearance:g} m).\n")
+    columns = {"heading_change_rad": "heading change rad", "turn_onset_s": "turn onset s", "end_error_m": "end error m",
+               "end_heading_error_rad": "end heading error rad"}
+    robots = table("robot", *columns.values())
+    for name in run.fleet.names:
+        robots.add_row(name, *(_figure(figures[key][name], 3) for key in columns))
+    write_table(robots)
+    for warning in figures["warnings"]:
+        write(f"{_figure(warning['first_s'], 1)} to {_figure(warning['last_s'], 1)} s: {warning['text']}")
+    ticks = figures["tick_ms"]
+    write(f"Ticks: median {_figure(ticks['median'], 1)} ms, 99% below {_figure(ticks['p99'], 1)} ms; "
+          f"{_figure(figures['real_time_factor'], 1)} times as fast as real time.")
+
+
+def _figure(value: float | None, digits: int) -> str:
+    return "-" if value is None else f"{value:.{digits}f}"
