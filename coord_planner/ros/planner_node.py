@@ -9,6 +9,7 @@ from collections import deque
 from collections.abc import Callable, Sequence
 from typing import Any, Optional
 
+import attrs
 from rclpy.callback_groups import ReentrantCallbackGroup
 from rclpy.clock import Clock
 from rclpy.clock_type import ClockType
@@ -21,6 +22,7 @@ from .. import config
 from ..core.coordinator import Coordinator
 from ..core.graph import NeighbourGraph
 from ..core.messages import Answer, Decision, Snapshot, State
+from ..core.reference import Reference
 from . import messages, parameters, reports
 from .inbox import Inbox
 from .outbox import Outbox
@@ -158,6 +160,7 @@ class PlannerNode(LifecycleNode):
         self._told: tuple[Any, ...] = ()
         self._answer: Optional[Answer] = None
         self._change: Optional[reports.Change] = None
+        self._changed_from: Optional[Reference] = None
         self._trouble = ""
 
     # Timers
@@ -168,7 +171,7 @@ class PlannerNode(LifecycleNode):
             return
         if now < self._last_tick:
             back = self._last_tick - now
-            self.get_logger().warning(f"the clock went back by {back:.3f} s: all begins anew, the fleet is idle")
+            self.get_logger().warning(f"the clock went back by {back:.3f} s: all begins anew, idle")
             self._inbox.forget()
             self._renew()
         self._last_tick = now
@@ -191,10 +194,11 @@ class PlannerNode(LifecycleNode):
         self._outbox.tell(reports.status(at), details, at.now)
 
     def _situation(self) -> reports.Situation:
+        planner = self._coordinator
         return reports.Situation(
-            node=self.get_fully_qualified_name(), configuration=self.configuration, active=self._active, now=self.now(),
-            state=self._coordinator.state, decision=self._coordinator.decision, answer=self._answer, change=self._change,
-            tick_ms=self._tick_ms, overruns=self._worker.overruns, trouble=self._trouble,
+            node=self.get_fully_qualified_name(), configuration=self.configuration, active=self._active,
+            now=self.now(), state=planner.state, decision=planner.decision, ends=planner.ends, answer=self._answer,
+            change=self._change, tick_ms=self._tick_ms, overruns=self._worker.overruns, trouble=self._trouble,
         )
 
     # What the worker found
@@ -210,9 +214,10 @@ class PlannerNode(LifecycleNode):
 
     def _on_decision(self, decision: Decision, tick_ms: float) -> None:
         self._tick_ms = tick_ms
+        self._follow_change(decision)
         self._outbox.show(decision, self.configuration, self._graph)
         codes = tuple((caution.code, caution.subject) for caution in decision.warnings)
-        news = (decision.state, decision.reason, decision.manoeuvre, decision.coupling, decision.alignment, codes)
+        news = (decision.state, decision.reason, decision.manoeuvre, self._change, codes)
         if news != self._told:
             self._told = news
             self._report()
@@ -333,10 +338,21 @@ class PlannerNode(LifecycleNode):
             self._outbox.tell_neighbours(graph, self.now())
 
     def _change_to(self, words: str, **parts: Any) -> None:
-        self._change = reports.Change(words, self.now())
-        self._coordinator.change(self.now(), **parts)
+        """Hand a change on. In motion it takes force when the rest of the reference, made anew, is swapped in."""
+        now, moving = self.now(), self._coordinator.state is State.MOVING
+        self._changed_from = self._coordinator.reference
+        self._change = reports.Change(words, now, None if moving else now)
+        self._coordinator.change(now, **parts)
         self._worker.collect()
         self._report()
+
+    def _follow_change(self, decision: Decision) -> None:
+        change = self._change
+        if change is None or change.in_force is not None:
+            return
+        if decision.state is not State.MOVING or self._coordinator.reference is not self._changed_from:
+            self._change = attrs.evolve(change, in_force=decision.time)
+            self.get_logger().info(str(self._change))
 
     def _on_trouble(self, source: str, error: messages.IgnoredError) -> None:
         self.get_logger().warning(f"ignored a message of {source}: {error}")

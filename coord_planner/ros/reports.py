@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import json
 import math
 from collections.abc import Mapping
 from typing import Any, Optional
 
 import attrs
+import numpy as np
 from diagnostic_msgs.msg import DiagnosticStatus, KeyValue
 
 from ..config import Configuration
@@ -41,6 +43,7 @@ class Situation:
         node: fully qualified name of the node. active: whether its lifecycle state is active.
         now: seconds on the clock of the stamps; 0 while there is none.
         state: of the fleet. decision: the newest. answer: to the newest request. change: the newest.
+        ends: asked ends of the manoeuvre in hand, shape (N, 3), NaN where nothing is asked; None without one.
         tick_ms: wall time of the last tick. overruns: ticks left out.
         trouble: what went wrong in the node itself ("" for nothing).
     """
@@ -53,6 +56,7 @@ class Situation:
     decision: Decision
     answer: Optional[Answer] = None
     change: Optional[Change] = None
+    ends: Optional[np.ndarray] = None
     tick_ms: float = 0.0
     overruns: int = 0
     trouble: str = ""
@@ -61,13 +65,16 @@ class Situation:
 def status(at: Situation) -> DiagnosticStatus:
     """The message on ``~/status``."""
     decision, answer = at.decision, at.answer
-    coupling = at.configuration.settings.coupling
+    asked = at.configuration.settings.coupling
+    planned = bool(decision.manoeuvre)
+    coupling = decision.coupling if planned else asked.strength
+    alignment = decision.alignment if planned else asked.alignment
     values = {
         "state": at.state.value, "active": at.active, "manoeuvre": decision.manoeuvre,
         "progress": f"{decision.progress:.4f}", "progress_rate": f"{decision.progress_rate:.3f}",
         "reason": decision.reason or at.trouble,
-        "coupling": f"{decision.coupling:.6g}", "alignment": f"{decision.alignment:.6g}",
-        "coupling_asked": f"{coupling.strength:.6g}", "alignment_asked": f"{coupling.alignment:.6g}",
+        "coupling": f"{coupling:.6g}", "alignment": f"{alignment:.6g}",
+        "coupling_asked": f"{asked.strength:.6g}", "alignment_asked": f"{asked.alignment:.6g}",
         "change": "" if at.change is None else str(at.change),
         "change_in_force": at.change is None or at.change.in_force is not None,
         "request_id": "" if answer is None else answer.request_id,
@@ -77,18 +84,27 @@ def status(at: Situation) -> DiagnosticStatus:
         "clearance_pair": " and ".join(decision.clearance_pair or ()),
         "tick_ms": f"{at.tick_ms:.2f}", "ticks_left_out": at.overruns,
         "warnings": outgoing.cautions_text(decision.warnings),
+        "completed": decision.completed, "ends": _ends_text(at),
         "stamp": f"{at.now:.3f}",
     }
     level, words = _summary(at)
     return _message(f"{at.node}: status", at.configuration.fleet_name, level, words, values)
 
 
+def _ends_text(at: Situation) -> str:
+    """Asked ends as JSON: {robot: [x, y, heading]}, null where nothing is asked; {} without a manoeuvre."""
+    if at.ends is None:
+        return "{}"
+    rows = [[float(value) if math.isfinite(value) else None for value in row] for row in at.ends]
+    return json.dumps(dict(zip(at.configuration.fleet.names, rows)))
+
+
 def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies) -> list[DiagnosticStatus]:
     """Everything for ``/diagnostics``: the fleet, each warning, each robot's poses, each kind of message."""
     level, words = _summary(at)
     values = {
-        "state": at.state.value, "active": at.active, "coupling": f"{at.decision.coupling:.6g}",
-        "tick_ms": f"{at.tick_ms:.2f}", "ticks_left_out": at.overruns, "trouble": at.trouble,
+        "state": at.state.value, "active": at.active, "tick_ms": f"{at.tick_ms:.2f}",
+        "ticks_left_out": at.overruns, "trouble": at.trouble,
     }
     found = [_message(f"{at.node}: fleet", at.configuration.fleet_name, level, words, values)]
     for caution in at.decision.warnings:
