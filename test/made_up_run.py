@@ -46,7 +46,8 @@ def turn(count=6, *, spacing=2.5, later=0.06, slowed="", seconds=16.0, began=100
         truth.append(np.column_stack([machines.poses(), machines.speeds(), machines.curvatures()]))
         sent.append(wanted)
         if tick % 2 == 0:
-            ahead = np.array([[_profile(tick / RATE + 0.25 * step, later * n) for step in range(24)] for n in range(count)])
+            ahead = np.array([[_profile(tick / RATE + 0.25 * step, later * n) for step in range(24)]
+                              for n in range(count)])
             steps = ahead[:, :, 0] * 0.25
             frames.append(RunFrame(now, 1.0, se2.rollout(machines.poses(), steps, steps * ahead[:, :, 1])))
     truth = np.array(truth).transpose(1, 0, 2)

@@ -32,7 +32,8 @@ def test_summary_has_the_promised_keys_and_is_strict_json():
     assert figures["end_error_m"]["mower_4"] == pytest.approx(0.05)
     assert figures["end_heading_error_rad"]["mower_4"] == pytest.approx(0.01)
     assert figures["warnings"][0] | {"text": ""} == {
-        "code": "robot not following", "robot": "mower_3", "first_s": pytest.approx(6.2), "last_s": pytest.approx(9.3), "text": ""
+        "code": "robot not following", "robot": "mower_3", "first_s": pytest.approx(6.2),
+        "last_s": pytest.approx(9.3), "text": "",
     }
 
 
@@ -66,13 +67,13 @@ def test_clearance_is_the_smallest_distance_of_any_pair():
         return translate(rotate(polygon, heading, origin=(0, 0), use_radians=True), x, y)
 
     for sample in range(40):
-        each = {pair: shape(pair[0], sample).distance(shape(pair[1], sample)) for pair in itertools.combinations(range(5), 2)}
+        each = {(a, b): shape(a, sample).distance(shape(b, sample)) for a, b in itertools.combinations(range(5), 2)}
         assert near.clearance[sample] == pytest.approx(min(each.values()), abs=1e-12)
         assert each[tuple(near.pair[sample])] == pytest.approx(near.clearance[sample], abs=1e-12)
 
 
 def test_contacts_are_stretches_of_time_pair_by_pair():
-    """Robot 1 passes through robots 0 and 2, away, and through both again: 1.2 m long, at y 0, footprints 0.8 m wide."""
+    """Robot 1 passes through robots 0 and 2, away, and through both again."""
     x = np.concatenate([np.linspace(-5, 5, 101), np.linspace(5, -5, 101)])
     poses = np.zeros((3, len(x), 3))
     poses[1, :, 0] = x
@@ -92,17 +93,18 @@ def test_heading_changes_and_spread_are_since_the_beginning():
     poses = np.zeros((2, 11, 3))
     poses[:, :, 2] = [[1.0], [-2.0]] + np.array([[0.1], [0.25]]) * np.arange(11)
     poses[1, :, 1] = 9.0
-    figures = summary(standing(poses[:, 0], count=11, poses=poses, began=0.1, curvatures=np.array([[0.1] * 11, [-0.3] * 11])))
+    curvatures = np.array([[0.1] * 11, [-0.3] * 11])
+    figures = summary(standing(poses[:, 0], count=11, poses=poses, began=0.1, curvatures=curvatures))
     assert figures["heading_change_rad"] == pytest.approx({"r0": 0.8, "r1": 2.0})
     assert figures["heading_spread_max_rad"] == pytest.approx(1.2)
     assert figures["curvature_spread_max_per_m"] == pytest.approx(0.4)
 
 
 def test_turn_onset_is_where_a_tenth_of_the_largest_turn_rate_is_passed():
-    """A ramp from 0 at 1 s to 0.5 rad/s at 3 s passes a tenth at 1.2 s; noise moves it to where it stands above that."""
+    """A ramp from 0 at 1 s to 0.5 rad/s at 3 s passes a tenth at 1.2 s; with noise where it stands above that."""
     times = np.arange(0, 5, 0.02)
     rate = np.stack([np.interp(times, [1, 3], [0, -0.5]), np.zeros_like(times)])
-    quiet = standing(np.zeros((2, 3)), count=len(times), times=times, ended=5.0, speeds=np.ones_like(rate), curvatures=rate)
+    quiet = standing(np.zeros((2, 3)), times=times, ended=5.0, speeds=np.ones_like(rate), curvatures=rate)
     assert turn_onsets(quiet) == pytest.approx([1.2, math.nan], abs=1e-9, nan_ok=True)
     noisy = attrs.evolve(quiet, curvatures=rate + np.random.default_rng(0).normal(0, 0.02, rate.shape))
     onset = turn_onsets(noisy)

@@ -177,7 +177,8 @@ def test_page_fits_wide_and_narrow_windows(browser, tmp_path):
         wait_for(lambda: browser.execute_script(
             "return document.documentElement.scrollWidth <= window.innerWidth && ['top', 'charts'].every((id) => {"
             "const box = document.getElementById(id), plot = box.querySelector('.main-svg');"
-            "return Math.abs(box.clientWidth - plot.clientWidth) <= 1 && Math.abs(box.clientHeight - plot.clientHeight) <= 1 })"))
+            "return Math.abs(box.clientWidth - plot.clientWidth) <= 1"
+            " && Math.abs(box.clientHeight - plot.clientHeight) <= 1 })"))
     browser.execute_cdp_cmd("Emulation.clearDeviceMetricsOverride", {})
     assert browser.get_log("browser") == []
 

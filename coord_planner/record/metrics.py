@@ -24,10 +24,11 @@ def summary(run: Run, near: Nearness | None = None) -> dict[str, Any]:
 
     ``contacts``: stretches of time in which two footprints overlapped or touched, over all pairs.
     ``limit_violations``: see :func:`coord_planner.record.adherence.violations`.
-    ``heading_spread_max_rad``: largest difference between two robots' changes of heading since the beginning, at equal time.
-    ``curvature_spread_max_per_m``: largest difference between two robots' true curvatures, at equal time.
-    ``turn_onset_s``: None for a robot that does not turn. ``heading_change_rad``: from the beginning to the last sample.
-    ``end_error_m``, ``end_heading_error_rad``: distance at the last sample, at least 0; None where no such end was asked.
+    ``heading_spread_max_rad``: largest difference of two robots' heading changes since the beginning, at equal time.
+    ``curvature_spread_max_per_m``: largest difference of two robots' true curvatures, at equal time.
+    ``turn_onset_s``: None for a robot that does not turn.
+    ``heading_change_rad``: from the beginning to the last sample.
+    ``end_error_m``, ``end_heading_error_rad``: at the last sample, at least 0; None where no such end was asked.
 
     Args:
         run: the record. near: its clearances, if they are at hand (they are worked out otherwise).
@@ -120,7 +121,8 @@ def _spreads(run: Run) -> tuple[float, float]:
     if not inside.any():
         return math.nan, math.nan
     headings = run.poses[:, inside, 2]
-    return float(np.ptp(headings - headings[:, :1], axis=0).max()), float(np.ptp(run.curvatures[:, inside], axis=0).max())
+    spreads = np.ptp(headings - headings[:, :1], axis=0), np.ptp(run.curvatures[:, inside], axis=0)
+    return float(spreads[0].max()), float(spreads[1].max())
 
 
 def _heading_changes(run: Run) -> np.ndarray:
@@ -154,7 +156,8 @@ def _warnings(run: Run) -> list[dict[str, Any]]:
 def _tick_times(tick_ms: np.ndarray) -> dict[str, float]:
     if not len(tick_ms):
         return {"median": math.nan, "p99": math.nan, "max": math.nan}
-    return {"median": float(np.median(tick_ms)), "p99": float(np.percentile(tick_ms, 99)), "max": float(np.max(tick_ms))}
+    median, p99, largest = np.percentile(tick_ms, [50, 99, 100])
+    return {"median": float(median), "p99": float(p99), "max": float(largest)}
 
 
 def _real_time_factor(run: Run) -> float:

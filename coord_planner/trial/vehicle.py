@@ -100,8 +100,8 @@ class SimulatedFleet:
     A command given at ``now`` takes effect ``command_delay`` later. From then on the true speed tends to
     factor * commanded speed and the true curvature to the commanded one, each with its first-order lag.
     When no command has taken effect for a robot's time-out it brakes at its braking rate, steering on to
-    the last curvature it was sent, until a new command takes effect. Between commands speed, curvature and heading are exact;
-    positions are chains of arcs of at most 10 ms that carry the exact distance and turn.
+    the last curvature it was sent, until a new command takes effect. Between commands speed, curvature and
+    heading are exact; positions are chains of arcs of at most 10 ms that carry the exact distance and turn.
 
     Args:
         fleet: the robots; their ``response`` holds unless ``simulation`` says otherwise.
