@@ -120,7 +120,7 @@ def _fleet_at(run: Run, scene: _Scene, corners: np.ndarray, strength: float, lab
         ends = centres[[run.fleet.index(first), run.fleet.index(second)]]
         if np.isfinite(ends).all():
             yield f'<path d="{scene.data(ends)}" stroke="{_GREY}" stroke-width="1.2"/>'
-    for row in np.flatnonzero(np.isfinite(centres).all(axis=1)):
+    for row in np.flatnonzero(np.isfinite(centres).all(axis=1)).tolist():
         yield (f'<path d="{scene.data(corners[row], closed=True)}" fill="{_colour(row)}" stroke="{_GREY}"/>'
                f'<path d="{scene.data(_front(corners[row]), closed=True)}" fill="#fff"/>')
         if labelled:
@@ -192,5 +192,6 @@ def _file(run: Run, scene: _Scene, parts: Iterable[str]) -> str:
     head = (f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="0 0 {scene.width:.0f} {scene.height:.0f}" '
             f'width="{scene.width:.0f}" height="{scene.height:.0f}" role="img" '
             f'font-family="system-ui, Segoe UI, DejaVu Sans, sans-serif">')
-    words = "<desc>From above: the paths, and the robots at several moments.</desc>"
-    return "\n".join([head, f"<title>{escape(_caption(run))}</title>", words, *(part for part in parts if part), "</svg>"]) + "\n"
+    words = (f"<title>{escape(_caption(run))}</title>"
+             "<desc>From above: the paths, and the robots at several moments.</desc>")
+    return "\n".join([head, words, *filter(None, parts), "</svg>"]) + "\n"
