@@ -4,14 +4,22 @@
     ros2 service call /planner/begin/corner_left std_srvs/srv/Trigger
 """
 
+from __future__ import annotations
+
 from pathlib import Path
 
 from ament_index_python.packages import get_package_share_directory
-from launch import LaunchDescription
+from launch import Action, LaunchContext, LaunchDescription
 from launch.actions import DeclareLaunchArgument, Shutdown
+from launch.events.process import ProcessExited
 from launch.substitutions import LaunchConfiguration
 from launch_ros.actions import LifecycleNode, Node
 from launch_ros.parameter_descriptions import ParameterValue
+
+
+def end_with(_event: ProcessExited, context: LaunchContext) -> list[Action]:
+    """Neither node is of use without the other. (launch takes a second order to shut down for a mistake.)"""
+    return [] if context.is_shutdown else [Shutdown(reason="one of the two nodes has ended")]
 
 
 def generate_launch_description() -> LaunchDescription:
@@ -29,12 +37,12 @@ def generate_launch_description() -> LaunchDescription:
         Node(
             package="coord_planner", executable="simulator_node", name="simulator", namespace=namespace,
             parameters=[params, {"simulation.publish_clock": simulated_time}],
-            output="screen", emulate_tty=True, on_exit=Shutdown(reason="the simulator ended"),
+            output="screen", emulate_tty=True, on_exit=end_with,
         ),
         LifecycleNode(
             package="coord_planner", executable="planner_node", name="planner", namespace=namespace,
             parameters=[params, {"use_sim_time": simulated_time, "activate_on_start": True}],
-            output="screen", emulate_tty=True, on_exit=Shutdown(reason="the planner ended"),
+            output="screen", emulate_tty=True, on_exit=end_with,
             sigterm_timeout="30.0", sigkill_timeout="5.0",
         ),
     ])

@@ -26,6 +26,8 @@ from . import outgoing, parameters, qos
 from .spinning import Signals, run, spin
 
 _STEP = 0.02  # steady seconds between two steps of the simulation
+_LAST_MOTION = 2.0  # steady seconds from the machines' stand to the simulator's end, for whoever lives by its clock
+_PATIENCE = 20.0  # steady seconds after a signal in which machines may still be driven
 _STANDING = 1e-9  # m/s; below it a twist does not say which way the wheels point
 
 
@@ -65,6 +67,11 @@ class SimulatorNode(Node):
         )
         # The steady clock drives the steps: a node that publishes /clock cannot wait for it.
         self.create_timer(_STEP, self._step, clock=Clock(clock_type=ClockType.STEADY_TIME))
+
+    @property
+    def moving(self) -> bool:
+        """Whether any machine moves by more than a millimetre a second."""
+        return bool(np.any(np.abs(self._machines.speeds()) > 1e-3))
 
     def now(self) -> float:
         """Seconds on the clock that stamps the poses."""
@@ -186,11 +193,32 @@ def _command_type(name: str, connection: config.Connection) -> type:
     return TwistStamped if connection.command_type == "twist_stamped" else Twist
 
 
+class _Ending:
+    """A signal ends the simulator once its machines stand, a second one at once.
+
+    Ctrl-C in a terminal reaches planner and simulator together: the planner can then still stop its fleet.
+    """
+
+    def __init__(self, node: SimulatorNode, signals: Signals) -> None:
+        self._node, self._signals = node, signals
+        self._signalled: Optional[float] = None  # steady seconds
+        self._moved = -math.inf
+
+    def __call__(self) -> Optional[int]:
+        if not self._signals.count:
+            return None
+        now = time.monotonic()
+        self._signalled = now if self._signalled is None else self._signalled
+        self._moved = now if self._node.moving else self._moved
+        over = now - self._moved > _LAST_MOTION or now - self._signalled > _PATIENCE
+        return 0 if over or self._signals.count >= 2 else None
+
+
 def _body(arguments: Sequence[str], signals: Signals) -> int:
     node = SimulatorNode(arguments)
     executor = SingleThreadedExecutor()
     executor.add_node(node)
-    return spin(executor, node, after=lambda: 0 if signals.count else None)
+    return spin(executor, node, after=_Ending(node, signals))
 
 
 def main(arguments: Optional[Sequence[str]] = None) -> int:
