@@ -52,13 +52,13 @@ unit: .venv/test.stamp
 ros: .venv/test.stamp
 	$(ONE_THREAD) $(ON_TEST_DOMAIN) timeout -k 10 600 $(PY) -m pytest -q test/ros
 
-# Builds as a ROS 2 workspace does, then looks at the result from outside the source tree.
+# Builds as a ROS 2 workspace does, then looks at the result as one who has sourced that workspace.
 colcon: .venv/test.stamp
 	@rm -rf build/colcon
 	$(PY) -m colcon --log-base build/colcon/log build --paths . \
-	  --build-base build/colcon/build --install-base build/colcon/install --event-handlers console_direct-
-	$(ON_TEST_DOMAIN) COORD_PLANNER_INSTALL_SPACE=build/colcon/install \
-	  timeout -k 10 300 $(PY) -m pytest -q test/test_packaging.py test/test_launch.py
+	  --build-base build/colcon/build --install-base build/colcon/install
+	set +u; . build/colcon/install/local_setup.bash; set -u; \
+	REQUIRE_INSTALLED=1 $(ON_TEST_DOMAIN) timeout -k 10 400 .venv/bin/pytest -q test/test_packaging.py test/test_launch.py
 
 clean:
 	rm -rf .venv build install log out .pytest_cache .mypy_cache .ruff_cache .hypothesis *.egg-info
