@@ -305,7 +305,10 @@ class PlannerNode(LifecycleNode):
     def _note(self, answer: Answer) -> Answer:
         """Log an answer and put it on ``~/status``."""
         self._answer = answer
-        (self.get_logger().info if answer.ok else self.get_logger().warning)(answer.text)
+        if answer.ok:  # rclpy holds one severity for each line that logs
+            self.get_logger().info(answer.text)
+        else:
+            self.get_logger().warning(answer.text)
         self._worker.collect()
         self._report()
         return answer

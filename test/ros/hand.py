@@ -1,0 +1,158 @@
+"""A person with the ordinary ROS tools: calls services, sets parameters, listens and publishes."""
+
+from __future__ import annotations
+
+import json
+import time
+from collections.abc import Callable
+from typing import Any
+
+import rclpy
+from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus
+from geometry_msgs.msg import PoseStamped, TwistStamped
+from lifecycle_msgs.msg import Transition
+from lifecycle_msgs.srv import ChangeState, GetState
+from nav_msgs.msg import Odometry
+from rcl_interfaces.msg import Parameter as ParameterMessage
+from rcl_interfaces.srv import SetParametersAtomically
+from rclpy.context import Context
+from rclpy.executors import SingleThreadedExecutor
+from rclpy.node import Node
+from rclpy.parameter import Parameter
+from std_msgs.msg import String
+from std_srvs.srv import Trigger
+
+from coord_planner.ros import outgoing, qos
+
+ROBOTS = ("left", "middle", "right")
+CONFIGURE, ACTIVATE = Transition.TRANSITION_CONFIGURE, Transition.TRANSITION_ACTIVATE
+DEACTIVATE, CLEANUP = Transition.TRANSITION_DEACTIVATE, Transition.TRANSITION_CLEANUP
+
+
+class Hand:
+    """Listens from the beginning on; every wait spins and has an end."""
+
+    def __init__(self, domain: int) -> None:
+        self.context = Context()
+        rclpy.init(context=self.context, domain_id=domain)
+        self.node = Node("hand", context=self.context, use_global_arguments=False)
+        self._executor = SingleThreadedExecutor(context=self.context)
+        self._executor.add_node(self.node)
+        self.statuses: list[dict[str, str]] = []
+        self.diagnostics: dict[str, DiagnosticStatus] = {}
+        self.commands: dict[str, list[tuple[float, float]]] = {name: [] for name in ROBOTS}
+        self.speeds: dict[str, float] = {}
+        self._clients: dict[str, Any] = {}
+        self._publishers: dict[str, Any] = {}
+        subscribe = self.node.create_subscription
+        subscribe(DiagnosticStatus, "planner/status", self._on_status, qos.LATCHED)
+        subscribe(DiagnosticArray, "/diagnostics", self._on_diagnostics, 10)
+        for name in ROBOTS:
+            subscribe(TwistStamped, f"{name}/cmd_vel", lambda message, name=name: self._on_command(name, message), 50)
+            subscribe(Odometry, f"{name}/simulated_state", lambda message, name=name: self._on_state(name, message), 10)
+
+    def close(self) -> None:
+        self._executor.shutdown()
+        rclpy.shutdown(context=self.context)
+
+    def _on_status(self, message: DiagnosticStatus) -> None:
+        self.statuses.append({pair.key: pair.value for pair in message.values})
+
+    def _on_diagnostics(self, message: DiagnosticArray) -> None:
+        self.diagnostics.update({status.name: status for status in message.status})
+
+    def _on_command(self, name: str, message: TwistStamped) -> None:
+        self.commands[name].append((time.monotonic(), message.twist.linear.x))
+
+    def _on_state(self, name: str, message: Odometry) -> None:
+        self.speeds[name] = message.twist.twist.linear.x
+
+    @property
+    def status(self) -> dict[str, str]:
+        """The newest."""
+        return self.statuses[-1] if self.statuses else {"state": ""}
+
+    @property
+    def standing(self) -> bool:
+        """Whether no simulated robot moves."""
+        return len(self.speeds) == len(ROBOTS) and all(abs(speed) < 0.01 for speed in self.speeds.values())
+
+    def values(self, name: str) -> dict[str, str]:
+        """Values of one status on /diagnostics."""
+        return {pair.key: pair.value for pair in self.diagnostics[name].values} if name in self.diagnostics else {}
+
+    def spin(self, seconds: float) -> None:
+        end = time.monotonic() + seconds
+        while time.monotonic() < end:
+            self._executor.spin_once(timeout_sec=0.02)
+
+    def until(self, done: Callable[[], bool], seconds: float = 20.0, what: str = "") -> None:
+        """Spin until something is so; a failed assertion with the newest status when it does not come."""
+        end = time.monotonic() + seconds
+        while not done():
+            assert time.monotonic() < end, f"{what or 'it'} did not come; newest status: {self.status}"
+            self._executor.spin_once(timeout_sec=0.02)
+
+    def until_state(self, *states: str, seconds: float = 30.0) -> None:
+        self.until(lambda: self.status["state"] in states, seconds, " or ".join(states))
+
+    def ask(self, kind: type, name: str, request: Any) -> Any:
+        """Call a service and wait for its answer."""
+        future = self.ask_later(kind, name, request)
+        self.until(future.done, what=f"an answer of {name}")
+        return future.result()
+
+    def ask_later(self, kind: type, name: str, request: Any) -> Any:
+        if name not in self._clients:
+            self._clients[name] = self.node.create_client(kind, name)
+        client = self._clients[name]
+        self.until(client.service_is_ready, what=name)
+        return client.call_async(request)
+
+    def trigger(self, name: str) -> Trigger.Response:
+        return self.ask(Trigger, f"planner/{name}", Trigger.Request())
+
+    def transition(self, number: int) -> bool:
+        request = ChangeState.Request()
+        request.transition.id = number
+        return bool(self.ask(ChangeState, "planner/change_state", request).success)
+
+    def lifecycle(self) -> str:
+        return str(self.ask(GetState, "planner/get_state", GetState.Request()).current_state.label)
+
+    def set(self, **values: Any) -> Any:
+        """Set parameters together; ``__`` stands for a dot."""
+        request = SetParametersAtomically.Request()
+        request.parameters = [_parameter(key.replace("__", "."), value) for key, value in values.items()]
+        return self.ask(SetParametersAtomically, "planner/set_parameters_atomically", request).result
+
+    def publish(self, name: str, message: Any, profile: Any = qos.RELIABLE) -> None:
+        """Publish once somebody listens."""
+        if name not in self._publishers:
+            self._publishers[name] = self.node.create_publisher(type(message), name, profile)
+        publisher = self._publishers[name]
+        self.until(lambda: publisher.get_subscription_count() > 0, what=f"a listener on {name}")
+        publisher.publish(message)
+
+    def request(self, **content: Any) -> None:
+        self.publish("planner/request", String(data=json.dumps(content)))
+
+    def answer_to(self, request_id: str) -> dict[str, str]:
+        """The first status that answers a request."""
+        def answers() -> list[dict[str, str]]:
+            return [status for status in self.statuses if status["request_id"] == request_id]
+
+        self.until(lambda: bool(answers()), what=f"an answer to request {request_id}")
+        return answers()[0]
+
+    def now(self) -> float:
+        """Seconds on the system's clock, as the nodes stamp."""
+        return float(self.node.get_clock().now().nanoseconds) * 1e-9
+
+    def pose(self, x: float, y: float, *, frame: str = "map", late: float = 0.0) -> PoseStamped:
+        """A pose stamped now, or so many seconds ago."""
+        return PoseStamped(header=outgoing.header(frame, self.now() - late), pose=outgoing.pose_message(x, y, 0.0))
+
+
+def _parameter(key: str, value: Any) -> ParameterMessage:
+    return Parameter(key, value=value).to_parameter_msg()
