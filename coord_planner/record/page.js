@@ -227,9 +227,10 @@
     return safe(text).replace(/(.{40,60}?) /g, "$1<br>");
   }
   function chartLayout() {
+    const margin = 0.012 * (run.times[samples - 1] - run.times[0]) || 0.5; // so that marks at the ends are seen whole
     const layout = Object.assign(base(charts), { hovermode: "x", margin: MARGIN, annotations: [], shapes: [] });
     layout.xaxis = axis({ title: { text: "seconds since the motion began", font: { size: 11, color: css("--soft") }, standoff: 6 },
-      range: [run.times[0], run.times[samples - 1]], anchor: yName(ROWS.length - 1), showspikes: false });
+      range: [run.times[0] - margin, run.times[samples - 1] + margin], anchor: yName(ROWS.length - 1), showspikes: false });
     ROWS.forEach((row, n) => {
       layout["yaxis" + (n ? n + 1 : "")] = axis({ domain: [row.bottom, row.top], anchor: "x", fixedrange: true, nticks: 5 });
       layout.annotations.push({ text: row.title, xref: "paper", yref: "paper", x: 0, y: row.top, xanchor: "left", yanchor: "bottom",
