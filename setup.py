@@ -80,6 +80,7 @@ setup(
             "pytest-xdist>=3.4",
             "rsplan>=1.0",
             "ruff==0.17.*",
+            "selenium>=4.20",  # drives Chromium, where chromium and chromium-driver are installed
             "setuptools<80",  # colcon calls setup.py in ways that 80 dropped
             "types-PyYAML>=6.0",
         ],

@@ -17,7 +17,7 @@ CORE_LIBRARIES = {"attrs", "casadi", "networkx", "numpy", "scipy", "shapely"}
 # Clocks, randomness, files, processes and prints: what core/ must be handed instead of fetching it.
 NOT_IN_CORE = {
     "asyncio", "builtins", "datetime", "glob", "io", "logging", "multiprocessing", "os", "pathlib", "random", "secrets",
-    "shutil", "signal", "socket", "subprocess", "sys", "tempfile", "threading", "time", "uuid",
+    "shutil", "signal", "socket", "subprocess", "sys", "tempfile", "time", "uuid",
 }
 CALLS_NOT_IN_CORE = {"print", "open", "input", "exec", "eval", "__import__"}
 
