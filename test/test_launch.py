@@ -97,8 +97,8 @@ def state_and_clock(node: Any, planner: str) -> tuple[str, bool]:
 
 @pytest.mark.parametrize("use_sim_time", ["false", "true"])
 def test_fleet_waits_for_a_person(share: Path, use_sim_time: str) -> None:
-    file = share / "config" / "solar_park.yaml"
-    with launched(share / "launch/fleet.launch.py", f"params:={file}", "namespace:=yard", f"use_sim_time:={use_sim_time}") as run:
+    given = f"params:={share / 'config/solar_park.yaml'}", "namespace:=yard", f"use_sim_time:={use_sim_time}"
+    with launched(share / "launch/fleet.launch.py", *given) as run:
         assert heard_from("/yard/planner")
         with listener() as node:
             assert state_and_clock(node, "/yard/planner") == ("unconfigured", use_sim_time == "true")

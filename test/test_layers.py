@@ -71,7 +71,9 @@ def room(module: str) -> str:
     return module.split(".")[0]
 
 
-EVERY_MODULE = pytest.mark.parametrize(("name", "file"), modules(), ids=lambda value: value if isinstance(value, str) else "")
+EVERY_MODULE = pytest.mark.parametrize(
+    ("name", "file"), modules(), ids=lambda value: value if isinstance(value, str) else ""
+)
 
 
 @EVERY_MODULE
@@ -96,7 +98,7 @@ def test_ros_stays_in_its_room(name: str, file: Path) -> None:
         if room(name) != "ros":
             assert not is_ros(module), f"{file} imports {module}; only ros/ may"
         if room(name) != "ros" and at_load:
-            assert not module.startswith("coord_planner.ros"), f"{file} imports {module} when loaded; import it where it is used"
+            assert not module.startswith("coord_planner.ros"), f"{file} imports {module} when loaded, not where it is used"
 
 
 @pytest.mark.parametrize(
@@ -108,7 +110,7 @@ def test_core_is_pure(name: str, file: Path) -> None:
         root = module.split(".")[0]
         assert root not in NOT_IN_CORE, f"{file} imports {module}; time, randomness and files are passed in"
         if root != "coord_planner" and root not in sys.stdlib_module_names:
-            assert root in CORE_LIBRARIES, f"{file} imports {module}; core/ uses only {', '.join(sorted(CORE_LIBRARIES))}"
+            assert root in CORE_LIBRARIES, f"{file} imports {module}; only {', '.join(sorted(CORE_LIBRARIES))} may be used"
         assert not module.startswith("numpy.random"), f"{file} imports {module}; a generator or a seed is passed in"
     for node in ast.walk(ast.parse(file.read_text(encoding="utf-8"))):
         if isinstance(node, ast.Call) and isinstance(node.func, ast.Name):
@@ -144,9 +146,8 @@ def test_all_but_ros_loads_where_ros_is_not_installed() -> None:
                 importlib.import_module(found.name)
                 print(found.name)
     """)
-    done = subprocess.run(
-        [sys.executable, "-c", program, str(Path(__file__).parent)], capture_output=True, text=True, timeout=120, check=False
-    )
+    command = [sys.executable, "-c", program, str(Path(__file__).parent)]
+    done = subprocess.run(command, capture_output=True, text=True, timeout=120, check=False)
     assert done.returncode == 0, done.stderr
     expected = {f"coord_planner.{name}" for name, _ in modules() if name and room(name) != "ros"}
     assert set(done.stdout.split()) == expected

@@ -122,7 +122,7 @@ def prefix() -> Path:
 
 def test_installed_files_are_in_place(prefix: Path) -> None:
     for name in EXECUTABLES:
-        assert os.access(prefix / "lib" / "coord_planner" / name, os.X_OK), f"`ros2 run coord_planner {name}` finds nothing"
+        assert os.access(prefix / "lib/coord_planner" / name, os.X_OK), f"`ros2 run coord_planner {name}` finds nothing"
     share = prefix / "share" / "coord_planner"
     for kind in ("config/*.yaml", "launch/*.launch.py", "package.xml"):
         ours = sorted(path.relative_to(SOURCE) for path in SOURCE.glob(kind))
