@@ -24,7 +24,7 @@ def generate_launch_description() -> LaunchDescription:
         ),
         DeclareLaunchArgument(
             "stop_time", default_value="30.0",
-            description="seconds that the fleet gets to stop in step after Ctrl-C, before the planner is told to stop at once",
+            description="seconds for a stop in step after Ctrl-C; the planner is then told to stop at once",
         ),
         LifecycleNode(
             package="coord_planner", executable="planner_node", name="planner",

@@ -32,7 +32,7 @@ def generate_launch_description() -> LaunchDescription:
         DeclareLaunchArgument("namespace", default_value="", description="namespace of the planner and its robots"),
         DeclareLaunchArgument(
             "use_sim_time", default_value="true", choices=["true", "false"],
-            description="true: the simulator publishes /clock and the planner lives by it; false: both use the system's",
+            description="true: the simulator publishes /clock, the planner lives by it; false: the system clock",
         ),
         Node(
             package="coord_planner", executable="simulator_node", name="simulator", namespace=namespace,
