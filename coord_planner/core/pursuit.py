@@ -88,7 +88,8 @@ class Pursuit:
     def prepare(self, at: float, initial: np.ndarray, fleet: Fleet, settings: Settings) -> Prepared:
         """Pose the tick whose plan takes effect at a moment, from the state predicted for it."""
         problem, s, start = ticks.pose_problem(
-            self.reference, fleet, settings, initial, max(self.s(at), 0.0), at, self.pace, self.tick
+            self.reference, fleet, settings, initial, max(self.s(at), 0.0), at, self.pace, self.tick,
+            self.progress.lag,
         )
         return Prepared(problem, s, start, self.reference)
 

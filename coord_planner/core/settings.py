@@ -126,6 +126,10 @@ class Progress:
     filter_time: float = parameter(0.2, "time constant of the filter on each robot's lag", "s", minimum=0.0, maximum=5.0, live=True)
     slowest: float = parameter(0.15, "slowest progress before the group is stopped", "", minimum=0.05, maximum=1.0, live=True)
     recovery: float = parameter(0.5, "rate at which progress returns to full", "1/s", above=0.0, maximum=10.0, live=True)
+    catch_up: float = parameter(
+        1.5, "time in which a robot beyond the dead band is asked to catch up with the group", "s",
+        minimum=0.2, maximum=60.0, live=True,
+    )
     max_lag: float = parameter(1.5, "a lag beyond this stops the group in step", "m", above=0.0, maximum=100.0, live=True)
 
 

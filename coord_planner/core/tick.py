@@ -9,6 +9,7 @@ import numpy as np
 
 from . import grid, ocp, solver
 from .fleet import Fleet
+from .manoeuvre import Task
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
 from .reference import Reference, asked_speeds
@@ -36,7 +37,7 @@ class Tick:
 
 def pose_problem(
     reference: Reference, fleet: Fleet, settings: Settings, initial: np.ndarray, start: float, time: float,
-    pace: float, last: Optional[Tick],
+    pace: float, last: Optional[Tick], behind: np.ndarray,
 ) -> tuple[Problem, np.ndarray, solver.Start]:
     """The problem of a tick, its nodes in seconds of the manoeuvre, and where to start solving it.
 
@@ -44,12 +45,13 @@ def pose_problem(
         initial: predicted state at ``time``, shape (N, 7). start: seconds of the manoeuvre at ``time``.
         time: seconds on the clock at the first node. pace: seconds of the manoeuvre per second of the clock.
         last: the tick before, when there is one for this reference.
+        behind: metres by which each robot is held up, shape (N,), as the group's progress sees it.
     """
     task, rules = reference.task, settings.site_rules
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
-    asked = asked_speeds(task, s) * pace
+    asked = asked_speeds(task, s) * pace + _catching_up(s, times, behind, task, fleet, settings)
     target = paced(reference.state(float(s[-1])), pace)
     graph = reference.graph
     problem = Problem(
@@ -80,6 +82,20 @@ def usable(problem: Problem, plan: Plan) -> bool:
         return True
     worst = ocp.violation(problem, plan.vector)
     return bool(worst < _USABLE)
+
+
+def _catching_up(
+    s: np.ndarray, times: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet, settings: Settings
+) -> np.ndarray:
+    """Speed asked on top of a robot that was held up, shape (N, M), m/s, until it should have caught up.
+
+    The horizon's end alone would let it take the whole horizon, and the group would wait for it as long.
+    Within the dead band, where there is only noise, nothing is added and the reference is not biased.
+    """
+    progress, top = settings.progress, np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
+    late = np.maximum(behind - progress.dead_band, 0.0)[:, None] / progress.catch_up
+    soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
+    return np.minimum(late, np.maximum(top - task.speed, 0.0)[:, None]) * soon[None, :]
 
 
 def _guess(

@@ -64,7 +64,7 @@ class _Asked:
             rows[places + row, robot] = reached.gradient[robot].imag
         for row, robot in enumerate(self.headed):
             rows[2 * places + row, robot] = 1 / self.intervals
-        return rows.reshape(len(rows), -1)
+        return rows.reshape(len(rows), count * self.intervals)
 
     def costate(self, multipliers: np.ndarray) -> np.ndarray:
         places, costate = len(self.placed), np.zeros(len(self.weight), dtype=complex)
