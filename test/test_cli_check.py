@@ -140,9 +140,8 @@ def test_exit_status_and_output_follow_what_happened(monkeypatch: pytest.MonkeyP
     run = attrs.evolve(turn(), completed=True, state="ended", min_clearance=0.1)
     calls = []
 
-    def rehearse(configuration, manoeuvre, *, seed, progress):
+    def rehearse(configuration, manoeuvre, *, seed):
         calls.append((configuration.settings.coupling.strength, manoeuvre, seed))
-        progress(0.5)
         return run
 
     monkeypatch.setattr("coord_planner.trial.rehearsal.rehearse", rehearse)

@@ -1,6 +1,6 @@
 """``coord-planner check``: is a parameter file sound, and what does it say?"""
 
-from __future__ import annotations
+# No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.
 
 from typing import Annotated
 

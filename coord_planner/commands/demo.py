@@ -1,6 +1,6 @@
 """``coord-planner demo``: real ROS nodes, a simulated fleet, one manoeuvre, a page to look at."""
 
-from __future__ import annotations
+# No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.
 
 from importlib.util import find_spec
 from pathlib import Path
@@ -19,8 +19,10 @@ _NO_ROS = (
 
 
 def demo(
-    out: Annotated[Path, typer.Option(help="Folder for the summary and the page.")] = Path("out/demo"),
-    params: Annotated[str, typer.Option(metavar="PARAMS", help="Parameter file; the solar park when left out.")] = "",
+    out: Annotated[Path, typer.Option("--out", help="Folder for the summary and the page.")] = Path("out/demo"),
+    params: Annotated[
+        str, typer.Option("--params", metavar="PARAMS", help="Parameter file; the solar park when left out.")
+    ] = "",
 ) -> None:
     """Real ROS nodes, a simulated fleet, one manoeuvre, a page to look at."""
     with errors_reported():

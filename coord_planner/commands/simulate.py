@@ -1,6 +1,6 @@
 """``coord-planner simulate``: a closed-loop run of planner and simulated fleet, without ROS."""
 
-from __future__ import annotations
+# No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.
 
 import os
 from pathlib import Path
@@ -19,17 +19,19 @@ from .speaking import DID_NOT_HOLD, errors_reported, say, table, write, write_js
 
 def simulate(
     params: Annotated[str, typer.Argument(metavar="PARAMS", help="Parameter file (YAML).")],
-    manoeuvre: Annotated[str, typer.Option(metavar="M", help="Name of the manoeuvre, as in manoeuvres.names.")],
+    manoeuvre: Annotated[
+        str, typer.Option("--manoeuvre", metavar="M", help="Name of the manoeuvre, as in manoeuvres.names.")
+    ],
     as_json: Annotated[bool, typer.Option("--json", help="Print one JSON object instead of tables.")] = False,
     seed: Annotated[
-        Optional[int], typer.Option(min=0, help="Seed of the random numbers; simulation.seed when left out.")
+        Optional[int], typer.Option("--seed", min=0, help="Seed of the random numbers; simulation.seed when left out.")
     ] = None,
     entries: Annotated[
         Optional[list[str]],
         typer.Option("--set", metavar="KEY=VALUE", help="Another value for a key of the file; may be repeated."),
     ] = None,
     page: Annotated[
-        Optional[Path], typer.Option(metavar="FILE", help="Also write a page to look at (HTML).")
+        Optional[Path], typer.Option("--page", metavar="FILE", help="Also write a page to look at (HTML).")
     ] = None,
 ) -> None:
     """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
@@ -73,8 +75,10 @@ def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
     from ..trial.rehearsal import rehearse
 
     console = Console(stderr=True)
+    if not console.is_terminal:
+        return rehearse(configuration, manoeuvre, seed=seed)
     columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
-    with Progress(*columns, console=console, transient=True, disable=not console.is_terminal) as bar:
+    with Progress(*columns, console=console, transient=True) as bar:
         task = bar.add_task(manoeuvre, total=1.0)
         return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
 
