@@ -25,7 +25,7 @@ def length(x: float, y: float, z: float) -> float:
     closing = math.pi * (1 - 1e-3 / (1 + math.sqrt(wanted)))  # the quotient is about pi / (pi - phi)^2 near pi
     while _area(closing) < wanted:
         closing = (closing + math.pi) / 2
-    half = brentq(lambda phi: _area(phi) - wanted, 1e-12, closing, xtol=1e-15, rtol=1e-14)
+    half = brentq(lambda phi: _area(phi) - wanted, 0.0, closing, xtol=1e-16, rtol=1e-15)
     return chord * half / math.sin(half)
 
 
