@@ -113,7 +113,7 @@ def test_simulate_says_what_it_cannot_use(tmp_path: Path) -> None:
         (["--manoeuvre", "corner_left", "--set", "coupling.strength"], ["--set", "KEY=VALUE"]),
         (["--manoeuvre", "corner_left", "--set", "coupling.strength=-1"], ["--set: coupling.strength", "at least 0"]),
         (["--manoeuvre", "corner_left", "--set", "horizon.budget=0.5"], ["with --set: horizon.budget", "tick"]),
-        (["--manoeuvre", "corner_left", "--page", tmp_path], ["--page", "cannot be written"]),
+        (["--manoeuvre", "corner_left", "--page", tmp_path], ["--page", "is a folder"]),
     ]:
         status, output = call("simulate", PARK, *words)
         assert status == 2, output
@@ -172,6 +172,13 @@ def test_demo_without_ros_says_what_to_install(monkeypatch: pytest.MonkeyPatch) 
     monkeypatch.setattr("coord_planner.commands.demo.find_spec", lambda _name: None)
     status, output = call("demo")
     assert status == 2 and len(output.splitlines()) == 2 and "coord-planner[ros]" in output
+
+
+def test_results_that_cannot_be_written_are_told_before_the_run(tmp_path: Path) -> None:
+    in_the_way = tmp_path / "file"
+    in_the_way.write_text("x", encoding="utf-8")
+    status, output = call("simulate", PARK, "--manoeuvre", "corner_left", "--page", in_the_way / "page.html")
+    assert status == 2 and output.startswith("--page: nothing can be written into"), output
 
 
 def test_demo_looks_at_the_file_before_it_starts_anything(tmp_path: Path) -> None:

@@ -11,6 +11,7 @@ import typer
 from .. import config
 from ..config.places import example
 from .speaking import BAD_INPUT, errors_reported, say
+from .targets import prepare_folder
 
 _NO_ROS = (
     "ROS 2 is not installed for this Python{reason}, and the demo runs real ROS nodes.\n"
@@ -38,5 +39,6 @@ def demo(
                 raise
             say(_NO_ROS.format(reason=f" in full ({error})"))
             raise typer.Exit(BAD_INPUT) from None
-        status = run_demo(Path(file), out)
+        prepare_folder(out, "--out")
+        status = run_demo(file, out)
     raise typer.Exit(status)

@@ -2,7 +2,6 @@
 
 # No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.
 
-import os
 from pathlib import Path
 from typing import Annotated, Any, Optional
 
@@ -12,9 +11,10 @@ from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 
 from .. import config
-from ..errors import RefusedError, SettingsError
+from ..errors import RefusedError
 from ..trial.run import Run
 from .speaking import DID_NOT_HOLD, errors_reported, say, table, write, write_json, write_table
+from .targets import prepare_file
 
 
 def simulate(
@@ -39,7 +39,8 @@ def simulate(
         configuration = _configured(params, entries or [])
         configuration.manoeuvre(manoeuvre)
         configuration.all_starts()
-        _make_writable(page)
+        if page is not None:
+            prepare_file(page, "--page")
         try:
             run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
         except RefusedError as refused:
@@ -55,20 +56,6 @@ def _configured(params: str, entries: list[str]) -> config.Configuration:
         return configuration
     changed = config.from_parameters(config.set_values(configuration.flat, entries), f"{params} with --set")
     return attrs.evolve(changed, file=params)
-
-
-def _make_writable(page: Path | None) -> None:
-    """See before a long run that the page can be written."""
-    if page is None:
-        return
-    try:
-        page.parent.mkdir(parents=True, exist_ok=True)
-        reason = "it is a folder" if page.is_dir() else "" if os.access(page.parent, os.W_OK) else "no permission"
-    except OSError as error:
-        reason = error.strerror or str(error)
-    if reason:
-        raise SettingsError(f"{page} cannot be written ({reason})", key="--page",
-                            allowed="a file in a folder that can be written to")
 
 
 def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
