@@ -53,12 +53,12 @@ ros: .venv/test.stamp
 	$(ONE_THREAD) $(ON_TEST_DOMAIN) timeout -k 10 600 $(PY) -m pytest -q test/ros
 
 # Builds as a ROS 2 workspace does, then looks at the result as one who has sourced that workspace.
-# (COLCON_PYTHON_EXECUTABLE: by itself the sourced script fails where the path of this folder has a blank.)
 colcon: .venv/test.stamp
+	@case "$$PWD" in *" "*) echo "colcon cannot build in a folder with a blank in its path: $$PWD; move it" >&2; exit 1 ;; esac
 	@rm -rf build/colcon
 	$(PY) -m colcon --log-base build/colcon/log build --paths . \
 	  --build-base build/colcon/build --install-base build/colcon/install
-	set +u; COLCON_PYTHON_EXECUTABLE=$(PY); . build/colcon/install/local_setup.bash; set -u; \
+	set +u; . build/colcon/install/local_setup.bash; set -u; \
 	REQUIRE_INSTALLED=1 $(ON_TEST_DOMAIN) timeout -k 10 400 .venv/bin/pytest -q test/test_packaging.py test/test_launch.py
 
 clean:
