@@ -33,8 +33,9 @@ def test_published_values(end, length):
 
 
 def test_the_shortest_is_not_the_one_with_fewest_pieces():
-    """To (-4, 3, 1) the shared check values, section 4, give 5.937800245792: what rsplan 1.0.10 answers by default, since it takes a
-    path with fewer pieces when that is at most 2 m longer. With its tolerance at 0 it answers 5.8039...; both arrive.
+    """To (-4, 3, 1) the shared check values, section 4, give 5.937800245792: what rsplan 1.0.10 answers by default,
+    since it takes a path with fewer pieces when that is at most 2 m longer. With its tolerance at 0 it answers
+    5.8039...; both arrive.
     """
     end = (-4, 3, 1)
     path = reeds_shepp.shortest((0, 0, 0), end, 1.0)
@@ -69,7 +70,7 @@ def test_every_path_arrives(start, end, radius):
 
 @given(poses, poses, radii)
 def test_laws(start, end, radius):
-    """No longer than without reversing, no shorter than the beeline or the turn; the same length driven from the end."""
+    """No longer than without reversing, no shorter than the beeline or the turn; as long driven from the end."""
     length = reeds_shepp.shortest(start, end, radius).length
     assert length <= dubins.shortest(start, end, radius).length + 1e-6 * max(1, radius)
     assert length >= math.hypot(end[0] - start[0], end[1] - start[1]) - 1e-9

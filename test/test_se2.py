@@ -101,7 +101,7 @@ def test_arrays_floats_and_symbols_agree():
 
 @pytest.mark.parametrize("kind", [ca.SX, ca.MX])
 def test_first_and_second_derivatives(kind):
-    """Solvers see both: no NaN at 0, no step where the series takes over. sinc'' (0) = -1/3, cosc'(0) = 1/2 (series)."""
+    """Solvers see both: no NaN at 0, no step where the series takes over. sinc''(0) = -1/3, cosc'(0) = 1/2."""
     symbol = kind.sym("t")
     for function, slope, bend in ((se2.sinc, 0.0, -1 / 3), (se2.cosc, 0.5, 0.0)):
         value = function(symbol)

@@ -16,8 +16,8 @@ TIMES = np.linspace(0, 6, 61)
 
 
 def test_constants():
-    """Shared check values, section 1. K(m): Abramowitz & Stegun, Table 17.1 (from memory); 2EK - K^2 = pi/2 is Legendre's
-    relation at m = 1/2 (DLMF 19.7.1).
+    """Shared check values, section 1. K(m): Abramowitz & Stegun, Table 17.1 (from memory); 2EK - K^2 = pi/2 is
+    Legendre's relation at m = 1/2 (DLMF 19.7.1).
     """
     k, e = ellipk(0.5), ellipe(0.5)
     assert k == pytest.approx(1.8540746773013719, rel=1e-15)
@@ -95,7 +95,7 @@ def test_against_the_reduced_flow(name):
 @settings(max_examples=60, deadline=None)
 @given(st.floats(-3, 3), st.floats(0.05, 3), st.floats(-math.pi, math.pi))
 def test_equation_and_cost(u, tension, angle):
-    """u'^2 + (u^2/2 - h)^2 = C^2 (Love, Theory of Elasticity, 4th ed., ch. XIX, from memory); cost by Simpson's rule."""
+    """u'^2 + (u^2/2 - h)^2 = C^2 (Love, Elasticity, 4th ed., ch. XIX, from memory); cost by Simpson's rule."""
     mu = (u, tension * math.cos(angle), -tension * math.sin(angle))
     curve = Elastica.from_costates(mu)
     assume(abs(curve.parameter - 1) > 1e-9 or curve.regime == elastica.SOLITARY)  # see the class

@@ -1,6 +1,7 @@
 """The driftless problem on the Heisenberg group: published values and a numerical minimum of its own.
 
-Brockett, in New Directions in Applied Mathematics, 1981; Montgomery, A Tour of Subriemannian Geometries, 2002 (from memory).
+Brockett, in New Directions in Applied Mathematics, 1981; Montgomery, A Tour of Subriemannian Geometries, 2002 (from
+memory).
 """
 
 import math
@@ -52,7 +53,8 @@ def test_laws(x, y, z, scale, angle):
 
 
 def numerical_cost(first, second, coupling):
-    """Least cost over closed paths of a few frequencies turning either way, by SLSQP: an amplitude a copy, frequency and sense.
+    """Least cost over closed paths of a few frequencies turning either way, by SLSQP: an amplitude a copy, frequency
+    and sense.
 
     Copy k has controls sum over n of c_kn exp(2 pi i n t): cost 1/2 sum c_n'A c_n, area sum of c_kn^2 / (4 pi n).
     """

@@ -1,4 +1,4 @@
-"""The general flow: structure constants, Casimirs and Lax invariants, against textbook facts and the reduced equations."""
+"""The general flow: structure constants, Casimirs and Lax invariants, against textbooks and the reduced equations."""
 
 import numpy as np
 import pytest
@@ -10,7 +10,8 @@ from coord_planner.core.theory.reduced import flow as reduced_flow
 
 ALGEBRAS = {
     "SE(2)": lie_poisson.se2(), "SO(3)": lie_poisson.so3(), "SE(3)": lie_poisson.se3(),
-    "Heisenberg": lie_poisson.heisenberg(), "gl(2)": lie_poisson.general_linear(2), "gl(3)": lie_poisson.general_linear(3),
+    "Heisenberg": lie_poisson.heisenberg(), "gl(2)": lie_poisson.general_linear(2), "gl(3)":
+    lie_poisson.general_linear(3),
 }
 TIMES = np.linspace(0, 3, 13)
 
@@ -40,8 +41,8 @@ def test_constants_are_those_of_a_lie_algebra(name):
 
 
 def test_brackets_from_textbooks():
-    """[turn, forward] = left, [turn, left] = -forward on SE(2); the vector product on SO(3); [x, y] = z on Heisenberg's algebra
-    (Murray, Li & Sastry 1994; Montgomery 2002; from memory).
+    """[turn, forward] = left, [turn, left] = -forward on SE(2); the vector product on SO(3); [x, y] = z on Heisenberg's
+    algebra (Murray, Li & Sastry 1994; Montgomery 2002; from memory).
     """
     c = ALGEBRAS["SE(2)"].constants
     np.testing.assert_allclose([c[0, 1], c[0, 2], c[1, 2]], [[0, 0, 1], [0, -1, 0], [0, 0, 0]], atol=1e-14)
@@ -75,20 +76,21 @@ CASIMIRS = {
 @settings(max_examples=5, deadline=None)
 @given(seed=st.integers(0, 10**6))
 def test_casimirs_of_each_copy(name, seed):
-    """Conserved for every Hamiltonian, copy by copy (Marsden & Ratiu, ch. 13-14, from memory); so is the Hamiltonian."""
+    """Conserved for every Hamiltonian, copy by copy (Marsden & Ratiu, ch. 13-14, from memory); so is H."""
     algebra = ALGEBRAS[name]
     gradient, energy, mu = coupled(2, len(algebra.basis), seed)
     followed = lie_poisson.flow(algebra, gradient, mu, TIMES)
     assert np.abs(followed[-1] - mu).max() > 1e-3  # it does move
-    np.testing.assert_allclose(CASIMIRS[name](followed), np.broadcast_to(CASIMIRS[name](mu), CASIMIRS[name](followed).shape),
+    np.testing.assert_allclose(CASIMIRS[name](followed), np.broadcast_to(CASIMIRS[name](mu),
+    CASIMIRS[name](followed).shape),
                                atol=1e-9)
     np.testing.assert_allclose([energy(now) for now in followed], energy(mu), atol=1e-9)
 
 
 @pytest.mark.parametrize(("name", "forms"), [("SO(3)", 1), ("SE(3)", 2), ("gl(2)", 2), ("gl(3)", 2)])
 def test_lax_invariants(name, forms):
-    """Invariant forms: one on SO(3), p.p and p.m on SE(3), tr XY and (tr X)(tr Y) on gl(n); the eigenvalues of the Lax matrix stay
-    (Lax 1968; from memory).
+    """Invariant forms: one on SO(3), p.p and p.m on SE(3), tr XY and (tr X)(tr Y) on gl(n); the eigenvalues of the
+    Lax matrix stay (Lax 1968; from memory).
     """
     algebra = ALGEBRAS[name]
     assert len(algebra.invariant_forms()) == forms

@@ -1,9 +1,10 @@
 """Shortest paths of a robot that drives both ways and turns with bounded curvature.
 
-Reeds & Shepp, Pacific Journal of Mathematics 145 (1990) 367-393: a shortest path has one of 48 words of at most five pieces.
-Section 8 there gives one formula for each of nine families; the other words follow by driving them backwards (time
-flip), mirrored (left for right), or in reverse order. Lengths here carry the sign of the gear. Whatever a formula gives is
-driven and kept only where it arrives, whichever signs it has; the shortest of a superset of the words is the shortest.
+Reeds & Shepp, Pacific Journal of Mathematics 145 (1990) 367-393: a shortest path has one of 48 words of at most five
+pieces. Section 8 there gives one formula for each of nine families; the other words follow by driving them backwards
+(time flip), mirrored (left for right), or in reverse order. Lengths here carry the sign of the gear. Whatever a
+formula gives is driven and kept only where it arrives, whichever signs it has; the shortest of a superset of the
+words is the shortest. (Formulas and their numbers from memory; each is checked by driving it.)
 """
 
 from __future__ import annotations
@@ -66,7 +67,8 @@ def paths(start: Pose, end: Pose, radius: float) -> list[ReedsSheppPath]:
         if _apart(_drive(pieces), goal) < _ARRIVES * (1 + math.hypot(*goal[:2])):
             word = "".join(f"{letter}{'+' if length > 0 else '-'}" for letter, length in pieces)
             segments = tuple((_CURVATURE[letter] / radius, length * radius) for letter, length in pieces)
-            found[tuple((letter, round(length, 9)) for letter, length in pieces)] = ReedsSheppPath(first, word, segments)
+            rounded = tuple((letter, round(length, 9)) for letter, length in pieces)
+            found[rounded] = ReedsSheppPath(first, word, segments)
     words = [path for path in found.values() if len(path.gears) <= 3]  # more changes of gear make no word
     return sorted(words, key=lambda path: path.length)
 

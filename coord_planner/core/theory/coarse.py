@@ -19,8 +19,8 @@ class Coarse:
     """A stationary plan with piecewise constant curvature, in units of the way's length (duration 1).
 
     ``curvature`` (N, M); ``costate`` (N,) complex, p_x + i p_y in each robot's start frame (0 where the position is
-    free); ``end_moment`` (N,): mu_1 at the end (0 where the heading is free); ``minimal``: the reduced Hessian is positive
-    definite; ``miss``: largest distance from an end.
+    free); ``end_moment`` (N,): mu_1 at the end (0 where the heading is free); ``minimal``: the reduced Hessian is
+    positive definite; ``miss``: largest distance from an end.
     """
 
     curvature: np.ndarray
@@ -90,8 +90,8 @@ def _step(hessian: np.ndarray, jacobian: np.ndarray, gradient: np.ndarray,
           miss: np.ndarray) -> tuple[np.ndarray, np.ndarray] | None:
     """Newton step and new multipliers, or None where the Hessian is not positive definite on the constraints.
 
-    Adding J'J to the Hessian changes nothing on the constraints; a little slack on the constraints keeps the step bounded where
-    their gradients depend on each other (a straight line).
+    Adding J'J to the Hessian changes nothing on the constraints; a little slack on the constraints keeps the step
+    bounded where their gradients depend on each other (a straight line).
     """
     lift = 10 * np.trace(hessian) / max(np.sum(jacobian**2), 1e-300) * len(jacobian)
     try:
@@ -145,14 +145,15 @@ def _search(asked: _Asked, curvature: np.ndarray, change: np.ndarray, price: flo
         trial = curvature + length * change
         reached = reach(trial)
         missed = asked.miss(reached, trial)
-        if asked.cost(trial) + price * np.abs(missed).sum() <= merit + 1e-4 * length * min(promised, 0.0) + 1e-13 * merit:
+        allowed = merit * (1 + 1e-13) + 1e-4 * length * min(promised, 0.0)
+        if asked.cost(trial) + price * np.abs(missed).sum() <= allowed:
             return trial, reached
         if attempt == 0:
             jacobian = asked.jacobian(reached)
             corrected = trial - (np.linalg.pinv(jacobian, rcond=1e-10) @ missed).reshape(trial.shape)
             again = reach(corrected)
             left = np.abs(asked.miss(again, corrected)).sum()
-            if asked.cost(corrected) + price * left <= merit + 1e-4 * length * min(promised, 0.0):
+            if asked.cost(corrected) + price * left <= allowed:
                 return corrected, again
         length /= 2
     return trial, reached

@@ -2,9 +2,9 @@
 
 Definition: of all curvature profiles that, driven by every robot at once, miss the asked ends by the least sum of
 squares (positions and headings each), the one of least effort. When all turn alike they all see the same displacement
-and turning from their own starts, so the least sum of squares is where these are the means of the asked ones: a problem of
-one robot, whatever the size of the fleet. It is the limit of the coupled problem for strong coupling where the ends
-permit a common curvature.
+and turning from their own starts, so the least sum of squares is where these are the means of the asked ones: a
+problem of one robot, whatever the size of the fleet. It is the limit of the coupled problem for strong coupling where
+the ends permit a common curvature.
 """
 
 from __future__ import annotations

@@ -1,7 +1,8 @@
 """One led robot, the others only copy: their turning is a fixed fraction of its turning, at every instant.
 
-With no end of its own a robot has mu_1 = 0, so u = Psi mu_1 is the column of Psi = (I + chi L)^-1 that belongs to the led robot.
-In the limit of strong coupling Psi is 1/n within each group of n joined robots: all turn as the led one does, at n times its cost.
+With no end of its own a robot has mu_1 = 0, so u = Psi mu_1 is the column of Psi = (I + chi L)^-1 that belongs to the
+led robot. In the limit of strong coupling Psi is 1/n within each group of n joined robots: all turn as the led one
+does, at n times its cost.
 """
 
 from __future__ import annotations

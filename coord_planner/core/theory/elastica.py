@@ -25,11 +25,11 @@ TURNING = "turning"  # h > C: always to one side
 
 @attrs.frozen
 class Elastica:
-    """An elastica in time t, unit speed. ``energy`` h, ``tension`` C >= 0, ``phase`` the argument of the elliptic function
-    at t = 0 (for an arc: unused), ``side`` +1 or -1: sign of u where it doesn't change (for an arc with u = 0: 0).
+    """An elastica in time t, unit speed. ``energy`` h, ``tension`` C >= 0, ``phase`` the argument of the elliptic
+    function at t = 0 (for an arc: unused), ``side`` +1 or -1: sign of u where it doesn't change (0 on a straight line).
 
-    Where h is within 1e-9 of C, but not C, digits are lost: neighbouring solutions part exponentially there, and scipy's
-    functions change to an approximation.
+    Where h is within 1e-9 of C, but not C, digits are lost: neighbouring solutions part exponentially there, and
+    scipy's functions change to an approximation.
     """
 
     energy: float

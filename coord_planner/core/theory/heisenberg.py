@@ -1,5 +1,6 @@
-"""The driftless problem on the Heisenberg group: x' = u, y' = v, z' = (x v - y u)/2, least 1/2 integral of u^2 + v^2 in unit time.
+"""The driftless problem on the Heisenberg group: closed forms.
 
+x' = u, y' = v, z' = (x v - y u)/2, least 1/2 integral of u^2 + v^2 in unit time.
 Paths are arcs of circles in the plane, z the area that they and their chord enclose (Brockett, in *New Directions in
 Applied Mathematics*, 1981; Montgomery, *A Tour of Subriemannian Geometries*, 2002; from memory).
 """
@@ -37,9 +38,10 @@ def energy(x: float, y: float, z: float) -> float:
 def coupled_energy(first: float, second: float, coupling: float) -> float:
     """Least cost of two copies that end at (0, 0, first) and (0, 0, second), coupled in both controls.
 
-    The cost is 1/2 integral of u1^2 + v1^2 + u2^2 + v2^2 + chi ((u1 - u2)^2 + (v1 - v2)^2). Derived for this project: closed
-    paths of one frequency, turning either way, are enough. With r = (1 + chi - sqrt(1 + 2 chi))/chi and first >= |second|
-    the copies turn the same way while second >= r^2 first; below that both turn both ways and the cost is linear.
+    The cost is 1/2 integral of u1^2 + v1^2 + u2^2 + v2^2 + chi ((u1 - u2)^2 + (v1 - v2)^2). Derived for this project:
+    closed paths of one frequency, turning either way, are enough. With r = (1 + chi - sqrt(1 + 2 chi))/chi and
+    first >= |second| the copies turn the same way while second >= r^2 first; below that both turn both ways and the
+    cost is linear.
     """
     big, small = (first, second) if abs(first) >= abs(second) else (second, first)
     if big < 0:

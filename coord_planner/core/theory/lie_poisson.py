@@ -1,12 +1,13 @@
 """The Lie-Poisson flow mu' = ad*_{dH} mu on any Lie algebra given by matrices, and what it conserves.
 
-A basis e_1 ... e_n with [e_i, e_j] = sum_k c_ijk e_k gives mu_i' = sum_jk dH_j c_jik mu_k for the Hamiltonian H(mu) of a
-left-invariant problem (Jurdjevic, *Geometric Control Theory*, 1997, ch. 12; Marsden & Ratiu, *Introduction to Mechanics and
-Symmetry*, 2nd ed., ch. 13; from memory). Copies of the algebra may share one Hamiltonian: each follows its own dH.
+A basis e_1 ... e_n with [e_i, e_j] = sum_k c_ijk e_k gives mu_i' = sum_jk dH_j c_jik mu_k for the Hamiltonian H(mu) of
+a left-invariant problem (Jurdjevic, *Geometric Control Theory*, 1997, ch. 12; Marsden & Ratiu, *Introduction to
+Mechanics and Symmetry*, 2nd ed., ch. 13; from memory). Copies of the algebra may share one Hamiltonian: each follows
+its own dH.
 
-Where the algebra has an invariant form K that is not degenerate, mu corresponds to the element X with K(X, .) = mu, and the flow
-takes Lax's form X' = [X, dH]: the eigenvalues of X are conserved, besides K(X, X) for every invariant K (Lax, *Communications
-on Pure and Applied Mathematics* 21, 1968).
+Where the algebra has an invariant form K that is not degenerate, mu corresponds to the element X with K(X, .) = mu,
+and the flow takes Lax's form X' = [X, dH]: the eigenvalues of X are conserved, besides K(X, X) for every invariant K
+(Lax, *Communications on Pure and Applied Mathematics* 21, 1968).
 """
 
 from __future__ import annotations

@@ -11,8 +11,8 @@ TOLERANCE = 1e-12
 
 @attrs.frozen(eq=False)
 class Flow:
-    """A solution at ``times`` (K,). ``mu`` (N, 3, K): mu_1, mu_2, mu_3 of each robot; ``poses`` (N, 3, K); ``weight`` is
-    A = I + chi L.
+    """A solution at ``times`` (K,). ``mu`` (N, 3, K): mu_1, mu_2, mu_3 of each robot; ``poses`` (N, 3, K); ``weight``
+    is A = I + chi L.
     """
 
     times: np.ndarray
@@ -62,5 +62,5 @@ def flow(weight: np.ndarray, mu: np.ndarray, starts: np.ndarray, times: np.ndarr
 
 def join(pieces: list[Flow]) -> Flow:
     """Pieces that follow one another as one solution; times at which two meet stand there twice."""
-    return Flow(np.concatenate([piece.times for piece in pieces]), np.concatenate([piece.mu for piece in pieces], axis=2),
-                np.concatenate([piece.poses for piece in pieces], axis=2), pieces[0].weight)
+    mu, poses = (np.concatenate(parts, axis=2) for parts in zip(*((piece.mu, piece.poses) for piece in pieces)))
+    return Flow(np.concatenate([piece.times for piece in pieces]), mu, poses, pieces[0].weight)

@@ -1,8 +1,9 @@
 """The boundary-value problem by multiple shooting: costates and poses on the way that lead to the asked ends.
 
-Along a solution mu_1 = m + p x (position - start), so a robot with an end pose has three unknowns (p and m), one with an
-end heading one (m), and one that only copies none; besides them the poses where the pieces join. Derivatives by the
-unknowns are integrated beside the state, all pieces at once. (Stoer & Bulirsch, *Introduction to Numerical Analysis*, 7.3.)
+Along a solution mu_1 = m + p x (position - start), so a robot with an end pose has three unknowns (p and m), one with
+an end heading one (m), and one that only copies none; besides them the poses where the pieces join. Derivatives by
+the unknowns are integrated beside the state, all pieces at once. (Stoer & Bulirsch, *Introduction to Numerical
+Analysis*, 7.3.)
 """
 
 from __future__ import annotations
@@ -28,9 +29,9 @@ class Extremal:
     """A solution of the reduced equations that meets the ends.
 
     ``force`` (N, 2): p of each robot in the map, d cost / d end position; ``moment`` (N,): mu_1 at the start;
-    ``end_moment`` (N,): mu_1 at the end, d cost / d end heading; ``energy``: h, -d cost / d duration; ``cost`` = ``effort`` +
-    coupling * ``disagreement``; ``miss``: largest distance from an end or between joined pieces, in ways' lengths and
-    rad. ``joints`` (PIECES, N, 3): poses at the start of each piece.
+    ``end_moment`` (N,): mu_1 at the end, d cost / d end heading; ``energy``: h, -d cost / d duration;
+    ``cost`` = ``effort`` + coupling * ``disagreement``; ``miss``: largest distance from an end or between joined
+    pieces, in ways' lengths and rad; ``joints`` (PIECES, N, 3): poses at the start of each piece.
     """
 
     problem: ClassicalProblem
@@ -72,7 +73,7 @@ def shoot(problem: ClassicalProblem, guess: Coarse) -> Extremal:
         unknowns, miss = _newton(aim, aim.first(guess))
         if miss < _MISS:
             return aim.extremal(problem, unknowns, miss)
-    raise SolveError(f"shooting misses ends or joints by {miss:.1e} of the way; start it from a guess on more intervals")
+    raise SolveError(f"shooting misses ends or joints by {miss:.1e} of the way; start it from a finer guess")
 
 
 def best(problem: ClassicalProblem, *, intervals: int = 32, seed: int = 0, hops: int = 12) -> Extremal:
@@ -106,7 +107,8 @@ def _newton(aim: _Aim, unknowns: np.ndarray) -> tuple[np.ndarray, float]:
 class _Aim:
     """The unknowns and the misses, in units of the way's length and start frames.
 
-    Unknowns: p_x, p_y of placed robots, m of headed ones, then x, y, heading of every robot at each joint but the first.
+    Unknowns: p_x, p_y of placed robots, m of headed ones, then x, y, heading of every robot at each joint but the
+    first.
     """
 
     to_curvature: np.ndarray
@@ -130,7 +132,8 @@ class _Aim:
         force = guess.costate[self.placed]
         nodes, at = np.linspace(0, 1, count + 1), np.arange(1, PIECES) / PIECES
         joints = [[np.interp(at, nodes, row) for row in rows] for rows in (path.real, path.imag, headings)]
-        return np.concatenate([force.real, force.imag, moment[self.headed], np.moveaxis(np.array(joints), 2, 0).ravel()])
+        later = np.moveaxis(np.array(joints), 2, 0).ravel()
+        return np.concatenate([force.real, force.imag, moment[self.headed], later])
 
     def unpack(self, known: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """p as a complex number and m, both (N,), from the unknowns that are not poses."""
@@ -203,8 +206,8 @@ class _Aim:
         def rate(_t: float, flat: np.ndarray) -> np.ndarray:
             x, y, heading = np.moveaxis(flat.reshape(shape)[:, :-2].reshape(joints.shape), 1, 0)
             u = (moment + np.imag(np.conj(force) * (x + 1j * y))) @ self.to_curvature
-            costs = [np.sum(u * u, axis=1, keepdims=True) / 2, np.sum(u * (u @ self.laplacian), axis=1, keepdims=True) / 2]
-            return np.concatenate([np.cos(heading), np.sin(heading), u, *costs], axis=1).ravel()
+            costs = np.stack([np.sum(u * u, axis=1), np.sum(u * (u @ self.laplacian), axis=1)], axis=1) / 2
+            return np.concatenate([np.cos(heading), np.sin(heading), u, costs], axis=1).ravel()
 
         start = np.concatenate([joints.reshape(PIECES, -1), np.zeros((PIECES, 2))], axis=1)
         final = solve_ivp(rate, (0, 1 / PIECES), start.ravel(), method="DOP853", rtol=TOLERANCE,
