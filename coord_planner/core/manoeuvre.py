@@ -97,7 +97,8 @@ class Task:
         duration: seconds until the machines have settled there too, a whole number of intervals; in between
             the manoeuvre goes straight on at the end speed.
         ways: a guessed way for each robot.
-        profile: how far along its way, relative to the longest, a robot is at which time.
+        profile: how far along the longest way the fleet is at which of its own seconds; shorter ways in proportion.
+        pacing: seconds of the manoeuvre and the seconds of the profile that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
     """
@@ -111,14 +112,27 @@ class Task:
     duration: float
     ways: tuple[ArcPath, ...]
     profile: SpeedProfile
+    pacing: tuple[tuple[float, ...], tuple[float, ...]]
     coupling: float
     alignment: float
     max_curvature: float = math.inf
 
+    def asked_speed(self, s: np.ndarray) -> np.ndarray:
+        """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
+        along = self.profile.distance(self.profile_time(s))
+        full = max(self.profile.speeds[1], 1e-9)
+        return np.outer(self.asked, np.diff(along) / np.maximum(np.diff(s), 1e-9) / full)
+
+    def profile_time(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
+        inside = np.interp(s, *self.pacing)
+        return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
+
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
         scale = self.profile.duration / self.arrival
-        along, speed = self.profile.distance(times * scale), self.profile.speed(times * scale) * scale
+        moments = self.profile_time(times)
+        along, speed = self.profile.distance(moments), self.profile.speed(moments) * scale
         longest = max(max(way.length for way in self.ways), 1e-9)
         parts = [way.length / longest for way in self.ways]
         poses = np.stack([way.sample(along * part) for way, part in zip(self.ways, parts)])
@@ -191,9 +205,10 @@ def lay_out(
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
     lengths = np.array([way.length for way in ways])
-    asked = speed * np.maximum(lengths / max(longest, 1e-9), 0.1)
+    asked = profile.speeds[1] * np.maximum(lengths / max(longest, 1e-9), 0.1)
     return Task(
         name, ends, speed, asked, end_speed, arrival, settled, ways, profile,
+        ((0.0, arrival), (0.0, profile.duration)),
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
         max_curvature,

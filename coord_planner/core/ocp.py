@@ -53,7 +53,7 @@ def parameter_blocks(shape: Shape) -> Blocks:
     """All numbers that a built program is given."""
     n, m, e, p = shape.robots, shape.intervals, len(shape.edges), len(shape.pairs)
     return Blocks({
-        "h": (1, m), "cost_h": (1, m), "asked_speed": (n, m), "turn_speed": (n, 1),
+        "h": (1, m), "cost_h": (1, m), "asked_speed": (n, m), "full_speed": (n, 1), "turn_speed": (n, m),
         "coupling": (e, 1), "alignment": (e, 1),
         "price_curvature_rate": (1, 1), "price_acceleration": (1, 1), "price_speed": (1, 1),
         "price_clearance": (1, 1), "price_end": (n, len(STATES)),
@@ -163,7 +163,7 @@ def motion_rows(v: Named, p: Named, mean_speed: Matrix, mean_curvature: Matrix) 
 
 def small_prices(v: Named, p: Named, mean_speed: Matrix) -> Matrix:
     """Prices on steering, on speeding up and braking, and on leaving the asked speed."""
-    relative = (mean_speed - p["asked_speed"]) / ca.repmat(p["turn_speed"], 1, mean_speed.shape[1])
+    relative = (mean_speed - p["asked_speed"]) / ca.repmat(p["full_speed"], 1, mean_speed.shape[1])
     each = (
         p["price_curvature_rate"] * ca.sum1(v["curvature_rate"] ** 2)
         + p["price_acceleration"] * ca.sum1(v["acceleration"] ** 2)
@@ -186,7 +186,7 @@ def build(shape: Shape) -> Program:
     p_all, p = parameters.symbols()
     mean_speed = mean_over_interval(v["speed_command"], v["speed"], p["speed_lag"], p["h"])
     mean_curvature = mean_over_interval(v["curvature_command"], v["curvature"], p["curvature_lag"], p["h"])
-    turning = mean_speed * mean_curvature / ca.repmat(p["turn_speed"], 1, shape.intervals)
+    turning = mean_speed * mean_curvature / p["turn_speed"]
     v["centre_x"], v["centre_y"] = footprint_centres(v, p)
     kappa, speed = v["curvature_command"][:, 1:], v["speed_command"][:, 1:]
     last = ca.horzcat(*[v[name][:, -1] for name in STATES])
@@ -215,9 +215,10 @@ def numbers(problem: Problem) -> np.ndarray:
         "h": problem.intervals[None, :],
         "cost_h": problem.intervals[None, :] * problem.pace,
         "asked_speed": problem.asked_speed,
-        "turn_speed": problem.turn_speed[:, None],
+        "full_speed": problem.full_speed[:, None],
+        "turn_speed": problem.turn_speed,
         "coupling": problem.coupling * problem.weights[:, None],
-        "alignment": problem.alignment * problem.weights[:, None],
+        "alignment": problem.coupling * problem.alignment * problem.weights[:, None],
         "price_curvature_rate": prices.curvature_rate,
         "price_acceleration": prices.acceleration,
         "price_speed": prices.speed,

@@ -47,14 +47,17 @@ class Problem:
     Attributes:
         fleet: limits, footprints and responses, in the order of the arrays.
         edges, weights: neighbour graph, shapes (E, 2) and (E,).
-        coupling: chi. alignment: price of heading differences, 1/m^2.
+        coupling: chi. alignment: price of heading differences as a multiple of the coupling, 1/m^2: where
+            nothing is coupled, nobody copies anything.
         prices: the small and the steep ones.
         times: nodes, shape (M + 1,), seconds, increasing.
         pace: progress rate of the reference that the times are laid out for (1 = as planned): costs are counted
             per second of the reference, not of the clock, so that slowing the group re-prices nothing.
         initial: state at the first node, shape (N, 7), in the order of STATES.
         asked_speed: shape (N, M), m/s.
-        turn_speed: speed by which a turn rate is divided to give the turning u, shape (N,), m/s.
+        turn_speed: speed by which a turn rate is divided to give the turning u, shape (N, M), m/s: the asked one,
+            but not less than a part of the full one, so that u stays finite where the fleet starts and stops.
+        full_speed: asked speed between starting and stopping, shape (N,), m/s; deviations are priced relative to it.
         target: state at the last node, shape (N, 7); NaN where free.
         bounds: limits in force.
         watch: pairs with a clearance to keep.
@@ -71,6 +74,7 @@ class Problem:
     initial: np.ndarray
     asked_speed: np.ndarray
     turn_speed: np.ndarray
+    full_speed: np.ndarray
     target: np.ndarray
     bounds: Bounds
     watch: Watch

@@ -30,6 +30,7 @@ _ROUNDS = 6  # re-solves with separating lines taken from the last solution
 _SETTLED = 2e-3  # metres: the smallest clearance no longer changes
 _END_KEPT = 5e-3  # metres or radians: an end missed by more is refused
 _CLEARANCE_KEPT = 2e-3  # metres
+_LEAST_TURN_SPEED = 0.25  # part of the full speed
 _STRETCHES = (1.0, 1.25, 1.6, 2.0, 3.0)  # times tried for the rest of a manoeuvre, against the old one
 
 
@@ -129,8 +130,8 @@ def _stretched(
     settle = task.duration - task.arrival
     arrival = step * int(np.ceil((start + max(task.arrival - start, 0.0) * stretch) / step - 1e-9))
     end = arrival + settle
-    top = np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
-    slower = attrs.evolve(task, arrival=arrival, duration=end, asked=np.minimum(task.asked / stretch, top))
+    pacing = ((start, arrival), (float(task.profile_time(np.array(start))), task.profile.duration))
+    slower = attrs.evolve(task, arrival=arrival, duration=end, pacing=pacing)
     times = grid.until(start, end, step)
     guess = old.states(start + (times - start) * (task.duration - start) / max(end - start, step))
     guess[:, 1:, [SPEED, SPEED_COMMAND]] /= stretch
@@ -150,8 +151,17 @@ def end_target(task: Task, count: int) -> np.ndarray:
 
 
 def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
-    """Asked speed in each interval between seconds of the manoeuvre, shape (N, M): the end speed after arrival."""
-    return np.where(s[None, 1:] > task.arrival + 1e-9, task.end_speed, task.asked[:, None])
+    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M): speed up, hold, slow down."""
+    return task.asked_speed(s)
+
+
+def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
+    """Speed that makes a turn rate into turning, shape (N, M): at the asked speed the turning is the curvature.
+
+    Dividing by the full speed while the fleet starts and stops would make turning on the way to it cheap, and
+    the fleet would swing out first.
+    """
+    return np.maximum(asked, _LEAST_TURN_SPEED * task.asked[:, None])
 
 
 def _problem(
@@ -163,7 +173,7 @@ def _problem(
     return Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
-        turn_speed=task.asked, target=end_target(task, len(fleet)),
+        turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
         bounds=bounds_in_force(
             fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
             task.max_curvature,

@@ -15,7 +15,7 @@ class Coupling:
         1.0, "price of turning differently from a neighbour (chi)", minimum=0.0, maximum=1e4, live=True
     )
     alignment: float = parameter(
-        0.0, "price of a heading that differs from a neighbour's; 0 turns it off", "1/m^2",
+        0.0, "price of a heading that differs from a neighbour's, times the coupling; 0 turns it off", "1/m^2",
         minimum=0.0, maximum=1e3, live=True,
     )
 

@@ -12,7 +12,7 @@ from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
-from .reference import Reference, asked_speeds
+from .reference import Reference, asked_speeds, turn_speeds
 from .settings import Settings
 from .watch import watch
 
@@ -51,13 +51,15 @@ def pose_problem(
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
-    asked = asked_speeds(task, s) * pace + _catching_up(s, times, behind, task, fleet, settings)
+    planned = asked_speeds(task, s)
+    asked = planned * pace + _catching_up(s, times, behind, task, fleet, settings)
     target = paced(reference.state(float(s[-1])), pace)
     graph = reference.graph
     problem = Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=pace, initial=initial, asked_speed=asked,
-        turn_speed=task.asked * pace, target=target,
+        turn_speed=turn_speeds(task, planned) * pace,
+        full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
             fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
             rules.max_lateral_acceleration, task.max_curvature,

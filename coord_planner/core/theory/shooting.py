@@ -21,7 +21,6 @@ from .reduced import TOLERANCE, Flow, flow, join
 
 PIECES = 16
 _MISS = 1e-10  # of the way's length and rad: ends and joints are met
-_ITERATIONS = 25
 
 
 @attrs.frozen(eq=False)
@@ -67,10 +66,10 @@ def shoot(problem: ClassicalProblem, guess: Coarse) -> Extremal:
         SolveError: Newton's method does not arrive, even from the guess made finer.
     """
     aim = _Aim.of(problem)
-    for finer in (1, 2, 4):
+    for finer, iterations in ((1, 6), (4, 12), (2, 25)):
         if finer > 1:
             guess = minimise(problem, search.resampled(guess.curvature, finer * guess.curvature.shape[1]))
-        unknowns, miss = _newton(aim, aim.first(guess))
+        unknowns, miss = _newton(aim, aim.first(guess), iterations)
         if miss < _MISS:
             return aim.extremal(problem, unknowns, miss)
     raise SolveError(f"shooting misses ends or joints by {miss:.1e} of the way; start it from a finer guess")
@@ -88,14 +87,14 @@ def best(problem: ClassicalProblem, *, intervals: int = 32, seed: int = 0, hops:
     return min(extremals, key=lambda extremal: extremal.cost)
 
 
-def _newton(aim: _Aim, unknowns: np.ndarray) -> tuple[np.ndarray, float]:
+def _newton(aim: _Aim, unknowns: np.ndarray, iterations: int) -> tuple[np.ndarray, float]:
     """Newton's method with step halving; the unknowns and the largest miss."""
     misses, slope = aim.misses(unknowns)
-    for _ in range(_ITERATIONS):
+    for _ in range(iterations):
         step = np.linalg.lstsq(slope, -misses, rcond=1e-14)[0]
-        for length in 0.5 ** np.arange(8):
+        for length in 0.5 ** np.arange(5):
             trial, trial_slope = aim.misses(unknowns + length * step)
-            if np.linalg.norm(trial) < (1 - length / 4) * np.linalg.norm(misses) or length < 0.01:
+            if np.linalg.norm(trial) < (1 - length / 4) * np.linalg.norm(misses) or length < 0.1:
                 break
         if not np.linalg.norm(trial) < np.linalg.norm(misses):
             break
