@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Callable, Mapping
-from typing import Optional
+from typing import Any, Optional
 
 import attrs
 import networkx as nx
@@ -288,11 +288,12 @@ class Coordinator:
         known = {field.name: field for field in attrs.fields(type(wanted))}
         for key, value in overrides.items():
             if key not in known or isinstance(getattr(wanted, key), tuple):
-                numbers = [key for key in known if not isinstance(getattr(wanted, key), tuple)]
-                raise RefusedError(f"{name} has no number {key!r} to override", "override one of " + ", ".join(numbers))
+                there = [key for key in known if not isinstance(getattr(wanted, key), tuple)]
+                raise RefusedError(f"{name} has no number {key!r} to override", "override one of " + ", ".join(there))
             if isinstance(value, bool) or not isinstance(value, (int, float)):
                 raise SettingsError(f"{value!r} is not a number", key=key, allowed="a number")
-        return attrs.evolve(wanted, **{key: float(value) for key, value in overrides.items()})
+        numbers: dict[str, Any] = {key: float(value) for key, value in overrides.items()}
+        return attrs.evolve(wanted, **numbers)
 
     def _check_free(self, verb: str) -> None:
         if self._state not in (State.IDLE, State.ENDED):
@@ -431,7 +432,8 @@ class Coordinator:
         if self._refused_change:
             found.append(rules.change_refused(settings, self._refused_change))
         if now - self._planned_at > _KEEP_PLAN:
-            found.append(rules.plan_failed(settings, f"no new plan for {now - self._planned_at:.1f} s", "the fleet stops"))
+            reason = f"no new plan for {now - self._planned_at:.1f} s"
+            found.append(rules.plan_failed(settings, reason, "the fleet stops"))
         found += self._judge_clearance(estimate)
         grave = [caution for caution in found if caution.level is not Level.WARN]
         if grave:
@@ -509,7 +511,7 @@ class Coordinator:
         self, now: float, estimate: Estimate, plan: Optional[Plan], cautions: list[Caution]
     ) -> Decision:
         pursuit = self._pursuit
-        common = {
+        common: dict[str, Any] = {
             "time": now, "state": self._state, "reason": self._reason, "completed": self._completed,
             "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
         }

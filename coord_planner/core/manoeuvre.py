@@ -226,7 +226,7 @@ def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.nda
     hold = turn / peak - ramp if peak > 0 else 0.0
     side = math.copysign(1.0, angle)
     rising = [(side * peak * (i + 0.5) / pieces, ramp / pieces) for i in range(pieces)]
-    return ArcPath(_start(start), "eased", tuple([*rising, (side * peak, hold), *rising[::-1]]))
+    return ArcPath(_start(start), "eased", (*rising, (side * peak, hold), *rising[::-1]))
 
 
 def _equal_ways(
@@ -283,7 +283,7 @@ def _ways_to_ends(
     """A way for each robot, and the ends with their windings chosen: those of the shortest way."""
     wound = ends.copy()
     found: dict[int, ArcPath] = {}
-    for k in np.flatnonzero(~np.isnan(ends[:, 2])):
+    for k in map(int, np.flatnonzero(~np.isnan(ends[:, 2]))):
         turning = ends[k, 2] - poses[k, 2]
         if not keep_winding:
             turning = math.remainder(turning, 2 * math.pi)

@@ -88,7 +88,8 @@ def rehearse(
     timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
     simulated = SimulatedFleet(configuration.fleet, configuration.starts, simulation, timeouts, rng)
     coordinator = Coordinator(configuration.fleet, configuration.graph, settings, configuration.manoeuvres, _BUDGET)
-    log, answers = _Log(), []
+    log = _Log()
+    answers: list[Answer] = []
     began_at = clock.perf_counter()
     period = 1.0 / settings.commands.rate
     ticks_every = 1.0 / settings.horizon.rate
