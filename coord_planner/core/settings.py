@@ -78,7 +78,9 @@ class SiteRules:
     min_clearance: float = parameter(
         0.5, "smallest allowed distance between two robots' footprints", "m", minimum=0.0, maximum=100.0, live=True
     )
-    max_speed: float = parameter(50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True)
+    max_speed: float = parameter(
+        50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True
+    )
     max_lateral_acceleration: float = parameter(
         20.0, "largest lateral acceleration for every robot on the site", "m/s^2", above=0.0, maximum=20.0, live=True
     )
@@ -106,8 +108,12 @@ class Poses:
     """Which poses are believed, and how noisy they are."""
 
     max_age: float = parameter(0.5, "older poses are not used", "s", above=0.0, maximum=10.0, live=True)
-    max_future: float = parameter(0.1, "poses from further in the future are not used", "s", minimum=0.0, maximum=10.0, live=True)
-    max_jump: float = parameter(0.5, "a larger jump of a pose stops the group", "m", above=0.0, maximum=100.0, live=True)
+    max_future: float = parameter(
+        0.1, "poses from further in the future are not used", "s", minimum=0.0, maximum=10.0, live=True
+    )
+    max_jump: float = parameter(
+        0.5, "a larger jump of a pose stops the group", "m", above=0.0, maximum=100.0, live=True
+    )
     noise_xy: float = parameter(0.02, "standard deviation of a pose's position", "m", above=0.0, maximum=5.0, live=True)
     noise_heading_deg: float = parameter(
         0.5, "standard deviation of a pose's heading", "deg", above=0.0, maximum=45.0, live=True
@@ -119,18 +125,29 @@ class Progress:
     """How the group's progress along the reference slows when a robot is held up."""
 
     dead_band: float = parameter(0.05, "lag that slows nobody", "m", minimum=0.0, maximum=10.0, live=True)
-    full_lag: float = parameter(0.4, "lag beyond the dead band at which progress is slowest", "m", above=0.0, maximum=20.0, live=True)
-    look_ahead: float = parameter(
-        0.5, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0, live=True
+    full_lag: float = parameter(
+        0.4, "lag beyond the dead band at which progress is slowest", "m", above=0.0, maximum=20.0, live=True
     )
-    filter_time: float = parameter(0.2, "time constant of the filter on each robot's lag", "s", minimum=0.0, maximum=5.0, live=True)
-    slowest: float = parameter(0.15, "slowest progress before the group is stopped", "", minimum=0.05, maximum=1.0, live=True)
-    recovery: float = parameter(0.5, "rate at which progress returns to full", "1/s", above=0.0, maximum=10.0, live=True)
+    look_ahead: float = parameter(
+        0.5, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0,
+        live=True,
+    )
+    filter_time: float = parameter(
+        0.2, "time constant of the filter on each robot's lag", "s", minimum=0.0, maximum=5.0, live=True
+    )
+    slowest: float = parameter(
+        0.15, "slowest progress before the group is stopped", "", minimum=0.05, maximum=1.0, live=True
+    )
+    recovery: float = parameter(
+        0.5, "rate at which progress returns to full", "1/s", above=0.0, maximum=10.0, live=True
+    )
     catch_up: float = parameter(
         1.5, "time in which a robot beyond the dead band is asked to catch up with the group", "s",
         minimum=0.2, maximum=60.0, live=True,
     )
-    max_lag: float = parameter(1.5, "a lag beyond this stops the group in step", "m", above=0.0, maximum=100.0, live=True)
+    max_lag: float = parameter(
+        1.5, "a lag beyond this stops the group in step", "m", above=0.0, maximum=100.0, live=True
+    )
 
 
 @attrs.frozen
