@@ -18,6 +18,11 @@ _SUBSTEP = 0.025  # seconds; fine against every response lag that matters
 # How much less a model of first order knows after a second: metres, radians, and the part of the asked speed
 # that a machine really reaches (it changes when wheels slip or a machine is held up).
 _DRIFT = np.array([0.02, 0.02, 0.01, 0.25])
+# A machine that is held up shows in innovations of one sign. Their running mean, in standard deviations, is
+# 0.5 for noise alone; three times that is taken for a change of the factor, which then is looked for afresh.
+_RUNNING = 0.4
+_ONE_SIDED = 1.5
+_AFRESH = 0.3
 _FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
 
 
@@ -53,6 +58,7 @@ class Observer:
         self._cov = np.zeros((count, 4, 4))
         self._stamp = np.full(count, -np.inf)
         self._reached = np.zeros((count, 2))  # speed, curvature, before the speed factor
+        self._one_sided = np.zeros(count)  # running mean of innovations along the heading, in standard deviations
 
     def configure(self, fleet: Fleet, settings: Poses) -> None:
         """New limits or noise; what is known about the robots stays."""
@@ -144,7 +150,7 @@ class Observer:
         innovation = measured - self._mean[which, :3]
         innovation[:, 2] = se2.wrap(innovation[:, 2])
         jumps = np.hypot(innovation[:, 0], innovation[:, 1]) > self._settings.max_jump
-        cov = self._cov[which]
+        cov = self._look_afresh(which, innovation)
         gain = cov[:, :, :3] @ np.linalg.inv(cov[:, :3, :3] + self._noise())
         good = ~jumps
         corrected = self._mean[which] + np.einsum("nij,nj->ni", gain, innovation)
@@ -152,6 +158,18 @@ class Observer:
         self._mean[which[good]] = corrected[good]
         self._cov[which[good]] = (cov - gain @ cov[:, :3, :])[good]
         return jumps
+
+    def _look_afresh(self, which: np.ndarray, innovation: np.ndarray) -> np.ndarray:
+        """Covariances, with more doubt about the factor of robots whose innovations keep one sign, shape (n, 4, 4)."""
+        cov = self._cov[which].copy()
+        heading = self._mean[which, 2]
+        ahead = np.stack([np.cos(heading), np.sin(heading)], axis=1)
+        spread = np.einsum("ni,nij,nj->n", ahead, cov[:, :2, :2], ahead) + self._settings.noise_xy**2
+        scaled = np.sum(innovation[:, :2] * ahead, axis=1) / np.sqrt(spread)
+        self._one_sided[which] += _RUNNING * (scaled - self._one_sided[which])
+        changed = np.abs(self._one_sided[which]) > _ONE_SIDED
+        cov[changed, 3, 3] += _AFRESH**2
+        return cov
 
 
 def _doubted(factor: np.ndarray) -> np.ndarray:

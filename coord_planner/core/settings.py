@@ -129,7 +129,7 @@ class Progress:
         0.4, "lag beyond the dead band at which progress is slowest", "m", above=0.0, maximum=20.0, live=True
     )
     look_ahead: float = parameter(
-        0.5, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0,
+        0.8, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0,
         live=True,
     )
     filter_time: float = parameter(
