@@ -25,7 +25,7 @@ def test_nothing_begins_before_the_planner_is_active(hand: Hand, planner: NodePr
     assert not answer.success
     assert "activate" in answer.message
     assert hand.transition(ACTIVATE)
-    hand.spin(1.0)
+    hand.until_heard()
     assert not any(hand.commands.values()), "activation moves nothing"
 
 
