@@ -14,8 +14,8 @@ from coord_planner.ros.processes import NodeProcess
 
 # Every kind of pose and command that these machines' messages allow is met in this file.
 KINDS = {
-    "middle: {": "middle: {pose_source: pose_with_covariance, ",
-    "right: {": "right: {pose_source: odometry, command_type: twist, ",
+    " middle: {": " middle: {pose_source: pose_with_covariance, ",
+    " right: {": " right: {pose_source: odometry, command_type: twist, ",
 }
 FAST = ("simulation.publish_clock:=true", "simulation.rate_factor:=2.0")
 
