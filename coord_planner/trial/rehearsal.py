@@ -155,11 +155,11 @@ def _run(
         poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
         curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
         commanded=np.stack(log.commanded, axis=1), end_poses=coordinator.ends,
-        min_clearance=configuration.settings.site_rules.min_clearance, state=decision.state.value,
+        min_clearance=configuration.settings.site_rules.min_clearance, state=State.ENDED.value if decision.completed else decision.state.value,
         completed=decision.completed, began=began, ended=_ended(log), cautions=log.cautions(),
         tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
         facts={
-            "simulated": True, "file": configuration.file, "coupling": decision.coupling,
+            "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name, "file": configuration.file, "coupling": decision.coupling,
             "alignment": decision.alignment, "seed": configuration.simulation.seed if seed is None else seed,
         },
     )
