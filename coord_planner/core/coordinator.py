@@ -92,7 +92,7 @@ class Coordinator:
         self._planned_at = 0.0
         self._ended_at = 0.0
         self._refused_change = ""
-        self._decision = Decision(0.0, State.IDLE)
+        self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
     def state(self) -> State:
@@ -199,11 +199,17 @@ class Coordinator:
         Limits bind the gate and the next tick at once. In motion the rest of the reference is made anew and
         swapped in when the group reaches the moment from which it was made; the decision then shows the
         coupling in force.
+
+        Raises:
+            RefusedError: robots would join or leave while the fleet is not idle; nothing has changed.
         """
         with self._lock:
+            self._check_members(fleet)
             self._settings = settings or self._settings
             self._fleet = fleet or self._fleet
-            self._graph = graph or self._graph
+            self._graph = (graph or self._graph).relative_to(self._fleet.names)
+            if self._fleet.names != self._decision.names:
+                self._start_afresh()
             self._observer.configure(self._fleet, self._settings.poses)
             if self._state is State.MOVING and self._pursuit is not None:
                 self._remake(now, self._pursuit)
@@ -280,6 +286,20 @@ class Coordinator:
             }
 
     # Requests, inside
+
+    def _check_members(self, fleet: Optional[Fleet]) -> None:
+        if fleet is None or fleet.names == self._fleet.names or self._state in (State.IDLE, State.ENDED):
+            return
+        raise RefusedError(
+            f"robots join or leave only while the fleet is idle, and it is {self._state.value}", "halt and abandon it first"
+        )
+
+    def _start_afresh(self) -> None:
+        """Other robots: nothing that was known of the old ones counts."""
+        self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
+        self._observer = Observer(self._fleet, self._settings.poses, self._history)
+        self._pursuit, self._state, self._reason = None, State.IDLE, ""
+        self._decision = Decision(self._decision.time, State.IDLE, self._fleet.names)
 
     def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
         if name not in self._manoeuvres:
@@ -512,7 +532,7 @@ class Coordinator:
     ) -> Decision:
         pursuit = self._pursuit
         common: dict[str, Any] = {
-            "time": now, "state": self._state, "reason": self._reason, "completed": self._completed,
+            "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason, "completed": self._completed,
             "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
         }
         if pursuit is None:

@@ -102,6 +102,7 @@ class Decision:
     Attributes:
         time: of the snapshot, seconds.
         state: what the fleet is doing.
+        names: the robots, in the order of every array here.
         reason: why, in words ("" when there is nothing to say).
         manoeuvre: name of the one in hand, or "".
         progress: part of the manoeuvre done, 0 to 1.
@@ -120,6 +121,7 @@ class Decision:
 
     time: float
     state: State
+    names: tuple[str, ...] = ()
     reason: str = ""
     manoeuvre: str = ""
     progress: float = 0.0

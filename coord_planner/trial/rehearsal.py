@@ -86,8 +86,11 @@ def rehearse(
     settings, simulation = configuration.settings, configuration.simulation
     rng = np.random.default_rng(simulation.seed if seed is None else seed)
     timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
-    simulated = SimulatedFleet(configuration.fleet, configuration.starts, simulation, timeouts, rng)
-    coordinator = Coordinator(configuration.fleet, configuration.graph, settings, configuration.manoeuvres, _BUDGET)
+    fleet = configuration.driven
+    simulated = SimulatedFleet(fleet, configuration.starts, simulation, timeouts, rng)
+    coordinator = Coordinator(
+        fleet, configuration.graph.relative_to(fleet.names), settings, configuration.manoeuvres, _BUDGET
+    )
     log = _Log()
     answers: list[Answer] = []
     began_at = clock.perf_counter()
@@ -125,7 +128,7 @@ def rehearse(
             for name, command in commands.items():
                 simulated.command(name, command, now)
         if moving_since is not None:
-            apply(faults, now - moving_since, simulated, configuration.fleet.names)
+            apply(faults, now - moving_since, simulated, fleet.names)
         now = round((len(log.times)) * period, 9)
         simulated.advance(now)
         log.truth(now, simulated)
@@ -151,7 +154,7 @@ def _run(
 ) -> Run:
     decision = coordinator.decision
     return Run(
-        fleet=configuration.fleet, edges=configuration.edges, manoeuvre=manoeuvre, times=np.array(log.times),
+        fleet=configuration.driven, edges=configuration.graph.relative_to(configuration.driven.names).edges, manoeuvre=manoeuvre, times=np.array(log.times),
         poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
         curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
         commanded=np.stack(log.commanded, axis=1), end_poses=coordinator.ends,
