@@ -15,6 +15,7 @@ from .fleet import Fleet, weakest
 from .parameter import parameter
 from .profile import SpeedProfile, speed_profile
 from .settings import Settings
+from .watch import margin
 
 # Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
 _COMFORT = 0.7
@@ -22,6 +23,7 @@ _COMFORT = 0.7
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
 _WIDER = 1.12  # a turn of equal radius is laid out this much wider than its tightest, to leave room for corrections
+_SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
 _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
 
 
@@ -164,7 +166,7 @@ def work_out(
         named = _named_ends(manoeuvre, fleet)
         ways, ends = _ways_to_ends(fleet, poses, named, neighbours)
         fixed, tightest = manoeuvre.duration, math.inf
-    _check_ends(fleet, settings, named)
+    _check_ends(fleet, settings, named, manoeuvre.speed)
     return lay_out(
         name, fleet, settings, ends, ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
         speed_now=speed_now, duration=fixed, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
@@ -186,8 +188,10 @@ def lay_out(
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
     max_curvature: float = math.inf,
 ) -> Task:
-    """Times and speeds for ways that are known; RefusedError when a given duration is too short."""
+    """Times and speeds for ways that are known; RefusedError when there is nothing to drive or too little time."""
     longest = max(way.length for way in ways)
+    if longest < _SHORTEST_WAY:
+        raise RefusedError(f"{name}: every robot is already where it is to end", "ask for something else to be driven")
     profile = speed_profile(
         longest, speed_now, speed, end_speed,
         _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),
@@ -351,28 +355,36 @@ def _check_speed(manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings) -> None
                 f"{manoeuvre.speed:g} m/s is asked and {robot.name} may drive {top:g} m/s",
                 f"ask for at most {min(weakest(fleet.limit('max_speed')), cap):g} m/s",
             )
+    if manoeuvre.end_speed > manoeuvre.speed + 1e-9:
+        raise RefusedError(
+            f"{manoeuvre.end_speed:g} m/s is asked at the end and only {manoeuvre.speed:g} m/s on the way there",
+            f"ask for an end speed of at most {manoeuvre.speed:g} m/s",
+        )
 
 
 def _check_start(fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:
     _check_apart(fleet, settings, poses, np.arange(len(fleet)), "stand", "move them apart by hand before it begins")
 
 
-def _check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray) -> None:
+def _check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray, speed: float) -> None:
+    """Ends keep the site's clearance and the plan's margin: whatever is nearer, no plan would end on."""
     placed = np.flatnonzero(~np.isnan(ends[:, 0]))
-    _check_apart(fleet, settings, ends, placed, "would end", "move the ends apart")
+    kept = 2 * float(margin(fleet, settings, speed).max())
+    _check_apart(fleet, settings, ends, placed, "would end", "move the ends apart", kept)
 
 
 def _check_apart(
-    fleet: Fleet, settings: Settings, poses: np.ndarray, which: np.ndarray, verb: str, remedy: str
+    fleet: Fleet, settings: Settings, poses: np.ndarray, which: np.ndarray, verb: str, remedy: str, kept: float = 0.0
 ) -> None:
     polygons = outline.outlines(fleet.corners()[which], poses[which])
     gap, (k, j) = outline.closest(polygons, outline.all_pairs(len(which)))
     allowed = settings.site_rules.min_clearance
-    if gap < allowed - 1e-6:
+    if gap < allowed + kept - 1e-6:
         first, second = fleet.names[which[k]], fleet.names[which[j]]
+        beyond = f" and the planner's margin of {kept:.2f} m" if kept else ""
         raise RefusedError(
-            f"{first} and {second} {verb} {gap:.2f} m apart, {allowed - gap:.2f} m short of the site's "
-            f"smallest clearance of {allowed:g} m",
+            f"{first} and {second} {verb} {gap:.2f} m apart, {allowed + kept - gap:.2f} m short of the site's "
+            f"smallest clearance of {allowed:g} m{beyond}",
             remedy,
         )
 

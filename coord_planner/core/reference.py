@@ -212,10 +212,10 @@ def _check_kept(
     missed = plan.missed[:, :3]
     worst = int(np.argmax(missed.max(axis=1)))
     if missed[worst].max() > _END_KEPT:
-        distance, angle = float(np.hypot(*missed[worst, :2])), float(np.degrees(missed[worst, 2]))
+        distance, angle = float(np.hypot(*missed[worst, :2])), abs(float(np.degrees(missed[worst, 2])))
         raise RefusedError(
             f"{task.name}: {fleet.names[worst]} would miss its end by {distance:.2f} m and {angle:.1f} degrees; "
-            + _busiest_limit(plan, fleet, worst),
+            + (_clearance_in_the_way(plan, fleet, worst) or _busiest_limit(plan, fleet, worst)),
             "give it more room, more time or a lower speed",
         )
     allowed = settings.site_rules.min_clearance
@@ -228,6 +228,15 @@ def _check_kept(
         )
     if not plan.solved and plan.missed.max() > _END_KEPT:
         raise RefusedError(f"{task.name}: no plan was found", "ask for a wider radius or more time")
+
+
+def _clearance_in_the_way(plan: Plan, fleet: Fleet, k: int) -> str:
+    """Who the robot comes too near to, in words; "" when it keeps its clearances."""
+    for pair, short in zip(plan.pairs, plan.short.max(axis=1, initial=0.0)):
+        if k in pair and short > _CLEARANCE_KEPT:
+            other = fleet.names[int(pair.sum()) - k]
+            return f"the clearance to {other}, margin included, is {short:.2f} m short on the way"
+    return ""
 
 
 def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
@@ -246,5 +255,5 @@ def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
     busy = {name: float(np.mean(part > 0.99)) for name, part in use.items()}
     name = max(busy, key=lambda key: busy[key])
     if busy[name] == 0.0:
-        return "the clearance to the others stands in the way"
+        return "no limit of its own stands in the way"
     return f"its {name} of {getattr(limits, name):g} is met for {100 * busy[name]:.0f}% of the time"
