@@ -117,6 +117,12 @@ class Coordinator:
         """The reference in force."""
         return self._pursuit.reference if self._pursuit is not None else None
 
+    def cannot_change_members(self) -> str:
+        """Why no robot can join or leave just now; "" when it can."""
+        if self._state in (State.IDLE, State.ENDED):
+            return ""
+        return f"robots join or leave only while the fleet is idle, and it is {self._state.value}"
+
     # Requests
 
     def begin(
@@ -288,11 +294,9 @@ class Coordinator:
     # Requests, inside
 
     def _check_members(self, fleet: Optional[Fleet]) -> None:
-        if fleet is None or fleet.names == self._fleet.names or self._state in (State.IDLE, State.ENDED):
-            return
-        raise RefusedError(
-            f"robots join or leave only while the fleet is idle, and it is {self._state.value}", "halt and abandon it first"
-        )
+        reason = self.cannot_change_members()
+        if fleet is not None and fleet.names != self._fleet.names and reason:
+            raise RefusedError(reason, "halt and abandon it first")
 
     def _start_afresh(self) -> None:
         """Other robots: nothing that was known of the old ones counts."""

@@ -54,7 +54,7 @@ class PlannerNode(LifecycleNode):
         flat = parameters.given(self)
         configuration = config.from_parameters(flat, parameters.files(arguments))
         parameters.declare(self, flat)
-        self._live = parameters.LiveParameters(self, configuration, self._on_parameters)
+        self._live = parameters.LiveParameters(self, configuration, self._cannot_take, self._on_parameters)
         answer_invalid_transitions(self)
         self.signalled = False  # a transition to the end of the node's life: the same as a first signal
         self._leaving = ""
@@ -153,7 +153,9 @@ class PlannerNode(LifecycleNode):
 
     def _start_coordinator(self) -> None:
         now = self.configuration
-        self._coordinator = Coordinator(now.fleet, self._graph, now.settings, now.manoeuvres)
+        self._coordinator = Coordinator(
+            now.driven, self._graph.relative_to(now.driven.names), now.settings, now.manoeuvres
+        )
         self._worker = Worker(
             self._coordinator, snapshot=self._snapshot, now=self.now,
             decided=lambda decision, ms: self._post(functools.partial(self._on_decision, decision, ms)),
@@ -330,17 +332,20 @@ class PlannerNode(LifecycleNode):
         now = self.now()
         if now <= 0.0:
             return None
-        configuration = self.configuration
-        not_driven = frozenset(configuration.fleet.names) - configuration.enabled
-        return Snapshot(now, self._inbox.poses(), not_driven)
+        return Snapshot(now, self._inbox.poses())
 
     # Changes
+
+    def _cannot_take(self, configuration: config.Configuration) -> str:
+        if not self._configured or configuration.enabled == self.configuration.enabled:
+            return ""
+        return self._coordinator.cannot_change_members()
 
     def _on_parameters(self, configuration: config.Configuration, keys: tuple[str, ...]) -> None:
         words = ", ".join(f"{key} = {self.get_parameter(key).value}" for key in keys)
         self.get_logger().info(f"changed: {words}")
         if self._configured:
-            self._change_to(words, settings=configuration.settings, fleet=configuration.fleet)
+            self._change_to(words, settings=configuration.settings, fleet=configuration.driven, graph=self._graph)
 
     def _on_neighbours(self, graph: NeighbourGraph) -> None:
         if graph.edges != self._graph.edges:

@@ -100,6 +100,24 @@ def test_neighbours_in_force_are_told(hand: Hand, planner: NodeProcess) -> None:
     hand.until(lambda: told[-1]["edges"] == [["left", "right", 2.0], ["right", "middle", 1.0]])
 
 
+def test_a_disabled_robot_is_not_driven_and_none_leaves_in_mid_turn(hand: Hand, planner: NodeProcess) -> None:
+    if hand.status["state"] != "idle":
+        hand.until_state("idle")
+    assert hand.set(robots__right__enabled=False).successful
+    sent = len(hand.commands["right"])
+    answer = hand.trigger("begin/corner_left")
+    assert answer.success, answer.message
+    hand.until_state("moving")
+    refused = hand.set(robots__middle__enabled=False)
+    assert not refused.successful
+    assert "idle" in refused.reason
+    hand.until_state("ended")
+    assert hand.status["completed"] == "true"
+    assert len(hand.commands["right"]) == sent
+    hand.until_state("idle")
+    assert hand.set(robots__right__enabled=True).successful
+
+
 def test_deactivation_in_motion_is_refused_and_halts(hand: Hand, planner: NodeProcess) -> None:
     assert hand.trigger("begin/corner_right").success
     hand.until(lambda: float(hand.status.get("progress", 0)) > 0.2)
