@@ -7,7 +7,6 @@ from collections.abc import Callable, Mapping
 from typing import Any, Optional
 
 import attrs
-import networkx as nx
 import numpy as np
 
 from ..errors import CoordPlannerError, RefusedError, SettingsError, SolveError
@@ -22,11 +21,14 @@ from .plan import Plan, near_pairs
 from .problem import POSE, SPEED_COMMAND
 from .pursuit import Prepared, Pursuit
 from .reference import Reference
-from .settings import Settings
+from .settings import Settings, SiteRules
+from .silence import Silence
+from .silence import worst as worst_silence
 from .tick import usable
 
 _KEEP_PLAN = 1.0  # seconds for which an old plan is driven on when no new one comes
 _STANDING = 5e-3  # m/s
+_SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -39,6 +41,7 @@ class Outcome:
     token: int
     reference: Optional[Reference]
     reason: str
+    silence: Optional[Silence] = None
 
 
 Job = Callable[[], Outcome]  # pure, slow, may run in any thread; its outcome goes to Coordinator.deliver
@@ -92,6 +95,7 @@ class Coordinator:
         self._planned_at = 0.0
         self._ended_at = 0.0
         self._refused_change = ""
+        self._silence: Optional[Silence] = None
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
@@ -145,7 +149,7 @@ class Coordinator:
             states[:, 3:] = 0.0
 
             def make() -> Reference:
-                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, hops(graph))
+                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops())
                 return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
@@ -182,7 +186,7 @@ class Coordinator:
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
 
             def make() -> Reference:
-                rest = manoeuvre.go_on(task, fleet, settings, states[:, POSE], hops(graph))
+                rest = manoeuvre.go_on(task, fleet, settings, states[:, POSE], graph.hops())
                 return reference.make(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
@@ -245,6 +249,7 @@ class Coordinator:
                 request.answered(Answer(False, outcome.reason, request.request_id))
                 return
             self._start(outcome.reference, now)
+            self._silence = outcome.silence
             text = f"{outcome.reference.task.name} takes {outcome.reference.end:.1f} s"
             if np.isfinite(outcome.reference.clearance):
                 text += f", smallest clearance {outcome.reference.clearance:.2f} m"
@@ -341,14 +346,17 @@ class Coordinator:
         self._token += 1
         token = self._token
         intervals, budget = self._settings.horizon.intervals, self._budget
+        fleet, rules_in_force = self._fleet, self._settings.site_rules
 
         def job() -> Outcome:
             try:
                 made = make()
+                silence = worst_silence(made, fleet)
+                _check_silence(silence, rules_in_force)
             except (RefusedError, SolveError) as error:
                 return Outcome(token, None, str(error))
             solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
-            return Outcome(token, made, "")
+            return Outcome(token, made, "", silence)
 
         self._request = _Request(token, kind, answered, request_id)
         self._jobs = [job]
@@ -388,7 +396,7 @@ class Coordinator:
         if late:  # it starts from a moment that has passed: make it again from a later one
             self._remake(now, self._pursuit)
         else:
-            self._pursuit.next_reference = outcome.reference
+            self._pursuit.next_reference, self._silence = outcome.reference, outcome.silence
 
     def _start(self, made: Reference, now: float) -> None:
         begins = now + self._lead_time()
@@ -459,6 +467,8 @@ class Coordinator:
             reason = f"no new plan for {now - self._planned_at:.1f} s"
             found.append(rules.plan_failed(settings, reason, "the fleet stops"))
         found += self._judge_clearance(estimate)
+        if self._silence is not None and self._silence.clearance < settings.site_rules.min_clearance - _SHORT:
+            found.append(rules.silence_unsafe(settings, self._silence))
         grave = [caution for caution in found if caution.level is not Level.WARN]
         if grave:
             self._begin_stop(now, grave[0].text, completed=False, estimate=estimate)
@@ -524,6 +534,7 @@ class Coordinator:
         at = now + float(self._history.effect_delay.max())
         stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate.states, now, estimate.speed_factor)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
+        pursuit.freeze(now)
         self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period
         self._state, self._completed = State.STOPPING, completed
         self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
@@ -536,14 +547,14 @@ class Coordinator:
     ) -> Decision:
         pursuit = self._pursuit
         common: dict[str, Any] = {
-            "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason, "completed": self._completed,
-            "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
+            "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
+            "completed": self._completed, "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
         }
         if pursuit is None:
             return Decision(**common)
         task = pursuit.reference.task
         clearance, pair = (np.inf, (-1, -1)) if pursuit.tick is None else pursuit.tick.plan.closest(1)
-        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - 2e-3:
+        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - _SHORT:
             doing = "the plan widens it as far as it can"
             cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance, doing))
         done = np.clip(pursuit.s(now) / pursuit.reference.end, 0.0, 1.0)
@@ -562,14 +573,16 @@ class Coordinator:
         return self._fleet.names[pair[0]], self._fleet.names[pair[1]]
 
 
-def hops(graph: NeighbourGraph) -> np.ndarray:
-    """Edges on the shortest way from robot to robot, shape (N, N), inf where there is none."""
-    counted = np.full((len(graph.names),) * 2, np.inf)
-    where = {name: k for k, name in enumerate(graph.names)}
-    for name, lengths in nx.all_pairs_shortest_path_length(graph.networkx()):
-        for other, count in lengths.items():
-            counted[where[name], where[other]] = count
-    return counted
+def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
+    if silence is None or not site_rules.refuse_unsafe_silence:
+        return
+    short = site_rules.min_clearance - silence.clearance
+    if short > _SHORT:
+        raise RefusedError(
+            f"should the planner fall silent after {silence.instant:.1f} s, {' and '.join(silence.pair)} would come "
+            f"within {silence.clearance:.2f} m of each other, {short:.2f} m short, before both stand",
+            "shorten their command time-outs, lower the speed or widen the spacing",
+        )
 
 
 def _shape(made: Reference) -> solver.Shape:

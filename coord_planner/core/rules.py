@@ -6,6 +6,7 @@ from collections.abc import Sequence
 
 from .messages import Caution, Level
 from .settings import Settings
+from .silence import Silence
 
 
 def caution(settings: Settings, code: str, subject: str, level: Level, figures: str, doing: str) -> Caution:
@@ -52,6 +53,15 @@ def plan_late(settings: Settings, took: float) -> Caution:
 
 def plan_failed(settings: Settings, reason: str, doing: str) -> Caution:
     return caution(settings, "plan failed", "", Level.ERROR, reason, doing)
+
+
+def silence_unsafe(settings: Settings, silence: Silence) -> Caution:
+    figures = (
+        f"should the planner fall silent {silence.instant:.1f} s into the manoeuvre they come within "
+        f"{silence.clearance:.2f} m before both stand, {settings.site_rules.min_clearance:g} m is the site's smallest"
+    )
+    doing = "the fleet goes on; shorter command time-outs, less speed or more spacing would help"
+    return caution(settings, "silence unsafe", " and ".join(silence.pair), Level.WARN, figures, doing)
 
 
 def change_refused(settings: Settings, reason: str) -> Caution:

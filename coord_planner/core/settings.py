@@ -78,6 +78,9 @@ class SiteRules:
     min_clearance: float = parameter(
         0.5, "smallest allowed distance between two robots' footprints", "m", minimum=0.0, maximum=100.0, live=True
     )
+    refuse_unsafe_silence: bool = parameter(
+        False, "true: a manoeuvre is refused, not only warned of, when robots timing out separately would come too near"
+    )
     max_speed: float = parameter(
         50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True
     )

@@ -38,7 +38,8 @@ def worst(reference: Reference, fleet: Fleet) -> Silence | None:
         return None
     start = float(reference.plan.times[0])
     instants = np.arange(start, reference.end + 1e-9, _EVERY)
-    found = [(closest_along(fleet, path), instant) for path, instant in zip(_paths(reference, fleet, instants), instants)]
+    paths = _paths(reference, fleet, instants)
+    found = [(closest_along(fleet, path), instant) for path, instant in zip(paths, instants)]
     (clearance, pair), instant = min(found, key=lambda entry: entry[0][0])
     return Silence(float(instant), clearance, (fleet.names[pair[0]], fleet.names[pair[1]]))
 

@@ -153,17 +153,20 @@ def _run(
     wall_time: float, seed: Optional[int],
 ) -> Run:
     decision = coordinator.decision
+    fleet = configuration.driven
+    state = State.ENDED if decision.completed else decision.state
     return Run(
-        fleet=configuration.driven, edges=configuration.graph.relative_to(configuration.driven.names).edges, manoeuvre=manoeuvre, times=np.array(log.times),
-        poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
+        fleet=fleet, edges=configuration.graph.relative_to(fleet.names).edges, manoeuvre=manoeuvre,
+        times=np.array(log.times), poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
         curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
         commanded=np.stack(log.commanded, axis=1), end_poses=coordinator.ends,
-        min_clearance=configuration.settings.site_rules.min_clearance, state=State.ENDED.value if decision.completed else decision.state.value,
+        min_clearance=configuration.settings.site_rules.min_clearance, state=state.value,
         completed=decision.completed, began=began, ended=_ended(log), cautions=log.cautions(),
         tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
         facts={
-            "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name, "file": configuration.file, "coupling": decision.coupling,
-            "alignment": decision.alignment, "seed": configuration.simulation.seed if seed is None else seed,
+            "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
+            "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
+            "seed": configuration.simulation.seed if seed is None else seed,
         },
     )
 
