@@ -15,7 +15,7 @@ import numpy as np
 
 from coord_planner.core import graph as graphs
 from coord_planner.core import manoeuvre, reference
-from coord_planner.core.coordinator import Coordinator, hops
+from coord_planner.core.coordinator import Coordinator
 from coord_planner.core.fleet import Fleet, Footprint, Limits, Response, Robot
 from coord_planner.core.graph import NeighbourGraph
 from coord_planner.core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
@@ -72,7 +72,7 @@ def solve(
 ) -> Reference:
     """A reference straight from what is asked, as the coordinator makes it; a path graph when none is given."""
     graph = graphs.path(fleet.names) if graph is None else graph
-    task = manoeuvre.work_out("turn", wanted, fleet, with_settings, poses, speed, hops(graph))
+    task = manoeuvre.work_out("turn", wanted, fleet, with_settings, poses, speed, graph.hops())
     return reference.make(task, fleet, graph, with_settings, states(poses, speed))
 
 
