@@ -26,7 +26,6 @@ from .silence import Silence
 from .silence import worst as worst_silence
 from .tick import usable
 
-_KEEP_PLAN = 1.0  # seconds for which an old plan is driven on when no new one comes
 _STANDING = 5e-3  # m/s
 _SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
@@ -463,7 +462,7 @@ class Coordinator:
         found += self._judge_lag(pursuit)
         if self._refused_change:
             found.append(rules.change_refused(settings, self._refused_change))
-        if now - self._planned_at > _KEEP_PLAN:
+        if now - self._planned_at > settings.horizon.keep:
             reason = f"no new plan for {now - self._planned_at:.1f} s"
             found.append(rules.plan_failed(settings, reason, "the fleet stops"))
         found += self._judge_clearance(estimate)

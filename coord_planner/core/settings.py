@@ -49,6 +49,9 @@ class Horizon:
     interval: float = parameter(0.25, "length of an interval", "s", minimum=0.05, maximum=2.0)
     rate: float = parameter(10.0, "plans a second", "1/s", minimum=1.0, maximum=50.0)
     budget: float = parameter(0.09, "time that one plan may take", "s", minimum=0.002, maximum=1.0)
+    keep: float = parameter(
+        2.0, "time for which the last plan is driven on when no new one comes", "s", minimum=0.1, maximum=5.0, live=True
+    )
     lead: float = parameter(
         1.0, "time given to making the rest of a manoeuvre anew while it runs", "s", minimum=0.2, maximum=10.0
     )
