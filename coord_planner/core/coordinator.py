@@ -16,6 +16,7 @@ from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
 from .manoeuvre import Manoeuvre, Task
 from .messages import Answer, Caution, Command, Decision, Level, PoseSample, Snapshot, State
+from .motion import lags
 from .observer import Estimate, Observer
 from .plan import Plan, near_pairs
 from .problem import POSE, SPEED_COMMAND
@@ -28,6 +29,7 @@ from .tick import usable
 
 _STANDING = 5e-3  # m/s
 _SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
+_SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -534,7 +536,9 @@ class Coordinator:
         stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate.states, now, estimate.speed_factor)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
         pursuit.freeze(now)
-        self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period
+        # Machines stand some lags after their commands do; until then nobody is told that the fleet stands.
+        settle = _SETTLE_LAGS * float(lags(self._fleet).max())
+        self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period + settle
         self._state, self._completed = State.STOPPING, completed
         self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
         if self._request is not None and self._request.kind == "change":
