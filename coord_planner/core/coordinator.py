@@ -339,7 +339,9 @@ class Coordinator:
                 f"no fresh pose of {', '.join(stale)} ({self._settings.poses.max_age:g} s allowed)",
                 "check localisation, the topic, its frame and the clocks",
             )
-        unready = sorted(snapshot.not_ready & set(self._fleet.names))
+        if snapshot.other_planner:
+            raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
+        unready = sorted((snapshot.not_ready | snapshot.silent) & set(self._fleet.names))
         if unready:
             raise RefusedError(f"{', '.join(unready)} not ready to be driven", "make them ready or disable them")
 
@@ -461,6 +463,9 @@ class Coordinator:
             for name, age in zip(names, estimate.age) if age > settings.poses.max_age
         ]
         found += [rules.not_ready(settings, name) for name in names if name in snapshot.not_ready]
+        found += [rules.silent(settings, name) for name in names if name in snapshot.silent]
+        if snapshot.other_planner:
+            found.append(rules.other_planner(settings, snapshot.other_planner))
         found += self._judge_lag(pursuit)
         if self._refused_change:
             found.append(rules.change_refused(settings, self._refused_change))

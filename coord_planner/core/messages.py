@@ -45,12 +45,16 @@ class Snapshot:
     Attributes:
         time: now, seconds on the same clock as the stamps.
         poses: the newest pose of each robot that has sent one; others are absent.
-        not_ready: robots that may not be driven now (emergency stop, manual mode, silent).
+        not_ready: robots that say that they may not be driven now (emergency stop, manual mode).
+        silent: robots that must say that they are ready and have fallen silent.
+        other_planner: who else drives this fleet, as it calls itself; "" when nobody is heard.
     """
 
     time: float
     poses: Mapping[str, PoseSample]
     not_ready: frozenset[str] = frozenset()
+    silent: frozenset[str] = frozenset()
+    other_planner: str = ""
 
 
 class State(str, Enum):

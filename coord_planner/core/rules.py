@@ -31,6 +31,14 @@ def not_ready(settings: Settings, name: str) -> Caution:
     return caution(settings, "robot not ready", name, Level.ERROR, "not ready to be driven", "the fleet stops")
 
 
+def silent(settings: Settings, name: str) -> Caution:
+    return caution(settings, "robot silent", name, Level.STALE, "no longer says that it is ready", "the fleet stops")
+
+
+def other_planner(settings: Settings, who: str) -> Caution:
+    return caution(settings, "other planner heard", "", Level.ERROR, f"{who} drives this fleet too", "the fleet stops")
+
+
 def not_following(settings: Settings, name: str, lag: float, doing: str, level: Level) -> Caution:
     figures = f"{lag:.2f} m behind its plan, {settings.progress.max_lag:g} m at most"
     return caution(settings, "robot not following", name, level, figures, doing)
