@@ -166,6 +166,48 @@ def test_halt_hold_resume_and_arrive():
     assert yard.machines.poses() == pytest.approx(yard.coordinator.ends, abs=0.02)
 
 
+@pytest.mark.parametrize("seconds", [4.5, 5.1, 5.3])
+def test_resumed_close_to_its_end_it_creeps_there_instead_of_going_round(seconds):
+    """Centimetres from the end, and by noise a little beside the way: the shortest drivable way is a full circle."""
+    yard = small_yard(pose_noise_xy=0.02, pose_noise_heading_deg=0.5)
+    yard.begin("corner")
+    yard.run(seconds)
+    yard.coordinator.halt(yard.now, "halted")
+    yard.run_to(State.HELD)
+    assert yard.resume().ok
+    assert max(fleets.length(yard.coordinator.reference, k) for k in range(2)) < 0.5
+    yard.run_to(State.ENDED)
+    off = yard.machines.poses() - yard.coordinator.ends
+    assert np.hypot(off[:, 0], off[:, 1]).max() < 0.10 and np.degrees(np.abs(off[:, 2])).max() < 3.0
+
+
+def test_a_robot_pushed_off_its_way_finds_a_new_one():
+    yard = under_way(2.0)
+    yard.coordinator.halt(yard.now, "halted")
+    yard.run_to(State.HELD)
+    yard.moved["cart_1"] = (0.0, 0.8)
+    yard.run(0.5)
+    assert yard.coordinator.state is State.HELD and yard.resume().ok
+    yard.run_to(State.ENDED)
+    seen = yard.machines.poses() + np.array([[0.0, 0.8, 0.0], [0.0, 0.0, 0.0]])
+    assert seen == pytest.approx(yard.coordinator.ends, abs=0.03) and kept_its_limits(yard)
+
+
+def test_a_halt_takes_a_resume_back():
+    yard, resumed = under_way(), []
+    yard.coordinator.halt(yard.now, "halted")
+    yard.run_to(State.HELD)
+    yard.coordinator.resume(yard.snapshot(), resumed.append)
+    jobs = yard.coordinator.jobs()
+    yard.coordinator.halt(yard.now, "halted again")
+    assert [answer.ok for answer in resumed] == [False]
+    for job in jobs:
+        yard.coordinator.deliver(job(), yard.now)
+    yard.run(0.5)
+    assert yard.coordinator.state is State.HELD and yard.standing()
+    assert yard.resume().ok
+
+
 def test_a_held_fleet_that_is_abandoned_is_free():
     yard = under_way()
     yard.coordinator.halt(yard.now, "halted")
@@ -298,6 +340,18 @@ def test_a_change_that_cannot_be_kept_stops_the_fleet_and_says_so():
     yard.run_to(State.HELD)
     assert yard.codes() & {"change refused", "clearance breached"} and yard.standing()
     assert kept_its_limits(yard)
+
+
+def test_a_change_while_a_reference_is_made_takes_force_on_the_way():
+    yard = small_yard()
+    yard.coordinator.begin("corner", yard.snapshot(), answered=yard.answers.append)
+    jobs = yard.coordinator.jobs()
+    yard.coordinator.change(0.0, settings=changed(yard, coupling={"strength": 9.0}))
+    for job in jobs:
+        yard.coordinator.deliver(job(), 0.0)
+    yard.work()
+    yard.run(2.0)
+    assert yard.coordinator.decision.coupling == 9.0
 
 
 def test_a_change_while_idle_counts_for_the_next_manoeuvre():

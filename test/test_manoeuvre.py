@@ -8,6 +8,7 @@ import pytest
 from fleets import LATE, LIMITS, PROMPT, abreast, carts, settings
 
 from coord_planner.core import manoeuvre
+from coord_planner.core.dubins import ArcPath
 from coord_planner.core.graph import NeighbourGraph, path
 from coord_planner.core.manoeuvre import End, EqualRadius, ToEnds, eased_turn
 from coord_planner.errors import SettingsError
@@ -110,9 +111,15 @@ def test_ways_are_wide_where_that_is_hardly_longer():
 def test_the_rest_of_a_task_keeps_its_ends_and_windings():
     made = task(ToEnds(ends_deg=("cart_1 pose -6 2.5 0", "cart_2 pose -6 0 0")), abreast(2))
     halfway = np.array([way.sample([way.length / 2])[0] for way in made.ways])
-    rest = manoeuvre.go_on(made, carts(2), settings(), halfway, path(("cart_1", "cart_2")).hops())
+    hops = path(("cart_1", "cart_2")).hops()
+    left = ArcPath(tuple(halfway[0]), "left", ((0.1, 3.0),))
+    rest = manoeuvre.go_on(made, carts(2), settings(), halfway, hops, (left, None))
     assert rest.ends == pytest.approx(made.ends)
-    assert rest.ways[0].length == pytest.approx(made.ways[0].length / 2, rel=0.15)
+    assert rest.ways[0] is left and rest.ways[1].length == pytest.approx(made.ways[1].length / 2, rel=0.15)
+    slower = rest.slower(2.0, settings())
+    assert slower.arrival == pytest.approx(2 * rest.arrival, abs=0.25)
+    s = np.linspace(0.0, slower.arrival, 100)
+    assert slower.asked_speed(s).sum(axis=1) * s[1] == pytest.approx([way.length for way in rest.ways], rel=1e-6)
 
 
 @pytest.mark.parametrize("entry", [

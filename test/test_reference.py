@@ -192,8 +192,8 @@ REFUSED = {
     ),
     "no such robot": (ToEnds(ends_deg=("cart_9 pose 6 6 90",)), {}, ("'cart_9'", "cart_1, cart_2")),
     "nobody has an end": (ToEnds(ends_deg=()), {}, ("no robot has an end",)),
-    "nothing to do": (ToEnds(ends_deg=("cart_1 heading 0",)), {}, ("already where it is to end",)),
-    "no angle": (EqualRadius(angle_deg=0.0), {}, ("already where it is to end",)),
+    "nothing to do": (ToEnds(ends_deg=("cart_1 heading 0",)), {}, ("where it is to end already",)),
+    "no angle": (EqualRadius(angle_deg=0.0), {}, ("where it is to end already",)),
 }
 
 

@@ -56,6 +56,7 @@ class _Request:
     kind: str  # "begin", "resume" or "change"
     answered: Answered
     request_id: str
+    made_for: tuple[Fleet, NeighbourGraph, Settings]
 
 
 class Coordinator:
@@ -183,12 +184,13 @@ class Coordinator:
                 answered(Answer(False, str(error)))
                 return
             fleet, graph, settings = self._fleet, self._graph, self._settings
-            task, states = self._pursuit.reference.task, estimate.states
+            old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
 
             def make() -> Reference:
-                rest = manoeuvre.go_on(task, fleet, settings, states[:, POSE], graph.hops())
-                return reference.make(rest, fleet, graph, settings, states)
+                left = reference.ways_left(old, states[:, POSE], since)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left)
+                return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
 
@@ -255,6 +257,8 @@ class Coordinator:
             if np.isfinite(outcome.reference.clearance):
                 text += f", smallest clearance {outcome.reference.clearance:.2f} m"
             request.answered(Answer(True, text, request.request_id))
+            if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
+                self._remake(now, self._pursuit)  # something was changed while it was being made
 
     # The loop
 
@@ -361,7 +365,7 @@ class Coordinator:
             solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
             return Outcome(token, made, "", silence)
 
-        self._request = _Request(token, kind, answered, request_id)
+        self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings))
         self._jobs = [job]
 
     def _cancel(self, why: str) -> None:

@@ -125,6 +125,15 @@ class Task:
         full = max(self.profile.speeds[1], 1e-9)
         return np.outer(self.asked, np.diff(along) / np.maximum(np.diff(s), 1e-9) / full)
 
+    def slower(self, stretch: float, settings: Settings) -> Task:
+        """The same task from its beginning in ``stretch`` times the time."""
+        step = settings.horizon.interval
+        arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
+        return attrs.evolve(
+            self, arrival=arrival, duration=arrival + self.duration - self.arrival,
+            pacing=((0.0, arrival), (0.0, self.profile.duration)),
+        )
+
     def profile_time(self, s: np.ndarray) -> np.ndarray:
         """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
         inside = np.interp(s, *self.pacing)
@@ -174,9 +183,21 @@ def work_out(
     )
 
 
-def go_on(task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray) -> Task:
-    """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept."""
-    ways, ends = _ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
+def go_on(
+    task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray,
+    left: tuple[Optional[ArcPath], ...],
+) -> Task:
+    """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept.
+
+    Args:
+        left: what is left of each robot's way; None for one that stands off it and needs a new one. (A new one
+            for everybody would send a robot that stands a finger's breadth past its end round a full circle.)
+    """
+    ways, ends = tuple(way for way in left if way is not None), task.ends
+    if len(ways) < len(left):
+        anew, wound = _ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
+        ways = tuple(new if old is None else old for old, new in zip(left, anew))
+        ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     return lay_out(
         task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
         duration=0.0, coupling=task.coupling, alignment=task.alignment,
@@ -191,7 +212,7 @@ def lay_out(
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive or too little time."""
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
-        raise RefusedError(f"{name}: every robot is already where it is to end", "ask for something else to be driven")
+        raise RefusedError(f"{name}: every robot is where it is to end already", "ask for something else or abandon it")
     profile = speed_profile(
         longest, speed_now, speed, end_speed,
         _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),
