@@ -312,12 +312,22 @@ def test_another_coupling_takes_force_in_mid_turn_without_a_jump():
 def test_other_neighbours_take_force_in_mid_turn():
     yard = under_way(2.0, "led")
     assert len(yard.coordinator.reference.graph.edges) == 1
-    yard.coordinator.change(yard.now, graph=NeighbourGraph(yard.fleet.names, ()))
+    settings = yard.settings
+    apart = attrs.evolve(settings, coupling=attrs.evolve(settings.coupling, may_split=True))
+    yard.coordinator.change(yard.now, settings=apart, graph=NeighbourGraph(yard.fleet.names, ()))
     yard.run(1.5)
     assert yard.coordinator.reference.graph.edges == ()
+    assert {"graph changed", "graph split"} <= {c.code for d in yard.decisions for c in d.warnings}
     yard.run_to(State.ENDED)
     assert kept_its_limits(yard)
     assert yard.machines.poses()[0, 2] == pytest.approx(math.radians(60.0), abs=0.01)
+
+
+def test_a_graph_that_falls_apart_stops_the_fleet_unless_the_file_allows_it():
+    yard = under_way(2.0, "led")
+    yard.coordinator.change(yard.now, graph=NeighbourGraph(yard.fleet.names, ()))
+    yard.run_to(State.HELD)
+    assert "falls into 2 parts" in yard.coordinator.decision.reason and yard.standing()
 
 
 def test_a_lower_speed_limit_is_kept_from_the_moment_at_which_the_brake_can_keep_it():

@@ -9,6 +9,7 @@ from fleets import LIMITS, abreast, carts
 from coord_planner.core import stopping
 from coord_planner.core.fleet import Fleet, Limits, Robot
 from coord_planner.core.motion import drive
+from coord_planner.core.observer import Estimate
 from coord_planner.core.problem import POSE
 from coord_planner.core.schedule import Schedule, constant, of_plan
 
@@ -84,7 +85,8 @@ def chosen(poses, limits):
     """The stop for robots that all drive straight on at 1 m/s."""
     fleet = Fleet(tuple(Robot(name, limit) for name, limit in zip("abc", limits)))
     state, schedule = fleets.states(np.array(poses), 1.0), constant(np.array([[1.0, 0.0]] * len(poses)), 0.0)
-    return stopping.choose(schedule, 0.0, fleet, state, 0.0, np.ones(len(poses)))
+    estimate = Estimate(state, np.ones(len(poses)), np.zeros(len(poses)), growth=np.zeros(len(poses)))
+    return stopping.choose(schedule, 0.0, fleet, estimate, 0.0)
 
 
 def test_in_file_the_stop_in_step_is_chosen_where_the_one_behind_has_the_weaker_brake():

@@ -10,15 +10,16 @@ import attrs
 import numpy as np
 
 from ..errors import CoordPlannerError, RefusedError, SettingsError, SolveError
-from . import gate, manoeuvre, outline, reference, rules, solver, stopping
+from . import gate, manoeuvre, reference, rules, solver, stopping
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
+from .judge import SHORT, Judge, View
 from .manoeuvre import Manoeuvre, Task
-from .messages import Answer, Caution, Command, Decision, Level, PoseSample, Snapshot, State
+from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
 from .observer import Estimate, Observer
-from .plan import Plan, near_pairs
+from .plan import Plan
 from .problem import POSE, SPEED_COMMAND
 from .pursuit import Prepared, Pursuit
 from .reference import Reference
@@ -28,7 +29,6 @@ from .silence import worst as worst_silence
 from .tick import usable
 
 _STANDING = 5e-3  # m/s
-_SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
@@ -98,6 +98,7 @@ class Coordinator:
         self._ended_at = 0.0
         self._refused_change = ""
         self._silence: Optional[Silence] = None
+        self._watchman = Judge()
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
@@ -267,12 +268,12 @@ class Coordinator:
         with self._lock:
             cautions: list[Caution] = []
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
-            estimate = self._observer.estimate(snapshot.time, self._planned)
+            estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._settle(snapshot.time)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
-                cautions += self._judge(snapshot, estimate, jumped)
+                cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     prepared = self._prepare(snapshot.time)
         plan = self._solve(prepared, cautions)
@@ -343,6 +344,12 @@ class Coordinator:
                 f"no fresh pose of {', '.join(stale)} ({self._settings.poses.max_age:g} s allowed)",
                 "check localisation, the topic, its frame and the clocks",
             )
+        if len(self._fleet) > 1 and not self._graph.connected and not self._settings.coupling.may_split:
+            words = " | ".join(" ".join(part) for part in self._graph.components())
+            raise RefusedError(
+                f"the neighbour graph falls into parts that do not copy each other: {words}",
+                "join them by an edge, or set coupling.may_split",
+            )
         if snapshot.other_planner:
             raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
         unready = sorted((snapshot.not_ready | snapshot.silent) & set(self._fleet.names))
@@ -411,7 +418,7 @@ class Coordinator:
         values = np.zeros((len(self._fleet), 2)) if last is None else last[1]
         self._pursuit = Pursuit(made, begins, 0.0, values, self._fleet)
         self._state, self._reason, self._stop = State.MOVING, "", None
-        self._planned_at, self._refused_change = begins, ""
+        self._planned_at, self._refused_change, self._watchman = begins, "", Judge()
 
     # The loop, inside
 
@@ -456,55 +463,19 @@ class Coordinator:
         elif pursuit.reference.task.end_speed > 0.0:
             self._begin_stop(now, "completed", completed=True)
 
-    def _judge(self, snapshot: Snapshot, estimate: Estimate, jumped: tuple[str, ...]) -> list[Caution]:
-        """What goes wrong while moving, and the stops that follow from it."""
-        settings, names, now = self._settings, self._fleet.names, snapshot.time
+    def _judge(self, snapshot: Snapshot, estimate: Estimate) -> list[Caution]:
+        """What goes wrong while moving, and the stop that follows from it."""
         pursuit = self._pursuit
         assert pursuit is not None
-        found = [rules.pose_jumped(settings, name) for name in jumped]
-        found += [
-            rules.pose_old(settings, name, float(age), "the fleet stops")
-            for name, age in zip(names, estimate.age) if age > settings.poses.max_age
-        ]
-        found += [rules.not_ready(settings, name) for name in names if name in snapshot.not_ready]
-        found += [rules.silent(settings, name) for name in names if name in snapshot.silent]
-        if snapshot.other_planner:
-            found.append(rules.other_planner(settings, snapshot.other_planner))
-        found += self._judge_lag(pursuit)
-        if self._refused_change:
-            found.append(rules.change_refused(settings, self._refused_change))
-        if now - self._planned_at > settings.horizon.keep:
-            reason = f"no new plan for {now - self._planned_at:.1f} s"
-            found.append(rules.plan_failed(settings, reason, "the fleet stops"))
-        found += self._judge_clearance(estimate)
-        if self._silence is not None and self._silence.clearance < settings.site_rules.min_clearance - _SHORT:
-            found.append(rules.silence_unsafe(settings, self._silence))
-        grave = [caution for caution in found if caution.level is not Level.WARN]
+        at = snapshot.time + float(self._history.effect_delay.max())
+        found = self._watchman.look(View(
+            snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
+            1.0 / self._settings.horizon.rate, self._planned_at, self._refused_change, self._silence,
+        ))
+        grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
-            self._begin_stop(now, grave[0].text, completed=False, estimate=estimate)
+            self._begin_stop(snapshot.time, grave[0].text, completed=False, estimate=estimate)
         return found
-
-    def _judge_lag(self, pursuit: Pursuit) -> list[Caution]:
-        found = []
-        allowed = self._settings.progress.max_lag
-        for name, lag in zip(self._fleet.names, pursuit.progress.lag):
-            if lag > allowed:
-                found.append(rules.not_following(self._settings, name, lag, "the fleet stops", Level.ERROR))
-            elif lag > self._settings.progress.dead_band + self._settings.progress.full_lag / 2:
-                found.append(rules.not_following(self._settings, name, lag, "the group slows in step", Level.WARN))
-        return found
-
-    def _judge_clearance(self, estimate: Estimate) -> list[Caution]:
-        poses = estimate.states[:, None, POSE]
-        allowed = self._settings.site_rules.min_clearance
-        gap, pair = outline.closest(
-            outline.outlines(self._fleet.corners(), poses), near_pairs(self._fleet, poses, allowed + 0.5)
-        )
-        # The estimate itself is uncertain: only what is clearly short is called a breach.
-        doubt = self._settings.poses.noise_xy
-        if gap < allowed - doubt:
-            return [rules.clearance_breached(self._settings, self._names(pair), gap, "the fleet stops")]
-        return []
 
     def _prepare(self, now: float) -> Optional[Prepared]:
         pursuit = self._pursuit
@@ -531,7 +502,7 @@ class Coordinator:
                 cautions.append(rules.plan_late(settings, plan.solve_time))
                 return None
         except SolveError as error:
-            cautions.append(rules.plan_failed(settings, str(error), "the last plan is driven on"))
+            cautions.append(rules.plan_failed(settings, str(error)))
             return None
         return plan
 
@@ -542,7 +513,7 @@ class Coordinator:
         assert pursuit is not None
         estimate = estimate or self._observer.estimate(now, self._planned)
         at = now + float(self._history.effect_delay.max())
-        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate.states, now, estimate.speed_factor)
+        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
         pursuit.freeze(now)
         # Machines stand some lags after their commands do; until then nobody is told that the fleet stands.
@@ -558,25 +529,25 @@ class Coordinator:
         self, now: float, estimate: Estimate, plan: Optional[Plan], cautions: list[Caution]
     ) -> Decision:
         pursuit = self._pursuit
+        tick = pursuit.tick if pursuit is not None else None
+        clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
+        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
+            cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
-            "completed": self._completed, "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
+            "completed": self._completed, "poses": estimate.states[:, POSE],
+            "warnings": self._watchman.hold(now, cautions),
         }
         if pursuit is None:
             return Decision(**common)
         task = pursuit.reference.task
-        clearance, pair = (np.inf, (-1, -1)) if pursuit.tick is None else pursuit.tick.plan.closest(1)
-        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - _SHORT:
-            doing = "the plan widens it as far as it can"
-            cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance, doing))
         done = np.clip(pursuit.s(now) / pursuit.reference.end, 0.0, 1.0)
         return Decision(
-            **{**common, "warnings": tuple(cautions)},
-            manoeuvre=task.name, progress=float(done),
+            **common, manoeuvre=task.name, progress=float(done),
             progress_rate=pursuit.pace if self._state is State.MOVING else 0.0,
             coupling=task.coupling, alignment=task.alignment, lag=pursuit.behind,
-            plan_times=np.zeros(0) if pursuit.tick is None else pursuit.tick.plan.times,
-            plan_poses=np.zeros((len(self._fleet), 0, 3)) if pursuit.tick is None else pursuit.tick.plan.poses,
+            plan_times=np.zeros(0) if tick is None else tick.plan.times,
+            plan_poses=np.zeros((len(self._fleet), 0, 3)) if tick is None else tick.plan.poses,
             clearance=float(clearance), clearance_pair=self._names(pair) if np.isfinite(clearance) else None,
             solve_time=0.0 if plan is None else plan.solve_time,
         )
@@ -589,7 +560,7 @@ def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
     if silence is None or not site_rules.refuse_unsafe_silence:
         return
     short = site_rules.min_clearance - silence.clearance
-    if short > _SHORT:
+    if short > SHORT:
         raise RefusedError(
             f"should the planner fall silent after {silence.instant:.1f} s, {' and '.join(silence.pair)} would come "
             f"within {silence.clearance:.2f} m of each other, {short:.2f} m short, before both stand",

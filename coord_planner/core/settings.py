@@ -18,6 +18,9 @@ class Coupling:
         0.0, "price of a heading that differs from a neighbour's, times the coupling; 0 turns it off", "1/m^2",
         minimum=0.0, maximum=1e3, live=True,
     )
+    may_split: bool = parameter(
+        False, "true: parts of the fleet that the graph no longer joins go on by themselves", live=True
+    )
 
 
 @attrs.frozen
