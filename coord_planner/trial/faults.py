@@ -84,7 +84,8 @@ class Fault:
             raise SettingsError(f"{self.kind} strikes an edge; none is given", key="edge", allowed="two robots' names")
         if not 0.0 <= self.from_s < self.to_s:
             raise SettingsError(
-                f"it lasts from {self.from_s:g} to {self.to_s:g} s", key="to_s", allowed="later than from_s, from 0 s on"
+                f"it lasts from {self.from_s:g} to {self.to_s:g} s", key="to_s",
+                allowed="later than from_s, from 0 s on"
             )
         if kind.value and not kind.lowest <= self.value <= kind.highest:
             raise SettingsError(
