@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from fleets import HARDLY_ANY, LIMITS, abreast, carts, settings
 
-from coord_planner.core import dubins, outline, se2
+from coord_planner.core import dubins, outline, reference, se2, solver
 from coord_planner.core import graph as graphs
 from coord_planner.core.graph import NeighbourGraph
 from coord_planner.core.manoeuvre import EqualRadius, ToEnds
@@ -206,6 +206,21 @@ def test_what_cannot_be_kept_is_refused_with_figures_and_a_remedy(wanted, given,
         fleets.solve(wanted, carts(2), poses, chosen)
     assert all(word in refused.value.reason + refused.value.remedy for word in words), refused.value
     assert refused.value.remedy
+
+
+def test_the_asked_radius_is_named_where_it_stands_in_the_way():
+    """A fleet that was pushed aside: back to its end only by tighter bends than were asked for."""
+    made = fleets.corner()
+    aside = fleets.states(made.state(6.0)[:, :3] + [0.0, 0.8, 0.0])
+    with pytest.raises(RefusedError, match="the radius of 4 m that is asked"):
+        reference.make(made.task, made.plan.fleet, made.graph, settings(), aside, start=6.0)
+
+
+def test_a_plan_that_the_solver_did_not_finish_and_that_jumps_is_refused(monkeypatch):
+    whole = solver.solve
+    monkeypatch.setattr(solver, "solve", lambda problem, start, **_: whole(problem, start, budget=1e-3))
+    with pytest.raises(RefusedError, match="no plan was found in"):
+        fleets.solve(EqualRadius(radius=4.0), carts(3), abreast(3), settings())
 
 
 def test_a_wall_of_robots_that_cannot_be_passed_is_refused_with_the_clearance():
