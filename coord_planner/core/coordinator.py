@@ -498,11 +498,10 @@ class Coordinator:
             return None
         settings = self._settings
         try:
-            warm = prepared.start.multipliers is not None
-            plan = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            if not usable(prepared.problem, plan) and warm:
-                cautions.append(rules.plan_late(settings, plan.solve_time))
-                return None
+            solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
+            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
+            if plan is None:
+                cautions.append(rules.plan_late(settings, solved.solve_time))
         except SolveError as error:
             cautions.append(rules.plan_failed(settings, str(error)))
             return None
