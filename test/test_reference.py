@@ -80,6 +80,18 @@ def test_after_its_end_a_reference_goes_straight_on():
     assert (after[:, SPEED] == 0.5).all() and (after[:, CURVATURE] == 0.0).all()
 
 
+def test_what_is_left_of_the_ways_is_measured_from_where_each_robot_stands():
+    made = fleets.corner()
+    poses = np.stack([made.state(s)[k, :3] for k, s in enumerate((5.0, 6.0, 7.5))])
+    poses[2, 1] += 1.0  # not on its way any more
+    left = reference.ways_left(made, poses, 4.5)
+    assert left[2] is None
+    for k, s in ((0, 5.0), (1, 6.0)):
+        curve = made.states(np.linspace(s, made.end, 2001))[k, :, :2]
+        assert left[k].length == pytest.approx(np.linalg.norm(np.diff(curve, axis=0), axis=1).sum(), abs=0.03)
+        assert left[k].start == tuple(poses[k]) and left[k].end == pytest.approx(made.task.ends[k], abs=0.03)
+
+
 # Bounds and symmetries
 
 
