@@ -83,7 +83,7 @@ def test_after_its_end_a_reference_goes_straight_on():
 def test_what_is_left_of_the_ways_is_measured_from_where_each_robot_stands():
     made = fleets.corner()
     poses = np.stack([made.state(s)[k, :3] for k, s in enumerate((5.0, 6.0, 7.5))])
-    poses[2, 1] += 1.0  # not on its way any more
+    poses[2, :2] += [1.0, -1.0]  # not on its way any more
     left = reference.ways_left(made, poses, 4.5)
     assert left[2] is None
     for k, s in ((0, 5.0), (1, 6.0)):

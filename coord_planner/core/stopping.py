@@ -75,7 +75,10 @@ def _slow_down(
     command = schedule.at(along)
     times, values = [at], [command]
     last = float(schedule.times[-1])
-    while np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST and along.min() < last:
+    # A stop goes on past the schedule's end, where the last values hold; who only slows down has come to its end.
+    while (
+        np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST and (ratio_kept == 0.0 or along.min() < last)
+    ):
         ahead = schedule.at(along + ratio * _STEP)
         speed = np.abs(ahead[:, 0])
         least = np.where(speed > 1e-9, (np.abs(command[:, 0]) - braking) / np.maximum(speed, 1e-9), 0.0)
