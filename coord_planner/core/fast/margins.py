@@ -1,0 +1,112 @@
+"""Margins of every row and what they are traded against, laid end to end: interior-point steps keep both above 0.
+
+Six parts follow each other; in each the product of margin and push is to vanish:
+
+* limits: room up to the upper limit, and down to the lower one, each with its push;
+* ends: metres missed on either side, each with what is left of the price: price - lambda and price + lambda;
+* clearances: room with the push lambda, and metres short with what is left of the price: price - lambda.
+"""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from .numbers import Numbers
+from .point import Forces, Point
+
+UPPER, LOWER, OVER, UNDER, ROOM, SHORT = range(6)
+
+_NO_ROOM = 1e-9  # limits nearer to each other than this are kept as an equation
+_LEAST = 2e-2  # margin of a row that has none when a solve begins
+_KEPT = 0.5  # part of the last push on an end with which a solve begins: poses are new, ends are pulled elsewhere
+_WITHIN = 0.99  # part of a price that a push may have when a solve begins
+
+
+@attrs.frozen(eq=False)
+class Layout:
+    """Which part of the vectors stands for what. N robots, M intervals, P pairs, L entries.
+
+    Attributes:
+        shapes: of the six parts. stops: where each ends.
+        fixed: limits without room, shape (6, N, M), True where the row is kept as an equation instead.
+        on: 1 where an entry counts, 0 where the limit is fixed or the end is free, shape (L,). count: how many count.
+        priced: whether an end counts, shape (N, 7). price: of ends, shape (N, 7), 1 where free.
+        short_price: shape (P, M).
+    """
+
+    shapes: tuple[tuple[int, ...], ...]
+    stops: tuple[int, ...]
+    fixed: np.ndarray
+    on: np.ndarray
+    count: float
+    priced: np.ndarray
+    price: np.ndarray
+    short_price: np.ndarray
+
+    def split(self, vector: np.ndarray) -> list[np.ndarray]:
+        """Views of a vector's six parts."""
+        starts = (0,) + self.stops[:-1]
+        return [vector[i:j].reshape(shape) for i, j, shape in zip(starts, self.stops, self.shapes)]
+
+
+def layout(numbers: Numbers) -> Layout:
+    """The layout for a problem."""
+    limit, end = numbers.upper.shape, numbers.target.shape
+    clear = (len(numbers.pairs), limit[2])
+    shapes = (limit, limit, end, end, clear, clear)
+    fixed = numbers.upper - numbers.lower < _NO_ROOM
+    priced = numbers.end_price > 0
+    parts = (~fixed, ~fixed, priced, priced, np.ones(clear), np.ones(clear))
+    on = np.concatenate([part.ravel() for part in parts], dtype=float)
+    stops, stop = [], 0
+    for part in parts:
+        stop += part.size
+        stops.append(stop)
+    return Layout(
+        shapes, tuple(stops), fixed, on, max(float(on.sum()), 1.0), priced, np.where(priced, numbers.end_price, 1.0),
+        np.broadcast_to(numbers.short_price, clear),
+    )
+
+
+def residuals(numbers: Numbers, point: Point) -> np.ndarray:
+    """Margins as the rows stand, some below 0, shape (L,)."""
+    return np.concatenate([part.ravel() for part in (
+        numbers.upper - point.limits, point.limits - numbers.lower, point.missed, -point.missed,
+        point.clearances, -point.clearances,
+    )])
+
+
+def opened(
+    numbers: Numbers, known: Layout, point: Point, forces: Forces, barrier: float
+) -> tuple[np.ndarray, np.ndarray]:
+    """Margins and pushes to begin with, each of shape (L,), from the last multipliers; all above 0.
+
+    Args:
+        barrier: product of margin and push that no entry begins below.
+    """
+    raw = residuals(numbers, point)
+    margins, pushes = np.maximum(raw, _LEAST), np.empty_like(raw)
+    raw_parts, margin, push = known.split(raw), known.split(margins), known.split(pushes)
+    np.maximum(np.maximum(forces.limits, 0.0), barrier / margin[UPPER], out=push[UPPER])
+    np.maximum(np.maximum(-forces.limits, 0.0), barrier / margin[LOWER], out=push[LOWER])
+    pulled = np.clip(_KEPT * forces.ends, -_WITHIN * known.price, _WITHIN * known.price)
+    np.subtract(known.price, pulled, out=push[OVER])
+    np.add(known.price, pulled, out=push[UNDER])
+    for part in (OVER, UNDER):
+        np.maximum(raw_parts[part], barrier / push[part], out=margin[part])
+    pressed = np.maximum(forces.clearances, barrier / margin[ROOM])
+    np.minimum(pressed, _WITHIN * known.short_price, out=push[ROOM])
+    np.subtract(known.short_price, push[ROOM], out=push[SHORT])
+    off = known.on == 0.0
+    margins[off] = pushes[off] = 1.0
+    return margins, pushes
+
+
+def forces_of(known: Layout, pushes: np.ndarray, fixed: np.ndarray) -> Forces:
+    """Multipliers of the rows; ``fixed``: of limits without room, shape (6, N, M)."""
+    push = known.split(pushes)
+    return Forces(
+        np.where(known.fixed, fixed, push[UPPER] - push[LOWER]),
+        np.where(known.priced, known.price - push[OVER], 0.0), push[ROOM].copy(),
+    )

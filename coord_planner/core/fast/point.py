@@ -1,0 +1,91 @@
+"""Commands with all that follows from them: poses, values of every row, cost, and slopes of weighted sums of rows."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+from . import clearance, ends, limits, objective
+from .chain import Rollout, arc_slopes, command_slopes, roll_out
+from .numbers import Numbers
+
+
+@attrs.frozen(eq=False)
+class Forces:
+    """Multipliers of all rows: pushes of limits (6, N, M), of ends (N, 7), of clearances (P, M; >= 0 pushes apart)."""
+
+    limits: np.ndarray
+    ends: np.ndarray
+    clearances: np.ndarray
+
+
+@attrs.frozen(eq=False)
+class Point:
+    """N robots, M intervals, P pairs.
+
+    Attributes:
+        r: rollout of the commands. sight: directions at the nodes; None without pairs.
+        limits: values of the rows LIMITS, shape (6, N, M). missed: last state less target, shape (N, 7).
+        clearances: shape (P, M), metres, negative where short.
+    """
+
+    r: Rollout
+    sight: clearance.Sight | None
+    limits: np.ndarray
+    missed: np.ndarray
+    clearances: np.ndarray
+
+
+def evaluate(numbers: Numbers, curvature: np.ndarray, speed: np.ndarray) -> Point:
+    """All rows at commands of nodes 1 .. M, each of shape (N, M)."""
+    r = roll_out(numbers, curvature, speed)
+    sight = clearance.look(r) if len(numbers.pairs) else None
+    clear = np.zeros((0, curvature.shape[1])) if sight is None else clearance.clearances(numbers, r, sight)
+    return Point(r, sight, limits.values(numbers, curvature, speed), ends.missed(numbers, r), clear)
+
+
+def cost(numbers: Numbers, point: Point) -> float:
+    """The whole cost with exact penalties: what ocp.py minimises, slacks eliminated."""
+    missed = float(np.sum(numbers.end_price * np.abs(point.missed)))
+    short = float(np.maximum(-point.clearances, 0.0).sum(axis=0) @ numbers.short_price)
+    return objective.smooth_cost(numbers, point.r) + missed + short
+
+
+def excess(numbers: Numbers, point: Point) -> float:
+    """Largest amount by which any limit is passed, in its own unit."""
+    over, under = point.limits - numbers.upper, numbers.lower - point.limits
+    return max(0.0, float(over.max()), float(under.max()))
+
+
+def cost_slopes(numbers: Numbers, point: Point) -> np.ndarray:
+    """Slopes of the smooth cost by the commands (curvatures, then speeds), shape (N, 2M)."""
+    r = point.r
+    by_curvature, by_speed = objective.mean_slopes(numbers, r)
+    if numbers.alignment.any():
+        still = np.zeros_like(r.turn)
+        torque = objective.aligning_torque(numbers, r)
+        more = command_slopes(numbers, r, *arc_slopes(r, still, still, torque))
+        by_curvature, by_speed = by_curvature + more[0], by_speed + more[1]
+    steering, speeding = objective.rate_slopes(numbers, r)
+    return np.concatenate([
+        numbers.curvature.backward(numbers.curvature.mean, by_curvature) + steering,
+        numbers.speed.backward(numbers.speed.mean, by_speed) + speeding,
+    ], axis=1)
+
+
+def row_slopes(numbers: Numbers, point: Point, forces: Forces) -> np.ndarray:
+    """Slopes of sum(forces * rows) by the commands, shape (N, 2M); clearances count negative."""
+    r = point.r
+    force_x, force_y, torque = np.zeros((3,) + r.turn.shape)
+    force_x[:, -1], force_y[:, -1], torque[:, -1] = forces.ends[:, 0], forces.ends[:, 1], forces.ends[:, 2]
+    pairs, nodes = np.nonzero(forces.clearances)
+    if len(pairs) and point.sight is not None:
+        rows = clearance.rows_of(numbers, point.sight, pairs, nodes + 1)
+        clearance.push(rows, -forces.clearances[pairs, nodes], force_x, force_y, torque)
+    by_curvature, by_speed = command_slopes(numbers, r, *arc_slopes(r, force_x, force_y, torque))
+    ended = ends.pulled_commands(numbers, forces.ends)
+    limited = limits.pulled(numbers, r.curvature, r.speed, forces.limits)
+    return np.concatenate([
+        numbers.curvature.backward(numbers.curvature.mean, by_curvature) + ended[0] + limited[0],
+        numbers.speed.backward(numbers.speed.mean, by_speed) + ended[1] + limited[1],
+    ], axis=1)

@@ -1,0 +1,73 @@
+"""What machines reach under commands that run straight from node to node, as matrices: the chain is linear."""
+
+from __future__ import annotations
+
+import attrs
+import numpy as np
+
+_AT_ONCE = 400  # rows that are multiplied in one call: more would wake BLAS's other threads
+
+
+@attrs.frozen(eq=False)
+class Response:
+    """First-order answer of robots to node commands; robots with the same lag share a matrix. U lags, M intervals.
+
+    Attributes:
+        which: lag of each robot, shape (N,), indices into the matrices.
+        mean: mean over each interval of what is reached, by the commands at nodes 1 .. M, shape (U, M, M).
+        mean_start: the same by what is reached and commanded at node 0, shape (U, M, 2).
+        reached: what is reached at nodes 1 .. M, by the commands at nodes 1 .. M, shape (U, M, M).
+        reached_start: by what is reached and commanded at node 0, shape (U, M, 2).
+    """
+
+    which: np.ndarray
+    mean: np.ndarray
+    mean_start: np.ndarray
+    reached: np.ndarray
+    reached_start: np.ndarray
+
+    def forward(self, matrix: np.ndarray, values: np.ndarray) -> np.ndarray:
+        """matrix @ values for each robot; matrix (U, A, B), values (N, B) -> (N, A)."""
+        if len(matrix) == 1:
+            return values @ matrix[0].T
+        return np.matmul(matrix[self.which], values[:, :, None])[:, :, 0]
+
+    def backward(self, matrix: np.ndarray, values: np.ndarray, robots: np.ndarray | None = None) -> np.ndarray:
+        """matrix' @ values for each robot (or for the robot of each row); matrix (U, A, B), values (N, A) -> (N, B)."""
+        if len(matrix) == 1:
+            if len(values) <= _AT_ONCE:
+                return values @ matrix[0]
+            parts = range(0, len(values), _AT_ONCE)
+            return np.concatenate([values[i : i + _AT_ONCE] @ matrix[0] for i in parts])
+        which = self.which if robots is None else self.which[robots]
+        return np.matmul(values[:, None, :], matrix[which])[:, 0]
+
+
+def response(intervals: np.ndarray, lag: np.ndarray) -> Response:
+    """The matrices for intervals of given lengths, shape (M,), and the lag of each robot, shape (N,), seconds.
+
+    Exact for lag * reached' = command - reached with a command that is linear in each interval (as in
+    ocp.lag_residual): reached(h) = e reached(0) + (1 - q) command(h) + (q - e) command(0), e = exp(-h / lag),
+    q = (lag / h)(1 - e); the mean over the interval is that of the command, less lag * (change of reached) / h.
+    """
+    lags, which = np.unique(lag, return_inverse=True)
+    m = len(intervals)
+    late = lags[:, None] > 0
+    # Relative to h: where there is no lag, e and q are 0 and the machine is where it was told to be.
+    ratio = np.where(late, lags[:, None] / intervals, 0.0)
+    e = np.where(late, np.exp(-1.0 / np.maximum(ratio, 1e-9)), 0.0)
+    q = ratio * (1.0 - e)
+    nodes = np.zeros((len(lags), m + 1, m + 2))  # columns: reached at node 0, commands at nodes 0 .. M
+    nodes[:, 0, 0] = 1.0
+    for i in range(m):
+        nodes[:, i + 1] = e[:, i, None] * nodes[:, i]
+        nodes[:, i + 1, i + 1] += q[:, i] - e[:, i]
+        nodes[:, i + 1, i + 2] += 1.0 - q[:, i]
+    mean = -ratio[:, :, None] * (nodes[:, 1:] - nodes[:, :-1])
+    steps = np.arange(m)
+    mean[:, steps, steps + 1] += 0.5
+    mean[:, steps, steps + 2] += 0.5
+    return Response(
+        which.reshape(-1), np.ascontiguousarray(mean[:, :, 2:]), mean[:, :, :2],
+        np.ascontiguousarray(nodes[:, 1:, 2:]), nodes[:, 1:, :2],
+    )

@@ -1,0 +1,224 @@
+"""The tick solver: a plan in milliseconds, from the last plan and its multipliers."""
+
+from __future__ import annotations
+
+from collections import OrderedDict
+from collections.abc import Callable
+
+import attrs
+import numpy as np
+
+from ...errors import SolveError
+from ..fleet import Fleet
+from ..plan import Plan
+from ..problem import Problem
+from ..solver import Start
+from . import active, vectors
+from .interior import Interior
+from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
+from .objective import constant_blocks
+from .point import Forces, Point, cost, evaluate, excess
+from .structure import Structure, structure
+
+ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step is worth its time
+
+_KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
+_ACTIVE_STEPS = 5
+_STEPS = 40
+_WANDERING = 6  # rows a robot that change in one step: the sets are lost
+_SAFETY = 3.0  # what is open in an interior-point iterate overstates the gap by about this
+_LONG = 0.9  # part of a step that must have been taken for the prediction to hold
+_KEPT_STRUCTURES = 32
+
+
+@attrs.frozen(eq=False)
+class _Found:
+    """The best so far."""
+
+    point: Point
+    forces: Forces
+    cost: float
+    gap: float
+    steps: int
+
+
+@attrs.frozen(eq=False)
+class Prepared:
+    """A problem linearised at the predicted state, waiting for the poses."""
+
+    problem: Problem
+    numbers: Numbers
+    structure: Structure
+    constant: np.ndarray
+    curvature: np.ndarray
+    speed: np.ndarray
+    forces: Forces | None
+    linearised: active.Linearised | None
+
+
+class TickSolver:
+    """Solves one tick's problem after another. Not thread-safe; one for each thread.
+
+    Nothing is built or compiled: edges, pairs, weights, limits and even the fleet may change from tick to tick.
+    """
+
+    def __init__(self) -> None:
+        self._fleet: tuple[Fleet, FleetNumbers] | None = None
+        self._structures: OrderedDict[tuple[int, bytes, bytes], Structure] = OrderedDict()
+        self._prepared: Prepared | None = None
+
+    def solve(
+        self, problem: Problem, start: Start, budget: float = float("inf"),
+        clock: Callable[[], float] = lambda: 0.0,
+    ) -> Plan:
+        """Prepare and feed back at once: the problem's initial state is the measured one.
+
+        Args:
+            start: primal vector (its commands count) and, when known, multipliers, as Plan holds them.
+            budget: seconds by ``clock`` after which the best plan so far is returned, marked as not solved.
+
+        Raises:
+            SolveError: no step could be made.
+        """
+        began = clock()
+        self.prepare(problem, start, linearise=False)
+        return self.feedback(problem.initial, budget - (clock() - began), clock, began)
+
+    def prepare(self, problem: Problem, start: Start, linearise: bool = True) -> None:
+        """Work out all that does not need the measured state, with the predicted one in the problem."""
+        size = vectors.sizes(problem)
+        known = numbers(problem, self._fleet_numbers(problem.fleet))
+        order = self._structure(problem)
+        curvature, speed = vectors.commands(size, start.vector)
+        forces = None if start.multipliers is None else vectors.forces(size, *start.multipliers)
+        constant = constant_blocks(known)
+        linearised = None
+        if linearise and forces is not None and _worth_trying(known, forces):
+            trial = active.begin(known, evaluate(known, curvature, speed), forces)
+            linearised = active.Linearised(known, order, constant, trial)
+        self._prepared = Prepared(problem, known, order, constant, curvature, speed, forces, linearised)
+
+    def feedback(
+        self, initial: np.ndarray, budget: float = float("inf"), clock: Callable[[], float] = lambda: 0.0,
+        began: float | None = None,
+    ) -> Plan:
+        """The plan from the measured state, shape (N, 7). See ``solve``.
+
+        Raises:
+            SolveError: no step could be made.
+        """
+        ready = self._prepared
+        if ready is None:
+            raise SolveError("feedback asked before prepare")
+        self._prepared = None
+        now = clock()
+        began = now if began is None else began
+        if initial is not ready.problem.initial:
+            problem = attrs.evolve(ready.problem, initial=initial)
+            ready = attrs.evolve(ready, problem=problem, numbers=started(ready.numbers, initial))
+        found = _search(ready, now + budget, clock)
+        return _plan(ready, found, clock() - began)
+
+    def _fleet_numbers(self, fleet: Fleet) -> FleetNumbers:
+        if self._fleet is None or self._fleet[0] is not fleet:
+            self._fleet = fleet, fleet_numbers(fleet)
+        return self._fleet[1]
+
+    def _structure(self, problem: Problem) -> Structure:
+        key = len(problem.fleet), problem.edges.tobytes(), problem.watch.pairs.tobytes()
+        if key not in self._structures:
+            self._structures[key] = structure(len(problem.fleet), problem.edges, problem.watch.pairs)
+            if len(self._structures) > _KEPT_STRUCTURES:
+                self._structures.popitem(last=False)
+        return self._structures[key]
+
+
+def _worth_trying(known: Numbers, forces: Forces) -> bool:
+    """Whether the last multipliers tell which rows are met: where ends could not be reached, fresh poses change all."""
+    dear = (np.abs(forces.ends) > 0.5 * known.end_price) & (known.end_price > 0)
+    return not dear.any() and not (forces.clearances > 0).any()
+
+
+def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Found:
+    point = evaluate(ready.numbers, ready.curvature, ready.speed)
+    forces = ready.forces
+    best: _Found | None = None
+    steps = 0
+    if forces is not None and (ready.linearised is not None or _worth_trying(ready.numbers, forces)):
+        best = _active_steps(ready, point, forces, deadline, clock)
+        steps = best.steps
+        if best.gap <= ENOUGH or clock() >= deadline:
+            return best
+        best = None
+    if forces is None:
+        n, m = point.r.turn.shape
+        forces = Forces(np.zeros((6, n, m)), np.zeros((n, 7)), np.zeros((len(ready.numbers.pairs), m)))
+    return _interior_steps(ready, point, forces, steps, deadline, clock)
+
+
+def _active_steps(
+    ready: Prepared, point: Point, forces: Forces, deadline: float, clock: Callable[[], float]
+) -> _Found:
+    """Steps with the sets of the last tick; gap inf when they wander."""
+    known = ready.numbers
+    trial = active.begin(known, point, forces)
+    linearised = ready.linearised
+    costs = [cost(known, point)]
+    for step in range(1, _ACTIVE_STEPS + 1):
+        if linearised is None:
+            linearised = active.Linearised(known, ready.structure, ready.constant, trial)
+        trial = linearised.step(known, trial)
+        linearised = None
+        costs.append(cost(known, trial.point))
+        if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(costs[-1]):
+            break
+        if trial.changed == 0 and excess(known, trial.point) < _KEPT_WITHIN:
+            last = abs(costs[-1] - costs[-2])
+            falling = last / max(abs(costs[-2] - costs[-3]), 1e-300) if step > 1 else 0.5
+            gap = last * min(falling, 0.5) / max(costs[-1], 1e-9)
+            if gap <= ENOUGH:
+                return _Found(trial.point, trial.forces, costs[-1], gap, step)
+        if clock() >= deadline:
+            break
+    return _Found(trial.point, trial.forces, costs[-1], np.inf, len(costs) - 1)
+
+
+def _interior_steps(
+    ready: Prepared, point: Point, forces: Forces, steps: int, deadline: float, clock: Callable[[], float]
+) -> _Found:
+    interior = Interior(ready.numbers, ready.structure, ready.constant)
+    x = interior.begin(point, forces)
+    best: _Found | None = None
+    before = np.inf
+    for step in range(steps + 1, steps + _STEPS + 1):
+        x = interior.step(x)
+        reached = cost(ready.numbers, x.point)
+        gap = interior.open(x) / (_SAFETY * max(reached, 1e-9))
+        if x.length < _LONG:
+            gap = max(gap, abs(before - reached) / max(reached, 1e-9))
+        before = reached
+        if not np.isfinite(reached):
+            break
+        if best is None or (reached < best.cost and excess(ready.numbers, x.point) < _KEPT_WITHIN):
+            best = _Found(x.point, interior.forces(x), reached, gap, step)
+        if gap <= ENOUGH or clock() >= deadline:
+            break
+    if best is None:
+        raise SolveError("no step led anywhere")
+    return attrs.evolve(best, gap=gap)
+
+
+def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
+    known, problem = ready.numbers, ready.problem
+    size = vectors.sizes(problem)
+    states = vectors.states_of(known, found.point)
+    short = np.maximum(-found.point.clearances, 0.0)
+    priced = known.end_price > 0
+    return Plan(
+        fleet=problem.fleet, times=problem.times, states=states,
+        rates=found.point.limits[2:4].transpose(1, 2, 0).copy(), cost=found.cost, short=short,
+        pairs=problem.watch.pairs, missed=np.abs(found.point.missed) * priced,
+        solved=bool(found.gap <= ENOUGH and excess(known, found.point) < _KEPT_WITHIN), solve_time=took,
+        iterations=found.steps, vector=vectors.primal(states, found.point, short, priced),
+        multipliers=vectors.multipliers(known, found.forces, size),
+    )
