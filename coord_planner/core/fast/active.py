@@ -1,8 +1,8 @@
 """Active-set steps: rows that are met are kept as equations, all at once (primal-dual active sets).
 
 Hintermuller, Ito & Kunisch, *The primal-dual active set strategy as a semismooth Newton method*, SIAM J. Optim. 13
-(2003), from memory. Where the same rows are met as a tick ago, two or three steps with one right side each do; where many
-change the sets may wander, and the interior-point steps take over.
+(2003), from memory. Where the same rows are met as a tick ago, two or three steps with one right side each do; where
+many change the sets may wander, and the interior-point steps take over.
 """
 
 from __future__ import annotations
@@ -11,11 +11,9 @@ import attrs
 import numpy as np
 
 from . import limits
-from .blocks import Matrix, matrix
-from .factor import Factor
+from .linearised import Linearised, Stiffness
 from .numbers import Numbers
-from .point import Forces, Point, cost_slopes, evaluate, row_slopes
-from .structure import Structure
+from .point import Forces, Point, evaluate, slopes
 
 _COMPLIANCE = 1e-6  # of rows that are met: they give way by this much per unit of push, and less after every step
 _PASSED = 1e-7  # a row passed by more is met from now on
@@ -58,37 +56,38 @@ def begin(numbers: Numbers, point: Point, forces: Forces) -> Trial:
     return Trial(point, forces, met, 0)
 
 
-class Linearised:
+class Held:
     """The matrix of an active-set step, factorised at one point; it serves points nearby as well."""
 
-    def __init__(self, numbers: Numbers, structure: Structure, constant: np.ndarray, trial: Trial) -> None:
+    def __init__(self, linearised: Linearised, trial: Trial) -> None:
         met, stiff = trial.met, 1.0 / _COMPLIANCE
-        self._matrix: Matrix = matrix(
-            numbers, structure, trial.point, constant, np.abs(met.limits) * stiff, met.ends * stiff,
-            met.clearances * stiff, trial.forces.clearances,
-        )
-        self._factor = Factor(self._matrix.diagonal, self._matrix.beside, structure.order)
-        self.met = met
+        self.linearised, self.met = linearised, met
+        self._factor = linearised.factor(trial.point, Stiffness(
+            np.abs(met.limits) * stiff, met.ends * stiff, met.clearances * stiff, trial.forces.clearances
+        ))
 
     def step(self, numbers: Numbers, trial: Trial) -> Trial:
         """Keep the met rows as equations, move, and look which rows are met then."""
         point, old, met = trial.point, trial.forces, self.met
         bound = np.where(met.limits > 0, numbers.upper, numbers.lower)
         held = met.limits != 0
-        forces = Forces(
-            np.where(held, old.limits + (point.limits - bound) / _COMPLIANCE, 0.0),
-            np.where(met.ends, old.ends + point.missed / _COMPLIANCE, old.ends),
-            np.where(met.clearances, old.clearances - point.clearances / _COMPLIANCE, old.clearances),
+        more = Forces(
+            np.where(held, (point.limits - bound) / _COMPLIANCE, -old.limits),
+            np.where(met.ends, point.missed / _COMPLIANCE, 0.0),
+            np.where(met.clearances, -point.clearances / _COMPLIANCE, 0.0),
         )
-        commands = self._factor.solve(-(cost_slopes(numbers, point) + row_slopes(numbers, point, forces)))
+        right = slopes(numbers, point, old) + self.linearised.pulled(point, more)
+        commands = self._factor.solve(-right)
         r, m = point.r, point.r.turn.shape[1]
         by_curvature, by_speed = commands[:, :m], commands[:, m:]
         moved = limits.moved(numbers, r.curvature, r.speed, by_curvature, by_speed)
-        clear_moved = self._matrix.clearances_moved(commands, old.clearances.shape)
+        clear_moved = self.linearised.clearances_moved(commands)
         found = Forces(
-            np.where(held, forces.limits + moved / _COMPLIANCE, 0.0),
-            np.where(met.ends, forces.ends + self._matrix.ends_moved(commands) / _COMPLIANCE, old.ends),
-            np.where(met.clearances, forces.clearances - clear_moved / _COMPLIANCE, old.clearances),
+            np.where(held, old.limits + more.limits + moved / _COMPLIANCE, 0.0),
+            np.where(met.ends, old.ends + more.ends + self.linearised.ends_moved(commands) / _COMPLIANCE, old.ends),
+            np.where(
+                met.clearances, old.clearances + more.clearances - clear_moved / _COMPLIANCE, old.clearances
+            ),
         )
         return _met_after(numbers, evaluate(numbers, r.curvature + by_curvature, r.speed + by_speed), found, met)
 

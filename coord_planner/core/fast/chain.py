@@ -49,7 +49,7 @@ def roll_out(numbers: Numbers, curvature: np.ndarray, speed: np.ndarray) -> Roll
     turn = distance * mean_curvature
     n, m = turn.shape
     theta, x, y = np.empty((3, n, m + 1))
-    theta[:, 0], x[:, 0], y[:, 0] = numbers.begins.initial[:, 2], numbers.begins.initial[:, 0], numbers.begins.initial[:, 1]
+    x[:, 0], y[:, 0], theta[:, 0] = numbers.begins.initial[:, :3].T
     np.cumsum(turn, axis=1, out=theta[:, 1:])
     theta[:, 1:] += theta[:, :1]
     half = 0.5 * turn
@@ -67,7 +67,9 @@ def roll_out(numbers: Numbers, curvature: np.ndarray, speed: np.ndarray) -> Roll
     )
 
 
-def arc_slopes(r: Rollout, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def arc_slopes(
+    r: Rollout, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
     """Slopes of sum(force . position + torque * heading) by each arc's distance and turn, each of shape (N, M).
 
     Args:
@@ -83,7 +85,9 @@ def arc_slopes(r: Rollout, force_x: np.ndarray, force_y: np.ndarray, torque: np.
     return along * r.chord, swing + 0.5 * r.distance * (along * r.chord_slope + across * r.chord)
 
 
-def command_slopes(numbers: Numbers, r: Rollout, by_distance: np.ndarray, by_turn: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def command_slopes(
+    numbers: Numbers, r: Rollout, by_distance: np.ndarray, by_turn: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
     """Slopes by mean curvature and mean speed of each interval from those by distance and turn, each (N, M)."""
     return by_turn * r.distance, numbers.h * (by_distance + by_turn * r.mean_curvature)
 
@@ -100,19 +104,24 @@ def end_slopes(r: Rollout) -> tuple[np.ndarray, np.ndarray]:
 
 
 def node_slopes(
-    r: Rollout, robots: np.ndarray, nodes: np.ndarray, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
+    r: Rollout, robots: np.ndarray, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Slopes of force . position + torque * heading, one robot and node (1 .. M) a row, by distance and turn; (W, M)."""
-    before = np.arange(r.turn.shape[1]) < nodes[:, None]
-    force_x, force_y = force_x[:, None], force_y[:, None]
-    cos, sin = r.cos[robots], r.sin[robots]
-    along, across = force_x * cos + force_y * sin, force_y * cos - force_x * sin
-    x, y = r.x[robots], r.y[robots]
-    rows = np.arange(len(robots))
-    swing = force_y * (x[rows, nodes][:, None] - x[:, 1:]) - force_x * (y[rows, nodes][:, None] - y[:, 1:])
-    chord = r.chord[robots]
-    by_turn = swing + torque[:, None] + 0.5 * r.distance[robots] * (along * r.chord_slope[robots] + across * chord)
-    return before * along * chord, before * by_turn
+    """Slopes of force . position + torque * heading at each node by each arc's distance and turn, each (K, M, M).
+
+    Args:
+        robots: shape (K,). force_x, force_y, torque: at nodes 1 .. M, shape (K, M).
+    """
+    m = r.turn.shape[1]
+    before = np.tril(np.ones((m, m)))
+    force_x, force_y = force_x[:, :, None], force_y[:, :, None]
+    chord, cos, sin = r.chord[robots], r.cos[robots], r.sin[robots]
+    half, stretch = 0.5 * r.distance[robots] * chord, 0.5 * r.distance[robots] * r.chord_slope[robots]
+    x, y = r.x[robots, 1:], r.y[robots, 1:]
+    by_distance = force_x * (chord * cos)[:, None] + force_y * (chord * sin)[:, None]
+    # Of the turn: how the chord swings and stretches, and the lever from the arc's end to the node.
+    by_turn = force_x * (stretch * cos - half * sin + y)[:, None] + force_y * (stretch * sin + half * cos - x)[:, None]
+    by_turn += (torque + force_y[:, :, 0] * x - force_x[:, :, 0] * y)[:, :, None]
+    return by_distance * before, by_turn * before
 
 
 def _from_the_end(values: np.ndarray) -> np.ndarray:

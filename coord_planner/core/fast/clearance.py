@@ -9,109 +9,111 @@ from .. import ocp
 from .chain import Rollout, node_slopes
 from .numbers import Numbers
 
+_SQUARE = ocp._ROUNDING**2
+
 
 @attrs.frozen(eq=False)
 class Sight:
-    """What all clearance rows at one rollout share: directions of the robots at nodes 1 .. M, each (N, M)."""
+    """The two robots of each pair, seen along and across the pair's line at nodes 1 .. M; each of shape (2, P, M).
 
-    cos: np.ndarray
-    sin: np.ndarray
+    Attributes:
+        along, across: cosines of the robots' headings to the line and to its left normal.
+        long, wide: the same without sign, rounded off: what the half length and the half width show on the line.
+    """
+
+    along: np.ndarray
+    across: np.ndarray
+    long: np.ndarray
+    wide: np.ndarray
 
 
 @attrs.frozen(eq=False)
 class Rows:
-    """Chosen clearance rows, W of them.
+    """All clearance rows of Q chosen pairs.
 
     Attributes:
-        pairs: which pair, shape (W,). nodes: which node, 1 .. M, shape (W,).
-        robots: the two robots, shape (2, W).
-        force_x, force_y, torque: derivatives by position and heading of the two, each of shape (2, W).
+        pairs: which pairs, shape (Q,), increasing. robots: the two robots of each, shape (2, Q).
+        by_commands: derivatives at nodes 1 .. M by the commands of the first (curvatures, then speeds) and of the
+            second, shape (Q, M, 4M).
     """
 
     pairs: np.ndarray
-    nodes: np.ndarray
     robots: np.ndarray
-    force_x: np.ndarray
-    force_y: np.ndarray
-    torque: np.ndarray
+    by_commands: np.ndarray
 
 
-def look(r: Rollout) -> Sight:
+def look(numbers: Numbers, r: Rollout) -> Sight:
     """Directions at a rollout."""
-    return Sight(np.cos(r.theta[:, 1:]), np.sin(r.theta[:, 1:]))
+    heading = r.theta[:, 1:]
+    cos, sin = np.cos(heading)[numbers.pairs.T], np.sin(heading)[numbers.pairs.T]
+    normal_x, normal_y = numbers.normals[..., 0], numbers.normals[..., 1]
+    along, across = normal_x * cos + normal_y * sin, normal_y * cos - normal_x * sin
+    return Sight(along, across, np.sqrt(along * along + _SQUARE), np.sqrt(across * across + _SQUARE))
 
 
 def clearances(numbers: Numbers, r: Rollout, sight: Sight) -> np.ndarray:
     """Gap between the shadows on the line, less the gap to keep, shape (P, M), metres; negative where short."""
-    normal_x, normal_y = numbers.normals[..., 0], numbers.normals[..., 1]
-    shape = numbers.fleet
-    ahead, left = shape.offset_x[:, None], shape.offset_y[:, None]
-    centre_x = r.x[:, 1:] + sight.cos * ahead - sight.sin * left
-    centre_y = r.y[:, 1:] + sight.sin * ahead + sight.cos * left
-    first, second = numbers.pairs[:, 0], numbers.pairs[:, 1]
-    between = normal_x * (centre_x[second] - centre_x[first]) + normal_y * (centre_y[second] - centre_y[first])
-    for robot in (first, second):
-        cos, sin = sight.cos[robot], sight.sin[robot]
-        along, across = normal_x * cos + normal_y * sin, normal_y * cos - normal_x * sin
-        between -= shape.half_length[robot, None] * _rounded(along) + shape.half_width[robot, None] * _rounded(across)
-    return between - numbers.gaps
-
-
-def rows_of(numbers: Numbers, sight: Sight, pairs: np.ndarray, nodes: np.ndarray) -> Rows:
-    """Derivatives of chosen rows by the poses of their two robots. pairs, nodes (1 .. M): shape (W,)."""
-    normal_x, normal_y = numbers.normals[pairs, nodes - 1].T
-    robots = numbers.pairs[pairs].T
-    side = np.array([[-1.0], [1.0]])
-    cos, sin = sight.cos[robots, nodes - 1], sight.sin[robots, nodes - 1]
-    along, across = normal_x * cos + normal_y * sin, normal_y * cos - normal_x * sin
-    shape = numbers.fleet
-    # The shadow's slope: along turns into across, across into -along.
-    growing = along * across * (shape.half_length[robots] / _rounded(along) - shape.half_width[robots] / _rounded(across))
-    swinging = shape.offset_x[robots] * across - shape.offset_y[robots] * along
-    return Rows(pairs, nodes, robots, side * normal_x, side * normal_y, side * swinging - growing)
-
-
-def command_rows(numbers: Numbers, r: Rollout, rows: Rows) -> np.ndarray:
-    """Derivatives of chosen rows by the commands of their two robots (curvatures, then speeds), shape (2, W, 2M)."""
-    m = r.turn.shape[1]
-    found = np.empty((2, len(rows.pairs), 2 * m))
-    for i in range(2):
-        robots = rows.robots[i]
-        by_distance, by_turn = node_slopes(r, robots, rows.nodes, rows.force_x[i], rows.force_y[i], rows.torque[i])
-        by_curvature = by_turn * r.distance[robots]
-        by_speed = numbers.h * (by_distance + by_turn * r.mean_curvature[robots])
-        found[i, :, :m] = numbers.curvature.backward(numbers.curvature.mean, by_curvature, robots)
-        found[i, :, m:] = numbers.speed.backward(numbers.speed.mean, by_speed, robots)
-    return found
-
-
-def bend(
-    numbers: Numbers, sight: Sight, pairs: np.ndarray, nodes: np.ndarray, weights: np.ndarray, found: np.ndarray
-) -> None:
-    """Add weights * second derivatives of the shadows by the headings to ``found``, shape (N, M), in place.
-
-    From sqrt(s^2 + r^2) with s'' = -s: r^2 s'^2 / (s^2 + r^2)^(3/2) - s^2 / sqrt(s^2 + r^2).
-    """
-    normal_x, normal_y = numbers.normals[pairs, nodes - 1].T
-    robots = numbers.pairs[pairs].T
-    cos, sin = sight.cos[robots, nodes - 1], sight.sin[robots, nodes - 1]
-    along, across = normal_x * cos + normal_y * sin, normal_y * cos - normal_x * sin
-    shape, square = numbers.fleet, ocp._ROUNDING**2
-    total = np.zeros_like(along)
-    for half, one, other in ((shape.half_length, along, across), (shape.half_width, across, along)):
-        rounded = _rounded(one)
-        total += half[robots] * (square * other**2 / rounded**3 - one**2 / rounded)
-    np.add.at(found, (robots, np.broadcast_to(nodes - 1, robots.shape)), total * weights)
+    first, second = numbers.pairs.T
+    between = numbers.normals[..., 0] * (r.x[second, 1:] - r.x[first, 1:])
+    between += numbers.normals[..., 1] * (r.y[second, 1:] - r.y[first, 1:])
+    shadows = numbers.half_length * sight.long + numbers.half_width * sight.wide
+    if numbers.offset_x.any() or numbers.offset_y.any():
+        centres = numbers.offset_x * sight.along + numbers.offset_y * sight.across
+        between += centres[1] - centres[0]
+    return between - shadows[0] - shadows[1] - numbers.gaps
 
 
 def push(
-    rows: Rows, weights: np.ndarray, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
+    numbers: Numbers, sight: Sight, weights: np.ndarray, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
 ) -> None:
-    """Add weights * derivatives of the rows to forces on the poses at nodes 1 .. M, each (N, M), in place."""
-    place = (rows.robots, np.broadcast_to(rows.nodes - 1, rows.robots.shape))
-    for forces, part in ((force_x, rows.force_x), (force_y, rows.force_y), (torque, rows.torque)):
-        np.add.at(forces, place, part * weights)
+    """Add weights (P, M) * derivatives of the clearances by the poses to forces at nodes 1 .. M, (N, M), in place."""
+    pulled = np.concatenate([weights * numbers.normals[..., 0], weights * numbers.normals[..., 1]], axis=1)
+    moved = numbers.toward @ pulled
+    m = weights.shape[1]
+    force_x += moved[:, :m]
+    force_y += moved[:, m:]
+    twists = weights * _twists(numbers, sight)
+    torque += numbers.beside[0] @ twists[0] + numbers.beside[1] @ twists[1]
 
 
-def _rounded(value: np.ndarray) -> np.ndarray:
-    return np.sqrt(value * value + ocp._ROUNDING**2)
+def bend(numbers: Numbers, sight: Sight, weights: np.ndarray) -> np.ndarray:
+    """Weights (P, M) * second derivatives of the shadows by the headings, summed over each robot's pairs, (N, M).
+
+    From sqrt(s^2 + r^2) with s'' = -s: r^2 s'^2 / (s^2 + r^2)^(3/2) - s^2 / sqrt(s^2 + r^2).
+    """
+    along, across = sight.along**2, sight.across**2
+    bent = weights * (
+        numbers.half_length * (_SQUARE * across / sight.long**2 - along) / sight.long
+        + numbers.half_width * (_SQUARE * along / sight.wide**2 - across) / sight.wide
+    )
+    found: np.ndarray = numbers.beside[0] @ bent[0] + numbers.beside[1] @ bent[1]
+    return found
+
+
+def rows_of(numbers: Numbers, r: Rollout, sight: Sight, pairs: np.ndarray) -> Rows:
+    """Derivatives of the clearances of chosen pairs, shape (Q,), at all nodes, by the commands of their two robots."""
+    robots = numbers.pairs[pairs].T
+    each = robots.ravel()
+    normal = np.concatenate([-numbers.normals[pairs], numbers.normals[pairs]])
+    twists = np.concatenate(list(_twists(numbers, sight)[:, pairs]))
+    by_distance, by_turn = node_slopes(r, each, normal[:, :, 0], normal[:, :, 1], twists)
+    by_curvature = by_turn * r.distance[each, None]
+    by_speed = numbers.h * (by_distance + by_turn * r.mean_curvature[each, None])
+    found = np.concatenate([
+        numbers.curvature.backward(numbers.curvature.mean, by_curvature, each),
+        numbers.speed.backward(numbers.speed.mean, by_speed, each),
+    ], axis=2)
+    return Rows(pairs, robots, np.concatenate([found[: len(pairs)], found[len(pairs) :]], axis=2))
+
+
+def _twists(numbers: Numbers, sight: Sight) -> np.ndarray:
+    """Derivatives of the clearances by the headings of the two robots, shape (2, P, M).
+
+    Turning left takes along to across, and across to -along.
+    """
+    growing = sight.along * sight.across * (numbers.half_length / sight.long - numbers.half_width / sight.wide)
+    if not (numbers.offset_x.any() or numbers.offset_y.any()):
+        return -growing
+    swinging = numbers.offset_x * sight.across - numbers.offset_y * sight.along
+    swinging[0] *= -1.0
+    return swinging - growing

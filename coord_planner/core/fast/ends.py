@@ -36,13 +36,17 @@ def end_rows(numbers: Numbers, r: Rollout) -> np.ndarray:
     return rows
 
 
-def pulled_commands(numbers: Numbers, forces: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Slopes of the last four states' sum(forces * state) by the commands, each (N, M). forces: (N, 7)."""
-    by_curvature = forces[:, CURVATURE, None] * numbers.curvature.reached[numbers.curvature.which, -1]
-    by_speed = forces[:, SPEED, None] * numbers.speed.reached[numbers.speed.which, -1]
-    by_curvature[:, -1] += forces[:, CURVATURE_COMMAND]
-    by_speed[:, -1] += forces[:, SPEED_COMMAND]
-    return by_curvature, by_speed
+def pull_commands(numbers: Numbers, forces: np.ndarray, found: np.ndarray) -> None:
+    """Add the slopes of the last four states' sum(forces * state) to those by the commands, (N, 2M), in place.
+
+    Args:
+        forces: shape (N, 7).
+    """
+    m = len(numbers.h)
+    found[:, :m] += forces[:, CURVATURE, None] * numbers.curvature.reached[numbers.curvature.which, -1]
+    found[:, m:] += forces[:, SPEED, None] * numbers.speed.reached[numbers.speed.which, -1]
+    found[:, m - 1] += forces[:, CURVATURE_COMMAND]
+    found[:, -1] += forces[:, SPEED_COMMAND]
 
 
 def _reached_last(answer: Response, commands: np.ndarray) -> np.ndarray:

@@ -31,15 +31,13 @@ def moved(
     return found
 
 
-def pulled(
-    numbers: Numbers, curvature: np.ndarray, speed: np.ndarray, forces: np.ndarray
-) -> tuple[np.ndarray, np.ndarray]:
-    """Slopes of sum(forces * rows) by the commands, each (N, M). forces: shape (6, N, M)."""
+def pulled(numbers: Numbers, curvature: np.ndarray, speed: np.ndarray, forces: np.ndarray) -> np.ndarray:
+    """Slopes of sum(forces * rows) by the commands, shape (N, 2M). forces: shape (6, N, M)."""
     twisting = forces[4] + speed * forces[5]
-    return (
+    return np.concatenate([
         forces[0] + speed * twisting + changes_back(forces[2] / numbers.h),
         forces[1] + curvature * (twisting + speed * forces[5]) + changes_back(forces[3] / numbers.h),
-    )
+    ], axis=1)
 
 
 def stiffen(

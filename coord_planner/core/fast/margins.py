@@ -18,7 +18,7 @@ from .point import Forces, Point
 UPPER, LOWER, OVER, UNDER, ROOM, SHORT = range(6)
 
 _NO_ROOM = 1e-9  # limits nearer to each other than this are kept as an equation
-_LEAST = 2e-2  # margin of a row that has none when a solve begins
+_LEAST = 5e-2  # margin of a row that has none when a solve begins
 _KEPT = 0.5  # part of the last push on an end with which a solve begins: poses are new, ends are pulled elsewhere
 _WITHIN = 0.99  # part of a price that a push may have when a solve begins
 
@@ -101,6 +101,40 @@ def opened(
     off = known.on == 0.0
     margins[off] = pushes[off] = 1.0
     return margins, pushes
+
+
+def widen(known: Layout, point: Point, margins: np.ndarray) -> None:
+    """Widen the margins of ends, in place, to what the ends are where a step along curved paths has led.
+
+    The difference of an end's two margins is known; the one that is too small grows, none becomes narrower.
+    """
+    margin = known.split(margins)
+    lacking = (point.missed - (margin[OVER] - margin[UNDER])) * known.priced
+    margin[OVER] += np.maximum(lacking, 0.0)
+    margin[UNDER] -= np.minimum(lacking, 0.0)
+
+
+def largest_of_each(numbers: Numbers, known: Layout, values: np.ndarray) -> np.ndarray:
+    """The largest entry of each robot, those of its pairs included, shape (N,)."""
+    part = known.split(values)
+    found: np.ndarray = np.maximum(
+        np.maximum(part[UPPER], part[LOWER]).max(axis=(0, 2)), np.maximum(part[OVER], part[UNDER]).max(axis=1)
+    )
+    if len(numbers.pairs):
+        of_pairs = np.maximum(part[ROOM], part[SHORT]).max(axis=1)
+        for robots in numbers.pairs.T:
+            np.maximum.at(found, robots, of_pairs)
+    return found
+
+
+def spread(numbers: Numbers, known: Layout, values: np.ndarray) -> np.ndarray:
+    """A value of each robot, shape (N,), at all its entries; pairs get the smaller of their robots' two; shape (L,)."""
+    found = np.empty(known.on.shape)
+    part = known.split(found)
+    part[UPPER][:] = part[LOWER][:] = values[:, None]
+    part[OVER][:] = part[UNDER][:] = values[:, None]
+    part[ROOM][:] = part[SHORT][:] = np.min(values[numbers.pairs], axis=1)[:, None]
+    return found
 
 
 def forces_of(known: Layout, pushes: np.ndarray, fixed: np.ndarray) -> Forces:

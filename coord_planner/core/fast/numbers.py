@@ -68,7 +68,10 @@ class Numbers:
         turn_speed: shape (N, M). full_speed: shape (N, 1). lower, upper: of LIMITS, shape (6, N, M).
         gain: I + coupling * weighted Laplacian, shape (N, N). edges: (E, 2). alignment: price of each edge, (E,).
         target: shape (N, 7), 0 where free. end_price: shape (N, 7), 0 where free.
-        short_price: of a metre of missing clearance at each node, shape (M,).
+        pairs: (P, 2). normals, gaps: as in Watch. short_price: of a metre of missing clearance at each node, (M,).
+        half_length, half_width, offset_x, offset_y: footprints of the two robots of each pair, shape (2, P, 1).
+        beside: 1 where a robot is the first, or the second, of a pair, shape (2, N, P). toward: the second less the
+            first, shape (N, P).
     """
 
     fleet: FleetNumbers
@@ -94,6 +97,12 @@ class Numbers:
     normals: np.ndarray
     gaps: np.ndarray
     short_price: np.ndarray
+    half_length: np.ndarray
+    half_width: np.ndarray
+    offset_x: np.ndarray
+    offset_y: np.ndarray
+    beside: np.ndarray
+    toward: np.ndarray
 
 
 def numbers(problem: Problem, fleet: FleetNumbers) -> Numbers:
@@ -112,6 +121,7 @@ def numbers(problem: Problem, fleet: FleetNumbers) -> Numbers:
         price_curvature_rate=prices.curvature_rate, price_acceleration=prices.acceleration, price_speed=prices.speed,
         target=np.where(free, 0.0, problem.target), end_price=np.where(free, 0.0, prices.end),
         pairs=watch.pairs, normals=watch.normals, gaps=watch.gaps, short_price=prices.clearance * h,
+        **_sides(fleet, watch.pairs),
     )
 
 
@@ -127,6 +137,17 @@ def _beginning(curvature: Response, speed: Response, initial: np.ndarray) -> Beg
         curvature.forward(curvature.mean_start, bent), speed.forward(speed.mean_start, driven),
         curvature.forward(curvature.reached_start, bent), speed.forward(speed.reached_start, driven),
     )
+
+
+def _sides(fleet: FleetNumbers, pairs: np.ndarray) -> dict[str, np.ndarray]:
+    """What the two robots of each pair are."""
+    two = pairs.T
+    beside = (two[:, None, :] == np.arange(len(fleet.half_length))[:, None]).astype(float)
+    return {
+        "half_length": fleet.half_length[two][..., None], "half_width": fleet.half_width[two][..., None],
+        "offset_x": fleet.offset_x[two][..., None], "offset_y": fleet.offset_y[two][..., None],
+        "beside": beside, "toward": beside[1] - beside[0],
+    }
 
 
 def _gain(problem: Problem) -> np.ndarray:

@@ -37,15 +37,13 @@ def mean_slopes(numbers: Numbers, r: Rollout) -> tuple[np.ndarray, np.ndarray]:
     return pull * r.mean_speed, pull * r.mean_curvature + leaving
 
 
-def rate_slopes(numbers: Numbers, r: Rollout) -> tuple[np.ndarray, np.ndarray]:
-    """Slopes of the prices on steering and speeding up by the commands, each (N, M)."""
-    per = numbers.cost_h / numbers.h
+def add_rate_slopes(numbers: Numbers, r: Rollout, found: np.ndarray) -> None:
+    """Add the slopes of the prices on steering and speeding up to those by the commands, shape (N, 2M), in place."""
+    per, m = numbers.cost_h / numbers.h, len(numbers.h)
     steering = rates(numbers, r.curvature, CURVATURE_COMMAND)
     speeding = rates(numbers, r.speed, SPEED_COMMAND)
-    return (
-        changes_back(numbers.price_curvature_rate * per * steering),
-        changes_back(numbers.price_acceleration * per * speeding),
-    )
+    found[:, :m] += changes_back(numbers.price_curvature_rate * per * steering)
+    found[:, m:] += changes_back(numbers.price_acceleration * per * speeding)
 
 
 def aligning_torque(numbers: Numbers, r: Rollout) -> np.ndarray:
@@ -56,6 +54,15 @@ def aligning_torque(numbers: Numbers, r: Rollout) -> np.ndarray:
         np.add.at(torque, numbers.edges[:, 0], pull)
         np.subtract.at(torque, numbers.edges[:, 1], pull)
     return torque
+
+
+def aligning_weights(numbers: Numbers, r: Rollout) -> np.ndarray:
+    """Second derivatives of the alignment by the heading differences of the edges at nodes 1 .. M, shape (E, M).
+
+    Gauss-Newton: 2 sin^2(d/2) is half the square of 2 sin(d/2), whose slope squared is cos^2(d/2).
+    """
+    half = 0.5 * _heading_differences(numbers, r)
+    return numbers.alignment[:, None] * np.cos(half) ** 2 * numbers.cost_h
 
 
 def constant_blocks(numbers: Numbers) -> np.ndarray:

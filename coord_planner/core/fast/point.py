@@ -39,7 +39,7 @@ class Point:
 def evaluate(numbers: Numbers, curvature: np.ndarray, speed: np.ndarray) -> Point:
     """All rows at commands of nodes 1 .. M, each of shape (N, M)."""
     r = roll_out(numbers, curvature, speed)
-    sight = clearance.look(r) if len(numbers.pairs) else None
+    sight = clearance.look(numbers, r) if len(numbers.pairs) else None
     clear = np.zeros((0, curvature.shape[1])) if sight is None else clearance.clearances(numbers, r, sight)
     return Point(r, sight, limits.values(numbers, curvature, speed), ends.missed(numbers, r), clear)
 
@@ -57,35 +57,25 @@ def excess(numbers: Numbers, point: Point) -> float:
     return max(0.0, float(over.max()), float(under.max()))
 
 
-def cost_slopes(numbers: Numbers, point: Point) -> np.ndarray:
-    """Slopes of the smooth cost by the commands (curvatures, then speeds), shape (N, 2M)."""
-    r = point.r
-    by_curvature, by_speed = objective.mean_slopes(numbers, r)
-    if numbers.alignment.any():
-        still = np.zeros_like(r.turn)
-        torque = objective.aligning_torque(numbers, r)
-        more = command_slopes(numbers, r, *arc_slopes(r, still, still, torque))
-        by_curvature, by_speed = by_curvature + more[0], by_speed + more[1]
-    steering, speeding = objective.rate_slopes(numbers, r)
-    return np.concatenate([
-        numbers.curvature.backward(numbers.curvature.mean, by_curvature) + steering,
-        numbers.speed.backward(numbers.speed.mean, by_speed) + speeding,
-    ], axis=1)
+def slopes(numbers: Numbers, point: Point, forces: Forces) -> np.ndarray:
+    """Slopes of the smooth cost and of sum(forces * rows), by the commands (curvatures, then speeds), shape (N, 2M).
 
-
-def row_slopes(numbers: Numbers, point: Point, forces: Forces) -> np.ndarray:
-    """Slopes of sum(forces * rows) by the commands, shape (N, 2M); clearances count negative."""
+    Clearances count negative: they push apart.
+    """
     r = point.r
-    force_x, force_y, torque = np.zeros((3,) + r.turn.shape)
-    force_x[:, -1], force_y[:, -1], torque[:, -1] = forces.ends[:, 0], forces.ends[:, 1], forces.ends[:, 2]
-    pairs, nodes = np.nonzero(forces.clearances)
-    if len(pairs) and point.sight is not None:
-        rows = clearance.rows_of(numbers, point.sight, pairs, nodes + 1)
-        clearance.push(rows, -forces.clearances[pairs, nodes], force_x, force_y, torque)
+    torque = objective.aligning_torque(numbers, r)
+    force_x, force_y = np.zeros((2,) + r.turn.shape)
+    force_x[:, -1] += forces.ends[:, 0]
+    force_y[:, -1] += forces.ends[:, 1]
+    torque[:, -1] += forces.ends[:, 2]
+    if point.sight is not None:
+        clearance.push(numbers, point.sight, -forces.clearances, force_x, force_y, torque)
     by_curvature, by_speed = command_slopes(numbers, r, *arc_slopes(r, force_x, force_y, torque))
-    ended = ends.pulled_commands(numbers, forces.ends)
-    limited = limits.pulled(numbers, r.curvature, r.speed, forces.limits)
-    return np.concatenate([
-        numbers.curvature.backward(numbers.curvature.mean, by_curvature) + ended[0] + limited[0],
-        numbers.speed.backward(numbers.speed.mean, by_speed) + ended[1] + limited[1],
-    ], axis=1)
+    turning, leaving = objective.mean_slopes(numbers, r)
+    found = limits.pulled(numbers, r.curvature, r.speed, forces.limits)
+    m = len(numbers.h)
+    objective.add_rate_slopes(numbers, r, found)
+    ends.pull_commands(numbers, forces.ends, found)
+    found[:, :m] += numbers.curvature.backward(numbers.curvature.mean, by_curvature + turning)
+    found[:, m:] += numbers.speed.backward(numbers.speed.mean, by_speed + leaving)
+    return found

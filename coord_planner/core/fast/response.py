@@ -33,14 +33,22 @@ class Response:
         return np.matmul(matrix[self.which], values[:, :, None])[:, :, 0]
 
     def backward(self, matrix: np.ndarray, values: np.ndarray, robots: np.ndarray | None = None) -> np.ndarray:
-        """matrix' @ values for each robot (or for the robot of each row); matrix (U, A, B), values (N, A) -> (N, B)."""
-        if len(matrix) == 1:
-            if len(values) <= _AT_ONCE:
-                return values @ matrix[0]
+        """matrix' @ values for each robot, or for those named.
+
+        Args:
+            matrix: shape (U, A, B). values: shape (N, ..., A). robots: shape (N,); all in turn when left out.
+
+        Returns:
+            shape (N, ..., B).
+        """
+        if len(matrix) > 1:
+            which = self.which if robots is None else self.which[robots]
+            wide = values.reshape(len(values), -1, values.shape[-1])
+            return np.matmul(wide, matrix[which]).reshape(values.shape[:-1] + matrix.shape[2:])
+        if values.ndim == 2 and len(values) > _AT_ONCE:
             parts = range(0, len(values), _AT_ONCE)
             return np.concatenate([values[i : i + _AT_ONCE] @ matrix[0] for i in parts])
-        which = self.which if robots is None else self.which[robots]
-        return np.matmul(values[:, None, :], matrix[which])[:, 0]
+        return values @ matrix[0]
 
 
 def response(intervals: np.ndarray, lag: np.ndarray) -> Response:
@@ -57,17 +65,22 @@ def response(intervals: np.ndarray, lag: np.ndarray) -> Response:
     ratio = np.where(late, lags[:, None] / intervals, 0.0)
     e = np.where(late, np.exp(-1.0 / np.maximum(ratio, 1e-9)), 0.0)
     q = ratio * (1.0 - e)
-    nodes = np.zeros((len(lags), m + 1, m + 2))  # columns: reached at node 0, commands at nodes 0 .. M
-    nodes[:, 0, 0] = 1.0
-    for i in range(m):
-        nodes[:, i + 1] = e[:, i, None] * nodes[:, i]
-        nodes[:, i + 1, i + 1] += q[:, i] - e[:, i]
-        nodes[:, i + 1, i + 2] += 1.0 - q[:, i]
-    mean = -ratio[:, :, None] * (nodes[:, 1:] - nodes[:, :-1])
     steps = np.arange(m)
+    pulls = np.zeros((len(lags), m, m + 2))  # columns: reached at node 0, commands at nodes 0 .. M
+    pulls[:, steps, steps + 1] = q - e
+    pulls[:, steps, steps + 2] = 1.0 - q
+    pulls[:, 0, 0] = e[:, 0]
+    ends = np.cumsum(intervals)
+    elapsed = ends[:, None] - ends[None, :]
+    fading = np.exp(-np.maximum(elapsed, 0.0) / np.maximum(lags, 1e-9)[:, None, None]) * (elapsed >= 0.0)
+    reached = np.matmul(fading, pulls)
+    before = np.zeros_like(reached)
+    before[:, 0, 0] = 1.0
+    before[:, 1:] = reached[:, :-1]
+    mean = -ratio[:, :, None] * (reached - before)
     mean[:, steps, steps + 1] += 0.5
     mean[:, steps, steps + 2] += 0.5
     return Response(
         which.reshape(-1), np.ascontiguousarray(mean[:, :, 2:]), mean[:, :, :2],
-        np.ascontiguousarray(nodes[:, 1:, 2:]), nodes[:, 1:, :2],
+        np.ascontiguousarray(reached[:, :, 2:]), reached[:, :, :2],
     )

@@ -15,6 +15,7 @@ from ..problem import Problem
 from ..solver import Start
 from . import active, vectors
 from .interior import Interior
+from .linearised import Linearised
 from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
 from .objective import constant_blocks
 from .point import Forces, Point, cost, evaluate, excess
@@ -24,20 +25,22 @@ ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step
 
 _KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
 _ACTIVE_STEPS = 5
-_STEPS = 40
+_STEPS = 25
 _WANDERING = 6  # rows a robot that change in one step: the sets are lost
-_SAFETY = 3.0  # what is open in an interior-point iterate overstates the gap by about this
-_LONG = 0.9  # part of a step that must have been taken for the prediction to hold
+_OVERSTATED = 3.0  # what is open in an interior-point iterate overstates the gap by about this
+_LEFT_OF_LAST = 0.5  # part of what the last interior-point step saved that another may still save
+_NEARBY = 0.02  # change of a heading (rad), or of a speed (part of the full one), over which a matrix is used again
 _KEPT_STRUCTURES = 32
 
 
 @attrs.frozen(eq=False)
 class _Found:
-    """The best so far."""
+    """The best so far: cost, by how much limits are passed (at least what is tolerated), predicted gap."""
 
     point: Point
     forces: Forces
     cost: float
+    passed: float
     gap: float
     steps: int
 
@@ -53,7 +56,7 @@ class Prepared:
     curvature: np.ndarray
     speed: np.ndarray
     forces: Forces | None
-    linearised: active.Linearised | None
+    held: active.Held | None
 
 
 class TickSolver:
@@ -92,11 +95,11 @@ class TickSolver:
         curvature, speed = vectors.commands(size, start.vector)
         forces = None if start.multipliers is None else vectors.forces(size, *start.multipliers)
         constant = constant_blocks(known)
-        linearised = None
+        held = None
         if linearise and forces is not None and _worth_trying(known, forces):
             trial = active.begin(known, evaluate(known, curvature, speed), forces)
-            linearised = active.Linearised(known, order, constant, trial)
-        self._prepared = Prepared(problem, known, order, constant, curvature, speed, forces, linearised)
+            held = active.Held(Linearised(known, order, constant, trial.point), trial)
+        self._prepared = Prepared(problem, known, order, constant, curvature, speed, forces, held)
 
     def feedback(
         self, initial: np.ndarray, budget: float = float("inf"), clock: Callable[[], float] = lambda: 0.0,
@@ -144,7 +147,7 @@ def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Fo
     forces = ready.forces
     best: _Found | None = None
     steps = 0
-    if forces is not None and (ready.linearised is not None or _worth_trying(ready.numbers, forces)):
+    if forces is not None and (ready.held is not None or _worth_trying(ready.numbers, forces)):
         best = _active_steps(ready, point, forces, deadline, clock)
         steps = best.steps
         if best.gap <= ENOUGH or clock() >= deadline:
@@ -162,13 +165,11 @@ def _active_steps(
     """Steps with the sets of the last tick; gap inf when they wander."""
     known = ready.numbers
     trial = active.begin(known, point, forces)
-    linearised = ready.linearised
+    held = ready.held
     costs = [cost(known, point)]
     for step in range(1, _ACTIVE_STEPS + 1):
-        if linearised is None:
-            linearised = active.Linearised(known, ready.structure, ready.constant, trial)
-        trial = linearised.step(known, trial)
-        linearised = None
+        held = _held(ready, held, trial)
+        trial = held.step(known, trial)
         costs.append(cost(known, trial.point))
         if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(costs[-1]):
             break
@@ -177,10 +178,18 @@ def _active_steps(
             falling = last / max(abs(costs[-2] - costs[-3]), 1e-300) if step > 1 else 0.5
             gap = last * min(falling, 0.5) / max(costs[-1], 1e-9)
             if gap <= ENOUGH:
-                return _Found(trial.point, trial.forces, costs[-1], gap, step)
+                return _Found(trial.point, trial.forces, costs[-1], _KEPT_WITHIN, gap, step)
         if clock() >= deadline:
             break
-    return _Found(trial.point, trial.forces, costs[-1], np.inf, len(costs) - 1)
+    return _Found(trial.point, trial.forces, costs[-1], np.inf, np.inf, len(costs) - 1)
+
+
+def _held(ready: Prepared, held: active.Held | None, trial: active.Trial) -> active.Held:
+    """The last matrix as long as the same rows are met nearby; else another, with the last derivatives if they do."""
+    near = held is not None and held.linearised.serves(trial.point, _NEARBY)
+    if held is not None and near:
+        return active.Held(held.linearised, trial) if trial.changed else held
+    return active.Held(Linearised(ready.numbers, ready.structure, ready.constant, trial.point), trial)
 
 
 def _interior_steps(
@@ -193,15 +202,14 @@ def _interior_steps(
     for step in range(steps + 1, steps + _STEPS + 1):
         x = interior.step(x)
         reached = cost(ready.numbers, x.point)
-        gap = interior.open(x) / (_SAFETY * max(reached, 1e-9))
-        if x.length < _LONG:
-            gap = max(gap, abs(before - reached) / max(reached, 1e-9))
+        gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, 1e-9)
         before = reached
         if not np.isfinite(reached):
             break
-        if best is None or (reached < best.cost and excess(ready.numbers, x.point) < _KEPT_WITHIN):
-            best = _Found(x.point, interior.forces(x), reached, gap, step)
-        if gap <= ENOUGH or clock() >= deadline:
+        passed = max(excess(ready.numbers, x.point), _KEPT_WITHIN)
+        if best is None or (passed, reached) < (best.passed, best.cost):
+            best = _Found(x.point, interior.forces(x), reached, passed, gap, step)
+        if (gap <= ENOUGH and passed <= _KEPT_WITHIN) or clock() >= deadline:
             break
     if best is None:
         raise SolveError("no step led anywhere")
@@ -218,7 +226,7 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
         fleet=problem.fleet, times=problem.times, states=states,
         rates=found.point.limits[2:4].transpose(1, 2, 0).copy(), cost=found.cost, short=short,
         pairs=problem.watch.pairs, missed=np.abs(found.point.missed) * priced,
-        solved=bool(found.gap <= ENOUGH and excess(known, found.point) < _KEPT_WITHIN), solve_time=took,
+        solved=found.gap <= ENOUGH and found.passed <= _KEPT_WITHIN, solve_time=took,
         iterations=found.steps, vector=vectors.primal(states, found.point, short, priced),
         multipliers=vectors.multipliers(known, found.forces, size),
     )
