@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import typer
 
+from .commands.advise import advise
 from .commands.check import check
 from .commands.demo import demo
 from .commands.simulate import simulate
@@ -16,6 +17,7 @@ app = typer.Typer(
 app.command()(demo)
 app.command()(check)
 app.command()(simulate)
+app.command()(advise)
 
 
 @app.callback()

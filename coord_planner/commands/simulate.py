@@ -5,14 +5,13 @@
 from pathlib import Path
 from typing import Annotated, Any, Optional
 
-import attrs
 import typer
-from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 
 from .. import config
 from ..errors import RefusedError
 from ..trial.run import Run
+from .loading import configured
+from .progress import progress_shown
 from .speaking import DID_NOT_HOLD, errors_reported, say, table, write, write_json, write_table
 from .targets import prepare_file
 
@@ -39,7 +38,7 @@ def simulate(
 ) -> None:
     """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
     with errors_reported():
-        configuration = _configured(params, entries or [])
+        configuration = configured(params, entries or [])
         configuration.manoeuvre(manoeuvre)
         configuration.all_starts()
         if page is not None:
@@ -55,24 +54,11 @@ def simulate(
         _report(run, as_json, page, picture)
 
 
-def _configured(params: str, entries: list[str]) -> config.Configuration:
-    configuration = config.load(params)
-    if not entries:
-        return configuration
-    changed = config.from_parameters(config.set_values(configuration.flat, entries), f"{params} with --set")
-    return attrs.evolve(changed, file=params)
-
-
 def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
     from ..trial.rehearsal import rehearse
 
-    console = Console(stderr=True)
-    if not console.is_terminal:
-        return rehearse(configuration, manoeuvre, seed=seed)
-    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
-    with Progress(*columns, console=console, transient=True) as bar:
-        task = bar.add_task(manoeuvre, total=1.0)
-        return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
+    with progress_shown(manoeuvre) as progress:
+        return rehearse(configuration, manoeuvre, seed=seed, progress=progress)
 
 
 def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) -> None:
