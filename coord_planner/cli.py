@@ -8,6 +8,7 @@ from .commands.advise import advise
 from .commands.check import check
 from .commands.demo import demo
 from .commands.simulate import simulate
+from .commands.sweep import sweep
 
 app = typer.Typer(
     help="Coordinated motion planning for several ground robots that turn together. "
@@ -18,6 +19,7 @@ app.command()(demo)
 app.command()(check)
 app.command()(simulate)
 app.command()(advise)
+app.command()(sweep)
 
 
 @app.callback()
