@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import os
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import suppress
@@ -15,6 +16,7 @@ from .point import Record, given_up
 Work = Callable[[Point], Record]
 _PATIENCE = 15  # seconds for the scheduler to answer, and for a first worker
 _AHEAD = 4  # points handed out for each thread of the cluster, so that its workers never wait for us
+_GONE = "the cluster went away; what had come is kept, and the same command goes on from there"
 _WORKERS = "dask worker ADDRESS --nthreads 1 --nworkers N, with this package of the same version beside it"
 
 
@@ -41,6 +43,7 @@ def run_on_cluster(points: Sequence[Point], work: Work, address: str, tell: Call
     """
     from distributed import as_completed
 
+    _quieten()
     client = _connected(address)
     try:
         for warning in _looked_at(client):
@@ -55,9 +58,18 @@ def run_on_cluster(points: Sequence[Point], work: Work, address: str, tell: Call
             future = next(coming)
             yield _record(future, by_key.pop(future.key))
             future.release()
+    except OSError:
+        raise ClusterLostError(_GONE) from None
     finally:
         with suppress(Exception):  # it may be gone already
             client.close(timeout=5)
+
+
+def _quieten() -> None:
+    """What goes wrong is told in our own words; the library logs the same, with its traces, from each of its parts."""
+    for name in list(logging.root.manager.loggerDict):
+        if name.split(".")[0] == "distributed":
+            logging.getLogger(name).setLevel(logging.CRITICAL + 1)
 
 
 def _connected(address: str) -> Any:
@@ -107,13 +119,13 @@ def _record(future: Any, point: Point) -> Record:
     from distributed import KilledWorker
 
     if future.status not in ("finished", "error"):
-        raise ClusterLostError("the cluster went away; what had come is kept, and the same command goes on from there")
+        raise ClusterLostError(_GONE)
     try:
         record = future.result()
     except KilledWorker as error:
         return given_up(point, f"several workers died while they rehearsed it, the last one {error.last_worker.address}")
-    except (OSError, TimeoutError):
-        raise ClusterLostError("the cluster went away; what had come is kept, and the same command goes on") from None
+    except OSError:
+        raise
     except Exception as error:  # the worker's own: the library or the package there is not as it should be
         return given_up(point, f"{type(error).__name__} on a worker: {error}")
     assert isinstance(record, Record)

@@ -4,18 +4,19 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from typing import Any, Optional
+from typing import Any
 
 import attrs
 import numpy as np
-from scipy.stats import norm, rankdata
+from scipy.stats import kruskal, norm, rankdata
 
 from .choice import Setting
 
 _CONFIDENCE = 0.95
 _FEWEST = 5  # settings, below which nothing is said
 _BINS = 5  # of a continuously varied parameter
-_MATTERS = 0.1  # of the spread of ranks, explained beyond doubt
+_CHANCE = 0.01  # of an effect as clear by chance, below which one without a trend is believed
+_HARDLY = 0.1  # of the spread of ranks, explained
 _LITTLE = 0.3  # size of a rank correlation: less is called little
 
 
@@ -67,8 +68,10 @@ def _effect(parameter: str, measure: str, pairs: Sequence[tuple[Any, float]], ha
     if has_order:
         correlation = float(np.corrcoef(rankdata([value for value, _ in pairs]), outcome)[0, 1])
         low, high = interval(correlation, count)
-    explained = _explained([value for value, _ in pairs], outcome, has_order)
-    return Effect(parameter, measure, count, correlation, low, high, explained, _verdict(low, high, explained))
+    groups = _groups([value for value, _ in pairs], has_order)
+    explained, chance = _explained(groups, outcome)
+    verdict = _verdict(low, high, explained, chance)
+    return Effect(parameter, measure, count, correlation, low, high, explained, verdict)
 
 
 def interval(correlation: float, count: int) -> tuple[float, float]:
@@ -81,35 +84,33 @@ def interval(correlation: float, count: int) -> tuple[float, float]:
     return math.tanh(centre - half), math.tanh(centre + half)
 
 
-def _explained(values: Sequence[Any], outcome: np.ndarray, has_order: bool) -> float:
-    """Adjusted share of the variance of ranks between groups of equal (or neighbouring) values.
+def _explained(groups: np.ndarray, outcome: np.ndarray) -> tuple[float, float]:
+    """Adjusted share of the variance of ranks between groups (epsilon squared), and how probable it is by chance.
 
-    Epsilon squared, as it belongs to the test of Kruskal & Wallis (1952): unlike a correlation it also sees an
-    effect that rises and falls again.
+    The test of Kruskal & Wallis (1952), by scipy: unlike a correlation it also sees what rises and falls again.
     """
-    groups = _groups(values, has_order)
     count, kinds = len(outcome), len(set(groups))
-    if kinds < 2 or count <= kinds:
-        return math.nan
+    if kinds < 2 or count < 2 * kinds:
+        return math.nan, math.nan
+    chance = float(kruskal(*(outcome[groups == group] for group in np.unique(groups))).pvalue)
     total = float(np.sum((outcome - outcome.mean()) ** 2))
     inside = sum(float(np.sum((outcome[groups == group] - outcome[groups == group].mean()) ** 2))
                  for group in np.unique(groups))
-    return max(0.0, 1.0 - inside / (count - kinds) / (total / (count - 1)))
+    return max(0.0, 1.0 - inside / (count - kinds) / (total / (count - 1))), chance
 
 
 def _groups(values: Sequence[Any], has_order: bool) -> np.ndarray:
     kinds = sorted(set(values)) if has_order else list(dict.fromkeys(values))
-    if not has_order or len(kinds) <= max(_BINS, len(values) // _BINS):
+    if not has_order or len(kinds) <= max(2, len(values) // _BINS):
         return np.array([kinds.index(value) for value in values])
     ranks = rankdata(values)
     return np.minimum((ranks - 1) * _BINS // len(values), _BINS - 1).astype(int)
 
 
-def _verdict(low: float, high: float, explained: float) -> str:
-    clear: Optional[bool] = None if math.isnan(low) else low > 0.0 or high < 0.0
-    if clear or (math.isfinite(explained) and explained > 3 * _MATTERS):
+def _verdict(low: float, high: float, explained: float, chance: float) -> str:
+    if low > 0.0 or high < 0.0 or chance < _CHANCE:
         return "matters"
     small = math.isnan(low) or (low > -_LITTLE and high < _LITTLE)
-    if small and math.isfinite(explained) and explained < _MATTERS:
+    if small and explained < _HARDLY:
         return "leave alone"
     return "cannot tell"
