@@ -15,12 +15,12 @@ import numpy as np
 
 from coord_planner.core import graph as graphs
 from coord_planner.core import manoeuvre, reference
-from coord_planner.core.coordinator import Coordinator, hops
+from coord_planner.core.coordinator import Coordinator
 from coord_planner.core.fleet import Fleet, Footprint, Limits, Response, Robot
 from coord_planner.core.graph import NeighbourGraph
 from coord_planner.core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
-from coord_planner.core.messages import Answer, Command, Decision, PoseSample, Snapshot, State
-from coord_planner.core.problem import CURVATURE, CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND
+from coord_planner.core.messages import Answer, Decision, PoseSample, Snapshot, State
+from coord_planner.core.problem import POSE, SPEED, SPEED_COMMAND
 from coord_planner.core.reference import Reference
 from coord_planner.core.settings import Coupling, Horizon, Settings, SiteRules
 from coord_planner.trial.vehicle import SimulatedFleet
@@ -34,12 +34,13 @@ HARDLY_ANY = Limits(
     max_curvature=20.0, max_curvature_rate=50.0, min_speed=-20.0, max_speed=20.0, max_acceleration=20.0,
     max_braking=20.0, max_turn_rate=20.0, max_lateral_acceleration=20.0,
 )
+PROMPT, SMALL = Response(), Footprint()  # answers at once; 1.2 m by 0.8 m
 LATE = Response(speed_lag=0.25, curvature_lag=0.2, command_delay=0.1)
 SPACING = 2.5  # metres, abreast
 
 
 def carts(
-    count: int, limits: Limits = LIMITS, response: Response = Response(), footprint: Footprint = Footprint(),
+    count: int, limits: Limits = LIMITS, response: Response = PROMPT, footprint: Footprint = SMALL,
 ) -> Fleet:
     """``cart_1`` ... side by side, ``cart_1`` on the left."""
     return Fleet(tuple(Robot(f"cart_{k + 1}", limits, footprint, response) for k in range(count)))
@@ -71,14 +72,14 @@ def solve(
 ) -> Reference:
     """A reference straight from what is asked, as the coordinator makes it; a path graph when none is given."""
     graph = graphs.path(fleet.names) if graph is None else graph
-    task = manoeuvre.work_out("turn", wanted, fleet, with_settings, poses, speed, hops(graph))
+    task = manoeuvre.work_out("turn", wanted, fleet, with_settings, poses, speed, graph.hops())
     return reference.make(task, fleet, graph, with_settings, states(poses, speed))
 
 
 @lru_cache
 def corner(count: int = 3, late: bool = False) -> Reference:
     """Everyone turns left by 90 degrees at 4 m, from standing to standing."""
-    fleet = carts(count, response=LATE if late else Response())
+    fleet = carts(count, response=LATE if late else PROMPT)
     return solve(EqualRadius(angle_deg=90.0, radius=4.0), fleet, abreast(count), settings())
 
 
@@ -236,8 +237,3 @@ def small_yard(count: int = 2, response: Response = LATE, **imperfect: float) ->
     return Yard(carts(count, response=response), abreast(count), manoeuvres, settings(horizon=attrs.asdict(horizon)),
                 **imperfect)
 
-
-__all__ = [
-    "CURVATURE", "CURVATURE_COMMAND", "HARDLY_ANY", "LATE", "LIMITS", "POSE", "SPEED", "SPEED_COMMAND", "Command", "Yard",
-    "abreast", "carts", "corner", "dense", "excess", "length", "settings", "small_yard", "solve", "states", "wheel",
-]

@@ -1,4 +1,4 @@
-"""Limits in force: from any state there must be a way to keep them, and it must lead back at the machine's own rates."""
+"""Limits in force: from any state there is a way to keep them, and it leads back at the machine's own rates."""
 
 import numpy as np
 import pytest

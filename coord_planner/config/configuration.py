@@ -69,6 +69,11 @@ class Configuration:
     activate_on_start: bool
 
     @property
+    def driven(self) -> Fleet:
+        """The robots that are enabled: those that the planner drives."""
+        return Fleet(tuple(robot for robot in self.fleet.robots if robot.name in self.enabled))
+
+    @property
     def graph(self) -> NeighbourGraph:
         """The neighbour graph over the whole fleet."""
         return NeighbourGraph(self.fleet.names, self.edges)

@@ -51,6 +51,10 @@ class Pursuit:
         self._updated = begins
         self.behind = np.zeros(len(fleet))
 
+    def freeze(self, now: float) -> None:
+        """The group leaves its reference for a stop: its progress stays what it is now."""
+        self._s, self._time, self.progress.pace = self.s(now), now, 0.0
+
     @property
     def pace(self) -> float:
         """Seconds of the manoeuvre per second of the clock."""

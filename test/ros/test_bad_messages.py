@@ -18,7 +18,7 @@ PLACES = {"left": 6.0, "middle": 3.0, "right": 0.0}
 
 @pytest.fixture(scope="module")
 def planner(site: Any, hand: Hand) -> NodeProcess:
-    node = site.start("planner_node", params=site.params("activate_on_start: true"))
+    node = site.start("planner_node", "activate_on_start:=true", "commands.publish:=false")
     hand.until(lambda: bool(hand.diagnostics), what="diagnostics")
     return node
 
@@ -75,7 +75,10 @@ def test_last_good_pose_stays_in_force(hand: Hand, planner: NodeProcess) -> None
             break
     assert future is not None and future.done()
     assert future.result().success, future.result().message
+    hand.until_state("moving")
     hand.trigger("halt")
+    hand.until_state("held")
+    assert not any(hand.commands.values()), "commands.publish is false: planned, not driven"
 
 
 def test_a_manoeuvre_without_poses_is_refused(hand: Hand, planner: NodeProcess) -> None:
