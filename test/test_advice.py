@@ -21,7 +21,6 @@ from coord_planner.core.advice.choosing import Wanted, after_any_loss, smallest_
 from coord_planner.core.advice.copying import copy_matrix, led_shares, per_hop
 from coord_planner.core.advice.links import critical_links, critical_robots, suggested_links
 from coord_planner.core.advice.strength import strength
-from coord_planner.core.coordinator import hops
 from coord_planner.core.graph import NeighbourGraph
 from coord_planner.errors import RefusedError, SettingsError
 from coord_planner.trial.copying import LawBeside, beside_law
@@ -54,7 +53,7 @@ def test_six_in_a_line_led_from_one_end() -> None:
     expected = [float(Fraction(n, 89)) for n in (34, 13, 5, 2, 1)]
     shares = copy_matrix(LINE, 1.0)
     assert shares[1:, 0] == pytest.approx(expected, rel=1e-12)
-    assert [weakest for weakest, _ in per_hop(shares, hops(LINE), ANY)] == pytest.approx(expected, rel=1e-12)
+    assert [weakest for weakest, _ in per_hop(shares, LINE.hops(), ANY)] == pytest.approx(expected, rel=1e-12)
 
 
 def test_a_star_led_from_its_hub() -> None:
@@ -99,24 +98,24 @@ def test_modes_of_six_in_a_line() -> None:
 def test_half_per_hop_along_a_long_line_takes_a_coupling_of_two() -> None:
     """(1 + 2 chi - sqrt(1 + 4 chi)) / (2 chi) = 1/2 at chi = 2 (design, copying law)."""
     line = graphs.path(tuple(f"r{n}" for n in range(40)))
-    assert smallest_coupling(line, hops(line), Wanted(0.5, 1, (0,))).coupling == pytest.approx(2.0, rel=1e-6)
-    assert smallest_coupling(line, hops(line), Wanted(0.125, 3, (0,))).coupling == pytest.approx(2.0, rel=1e-6)
+    assert smallest_coupling(line, line.hops(), Wanted(0.5, 1, (0,))).coupling == pytest.approx(2.0, rel=1e-6)
+    assert smallest_coupling(line, line.hops(), Wanted(0.125, 3, (0,))).coupling == pytest.approx(2.0, rel=1e-6)
 
 
 def test_the_third_robot_copies_half_and_with_less_it_does_not() -> None:
-    choice = smallest_coupling(LINE, hops(LINE), Wanted(0.5, 3, (0,)))
+    choice = smallest_coupling(LINE, LINE.hops(), Wanted(0.5, 3, (0,)))
     assert copy_matrix(LINE, choice.coupling)[3, 0] == pytest.approx(0.5, abs=1e-8)
     assert copy_matrix(LINE, 0.99 * choice.coupling)[3, 0] < 0.5
     assert (choice.led, choice.copying, choice.lost) == ("r0", "r3", None)
     # Led from one end there are the most robots behind that hold the third one back.
-    assert smallest_coupling(LINE, hops(LINE), Wanted(0.5, 3, ANY)).coupling == pytest.approx(choice.coupling)
+    assert smallest_coupling(LINE, LINE.hops(), Wanted(0.5, 3, ANY)).coupling == pytest.approx(choice.coupling)
 
 
 def test_after_the_loss_of_any_link_of_a_ring() -> None:
     """Without a link the ring is a line, and two robots three hops apart are the ends of a line of four, or worse."""
     wanted = Wanted(0.5, 3, (0,))
-    choice = after_any_loss(RING, hops(RING), wanted)
-    assert choice.coupling > smallest_coupling(RING, hops(RING), wanted).coupling
+    choice = after_any_loss(RING, RING.hops(), wanted)
+    assert choice.coupling > smallest_coupling(RING, RING.hops(), wanted).coupling
     for lost in RING.edges:
         rest = NeighbourGraph(SIX, tuple(edge for edge in RING.edges if edge != lost))
         copied = copy_matrix(rest, choice.coupling)[3, 0]
@@ -127,13 +126,13 @@ def test_after_the_loss_of_any_link_of_a_ring() -> None:
 
 def test_what_no_coupling_can_do_is_refused_with_the_reason() -> None:
     with pytest.raises(RefusedError, match="r0 - r1 is lost, no way leads from r0 to r3.*add a link"):
-        after_any_loss(LINE, hops(LINE), Wanted(0.5, 3, (0,)))
+        after_any_loss(LINE, LINE.hops(), Wanted(0.5, 3, (0,)))
     with pytest.raises(RefusedError, match=r"largest coupling, 10000, r5 copies 0\.99\d+ of the turning of r0"):
-        smallest_coupling(LINE, hops(LINE), Wanted(0.99999, 5, (0,)))
+        smallest_coupling(LINE, LINE.hops(), Wanted(0.99999, 5, (0,)))
     with pytest.raises(SettingsError, match="--hops: no robot is 4 hops from any robot; allowed: 1 to 3"):
-        smallest_coupling(RING, hops(RING), Wanted(0.5, 4, ANY))
+        smallest_coupling(RING, RING.hops(), Wanted(0.5, 4, ANY))
     with pytest.raises(SettingsError, match="--copy: 1 is no part"):
-        smallest_coupling(RING, hops(RING), Wanted(1.0, 1, ANY))
+        smallest_coupling(RING, RING.hops(), Wanted(1.0, 1, ANY))
 
 
 # ---- what holds it together ----

@@ -29,7 +29,8 @@ def settings(*rows: dict[str, Any], objective: dict[str, float], within: dict[st
 
 @pytest.mark.parametrize(("fault", "words"), [
     ({"contacts": 1}, "a contact"), ({"limit_violations": 2}, "outside a limit"), ({CLEARANCE: 0.84}, "nearer than"),
-    ({"completed": False, "state": "held"}, "not completed, the fleet is held"), ({SPREAD: 9.5}, "heading spread above 9"),
+    ({"completed": False, "state": "held"}, "not completed, the fleet is held"),
+    ({SPREAD: 9.5}, "heading spread above 9"),
     ({"status": "refused", "reason": "too tight"}, "refused: too tight"), ({CLEARANCE: 0.89}, "clearance below 0.9"),
 ])
 def test_one_rehearsal_that_breaks_a_rule_takes_its_setting_out(fault: dict[str, Any], words: str) -> None:
@@ -75,7 +76,7 @@ def test_what_matters_and_what_can_be_left_alone() -> None:
     rising = judged_curve(lambda x, n: x + 0.1 * noise[n])
     assert rising.verdict == "matters" and rising.low > 0.9 and rising.explained > 0.8
     hump = judged_curve(lambda x, n: (x - 0.5) ** 2 + 0.01 * noise[n])
-    assert hump.verdict == "matters" and abs(hump.correlation) < 0.2 and hump.explained > 0.5, "seen though not monotone"
+    assert hump.verdict == "matters" and abs(hump.correlation) < 0.2 and hump.explained > 0.5, "seen without a trend"
     assert judged_curve(lambda _x, n: noise[n], 300, levels=5).verdict == "leave alone"
     assert judged_curve(lambda _x, n: noise[n], 6).verdict == "cannot tell", "six settings say little"
     assert judged_curve(lambda _x, _n: 3.0).verdict == "leave alone"

@@ -67,8 +67,8 @@ def advise(
 
 
 def _check_led(configuration: config.Configuration, led: str) -> None:
-    if led and led not in configuration.fleet.names:
-        raise SettingsError(f"{led!r} is not in the fleet", key="--led", allowed=", ".join(configuration.fleet.names))
+    if led and led not in configuration.driven.names:
+        raise SettingsError(f"{led!r} is not in the fleet", key="--led", allowed=", ".join(configuration.driven.names))
 
 
 def _manoeuvres(configuration: config.Configuration, names: list[str]) -> dict[str, Any]:

@@ -55,8 +55,8 @@ def write_outcome(found: Outcome, files: Mapping[str, str]) -> None:
     if found.best is not None:
         write_heading("Best within the rules, and the trade-off front")
         _write_settings(found)
-        write("Objective: " + " + ".join(_term(name, weight) for name, weight in found.sweep.objective.items() if weight)
-              + ", mean over the seeds; less is better.\n")
+        terms = " + ".join(_term(name, weight) for name, weight in found.sweep.objective.items() if weight)
+        write(f"Objective: {terms}, mean over the seeds; less is better.\n")
     _write_broken(found)
     if found.sweep.axes:
         _write_effects(found)
@@ -68,7 +68,8 @@ def write_outcome(found: Outcome, files: Mapping[str, str]) -> None:
 
 def _write_settings(found: Outcome) -> None:
     keys = [axis.key for axis in found.sweep.axes]
-    shown = table("setting", "", *keys, "objective", *(f"{MEASURES[name].words} {MEASURES[name].unit}" for name in MAIN))
+    columns = (f"{MEASURES[name].words} {MEASURES[name].unit}" for name in MAIN)
+    shown = table("setting", "", *keys, "objective", *columns)
     special = [setting for setting in (found.best, found.shipped) if setting is not None]
     rest = [found.settings[number] for number in found.front]
     for setting in dict.fromkeys((*special, *sorted(rest, key=lambda setting: setting.objective))):

@@ -15,10 +15,9 @@ from ..core.advice.copying import copy_matrix, per_hop
 from ..core.advice.links import NewLink, Split, critical_links, critical_robots, suggested_links
 from ..core.advice.measuring import Copied
 from ..core.advice.strength import strength
-from ..core.coordinator import hops
 from ..core.graph import hop_fraction
 from ..errors import RefusedError, SettingsError
-from ..trial.copying import LawBeside
+from ..trial.copying import LawBeside, driven_graph
 from ..trial.run import Run
 from .metrics import plain, summary
 
@@ -51,9 +50,9 @@ def of_graph(configuration: Configuration, question: Question) -> dict[str, Any]
     Raises:
         SettingsError: what is asked means nothing on this graph.
     """
-    graph, coupling = configuration.graph, configuration.settings.coupling.strength
+    graph, coupling = driven_graph(configuration), configuration.settings.coupling.strength
     led = _led(configuration, question)
-    shares, ways = copy_matrix(graph, coupling), hops(graph)
+    shares, ways = copy_matrix(graph, coupling), graph.hops()
     hop = per_hop(shares, ways, led)
     judged = strength(graph, coupling)
     return {
@@ -83,8 +82,8 @@ def of_manoeuvre(
     Args:
         uncoupled: the rehearsal with the coupling at 0, where every robot has an end of its own.
     """
-    task, names = beside.made.task, configuration.fleet.names
-    ways = hops(configuration.graph)
+    task, names = beside.made.task, configuration.driven.names
+    ways = driven_graph(configuration).hops()
     found: dict[str, Any] = {
         "led": [names[k] for k in beside.led], "coupling": task.coupling, "alignment": task.alignment,
         "conditions": [attrs.asdict(condition) for condition in beside.conditions],
@@ -103,7 +102,7 @@ def of_manoeuvre(
 
 
 def _led(configuration: Configuration, question: Question) -> tuple[int, ...]:
-    names = configuration.fleet.names
+    names = configuration.driven.names
     return (names.index(question.led),) if question.led else tuple(range(len(names)))
 
 
@@ -113,7 +112,7 @@ def _recommended(configuration: Configuration, question: Question, led: tuple[in
              "worst_link": question.worst_link}
     try:
         choose = after_any_loss if question.worst_link else smallest_coupling
-        choice: Choice = choose(configuration.graph, hops(configuration.graph), wanted)
+        choice: Choice = choose(driven_graph(configuration), driven_graph(configuration).hops(), wanted)
     except (RefusedError, SettingsError) as error:
         if question.asked and isinstance(error, SettingsError):
             raise
@@ -125,7 +124,7 @@ def _recommended(configuration: Configuration, question: Question, led: tuple[in
 
 def _places(configuration: Configuration) -> np.ndarray:
     unknown = (math.nan, math.nan, math.nan)
-    return np.array([configuration.starts.get(name, unknown)[:2] for name in configuration.fleet.names])
+    return np.array([configuration.starts.get(name, unknown)[:2] for name in configuration.driven.names])
 
 
 def _split(split: Split) -> dict[str, Any]:

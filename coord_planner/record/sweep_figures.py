@@ -45,7 +45,7 @@ def turning(run: Run, configuration: Configuration) -> tuple[float, float]:
     if len(run.times) < 2:
         return math.nan, math.nan
     u = run.speeds * run.curvatures / configuration.manoeuvres[run.manoeuvre].speed
-    laplacian = configuration.graph.laplacian()
+    laplacian = configuration.graph.relative_to(run.fleet.names).laplacian()
     own, apart = (u * u).sum(axis=0), np.einsum("ks,kj,js->s", u, laplacian, u)
     return float(trapezoid(own, run.times) / 2), float(trapezoid(apart, run.times) / 2)
 

@@ -14,7 +14,7 @@ from ..core import reference
 from ..core.advice.conditions import Condition, conditions, led_by
 from ..core.advice.copying import led_shares
 from ..core.advice.measuring import Copied, copied, planned_turning
-from ..core.coordinator import hops
+from ..core.graph import NeighbourGraph
 from ..core.problem import POSE, STATES
 from ..core.reference import Reference
 from .rehearsal import rehearse
@@ -55,13 +55,18 @@ def with_coupling(configuration: Configuration, name: str, coupling: float) -> C
     return attrs.evolve(configuration, manoeuvres={**configuration.manoeuvres, name: changed})
 
 
+def driven_graph(configuration: Configuration) -> NeighbourGraph:
+    """The neighbour graph over the robots that are driven."""
+    return configuration.graph.relative_to(configuration.driven.names)
+
+
 def reference_from_starts(configuration: Configuration, name: str) -> Reference:
     """The reference of a manoeuvre, begun where the file has the robots stand; RefusedError when it is refused."""
-    starts, fleet, graph = configuration.all_starts(), configuration.fleet, configuration.graph
+    starts, fleet, graph = configuration.all_starts(), configuration.driven, driven_graph(configuration)
     states = np.zeros((len(fleet), len(STATES)))
     states[:, POSE] = [starts[robot] for robot in fleet.names]
     task = manoeuvres.work_out(
-        name, configuration.manoeuvre(name), fleet, configuration.settings, states[:, POSE], 0.0, hops(graph)
+        name, configuration.manoeuvre(name), fleet, configuration.settings, states[:, POSE], 0.0, graph.hops()
     )
     return reference.make(task, fleet, graph, configuration.settings, states)
 
@@ -76,10 +81,10 @@ def beside_law(
     """
     made = reference_from_starts(configuration, name)
     led = led_by(made.task)
-    shares = led_shares(configuration.graph, made.task.coupling, led)
-    looked_at = conditions(made, configuration.fleet, configuration.settings)
+    shares = led_shares(driven_graph(configuration), made.task.coupling, led)
+    looked_at = conditions(made, configuration.driven, configuration.settings)
     run = rehearse(quiet(configuration), name, progress=progress) if drive else None
-    if len(led) == len(configuration.fleet):
+    if len(led) == len(configuration.driven):
         return LawBeside(led, made, looked_at, shares, None, None, run)
     planned = copied(*planned_turning(made), made.task.asked, shares, led)
     driven = None if run is None else copied(*_driven_turning(run, made), made.task.asked, shares, led)

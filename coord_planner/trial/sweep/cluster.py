@@ -48,7 +48,8 @@ def run_on_cluster(points: Sequence[Point], work: Work, address: str, tell: Call
     try:
         for warning in _looked_at(client):
             tell(warning)
-        waiting, by_key = list(reversed(points)), {}
+        waiting = list(reversed(points))
+        by_key: dict[str, Point] = {}
         coming = as_completed(loop=client.loop)
         while waiting or by_key:
             for point in _next(waiting, len(by_key), client):
@@ -123,7 +124,8 @@ def _record(future: Any, point: Point) -> Record:
     try:
         record = future.result()
     except KilledWorker as error:
-        return given_up(point, f"several workers died while they rehearsed it, the last one {error.last_worker.address}")
+        last = error.last_worker.address
+        return given_up(point, f"several workers died while they rehearsed it, the last one {last}")
     except OSError:
         raise
     except Exception as error:  # the worker's own: the library or the package there is not as it should be

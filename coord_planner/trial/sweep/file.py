@@ -95,7 +95,7 @@ class _Reader:
         base.all_starts()
         changes = {str(key): value for key, value in (self._held.get("set") or {}).items()}
         for key, value in changes.items():
-            self._try(f"set.{key}", lambda key=key, value=value: config.from_parameters({**base.flat, key: value}))
+            self._try(f"set.{key}", {**base.flat, key: value})
         self._complaints.raise_any()
         if changes:
             with self._complaints.about("set"):
@@ -124,7 +124,8 @@ class _Reader:
         return tuple(seeds)
 
     def _faults(self, base: Configuration) -> tuple[Fault, ...]:
-        return fault_list(self._held.get("faults") or [], base.fleet.names, self._complaints)
+        graph = base.graph.relative_to(base.driven.names)
+        return fault_list(self._held.get("faults") or [], graph, self._complaints)
 
     def _choice(self, key: str, default: str, allowed: tuple[str, ...]) -> str:
         value = self._held.get(key, default)
@@ -260,11 +261,12 @@ class _Reader:
         """Each listed value, or both ends of a range, in the file by itself."""
         values: Iterable[Any] = (axis.at(0.0), axis.at(1.0 - 1e-12)) if isinstance(axis, Ranged) else axis.values
         for value in values:
-            self._try(where, lambda value=value: config.from_parameters({**base.flat, axis.key: value}))
+            self._try(where, {**base.flat, axis.key: value})
 
-    def _try(self, where: str, load: Callable[[], object]) -> None:
+    def _try(self, where: str, flat: Mapping[str, Any]) -> None:
+        """Complain about ``where`` when these parameters are not sound."""
         try:
-            load()
+            config.from_parameters(flat)
         except SettingsError as error:
             key = "" if where.endswith(error.key) else f"{error.key}: "
             self._complaints.add(f"{key}{error.problem}", where, error.allowed)

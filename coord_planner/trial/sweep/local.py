@@ -7,7 +7,7 @@ import os
 import signal
 import threading
 from collections import deque
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Generator, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
@@ -37,7 +37,7 @@ def run_here(points: Sequence[Point], work: Work, workers: int) -> Iterator[Reco
                 yield given_up(suspect, "the process that rehearsed it died, twice (out of memory, or a crash)")
 
 
-def _run(waiting: deque[Point], work: Work, workers: int) -> Iterator[Record]:
+def _run(waiting: deque[Point], work: Work, workers: int) -> Generator[Record, None, list[Point]]:
     """Records until all is done or a process dies; returns the points that were handed out when it did."""
     before = set(multiprocessing.active_children())
     with _one_thread_each():

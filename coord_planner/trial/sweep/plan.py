@@ -77,9 +77,8 @@ class Sweep:
     def _hypercube(self) -> list[dict[str, Any]]:
         """Latin hypercube (McKay, Beckman & Conover 1979, from memory), drawn by scipy."""
         sampler = qmc.LatinHypercube(d=len(self.axes), seed=np.random.default_rng(self.sampling_seed))
-        return [
-            {axis.key: axis.at(float(part)) for axis, part in zip(self.axes, row)} for row in sampler.random(self.points)
-        ]
+        drawn = sampler.random(self.points)
+        return [{axis.key: axis.at(float(part)) for axis, part in zip(self.axes, row)} for row in drawn]
 
 
 @attrs.frozen(eq=False)
