@@ -100,11 +100,14 @@ def _records(missing: Sequence[Point], workers: int, address: str) -> Iterator[R
 
 def _write_files(found: Outcome, folder: Path, table: str) -> dict[str, str]:
     """The page and the best parameter file; returns every file of the sweep by what it is."""
-    files = {"results": str(folder / table)}
+    from ..record.sweep_page import write_sweep_page
+
+    files = {"results": str(folder / table), "page": str(folder / "page.html")}
     best = folder / "best.yaml"
     if found.best is not None:
         write_best(found, best)
         files["best"] = str(best)
     else:
         best.unlink(missing_ok=True)  # an earlier run's would be taken for this one's
+    write_sweep_page(found, folder / "page.html", best.read_text(encoding="utf-8") if found.best is not None else "")
     return files
