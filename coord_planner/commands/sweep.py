@@ -5,6 +5,7 @@
 import time
 from collections.abc import Iterator, Sequence
 from functools import partial
+from importlib.util import find_spec
 from pathlib import Path
 from typing import Annotated
 
@@ -37,8 +38,10 @@ def sweep(
         str, typer.Option("--cluster", metavar="ADDRESS", help="Address of a Dask scheduler that shall do the work.")
     ] = "",
     results: Annotated[
-        str, typer.Option("--results", metavar="FORMAT", help="Kind of the table: parquet or csv.")
-    ] = "parquet",
+        str,
+        typer.Option("--results", metavar="FORMAT", help="Kind of the table, parquet or csv; when left out, parquet "
+                     "where pyarrow is installed."),
+    ] = "",
     as_object: Annotated[bool, typer.Option("--json", help="Print one JSON object instead of tables.")] = False,
     restart: Annotated[
         bool, typer.Option("--restart", help="Throw away what an earlier run of this sweep left in the folder.")
@@ -50,6 +53,7 @@ def sweep(
     """Many rehearsals: which settings are best within the site's rules, and which parameters matter."""
     with errors_reported():
         wanted = load_sweep(file)
+        results = results or ("parquet" if find_spec("pyarrow") else "csv")
         check_format(results)
         if address:
             cluster.check_library()

@@ -24,7 +24,7 @@ def check_format(name: str) -> None:
             import pyarrow.parquet  # noqa: F401
         except ImportError as error:
             raise SettingsError(f"Parquet needs pyarrow, which is not installed ({error})", key="--results",
-                                allowed="--results csv, or `pip install pyarrow`") from None
+                                allowed="--results csv, or `pip install 'coord_planner[parquet]'`") from None
 
 
 def ordered(records: Iterable[Record]) -> list[Row]:
