@@ -78,13 +78,14 @@ def cautions_text(cautions: Sequence[Caution]) -> str:
 
 def fleet_markers(frame: str, fleet: Fleet, graph: NeighbourGraph, decision: Decision,
                   min_clearance: float) -> MarkerArray:
-    """Edges, footprints, the smallest clearance now and the warnings, for a viewer."""
+    """Edges with what is copied along them, footprints, the smallest clearance now and the warnings, for a viewer."""
     heard = np.isfinite(decision.poses).all(axis=1) if len(decision.poses) else np.zeros(len(fleet), dtype=bool)
     canvas = _Canvas(header(frame, decision.time))
     canvas.clear()
     if heard.any():
         poses = np.where(heard[:, None], decision.poses, 0.0)
         _draw_edges(canvas, graph, poses, heard)
+        _draw_copying(canvas, graph, poses, heard, decision)
         _draw_footprints(canvas, fleet, poses, heard, decision)
         _draw_clearance(canvas, fleet, poses, heard, min_clearance)
         _draw_warnings(canvas, fleet, poses, heard, decision.warnings)
@@ -127,6 +128,20 @@ def _draw_edges(canvas: _Canvas, graph: NeighbourGraph, poses: np.ndarray, heard
     seen = [(k, j) for k, j in graph.index_edges() if heard[k] and heard[j]]
     if seen:
         canvas.line("edges", poses[np.array(seen).ravel(), :2].tolist(), _GREY, Marker.LINE_LIST)
+
+
+def _draw_copying(
+    canvas: _Canvas, graph: NeighbourGraph, poses: np.ndarray, heard: np.ndarray, decision: Decision
+) -> None:
+    """How far the headings of neighbours are apart, and the coupling in force, while a manoeuvre is in hand."""
+    if not decision.manoeuvre:
+        return
+    for k, j in graph.index_edges():
+        if heard[k] and heard[j]:
+            apart = abs(math.degrees(math.remainder(poses[k, 2] - poses[j, 2], 2 * math.pi)))
+            canvas.text("copying", poses[[k, j], :2].mean(axis=0).tolist(), f"{apart:.0f} deg", _GREY)
+    beside = poses[heard, :2].max(axis=0) + 1.0
+    canvas.text("copying", beside.tolist(), f"coupling {decision.coupling:g}", _GREY)
 
 
 def _draw_footprints(canvas: _Canvas, fleet: Fleet, poses: np.ndarray, heard: np.ndarray, decision: Decision) -> None:
