@@ -21,7 +21,8 @@ def planner(site: Any, hand: Hand) -> None:
     led = "".join(f'      {name}: {{kind: to_ends, ends_deg: ["left heading {heading}"], speed: 0.3}}\n'
                   for name, heading in (("led", 60), ("further", 120)))
     kept = [line for line in text.splitlines(keepends=True) if not line.strip().startswith("corner_")]
-    text = "".join(kept).replace("    simulation:", led + "    simulation:").replace("strength: 1.0", f"strength: {WEAK}")
+    text = "".join(kept).replace("    simulation:", led + "    simulation:")
+    text = text.replace("strength: 1.0", f"strength: {WEAK}")
     own = file.with_name("led.yaml")
     own.write_text(text)
     site.start("simulator_node", params=own)
