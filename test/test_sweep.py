@@ -140,6 +140,9 @@ def test_a_latin_hypercube_has_one_point_in_each_layer_of_each_parameter(tmp_pat
         assert np.histogram(values, layers)[0].tolist() == [1] * 20
     assert sum(setting["horizon.intervals"] == 8 for setting in settings) == 10
     assert settings == load_sweep(file).settings()
+    whole = {"horizon.intervals": {"range": [8, 10]}}
+    few = load_sweep(sweep_file(tmp_path, method="latin_hypercube", points=20, vary=whole)).settings()
+    assert sorted(setting["horizon.intervals"] for setting in few) == [8, 9, 10], "each setting once"
 
 
 def test_a_points_key_follows_from_its_content_alone(tmp_path: Path) -> None:
@@ -219,21 +222,34 @@ def test_parquet_and_csv_hold_the_same_rows(rows: list[Any], tmp_path: Path) -> 
 
 
 def test_a_journal_outlives_a_kill_in_mid_line_and_knows_its_sweep(rows: list[Any], tmp_path: Path) -> None:
-    keys = [row["key"] for row in rows]
-    with Journal(tmp_path, keys) as journal:
+    todo = points(load_sweep(sweep_file(tmp_path)))
+    with Journal(tmp_path, todo) as journal:
         assert all(journal.add(record) for record in records(rows[:3]))
         assert not journal.add(records(rows)[0]), "counted once"
     with open(tmp_path / "journal.jsonl", "ab") as stream:
-        stream.write(b'{"key": "' + keys[3].encode())
-    with Journal(tmp_path, keys) as journal:
+        stream.write(b'{"key": "' + todo[3].key.encode())
+    with Journal(tmp_path, todo) as journal:
         assert [compared(row) for row in ordered(journal.records.values())] == rows[:3]
         journal.add(records(rows)[3])
         status, output = call("sweep", sweep_file(tmp_path), "--out", tmp_path)
         assert status == 2 and "another sweep is writing" in output
-    with Journal(tmp_path, keys) as journal:
+    with Journal(tmp_path, todo) as journal:
         assert [compared(row) for row in ordered(journal.records.values())] == rows[:4]
     status, output = call("sweep", sweep_file(tmp_path, seeds=[7]), "--out", tmp_path)
     assert status == 2 and "results of other points" in output and "--restart" in output
+
+
+def test_a_sweep_that_has_grown_keeps_its_results_at_their_new_places(rows: list[Any], tmp_path: Path) -> None:
+    with Journal(tmp_path, points(load_sweep(sweep_file(tmp_path)))) as journal:
+        for record in records(rows):
+            journal.add(record)
+    grown = points(load_sweep(sweep_file(tmp_path, seeds=[3, 1, 2])))
+    with Journal(tmp_path, grown) as journal:
+        held = {row["point"]: row for row in ordered(journal.records.values())}
+    assert sorted(held) == [n for n, point in enumerate(grown) if point.seed != 3]
+    for number, row in held.items():
+        assert row["seed"] == grown[number].seed and row["coupling.strength"] == grown[number].flat["coupling.strength"]
+        assert row["setting"] == number // 3
 
 
 def test_a_sweep_that_was_killed_goes_on_where_it_stopped(rows: list[Any], tmp_path: Path) -> None:
@@ -256,7 +272,7 @@ def test_a_sweep_that_was_killed_goes_on_where_it_stopped(rows: list[Any], tmp_p
     after = journal.read_bytes()
     whole = before[: before.rfind(b"\n") + 1]
     assert after.startswith(whole) and after.count(b"\n") == len(rows), "none lost, none twice"
-    with Journal(tmp_path / "out", [row["key"] for row in rows]) as held:
+    with Journal(tmp_path / "out", points(load_sweep(file))) as held:
         assert [compared(row) for row in ordered(held.records.values())] == rows
     assert json.loads(second.stdout)["done"] == len(rows)
 
@@ -283,7 +299,7 @@ def test_the_command_tells_the_best_and_writes_it_ready_for_the_robots(rows: lis
     file = sweep_file(tmp_path, as_shipped=None)
     out = tmp_path / "out"
     out.mkdir()
-    with Journal(out, [row["key"] for row in rows]) as journal:
+    with Journal(out, points(load_sweep(file))) as journal:
         for record in records(rows):
             journal.add(record)
     status, output = call("sweep", file, "--out", out, "--results", "csv", "--json")
@@ -303,7 +319,7 @@ def test_the_command_tells_the_best_and_writes_it_ready_for_the_robots(rows: lis
 
 def test_no_setting_within_the_rules_is_one_and_leaves_no_best_file(rows: list[Any], tmp_path: Path) -> None:
     file = sweep_file(tmp_path, within={"duration_s": 1.0})
-    with Journal(tmp_path, [row["key"] for row in rows]) as journal:
+    with Journal(tmp_path, points(load_sweep(file))) as journal:
         for record in records(rows):
             journal.add(record)
     (tmp_path / "best.yaml").write_text("of an earlier run")

@@ -7,7 +7,7 @@ from collections.abc import Iterator, Sequence
 from functools import partial
 from importlib.util import find_spec
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Optional
 
 import typer
 
@@ -31,8 +31,9 @@ _TABLE_EVERY = 3.0  # seconds between two versions of the table
 def sweep(
     file: Annotated[str, typer.Argument(metavar="SWEEP", help="Sweep file (YAML).")],
     out: Annotated[
-        Path, typer.Option("--out", metavar="FOLDER", help="Folder for all results; out/NAME-OF-FILE when left out.")
-    ] = Path(),
+        Optional[Path],
+        typer.Option("--out", metavar="FOLDER", help="Folder for all results; out/NAME-OF-FILE when left out."),
+    ] = None,
     workers: Annotated[int, typer.Option("--workers", min=0, help="Processes on this machine; 0: one a core.")] = 0,
     address: Annotated[
         str, typer.Option("--cluster", metavar="ADDRESS", help="Address of a Dask scheduler that shall do the work.")
@@ -59,10 +60,10 @@ def sweep(
             cluster.check_library()
             if workers:
                 raise SettingsError("a cluster has workers of its own", key="--workers", allowed="one of the two")
-        folder = Path("out") / wanted.name if out == Path() else out
+        folder = out or Path("out") / wanted.name
         prepare_folder(folder, "--out")
         todo = points(wanted)
-        with Journal(folder, [point.key for point in todo], restart) as journal:
+        with Journal(folder, todo, restart) as journal:
             if retry:
                 journal.forget([key for key, record in journal.records.items() if record.row["status"] == FAILED])
             _carry_on(journal, todo, folder / f"results.{results}", workers or local.cores(), address)

@@ -5,13 +5,16 @@ from __future__ import annotations
 import fcntl
 import json
 import os
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from pathlib import Path
 from types import TracebackType
 from typing import Any, Optional
 
+import attrs
+
 from ...errors import SettingsError
-from .point import Record
+from .plan import Point
+from .point import Record, head
 
 NAME = "journal.jsonl"
 _REMEDY = "another --out, or --restart to throw away what is there"
@@ -24,7 +27,7 @@ class Journal:
         SettingsError: it belongs to other points, is damaged, or another sweep is writing it.
     """
 
-    def __init__(self, folder: Path, keys: Iterable[str], restart: bool = False) -> None:
+    def __init__(self, folder: Path, points: Iterable[Point], restart: bool = False) -> None:
         self.file = folder / NAME
         self.records: dict[str, Record] = {}
         self._stream = open(self.file, "a+b")  # noqa: SIM115  closed by __exit__
@@ -32,7 +35,7 @@ class Journal:
             self._claim(folder)
             if restart:
                 self._stream.truncate(0)
-            self._read(set(keys))
+            self._read({point.key: point for point in points})
         except BaseException:
             self._stream.close()
             raise
@@ -68,7 +71,7 @@ class Journal:
             raise SettingsError("another sweep is writing into this folder", file=str(folder),
                                 allowed="another --out, or wait for it") from None
 
-    def _read(self, known: set[str]) -> None:
+    def _read(self, known: Mapping[str, Point]) -> None:
         self._stream.seek(0)
         good = 0
         for number, line in enumerate(self._stream, start=1):
@@ -78,7 +81,8 @@ class Journal:
             if record.key not in known:
                 raise SettingsError("it holds results of other points than this sweep has",
                                     file=f"{self.file}:{number}", allowed=_REMEDY)
-            self.records[record.key] = record
+            # The sweep may have grown since: places and names are those of today.
+            self.records[record.key] = attrs.evolve(record, row={**record.row, **head(known[record.key])})
             good += len(line)
         self._stream.truncate(good)
 

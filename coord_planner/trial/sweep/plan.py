@@ -49,11 +49,12 @@ class Sweep:
     within: Mapping[str, float]
 
     def settings(self) -> tuple[dict[str, Any], ...]:
-        """Values of the varied keys, setting by setting; the order is the order of the rows."""
+        """Values of the varied keys, setting by setting, each once; the order is the order of the rows."""
         found = self._grid() if self.method == GRID else self._hypercube()
         if self.as_shipped and self.shipped() not in found:
             found.insert(0, self.shipped())
-        return tuple(found)
+        different = {json.dumps(values): values for values in found}
+        return tuple(different.values())
 
     def shipped(self) -> dict[str, Any]:
         """Values of the varied keys as they are in force in the file; keys without a value are left out."""

@@ -56,19 +56,20 @@ def carry_out(point: Point, measure: Measurer) -> Record:
             where = traceback.extract_tb(error.__traceback__)[-1]
             reason = f"{type(error).__name__} in {os.path.basename(where.filename)}:{where.lineno}: {error}"
             return _without_figures(point, FAILED, reason, began)
-    return Record(point.key, {**_head(point), "status": DONE, "reason": "", **figures, **_timing(began)}, track)
+    return Record(point.key, {**head(point), "status": DONE, "reason": "", **figures, **_timing(began)}, track)
 
 
 def given_up(point: Point, reason: str) -> Record:
     """The record of a point that no process lived to finish."""
-    return Record(point.key, {**_head(point), "status": FAILED, "reason": reason})
+    return Record(point.key, {**head(point), "status": FAILED, "reason": reason})
 
 
 def _without_figures(point: Point, status: str, reason: str, began: float) -> Record:
-    return Record(point.key, {**_head(point), "status": status, "reason": reason, **_timing(began)})
+    return Record(point.key, {**head(point), "status": status, "reason": reason, **_timing(began)})
 
 
-def _head(point: Point) -> dict[str, Any]:
+def head(point: Point) -> dict[str, Any]:
+    """The columns that say which point a row is of."""
     return {"point": point.number, "setting": point.setting, "key": point.key, **point.labels, "seed": point.seed}
 
 
