@@ -39,6 +39,7 @@ BAD: dict[str, tuple[dict[str, Any], Sequence[str]]] = {
     "no seeds": ({"seeds": None}, ["seeds: it has to be given", "[1, 2, 3]"]),
     "seeds twice": ({"seeds": [1, 1]}, ["seeds", "different whole numbers"]),
     "no such parameter file": ({"params": "other.yaml"}, ["other.yaml: there is no such file"]),
+    "no manoeuvre": ({"manoeuvre": []}, ["manoeuvre", "different ones of corner, led"]),
     "unknown manoeuvre": ({"manoeuvre": "cornr"}, ["manoeuvre", "did you mean corner?", "corner, led"]),
     "unknown key to vary": ({"vary": {"coupling.strenght": [1.0]}},
                             ["vary.coupling.strenght", "did you mean coupling.strength?"]),
@@ -125,6 +126,14 @@ def test_a_grid_goes_through_every_combination_with_every_seed(tmp_path: Path) -
         {"coupling.strength": 0.5, "graph.edges": "none"}]
     assert found[4].flat["graph.edges"] == []
     assert [point.seed for point in found[:4]] == [1, 2, 1, 2]
+
+
+def test_several_manoeuvres_are_each_rehearsed_with_every_seed(tmp_path: Path) -> None:
+    """A parameter that one of them has of its own may be varied all the same: the other shows its effect."""
+    file = sweep_file(tmp_path, manoeuvre=["corner", "led"], vary={"coupling.alignment": [0.0, 1.0]})
+    found = points(load_sweep(file))
+    assert [(point.setting, point.manoeuvre, point.seed) for point in found] == [
+        (setting, manoeuvre, seed) for setting in (0, 1) for manoeuvre in ("corner", "led") for seed in (1, 2)]
 
 
 def test_a_latin_hypercube_has_one_point_in_each_layer_of_each_parameter(tmp_path: Path) -> None:

@@ -46,6 +46,9 @@ def test_the_best_is_the_cheapest_on_average_and_clearance_counts_the_other_way(
     assert found[0].objective == pytest.approx(2.0 - 10.0) and found[1].objective == pytest.approx(1.9 - 9.5)
     assert found[0].doubt == pytest.approx(1.0)  # deviation sqrt(2), over sqrt(2)
     assert best(found) is found[0]
+    two = (row(0, manoeuvre=name, **{SPREAD: more + n}) for name, more in (("a", 0.0), ("b", 9.0)) for n in (0, 2))
+    dearer = settings(*two, objective={SPREAD: 1.0})
+    assert dearer[0].doubt == pytest.approx(1 / np.sqrt(2)), "that one manoeuvre costs more is no doubt"
     assert best(settings(row(0, contacts=1), objective={SPREAD: 1.0})) is None
 
 

@@ -39,7 +39,8 @@ def made_up(folder: Path, **changes: Any) -> Outcome:
     records = []
     for point in points(sweep):
         strength = float(point.flat["coupling.strength"])
-        row = {"point": point.number, "setting": point.setting, "key": point.key, **point.labels, "seed": point.seed,
+        row = {"point": point.number, "setting": point.setting, "key": point.key, **point.labels,
+               "manoeuvre": point.manoeuvre, "seed": point.seed,
                "status": "done", "reason": "", "completed": True, "state": "ended", "contacts": 0, "warnings": "",
                "limit_violations": 0, "site_min_clearance_m": 0.6, "min_clearance_m": 1.0 - 0.1 * strength / 50,
                "heading_spread_deg": 10 / (1 + strength) + point.seed, "duration_s": 10 + 0.02 * strength,

@@ -92,6 +92,9 @@ def _carry_on(journal: Journal, todo: Sequence[Point], table: Path, workers: int
                 if time.monotonic() > written + _TABLE_EVERY:
                     write_table(ordered(journal.records.values()), table)
                     written = time.monotonic()
+    except KeyboardInterrupt:
+        say(f"\nInterrupted: {len(journal.records)} of {len(todo)} rehearsals are kept; the same command goes on.")
+        raise
     finally:
         write_table(ordered(journal.records.values()), table)
 

@@ -22,7 +22,7 @@ _MOST_BROKEN = 6
 def as_json(found: Outcome, files: Mapping[str, str]) -> dict[str, Any]:
     """The JSON object of ``sweep --json``."""
     return dict(plain({
-        "sweep": found.sweep.name, "manoeuvre": found.sweep.manoeuvre, "objective": dict(found.sweep.objective),
+        "sweep": found.sweep.name, "manoeuvres": list(found.sweep.manoeuvres), "objective": dict(found.sweep.objective),
         "rehearsals": len(found.rows), **_counts(found), "settings": len(found.settings),
         "within_rules": sum(setting.keeps for setting in found.settings),
         "best": _setting(found.best), "as_shipped": _setting(found.shipped),
@@ -49,14 +49,15 @@ def _setting(setting: Optional[Setting]) -> Optional[dict[str, Any]]:
 def write_outcome(found: Outcome, files: Mapping[str, str]) -> None:
     """Everything that matters of a sweep, for people."""
     counts = _counts(found)
-    write(f"{found.sweep.name}: {len(found.rows)} rehearsals of {found.sweep.manoeuvre}, {counts['done']} carried out, "
+    manoeuvres = " and ".join(found.sweep.manoeuvres)
+    write(f"{found.sweep.name}: {len(found.rows)} rehearsals of {manoeuvres}, {counts['done']} carried out, "
           f"{counts['refused']} refused, {counts['failed']} failed; {sum(s.keeps for s in found.settings)} of "
           f"{len(found.settings)} settings keep every rule.\n")
     if found.best is not None:
         write_heading("Best within the rules, and the trade-off front")
         _write_settings(found)
         terms = " + ".join(_term(name, weight) for name, weight in found.sweep.objective.items() if weight)
-        write(f"Objective: {terms}, mean over the seeds; less is better.\n")
+        write(f"Objective: {terms}, mean over the rehearsals; less is better.\n")
     _write_broken(found)
     if found.sweep.axes:
         _write_effects(found)

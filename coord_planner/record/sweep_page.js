@@ -45,13 +45,15 @@
   function valuesOf(setting) {
     return sweep.axes.map((a) => a.key + " " + short(sweep.settings[setting].labels[a.key])).join(", ") || "the file as it stands";
   }
+  const several = sweep.manoeuvres.length > 1;
+  function which(row) { return (several ? row.manoeuvre.replace(/_/g, " ") + ", " : "") + "seed " + row.seed; }
   function largest(values) { return values.length ? Math.max(...values) : null; }
 
   // ---- words ------------------------------------------------------------------------------------------
   function words() {
     const kept = sweep.settings.filter((s) => s.keeps).length, all = sweep.settings.length;
     element("kicker").textContent = "Sweep · " + sweep.site + " · " + sweep.robots.length + (sweep.robots.length === 1 ? " robot" : " robots");
-    element("name").textContent = sweep.manoeuvre;
+    element("name").textContent = sweep.manoeuvres.join(", ");
     element("verdict").textContent = sweep.best === null ? "✕ No setting keeps every rule" : "✓ " + kept + " of " + all + " settings keep every rule";
     element("verdict").classList.toggle("bad", sweep.best === null);
     const said = ["The machines were simulated."];
@@ -62,7 +64,7 @@
       Object.entries(sweep.within).map(([name, value]) => ", " + sweep.measures[name].words + (sweep.measures[name].larger_is_better ? " at least " : " at most ") +
         short(value) + " " + sweep.measures[name].unit).join("") + "; in every rehearsal of a setting.");
     element("origin").textContent = said.join(" ");
-    element("front-key").textContent = "Each mark is a setting, the mean over its seeds. Filled: keeps every rule. Cross: does not. Star: the best by the objective. " +
+    element("front-key").textContent = "Each mark is a setting, the mean over its rehearsals. Filled: keeps every rule. Cross: does not. Star: the best by the objective. " +
       "Diamond: the file as shipped. Line: settings that no other beats in both directions. A click shows the turn.";
     element("measures-key").textContent = Object.values(sweep.measures).map((m) => m.words[0].toUpperCase() + m.words.slice(1) + ": " + m.meaning).join(". ") + ".";
     element("each-key").textContent = "Each mark is a rehearsal; a cross broke a rule. The line joins the means. A click shows the turn.";
@@ -84,7 +86,7 @@
     tile("Best objective", short(best.objective), "", shipped && shipped.objective !== null ? "as shipped " + short(shipped.objective) : "less is better");
     sweep.main.forEach((name) => {
       const m = sweep.measures[name], before = shipped ? shipped.mean[name] : null;
-      tile("Best: " + m.words, short(best.mean[name]), m.unit, before === null ? "mean over seeds" : "as shipped " + short(before));
+      tile("Best: " + m.words, short(best.mean[name]), m.unit, before === null ? "mean over rehearsals" : "as shipped " + short(before));
     });
   }
 
@@ -162,7 +164,7 @@
       [true, false].forEach((keeps) => {
         const some = there.filter((row) => sweep.settings[row.setting].keeps === keeps);
         traces.push({ type: "scatter", mode: "markers", x: some.map((row) => shown(of(row))), y: some.map((row) => row[name]), xaxis: "x" + id, yaxis: "y" + id,
-          customdata: some.map((row) => row.point), hoverinfo: "text", text: some.map((row) => [valuesOf(row.setting), "seed " + row.seed, named(name) + " " + short(row[name])].map(safe).join("<br>")),
+          customdata: some.map((row) => row.point), hoverinfo: "text", text: some.map((row) => [valuesOf(row.setting), which(row), named(name) + " " + short(row[name])].map(safe).join("<br>")),
           marker: keeps ? { size: 7, color: css("--r0"), opacity: 0.75 } : { size: 7, symbol: "x-thin", color: css("--bad"), line: { width: 1.6, color: css("--bad") } } });
       });
       const values = [...new Set(there.map(of))];
@@ -246,7 +248,7 @@
     if (sweep.best === null) return;
     const changed = sweep.best === sweep.shipped ? "The file as shipped is the best of these: " : "";
     const price = Object.entries(sweep.objective).filter(([, w]) => w > 0).map(([name, w]) => (sweep.measures[name].larger_is_better ? "−" : "") + short(w) + " × " + sweep.measures[name].words).join(" + ");
-    element("best-words").textContent = changed + valuesOf(sweep.best) + ". Objective, mean over the seeds: " + price + "; less is better. Rehearse and test it on the site before anybody relies on it.";
+    element("best-words").textContent = changed + valuesOf(sweep.best) + ". Objective, mean over the rehearsals: " + price + "; less is better. Rehearse and test it on the site before anybody relies on it.";
     element("best-text").textContent = sweep.best_text;
     element("save").addEventListener("click", () => {
       const link = make("a", null, document.body);
@@ -281,9 +283,9 @@
     const holder = element("seeds");
     holder.textContent = "";
     if (chosenSetting < 0 || sweep.settings[chosenSetting].rows.length < 2) return;
-    make("span", "Seed", holder);
+    make("span", several ? "Rehearsal" : "Seed", holder);
     sweep.settings[chosenSetting].rows.forEach((point) => {
-      const button = make("button", String(rowOf[point].seed), holder);
+      const button = make("button", several ? which(rowOf[point]) : String(rowOf[point].seed), holder);
       button.type = "button"; button.setAttribute("aria-pressed", String(rowOf[point] === chosenRow));
       button.addEventListener("click", () => choose(rowOf[point], chosenSetting));
     });
@@ -292,7 +294,7 @@
     const of = element("of");
     of.textContent = "";
     if (!chosenRow) { of.textContent = "Nothing was rehearsed."; return; }
-    make("b", "Setting " + chosenSetting + (chosenSetting === sweep.best ? ", the best" : "") + (chosenSetting === sweep.shipped ? ", as shipped" : "") + ", seed " + chosenRow.seed, of);
+    make("b", "Setting " + chosenSetting + (chosenSetting === sweep.best ? ", the best" : "") + (chosenSetting === sweep.shipped ? ", as shipped" : "") + ", " + which(chosenRow), of);
     of.append(": " + valuesOf(chosenSetting));
     const parts = chosenRow.status === "done" ? sweep.main.map((name) => sweep.measures[name].words + " " + short(chosenRow[name]) + "\u202f" + sweep.measures[name].unit) : [chosenRow.status + ": " + chosenRow.reason];
     if (chosenRow.contacts) parts.push("✕ " + chosenRow.contacts + " contacts");

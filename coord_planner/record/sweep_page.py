@@ -38,7 +38,7 @@ def write_sweep_page(found: Outcome, path: str | Path, best_text: str = "") -> N
 def sweep_page(found: Outcome, best_text: str = "") -> str:
     """The page as text: template, style, script, the charting library and the sweep's data, all in one."""
     parts = {
-        "title": _escaped(f"{found.sweep.name}: sweep of {found.sweep.manoeuvre}"),
+        "title": _escaped(f"{found.sweep.name}: sweep of {' and '.join(found.sweep.manoeuvres)}"),
         "style": _part("page.css") + _part("sweep_page.css"),
         "library": get_plotlyjs(),
         "data": _as_json(sweep_data(found, best_text)),
@@ -55,7 +55,8 @@ def sweep_data(found: Outcome, best_text: str = "") -> dict[str, Any]:
     order = {key: n for n, key in enumerate(used)}
     counted = [name for name, weight in sweep.objective.items() if weight]
     return dict(plain({
-        "name": sweep.name, "manoeuvre": sweep.manoeuvre.replace("_", " "), "site": sweep.base.fleet_name,
+        "name": sweep.name, "site": sweep.base.fleet_name,
+        "manoeuvres": [name.replace("_", " ") for name in sweep.manoeuvres],
         "invented": sweep.base.invented, "robots": list(sweep.base.driven.names),
         "reference": sweep.base.settings.site_rules.reference, "seeds": list(sweep.seeds),
         "faults": [f"{fault.kind.replace('_', ' ')}: {fault.robot or ' - '.join(fault.edge)} {fault.from_s:g} to "
@@ -90,9 +91,9 @@ def _setting(setting: Setting) -> dict[str, Any]:
 
 
 def _row(row: Any, order: dict[str, int]) -> dict[str, Any]:
-    kept = {key: row.get(key) for key in ("point", "setting", "seed", "status", "reason", "state", "contacts",
-                                          "limit_violations", "warnings", "site_min_clearance_m", *MEASURES)}
-    return kept | {"track": order.get(row["key"])}
+    kept = ("point", "setting", "manoeuvre", "seed", "status", "reason", "state", "contacts", "limit_violations",
+            "warnings", "site_min_clearance_m", *MEASURES)
+    return {key: row.get(key) for key in kept} | {"track": order.get(row["key"])}
 
 
 def _thinned(track: Any, poses: int) -> dict[str, Any]:

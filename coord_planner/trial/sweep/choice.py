@@ -16,15 +16,15 @@ Row = Mapping[str, Any]
 
 @attrs.frozen(eq=False)
 class Setting:
-    """One choice of the varied values, over all seeds.
+    """One choice of the varied values, over all manoeuvres and seeds.
 
     Attributes:
-        number: which. labels: the varied values as tables show them. rows: of its rehearsals, seed by seed.
+        number: which. labels: the varied values as tables show them. rows: of its rehearsals.
         mean: of each measure over the rehearsals that were carried out; NaN where there is none.
         worst: the same, the worst of them.
         broken: rules that some rehearsal did not keep, in words; empty: it is within the rules.
         objective: mean price, the less the better; NaN where a priced measure has no value.
-        doubt: standard error of that mean; NaN with one seed.
+        doubt: standard error of that mean, from the spread over the seeds; NaN with one seed.
     """
 
     number: int
@@ -93,13 +93,12 @@ def _judge(
 ) -> Setting:
     done = [row for row in rows if row["status"] == "done"]
     broken = tuple(dict.fromkeys(words for row in rows for words in broken_rules(row, within)))
-    prices = np.array([price(row, objective) for row in done])
-    doubt = float(np.std(prices, ddof=1) / math.sqrt(len(prices))) if len(prices) > 1 else math.nan
+    prices = [price(row, objective) for row in done]
     return Setting(
         number, labels, rows,
         {name: _mean([_number(row.get(name)) for row in done]) for name in MEASURES},
         {name: _worst([_number(row.get(name)) for row in done], MEASURES[name].larger_is_better) for name in MEASURES},
-        broken if rows else ("it was not rehearsed",), _mean(prices), doubt,
+        broken if rows else ("it was not rehearsed",), _mean(prices), _doubt(done, prices),
     )
 
 
@@ -131,6 +130,17 @@ def _number(value: Any) -> float:
 
 def _mean(values: Sequence[float] | np.ndarray) -> float:
     return float(np.mean(values)) if len(values) else math.nan
+
+
+def _doubt(rows: Sequence[Row], prices: Sequence[float]) -> float:
+    """Standard error of the mean price; what one manoeuvre costs more than another is no doubt."""
+    by_manoeuvre: dict[Any, list[float]] = {}
+    for row, each in zip(rows, prices):
+        by_manoeuvre.setdefault(row.get("manoeuvre"), []).append(each)
+    groups = list(by_manoeuvre.values())
+    if not groups or min(map(len, groups)) < 2:
+        return math.nan
+    return math.sqrt(sum(len(group) * float(np.var(group, ddof=1)) for group in groups)) / len(prices)
 
 
 def _worst(values: Sequence[float], larger_is_better: bool) -> float:

@@ -21,7 +21,8 @@ from .plan import GRID, LATIN_HYPERCUBE, Sweep
 
 _WHAT = "a sweep file (YAML)"
 _REQUIRED = {
-    "params": "a parameter file, its path seen from the sweep file", "manoeuvre": "the manoeuvre to be rehearsed",
+    "params": "a parameter file, its path seen from the sweep file",
+    "manoeuvre": "the manoeuvre to be rehearsed, or a list of them",
     "seeds": "a list of whole numbers, e.g. [1, 2, 3]", "objective": "what counts, e.g. {heading_spread_deg: 1.0}",
 }
 _OPTIONAL = {
@@ -57,11 +58,11 @@ class _Reader:
     def sweep(self) -> Sweep:
         self._check_keys()
         base = self._base()
-        manoeuvre = self._manoeuvre(base)
+        manoeuvres = self._manoeuvres(base)
         method = self._choice("method", GRID, (GRID, LATIN_HYPERCUBE))
-        axes = self._axes(base, manoeuvre, method)
+        axes = self._axes(base, manoeuvres, method)
         sweep = Sweep(
-            name=self._path.stem, base=base, manoeuvre=manoeuvre, seeds=self._seeds(), faults=self._faults(base),
+            name=self._path.stem, base=base, manoeuvres=manoeuvres, seeds=self._seeds(), faults=self._faults(base),
             fixed=self._held.get("set") or {}, axes=axes, method=method, points=self._points(method),
             sampling_seed=self._whole("sampling_seed", 1, 0, 2**31 - 1),
             as_shipped=bool(self._held.get("as_shipped", False)), objective=self._weights(), within=self._within(),
@@ -103,14 +104,18 @@ class _Reader:
         self._complaints.raise_any()
         return base
 
-    def _manoeuvre(self, base: Configuration) -> str:
-        name = str(self._held["manoeuvre"])
-        if name not in base.manoeuvres:
-            known = ", ".join(base.manoeuvres) or "none is named in the parameter file"
-            self._complaints.add(f"there is no manoeuvre {shown(name)}{nearest(name, base.manoeuvres)}", "manoeuvre",
-                                 known)
-            self._complaints.raise_any()
-        return name
+    def _manoeuvres(self, base: Configuration) -> tuple[str, ...]:
+        held = self._held["manoeuvre"]
+        names = tuple(map(str, held)) if isinstance(held, list) else (str(held),)
+        known = ", ".join(base.manoeuvres) or "none is named in the parameter file"
+        for name in names:
+            if name not in base.manoeuvres:
+                close = nearest(name, base.manoeuvres)
+                self._complaints.add(f"there is no manoeuvre {shown(name)}{close}", "manoeuvre", known)
+        if not names or len(set(names)) < len(names):
+            self._complaints.add(f"{shown(held)} cannot stand here", "manoeuvre", f"different ones of {known}")
+        self._complaints.raise_any()
+        return names
 
     def _seeds(self) -> tuple[int, ...]:
         seeds = self._held["seeds"]
@@ -179,7 +184,7 @@ class _Reader:
 
     # What is varied
 
-    def _axes(self, base: Configuration, manoeuvre: str, method: str) -> tuple[Axis, ...]:
+    def _axes(self, base: Configuration, manoeuvres: tuple[str, ...], method: str) -> tuple[Axis, ...]:
         known = {each.key: each for each in config.declarations(base.flat)}
         found = []
         for key, spread in (self._held.get("vary") or {}).items():
@@ -190,7 +195,7 @@ class _Reader:
                 self._complaints.add("every point is rehearsed with each of the seeds", where, "the list `seeds`")
             elif key in (self._held.get("set") or {}):
                 self._complaints.add("it is both set and varied", where, "one of the two")
-            elif self._check_in_force(base, manoeuvre, key, where):
+            elif self._check_in_force(base, manoeuvres, key, where):
                 before = self._complaints.count
                 axis = self._axis(known[key], spread, where, method)
                 if axis is not None and self._complaints.count == before:
@@ -200,13 +205,14 @@ class _Reader:
             self._complaints.add("a hypercube needs something to vary", "vary", f"KEY: {_SPAN}")
         return tuple(found)
 
-    def _check_in_force(self, base: Configuration, manoeuvre: str, key: str, where: str) -> bool:
+    def _check_in_force(self, base: Configuration, manoeuvres: tuple[str, ...], key: str, where: str) -> bool:
         field = _OWN.get(key)
-        if field and getattr(base.manoeuvres[manoeuvre], field) is not None:
-            self._complaints.add(f"{manoeuvre} has {field} of its own, so that this would change nothing", where,
-                                 f"manoeuvres.{manoeuvre}.{field}")
-            return False
-        return True
+        if not field or any(getattr(base.manoeuvres[name], field) is None for name in manoeuvres):
+            return True
+        names = " and ".join(manoeuvres)
+        own = ", ".join(f"manoeuvres.{name}.{field}" for name in manoeuvres)
+        self._complaints.add(f"{names} has {field} of its own, so that this would change nothing", where, own)
+        return False
 
     def _axis(self, known: Declaration, spread: Any, where: str, method: str) -> Optional[Axis]:
         if isinstance(spread, list):
@@ -279,8 +285,9 @@ def _is_number(value: Any) -> bool:
 def _check_settings(sweep: Sweep, complaints: Complaints) -> None:
     """Values that are right one by one and cannot be kept together."""
     settings = sweep.settings()
-    if len(settings) * len(sweep.seeds) > _MOST_POINTS:
-        complaints.add(f"{len(settings)} settings with {len(sweep.seeds)} seeds each are too many", "vary",
+    each = len(sweep.seeds) * len(sweep.manoeuvres)
+    if len(settings) * each > _MOST_POINTS:
+        complaints.add(f"{len(settings)} settings with {each} rehearsals each are too many", "vary",
                        f"at most {_MOST_POINTS} rehearsals")
         complaints.raise_any()
     for values in settings:

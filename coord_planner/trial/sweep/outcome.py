@@ -76,7 +76,7 @@ def _heading(found: Outcome, changes: Mapping[str, Any], given: Mapping[str, Any
     assert found.best is not None
     lines = [
         f"# Written by `coord-planner sweep` ({sweep.name}): the best of {len(found.settings)} settings for "
-        f"{sweep.manoeuvre}, from rehearsals",
+        f"{' and '.join(sweep.manoeuvres)}, from rehearsals",
         f"# with simulated machines. Made of {Path(sweep.base.file).name}; rehearse and test it on the site before "
         "anybody relies on it.",
     ]

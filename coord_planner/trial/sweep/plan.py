@@ -25,8 +25,8 @@ class Sweep:
     """What is asked for.
 
     Attributes:
-        name: of the sweep. base: the parameter file, with ``fixed`` in force. manoeuvre: that is rehearsed.
-        seeds: of the noise, each point with each of them. faults: the same in every rehearsal.
+        name: of the sweep. base: the parameter file, with ``fixed`` in force. manoeuvres: that are rehearsed.
+        seeds: of the noise, each setting of each manoeuvre with each of them. faults: the same in every rehearsal.
         fixed: values of the file that are changed throughout, by key. axes: what is varied.
         method: GRID or LATIN_HYPERCUBE. points: settings of a hypercube. sampling_seed: of its random numbers.
         as_shipped: whether the file as it stands is a setting too.
@@ -36,7 +36,7 @@ class Sweep:
 
     name: str
     base: Configuration
-    manoeuvre: str
+    manoeuvres: tuple[str, ...]
     seeds: tuple[int, ...]
     faults: tuple[Fault, ...]
     fixed: Mapping[str, Any]
@@ -104,15 +104,15 @@ class Point:
 
 
 def points(sweep: Sweep) -> tuple[Point, ...]:
-    """Every rehearsal of a sweep, setting by setting, seed by seed."""
+    """Every rehearsal of a sweep: setting by setting, manoeuvre by manoeuvre, seed by seed."""
     found: list[Point] = []
     for setting, values in enumerate(sweep.settings()):
         flat, labels = {**sweep.base.flat, **values}, sweep.labels(values)
         content = json.dumps(_content(flat, sweep), sort_keys=True)
-        for seed in sweep.seeds:
-            key = hashlib.sha256(f"{content} {seed}".encode()).hexdigest()[:32]
+        for manoeuvre, seed in product(sweep.manoeuvres, sweep.seeds):
+            key = hashlib.sha256(f"{content} {manoeuvre} {seed}".encode()).hexdigest()[:32]
             found.append(Point(
-                len(found), setting, labels, flat, sweep.base.file, sweep.manoeuvre, seed, sweep.faults, key
+                len(found), setting, labels, flat, sweep.base.file, manoeuvre, seed, sweep.faults, key
             ))
     return tuple(found)
 
@@ -120,7 +120,7 @@ def points(sweep: Sweep) -> tuple[Point, ...]:
 def _content(flat: Mapping[str, Any], sweep: Sweep) -> dict[str, Any]:
     return {
         "version": __version__, "flat": {key: _plain(value) for key, value in flat.items()},
-        "manoeuvre": sweep.manoeuvre, "faults": [attrs.asdict(fault) for fault in sweep.faults],
+        "faults": [attrs.asdict(fault) for fault in sweep.faults],
     }
 
 

@@ -70,7 +70,8 @@ def _without_figures(point: Point, status: str, reason: str, began: float) -> Re
 
 def head(point: Point) -> dict[str, Any]:
     """The columns that say which point a row is of."""
-    return {"point": point.number, "setting": point.setting, "key": point.key, **point.labels, "seed": point.seed}
+    return {"point": point.number, "setting": point.setting, "key": point.key, **point.labels,
+            "manoeuvre": point.manoeuvre, "seed": point.seed}
 
 
 def _timing(began: float) -> dict[str, Any]:
