@@ -6,6 +6,7 @@ import typer
 
 from .commands.check import check
 from .commands.demo import demo
+from .commands.review import review
 from .commands.simulate import simulate
 
 app = typer.Typer(
@@ -16,6 +17,7 @@ app = typer.Typer(
 app.command()(demo)
 app.command()(check)
 app.command()(simulate)
+app.command()(review)
 
 
 @app.callback()

@@ -13,8 +13,8 @@ from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 from .. import config
 from ..errors import RefusedError
 from ..trial.run import Run
-from .speaking import DID_NOT_HOLD, errors_reported, say, table, write, write_json, write_table
-from .targets import prepare_file
+from .speaking import DID_NOT_HOLD, errors_reported, figure, say, table, write, write_json, write_table
+from .targets import prepare_bag, prepare_file
 
 
 def simulate(
@@ -33,6 +33,9 @@ def simulate(
     page: Annotated[
         Optional[Path], typer.Option("--page", metavar="FILE", help="Also write a page to look at (HTML).")
     ] = None,
+    bag: Annotated[
+        Optional[Path], typer.Option("--bag", metavar="DIR", help="Also record it: a rosbag2 folder (MCAP), made new.")
+    ] = None,
 ) -> None:
     """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
     with errors_reported():
@@ -41,12 +44,16 @@ def simulate(
         configuration.all_starts()
         if page is not None:
             prepare_file(page, "--page")
+        if bag is not None:
+            prepare_bag(bag, "--bag")
         try:
             run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
         except RefusedError as refused:
             if as_json:
                 write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
             raise
+        if bag is not None:
+            _record(run, configuration, bag)
         _report(run, as_json, page)
 
 
@@ -68,6 +75,13 @@ def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
     with Progress(*columns, console=console, transient=True) as bar:
         task = bar.add_task(manoeuvre, total=1.0)
         return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
+
+
+def _record(run: Run, configuration: config.Configuration, bag: Path) -> None:
+    from ..record.bag_write import write_bag
+
+    count = write_bag(run, bag, frame=configuration.frame, parameters=configuration.flat)
+    say(f"The recording is in {bag}: {count} messages.")
 
 
 def _report(run: Run, as_json: bool, page: Path | None) -> None:
@@ -105,21 +119,18 @@ def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
 
 
 def _write_figures(run: Run, figures: dict[str, Any]) -> None:
-    write(f"{run.manoeuvre}: {figures['state']} after {_figure(figures['duration_s'], 1)} s; "
+    write(f"{run.manoeuvre}: {figures['state']} after {figure(figures['duration_s'], 1)} s; "
           f"{figures['contacts']} contacts, {figures['limit_violations']} commands outside a limit; smallest clearance "
-          f"{_figure(figures['min_clearance_m'], 2)} m (the site allows {run.min_clearance:g} m).\n")
+          f"{figure(figures['min_clearance_m'], 2)} m (the site allows {run.min_clearance:g} m).\n")
     columns = {"heading_change_rad": "heading change rad", "turn_onset_s": "turn onset s", "end_error_m": "end error m",
                "end_heading_error_rad": "end heading error rad"}
     robots = table("robot", *columns.values())
     for name in run.fleet.names:
-        robots.add_row(name, *(_figure(figures[key][name], 3) for key in columns))
+        robots.add_row(name, *(figure(figures[key][name], 3) for key in columns))
     write_table(robots)
     for warning in figures["warnings"]:
-        write(f"{_figure(warning['first_s'], 1)} to {_figure(warning['last_s'], 1)} s: {warning['text']}")
+        write(f"{figure(warning['first_s'], 1)} to {figure(warning['last_s'], 1)} s: {warning['text']}")
     ticks = figures["tick_ms"]
-    write(f"Ticks: median {_figure(ticks['median'], 1)} ms, 99% below {_figure(ticks['p99'], 1)} ms; "
-          f"{_figure(figures['real_time_factor'], 1)} times as fast as real time.")
+    write(f"Ticks: median {figure(ticks['median'], 1)} ms, 99% below {figure(ticks['p99'], 1)} ms; "
+          f"{figure(figures['real_time_factor'], 1)} times as fast as real time.")
 
-
-def _figure(value: float | None, digits: int) -> str:
-    return "-" if value is None else f"{value:.{digits}f}"
