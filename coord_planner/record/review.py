@@ -98,7 +98,8 @@ def _robot(record: FleetRecord, row: int) -> dict[str, Any]:
         "plans_from": robot.topics.plan or None, "poses": len(moved.times), "spacing_s": moved.spacing,
         "irregular": moved.irregular, "headings_from": moved.headings_from, "rates_from": moved.rates_from,
         "smoothing_s": moved.window, "rate_sd_rad_per_s": moved.rate_sd, "position_sd_m": moved.position_sd,
-        "pose_jumps_s": list(moved.jumps), "motion": motion_in_words(record, row),
+        "pose_jumps_s": list(moved.jumps), "stale_poses": moved.stale, "stray_poses": moved.strays,
+        "motion": motion_in_words(record, row),
     }
 
 
@@ -110,7 +111,11 @@ def motion_in_words(record: FleetRecord, row: int) -> str:
         sampled += f", irregularly (long pauses are {moved.irregular:.1f} times the short ones)"
     if moved.rates_from == "twist":
         return f"{sampled}; speed and turn rate as the odometry tells them, which agrees with its poses"
-    way = "positions alone, forward driving taken for granted" if moved.headings_from == "path" else "poses"
+    left_out = [f"{count} {what}" for count, what in (
+        (moved.stale, "that repeat the one before while it drives on"), (moved.strays, "far off their neighbours")) if count]
+    if left_out:
+        sampled += f"; left out: {' and '.join(left_out)}"
+    way = "the shape of the way, forward driving taken for granted" if moved.headings_from == "path" else "poses"
     return (f"{sampled}; speed and turn rate from {way}: parabolas over {moved.window:.2g} s, "
             f"turn rate good to {moved.rate_sd:.2g} rad/s")
 

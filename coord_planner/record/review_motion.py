@@ -1,8 +1,10 @@
 """How a robot moved, from poses that may be noisy and irregular: speed, turn rate and curvature.
 
 Over a window round each moment a parabola is fitted to x, y and heading, with weights that fall off towards its ends
-(local regression: Savitzky & Golay, Anal. Chem. 36, 1964, for even spacing; Cleveland, JASA 74, 1979, for uneven; both
-from memory). The window is the shortest that brings the noise of the rates below a bound; what was taken is told.
+(:mod:`local_fit`). The window is the shortest that brings the noise of the rates below a bound; what was taken is told.
+
+Where the orientations say nothing, headings and curvatures come from the shape of the way, fitted over its length
+(:mod:`review_path`): stamps that are late or rounded shift a pose along the way, but not aside.
 """
 
 from __future__ import annotations
@@ -12,16 +14,15 @@ import math
 import attrs
 import numpy as np
 
+from . import local_fit, review_path
 from .bag_clock import Placed
 from .turns import deviation
 
 _FEWEST = 5  # poses in a window
 _RATE_NOISE, _SPEED_NOISE = 0.02, 0.05  # rad/s, m/s: what the window is chosen for
 _LONGEST = 2.0  # seconds of window, unless poses are so rare that five take longer
-_LONGEST_OF_PATHS = 10.0  # seconds; a path's turning needs second derivatives, which take longer
 _GAP_FACTOR, _SHORTEST_GAP = 5.0, 0.5  # a gap: so many usual spacings, and so many seconds
-_SLOW = 0.1  # part of the usual speed below which a path has no direction
-_BLOCK = 20_000  # rows of a fit that are in memory at once
+_SLOW = 0.1  # part of the usual speed below which a curvature means nothing
 
 
 @attrs.frozen
@@ -37,6 +38,8 @@ class Motion:
         rate_sd: standard deviation of the turn rates, rad/s. position_sd: of positions, metres.
         headings_from, rates_from: ``orientation`` or ``path``; ``twist`` or ``poses``.
         gaps: (from, to) in seconds. jumps: times at which the pose jumped.
+        stale: poses that repeated the one before while the robot drove on. strays: poses far off their neighbours. Both
+            were left out.
     """
 
     times: np.ndarray
@@ -54,6 +57,8 @@ class Motion:
     rates_from: str
     gaps: tuple[tuple[float, float], ...]
     jumps: tuple[float, ...]
+    stale: int = 0
+    strays: int = 0
 
     @property
     def curvatures(self) -> np.ndarray:
@@ -76,6 +81,8 @@ def motion(placed: Placed, table: np.ndarray) -> Motion | None:
         placed: their times. table: received, stamp, x, y, heading, speed, turn rate; shape (S, 7).
     """
     order, stretch = _in_order(placed, table)
+    kept, stale, strays = clean(placed.times[order], table[order, 2:4])
+    order, stretch = order[kept], stretch[kept]
     if len(order) < 3:
         return None
     times, values = placed.times[order], table[order, 2:]
@@ -84,27 +91,86 @@ def motion(placed: Placed, table: np.ndarray) -> Motion | None:
     gaps, jumps = _gaps(times, stretch, usual), _jumps(times, values[:, :2])
     part = np.concatenate([[0], np.cumsum(gaps | jumps)])
     headings = _headings(values, part)
-    from_path = headings is None
-    headings = np.zeros(len(times)) if headings is None else headings
-    noise = float(np.hypot(deviation(values[:, 0]), deviation(values[:, 1])) / math.sqrt(2.0))
-    window = _window(usual, noise, deviation(headings), from_path, values)
-    fitted = _fit(times, np.column_stack([values[:, :2], headings]), part, window)
-    if from_path:
-        headings, speeds, rates, rate_sd = _along_path(fitted, noise, window, usual)
-    else:
-        speeds = fitted[:, 1, 0] * np.cos(headings) + fitted[:, 1, 1] * np.sin(headings)
-        rates, rate_sd = fitted[:, 1, 2], _slope_sd(deviation(headings), window, usual)
-    told = not from_path and _agrees(values[:, 3:5], speeds, rates)
-    if told:
-        speeds, rates, rate_sd = values[:, 3], values[:, 4], deviation(values[:, 4])
+    of = _along_path(times, values[:, :2], part) if headings is None else _by_orientation(times, values, headings, part)
     ends = np.percentile(spacing, [10, 90])
     return Motion(
-        times, np.column_stack([values[:, :2], headings]), fitted[:, 1, :2], speeds, rates, part,
-        0.0 if told else window, usual, float(ends[1] / max(ends[0], 1e-9)), rate_sd, noise,
-        "path" if from_path else "orientation", "twist" if told else "poses",
+        times, np.column_stack([values[:, :2], of.headings]), of.velocity, of.speeds, of.rates, part,
+        of.window, usual, float(ends[1] / max(ends[0], 1e-9)), of.rate_sd, of.position_sd,
+        "path" if headings is None else "orientation", "twist" if of.window == 0.0 else "poses",
         tuple((float(times[n]), float(times[n + 1])) for n in np.flatnonzero(gaps)),
-        tuple(float(times[n + 1]) for n in np.flatnonzero(jumps & ~gaps)),
+        tuple(float(times[n + 1]) for n in np.flatnonzero(jumps & ~gaps)), stale, strays,
     )
+
+
+@attrs.frozen
+class _Worked:
+    """What was worked out for the poses of a robot; see Motion."""
+
+    headings: np.ndarray
+    velocity: np.ndarray
+    speeds: np.ndarray
+    rates: np.ndarray
+    window: float
+    rate_sd: float
+    position_sd: float
+
+
+def _by_orientation(times: np.ndarray, values: np.ndarray, headings: np.ndarray, part: np.ndarray) -> _Worked:
+    usual = float(np.median(np.diff(times)))
+    noise = float(np.hypot(deviation(values[:, 0]), deviation(values[:, 1])) / math.sqrt(2.0))
+    window = _window(usual, noise, deviation(headings))
+    fitted = local_fit.fit(times, np.column_stack([values[:, :2], headings]), part, window)
+    speeds = fitted[:, 1, 0] * np.cos(headings) + fitted[:, 1, 1] * np.sin(headings)
+    rates, rate_sd = fitted[:, 1, 2], local_fit.slope_sd(deviation(headings), window, usual)
+    if _agrees(values[:, 3:5], speeds, rates):
+        speeds, rates, rate_sd, window = values[:, 3], values[:, 4], deviation(values[:, 4]), 0.0
+    return _Worked(headings, fitted[:, 1, :2], speeds, rates, window, rate_sd, noise)
+
+
+def _along_path(times: np.ndarray, places: np.ndarray, part: np.ndarray) -> _Worked:
+    way = review_path.way(times, places, part, _RATE_NOISE)
+    velocity = way.speeds[:, None] * np.column_stack([np.cos(way.headings), np.sin(way.headings)])
+    return _Worked(way.headings, velocity, way.speeds, way.speeds * way.curvatures, way.window, way.rate_sd, way.noise)
+
+
+def clean(times: np.ndarray, places: np.ndarray) -> tuple[np.ndarray, int, int]:
+    """Numbers of the poses that can be believed, and how many were stale and how many strayed."""
+    stale = _stale(times, places)
+    kept = np.flatnonzero(~stale)
+    strays = 0
+    for _ in range(3):  # a stray pose hides its neighbours
+        astray = _astray(times[kept], places[kept])
+        strays += int(astray.sum())
+        kept = kept[~astray]
+        if not astray.any():
+            break
+    return kept, int(stale.sum()), strays
+
+
+def _stale(times: np.ndarray, places: np.ndarray) -> np.ndarray:
+    """Positions that repeat the one before to the last digit, although the robot then turns out to have driven on."""
+    if len(times) < 3:
+        return np.zeros(len(times), dtype=bool)
+    steps = np.hypot(*np.diff(places, axis=0).T)
+    repeats = np.concatenate([[False], steps == 0.0])
+    if not repeats.any() or not (steps > 0.0).any():
+        return np.zeros(len(times), dtype=bool)
+    fresh = np.flatnonzero(~repeats)
+    speeds = np.hypot(*np.diff(places[fresh], axis=0).T) / np.diff(times[fresh]) if len(fresh) > 1 else np.zeros(0)
+    drove = np.concatenate([speeds > 0.2 * float(np.median(speeds)), [False]]) if len(speeds) else np.zeros(1, bool)
+    return repeats & drove[np.cumsum(~repeats) - 1]
+
+
+def _astray(times: np.ndarray, places: np.ndarray) -> np.ndarray:
+    """Poses far off the straight line between their neighbours: by the standard of the whole series, and there and back."""
+    if len(times) < 5:
+        return np.zeros(len(times), dtype=bool)
+    part = ((times[1:-1] - times[:-2]) / (times[2:] - times[:-2]))[:, None]
+    chord = places[2:] - places[:-2]
+    off = np.hypot(*(places[1:-1] - places[:-2] - part * chord).T)
+    limit = np.maximum(0.3 + 8.0 * 1.4826 * float(np.median(off)), np.hypot(*chord.T))
+    peak = np.concatenate([[False], (off[1:-1] > off[:-2]) & (off[1:-1] >= off[2:]), [False]])
+    return np.concatenate([[False], peak & (off > limit), [False]])
 
 
 def _in_order(placed: Placed, table: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -148,90 +214,14 @@ def _headings(values: np.ndarray, part: np.ndarray) -> np.ndarray | None:
     return headings
 
 
-def _window(usual: float, noise: float, heading_noise: float, from_path: bool, values: np.ndarray) -> float:
+def _window(usual: float, noise: float, heading_noise: float) -> float:
     """Length of the window, seconds: the shortest that keeps the noise of the rates below the bounds."""
-    longest = max(_LONGEST_OF_PATHS if from_path else _LONGEST, (_FEWEST - 1) * usual)
-    lengths = np.geomspace((_FEWEST - 1) * usual, longest, 12)
-    for window in lengths:
-        speed_sd = _slope_sd(noise, window, usual)
-        if from_path:
-            good = _bend_sd(noise, window, usual) <= _RATE_NOISE * max(_usual_speed(values[:, :2], usual), 0.1)
-        else:
-            good = speed_sd <= _SPEED_NOISE and _slope_sd(heading_noise, window, usual) <= _RATE_NOISE
-        if good:
+    longest = max(_LONGEST, (_FEWEST - 1) * usual)
+    for window in np.geomspace((_FEWEST - 1) * usual, longest, 12).tolist():
+        speed_sd, rate_sd = (local_fit.slope_sd(sd, window, usual) for sd in (noise, heading_noise))
+        if speed_sd <= _SPEED_NOISE and rate_sd <= _RATE_NOISE:
             return float(window)
     return float(longest)
-
-
-def _usual_speed(places: np.ndarray, usual: float) -> float:
-    steps = np.hypot(*np.diff(places, axis=0).T)
-    return float(np.percentile(steps, 75)) / usual
-
-
-def _slope_sd(sd: float, window: float, usual: float) -> float:
-    """Deviation of a fitted slope: sd sqrt(12 / n) / window for n even samples (common practice)."""
-    return sd * math.sqrt(12.0 / (window / usual + 1.0)) / window
-
-
-def _bend_sd(sd: float, window: float, usual: float) -> float:
-    """Deviation of a fitted second derivative: sd sqrt(720 / n) / window^2 (common practice)."""
-    return sd * math.sqrt(720.0 / (window / usual + 1.0)) / window**2
-
-
-def _fit(times: np.ndarray, values: np.ndarray, part: np.ndarray, window: float) -> np.ndarray:
-    """Value and first two derivatives of local parabolas, shape (S, 3, columns).
-
-    Tricube weights over the window, which never reaches across the end of a part.
-    """
-    out = np.empty((len(times), 3, values.shape[1]))
-    for number in range(int(part[-1]) + 1):
-        rows = np.flatnonzero(part == number)
-        for begin in range(0, len(rows), _BLOCK):
-            block = rows[begin:begin + _BLOCK]
-            out[block] = _fit_block(times, values, rows, block, window)
-    return out
-
-
-def _fit_block(times: np.ndarray, values: np.ndarray, rows: np.ndarray, block: np.ndarray, window: float) -> np.ndarray:
-    own, centres = times[rows], times[block]
-    # at least five poses, also where they are rarer than usual
-    half = np.full(len(block), window / 2)
-    many = min(_FEWEST, len(rows))
-    left = np.clip(np.searchsorted(own, centres) - many // 2, 0, len(rows) - many)
-    half = np.maximum(half, np.maximum(centres - own[left], own[left + many - 1] - centres)) * (1.0 + 1e-9)
-    first = np.searchsorted(own, centres - half)
-    count = int((np.searchsorted(own, centres + half, side="right") - first).max())
-    index = np.minimum(first[:, None] + np.arange(count), len(rows) - 1)
-    away = own[index] - centres[:, None]
-    repeated = first[:, None] + np.arange(count) > len(rows) - 1
-    scaled = np.where(repeated, 2.0, np.abs(away) / (half * 1.1)[:, None])
-    weights = np.clip(1.0 - scaled**3, 0.0, None) ** 3
-    x = away / half[:, None]
-    powers = np.stack([weights * x**k for k in range(5)]).sum(axis=2)
-    normal = np.stack([np.stack([powers[i + k] for k in range(3)], axis=-1) for i in range(3)], axis=1)
-    normal += 1e-9 * normal[:, :1, :1] * np.eye(3)  # two or three poses still have a solution
-    data = values[rows[index]]
-    right = np.stack([(weights[:, :, None] * x[:, :, None] ** k * data).sum(axis=1) for k in range(3)], axis=1)
-    solution = np.linalg.solve(normal, right)
-    scale = np.stack([np.ones(len(block)), 1.0 / half, 2.0 / half**2], axis=1)
-    return solution * scale[:, :, None]
-
-
-def _along_path(fitted: np.ndarray, noise: float, window: float, usual: float
-                ) -> tuple[np.ndarray, np.ndarray, np.ndarray, float]:
-    """Headings, speeds, turn rates and their deviation from positions alone; forward driving is taken for granted."""
-    velocity, bend = fitted[:, 1, :2], fitted[:, 2, :2]
-    speeds = np.hypot(*velocity.T)
-    typical = float(np.median(speeds[speeds > 0.05])) if (speeds > 0.05).any() else 1.0
-    slow = max(0.05, _SLOW * typical, 3.0 * _slope_sd(noise, window, usual))
-    known = speeds > slow
-    cross = velocity[:, 0] * bend[:, 1] - velocity[:, 1] * bend[:, 0]
-    rates = np.where(known, cross / np.where(known, speeds, 1.0) ** 2, 0.0)
-    if not known.any():
-        return np.zeros(len(speeds)), speeds, rates, 0.0
-    headings = np.unwrap(np.arctan2(velocity[known, 1], velocity[known, 0]))
-    held = np.interp(np.arange(len(speeds)), np.flatnonzero(known), headings)
-    return held, speeds, rates, _bend_sd(noise, window, usual) / typical
 
 
 def _agrees(told: np.ndarray, speeds: np.ndarray, rates: np.ndarray) -> bool:
