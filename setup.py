@@ -54,9 +54,11 @@ setup(
         "casadi>=3.7",  # 3.6 keeps the interpreter's lock while it solves
         "networkx>=2.8",
         "numpy>=1.26",
+        "mcap>=1.1",  # reads recordings that break off
         "plotly>=5.15",
         "pyyaml>=6.0",
         "rich>=13.7",
+        "rosbags>=0.11",
         "scipy>=1.11",
         "shapely>=2.0",
         "typer>=0.9,<0.29",  # 0.29 wants pydantic 2; other programs of Ubuntu 24.04 need its 1.10

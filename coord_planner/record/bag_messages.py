@@ -101,14 +101,18 @@ def diagnostics(at: Any, statuses: list[Any]) -> Any:
 
 def markers(at: Any, marks: Sequence[Mark]) -> Any:
     """Marks for a viewer; the first takes away what was drawn before."""
-    kind = store().types["visualization_msgs/msg/Marker"]
+    kind = _marker_type()
     gone = _marker(at, "", 0, action=kind.DELETEALL)
     shown = [_marker(at, mark.group, number, action=kind.ADD, mark=mark) for number, mark in enumerate(marks, start=1)]
     return _make("visualization_msgs/msg/MarkerArray", markers=[gone, *shown])
 
 
+def _marker_type() -> Any:
+    return store().types["visualization_msgs/msg/Marker"]
+
+
 def _marker(at: Any, group: str, number: int, *, action: int, mark: Mark | None = None) -> Any:
-    kind = store().types["visualization_msgs/msg/Marker"]
+    kind = _marker_type()
     place = pose(0.0, 0.0, 0.0)
     shape, colour, size, points, words = kind.LINE_STRIP, (0.0, 0.0, 0.0, 0.0), (0.0, 0.0, 0.0), [], ""
     if mark is not None:

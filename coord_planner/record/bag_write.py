@@ -9,7 +9,7 @@ import errno
 import json
 from collections.abc import Iterator, Mapping
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 from rosbags.interfaces import Qos, QosDurability, QosHistory, QosLiveliness, QosReliability, QosTime
@@ -25,7 +25,7 @@ PLANNER = "/planner"
 PARAMETERS_KEY = "coord_planner_parameters"  # of the bag's custom data: the parameters of the run, as JSON
 _FIRST_STAMP = messages.NANOSECONDS  # time 0 means "no clock yet" in ROS, so that a run's clock begins at 1 s
 _DIAGNOSTICS_EVERY = 1.0  # seconds; besides at every change
-_FORMAT = 8  # of the metadata; ROS 2 Iron and later read it
+_FORMAT: Final = 8  # of the metadata; ROS 2 Iron and later read it
 
 Entry = tuple[int, str, str, Any]  # nanoseconds, topic, type, message
 

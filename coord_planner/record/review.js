@@ -53,7 +53,7 @@
     if (n === shownTurn) return;
     shownTurn = n;
     element("turns").querySelectorAll("tbody tr").forEach((row, k) => row.classList.toggle("chosen", k === n));
-    element("turn-title").textContent = "Turn " + (n + 1) + ": onset and strength by distance along the neighbour graph";
+    element("turn-title").textContent = "Turn " + (n + 1) + ": onset and strength " + (turn.hops ? "by distance along the neighbour graph" : "by robot");
     element("turn-words").textContent = inWords(turn);
     ["thead", "tbody"].forEach((part) => element("turn").querySelectorAll(part).forEach((node) => node.remove()));
     table(element("turn"), ["Robot", "Hops", "Onset, s", "±", "Largest turn rate, rad/s", "±", "Heading change"], run.names.map((name) => [

@@ -20,13 +20,13 @@ def stops(record: FleetRecord) -> list[dict[str, Any]]:
     """Stretches of at least a second in which a robot stood between two drives; ``robot`` None: all of them."""
     run = record.run
     standing = np.where(np.isfinite(run.speeds), np.abs(run.speeds) <= _STANDING, False)
-    found = [{"robot": None, "from_s": begin, "to_s": end} for begin, end in _stretches(run.times, standing.all(axis=0))]
-    whole = [(stop["from_s"], stop["to_s"]) for stop in found]
+    whole = _stretches(run.times, np.logical_and.reduce(standing))
+    found: list[dict[str, Any]] = [{"robot": None, "from_s": begin, "to_s": end} for begin, end in whole]
     for row, name in enumerate(run.fleet.names):
         for begin, end in _stretches(run.times, standing[row]):
             if not any(first <= begin + _STOP and end - _STOP <= last for first, last in whole):
                 found.append({"robot": name, "from_s": begin, "to_s": end})
-    return sorted(found, key=lambda stop: float(stop["from_s"] or 0.0))
+    return sorted(found, key=lambda stop: float(stop["from_s"]))
 
 
 def _stretches(times: np.ndarray, standing: np.ndarray) -> list[tuple[float, float]]:

@@ -82,12 +82,11 @@ def fleet_record(
         configuration = _own_parameters(content, notes)
     assigned = assign(content, configuration.fleet.names if configuration else (), given)
     clock = _clock(content, assigned)
-    robots, lost = [], []
-    for topics in assigned:
-        made = _reviewed(content, clock, topics, configuration)
-        (robots if made is not None else lost).append(made or topics.name)
+    made = {topics.name: _reviewed(content, clock, topics, configuration) for topics in assigned}
+    robots = [robot for robot in made.values() if robot is not None]
+    lost = [name for name, robot in made.items() if robot is None]
     if lost:
-        notes.append(f"{', '.join(str(name) for name in lost)}: fewer than three usable poses, left out")
+        notes.append(f"{', '.join(lost)}: fewer than three usable poses, left out")
     if not robots:
         raise SettingsError(
             "no robot can be followed in this recording", file=str(content.recording.path),

@@ -62,12 +62,12 @@ def data(review: Review) -> dict[str, Any]:
 def kept_samples(review: Review) -> np.ndarray:
     """Samples that the page holds: evenly spread, more of them in turns, and those with the smallest clearances."""
     times, clearance = review.record.run.times, review.near.clearance
-    kept = [spread(len(times), _EVENLY), [int(np.argmin(clearance))]]
+    kept = [spread(len(times), _EVENLY), np.array([np.argmin(clearance)])]
     each = max(_IN_TURNS // max(len(review.turns), 1), 20)
     for turn in review.turns:
         inside = np.flatnonzero((times >= turn.span.from_s) & (times <= turn.span.to_s))
         if len(inside):
-            kept += [inside[spread(len(inside), each)], [int(inside[np.argmin(clearance[inside])])]]
+            kept += [inside[spread(len(inside), each)], inside[[np.argmin(clearance[inside])]]]
     return np.unique(np.concatenate(kept)).astype(int)
 
 

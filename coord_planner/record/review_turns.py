@@ -83,13 +83,14 @@ def _turn(record: FleetRecord, near: Nearness, rates: np.ndarray, span: Span) ->
         if found is not None:
             onsets[robot.name] = found
     nearest = int(inside[np.argmin(near.clearance[inside])])
-    pair = tuple(names[k] for k in near.pair[nearest]) if near.pair[nearest][0] >= 0 else None
+    one, other = (int(k) for k in near.pair[nearest])
+    pair = (names[one], names[other]) if one >= 0 else None
     changes, spread = _headings(run.poses[:, inside, 2])
     origin, why = _origin(onsets)
     hops, metres = _distances(record, origin, int(inside[0]))
     reached = [name for name in onsets if hops.get(name, -1) >= 0]
     return Turn(
-        span, onsets, changes, float(near.clearance[nearest]), pair, float(run.times[nearest]), spread,  # type: ignore[arg-type]
+        span, onsets, changes, float(near.clearance[nearest]), pair, float(run.times[nearest]), spread,
         _largest_spread(run.curvatures[:, inside]), _alignment(run.poses[:, inside, 2]), _first(onsets), origin, why,
         hops, _by_hop(onsets, hops),
         turns.spread(np.array([float(hops[name]) for name in reached]), [onsets[name] for name in reached]),

@@ -361,7 +361,11 @@ function putCursor(charts, cursor, time) {
 function makeTransport(first, last, show) {
   const element = (id) => document.getElementById(id), slider = element("time");
   let time = first, playing = false;
-  Object.assign(slider, { min: String(first), max: String(last), step: "0.01", value: String(first) });
+  function range(from, to) {
+    [first, last] = [from, to];
+    Object.assign(slider, { min: String(first), max: String(last), step: "0.01" });
+  }
+  range(first, last);
   function goTo(t) {
     time = Math.min(Math.max(t, first), last);
     slider.value = String(time);
@@ -398,7 +402,7 @@ function makeTransport(first, last, show) {
   });
   const place = (t) => 100 * (Math.min(Math.max(t, first), last) - first) / Math.max(last - first, 1e-9);
   return {
-    goTo, now: () => time,
+    goTo, range, now: () => time,
     // A mark on the time line from one moment to another (to the end: null).
     mark(from, to, kind, title) {
       const mark = make("i", null, element("marks"), kind);
