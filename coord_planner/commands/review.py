@@ -141,8 +141,8 @@ def _write_turns(figures: dict[str, Any]) -> None:
         write_heading(f"Turn {number}: {turn['from_s']:.1f} to {turn['to_s']:.1f} s")
         apart = "" if turn["min_clearance_m"] is None else (
             f"; smallest clearance {turn['min_clearance_m']:.3f} m ({' and '.join(turn['min_clearance_pair'])})")
-        write(f"{first}{apart}; headings differed by up to {figure(turn['heading_spread_max_rad'], 1, _DEGREES)} degrees. "
-              f"{_spread_in_words(turn)}")
+        differed = figure(turn["heading_spread_max_rad"], 1, _DEGREES)
+        write(f"{first}{apart}; headings differed by up to {differed} degrees. {_spread_in_words(turn)}")
         filled = table("robot", "hops", "onset s", "+-", "largest turn rate rad/s", "+-", "heading change degrees")
         for name, onset in turn["onset_s"].items():
             hops = (turn["hops"] or {}).get(name)

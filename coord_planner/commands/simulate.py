@@ -33,6 +33,9 @@ def simulate(
     page: Annotated[
         Optional[Path], typer.Option("--page", metavar="FILE", help="Also write a page to look at (HTML).")
     ] = None,
+    picture: Annotated[
+        Optional[Path], typer.Option("--picture", metavar="FILE", help="Also write a still picture of the turn (SVG).")
+    ] = None,
     bag: Annotated[
         Optional[Path], typer.Option("--bag", metavar="DIR", help="Also record it: a rosbag2 folder (MCAP), made new.")
     ] = None,
@@ -44,6 +47,8 @@ def simulate(
         configuration.all_starts()
         if page is not None:
             prepare_file(page, "--page")
+        if picture is not None:
+            prepare_file(picture, "--picture")
         if bag is not None:
             prepare_bag(bag, "--bag")
         try:
@@ -54,7 +59,7 @@ def simulate(
             raise
         if bag is not None:
             _record(run, configuration, bag)
-        _report(run, as_json, page)
+        _report(run, as_json, page, picture)
 
 
 def _configured(params: str, entries: list[str]) -> config.Configuration:
@@ -84,7 +89,7 @@ def _record(run: Run, configuration: config.Configuration, bag: Path) -> None:
     say(f"The recording is in {bag}: {count} messages.")
 
 
-def _report(run: Run, as_json: bool, page: Path | None) -> None:
+def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) -> None:
     from ..record.metrics import summary
 
     figures = summary(run)
@@ -97,6 +102,11 @@ def _report(run: Run, as_json: bool, page: Path | None) -> None:
 
         write_page(run, page)
         say(f"The page is in {page}.")
+    if picture is not None:
+        from ..record.picture import write_picture
+
+        write_picture(run, picture)
+        say(f"The picture is in {picture}.")
     failures = _failures(run, figures)
     if failures:
         say(f"{run.manoeuvre} did not hold: {'; '.join(failures)}.")

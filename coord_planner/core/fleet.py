@@ -16,14 +16,22 @@ from .parameter import parameter
 class Limits:
     """What one machine can do. Curvature is signed, left positive; limits are magnitudes."""
 
-    max_curvature: float = parameter(0.5, "largest curvature, to either side", "1/m", above=0.0, maximum=50.0, live=True)
-    max_curvature_rate: float = parameter(0.5, "fastest change of curvature", "1/(m s)", above=0.0, maximum=50.0, live=True)
-    min_speed: float = parameter(0.0, "lowest speed while it drives; negative allows reversing", "m/s", minimum=-20.0, maximum=20.0, live=True)
+    max_curvature: float = parameter(
+        0.5, "largest curvature, to either side", "1/m", above=0.0, maximum=50.0, live=True
+    )
+    max_curvature_rate: float = parameter(
+        0.5, "fastest change of curvature", "1/(m s)", above=0.0, maximum=50.0, live=True
+    )
+    min_speed: float = parameter(
+        0.0, "lowest speed while it drives; negative allows reversing", "m/s", minimum=-20.0, maximum=20.0, live=True
+    )
     max_speed: float = parameter(1.5, "highest speed", "m/s", above=0.0, maximum=20.0, live=True)
     max_acceleration: float = parameter(0.5, "fastest speeding up", "m/s^2", above=0.0, maximum=20.0, live=True)
     max_braking: float = parameter(1.0, "fastest slowing down", "m/s^2", above=0.0, maximum=20.0, live=True)
     max_turn_rate: float = parameter(1.0, "fastest turning", "rad/s", above=0.0, maximum=20.0, live=True)
-    max_lateral_acceleration: float = parameter(1.0, "largest lateral acceleration", "m/s^2", above=0.0, maximum=20.0, live=True)
+    max_lateral_acceleration: float = parameter(
+        1.0, "largest lateral acceleration", "m/s^2", above=0.0, maximum=20.0, live=True
+    )
 
     def __attrs_post_init__(self) -> None:
         if self.min_speed > self.max_speed:
@@ -39,8 +47,12 @@ class Footprint:
 
     footprint_length: float = parameter(1.2, "length of the footprint", "m", above=0.0, maximum=50.0)
     footprint_width: float = parameter(0.8, "width of the footprint", "m", above=0.0, maximum=50.0)
-    footprint_offset_x: float = parameter(0.0, "how far the footprint's centre lies ahead of the pose", "m", minimum=-25.0, maximum=25.0)
-    footprint_offset_y: float = parameter(0.0, "how far the footprint's centre lies left of the pose", "m", minimum=-25.0, maximum=25.0)
+    footprint_offset_x: float = parameter(
+        0.0, "how far the footprint's centre lies ahead of the pose", "m", minimum=-25.0, maximum=25.0
+    )
+    footprint_offset_y: float = parameter(
+        0.0, "how far the footprint's centre lies left of the pose", "m", minimum=-25.0, maximum=25.0
+    )
 
     def corners(self) -> np.ndarray:
         """Corners in the robot's frame, anticlockwise, shape (4, 2), metres."""
@@ -55,17 +67,20 @@ class Response:
 
     speed_lag: float = parameter(0.0, "time constant of the speed's response", "s", minimum=0.0, maximum=5.0)
     curvature_lag: float = parameter(0.0, "time constant of the curvature's response", "s", minimum=0.0, maximum=5.0)
-    command_delay: float = parameter(0.0, "time from sending a command to its first effect", "s", minimum=0.0, maximum=2.0)
+    command_delay: float = parameter(
+        0.0, "time from sending a command to its first effect", "s", minimum=0.0, maximum=2.0
+    )
 
 
 @attrs.frozen
 class Robot:
-    """One machine."""
+    """One machine; ``command_timeout`` is how long it drives on without a command before it brakes, seconds."""
 
     name: str
     limits: Limits = Limits()
     footprint: Footprint = Footprint()
     response: Response = Response()
+    command_timeout: float = 0.5
 
 
 @attrs.frozen
@@ -102,6 +117,10 @@ class Fleet:
     def response(self, name: str) -> np.ndarray:
         """One response constant for every robot, shape (N,), seconds."""
         return np.array([getattr(robot.response, name) for robot in self.robots])
+
+    def timeouts(self) -> np.ndarray:
+        """How long each robot drives on without a command, shape (N,), seconds."""
+        return np.array([robot.command_timeout for robot in self.robots])
 
     def corners(self) -> np.ndarray:
         """Footprint corners in the robots' frames, shape (N, 4, 2), metres."""

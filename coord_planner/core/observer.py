@@ -18,6 +18,13 @@ _SUBSTEP = 0.025  # seconds; fine against every response lag that matters
 # How much less a model of first order knows after a second: metres, radians, and the part of the asked speed
 # that a machine really reaches (it changes when wheels slip or a machine is held up).
 _DRIFT = np.array([0.02, 0.02, 0.01, 0.25])
+# A machine that is held up shows in innovations of one sign. Their running mean, in standard deviations, is
+# 0.5 for noise alone; three times that is taken for a change of the factor, which then is looked for afresh.
+_RUNNING = 0.4
+_ONE_SIDED = 1.5
+_AFRESH = 0.3
+_FRESH = 0.15  # seconds; up to this age an estimate is as good as the margin of the plan takes it to be
+_SLOWLY = 0.08  # part of the newest in the running mean of squared innovations
 _FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
 
 
@@ -30,12 +37,17 @@ class Estimate:
         speed_factor: part of its expected speed that each robot reaches, shape (N,).
         age: seconds since the last believed pose of each robot, shape (N,), inf for none.
         jumped: robots whose last pose lay further than max_jump from where it was expected.
+        growth: by how much a footprint must grow for doubt about where its robot is, beyond the usual noise, while
+            no pose comes, shape (N,), metres.
+        scatter: how much the poses scatter, in multiples of what the settings say, shape (N,).
     """
 
     states: np.ndarray
     speed_factor: np.ndarray
     age: np.ndarray
-    jumped: tuple[str, ...]
+    jumped: tuple[str, ...] = ()
+    growth: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
+    scatter: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
 
 
 class Observer:
@@ -53,6 +65,8 @@ class Observer:
         self._cov = np.zeros((count, 4, 4))
         self._stamp = np.full(count, -np.inf)
         self._reached = np.zeros((count, 2))  # speed, curvature, before the speed factor
+        self._one_sided = np.zeros(count)  # running mean of innovations along the heading, in standard deviations
+        self._squared = np.ones(count)  # running mean of squared innovations, each relative to its variance
 
     def configure(self, fleet: Fleet, settings: Poses) -> None:
         """New limits or noise; what is known about the robots stays."""
@@ -93,7 +107,14 @@ class Observer:
             states[known, :3] = mean[:, :3]
             states[known, 3], states[known, 4] = reached[:, 1], reached[:, 0] * factor[known]
             states[known, 5], states[known, 6] = commands[:, 1], commands[:, 0]
-        return Estimate(states, factor, now - self._stamp, ())
+        growth = self._growth(now, states[:, 4])
+        return Estimate(states, factor, now - self._stamp, (), growth, np.sqrt(self._squared))
+
+    def _growth(self, now: float, speed: np.ndarray) -> np.ndarray:
+        """Two standard deviations of where a robot is, less those of a fresh estimate, shape (N,), metres."""
+        age = np.where(np.isfinite(self._stamp), np.maximum(now - self._stamp - _FRESH, 0.0), 0.0)
+        drifted = _DRIFT[0] ** 2 * age + (np.sqrt(self._cov[:, 3, 3]) * np.nan_to_num(speed) * age) ** 2
+        return 2.0 * np.sqrt(drifted)
 
     def _restart(self, k: int, pose: PoseSample, keep_motion: bool = False) -> None:
         heading = pose.heading
@@ -144,14 +165,29 @@ class Observer:
         innovation = measured - self._mean[which, :3]
         innovation[:, 2] = se2.wrap(innovation[:, 2])
         jumps = np.hypot(innovation[:, 0], innovation[:, 1]) > self._settings.max_jump
-        cov = self._cov[which]
-        gain = cov[:, :, :3] @ np.linalg.inv(cov[:, :3, :3] + self._noise())
+        cov = self._look_afresh(which, innovation)
+        expected = np.linalg.inv(cov[:, :3, :3] + self._noise())
+        relative = np.einsum("ni,nij,nj->n", innovation, expected, innovation) / 3.0
+        self._squared[which] += _SLOWLY * (np.minimum(relative, 100.0) - self._squared[which])
+        gain = cov[:, :, :3] @ expected
         good = ~jumps
         corrected = self._mean[which] + np.einsum("nij,nj->ni", gain, innovation)
         corrected[:, 3] = np.clip(corrected[:, 3], 0.05, 1.5)
         self._mean[which[good]] = corrected[good]
         self._cov[which[good]] = (cov - gain @ cov[:, :3, :])[good]
         return jumps
+
+    def _look_afresh(self, which: np.ndarray, innovation: np.ndarray) -> np.ndarray:
+        """Covariances, with more doubt about the factor of robots whose innovations keep one sign, shape (n, 4, 4)."""
+        cov = self._cov[which].copy()
+        heading = self._mean[which, 2]
+        ahead = np.stack([np.cos(heading), np.sin(heading)], axis=1)
+        spread = np.einsum("ni,nij,nj->n", ahead, cov[:, :2, :2], ahead) + self._settings.noise_xy**2
+        scaled = np.sum(innovation[:, :2] * ahead, axis=1) / np.sqrt(spread)
+        self._one_sided[which] += _RUNNING * (scaled - self._one_sided[which])
+        changed = np.abs(self._one_sided[which]) > _ONE_SIDED
+        cov[changed, 3, 3] += _AFRESH**2
+        return cov
 
 
 def _doubted(factor: np.ndarray) -> np.ndarray:

@@ -43,7 +43,7 @@ class Program:
 def variable_blocks(shape: Shape) -> Blocks:
     """Node states, then rates in the intervals, then slacks."""
     n, m = shape.robots, shape.intervals
-    states = {name: (n, m + 1) for name in STATES}
+    states = dict.fromkeys(STATES, (n, m + 1))
     rates = {"curvature_rate": (n, m), "acceleration": (n, m)}
     slacks = {"short": (len(shape.pairs), m), "over": (n, len(STATES)), "under": (n, len(STATES))}
     return Blocks({**states, **rates, **slacks})
@@ -88,7 +88,8 @@ def lag_residual(command: Matrix, reached: Matrix, rate: Matrix, lag: Matrix, h:
     reached(h) = command(h) - rate lag + (reached(0) - command(0) + rate lag) exp(-h / lag).
     """
     m = h.shape[1]
-    lags, steps = ca.repmat(lag, 1, m), _rows(h, command)
+    lags: Matrix = ca.repmat(lag, 1, m)
+    steps = _rows(h, command)
     decay = ca.if_else(lags > 0, ca.exp(-steps / ca.fmax(lags, 1e-6)), 0.0)
     settled = command[:, 1:] - rate * lags
     return reached[:, 1:] - settled - (reached[:, :-1] - command[:, :-1] + rate * lags) * decay

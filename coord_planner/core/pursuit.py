@@ -20,6 +20,7 @@ from .solver import Start
 from .tick import Tick
 
 _FALL = 0.9  # part of the weakest brake with which the pace may fall
+_SLOW = 0.3  # part of the asked speed below which the pace falls no faster
 
 
 @attrs.frozen(eq=False)
@@ -50,6 +51,10 @@ class Pursuit:
         self._updated = begins
         self.behind = np.zeros(len(fleet))
 
+    def freeze(self, now: float) -> None:
+        """The group leaves its reference for a stop: its progress stays what it is now."""
+        self._s, self._time, self.progress.pace = self.s(now), now, 0.0
+
     @property
     def pace(self) -> float:
         """Seconds of the manoeuvre per second of the clock."""
@@ -73,7 +78,8 @@ class Pursuit:
         expected = np.minimum(estimate.states[:, SPEED_COMMAND], self.pace * asked[:, SPEED])
         deficit = np.maximum(expected - estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
         elapsed = max(now - self._updated, 0.0)
-        fall = _FALL * float(np.min(fleet.limit("max_braking"))) / max(float(np.max(self.reference.task.asked)), 1e-3)
+        fastest = max(float(np.max(asked[:, SPEED])), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
+        fall = _FALL * float(np.min(fleet.limit("max_braking"))) / fastest
         self._s, self._time, self._updated = s_now, now, now
         if s_now >= 0.0:
             self.progress.update(elapsed, self.behind, deficit, settings.progress, fall)

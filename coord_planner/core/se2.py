@@ -29,7 +29,8 @@ def _is_symbolic(*values: Scalar) -> bool:
 def _choose(small: Any, if_small: Scalar, otherwise: Scalar) -> Scalar:
     if _is_symbolic(if_small, otherwise):
         return ca.if_else(small, if_small, otherwise)
-    return np.where(small, if_small, otherwise)[()]
+    chosen: Any = np.where(small, if_small, otherwise)
+    return chosen[()]  # a scalar for scalars
 
 
 def _away_from_zero(small: Any, x: Scalar) -> Scalar:

@@ -18,6 +18,9 @@ class Coupling:
         0.0, "price of a heading that differs from a neighbour's, times the coupling; 0 turns it off", "1/m^2",
         minimum=0.0, maximum=1e3, live=True,
     )
+    may_split: bool = parameter(
+        False, "true: parts of the fleet that the graph no longer joins go on by themselves", live=True
+    )
 
 
 @attrs.frozen
@@ -49,6 +52,9 @@ class Horizon:
     interval: float = parameter(0.25, "length of an interval", "s", minimum=0.05, maximum=2.0)
     rate: float = parameter(10.0, "plans a second", "1/s", minimum=1.0, maximum=50.0)
     budget: float = parameter(0.09, "time that one plan may take", "s", minimum=0.002, maximum=1.0)
+    keep: float = parameter(
+        2.0, "time for which the last plan is driven on when no new one comes", "s", minimum=0.1, maximum=5.0, live=True
+    )
     lead: float = parameter(
         1.0, "time given to making the rest of a manoeuvre anew while it runs", "s", minimum=0.2, maximum=10.0
     )
@@ -78,7 +84,12 @@ class SiteRules:
     min_clearance: float = parameter(
         0.5, "smallest allowed distance between two robots' footprints", "m", minimum=0.0, maximum=100.0, live=True
     )
-    max_speed: float = parameter(50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True)
+    refuse_unsafe_silence: bool = parameter(
+        False, "true: a manoeuvre is refused, not only warned of, when robots timing out separately would come too near"
+    )
+    max_speed: float = parameter(
+        50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True
+    )
     max_lateral_acceleration: float = parameter(
         20.0, "largest lateral acceleration for every robot on the site", "m/s^2", above=0.0, maximum=20.0, live=True
     )
@@ -106,8 +117,12 @@ class Poses:
     """Which poses are believed, and how noisy they are."""
 
     max_age: float = parameter(0.5, "older poses are not used", "s", above=0.0, maximum=10.0, live=True)
-    max_future: float = parameter(0.1, "poses from further in the future are not used", "s", minimum=0.0, maximum=10.0, live=True)
-    max_jump: float = parameter(0.5, "a larger jump of a pose stops the group", "m", above=0.0, maximum=100.0, live=True)
+    max_future: float = parameter(
+        0.1, "poses from further in the future are not used", "s", minimum=0.0, maximum=10.0, live=True
+    )
+    max_jump: float = parameter(
+        0.5, "a larger jump of a pose stops the group", "m", above=0.0, maximum=100.0, live=True
+    )
     noise_xy: float = parameter(0.02, "standard deviation of a pose's position", "m", above=0.0, maximum=5.0, live=True)
     noise_heading_deg: float = parameter(
         0.5, "standard deviation of a pose's heading", "deg", above=0.0, maximum=45.0, live=True
@@ -119,18 +134,29 @@ class Progress:
     """How the group's progress along the reference slows when a robot is held up."""
 
     dead_band: float = parameter(0.05, "lag that slows nobody", "m", minimum=0.0, maximum=10.0, live=True)
-    full_lag: float = parameter(0.4, "lag beyond the dead band at which progress is slowest", "m", above=0.0, maximum=20.0, live=True)
-    look_ahead: float = parameter(
-        0.5, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0, live=True
+    full_lag: float = parameter(
+        0.4, "lag beyond the dead band at which progress is slowest", "m", above=0.0, maximum=20.0, live=True
     )
-    filter_time: float = parameter(0.2, "time constant of the filter on each robot's lag", "s", minimum=0.0, maximum=5.0, live=True)
-    slowest: float = parameter(0.15, "slowest progress before the group is stopped", "", minimum=0.05, maximum=1.0, live=True)
-    recovery: float = parameter(0.5, "rate at which progress returns to full", "1/s", above=0.0, maximum=10.0, live=True)
+    look_ahead: float = parameter(
+        0.8, "a robot slower than asked is expected to fall back for this long", "s", minimum=0.0, maximum=5.0,
+        live=True,
+    )
+    filter_time: float = parameter(
+        0.2, "time constant of the filter on each robot's lag", "s", minimum=0.0, maximum=5.0, live=True
+    )
+    slowest: float = parameter(
+        0.15, "slowest progress before the group is stopped", "", minimum=0.05, maximum=1.0, live=True
+    )
+    recovery: float = parameter(
+        0.5, "rate at which progress returns to full", "1/s", above=0.0, maximum=10.0, live=True
+    )
     catch_up: float = parameter(
         1.5, "time in which a robot beyond the dead band is asked to catch up with the group", "s",
         minimum=0.2, maximum=60.0, live=True,
     )
-    max_lag: float = parameter(1.5, "a lag beyond this stops the group in step", "m", above=0.0, maximum=100.0, live=True)
+    max_lag: float = parameter(
+        1.5, "a lag beyond this stops the group in step", "m", above=0.0, maximum=100.0, live=True
+    )
 
 
 @attrs.frozen

@@ -35,10 +35,12 @@ class Start:
 @lru_cache(maxsize=32)
 def _solver(shape: Shape, warm: bool, budget: float) -> ca.Function:
     program = ocp.build(shape)
-    options = dict(_WARM if warm else _COLD)
-    options.update({"print_level": 0, "sb": "yes", "max_wall_time": budget, "fixed_variable_treatment": "make_parameter"})
+    options: dict[str, Any] = dict(_WARM if warm else _COLD)
+    options.update({"print_level": 0, "sb": "yes", "max_wall_time": budget})
+    options["fixed_variable_treatment"] = "make_parameter"
     nlp = {"x": program.x, "p": program.p, "f": program.f, "g": program.g}
-    return ca.nlpsol("solve", "ipopt", nlp, {**_QUIET, "ipopt": options})
+    settings: dict[str, Any] = {**_QUIET, "ipopt": options}
+    return ca.nlpsol("solve", "ipopt", nlp, settings)
 
 
 def prepare(shape: Shape, budget: float) -> None:

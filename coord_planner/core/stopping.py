@@ -7,6 +7,7 @@ import numpy as np
 
 from .fleet import Fleet
 from .motion import drive, lags
+from .observer import Estimate
 from .plan import closest_along
 from .problem import CURVATURE, POSE, SPEED
 from .schedule import Schedule
@@ -44,15 +45,15 @@ def apart(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     return _slow_down(schedule, at, fleet, together=False)
 
 
-def choose(schedule: Schedule, at: float, fleet: Fleet, states: np.ndarray, now: float, factor: np.ndarray) -> Stop:
+def choose(schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now: float) -> Stop:
     """The stop with the larger predicted clearance; in step when both keep the same.
 
     Args:
         schedule: in effect so far. at: moment from which it can still be changed.
-        states: estimated, shape (N, 7), at ``now``. factor: part of its speed that each robot really makes, (N,).
+        estimate: of the robots at ``now``.
     """
     stops = [
-        _predicted(now, fleet, states, factor, manner, make(schedule, at, fleet))
+        _predicted(now, fleet, estimate, schedule, manner, make(schedule, at, fleet))
         for manner, make in (("in step", in_step), ("apart", apart))
     ]
     return stops[1] if stops[1].clearance > stops[0].clearance + 1e-3 else stops[0]
@@ -83,14 +84,16 @@ def _slow_down(schedule: Schedule, at: float, fleet: Fleet, together: bool) -> S
 
 
 def _predicted(
-    now: float, fleet: Fleet, states: np.ndarray, factor: np.ndarray, manner: str, stop: Schedule
+    now: float, fleet: Fleet, estimate: Estimate, before: Schedule, manner: str, stop: Schedule
 ) -> Stop:
+    states, factor = estimate.states, estimate.speed_factor
     settle = 4.0 * float(lags(fleet).max()) + _STEP
     until = float(stop.times[-1]) + settle
     steps = max(1, int(np.ceil((until - now) / _STEP)))
     h = (until - now) / steps
     moments = np.broadcast_to(now + h * (np.arange(steps) + 0.5), (len(fleet), steps))
     reached = np.stack([states[:, SPEED] / np.maximum(factor, 0.05), states[:, CURVATURE]], axis=1)
-    path, _ = drive(states[:, POSE], reached, stop.at(moments), np.full(len(fleet), h), lags(fleet), factor)
-    clearance, pair = closest_along(fleet, path)
+    commands = np.where((moments < stop.times[0])[..., None], before.at(moments), stop.at(moments))
+    path, _ = drive(states[:, POSE], reached, commands, np.full(len(fleet), h), lags(fleet), factor)
+    clearance, pair = closest_along(fleet, path, estimate.growth)
     return Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0]))

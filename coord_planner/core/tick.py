@@ -45,14 +45,14 @@ def pose_problem(
         initial: predicted state at ``time``, shape (N, 7). start: seconds of the manoeuvre at ``time``.
         time: seconds on the clock at the first node. pace: seconds of the manoeuvre per second of the clock.
         last: the tick before, when there is one for this reference.
-        behind: metres by which each robot is held up, shape (N,), as the group's progress sees it.
+        behind: metres by which each robot is behind the group, shape (N,), as the group's progress sees it.
     """
     task, rules = reference.task, settings.site_rules
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
     planned = asked_speeds(task, s)
-    asked = planned * pace + _catching_up(s, times, behind, task, fleet, settings)
+    asked = _closing_up(s, times, planned * pace, behind, task, fleet, settings)
     target = paced(reference.state(float(s[-1])), pace)
     graph = reference.graph
     problem = Problem(
@@ -86,18 +86,20 @@ def usable(problem: Problem, plan: Plan) -> bool:
     return bool(worst < _USABLE)
 
 
-def _catching_up(
-    s: np.ndarray, times: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet, settings: Settings
+def _closing_up(
+    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet,
+    settings: Settings,
 ) -> np.ndarray:
-    """Speed asked on top of a robot that was held up, shape (N, M), m/s, until it should have caught up.
+    """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
-    The horizon's end alone would let it take the whole horizon, and the group would wait for it as long.
-    Within the dead band, where there is only noise, nothing is added and the reference is not biased.
+    The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
+    is only noise, nothing is changed and the reference is not biased.
     """
     progress, top = settings.progress, np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
-    late = np.maximum(behind - progress.dead_band, 0.0)[:, None] / progress.catch_up
+    off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
-    return np.minimum(late, np.maximum(top - task.speed, 0.0)[:, None]) * soon[None, :]
+    wanted = asked + soon[None, :] * (off / progress.catch_up)[:, None]
+    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top[:, None], asked))
 
 
 def _guess(

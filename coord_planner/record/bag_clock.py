@@ -55,10 +55,10 @@ class Clock:
         jumps = _jumps(self._centres, self._offsets)
         self._stretch = np.cumsum(jumps) if len(jumps) else np.zeros(1, dtype=int)
         self.shifts = self._place_stretches()
-        self.breaks = [float(self._centres[b] + self._shift_of(b) - self._offsets[b]) for b in np.flatnonzero(jumps)]
+        self.breaks = [float(self._centres[b] + self._shift_of(b) - self._offsets[b]) for b in np.flatnonzero(jumps).tolist()]
         self.notes += [
             f"the clock of the stamps jumped by {self._jump(b):+.1f} s, {self._centres[b]:.0f} s after the recording "
-            "began: what lies before and after is kept apart" for b in np.flatnonzero(jumps)
+            "began: what lies before and after is kept apart" for b in np.flatnonzero(jumps).tolist()
         ]
 
     def _jump(self, b: int) -> float:

@@ -27,7 +27,8 @@ _PLAN_EVERY = 0.2  # seconds between two plans of a robot that are kept
 _PLAN_POINTS = 13
 _LITTLE_ENDIAN = b"\x00\x01\x00\x00"  # how messages from ordinary machines begin (OMG CDR encapsulation)
 # ackermann_msgs is in no release's store; a bag from before ROS 2 Iron does not bring its definition along.
-_STEERING = "float32 steering_angle\nfloat32 steering_angle_velocity\nfloat32 speed\nfloat32 acceleration\nfloat32 jerk\n"
+_STEERING = "".join(f"float32 {field}\n" for field in (
+    "steering_angle", "steering_angle_velocity", "speed", "acceleration", "jerk"))
 _OTHERS = {
     "ackermann_msgs/msg/AckermannDrive": _STEERING,
     "ackermann_msgs/msg/AckermannDriveStamped": "std_msgs/Header header\nackermann_msgs/AckermannDrive drive\n",

@@ -151,7 +151,8 @@ def _reports(run: Run, frame: str, zero: float) -> Iterator[Entry]:
         at = nanoseconds(when - zero)
         cautions = [caution for first, last, caution in run.cautions if first <= when <= last]
         state, words = _state(run, when)
-        yield at, f"{PLANNER}/status", "diagnostic_msgs/msg/DiagnosticStatus", _status(run, when, at, state, words, cautions)
+        yield (at, f"{PLANNER}/status", "diagnostic_msgs/msg/DiagnosticStatus",
+               _status(run, when, at, state, words, cautions))
         poses = run.poses[:, min(int(np.searchsorted(run.times, when)), len(run.times) - 1)]
         yield at, "/fleet_markers", "visualization_msgs/msg/MarkerArray", messages.markers(
             messages.header(frame, at), marks(run.fleet, graph, poses, cautions, run.min_clearance))
@@ -201,8 +202,8 @@ def _rate(before: list[RunFrame]) -> float:
 
 def _diagnostics(words: str, cautions: list[Caution]) -> list[Any]:
     whole = messages.status(f"{PLANNER}: fleet", "", _worst(cautions), words, {})
-    return [whole, *(messages.status(f"{PLANNER}: {caution.code}", caution.subject, int(caution.level), caution.text, {})
-                     for caution in cautions)]
+    return [whole, *(messages.status(f"{PLANNER}: {one.code}", one.subject, int(one.level), one.text, {})
+                     for one in cautions)]
 
 
 def _worst(cautions: list[Caution]) -> int:

@@ -111,8 +111,8 @@ def motion_in_words(record: FleetRecord, row: int) -> str:
         sampled += f", irregularly (long pauses are {moved.irregular:.1f} times the short ones)"
     if moved.rates_from == "twist":
         return f"{sampled}; speed and turn rate as the odometry tells them, which agrees with its poses"
-    left_out = [f"{count} {what}" for count, what in (
-        (moved.stale, "that repeat the one before while it drives on"), (moved.strays, "far off their neighbours")) if count]
+    reasons = {"that repeat the one before while it drives on": moved.stale, "far off their neighbours": moved.strays}
+    left_out = [f"{count} {reason}" for reason, count in reasons.items() if count]
     if left_out:
         sampled += f"; left out: {' and '.join(left_out)}"
     way = "the shape of the way, forward driving taken for granted" if moved.headings_from == "path" else "poses"

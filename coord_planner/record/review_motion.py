@@ -162,7 +162,7 @@ def _stale(times: np.ndarray, places: np.ndarray) -> np.ndarray:
 
 
 def _astray(times: np.ndarray, places: np.ndarray) -> np.ndarray:
-    """Poses far off the straight line between their neighbours: by the standard of the whole series, and there and back."""
+    """Poses far off the line between their neighbours: by the standard of the series, and there and back."""
     if len(times) < 5:
         return np.zeros(len(times), dtype=bool)
     part = ((times[1:-1] - times[:-2]) / (times[2:] - times[:-2]))[:, None]

@@ -71,7 +71,8 @@ def aside(places: np.ndarray, part: np.ndarray) -> float:
     chord, first = places[2:] - places[:-2], places[1:-1] - places[:-2]
     size = np.hypot(*chord.T)
     steps = np.hypot(*np.diff(places, axis=0).T)
-    whole = (np.diff(part)[1:] == 0) & (np.diff(part)[:-1] == 0) & (size > 1e-9) & (np.minimum(steps[1:], steps[:-1]) > 0)
+    moved, same = np.minimum(steps[1:], steps[:-1]) > 0, np.diff(part) == 0
+    whole = same[1:] & same[:-1] & moved & (size > 1e-9)
     if not whole.any():
         return 0.0
     off = np.abs(first[:, 0] * chord[:, 1] - first[:, 1] * chord[:, 0])[whole] / size[whole]
@@ -86,15 +87,14 @@ def _apart(places: np.ndarray, part: np.ndarray, least: float) -> np.ndarray:
     kept: list[int] = []
     for number in range(len(places)):
         same = bool(kept) and part[kept[-1]] == part[number]
-        while same and len(kept) > 1 and part[kept[-2]] == part[number] and _detour(places[[kept[-2], kept[-1], number]]):
+        while same and len(kept) > 1 and part[kept[-2]] == part[number] and _detour(*places[[*kept[-2:], number]]):
             kept.pop()
         if not same or math.dist(places[number], places[kept[-1]]) > max(least, 1e-6):
             kept.append(number)
     return np.array(kept)
 
 
-def _detour(three: np.ndarray) -> bool:
-    first, second, third = three.tolist()
+def _detour(first: np.ndarray, second: np.ndarray, third: np.ndarray) -> bool:
     return math.dist(first, second) + math.dist(second, third) > 2.0 * math.dist(first, third)
 
 

@@ -36,7 +36,7 @@ class Signals:
             signal.signal(number, self._count)
 
     def ignore(self) -> None:
-        """From now on neither has an effect: a late one must not change the exit status of a node that has ended well."""
+        """From now on neither has an effect: a late one must not change the exit status of a node that ended well."""
         for number in (signal.SIGINT, signal.SIGTERM):
             signal.signal(number, signal.SIG_IGN)
 

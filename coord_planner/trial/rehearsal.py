@@ -87,9 +87,13 @@ def rehearse(
     settings, simulation = configuration.settings, configuration.simulation
     rng = np.random.default_rng(simulation.seed if seed is None else seed)
     timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
-    simulated = SimulatedFleet(configuration.fleet, configuration.starts, simulation, timeouts, rng)
-    coordinator = Coordinator(configuration.fleet, configuration.graph, settings, configuration.manoeuvres, _BUDGET)
-    log, answers = _Log(), []
+    fleet = configuration.driven
+    simulated = SimulatedFleet(fleet, configuration.starts, simulation, timeouts, rng)
+    coordinator = Coordinator(
+        fleet, configuration.graph.relative_to(fleet.names), settings, configuration.manoeuvres, _BUDGET
+    )
+    log = _Log()
+    answers: list[Answer] = []
     began_at = clock.perf_counter()
     period = 1.0 / settings.commands.rate
     ticks_every = 1.0 / settings.horizon.rate
@@ -125,7 +129,7 @@ def rehearse(
             for name, command in commands.items():
                 simulated.command(name, command, now)
         if moving_since is not None:
-            apply(faults, now - moving_since, simulated, configuration.fleet.names)
+            apply(faults, now - moving_since, simulated, fleet.names)
         now = round((len(log.times)) * period, 9)
         simulated.advance(now)
         log.truth(now, simulated)
@@ -150,17 +154,20 @@ def _run(
     wall_time: float, seed: Optional[int],
 ) -> Run:
     decision = coordinator.decision
+    fleet = configuration.driven
+    state = State.ENDED if decision.completed else decision.state
     return Run(
-        fleet=configuration.fleet, edges=configuration.edges, manoeuvre=manoeuvre, times=np.array(log.times),
-        poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
+        fleet=fleet, edges=configuration.graph.relative_to(fleet.names).edges, manoeuvre=manoeuvre,
+        times=np.array(log.times), poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
         curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
         commanded=np.stack(log.commanded, axis=1), end_poses=coordinator.ends,
-        min_clearance=configuration.settings.site_rules.min_clearance, state=decision.state.value,
+        min_clearance=configuration.settings.site_rules.min_clearance, state=state.value,
         completed=decision.completed, began=began, ended=_ended(log), cautions=log.cautions(),
         tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
         facts={
-            "simulated": True, "file": configuration.file, "coupling": decision.coupling,
-            "alignment": decision.alignment, "seed": configuration.simulation.seed if seed is None else seed,
+            "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
+            "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
+            "seed": configuration.simulation.seed if seed is None else seed,
         },
     )
 
