@@ -57,7 +57,8 @@ setup(
         "casadi>=3.7",  # 3.6 keeps the interpreter's lock while it solves
         "networkx>=2.8",
         "numpy>=1.26",
-        "mcap>=1.1",  # reads recordings that break off
+        "lz4>=4.0",
+        "mcap>=1.2",  # reads recordings that break off, with lz4 and zstandard
         "plotly>=5.15",
         "pyyaml>=6.0",
         "rich>=13.7",
@@ -65,6 +66,7 @@ setup(
         "scipy>=1.11",
         "shapely>=2.0",
         "typer>=0.9,<0.29",  # 0.29 wants pydantic 2; other programs of Ubuntu 24.04 need its 1.10
+        "zstandard>=0.22",
     ],
     extras_require={
         # ROS 2 Jazzy as wheels, for machines without ROS 2 of their own. Never beside another ROS release.

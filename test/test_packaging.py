@@ -28,7 +28,7 @@ ROSDEP_KEYS = {
     "shapely": "python3-shapely", "typer": "python3-typer",
 }
 IMPORTED_AS = {"pyyaml": "yaml"}
-PIP_ONLY = {"mcap", "plotly"}
+PIP_ONLY = {"lz4", "mcap", "plotly", "zstandard"}
 OPTIONAL_ROS = {"ackermann_msgs": "ackermann_msgs", "tf2_ros": "tf2_ros_py"}
 
 

@@ -55,10 +55,11 @@ class Clock:
         jumps = _jumps(self._centres, self._offsets)
         self._stretch = np.cumsum(jumps) if len(jumps) else np.zeros(1, dtype=int)
         self.shifts = self._place_stretches()
-        self.breaks = [float(self._centres[b] + self._shift_of(b) - self._offsets[b]) for b in np.flatnonzero(jumps).tolist()]
+        at = np.flatnonzero(jumps).tolist()
+        self.breaks = [float(self._centres[b] + self._shift_of(b) - self._offsets[b]) for b in at]
         self.notes += [
             f"the clock of the stamps jumped by {self._jump(b):+.1f} s, {self._centres[b]:.0f} s after the recording "
-            "began: what lies before and after is kept apart" for b in np.flatnonzero(jumps).tolist()
+            "began: what lies before and after is kept apart" for b in at
         ]
 
     def _jump(self, b: int) -> float:

@@ -6,10 +6,14 @@ import sqlite3
 import struct
 from collections.abc import Iterator
 from contextlib import closing
+from io import BytesIO
 from pathlib import Path
 from typing import Any, Optional
 
+import lz4.frame
+import zstandard
 from mcap.exceptions import McapError
+from mcap.opcode import Opcode
 from mcap.records import Channel, Chunk, Message, Schema
 from mcap.stream_reader import CRCValidationError, StreamReader, breakup_chunk
 
@@ -86,9 +90,39 @@ class McapRecords(_Unopened):
                 except StopIteration:
                     return
                 except _BROKEN:
-                    self.losses.append(f"{self._file.name} breaks off: {size - before} of {size} bytes cannot be read")
-                    return
+                    self.losses.append(f"{self._file.name} breaks off within its last {size - before} of {size} bytes")
+                    break
                 yield record
+            stream.seek(before)
+            yield from _of_broken_chunk(stream.read())
+
+
+def _of_broken_chunk(rest: bytes) -> Iterator[Any]:
+    """The records of a chunk that breaks off, as far as they go; ``rest`` begins with it.
+
+    A chunk: opcode, length, first and last time, size, checksum (each 8 bytes but the first, 1, and the last, 4), name
+    of the compression, length, records (MCAP specification).
+    """
+    head = struct.Struct("<BQQQQI")
+    try:
+        opcode, *_ = head.unpack_from(rest)
+        (length,) = struct.unpack_from("<I", rest, head.size)
+        compression = rest[head.size + 4:head.size + 4 + length].decode()
+        if opcode != Opcode.CHUNK:
+            return
+        data = _decompressed(rest[head.size + 4 + length + 8:], compression)
+        yield from StreamReader(BytesIO(data), skip_magic=True, record_size_limit=_LARGEST).records
+    except _BROKEN:
+        return
+
+
+def _decompressed(data: bytes, compression: str) -> bytes:
+    """As much as can be had of compressed bytes that break off."""
+    if compression == "zstd":
+        return zstandard.ZstdDecompressor().decompressobj().decompress(data)
+    if compression == "lz4":
+        return bytes(lz4.frame.LZ4FrameDecompressor().decompress(data))
+    return data
 
 
 class _Channels:
@@ -122,7 +156,9 @@ class SqliteRows(_Unopened):
         self._learn()
 
     def _connect(self) -> sqlite3.Connection:
-        return sqlite3.connect(f"{self._file.absolute().as_uri()}?mode=ro", uri=True)
+        base = sqlite3.connect(f"{self._file.absolute().as_uri()}?mode=ro", uri=True)
+        base.execute("PRAGMA writable_schema=ON")  # else sqlite refuses a file that is shorter than its head says
+        return base
 
     def _learn(self) -> None:
         try:

@@ -17,7 +17,7 @@ _TENTH = 0.1
 _SLOW_TURNING = 0.02  # rad/s; slower turning belongs to a turn, but makes none
 _PAUSE = 1.0  # seconds of going straight within one robot's turn
 _APART = 2.0  # seconds after which a robot that begins to turn begins another turn of the fleet
-_SMALLEST = 0.15  # rad; less turning to and fro makes no turn
+_SMALLEST = 0.15  # rad; headings that stay within less make no turn
 _SET_OUT = 10.0  # seconds round the turning in which a standstill belongs to the turn
 _MARGIN = 1.0  # seconds that are added to a turn where nobody stands
 _SURE = 0.05  # probability by chance below which a difference counts as one
@@ -118,8 +118,8 @@ def _first_passing(times: np.ndarray, values: np.ndarray, threshold: float) -> t
 def find(times: np.ndarray, rates: np.ndarray, speeds: np.ndarray, sds: Sequence[float]) -> list[Span]:
     """The turns of a fleet. In each of them a robot turns once, with pauses of at most a second.
 
-    A robot turns while its turn rate passes 0.02 rad/s (or a tenth of its largest, if that is less) and the noise; to
-    and fro it has to come to 0.15 rad. Robots that begin while others turn, or within 2 s after them, turn with them.
+    A robot turns while its turn rate passes 0.02 rad/s (or a tenth of its largest, if that is less) and the noise; its
+    heading has to range over 0.15 rad. Robots that begin while others turn, or within 2 s after them, turn with them.
     A turn reaches from the standstill before to the standstill after it where the fleet stands within 10 s, else one
     second beyond the turning.
 
@@ -147,9 +147,9 @@ def _episodes(times: np.ndarray, rates: np.ndarray, sd: float) -> list[tuple[flo
     if not len(turning):
         return []
     parts = np.split(turning, np.flatnonzero(np.diff(times[turning]) > _PAUSE) + 1)
-    steps = np.gradient(times) if len(times) > 1 else np.ones(1)
+    headings = np.concatenate([[0.0], np.cumsum(np.diff(times) * np.nan_to_num(rates[1:]))])
     return [(float(times[part[0]]), float(times[part[-1]])) for part in parts
-            if float((sizes[part] * steps[part]).sum()) >= _SMALLEST]
+            if np.ptp(headings[part[0]:part[-1] + 1]) >= _SMALLEST]
 
 
 def _with_standstills(spans: list[Span], times: np.ndarray, rates: np.ndarray, speeds: np.ndarray) -> list[Span]:
