@@ -55,10 +55,10 @@ setup(
     install_requires=[
         "attrs>=23.2",
         "casadi>=3.7",  # 3.6 keeps the interpreter's lock while it solves
-        "networkx>=2.8",
-        "numpy>=1.26",
         "lz4>=4.0",
         "mcap>=1.2",  # reads recordings that break off, with lz4 and zstandard
+        "networkx>=2.8",
+        "numpy>=1.26",
         "plotly>=5.15",
         "pyyaml>=6.0",
         "rich>=13.7",

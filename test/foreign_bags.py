@@ -36,7 +36,8 @@ class ForeignBag:
         """``received`` in seconds since EPOCH; ``message`` one of bag_messages, or (type, bytes)."""
         self.entries.append((EPOCH + round(received * 1e9), topic, message))
 
-    def poses(self, topic, times, poses, *, kind="odometry", frame="map", late=0.01, offset=0.0, speeds=None, rates=None):
+    def poses(self, topic, times, poses, *, kind="odometry", frame="map", late=0.01, offset=0.0, speeds=None,
+              rates=None):
         """Poses with stamps ``times`` (plus ``offset``, another clock) that are received ``late``."""
         late = np.broadcast_to(late, len(times))
         for n, (when, pose) in enumerate(zip(times, poses)):

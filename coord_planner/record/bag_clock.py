@@ -14,6 +14,7 @@ import numpy as np
 
 _BIN = 1.0  # seconds
 _BACKWARD, _FORWARD = 1.0, 10.0  # seconds by which stamps must go back or run ahead of receipt to be a jump
+_OTHER_PACE = 0.05  # seconds a second by which a clock that runs at another pace differs; less is lateness
 _OTHER_CLOCK = 1.0  # seconds between two clocks that are not the same
 
 
@@ -48,10 +49,7 @@ class Clock:
         self.notes: list[str] = []
         stamped = {name: rows[_usable(rows)] for name, rows in streams.items()}
         stamped = {name: rows for name, rows in stamped.items() if len(rows)}
-        last = max((float(rows[:, 0].max()) for rows in stamped.values()), default=0.0)
-        first = min((float(rows[:, 0].min()) for rows in stamped.values()), default=0.0)
-        self._edges = np.arange(first, last + 2 * _BIN, _BIN)
-        self._centres, self._offsets = _main(stamped, self._edges)
+        self._centres, self._offsets = _main(stamped)
         jumps = _jumps(self._centres, self._offsets)
         self._stretch = np.cumsum(jumps) if len(jumps) else np.zeros(1, dtype=int)
         self.shifts = self._place_stretches()
@@ -75,7 +73,7 @@ class Clock:
         shifts: list[float] = []
         for number in range(int(self._stretch[-1]) + 1):
             bins = np.flatnonzero(self._stretch == number)
-            shift = float(self._offsets[bins[0]])
+            shift = _at_begin(self._centres[bins], self._offsets[bins])
             if shifts:
                 ended = self._centres[bins[0] - 1] - self._offsets[bins[0] - 1] + shifts[-1] + _BIN / 2
                 begins = self._centres[bins[0]] - self._offsets[bins[0]] - _BIN / 2
@@ -139,19 +137,27 @@ def _usable(rows: np.ndarray) -> np.ndarray:
     return np.isfinite(rows).all(axis=1)
 
 
-def _main(streams: Mapping[str, np.ndarray], edges: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def _main(streams: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
     """Receipt minus stamp, second by second: the median over streams of each stream's median; occupied bins only."""
-    table = np.full((len(streams), len(edges)), np.nan)
-    for row, values in enumerate(streams.values()):
-        number = np.searchsorted(edges, values[:, 0], side="right") - 1
+    if not streams:
+        return np.zeros(0), np.zeros(0)
+    bins = [np.floor(rows[:, 0] / _BIN).astype(int) for rows in streams.values()]
+    occupied = np.unique(np.concatenate(bins))
+    table = np.full((len(streams), len(occupied)), np.nan)
+    for row, (values, number) in enumerate(zip(streams.values(), bins)):
         order = np.argsort(number, kind="stable")
-        cuts = np.flatnonzero(np.diff(number[order])) + 1
-        for part in np.split(order, cuts):
-            table[row, number[part[0]]] = np.median(values[part, 0] - values[part, 1])
-    occupied = np.isfinite(table).any(axis=0) if len(table) else np.zeros(len(edges), dtype=bool)
+        for part in np.split(order, np.flatnonzero(np.diff(number[order])) + 1):
+            table[row, np.searchsorted(occupied, number[part[0]])] = np.median(values[part, 0] - values[part, 1])
     # of an even number of streams the lower median is taken: the middle of two clocks would be neither
-    offsets = np.nanquantile(table[:, occupied], 0.5, axis=0, method="lower") if occupied.any() else np.zeros(0)
-    return edges[occupied] + _BIN / 2, offsets
+    return (occupied + 0.5) * _BIN, np.nanquantile(table, 0.5, axis=0, method="lower")
+
+
+def _at_begin(centres: np.ndarray, offsets: np.ndarray) -> float:
+    """Receipt minus stamp when a stretch begins; clocks of another pace are followed back from the first bin's middle."""
+    if len(centres) < 2:
+        return float(offsets[0])
+    slope = float(offsets[1] - offsets[0]) / float(centres[1] - centres[0])
+    return float(offsets[0]) - (slope * _BIN / 2 if abs(slope) > _OTHER_PACE else 0.0)
 
 
 def _jumps(centres: np.ndarray, offsets: np.ndarray) -> np.ndarray:

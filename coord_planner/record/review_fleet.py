@@ -210,25 +210,44 @@ def _edges(content: Content, configuration: Optional[config.Configuration], name
 def common(robots: Sequence[Reviewed]) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """Common times (S,), poses (N, S, 3), speeds and turn rates (N, S); NaN where a robot was not heard of.
 
-    Where the robots share their stamps these are taken as they are; else positions are interpolated by cubics that
-    keep the velocities, everything else straight.
+    Where the robots share most of their stamps these are the times, and what was recorded then stays as it is; else
+    they are as far apart as the most frequent poses. Between poses positions are interpolated by cubics that keep the
+    velocities, everything else straight; a moment of NaN stands where nobody was heard of.
     """
+    times = _common_times(robots)
+    each = [_resampled(robot.motion, times) for robot in robots]
+    return times, np.stack([e[:, :3] for e in each]), np.stack([e[:, 3] for e in each]), np.stack(
+        [e[:, 4] for e in each])
+
+
+def _common_times(robots: Sequence[Reviewed]) -> np.ndarray:
     stamps = [np.round(robot.motion.times, 6) for robot in robots]
+    step = max(min(robot.motion.spacing for robot in robots), _FINEST)
+    heard = _heard(robots, step)
     shared = stamps[0]
     for others in stamps[1:]:
         shared = np.intersect1d(shared, others)
     if len(shared) >= _ALIKE * max(len(one) for one in stamps):
-        rows = [np.searchsorted(one, shared) for one in stamps]
-        taken = [robot.motion for robot in robots]
-        return (taken[0].times[rows[0]], np.stack([m.poses[row] for m, row in zip(taken, rows)]),
-                np.stack([m.speeds[row] for m, row in zip(taken, rows)]),
-                np.stack([m.rates[row] for m, row in zip(taken, rows)]))
-    step = max(min(robot.motion.spacing for robot in robots), _FINEST)
-    first, last = min(one[0] for one in stamps), max(one[-1] for one in stamps)
-    times = first + step * np.arange(int((last - first) / step) + 1)
-    each = [_resampled(robot.motion, times) for robot in robots]
-    return times, np.stack([e[:, :3] for e in each]), np.stack([e[:, 3] for e in each]), np.stack(
-        [e[:, 4] for e in each])
+        times = np.unique(np.concatenate(stamps))
+    else:
+        times = np.concatenate([first + step * np.arange(int((last - first) / step) + 1) for first, last in heard])
+    silent = [last + step for _, last in heard[:-1]]
+    return np.unique(np.concatenate([times, silent]))
+
+
+def _heard(robots: Sequence[Reviewed], step: float) -> list[tuple[float, float]]:
+    """Stretches of time in which at least one robot was heard of, further apart than two steps."""
+    parts = []
+    for robot in robots:
+        cuts = np.flatnonzero(np.diff(robot.motion.part)) + 1
+        parts += [(float(own[0]), float(own[-1])) for own in np.split(robot.motion.times, cuts)]
+    merged: list[tuple[float, float]] = []
+    for first, last in sorted(parts):
+        if merged and first <= merged[-1][1] + 2 * step:
+            merged[-1] = merged[-1][0], max(merged[-1][1], last)
+        else:
+            merged.append((first, last))
+    return merged
 
 
 def _resampled(motion: Motion, times: np.ndarray) -> np.ndarray:

@@ -19,7 +19,8 @@ from .bag_clock import Placed
 from .turns import deviation
 
 _FEWEST = 5  # poses in a window
-_RATE_NOISE, _SPEED_NOISE = 0.02, 0.05  # rad/s, m/s: what the window is chosen for
+_RATE_NOISE, _SPEED_NOISE = 0.01, 0.05  # rad/s, m/s: what the window is chosen for
+_RATE_NOISE_OF_PATHS = 0.02  # rad/s; a way's bends are second derivatives, and noisier
 _LONGEST = 2.0  # seconds of window, unless poses are so rare that five take longer
 _GAP_FACTOR, _SHORTEST_GAP = 5.0, 0.5  # a gap: so many usual spacings, and so many seconds
 _SLOW = 0.1  # part of the usual speed below which a curvature means nothing
@@ -128,7 +129,7 @@ def _by_orientation(times: np.ndarray, values: np.ndarray, headings: np.ndarray,
 
 
 def _along_path(times: np.ndarray, places: np.ndarray, part: np.ndarray) -> _Worked:
-    way = review_path.way(times, places, part, _RATE_NOISE)
+    way = review_path.way(times, places, part, _RATE_NOISE_OF_PATHS)
     velocity = way.speeds[:, None] * np.column_stack([np.cos(way.headings), np.sin(way.headings)])
     return _Worked(way.headings, velocity, way.speeds, way.speeds * way.curvatures, way.window, way.rate_sd, way.noise)
 
@@ -229,7 +230,7 @@ def _agrees(told: np.ndarray, speeds: np.ndarray, rates: np.ndarray) -> bool:
     if not np.isfinite(told).all():
         return False
     off_speed, off_rate = np.abs(told[:, 0] - speeds), np.abs(told[:, 1] - rates)
-    turning = np.abs(rates) > 3.0 * _RATE_NOISE
+    turning = np.abs(rates) > 6.0 * _RATE_NOISE
     return bool(
         np.median(off_speed) <= 0.05 + 0.1 * np.median(np.abs(speeds))
         and np.percentile(off_speed, 90) <= 0.1 + 0.2 * np.percentile(np.abs(speeds), 90)

@@ -15,7 +15,7 @@ from scipy import stats
 NOT_TURNING = 1e-3  # rad/s; a robot that never turns faster than this has no turn onset
 _TENTH = 0.1
 _SLOW_TURNING = 0.02  # rad/s; slower turning belongs to a turn, but makes none
-_PAUSE = 1.0  # seconds of going straight within one robot's turn
+_PAUSE = 1.0  # seconds of going straight within one robot's turn, more where samples are rarer
 _APART = 2.0  # seconds after which a robot that begins to turn begins another turn of the fleet
 _SMALLEST = 0.15  # rad; headings that stay within less make no turn
 _SET_OUT = 10.0  # seconds round the turning in which a standstill belongs to the turn
@@ -119,7 +119,7 @@ def find(times: np.ndarray, rates: np.ndarray, speeds: np.ndarray, sds: Sequence
     """The turns of a fleet. In each of them a robot turns once, with pauses of at most a second.
 
     A robot turns while its turn rate passes 0.02 rad/s (or a tenth of its largest, if that is less) and the noise; its
-    heading has to range over 0.15 rad. Robots that begin while others turn, or within 2 s after them, turn with them.
+    heading has to range over 0.15 rad. The tails belong to it, down to a tenth of its largest turn rate. Robots that begin while others turn, or within 2 s after them, turn with them.
     A turn reaches from the standstill before to the standstill after it where the fleet stands within 10 s, else one
     second beyond the turning.
 
@@ -146,10 +146,24 @@ def _episodes(times: np.ndarray, rates: np.ndarray, sd: float) -> list[tuple[flo
     turning = np.flatnonzero(sizes > floor)
     if not len(turning):
         return []
-    parts = np.split(turning, np.flatnonzero(np.diff(times[turning]) > _PAUSE) + 1)
+    pause = max(_PAUSE, 2.5 * float(np.median(np.diff(times))))  # of rare samples one or two may be missing
+    parts = np.split(turning, np.flatnonzero(np.diff(times[turning]) > pause) + 1)
     headings = np.concatenate([[0.0], np.cumsum(np.diff(times) * np.nan_to_num(rates[1:]))])
-    return [(float(times[part[0]]), float(times[part[-1]])) for part in parts
-            if np.ptp(headings[part[0]:part[-1] + 1]) >= _SMALLEST]
+    whole: list[tuple[int, int]] = []
+    for part in parts:
+        first, last = _widened(part[0], part[-1], sizes, sd)
+        if whole and first <= whole[-1][1]:
+            first = whole.pop()[0]
+        whole.append((first, last))
+    return [(float(times[first]), float(times[last])) for first, last in whole
+            if np.ptp(headings[first:last + 1]) >= _SMALLEST]
+
+
+def _widened(first: int, last: int, sizes: np.ndarray, sd: float) -> tuple[int, int]:
+    """A stretch with its tails, down to a tenth of its largest turn rate and one and a half deviations of the noise."""
+    low = np.flatnonzero(sizes <= max(_TENTH * float(sizes[first:last + 1].max()), 1.5 * sd))
+    before, after = low[low < first], low[low > last]
+    return (int(before[-1]) if len(before) else 0), (int(after[0]) if len(after) else len(sizes) - 1)
 
 
 def _with_standstills(spans: list[Span], times: np.ndarray, rates: np.ndarray, speeds: np.ndarray) -> list[Span]:
