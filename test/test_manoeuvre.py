@@ -11,7 +11,7 @@ from coord_planner.core import manoeuvre
 from coord_planner.core.dubins import ArcPath
 from coord_planner.core.graph import NeighbourGraph, path
 from coord_planner.core.manoeuvre import End, EqualRadius, ToEnds, eased_turn
-from coord_planner.errors import SettingsError
+from coord_planner.errors import RefusedError, SettingsError
 
 
 def task(wanted, poses, fleet=None, chosen=None, edges=None):
@@ -79,6 +79,17 @@ def test_a_given_duration_is_kept_and_shorter_ways_are_driven_slower():
     assert made.asked[1] == pytest.approx(made.asked[0] / 2)
     s = np.linspace(0.0, made.arrival, 41)
     assert made.asked_speed(s).sum(axis=1) * 0.5 == pytest.approx([10.0, 5.0])  # the whole way, in the whole time
+
+
+def test_no_duration_is_shorter_than_the_dubins_bound():
+    """From (0, 0, 0) to (4, 4, pi) at radius 1: 7.613728608589 m (shared/checks.md section 4: Dubins 1957)."""
+    fleet = carts(1, attrs.evolve(LIMITS, max_curvature=1.0))
+    top, up, down = LIMITS.max_speed, LIMITS.max_acceleration, LIMITS.max_braking
+    least = 7.613728608589 / top + top / (2 * up) + top / (2 * down)  # speeding up, holding, braking
+    wanted = ToEnds(ends_deg=("cart_1 pose 4 4 180",))
+    with pytest.raises(RefusedError, match=rf"7\.61 m at a radius of 1\.00 m, takes {least:.1f} s"):
+        task(attrs.evolve(wanted, duration=least - 0.01), [[0.0, 0.0, 0.0]], fleet)
+    assert task(attrs.evolve(wanted, duration=least + 0.01), [[0.0, 0.0, 0.0]], fleet).arrival >= least
 
 
 def test_a_guess_begins_at_the_start_and_arrives_at_the_ends_in_time():

@@ -188,7 +188,8 @@ REFUSED = {
     "turned onto each other": (EqualRadius(radius=4.0), {"poses": 1.7}, ("would end 0.50 m apart", "0.85 m")),
     "standing too close": (EqualRadius(radius=4.0), {"poses": 1.6}, ("stand 0.80 m apart", "0.05 m short", "0.85 m")),
     "too little time": (
-        ToEnds(ends_deg=("cart_1 pose 6 6 90", "cart_2 pose 9 6 90"), duration=5.0), {}, ("5 s", "13.9 s", "11.98 m"),
+        ToEnds(ends_deg=("cart_1 pose 6 6 90", "cart_2 pose 9 6 90"), duration=5.0), {},
+        ("5 s are given", "cart_1", "7.22 m", "7.0 s"),
     ),
     "no such robot": (ToEnds(ends_deg=("cart_9 pose 6 6 90",)), {}, ("'cart_9'", "cart_1, cart_2")),
     "nobody has an end": (ToEnds(ends_deg=()), {}, ("no robot has an end",)),

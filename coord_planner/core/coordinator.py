@@ -20,7 +20,7 @@ from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, 
 from .motion import lags
 from .observer import Estimate, Observer
 from .plan import Plan
-from .problem import POSE, SPEED_COMMAND
+from .problem import POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared, Pursuit
 from .reference import Reference
 from .settings import Settings, SiteRules
@@ -33,6 +33,7 @@ _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hund
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
+Solve = Callable[[Problem, solver.Start, bool, float], Plan]
 
 
 @attrs.frozen(eq=False)
@@ -73,12 +74,14 @@ class Coordinator:
     Args:
         budget: wall time that one tick's solve may take, seconds; ``settings.horizon.budget`` when left out. A
             rehearsal gives more, so that its numbers do not depend on how busy the machine is.
+        solve: solves a tick: (problem, start, warm, budget) -> Plan.
     """
 
     def __init__(
         self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre],
-        budget: Optional[float] = None,
+        budget: Optional[float] = None, solve: Solve = solver.solve,
     ) -> None:
+        self._solve_tick = solve
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
         self._budget = settings.horizon.budget if budget is None else budget
@@ -497,7 +500,7 @@ class Coordinator:
         settings = self._settings
         try:
             warm = prepared.start.multipliers is not None
-            plan = solver.solve(prepared.problem, prepared.start, warm=True, budget=self._budget)
+            plan = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
             if not usable(prepared.problem, plan) and warm:
                 cautions.append(rules.plan_late(settings, plan.solve_time))
                 return None

@@ -175,6 +175,8 @@ def work_out(
         named = _named_ends(manoeuvre, fleet)
         ways, ends = _ways_to_ends(fleet, poses, named, neighbours)
         fixed, tightest = manoeuvre.duration, math.inf
+        if fixed > 0.0:
+            _check_duration(name, manoeuvre, fleet, settings, poses, named, speed_now)
     _check_ends(fleet, settings, named, manoeuvre.speed)
     return lay_out(
         name, fleet, settings, ends, ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
@@ -200,7 +202,7 @@ def go_on(
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     return lay_out(
         task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
-        duration=0.0, coupling=task.coupling, alignment=task.alignment,
+        duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
     )
 
 
@@ -209,7 +211,10 @@ def lay_out(
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
     max_curvature: float = math.inf,
 ) -> Task:
-    """Times and speeds for ways that are known; RefusedError when there is nothing to drive or too little time."""
+    """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
+
+    A given duration stretches or squeezes the profile: it is then driven slower or faster than asked.
+    """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
         raise RefusedError(f"{name}: every robot is where it is to end already", "ask for something else or abandon it")
@@ -218,14 +223,7 @@ def lay_out(
         _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),
     )
     step = settings.horizon.interval
-    needed = profile.duration
-    if 0.0 < duration < needed - 1e-9:
-        raise RefusedError(
-            f"{name}: the longest way, {longest:.2f} m, takes {needed:.1f} s at {speed:g} m/s, and "
-            f"{duration:g} s are given",
-            f"give at least {needed:.1f} s, or 0 to have it worked out",
-        )
-    arrival = step * max(4, math.ceil((duration or needed) / step - 1e-9))
+    arrival = step * max(4, math.ceil((duration or profile.duration) / step - 1e-9))
     # Machines that answer late come to rest late; the end holds the whole state.
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
@@ -381,6 +379,27 @@ def _check_speed(manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings) -> None
             f"{manoeuvre.end_speed:g} m/s is asked at the end and only {manoeuvre.speed:g} m/s on the way there",
             f"ask for an end speed of at most {manoeuvre.speed:g} m/s",
         )
+
+
+def _check_duration(
+    name: str, manoeuvre: ToEnds, fleet: Fleet, settings: Settings, poses: np.ndarray, ends: np.ndarray,
+    speed_now: float,
+) -> None:
+    """No way is shorter than the Dubins path of the smallest radius, and none is driven faster than allowed."""
+    for k in np.flatnonzero(~np.isnan(ends[:, 0])):
+        limits = fleet.robots[k].limits
+        way = shortest(_start(poses[k]), _start(ends[k]), 1.0 / limits.max_curvature).length
+        top = min(limits.max_speed, settings.site_rules.max_speed)
+        least = speed_profile(
+            way, speed_now, top, manoeuvre.end_speed, limits.max_acceleration, limits.max_braking
+        ).duration
+        if manoeuvre.duration < least - 1e-9:
+            raise RefusedError(
+                f"{name}: {manoeuvre.duration:g} s are given, and even the shortest way of {fleet.names[k]} to its "
+                f"end, {way:.2f} m at a radius of {1.0 / limits.max_curvature:.2f} m, takes {least:.1f} s at up to "
+                f"{top:g} m/s",
+                f"give at least {least:.1f} s and something for corrections, or 0 to have it worked out",
+            )
 
 
 def _check_start(fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:

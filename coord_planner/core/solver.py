@@ -48,7 +48,7 @@ def prepare(shape: Shape, budget: float) -> None:
     _solver(shape, True, budget)
 
 
-def solve(problem: Problem, start: Start, *, warm: bool = False, budget: float = 60.0) -> Plan:
+def solve(problem: Problem, start: Start, warm: bool = False, budget: float = 60.0) -> Plan:
     """Solve a problem.
 
     Args:
