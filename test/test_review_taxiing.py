@@ -1,8 +1,8 @@
 """A real recording of wheeled vehicles that turn: aircraft taxiing, about one position a second.
 
-The positions ship with PyPI's ``traffic`` 2.13 (MIT), as samples/onground/zurich_airport.json.gz; they come from a network
-of volunteers' receivers, which asks that its data are used for research and not for profit. They are read where
-``make unit`` puts the package, put into a bag in a temporary folder, and never copied into the project.
+The positions ship with PyPI's ``traffic`` 2.13 (MIT), as samples/onground/zurich_airport.json.gz. They come from a
+network of volunteers' receivers, which asks that its data are used for research and not for profit. They are read
+where ``make unit`` puts the package, put into a bag in a temporary folder, and never copied into the project.
 """
 
 import gzip

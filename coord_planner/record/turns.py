@@ -119,9 +119,9 @@ def find(times: np.ndarray, rates: np.ndarray, speeds: np.ndarray, sds: Sequence
     """The turns of a fleet. In each of them a robot turns once, with pauses of at most a second.
 
     A robot turns while its turn rate passes 0.02 rad/s (or a tenth of its largest, if that is less) and the noise; its
-    heading has to range over 0.15 rad. The tails belong to it, down to a tenth of its largest turn rate. Robots that begin while others turn, or within 2 s after them, turn with them.
-    A turn reaches from the standstill before to the standstill after it where the fleet stands within 10 s, else one
-    second beyond the turning.
+    heading has to range over 0.15 rad. The tails belong to it, down to a tenth of its largest turn rate. Robots that
+    begin while others turn, or within 2 s after them, turn with them. A turn reaches from the standstill before to the
+    standstill after it where the fleet stands within 10 s, else one second beyond the turning.
 
     Args:
         times: shape (S,). rates, speeds: shape (N, S), NaN where nothing is known. sds: deviations of the rates, (N,).
