@@ -153,7 +153,7 @@ def _main(streams: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _at_begin(centres: np.ndarray, offsets: np.ndarray) -> float:
-    """Receipt minus stamp when a stretch begins; clocks of another pace are followed back from the first bin's middle."""
+    """Receipt minus stamp when a stretch begins; clocks of another pace are followed back from the middle of the bin."""
     if len(centres) < 2:
         return float(offsets[0])
     slope = float(offsets[1] - offsets[0]) / float(centres[1] - centres[0])
