@@ -137,12 +137,13 @@ def _write_turns(figures: dict[str, Any]) -> None:
     if not figures["turns"]:
         write("No turn was found.\n")
     for number, turn in enumerate(figures["turns"], start=1):
-        first = f"{turn['first']} turned first" if turn["first"] else "who turned first is within the noise"
+        first = f"{turn['first']} turned first" if turn["first"] else "Who turned first is within the noise"
         write_heading(f"Turn {number}: {turn['from_s']:.1f} to {turn['to_s']:.1f} s")
         apart = "" if turn["min_clearance_m"] is None else (
             f"; smallest clearance {turn['min_clearance_m']:.3f} m ({' and '.join(turn['min_clearance_pair'])})")
-        differed = figure(turn["heading_spread_max_rad"], 1, _DEGREES)
-        write(f"{first}{apart}; headings differed by up to {differed} degrees. {_spread_in_words(turn)}")
+        spread = turn["heading_spread_max_rad"]
+        differed = "" if spread is None else f"; headings differed by up to {figure(spread, 1, _DEGREES)} degrees"
+        write(f"{first}{apart}{differed}. {_spread_in_words(turn) if len(turn['onset_s']) > 1 else ''}")
         filled = table("robot", "hops", "onset s", "+-", "largest turn rate rad/s", "+-", "heading change degrees")
         for name, onset in turn["onset_s"].items():
             hops = (turn["hops"] or {}).get(name)

@@ -14,6 +14,7 @@ import numpy as np
 
 _BIN = 1.0  # seconds
 _BACKWARD, _FORWARD = 1.0, 10.0  # seconds by which stamps must go back or run ahead of receipt to be a jump
+_FIRST_BINS = 60
 _OTHER_PACE = 0.05  # seconds a second by which a clock that runs at another pace differs; less is lateness
 _OTHER_CLOCK = 1.0  # seconds between two clocks that are not the same
 
@@ -25,7 +26,8 @@ class Placed:
     Attributes:
         times: seconds since the recording began, shape (S,).
         stretch: which stretch each belongs to, shape (S,), int.
-        late: time of receipt minus stamp, seconds, (S,); NaN where stamps are of another clock or missing.
+        late: time of receipt minus stamp, seconds, (S,), less what is usual where all stamps are of another clock than
+            the recorder's; NaN where they are of another clock than most stamps, or missing.
     """
 
     times: np.ndarray
@@ -53,6 +55,10 @@ class Clock:
         jumps = _jumps(self._centres, self._offsets)
         self._stretch = np.cumsum(jumps) if len(jumps) else np.zeros(1, dtype=int)
         self.shifts = self._place_stretches()
+        self._same_clock = not len(self._offsets) or abs(float(np.median(self._offsets))) <= _OTHER_CLOCK
+        if not self._same_clock:
+            self.notes.append("stamps are of another clock than the recorder's (simulated time, or a clock that is not "
+                              "set): how late messages came is told against what is usual")
         at = np.flatnonzero(jumps).tolist()
         self.breaks = [float(self._centres[b] + self._shift_of(b) - self._offsets[b]) for b in at]
         self.notes += [
@@ -114,7 +120,8 @@ class Clock:
             self.notes.append(f"{name}: {int(strange.sum())} stamps are far from the others' or missing: "
                               "their times are times of receipt")
         times = np.where(strange, fallback.times, np.nan_to_num(rows[:, 1]) + self.shifts[stretch])
-        return Placed(times, np.where(strange, fallback.stretch, stretch), np.where(strange, np.nan, offsets))
+        late = offsets if self._same_clock else off
+        return Placed(times, np.where(strange, fallback.stretch, stretch), np.where(strange, np.nan, late))
 
     def _bin(self, times: np.ndarray) -> np.ndarray:
         """Number of the occupied bin that is nearest to each time."""
@@ -153,11 +160,14 @@ def _main(streams: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _at_begin(centres: np.ndarray, offsets: np.ndarray) -> float:
-    """Receipt minus stamp when a stretch begins; clocks of another pace are followed back from the middle of the bin."""
-    if len(centres) < 2:
-        return float(offsets[0])
-    slope = float(offsets[1] - offsets[0]) / float(centres[1] - centres[0])
-    return float(offsets[0]) - (slope * _BIN / 2 if abs(slope) > _OTHER_PACE else 0.0)
+    """Receipt minus stamp when a stretch begins, by its first minute: one message that was old when it came says little.
+
+    A clock of another pace is followed back to the beginning (median of slopes and of intercepts).
+    """
+    centres, offsets = centres[:_FIRST_BINS], offsets[:_FIRST_BINS]
+    slope = float(np.median(np.diff(offsets) / np.diff(centres))) if len(centres) > 2 else 0.0
+    slope = slope if abs(slope) > _OTHER_PACE else 0.0
+    return float(np.median(offsets - slope * (centres - centres[0] + _BIN / 2)))
 
 
 def _jumps(centres: np.ndarray, offsets: np.ndarray) -> np.ndarray:

@@ -9,7 +9,6 @@ from ..core import outline
 from ..core.fleet import Fleet
 from ..trial.run import Run
 
-
 _BLOCK = 10_000  # samples whose outlines are in memory at once
 
 

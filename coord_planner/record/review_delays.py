@@ -9,8 +9,9 @@ import numpy as np
 import shapely
 
 from .review_fleet import FleetRecord, Reviewed
+from .review_turns import turn_rates
 
-_STANDING = 0.02  # m/s
+_STANDING = 0.02  # m/s and rad/s
 _STOP = 1.0  # seconds of standing that make a stop
 _GAP_FACTOR, _SHORTEST_GAP = 5.0, 0.5  # as for poses: so many usual spacings, and so many seconds
 _LEADS = (0.5, 1.0, 2.0)  # seconds ahead at which plans are compared with what was driven
@@ -19,7 +20,8 @@ _LEADS = (0.5, 1.0, 2.0)  # seconds ahead at which plans are compared with what 
 def stops(record: FleetRecord) -> list[dict[str, Any]]:
     """Stretches of at least a second in which a robot stood between two drives; ``robot`` None: all of them."""
     run = record.run
-    standing = np.where(np.isfinite(run.speeds), np.abs(run.speeds) <= _STANDING, False)
+    still = (np.abs(np.nan_to_num(turn_rates(record))) <= _STANDING) & (np.abs(np.nan_to_num(run.speeds)) <= _STANDING)
+    standing = still & np.isfinite(run.speeds)
     whole = _stretches(run.times, np.logical_and.reduce(standing))
     found: list[dict[str, Any]] = [{"robot": None, "from_s": begin, "to_s": end} for begin, end in whole]
     for row, name in enumerate(run.fleet.names):

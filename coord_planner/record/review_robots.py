@@ -14,6 +14,7 @@ from .bag_content import POSE_KINDS, Content, Poses
 
 TRUTH = "simulated_state"  # where a simulator of ours tells the true motion of the turning point
 _TRANSFORM = "tf:"
+_OFTEN = 0.25  # part of the most frequent source's messages below which a source is too rare to be preferred
 # Words of which the name of a pose topic is made, and which therefore name no robot.
 _POSE_WORDS = re.compile(
     r"(odom|pose|state|truth|filtered|fused|locali[sz]|amcl|tf|position|base|footprint|link|local|global)"
@@ -53,7 +54,11 @@ def assign(content: Content, names: Sequence[str] = (), given: Mapping[str, str]
     if names and not chosen and sources:
         raise SettingsError("none of its robots is in the recording", key="robots.names",
                             allowed=f"robots whose poses are there, or --robot NAME=TOPIC; there are {_some(sources)}")
-    by_robot = {name: _with_topics(content, name, source, sources) for name, source in chosen.items()}
+    named: dict[str, list[str]] = {}
+    for source in sources:
+        named.setdefault(_named(source, sources, names)[0], []).append(source)
+    by_robot = {name: _with_topics(content, name, sources[source], source, named.get(name, []))
+                for name, source in chosen.items()}
     return [by_robot[name] for name in (names or sorted(by_robot, key=_natural)) if name in by_robot]
 
 
@@ -131,7 +136,10 @@ def _given(sources: Mapping[str, Poses], given: Mapping[str, str]) -> dict[str, 
 
 
 def _guess(sources: Mapping[str, Poses], names: Sequence[str]) -> dict[str, str]:
-    """Source by robot: of the patterns that fit, the one with the most robots, in a common frame, of the best kind."""
+    """Source by robot, of the patterns that fit.
+
+    Best is one in a common frame that is nobody's own odometry's, for the most robots, often enough, of the best kind.
+    """
     patterns: dict[str, dict[str, str]] = {}
     for source in sources:
         name, pattern = _named(source, sources, names)
@@ -178,12 +186,14 @@ def _rank(pattern: str, robots: Mapping[str, str], sources: Mapping[str, Poses])
     frames = {sources[source].frame for source in robots.values()}
     kinds = [POSE_KINDS.index(sources[source].kind) if sources[source].kind in POSE_KINDS else len(POSE_KINDS)
              for source in robots.values()]
-    own = any("odom" in frame for frame in frames)
-    return (len(frames) == 1 and not own, len(robots), TRUTH in pattern, -max(kinds),
-            sum(len(sources[source].table) for source in robots.values()))
+    comparable = len(robots) == 1 or (len(frames) == 1 and not any("odom" in frame for frame in frames))
+    often = max(len(poses.table) for poses in sources.values())
+    counts = [len(sources[source].table) for source in robots.values()]
+    return (comparable, len(robots), TRUTH in pattern, min(counts) >= _OFTEN * often, -max(kinds), sum(counts))
 
 
-def _with_topics(content: Content, name: str, source: str, sources: Mapping[str, Poses]) -> RobotTopics:
+def _with_topics(content: Content, name: str, poses: Poses, source: str, named: Sequence[str]) -> RobotTopics:
+    """The topics of a robot; ``named``: all sources of poses that carry its name."""
     def of(topics: Iterable[str], *wanted: str) -> str:
         own = [topic for topic in topics if name in re.split(r"[/:]", topic) or topic.startswith(f"/{name}_")]
         ranked = [topic for word in wanted for topic in own if word in topic.rsplit("/", 1)[-1]] + (
@@ -193,9 +203,8 @@ def _with_topics(content: Content, name: str, source: str, sources: Mapping[str,
     single = name == "robot"
     commands = [topic for topic, found in content.commands.items() if len(found.table)]
     plans = [topic for topic, found in content.plans.items() if found]
-    others = [other for other in sources if other != source and name in re.split(r"[/:]", other)]
     return RobotTopics(
-        name, sources[source], source, tuple(sorted(others)),
+        name, poses, source, tuple(sorted(other for other in named if other != source)),
         commands[0] if single and len(commands) == 1 else of(commands, "cmd_vel", "command", "cmd", ""),
         of(content.numbers, "curvature"),
         plans[0] if single and len(plans) == 1 else of(plans, "planned_path", "local_plan", "plan", "path"),
