@@ -81,4 +81,6 @@ def _nominal(review: Review) -> list[list[list[float]]]:
 
 
 def _name(review: Review) -> str:
-    return review.record.content.recording.path.resolve().name
+    """The recording's name; that of its folder before it where it is just called bag, as many are."""
+    path = review.record.content.recording.path.resolve()
+    return f"{path.parent.name}/{path.name}" if path.name in ("bag", "rosbag2") else path.name

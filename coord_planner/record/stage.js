@@ -461,7 +461,9 @@ function drawByHop(node, title, names, sets, signed) {
   const layout = Object.assign(base(node), { margin: { l: 52, r: 10, t: 26, b: 38 }, hovermode: "closest", dragmode: false,
     title: { text: title, x: 0, xref: "paper", xanchor: "left", font: { size: 12, color: css("--ink") }, yref: "container", y: 0.97 } });
   layout.xaxis = axis({ title: { text: hops ? "hops along the neighbour graph" : "robots, by name", font: { size: 11, color: css("--soft") } }, dtick: 1, fixedrange: true });
-  layout.yaxis = axis({ fixedrange: true, nticks: 6, rangemode: signed ? "normal" : "tozero" });
+  layout.yaxis = axis({ fixedrange: true, nticks: 6 });
+  const highest = Math.max(0, ...traces.filter((trace) => trace.error_y).map((trace) => trace.y[0] + trace.error_y.array[0]));
+  if (!signed) layout.yaxis.range = [0, 1.2 * highest || 1]; // room for the labels above the points
   if (!hops) Object.assign(layout.xaxis, { tickvals: names.map((_, k) => k), ticktext: labels });
   Plotly.react(node, traces, layout, OPTIONS);
 }
