@@ -227,10 +227,11 @@ def excess(fleet: Fleet, times: np.ndarray, commands: np.ndarray) -> dict[str, f
 
 
 def small_yard(count: int = 2, response: Response = LATE, **imperfect: float) -> Yard:
-    """Two carts, a short horizon: quick to plan for. ``corner`` and ``led`` can be begun."""
+    """Two carts, a short horizon: quick to plan for. ``corner``, ``led``, ``placed`` and ``passing`` can be begun."""
     manoeuvres: dict[str, Manoeuvre] = {
         "corner": EqualRadius(angle_deg=60.0, radius=3.0, speed=1.0),
         "led": ToEnds(ends_deg=("cart_1 heading 60",), speed=1.0, alignment=10.0),
+        "placed": ToEnds(ends_deg=("cart_1 pose 6 8 90", "cart_2 pose 9 8 90")),
         "passing": EqualRadius(angle_deg=60.0, radius=3.0, speed=1.0, end_speed=0.5),
     }
     horizon = Horizon(intervals=12)

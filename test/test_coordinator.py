@@ -182,7 +182,7 @@ def test_resumed_close_to_its_end_it_creeps_there_instead_of_going_round(seconds
 
 
 def test_a_robot_pushed_off_its_way_finds_a_new_one():
-    yard = under_way(2.0)
+    yard = under_way(3.0, "placed")
     yard.coordinator.halt(yard.now, "halted")
     yard.run_to(State.HELD)
     yard.moved["cart_1"] = (0.0, 0.8)

@@ -2,12 +2,13 @@
 
 import numpy as np
 import pytest
-from fleets import LIMITS, carts, states
+from fleets import LIMITS, abreast, carts, settings, states
 from hypothesis import given
 from hypothesis import strategies as st
 
 from coord_planner.core.fleet import Limits
 from coord_planner.core.problem import CURVATURE_COMMAND, SPEED_COMMAND, bounds_in_force
+from coord_planner.core.watch import choose_pairs, watch
 
 SLACK = 1e-9
 
@@ -96,3 +97,25 @@ def test_reversing_faster_than_allowed_comes_back_too():
     bounds = bounds_in_force(carts(1, limits), state, np.array([0.0, 0.5, 1.0, 2.0]), 99.0, 0.0, 9.0, 9.0)
     assert state[0, SPEED_COMMAND] == -1.0
     assert bounds.min_speed[0] == pytest.approx([-0.75, -0.5, -0.5])
+
+
+# Watched pairs
+
+
+def test_the_gap_to_keep_is_the_sites_the_margin_and_what_can_happen_between_two_nodes():
+    """0.85 m; for each robot 0.05 m and 0.02 s at 1.5 m/s; a pair that moves by 0.4 m, (0.4 m)^2 / (8 * 1.01 m)."""
+    poses = np.zeros((2, 3, 3))
+    poses[1, :, 1] = 3.0
+    poses[1, :, 0] = [0.0, 0.4, 0.4]
+    found = watch(carts(2), settings(), np.array([[0, 1]]), poses, 1.5)
+    kept = 0.85 + 2 * (0.05 + 0.02 * 1.5)
+    assert found.gaps[0] == pytest.approx([kept + 0.4**2 / (8 * kept), kept])
+    assert found.normals[0] == pytest.approx(np.array([[0.0, 1.0]] * 2), abs=1e-9)  # over the stretch both share
+
+
+def test_pairs_within_reach_are_watched_and_others_not():
+    poses = np.repeat(abreast(4, 5.0)[:, None], 3, axis=1)
+    pairs = choose_pairs(carts(4), settings(clearance={"reach": 4.0}), poses)
+    assert pairs.tolist() == [[0, 1], [1, 2], [2, 3]]
+    poses[3, 2, 1] = 6.0  # the last one comes to the first three in the end
+    assert [1, 3] in choose_pairs(carts(4), settings(clearance={"reach": 4.0}), poses).tolist()

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from fleets import HARDLY_ANY, LIMITS, abreast, carts, settings
 
-from coord_planner.core import dubins, outline, se2
+from coord_planner.core import dubins, outline, reference, se2, solver
 from coord_planner.core import graph as graphs
 from coord_planner.core.graph import NeighbourGraph
 from coord_planner.core.manoeuvre import EqualRadius, ToEnds
@@ -78,6 +78,18 @@ def test_after_its_end_a_reference_goes_straight_on():
     heading = before[:, 2]
     assert after[:, :2] == pytest.approx(before[:, :2] + np.stack([np.cos(heading), np.sin(heading)], axis=1))
     assert (after[:, SPEED] == 0.5).all() and (after[:, CURVATURE] == 0.0).all()
+
+
+def test_what_is_left_of_the_ways_is_measured_from_where_each_robot_stands():
+    made = fleets.corner()
+    poses = np.stack([made.state(s)[k, :3] for k, s in enumerate((5.0, 6.0, 7.5))])
+    poses[2, :2] += [1.0, -1.0]  # not on its way any more
+    left = reference.ways_left(made, poses, 4.5)
+    assert left[2] is None
+    for k, s in ((0, 5.0), (1, 6.0)):
+        curve = made.states(np.linspace(s, made.end, 2001))[k, :, :2]
+        assert left[k].length == pytest.approx(np.linalg.norm(np.diff(curve, axis=0), axis=1).sum(), abs=0.03)
+        assert left[k].start == tuple(poses[k]) and left[k].end == pytest.approx(made.task.ends[k], abs=0.03)
 
 
 # Bounds and symmetries
@@ -206,6 +218,21 @@ def test_what_cannot_be_kept_is_refused_with_figures_and_a_remedy(wanted, given,
         fleets.solve(wanted, carts(2), poses, chosen)
     assert all(word in refused.value.reason + refused.value.remedy for word in words), refused.value
     assert refused.value.remedy
+
+
+def test_the_asked_radius_is_named_where_it_stands_in_the_way():
+    """A fleet that was pushed aside: back to its end only by tighter bends than were asked for."""
+    made = fleets.corner()
+    aside = fleets.states(made.state(6.0)[:, :3] + [0.0, 0.8, 0.0])
+    with pytest.raises(RefusedError, match="the radius of 4 m that is asked"):
+        reference.make(made.task, made.plan.fleet, made.graph, settings(), aside, start=6.0)
+
+
+def test_a_plan_that_the_solver_did_not_finish_and_that_jumps_is_refused(monkeypatch):
+    whole = solver.solve
+    monkeypatch.setattr(solver, "solve", lambda problem, start, **_: whole(problem, start, budget=1e-3))
+    with pytest.raises(RefusedError, match="no plan was found in"):
+        fleets.solve(EqualRadius(radius=4.0), carts(3), abreast(3), settings())
 
 
 def test_a_wall_of_robots_that_cannot_be_passed_is_refused_with_the_clearance():

@@ -7,7 +7,7 @@ from fleets import LATE, PROMPT
 
 from coord_planner.core import solver, tick
 from coord_planner.core.messages import State
-from coord_planner.core.problem import POSE
+from coord_planner.core.problem import POSE, SPEED
 
 
 def off_the_reference(yard):
@@ -60,6 +60,20 @@ def test_a_tick_from_the_reference_is_the_reference(start, pace):
     # At 3.05 s commands run straight between other nodes; at another pace the small prices weigh a little less.
     exact = start != 3.05 and pace == 1.0
     assert plan.poses == pytest.approx(want, abs=1e-4 if exact else 0.01)
+
+
+def test_slower_in_step_everything_is_asked_at_a_part_of_the_speed():
+    """So that turning, priced at the asked speed, costs the same per second of the reference."""
+    made, chosen = fleets.corner(), fleets.settings()
+    full, half = (
+        tick.pose_problem(made, made.plan.fleet, chosen, made.state(3.0), 3.0, 0.0, pace, None, np.zeros(3))[0]
+        for pace in (1.0, 0.5)
+    )
+    for name in ("asked_speed", "turn_speed", "full_speed"):
+        assert getattr(half, name) == pytest.approx(getattr(full, name) / 2), name
+    assert half.intervals == pytest.approx(full.intervals * 2) and half.pace * 2 == full.pace
+    assert half.target[:, :4] == pytest.approx(full.target[:, :4])
+    assert half.target[:, SPEED] == pytest.approx(full.target[:, SPEED] / 2)
 
 
 def test_a_robot_that_fell_back_is_brought_back_and_the_others_copy_little():

@@ -281,9 +281,8 @@ class Coordinator:
                     prepared = self._prepare(snapshot.time)
         plan = self._solve(prepared, cautions)
         with self._lock:
-            if plan is not None and prepared is not None and self._state is State.MOVING and self._pursuit is not None:
-                self._pursuit.install(prepared, plan, snapshot.time - _SINCE)
-                self._planned_at = snapshot.time
+            if prepared is not None and self._state is State.MOVING and self._pursuit is not None:
+                self._drive(prepared, plan, snapshot.time)
             self._decision = self._decide(snapshot.time, estimate, plan, cautions)
             return self._decision
 
@@ -499,15 +498,23 @@ class Coordinator:
             return None
         settings = self._settings
         try:
-            warm = prepared.start.multipliers is not None
-            plan = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            if not usable(prepared.problem, plan) and warm:
-                cautions.append(rules.plan_late(settings, plan.solve_time))
-                return None
+            solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
+            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
+            if plan is None:
+                cautions.append(rules.plan_late(settings, solved.solve_time))
         except SolveError as error:
             cautions.append(rules.plan_failed(settings, str(error)))
             return None
         return plan
+
+    def _drive(self, prepared: Prepared, plan: Optional[Plan], now: float) -> None:
+        pursuit = self._pursuit
+        assert pursuit is not None
+        if plan is not None:
+            pursuit.install(prepared, plan, now - _SINCE)
+            self._planned_at = now
+        else:
+            pursuit.slow_old_plan(now + float(self._history.effect_delay.max()), self._fleet, now - _SINCE)
 
     def _begin_stop(
         self, now: float, reason: str, *, completed: bool, estimate: Optional[Estimate] = None

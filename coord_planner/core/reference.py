@@ -9,7 +9,7 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError
-from . import grid, se2, solver
+from . import grid, ocp, se2, solver
 from .dubins import ArcPath
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -33,6 +33,7 @@ _SETTLED = 2e-3  # metres: the smallest clearance no longer changes
 _END_KEPT = 5e-3  # metres or radians: an end missed by more is refused
 _END_KEPT_AGAIN = 0.05  # the same for a fleet that was stopped on its way
 _CLEARANCE_KEPT = 2e-3  # metres
+_BROKEN = 1e-4  # largest residual, in its own unit, of a plan that the solver did not finish
 _LEAST_TURN_SPEED = 0.25  # part of the full speed
 _FINE = 0.05  # seconds between the poses that stand for a way
 _ON_WAY = 0.3  # metres or radians from its way within which a robot goes on along it
@@ -123,13 +124,14 @@ def make(
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs)
     plan = solver.solve(problem, solver.start_from_states(problem, guess))
-    plan = _settle(problem, plan, settings, task.speed)
+    problem, plan = _settle(problem, plan, settings, task.speed)
     pairs_then = choose_pairs(fleet, settings, plan.poses)
     if not _contains(pairs, pairs_then):  # the solution came near somebody whom the guess passed at a distance
         pairs = np.unique(np.concatenate([pairs, pairs_then]), axis=0)
         problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs)
         plan = solver.solve(problem, solver.start_from_states(problem, plan.states))
-        plan = _settle(problem, plan, settings, task.speed)
+        problem, plan = _settle(problem, plan, settings, task.speed)
+    _check_solved(task, problem, plan)
     clearance, pair = plan.closest()
     _check_kept(task, plan, fleet, settings, clearance, pair, end_kept)
     return Reference(task, plan, pairs, graph, clearance, pair)
@@ -234,10 +236,10 @@ def _problem(
     )
 
 
-def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> Plan:
+def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> tuple[Problem, Plan]:
     """Solve again with separating lines from the solution until the smallest clearance stays."""
     if not len(problem.watch.pairs):
-        return plan
+        return problem, plan
     clearance = plan.closest(0)[0]
     for _ in range(_ROUNDS):
         lines = watch(problem.fleet, settings, problem.watch.pairs, plan.poses, speed)
@@ -246,7 +248,7 @@ def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> P
         before, clearance = clearance, plan.closest(0)[0]
         if abs(clearance - before) < _SETTLED:
             break
-    return plan
+    return problem, plan
 
 
 def _guess(task: Task, times: np.ndarray) -> np.ndarray:
@@ -258,6 +260,16 @@ def _contains(pairs: np.ndarray, others: np.ndarray) -> bool:
     return set(map(tuple, others.tolist())) <= set(map(tuple, pairs.tolist()))
 
 
+def _check_solved(task: Task, problem: Problem, plan: Plan) -> None:
+    """A plan that the solver did not finish may still do; one that jumps or breaks a limit may not."""
+    broken = 0.0 if plan.solved else ocp.violation(problem, plan.vector)
+    if broken > _BROKEN:
+        raise RefusedError(
+            f"{task.name}: no plan was found in {plan.solve_time:.1f} s and {plan.iterations} iterations",
+            "ask for a wider radius or more time, or free the machine that plans of other work",
+        )
+
+
 def _check_kept(
     task: Task, plan: Plan, fleet: Fleet, settings: Settings, clearance: float, pair: tuple[int, int], end_kept: float
 ) -> None:
@@ -267,7 +279,7 @@ def _check_kept(
         distance, angle = float(np.hypot(*missed[worst, :2])), abs(float(np.degrees(missed[worst, 2])))
         raise RefusedError(
             f"{task.name}: {fleet.names[worst]} would miss its end by {distance:.2f} m and {angle:.1f} degrees; "
-            + (_clearance_in_the_way(plan, fleet, worst) or _busiest_limit(plan, fleet, worst)),
+            + (_clearance_in_the_way(plan, fleet, worst) or _busiest_limit(task, plan, fleet, worst)),
             "give it more room, more time or a lower speed",
         )
     allowed = settings.site_rules.min_clearance
@@ -278,8 +290,6 @@ def _check_kept(
             f"{allowed - clearance:.2f} m short of the site's smallest clearance of {allowed:g} m",
             "widen the turn, the spacing or the ends",
         )
-    if not plan.solved and plan.missed.max() > end_kept:
-        raise RefusedError(f"{task.name}: no plan was found", "ask for a wider radius or more time")
 
 
 def _clearance_in_the_way(plan: Plan, fleet: Fleet, k: int) -> str:
@@ -291,12 +301,13 @@ def _clearance_in_the_way(plan: Plan, fleet: Fleet, k: int) -> str:
     return ""
 
 
-def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
+def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
     """The limit that the robot meets for the largest part of the plan, in words."""
     limits, states, rates = fleet.robots[k].limits, plan.states[k, 1:], plan.rates[k]
     speed, bend = np.abs(states[:, SPEED_COMMAND]), np.abs(states[:, CURVATURE_COMMAND])
     use = {
         "max_curvature": bend / limits.max_curvature,
+        "radius": bend / task.max_curvature,
         "max_speed": speed / limits.max_speed,
         "max_turn_rate": speed * bend / limits.max_turn_rate,
         "max_lateral_acceleration": speed**2 * bend / limits.max_lateral_acceleration,
@@ -308,4 +319,8 @@ def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
     name = max(busy, key=lambda key: busy[key])
     if busy[name] == 0.0:
         return "no limit of its own stands in the way"
-    return f"its {name} of {getattr(limits, name):g} is met for {100 * busy[name]:.0f}% of the time"
+    if name == "radius":
+        met = f"the radius of {1 / task.max_curvature:g} m that is asked"
+    else:
+        met = f"its {name} of {getattr(limits, name):g}"
+    return f"{met} is met for {100 * busy[name]:.0f}% of the time"

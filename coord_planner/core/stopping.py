@@ -40,6 +40,11 @@ def in_step(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     return _slow_down(schedule, at, fleet, together=True)
 
 
+def slowed(schedule: Schedule, at: float, fleet: Fleet, ratio: float) -> Schedule:
+    """Everybody's progress along the schedule slows, in step, to a part of what it was."""
+    return _slow_down(schedule, at, fleet, together=True, ratio_kept=ratio)
+
+
 def apart(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     """Each robot slows along its own curve as hard as its own brake allows."""
     return _slow_down(schedule, at, fleet, together=False)
@@ -59,18 +64,25 @@ def choose(schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now:
     return stops[1] if stops[1].clearance > stops[0].clearance + 1e-3 else stops[0]
 
 
-def _slow_down(schedule: Schedule, at: float, fleet: Fleet, together: bool) -> Schedule:
+def _slow_down(
+    schedule: Schedule, at: float, fleet: Fleet, together: bool, ratio_kept: float = 0.0
+) -> Schedule:
+    """Commands along the schedule at a falling rate, down to a part of it: to standstill or to the schedule's end."""
     count = len(fleet)
     braking = _HARDEST * fleet.limit("max_braking") * _STEP  # largest drop of speed in a step
     along = np.full(count, at)
     ratio = np.ones(count)
     command = schedule.at(along)
     times, values = [at], [command]
-    while np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST:
+    last = float(schedule.times[-1])
+    # A stop goes on past the schedule's end, where the last values hold; who only slows down has come to its end.
+    while (
+        np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST and (ratio_kept == 0.0 or along.min() < last)
+    ):
         ahead = schedule.at(along + ratio * _STEP)
         speed = np.abs(ahead[:, 0])
         least = np.where(speed > 1e-9, (np.abs(command[:, 0]) - braking) / np.maximum(speed, 1e-9), 0.0)
-        wanted = np.clip(least, 0.0, ratio)
+        wanted = np.clip(least, ratio_kept, ratio)
         following = np.full(count, wanted.max()) if together else wanted
         along = along + _STEP * (ratio + following) / 2
         there = schedule.at(along)
