@@ -10,6 +10,7 @@ from foreign_bags import EPOCH, ForeignBag, corner
 from coord_planner.errors import SettingsError
 from coord_planner.record import bag_messages as messages
 from coord_planner.record.bag_content import read
+from coord_planner.record.review import losses
 
 TIMES = np.arange(0.0, 20.0, 0.1)
 
@@ -165,6 +166,9 @@ def test_unknown_types_are_named_and_the_rest_is_read(tmp_path):
     content = read(bag.write(tmp_path / "bag"))
     assert content.topics["/lidar"] == ("acme_msgs/msg/Sweep", 1)
     assert content.read == 202 and len(content.poses["/cart/odom"].table) == 200
+    assert content.unknown == {"/lidar": "acme_msgs/msg/Sweep"}
+    assert losses(content, whole=True) == ["1 messages on /lidar are of the type acme_msgs/msg/Sweep, which neither "
+                                           "the recording nor ROS 2 defines"]
 
 
 def test_messages_that_cannot_be_unpacked_are_counted(tmp_path):

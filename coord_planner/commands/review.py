@@ -13,6 +13,7 @@ from .speaking import (
     DID_NOT_HOLD,
     errors_reported,
     figure,
+    progress_shown,
     say,
     table,
     write,
@@ -64,7 +65,10 @@ def review(
             prepare_file(page, "--page")
         from ..record.review import review as reviewed
 
-        found = [reviewed(bag, configuration, from_s=from_s, to_s=to_s, robots=given) for bag in bags]
+        found = []
+        for bag in bags:
+            with progress_shown(bag.name) as progress:
+                found.append(reviewed(bag, configuration, from_s=from_s, to_s=to_s, robots=given, progress=progress))
         _report(found, as_json, page)
 
 

@@ -7,13 +7,21 @@ from typing import Annotated, Any, Optional
 
 import attrs
 import typer
-from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 
 from .. import config
 from ..errors import RefusedError
 from ..trial.run import Run
-from .speaking import DID_NOT_HOLD, errors_reported, figure, say, table, write, write_json, write_table
+from .speaking import (
+    DID_NOT_HOLD,
+    errors_reported,
+    figure,
+    progress_shown,
+    say,
+    table,
+    write,
+    write_json,
+    write_table,
+)
 from .targets import prepare_bag, prepare_file
 
 
@@ -73,13 +81,8 @@ def _configured(params: str, entries: list[str]) -> config.Configuration:
 def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
     from ..trial.rehearsal import rehearse
 
-    console = Console(stderr=True)
-    if not console.is_terminal:
-        return rehearse(configuration, manoeuvre, seed=seed)
-    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
-    with Progress(*columns, console=console, transient=True) as bar:
-        task = bar.add_task(manoeuvre, total=1.0)
-        return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
+    with progress_shown(manoeuvre) as progress:
+        return rehearse(configuration, manoeuvre, seed=seed, progress=progress)
 
 
 def _record(run: Run, configuration: config.Configuration, bag: Path) -> None:

@@ -160,7 +160,7 @@ def _main(streams: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _at_begin(centres: np.ndarray, offsets: np.ndarray) -> float:
-    """Receipt minus stamp when a stretch begins, by its first minute: one message that was old when it came says little.
+    """Receipt minus stamp when a stretch begins, by its first minute: one message that came late says little.
 
     A clock of another pace is followed back to the beginning (median of slopes and of intercepts).
     """

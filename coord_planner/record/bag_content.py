@@ -25,6 +25,7 @@ from .bag_source import Topic
 
 _PLAN_EVERY = 0.2  # seconds between two plans of a robot that are kept
 _PLAN_POINTS = 13
+_TELL_EVERY = 20_000  # messages
 _LITTLE_ENDIAN = b"\x00\x01\x00\x00"  # how messages from ordinary machines begin (OMG CDR encapsulation)
 # ackermann_msgs is in no release's store; a bag from before ROS 2 Iron does not bring its definition along.
 _STEERING = "".join(f"float32 {field}\n" for field in (
@@ -123,7 +124,8 @@ class Content:
     Attributes:
         start: first time of receipt, nanoseconds. duration: from there to the last message, seconds.
         read: messages read. unpackable: messages that could not be unpacked, by topic.
-        unknown: topics of a kind that matters but that cannot be unpacked. topics: messages and kind by topic.
+        unknown: kind by topic, of what cannot be unpacked: neither the recording nor its ROS release defines it.
+        topics: kind and messages by topic.
     """
 
     recording: Recording
@@ -143,18 +145,22 @@ class Content:
     clock: Table = attrs.field(factory=lambda: Table("received", "stamp"))
 
 
-def read(path: Any, from_s: Optional[float] = None, to_s: Optional[float] = None) -> Content:
+def read(path: Any, from_s: Optional[float] = None, to_s: Optional[float] = None,
+         progress: Callable[[float], None] = lambda _part: None) -> Content:
     """Read a recording, or a window of it in seconds since its first message.
+
+    Args:
+        progress: called now and then with the part that is read, where the recording says how much there is.
 
     Raises:
         SettingsError: there is nothing that could be a recording.
     """
     try:
         with open_recording(path) as recording:
-            return _Reader(recording, from_s, to_s).read()
+            return _Reader(recording, from_s, to_s).read(progress)
     except DamagedError as damage:
         with open_recording(path, trust_index=False) as recording:
-            content = _Reader(recording, from_s, to_s).read()
+            content = _Reader(recording, from_s, to_s).read(progress)
         content.recording.losses.insert(0, f"the index does not fit what the files hold ({damage})")
         return content
 
@@ -169,7 +175,7 @@ class _Reader:
         self._types = _Types(recording.distro)
         self._zero = 0, 0  # seconds and nanoseconds of the first time of receipt
 
-    def read(self) -> Content:
+    def read(self, progress: Callable[[float], None]) -> Content:
         content, counts = self._content, dict[Topic, int]()
         first: Optional[int] = None
         last = 0
@@ -181,6 +187,9 @@ class _Reader:
                 counts[topic] = 0
                 self._unpackers[topic] = self._unpacker(topic)
             counts[topic] += 1
+            content.read += 1
+            if content.read % _TELL_EVERY == 0 and content.recording.expected:
+                progress(content.read / content.recording.expected)
             last = nanoseconds if nanoseconds > last else last
             unpack = self._unpackers[topic]
             if unpack is not None:
@@ -188,7 +197,6 @@ class _Reader:
                     unpack(data, (nanoseconds - first) * 1e-9)
                 except _UNPACKABLE:
                     content.unpackable[topic.name] = content.unpackable.get(topic.name, 0) + 1
-        content.read = sum(counts.values())
         content.duration = (last - first) * 1e-9 if first is not None else 0.0
         content.topics = {topic.name: (topic.kind, counts.get(topic, 0)) for topic in content.recording.topics}
         return content
@@ -200,12 +208,11 @@ class _Reader:
         return float(stamp.sec - self._zero[0] + 1e-9 * (stamp.nanosec - self._zero[1]))
 
     def _unpacker(self, topic: Topic) -> Optional[Callable[[bytes, float], None]]:
-        handler = self._handler(topic)
-        if handler is None:
-            return None
         unpack = self._types.unpacker(topic)
         if unpack is None:
             self._content.unknown[topic.name] = topic.kind
+        handler = self._handler(topic)
+        if handler is None or unpack is None:
             return None
 
         def both(data: bytes, received: float) -> None:
@@ -247,16 +254,26 @@ class _Types:
 
     def unpacker(self, topic: Topic) -> Optional[Callable[[bytes], Any]]:
         """A function from bytes to a message; None when the type is not known."""
-        store = self._own(topic) or self._stock
-        if topic.kind not in store.types:
+        if topic.kind not in self._stock.types and not topic.definition:
             return None
+        made: list[Callable[[bytes], Any]] = []  # only made when it is needed: most topics are never unpacked
+
+        def unpack(data: bytes) -> Any:
+            if not made:
+                made.append(self._made(topic))
+            return made[0](data)
+
+        return unpack
+
+    def _made(self, topic: Topic) -> Callable[[bytes], Any]:
+        store = self._own(topic) or self._stock
         known, kind = store.get_msgdef(topic.kind), topic.kind
-        little, made = known.deserialize_cdr_le, known.cls
+        little, message = known.deserialize_cdr_le, known.cls
 
         def unpack(data: bytes) -> Any:
             # what nearly every message is goes straight to its unpacker: a quarter faster than by way of the store
             if data[:4] == _LITTLE_ENDIAN:
-                return little(data[4:], 0, made, store)[0]
+                return little(data[4:], 0, message, store)[0]
             return store.deserialize_cdr(data, kind)
 
         return unpack

@@ -1,6 +1,6 @@
 """A run as a rosbag2 folder (MCAP), with real message types, so that ordinary ROS tools and viewers open it.
 
-Topics are those of the nodes: see the table in the README. Every message stands at the time of its stamp.
+Topics are those of the planner's and the simulator's nodes. Every message stands at the time of its stamp.
 """
 
 from __future__ import annotations

@@ -42,12 +42,17 @@ def page(run: Run) -> str:
 
 
 def assembled(template: str, script: str, title: str, values: dict[str, Any]) -> str:
-    """A page of its parts: everything that it needs is in it, and it asks for nothing outside itself."""
+    """A page of its parts: everything that it needs is in it, and it asks for nothing outside itself.
+
+    Args:
+        template: what stands between head and foot. script: what is done with it, beside what all pages share.
+    """
+    content = _part(template).replace("{{transport}}", _part("transport.html"))
     parts = {
-        "title": _escaped(title), "style": _part("page.css"), "library": get_plotlyjs(), "data": _as_json(values),
-        "script": _part("stage.js") + _part(script),
+        "title": _escaped(title), "style": _part("page.css"), "content": content, "library": get_plotlyjs(),
+        "data": _as_json(values), "script": _part("stage.js") + _part(script),
     }
-    return _MARKER.sub(lambda found: parts[found.group(1)], _part(template))
+    return _MARKER.sub(lambda found: parts[found.group(1)], _part("frame.html"))
 
 
 def data(run: Run) -> dict[str, Any]:

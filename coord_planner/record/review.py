@@ -5,7 +5,7 @@ Every time is in seconds since the first message of the recording.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any, Optional
 
@@ -41,17 +41,19 @@ class Review:
 def review(
     path: str | Path, configuration: Optional[config.Configuration] = None, *, from_s: Optional[float] = None,
     to_s: Optional[float] = None, robots: Mapping[str, str] | None = None,
+    progress: Callable[[float], None] = lambda _part: None,
 ) -> Review:
     """Review a recording, or a window of it in seconds since its first message.
 
     Args:
         configuration: footprints and rules; those in the bag, if it has any, when left out.
         robots: source of the poses by robot (a topic, or ``tf:FRAME``), instead of guessing.
+        progress: called now and then with the part of the recording that is read.
 
     Raises:
         SettingsError: there is no recording, or no robot in it that can be followed.
     """
-    content = bag_content.read(path, from_s, to_s)
+    content = bag_content.read(path, from_s, to_s, progress)
     record = fleet_record(content, configuration, robots)
     near = nearness(record.run)
     turns = tuple(find_turns(record, near))
@@ -128,8 +130,8 @@ def losses(content: bag_content.Content, whole: bool) -> list[str]:
         what = "are missing" if content.read < expected else "are more than it says"
         found.append(f"{abs(expected - content.read)} of {expected} messages {what}")
     found += [f"{count} messages on {topic} could not be unpacked" for topic, count in content.unpackable.items()]
-    found += [f"{topic} has the type {kind}, whose definition the recording does not bring along"
-              for topic, kind in content.unknown.items()]
+    found += [f"{content.topics[topic][1]} messages on {topic} are of the type {kind}, which neither the recording nor "
+              "ROS 2 defines" for topic, kind in content.unknown.items()]
     if not content.read and not found:
         found.append("the recording holds no message")
     return found

@@ -113,7 +113,8 @@ def _against(robot: Reviewed) -> dict[str, Any]:
     times, places = robot.motion.times, robot.motion.poses[:, :2]
     errors: dict[float, list[float]] = {lead: [] for lead in _LEADS}
     beside = [0.0]
-    for made, rows in robot.plans:
+    for plan in robot.plans:
+        made, rows = plan.received, plan.rows
         due, begin, end = rows[:, 0], made, made + _LEADS[-1]
         if np.isfinite(due).all() and np.ptp(due) > 0.0:
             begin, end = max(begin, float(due[0])), min(end, float(due[-1]))

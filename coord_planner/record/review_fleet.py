@@ -18,7 +18,7 @@ from ..errors import SettingsError
 from ..trial.run import Run, RunFrame
 from . import review_warnings
 from .bag_clock import Clock
-from .bag_content import Content
+from .bag_content import Content, Plan
 from .bag_write import PARAMETERS_KEY
 from .review_motion import Motion, curvature, motion
 from .review_robots import TRUTH, RobotTopics, assign
@@ -29,13 +29,27 @@ _POINT = Footprint(1e-6, 1e-6)  # of a robot whose footprint nobody told
 
 
 @attrs.frozen
+class RecordedPlan:
+    """A plan of one robot on the common time, seconds.
+
+    Attributes:
+        received, stamp: when it came, and what it is stamped with (alike for all robots of a plan).
+        rows: due (NaN where not told), x, y, heading; shape (K, 4).
+    """
+
+    received: float
+    stamp: float
+    rows: np.ndarray
+
+
+@attrs.frozen
 class Reviewed:
     """One robot of a recording.
 
     Attributes:
         topics: where its data come from. motion: how it moved. late: receipt minus stamp of its poses, seconds, (S,).
         commands: times (s), speeds and curvatures of what was commanded, shape (C, 3). commands_late: seconds, (C,).
-        plans: time of each plan and its rows: due, x, y, heading, shape (K, 4).
+        plans: in the order in which they came.
     """
 
     name: str
@@ -44,7 +58,7 @@ class Reviewed:
     late: np.ndarray
     commands: np.ndarray
     commands_late: np.ndarray
-    plans: tuple[tuple[float, np.ndarray], ...]
+    plans: tuple[RecordedPlan, ...]
 
 
 @attrs.frozen
@@ -137,20 +151,17 @@ def _reviewed(content: Content, clock: Clock, topics: RobotTopics, configuration
     if moved is None:
         return None
     commands, late = _commands(content, clock, topics, connection)
-    plans = tuple(
-        (float(clock.received(np.array([plan.received])).times[0]), _due(clock, plan.rows, plan.received))
-        for plan in content.plans.get(topics.plan, ())
-    )
+    plans = tuple(_plan(clock, plan) for plan in content.plans.get(topics.plan, ()))
     return Reviewed(topics.name, topics, moved, placed.late, commands, late, plans)
 
 
-def _due(clock: Clock, rows: np.ndarray, received: float) -> np.ndarray:
-    """A plan's rows on the common time. Plans are made for the future: their stamps are moved as those of now are."""
-    shifted = rows.copy()
-    now = clock.received(np.array([received]))
-    if len(clock.shifts):
-        shifted[:, 0] += clock.shifts[now.stretch[0]]
-    return shifted
+def _plan(clock: Clock, plan: Plan) -> RecordedPlan:
+    """A plan on the common time. Plans are made for the future: their stamps are moved as those of now are."""
+    now = clock.received(np.array([plan.received]))
+    received = float(now.times[0])
+    shift = float(clock.shifts[now.stretch[0]]) if len(clock.shifts) else 0.0
+    rows = plan.rows + np.array([shift, 0.0, 0.0, 0.0])
+    return RecordedPlan(received, plan.stamp + shift if math.isfinite(plan.stamp) else received, rows)
 
 
 def _commands(content: Content, clock: Clock, topics: RobotTopics, connection: Optional[config.Connection]
@@ -283,7 +294,7 @@ def _shared_commands(robots: Sequence[Reviewed]) -> tuple[np.ndarray, np.ndarray
 
 def _frames(robots: Sequence[Reviewed], said: review_warnings.Said) -> tuple[RunFrame, ...]:
     """Plans that all robots have at a time, for the page."""
-    tables = [{round(when, 3): rows for when, rows in robot.plans} for robot in robots]
+    tables = [{round(plan.stamp, 3): plan.rows for plan in robot.plans} for robot in robots]
     shared = sorted(set.intersection(*(set(table) for table in tables)))
     frames = []
     for when in shared:
