@@ -109,6 +109,13 @@ def planned_against_driven(record: FleetRecord) -> dict[str, Any] | None:
     return figures or None
 
 
+def _farthest(places: np.ndarray, path: np.ndarray) -> float:
+    """Largest distance of places from a path, metres."""
+    if np.ptp(path, axis=0).max() < 1e-6:  # standing: a line without length is none
+        return float(np.hypot(*(places - path[0]).T).max())
+    return float(shapely.distance(shapely.points(places), shapely.linestrings(path)).max())
+
+
 def _against(robot: Reviewed) -> dict[str, Any]:
     times, places = robot.motion.times, robot.motion.poses[:, :2]
     errors: dict[float, list[float]] = {lead: [] for lead in _LEADS}
@@ -126,8 +133,7 @@ def _against(robot: Reviewed) -> dict[str, Any]:
                     errors[lead].append(math.dist(planned, driven))
         ahead = places[(times >= begin) & (times <= end)]
         if len(ahead) and len(rows) > 1 and np.isfinite(rows[:, 1:3]).all():
-            path = shapely.linestrings(rows[:, 1:3])
-            beside.append(float(shapely.distance(shapely.points(ahead), path).max()))
+            beside.append(_farthest(ahead, rows[:, 1:3]))
     return {
         "plans": len(robot.plans),
         "error_m": {f"{lead:g}": math.sqrt(float(np.mean(np.square(found)))) if found else math.nan
