@@ -95,11 +95,29 @@ def test_warnings_ends_and_spread_of_a_recorded_run(tmp_path):
     assert first["spread"]["hops_per_s"] == pytest.approx(1 / 0.3, rel=0.03)
     assert first["spread"]["m_per_s"] == pytest.approx(2.5 / 0.3, rel=0.03)
     assert [row["hop"] for row in first["by_hop"]] == list(range(6))
+    assert first["share_of_origin"]["mower_1"] == pytest.approx(1.0)
     keys = ("code", "robot", "text")
     assert [{key: warning[key] for key in keys} for warning in found.figures["warnings"]] == [
         {key: warning[key] for key in keys} for warning in own["warnings"]]
     assert found.figures["warnings"][0]["first_s"] == pytest.approx(own["warnings"][0]["first_s"], abs=1e-3)
     assert found.record.run.end_poses == pytest.approx(run.end_poses)
+
+
+def test_shares_of_robots_that_copy(tmp_path):
+    """Each turns with half of the turn rate of the one before it: a copying law with that fraction."""
+    run = turn(count=3, later=0.0)
+    curvatures = run.curvatures[:1] * np.array([[1.0], [0.5], [0.25]])
+    rates = run.speeds * curvatures
+    headings = np.cumsum(rates, axis=1) * 0.05
+    way = np.cumsum(run.speeds[..., None] * np.stack([np.cos(headings), np.sin(headings)], axis=-1), axis=1) * 0.05
+    poses = np.concatenate([way + np.array([[[0, 0]], [[0, -9]], [[0, -18]]]), headings[..., None]], axis=2)
+    ends = np.full((3, 3), np.nan)
+    ends[0] = poses[0, -1]
+    write_bag(attrs.evolve(run, poses=poses, curvatures=curvatures, end_poses=ends, cautions=()), tmp_path / "bag")
+    (found,) = review(tmp_path / "bag").figures["turns"]
+    assert found["hops_from"] == "mower_1" and found["hops_from_because"].startswith("alone was given an end")
+    assert list(found["share_of_origin"].values()) == pytest.approx([1.0, 0.5, 0.25], abs=0.01)
+    assert found["spread"] is None, "they turn at the same time: nothing spreads"
 
 
 # ---- recordings of other software ---------------------------------------------------------------------------

@@ -148,13 +148,14 @@ def _write_turns(figures: dict[str, Any]) -> None:
         spread = turn["heading_spread_max_rad"]
         differed = "" if spread is None else f"; headings differed by up to {figure(spread, 1, _DEGREES)} degrees"
         write(f"{first}{apart}{differed}. {_spread_in_words(turn) if len(turn['onset_s']) > 1 else ''}")
-        filled = table("robot", "hops", "onset s", "+-", "largest turn rate rad/s", "+-", "heading change degrees")
+        filled = table("robot", "hops", "onset s", "+-", "largest turn rate rad/s", "+-", "share",
+                       "heading change degrees")
         for name, onset in turn["onset_s"].items():
             hops = (turn["hops"] or {}).get(name)
             filled.add_row(
                 name, "-" if hops is None else str(hops), figure(onset, 2), figure(turn["onset_sd_s"][name], 2),
                 figure(turn["amplitude_rad_per_s"][name], 3), figure(turn["amplitude_sd_rad_per_s"][name], 3),
-                figure(turn["heading_change_rad"][name], 1, _DEGREES))
+                figure(turn["share_of_origin"][name], 2), figure(turn["heading_change_rad"][name], 1, _DEGREES))
         write_table(filled)
 
 

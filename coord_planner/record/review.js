@@ -56,9 +56,9 @@
     element("turn-title").textContent = "Turn " + (n + 1) + ": onset and strength " + (turn.hops ? "by distance along the neighbour graph" : "by robot");
     element("turn-words").textContent = inWords(turn);
     ["thead", "tbody"].forEach((part) => element("turn").querySelectorAll(part).forEach((node) => node.remove()));
-    table(element("turn"), ["Robot", "Hops", "Onset, s", "±", "Largest turn rate, rad/s", "±", "Heading change"], run.names.map((name) => [
+    table(element("turn"), ["Robot", "Hops", "Onset, s", "±", "Largest turn rate, rad/s", "±", "Share of " + (turn.hops_from || "the first") + "’s", "Heading change"], run.names.map((name) => [
       name, turn.hops && turn.hops[name] !== null ? String(turn.hops[name]) : "–", figure(turn.onset_s[name], 2), figure(turn.onset_sd_s[name], 2),
-      figure(turn.amplitude_rad_per_s[name], 3), figure(turn.amplitude_sd_rad_per_s[name], 3), degrees(turn.heading_change_rad[name])]), true)
+      figure(turn.amplitude_rad_per_s[name], 3), figure(turn.amplitude_sd_rad_per_s[name], 3), figure(turn.share_of_origin[name], 2), degrees(turn.heading_change_rad[name])]), true)
       .forEach((row, k) => row.firstChild.prepend(swatch(k)));
     drawTurn();
   }
@@ -66,7 +66,7 @@
     const from = turn.hops ? "Hops are counted from " + turn.hops_from + ", which " + turn.hops_from_because + ". " : "No neighbour graph is known, so robots stand side by side. ";
     const spread = turn.spread ? "The turn spread at " + figure(turn.spread.hops_per_s, 2) + " ± " + figure(turn.spread.hops_per_s_sd, 2) + " hops/s" +
       (turn.spread.m_per_s ? ", " + figure(turn.spread.m_per_s, 1, "m/s") : "") + "." : "Onsets do not grow with the distance by more than the noise, so no speed of spreading is given.";
-    return from + spread + " Bars are two standard deviations either way.";
+    return from + spread + " Bars are two standard deviations either way. A share is the part of that robot's turn rate that another turned with at equal time.";
   }
   function drawTurn() {
     const turn = turns[shownTurn];

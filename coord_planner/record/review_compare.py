@@ -55,6 +55,8 @@ def _turn(number: int, one: dict[str, Any], two: dict[str, Any]) -> list[dict[st
         rows.append(row(f"{name}: onset after the first, s", _after(one, name), _after(two, name)))
         rows.append(row(f"{name}: largest turn rate, rad/s", one["amplitude_rad_per_s"][name],
                         two["amplitude_rad_per_s"][name]))
+        rows.append(row(f"{name}: share of {one['hops_from']}'s turn rate", one["share_of_origin"][name],
+                        two["share_of_origin"][name] if two["hops_from"] == one["hops_from"] else None))
     return rows
 
 

@@ -33,6 +33,8 @@ class Turn:
             1: all alike (the order parameter of Vicsek et al., Phys. Rev. Lett. 75, 1995, from memory).
         first: who turned first, "" where that is within the noise. origin: from whom hops are counted, and ``why``.
         hops: from the origin, by robot, -1 where no way leads there; empty without a graph.
+        shares: by robot, the part of the origin's turn rate that it turned with at equal time (least squares); what
+            the copying law speaks of. NaN without an origin.
         by_hop: (hop, robots, mean onset, its deviation, mean amplitude, its deviation).
         spread_hops, spread_metres: how the onset grows with them; None where that cannot be asked.
     """
@@ -50,6 +52,7 @@ class Turn:
     origin: str
     why: str
     hops: Mapping[str, int]
+    shares: np.ndarray
     by_hop: tuple[tuple[int, int, float, float, float, float], ...]
     spread_hops: turns.Spread | None
     spread_metres: turns.Spread | None
@@ -86,13 +89,13 @@ def _turn(record: FleetRecord, near: Nearness, rates: np.ndarray, span: Span) ->
     one, other = (int(k) for k in near.pair[nearest])
     pair = (names[one], names[other]) if one >= 0 else None
     changes, spread = _headings(run.poses[:, inside, 2])
-    origin, why = _origin(onsets)
+    origin, why = _origin(onsets, _led(record))
     hops, metres = _distances(record, origin, int(inside[0]))
     reached = [name for name in onsets if hops.get(name, -1) >= 0]
     return Turn(
         span, onsets, changes, float(near.clearance[nearest]), pair, float(run.times[nearest]), spread,
         _largest_spread(run.curvatures[:, inside]), _alignment(run.poses[:, inside, 2]), _first(onsets), origin, why,
-        hops, _by_hop(onsets, hops),
+        hops, _shares(rates[:, inside], names, origin), _by_hop(onsets, hops),
         turns.spread(np.array([float(hops[name]) for name in reached]), [onsets[name] for name in reached]),
         turns.spread(np.array([metres[name] for name in reached]), [onsets[name] for name in reached]),
     )
@@ -133,11 +136,27 @@ def _first(onsets: Mapping[str, Onset]) -> str:
     return ordered[0] if two.time - one.time > _SIGMAS * math.hypot(one.sd, two.sd) else ""
 
 
-def _origin(onsets: Mapping[str, Onset]) -> tuple[str, str]:
+def _led(record: FleetRecord) -> str:
+    """The only robot that was given an end, by the planner's word; "" where there is none or several."""
+    asked = np.flatnonzero(np.isfinite(record.run.end_poses[:, 2]))
+    return record.run.fleet.names[int(asked[0])] if len(asked) == 1 and len(record.robots) > 1 else ""
+
+
+def _shares(rates: np.ndarray, names: Sequence[str], origin: str) -> np.ndarray:
+    if not origin:
+        return np.full(len(rates), math.nan)
+    known = np.nan_to_num(rates)
+    own = known[list(names).index(origin)]
+    return known @ own / max(float(own @ own), 1e-12)
+
+
+def _origin(onsets: Mapping[str, Onset], led: str) -> tuple[str, str]:
     """From whom hops are counted, and why from there."""
     first = _first(onsets)
     if first:
         return first, "turned first"
+    if led in onsets:
+        return led, "alone was given an end; who turned first is within the noise"
     ordered = sorted(onsets, key=lambda name: -abs(onsets[name].peak))
     if not ordered:
         return "", "nobody turned"
@@ -191,6 +210,7 @@ def as_values(turn: Turn, names: Sequence[str]) -> dict[str, Any]:
         "first": turn.first or None,
         "onset_s": each("time"), "onset_sd_s": each("sd"),
         "amplitude_rad_per_s": each("peak"), "amplitude_sd_rad_per_s": each("peak_sd"),
+        "share_of_origin": dict(zip(names, (float(value) for value in turn.shares))),
         "heading_change_rad": dict(zip(names, (float(value) for value in turn.heading_changes))),
         "min_clearance_m": turn.clearance, "min_clearance_pair": list(turn.pair) if turn.pair else None,
         "min_clearance_s": turn.clearance_at if turn.pair else None,
