@@ -369,8 +369,10 @@ class Coordinator:
                 made = make()
                 silence = worst_silence(made, fleet)
                 _check_silence(silence, rules_in_force)
-            except (RefusedError, SolveError) as error:
+            except CoordPlannerError as error:
                 return Outcome(token, None, str(error))
+            except Exception as error:  # whatever it is: nobody may be left waiting for an answer
+                return Outcome(token, None, f"a mistake in the planner ({error!r}); nothing has moved, please report it")
             solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
             return Outcome(token, made, "", silence)
 
