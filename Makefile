@@ -3,6 +3,7 @@
 
 # make demo    six simulated robots turn together under the real nodes; the page is in out/demo
 # make test    everything that must hold: lint, types, unit, ros, colcon (each is a target of its own)
+# make campaign  500 rehearsals with faults at random moments, with a table (an hour or so on two cores)
 # make clean   away with .venv and all that was built
 #
 # Both commands make .venv first, from Python 3.10 to 3.13 (ROS 2 comes as wheels, which exist for these).
@@ -33,7 +34,7 @@ ON_TEST_DOMAIN = ROS_DOMAIN_ID=$(TEST_DOMAIN) ROS_AUTOMATIC_DISCOVERY_RANGE=LOCA
 # Small matrices: more threads only take the cores from each other.
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1
 
-.PHONY: help demo test lint types unit ros colcon clean
+.PHONY: help demo test lint types unit ros colcon campaign clean
 help:
 	@sed -n 's/^# \(make .*\)/\1/p' Makefile
 
@@ -63,6 +64,9 @@ colcon: .venv/test.stamp
 	  --build-base build/colcon/build --install-base build/colcon/install
 	set +u; . build/colcon/install/local_setup.bash; set -u; \
 	REQUIRE_INSTALLED=1 $(ON_TEST_DOMAIN) timeout -k 10 400 .venv/bin/pytest -q test/test_packaging.py test/test_launch.py
+
+campaign: .venv/run.stamp
+	$(ONE_THREAD) $(PY) -m coord_planner.commands.campaign
 
 clean:
 	rm -rf .venv build install log out .pytest_cache .mypy_cache .ruff_cache .hypothesis *.egg-info

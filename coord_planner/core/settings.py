@@ -40,7 +40,7 @@ class Prices:
         100.0, "price of each metre of missing clearance, per second", "1/(m^3 s)", above=0.0, maximum=1e6, live=True
     )
     end: float = parameter(
-        50.0, "price of each metre or radian by which an end is missed", "1/m^2", above=0.0, maximum=1e6, live=True
+        200.0, "price of each metre or radian by which an end is missed", "1/m^2", above=0.0, maximum=1e6, live=True
     )
 
 
