@@ -184,12 +184,12 @@ def test_transforms_are_followed_to_their_root(tmp_path):
 
 def test_the_guess_can_be_corrected(tmp_path):
     bag = abreast(ForeignBag(), 2)
-    abreast(bag, 2, topic="/cart_{}/amcl_pose", kind="pose", twist=False)
+    abreast(bag, 2, topic="/cart_{}/localised_pose", kind="pose", twist=False)
     folder = bag.write(tmp_path / "bag")
-    assert review(folder).figures["robots"]["cart_1"]["not_taken"] == ["/cart_1/amcl_pose"]
-    done = command("review", folder, "--json", "--robot", "left=/cart_0/amcl_pose")
+    assert review(folder).figures["robots"]["cart_1"]["not_taken"] == ["/cart_1/localised_pose"]
+    done = command("review", folder, "--json", "--robot", "left=/cart_0/localised_pose")
     assert done.exit_code == 0, done.output
-    assert json.loads(done.stdout)["robots"]["left"]["poses_from"] == "/cart_0/amcl_pose"
+    assert json.loads(done.stdout)["robots"]["left"]["poses_from"] == "/cart_0/localised_pose"
     wrong = command("review", folder, "--robot", "left=/cart_7/odom")
     assert wrong.exit_code == 2 and "/cart_0/odom" in wrong.stderr
 

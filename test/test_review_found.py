@@ -41,12 +41,18 @@ def mcap(found):
     return file
 
 
+def localisation(figures):
+    """The topic on which the robot's localisation told its pose, with a covariance."""
+    (topic,) = [name for name, topic in figures["topics"].items() if "PoseWithCovariance" in topic["type"]]
+    return topic
+
+
 def test_an_mcap_file_is_read_whole_and_its_robot_is_followed(mcap):
     figures = review(mcap).figures
     assert figures["messages_read"] == figures["messages_expected"] > 8000 and figures["losses"] == []
     (robot,) = figures["robots"].values()
     assert robot["poses_from"] == "/odom" and robot["rates_from"] == "twist", "its twist is filled in, and right"
-    assert robot["not_taken"] == ["/amcl_pose", "tf:base_link"]
+    assert localisation(figures) in robot["not_taken"] and "tf:base_link" in robot["not_taken"]
     assert any("another clock than the recorder's" in note for note in figures["notes"]), "a simulation's time"
     assert figures["lateness"]["robot"]["poses"]["late_median_s"] == pytest.approx(0.0, abs=0.05)
     assert figures["turns"]
@@ -54,7 +60,8 @@ def test_an_mcap_file_is_read_whole_and_its_robot_is_followed(mcap):
 
 def test_a_chain_of_transforms_ends_where_the_localisation_says(mcap):
     """Two witnesses: the poses of the localisation, and the transforms map to odometry to base."""
-    witnesses = [review(mcap, robots={"robot": source}).record for source in ("/amcl_pose", "tf:base_link")]
+    sources = localisation(review(mcap).figures), "tf:base_link"
+    witnesses = [review(mcap, robots={"robot": source}).record for source in sources]
     localised, chained = (record.robots[0].motion for record in witnesses)
     stamps, chain_stamps = (motion.times - record.clock.shifts[0]
                             for motion, record in zip((localised, chained), witnesses))

@@ -17,7 +17,7 @@ _TRANSFORM = "tf:"
 _OFTEN = 0.25  # part of the most frequent source's messages below which a source is too rare to be preferred
 # Words of which the name of a pose topic is made, and which therefore name no robot.
 _POSE_WORDS = re.compile(
-    r"(odom|pose|state|truth|filtered|fused|locali[sz]|amcl|tf|position|base|footprint|link|local|global)"
+    r"(odom|pose|state|truth|filtered|fused|locali[sz]|tf|position|base|footprint|link|local|global)"
 )
 
 
