@@ -15,8 +15,8 @@ from .bag_content import POSE_KINDS, Content, Poses
 TRUTH = "simulated_state"  # where a simulator of ours tells the true motion of the turning point
 _TRANSFORM = "tf:"
 _OFTEN = 0.25  # part of the most frequent source's messages below which a source is too rare to be preferred
-# Words of which the name of a pose topic is made, and which therefore name no robot; among them the usual short name of a
-# method, adaptive Monte Carlo localisation.
+# Words of which the name of a pose topic is made, and which therefore name no robot; among them the usual short name
+# of a method, adaptive Monte Carlo localisation.
 _POSE_WORDS = re.compile(
     r"(odom|pose|state|truth|filtered|fused|locali[sz]|amcl|tf|position|base|footprint|link|local|global)"
 )
