@@ -3,6 +3,7 @@
 
 # make demo    six simulated robots turn together under the real nodes; the page is in out/demo
 # make test    everything that must hold: lint, types, unit, ros, colcon (each is a target of its own)
+# make campaign  500 rehearsals with faults at random moments, with a table (an hour or so on two cores)
 # make clean   away with .venv and all that was built
 #
 # Both commands make .venv first, from Python 3.10 to 3.13 (ROS 2 comes as wheels, which exist for these).
@@ -33,7 +34,7 @@ ON_TEST_DOMAIN = ROS_DOMAIN_ID=$(TEST_DOMAIN) ROS_AUTOMATIC_DISCOVERY_RANGE=LOCA
 # Small matrices: more threads only take the cores from each other.
 ONE_THREAD := OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1
 
-.PHONY: help demo test lint types unit ros colcon clean
+.PHONY: help demo test lint types unit ros colcon campaign clean
 help:
 	@sed -n 's/^# \(make .*\)/\1/p' Makefile
 
@@ -49,7 +50,7 @@ lint: .venv/test.stamp
 types: .venv/test.stamp
 	$(PY) -m mypy coord_planner
 
-unit: .venv/test.stamp
+unit: .venv/test.stamp .venv/test_data/recordings.stamp
 	$(ONE_THREAD) $(PY) -m pytest -q -n 2 --ignore test/ros test
 
 ros: .venv/test.stamp
@@ -64,6 +65,9 @@ colcon: .venv/test.stamp
 	set +u; . build/colcon/install/local_setup.bash; set -u; \
 	REQUIRE_INSTALLED=1 $(ON_TEST_DOMAIN) timeout -k 10 400 .venv/bin/pytest -q test/test_packaging.py test/test_launch.py
 
+campaign: .venv/run.stamp
+	$(ONE_THREAD) $(PY) -m coord_planner.commands.campaign
+
 clean:
 	rm -rf .venv build install log out .pytest_cache .mypy_cache .ruff_cache .hypothesis *.egg-info
 	find coord_planner test launch -name __pycache__ -type d -prune -exec rm -rf {} +
@@ -76,6 +80,14 @@ clean:
 .venv/test.stamp: .venv/run.stamp
 	$(PY) -m pip install -qq --use-pep517 --editable '.[ros,test]'
 	@touch $@
+
+# Recordings that ship with packages of PyPI: only read, from where they were downloaded to. Where they cannot be had,
+# the tests that need them say so and are skipped.
+.venv/test_data/recordings.stamp: | .venv/bin/pip
+	@mkdir -p $(@D)
+	@if $(PY) -m pip download -qq --no-deps --dest $(@D) traffic==2.13 \
+	  && $(PY) -m pip download -qq --no-deps --no-binary :all: --dest $(@D) evo==1.38.1; then touch $@; \
+	else echo "recordings cannot be downloaded: tests that need them are skipped" >&2; fi
 
 .venv/bin/pip:
 	@tried=; chosen=; lame=; \

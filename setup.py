@@ -55,14 +55,18 @@ setup(
     install_requires=[
         "attrs>=23.2",
         "casadi>=3.7",  # 3.6 keeps the interpreter's lock while it solves
+        "lz4>=4.0",
+        "mcap>=1.2",  # reads recordings that break off, with lz4 and zstandard
         "networkx>=2.8",
         "numpy>=1.26",
         "plotly>=5.15",
         "pyyaml>=6.0",
         "rich>=13.7",
+        "rosbags>=0.11",
         "scipy>=1.11",
         "shapely>=2.0",
         "typer>=0.9,<0.29",  # 0.29 wants pydantic 2; other programs of Ubuntu 24.04 need its 1.10
+        "zstandard>=0.22",
     ],
     extras_require={
         "cluster": ["distributed>=2023.12"],  # sweep --cluster

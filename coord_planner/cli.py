@@ -7,6 +7,7 @@ import typer
 from .commands.advise import advise
 from .commands.check import check
 from .commands.demo import demo
+from .commands.review import review
 from .commands.simulate import simulate
 from .commands.sweep import sweep
 
@@ -20,6 +21,7 @@ app.command()(check)
 app.command()(simulate)
 app.command()(advise)
 app.command()(sweep)
+app.command()(review)
 
 
 @app.callback()

@@ -21,14 +21,14 @@ import coord_planner
 
 SOURCE = Path(__file__).parent.parent
 EXECUTABLES = ("coord-planner", "planner_node", "simulator_node")
-# Keys of rosdep's python.yaml by the name under which pip knows the library; plotly has none there.
+# Keys of rosdep's python.yaml by the name under which pip knows the library; PIP_ONLY have none there.
 ROSDEP_KEYS = {
     "attrs": "python3-attrs", "casadi": "casadi-pip", "networkx": "python3-networkx", "numpy": "python3-numpy",
-    "pyyaml": "python3-yaml", "rich": "python3-rich", "scipy": "python3-scipy",
+    "pyyaml": "python3-yaml", "rich": "python3-rich", "rosbags": "python3-rosbags-pip", "scipy": "python3-scipy",
     "shapely": "python3-shapely", "typer": "python3-typer",
 }
 IMPORTED_AS = {"pyyaml": "yaml"}
-PIP_ONLY = {"plotly"}
+PIP_ONLY = {"lz4", "mcap", "plotly", "zstandard"}
 # Imported only where it is asked for, with a message that says how to install it; each an extra of its own.
 EXTRAS = {"distributed": "cluster", "pyarrow": "parquet"}
 OPTIONAL_ROS = {"ackermann_msgs": "ackermann_msgs", "tf2_ros": "tf2_ros_py"}
