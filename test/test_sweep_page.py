@@ -54,7 +54,7 @@ def made_up(folder: Path, **changes: Any) -> Outcome:
 
 
 def embedded(text: str) -> Any:
-    found = re.search(r'<script type="application/json" id="sweep">(.*?)</script>', text, re.DOTALL)
+    found = re.search(r'<script type="application/json" id="run">(.*?)</script>', text, re.DOTALL)
     assert found
     return json.loads(found.group(1))
 
@@ -205,7 +205,8 @@ def test_page_fits_wide_and_narrow_windows_in_both_colour_schemes(browser: Any, 
                                 {"width": width, "height": 900, "deviceScaleFactor": 1, "mobile": False})
         wait_for(lambda: browser.execute_script(
             "return document.documentElement.scrollWidth <= window.innerWidth"
-            " && [...document.querySelectorAll('div.plot')].every((box) => { const plot = box.querySelector('.main-svg');"
+            " && [...document.querySelectorAll('div.plot')].every((box) => {"
+            " const plot = box.querySelector('.main-svg'); "
             " return Math.abs(box.clientWidth - plot.clientWidth) <= 1 && box.clientHeight > 100 })"))
         grounds.add(browser.execute_script("return getComputedStyle(document.body).backgroundColor"))
     browser.execute_cdp_cmd("Emulation.clearDeviceMetricsOverride", {})

@@ -6,8 +6,10 @@ import math
 from typing import Any, Optional
 
 from .. import config
-from .speaking import CAUTION, table, write, write_heading, write_table
+from .speaking import CAUTION, figure, table, write, write_heading, write_table
 
+_COLUMNS = ("predicted", "planned", "driven")
+_DEGREES = math.degrees(1.0)
 _MOST_MODES = 12
 _MOST_LINKS = 5
 
@@ -97,7 +99,7 @@ def _write_links(found: dict[str, Any]) -> None:
     shown = table("link", "apart m", "weakest copying", "2nd eigenvalue", "no longer critical")
     for link in found["suggested_links"][:_MOST_LINKS]:
         shown.add_row(
-            " - ".join(link["robots"]), _figure(link["distance"], 1),
+            " - ".join(link["robots"]), figure(link["distance"], 1),
             f"{link['weakest_before']:.3f} to {link['weakest_after']:.3f}",
             f"{link['connectivity_before']:.3f} to {link['connectivity_after']:.3f}",
             ", ".join(" - ".join(pair) for pair in link["secured"]) or "-",
@@ -128,10 +130,10 @@ def _write_beside(manoeuvre: dict[str, Any]) -> None:
     parts = ("copies: law", "plan", "rehearsal") if one_led else ()
     shown = table("robot", "hops", *parts, "turns, degrees: law", "plan", "rehearsal", "off the law: plan", "rehearsal")
     for robot in manoeuvre["robots"]:
-        copies = [_figure(robot.get(f"copy_{when}"), 4) for when in ("predicted", "planned", "driven")]
-        turns = [_degrees(robot.get(f"heading_change_{when}_rad")) for when in ("predicted", "planned", "driven")]
+        copies = [figure(robot.get(f"copy_{when}"), 4) for when in _COLUMNS]
+        turns = [figure(robot.get(f"heading_change_{when}_rad"), 1, _DEGREES) for when in _COLUMNS]
         gaps = [_percent(robot.get(f"gap_{when}")) for when in ("planned", "driven")]
-        shown.add_row(robot["robot"], _figure(robot["hops"], 0), *(copies if one_led else []), *turns, *gaps)
+        shown.add_row(robot["robot"], figure(robot["hops"], 0), *(copies if one_led else []), *turns, *gaps)
     write_table(shown)
     write("Off the law: largest difference in turning at any moment, as a part of the led robots' largest turning. "
           "Rehearsed without noise.\n")
@@ -143,18 +145,10 @@ def _write_uncoupled(manoeuvre: dict[str, Any]) -> None:
     for words, key in ((f"coupling {manoeuvre['coupling']:g}", "rehearsed"),
                        ("coupling 0", "rehearsed_without_coupling")):
         run = manoeuvre[key]
-        shown.add_row(words, "yes" if run["completed"] else "NO", _figure(run["duration_s"], 1),
-                      _figure(run["min_clearance_m"], 3), _degrees(run["heading_spread_max_rad"]))
+        shown.add_row(words, "yes" if run["completed"] else "NO", figure(run["duration_s"], 1),
+                      figure(run["min_clearance_m"], 3), figure(run["heading_spread_max_rad"], 1, _DEGREES))
     write_table(shown)
 
 
-def _figure(value: Optional[float], digits: int) -> str:
-    return "-" if value is None else f"{value:.{digits}f}"
-
-
-def _degrees(value: Optional[float]) -> str:
-    return "-" if value is None else f"{math.degrees(value):.1f}"
-
-
 def _percent(value: Optional[float]) -> str:
-    return "-" if value is None else f"{100 * value:.1f}%"
+    return "-" if value is None else f"{figure(value, 1, 100.0)}%"

@@ -41,15 +41,17 @@ def page(run: Run) -> str:
     return assembled("page.html", "page.js", title, data(run))
 
 
-def assembled(template: str, script: str, title: str, values: dict[str, Any]) -> str:
+def assembled(template: str, script: str, title: str, values: dict[str, Any], style: str = "") -> str:
     """A page of its parts: everything that it needs is in it, and it asks for nothing outside itself.
 
     Args:
         template: what stands between head and foot. script: what is done with it, beside what all pages share.
+        style: file with styles of this page alone; "" for none.
     """
     content = _part(template).replace("{{transport}}", _part("transport.html"))
     parts = {
-        "title": _escaped(title), "style": _part("page.css"), "content": content, "library": get_plotlyjs(),
+        "title": _escaped(title), "style": _part("page.css") + (_part(style) if style else ""), "content": content,
+        "library": get_plotlyjs(),
         "data": _as_json(values), "script": _part("stage.js") + _part(script),
     }
     return _MARKER.sub(lambda found: parts[found.group(1)], _part("frame.html"))

@@ -1,44 +1,17 @@
 "use strict";
 (function () {
-  const sweep = JSON.parse(document.getElementById("sweep").textContent);
-  const DEG = 180 / Math.PI, OPTIONS = { displaylogo: false, displayModeBar: false, scrollZoom: false };
-  const DASHES = ["solid", "dash", "dashdot", "dot", "longdash", "longdashdot"];
+  const sweep = JSON.parse(document.getElementById("run").textContent);
   const element = (id) => document.getElementById(id);
-  const css = (name) => getComputedStyle(document.documentElement).getPropertyValue(name).trim();
-  const safe = (text) => String(text).replace(/&/g, "&amp;").replace(/</g, "&lt;").replace(/>/g, "&gt;");
-  const colour = (k) => css("--r" + (k % 6));
-  const dash = (k) => DASHES[(k + Math.floor(k / 6)) % 6]; // beyond six robots colour and line style part company
   const rowOf = {}; // point -> its row
   sweep.rows.forEach((row) => { rowOf[row.point] = row; });
   let chosenSetting = -1, chosenRow = null, time = 0, playing = false;
 
-  function figure(value, digits, unit) {
-    if (value === null || value === undefined) return "–";
-    const text = Number(value).toFixed(digits).replace(/^-(0\.?0*)$/, "$1").replace("-", "−");
-    return unit ? text + "\u202f" + unit : text;
-  }
   function short(value) { // a number with four digits that matter, or a word
     if (value === null || value === undefined) return "–";
     return typeof value === "number" ? String(Number(value.toPrecision(4))).replace("-", "−") : String(value);
   }
-  function make(tag, content, parent, cls) {
-    const node = document.createElement(tag);
-    if (content !== null && content !== undefined) node.textContent = content;
-    if (cls) node.className = cls;
-    if (parent) parent.appendChild(node);
-    return node;
-  }
-  function base(plot, extra) {
-    return Object.assign({
-      width: plot.clientWidth, height: plot.clientHeight, uirevision: "keeps its zoom", hovermode: "closest", showlegend: false,
-      paper_bgcolor: "rgba(0,0,0,0)", plot_bgcolor: "rgba(0,0,0,0)", dragmode: window.innerWidth < 700 ? false : "pan",
-      font: { family: getComputedStyle(document.body).fontFamily, size: 12, color: css("--ink") },
-      hoverlabel: { bgcolor: css("--panel"), bordercolor: css("--line"), font: { color: css("--ink"), size: 12 }, align: "left" },
-    }, extra);
-  }
-  function axis(extra) {
-    return Object.assign({ gridcolor: css("--faint"), zerolinecolor: css("--line"), linecolor: css("--line"),
-      tickfont: { color: css("--soft"), size: 11 }, zeroline: false, automargin: true }, extra);
+  function laidOut(plot, extra) {
+    return Object.assign(base(plot), { hovermode: "closest" }, extra);
   }
   function title(text) { return { text: safe(text), font: { size: 11, color: css("--soft") }, standoff: 6 }; }
   function named(name) { const m = sweep.measures[name]; return m.words + ", " + m.unit; }
@@ -47,7 +20,6 @@
   }
   const several = sweep.manoeuvres.length > 1;
   function which(row) { return (several ? row.manoeuvre.replace(/_/g, " ") + ", " : "") + "seed " + row.seed; }
-  function largest(values) { return values.length ? Math.max(...values) : null; }
 
   // ---- words ------------------------------------------------------------------------------------------
   function words() {
@@ -70,13 +42,6 @@
     element("each-key").textContent = "Each mark is a rehearsal; a cross broke a rule. The line joins the means. A click shows the turn.";
     element("matter-key").textContent = "Rank correlation (Spearman) with its 95% interval, over settings: to the right, more of the parameter gives more of the measure. " +
       "An interval that crosses the middle does not tell a trend; what is explained also counts effects that rise and fall again.";
-  }
-  function tile(label, value, unit, note, bad) {
-    const box = make("div", null, element("tiles"), "tile" + (bad ? " bad" : ""));
-    make("span", label, box);
-    const b = make("b", value, box);
-    if (unit) make("small", unit, b);
-    make("span", note, box);
   }
   function tiles() {
     const count = (status) => sweep.rows.filter((row) => row.status === status).length;
@@ -131,7 +96,7 @@
     ];
     traces[5].hoverinfo = "skip";
     const label = (n, words, shift) => ({ x: sweep.settings[n].mean[x], y: sweep.settings[n].mean[y], text: words, showarrow: false, yshift: shift, font: { size: 11.5, color: css("--ink") } });
-    const layout = base(front, { margin: { l: 58, r: 18, t: 22, b: 46 }, xaxis: axis({ title: title(named(x)), automargin: false }), yaxis: axis({ title: title(named(y)), automargin: false }),
+    const layout = laidOut(front, { margin: { l: 58, r: 18, t: 22, b: 46 }, xaxis: axis({ title: title(named(x)) }), yaxis: axis({ title: title(named(y)) }),
       annotations: (sweep.best === null ? [] : [label(sweep.best, sweep.best === sweep.shipped ? "best, as shipped" : "best", 19)])
         .concat(sweep.shipped === null || sweep.shipped === sweep.best ? [] : [label(sweep.shipped, "as shipped", -17)])
         .filter((a) => a.x !== null && a.y !== null) });
@@ -153,7 +118,7 @@
     return { dtick: Math.log10(Math.max(...values) / Math.min(...values)) < 1.6 ? "D2" : 1 };
   }
   function drawParameter({ a, plot }) {
-    const wide = window.innerWidth >= 700, columns = wide ? 4 : 2, lines = wide ? 1 : 2, traces = [], layout = base(plot, { margin: { l: 8, r: 8, t: 22, b: 34 }, annotations: [], shapes: [] });
+    const wide = window.innerWidth >= 700, columns = wide ? 4 : 2, lines = wide ? 1 : 2, traces = [], layout = laidOut(plot, { margin: { l: 8, r: 8, t: 22, b: 34 }, annotations: [], shapes: [] });
     const gap = wide ? 0.05 : 0.14;
     sweep.main.forEach((name, n) => {
       const id = n ? String(n + 1) : "", column = n % columns, line = Math.floor(n / columns);
@@ -175,9 +140,9 @@
       }
       if (chosenRow && chosenRow[name] !== null) traces.push({ type: "scatter", mode: "markers", hoverinfo: "skip", x: [shown(of(chosenRow))], y: [chosenRow[name]], xaxis: "x" + id, yaxis: "y" + id,
         marker: { symbol: "circle-open", size: 15, color: css("--ink"), line: { width: 1.6 } } });
-      layout["xaxis" + id] = axis({ domain: [x0, x1], anchor: "y" + id, type: a.ordered ? (a.logarithmic ? "log" : "linear") : "category", nticks: 5, fixedrange: true, automargin: false,
+      layout["xaxis" + id] = axis({ domain: [x0, x1], anchor: "y" + id, type: a.ordered ? (a.logarithmic ? "log" : "linear") : "category", nticks: 5, fixedrange: true,
         ...(a.ordered && a.logarithmic ? logarithmicTicks([...new Set(there.map(of))], wide ? 7 : 4) : {}) });
-      layout["yaxis" + id] = axis({ domain: [y0, y1], anchor: "x" + id, nticks: 5, fixedrange: true, automargin: false, ticklabelposition: "inside top", tickfont: { color: css("--soft"), size: 10 } });
+      layout["yaxis" + id] = axis({ domain: [y0, y1], anchor: "x" + id, nticks: 5, fixedrange: true, ticklabelposition: "inside top", tickfont: { color: css("--soft"), size: 10 } });
       layout.annotations.push({ text: safe(named(name)), xref: "paper", yref: "paper", x: x0, y: y1, xanchor: "left", yanchor: "bottom", yshift: 3, showarrow: false, font: { size: 11.5, color: css("--ink") } });
       const minimum = largest(sweep.rows.map((row) => row.site_min_clearance_m).filter((v) => v !== null && v !== undefined));
       if (name === "min_clearance_m" && minimum !== null) layout.shapes.push({ type: "line", xref: "x" + id + " domain", yref: "y" + id, x0: 0, x1: 1, y0: minimum, y1: minimum, line: { color: css("--bad"), width: 1.3, dash: "dash" } });
@@ -198,14 +163,14 @@
       text: list.map((e) => safe(name(e)) + "<br>" + figure(e.correlation, 2) + ", " + figure(e.low, 2) + " to " + figure(e.high, 2) + "<br>" + e.verdict),
       error_x: { type: "data", symmetric: false, array: list.map((e) => e.high - e.correlation), arrayminus: list.map((e) => e.correlation - e.low), color: css("--soft"), thickness: 1.6, width: 3 },
       marker: { size: 10, color: list.map(strength), symbol: list.map((e) => (e.verdict === "matters" ? "circle" : "circle-open")), line: { width: 1.5, color: list.map(strength) } } }];
-    const layout = base(matter, { margin: { l: wide ? 330 : 165, r: 16, t: 6, b: 40 },
-      xaxis: axis({ range: [-1.05, 1.05], zeroline: true, title: title("rank correlation"), automargin: false, fixedrange: true }),
-      yaxis: axis({ tickvals: list.map((_, n) => n), ticktext: list.map((e) => safe(name(e))), automargin: false, fixedrange: true, range: [-0.6, list.length - 0.4] }) });
+    const layout = laidOut(matter, { margin: { l: wide ? 330 : 165, r: 16, t: 6, b: 40 },
+      xaxis: axis({ range: [-1.05, 1.05], zeroline: true, title: title("rank correlation"), fixedrange: true }),
+      yaxis: axis({ tickvals: list.map((_, n) => n), ticktext: list.map((e) => safe(name(e))), fixedrange: true, range: [-0.6, list.length - 0.4] }) });
     Plotly.react(matter, traces, layout, OPTIONS);
   }
 
   // ---- tables -----------------------------------------------------------------------------------------
-  function table(id, head, rows) {
+  function figuresTable(id, head, rows) {
     const node = element(id), top = make("tr", null, make("thead", null, node));
     node.classList.add("figures");
     head.forEach(([text, cls]) => make("th", text, top, cls));
@@ -218,7 +183,7 @@
   }
   function effectsTable() {
     const percent = (v) => (v === null ? "–" : figure(100 * v, 0) + "\u202f%");
-    table("effects", [["Parameter", ""], ["Measure", ""], ["Rank correlation", "number"], ["95% interval", "number"], ["Explains", "number"], ["Verdict", ""]],
+    figuresTable("effects", [["Parameter", ""], ["Measure", ""], ["Rank correlation", "number"], ["95% interval", "number"], ["Explains", "number"], ["Verdict", ""]],
       sweep.effects.map((e) => [e.parameter, sweep.measures[e.measure].words, figure(e.correlation, 2), e.low === null ? "–" : figure(e.low, 2) + " to " + figure(e.high, 2), percent(e.explained), e.verdict]));
   }
   let settingRows = {};
@@ -228,7 +193,7 @@
       return (q.keeps - p.keeps) || ((p.objective === null) - (q.objective === null)) || (p.objective - q.objective) || (a - b);
     });
     const head = [["Setting", ""], ["", ""]].concat(sweep.axes.map((a) => [a.key, "number"]), [["Objective", "number"]], sweep.main.map((name) => [named(name), "number"]), [["Rules", "broken"]]);
-    const rows = table("settings", head, order.map((n) => {
+    const rows = figuresTable("settings", head, order.map((n) => {
       const s = sweep.settings[n], doubt = s.doubt === null ? "" : " ± " + Number(s.doubt.toPrecision(2));
       return [String(n), ""].concat(sweep.axes.map((a) => short(s.labels[a.key])), [short(s.objective) + doubt], sweep.main.map((name) => short(s.mean[name])), [s.broken.join("; ")]);
     }));
@@ -338,7 +303,7 @@
     document.querySelector(".transport.inside").style.visibility = track ? "" : "hidden";
     if (!track) {
       const text = chosenRow ? safe(chosenRow.status) : "nothing to show";
-      Plotly.react(turn, [], base(turn, { xaxis: { visible: false }, yaxis: { visible: false }, annotations: [{ text, showarrow: false, x: 0.5, y: 0.5, xref: "paper", yref: "paper", font: { size: 14, color: css("--soft") } }] }), OPTIONS);
+      Plotly.react(turn, [], laidOut(turn, { xaxis: { visible: false }, yaxis: { visible: false }, annotations: [{ text, showarrow: false, x: 0.5, y: 0.5, xref: "paper", yref: "paper", font: { size: 14, color: css("--soft") } }] }), OPTIONS);
       return;
     }
     const [traces, m] = turnTraces(track), box = extent(track);
@@ -346,8 +311,8 @@
     element("now").textContent = figure(time, 1, "s");
     slider.setAttribute("aria-valuetext", figure(time, 1) + " seconds");
     const note = m.clearance === null ? "" : "nearest " + figure(m.clearance, 2, "m");
-    Plotly.react(turn, traces, base(turn, { margin: { l: 38, r: 8, t: 6, b: 30 }, uirevision: "setting " + chosenSetting,
-      xaxis: axis({ range: [box[0], box[1]], ticksuffix: " m", automargin: false }), yaxis: axis({ range: [box[2], box[3]], scaleanchor: "x", scaleratio: 1, automargin: false }),
+    Plotly.react(turn, traces, laidOut(turn, { margin: { l: 38, r: 8, t: 6, b: 30 }, uirevision: "setting " + chosenSetting,
+      xaxis: axis({ range: [box[0], box[1]], ticksuffix: " m" }), yaxis: axis({ range: [box[2], box[3]], scaleanchor: "x", scaleratio: 1 }),
       annotations: [{ text: note, showarrow: false, xref: "paper", yref: "paper", x: 1, y: 1, xanchor: "right", yanchor: "top", font: { size: 11.5, color: css("--soft") } }] }), OPTIONS);
   }
   function play(on) {
@@ -380,11 +345,5 @@
   }));
   slider.addEventListener("input", () => { play(false); time = Number(slider.value); drawTurn(); });
   element("play").addEventListener("click", () => play(!playing));
-  window.matchMedia("(prefers-color-scheme: dark)").addEventListener("change", drawAll);
-  let waiting = 0;
-  window.addEventListener("resize", () => { cancelAnimationFrame(waiting); waiting = requestAnimationFrame(drawAll); });
-  ["beforeprint", "afterprint"].forEach((name) => window.addEventListener(name, () => {
-    document.documentElement.classList.toggle("printing", name === "beforeprint");
-    drawAll();
-  }));
+  keepDrawn(drawAll);
 })();

@@ -2,21 +2,18 @@
 
 from __future__ import annotations
 
-import re
 from pathlib import Path
 from typing import Any
 
 import attrs
-from plotly.offline import get_plotlyjs
 
 from ..trial.sweep.axes import Ranged, in_words
 from ..trial.sweep.choice import Setting
 from ..trial.sweep.measures import MAIN, MEASURES
 from ..trial.sweep.outcome import Outcome
 from .metrics import plain
-from .page import _as_json, _escaped, _part
+from .page import assembled
 
-_MARKER = re.compile(r"\{\{(\w+)\}\}")
 _MOST_POSES = 40_000  # of all tracks together; more rehearsals are drawn with fewer poses each
 _FEWEST_POSES = 9
 
@@ -37,14 +34,8 @@ def write_sweep_page(found: Outcome, path: str | Path, best_text: str = "") -> N
 
 def sweep_page(found: Outcome, best_text: str = "") -> str:
     """The page as text: template, style, script, the charting library and the sweep's data, all in one."""
-    parts = {
-        "title": _escaped(f"{found.sweep.name}: sweep of {' and '.join(found.sweep.manoeuvres)}"),
-        "style": _part("page.css") + _part("sweep_page.css"),
-        "library": get_plotlyjs(),
-        "data": _as_json(sweep_data(found, best_text)),
-        "script": _part("sweep_page.js"),
-    }
-    return _MARKER.sub(lambda marker: parts[marker.group(1)], _part("sweep_page.html"))
+    title = f"{found.sweep.name}: sweep of {' and '.join(found.sweep.manoeuvres)}"
+    return assembled("sweep_page.html", "sweep_page.js", title, sweep_data(found, best_text), "sweep_page.css")
 
 
 def sweep_data(found: Outcome, best_text: str = "") -> dict[str, Any]:
