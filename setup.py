@@ -69,6 +69,8 @@ setup(
         "zstandard>=0.22",
     ],
     extras_require={
+        "cluster": ["distributed>=2023.12"],  # sweep --cluster
+        "parquet": ["pyarrow>=14.0"],  # sweep --results parquet
         # ROS 2 Jazzy as wheels, for machines without ROS 2 of their own. Never beside another ROS release.
         "ros": [
             "ros-jazzy-diagnostic-msgs==5.3.6",
@@ -80,9 +82,11 @@ setup(
         ],
         "test": [
             "colcon-common-extensions>=0.3",
+            "distributed>=2023.12",
             "easydubins>=1.3",
             "hypothesis>=6.98",
             "mypy==2.4.*",  # checkers learn new rules with every release: pinned, so that only we break our build
+            "pyarrow>=14.0",
             "pytest>=7.4",
             "pytest-xdist>=3.4",
             "rsplan>=1.0",

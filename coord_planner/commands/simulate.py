@@ -5,17 +5,17 @@
 from pathlib import Path
 from typing import Annotated, Any, Optional
 
-import attrs
 import typer
 
 from .. import config
 from ..errors import RefusedError
 from ..trial.run import Run
+from .loading import configured
+from .progress import progress_shown
 from .speaking import (
     DID_NOT_HOLD,
     errors_reported,
     figure,
-    progress_shown,
     say,
     table,
     write,
@@ -50,7 +50,7 @@ def simulate(
 ) -> None:
     """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
     with errors_reported():
-        configuration = _configured(params, entries or [])
+        configuration = configured(params, entries or [])
         configuration.manoeuvre(manoeuvre)
         configuration.all_starts()
         if page is not None:
@@ -68,14 +68,6 @@ def simulate(
         if bag is not None:
             _record(run, configuration, bag)
         _report(run, as_json, page, picture)
-
-
-def _configured(params: str, entries: list[str]) -> config.Configuration:
-    configuration = config.load(params)
-    if not entries:
-        return configuration
-    changed = config.from_parameters(config.set_values(configuration.flat, entries), f"{params} with --set")
-    return attrs.evolve(changed, file=params)
 
 
 def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
