@@ -54,7 +54,7 @@ def made_up(folder: Path, **changes: Any) -> Outcome:
 
 
 def embedded(text: str) -> Any:
-    found = re.search(r'<script type="application/json" id="run">(.*?)</script>', text, re.DOTALL)
+    found = re.search(r'<script type="application/json" id="sweep">(.*?)</script>', text, re.DOTALL)
     assert found
     return json.loads(found.group(1))
 
@@ -182,8 +182,7 @@ def test_a_failed_rehearsal_says_why_and_the_turn_plays(browser: Any, tmp_path: 
     early = drawn_turn(browser)
     browser.find_element("id", "play").click()
     wait_for(lambda: drawn_turn(browser) != early)
-    now = float(browser.find_element("id", "now").text.split("\u202f")[0])
-    assert now > 3.0
+    wait_for(lambda: float(browser.find_element("id", "now").text.split("\u202f")[0]) > 3.0)
     last = [row for row in browser.find_elements("css selector", "#settings tbody tr") if row.text.startswith("6")][0]
     last.click()
     browser.find_elements("css selector", "#seeds button")[1].click()
@@ -206,7 +205,7 @@ def test_page_fits_wide_and_narrow_windows_in_both_colour_schemes(browser: Any, 
         wait_for(lambda: browser.execute_script(
             "return document.documentElement.scrollWidth <= window.innerWidth"
             " && [...document.querySelectorAll('div.plot')].every((box) => {"
-            " const plot = box.querySelector('.main-svg'); "
+            " const plot = box.querySelector('.main-svg');"
             " return Math.abs(box.clientWidth - plot.clientWidth) <= 1 && box.clientHeight > 100 })"))
         grounds.add(browser.execute_script("return getComputedStyle(document.body).backgroundColor"))
     browser.execute_cdp_cmd("Emulation.clearDeviceMetricsOverride", {})

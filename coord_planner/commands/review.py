@@ -9,11 +9,11 @@ import typer
 
 from .. import config
 from ..errors import SettingsError
+from .progress import progress_shown
 from .speaking import (
     DID_NOT_HOLD,
     errors_reported,
     figure,
-    progress_shown,
     say,
     table,
     write,

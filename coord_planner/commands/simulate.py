@@ -15,7 +15,6 @@ from .speaking import (
     DID_NOT_HOLD,
     errors_reported,
     figure,
-    progress_shown,
     say,
     table,
     write,

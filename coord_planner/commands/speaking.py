@@ -3,13 +3,12 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import Any
 
 import typer
 from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 from rich.table import Table
 
 from ..errors import CoordPlannerError, SettingsError
@@ -65,19 +64,6 @@ def figure(value: float | None, digits: int, scale: float = 1.0) -> str:
 def say(text: str) -> None:
     """A message for people, on stderr."""
     typer.echo(text, err=True)
-
-
-@contextmanager
-def progress_shown(label: str) -> Iterator[Callable[[float], None]]:
-    """A bar on stderr, moved by calling what is given with the part that is done; nothing where that is no terminal."""
-    console = Console(stderr=True)
-    if not console.is_terminal:
-        yield lambda _part: None
-        return
-    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
-    with Progress(*columns, console=console, transient=True) as bar:
-        task = bar.add_task(label, total=1.0)
-        yield lambda part: bar.update(task, completed=part)
 
 
 @contextmanager

@@ -50,32 +50,21 @@ class Mark:
 
 
 def marks(fleet: Fleet, graph: NeighbourGraph, poses: np.ndarray, cautions: Sequence[Caution],
-          min_clearance: float) -> list[Mark]:
-    """All marks of a moment; poses of shape (N, 3), NaN rows for robots that were never heard of."""
+          min_clearance: float, coupling: float | None = None) -> list[Mark]:
+    """All marks of a moment; poses of shape (N, 3), NaN rows for robots that were never heard of.
+
+    ``coupling`` is the one in force, None while no manoeuvre is in hand.
+    """
     heard = np.isfinite(poses).all(axis=1) if len(poses) else np.zeros(len(fleet), dtype=bool)
     if not heard.any():
         return []
     poses = np.where(heard[:, None], poses, 0.0)
     shapes = outline.outlines(fleet.corners(), poses)
     return [
-        *_edges(graph, poses, heard), *_footprints(fleet, shapes, heard, cautions),
+        *_edges(graph, poses, heard), *_copying(graph, poses, heard, coupling),
+        *_footprints(fleet, shapes, heard, cautions),
         *_clearance(shapes, heard, min_clearance), *_warnings(fleet, poses, heard, cautions),
     ]
-
-
-def copying_marks(graph: NeighbourGraph, poses: np.ndarray, coupling: float) -> list[Mark]:
-    """How far the headings of neighbours are apart, and the coupling in force; arguments as for :func:`marks`."""
-    heard = np.isfinite(poses).all(axis=1)
-    found = []
-    for k, j in graph.index_edges():
-        if heard[k] and heard[j]:
-            apart = abs(math.degrees(math.remainder(poses[k, 2] - poses[j, 2], 2 * math.pi)))
-            middle = poses[[k, j], :2].mean(axis=0)
-            found.append(Mark("copying", "words", _points(middle[None]), _GREY, f"{apart:.0f} deg"))
-    if heard.any():
-        beside = poses[heard, :2].max(axis=0) + _WORDS_ABOVE
-        found.append(Mark("copying", "words", _points(beside[None]), _GREY, f"coupling {coupling:g}"))
-    return found
 
 
 def _points(places: np.ndarray) -> tuple[tuple[float, float], ...]:
@@ -85,6 +74,20 @@ def _points(places: np.ndarray) -> tuple[tuple[float, float], ...]:
 def _edges(graph: NeighbourGraph, poses: np.ndarray, heard: np.ndarray) -> list[Mark]:
     seen = [(k, j) for k, j in graph.index_edges() if heard[k] and heard[j]]
     return [Mark("edges", "pieces", _points(poses[np.array(seen).ravel(), :2]), _GREY)] if seen else []
+
+
+def _copying(graph: NeighbourGraph, poses: np.ndarray, heard: np.ndarray, coupling: float | None) -> list[Mark]:
+    """How far the headings of neighbours are apart, and the coupling in force, while a manoeuvre is in hand."""
+    if coupling is None:
+        return []
+    found = []
+    for k, j in graph.index_edges():
+        if heard[k] and heard[j]:
+            apart = abs(math.degrees(math.remainder(poses[k, 2] - poses[j, 2], 2 * math.pi)))
+            middle = poses[[k, j], :2].mean(axis=0)
+            found.append(Mark("copying", "words", _points(middle[None]), _GREY, f"{apart:.0f} deg"))
+    beside = poses[heard, :2].max(axis=0) + 1.0
+    return [*found, Mark("copying", "words", _points(beside[None]), _GREY, f"coupling {coupling:g}")]
 
 
 def _footprints(fleet: Fleet, shapes: np.ndarray, heard: np.ndarray, cautions: Sequence[Caution]) -> list[Mark]:
