@@ -13,7 +13,8 @@ from ..trial.copying import beside_law, quiet, with_coupling
 from ..trial.rehearsal import rehearse
 from .advised import write_advice
 from .loading import configured
-from .speaking import DID_NOT_HOLD, errors_reported, progress_shown, say, write_json
+from .progress import progress_shown
+from .speaking import DID_NOT_HOLD, errors_reported, say, write_json
 
 
 def advise(

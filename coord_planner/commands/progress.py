@@ -1,4 +1,4 @@
-"""A bar that counts, for what takes long; on a terminal only."""
+"""A bar for what takes longer than two seconds; on a terminal only."""
 
 from __future__ import annotations
 
@@ -11,8 +11,22 @@ from rich.progress import (
     MofNCompleteColumn,
     Progress,
     TextColumn,
+    TimeElapsedColumn,
     TimeRemainingColumn,
 )
+
+
+@contextmanager
+def progress_shown(what: str) -> Iterator[Callable[[float], None]]:
+    """Yields what is to be called with the part that is done, 0 to 1."""
+    console = Console(stderr=True)
+    if not console.is_terminal:
+        yield lambda _part: None
+        return
+    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
+    with Progress(*columns, console=console, transient=True) as bar:
+        task = bar.add_task(what, total=1.0)
+        yield lambda part: bar.update(task, completed=part)
 
 
 @contextmanager

@@ -11,6 +11,7 @@ from .. import config
 from ..errors import RefusedError
 from ..trial.run import Run
 from .loading import configured
+from .progress import progress_shown
 from .speaking import (
     DID_NOT_HOLD,
     errors_reported,
