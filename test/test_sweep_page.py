@@ -54,7 +54,7 @@ def made_up(folder: Path, **changes: Any) -> Outcome:
 
 
 def embedded(text: str) -> Any:
-    found = re.search(r'<script type="application/json" id="sweep">(.*?)</script>', text, re.DOTALL)
+    found = re.search(r'<script type="application/json" id="run">(.*?)</script>', text, re.DOTALL)
     assert found
     return json.loads(found.group(1))
 
