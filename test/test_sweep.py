@@ -370,3 +370,10 @@ def test_a_sound_sweep_file_asks_for_what_it_says(tmp_path: Path) -> None:
     sweep = load_sweep(sweep_file(tmp_path))
     assert sweep.seeds == (1, 2) and sweep.objective == ASKED["objective"] and not math.isnan(sweep.points)
     assert [setting["coupling.strength"] for setting in sweep.settings()] == [0.5, 5.0, 50.0]
+
+
+@pytest.mark.parametrize("name", ["sweep_solar_park.yaml", "sweep_snow_yard.yaml"])
+def test_the_example_sweeps_are_sound_and_hold_the_file_as_it_stands(name: str) -> None:
+    sweep = load_sweep(example(name))
+    assert sweep.shipped() in sweep.settings() and len(sweep.manoeuvres) == 2
+    assert sweep.base.invented
