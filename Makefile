@@ -50,7 +50,7 @@ lint: .venv/test.stamp
 types: .venv/test.stamp
 	$(PY) -m mypy coord_planner
 
-unit: .venv/test.stamp
+unit: .venv/test.stamp .venv/test_data/recordings.stamp
 	$(ONE_THREAD) $(PY) -m pytest -q -n 2 --ignore test/ros test
 
 ros: .venv/test.stamp
@@ -80,6 +80,14 @@ clean:
 .venv/test.stamp: .venv/run.stamp
 	$(PY) -m pip install -qq --use-pep517 --editable '.[ros,test]'
 	@touch $@
+
+# Recordings that ship with packages of PyPI: only read, from where they were downloaded to. Where they cannot be had,
+# the tests that need them say so and are skipped.
+.venv/test_data/recordings.stamp: | .venv/bin/pip
+	@mkdir -p $(@D)
+	@if $(PY) -m pip download -qq --no-deps --dest $(@D) traffic==2.13 \
+	  && $(PY) -m pip download -qq --no-deps --no-binary :all: --dest $(@D) evo==1.38.1; then touch $@; \
+	else echo "recordings cannot be downloaded: tests that need them are skipped" >&2; fi
 
 .venv/bin/pip:
 	@tried=; chosen=; lame=; \

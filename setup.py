@@ -55,16 +55,22 @@ setup(
     install_requires=[
         "attrs>=23.2",
         "casadi>=3.7",  # 3.6 keeps the interpreter's lock while it solves
+        "lz4>=4.0",
+        "mcap>=1.2",  # reads recordings that break off, with lz4 and zstandard
         "networkx>=2.8",
         "numpy>=1.26",
         "plotly>=5.15",
         "pyyaml>=6.0",
         "rich>=13.7",
+        "rosbags>=0.11",
         "scipy>=1.11",
         "shapely>=2.0",
         "typer>=0.9,<0.29",  # 0.29 wants pydantic 2; other programs of Ubuntu 24.04 need its 1.10
+        "zstandard>=0.22",
     ],
     extras_require={
+        "cluster": ["distributed>=2023.12"],  # sweep --cluster
+        "parquet": ["pyarrow>=14.0"],  # sweep --results parquet
         # ROS 2 Jazzy as wheels, for machines without ROS 2 of their own. Never beside another ROS release.
         "ros": [
             "ros-jazzy-diagnostic-msgs==5.3.6",
@@ -76,9 +82,11 @@ setup(
         ],
         "test": [
             "colcon-common-extensions>=0.3",
+            "distributed>=2023.12",
             "easydubins>=1.3",
             "hypothesis>=6.98",
             "mypy==2.4.*",  # checkers learn new rules with every release: pinned, so that only we break our build
+            "pyarrow>=14.0",
             "pytest>=7.4",
             "pytest-xdist>=3.4",
             "rsplan>=1.0",

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 import typer
 
+from .commands.advise import advise
 from .commands.check import check
 from .commands.demo import demo
+from .commands.review import review
 from .commands.simulate import simulate
+from .commands.sweep import sweep
 
 app = typer.Typer(
     help="Coordinated motion planning for several ground robots that turn together. "
@@ -16,6 +19,9 @@ app = typer.Typer(
 app.command()(demo)
 app.command()(check)
 app.command()(simulate)
+app.command()(advise)
+app.command()(sweep)
+app.command()(review)
 
 
 @app.callback()

@@ -26,5 +26,9 @@ class RefusedError(CoordPlannerError):
         super().__init__(f"{reason}; {remedy}")
 
 
+class ArrivedError(RefusedError):
+    """There is nothing to drive: every robot is where it is to end."""
+
+
 class SolveError(CoordPlannerError):
     """An optimisation gave no usable plan."""

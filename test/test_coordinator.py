@@ -175,8 +175,10 @@ def test_resumed_close_to_its_end_it_creeps_there_instead_of_going_round(seconds
     yard.coordinator.halt(yard.now, "halted")
     yard.run_to(State.HELD)
     assert yard.resume().ok
-    assert max(fleets.length(yard.coordinator.reference, k) for k in range(2)) < 0.5
-    yard.run_to(State.ENDED)
+    if yard.coordinator.state is not State.ENDED:  # nothing is left to drive when it is there already
+        assert max(fleets.length(yard.coordinator.reference, k) for k in range(2)) < 0.5
+        yard.run_to(State.ENDED)
+    assert yard.coordinator.state is State.ENDED
     off = yard.machines.poses() - yard.coordinator.ends
     assert np.hypot(off[:, 0], off[:, 1]).max() < 0.10 and np.degrees(np.abs(off[:, 2])).max() < 3.0
 

@@ -21,14 +21,16 @@ import coord_planner
 
 SOURCE = Path(__file__).parent.parent
 EXECUTABLES = ("coord-planner", "planner_node", "simulator_node")
-# Keys of rosdep's python.yaml by the name under which pip knows the library; plotly has none there.
+# Keys of rosdep's python.yaml by the name under which pip knows the library; PIP_ONLY have none there.
 ROSDEP_KEYS = {
     "attrs": "python3-attrs", "casadi": "casadi-pip", "networkx": "python3-networkx", "numpy": "python3-numpy",
-    "pyyaml": "python3-yaml", "rich": "python3-rich", "scipy": "python3-scipy",
+    "pyyaml": "python3-yaml", "rich": "python3-rich", "rosbags": "python3-rosbags-pip", "scipy": "python3-scipy",
     "shapely": "python3-shapely", "typer": "python3-typer",
 }
 IMPORTED_AS = {"pyyaml": "yaml"}
-PIP_ONLY = {"plotly"}
+PIP_ONLY = {"lz4", "mcap", "plotly", "zstandard"}
+# Imported only where it is asked for, with a message that says how to install it; each an extra of its own.
+EXTRAS = {"distributed": "cluster", "pyarrow": "parquet"}
 OPTIONAL_ROS = {"ackermann_msgs": "ackermann_msgs", "tf2_ros": "tf2_ros_py"}
 
 
@@ -74,9 +76,20 @@ def test_one_version_everywhere() -> None:
 def test_libraries_are_declared_to_pip_and_to_rosdep() -> None:
     used = {root for root in imported() if not is_ros(root)}
     assert required() == set(ROSDEP_KEYS) | PIP_ONLY
-    assert used == {IMPORTED_AS.get(name, name) for name in required()}, "setup.py asks for exactly what is imported"
+    wanted = {IMPORTED_AS.get(name, name) for name in required()} | set(EXTRAS)
+    assert used == wanted, "setup.py asks for exactly what is imported"
     keys = {key for key in depended() if key.startswith("python3-") or key.endswith("-pip")}
     assert keys == set(ROSDEP_KEYS.values())
+
+
+def test_what_only_some_need_is_an_extra_and_loaded_late() -> None:
+    extras = ast.literal_eval(setup_keywords()["extras_require"])
+    for library, extra in EXTRAS.items():
+        assert any(line.startswith(library) for line in extras[extra])
+        assert any(line.startswith(library) for line in extras["test"]), "what the tests need, they bring"
+    blocked = "; ".join(f"sys.modules[{library!r}] = None" for library in EXTRAS)
+    program = f"import sys; {blocked}; import coord_planner.cli, coord_planner.trial.sweep.cluster"
+    subprocess.run([sys.executable, "-c", program], check=True, timeout=60, cwd=SOURCE)
 
 
 def test_ros_packages_are_declared() -> None:

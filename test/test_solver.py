@@ -46,7 +46,8 @@ def test_a_plan_keeps_its_equations_and_limits():
 
 def test_where_nothing_speaks_against_it_the_fleet_drives_straight_on_for_nothing():
     plan = solved(problem())
-    assert plan.cost == pytest.approx(0.0, abs=1e-5)
+    # The solver lets slacks fall 1e-8 below 0, and each of 28 is priced at 200.
+    assert plan.cost == pytest.approx(0.0, abs=1e-4)
     assert plan.states[:, :, 2:6] == pytest.approx(np.broadcast_to([0.0, 0.0, 1.0, 0.0], (2, 13, 4)), abs=1e-3)
 
 
@@ -79,8 +80,8 @@ def test_starting_from_its_own_solution_changes_nothing():
     given = problem(ends=abreast(2) + [2.8, 0.3, 0.15])
     plan = solved(given)
     again = solver.solve(given, solver.start_from_plan(plan, given.shape, 0), warm=True)
-    assert again.states == pytest.approx(plan.states, abs=1e-4)
-    assert again.cost == pytest.approx(plan.cost, rel=1e-3, abs=1e-5)
+    assert again.states == pytest.approx(plan.states, abs=3e-4)  # a warm solve stops at a tolerance of 1e-5
+    assert again.cost == pytest.approx(plan.cost, rel=1e-3, abs=1e-4)
 
 
 def test_the_same_problem_has_the_same_numbers():

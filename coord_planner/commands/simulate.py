@@ -5,16 +5,24 @@
 from pathlib import Path
 from typing import Annotated, Any, Optional
 
-import attrs
 import typer
-from rich.console import Console
-from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 
 from .. import config
 from ..errors import RefusedError
 from ..trial.run import Run
-from .speaking import DID_NOT_HOLD, errors_reported, say, table, write, write_json, write_table
-from .targets import prepare_file
+from .loading import configured
+from .progress import progress_shown
+from .speaking import (
+    DID_NOT_HOLD,
+    errors_reported,
+    figure,
+    say,
+    table,
+    write,
+    write_json,
+    write_table,
+)
+from .targets import prepare_bag, prepare_file
 
 
 def simulate(
@@ -36,43 +44,44 @@ def simulate(
     picture: Annotated[
         Optional[Path], typer.Option("--picture", metavar="FILE", help="Also write a still picture of the turn (SVG).")
     ] = None,
+    bag: Annotated[
+        Optional[Path], typer.Option("--bag", metavar="DIR", help="Also record it: a rosbag2 folder (MCAP), made new.")
+    ] = None,
 ) -> None:
     """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
     with errors_reported():
-        configuration = _configured(params, entries or [])
+        configuration = configured(params, entries or [])
         configuration.manoeuvre(manoeuvre)
         configuration.all_starts()
         if page is not None:
             prepare_file(page, "--page")
         if picture is not None:
             prepare_file(picture, "--picture")
+        if bag is not None:
+            prepare_bag(bag, "--bag")
         try:
             run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
         except RefusedError as refused:
             if as_json:
                 write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
             raise
+        if bag is not None:
+            _record(run, configuration, bag)
         _report(run, as_json, page, picture)
-
-
-def _configured(params: str, entries: list[str]) -> config.Configuration:
-    configuration = config.load(params)
-    if not entries:
-        return configuration
-    changed = config.from_parameters(config.set_values(configuration.flat, entries), f"{params} with --set")
-    return attrs.evolve(changed, file=params)
 
 
 def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
     from ..trial.rehearsal import rehearse
 
-    console = Console(stderr=True)
-    if not console.is_terminal:
-        return rehearse(configuration, manoeuvre, seed=seed)
-    columns = TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:3.0f}%"), TimeElapsedColumn()
-    with Progress(*columns, console=console, transient=True) as bar:
-        task = bar.add_task(manoeuvre, total=1.0)
-        return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
+    with progress_shown(manoeuvre) as progress:
+        return rehearse(configuration, manoeuvre, seed=seed, progress=progress)
+
+
+def _record(run: Run, configuration: config.Configuration, bag: Path) -> None:
+    from ..record.bag_write import write_bag
+
+    count = write_bag(run, bag, frame=configuration.frame, parameters=configuration.flat)
+    say(f"The recording is in {bag}: {count} messages.")
 
 
 def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) -> None:
@@ -115,21 +124,18 @@ def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
 
 
 def _write_figures(run: Run, figures: dict[str, Any]) -> None:
-    write(f"{run.manoeuvre}: {figures['state']} after {_figure(figures['duration_s'], 1)} s; "
+    write(f"{run.manoeuvre}: {figures['state']} after {figure(figures['duration_s'], 1)} s; "
           f"{figures['contacts']} contacts, {figures['limit_violations']} commands outside a limit; smallest clearance "
-          f"{_figure(figures['min_clearance_m'], 2)} m (the site allows {run.min_clearance:g} m).\n")
+          f"{figure(figures['min_clearance_m'], 2)} m (the site allows {run.min_clearance:g} m).\n")
     columns = {"heading_change_rad": "heading change rad", "turn_onset_s": "turn onset s", "end_error_m": "end error m",
                "end_heading_error_rad": "end heading error rad"}
     robots = table("robot", *columns.values())
     for name in run.fleet.names:
-        robots.add_row(name, *(_figure(figures[key][name], 3) for key in columns))
+        robots.add_row(name, *(figure(figures[key][name], 3) for key in columns))
     write_table(robots)
     for warning in figures["warnings"]:
-        write(f"{_figure(warning['first_s'], 1)} to {_figure(warning['last_s'], 1)} s: {warning['text']}")
+        write(f"{figure(warning['first_s'], 1)} to {figure(warning['last_s'], 1)} s: {warning['text']}")
     ticks = figures["tick_ms"]
-    write(f"Ticks: median {_figure(ticks['median'], 1)} ms, 99% below {_figure(ticks['p99'], 1)} ms; "
-          f"{_figure(figures['real_time_factor'], 1)} times as fast as real time.")
+    write(f"Ticks: median {figure(ticks['median'], 1)} ms, 99% below {figure(ticks['p99'], 1)} ms; "
+          f"{figure(figures['real_time_factor'], 1)} times as fast as real time.")
 
-
-def _figure(value: float | None, digits: int) -> str:
-    return "-" if value is None else f"{value:.{digits}f}"

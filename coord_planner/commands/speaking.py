@@ -56,6 +56,11 @@ def write_json(value: Any) -> None:
     typer.echo(json.dumps(value, indent=2, allow_nan=False))
 
 
+def figure(value: float | None, digits: int, scale: float = 1.0) -> str:
+    """A number for a table; "-" for none."""
+    return "-" if value is None else f"{scale * value:.{digits}f}"
+
+
 def say(text: str) -> None:
     """A message for people, on stderr."""
     typer.echo(text, err=True)

@@ -25,3 +25,11 @@ def prepare_file(file: Path, option: str) -> None:
     prepare_folder(file.parent, option)
     if file.is_dir():
         raise SettingsError(f"{file} is a folder", key=option, allowed="a file")
+
+
+def prepare_bag(folder: Path, option: str) -> None:
+    """See that a recording can be made as a new folder; SettingsError otherwise: none is ever written over."""
+    if folder.exists():
+        raise SettingsError(f"{folder} is there already, and a recording is never written over", key=option,
+                            allowed="a folder that does not exist yet")
+    prepare_folder(folder.parent, option)

@@ -9,7 +9,7 @@ from typing import Any, Optional
 import attrs
 import numpy as np
 
-from ..errors import CoordPlannerError, RefusedError, SettingsError, SolveError
+from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
 from . import gate, manoeuvre, reference, rules, solver, stopping
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -44,6 +44,7 @@ class Outcome:
     reference: Optional[Reference]
     reason: str
     silence: Optional[Silence] = None
+    arrived: bool = False
 
 
 Job = Callable[[], Outcome]  # pure, slow, may run in any thread; its outcome goes to Coordinator.deliver
@@ -249,6 +250,10 @@ class Coordinator:
             if request.kind == "change":
                 self._take_rest(outcome, now)
                 return
+            if outcome.arrived and request.kind == "resume":
+                self._state, self._completed, self._ended_at, self._reason = State.ENDED, True, now, "completed"
+                request.answered(Answer(True, "every robot is at its end already", request.request_id))
+                return
             if outcome.reference is None:
                 if request.kind == "begin":
                     self._state = State.IDLE
@@ -369,8 +374,10 @@ class Coordinator:
                 made = make()
                 silence = worst_silence(made, fleet)
                 _check_silence(silence, rules_in_force)
-            except (RefusedError, SolveError) as error:
-                return Outcome(token, None, str(error))
+            except CoordPlannerError as error:
+                return Outcome(token, None, str(error), arrived=isinstance(error, ArrivedError))
+            except Exception as error:  # whatever it is: nobody may be left waiting for an answer
+                return Outcome(token, None, f"a mistake in the planner ({error!r}); please report it")
             solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
             return Outcome(token, made, "", silence)
 

@@ -8,7 +8,7 @@ from typing import Optional, Union
 import attrs
 import numpy as np
 
-from ..errors import RefusedError, SettingsError
+from ..errors import ArrivedError, RefusedError, SettingsError
 from . import outline
 from .dubins import ArcPath, paths, shortest
 from .fleet import Fleet, weakest
@@ -217,7 +217,7 @@ def lay_out(
     """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
-        raise RefusedError(f"{name}: every robot is where it is to end already", "ask for something else or abandon it")
+        raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
     profile = speed_profile(
         longest, speed_now, speed, end_speed,
         _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),

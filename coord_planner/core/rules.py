@@ -201,5 +201,5 @@ def _caution(settings: Settings, code: str, subject: str, level: Level, figures:
     """A warning; every one defers to the site's rules, since the planner is not what protects people."""
     about, deference = f"{subject}: " if subject else "", "and the machines' own protection come first"
     doing = _row(code, level).response.value
-    text = f"{about}{figures}; the fleet {doing}. {settings.site_rules.reference} {deference}"
+    text = f"{about}{figures}; the fleet {doing}; {settings.site_rules.reference} {deference}"
     return Caution(code, subject, level, text)

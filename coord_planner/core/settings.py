@@ -37,10 +37,10 @@ class Prices:
         2.0, "price of leaving the asked speed, relative", "1/m^2", minimum=1e-4, maximum=1e3, live=True
     )
     clearance: float = parameter(
-        100.0, "price of each metre of missing clearance, per second", "1/(m^3 s)", above=0.0, maximum=1e6, live=True
+        1000.0, "price of each metre of missing clearance, per second", "1/(m^3 s)", above=0.0, maximum=1e6, live=True
     )
     end: float = parameter(
-        50.0, "price of each metre or radian by which an end is missed", "1/m^2", above=0.0, maximum=1e6, live=True
+        200.0, "price of each metre or radian by which an end is missed", "1/m^2", above=0.0, maximum=1e6, live=True
     )
 
 

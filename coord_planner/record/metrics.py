@@ -10,11 +10,9 @@ import numpy as np
 
 from ..core import se2
 from ..trial.run import Run
+from . import turns
 from .adherence import violations
 from .nearness import Nearness, nearness
-
-_NOT_TURNING = 1e-3  # rad/s; a robot that never turns faster than this has no turn onset
-_TENTH = 0.1
 
 
 def summary(run: Run, near: Nearness | None = None) -> dict[str, Any]:
@@ -79,35 +77,9 @@ def turn_onsets(run: Run) -> np.ndarray:
     Seconds since the beginning of the motion, interpolated between samples.
     """
     inside = _inside(run)
-    onsets = np.full(len(run.fleet), math.nan)
-    if inside.sum() < 2:
-        return onsets
-    times = run.times[inside] - run.began
-    for row, rate in enumerate((run.speeds * run.curvatures)[:, inside]):
-        largest = float(np.nanmax(np.abs(rate), initial=0.0))
-        threshold = max(_TENTH * largest, _noise(rate), _NOT_TURNING)
-        if largest > threshold:
-            onsets[row] = _first_passing(times, np.abs(rate), threshold)
-    return onsets
-
-
-def _first_passing(times: np.ndarray, values: np.ndarray, threshold: float) -> float:
-    after = int(np.argmax(values > threshold))
-    if after == 0:
-        return float(times[0])
-    before = values[after - 1]
-    return float(times[after - 1] + (threshold - before) / (values[after] - before) * (times[after] - times[after - 1]))
-
-
-def _noise(values: np.ndarray) -> float:
-    """Five standard deviations of what is not smooth in a series.
-
-    The second difference of white noise has sqrt(6) times its deviation; 1.4826 times the median of magnitudes
-    estimates a normal deviation without minding outliers (both common practice).
-    """
-    if len(values) < 3:
-        return 0.0
-    return float(5.0 * 1.4826 * np.nanmedian(np.abs(np.diff(values, n=2))) / math.sqrt(6.0))
+    times, rates = run.times[inside] - run.began, (run.speeds * run.curvatures)[:, inside]
+    found = [turns.onset(times, rate) for rate in rates]
+    return np.array([math.nan if one is None else one.time for one in found])
 
 
 def _inside(run: Run) -> np.ndarray:

@@ -9,6 +9,8 @@ from ..core import outline
 from ..core.fleet import Fleet
 from ..trial.run import Run
 
+_BLOCK = 10_000  # samples whose outlines are in memory at once
+
 
 @attrs.frozen
 class Nearness:
@@ -36,7 +38,8 @@ def nearness(run: Run) -> Nearness:
     samples = len(run.times)
     if not len(pairs) or not samples:
         return Nearness(np.full(samples, np.inf), np.full((samples, 2), -1), 0)
-    distance = _distances(run.fleet, run.poses, pairs)
+    blocks = [_distances(run.fleet, run.poses[:, begin:begin + _BLOCK], pairs) for begin in range(0, samples, _BLOCK)]
+    distance = np.concatenate(blocks, axis=1)
     nearest = distance.argmin(axis=0)
     touching = np.pad(distance <= 0.0, ((0, 0), (1, 0)))
     begins = touching[:, 1:] & ~touching[:, :-1]

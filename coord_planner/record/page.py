@@ -37,24 +37,42 @@ def write_page(run: Run, path: str | Path) -> None:
 
 def page(run: Run) -> str:
     """The page as text: template, style, script, the charting library and the run's data, all in one."""
+    title = f"{_in_words(run.manoeuvre)}: {len(run.fleet)} robots"
+    return assembled("page.html", "page.js", title, data(run))
+
+
+def assembled(template: str, script: str, title: str, values: dict[str, Any], style: str = "") -> str:
+    """A page of its parts: everything that it needs is in it, and it asks for nothing outside itself.
+
+    Args:
+        template: what stands between head and foot. script: what is done with it, beside what all pages share.
+        style: file with styles of this page alone; "" for none.
+    """
+    content = _part(template).replace("{{transport}}", _part("transport.html"))
     parts = {
-        "title": _escaped(f"{_in_words(run.manoeuvre)}: {len(run.fleet)} robots"),
-        "style": _part("page.css"),
+        "title": _escaped(title), "style": _part("page.css") + (_part(style) if style else ""), "content": content,
         "library": get_plotlyjs(),
-        "data": _as_json(data(run)),
-        "script": _part("page.js"),
+        "data": _as_json(values), "script": _part("stage.js") + _part(script),
     }
-    return _MARKER.sub(lambda found: parts[found.group(1)], _part("page.html"))
+    return _MARKER.sub(lambda found: parts[found.group(1)], _part("frame.html"))
 
 
 def data(run: Run) -> dict[str, Any]:
-    """All that the page shows, as plain JSON values. Times are seconds since the beginning of the motion.
+    """All that the page of a run shows; times are seconds since the beginning of the motion."""
+    near = nearness(run)
+    origin = run.began if math.isfinite(run.began) else float(run.times[0]) if len(run.times) else 0.0
+    shown = scene(run, near, _kept_samples(len(run.times), near.clearance), origin)
+    return shown | {"facts": plain(run.facts), "summary": summary(run, near)}
+
+
+def scene(run: Run, near: Nearness, kept: np.ndarray, origin: float) -> dict[str, Any]:
+    """What happened, as plain JSON values: what every page shows from above and over time.
 
     Arrays with two levels are robot by sample; angles are radians, lengths metres.
+
+    Args:
+        kept: samples that are shown. origin: run time that counts as 0, seconds.
     """
-    near = nearness(run)
-    kept = _kept_samples(len(run.times), near.clearance)
-    origin = run.began if math.isfinite(run.began) else float(run.times[0]) if len(run.times) else 0.0
     return {
         "manoeuvre": _in_words(run.manoeuvre),
         "names": list(run.fleet.names),
@@ -76,8 +94,6 @@ def data(run: Run) -> dict[str, Any]:
             for first, last, caution in run.cautions
         ],
         "events": [{"time": plain(time - origin), "text": text} for time, text in run.events],
-        "facts": plain(run.facts),
-        "summary": summary(run, near),
     }
 
 
@@ -95,8 +111,8 @@ def _nearest(run: Run, near: Nearness, kept: np.ndarray) -> dict[str, Any]:
 
 def _plans(frames: tuple[RunFrame, ...], origin: float) -> dict[str, Any]:
     """Planned paths along the way, thinned in time and along the path: frame by robot by point."""
-    shown = [frames[n] for n in _spread(len(frames), _MOST_FRAMES)]
-    paths = [frame.poses[:, _spread(frame.poses.shape[1], _MOST_POINTS)] for frame in shown]
+    shown = [frames[n] for n in spread(len(frames), _MOST_FRAMES)]
+    paths = [frame.poses[:, spread(frame.poses.shape[1], _MOST_POINTS)] for frame in shown]
     return {
         "times": [plain(round(frame.time - origin, 3)) for frame in shown],
         "rate": [plain(round(float(frame.progress_rate), 3)) for frame in shown],
@@ -107,11 +123,11 @@ def _plans(frames: tuple[RunFrame, ...], origin: float) -> dict[str, Any]:
 
 def _kept_samples(count: int, clearance: np.ndarray) -> np.ndarray:
     """Samples that the page holds: evenly spread, and the one with the smallest clearance, which must not be lost."""
-    kept = _spread(count, _MOST_SAMPLES)
+    kept = spread(count, _MOST_SAMPLES)
     return np.union1d(kept, [int(np.argmin(clearance))]) if count else kept
 
 
-def _spread(count: int, most: int) -> np.ndarray:
+def spread(count: int, most: int) -> np.ndarray:
     """At most ``most`` of ``count`` indices, evenly spread, the first and the last among them."""
     return np.unique(np.linspace(0, max(count - 1, 0), min(count, most)).round().astype(int))
 

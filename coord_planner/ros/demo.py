@@ -27,11 +27,13 @@ from std_msgs.msg import Float64
 from std_srvs.srv import Trigger
 
 from ..record import metrics, page
+from ..record.bag_write import BagWriter
 from ..trial.run import Run
-from . import qos
+from . import qos, tape
 from .recorder import Recorder
 
 MANOEUVRE = "corner_left"
+_BAG = "bag"  # what the recording is called; `coord-planner review` looks into it
 _SLOWED_TO, _SLOWED_FROM, _SLOWED_FOR = 0.3, 0.35, 3.0  # part of its speed; part of the manoeuvre; seconds
 _LONGEST = 45.0  # seconds for the manoeuvre
 _END_ERROR, _END_HEADING_ERROR_DEG = 0.10, 3.0
@@ -43,7 +45,7 @@ class DemoError(CoordPlannerError):
 
 
 def run_demo(params: str | Path, out: str | Path) -> int:
-    """Run the demo and leave ``summary.json`` and ``page.html`` in ``out``.
+    """Run the demo and leave ``summary.json``, ``page.html`` and the recording ``bag`` in ``out``.
 
     Returns:
         0 when everything held that the demo promises; 1 when something did not.
@@ -55,6 +57,7 @@ def run_demo(params: str | Path, out: str | Path) -> int:
     _check(configuration)
     folder = Path(out)
     folder.mkdir(parents=True, exist_ok=True)
+    tape.clear(folder / _BAG)
     began = time.monotonic()
     try:
         with processes.ending_on_signals():
@@ -120,10 +123,11 @@ def _run_nodes(configuration: config.Configuration, params: Path, folder: Path) 
     executor = SingleThreadedExecutor(context=context)
     try:
         with processes.NodeProcess("simulator_node", [params], domain, folder / "simulator.log") as simulator, \
-                processes.NodeProcess("planner_node", [params], domain, folder / "planner.log") as planner:
+                processes.NodeProcess("planner_node", [params], domain, folder / "planner.log") as planner, \
+                BagWriter(folder / _BAG, configuration.flat) as bag:
             node = Node("demo", context=context, use_global_arguments=False)
             executor.add_node(node)
-            return _Director(configuration, node, executor, [simulator, planner]).run()
+            return _Director(configuration, node, executor, [simulator, planner], bag).run()
     finally:
         executor.shutdown()
         rclpy.try_shutdown(context=context)
@@ -133,9 +137,9 @@ class _Director:
     """Goes through the demo step by step, listening all the time."""
 
     def __init__(self, configuration: config.Configuration, node: Node, executor: SingleThreadedExecutor,
-                 nodes: list[processes.NodeProcess]) -> None:
+                 nodes: list[processes.NodeProcess], bag: BagWriter) -> None:
         self._configuration, self._node, self._executor, self._nodes = configuration, node, executor, nodes
-        self._recorder = Recorder(node, configuration)
+        self._recorder = Recorder(node, configuration, bag=bag)
         names = configuration.fleet.names
         self._slowed = names[len(names) // 2 - 1]
         self._factor = node.create_publisher(Float64, f"{self._slowed}/simulated_speed_factor", qos.LATCHED)
@@ -241,7 +245,7 @@ def _tell(summary: dict[str, Any], broken: list[str], folder: Path, seconds: flo
          f"a limit, smallest clearance {'none' if clearance is None else f'{clearance:.2f} m'}")
     for words in broken:
         _say(f"NOT KEPT: {words}")
-    _say(f"figures: {folder / 'summary.json'}   page to look at: {folder / 'page.html'}")
+    _say(f"figures: {folder / 'summary.json'}   recording: {folder / _BAG}   page to look at: {folder / 'page.html'}")
 
 
 def _say(words: str) -> None:

@@ -4,22 +4,28 @@ from __future__ import annotations
 
 import functools
 import json
-from typing import Any
+from typing import Any, Optional
 
 import numpy as np
-from diagnostic_msgs.msg import DiagnosticStatus
-from geometry_msgs.msg import Twist, TwistStamped
+from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus
+from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, Twist, TwistStamped
 from nav_msgs.msg import Odometry, Path
 from rclpy.node import Node
-from rclpy.qos import QoSProfile
-from std_msgs.msg import Float64
+from rclpy.qos import QoSProfile, ReliabilityPolicy
+from rosgraph_msgs.msg import Clock
+from std_msgs.msg import Float64, String
+from visualization_msgs.msg import MarkerArray
 
 from .. import config
 from ..core.messages import Caution, Level
+from ..record.bag_write import BagWriter
 from ..trial.run import Run, RunFrame
 from . import messages, qos
+from .tape import Tape
 
 _DEEP = QoSProfile(depth=200)
+_DEEP_POSES = QoSProfile(depth=200, reliability=ReliabilityPolicy.BEST_EFFORT)
+_POSES = {"pose": PoseStamped, "pose_with_covariance": PoseWithCovarianceStamped, "odometry": Odometry}
 _FRAME_EVERY = 0.2  # seconds between two plans that are kept for the page
 _FRAME_POINTS = 13
 _GAP = 0.3  # seconds; a caution that pauses for less is one
@@ -30,10 +36,11 @@ class Recorder:
 
     Args:
         node: gets the subscriptions. configuration: of the planner that is listened to.
-        planner: name of its node.
+        planner: name of its node. bag: where every message is kept as it came, if anywhere.
     """
 
-    def __init__(self, node: Node, configuration: config.Configuration, planner: str = "planner") -> None:
+    def __init__(self, node: Node, configuration: config.Configuration, planner: str = "planner",
+                 bag: Optional[BagWriter] = None) -> None:
         self._configuration = configuration
         self._robots = {name: _Track() for name in configuration.fleet.names}
         self._cautions: dict[tuple[str, str], list[tuple[float, float, Caution]]] = {}
@@ -44,17 +51,24 @@ class Recorder:
         self._now = 0.0
         self.status: dict[str, str] = {}
         self.ends: dict[str, list[float]] = {}
+        tape = Tape(node, bag)
         for name, connection in configuration.connections.items():
-            self._listen(node, name, connection)
-        node.create_subscription(DiagnosticStatus, f"{planner}/status", self._on_status, qos.LATCHED)
+            self._listen(tape, name, connection)
+        tape.listen(DiagnosticStatus, f"{planner}/status", qos.LATCHED, self._on_status)
+        tape.listen(String, f"{planner}/neighbours_in_force", qos.NEWEST_LATCHED)
+        tape.listen(DiagnosticArray, "/diagnostics", _DEEP)
+        tape.listen(MarkerArray, "fleet_markers", _DEEP)
+        tape.listen(Clock, "/clock", _DEEP)
 
-    def _listen(self, node: Node, name: str, connection: config.Connection) -> None:
+    def _listen(self, tape: Tape, name: str, connection: config.Connection) -> None:
         track = self._robots[name]
         motion = TwistStamped if connection.command_type == "twist_stamped" else Twist
-        node.create_subscription(Odometry, f"{name}/simulated_state", track.on_state, _DEEP)
-        node.create_subscription(Float64, f"{name}/curvature", track.on_curvature, _DEEP)
-        node.create_subscription(motion, connection.command_topic, track.on_motion, _DEEP)
-        node.create_subscription(Path, f"{name}/planned_path", functools.partial(self._on_plan, name), _DEEP)
+        tape.listen(Odometry, f"{name}/simulated_state", _DEEP, track.on_state)
+        tape.listen(Float64, f"{name}/curvature", _DEEP, track.on_curvature)
+        tape.listen(motion, connection.command_topic, _DEEP, track.on_motion)
+        tape.listen(Path, f"{name}/planned_path", _DEEP, functools.partial(self._on_plan, name))
+        if connection.pose_source in _POSES:
+            tape.listen(_POSES[connection.pose_source], connection.pose_topic, _DEEP_POSES)
 
     @property
     def heard_all(self) -> bool:

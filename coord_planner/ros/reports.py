@@ -106,7 +106,7 @@ def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies
         "state": at.state.value, "active": at.active, "tick_ms": f"{at.tick_ms:.2f}",
         "ticks_left_out": at.overruns, "trouble": at.trouble,
     }
-    found = [_message(f"{at.node}: fleet", at.configuration.fleet_name, level, words, values)]
+    found = [_message(f"{at.node}: fleet", at.configuration.fleet_name, level, words, values), _of_coupling(at)]
     for caution in at.decision.warnings:
         found.append(_message(f"{at.node}: {caution.code}", caution.subject, caution.level, caution.text, {}))
     for name in at.configuration.fleet.names:
@@ -114,6 +114,24 @@ def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies
     for topic in ("neighbours", "request"):
         found.append(_of_messages(at, f"{topic} messages", topic, tallies))
     return found
+
+
+def _of_coupling(at: Situation) -> DiagnosticStatus:
+    """How strongly robots copy each other, as asked and as it is in force, and how far their headings are apart."""
+    asked, decision = at.configuration.settings.coupling, at.decision
+    planned = bool(decision.manoeuvre)
+    coupling = decision.coupling if planned else asked.strength
+    alignment = decision.alignment if planned else asked.alignment
+    headings = np.degrees(decision.poses[:, 2]) if len(decision.poses) else np.zeros(0)
+    headings = headings[np.isfinite(headings)]
+    values = {
+        "coupling": f"{coupling:.6g}", "coupling_asked": f"{asked.strength:.6g}", "alignment": f"{alignment:.6g}",
+        "alignment_asked": f"{asked.alignment:.6g}", "change": "" if at.change is None else str(at.change),
+        "heading_spread_deg": f"{np.ptp(headings):.2f}" if len(headings) else "",
+    }
+    waiting = at.change is not None and at.change.in_force is None
+    words = f"coupling {coupling:g}" + (f", {asked.strength:g} asked for and not in force yet" if waiting else "")
+    return _message(f"{at.node}: coupling", at.configuration.fleet_name, Level.OK, words, values)
 
 
 def _summary(at: Situation) -> tuple[Level, str]:

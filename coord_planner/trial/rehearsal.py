@@ -64,7 +64,8 @@ class _Log:
                 spans.append((decision.time, decision.time, caution))
         if len(self.tick_ms) % _FRAME_EVERY == 0 and decision.plan_poses.shape[1]:
             picked = np.unique(np.linspace(0, decision.plan_poses.shape[1] - 1, _FRAME_POINTS).astype(int))
-            self.frames.append(RunFrame(decision.time, decision.progress_rate, decision.plan_poses[:, picked]))
+            self.frames.append(RunFrame(decision.time, decision.progress_rate, decision.plan_poses[:, picked],
+                                        decision.plan_times[picked]))
 
     def cautions(self) -> tuple[tuple[float, float, Caution], ...]:
         spans = [span for group in self._cautions.values() for span in group]

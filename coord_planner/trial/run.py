@@ -18,6 +18,7 @@ class RunFrame:
     time: float
     progress_rate: float
     poses: np.ndarray  # planned poses, shape (N, K, 3)
+    times: np.ndarray = attrs.field(factory=lambda: np.zeros(0))  # when they are due, shape (K,), s; empty: not known
 
 
 @attrs.frozen

@@ -10,7 +10,10 @@ import sys
 import time
 from pathlib import Path
 
+import pytest
 from conftest import Site
+
+from coord_planner.record.review import review
 
 RUN = "import sys; from coord_planner.ros.demo import run_demo; sys.exit(run_demo(sys.argv[1], sys.argv[2]))"
 
@@ -45,6 +48,12 @@ def test_the_demo_completes_its_turn_in_spite_of_a_slowed_robot(site: Site, tmp_
     assert (summary["contacts"], summary["limit_violations"]) == (0, 0)
     assert max(summary["end_error_m"].values()) <= 0.10
     assert (tmp_path / "out" / "page.html").stat().st_size > 10_000
+    seen = review(tmp_path / "out" / "bag").figures
+    assert seen["messages_read"] == seen["messages_expected"] > 1000 and seen["losses"] == []
+    assert seen["min_clearance_m"] == pytest.approx(summary["min_clearance_m"], abs=1e-3)
+    (turn,) = seen["turns"]
+    for name, change in summary["heading_change_rad"].items():
+        assert turn["heading_change_rad"][name] == pytest.approx(change, abs=0.01)
     assert nodes_of(site) == []
 
 

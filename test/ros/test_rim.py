@@ -66,6 +66,16 @@ def decision(**changes: Any) -> Decision:
     return attrs.evolve(Decision(5.0, State.MOVING, poses=poses), **changes)
 
 
+def test_markers_show_the_coupling_and_what_neighbours_make_of_it() -> None:
+    poses = np.array([[0.0, 2.5 * k, 0.1 * k * k] for k in range(6)])
+    moving = decision(poses=poses, manoeuvre="led_left", coupling=12.5)
+    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, moving, 0.85)
+    texts = [marker.text for marker in markers.markers if marker.ns == "copying"]
+    assert texts == ["6 deg", "17 deg", "29 deg", "40 deg", "52 deg", "coupling 12.5"]
+    idle = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(), 0.85)
+    assert not [marker for marker in idle.markers if marker.ns == "copying"]
+
+
 def test_markers_show_edges_footprints_clearance_and_warnings() -> None:
     warned = (Caution("robot not following", "mower_2", Level.WARN, "0.5 m behind"),)
     markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(warnings=warned), 0.85)

@@ -103,19 +103,19 @@ def test_neighbours_in_force_are_told(hand: Hand, planner: NodeProcess) -> None:
 def test_a_disabled_robot_is_not_driven_and_none_leaves_in_mid_turn(hand: Hand, planner: NodeProcess) -> None:
     if hand.status["state"] != "idle":
         hand.until_state("idle")
-    assert hand.set(robots__right__enabled=False).successful
-    sent = len(hand.commands["right"])
+    assert hand.set(robots__middle__enabled=False).successful
+    sent = len(hand.commands["middle"])
     answer = hand.trigger("begin/corner_left")
     assert answer.success, answer.message
     hand.until_state("moving")
-    refused = hand.set(robots__middle__enabled=False)
+    refused = hand.set(robots__left__enabled=False)
     assert not refused.successful
     assert "idle" in refused.reason
     hand.until_state("ended")
     assert hand.status["completed"] == "true"
-    assert len(hand.commands["right"]) == sent
+    assert len(hand.commands["middle"]) == sent
     hand.until_state("idle")
-    assert hand.set(robots__right__enabled=True).successful
+    assert hand.set(robots__middle__enabled=True).successful
 
 
 def test_deactivation_in_motion_is_refused_and_halts(hand: Hand, planner: NodeProcess) -> None:
