@@ -56,6 +56,13 @@ def begin(numbers: Numbers, point: Point, forces: Forces) -> Trial:
     return Trial(point, forces, met, 0)
 
 
+def left_over(numbers: Numbers, trial: Trial) -> float:
+    """Cost of what met rows still miss, because paths are curved; the next step takes it out."""
+    missed = numbers.end_price * np.abs(trial.point.missed) * trial.met.ends
+    short = np.maximum(-trial.point.clearances, 0.0) * trial.met.clearances
+    return float(missed.sum()) + float(short.sum(axis=0) @ numbers.short_price)
+
+
 class Held:
     """The matrix of an active-set step, factorised at one point; it serves points nearby as well."""
 

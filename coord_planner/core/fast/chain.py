@@ -67,6 +67,18 @@ def roll_out(numbers: Numbers, curvature: np.ndarray, speed: np.ndarray) -> Roll
     )
 
 
+def pulls(
+    r: Rollout, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """What later nodes pull at the pose of each node 1 .. M: forces, and the torque about that node, each (N, M).
+
+    A turn of one arc swings all that follows about the arc's end: dp_m = dt * J (p_m - p_end).
+    """
+    x, y = r.x[:, 1:], r.y[:, 1:]
+    later_x, later_y = _from_the_end(force_x), _from_the_end(force_y)
+    return later_x, later_y, _from_the_end(torque + force_y * x - force_x * y) - later_y * x + later_x * y
+
+
 def arc_slopes(
     r: Rollout, force_x: np.ndarray, force_y: np.ndarray, torque: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
@@ -75,11 +87,8 @@ def arc_slopes(
     Args:
         force_x, force_y, torque: at nodes 1 .. M, shape (N, M).
 
-    A turn of one arc swings all that follows about the arc's end: dp_m = dt * J (p_m - p_end).
     """
-    x, y = r.x[:, 1:], r.y[:, 1:]
-    later_x, later_y = _from_the_end(force_x), _from_the_end(force_y)
-    swing = _from_the_end(torque + force_y * x - force_x * y) - later_y * x + later_x * y
+    later_x, later_y, swing = pulls(r, force_x, force_y, torque)
     along = later_x * r.cos + later_y * r.sin
     across = later_y * r.cos - later_x * r.sin
     return along * r.chord, swing + 0.5 * r.distance * (along * r.chord_slope + across * r.chord)

@@ -20,18 +20,19 @@ from .margins import (
     UNDER,
     UPPER,
     Layout,
+    fit,
     forces_of,
     largest_of_each,
     layout,
     opened,
+    settled,
     spread,
-    widen,
 )
 from .numbers import Numbers
 from .point import Forces, Point, evaluate, slopes
 from .structure import Structure
 
-BARRIER = 1e-2  # product of margin and push with which a solve begins
+BARRIER = 0.2  # product of margin and push with which a solve begins
 
 _STIFFEST, _SOFTEST = 1e-9, 1e12  # compliances beyond these are cut off
 _FIXED = 1e-6  # compliance of limits without room
@@ -80,8 +81,8 @@ class Interior:
         return float(np.sum(x.margins * x.pushes * self._layout.on))
 
     def forces(self, x: Iterate) -> Forces:
-        """Multipliers of the rows."""
-        return forces_of(self._layout, x.pushes, x.fixed)
+        """Multipliers of the rows, those of rows that are not met at 0."""
+        return forces_of(self._layout, settled(self._layout, x.margins, x.pushes), x.fixed)
 
     def step(self, x: Iterate) -> Iterate:
         """One step.
@@ -98,17 +99,18 @@ class Interior:
         products = (x.margins + self._spread(a) * ahead.margins) * (x.pushes + self._spread(b) * ahead.pushes)
         left = max(float(np.sum(products * on)) / self._layout.count, 0.0)
         barrier = max((left / before) ** 3 * before, _SMALLEST)
-        return self._moved(x, system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes))
+        return self._moved(x, system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes), barrier)
 
-    def _moved(self, x: Iterate, move: _Move) -> Iterate:
+    def _moved(self, x: Iterate, move: _Move, barrier: float) -> Iterate:
         a, b = self._lengths(x.margins, move.margins), self._lengths(x.pushes, move.pushes)
         commands = a[:, None] * move.commands
         r, m = x.point.r, x.point.r.turn.shape[1]
         point = evaluate(self._numbers, r.curvature + commands[:, :m], r.speed + commands[:, m:])
         margins = x.margins + self._spread(a) * move.margins
-        widen(self._layout, point, margins)
         pushes = x.pushes + self._spread(b) * move.pushes
-        return Iterate(point, margins, pushes, move.fixed, float(np.minimum(a, b).min()))
+        fit(self._layout, point, margins, barrier)
+        fixed = x.fixed + b[:, None] * (move.fixed - x.fixed)
+        return Iterate(point, margins, pushes, fixed, float(np.minimum(a, b).min()))
 
     def _lengths(self, values: np.ndarray, changes: np.ndarray) -> np.ndarray:
         """The longest step of each robot, at most 1, that leaves all its values above 0, shape (N,).

@@ -19,7 +19,7 @@ UPPER, LOWER, OVER, UNDER, ROOM, SHORT = range(6)
 
 _NO_ROOM = 1e-9  # limits nearer to each other than this are kept as an equation
 _LEAST = 5e-2  # margin of a row that has none when a solve begins
-_KEPT = 0.5  # part of the last push on an end with which a solve begins: poses are new, ends are pulled elsewhere
+_KEPT = 0.9  # part of the last push on an end with which a solve begins: poses are new, ends are pulled elsewhere
 _WITHIN = 0.99  # part of a price that a push may have when a solve begins
 
 
@@ -93,25 +93,34 @@ def opened(
     pulled = np.clip(_KEPT * forces.ends, -_WITHIN * known.price, _WITHIN * known.price)
     np.subtract(known.price, pulled, out=push[OVER])
     np.add(known.price, pulled, out=push[UNDER])
-    for part in (OVER, UNDER):
-        np.maximum(raw_parts[part], barrier / push[part], out=margin[part])
     pressed = np.maximum(forces.clearances, barrier / margin[ROOM])
     np.minimum(pressed, _WITHIN * known.short_price, out=push[ROOM])
     np.subtract(known.short_price, push[ROOM], out=push[SHORT])
+    for part in (OVER, UNDER, SHORT):
+        np.maximum(raw_parts[part], barrier / push[part], out=margin[part])
     off = known.on == 0.0
     margins[off] = pushes[off] = 1.0
     return margins, pushes
 
 
-def widen(known: Layout, point: Point, margins: np.ndarray) -> None:
-    """Widen the margins of ends, in place, to what the ends are where a step along curved paths has led.
+def fit(known: Layout, point: Point, margins: np.ndarray, barrier: float) -> None:
+    """Fit the margins of ends and clearances, in place, to what the rows are where a step along curved paths has led.
 
-    The difference of an end's two margins is known; the one that is too small grows, none becomes narrower.
+    The difference of a row's two margins is known: the one that is too large shrinks, by half at most, the other grows.
+    Both grow where one of an end's is narrower than the barrier asks: such a margin would hold up all that follows.
     """
     margin = known.split(margins)
-    lacking = (point.missed - (margin[OVER] - margin[UNDER])) * known.priced
-    margin[OVER] += np.maximum(lacking, 0.0)
-    margin[UNDER] -= np.minimum(lacking, 0.0)
+    for one, other, values, counts in (
+        (OVER, UNDER, point.missed, known.priced), (ROOM, SHORT, point.clearances, True)
+    ):
+        lacking = (values - (margin[one] - margin[other])) * counts
+        rise, fall = np.maximum(lacking, 0.0), np.maximum(-lacking, 0.0)
+        less_other, less_one = np.minimum(rise, 0.5 * margin[other]), np.minimum(fall, 0.5 * margin[one])
+        margin[one] += rise - less_other - less_one
+        margin[other] += fall - less_one - less_other
+    narrow = np.maximum(barrier / known.price - np.minimum(margin[OVER], margin[UNDER]), 0.0)
+    margin[OVER] += narrow
+    margin[UNDER] += narrow
 
 
 def largest_of_each(numbers: Numbers, known: Layout, values: np.ndarray) -> np.ndarray:
@@ -135,6 +144,19 @@ def spread(numbers: Numbers, known: Layout, values: np.ndarray) -> np.ndarray:
     part[OVER][:] = part[UNDER][:] = values[:, None]
     part[ROOM][:] = part[SHORT][:] = np.min(values[numbers.pairs], axis=1)[:, None]
     return found
+
+
+def settled(known: Layout, margins: np.ndarray, pushes: np.ndarray) -> np.ndarray:
+    """Pushes as they would be at the end: of each margin and push the smaller one is taken to vanish; shape (L,)."""
+    kept = np.where(pushes > margins, pushes, 0.0)
+    push = known.split(kept)
+    # Of an end both entries are parts of one price; so are the two of a clearance.
+    at_most = push[OVER] == 0.0
+    at_least = push[UNDER] == 0.0
+    push[OVER][at_least], push[UNDER][at_most] = 2.0 * known.price[at_least], 2.0 * known.price[at_most]
+    push[SHORT][:] = np.where(push[ROOM] == 0.0, known.short_price, push[SHORT])
+    push[ROOM][:] = known.short_price - push[SHORT]
+    return kept
 
 
 def forces_of(known: Layout, pushes: np.ndarray, fixed: np.ndarray) -> Forces:

@@ -57,20 +57,25 @@ def excess(numbers: Numbers, point: Point) -> float:
     return max(0.0, float(over.max()), float(under.max()))
 
 
+def pose_forces(numbers: Numbers, point: Point, forces: Forces) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Slopes of the alignment and of sum(forces * rows) by the poses x, y, heading at nodes 1 .. M, each (N, M)."""
+    torque = objective.aligning_torque(numbers, point.r)
+    force_x, force_y = np.zeros((2,) + torque.shape)
+    force_x[:, -1] += forces.ends[:, 0]
+    force_y[:, -1] += forces.ends[:, 1]
+    torque[:, -1] += forces.ends[:, 2]
+    if point.sight is not None:
+        clearance.push(numbers, point.sight, -forces.clearances, force_x, force_y, torque)
+    return force_x, force_y, torque
+
+
 def slopes(numbers: Numbers, point: Point, forces: Forces) -> np.ndarray:
     """Slopes of the smooth cost and of sum(forces * rows), by the commands (curvatures, then speeds), shape (N, 2M).
 
     Clearances count negative: they push apart.
     """
     r = point.r
-    torque = objective.aligning_torque(numbers, r)
-    force_x, force_y = np.zeros((2,) + r.turn.shape)
-    force_x[:, -1] += forces.ends[:, 0]
-    force_y[:, -1] += forces.ends[:, 1]
-    torque[:, -1] += forces.ends[:, 2]
-    if point.sight is not None:
-        clearance.push(numbers, point.sight, -forces.clearances, force_x, force_y, torque)
-    by_curvature, by_speed = command_slopes(numbers, r, *arc_slopes(r, force_x, force_y, torque))
+    by_curvature, by_speed = command_slopes(numbers, r, *arc_slopes(r, *pose_forces(numbers, point, forces)))
     turning, leaving = objective.mean_slopes(numbers, r)
     found = limits.pulled(numbers, r.curvature, r.speed, forces.limits)
     m = len(numbers.h)

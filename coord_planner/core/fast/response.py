@@ -18,6 +18,8 @@ class Response:
         mean_start: the same by what is reached and commanded at node 0, shape (U, M, 2).
         reached: what is reached at nodes 1 .. M, by the commands at nodes 1 .. M, shape (U, M, M).
         reached_start: by what is reached and commanded at node 0, shape (U, M, 2).
+        fading: what is reached at a node by what is reached at an earlier one, nodes 1 .. M, shape (U, M, M).
+        lag, decay: of each robot in each interval, lag / h and exp(-h / lag), shape (N, M).
     """
 
     which: np.ndarray
@@ -25,6 +27,9 @@ class Response:
     mean_start: np.ndarray
     reached: np.ndarray
     reached_start: np.ndarray
+    fading: np.ndarray
+    lag: np.ndarray
+    decay: np.ndarray
 
     def forward(self, matrix: np.ndarray, values: np.ndarray) -> np.ndarray:
         """matrix @ values for each robot; matrix (U, A, B), values (N, B) -> (N, A)."""
@@ -59,6 +64,7 @@ def response(intervals: np.ndarray, lag: np.ndarray) -> Response:
     q = (lag / h)(1 - e); the mean over the interval is that of the command, less lag * (change of reached) / h.
     """
     lags, which = np.unique(lag, return_inverse=True)
+    which = which.reshape(-1)
     m = len(intervals)
     late = lags[:, None] > 0
     # Relative to h: where there is no lag, e and q are 0 and the machine is where it was told to be.
@@ -81,6 +87,7 @@ def response(intervals: np.ndarray, lag: np.ndarray) -> Response:
     mean[:, steps, steps + 1] += 0.5
     mean[:, steps, steps + 2] += 0.5
     return Response(
-        which.reshape(-1), np.ascontiguousarray(mean[:, :, 2:]), mean[:, :, :2],
+        which, np.ascontiguousarray(mean[:, :, 2:]), mean[:, :, :2],
         np.ascontiguousarray(reached[:, :, 2:]), reached[:, :, :2],
+        fading, ratio[which], e[which],
     )

@@ -11,7 +11,7 @@ import numpy as np
 from ...errors import SolveError
 from ..fleet import Fleet
 from ..plan import Plan
-from ..problem import Problem
+from ..problem import POSE, Problem
 from ..solver import Start
 from . import active, vectors
 from .interior import Interior
@@ -25,7 +25,7 @@ ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step
 
 _KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
 _ACTIVE_STEPS = 5
-_STEPS = 25
+_STEPS = 40
 _WANDERING = 6  # rows a robot that change in one step: the sets are lost
 _OVERSTATED = 3.0  # what is open in an interior-point iterate overstates the gap by about this
 _LEFT_OF_LAST = 0.5  # part of what the last interior-point step saved that another may still save
@@ -92,7 +92,10 @@ class TickSolver:
         size = vectors.sizes(problem)
         known = numbers(problem, self._fleet_numbers(problem.fleet))
         order = self._structure(problem)
-        curvature, speed = vectors.commands(size, start.vector)
+        curvature, speed = (
+            np.clip(commands, known.lower[i], known.upper[i])
+            for i, commands in enumerate(vectors.commands(size, start.vector))
+        )
         forces = None if start.multipliers is None else vectors.forces(size, *start.multipliers)
         constant = constant_blocks(known)
         held = None
@@ -138,8 +141,8 @@ class TickSolver:
 
 def _worth_trying(known: Numbers, forces: Forces) -> bool:
     """Whether the last multipliers tell which rows are met: where ends could not be reached, fresh poses change all."""
-    dear = (np.abs(forces.ends) > 0.5 * known.end_price) & (known.end_price > 0)
-    return not dear.any() and not (forces.clearances > 0).any()
+    dear = np.abs(forces.ends[:, POSE]) >= known.end_price[:, POSE]
+    return not (dear & (known.end_price[:, POSE] > 0)).any() and not (forces.clearances > 0).any()
 
 
 def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Found:
@@ -166,22 +169,22 @@ def _active_steps(
     known = ready.numbers
     trial = active.begin(known, point, forces)
     held = ready.held
-    costs = [cost(known, point)]
+    before = [cost(known, point), np.inf]  # of the last step and of the one before it, less what curved paths left over
     for step in range(1, _ACTIVE_STEPS + 1):
         held = _held(ready, held, trial)
         trial = held.step(known, trial)
-        costs.append(cost(known, trial.point))
-        if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(costs[-1]):
+        reached, left_over = cost(known, trial.point), active.left_over(known, trial)
+        if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(reached):
             break
+        last, saved = abs(before[0] - reached + left_over), abs(before[1] - before[0])
+        before = [reached - left_over, before[0]]
         if trial.changed == 0 and excess(known, trial.point) < _KEPT_WITHIN:
-            last = abs(costs[-1] - costs[-2])
-            falling = last / max(abs(costs[-2] - costs[-3]), 1e-300) if step > 1 else 0.5
-            gap = last * min(falling, 0.5) / max(costs[-1], 1e-9)
+            gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, 1e-9)
             if gap <= ENOUGH:
-                return _Found(trial.point, trial.forces, costs[-1], _KEPT_WITHIN, gap, step)
+                return _Found(trial.point, trial.forces, reached, _KEPT_WITHIN, gap, step)
         if clock() >= deadline:
             break
-    return _Found(trial.point, trial.forces, costs[-1], np.inf, np.inf, len(costs) - 1)
+    return _Found(trial.point, trial.forces, reached, np.inf, np.inf, step)
 
 
 def _held(ready: Prepared, held: active.Held | None, trial: active.Trial) -> active.Held:
@@ -200,7 +203,12 @@ def _interior_steps(
     best: _Found | None = None
     before = np.inf
     for step in range(steps + 1, steps + _STEPS + 1):
-        x = interior.step(x)
+        try:
+            x = interior.step(x)
+        except SolveError:
+            if best is None:
+                raise
+            break
         reached = cost(ready.numbers, x.point)
         gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, 1e-9)
         before = reached
@@ -228,5 +236,5 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
         pairs=problem.watch.pairs, missed=np.abs(found.point.missed) * priced,
         solved=found.gap <= ENOUGH and found.passed <= _KEPT_WITHIN, solve_time=took,
         iterations=found.steps, vector=vectors.primal(states, found.point, short, priced),
-        multipliers=vectors.multipliers(known, found.forces, size),
+        multipliers=vectors.multipliers(known, found.point, found.forces, size),
     )

@@ -5,11 +5,14 @@ from __future__ import annotations
 import attrs
 import numpy as np
 
-from ..problem import CURVATURE_COMMAND, SPEED_COMMAND, STATES, Problem
+from ..problem import CURVATURE, CURVATURE_COMMAND, SPEED_COMMAND, STATES, Problem
+from . import objective
+from .chain import arc_slopes, command_slopes, pulls
 from .numbers import Numbers
-from .point import Forces, Point
+from .point import Forces, Point, pose_forces
 
 _STATE_COUNT = len(STATES)
+_FAINT, _LARGEST = 1e-4, 1e4  # multipliers of limits outside this tell nothing about what is met
 
 
 @attrs.frozen(eq=False)
@@ -90,8 +93,10 @@ def primal(states: np.ndarray, point: Point, short: np.ndarray, priced: np.ndarr
     ])
 
 
-def multipliers(numbers: Numbers, found: Forces, size: Sizes) -> tuple[np.ndarray, np.ndarray]:
-    """Multipliers of bounds and rows in the layout and with the signs of CasADi; those of the motion are left at 0."""
+def multipliers(
+    numbers: Numbers, point: Point, found: Forces, size: Sizes
+) -> tuple[np.ndarray, np.ndarray]:
+    """Multipliers of bounds and rows in the layout and with the signs of CasADi; those of the first node are 0."""
     n, m = size.robots, size.intervals
     states = np.zeros((_STATE_COUNT, m + 1, n))
     limit = found.limits.transpose(0, 2, 1)
@@ -101,10 +106,38 @@ def multipliers(numbers: Numbers, found: Forces, size: Sizes) -> tuple[np.ndarra
         (found.ends - numbers.end_price).T.ravel(), (-found.ends - numbers.end_price).T.ravel(),
     ])
     rows = np.concatenate([
-        np.zeros(_STATE_COUNT * n * m), limit[4:].ravel(), -found.clearances.T.ravel(), found.ends.T.ravel()
+        costates(numbers, point, found).transpose(0, 2, 1).ravel(), limit[4:].ravel(),
+        -found.clearances.T.ravel(), found.ends.T.ravel(),
     ])
     return bounds, rows
 
 
+def costates(numbers: Numbers, point: Point, found: Forces) -> np.ndarray:
+    """Multipliers of the motion over each interval, in the order of STATES, shape (7, N, M).
+
+    Each makes the Lagrangian stationary: by the pose and by what is reached at the interval's end, and by its rate.
+    """
+    r = point.r
+    forces = pose_forces(numbers, point, found)
+    by_mean = command_slopes(numbers, r, *arc_slopes(r, *forces))
+    own = objective.mean_slopes(numbers, r)
+    answers, prices = (numbers.curvature, numbers.speed), (numbers.price_curvature_rate, numbers.price_acceleration)
+    costate = np.empty((_STATE_COUNT,) + r.turn.shape)
+    np.negative(pulls(r, *forces), out=costate[:3])
+    for i, (answer, price) in enumerate(zip(answers, prices)):
+        pull = answer.lag * (by_mean[i] + own[i])
+        by_reached = -pull
+        by_reached[:, :-1] += pull[:, 1:]
+        by_reached[:, -1] += found.ends[:, CURVATURE + i]
+        reached = -answer.backward(answer.fading, by_reached)
+        rate = point.limits[2 + i]
+        costate[CURVATURE + i] = reached
+        costate[CURVATURE_COMMAND + i] = (
+            answer.lag * (1.0 - answer.decay) * reached + (price * numbers.cost_h * rate + found.limits[2 + i]) / numbers.h
+        )
+    return costate
+
+
 def _without_faint(values: np.ndarray) -> np.ndarray:
-    return np.where(np.abs(values) < 1e-4, 0.0, values)
+    size = np.abs(values)
+    return np.where((size > _FAINT) & (size < _LARGEST), values, 0.0)
