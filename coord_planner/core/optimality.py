@@ -89,7 +89,7 @@ class Check:
             return f"nothing better nearby: yes, to {rounded_up(self.residual)}{flat}"
         if self.residual <= CLEAN:
             return f"nothing better nearby: no, {self.falling} of the ways to change it cost less"
-        return f"nothing better nearby: not known, since the solution itself is only good to {rounded_up(self.residual)}"
+        return f"nothing better nearby: not known, the solution itself is only good to {rounded_up(self.residual)}"
 
 
 def rounded_up(value: float) -> str:

@@ -95,7 +95,7 @@ def _mean_moment(solved: Solved, found: Costates) -> np.ndarray:
     length = solved.speed * solved.intervals
     rest = np.zeros(length.shape + (2,))
     for part, weight in zip((_NODES + 1) / 2, _WEIGHTS / 2):
-        x, y, _ = se2.arc(*np.moveaxis(start, -1, 0), part * length, part * length * solved.curvature)
+        x, y, _ = se2.arc(start[..., 0], start[..., 1], start[..., 2], part * length, part * length * solved.curvature)
         rest += weight * (end[..., :2] - np.stack([x, y], axis=-1))
     p = found.force
     return found.before[:, 1:, 2] + rest[..., 0] * p[..., 1] - rest[..., 1] * p[..., 0]

@@ -246,8 +246,8 @@ def _build(n: int, m: int, edges: tuple[tuple[int, int], ...]) -> Program:
 @lru_cache(maxsize=4)
 def _solver(n: int, m: int, edges: tuple[tuple[int, int], ...]) -> ca.Function:
     built = _build(n, m, edges)
-    return ca.nlpsol("solve", "ipopt", {"x": built.x, "p": built.p, "f": built.f, "g": built.g},
-                     {**QUIET, "ipopt": OPTIONS})
+    settings: dict[str, Any] = {**QUIET, "ipopt": OPTIONS}
+    return ca.nlpsol("solve", "ipopt", {"x": built.x, "p": built.p, "f": built.f, "g": built.g}, settings)
 
 
 def _numbers(problem: HeisenbergProblem, ends: np.ndarray) -> np.ndarray:

@@ -58,8 +58,9 @@ def _winding(problem: DirectProblem) -> Iterator[Obstacle]:
     """More turning than the limits allow in the time."""
     fastest, duration = problem.speeds.fastest, problem.duration
     turns = np.abs(problem.ends[:, 2] - problem.starts[:, 2])
-    for name, rate in (("max_curvature", problem.caps.max_curvature * fastest),
-                       ("max_turn_rate", problem.caps.max_turn_rate), ("max_lateral_acceleration", _by_lateral(problem))):
+    rates = {"max_curvature": problem.caps.max_curvature * fastest, "max_turn_rate": problem.caps.max_turn_rate,
+             "max_lateral_acceleration": _by_lateral(problem)}
+    for name, rate in rates.items():
         for k in np.flatnonzero(turns > rate * duration * (1 + _TINY)):
             yield Obstacle(name, (problem.names[k],),
                            f"{problem.names[k]}: it has to turn by {turns[k]:.4g} rad, and its {name} of "
@@ -133,7 +134,8 @@ def in_the_way(problem: DirectProblem, nearest: Solved) -> tuple[Obstacle, ...]:
         off = " and ".join(parts)
         about = ("the length of its way, which duration and speed give" if limit == "duration"
                  else f"its {limit} of {_figure(problem, limit, int(k)):g}")
-        found.append(Obstacle(limit, (name,), f"{name} misses its end by {off} in the nearest plan found; {about} stands in the way"))
+        found.append(Obstacle(
+            limit, (name,), f"{name} misses its end by {off} in the nearest plan found; {about} stands in the way"))
     return tuple(found)
 
 

@@ -16,9 +16,14 @@ def _rows(value: object) -> np.ndarray:
 
 
 class _Graph(Protocol):
-    names: tuple[str, ...]
-    edges: np.ndarray
-    weights: np.ndarray
+    @property
+    def names(self) -> tuple[str, ...]: ...
+
+    @property
+    def edges(self) -> np.ndarray: ...
+
+    @property
+    def weights(self) -> np.ndarray: ...
 
 
 def laplacian_of(problem: _Graph) -> np.ndarray:

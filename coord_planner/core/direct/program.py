@@ -140,7 +140,8 @@ def _intervals(v: Named, shape: DirectShape) -> Any:
 
 def _steps(v: Named, speed: Any, h: Any) -> Named:
     distance = speed * ca.repmat(h, speed.shape[0], 1)
-    ends = se2.arc(*(v[name][:, :-1] for name in POSE), distance, distance * v["curvature"])
+    x, y, theta = (v[name][:, :-1] for name in POSE)
+    ends = se2.arc(x, y, theta, distance, distance * v["curvature"])
     return {f"step_{name}": v[name][:, 1:] - end for name, end in zip(POSE, ends)}
 
 

@@ -10,8 +10,8 @@ import casadi as ca
 import numpy as np
 
 from .. import outline, se2
-from . import program as programs
 from ..theory.search import resampled
+from . import program as programs
 from .problem import DirectProblem
 from .program import DirectShape, Lines, Program
 
@@ -59,15 +59,16 @@ class Guess:
         ends = np.cumsum((0, *self.counts))
         pieces = [[resampled(values[:, a:b], count) for a, b, count in zip(ends, ends[1:], counts)]
                   for values in (self.curvature, self.speed)]
-        return Guess(*(np.concatenate(piece, axis=1) for piece in pieces), counts, self.spans)
+        curvature, speed = (np.concatenate(piece, axis=1) for piece in pieces)
+        return Guess(curvature, speed, counts, self.spans)
 
 
 @attrs.frozen(eq=False)
 class Solved:
     """What the solver returned for a problem in its own units; whether it holds is for others to find out.
 
-    ``gears`` (N, M) are those that were prescribed. ``vector``, ``bounds`` and ``rows`` are the primal vector and the multipliers of bounds and rows, with the sign
-    that makes the Lagrangian f + rows . g + bounds . x.
+    ``gears`` (N, M) are those that were prescribed. ``vector``, ``bounds`` and ``rows`` are the primal vector and the
+    multipliers of bounds and rows, with the sign that makes the Lagrangian f + rows . g + bounds . x.
     """
 
     problem: DirectProblem
@@ -145,7 +146,8 @@ def solver_of(shape: DirectShape) -> ca.Function:
     """The compiled solver of a shape, and with it the functions of its program."""
     built = programs.build(shape)
     nlp = {"x": built.x, "p": built.p, "f": built.f, "g": built.g}
-    return ca.nlpsol("solve", "ipopt", nlp, {**QUIET, "ipopt": OPTIONS})
+    settings: dict[str, Any] = {**QUIET, "ipopt": OPTIONS}
+    return ca.nlpsol("solve", "ipopt", nlp, settings)
 
 
 def solve(problem: DirectProblem, guess: Guess, *, soft: bool = False, lines: Optional[Lines] = None) -> Solved:
@@ -183,8 +185,8 @@ def _once(problem: DirectProblem, shape: DirectShape, lines: Lines, guess: Guess
     stats = solver.stats()
     vector, bounds, rows = (np.asarray(result[name]).ravel() for name in ("x", "lam_x", "lam_g"))
     finite = bool(np.isfinite(vector).all() and np.isfinite(rows).all())
-    return Solved(problem, shape, lines, gears, vector, bounds, rows, float(result["f"]), bool(stats["success"]) and finite,
-                  str(stats["return_status"]), int(stats["iter_count"]))
+    return Solved(problem, shape, lines, gears, vector, bounds, rows, float(result["f"]),
+                  bool(stats["success"]) and finite, str(stats["return_status"]), int(stats["iter_count"]))
 
 
 def _start(problem: DirectProblem, shape: DirectShape, guess: Guess) -> np.ndarray:
