@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 # make demo    six simulated robots turn together under the real nodes; the page is in out/demo
 # make test    everything that must hold: lint, types, unit, ros, colcon (each is a target of its own)
 # make clean   away with .venv and all that was built

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Installs coord_planner: with pip beside any Python, with colcon into a ROS 2 workspace."""
 
 import os

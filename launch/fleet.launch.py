@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The planner for robots in the field.
 
     ros2 launch coord_planner fleet.launch.py params:=/path/to/site.yaml namespace:=yard

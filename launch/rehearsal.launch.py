@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The planner with simulated robots: the same planner, the same parameter file, nothing that can be hurt.
 
     ros2 launch coord_planner rehearsal.launch.py

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How hypothesis searches: the same examples every time, unless asked to look for new ones."""
 
 from hypothesis import settings

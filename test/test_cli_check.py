@@ -171,7 +171,7 @@ def test_exit_status_and_output_follow_what_happened(monkeypatch: pytest.MonkeyP
 def test_demo_without_ros_says_what_to_install(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr("coord_planner.commands.demo.find_spec", lambda _name: None)
     status, output = call("demo")
-    assert status == 2 and len(output.splitlines()) == 2 and "coord-planner[ros]" in output
+    assert status == 2 and len(output.splitlines()) == 2 and "'.[ros]'" in output
 
 
 def test_results_that_cannot_be_written_are_told_before_the_run(tmp_path: Path) -> None:

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The launch files under the real launch and launch_ros, where these are installed (they are not on PyPI)."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The order of the rooms: each imports only from rooms above it, and only ros/ knows ROS."""
 
 import ast

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is promised to pip, colcon and rosdep, and that an installed copy does what it promises."""
 
 import ast

@@ -15,7 +15,7 @@ from .targets import prepare_folder
 
 _NO_ROS = (
     "ROS 2 is not installed for this Python{reason}, and the demo runs real ROS nodes.\n"
-    "Install it with `pip install 'coord-planner[ros]'`, or try `coord-planner simulate`, which needs no ROS."
+    "Install it with `pip install '.[ros]'` in the source folder, or try `coord-planner simulate`, which needs no ROS."
 )
 
 

@@ -33,6 +33,9 @@ def simulate(
     page: Annotated[
         Optional[Path], typer.Option("--page", metavar="FILE", help="Also write a page to look at (HTML).")
     ] = None,
+    picture: Annotated[
+        Optional[Path], typer.Option("--picture", metavar="FILE", help="Also write a still picture of the turn (SVG).")
+    ] = None,
 ) -> None:
     """Closed loop without ROS: does the manoeuvre keep its spacing, every limit and the site's rules?"""
     with errors_reported():
@@ -41,13 +44,15 @@ def simulate(
         configuration.all_starts()
         if page is not None:
             prepare_file(page, "--page")
+        if picture is not None:
+            prepare_file(picture, "--picture")
         try:
             run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
         except RefusedError as refused:
             if as_json:
                 write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
             raise
-        _report(run, as_json, page)
+        _report(run, as_json, page, picture)
 
 
 def _configured(params: str, entries: list[str]) -> config.Configuration:
@@ -70,7 +75,7 @@ def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
         return rehearse(configuration, manoeuvre, seed=seed, progress=lambda part: bar.update(task, completed=part))
 
 
-def _report(run: Run, as_json: bool, page: Path | None) -> None:
+def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) -> None:
     from ..record.metrics import summary
 
     figures = summary(run)
@@ -83,6 +88,11 @@ def _report(run: Run, as_json: bool, page: Path | None) -> None:
 
         write_page(run, page)
         say(f"The page is in {page}.")
+    if picture is not None:
+        from ..record.picture import write_picture
+
+        write_picture(run, picture)
+        say(f"The picture is in {picture}.")
     failures = _failures(run, figures)
     if failures:
         say(f"{run.manoeuvre} did not hold: {'; '.join(failures)}.")

@@ -45,7 +45,7 @@ class Configuration:
         flat: what was given, by dotted key, each value of its kind.
         settings, fleet, manoeuvres: what the pure planning code needs.
         edges: (name, name, weight) of the neighbour graph.
-        frame, fleet_name: ``fleet.frame`` and ``fleet.name``.
+        frame, fleet_name, invented: ``fleet.frame``, ``fleet.name`` and ``fleet.invented``.
         connections: by robot.
         simulation: how imperfect simulated robots are.
         starts: (x, y, heading) by robot; robots without a start are absent.
@@ -61,11 +61,17 @@ class Configuration:
     manoeuvres: Mapping[str, Manoeuvre]
     frame: str
     fleet_name: str
+    invented: bool
     connections: Mapping[str, Connection]
     simulation: Simulation
     starts: Mapping[str, Pose]
     enabled: frozenset[str]
     activate_on_start: bool
+
+    @property
+    def driven(self) -> Fleet:
+        """The robots that are enabled: those that the planner drives."""
+        return Fleet(tuple(robot for robot in self.fleet.robots if robot.name in self.enabled))
 
     @property
     def graph(self) -> NeighbourGraph:

@@ -23,6 +23,7 @@ class FleetWords:
 
     frame: str = parameter("map", "the frame that all poses are in")
     name: str = parameter("fleet", "name of the fleet, in status messages and in the heartbeat")
+    invented: bool = parameter(False, "true: site and robots are made up, and pages made of them say so")
 
 
 @attrs.frozen

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import networkx as nx
 import numpy as np
 
 from ..core.manoeuvre import ToEnds, work_out
@@ -70,21 +69,12 @@ def _refusal(configuration: Configuration, name: str) -> list[str]:
     if any(robot not in configuration.starts for robot in fleet.names):
         return []
     poses = np.array([configuration.starts[robot] for robot in fleet.names])
+    hops = configuration.graph.hops()
     try:
-        work_out(name, configuration.manoeuvres[name], fleet, configuration.settings, poses, 0.0, _hops(configuration))
+        work_out(name, configuration.manoeuvres[name], fleet, configuration.settings, poses, 0.0, hops)
     except RefusedError as refused:
         return [f"{name} would be refused from the starts in this file: {refused}"]
     return []
-
-
-def _hops(configuration: Configuration) -> np.ndarray:
-    """Edges on the shortest way from robot to robot, shape (N, N); inf where there is none."""
-    names = configuration.fleet.names
-    hops = np.full((len(names), len(names)), np.inf)
-    for source, reached in nx.all_pairs_shortest_path_length(configuration.graph.networkx()):
-        for target, count in reached.items():
-            hops[names.index(source), names.index(target)] = count
-    return hops
 
 
 def _simulation(configuration: Configuration) -> list[str]:

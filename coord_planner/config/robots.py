@@ -96,7 +96,8 @@ def build_robot(robot: RobotValues, complaints: Complaints) -> tuple[Robot, Conn
     connection: Connection = robot.group(Connection)
     footprint: Footprint = robot.group(Footprint)
     shifted = attrs.evolve(footprint, footprint_offset_x=footprint.footprint_offset_x + connection.pose_offset_x)
-    return Robot(robot.name, limits, shifted, robot.group(Response)), connection, robot.group(Place)
+    machine = Robot(robot.name, limits, shifted, robot.group(Response), connection.command_timeout)
+    return machine, connection, robot.group(Place)
 
 
 def _check_drive(robot: RobotValues, complaints: Complaints) -> None:

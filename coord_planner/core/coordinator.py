@@ -7,29 +7,33 @@ from collections.abc import Callable, Mapping
 from typing import Any, Optional
 
 import attrs
-import networkx as nx
 import numpy as np
 
 from ..errors import CoordPlannerError, RefusedError, SettingsError, SolveError
-from . import gate, manoeuvre, outline, reference, rules, solver, stopping
+from . import gate, manoeuvre, reference, rules, solver, stopping
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
+from .judge import SHORT, Judge, View
 from .manoeuvre import Manoeuvre, Task
-from .messages import Answer, Caution, Command, Decision, Level, PoseSample, Snapshot, State
+from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
+from .motion import lags
 from .observer import Estimate, Observer
-from .plan import Plan, near_pairs
-from .problem import POSE, SPEED_COMMAND
+from .plan import Plan
+from .problem import POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared, Pursuit
 from .reference import Reference
-from .settings import Settings
+from .settings import Settings, SiteRules
+from .silence import Silence
+from .silence import worst as worst_silence
 from .tick import usable
 
-_KEEP_PLAN = 1.0  # seconds for which an old plan is driven on when no new one comes
 _STANDING = 5e-3  # m/s
+_SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
+Solve = Callable[[Problem, solver.Start, bool, float], Plan]
 
 
 @attrs.frozen(eq=False)
@@ -39,6 +43,7 @@ class Outcome:
     token: int
     reference: Optional[Reference]
     reason: str
+    silence: Optional[Silence] = None
 
 
 Job = Callable[[], Outcome]  # pure, slow, may run in any thread; its outcome goes to Coordinator.deliver
@@ -52,6 +57,7 @@ class _Request:
     kind: str  # "begin", "resume" or "change"
     answered: Answered
     request_id: str
+    made_for: tuple[Fleet, NeighbourGraph, Settings]
 
 
 class Coordinator:
@@ -68,12 +74,14 @@ class Coordinator:
     Args:
         budget: wall time that one tick's solve may take, seconds; ``settings.horizon.budget`` when left out. A
             rehearsal gives more, so that its numbers do not depend on how busy the machine is.
+        solve: solves a tick: (problem, start, warm, budget) -> Plan.
     """
 
     def __init__(
         self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre],
-        budget: Optional[float] = None,
+        budget: Optional[float] = None, solve: Solve = solver.solve,
     ) -> None:
+        self._solve_tick = solve
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
         self._budget = settings.horizon.budget if budget is None else budget
@@ -92,7 +100,9 @@ class Coordinator:
         self._planned_at = 0.0
         self._ended_at = 0.0
         self._refused_change = ""
-        self._decision = Decision(0.0, State.IDLE)
+        self._silence: Optional[Silence] = None
+        self._watchman = Judge()
+        self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
     def state(self) -> State:
@@ -117,6 +127,12 @@ class Coordinator:
         """The reference in force."""
         return self._pursuit.reference if self._pursuit is not None else None
 
+    def cannot_change_members(self) -> str:
+        """Why no robot can join or leave just now; "" when it can."""
+        if self._state in (State.IDLE, State.ENDED):
+            return ""
+        return f"robots join or leave only while the fleet is idle, and it is {self._state.value}"
+
     # Requests
 
     def begin(
@@ -139,7 +155,7 @@ class Coordinator:
             states[:, 3:] = 0.0
 
             def make() -> Reference:
-                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, hops(graph))
+                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops())
                 return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
@@ -172,12 +188,13 @@ class Coordinator:
                 answered(Answer(False, str(error)))
                 return
             fleet, graph, settings = self._fleet, self._graph, self._settings
-            task, states = self._pursuit.reference.task, estimate.states
+            old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
 
             def make() -> Reference:
-                rest = manoeuvre.go_on(task, fleet, settings, states[:, POSE], hops(graph))
-                return reference.make(rest, fleet, graph, settings, states)
+                left = reference.ways_left(old, states[:, POSE], since)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left)
+                return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
 
@@ -199,11 +216,17 @@ class Coordinator:
         Limits bind the gate and the next tick at once. In motion the rest of the reference is made anew and
         swapped in when the group reaches the moment from which it was made; the decision then shows the
         coupling in force.
+
+        Raises:
+            RefusedError: robots would join or leave while the fleet is not idle; nothing has changed.
         """
         with self._lock:
+            self._check_members(fleet)
             self._settings = settings or self._settings
             self._fleet = fleet or self._fleet
-            self._graph = graph or self._graph
+            self._graph = (graph or self._graph).relative_to(self._fleet.names)
+            if self._fleet.names != self._decision.names:
+                self._start_afresh()
             self._observer.configure(self._fleet, self._settings.poses)
             if self._state is State.MOVING and self._pursuit is not None:
                 self._remake(now, self._pursuit)
@@ -233,10 +256,13 @@ class Coordinator:
                 request.answered(Answer(False, outcome.reason, request.request_id))
                 return
             self._start(outcome.reference, now)
+            self._silence = outcome.silence
             text = f"{outcome.reference.task.name} takes {outcome.reference.end:.1f} s"
             if np.isfinite(outcome.reference.clearance):
                 text += f", smallest clearance {outcome.reference.clearance:.2f} m"
             request.answered(Answer(True, text, request.request_id))
+            if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
+                self._remake(now, self._pursuit)  # something was changed while it was being made
 
     # The loop
 
@@ -245,19 +271,18 @@ class Coordinator:
         with self._lock:
             cautions: list[Caution] = []
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
-            estimate = self._observer.estimate(snapshot.time, self._planned)
+            estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._settle(snapshot.time)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
-                cautions += self._judge(snapshot, estimate, jumped)
+                cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     prepared = self._prepare(snapshot.time)
         plan = self._solve(prepared, cautions)
         with self._lock:
-            if plan is not None and prepared is not None and self._state is State.MOVING and self._pursuit is not None:
-                self._pursuit.install(prepared, plan, snapshot.time - _SINCE)
-                self._planned_at = snapshot.time
+            if prepared is not None and self._state is State.MOVING and self._pursuit is not None:
+                self._drive(prepared, plan, snapshot.time)
             self._decision = self._decide(snapshot.time, estimate, plan, cautions)
             return self._decision
 
@@ -280,6 +305,18 @@ class Coordinator:
             }
 
     # Requests, inside
+
+    def _check_members(self, fleet: Optional[Fleet]) -> None:
+        reason = self.cannot_change_members()
+        if fleet is not None and fleet.names != self._fleet.names and reason:
+            raise RefusedError(reason, "halt and abandon it first")
+
+    def _start_afresh(self) -> None:
+        """Other robots: nothing that was known of the old ones counts."""
+        self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
+        self._observer = Observer(self._fleet, self._settings.poses, self._history)
+        self._pursuit, self._state, self._reason = None, State.IDLE, ""
+        self._decision = Decision(self._decision.time, State.IDLE, self._fleet.names)
 
     def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
         if name not in self._manoeuvres:
@@ -309,7 +346,15 @@ class Coordinator:
                 f"no fresh pose of {', '.join(stale)} ({self._settings.poses.max_age:g} s allowed)",
                 "check localisation, the topic, its frame and the clocks",
             )
-        unready = sorted(snapshot.not_ready & set(self._fleet.names))
+        if len(self._fleet) > 1 and not self._graph.connected and not self._settings.coupling.may_split:
+            words = " | ".join(" ".join(part) for part in self._graph.components())
+            raise RefusedError(
+                f"the neighbour graph falls into parts that do not copy each other: {words}",
+                "join them by an edge, or set coupling.may_split",
+            )
+        if snapshot.other_planner:
+            raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
+        unready = sorted((snapshot.not_ready | snapshot.silent) & set(self._fleet.names))
         if unready:
             raise RefusedError(f"{', '.join(unready)} not ready to be driven", "make them ready or disable them")
 
@@ -317,16 +362,19 @@ class Coordinator:
         self._token += 1
         token = self._token
         intervals, budget = self._settings.horizon.intervals, self._budget
+        fleet, rules_in_force = self._fleet, self._settings.site_rules
 
         def job() -> Outcome:
             try:
                 made = make()
+                silence = worst_silence(made, fleet)
+                _check_silence(silence, rules_in_force)
             except (RefusedError, SolveError) as error:
                 return Outcome(token, None, str(error))
             solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
-            return Outcome(token, made, "")
+            return Outcome(token, made, "", silence)
 
-        self._request = _Request(token, kind, answered, request_id)
+        self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings))
         self._jobs = [job]
 
     def _cancel(self, why: str) -> None:
@@ -364,7 +412,7 @@ class Coordinator:
         if late:  # it starts from a moment that has passed: make it again from a later one
             self._remake(now, self._pursuit)
         else:
-            self._pursuit.next_reference = outcome.reference
+            self._pursuit.next_reference, self._silence = outcome.reference, outcome.silence
 
     def _start(self, made: Reference, now: float) -> None:
         begins = now + self._lead_time()
@@ -372,7 +420,7 @@ class Coordinator:
         values = np.zeros((len(self._fleet), 2)) if last is None else last[1]
         self._pursuit = Pursuit(made, begins, 0.0, values, self._fleet)
         self._state, self._reason, self._stop = State.MOVING, "", None
-        self._planned_at, self._refused_change = begins, ""
+        self._planned_at, self._refused_change, self._watchman = begins, "", Judge()
 
     # The loop, inside
 
@@ -417,50 +465,19 @@ class Coordinator:
         elif pursuit.reference.task.end_speed > 0.0:
             self._begin_stop(now, "completed", completed=True)
 
-    def _judge(self, snapshot: Snapshot, estimate: Estimate, jumped: tuple[str, ...]) -> list[Caution]:
-        """What goes wrong while moving, and the stops that follow from it."""
-        settings, names, now = self._settings, self._fleet.names, snapshot.time
+    def _judge(self, snapshot: Snapshot, estimate: Estimate) -> list[Caution]:
+        """What goes wrong while moving, and the stop that follows from it."""
         pursuit = self._pursuit
         assert pursuit is not None
-        found = [rules.pose_jumped(settings, name) for name in jumped]
-        found += [
-            rules.pose_old(settings, name, float(age), "the fleet stops")
-            for name, age in zip(names, estimate.age) if age > settings.poses.max_age
-        ]
-        found += [rules.not_ready(settings, name) for name in names if name in snapshot.not_ready]
-        found += self._judge_lag(pursuit)
-        if self._refused_change:
-            found.append(rules.change_refused(settings, self._refused_change))
-        if now - self._planned_at > _KEEP_PLAN:
-            reason = f"no new plan for {now - self._planned_at:.1f} s"
-            found.append(rules.plan_failed(settings, reason, "the fleet stops"))
-        found += self._judge_clearance(estimate)
-        grave = [caution for caution in found if caution.level is not Level.WARN]
+        at = snapshot.time + float(self._history.effect_delay.max())
+        found = self._watchman.look(View(
+            snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
+            1.0 / self._settings.horizon.rate, self._planned_at, self._refused_change, self._silence,
+        ))
+        grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
-            self._begin_stop(now, grave[0].text, completed=False, estimate=estimate)
+            self._begin_stop(snapshot.time, grave[0].text, completed=False, estimate=estimate)
         return found
-
-    def _judge_lag(self, pursuit: Pursuit) -> list[Caution]:
-        found = []
-        allowed = self._settings.progress.max_lag
-        for name, lag in zip(self._fleet.names, pursuit.progress.lag):
-            if lag > allowed:
-                found.append(rules.not_following(self._settings, name, lag, "the fleet stops", Level.ERROR))
-            elif lag > self._settings.progress.dead_band + self._settings.progress.full_lag / 2:
-                found.append(rules.not_following(self._settings, name, lag, "the group slows in step", Level.WARN))
-        return found
-
-    def _judge_clearance(self, estimate: Estimate) -> list[Caution]:
-        poses = estimate.states[:, None, POSE]
-        allowed = self._settings.site_rules.min_clearance
-        gap, pair = outline.closest(
-            outline.outlines(self._fleet.corners(), poses), near_pairs(self._fleet, poses, allowed + 0.5)
-        )
-        # The estimate itself is uncertain: only what is clearly short is called a breach.
-        doubt = self._settings.poses.noise_xy
-        if gap < allowed - doubt:
-            return [rules.clearance_breached(self._settings, self._names(pair), gap, "the fleet stops")]
-        return []
 
     def _prepare(self, now: float) -> Optional[Prepared]:
         pursuit = self._pursuit
@@ -481,15 +498,23 @@ class Coordinator:
             return None
         settings = self._settings
         try:
-            warm = prepared.start.multipliers is not None
-            plan = solver.solve(prepared.problem, prepared.start, warm=True, budget=self._budget)
-            if not usable(prepared.problem, plan) and warm:
-                cautions.append(rules.plan_late(settings, plan.solve_time))
-                return None
+            solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
+            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
+            if plan is None:
+                cautions.append(rules.plan_late(settings, solved.solve_time))
         except SolveError as error:
-            cautions.append(rules.plan_failed(settings, str(error), "the last plan is driven on"))
+            cautions.append(rules.plan_failed(settings, str(error)))
             return None
         return plan
+
+    def _drive(self, prepared: Prepared, plan: Optional[Plan], now: float) -> None:
+        pursuit = self._pursuit
+        assert pursuit is not None
+        if plan is not None:
+            pursuit.install(prepared, plan, now - _SINCE)
+            self._planned_at = now
+        else:
+            pursuit.slow_old_plan(now + float(self._history.effect_delay.max()), self._fleet, now - _SINCE)
 
     def _begin_stop(
         self, now: float, reason: str, *, completed: bool, estimate: Optional[Estimate] = None
@@ -498,9 +523,12 @@ class Coordinator:
         assert pursuit is not None
         estimate = estimate or self._observer.estimate(now, self._planned)
         at = now + float(self._history.effect_delay.max())
-        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate.states, now, estimate.speed_factor)
+        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
-        self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period
+        pursuit.freeze(now)
+        # Machines stand some lags after their commands do; until then nobody is told that the fleet stands.
+        settle = _SETTLE_LAGS * float(lags(self._fleet).max())
+        self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period + settle
         self._state, self._completed = State.STOPPING, completed
         self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
         if self._request is not None and self._request.kind == "change":
@@ -511,25 +539,25 @@ class Coordinator:
         self, now: float, estimate: Estimate, plan: Optional[Plan], cautions: list[Caution]
     ) -> Decision:
         pursuit = self._pursuit
+        tick = pursuit.tick if pursuit is not None else None
+        clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
+        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
+            cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
         common: dict[str, Any] = {
-            "time": now, "state": self._state, "reason": self._reason, "completed": self._completed,
-            "poses": estimate.states[:, POSE], "warnings": tuple(cautions),
+            "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
+            "completed": self._completed, "poses": estimate.states[:, POSE],
+            "warnings": self._watchman.hold(now, cautions),
         }
         if pursuit is None:
             return Decision(**common)
         task = pursuit.reference.task
-        clearance, pair = (np.inf, (-1, -1)) if pursuit.tick is None else pursuit.tick.plan.closest(1)
-        if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - 2e-3:
-            doing = "the plan widens it as far as it can"
-            cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance, doing))
         done = np.clip(pursuit.s(now) / pursuit.reference.end, 0.0, 1.0)
         return Decision(
-            **{**common, "warnings": tuple(cautions)},
-            manoeuvre=task.name, progress=float(done),
+            **common, manoeuvre=task.name, progress=float(done),
             progress_rate=pursuit.pace if self._state is State.MOVING else 0.0,
             coupling=task.coupling, alignment=task.alignment, lag=pursuit.behind,
-            plan_times=np.zeros(0) if pursuit.tick is None else pursuit.tick.plan.times,
-            plan_poses=np.zeros((len(self._fleet), 0, 3)) if pursuit.tick is None else pursuit.tick.plan.poses,
+            plan_times=np.zeros(0) if tick is None else tick.plan.times,
+            plan_poses=np.zeros((len(self._fleet), 0, 3)) if tick is None else tick.plan.poses,
             clearance=float(clearance), clearance_pair=self._names(pair) if np.isfinite(clearance) else None,
             solve_time=0.0 if plan is None else plan.solve_time,
         )
@@ -538,14 +566,16 @@ class Coordinator:
         return self._fleet.names[pair[0]], self._fleet.names[pair[1]]
 
 
-def hops(graph: NeighbourGraph) -> np.ndarray:
-    """Edges on the shortest way from robot to robot, shape (N, N), inf where there is none."""
-    counted = np.full((len(graph.names),) * 2, np.inf)
-    where = {name: k for k, name in enumerate(graph.names)}
-    for name, lengths in nx.all_pairs_shortest_path_length(graph.networkx()):
-        for other, count in lengths.items():
-            counted[where[name], where[other]] = count
-    return counted
+def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
+    if silence is None or not site_rules.refuse_unsafe_silence:
+        return
+    short = site_rules.min_clearance - silence.clearance
+    if short > SHORT:
+        raise RefusedError(
+            f"should the planner fall silent after {silence.instant:.1f} s, {' and '.join(silence.pair)} would come "
+            f"within {silence.clearance:.2f} m of each other, {short:.2f} m short, before both stand",
+            "shorten their command time-outs, lower the speed or widen the spacing",
+        )
 
 
 def _shape(made: Reference) -> solver.Shape:

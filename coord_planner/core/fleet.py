@@ -74,12 +74,13 @@ class Response:
 
 @attrs.frozen
 class Robot:
-    """One machine."""
+    """One machine; ``command_timeout`` is how long it drives on without a command before it brakes, seconds."""
 
     name: str
     limits: Limits = Limits()
     footprint: Footprint = Footprint()
     response: Response = Response()
+    command_timeout: float = 0.5
 
 
 @attrs.frozen
@@ -116,6 +117,10 @@ class Fleet:
     def response(self, name: str) -> np.ndarray:
         """One response constant for every robot, shape (N,), seconds."""
         return np.array([getattr(robot.response, name) for robot in self.robots])
+
+    def timeouts(self) -> np.ndarray:
+        """How long each robot drives on without a command, shape (N,), seconds."""
+        return np.array([robot.command_timeout for robot in self.robots])
 
     def corners(self) -> np.ndarray:
         """Footprint corners in the robots' frames, shape (N, 4, 2), metres."""

@@ -85,6 +85,15 @@ class NeighbourGraph:
         """Psi = (I + chi L)^-1, shape (N, N); with one led robot 0, u_k = (Psi_k0 / Psi_00) u_0."""
         return np.linalg.inv(np.eye(len(self.names)) + coupling * self.laplacian())
 
+    def hops(self) -> np.ndarray:
+        """Edges on the shortest way from robot to robot, shape (N, N), inf where there is none."""
+        counted = np.full((len(self.names),) * 2, np.inf)
+        where = {name: k for k, name in enumerate(self.names)}
+        for name, lengths in nx.all_pairs_shortest_path_length(self.networkx()):
+            for other, count in lengths.items():
+                counted[where[name], where[other]] = count
+        return counted
+
     def relative_to(self, names: tuple[str, ...]) -> NeighbourGraph:
         """The same edges over another list of robots, without edges to robots that are not in it."""
         kept = tuple(edge for edge in self.edges if edge[0] in names and edge[1] in names)

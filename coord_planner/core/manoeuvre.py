@@ -15,6 +15,7 @@ from .fleet import Fleet, weakest
 from .parameter import parameter
 from .profile import SpeedProfile, speed_profile
 from .settings import Settings
+from .watch import margin
 
 # Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
 _COMFORT = 0.7
@@ -22,6 +23,7 @@ _COMFORT = 0.7
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
 _WIDER = 1.12  # a turn of equal radius is laid out this much wider than its tightest, to leave room for corrections
+_SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
 _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
 
 
@@ -123,6 +125,15 @@ class Task:
         full = max(self.profile.speeds[1], 1e-9)
         return np.outer(self.asked, np.diff(along) / np.maximum(np.diff(s), 1e-9) / full)
 
+    def slower(self, stretch: float, settings: Settings) -> Task:
+        """The same task from its beginning in ``stretch`` times the time."""
+        step = settings.horizon.interval
+        arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
+        return attrs.evolve(
+            self, arrival=arrival, duration=arrival + self.duration - self.arrival,
+            pacing=((0.0, arrival), (0.0, self.profile.duration)),
+        )
+
     def profile_time(self, s: np.ndarray) -> np.ndarray:
         """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
         inside = np.interp(s, *self.pacing)
@@ -164,7 +175,9 @@ def work_out(
         named = _named_ends(manoeuvre, fleet)
         ways, ends = _ways_to_ends(fleet, poses, named, neighbours)
         fixed, tightest = manoeuvre.duration, math.inf
-    _check_ends(fleet, settings, named)
+        if fixed > 0.0:
+            _check_duration(name, manoeuvre, fleet, settings, poses, named, speed_now)
+    _check_ends(fleet, settings, named, manoeuvre.speed)
     return lay_out(
         name, fleet, settings, ends, ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
         speed_now=speed_now, duration=fixed, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
@@ -172,12 +185,24 @@ def work_out(
     )
 
 
-def go_on(task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray) -> Task:
-    """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept."""
-    ways, ends = _ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
+def go_on(
+    task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray,
+    left: tuple[Optional[ArcPath], ...],
+) -> Task:
+    """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept.
+
+    Args:
+        left: what is left of each robot's way; None for one that stands off it and needs a new one. (A new one
+            for everybody would send a robot that stands a finger's breadth past its end round a full circle.)
+    """
+    ways, ends = tuple(way for way in left if way is not None), task.ends
+    if len(ways) < len(left):
+        anew, wound = _ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
+        ways = tuple(new if old is None else old for old, new in zip(left, anew))
+        ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     return lay_out(
         task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
-        duration=0.0, coupling=task.coupling, alignment=task.alignment,
+        duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
     )
 
 
@@ -186,21 +211,19 @@ def lay_out(
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
     max_curvature: float = math.inf,
 ) -> Task:
-    """Times and speeds for ways that are known; RefusedError when a given duration is too short."""
+    """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
+
+    A given duration stretches or squeezes the profile: it is then driven slower or faster than asked.
+    """
     longest = max(way.length for way in ways)
+    if longest < _SHORTEST_WAY:
+        raise RefusedError(f"{name}: every robot is where it is to end already", "ask for something else or abandon it")
     profile = speed_profile(
         longest, speed_now, speed, end_speed,
         _COMFORT * weakest(fleet.limit("max_acceleration")), _COMFORT * weakest(fleet.limit("max_braking")),
     )
     step = settings.horizon.interval
-    needed = profile.duration
-    if 0.0 < duration < needed - 1e-9:
-        raise RefusedError(
-            f"{name}: the longest way, {longest:.2f} m, takes {needed:.1f} s at {speed:g} m/s, and "
-            f"{duration:g} s are given",
-            f"give at least {needed:.1f} s, or 0 to have it worked out",
-        )
-    arrival = step * max(4, math.ceil((duration or needed) / step - 1e-9))
+    arrival = step * max(4, math.ceil((duration or profile.duration) / step - 1e-9))
     # Machines that answer late come to rest late; the end holds the whole state.
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
@@ -351,28 +374,57 @@ def _check_speed(manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings) -> None
                 f"{manoeuvre.speed:g} m/s is asked and {robot.name} may drive {top:g} m/s",
                 f"ask for at most {min(weakest(fleet.limit('max_speed')), cap):g} m/s",
             )
+    if manoeuvre.end_speed > manoeuvre.speed + 1e-9:
+        raise RefusedError(
+            f"{manoeuvre.end_speed:g} m/s is asked at the end and only {manoeuvre.speed:g} m/s on the way there",
+            f"ask for an end speed of at most {manoeuvre.speed:g} m/s",
+        )
+
+
+def _check_duration(
+    name: str, manoeuvre: ToEnds, fleet: Fleet, settings: Settings, poses: np.ndarray, ends: np.ndarray,
+    speed_now: float,
+) -> None:
+    """No way is shorter than the Dubins path of the smallest radius, and none is driven faster than allowed."""
+    for k in np.flatnonzero(~np.isnan(ends[:, 0])):
+        limits = fleet.robots[k].limits
+        way = shortest(_start(poses[k]), _start(ends[k]), 1.0 / limits.max_curvature).length
+        top = min(limits.max_speed, settings.site_rules.max_speed)
+        least = speed_profile(
+            way, speed_now, top, manoeuvre.end_speed, limits.max_acceleration, limits.max_braking
+        ).duration
+        if manoeuvre.duration < least - 1e-9:
+            raise RefusedError(
+                f"{name}: {manoeuvre.duration:g} s are given, and even the shortest way of {fleet.names[k]} to its "
+                f"end, {way:.2f} m at a radius of {1.0 / limits.max_curvature:.2f} m, takes {least:.1f} s at up to "
+                f"{top:g} m/s",
+                f"give at least {least:.1f} s and something for corrections, or 0 to have it worked out",
+            )
 
 
 def _check_start(fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:
     _check_apart(fleet, settings, poses, np.arange(len(fleet)), "stand", "move them apart by hand before it begins")
 
 
-def _check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray) -> None:
+def _check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray, speed: float) -> None:
+    """Ends keep the site's clearance and the plan's margin: whatever is nearer, no plan would end on."""
     placed = np.flatnonzero(~np.isnan(ends[:, 0]))
-    _check_apart(fleet, settings, ends, placed, "would end", "move the ends apart")
+    kept = 2 * float(margin(fleet, settings, speed).max())
+    _check_apart(fleet, settings, ends, placed, "would end", "move the ends apart", kept)
 
 
 def _check_apart(
-    fleet: Fleet, settings: Settings, poses: np.ndarray, which: np.ndarray, verb: str, remedy: str
+    fleet: Fleet, settings: Settings, poses: np.ndarray, which: np.ndarray, verb: str, remedy: str, kept: float = 0.0
 ) -> None:
     polygons = outline.outlines(fleet.corners()[which], poses[which])
     gap, (k, j) = outline.closest(polygons, outline.all_pairs(len(which)))
     allowed = settings.site_rules.min_clearance
-    if gap < allowed - 1e-6:
+    if gap < allowed + kept - 1e-6:
         first, second = fleet.names[which[k]], fleet.names[which[j]]
+        beyond = f" and the planner's margin of {kept:.2f} m" if kept else ""
         raise RefusedError(
-            f"{first} and {second} {verb} {gap:.2f} m apart, {allowed - gap:.2f} m short of the site's "
-            f"smallest clearance of {allowed:g} m",
+            f"{first} and {second} {verb} {gap:.2f} m apart, {allowed + kept - gap:.2f} m short of the site's "
+            f"smallest clearance of {allowed:g} m{beyond}",
             remedy,
         )
 

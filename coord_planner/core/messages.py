@@ -45,12 +45,16 @@ class Snapshot:
     Attributes:
         time: now, seconds on the same clock as the stamps.
         poses: the newest pose of each robot that has sent one; others are absent.
-        not_ready: robots that may not be driven now (emergency stop, manual mode, silent).
+        not_ready: robots that say that they may not be driven now (emergency stop, manual mode).
+        silent: robots that must say that they are ready and have fallen silent.
+        other_planner: who else drives this fleet, as it calls itself; "" when nobody is heard.
     """
 
     time: float
     poses: Mapping[str, PoseSample]
     not_ready: frozenset[str] = frozenset()
+    silent: frozenset[str] = frozenset()
+    other_planner: str = ""
 
 
 class State(str, Enum):
@@ -102,6 +106,7 @@ class Decision:
     Attributes:
         time: of the snapshot, seconds.
         state: what the fleet is doing.
+        names: the robots, in the order of every array here.
         reason: why, in words ("" when there is nothing to say).
         manoeuvre: name of the one in hand, or "".
         progress: part of the manoeuvre done, 0 to 1.
@@ -120,6 +125,7 @@ class Decision:
 
     time: float
     state: State
+    names: tuple[str, ...] = ()
     reason: str = ""
     manoeuvre: str = ""
     progress: float = 0.0

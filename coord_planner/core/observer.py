@@ -23,6 +23,8 @@ _DRIFT = np.array([0.02, 0.02, 0.01, 0.25])
 _RUNNING = 0.4
 _ONE_SIDED = 1.5
 _AFRESH = 0.3
+_FRESH = 0.15  # seconds; up to this age an estimate is as good as the margin of the plan takes it to be
+_SLOWLY = 0.08  # part of the newest in the running mean of squared innovations
 _FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
 
 
@@ -35,12 +37,17 @@ class Estimate:
         speed_factor: part of its expected speed that each robot reaches, shape (N,).
         age: seconds since the last believed pose of each robot, shape (N,), inf for none.
         jumped: robots whose last pose lay further than max_jump from where it was expected.
+        growth: by how much a footprint must grow for doubt about where its robot is, beyond the usual noise, while
+            no pose comes, shape (N,), metres.
+        scatter: how much the poses scatter, in multiples of what the settings say, shape (N,).
     """
 
     states: np.ndarray
     speed_factor: np.ndarray
     age: np.ndarray
-    jumped: tuple[str, ...]
+    jumped: tuple[str, ...] = ()
+    growth: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
+    scatter: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
 
 
 class Observer:
@@ -59,6 +66,7 @@ class Observer:
         self._stamp = np.full(count, -np.inf)
         self._reached = np.zeros((count, 2))  # speed, curvature, before the speed factor
         self._one_sided = np.zeros(count)  # running mean of innovations along the heading, in standard deviations
+        self._squared = np.ones(count)  # running mean of squared innovations, each relative to its variance
 
     def configure(self, fleet: Fleet, settings: Poses) -> None:
         """New limits or noise; what is known about the robots stays."""
@@ -99,7 +107,14 @@ class Observer:
             states[known, :3] = mean[:, :3]
             states[known, 3], states[known, 4] = reached[:, 1], reached[:, 0] * factor[known]
             states[known, 5], states[known, 6] = commands[:, 1], commands[:, 0]
-        return Estimate(states, factor, now - self._stamp, ())
+        growth = self._growth(now, states[:, 4])
+        return Estimate(states, factor, now - self._stamp, (), growth, np.sqrt(self._squared))
+
+    def _growth(self, now: float, speed: np.ndarray) -> np.ndarray:
+        """Two standard deviations of where a robot is, less those of a fresh estimate, shape (N,), metres."""
+        age = np.where(np.isfinite(self._stamp), np.maximum(now - self._stamp - _FRESH, 0.0), 0.0)
+        drifted = _DRIFT[0] ** 2 * age + (np.sqrt(self._cov[:, 3, 3]) * np.nan_to_num(speed) * age) ** 2
+        return 2.0 * np.sqrt(drifted)
 
     def _restart(self, k: int, pose: PoseSample, keep_motion: bool = False) -> None:
         heading = pose.heading
@@ -151,7 +166,10 @@ class Observer:
         innovation[:, 2] = se2.wrap(innovation[:, 2])
         jumps = np.hypot(innovation[:, 0], innovation[:, 1]) > self._settings.max_jump
         cov = self._look_afresh(which, innovation)
-        gain = cov[:, :, :3] @ np.linalg.inv(cov[:, :3, :3] + self._noise())
+        expected = np.linalg.inv(cov[:, :3, :3] + self._noise())
+        relative = np.einsum("ni,nij,nj->n", innovation, expected, innovation) / 3.0
+        self._squared[which] += _SLOWLY * (np.minimum(relative, 100.0) - self._squared[which])
+        gain = cov[:, :, :3] @ expected
         good = ~jumps
         corrected = self._mean[which] + np.einsum("nij,nj->ni", gain, innovation)
         corrected[:, 3] = np.clip(corrected[:, 3], 0.05, 1.5)

@@ -33,11 +33,19 @@ def clearances(polygons: np.ndarray, pairs: np.ndarray) -> np.ndarray:
     return shapely.distance(polygons[pairs[:, 0]], polygons[pairs[:, 1]])
 
 
-def closest(polygons: np.ndarray, pairs: np.ndarray) -> tuple[float, tuple[int, int]]:
-    """Smallest distance over all pairs and moments, and the pair; (inf, (-1, -1)) without pairs."""
+def closest(
+    polygons: np.ndarray, pairs: np.ndarray, growth: np.ndarray | None = None
+) -> tuple[float, tuple[int, int]]:
+    """Smallest distance over all pairs and moments, and the pair; (inf, (-1, -1)) without pairs.
+
+    Args:
+        growth: by how much each outline grows all round, for doubt about where it is, shape (N,), metres.
+    """
     if not len(pairs):
         return float("inf"), (-1, -1)
     each = clearances(polygons, pairs).reshape(len(pairs), -1).min(axis=1)
+    if growth is not None:
+        each = np.maximum(each - growth[pairs].sum(axis=1), 0.0)
     worst = int(np.argmin(each))
     return float(each[worst]), (int(pairs[worst, 0]), int(pairs[worst, 1]))
 

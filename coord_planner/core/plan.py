@@ -71,10 +71,12 @@ class Plan:
         return np.concatenate([pieces.reshape(len(self.states), -1, 3), self.poses[:, -1:]], axis=1)
 
 
-def closest_along(fleet: Fleet, poses: np.ndarray) -> tuple[float, tuple[int, int]]:
+def closest_along(
+    fleet: Fleet, poses: np.ndarray, growth: np.ndarray | None = None
+) -> tuple[float, tuple[int, int]]:
     """Smallest exact clearance and its pair over poses of shape (N, K, 3); pairs that stay far apart are skipped."""
     pairs = near_pairs(fleet, poses, np.inf if poses.shape[0] < 7 else 3.0)
-    return outline.closest(outline.outlines(fleet.corners(), poses), pairs)
+    return outline.closest(outline.outlines(fleet.corners(), poses), pairs, growth)
 
 
 def near_pairs(fleet: Fleet, poses: np.ndarray, gap: float) -> np.ndarray:

@@ -17,9 +17,11 @@ from .reference import Reference
 from .schedule import Schedule, constant, of_plan
 from .settings import Settings
 from .solver import Start
+from .stopping import slowed
 from .tick import Tick
 
 _FALL = 0.9  # part of the weakest brake with which the pace may fall
+_WORTH_SLOWING = 0.98  # part of its pace to which an old plan is slowed at the least
 _SLOW = 0.3  # part of the asked speed below which the pace falls no faster
 
 
@@ -49,7 +51,12 @@ class Pursuit:
         self.next_reference: Optional[Reference] = None
         self._s, self._time = at, begins
         self._updated = begins
+        self._schedule_pace = 1.0
         self.behind = np.zeros(len(fleet))
+
+    def freeze(self, now: float) -> None:
+        """The group leaves its reference for a stop: its progress stays what it is now."""
+        self._s, self._time, self.progress.pace = self.s(now), now, 0.0
 
     @property
     def pace(self) -> float:
@@ -99,6 +106,14 @@ class Pursuit:
         """Drive a solved plan from its first node on."""
         self.tick = Tick(plan, prepared.s, prepared.reference)
         self.schedule = self.schedule.splice(of_plan(plan), float(plan.times[0]), since)
+        self._schedule_pace = prepared.problem.pace
+
+    def slow_old_plan(self, at: float, fleet: Fleet, since: float) -> None:
+        """Drive the last plan on, for want of a new one, but no faster than the group's pace has become."""
+        ratio = self.pace / self._schedule_pace
+        if ratio < _WORTH_SLOWING:
+            self.schedule = self.schedule.splice(slowed(self.schedule, at, fleet, ratio), at, since)
+            self._schedule_pace = self.pace
 
     def _carried(self) -> Optional[Tick]:
         """The last plan as a start for the new reference, where the problems have the same shape."""

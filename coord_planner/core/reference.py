@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Optional
 
 import attrs
 import numpy as np
 
 from ..errors import RefusedError
-from . import grid, solver
+from . import grid, ocp, se2, solver
+from .dubins import ArcPath
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -29,8 +31,12 @@ from .watch import choose_pairs, watch
 _ROUNDS = 6  # re-solves with separating lines taken from the last solution
 _SETTLED = 2e-3  # metres: the smallest clearance no longer changes
 _END_KEPT = 5e-3  # metres or radians: an end missed by more is refused
+_END_KEPT_AGAIN = 0.05  # the same for a fleet that was stopped on its way
 _CLEARANCE_KEPT = 2e-3  # metres
+_BROKEN = 1e-4  # largest residual, in its own unit, of a plan that the solver did not finish
 _LEAST_TURN_SPEED = 0.25  # part of the full speed
+_FINE = 0.05  # seconds between the poses that stand for a way
+_ON_WAY = 0.3  # metres or radians from its way within which a robot goes on along it
 _STRETCHES = (1.0, 1.25, 1.6, 2.0, 3.0)  # times tried for the rest of a manoeuvre, against the old one
 
 
@@ -73,15 +79,42 @@ class Reference:
         return np.stack([self.state(float(moment)) for moment in s], axis=1)
 
 
+def ways_left(made: Reference, poses: np.ndarray, since: float) -> tuple[Optional[ArcPath], ...]:
+    """What is left of each robot's way from where it stands; None for one that does not stand on it.
+
+    Args:
+        poses: shape (N, 3). since: second of the manoeuvre from which on the robots may be anywhere.
+    """
+    moments = np.linspace(since, made.end, max(2, int(np.ceil((made.end - since) / _FINE))))
+    curves = made.states(moments)[:, :, POSE]
+    off = np.abs(curves - poses[:, None]).max(axis=2)  # metres and radians alike
+    nearest = np.argmin(off, axis=1)
+    return tuple(
+        _along(pose, curve[i:]) if distances[i] < _ON_WAY else None
+        for pose, curve, distances, i in zip(poses, curves, off, nearest)
+    )
+
+
+def _along(pose: np.ndarray, curve: np.ndarray) -> ArcPath:
+    """Arcs through poses of shape (K, 3), laid on from a pose."""
+    step = np.diff(curve, axis=0)
+    half, middle = step[:, 2] / 2, curve[:-1, 2] + step[:, 2] / 2
+    length = (step[:, 0] * np.cos(middle) + step[:, 1] * np.sin(middle)) / se2.sinc(half)
+    driven = np.abs(length) > 1e-6
+    segments = tuple((float(turn / way), float(way)) for turn, way in zip(step[driven, 2], length[driven]))
+    return ArcPath((float(pose[0]), float(pose[1]), float(pose[2])), "left", segments or ((0.0, 0.0),))
+
+
 def make(
     task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, start: float = 0.0,
-    guess: Optional[np.ndarray] = None,
+    guess: Optional[np.ndarray] = None, end_kept: float = _END_KEPT,
 ) -> Reference:
     """Plan a task from a state on.
 
     Args:
         initial: shape (N, 7), at ``start`` seconds of the manoeuvre.
         guess: states at the nodes, shape (N, M + 1, 7); worked out from the task's ways when left out.
+        end_kept: metres or radians by which an end may be missed.
 
     Raises:
         RefusedError: an end or the site's clearance cannot be kept, with the figures.
@@ -91,16 +124,33 @@ def make(
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs)
     plan = solver.solve(problem, solver.start_from_states(problem, guess))
-    plan = _settle(problem, plan, settings, task.speed)
+    problem, plan = _settle(problem, plan, settings, task.speed)
     pairs_then = choose_pairs(fleet, settings, plan.poses)
     if not _contains(pairs, pairs_then):  # the solution came near somebody whom the guess passed at a distance
         pairs = np.unique(np.concatenate([pairs, pairs_then]), axis=0)
         problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs)
         plan = solver.solve(problem, solver.start_from_states(problem, plan.states))
-        plan = _settle(problem, plan, settings, task.speed)
+        problem, plan = _settle(problem, plan, settings, task.speed)
+    _check_solved(task, problem, plan)
     clearance, pair = plan.closest()
-    _check_kept(task, plan, fleet, settings, clearance, pair)
+    _check_kept(task, plan, fleet, settings, clearance, pair, end_kept)
     return Reference(task, plan, pairs, graph, clearance, pair)
+
+
+def make_again(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray
+) -> Reference:
+    """What is left for a fleet that stands on its way.
+
+    Near its end a robot has no room to undo what noise has put it beside the way: an end missed by a few
+    centimetres counts as kept here. What cannot be kept is tried in a longer time.
+
+    Raises:
+        RefusedError: it cannot be kept even at a third of the speed; the reason is that of the first try.
+    """
+    return _first_kept(task, lambda stretch: make(
+        task.slower(stretch, settings), fleet, graph, settings, initial, end_kept=_END_KEPT_AGAIN
+    ))
 
 
 def make_rest(
@@ -113,10 +163,14 @@ def make_rest(
     Raises:
         RefusedError: it cannot be kept even at a third of the speed; the reason is that of the first try.
     """
+    return _first_kept(task, lambda stretch: make(*_stretched(task, fleet, graph, settings, old, start, stretch)))
+
+
+def _first_kept(task: Task, attempt: Callable[[float], Reference]) -> Reference:
     first: Optional[RefusedError] = None
     for stretch in _STRETCHES:
         try:
-            return make(*_stretched(task, fleet, graph, settings, old, start, stretch))
+            return attempt(stretch)
         except RefusedError as refused:
             first = first or refused
     raise first or RefusedError(f"{task.name}: nothing is left to plan", "begin a new manoeuvre")
@@ -182,10 +236,10 @@ def _problem(
     )
 
 
-def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> Plan:
+def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> tuple[Problem, Plan]:
     """Solve again with separating lines from the solution until the smallest clearance stays."""
     if not len(problem.watch.pairs):
-        return plan
+        return problem, plan
     clearance = plan.closest(0)[0]
     for _ in range(_ROUNDS):
         lines = watch(problem.fleet, settings, problem.watch.pairs, plan.poses, speed)
@@ -194,7 +248,7 @@ def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> P
         before, clearance = clearance, plan.closest(0)[0]
         if abs(clearance - before) < _SETTLED:
             break
-    return plan
+    return problem, plan
 
 
 def _guess(task: Task, times: np.ndarray) -> np.ndarray:
@@ -206,16 +260,26 @@ def _contains(pairs: np.ndarray, others: np.ndarray) -> bool:
     return set(map(tuple, others.tolist())) <= set(map(tuple, pairs.tolist()))
 
 
+def _check_solved(task: Task, problem: Problem, plan: Plan) -> None:
+    """A plan that the solver did not finish may still do; one that jumps or breaks a limit may not."""
+    broken = 0.0 if plan.solved else ocp.violation(problem, plan.vector)
+    if broken > _BROKEN:
+        raise RefusedError(
+            f"{task.name}: no plan was found in {plan.solve_time:.1f} s and {plan.iterations} iterations",
+            "ask for a wider radius or more time, or free the machine that plans of other work",
+        )
+
+
 def _check_kept(
-    task: Task, plan: Plan, fleet: Fleet, settings: Settings, clearance: float, pair: tuple[int, int]
+    task: Task, plan: Plan, fleet: Fleet, settings: Settings, clearance: float, pair: tuple[int, int], end_kept: float
 ) -> None:
     missed = plan.missed[:, :3]
     worst = int(np.argmax(missed.max(axis=1)))
-    if missed[worst].max() > _END_KEPT:
-        distance, angle = float(np.hypot(*missed[worst, :2])), float(np.degrees(missed[worst, 2]))
+    if missed[worst].max() > end_kept:
+        distance, angle = float(np.hypot(*missed[worst, :2])), abs(float(np.degrees(missed[worst, 2])))
         raise RefusedError(
             f"{task.name}: {fleet.names[worst]} would miss its end by {distance:.2f} m and {angle:.1f} degrees; "
-            + _busiest_limit(plan, fleet, worst),
+            + (_clearance_in_the_way(plan, fleet, worst) or _busiest_limit(task, plan, fleet, worst)),
             "give it more room, more time or a lower speed",
         )
     allowed = settings.site_rules.min_clearance
@@ -226,16 +290,24 @@ def _check_kept(
             f"{allowed - clearance:.2f} m short of the site's smallest clearance of {allowed:g} m",
             "widen the turn, the spacing or the ends",
         )
-    if not plan.solved and plan.missed.max() > _END_KEPT:
-        raise RefusedError(f"{task.name}: no plan was found", "ask for a wider radius or more time")
 
 
-def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
+def _clearance_in_the_way(plan: Plan, fleet: Fleet, k: int) -> str:
+    """Who the robot comes too near to, in words; "" when it keeps its clearances."""
+    for pair, short in zip(plan.pairs, plan.short.max(axis=1, initial=0.0)):
+        if k in pair and short > _CLEARANCE_KEPT:
+            other = fleet.names[int(pair.sum()) - k]
+            return f"the clearance to {other}, margin included, is {short:.2f} m short on the way"
+    return ""
+
+
+def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
     """The limit that the robot meets for the largest part of the plan, in words."""
     limits, states, rates = fleet.robots[k].limits, plan.states[k, 1:], plan.rates[k]
     speed, bend = np.abs(states[:, SPEED_COMMAND]), np.abs(states[:, CURVATURE_COMMAND])
     use = {
         "max_curvature": bend / limits.max_curvature,
+        "radius": bend / task.max_curvature,
         "max_speed": speed / limits.max_speed,
         "max_turn_rate": speed * bend / limits.max_turn_rate,
         "max_lateral_acceleration": speed**2 * bend / limits.max_lateral_acceleration,
@@ -246,5 +318,9 @@ def _busiest_limit(plan: Plan, fleet: Fleet, k: int) -> str:
     busy = {name: float(np.mean(part > 0.99)) for name, part in use.items()}
     name = max(busy, key=lambda key: busy[key])
     if busy[name] == 0.0:
-        return "the clearance to the others stands in the way"
-    return f"its {name} of {getattr(limits, name):g} is met for {100 * busy[name]:.0f}% of the time"
+        return "no limit of its own stands in the way"
+    if name == "radius":
+        met = f"the radius of {1 / task.max_curvature:g} m that is asked"
+    else:
+        met = f"its {name} of {getattr(limits, name):g}"
+    return f"{met} is met for {100 * busy[name]:.0f}% of the time"

@@ -3,56 +3,203 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from enum import Enum
+
+import attrs
 
 from .messages import Caution, Level
 from .settings import Settings
+from .silence import Silence
 
 
-def caution(settings: Settings, code: str, subject: str, level: Level, figures: str, doing: str) -> Caution:
-    """A warning; every one defers to the site's rules, since the planner is not what protects people."""
-    about = f"{subject}: " if subject else ""
-    text = f"{about}{figures}; {doing}. {settings.site_rules.reference} and the machines' own protection come first"
-    return Caution(code, subject, level, text)
+class Response(str, Enum):
+    """What the fleet does."""
+
+    GO_ON = "goes on"
+    SLOW = "slows in step"
+    STOP = "stops, in step or apart, and is held until a person resumes"
 
 
-def pose_old(settings: Settings, name: str, age: float, doing: str) -> Caution:
+@attrs.frozen
+class Row:
+    """One row of the table of rules."""
+
+    code: str
+    level: Level
+    response: Response
+    when: str
+
+
+# Everything that is warned of, and what the fleet then does. The README shows this table; a test compares them.
+TABLE = (
+    Row(
+        "pose invalid", Level.WARN, Response.GO_ON,
+        "a pose holds something that is not a number; the last good one counts",
+    ),
+    Row(
+        "pose old", Level.WARN, Response.GO_ON,
+        "a pose is late; the robot is predicted and its footprint grows meanwhile",
+    ),
+    Row("pose old", Level.STALE, Response.STOP, "no pose for longer than poses.max_age"),
+    Row("pose jumped", Level.ERROR, Response.STOP, "a pose lies further than poses.max_jump from where it must be"),
+    Row("pose unsteady", Level.WARN, Response.GO_ON, "poses scatter far more than the file says"),
+    Row("clock offset", Level.WARN, Response.GO_ON, "stamps lie in the future; such poses are not used"),
+    Row("clock jumped", Level.ERROR, Response.STOP, "the planner's own clock jumped"),
+    Row(
+        "graph changed", Level.WARN, Response.GO_ON,
+        "an edge appeared or went; the rest of the manoeuvre is made anew",
+    ),
+    Row("graph split", Level.WARN, Response.GO_ON, "the graph falls apart and coupling.may_split allows it"),
+    Row("graph split", Level.ERROR, Response.STOP, "the graph falls apart"),
+    Row(
+        "predicted clearance short", Level.WARN, Response.GO_ON,
+        "the plan cannot keep the smallest clearance everywhere",
+    ),
+    Row("clearance breached", Level.ERROR, Response.STOP, "two robots are nearer than the site allows"),
+    Row(
+        "free way short", Level.ERROR, Response.STOP,
+        "driving on would make the stopping distance longer than the free way",
+    ),
+    Row(
+        "limit reached for long", Level.WARN, Response.GO_ON,
+        "a robot is at a limit and has nothing left for corrections",
+    ),
+    Row("robot not following", Level.WARN, Response.SLOW, "a robot falls behind; the others wait for it"),
+    Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
+    Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
+    Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
+    Row("plan late", Level.WARN, Response.GO_ON, "a plan was not finished in time; the last one is driven on"),
+    Row("plan failed", Level.WARN, Response.GO_ON, "a tick gave no plan; the last one is driven on"),
+    Row("plan failed", Level.ERROR, Response.STOP, "no new plan for longer than horizon.keep"),
+    Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
+    Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
+    Row("change refused", Level.ERROR, Response.STOP, "the rest of the manoeuvre cannot be kept under new settings"),
+)
+
+
+def response(caution: Caution) -> Response:
+    """What the fleet does about a warning."""
+    return _row(caution.code, caution.level).response
+
+
+def _row(code: str, level: Level) -> Row:
+    return next(row for row in TABLE if row.code == code and row.level is level)
+
+
+def pose_invalid(settings: Settings, name: str) -> Caution:
+    return _caution(settings, "pose invalid", name, Level.WARN, "its newest pose holds something that is not a number")
+
+
+def pose_old(settings: Settings, name: str, age: float) -> Caution:
     allowed = settings.poses.max_age
     figures = f"last pose {age:.2f} s old, {allowed:g} s allowed" if age < 1e6 else "no pose yet"
-    return caution(settings, "pose old", name, Level.STALE, figures, doing)
+    return _caution(settings, "pose old", name, Level.STALE if age > allowed else Level.WARN, figures)
 
 
 def pose_jumped(settings: Settings, name: str) -> Caution:
-    figures = f"pose jumped by more than {settings.poses.max_jump:g} m"
-    return caution(settings, "pose jumped", name, Level.ERROR, figures, "the fleet stops in step")
+    figures = f"its pose jumped by more than {settings.poses.max_jump:g} m"
+    return _caution(settings, "pose jumped", name, Level.ERROR, figures)
+
+
+def pose_unsteady(settings: Settings, name: str, times: float) -> Caution:
+    figures = f"its poses scatter {times:.1f} times as much as poses.noise_xy and poses.noise_heading_deg say"
+    return _caution(settings, "pose unsteady", name, Level.WARN, figures)
+
+
+def clock_offset(settings: Settings, name: str, ahead: float) -> Caution:
+    figures = f"its stamps lie {ahead:.2f} s in the future, {settings.poses.max_future:g} s allowed"
+    return _caution(settings, "clock offset", name, Level.WARN, figures)
+
+
+def clock_jumped(settings: Settings, by: float) -> Caution:
+    return _caution(settings, "clock jumped", "", Level.ERROR, f"the planner's clock jumped by {by:.2f} s")
+
+
+def graph_changed(settings: Settings, edges: int) -> Caution:
+    return _caution(settings, "graph changed", "", Level.WARN, f"the neighbour graph has {edges} edges now")
+
+
+def graph_split(settings: Settings, parts: Sequence[Sequence[str]]) -> Caution:
+    words = " | ".join(" ".join(part) for part in parts)
+    level = Level.WARN if settings.coupling.may_split else Level.ERROR
+    return _caution(settings, "graph split", "", level, f"the neighbour graph falls into {len(parts)} parts: {words}")
+
+
+def clearance_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:
+    figures = f"predicted clearance {clearance:.2f} m, {settings.site_rules.min_clearance:g} m is the site's smallest"
+    return _caution(settings, "predicted clearance short", " and ".join(pair), Level.WARN, figures)
+
+
+def clearance_breached(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:
+    figures = f"clearance {clearance:.2f} m now, {settings.site_rules.min_clearance:g} m is the site's smallest"
+    return _caution(settings, "clearance breached", " and ".join(pair), Level.ERROR, figures)
+
+
+def free_way_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:
+    figures = (
+        f"a stop begun a tick later would leave {clearance:.2f} m, {settings.site_rules.min_clearance:g} m is the "
+        "site's smallest"
+    )
+    return _caution(settings, "free way short", " and ".join(pair), Level.ERROR, figures)
+
+
+def limit_reached(settings: Settings, name: str, limit: str, seconds: float) -> Caution:
+    return _caution(settings, "limit reached for long", name, Level.WARN, f"at its {limit} for {seconds:.1f} s")
+
+
+def not_following(settings: Settings, name: str, lag: float) -> Caution:
+    most = settings.progress.max_lag
+    figures = f"{lag:.2f} m behind its plan, {most:g} m at most"
+    return _caution(settings, "robot not following", name, Level.ERROR if lag > most else Level.WARN, figures)
+
+
+def too_slow(settings: Settings, name: str, factor: float) -> Caution:
+    figures = f"reaches {100 * factor:.0f} % of its commanded speed"
+    return _caution(settings, "robot not following", name, Level.WARN, figures)
 
 
 def not_ready(settings: Settings, name: str) -> Caution:
-    return caution(settings, "robot not ready", name, Level.ERROR, "not ready to be driven", "the fleet stops")
+    return _caution(settings, "robot not ready", name, Level.ERROR, "not ready to be driven")
 
 
-def not_following(settings: Settings, name: str, lag: float, doing: str, level: Level) -> Caution:
-    figures = f"{lag:.2f} m behind its plan, {settings.progress.max_lag:g} m at most"
-    return caution(settings, "robot not following", name, level, figures, doing)
+def silent(settings: Settings, name: str) -> Caution:
+    return _caution(settings, "robot silent", name, Level.STALE, "no longer says that it is ready")
 
 
-def clearance_short(settings: Settings, pair: Sequence[str], clearance: float, doing: str) -> Caution:
-    figures = f"predicted clearance {clearance:.2f} m, {settings.site_rules.min_clearance:g} m is the site's smallest"
-    return caution(settings, "predicted clearance short", " and ".join(pair), Level.WARN, figures, doing)
-
-
-def clearance_breached(settings: Settings, pair: Sequence[str], clearance: float, doing: str) -> Caution:
-    figures = f"clearance {clearance:.2f} m now, {settings.site_rules.min_clearance:g} m is the site's smallest"
-    return caution(settings, "clearance breached", " and ".join(pair), Level.ERROR, figures, doing)
+def other_planner(settings: Settings, who: str) -> Caution:
+    return _caution(settings, "other planner heard", "", Level.ERROR, f"{who} drives this fleet too")
 
 
 def plan_late(settings: Settings, took: float) -> Caution:
     figures = f"a plan took {1e3 * took:.0f} ms and was not finished, {1e3 * settings.horizon.budget:.0f} ms allowed"
-    return caution(settings, "plan late", "", Level.WARN, figures, "the last plan is driven on")
+    return _caution(settings, "plan late", "", Level.WARN, figures)
 
 
-def plan_failed(settings: Settings, reason: str, doing: str) -> Caution:
-    return caution(settings, "plan failed", "", Level.ERROR, reason, doing)
+def plan_failed(settings: Settings, reason: str) -> Caution:
+    return _caution(settings, "plan failed", "", Level.WARN, reason)
+
+
+def plans_missing(settings: Settings, seconds: float) -> Caution:
+    figures = f"no new plan for {seconds:.1f} s, {settings.horizon.keep:g} s allowed"
+    return _caution(settings, "plan failed", "", Level.ERROR, figures)
+
+
+def silence_unsafe(settings: Settings, silence: Silence) -> Caution:
+    figures = (
+        f"should the planner fall silent {silence.instant:.1f} s into the manoeuvre they come within "
+        f"{silence.clearance:.2f} m before both stand, {settings.site_rules.min_clearance:g} m is the site's smallest "
+        "(shorter command time-outs, less speed or more spacing would help)"
+    )
+    return _caution(settings, "silence unsafe", " and ".join(silence.pair), Level.WARN, figures)
 
 
 def change_refused(settings: Settings, reason: str) -> Caution:
-    return caution(settings, "change refused", "", Level.ERROR, reason, "the fleet stops in step")
+    return _caution(settings, "change refused", "", Level.ERROR, reason)
+
+
+def _caution(settings: Settings, code: str, subject: str, level: Level, figures: str) -> Caution:
+    """A warning; every one defers to the site's rules, since the planner is not what protects people."""
+    about, deference = f"{subject}: " if subject else "", "and the machines' own protection come first"
+    doing = _row(code, level).response.value
+    text = f"{about}{figures}; the fleet {doing}. {settings.site_rules.reference} {deference}"
+    return Caution(code, subject, level, text)

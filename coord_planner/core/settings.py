@@ -18,6 +18,9 @@ class Coupling:
         0.0, "price of a heading that differs from a neighbour's, times the coupling; 0 turns it off", "1/m^2",
         minimum=0.0, maximum=1e3, live=True,
     )
+    may_split: bool = parameter(
+        False, "true: parts of the fleet that the graph no longer joins go on by themselves", live=True
+    )
 
 
 @attrs.frozen
@@ -49,6 +52,9 @@ class Horizon:
     interval: float = parameter(0.25, "length of an interval", "s", minimum=0.05, maximum=2.0)
     rate: float = parameter(10.0, "plans a second", "1/s", minimum=1.0, maximum=50.0)
     budget: float = parameter(0.09, "time that one plan may take", "s", minimum=0.002, maximum=1.0)
+    keep: float = parameter(
+        2.0, "time for which the last plan is driven on when no new one comes", "s", minimum=0.1, maximum=5.0, live=True
+    )
     lead: float = parameter(
         1.0, "time given to making the rest of a manoeuvre anew while it runs", "s", minimum=0.2, maximum=10.0
     )
@@ -77,6 +83,9 @@ class SiteRules:
     reference: str = parameter("the site's operating rules", "the site's own document that warnings quote")
     min_clearance: float = parameter(
         0.5, "smallest allowed distance between two robots' footprints", "m", minimum=0.0, maximum=100.0, live=True
+    )
+    refuse_unsafe_silence: bool = parameter(
+        False, "true: a manoeuvre is refused, not only warned of, when robots timing out separately would come too near"
     )
     max_speed: float = parameter(
         50.0, "speed cap for every robot on the site", "m/s", above=0.0, maximum=50.0, live=True

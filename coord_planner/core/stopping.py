@@ -7,6 +7,7 @@ import numpy as np
 
 from .fleet import Fleet
 from .motion import drive, lags
+from .observer import Estimate
 from .plan import closest_along
 from .problem import CURVATURE, POSE, SPEED
 from .schedule import Schedule
@@ -39,37 +40,49 @@ def in_step(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     return _slow_down(schedule, at, fleet, together=True)
 
 
+def slowed(schedule: Schedule, at: float, fleet: Fleet, ratio: float) -> Schedule:
+    """Everybody's progress along the schedule slows, in step, to a part of what it was."""
+    return _slow_down(schedule, at, fleet, together=True, ratio_kept=ratio)
+
+
 def apart(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     """Each robot slows along its own curve as hard as its own brake allows."""
     return _slow_down(schedule, at, fleet, together=False)
 
 
-def choose(schedule: Schedule, at: float, fleet: Fleet, states: np.ndarray, now: float, factor: np.ndarray) -> Stop:
+def choose(schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now: float) -> Stop:
     """The stop with the larger predicted clearance; in step when both keep the same.
 
     Args:
         schedule: in effect so far. at: moment from which it can still be changed.
-        states: estimated, shape (N, 7), at ``now``. factor: part of its speed that each robot really makes, (N,).
+        estimate: of the robots at ``now``.
     """
     stops = [
-        _predicted(now, fleet, states, factor, manner, make(schedule, at, fleet))
+        _predicted(now, fleet, estimate, schedule, manner, make(schedule, at, fleet))
         for manner, make in (("in step", in_step), ("apart", apart))
     ]
     return stops[1] if stops[1].clearance > stops[0].clearance + 1e-3 else stops[0]
 
 
-def _slow_down(schedule: Schedule, at: float, fleet: Fleet, together: bool) -> Schedule:
+def _slow_down(
+    schedule: Schedule, at: float, fleet: Fleet, together: bool, ratio_kept: float = 0.0
+) -> Schedule:
+    """Commands along the schedule at a falling rate, down to a part of it: to standstill or to the schedule's end."""
     count = len(fleet)
     braking = _HARDEST * fleet.limit("max_braking") * _STEP  # largest drop of speed in a step
     along = np.full(count, at)
     ratio = np.ones(count)
     command = schedule.at(along)
     times, values = [at], [command]
-    while np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST:
+    last = float(schedule.times[-1])
+    # A stop goes on past the schedule's end, where the last values hold; who only slows down has come to its end.
+    while (
+        np.any(np.abs(command[:, 0]) > 1e-9) and times[-1] - at < _LONGEST and (ratio_kept == 0.0 or along.min() < last)
+    ):
         ahead = schedule.at(along + ratio * _STEP)
         speed = np.abs(ahead[:, 0])
         least = np.where(speed > 1e-9, (np.abs(command[:, 0]) - braking) / np.maximum(speed, 1e-9), 0.0)
-        wanted = np.clip(least, 0.0, ratio)
+        wanted = np.clip(least, ratio_kept, ratio)
         following = np.full(count, wanted.max()) if together else wanted
         along = along + _STEP * (ratio + following) / 2
         there = schedule.at(along)
@@ -83,14 +96,16 @@ def _slow_down(schedule: Schedule, at: float, fleet: Fleet, together: bool) -> S
 
 
 def _predicted(
-    now: float, fleet: Fleet, states: np.ndarray, factor: np.ndarray, manner: str, stop: Schedule
+    now: float, fleet: Fleet, estimate: Estimate, before: Schedule, manner: str, stop: Schedule
 ) -> Stop:
+    states, factor = estimate.states, estimate.speed_factor
     settle = 4.0 * float(lags(fleet).max()) + _STEP
     until = float(stop.times[-1]) + settle
     steps = max(1, int(np.ceil((until - now) / _STEP)))
     h = (until - now) / steps
     moments = np.broadcast_to(now + h * (np.arange(steps) + 0.5), (len(fleet), steps))
     reached = np.stack([states[:, SPEED] / np.maximum(factor, 0.05), states[:, CURVATURE]], axis=1)
-    path, _ = drive(states[:, POSE], reached, stop.at(moments), np.full(len(fleet), h), lags(fleet), factor)
-    clearance, pair = closest_along(fleet, path)
+    commands = np.where((moments < stop.times[0])[..., None], before.at(moments), stop.at(moments))
+    path, _ = drive(states[:, POSE], reached, commands, np.full(len(fleet), h), lags(fleet), factor)
+    clearance, pair = closest_along(fleet, path, estimate.growth)
     return Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0]))

@@ -13,11 +13,12 @@ from .manoeuvre import Task
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
 from .reference import Reference, asked_speeds, turn_speeds
+from .rollout import rolled_out
 from .settings import Settings
 from .watch import watch
 
 _SPEEDS = [SPEED, SPEED_COMMAND]
-_USABLE = 2e-2  # largest residual of the motion (metres, radians) with which an unfinished plan is still driven
+_NEAR = 0.5  # metres or radians by which an unfinished plan may miss its end and still be driven
 
 
 @attrs.frozen(eq=False)
@@ -78,12 +79,24 @@ def paced(states: np.ndarray, pace: float) -> np.ndarray:
     return scaled
 
 
-def usable(problem: Problem, plan: Plan) -> bool:
-    """Whether a plan that the solver did not finish still moves as machines do and stays within limits."""
+def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Plan]:
+    """A plan that may be driven: the solver's own, or, where it ran out of time, what its commands come to.
+
+    A half-finished plan is rolled out within its limits. It is used when it stays clear and comes near its end;
+    otherwise there is None.
+
+    Args:
+        least_clearance: smallest exact clearance that counts as clear, metres.
+    """
     if plan.solved:
-        return True
-    worst = ocp.violation(problem, plan.vector)
-    return bool(worst < _USABLE)
+        return plan
+    if not np.isfinite(plan.rates).all():
+        return None
+    states, rates = rolled_out(problem, plan.rates)
+    missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
+    finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
+    near = missed[:, :3].max() < _NEAR
+    return finished if near and finished.closest(1)[0] >= least_clearance else None
 
 
 def _closing_up(

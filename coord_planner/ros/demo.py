@@ -156,7 +156,8 @@ class _Director:
         began = self._recorder.newest_stamp
         self._drive()
         self._for(1.5)  # the machines come to rest
-        facts = {"simulated": True, "file": self._configuration.file, "slowed": self._slowed,
+        facts = {"simulated": True, "invented": self._configuration.invented,
+                 "site": self._configuration.fleet_name, "file": self._configuration.file, "slowed": self._slowed,
                  "coupling": float(self._recorder.status["coupling"])}
         return self._recorder.run(MANOEUVRE, began=began, wall_time=time.monotonic() - began_wall, facts=facts)
 

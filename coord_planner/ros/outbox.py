@@ -111,12 +111,14 @@ class Outbox:
     def show(self, decision: Decision, configuration: Configuration, graph: NeighbourGraph) -> None:
         """Plans and markers, for those who look; nobody looking costs nothing."""
         if len(decision.plan_times):
-            for name, poses in zip(configuration.fleet.names, decision.plan_poses):
+            for name, poses in zip(decision.names, decision.plan_poses):
                 if self._paths[name].get_subscription_count():
                     self._paths[name].publish(outgoing.path_message(self._frame, decision.plan_times, poses))
         if self._markers.get_subscription_count():
             least = configuration.settings.site_rules.min_clearance
-            self._markers.publish(outgoing.fleet_markers(self._frame, configuration.fleet, graph, decision, least))
+            self._markers.publish(outgoing.fleet_markers(
+                self._frame, configuration.driven, graph.relative_to(decision.names), decision, least
+            ))
 
     def tell_neighbours(self, graph: NeighbourGraph, seconds: float) -> None:
         """The graph that is in force."""

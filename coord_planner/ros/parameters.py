@@ -104,21 +104,23 @@ class LiveParameters:
     Args:
         node: its parameters are declared already.
         configuration: in force at the start.
+        refusal: why a sound configuration cannot be taken just now; "" when it can.
         changed: called with the new configuration and the keys that were set, after ROS has taken them.
     """
 
     def __init__(self, node: Node, configuration: config.Configuration,
+                 refusal: Callable[[config.Configuration], str],
                  changed: Callable[[config.Configuration, tuple[str, ...]], None]) -> None:
-        self.configuration, self._changed = configuration, changed
+        self.configuration, self._refusal, self._changed = configuration, refusal, changed
         node.add_on_set_parameters_callback(self._check)
         node.add_post_set_parameters_callback(self._take)
 
     def _check(self, items: Sequence[Parameter]) -> SetParametersResult:
         try:
-            self._new(items)
+            reason = self._refusal(self._new(items))
         except SettingsError as error:
-            return SetParametersResult(successful=False, reason=str(error))
-        return SetParametersResult(successful=True)
+            reason = str(error)
+        return SetParametersResult(successful=not reason, reason=reason)
 
     def _take(self, items: Sequence[Parameter]) -> None:
         keys = tuple(item.name for item in items if not is_of_ros(item.name))

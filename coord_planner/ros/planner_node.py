@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
+import contextlib
 import functools
 import sys
-import time
 from collections import deque
 from collections.abc import Callable, Sequence
 from typing import Any, Optional
@@ -13,6 +13,7 @@ import attrs
 from rclpy.callback_groups import ReentrantCallbackGroup
 from rclpy.clock import Clock
 from rclpy.clock_type import ClockType
+from rclpy.exceptions import InvalidHandle
 from rclpy.executors import SingleThreadedExecutor
 from rclpy.lifecycle import LifecycleNode, LifecycleState, TransitionCallbackReturn
 from rclpy.task import Future
@@ -24,6 +25,7 @@ from ..core.graph import NeighbourGraph
 from ..core.messages import Answer, Decision, Snapshot, State
 from ..core.reference import Reference
 from . import messages, parameters, reports
+from .ending import Ending
 from .inbox import Inbox
 from .outbox import Outbox
 from .spinning import Signals, run, spin
@@ -31,6 +33,7 @@ from .transitions import answer_invalid_transitions, logged
 from .worker import Worker
 
 _MOVING = (State.PLANNING, State.MOVING, State.STOPPING)
+_SLIP = 0.05  # seconds by which a clock that is being kept in step with others may go back unnoticed
 _LAST_WORD = 0.3  # seconds that a last command may take to arrive
 _SILENCE = 2.0  # seconds without a decision in motion after which the fleet is halted
 Answered = Callable[[Answer], None]
@@ -51,7 +54,7 @@ class PlannerNode(LifecycleNode):
         flat = parameters.given(self)
         configuration = config.from_parameters(flat, parameters.files(arguments))
         parameters.declare(self, flat)
-        self._live = parameters.LiveParameters(self, configuration, self._on_parameters)
+        self._live = parameters.LiveParameters(self, configuration, self._cannot_take, self._on_parameters)
         answer_invalid_transitions(self)
         self.signalled = False  # a transition to the end of the node's life: the same as a first signal
         self._leaving = ""
@@ -150,13 +153,15 @@ class PlannerNode(LifecycleNode):
 
     def _start_coordinator(self) -> None:
         now = self.configuration
-        self._coordinator = Coordinator(now.fleet, self._graph, now.settings, now.manoeuvres)
+        self._coordinator = Coordinator(
+            now.driven, self._graph.relative_to(now.driven.names), now.settings, now.manoeuvres
+        )
         self._worker = Worker(
             self._coordinator, snapshot=self._snapshot, now=self.now,
             decided=lambda decision, ms: self._post(functools.partial(self._on_decision, decision, ms)),
             failed=lambda words, details: self._post(functools.partial(self.fail, words, details)),
         )
-        self._last_tick, self._tick_ms = 0.0, 0.0
+        self._last_time, self._tick_ms = 0.0, 0.0
         self._told: tuple[Any, ...] = ()
         self._answer: Optional[Answer] = None
         self._change: Optional[reports.Change] = None
@@ -166,19 +171,22 @@ class PlannerNode(LifecycleNode):
     # Timers
 
     def _tick(self) -> None:
+        if self._time() > 0.0:
+            self._worker.tick()
+
+    def _time(self) -> float:
+        """Now, seconds; 0 while there is no clock. A clock that was set back is a new beginning."""
         now = self.now()
-        if now <= 0.0:
-            return
-        if now < self._last_tick:
-            back = self._last_tick - now
-            self.get_logger().warning(f"the clock went back by {back:.3f} s: all begins anew, idle")
+        back = self._last_time - now
+        if back > _SLIP:
+            self.get_logger().warning(f"the clock went back by {back:.3f} s: everything begins anew, nothing is driven")
             self._inbox.forget()
             self._renew()
-        self._last_tick = now
-        self._worker.tick()
+        self._last_time = max(now, self._last_time)
+        return now
 
     def _send(self) -> None:
-        now = self.now()
+        now = self._time()
         if now <= 0.0:
             return
         silence = now - self._coordinator.decision.time
@@ -206,7 +214,8 @@ class PlannerNode(LifecycleNode):
     def _post(self, action: Callable[[], None]) -> None:
         """Let the executor's thread do something; from any thread."""
         self._mail.append(action)
-        self._bell.trigger()
+        with contextlib.suppress(InvalidHandle):  # cleaned up meanwhile
+            self._bell.trigger()
 
     def _open_mail(self) -> None:
         while self._mail:
@@ -276,6 +285,7 @@ class PlannerNode(LifecycleNode):
     def _ask(self, ask: Callable[[Snapshot, Answered], None], request_id: str = "") -> Future:
         """Pass a request on; the future gets its Answer."""
         future: Future = Future(executor=self.executor)
+        self._time()
         self._asking.add(future)
         snapshot = self._snapshot()
         refusal = self._refusal(snapshot)
@@ -322,17 +332,20 @@ class PlannerNode(LifecycleNode):
         now = self.now()
         if now <= 0.0:
             return None
-        configuration = self.configuration
-        not_driven = frozenset(configuration.fleet.names) - configuration.enabled
-        return Snapshot(now, self._inbox.poses(), not_driven)
+        return Snapshot(now, self._inbox.poses())
 
     # Changes
+
+    def _cannot_take(self, configuration: config.Configuration) -> str:
+        if not self._configured or configuration.enabled == self.configuration.enabled:
+            return ""
+        return self._coordinator.cannot_change_members()
 
     def _on_parameters(self, configuration: config.Configuration, keys: tuple[str, ...]) -> None:
         words = ", ".join(f"{key} = {self.get_parameter(key).value}" for key in keys)
         self.get_logger().info(f"changed: {words}")
         if self._configured:
-            self._change_to(words, settings=configuration.settings, fleet=configuration.fleet)
+            self._change_to(words, settings=configuration.settings, fleet=configuration.driven, graph=self._graph)
 
     def _on_neighbours(self, graph: NeighbourGraph) -> None:
         if graph.edges != self._graph.edges:
@@ -392,30 +405,6 @@ def _filled(response: Trigger.Response, answer: Answer) -> Trigger.Response:
     return response
 
 
-class _Ending:
-    """From the first signal to the end: the fleet is ramped to a stand; a second signal sends zeros at once."""
-
-    def __init__(self, node: PlannerNode, signals: Signals) -> None:
-        self._node, self._signals = node, signals
-        self._until: Optional[float] = None  # steady seconds
-
-    def __call__(self) -> Optional[int]:
-        if self._signals.count >= 2:
-            return self._leave(1)
-        if self._until is None:
-            if self._signals.count or self._node.signalled:
-                self._until = time.monotonic() + self._node.longest_stop()
-                self._node.begin_stop()
-            return None
-        if self._node.standing:
-            return self._leave(0)
-        return self._leave(1) if time.monotonic() > self._until else None
-
-    def _leave(self, status: int) -> int:
-        self._node.last_word()
-        return status
-
-
 def _body(arguments: Sequence[str], signals: Signals) -> int:
     node = PlannerNode(arguments)
     executor = SingleThreadedExecutor()
@@ -424,7 +413,7 @@ def _body(arguments: Sequence[str], signals: Signals) -> int:
         for change in (node.trigger_configure, node.trigger_activate):
             if change() != TransitionCallbackReturn.SUCCESS:
                 return 2
-    return spin(executor, node, after=_Ending(node, signals), failed=node.fail)
+    return spin(executor, node, after=Ending(node, signals), failed=node.fail)
 
 
 def main(arguments: Optional[Sequence[str]] = None) -> int:

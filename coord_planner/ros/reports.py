@@ -96,7 +96,7 @@ def _ends_text(at: Situation) -> str:
     if at.ends is None:
         return "{}"
     rows = [[float(value) if math.isfinite(value) else None for value in row] for row in at.ends]
-    return json.dumps(dict(zip(at.configuration.fleet.names, rows)))
+    return json.dumps(dict(zip(at.decision.names, rows)))
 
 
 def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies) -> list[DiagnosticStatus]:

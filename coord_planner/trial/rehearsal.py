@@ -9,10 +9,11 @@ from typing import Optional
 import numpy as np
 
 from ..config import Configuration
+from ..core import solver
 from ..core.coordinator import Coordinator
-from ..core.messages import Answer, Caution, Decision, Snapshot, State
+from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
 from ..errors import RefusedError
-from .faults import Fault, apply
+from .faults import Fault, Faults, check_targets
 from .run import Run, RunFrame
 from .vehicle import SimulatedFleet
 
@@ -20,6 +21,7 @@ _LONGEST = 900.0  # seconds of simulated time
 _BUDGET = 60.0  # seconds of wall time for a tick's solve: never the reason for what a rehearsal shows
 _FRAME_EVERY = 2  # ticks between plans kept for the page
 _FRAME_POINTS = 13
+_SAME = 1e-9  # seconds; moments closer than this are one
 
 # Called after every tick with the coordinator and the simulated time: for requests in mid-turn.
 Watch = Callable[[Coordinator, float], None]
@@ -82,60 +84,120 @@ def rehearse(
 
     Raises:
         RefusedError: the manoeuvre was refused; nothing has moved.
+        SettingsError: a fault strikes a robot or an edge that is not there.
     """
-    settings, simulation = configuration.settings, configuration.simulation
-    rng = np.random.default_rng(simulation.seed if seed is None else seed)
-    timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
-    simulated = SimulatedFleet(configuration.fleet, configuration.starts, simulation, timeouts, rng)
-    coordinator = Coordinator(configuration.fleet, configuration.graph, settings, configuration.manoeuvres, _BUDGET)
-    log = _Log()
-    answers: list[Answer] = []
     began_at = clock.perf_counter()
-    period = 1.0 / settings.commands.rate
-    ticks_every = 1.0 / settings.horizon.rate
-    poses_every = 1.0 / simulation.pose_rate
-    now, next_tick, next_pose = 0.0, 0.0, 0.0
-    moving_since: Optional[float] = None
-    measured = simulated.measure(0.0)
-    coordinator.begin(manoeuvre, Snapshot(0.0, measured), overrides=overrides, answered=answers.append)
-    _work(coordinator, now)
-    _raise_if_refused(answers)
-    log.truth(now, simulated)
-    while now < _LONGEST:
-        if now >= next_pose - 1e-9:
-            measured = simulated.measure(now)
-            next_pose += poses_every
-        if now >= next_tick - 1e-9:
-            tick_began = clock.perf_counter()
-            decision = coordinator.step(Snapshot(now, measured))
-            log.decision(decision, 1e3 * (clock.perf_counter() - tick_began), 3 * ticks_every)
-            if moving_since is None and decision.state is State.MOVING:
-                moving_since = now
+    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults)
+    loop.begin(manoeuvre, overrides)
+    while loop.now < _LONGEST and not loop.over:
+        if loop.tick_is_due:
+            progress(loop.tick().progress)
             if watch is not None:
-                watch(coordinator, now)
-            _work(coordinator, now)
-            progress(decision.progress)
-            next_tick += ticks_every
-            if decision.state in (State.IDLE, State.HELD):
-                break
-        commands = coordinator.commands(now)
+                watch(loop.coordinator, loop.now)
+            loop.work()
+        loop.advance()
+    return loop.run(manoeuvre, clock.perf_counter() - began_at)
+
+
+class _Loop:
+    """Planner and simulated fleet on one clock that stands still while anybody computes."""
+
+    def __init__(self, configuration: Configuration, seed: int, faults: Sequence[Fault]) -> None:
+        self._configuration, self._seed = configuration, seed
+        settings, self._fleet = configuration.settings, configuration.driven
+        rng = np.random.default_rng(seed)
+        timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
+        self._simulated = SimulatedFleet(self._fleet, configuration.starts, configuration.simulation, timeouts, rng)
+        self._graph = self._graph_now = configuration.graph.relative_to(self._fleet.names)
+        check_targets(faults, self._graph)
+        self._faults = Faults(faults, rng)
+        self.coordinator = Coordinator(
+            self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
+            self._faults.solve(solver.solve, settings.horizon.budget),
+        )
+        self._log = _Log()
+        self._period, self._tick_period = 1.0 / settings.commands.rate, 1.0 / settings.horizon.rate
+        self._pose_period = 1.0 / configuration.simulation.pose_rate
+        self._next_tick = self._next_pose = self.now = 0.0
+        self._moving_since: Optional[float] = None
+        self._measured: dict[str, PoseSample] = {}
+        self.over = False
+
+    @property
+    def tick_is_due(self) -> bool:
+        return self.now >= self._next_tick - _SAME
+
+    def begin(self, manoeuvre: str, overrides: Optional[dict[str, float]]) -> None:
+        """Ask for the manoeuvre; RefusedError when it is refused."""
+        answers: list[Answer] = []
+        self._measured = self._simulated.measure(0.0)
+        self.coordinator.begin(manoeuvre, Snapshot(0.0, self._measured), overrides=overrides, answered=answers.append)
+        self.work()
+        _raise_if_refused(answers)
+        self._log.truth(0.0, self._simulated)
+
+    def work(self) -> None:
+        """Do slow work on the spot."""
+        for job in self.coordinator.jobs():
+            self.coordinator.deliver(job(), self.now)
+
+    def tick(self) -> Decision:
+        """Look at the robots and decide."""
+        self._look()
+        began = clock.perf_counter()
+        decision = self.coordinator.step(Snapshot(self.now, self._measured, self._faults.not_ready()))
+        self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period)
+        if self._moving_since is None and decision.state is State.MOVING:
+            self._moving_since = self.now
+        self._next_tick += self._tick_period
+        self.over = decision.state in (State.IDLE, State.HELD)
+        return decision
+
+    def advance(self) -> None:
+        """Send commands and let the machines move until the next sending."""
+        self._look()
+        commands = self.coordinator.commands(self.now)
         if commands is not None:
-            log.command_times.append(now)
-            log.commanded.append(np.array([[c.speed, c.curvature] for c in commands.values()]))
-            for name, command in commands.items():
-                simulated.command(name, command, now)
-        if moving_since is not None:
-            apply(faults, now - moving_since, simulated, configuration.fleet.names)
-        now = round((len(log.times)) * period, 9)
-        simulated.advance(now)
-        log.truth(now, simulated)
-    return _run(configuration, manoeuvre, coordinator, log, moving_since or 0.0, clock.perf_counter() - began_at, seed)
+            self._log.command_times.append(self.now)
+            self._log.commanded.append(np.array([[c.speed, c.curvature] for c in commands.values()]))
+        self._faults.send(self.now, commands or {}, self._simulated)
+        if self._moving_since is not None:
+            self._strike(self.now - self._moving_since)
+        self.now = round(len(self._log.times) * self._period, 9)
+        self._simulated.advance(self.now)
+        self._log.truth(self.now, self._simulated)
 
+    def _look(self) -> None:
+        if self.now >= self._next_pose - _SAME:
+            self._measured = self._faults.seen(self._simulated.measure(self.now))
+            self._next_pose += self._pose_period
 
-def _work(coordinator: Coordinator, now: float) -> None:
-    """Do slow work on the spot: simulated time stands still meanwhile."""
-    for job in coordinator.jobs():
-        coordinator.deliver(job(), now)
+    def _strike(self, since: float) -> None:
+        self._faults.at(since, self._simulated, self._fleet.names)
+        graph = self._faults.graph(self._graph)
+        if graph.edges != self._graph_now.edges:
+            self._graph_now = graph
+            self.coordinator.change(self.now, graph=graph)
+            self.work()
+
+    def run(self, manoeuvre: str, wall_time: float) -> Run:
+        """What happened."""
+        configuration, log, decision = self._configuration, self._log, self.coordinator.decision
+        state = State.ENDED if decision.completed else decision.state
+        return Run(
+            fleet=self._fleet, edges=self._graph.edges, manoeuvre=manoeuvre, times=np.array(log.times),
+            poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
+            curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
+            commanded=np.stack(log.commanded, axis=1), end_poses=self.coordinator.ends,
+            min_clearance=configuration.settings.site_rules.min_clearance, state=state.value,
+            completed=decision.completed, began=self._moving_since or 0.0, ended=_ended(log), cautions=log.cautions(),
+            tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
+            facts={
+                "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
+                "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
+                "seed": self._seed,
+            },
+        )
 
 
 def _raise_if_refused(answers: Sequence[Answer]) -> None:
@@ -143,26 +205,6 @@ def _raise_if_refused(answers: Sequence[Answer]) -> None:
         if not answer.ok:
             reason, _, remedy = answer.text.rpartition("; ")
             raise RefusedError(reason or answer.text, remedy)
-
-
-def _run(
-    configuration: Configuration, manoeuvre: str, coordinator: Coordinator, log: _Log, began: float,
-    wall_time: float, seed: Optional[int],
-) -> Run:
-    decision = coordinator.decision
-    return Run(
-        fleet=configuration.fleet, edges=configuration.edges, manoeuvre=manoeuvre, times=np.array(log.times),
-        poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
-        curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
-        commanded=np.stack(log.commanded, axis=1), end_poses=coordinator.ends,
-        min_clearance=configuration.settings.site_rules.min_clearance, state=decision.state.value,
-        completed=decision.completed, began=began, ended=_ended(log), cautions=log.cautions(),
-        tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
-        facts={
-            "simulated": True, "file": configuration.file, "coupling": decision.coupling,
-            "alignment": decision.alignment, "seed": configuration.simulation.seed if seed is None else seed,
-        },
-    )
 
 
 def _ended(log: _Log) -> float:

@@ -79,7 +79,7 @@ class Site:
         return node
 
     def close(self) -> None:
-        for node in self._nodes:
+        for node in reversed(self._nodes):  # planners before their robots
             node.stop()
 
 

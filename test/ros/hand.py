@@ -96,6 +96,13 @@ class Hand:
     def until_state(self, *states: str, seconds: float = 30.0) -> None:
         self.until(lambda: self.status["state"] in states, seconds, " or ".join(states))
 
+    def until_heard(self) -> None:
+        """Until the planner has fresh poses of all robots."""
+        names = [f"/planner: poses of {name}" for name in ROBOTS]
+        self.diagnostics.clear()
+        self.until(lambda: all(name in self.diagnostics and self.diagnostics[name].level == b"\x00" for name in names),
+                   what="poses at the planner")
+
     def ask(self, kind: type, name: str, request: Any) -> Any:
         """Call a service and wait for its answer."""
         future = self.ask_later(kind, name, request)
@@ -130,9 +137,9 @@ class Hand:
         """Publish once somebody listens."""
         if name not in self._publishers:
             self._publishers[name] = self.node.create_publisher(type(message), name, profile)
-        publisher = self._publishers[name]
-        self.until(lambda: publisher.get_subscription_count() > 0, what=f"a listener on {name}")
-        publisher.publish(message)
+            self.until(lambda: self._publishers[name].get_subscription_count() > 0, what=f"a listener on {name}")
+            self.spin(0.3)  # the listener has to find us too, or it misses what is sent best effort
+        self._publishers[name].publish(message)
 
     def request(self, **content: Any) -> None:
         self.publish("planner/request", String(data=json.dumps(content)))

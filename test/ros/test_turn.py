@@ -6,8 +6,11 @@ import json
 from typing import Any
 
 import pytest
-from hand import ACTIVATE, CONFIGURE, DEACTIVATE, Hand
+from hand import ACTIVATE, CLEANUP, CONFIGURE, DEACTIVATE, Hand
+from lifecycle_msgs.msg import Transition
+from std_msgs.msg import Empty, String
 
+from coord_planner.ros import qos
 from coord_planner.ros.processes import NodeProcess
 
 
@@ -25,7 +28,7 @@ def test_nothing_begins_before_the_planner_is_active(hand: Hand, planner: NodePr
     assert not answer.success
     assert "activate" in answer.message
     assert hand.transition(ACTIVATE)
-    hand.spin(1.0)
+    hand.until_heard()
     assert not any(hand.commands.values()), "activation moves nothing"
 
 
@@ -86,10 +89,6 @@ def test_refusals_come_with_a_reason_and_move_nothing(hand: Hand, planner: NodeP
 
 
 def test_neighbours_in_force_are_told(hand: Hand, planner: NodeProcess) -> None:
-    from std_msgs.msg import String
-
-    from coord_planner.ros import qos
-
     told: list[dict[str, Any]] = []
     hand.node.create_subscription(
         String, "planner/neighbours_in_force", lambda message: told.append(json.loads(message.data)), qos.NEWEST_LATCHED
@@ -101,6 +100,24 @@ def test_neighbours_in_force_are_told(hand: Hand, planner: NodeProcess) -> None:
     hand.until(lambda: told[-1]["edges"] == [["left", "right", 2.0], ["right", "middle", 1.0]])
 
 
+def test_a_disabled_robot_is_not_driven_and_none_leaves_in_mid_turn(hand: Hand, planner: NodeProcess) -> None:
+    if hand.status["state"] != "idle":
+        hand.until_state("idle")
+    assert hand.set(robots__right__enabled=False).successful
+    sent = len(hand.commands["right"])
+    answer = hand.trigger("begin/corner_left")
+    assert answer.success, answer.message
+    hand.until_state("moving")
+    refused = hand.set(robots__middle__enabled=False)
+    assert not refused.successful
+    assert "idle" in refused.reason
+    hand.until_state("ended")
+    assert hand.status["completed"] == "true"
+    assert len(hand.commands["right"]) == sent
+    hand.until_state("idle")
+    assert hand.set(robots__right__enabled=True).successful
+
+
 def test_deactivation_in_motion_is_refused_and_halts(hand: Hand, planner: NodeProcess) -> None:
     assert hand.trigger("begin/corner_right").success
     hand.until(lambda: float(hand.status.get("progress", 0)) > 0.2)
@@ -110,11 +127,23 @@ def test_deactivation_in_motion_is_refused_and_halts(hand: Hand, planner: NodePr
     hand.until(lambda: hand.standing, 3.0)
     assert hand.trigger("resume").success
     hand.until_state("moving")
-    from std_msgs.msg import Empty
-
     hand.publish("halt", Empty())
     hand.until_state("held")
     assert hand.trigger("abandon").success
     hand.until_state("idle")
     assert hand.transition(DEACTIVATE)
     assert planner.status is None
+
+
+def test_a_second_life_that_ends_in_motion(hand: Hand, planner: NodeProcess) -> None:
+    for transition in (CLEANUP, CONFIGURE, ACTIVATE):
+        assert hand.transition(transition)
+    hand.until_heard()
+    assert hand.trigger("begin/corner_left").success
+    hand.until(lambda: hand.status["state"] == "moving" and float(hand.status["progress"]) > 0.2)
+    assert hand.transition(Transition.TRANSITION_ACTIVE_SHUTDOWN)
+    hand.until(lambda: planner.status is not None, what="the end of the planner")
+    assert planner.status == 0, "stopped in step first"
+    hand.until(lambda: hand.standing, 2.0)
+    assert hand.commands["left"][-1][1] == 0.0
+    assert "Traceback" not in planner.output()

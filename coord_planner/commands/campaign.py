@@ -1,0 +1,208 @@
+"""Many rehearsals with faults at random moments: who was warned how soon, how near robots came, how it ended.
+
+Run as ``python -m coord_planner.commands.campaign``; ``make campaign`` runs the whole of it.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from collections.abc import Iterator, Sequence
+from concurrent.futures import ProcessPoolExecutor, as_completed
+
+import attrs
+import numpy as np
+from rich.console import Console
+from rich.progress import Progress
+from rich.table import Table
+
+from .. import config
+from ..config.places import example
+from ..core.messages import State
+from ..errors import RefusedError
+from ..record.metrics import summary
+from ..trial.faults import KINDS, Fault
+from ..trial.hindsight import unavoidable
+from ..trial.rehearsal import rehearse
+from ..trial.run import Run
+
+# Which warnings tell of which fault. Any of them counts.
+TOLD_BY: dict[str, tuple[str, ...]] = {
+    "pose_lost": ("pose old",),
+    "pose_frozen": ("robot not following", "pose jumped", "pose unsteady"),
+    "pose_jump": ("pose jumped", "pose unsteady"),
+    "pose_noise": ("pose unsteady", "pose jumped"),
+    "robot_stuck": ("robot not following", "free way short", "pose unsteady"),
+    "robot_slow": ("robot not following", "free way short", "pose unsteady"),
+    "not_ready": ("robot not ready",),
+    "link_lost": ("graph changed", "graph split"),
+    "command_delay": ("robot not following", "pose unsteady", "free way short"),
+    "command_lost": ("robot not following", "pose unsteady", "free way short"),
+    "planner_late": ("plan late", "plan failed"),
+    "planner_fails": ("plan late", "plan failed"),
+}
+# From which size on a fault must be warned of, and within how many seconds.
+_MUST: dict[str, tuple[float, float]] = dict.fromkeys(KINDS, (0.0, 0.5))
+_MUST.update({
+    "pose_jump": (0.3, 0.5), "pose_noise": (0.3, 0.5), "command_delay": (0.3, 0.5), "robot_stuck": (0.0, 1.0),
+    "robot_slow": (0.6, 1.0),  # below this part of its speed, not above
+})
+_ENDS = (State.ENDED.value, State.HELD.value)
+_LEAST_MOVING = 1.5  # seconds after the beginning before which no fault strikes
+
+
+@attrs.frozen
+class Case:
+    """One rehearsal of the campaign."""
+
+    number: int
+    file: str
+    manoeuvre: str
+    seed: int
+    faults: tuple[Fault, ...]
+
+
+@attrs.frozen
+class Result:
+    """What came of a case.
+
+    Attributes:
+        contacts: footprints that touched. excused: contacts that no braking could have avoided.
+        clearance: smallest, metres. outside: published commands outside a limit. ended: the last state.
+        told_after: seconds from each fault's onset to its first warning, inf for none, by the fault's place.
+        owed: whether that warning was owed within the time, by the fault's place.
+    """
+
+    case: Case
+    contacts: int
+    excused: bool
+    clearance: float
+    outside: int
+    ended: str
+    told_after: tuple[float, ...]
+    owed: tuple[bool, ...]
+
+    @property
+    def kept(self) -> bool:
+        """Whether nothing went wrong that must not."""
+        late = any(
+            owed and after > _MUST[fault.kind][1] + 1e-6
+            for fault, after, owed in zip(self.case.faults, self.told_after, self.owed)
+        )
+        return (not self.contacts or self.excused) and not self.outside and self.ended in _ENDS and not late
+
+
+def cases(files: Sequence[str], count: int, seed: int) -> Iterator[Case]:
+    """Cases drawn at random: one to three faults each, every kind as often as the others."""
+    rng = np.random.default_rng(seed)
+    configurations = {file: config.load(file) for file in files}
+    kinds = list(KINDS)
+    for number in range(count):
+        file = files[number % len(files)]
+        configuration = configurations[file]
+        manoeuvre = str(rng.choice(list(configuration.manoeuvres)))
+        first = kinds[number % len(kinds)]
+        others = [str(kind) for kind in rng.choice(kinds, size=int(rng.integers(0, 3)))]
+        faults = tuple(_fault(kind, configuration, rng) for kind in (first, *others))
+        yield Case(number, file, manoeuvre, int(rng.integers(1 << 31)), faults)
+
+
+def _fault(kind: str, configuration: config.Configuration, rng: np.random.Generator) -> Fault:
+    begin = float(rng.uniform(_LEAST_MOVING, 8.0))
+    lasts = float(rng.uniform(0.6, 6.0))
+    values = {
+        "pose_jump": rng.uniform(0.3, 3.0), "pose_noise": rng.uniform(0.3, 1.0), "robot_slow": rng.uniform(0.0, 0.6),
+        "command_delay": rng.uniform(0.3, 1.5), "planner_late": rng.uniform(0.1, 1.0),
+    }
+    robot = str(rng.choice(configuration.fleet.names)) if KINDS[kind].target == "robot" else ""
+    edge = ("", "")
+    if KINDS[kind].target == "edge":
+        first, second, _ = configuration.edges[int(rng.integers(len(configuration.edges)))]
+        edge = (first, second)
+    return Fault(kind, robot, begin, begin + lasts, float(values.get(kind, 0.0)), edge)
+
+
+def play(case: Case) -> Result:
+    """Rehearse one case and judge it."""
+    configuration = config.load(case.file)
+    try:
+        run = rehearse(configuration, case.manoeuvre, seed=case.seed, faults=case.faults)
+    except RefusedError:
+        return Result(case, 0, False, np.inf, 0, "refused", (), ())
+    figures = summary(run)
+    told, owed = zip(*(_told(fault, run) for fault in case.faults))
+    contacts = int(figures["contacts"])
+    return Result(
+        case, contacts, bool(contacts) and unavoidable(run, case.faults), float(figures["min_clearance_m"]),
+        int(figures["limit_violations"]), run.state, told, owed,
+    )
+
+
+def _told(fault: Fault, run: Run) -> tuple[float, bool]:
+    """Seconds to the first warning of a fault, and whether one was owed: it struck in motion and was large enough."""
+    onset = run.began + fault.from_s
+    size, allowed = _MUST[fault.kind]
+    moving = np.abs(run.speeds[:, (run.times >= onset) & (run.times <= onset + allowed)]) > 0.2
+    large = fault.value < size if fault.kind == "robot_slow" else fault.value >= size
+    lasted = fault.to_s - fault.from_s >= allowed
+    started = onset + allowed <= run.ended
+    owed = bool(moving.size and moving.all() and large and lasted and started)
+    heard = [
+        max(first - onset, 0.0) for first, last, caution in run.cautions
+        if caution.code in TOLD_BY[fault.kind] and last >= onset
+    ]
+    return min(heard, default=np.inf), owed
+
+
+def _table(results: Sequence[Result]) -> Table:
+    table = Table("fault", "cases", "contacts", "excused", "smallest clearance", "outside a limit", "warned after (s)",
+                  "late", "completed", "held")
+    for kind in KINDS:
+        judged = [result for result in results if result.told_after]
+        struck = [(r, i) for r in judged for i, fault in enumerate(r.case.faults) if fault.kind == kind]
+        if not struck:
+            continue
+        after = [r.told_after[i] for r, i in struck if r.owed[i]]
+        late = sum(value > _MUST[kind][1] + 1e-6 for value in after)
+        runs = [r for r, _ in struck]
+        median = f"{np.median(after):.2f}, at most {max(after):.2f}" if after else "-"
+        table.add_row(
+            kind, str(len(runs)), str(sum(bool(r.contacts) for r in runs)), str(sum(r.excused for r in runs)),
+            f"{min(r.clearance for r in runs):.2f}", str(sum(r.outside for r in runs)), median, str(late),
+            str(sum(r.ended == State.ENDED.value for r in runs)), str(sum(r.ended == State.HELD.value for r in runs)),
+        )
+    return table
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Play the campaign; exit status 1 when something went wrong that must not."""
+    parser = argparse.ArgumentParser(description=__doc__, prog="python -m coord_planner.commands.campaign")
+    parser.add_argument("--count", type=int, default=500, help="rehearsals")
+    parser.add_argument("--seed", type=int, default=1, help="of the faults and the noise")
+    parser.add_argument("--workers", type=int, default=2, help="processes")
+    parser.add_argument("--json", action="store_true", help="one JSON object instead of a table")
+    parser.add_argument("files", nargs="*", help="parameter files; the example sites when left out")
+    given = parser.parse_args(arguments)
+    files = given.files or [str(example(name)) for name in ("solar_park.yaml", "snow_yard.yaml")]
+    console = Console(stderr=True)
+    results: list[Result] = []
+    with ProcessPoolExecutor(given.workers) as pool, Progress(console=console, disable=not console.is_terminal) as bar:
+        task = bar.add_task("rehearsals", total=given.count)
+        for future in as_completed([pool.submit(play, case) for case in cases(files, given.count, given.seed)]):
+            results.append(future.result())
+            bar.advance(task)
+    results.sort(key=lambda result: result.case.number)
+    broken = [result for result in results if not result.kept]
+    if given.json:
+        told = {"cases": len(results), "broken": [attrs.asdict(result) for result in broken]}
+        json.dump(told, sys.stdout, default=str)
+    else:
+        Console().print(_table(results))
+        for result in broken:
+            Console().print(f"case {result.case.number}: {result}", markup=False)
+    return 1 if broken else 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,190 @@
+"""Judges each tick: what is going wrong, and whether the fleet must stop because of it."""
+
+from __future__ import annotations
+
+from typing import Optional
+
+import attrs
+import numpy as np
+
+from . import outline, rules, stopping
+from .fleet import Fleet
+from .graph import NeighbourGraph
+from .messages import Caution, Snapshot
+from .observer import Estimate
+from .plan import near_pairs
+from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND
+from .pursuit import Pursuit
+from .settings import Settings
+from .silence import Silence
+
+SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
+_HOLD = 1.0  # seconds for which a warning stays after it was last raised, so that none flickers
+_AGING = 0.5  # part of poses.max_age from which a pose is called old
+_SLOW_FACTOR = 0.7  # part of its commanded speed below which a robot is called slow
+_DRIVING = 0.15  # m/s of commanded speed from which that can be told
+_AT_LIMIT = 0.995  # part of a limit that counts as reached
+_LONG = 3.0  # seconds
+_TROUBLE = 0.9  # speed factor below which stopping distances are looked at
+_GAP = 2.0  # seconds between snapshots that are a jump of the clock
+_SCATTER = 3.0  # times the expected scatter of poses
+
+
+@attrs.frozen(eq=False)
+class View:
+    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds."""
+
+    snapshot: Snapshot
+    estimate: Estimate
+    fleet: Fleet
+    graph: NeighbourGraph
+    settings: Settings
+    pursuit: Pursuit
+    at: float
+    period: float
+    planned_at: float
+    refused_change: str
+    silence: Optional[Silence]
+
+
+class Judge:
+    """Remembers for how long things have been so; otherwise everything is in the view."""
+
+    def __init__(self) -> None:
+        self._last_time: Optional[float] = None
+        self._at_limit: dict[tuple[str, str], float] = {}
+        self._graph: Optional[NeighbourGraph] = None
+        self._kept: dict[tuple[str, str], tuple[Caution, float]] = {}
+
+    def look(self, view: View) -> list[Caution]:
+        """Everything that is wrong at this moment, in motion."""
+        found = [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
+        found += [*_following(view), *self._limits(view), *_plans(view), *_spacing(view)]
+        return found
+
+    def hold(self, now: float, found: list[Caution]) -> tuple[Caution, ...]:
+        """What is shown: what is raised now, and what was a moment ago."""
+        for caution in found:
+            self._kept[(caution.code, caution.subject)] = (caution, now)
+        self._kept = {key: kept for key, kept in self._kept.items() if now - _HOLD <= kept[1] <= now}
+        return tuple(caution for caution, _ in self._kept.values())
+
+    def _inputs(self, view: View) -> list[Caution]:
+        settings, poses, now = view.settings, view.snapshot.poses, view.snapshot.time
+        found = [rules.pose_jumped(settings, name) for name in view.estimate.jumped]
+        for name, age, scatter in zip(view.fleet.names, view.estimate.age, view.estimate.scatter):
+            newest = poses.get(name)
+            if newest is not None and not np.isfinite([newest.stamp, newest.x, newest.y, newest.heading]).all():
+                found.append(rules.pose_invalid(settings, name))
+            elif newest is not None and newest.stamp - now > settings.poses.max_future:
+                found.append(rules.clock_offset(settings, name, newest.stamp - now))
+            if age > _AGING * settings.poses.max_age:
+                found.append(rules.pose_old(settings, name, float(age)))
+            if scatter > _SCATTER:
+                found.append(rules.pose_unsteady(settings, name, float(scatter)))
+        return found
+
+    def _clock(self, view: View) -> list[Caution]:
+        now, last = view.snapshot.time, self._last_time
+        self._last_time = now
+        if last is not None and not 0.0 <= now - last <= _GAP:
+            return [rules.clock_jumped(view.settings, now - last)]
+        return []
+
+    def _neighbours(self, view: View) -> list[Caution]:
+        found = []
+        if self._graph is not None and self._graph.edges != view.graph.edges:
+            found.append(rules.graph_changed(view.settings, len(view.graph.edges)))
+        self._graph = view.graph
+        if len(view.fleet) > 1 and not view.graph.connected:
+            found.append(rules.graph_split(view.settings, view.graph.components()))
+        return found
+
+    def _limits(self, view: View) -> list[Caution]:
+        """Robots that have been at a limit of their steering or turning for long."""
+        now = view.snapshot.time
+        speed = np.abs(view.estimate.states[:, SPEED_COMMAND])
+        bend = np.abs(view.estimate.states[:, CURVATURE_COMMAND])
+        used = {
+            "max_curvature": bend / view.fleet.limit("max_curvature"),
+            "max_turn_rate": speed * bend / view.fleet.limit("max_turn_rate"),
+            "max_lateral_acceleration": speed**2 * bend / view.fleet.limit("max_lateral_acceleration"),
+        }
+        found = []
+        for limit, parts in used.items():
+            for name, part in zip(view.fleet.names, parts):
+                since = self._at_limit.setdefault((name, limit), now) if part > _AT_LIMIT else now
+                if part <= _AT_LIMIT:
+                    self._at_limit.pop((name, limit), None)
+                elif now - since > _LONG:
+                    found.append(rules.limit_reached(view.settings, name, limit, now - since))
+        return found
+
+
+def _readiness(view: View) -> list[Caution]:
+    settings, snapshot = view.settings, view.snapshot
+    found = [rules.not_ready(settings, name) for name in view.fleet.names if name in snapshot.not_ready]
+    found += [rules.silent(settings, name) for name in view.fleet.names if name in snapshot.silent]
+    if snapshot.other_planner:
+        found.append(rules.other_planner(settings, snapshot.other_planner))
+    return found
+
+
+def _following(view: View) -> list[Caution]:
+    progress = view.settings.progress
+    found = []
+    lags, factors = view.pursuit.progress.lag, view.estimate.speed_factor
+    speeds = view.estimate.states[:, SPEED_COMMAND]
+    for name, lag, factor, speed in zip(view.fleet.names, lags, factors, speeds):
+        if lag > progress.dead_band + progress.full_lag / 2:
+            found.append(rules.not_following(view.settings, name, float(lag)))
+        elif factor < _SLOW_FACTOR and abs(speed) > _DRIVING:
+            found.append(rules.too_slow(view.settings, name, float(factor)))
+    return found
+
+
+def _plans(view: View) -> list[Caution]:
+    found = []
+    if view.refused_change:
+        found.append(rules.change_refused(view.settings, view.refused_change))
+    without = view.snapshot.time - view.planned_at
+    if without > view.settings.horizon.keep:
+        found.append(rules.plans_missing(view.settings, without))
+    if view.silence is not None and view.silence.clearance < view.settings.site_rules.min_clearance - SHORT:
+        found.append(rules.silence_unsafe(view.settings, view.silence))
+    return found
+
+
+def _spacing(view: View) -> list[Caution]:
+    """Clearance now, and whether a stop would still keep it when it is begun a tick later."""
+    settings, fleet, estimate = view.settings, view.fleet, view.estimate
+    poses = estimate.states[:, None, POSE]
+    if len(fleet) < 2 or not np.isfinite(poses).all():
+        return []
+    allowed = settings.site_rules.min_clearance
+    pairs = near_pairs(fleet, poses, allowed + 0.5 + 2 * float(estimate.growth.max()))
+    gap, pair = outline.closest(outline.outlines(fleet.corners(), poses), pairs, estimate.growth)
+    # The estimate itself is uncertain: only what is clearly short is called a breach.
+    if gap < allowed - 2.0 * settings.poses.noise_xy:
+        return [rules.clearance_breached(settings, _names(fleet, pair), gap)]
+    if not _troubled(view):
+        return []
+    now = view.snapshot.time
+    later = stopping.choose(view.pursuit.schedule, view.at + view.period, fleet, estimate, now)
+    if later.clearance >= allowed:
+        return []
+    at_once = stopping.choose(view.pursuit.schedule, view.at, fleet, estimate, now)
+    if at_once.clearance <= later.clearance + SHORT:
+        return []  # stopping gains nothing: the plan itself leads away
+    return [rules.free_way_short(settings, _names(fleet, later.pair), later.clearance)]
+
+
+def _troubled(view: View) -> bool:
+    """Whether some robot does not do as planned; while all do, planned configurations are kept by a stop in step."""
+    estimate, progress = view.estimate, view.settings.progress
+    late = view.pursuit.progress.lag.max() > progress.dead_band or estimate.speed_factor.min() < _TROUBLE
+    return bool(late or estimate.growth.max() > SHORT)
+
+
+def _names(fleet: Fleet, pair: tuple[int, int]) -> tuple[str, str]:
+    return fleet.names[pair[0]], fleet.names[pair[1]]
