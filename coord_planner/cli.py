@@ -7,6 +7,7 @@ import typer
 from .commands.check import check
 from .commands.demo import demo
 from .commands.simulate import simulate
+from .commands.solve import solve
 
 app = typer.Typer(
     help="Coordinated motion planning for several ground robots that turn together. "
@@ -15,6 +16,7 @@ app = typer.Typer(
 )
 app.command()(demo)
 app.command()(check)
+app.command()(solve)
 app.command()(simulate)
 
 

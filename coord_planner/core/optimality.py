@@ -158,10 +158,8 @@ def _inertia(point: Point) -> tuple[int, int, int, int, int, int, int, Optional[
     add one positive and one negative eigenvalue (Haynsworth's formula), and so does each independent active row.
     """
     held = _active(point.vector, point.lower, point.upper, point.bound_multipliers)
-    fixed = point.lower == point.upper
     is_state = np.zeros(len(held), dtype=bool)
     is_state[point.states] = True
-    is_state &= ~fixed
     controls = np.flatnonzero(~is_state & ~held)
     states, bounded = np.flatnonzero(is_state), np.flatnonzero(is_state & held)
     others = _active(point.rows, point.row_lower, point.row_upper, point.row_multipliers)

@@ -8,6 +8,7 @@ import casadi as ca
 import numpy as np
 from scipy import sparse
 
+from ..blocks import Blocks
 from ..optimality import Point
 from .program import Program
 
@@ -33,11 +34,11 @@ def evaluated(
         jacobian=sparse.csr_matrix(jacobian.sparse()), hessian=upper + sparse.triu(upper, 1).T.tocsr(),
         lower=bounds[0], upper=bounds[1], row_lower=row_bounds[0], row_upper=row_bounds[1],
         bound_multipliers=bound_multipliers, row_multipliers=row_multipliers,
-        states=_places(built.variables, built.states, bounds), dynamics=_places(built.rows, built.dynamics),
+        states=_places(built.variables, built.states, first=True), dynamics=_places(built.rows, built.dynamics),
     )
 
 
-def _places(layout: Any, names: tuple[str, ...], bounds: Ends | None = None) -> np.ndarray:
-    """Positions of blocks in their vector; without those that are fixed, such as the first state."""
-    places = np.concatenate([np.arange(layout.size)[layout.slices[name]] for name in names])
-    return places if bounds is None else places[bounds[0][places] < bounds[1][places]]
+def _places(layout: Blocks, names: tuple[str, ...], first: bool = False) -> np.ndarray:
+    """Positions of blocks in their vector; without their ``first`` columns, the given initial state, when asked."""
+    every = np.arange(layout.size)
+    return np.concatenate([every[layout.slices[name]][layout.shapes[name][0] * first:] for name in names])

@@ -9,7 +9,7 @@ import attrs
 import numpy as np
 
 from ...errors import SolveError
-from .. import multistart
+from .. import multistart, se2
 from . import impossible
 from .guesses import guesses
 from .impossible import Obstacle
@@ -59,6 +59,8 @@ class DirectPlan:
     @property
     def times(self) -> np.ndarray:
         """Nodes, shape (M + 1,), seconds: equally spaced, or so between changes of gear."""
+        if not self._solution.shape.phases:
+            return self.problem.times
         return np.concatenate([[0.0], np.cumsum(self._solution.intervals)]) * self.problem.duration
 
     @property
@@ -77,6 +79,12 @@ class DirectPlan:
         poses = self._solution.poses
         metres = poses[..., :2] * self.units.metre + np.array(self.units.middle)
         return np.concatenate([metres, poses[..., 2:]], axis=-1)
+
+    def between(self, count: int) -> np.ndarray:
+        """Poses at the nodes and at ``count`` - 1 moments within each interval, shape (N, K, 3)."""
+        speed, curvature = np.repeat(self.speed, count, axis=1), np.repeat(self.curvature, count, axis=1)
+        distance = speed * np.repeat(np.diff(self.times), count) / count
+        return se2.rollout(self.problem.starts, distance, distance * curvature)
 
     @property
     def turning(self) -> np.ndarray:
