@@ -1,0 +1,99 @@
+"""Measures what ``coord-planner solve`` promises on problems it has not seen; takes minutes, so no test collects it.
+
+    OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_solve.py [COUNT [FIRST_SEED]]
+    OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_solve.py --order
+
+"Best known" is the cheapest extremal of an independent shooting solution (core/theory), from the plan itself and from
+a search of its own with other seeds and many more first guesses.
+"""
+
+from __future__ import annotations
+
+import itertools
+import sys
+import time
+
+import numpy as np
+from posed import anywhere, classical, driven
+
+from coord_planner.core import multistart
+from coord_planner.core.direct import planning
+from coord_planner.core.theory import search, shooting
+from coord_planner.core.theory.coarse import minimise
+from coord_planner.errors import SolveError
+
+COUPLINGS = (0.0, 0.1, 1.0, 10.0, 100.0, 1000.0)
+KINDS = ("path", "cycle", "star", "complete")
+
+
+def best_known(problem, plan, searches=1):
+    """The lowest cost of an extremal that shooting reaches; NaN where it reaches none."""
+    relaxed = classical(problem)
+    starts = [plan.curvature * problem.duration]
+    for seed in range(1, 1 + searches):
+        try:
+            starts += [found.curvature for found in search.minima(relaxed, seed=seed, hops=40).minima[:2]]
+        except SolveError:
+            pass
+    costs = []
+    for start in starts:
+        try:
+            coarse = minimise(relaxed, search.resampled(start, min(start.shape[1], 100)))
+            costs.append(shooting.shoot(relaxed, coarse).cost)
+        except SolveError:
+            continue
+    return min(costs, default=np.nan)
+
+
+def measure(count, first):
+    worst, slowest = [-np.inf, np.inf], {}
+    misses = unknown = 0
+    cases = itertools.cycle(itertools.product(range(1, 7), COUPLINGS, KINDS))
+    order = np.random.default_rng(0).permutation(6 * len(COUPLINGS) * len(KINDS))
+    cases = [list(itertools.product(range(1, 7), COUPLINGS, KINDS))[i] for i in order]
+    for i in range(count):
+        robots, coupling, kind = cases[i % len(cases)]
+        problem = (driven if i % 3 else anywhere)(first + i, robots, kind, coupling)
+        began, wall = time.process_time(), time.perf_counter()
+        plan = planning.plan(problem)
+        took, wall = time.process_time() - began, time.perf_counter() - wall
+        slowest[robots] = max(slowest.get(robots, 0.0), took)
+        if plan.solved is None:
+            misses += 1
+            print(f"{first + i}: {robots} {kind} {coupling:g}: {plan.status} {plan.reason}", flush=True)
+            continue
+        best = best_known(problem, plan)
+        scaled = (plan.cost / best - 1) * problem.intervals**2
+        unknown += np.isnan(scaled)
+        good = plan.judgement.check.clean and (np.isnan(scaled) or -1e-8 * problem.intervals**2 <= scaled <= 30)
+        misses += not good
+        worst = [np.nanmax([worst[0], scaled]), np.nanmin([worst[1], scaled])]
+        print(f"{first + i}: {robots} {kind} {coupling:g} cost {plan.cost:.6g} (gap M^2) {scaled:.3g} "
+              f"sharpest {np.abs(plan.curvature).max() * problem.duration:.0f} tried {plan.tried} cpu {took:.1f} s "
+              f"wall {wall:.1f} s {plan.judgement.check.words} H {plan.judgement.drifts.hamiltonian:.0e} "
+              f"{'' if good else '<<<'}", flush=True)
+    print(f"{count} problems: {misses} misses, {unknown} without a best known; gap times M^2 from {worst[1]:.3g} to "
+          f"{worst[0]:.3g}; largest CPU seconds by robots {({k: round(v, 1) for k, v in sorted(slowest.items())})}")
+    return misses
+
+
+def order(seeds=range(8)):
+    counts = np.array([50, 100, 200, 400])
+    for seed in seeds:
+        robots = 1 + seed % 3
+        errors, best = [], np.nan
+        for intervals in counts[::-1]:
+            problem = driven(1000 + seed, robots, KINDS[seed % 4], (0.0, 1.0, 30.0)[seed % 3], intervals=int(intervals))
+            plan = planning.plan(problem, neighbours=False)
+            best = best_known(problem, plan, 0) if np.isnan(best) else best
+            errors.append(plan.cost / best - 1)
+        slope = -np.polyfit(np.log(counts[::-1]), np.log(errors), 1)[0]
+        print(f"seed {seed}, {robots} robots: errors {np.array(errors[::-1])}, order {slope:.3f}", flush=True)
+
+
+if __name__ == "__main__":
+    if sys.argv[1:] == ["--order"]:
+        order()
+    else:
+        numbers = [int(word) for word in sys.argv[1:]]
+        sys.exit(bool(measure(*(numbers + [48, 5000][len(numbers):]))))
