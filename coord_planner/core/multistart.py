@@ -24,10 +24,13 @@ _KEPT = 8  # of a population
 _OWN = 7  # minima of each robot that are combined
 _COMBINED = 20000  # combinations that are looked at
 _STEP = 4.0  # factor from one coupling to the next on the way
-_HOPS = (12, 6)  # disturbances of the best at the end, and for each robot more
+_HOPS = (24, 12)  # disturbances of the best at the end, and for each robot more
 _REFINED = 5  # minima that are looked at on more intervals
 _BETWEEN = 80  # intervals on which most of them drop out
-_NEARLY = (0.3, 0.01)  # relative difference of cost within which a minimum may still turn out the cheapest
+_HOPS_BETWEEN = 16  # disturbances there, where curls turn by more than _TIGHT radians in an interval
+_TIGHT = 1.5
+_LONG = 150  # iterations for plans on more intervals
+_NEARLY = (0.3, 0.02)  # relative difference of cost within which a minimum may still turn out the cheapest
 _SAME = 1e-6  # relative difference of cost below which two minima count as one
 
 Progress = Callable[[float], None]
@@ -88,7 +91,7 @@ def minima(
     best = distinct(population)
     for hop in range(hops if best else 0):
         guess = best[min(int(random.integers(4)), len(best) - 1)].curvature.copy()
-        if hop % 2:
+        if hop % 3:
             guess += disturbance(guess.shape, random)
         else:  # one robot takes another of its own shapes
             robot = int(random.integers(len(problem)))
@@ -100,23 +103,31 @@ def minima(
     return Minima(tuple(best), tally.tried, tally.converged)
 
 
-def refined(problem: ClassicalProblem, rough: Minima, intervals: int) -> Coarse:
+def refined(problem: ClassicalProblem, rough: Minima, intervals: int, seed: int = 0) -> Coarse:
     """The cheapest of the best few minima on more intervals: few intervals can exchange minima that cost nearly the
-    same, and tight curls are coarse on them.
+    same. Where curls are so tight that few intervals hardly see them, there are disturbances on more intervals too.
 
     Raises:
         SolveError: none of them is one on more intervals.
     """
     plans = [plan for plan in rough.found[:_REFINED] if plan.cost <= rough.best.cost * (1 + _NEARLY[0])]
-    for count, nearly in ((_BETWEEN, _NEARLY[1]), (intervals, 0.0)):
-        if count > intervals:
-            continue
-        plans = distinct(minimise(problem, resampled(plan.curvature, count)) for plan in plans)
-        plans = [plan for plan in plans if plan.cost <= plans[0].cost * (1 + nearly)]
+    if intervals >= _BETWEEN:
+        plans = distinct(minimise(problem, resampled(plan.curvature, _BETWEEN), _LONG) for plan in plans)
+        if plans and np.abs(rough.best.curvature).max() > _TIGHT * rough.best.curvature.shape[1]:
+            plans = _disturbed(problem, plans, np.random.default_rng(seed))
+        plans = [plan for plan in plans if plan.cost <= plans[0].cost * (1 + _NEARLY[1])]
+    plans = distinct(minimise(problem, resampled(plan.curvature, intervals), _LONG) for plan in plans)
     if not plans:
         raise SolveError(f"the minima on {rough.best.curvature.shape[1]} intervals are none on {intervals}; "
                          "give other intervals, or ends that are easier to reach")
     return plans[0]
+
+
+def _disturbed(problem: ClassicalProblem, plans: list[Coarse], random: np.random.Generator) -> list[Coarse]:
+    for _ in range(_HOPS_BETWEEN):
+        guess = plans[min(int(random.integers(3)), len(plans) - 1)].curvature
+        plans = distinct([*plans, minimise(problem, guess + disturbance(guess.shape, random), _LONG)])
+    return plans
 
 
 def distinct(plans: Iterable[Coarse], most: Optional[int] = None) -> list[Coarse]:

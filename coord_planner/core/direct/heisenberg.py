@@ -31,7 +31,7 @@ PLACE = ("x", "y", "z")
 _COARSE = 32  # intervals on which first guesses are compared
 _GUESSES = 24
 _FINER = 2  # of the best there that are solved on all intervals
-_SLIGHT = 1e-6  # of the cost: a costate below it is none
+_SLIGHT = 1e-3  # of the cost: a costate below it is hardly one
 _SAME = 1e-5  # relative difference of cost below which two solutions count as one
 
 

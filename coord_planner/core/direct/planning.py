@@ -204,7 +204,7 @@ def _best_classical(own: DirectProblem, part: DirectProblem, seed: int, progress
     relaxed = own.relaxed()
     try:
         rough = multistart.minima(relaxed, seed=seed, progress=progress)
-        fine = multistart.refined(relaxed, rough, own.intervals)
+        fine = multistart.refined(relaxed, rough, own.intervals, seed)
     except SolveError as error:
         return _Best(None, 0, 0, (), (), str(error))
     reached = tuple(minimum.cost for minimum in rough.found)

@@ -139,6 +139,11 @@ class DirectProblem:
         return len(self.names)
 
     @property
+    def times(self) -> np.ndarray:
+        """Nodes of equal intervals, shape (M + 1,), seconds."""
+        return np.linspace(0.0, self.duration, self.intervals + 1)
+
+    @property
     def length(self) -> float:
         """Way driven at the asked speed, metres."""
         return abs(self.speeds.asked) * self.duration
