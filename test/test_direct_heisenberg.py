@@ -50,7 +50,9 @@ def test_a_circle_of_chords():
     assert found.check.flat == 1 and "one way to change it costs nothing" in found.check.words
 
 
-@pytest.mark.parametrize(("first", "second", "coupling"), [(1, 0, 4), (1, 0.9, 2), (1, 0.05, 2), (1, -0.5, 2), (-0.3, -1.2, 0.7)])
+@pytest.mark.parametrize(
+    ("first", "second", "coupling"), [(1, 0, 4), (1, 0.9, 2), (1, 0.05, 2), (1, -0.5, 2), (-0.3, -1.2, 0.7)]
+)
 def test_two_coupled_copies(first, second, coupling):
     found = solved([[0, 0, 0]] * 2, [[0, 0, first], [0, 0, second]], coupling, intervals=60)
     assert -1e-9 <= found.cost / closed.coupled_energy(first, second, coupling) - 1 <= 30 / 60**2
@@ -60,7 +62,8 @@ def test_two_coupled_copies(first, second, coupling):
 
 def test_error_falls_as_the_square_of_the_interval():
     counts = np.array([25, 50, 100, 200])
-    errors = [solved([[0, 0, 0]], [[1, 0, 0.25]], intervals=int(m)).cost / closed.energy(1, 0, 0.25) - 1 for m in counts]
+    exact = closed.energy(1, 0, 0.25)
+    errors = [solved([[0, 0, 0]], [[1, 0, 0.25]], intervals=int(count)).cost / exact - 1 for count in counts]
     assert 1.8 < -np.polyfit(np.log(counts), np.log(errors), 1)[0] < 2.2
 
 

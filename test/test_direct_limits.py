@@ -1,5 +1,6 @@
 """Plans within limits and clearances: held exactly, against independent optimisers and published bounds."""
 
+import itertools
 import math
 
 import attrs
@@ -92,7 +93,7 @@ def test_free_speeds_against_an_independent_optimiser():
     problem = posed([[0, 0, 0], [0, 1, 0]], [[1.2, 1.0, 1.6], [2.0, 2.0, 1.6]], [[0, 1]], 1.0, 3.0, 10,
                     caps=capped(2, max_turn_rate=0.8), speeds=Speeds(0.2, 1.2, 1.0), prices=SmallPrices(speed=2.0))
     plan = solved(problem)
-    assert 0.2 - 1e-8 <= plan.speed.min() and plan.speed.max() <= 1.2 + 1e-8
+    assert plan.speed.min() >= 0.2 - 1e-8 and plan.speed.max() <= 1.2 + 1e-8
     assert np.abs(plan.speed * plan.curvature).max() == pytest.approx(0.8, abs=1e-6)
     assert plan.judgement.drifts.hamiltonian < 2e-2  # few intervals; it falls with more
     assert independent(problem, (plan.curvature, plan.speed)) == pytest.approx(plan.cost, rel=1e-7)
@@ -160,7 +161,7 @@ def test_no_way_is_shorter_than_reeds_and_shepp(end, length, spare):
     assert length * (1 - 1e-9) <= way <= problem.duration * (1 + 1e-9)
     assert {-1.0, 1.0} == set(np.sign(plan.speed[0]))
     assert np.abs(plan.curvature).max() <= 1 + 1e-9
-    gears = [int(gear) for i, gear in enumerate(np.sign(plan.speed[0])) if i == 0 or gear != np.sign(plan.speed[0, i - 1])]
+    gears = [int(gear) for gear, _ in itertools.groupby(np.sign(plan.speed[0]))]
     known = {path.gears for path in reeds_shepp.paths((0, 0, 0), end, 1.0)}
     assert tuple(gears) in known | {tuple(-gear for gear in each) for each in known}
 

@@ -116,7 +116,8 @@ def test_derivatives_are_those_of_the_program(solved):
 def test_a_solution_is_clean_and_what_is_next_to_it_is_not(solved):
     """The solver's word does not count: ``success`` stays True on the spoilt ones."""
     assert optimality.check(point_of(solved)).clean
-    for spoilt in (attrs.evolve(solved, vector=solved.vector * (1 + 1e-4)), attrs.evolve(solved, rows=solved.rows * 1.01)):
+    off = attrs.evolve(solved, vector=solved.vector * (1 + 1e-4)), attrs.evolve(solved, rows=solved.rows * 1.01)
+    for spoilt in off:
         found = optimality.check(point_of(spoilt))
         assert spoilt.success and not found.clean and "not known" in found.words
 

@@ -91,12 +91,12 @@ def again(problem: Problem, start: Optional[Start], warm: bool) -> Again:
         return Again(problem, "failed", "the solver returned numbers that are not finite", (), None, None, fresh)
     check = _check(problem, plan)
     obstacles = _obstacles(problem, plan)
-    if obstacles:
-        return Again(problem, "infeasible", "; ".join(each.text for each in obstacles), obstacles, plan, check, fresh)
+    missed = "; ".join(each.text for each in obstacles)
+    status, reason = ("infeasible", missed) if missed else ("solved", "")
     if not plan.solved:
-        reason = f"the solver did not finish in {plan.iterations} iterations; {check.words}"
-        return Again(problem, "failed", reason, (), plan, check, fresh)
-    return Again(problem, "solved", "", (), plan, check, fresh)
+        status, reason = "failed", f"the solver did not finish in {plan.iterations} iterations; {check.words}"
+        reason += f"; {missed}" if missed else ""
+    return Again(problem, status, reason, obstacles, plan, check, fresh)
 
 
 def _solved(problem: Problem, start: Start, warm: bool) -> Optional[Plan]:
