@@ -132,8 +132,8 @@ def test_as_a_process(tmp_path):
     for text, expected in cases:
         file = written(tmp_path, text)
         done = subprocess.run(
-            [sys.executable, "-W", "error", "-c", program, "solve", str(file), "--json"], capture_output=True, text=True,
-            timeout=300, check=False, env={**os.environ, "PYTHONPATH": str(ROOT)})
+            [sys.executable, "-W", "error", "-c", program, "solve", str(file), "--json"], capture_output=True,
+            text=True, timeout=300, check=False, env={**os.environ, "PYTHONPATH": str(ROOT)})
         assert done.returncode == expected, done.stderr
         assert "Traceback" not in done.stderr and len(done.stderr.splitlines()) == (expected != 0)
         assert (done.stdout == "") == (expected == 2)
