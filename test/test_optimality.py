@@ -15,7 +15,7 @@ from scipy.optimize import root
 from coord_planner.core import multistart, optimality
 from coord_planner.core.direct import planning, solution
 from coord_planner.core.direct import program as programs
-from coord_planner.core.direct.judged import judge, point_of
+from coord_planner.core.direct.judged import judge, point_of, with_neighbours
 from coord_planner.core.direct.problem import Units
 from coord_planner.core.direct.solution import Guess, solve
 from coord_planner.core.theory.reach import reach
@@ -124,7 +124,7 @@ def test_a_solution_is_clean_and_what_is_next_to_it_is_not(solved):
 
 def test_multipliers_of_the_steps_are_the_slopes_of_the_cost(solved):
     """d cost / d end by solving neighbouring problems: the envelope theorem (from memory)."""
-    found, problem = judge(solved), solved.problem
+    found, problem = with_neighbours(judge(solved), solved), solved.problem
     assert found.end_identity < 1e-5 and found.coupling_identity < 1e-6
     robot = int(np.flatnonzero(problem.placed)[0])
     force = found.costates.before[robot, -1]

@@ -12,7 +12,8 @@ from hypothesis import strategies as st
 
 from coord_planner.config import problem_file
 from coord_planner.config.failures import FailureStore
-from coord_planner.config.problem_file import PlannerCase, to_problem_file
+from coord_planner.config.problem_file import to_problem_file
+from coord_planner.core.case import PlannerCase
 from coord_planner.core.direct.heisenberg import HeisenbergProblem
 from coord_planner.core.direct.problem import Caps, DirectProblem, SmallPrices, Speeds
 from coord_planner.errors import SettingsError
@@ -92,7 +93,7 @@ def problems(draw):
     return DirectProblem(
         tuple(draw(st.permutations(["a", "on", "1e5", "robot 4"])))[:count], np.array(place[:count]), ends, joined,
         np.array([draw(st.floats(0.1, 9)) for _ in joined]), draw(st.floats(0, 1000)), draw(st.floats(0.1, 100)),
-        draw(st.integers(2, 300)), speeds, Caps(**caps), min_clearance=draw(st.floats(0.01, 5)),
+        draw(st.integers(3, 300)), speeds, Caps(**caps), min_clearance=draw(st.floats(0.01, 5)),
         boxes=np.array([draw(st.sampled_from([(0, 0, 0, 0), (1.2, 0.8, 0.1, -0.2)])) for _ in range(count)]),
         alignment=draw(st.floats(0, 10)),
         prices=SmallPrices(draw(st.floats(0, 9)), *((0.0, 0.0) if speeds.fixed else (0.5, draw(st.floats(0, 9))))),
@@ -286,6 +287,17 @@ def test_a_disk_that_refuses_disturbs_nobody(tmp_path):
     tmp_path.chmod(0o500)
     store = FailureStore(tmp_path / "failures")
     assert store.save({}) is None and "failures" in store.trouble
+
+
+def test_what_is_not_finite_disturbs_nobody(case, tmp_path):
+    """Multipliers of a solve that diverged are left out; a problem that is not finite itself cannot be kept."""
+    spoilt = attrs.evolve(case, start=attrs.evolve(case.start, multipliers=(case.start.vector * math.nan,) * 2))
+    store = FailureStore(tmp_path)
+    back = problem_file.load(store.save(to_problem_file(spoilt)))
+    assert back.start is None and "not finite" in back.reason
+    same(back.problem, case.problem)
+    nowhere = attrs.evolve(case.problem, initial=case.problem.initial * math.nan)
+    assert store.save(to_problem_file(nowhere)) is None and "not finite" in store.trouble
 
 
 def test_a_file_in_the_way_disturbs_nobody(tmp_path):

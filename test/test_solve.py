@@ -14,12 +14,14 @@ from test_problem_file import GOOD, written
 from typer.testing import CliRunner
 
 from coord_planner.cli import app
-from coord_planner.commands import solve as command
-from coord_planner.config.problem_file import PlannerCase, to_problem_file
+from coord_planner.config.failures import FailureStore, keeping
+from coord_planner.config.problem_file import to_problem_file
 from coord_planner.core import again, solver
+from coord_planner.core.case import PlannerCase
 from coord_planner.core.fleet import Fleet, Robot
 from coord_planner.core.problem import Problem, Watch, bounds_in_force
 from coord_planner.core.settings import Prices
+from coord_planner.errors import SolveError
 
 ROOT = Path(__file__).parents[1]
 PROMISED = {"status", "cost", "effort", "disagreement", "times", "curvature", "poses", "optimality"}
@@ -35,6 +37,12 @@ def call(*words):
 def answer(file):
     status, out, err = call("solve", file, "--json")
     return status, json.loads(out), err
+
+
+def test_few_intervals_are_told(tmp_path):
+    file = written(tmp_path, GOOD.replace("intervals: 50", "intervals: 8"))
+    assert answer(file)[1]["largest_turn_in_an_interval_rad"] > 0.5
+    assert "with more intervals the cost will be lower" in call("solve", file)[1]
 
 
 def test_the_promised_keys(tmp_path):
@@ -139,19 +147,6 @@ def test_as_a_process(tmp_path):
         assert (done.stdout == "") == (expected == 2)
 
 
-def test_the_bar_shows_itself_late_and_only_on_a_terminal(monkeypatch):
-    seconds = iter([0.0, 0.5, 1.9, 2.1, 9.0, 9.0])
-    for terminal, shown in ((True, True), (False, False)):
-        bar = command._Bar(clock=lambda: next(seconds, 9.0))
-        monkeypatch.setattr(type(bar._console), "is_terminal", terminal)
-        states = []
-        with bar:
-            for _ in range(4):
-                bar.advance(0.5)
-                states.append(bar._shown)
-        assert states == ([False, False, True, True] if shown else [False] * 4)
-
-
 # Failures of the planner
 
 
@@ -206,5 +201,32 @@ def test_a_saved_program_that_the_solver_did_not_finish_fails_again():
     rows = solver.solve(problem, begun).multipliers[1]
     # Multipliers of no use: a few iterations from there, as a tick has them, do not suffice.
     spoilt = attrs.evolve(begun, vector=begun.vector * 50, multipliers=(begun.vector * 1e3, rows * -1e4))
-    found = again.again(problem, spoilt, True)
+    found = again.again(PlannerCase(problem, spoilt, True))
     assert found.status == "failed" and "did not finish" in found.reason and found.fresh.solved
+
+
+def test_what_fails_in_a_tick_is_kept_once_and_can_be_solved_again(tmp_path):
+    """A solver that is given too little, as ``Coordinator`` has it: solved, twice failed, solved, failed again."""
+    problem, store = driven_on(), FailureStore(tmp_path)
+    start = solver.start_from_states(problem, np.repeat(problem.initial[:, None], 9, axis=1))
+    good = solver.solve(problem, start)
+    start = solver.Start(good.vector, good.multipliers)
+    unfinished = attrs.evolve(good, solved=False, rates=good.rates * math.nan)
+    answers = iter([good, unfinished, SolveError("not finite"), good, SolveError("not finite")])
+
+    def poor(_problem, _start, _warm, _budget):
+        answer = next(answers)
+        if isinstance(answer, SolveError):
+            raise answer
+        return answer
+
+    solve = keeping(poor, store, 0.5, "tick")
+    for expected in (0, 1, 1, 1, 2):
+        try:
+            assert solve(problem, start, True, 0.1) in (good, unfinished)
+        except SolveError:
+            assert expected >= 1
+        assert len(store.files()) == expected
+    status, found, _ = answer(store.files()[1])
+    assert status == 0 and found["saved_because"] == "not finite"
+    assert found["cost"] == pytest.approx(good.cost, abs=1e-3)

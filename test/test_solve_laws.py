@@ -16,7 +16,7 @@ from coord_planner.core.direct import planning
 from coord_planner.core.graph import NeighbourGraph
 
 SEEDS = st.integers(0, 10**6)
-FEW = settings(max_examples=4, deadline=None)
+FEW = settings(max_examples=3, deadline=None)
 INTERVALS = 40
 
 
@@ -38,7 +38,7 @@ def moved(poses, motion):
 @given(SEEDS, st.integers(0, 2), st.tuples(*[st.floats(-9, 9)] * 3))
 def test_moving_one_robot_with_its_end_changes_nothing(seed, robot, motion):
     """Any element of SE(2)."""
-    problem = driven(seed, 3, "path", 4.0, INTERVALS)
+    problem = driven(seed, 3, "path", 4.0, 30)
     starts, ends = problem.starts.copy(), problem.ends.copy()
     starts[[robot]], ends[[robot]] = moved(starts[[robot]], motion), moved(ends[[robot]], motion)
     other = solved(attrs.evolve(problem, starts=starts, ends=ends))
@@ -60,8 +60,8 @@ def test_scaling(seed, scale):
 @given(SEEDS)
 def test_the_cost_never_falls_with_the_coupling_and_is_concave_in_it(seed):
     """V(chi_i) <= effort_j + chi_i * disagreement_j for the global minimum."""
-    couplings = (0.0, 0.1, 1.0, 10.0, 100.0)
-    plans = [solved(driven(seed, 3, "star", chi, INTERVALS)) for chi in couplings]
+    couplings = (0.0, 0.3, 3.0, 100.0)
+    plans = [solved(driven(seed, 2, "path", chi, INTERVALS)) for chi in couplings]
     for i, j in itertools.product(range(len(plans)), repeat=2):
         assert plans[i].cost <= (plans[j].effort + couplings[i] * plans[j].disagreement) * (1 + 1e-6)
     assert all(after.cost >= before.cost * (1 - 1e-6) for before, after in itertools.pairwise(plans))

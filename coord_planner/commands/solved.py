@@ -16,6 +16,7 @@ from ..core.optimality import Check
 from .speaking import CAUTION, table, write, write_heading, write_table
 
 Figures = dict[str, Any]
+_COARSE = 0.5  # rad within an interval: more is coarse
 _BETWEEN = 4  # moments in each interval at which the clearance is looked at
 
 
@@ -32,7 +33,7 @@ def of_direct(plan: DirectPlan) -> Figures:
         "times": plan.times.tolist(), "curvature": plan.curvature.tolist(), "poses": plan.poses.tolist(),
         "optimality": _optimality(plan, plan.judgement), "speed": speed.tolist(),
         "path_length_m": dict(zip(names, (np.abs(speed) * h).sum(axis=1).tolist())),
-        "min_clearance_m": _clearance(plan),
+        "min_clearance_m": _clearance(plan), "largest_turn_in_an_interval_rad": _largest_turn(plan),
     }
 
 
@@ -127,6 +128,10 @@ def _finite(value: float) -> Optional[float]:
     return value if np.isfinite(value) else None
 
 
+def _largest_turn(plan: DirectPlan) -> float:
+    return float(np.abs(np.diff(plan.poses[..., 2], axis=1)).max())
+
+
 def _clearance(plan: DirectPlan) -> Optional[float]:
     """Smallest exact distance between any two footprints, at the nodes and between them."""
     problem = plan.problem
@@ -147,6 +152,9 @@ def write_figures(figures: Figures, problem: str) -> None:
           f"{figures['disagreement']:.6g}.")
     check = figures["optimality"]
     write(f"{check['words'].capitalize()}.\n")
+    turn = figures.get("largest_turn_in_an_interval_rad") or 0.0
+    if turn > _COARSE:
+        write(f"Somebody turns by {turn:.2g} rad within one interval: with more intervals the cost will be lower.\n")
     _write_robots(figures)
     _write_check(check)
     _write_starts(figures)

@@ -10,6 +10,15 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any, Optional
 
+from ..core.case import PlannerCase
+from ..core.coordinator import Solve
+from ..core.plan import Plan
+from ..core.problem import Problem
+from ..core.solver import Start
+from ..core.tick import usable
+from ..errors import SolveError
+from .problem_file import to_problem_file
+
 _OURS = re.compile(r"problem_(\d{6})(?:_[A-Za-z0-9_-]*)?\.json\Z")
 _WORD = re.compile(r"[^A-Za-z0-9_-]+")
 
@@ -38,9 +47,13 @@ class FailureStore:
         Args:
             label: a few words for the file's name, e.g. the manoeuvre.
         """
-        raw = json.dumps(document, allow_nan=False).encode()
         with self._lock:
             self.trouble = ""
+            try:
+                raw = json.dumps(document, allow_nan=False).encode()
+            except ValueError:
+                self.trouble = "the problem holds numbers that are not finite, which no problem file can hold"
+                return None
             if len(raw) > self._max_bytes:
                 self.trouble = f"a problem of {len(raw)} bytes is larger than all may be together, {self._max_bytes}"
                 return None
@@ -72,3 +85,31 @@ class FailureStore:
         unfinished.write_bytes(raw)
         os.replace(unfinished, file)  # whoever looks never finds half a file
         return file
+
+
+def keeping(solve: Solve, store: FailureStore, least_clearance: float, label: str = "") -> Solve:
+    """A tick's solve that keeps what fails: hand it to the Coordinator in the place of ``solve``.
+
+    Of failures that follow one another only the first is kept: the others are its consequences.
+
+    Args:
+        least_clearance: the site's, metres: an unfinished plan that keeps it and its end is no failure.
+    """
+    failing = False
+
+    def kept(problem: Problem, start: Start, warm: bool, budget: float) -> Plan:
+        nonlocal failing
+        before, failing = failing, True
+        try:
+            plan = solve(problem, start, warm, budget)
+        except SolveError as error:
+            if not before:
+                store.save(to_problem_file(PlannerCase(problem, start, warm, str(error))), label)
+            raise
+        failing = usable(problem, plan, least_clearance) is None
+        if failing and not before:
+            reason = f"not finished in {plan.iterations} iterations and {1e3 * plan.solve_time:.0f} ms"
+            store.save(to_problem_file(PlannerCase(problem, start, warm, reason)), label)
+        return plan
+
+    return kept

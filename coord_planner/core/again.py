@@ -11,6 +11,7 @@ import numpy as np
 
 from ..errors import SolveError
 from . import ocp, optimality, solver
+from .case import PlannerCase
 from .direct.evaluated import evaluated
 from .direct.impossible import Obstacle
 from .direct.program import Program
@@ -79,12 +80,9 @@ class Again:
         return np.asarray((values[:, 1:] + values[:, :-1]) / 2)
 
 
-def again(problem: Problem, start: Optional[Start], warm: bool) -> Again:
-    """Solve a program of the planner as it was solved then, and from scratch.
-
-    Args:
-        start: where the solver began; from the initial state, straight on, when there is none. warm: as then.
-    """
+def again(case: PlannerCase) -> Again:
+    """Solve a program of the planner as it was solved then, and from scratch: from the initial state, straight on."""
+    problem, start, warm = case.problem, case.start, case.warm
     fresh = _solved(problem, _straight_on(problem), False)
     plan = fresh if start is None else _solved(problem, start, warm)
     if plan is None:

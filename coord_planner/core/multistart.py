@@ -119,7 +119,7 @@ def refined(problem: ClassicalProblem, rough: Minima, intervals: int, seed: int 
     plans = distinct(minimise(problem, resampled(plan.curvature, intervals), _LONG) for plan in plans)
     if not plans:
         raise SolveError(f"the minima on {rough.best.curvature.shape[1]} intervals are none on {intervals}; "
-                         "give other intervals, or ends that are easier to reach")
+                         "give more intervals, or ends that are easier to reach")
     return plans[0]
 
 

@@ -16,6 +16,7 @@ from scipy.sparse.linalg import splu
 
 CLEAN = 1e-6  # largest relative residual of a solution that is called one
 _SLIGHT = 1e-4  # terms of a gradient below it count as this large: a cost of nothing has no scale of its own
+_AT_ONCE = 256  # columns: what is dense on the way needs memory
 _ZERO = 1e-8  # relative to the largest curvature: what counts as none
 
 
@@ -187,8 +188,10 @@ def _follow(point: Point, states: np.ndarray, controls: np.ndarray) -> sparse.cs
     rows = point.jacobian[point.dynamics]
     if not len(states):
         return sparse.csr_matrix((0, len(controls)))
-    solved = splu(rows[:, states].tocsc()).solve(-_dense(rows[:, controls]))
-    return sparse.csr_matrix(solved)
+    factor, by_control = splu(rows[:, states].tocsc()), -rows[:, controls].tocsc()
+    parts = [sparse.csr_matrix(factor.solve(_dense(by_control[:, first:first + _AT_ONCE])))
+             for first in range(0, len(controls), _AT_ONCE)]
+    return sparse.hstack(parts, format="csr") if parts else sparse.csr_matrix((len(states), 0))
 
 
 def _reduced(point: Point, states: np.ndarray, controls: np.ndarray, follow: sparse.csr_matrix) -> np.ndarray:

@@ -10,15 +10,15 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any, Union
 
+from ...core.case import PlannerCase
 from ...core.direct.heisenberg import HeisenbergProblem
 from ...core.direct.problem import DirectProblem
 from ...core.problem import Problem
 from . import direct, heisenberg, planner
 from .entries import Entries
-from .planner import PlannerCase
 from .text import read as read_text
 
-__all__ = ["PlannerCase", "Posed", "load", "to_problem_file"]
+__all__ = ["Posed", "load", "to_problem_file"]
 
 Posed = Union[DirectProblem, HeisenbergProblem, PlannerCase]
 _MODELS: dict[str, Callable[[Entries], Posed]] = {

@@ -16,8 +16,8 @@ from .entries import Entries, checked_numbers
 
 COUPLING = Description("price of turning differently from a neighbour (chi)", minimum=0.0, maximum=1e6)
 DURATION = Description("time from start to end", "s", above=0.0, maximum=1e5)
-INTERVALS = Description("equal intervals of the duration", minimum=2, maximum=1000)
-_LARGEST = 20_000  # robots times intervals
+INTERVALS = Description("equal intervals of the duration", minimum=3, maximum=1000)  # a pose has three numbers
+_LARGEST = 4_000  # robots times intervals: the optimality check is dense in them
 _EDGE = "[NAME, NAME] or [NAME, NAME, WEIGHT], two different robots of the file, weight above 0"
 
 

@@ -21,6 +21,7 @@ import attrs
 import numpy as np
 
 from ...core import ocp
+from ...core.case import PlannerCase
 from ...core.fleet import Fleet, Footprint, Limits, Response, Robot
 from ...core.parameter import Description, describe
 from ...core.problem import STATES, Bounds, Problem, Watch
@@ -32,16 +33,6 @@ from .entries import REQUIRED, Entries
 
 _ANY = Description("a number", minimum=-1e9, maximum=1e9)
 _BOUNDS = tuple(field.name for field in attrs.fields(Bounds))
-
-
-@attrs.frozen(eq=False)
-class PlannerCase:
-    """A program of the planner as it was solved: from ``start``, ``warm`` or cold, and why it was kept."""
-
-    problem: Problem
-    start: Optional[Start] = None
-    warm: bool = False
-    reason: str = ""
 
 
 def read(top: Entries) -> PlannerCase:
@@ -97,11 +88,13 @@ def write(case: PlannerCase) -> dict[str, Any]:
         "duration": float(problem.times[-1] - problem.times[0]), "intervals": len(problem.times) - 1,
         "times": problem.times.tolist(), "pace": problem.pace, "watch": watch,
     }
-    if case.start is not None:
-        begun: dict[str, Any] = {"vector": case.start.vector.tolist(), "warm": case.warm}
-        if case.start.multipliers is not None:
-            bounds, rows = case.start.multipliers
-            begun["multipliers"] = {"bounds": bounds.tolist(), "rows": rows.tolist()}
+    start = case.start
+    if start is not None and not all(np.isfinite(part).all() for part in (start.vector, *(start.multipliers or ()))):
+        document["reason"] = f"{case.reason} (where the solver began was not finite, and is left out)".strip()
+    elif start is not None:
+        begun: dict[str, Any] = {"vector": start.vector.tolist(), "warm": case.warm}
+        if start.multipliers is not None:
+            begun["multipliers"] = dict(zip(("bounds", "rows"), (part.tolist() for part in start.multipliers)))
         document["begun"] = begun
     return document
 

@@ -132,8 +132,9 @@ def in_the_way(problem: DirectProblem, nearest: Solved) -> tuple[Obstacle, ...]:
             (np.hypot(*missed[k, :2]) * metre, "m", missed[k, :2].max()), (missed[k, 2], "rad", missed[k, 2])
         ) if size > least]
         off = " and ".join(parts)
-        about = ("the length of its way, which duration and speed give" if limit == "duration"
-                 else f"its {limit} of {_figure(problem, limit, int(k)):g}")
+        about = f"its {limit} of {_figure(problem, limit, int(k)):g}"
+        if limit == "duration":
+            about = "the length of its way, which duration and speed give, or the number of intervals"
         found.append(Obstacle(
             limit, (name,), f"{name} misses its end by {off} in the nearest plan found; {about} stands in the way"))
     return tuple(found)
@@ -162,6 +163,8 @@ def _busiest(nearest: Solved, k: int) -> str:
 
 
 def _figure(problem: DirectProblem, limit: str, k: int) -> float:
+    if limit == "duration":
+        return problem.duration
     return problem.speeds.highest if limit == "speed" else float(getattr(problem.caps, limit)[k])
 
 

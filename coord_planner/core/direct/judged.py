@@ -54,8 +54,8 @@ def point_of(solved: Solved) -> Point:
     )
 
 
-def judge(solved: Solved, *, neighbours: bool = True) -> Judgement:
-    """Judge a solution. ``neighbours``: also solve problems next to it, for the derivatives of the cost."""
+def judge(solved: Solved) -> Judgement:
+    """Judge a solution by itself."""
     check = optimality.check(point_of(solved))
     found = recovered.costates(solved)
     energy = recovered.hamiltonian(solved, found)
@@ -64,9 +64,14 @@ def judge(solved: Solved, *, neighbours: bool = True) -> Judgement:
     missed = np.abs(solved.poses[:, -1] - solved.problem.ends)[asked]
     return Judgement(
         check, float(missed.max(initial=0.0)), found, mean, recovered.drifts(solved, found, energy),
-        heading_bound(solved.problem), _cost_identity(solved, found, mean),
-        _coupling_identity(solved) if neighbours else None, _end_identity(solved, found) if neighbours else None,
+        heading_bound(solved.problem), _cost_identity(solved, found, mean), None, None,
     )
+
+
+def with_neighbours(judgement: Judgement, solved: Solved) -> Judgement:
+    """The same, with the derivatives of the cost held against problems next to this one."""
+    return attrs.evolve(judgement, coupling_identity=_coupling_identity(solved),
+                        end_identity=_end_identity(solved, judgement.costates))
 
 
 def heading_bound(problem: DirectProblem) -> float:

@@ -13,13 +13,14 @@ from .. import multistart, se2
 from . import impossible
 from .guesses import guesses
 from .impossible import Obstacle
-from .judged import Judgement, disagreement, judge
+from .judged import Judgement, disagreement, judge, with_neighbours
 from .problem import DirectProblem, Units
 from .program import variable_blocks
 from .solution import Guess, Solved, solve
 
 SOLVED, INFEASIBLE, FAILED = "solved", "infeasible", "failed"
 _COARSE = 40  # intervals on which guesses are compared where limits count
+_DENSE = 1600  # robots times intervals
 _HOPELESS = 5  # guesses after which nothing more is tried, when all of them have to miss something
 _FINER = 2  # of the best there that are solved on all intervals
 _SAME = 1e-5  # relative difference of cost below which two plans count as one
@@ -174,14 +175,14 @@ def _joined(groups: list[list[int]], best: list[_Best]) -> Guess:
 def _finished(problem: DirectProblem, guess: Guess, neighbours: bool) -> tuple[Solved, Judgement]:
     """The solution that a guess leads to, away from saddle points."""
     solved = solve(problem, guess)
-    judgement = judge(solved, neighbours=False)
+    judgement = judge(solved)
     for _ in range(_ESCAPES):
         if judgement.check.steepest is None or not solved.success:
             break
         solved = min((_escaped(solved, judgement.check.steepest * sign) for sign in (1.0, -1.0)),
                      key=lambda other: other.cost if other.success else np.inf)
-        judgement = judge(solved, neighbours=False)
-    return solved, judge(solved) if neighbours and judgement.check.clean else judgement
+        judgement = judge(solved)
+    return solved, with_neighbours(judgement, solved) if neighbours and judgement.check.clean else judgement
 
 
 def _escaped(solved: Solved, direction: np.ndarray) -> Solved:
@@ -204,11 +205,13 @@ def _best_classical(own: DirectProblem, part: DirectProblem, seed: int, progress
     relaxed = own.relaxed()
     try:
         rough = multistart.minima(relaxed, seed=seed, progress=progress)
-        fine = multistart.refined(relaxed, rough, own.intervals, seed)
-    except SolveError as error:
-        return _Best(None, 0, 0, (), (), str(error))
+        # On many intervals the sparse solver that comes next is quicker than the dense one here.
+        fine = multistart.refined(relaxed, rough, min(own.intervals, max(_DENSE // len(own), _COARSE)), seed)
+    except SolveError:  # as near to impossible as these ends are, a solver that may miss them at first gets further
+        return _best_limited(own, part, seed, progress)
     reached = tuple(minimum.cost for minimum in rough.found)
-    return _Best(Guess(fine.curvature, np.ones_like(fine.curvature)), rough.tried, rough.converged, reached)
+    guess = Guess(fine.curvature, np.ones_like(fine.curvature)).on(own.intervals)
+    return _Best(guess, rough.tried, rough.converged, reached)
 
 
 def _best_limited(own: DirectProblem, part: DirectProblem, seed: int, progress: Progress) -> _Best:
