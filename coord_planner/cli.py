@@ -10,6 +10,7 @@ from .commands.check import check
 from .commands.demo import demo
 from .commands.review import review
 from .commands.simulate import simulate
+from .commands.solve import solve
 from .commands.sweep import sweep
 
 app = typer.Typer(
@@ -19,6 +20,7 @@ app = typer.Typer(
 )
 app.command()(demo)
 app.command()(check)
+app.command()(solve)
 app.command()(simulate)
 app.command()(advise)
 app.command()(sweep)

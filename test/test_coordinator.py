@@ -238,6 +238,19 @@ def test_a_halt_keeps_the_fleet_on_its_curves():
     assert rolled.max() < 1.0 * 0.4 + 1.0 / (2 * 0.95) + 0.05
 
 
+def test_a_motion_begins_with_a_fresh_decision():
+    """The node halts a moving fleet without decisions; the last one before the motion may be of long ago."""
+    yard = small_yard()
+    yard.now = 1000.0
+    yard.machines.advance(1000.0)
+    answers = []
+    yard.coordinator.begin("corner", yard.snapshot(), answered=answers.append)
+    for job in yard.coordinator.jobs():
+        yard.coordinator.deliver(job(), 1000.5)
+    assert answers[0].ok and yard.coordinator.state is State.MOVING
+    assert yard.coordinator.decision.time == 1000.5
+
+
 def test_halting_an_idle_fleet_is_no_error():
     yard = small_yard()
     assert yard.coordinator.halt(0.0, "halted").ok and yard.coordinator.state is State.IDLE

@@ -427,6 +427,8 @@ class Coordinator:
         values = np.zeros((len(self._fleet), 2)) if last is None else last[1]
         self._pursuit = Pursuit(made, begins, 0.0, values, self._fleet)
         self._state, self._reason, self._stop = State.MOVING, "", None
+        # Whoever watches for decisions that stay away counts from here, not from one of long ago.
+        self._decision = attrs.evolve(self._decision, time=now)
         self._planned_at, self._refused_change, self._watchman = begins, "", Judge()
 
     # The loop, inside

@@ -16,6 +16,7 @@ from .point import Record, given_up
 Work = Callable[[Point], Record]
 _PATIENCE = 15  # seconds for the scheduler to answer, and for a first worker
 _AHEAD = 4  # points handed out for each thread of the cluster, so that its workers never wait for us
+_TAKEN_BACK = ("lost", "pending")
 _GONE = "the cluster went away; what had come is kept, and the same command goes on from there"
 _WORKERS = "dask worker ADDRESS --nthreads 1 --nworkers N, with this package of the same version beside it"
 
@@ -57,6 +58,9 @@ def run_on_cluster(points: Sequence[Point], work: Work, address: str, tell: Call
                 by_key[future.key] = point
                 coming.add(future)
             future = next(coming)
+            if future.status in _TAKEN_BACK and client.status == "running":
+                coming.add(future)  # its worker died before anybody fetched the result: it is done again
+                continue
             yield _record(future, by_key.pop(future.key))
             future.release()
     except OSError:
