@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import functools
 import sys
+import time
 from collections import deque
 from collections.abc import Callable, Sequence
 from typing import Any, Optional
@@ -21,6 +22,7 @@ from std_srvs.srv import Trigger
 
 from .. import config
 from ..core.coordinator import Coordinator
+from ..core.fast.ticks import TickSolve
 from ..core.graph import NeighbourGraph
 from ..core.messages import Answer, Decision, Snapshot, State
 from ..core.reference import Reference
@@ -154,7 +156,8 @@ class PlannerNode(LifecycleNode):
     def _start_coordinator(self) -> None:
         now = self.configuration
         self._coordinator = Coordinator(
-            now.driven, self._graph.relative_to(now.driven.names), now.settings, now.manoeuvres
+            now.driven, self._graph.relative_to(now.driven.names), now.settings, now.manoeuvres,
+            solve=TickSolve(time.monotonic),
         )
         self._worker = Worker(
             self._coordinator, snapshot=self._snapshot, now=self.now,

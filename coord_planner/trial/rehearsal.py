@@ -9,8 +9,8 @@ from typing import Optional
 import numpy as np
 
 from ..config import Configuration
-from ..core import solver
 from ..core.coordinator import Coordinator
+from ..core.fast.ticks import TickSolve
 from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
@@ -114,7 +114,7 @@ class _Loop:
         self._faults = Faults(faults, rng)
         self.coordinator = Coordinator(
             self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
-            self._faults.solve(solver.solve, settings.horizon.budget),
+            self._faults.solve(TickSolve(clock.perf_counter), settings.horizon.budget),
         )
         self._log = _Log()
         self._period, self._tick_period = 1.0 / settings.commands.rate, 1.0 / settings.horizon.rate

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections import OrderedDict
 from collections.abc import Callable
+from functools import lru_cache
 
 import attrs
 import numpy as np
@@ -30,7 +30,6 @@ _WANDERING = 6  # rows a robot that change in one step: the sets are lost
 _OVERSTATED = 3.0  # what is open in an interior-point iterate overstates the gap by about this
 _LEFT_OF_LAST = 0.5  # part of what the last interior-point step saved that another may still save
 _NEARBY = 0.02  # change of a heading (rad), or of a speed (part of the full one), over which a matrix is used again
-_KEPT_STRUCTURES = 32
 
 
 @attrs.frozen(eq=False)
@@ -60,15 +59,14 @@ class Prepared:
 
 
 class TickSolver:
-    """Solves one tick's problem after another. Not thread-safe; one for each thread.
+    """Solves one tick's problem after another. ``solve`` may be called in several threads at once.
 
     Nothing is built or compiled: edges, pairs, weights, limits and even the fleet may change from tick to tick.
     """
 
     def __init__(self) -> None:
         self._fleet: tuple[Fleet, FleetNumbers] | None = None
-        self._structures: OrderedDict[tuple[int, bytes, bytes], Structure] = OrderedDict()
-        self._prepared: Prepared | None = None
+        self._ready: Prepared | None = None
 
     def solve(
         self, problem: Problem, start: Start, budget: float = float("inf"),
@@ -84,14 +82,34 @@ class TickSolver:
             SolveError: no step could be made.
         """
         began = clock()
-        self.prepare(problem, start, linearise=False)
-        return self.feedback(problem.initial, budget - (clock() - began), clock, began)
+        ready = self._prepared(problem, start, linearise=False)
+        return _plan(ready, _search(ready, began + budget, clock), clock() - began)
 
-    def prepare(self, problem: Problem, start: Start, linearise: bool = True) -> None:
+    def prepare(self, problem: Problem, start: Start) -> None:
         """Work out all that does not need the measured state, with the predicted one in the problem."""
+        self._ready = self._prepared(problem, start, linearise=True)
+
+    def feedback(
+        self, initial: np.ndarray, budget: float = float("inf"), clock: Callable[[], float] = lambda: 0.0
+    ) -> Plan:
+        """The plan from the measured state, shape (N, 7), for what was prepared. See ``solve``.
+
+        Raises:
+            SolveError: no step could be made.
+        """
+        began = clock()
+        if self._ready is None:
+            raise SolveError("feedback asked before prepare")
+        ready, self._ready = self._ready, None
+        if initial is not ready.problem.initial:
+            problem = attrs.evolve(ready.problem, initial=initial)
+            ready = attrs.evolve(ready, problem=problem, numbers=started(ready.numbers, initial))
+        return _plan(ready, _search(ready, began + budget, clock), clock() - began)
+
+    def _prepared(self, problem: Problem, start: Start, linearise: bool) -> Prepared:
         size = vectors.sizes(problem)
         known = numbers(problem, self._fleet_numbers(problem.fleet))
-        order = self._structure(problem)
+        order = _structure(len(problem.fleet), problem.edges.tobytes(), problem.watch.pairs.tobytes())
         curvature, speed = (
             np.clip(commands, known.lower[i], known.upper[i])
             for i, commands in enumerate(vectors.commands(size, start.vector))
@@ -102,41 +120,19 @@ class TickSolver:
         if linearise and forces is not None and _worth_trying(known, forces):
             trial = active.begin(known, evaluate(known, curvature, speed), forces)
             held = active.Held(Linearised(known, order, constant, trial.point), trial)
-        self._prepared = Prepared(problem, known, order, constant, curvature, speed, forces, held)
-
-    def feedback(
-        self, initial: np.ndarray, budget: float = float("inf"), clock: Callable[[], float] = lambda: 0.0,
-        began: float | None = None,
-    ) -> Plan:
-        """The plan from the measured state, shape (N, 7). See ``solve``.
-
-        Raises:
-            SolveError: no step could be made.
-        """
-        ready = self._prepared
-        if ready is None:
-            raise SolveError("feedback asked before prepare")
-        self._prepared = None
-        now = clock()
-        began = now if began is None else began
-        if initial is not ready.problem.initial:
-            problem = attrs.evolve(ready.problem, initial=initial)
-            ready = attrs.evolve(ready, problem=problem, numbers=started(ready.numbers, initial))
-        found = _search(ready, now + budget, clock)
-        return _plan(ready, found, clock() - began)
+        return Prepared(problem, known, order, constant, curvature, speed, forces, held)
 
     def _fleet_numbers(self, fleet: Fleet) -> FleetNumbers:
-        if self._fleet is None or self._fleet[0] is not fleet:
-            self._fleet = fleet, fleet_numbers(fleet)
-        return self._fleet[1]
+        last = self._fleet
+        if last is None or last[0] is not fleet:
+            self._fleet = last = fleet, fleet_numbers(fleet)
+        return last[1]
 
-    def _structure(self, problem: Problem) -> Structure:
-        key = len(problem.fleet), problem.edges.tobytes(), problem.watch.pairs.tobytes()
-        if key not in self._structures:
-            self._structures[key] = structure(len(problem.fleet), problem.edges, problem.watch.pairs)
-            if len(self._structures) > _KEPT_STRUCTURES:
-                self._structures.popitem(last=False)
-        return self._structures[key]
+
+@lru_cache(maxsize=32)
+def _structure(count: int, edges: bytes, pairs: bytes) -> Structure:
+    joined = (np.frombuffer(data, dtype=int).reshape(-1, 2) for data in (edges, pairs))
+    return structure(count, *joined)
 
 
 def _worth_trying(known: Numbers, forces: Forces) -> bool:
@@ -227,14 +223,26 @@ def _interior_steps(
 def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
     known, problem = ready.numbers, ready.problem
     size = vectors.sizes(problem)
-    states = vectors.states_of(known, found.point)
-    short = np.maximum(-found.point.clearances, 0.0)
+    point = _boxed(known, found.point)
+    states = vectors.states_of(known, point)
+    short = np.maximum(-point.clearances, 0.0)
     priced = known.end_price > 0
     return Plan(
         fleet=problem.fleet, times=problem.times, states=states,
-        rates=found.point.limits[2:4].transpose(1, 2, 0).copy(), cost=found.cost, short=short,
-        pairs=problem.watch.pairs, missed=np.abs(found.point.missed) * priced,
+        rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point), short=short,
+        pairs=problem.watch.pairs, missed=np.abs(point.missed) * priced,
         solved=found.gap <= ENOUGH and found.passed <= _KEPT_WITHIN, solve_time=took,
-        iterations=found.steps, vector=vectors.primal(states, found.point, short, priced),
-        multipliers=vectors.multipliers(known, found.point, found.forces, size),
+        iterations=found.steps, vector=vectors.primal(states, point, short, priced),
+        multipliers=vectors.multipliers(known, point, found.forces, size),
     )
+
+
+def _boxed(known: Numbers, point: Point) -> Point:
+    """The point with its commands cut to their bounds: a standstill is a standstill, not a billionth of a m/s."""
+    r = point.r
+    curvature, speed = (
+        np.clip(commands, known.lower[i], known.upper[i]) for i, commands in enumerate((r.curvature, r.speed))
+    )
+    if np.array_equal(curvature, r.curvature) and np.array_equal(speed, r.speed):
+        return point
+    return evaluate(known, curvature, speed)
