@@ -90,7 +90,8 @@ def assemble(flat: Mapping[str, Any], source: Source) -> Configuration:
     return Configuration(
         file=source.file, flat=dict(known.given), settings=settings,
         fleet=Fleet(tuple(robot for robot, _, _ in built)), edges=edges, manoeuvres=manoeuvres,
-        frame=words.frame, fleet_name=words.name, invented=words.invented,
+        frame=words.frame, fleet_name=words.name, listen_time=words.listen_time,
+        invented=words.invented,
         connections=connections, simulation=simulation,
         starts={
             robot.name: _start(place, connection) for robot, connection, place in built if place.start_x is not None

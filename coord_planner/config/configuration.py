@@ -45,7 +45,7 @@ class Configuration:
         flat: what was given, by dotted key, each value of its kind.
         settings, fleet, manoeuvres: what the pure planning code needs.
         edges: (name, name, weight) of the neighbour graph.
-        frame, fleet_name, invented: ``fleet.frame``, ``fleet.name`` and ``fleet.invented``.
+        frame, fleet_name, listen_time (s), invented: of the group ``fleet``.
         connections: by robot.
         simulation: how imperfect simulated robots are.
         starts: (x, y, heading) by robot; robots without a start are absent.
@@ -61,6 +61,7 @@ class Configuration:
     manoeuvres: Mapping[str, Manoeuvre]
     frame: str
     fleet_name: str
+    listen_time: float
     invented: bool
     connections: Mapping[str, Connection]
     simulation: Simulation

@@ -23,6 +23,10 @@ class FleetWords:
 
     frame: str = parameter("map", "the frame that all poses are in")
     name: str = parameter("fleet", "name of the fleet, in status messages and in the heartbeat")
+    listen_time: float = parameter(
+        4.0, "a planner that becomes active has listened for so long, since it was configured, for others",
+        "s", minimum=0.0, maximum=60.0,
+    )
     invented: bool = parameter(False, "true: site and robots are made up, and pages made of them say so")
 
 
