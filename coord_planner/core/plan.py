@@ -22,6 +22,8 @@ class Plan:
         cost: what the optimisation reached.
         short: missing clearance at nodes 1 .. M, shape (P, M), metres, >= 0 (along the separating line).
         pairs: positions of the watched pairs, shape (P, 2).
+        outside: how far a footprint reaches behind each fence at nodes 1 .. M, shape (F, M), metres, >= 0.
+        fenced: position of the robot that each fence binds, shape (F,).
         missed: how far each end component is missed, shape (N, 7), in its own unit, >= 0.
         solved: whether the solver reported convergence.
         solve_time: seconds. iterations: of the solver.
@@ -35,6 +37,8 @@ class Plan:
     cost: float
     short: np.ndarray
     pairs: np.ndarray
+    outside: np.ndarray
+    fenced: np.ndarray
     missed: np.ndarray
     solved: bool
     solve_time: float
@@ -108,6 +112,7 @@ def from_solution(problem: Problem, variables: dict[str, np.ndarray], **solver: 
     return Plan(
         fleet=problem.fleet, times=problem.times, states=states,
         rates=np.stack([variables["curvature_rate"], variables["acceleration"]], axis=2),
-        short=variables["short"], pairs=problem.watch.pairs, missed=variables["over"] + variables["under"],
+        short=variables["short"], pairs=problem.watch.pairs, outside=variables["outside"],
+        fenced=problem.fences.robots, missed=variables["over"] + variables["under"],
         **solver,  # type: ignore[arg-type]
     )
