@@ -591,5 +591,5 @@ def _shape(made: Reference) -> solver.Shape:
     edges, pairs = made.graph.index_edges(), made.pairs
     return solver.Shape(
         len(made.graph.names), len(made.plan.times) - 1, tuple(map(tuple, edges.tolist())),
-        tuple(map(tuple, pairs.tolist())),
+        tuple(map(tuple, pairs.tolist())), tuple(made.fencing.bound[:, 0].tolist()),
     )
