@@ -37,6 +37,8 @@ class Task:
         pacing: seconds of the manoeuvre and the seconds of the profile that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
+        strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
+            the origin of the frame, a footprint may reach, metres.
     """
 
     name: str
@@ -52,6 +54,7 @@ class Task:
     coupling: float
     alignment: float
     max_curvature: float = math.inf
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
@@ -88,7 +91,7 @@ class Task:
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf,
+    max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
@@ -113,7 +116,7 @@ def lay_out(
         ((0.0, arrival), (0.0, profile.duration)),
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature,
+        max_curvature, strip,
     )
 
 
