@@ -174,10 +174,11 @@ def test_cost_terms_against_numbers_worked_out_by_hand():
     }
     want = 0.5 * ((0.1 * 4 + 0.2 * 1 + 4 * 0.01) * 0.5 + 0.2 * 1 * 0.25)
     assert float(ocp.small_prices(v, p, ca.DM([[1.2, 0.5]]))) == pytest.approx(want)
-    # 2 cm short for 0.5 s at 100; an end missed by 3 cm one way in one component, 1 the other way, at 50
-    v = {"short": ca.DM([[0.02, 0.0]]), "over": ca.DM([[0.03, 0.0]]), "under": ca.DM([[0.0, 0.01]])}
+    # 2 cm short and 3 cm behind a fence for 0.5 s at 100; an end missed by 3 cm one way, by 1 the other way, at 50
+    v = {"short": ca.DM([[0.02, 0.0]]), "outside": ca.DM([[0.03, 0.0]])}
+    v |= {"over": ca.DM([[0.03, 0.0]]), "under": ca.DM([[0.0, 0.01]])}
     p = {"price_clearance": 100.0, "price_end": ca.DM([[50.0, 50.0]]), "h": h}
-    assert float(ocp.steep_prices(v, p)) == pytest.approx(100 * 0.02 * 0.5 + 50 * 0.04)
+    assert float(ocp.steep_prices(v, p)) == pytest.approx(100 * 0.05 * 0.5 + 50 * 0.04)
 
 
 # Clearance

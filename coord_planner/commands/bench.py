@@ -86,8 +86,8 @@ def _write(rows: list[measuring.Row], cases: list[str]) -> None:
             f"{row.violation_max:.1e}", f"{row.peak_rss_mb:.0f}",
         )
     write_table(shown)
-    write("Plain: IPOPT with default options and tolerance 1e-6 on the same problem from the same last plan; tuned: with "
-          "the last multipliers and a small barrier. Medians. Cost gaps are parts of the converged cost.")
+    write("Plain: IPOPT with default options and tolerance 1e-6 on the same problem from the same last plan; tuned: "
+          "with the last multipliers and a small barrier. Medians. Cost gaps are parts of the converged cost.")
     for case in cases:
         grown = measuring.growth(rows, case)
         if grown is not None:

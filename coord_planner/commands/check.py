@@ -2,22 +2,42 @@
 
 # No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.
 
-from typing import Annotated
+from pathlib import Path
+from typing import Annotated, Optional
 
 import typer
 
 from .. import config
 from ..config.notes import notes
+from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
 from ..core.manoeuvre import EqualRadius, Manoeuvre
-from .speaking import CAUTION, errors_reported, table, write, write_heading, write_table
+from ..errors import SettingsError
+from .speaking import CAUTION, errors_reported, say, table, write, write_heading, write_table
+from .targets import prepare_file
 
 
-def check(params: Annotated[str, typer.Argument(metavar="PARAMS", help="Parameter file (YAML).")]) -> None:
+def check(
+    params: Annotated[str, typer.Argument(metavar="PARAMS", help="Parameter file (YAML).")],
+    security_policy: Annotated[
+        Optional[Path],
+        typer.Option("--security-policy", metavar="FILE", help="Write the planner's ROS 2 security policy (XML)."),
+    ] = None,
+    namespace: Annotated[
+        Optional[str],
+        typer.Option("--namespace", metavar="NS", help="With --security-policy: namespace of the planner and its "
+                                                       "robots; / when left out."),
+    ] = None,
+) -> None:
     """Is this parameter file sound? A summary of it, or its errors."""
     with errors_reported():
         configuration = config.load(params)
+        if security_policy is not None:
+            _write_policy(configuration, security_policy, namespace or "/")
+        elif namespace is not None:
+            raise SettingsError(f"{namespace!r} is for the security policy, and none is asked for", key="--namespace",
+                                allowed="together with --security-policy FILE")
     write(f"{params}: sound. Fleet {configuration.fleet_name}, {len(configuration.fleet)} robots, "
           f"poses in frame {configuration.frame}.\n")
     _write_robots(configuration)
@@ -26,6 +46,13 @@ def check(params: Annotated[str, typer.Argument(metavar="PARAMS", help="Paramete
     _write_rules(configuration)
     _write_notes(configuration)
     write(CAUTION)
+
+
+def _write_policy(configuration: config.Configuration, file: Path, namespace: str) -> None:
+    text = policy(configuration, namespace)
+    prepare_file(file, "--security-policy")
+    file.write_text(text, encoding="utf-8")
+    say(f"security policy: {file}. It limits the planner alone; who else may speak is for the policies of the others.")
 
 
 def _write_robots(configuration: config.Configuration) -> None:

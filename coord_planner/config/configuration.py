@@ -14,7 +14,7 @@ from ..core.parameter import Description
 from ..core.settings import Settings
 from ..errors import SettingsError
 from .connection import Connection, Pose
-from .groups import Simulation
+from .groups import Failures, Simulation
 
 
 @attrs.frozen
@@ -45,8 +45,9 @@ class Configuration:
         flat: what was given, by dotted key, each value of its kind.
         settings, fleet, manoeuvres: what the pure planning code needs.
         edges: (name, name, weight) of the neighbour graph.
-        frame, fleet_name, invented: ``fleet.frame``, ``fleet.name`` and ``fleet.invented``.
+        frame, fleet_name, listen_time (s), invented: of the group ``fleet``.
         connections: by robot.
+        failures: whether and where problems without a plan are kept.
         simulation: how imperfect simulated robots are.
         starts: (x, y, heading) by robot; robots without a start are absent.
         enabled: robots that the planner drives.
@@ -61,8 +62,10 @@ class Configuration:
     manoeuvres: Mapping[str, Manoeuvre]
     frame: str
     fleet_name: str
+    listen_time: float
     invented: bool
     connections: Mapping[str, Connection]
+    failures: Failures
     simulation: Simulation
     starts: Mapping[str, Pose]
     enabled: frozenset[str]

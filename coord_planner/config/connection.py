@@ -52,6 +52,10 @@ class Connection:
     ready_required: bool = parameter(
         False, "true: the robot is driven only while it says on its ready topic that it may be"
     )
+    ready_timeout: float = parameter(
+        1.0, "with ready_required: a robot that has not said for so long that it is ready counts as silent", "s",
+        above=0.0, maximum=10.0,
+    )
     drive: str = parameter("differential", "how the robot turns", choices=("differential", "car_like"))
     reference_point: str = parameter(
         "centre",

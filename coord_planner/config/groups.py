@@ -23,7 +23,20 @@ class FleetWords:
 
     frame: str = parameter("map", "the frame that all poses are in")
     name: str = parameter("fleet", "name of the fleet, in status messages and in the heartbeat")
+    listen_time: float = parameter(
+        4.0, "a planner that becomes active has listened for so long, since it was configured, for others",
+        "s", minimum=0.0, maximum=60.0,
+    )
     invented: bool = parameter(False, "true: site and robots are made up, and pages made of them say so")
+
+
+@attrs.frozen
+class Failures:
+    """Group ``failures``: problems that no plan was found for, kept as files for ``coord-planner solve``."""
+
+    folder: str = parameter("", "folder that they are kept in, made when it is needed; empty: none are kept")
+    most: int = parameter(20, "files that are kept at most; the oldest go first", "", minimum=1, maximum=1000)
+    max_megabytes: float = parameter(20.0, "size of all of them together", "MB", above=0.0, maximum=10000.0)
 
 
 @attrs.frozen

@@ -57,6 +57,7 @@ class Again:
     def disagreement(self) -> float:
         """1/2 integral u'Lu, in seconds of the manoeuvre."""
         u = self.turning
+        u = u * self.problem.turn_speed / self.problem.compare_speed
         apart = [weight * (u[k] - u[j]) ** 2 for (k, j), weight in zip(self.problem.edges, self.problem.weights)]
         return float(np.sum(np.array(apart).reshape(-1, u.shape[1]) * self._seconds)) / 2
 
@@ -123,6 +124,9 @@ def _obstacles(problem: Problem, plan: Plan) -> tuple[Obstacle, ...]:
         if short.max(initial=0.0) > _MISSED:
             found.append(Obstacle("watch", (names[k], names[j]),
                                   f"{names[k]} and {names[j]} come nearer than asked by {short.max():.3g} m"))
+    for k, outside in zip(plan.fenced, plan.outside):
+        if outside.max(initial=0.0) > _MISSED:
+            found.append(Obstacle("fences", (names[k],), f"{names[k]} is behind its fence by {outside.max():.3g} m"))
     return tuple(found)
 
 

@@ -45,30 +45,33 @@ def variable_blocks(shape: Shape) -> Blocks:
     n, m = shape.robots, shape.intervals
     states = dict.fromkeys(STATES, (n, m + 1))
     rates = {"curvature_rate": (n, m), "acceleration": (n, m)}
-    slacks = {"short": (len(shape.pairs), m), "over": (n, len(STATES)), "under": (n, len(STATES))}
+    missed = {"over": (n, len(STATES)), "under": (n, len(STATES))}
+    slacks = {"short": (len(shape.pairs), m), "outside": (len(shape.fenced), m), **missed}
     return Blocks({**states, **rates, **slacks})
 
 
 def parameter_blocks(shape: Shape) -> Blocks:
     """All numbers that a built program is given."""
-    n, m, e, p = shape.robots, shape.intervals, len(shape.edges), len(shape.pairs)
+    n, m, e, p, f = shape.robots, shape.intervals, len(shape.edges), len(shape.pairs), len(shape.fenced)
     return Blocks({
         "h": (1, m), "cost_h": (1, m), "asked_speed": (n, m), "full_speed": (n, 1), "turn_speed": (n, m),
-        "coupling": (e, 1), "alignment": (e, 1),
+        "compare_speed": (n, m), "coupling": (e, 1), "alignment": (e, 1),
         "price_curvature_rate": (1, 1), "price_acceleration": (1, 1), "price_speed": (1, 1),
         "price_clearance": (1, 1), "price_end": (n, len(STATES)),
         "curvature_lag": (n, 1), "speed_lag": (n, 1), "target": (n, len(STATES)),
         "normal_x": (p, m), "normal_y": (p, m), "gap": (p, m),
+        "fence_x": (f, m), "fence_y": (f, m), "fence_reach": (f, m),
         "half_length": (n, 1), "half_width": (n, 1), "offset_x": (n, 1), "offset_y": (n, 1),
     })
 
 
 def row_blocks(shape: Shape) -> Blocks:
-    """Constraint rows: the motion (equal to 0), limits of products, clearances, ends."""
+    """Constraint rows: the motion (equal to 0), limits of products, clearances, fences, ends."""
     n, m = shape.robots, shape.intervals
     motion = {f"step_{name}": (n, m) for name in STATES}
     return Blocks({
-        **motion, "turn_rate": (n, m), "lateral": (n, m), "clearance": (len(shape.pairs), m), "end": (n, len(STATES)),
+        **motion, "turn_rate": (n, m), "lateral": (n, m), "clearance": (len(shape.pairs), m),
+        "fence": (len(shape.fenced), m), "end": (n, len(STATES)),
     })
 
 
@@ -95,11 +98,17 @@ def lag_residual(command: Matrix, reached: Matrix, rate: Matrix, lag: Matrix, h:
     return reached[:, 1:] - settled - (reached[:, :-1] - command[:, :-1] + rate * lags) * decay
 
 
-def turning_cost(turning: Matrix, weights: Matrix, edges: tuple[tuple[int, int], ...], h: Matrix) -> Matrix:
-    """1/2 integral u'(I + chi L)u, the coupling times the weight of each edge in ``weights``."""
+def turning_cost(
+    turning: Matrix, weights: Matrix, edges: tuple[tuple[int, int], ...], h: Matrix, compared: Matrix = None
+) -> Matrix:
+    """1/2 integral u'(I + chi L)u, the coupling times the weight of each edge in ``weights``.
+
+    ``compared`` is what neighbours compare, where that is not the turning itself: turn rates counted at one speed.
+    """
+    compared = turning if compared is None else compared
     own = ca.sum1(turning**2)
     for (k, j), weight in zip(edges, ca.vertsplit(weights) if edges else []):
-        own = own + weight * (turning[k, :] - turning[j, :]) ** 2
+        own = own + weight * (compared[k, :] - compared[j, :]) ** 2
     return ca.dot(own, h) / 2
 
 
@@ -134,6 +143,18 @@ def _clearance_row(v: Named, p: Named, i: int, k: int, j: int) -> Matrix:
             v["theta"][robot, 1:], p["half_length"][robot], p["half_width"][robot], normal_x, normal_y
         )
     return between - p["gap"][i, :]
+
+
+def fence_rows(v: Named, p: Named, fenced: tuple[int, ...]) -> Matrix:
+    """How far each footprint may still reach towards its fence, plus slack."""
+    rows = []
+    for i, k in enumerate(fenced):
+        normal_x, normal_y = p["fence_x"][i, :], p["fence_y"][i, :]
+        reaches = normal_x * v["centre_x"][k, :] + normal_y * v["centre_y"][k, :] + shadow(
+            v["theta"][k, 1:], p["half_length"][k], p["half_width"][k], normal_x, normal_y
+        )
+        rows.append(p["fence_reach"][i, :] - reaches)
+    return ca.vertcat(*rows) + v["outside"] if rows else ca.SX(0, v["outside"].shape[1])
 
 
 def footprint_centres(v: Named, p: Named) -> tuple[Matrix, Matrix]:
@@ -174,8 +195,8 @@ def small_prices(v: Named, p: Named, mean_speed: Matrix) -> Matrix:
 
 
 def steep_prices(v: Named, p: Named) -> Matrix:
-    """Exact penalties: metres of missing clearance (per second) and metres by which ends are missed."""
-    short = ca.dot(ca.sum1(v["short"]), p["h"]) if v["short"].shape[0] else 0
+    """Exact penalties: metres of missing clearance or behind a fence (per second), metres by which ends are missed."""
+    short = sum(ca.dot(ca.sum1(v[name]), p["h"]) for name in ("short", "outside") if v[name].shape[0])
     return p["price_clearance"] * short + ca.sum1(ca.vec(p["price_end"] * (v["over"] + v["under"])))
 
 
@@ -187,7 +208,7 @@ def build(shape: Shape) -> Program:
     p_all, p = parameters.symbols()
     mean_speed = mean_over_interval(v["speed_command"], v["speed"], p["speed_lag"], p["h"])
     mean_curvature = mean_over_interval(v["curvature_command"], v["curvature"], p["curvature_lag"], p["h"])
-    turning = mean_speed * mean_curvature / p["turn_speed"]
+    turn_rate = mean_speed * mean_curvature
     v["centre_x"], v["centre_y"] = footprint_centres(v, p)
     kappa, speed = v["curvature_command"][:, 1:], v["speed_command"][:, 1:]
     last = ca.horzcat(*[v[name][:, -1] for name in STATES])
@@ -196,10 +217,13 @@ def build(shape: Shape) -> Program:
         "turn_rate": speed * kappa,
         "lateral": speed**2 * kappa,
         "clearance": clearance_rows(v, p, shape.pairs),
+        "fence": fence_rows(v, p, shape.fenced),
         "end": last - p["target"] - v["over"] + v["under"],
     })
     f = (
-        turning_cost(turning, p["coupling"], shape.edges, p["cost_h"])
+        turning_cost(
+            turn_rate / p["turn_speed"], p["coupling"], shape.edges, p["cost_h"], turn_rate / p["compare_speed"]
+        )
         + alignment_cost(v["theta"], p["alignment"], shape.edges, p["cost_h"])
         + small_prices(v, p, mean_speed)
         + steep_prices(v, p)
@@ -218,6 +242,7 @@ def numbers(problem: Problem) -> np.ndarray:
         "asked_speed": problem.asked_speed,
         "full_speed": problem.full_speed[:, None],
         "turn_speed": problem.turn_speed,
+        "compare_speed": problem.compare_speed,
         "coupling": problem.coupling * problem.weights[:, None],
         "alignment": problem.coupling * problem.alignment * problem.weights[:, None],
         "price_curvature_rate": prices.curvature_rate,
@@ -231,6 +256,9 @@ def numbers(problem: Problem) -> np.ndarray:
         "normal_x": problem.watch.normals[..., 0],
         "normal_y": problem.watch.normals[..., 1],
         "gap": problem.watch.gaps,
+        "fence_x": problem.fences.normals[..., 0],
+        "fence_y": problem.fences.normals[..., 1],
+        "fence_reach": np.where(np.isfinite(problem.fences.reaches), problem.fences.reaches, 0.0),
         "half_length": np.array([[f.footprint_length / 2] for f in footprints]),
         "half_width": np.array([[f.footprint_width / 2] for f in footprints]),
         "offset_x": np.array([[f.footprint_offset_x] for f in footprints]),
@@ -255,6 +283,7 @@ def variable_bounds(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     lower["acceleration"] = np.broadcast_to(-fleet.limit("max_braking")[:, None], (n, m))
     upper["acceleration"] = np.broadcast_to(fleet.limit("max_acceleration")[:, None], (n, m))
     lower["short"], upper["short"] = np.zeros((len(shape.pairs), m)), np.full((len(shape.pairs), m), np.inf)
+    lower["outside"], upper["outside"] = np.zeros((len(shape.fenced), m)), np.full((len(shape.fenced), m), np.inf)
     for name in ("over", "under"):
         lower[name], upper[name] = np.zeros(free.shape), np.where(free, 0.0, np.inf)
     layout = variable_blocks(shape)
@@ -270,6 +299,7 @@ def row_bounds(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     lower["turn_rate"], upper["turn_rate"] = -bounds.max_turn_rate, bounds.max_turn_rate
     lower["lateral"], upper["lateral"] = -bounds.max_lateral_acceleration, bounds.max_lateral_acceleration
     lower["clearance"], upper["clearance"] = 0.0, np.inf
+    lower["fence"], upper["fence"] = np.where(np.isfinite(problem.fences.reaches), 0.0, -np.inf), np.inf
     lower["end"], upper["end"] = np.where(free, -np.inf, 0.0), np.where(free, np.inf, 0.0)
     layout = row_blocks(shape)
     return layout.pack(lower), layout.pack(upper)

@@ -22,6 +22,8 @@ class Plan:
         cost: what the optimisation reached.
         short: missing clearance at nodes 1 .. M, shape (P, M), metres, >= 0 (along the separating line).
         pairs: positions of the watched pairs, shape (P, 2).
+        outside: how far a footprint reaches behind each fence at nodes 1 .. M, shape (F, M), metres, >= 0.
+        fenced: position of the robot that each fence binds, shape (F,).
         missed: how far each end component is missed, shape (N, 7), in its own unit, >= 0.
         solved: whether the solver reported convergence.
         solve_time: seconds. iterations: of the solver.
@@ -35,6 +37,8 @@ class Plan:
     cost: float
     short: np.ndarray
     pairs: np.ndarray
+    outside: np.ndarray
+    fenced: np.ndarray
     missed: np.ndarray
     solved: bool
     solve_time: float
@@ -62,9 +66,10 @@ class Plan:
 
     def closest(self, between: int = 2) -> tuple[float, tuple[int, int]]:
         """Smallest exact clearance over all pairs, at the nodes and ``between`` moments in each interval."""
-        return closest_along(self.fleet, self._dense(between))
+        return closest_along(self.fleet, self.dense(between))
 
-    def _dense(self, between: int) -> np.ndarray:
+    def dense(self, between: int) -> np.ndarray:
+        """Poses at the nodes and at ``between`` moments in each interval, shape (N, K, 3)."""
         parts = np.linspace(0.0, 1.0, between + 1, endpoint=False)
         before, after = self.poses[:, :-1, None], self.poses[:, 1:, None]
         pieces = _along_arc(before, after, parts)
@@ -108,6 +113,7 @@ def from_solution(problem: Problem, variables: dict[str, np.ndarray], **solver: 
     return Plan(
         fleet=problem.fleet, times=problem.times, states=states,
         rates=np.stack([variables["curvature_rate"], variables["acceleration"]], axis=2),
-        short=variables["short"], pairs=problem.watch.pairs, missed=variables["over"] + variables["under"],
+        short=variables["short"], pairs=problem.watch.pairs, outside=variables["outside"],
+        fenced=problem.fences.robots, missed=variables["over"] + variables["under"],
         **solver,  # type: ignore[arg-type]
     )

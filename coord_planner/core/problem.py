@@ -41,6 +41,27 @@ class Watch:
 
 
 @attrs.frozen(eq=False)
+class Fences:
+    """Lines that footprints stay on one side of: keep-outs, strips that may not be left. F rows.
+
+    Attributes:
+        robots: position of the robot that each binds, shape (F,).
+        normals: unit vectors towards the forbidden side at nodes 1 .. M, shape (F, M, 2).
+        reaches: how far along the normal the footprint may reach, from the origin of the frame, shape (F, M),
+            metres; inf where nothing binds.
+    """
+
+    robots: np.ndarray
+    normals: np.ndarray
+    reaches: np.ndarray
+
+
+def no_fences(intervals: int) -> Fences:
+    """Nothing is fenced off."""
+    return Fences(np.zeros(0, dtype=int), np.zeros((0, intervals, 2)), np.zeros((0, intervals)))
+
+
+@attrs.frozen(eq=False)
 class Problem:
     """N robots, M intervals, E edges.
 
@@ -61,6 +82,9 @@ class Problem:
         target: state at the last node, shape (N, 7); NaN where free.
         bounds: limits in force.
         watch: pairs with a clearance to keep.
+        fences: lines that footprints stay on one side of.
+        compare_speed: speed by which turn rates are divided before neighbours are compared, shape (N, M), m/s; as
+            turn_speed when left out. One speed for all compares turn rates, as where the line turns as one.
     """
 
     fleet: Fleet
@@ -78,12 +102,15 @@ class Problem:
     target: np.ndarray
     bounds: Bounds
     watch: Watch
+    fences: Fences = attrs.Factory(lambda self: no_fences(len(self.times) - 1), takes_self=True)
+    compare_speed: np.ndarray = attrs.Factory(lambda self: self.turn_speed, takes_self=True)
 
     @property
     def shape(self) -> Shape:
         return Shape(
             len(self.fleet), len(self.times) - 1,
             tuple(map(tuple, self.edges.tolist())), tuple(map(tuple, self.watch.pairs.tolist())),
+            tuple(self.fences.robots.tolist()),
         )
 
     @property
@@ -100,6 +127,7 @@ class Shape:
     intervals: int
     edges: tuple[tuple[int, int], ...]
     pairs: tuple[tuple[int, int], ...]
+    fenced: tuple[int, ...] = ()
 
 
 def bounds_in_force(

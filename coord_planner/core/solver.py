@@ -85,6 +85,7 @@ def start_from_states(problem: Problem, states: np.ndarray) -> Start:
     named["curvature_rate"] = np.diff(named["curvature_command"], axis=1) / h
     named["acceleration"] = np.diff(named["speed_command"], axis=1) / h
     named["short"] = np.zeros((len(problem.watch.pairs), len(problem.times) - 1))
+    named["outside"] = np.zeros((len(problem.fences.robots), len(problem.times) - 1))
     named["over"], named["under"] = np.maximum(missed, 0.0), np.maximum(-missed, 0.0)
     return Start(ocp.variable_blocks(problem.shape).pack(named))
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 import sys
 import time
@@ -188,7 +189,7 @@ class _Director:
                 slow_until = time.monotonic() + _SLOWED_FOR
                 self._slow(_SLOWED_TO, f"{self._slowed} reaches only {100 * _SLOWED_TO:.0f} % of its speed")
             elif slow_until is not None and time.monotonic() >= slow_until:
-                slow_until = float("inf")
+                slow_until = math.inf
                 self._slow(1.0, f"{self._slowed} is well again")
             if time.monotonic() > end:
                 raise DemoError(f"the manoeuvre was not done after {_LONGEST:g} s")
@@ -210,8 +211,9 @@ class _Director:
     def _tell_progress(self) -> None:
         if self._progress >= self._told + 0.2:
             self._told = self._progress
-            status = self._recorder.status
-            _say(f"  {100 * self._progress:3.0f} % done, smallest planned clearance {status['clearance_m']} m")
+            clearance = float(self._recorder.status["clearance_m"])
+            known = f", smallest planned clearance {clearance:.2f} m" if math.isfinite(clearance) else ""
+            _say(f"  {100 * self._progress:3.0f} % done{known}")
 
     def _ask(self, kind: type, name: str, request: Any) -> Any:
         client = self._node.create_client(kind, name)

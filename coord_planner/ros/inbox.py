@@ -9,13 +9,14 @@ from typing import Any, Optional
 from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped
 from nav_msgs.msg import Odometry
 from rclpy.node import Node
-from std_msgs.msg import Empty, String
+from std_msgs.msg import Bool, Empty, String
 
 from ..config import Configuration, Connection
 from ..core.graph import NeighbourGraph
 from ..core.messages import PoseSample
 from ..errors import SettingsError
 from . import messages, qos
+from .readiness import Readiness
 
 _POSE_TYPES: dict[str, type] = {
     "pose": PoseStamped, "pose_with_covariance": PoseWithCovarianceStamped, "odometry": Odometry,
@@ -23,11 +24,11 @@ _POSE_TYPES: dict[str, type] = {
 
 
 class Inbox:
-    """Newest good pose of each robot, the neighbours in force, and counts of what was ignored.
+    """Newest good pose of each robot, who is ready, the neighbours in force, and counts of what was ignored.
 
     Args:
         node: gets the subscriptions. configuration: gives the live settings whenever it is called.
-        now: seconds on the clock of the stamps, 0 while there is none.
+        now: seconds on the clock of the stamps, 0 while there is none. time: planner time, seconds.
         neighbours: called with each new graph. halt: called for each halt message.
         request: called with each well-formed request.
         trouble: called when a message was ignored and that is worth telling at once.
@@ -36,15 +37,20 @@ class Inbox:
         SettingsError: a pose source that cannot be had on this machine.
     """
 
-    def __init__(self, node: Node, configuration: Callable[[], Configuration], now: Callable[[], float], *,
-                 neighbours: Callable[[NeighbourGraph], None], halt: Callable[[], object],
+    def __init__(self, node: Node, configuration: Callable[[], Configuration], now: Callable[[], float],
+                 time: Callable[[], float], *, neighbours: Callable[[NeighbourGraph], None], halt: Callable[[], object],
                  request: Callable[[messages.Request], None],
                  trouble: Callable[[str, messages.IgnoredError], None]) -> None:
-        self._configuration, self._now = configuration, now
+        self._configuration, self._now, self._time = configuration, now, time
         self._neighbours, self._request, self._trouble = neighbours, request, trouble
         self.tallies = messages.Tallies()
         self._poses: dict[str, PoseSample] = {}
+        self._stamps: dict[str, float] = {}  # of the poses, as they came
         self._neighbours_stamp = -math.inf
+        self.readiness = Readiness({
+            name: connection.ready_timeout
+            for name, connection in configuration().connections.items() if connection.ready_required
+        })
         self._transforms = Transforms(node, configuration().frame) if _wants_transforms(configuration()) else None
         self._subscriptions = [
             node.create_subscription(String, "neighbours", self._on_neighbours, qos.NEWEST_LATCHED),
@@ -54,6 +60,8 @@ class Inbox:
         for name, connection in configuration().connections.items():
             if connection.pose_source in _POSE_TYPES:
                 self._subscriptions.append(self._subscribe(node, name, connection))
+        for name in self.readiness.names:
+            self._subscriptions.append(self._subscribe_ready(node, name))
 
     def _subscribe(self, node: Node, name: str, connection: Connection) -> Any:
         def callback(message: Any) -> None:
@@ -61,8 +69,14 @@ class Inbox:
 
         return node.create_subscription(_POSE_TYPES[connection.pose_source], connection.pose_topic, callback, qos.POSES)
 
+    def _subscribe_ready(self, node: Node, name: str) -> Any:
+        def callback(message: Bool) -> None:
+            self.readiness.say(name, message.data)
+
+        return node.create_subscription(Bool, f"{name}/ready", callback, qos.POSES)
+
     def poses(self) -> dict[str, PoseSample]:
-        """Newest good pose of each robot that has sent one, of the point that is planned with."""
+        """Newest good pose of each robot that has sent one, of the point that is planned with, in planner time."""
         if self._transforms is not None:
             for name, connection in self._configuration().connections.items():
                 if connection.pose_source == "tf":
@@ -70,8 +84,15 @@ class Inbox:
         return dict(self._poses)
 
     def forget(self) -> None:
-        """Drop all poses and the stamp of the neighbours: the clock was set back."""
-        self._poses, self._neighbours_stamp = {}, -math.inf
+        """Drop all poses and the stamp of the neighbours: time begins anew."""
+        self._poses, self._stamps, self._neighbours_stamp = {}, {}, -math.inf
+        self.tallies.begin_anew()
+
+    def clock_jumped(self, jump: float) -> None:
+        """After a jump back of so many seconds later messages may bear earlier stamps."""
+        back = min(jump, 0.0)
+        self._stamps = {name: stamp + back for name, stamp in self._stamps.items()}
+        self._neighbours_stamp += back
 
     def close(self, node: Node) -> None:
         """Take the subscriptions off the node."""
@@ -83,26 +104,24 @@ class Inbox:
         try:
             self._keep(name, connection, message, connection.pose_source)
         except messages.IgnoredError as error:
-            self._ignore(name, error)
+            self.ignore(name, error)
 
     def _look_up(self, name: str, connection: Connection, transforms: Transforms) -> None:
         message = transforms.newest(connection.pose_topic)
-        last = self._poses.get(name)
-        if message is None:
-            return
-        if last is not None and messages.seconds(message.header.stamp) == last.stamp:
-            return  # seen at the last look
+        if message is None or messages.seconds(message.header.stamp) == self._stamps.get(name):
+            return  # nothing, or seen at the last look
         self._on_pose(name, connection, message)
 
     def _keep(self, name: str, connection: Connection, message: Any, source: str) -> None:
-        configuration = self._configuration()
+        configuration, now = self._configuration(), self._now()
         sample = messages.pose_sample(
             message, "pose" if source == "tf" else source,
-            frame=configuration.frame, now=self._now(), poses=configuration.settings.poses,
+            frame=configuration.frame, now=now, poses=configuration.settings.poses,
         )
-        messages.newest(sample, self._poses.get(name))
+        messages.check_order(sample.stamp, self._stamps.get(name))
         x, y, heading = connection.planned_pose(sample.x, sample.y, sample.heading)
-        self._poses[name] = PoseSample(sample.stamp, x, y, heading)
+        self._stamps[name] = sample.stamp
+        self._poses[name] = PoseSample(self._time() - (now - sample.stamp), x, y, heading)
         self.tallies.use(name)
 
     def _on_neighbours(self, message: String) -> None:
@@ -110,7 +129,7 @@ class Inbox:
         try:
             graph, stamp = messages.parse_neighbours(message.data, names, self._neighbours_stamp)
         except messages.IgnoredError as error:
-            self._ignore("neighbours", error)
+            self.ignore("neighbours", error)
             return
         self._neighbours_stamp = stamp
         self.tallies.use("neighbours")
@@ -120,13 +139,14 @@ class Inbox:
         try:
             request = messages.parse_request(message.data)
         except messages.IgnoredError as error:
-            self._ignore("request", error)
+            self.ignore("request", error)
             return
         self.tallies.use("request")
         self._request(request)
 
-    def _ignore(self, source: str, error: messages.IgnoredError) -> None:
-        if self.tallies.ignore(source, error, self._now()):
+    def ignore(self, source: str, error: messages.IgnoredError) -> None:
+        """Count a message that is not used; told at once when that is news."""
+        if self.tallies.ignore(source, error, self._time()):
             self._trouble(source, error)
 
 

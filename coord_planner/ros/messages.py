@@ -19,7 +19,9 @@ from ..core.settings import Poses
 from ..errors import CoordPlannerError, SettingsError
 
 LONGEST_TEXT = 100_000  # characters of JSON that are read at all
-_NEIGHBOURS_VERSION = 1
+_LONGEST_WORDS = 400  # characters of what is told of an ignored message, whatever stood in it
+_NEIGHBOURS_VERSION, _HEARTBEAT_VERSION = 1, 1
+_LONGEST_NAME = 200
 
 
 class IgnoredError(CoordPlannerError):
@@ -27,12 +29,13 @@ class IgnoredError(CoordPlannerError):
 
     Attributes:
         why: a few fixed words, the same for every message with this fault: what is counted.
-        text: the figures and what to do about it.
+        text: the figures and what to do about it. figure: the one that counts, where there is one.
     """
 
-    def __init__(self, why: str, text: str) -> None:
-        self.why, self.text = why, text
-        super().__init__(f"{why}: {text}")
+    def __init__(self, why: str, text: str, figure: float = math.nan) -> None:
+        self.figure = figure
+        self.why, self.text = why, text if len(text) <= _LONGEST_WORDS else f"{text[:_LONGEST_WORDS]}..."
+        super().__init__(f"{why}: {self.text}")
 
 
 @attrs.frozen
@@ -44,21 +47,58 @@ class Request:
     overrides: Mapping[str, float] = attrs.field(factory=dict)
 
 
+@attrs.frozen
+class Beat:
+    """A heartbeat: which planner drives which robots.
+
+    Attributes:
+        fleet: name of the fleet. run: of this start of the planner; no two are the same. node: its full name.
+        commands: full names of the topics that it sends commands on; None where the message does not say.
+    """
+
+    fleet: str
+    run: str
+    node: str = ""
+    commands: Optional[frozenset[str]] = None
+
+    def meets(self, other: Beat) -> bool:
+        """Whether both command a robot of the same fleet."""
+        if self.commands is None or other.commands is None:
+            return self.fleet == other.fleet
+        return bool(self.commands & other.commands)
+
+    def __str__(self) -> str:
+        return f"{self.node or 'another planner'} (fleet {self.fleet}, run {self.run})"
+
+
+@attrs.frozen
+class Ignored:
+    """The last message of a source that was not used: when, on the caller's clock, and why (see IgnoredError)."""
+
+    when: float
+    why: str
+    text: str
+    figure: float
+
+
 @attrs.define
 class Tally:
     """What came from one source: how many messages were used, how many ignored and why the last one was."""
 
     used: int = 0
     ignored: dict[str, int] = attrs.field(factory=dict)
-    last_text: str = ""
-    last_time: float = -math.inf  # of the last ignored message, on the caller's clock
+    last: Optional[Ignored] = None
 
     def ignore(self, error: IgnoredError, now: float, quiet: float) -> bool:
         """Count an ignored message; True when it is news (first of its kind, or after ``quiet`` seconds of none)."""
-        news = error.why not in self.ignored or now - self.last_time > quiet
+        news = error.why not in self.ignored or not self.recent(now, quiet)
         self.ignored[error.why] = self.ignored.get(error.why, 0) + 1
-        self.last_text, self.last_time = str(error), now
+        self.last = Ignored(now, error.why, str(error), error.figure)
         return news
+
+    def recent(self, now: float, quiet: float) -> bool:
+        """Whether the last ignored message is at most so many seconds old."""
+        return self.last is not None and now - self.last.when <= quiet
 
     @property
     def total_ignored(self) -> int:
@@ -84,9 +124,14 @@ class Tallies:
         """Count one that was not; True when that is worth telling at once."""
         return self.of(source).ignore(error, now, self.quiet)
 
+    def begin_anew(self) -> None:
+        """Times heard of so far mean nothing any more; the counts stay."""
+        for tally in self.by_source.values():
+            tally.last = None
+
     def troubled(self, source: str, now: float) -> bool:
         """Whether the last ignored message is recent."""
-        return now - self.of(source).last_time <= self.quiet
+        return self.of(source).recent(now, self.quiet)
 
 
 def seconds(stamp: Any) -> float:
@@ -123,7 +168,8 @@ def pose_sample(message: Any, source: str, *, frame: str, now: float, poses: Pos
     given = message.header.frame_id
     if given != frame:
         raise IgnoredError("wrong frame",
-                           f"the pose is in {given!r}, the fleet's frame is {frame!r}; {_frame_remedy(source, frame)}")
+                           f"the pose is in {_short(given)}, the fleet's frame is {frame!r}; "
+                           f"{_frame_remedy(source, frame)}")
     stamp = checked_stamp(seconds(message.header.stamp), now, poses)
     pose = message.pose if source == "pose" else message.pose.pose
     x, y = float(pose.position.x), float(pose.position.y)
@@ -143,7 +189,8 @@ def checked_stamp(stamp: float, now: float, poses: Poses) -> float:
         raise IgnoredError("too old", f"stamped {age:.3f} s ago, poses.max_age is {poses.max_age:g} s; {_CLOCK_REMEDY}")
     if -age > poses.max_future:
         raise IgnoredError("from the future",
-                           f"stamped {-age:.3f} s ahead, poses.max_future is {poses.max_future:g} s; {_CLOCK_REMEDY}")
+                           f"stamped {-age:.3f} s ahead, poses.max_future is {poses.max_future:g} s; {_CLOCK_REMEDY}",
+                           -age)
     return stamp
 
 
@@ -157,16 +204,15 @@ def _frame_remedy(source: str, frame: str) -> str:
     return f"send it in {frame!r}, or set fleet.frame to the frame that all robots share"
 
 
-def newest(sample: PoseSample, last: Optional[PoseSample]) -> PoseSample:
-    """The sample, unless it is no newer than the last one that was used.
+def check_order(stamp: float, last: Optional[float]) -> None:
+    """Refuse a pose that is older than the last one that was used; stamps in seconds.
 
     Raises:
         IgnoredError: it was overtaken.
     """
-    if last is not None and sample.stamp < last.stamp:
-        raise IgnoredError("overtaken", f"stamped {last.stamp - sample.stamp:.3f} s before the pose in use; "
+    if last is not None and stamp < last:
+        raise IgnoredError("overtaken", f"stamped {last - stamp:.3f} s before the pose in use; "
                                         "see whether two nodes send it")
-    return sample
 
 
 def parse_neighbours(text: str, names: tuple[str, ...], newest_stamp: float) -> tuple[NeighbourGraph, float]:
@@ -233,6 +279,39 @@ def parse_request(text: str) -> Request:
     return Request(str(given), name, {key: float(value) for key, value in overrides.items()})
 
 
+def heartbeat_text(beat: Beat) -> str:
+    """The message for a heartbeat, as :func:`parse_heartbeat` reads it."""
+    content = {"version": _HEARTBEAT_VERSION, "fleet": beat.fleet, "run": beat.run, "node": beat.node}
+    if beat.commands is not None:
+        content["commands"] = sorted(beat.commands)
+    return json.dumps(content)
+
+
+def parse_heartbeat(text: str) -> Beat:
+    """The heartbeat in a ``~/heartbeat`` message.
+
+    Args:
+        text: JSON ``{"version": 1, "fleet": .., "run": .., "node": .., "commands": [topic, ...]}``; the last two may
+            be left out.
+
+    Raises:
+        IgnoredError: not such a text.
+    """
+    content = _json_object(text, {"version", "fleet", "run", "node", "commands"})
+    if content.get("version") != _HEARTBEAT_VERSION or isinstance(content["version"], bool):
+        raise IgnoredError("unknown version",
+                           f"version is {_short(content.get('version'))}, it must be {_HEARTBEAT_VERSION}")
+    fleet, run, node = content.get("fleet"), content.get("run"), content.get("node", "")
+    if not all(isinstance(word, str) and len(word) <= _LONGEST_NAME for word in (fleet, run, node)) or not run:
+        raise IgnoredError("malformed", f"fleet, run and node must be names of at most {_LONGEST_NAME} characters")
+    commands = content.get("commands")
+    if commands is None:
+        return Beat(str(fleet), str(run), str(node))
+    if not isinstance(commands, list) or not all(isinstance(topic, str) for topic in commands):
+        raise IgnoredError("malformed", f"commands is {_short(commands)}, it must be a list of topics")
+    return Beat(str(fleet), str(run), str(node), frozenset(commands))
+
+
 def _json_object(text: str, keys: set[str]) -> dict[str, Any]:
     if len(text) > LONGEST_TEXT:
         raise IgnoredError("malformed", f"{len(text)} characters, at most {LONGEST_TEXT} are read")
@@ -257,5 +336,5 @@ def _is_number(value: Any) -> bool:
 
 
 def _short(value: Any, longest: int = 80) -> str:
-    shown = repr(value)
+    shown = repr(value[:longest] if isinstance(value, (str, list)) else value)
     return shown if len(shown) <= longest else shown[: longest - 3] + "..."

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any, Optional
 
+import numpy as np
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus
 from geometry_msgs.msg import Twist, TwistStamped
 from nav_msgs.msg import Path
@@ -14,6 +15,7 @@ from std_msgs.msg import Float64, String
 from visualization_msgs.msg import MarkerArray
 
 from ..config import Configuration, Connection
+from ..core.fleet import Fleet
 from ..core.graph import NeighbourGraph
 from ..core.messages import Command, Decision
 from ..errors import SettingsError
@@ -25,9 +27,9 @@ class Commander:
 
     def __init__(self, node: Node, name: str, connection: Connection) -> None:
         self._kind, self._wheelbase = connection.command_type, connection.wheelbase
-        profile = qos.commands(connection.command_timeout)
+        profile, motion = qos.commands(connection.command_timeout), _command_type(name, self._kind)
         self._curvature = node.create_publisher(Float64, f"{name}/curvature", profile)
-        self._motion = node.create_publisher(_command_type(name, self._kind), connection.command_topic, profile)
+        self._motion = node.create_publisher(motion, connection.command_topic, profile)
         self.last = Command(0.0, 0.0)
 
     def send(self, command: Command, seconds: float) -> None:
@@ -50,6 +52,11 @@ class Commander:
     def arrived(self, timeout: float) -> bool:
         """Wait until every reader has the last command; seconds."""
         return bool(self._motion.wait_for_all_acked(Duration(seconds=timeout)))
+
+    @property
+    def topic(self) -> str:
+        """Full name of the topic of its motion."""
+        return str(self._motion.topic_name)
 
     def publishers(self) -> list[Any]:
         return [self._curvature, self._motion]
@@ -93,6 +100,17 @@ class Outbox:
         self._status = node.create_publisher(DiagnosticStatus, "~/status", qos.LATCHED)
         self._neighbours = node.create_publisher(String, "~/neighbours_in_force", qos.NEWEST_LATCHED)
         self._diagnostics = node.create_publisher(DiagnosticArray, "/diagnostics", qos.RELIABLE)
+
+    @property
+    def command_topics(self) -> list[str]:
+        """Full names of the topics on which robots are driven."""
+        return [commander.topic for commander in self._commanders.values()]
+
+    def stand_by_themselves(self, silence: float, fleet: Fleet) -> list[str]:
+        """Robots that may stand by now, since they have heard nothing for so many seconds while they moved."""
+        speeds = np.array([abs(self._commanders[name].last.speed) for name in fleet.names])
+        stood = (speeds > 0.0) & (silence > fleet.timeouts() + speeds / fleet.limit("max_braking"))
+        return [name for name, stands in zip(fleet.names, stood) if stands]
 
     def send(self, commands: Mapping[str, Command], seconds: float) -> None:
         """Commands to the robots, unless ``commands.publish`` is false."""

@@ -111,16 +111,24 @@ class LiveParameters:
     def __init__(self, node: Node, configuration: config.Configuration,
                  refusal: Callable[[config.Configuration], str],
                  changed: Callable[[config.Configuration, tuple[str, ...]], None]) -> None:
-        self.configuration, self._refusal, self._changed = configuration, refusal, changed
+        self.configuration, self._node = configuration, node
+        self._refusal, self._changed = refusal, changed
         node.add_on_set_parameters_callback(self._check)
         node.add_post_set_parameters_callback(self._take)
 
     def _check(self, items: Sequence[Parameter]) -> SetParametersResult:
         try:
+            self._check_clock(items)
             reason = self._refusal(self._new(items))
         except SettingsError as error:
             reason = str(error)
         return SetParametersResult(successful=not reason, reason=reason)
+
+    def _check_clock(self, items: Sequence[Parameter]) -> None:
+        for item in items:
+            if item.name == "use_sim_time" and item.value != self._node.get_parameter(item.name).value:
+                raise SettingsError("the clock cannot be changed while the node runs", key=item.name,
+                                    allowed="a new start of the node with it")
 
     def _take(self, items: Sequence[Parameter]) -> None:
         keys = tuple(item.name for item in items if not is_of_ros(item.name))

@@ -17,7 +17,7 @@ from typing import Optional
 
 _DOMAINS = range(1, 102)  # above 101 the ports would meet those that Linux hands out by itself
 _LONGEST_LIFE = 600.0  # seconds; should whoever started a node die without a word
-_GRACE = 5.0  # seconds between asking a node to end and killing it
+_GRACE = 15.0  # seconds between asking a node to end and killing it; a planner may have a fleet to stop first
 
 
 def free_domain(seed: Optional[int] = None) -> int:
@@ -45,12 +45,18 @@ def environment(domain: int) -> dict[str, str]:
 
 
 class NodeProcess:
-    """One node, ``python -m coord_planner.ros.<module>``, in a process group of its own; its output goes to a file."""
+    """One node, ``python -m coord_planner.ros.<module>``, in a process group of its own; its output goes to a file.
 
-    def __init__(self, module: str, params: Sequence[Path], domain: int, log: Path, *,
-                 extra: Sequence[str] = (), variables: Mapping[str, str] | None = None) -> None:
+    Args:
+        extra: more ROS arguments. before: arguments of Python in the place of ``-m coord_planner.ros``, a script
+            that runs the module that it is given.
+    """
+
+    def __init__(self, module: str, params: Sequence[Path], domain: int, log: Path, *, extra: Sequence[str] = (),
+                 before: Sequence[str] = (), variables: Mapping[str, str] | None = None) -> None:
         self.name, self.log = module, log
-        command = [sys.executable, "-m", f"coord_planner.ros.{module}", "--ros-args"]
+        started = [*before, module] if before else ["-m", f"coord_planner.ros.{module}"]
+        command = [sys.executable, *started, "--ros-args"]
         for file in params:
             command += ["--params-file", str(file)]
         command += extra

@@ -7,6 +7,8 @@ from rclpy.qos import DurabilityPolicy, HistoryPolicy, QoSProfile, ReliabilityPo
 
 # Best effort accepts every publisher: a reliable subscriber would get nothing from a best-effort one.
 POSES = QoSProfile(history=HistoryPolicy.KEEP_LAST, depth=1, reliability=ReliabilityPolicy.BEST_EFFORT)
+# The same for what whoever likes may send: deep enough that one sender does not push out the others.
+ANYBODY = QoSProfile(history=HistoryPolicy.KEEP_LAST, depth=10, reliability=ReliabilityPolicy.BEST_EFFORT)
 RELIABLE = QoSProfile(history=HistoryPolicy.KEEP_LAST, depth=10, reliability=ReliabilityPolicy.RELIABLE)
 NEWEST = QoSProfile(history=HistoryPolicy.KEEP_LAST, depth=1, reliability=ReliabilityPolicy.RELIABLE)
 # Ten deep, so that of two answers in a row neither is lost; a late reader asks for as many as it wants.

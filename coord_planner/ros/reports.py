@@ -14,7 +14,9 @@ from diagnostic_msgs.msg import DiagnosticStatus, KeyValue
 from ..config import Configuration
 from ..core.messages import Answer, Decision, Level, PoseSample, State
 from . import outgoing
+from .inbox import Inbox
 from .messages import Tallies
+from .readiness import Readiness
 
 
 @attrs.frozen
@@ -41,17 +43,18 @@ class Situation:
 
     Attributes:
         node: fully qualified name of the node. active: whether its lifecycle state is active.
-        now: seconds on the clock of the stamps; 0 while there is none.
+        now: seconds on the clock of the stamps; 0 while there is none. time: planner time, seconds.
         state: of the fleet. decision: the newest. answer: to the newest request. change: the newest.
         ends: asked ends of the manoeuvre in hand, shape (N, 3), NaN where nothing is asked; None without one.
         tick_ms: wall time of the last tick. overruns: ticks left out.
-        trouble: what went wrong in the node itself ("" for nothing).
+        trouble: what went wrong in the node itself ("" for nothing). inactive: why it did not become active.
     """
 
     node: str
     configuration: Configuration
     active: bool
     now: float
+    time: float
     state: State
     decision: Decision
     answer: Optional[Answer] = None
@@ -60,6 +63,7 @@ class Situation:
     tick_ms: float = 0.0
     overruns: int = 0
     trouble: str = ""
+    inactive: str = ""
 
 
 def status(at: Situation) -> DiagnosticStatus:
@@ -99,8 +103,8 @@ def _ends_text(at: Situation) -> str:
     return json.dumps(dict(zip(at.decision.names, rows)))
 
 
-def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies) -> list[DiagnosticStatus]:
-    """Everything for ``/diagnostics``: the fleet, each warning, each robot's poses, each kind of message."""
+def diagnostics(at: Situation, inbox: Inbox) -> list[DiagnosticStatus]:
+    """Everything for ``/diagnostics``: the fleet, each warning, each robot, each kind of message."""
     level, words = _summary(at)
     values = {
         "state": at.state.value, "active": at.active, "tick_ms": f"{at.tick_ms:.2f}",
@@ -109,10 +113,12 @@ def diagnostics(at: Situation, poses: Mapping[str, PoseSample], tallies: Tallies
     found = [_message(f"{at.node}: fleet", at.configuration.fleet_name, level, words, values), _of_coupling(at)]
     for caution in at.decision.warnings:
         found.append(_message(f"{at.node}: {caution.code}", caution.subject, caution.level, caution.text, {}))
+    poses = inbox.poses()
     for name in at.configuration.fleet.names:
-        found.append(_of_poses(at, name, poses.get(name), tallies))
-    for topic in ("neighbours", "request"):
-        found.append(_of_messages(at, f"{topic} messages", topic, tallies))
+        found.append(_of_poses(at, name, poses.get(name), inbox.tallies))
+    found += [_of_readiness(at, name, inbox.readiness) for name in inbox.readiness.names]
+    for topic in ("neighbours", "request", "heartbeat"):
+        found.append(_of_messages(at, f"{topic} messages", topic, inbox.tallies))
     return found
 
 
@@ -138,6 +144,8 @@ def _summary(at: Situation) -> tuple[Level, str]:
     if at.now <= 0.0:
         return Level.WARN, "no clock yet: use_sim_time is set and nothing has come on /clock"
     if not at.active:
+        if at.inactive:
+            return Level.WARN, f"not active: {at.inactive}"
         return Level.OK, "not active: nothing is planned"
     if at.trouble:
         return Level.ERROR, at.trouble
@@ -148,7 +156,7 @@ def _summary(at: Situation) -> tuple[Level, str]:
 def _of_poses(at: Situation, name: str, pose: Optional[PoseSample], tallies: Tallies) -> DiagnosticStatus:
     message = _of_messages(at, f"poses of {name}", name, tallies)
     limit = at.configuration.settings.poses.max_age
-    age = math.inf if pose is None else at.now - pose.stamp
+    age = math.inf if pose is None else at.time - pose.stamp
     message.values.append(KeyValue(key="age_s", value=f"{age:.3f}"))
     if message.level != DiagnosticStatus.OK:
         return message
@@ -160,12 +168,23 @@ def _of_poses(at: Situation, name: str, pose: Optional[PoseSample], tallies: Tal
     return message
 
 
+def _of_readiness(at: Situation, name: str, readiness: Readiness) -> DiagnosticStatus:
+    level, words = Level.OK, "ready to be driven"
+    if name in readiness.silent():
+        level, words = Level.STALE, "does not say that it is ready to be driven"
+    elif name in readiness.not_ready():
+        level, words = Level.WARN, "not ready to be driven"
+    values = {"age_s": f"{readiness.silence(name):.3f}"}
+    return _message(f"{at.node}: readiness of {name}", name, level, words, values)
+
+
 def _of_messages(at: Situation, what: str, source: str, tallies: Tallies) -> DiagnosticStatus:
     tally = tallies.of(source)
-    troubled = tallies.troubled(source, at.now)
-    values: dict[str, Any] = {"used": tally.used, "ignored": tally.total_ignored, "last_ignored": tally.last_text}
+    troubled = tallies.troubled(source, at.time)
+    last = tally.last.text if tally.last is not None else ""
+    values: dict[str, Any] = {"used": tally.used, "ignored": tally.total_ignored, "last_ignored": last}
     values |= {f"ignored: {why}": count for why, count in sorted(tally.ignored.items())}
-    words = f"a message was ignored, {tally.last_text}" if troubled else "fine"
+    words = f"a message was ignored, {last}" if troubled else "fine"
     return _message(f"{at.node}: {what}", source, Level.WARN if troubled else Level.OK, words, values)
 
 

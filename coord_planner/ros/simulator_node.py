@@ -8,15 +8,16 @@ import time
 from collections.abc import Sequence
 from typing import Any, Optional
 
+import attrs
 import numpy as np
-from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, Twist, TwistStamped
+from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, Twist, TwistStamped, Vector3
 from nav_msgs.msg import Odometry
 from rclpy.clock import Clock
 from rclpy.clock_type import ClockType
 from rclpy.executors import SingleThreadedExecutor
 from rclpy.node import Node
 from rosgraph_msgs.msg import Clock as ClockMessage
-from std_msgs.msg import Float64
+from std_msgs.msg import Bool, Float64
 
 from .. import config
 from ..core.messages import Command, PoseSample
@@ -24,8 +25,10 @@ from ..errors import SettingsError
 from ..trial.vehicle import SimulatedFleet
 from . import outgoing, parameters, qos
 from .spinning import Signals, run, spin
+from .timekeeper import Timekeeper
 
 _STEP = 0.02  # steady seconds between two steps of the simulation
+_READY_EVERY = 0.2  # steady seconds between two words of a robot on whether it may be driven
 _LAST_MOTION = 2.0  # steady seconds from the machines' stand to the simulator's end, for whoever lives by its clock
 _PATIENCE = 20.0  # steady seconds after a signal in which machines may still be driven
 _STANDING = 1e-9  # m/s; below it a twist does not say which way the wheels point
@@ -34,9 +37,14 @@ _STANDING = 1e-9  # m/s; below it a twist does not say which way the wheels poin
 class SimulatorNode(Node):
     """All robots of a parameter file.
 
-    Publishes each robot's noisy pose by its ``pose_source``, and its true motion on
-    ``<robot>/simulated_state`` (Odometry; with no noise and no delay). ``<robot>/simulated_speed_factor``
-    (Float64) makes a machine reach only a part of its commanded speed; 1 heals it.
+    Publishes each robot's noisy pose by its ``pose_source``, ``<robot>/ready``, and its true motion on
+    ``<robot>/simulated_state`` (Odometry; with no noise and no delay). Faults are asked for by messages:
+
+    * ``<robot>/simulated_speed_factor`` (Float64): it reaches only this part of its commanded speed; 1 heals it.
+    * ``<robot>/simulated_ready`` (Bool): false: it says that it is not ready, and obeys nothing; true heals it.
+    * ``<robot>/simulated_pose_shift`` (Vector3; x, y in metres, z in radians): its poses are off by so much.
+
+    The machines live by a time of their own, which does not jump when the clock of the stamps is set.
 
     Args:
         arguments: the command line, to name the parameter file in error messages.
@@ -54,10 +62,13 @@ class SimulatorNode(Node):
         self._machines = SimulatedFleet(
             configuration.fleet, configuration.all_starts(), simulation,
             {name: connection.command_timeout for name, connection in configuration.connections.items()},
-            np.random.default_rng(simulation.seed), time=self._now() if not simulation.publish_clock else 0.0,
+            np.random.default_rng(simulation.seed),
         )
-        self._began, self._clock_began = time.monotonic(), self._machines.time
-        self._next_poses = self._clock_began
+        self._began = time.monotonic()
+        follows_clock = simulation.publish_clock or bool(self.get_parameter("use_sim_time").value)
+        self._timekeeper = Timekeeper(self.now, follows_clock)
+        self._to_machines: Optional[float] = None  # their time less the timekeeper's; None before the first step
+        self._next_poses = 0.0
         self._robots = {
             name: _RobotLink(self, name, connection, configuration.frame, self._machines)
             for name, connection in configuration.connections.items()
@@ -66,7 +77,9 @@ class SimulatorNode(Node):
             self.create_publisher(ClockMessage, "/clock", qos.NEWEST) if simulation.publish_clock else None
         )
         # The steady clock drives the steps: a node that publishes /clock cannot wait for it.
-        self.create_timer(_STEP, self._step, clock=Clock(clock_type=ClockType.STEADY_TIME))
+        steady = Clock(clock_type=ClockType.STEADY_TIME)
+        self.create_timer(_STEP, self._step, clock=steady)
+        self.create_timer(_READY_EVERY, self._tell_ready, clock=steady)
 
     @property
     def moving(self) -> bool:
@@ -74,14 +87,15 @@ class SimulatorNode(Node):
         return bool(np.any(np.abs(self._machines.speeds()) > 1e-3))
 
     def now(self) -> float:
-        """Seconds on the clock that stamps the poses."""
+        """Seconds on the clock that stamps the poses; 0 while a simulated clock of others has not begun."""
         simulation = self._configuration.simulation
         if simulation.publish_clock:
-            return self._clock_began + simulation.rate_factor * (time.monotonic() - self._began)
-        return self._now()
-
-    def _now(self) -> float:
+            return simulation.rate_factor * (time.monotonic() - self._began)
         return float(self.get_clock().now().nanoseconds) * 1e-9
+
+    def machine_time(self) -> float:
+        """Seconds on the machines' own clock."""
+        return self._machines.time if self._to_machines is None else self._timekeeper.time() + self._to_machines
 
     def _step(self) -> None:
         now = self.now()
@@ -89,17 +103,29 @@ class SimulatorNode(Node):
             return  # use_sim_time, and nothing has come on /clock yet
         if self._clock_publisher is not None:
             self._clock_publisher.publish(ClockMessage(clock=outgoing.time_message(now)))
-        self._machines.advance(now)
-        if now >= self._next_poses:
-            self._next_poses = max(self._next_poses, now - 1.0) + 1.0 / self._configuration.simulation.pose_rate
-            self._publish(now)
+        jump = self._timekeeper.look()
+        if self._to_machines is None:
+            self._to_machines = self._machines.time - self._timekeeper.time()
+        elif self._timekeeper.simulated:
+            self._to_machines -= jump
+        passed = self.machine_time()
+        self._machines.advance(passed)
+        if passed >= self._next_poses:
+            self._next_poses = max(self._next_poses, passed - 1.0) + 1.0 / self._configuration.simulation.pose_rate
+            self._publish(now, passed)
 
-    def _publish(self, now: float) -> None:
-        measured = self._machines.measure(now)
+    def _publish(self, now: float, passed: float) -> None:
+        measured = self._machines.measure(passed)
         speeds, curvatures, poses = self._machines.speeds(), self._machines.curvatures(), self._machines.poses()
         for k, (name, robot) in enumerate(self._robots.items()):
-            robot.tell_pose(measured[name], Command(float(speeds[k]), float(curvatures[k])))
-            robot.tell_truth(now, poses[k], Command(float(speeds[k]), float(curvatures[k])))
+            motion = Command(float(speeds[k]), float(curvatures[k]))
+            sample = measured[name]
+            robot.tell_pose(attrs.evolve(sample, stamp=now - (passed - sample.stamp)), motion)
+            robot.tell_truth(now, poses[k], motion)
+
+    def _tell_ready(self) -> None:
+        for robot in self._robots.values():
+            robot.tell_ready()
 
 
 class _RobotLink:
@@ -114,22 +140,28 @@ class _RobotLink:
         self._node, self._name, self._connection, self._frame = node, name, connection, frame
         self._machines = machines
         self._curvature = 0.0  # as commanded last
+        self._is_ready, self._shift = True, (0.0, 0.0, 0.0)
         self._poses = node.create_publisher(_pose_type(name, connection), connection.pose_topic, qos.POSES)
         self._truth = node.create_publisher(Odometry, f"{name}/simulated_state", qos.RELIABLE)
         node.create_subscription(Float64, f"{name}/curvature", self._on_curvature, qos.NEWEST)
         motion = _command_type(name, connection)
         node.create_subscription(motion, connection.command_topic, self._on_motion, qos.NEWEST)
+        self._ready = node.create_publisher(Bool, f"{name}/ready", qos.RELIABLE)
         node.create_subscription(Float64, f"{name}/simulated_speed_factor", self._on_factor, qos.RELIABLE)
+        node.create_subscription(Bool, f"{name}/simulated_ready", self._on_ready, qos.RELIABLE)
+        node.create_subscription(Vector3, f"{name}/simulated_pose_shift", self._on_shift, qos.RELIABLE)
 
     def _on_curvature(self, message: Float64) -> None:
         if math.isfinite(message.data):
             self._curvature = message.data
 
     def _on_motion(self, message: Any) -> None:
+        if not self._is_ready:
+            return
         command = self._command(message)
         if math.isfinite(command.speed) and math.isfinite(command.curvature):
             self._curvature = command.curvature
-            self._machines.command(self._name, command, self._node.now())
+            self._machines.command(self._name, command, self._node.machine_time())
         else:
             self._node.get_logger().warning(f"{self._name} ignores a command that is not a number")
 
@@ -149,9 +181,27 @@ class _RobotLink:
         except ValueError as error:
             self._node.get_logger().warning(str(error))
 
+    def _on_ready(self, message: Bool) -> None:
+        self._is_ready = message.data
+        self.tell_ready()
+
+    def _on_shift(self, message: Vector3) -> None:
+        shift = (message.x, message.y, message.z)
+        if all(math.isfinite(value) for value in shift):
+            self._shift = shift
+        else:
+            self._node.get_logger().warning(f"pose shift {shift} for {self._name}: it must be finite")
+
+    def tell_ready(self) -> None:
+        """Whether it may be driven."""
+        self._ready.publish(Bool(data=self._is_ready))
+
     def tell_pose(self, sample: PoseSample, motion: Command) -> None:
         """What the robot's localisation says: a pose of its reported point."""
-        pose = outgoing.pose_message(*self._connection.reported_pose(sample.x, sample.y, sample.heading))
+        dx, dy, turn = self._shift
+        pose = outgoing.pose_message(
+            *self._connection.reported_pose(sample.x + dx, sample.y + dy, sample.heading + turn)
+        )
         head = outgoing.header(self._frame, sample.stamp)
         source = self._connection.pose_source
         if source == "pose":

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import queue
 import threading
 import time
@@ -87,10 +88,18 @@ class Worker:
 
     def _work_for_ever(self) -> None:
         while True:
-            job = self._jobs.get()
+            job = self._newest_job()
             if job is None or self._closed:
                 return
             self._guarded("making a reference failed", lambda job=job: self._work(job))  # type: ignore[misc]
+
+    def _newest_job(self) -> Optional[Job]:
+        """Wait for work. The coordinator waits for one outcome only, so what newer work has overtaken is dropped."""
+        job = self._jobs.get()
+        with contextlib.suppress(queue.Empty):
+            while job is not None:
+                job = self._jobs.get_nowait()
+        return job
 
     def _work(self, job: Job) -> None:
         result = job()

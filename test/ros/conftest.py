@@ -32,7 +32,7 @@ def pytest_configure(config: pytest.Config) -> None:
 SITE = """
 /**:
   ros__parameters:
-    fleet: {name: test_yard, frame: map}
+    fleet: {name: test_yard, frame: map, listen_time: 0.2}
     robots:
       names: [left, middle, right]
       left: {start_x: 0.0, start_y: 6.0}
@@ -44,11 +44,13 @@ SITE = """
     coupling: {strength: 1.0}
     horizon: {intervals: 12, interval: 0.4, rate: 5.0, budget: 0.18, lead: 1.0}
     commands: {rate: 20.0}
+    poses: {max_age: 1.0}
     site_rules: {min_clearance: 0.6, max_speed: 1.4}
     manoeuvres:
-      names: [corner_left, corner_right]
+      names: [corner_left, corner_right, nudge]
       corner_left: {kind: equal_radius, angle_deg: 60.0, radius: 3.0, speed: 1.2}
       corner_right: {kind: equal_radius, angle_deg: -60.0, radius: 3.0, speed: 1.2}
+      nudge: {kind: equal_radius, angle_deg: 5.0, radius: 3.0, speed: 0.6}
     simulation: {seed: 3, pose_noise_xy: 0.01, pose_noise_heading_deg: 0.3, pose_rate: 20.0}
 """
 
@@ -64,17 +66,28 @@ class Site:
         self.folder, self.domain = folder, processes.free_domain()
         self._nodes: list[processes.NodeProcess] = []
 
-    def params(self, more: str = "") -> Path:
-        """The site's parameter file, with more lines at the level of its groups."""
+    def params(self, more: str = "", *, each: str = "") -> Path:
+        """The site's parameter file, with more lines at the level of its groups, and more keys for each robot."""
         file = self.folder / "site.yaml"
-        file.write_text(SITE + "".join(f"    {line}\n" for line in more.splitlines()))
+        text = SITE.replace("robot_defaults: {", f"robot_defaults: {{{each}, ") if each else SITE
+        file.write_text(text + "".join(f"    {line}\n" for line in more.splitlines()))
         return file
 
-    def start(self, module: str, *extra: str, params: Path | None = None, name: str = "") -> processes.NodeProcess:
-        """Start a node; what it says goes to a file in the folder."""
-        log = self.folder / f"{name or module}.log"
+    def start(self, module: str, *extra: str, params: Path | None = None, name: str = "", renamed: str = "",
+              within: str = "", script: str = "", variables: dict[str, str] | None = None) -> processes.NodeProcess:
+        """Start a node; what it says goes to a file in the folder.
+
+        Args:
+            extra: parameters, ``key:=value``. renamed, within: its node's name and namespace.
+            script: of this folder, to run it with.
+        """
+        log = self.folder / f"{name or renamed or module}.log"
         options = [word for item in extra for word in ("-p", item)]
-        node = processes.NodeProcess(module, [params or self.params()], self.domain, log, extra=options)
+        options += ["-r", f"__node:={renamed}"] if renamed else []
+        options += ["-r", f"__ns:={within}"] if within else []
+        before = [str(Path(__file__).with_name(script))] if script else []
+        node = processes.NodeProcess(module, [params or self.params()], self.domain, log, extra=options,
+                                     before=before, variables=variables)
         self._nodes.append(node)
         return node
 

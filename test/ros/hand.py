@@ -30,12 +30,17 @@ DEACTIVATE, CLEANUP = Transition.TRANSITION_DEACTIVATE, Transition.TRANSITION_CL
 
 
 class Hand:
-    """Listens from the beginning on; every wait spins and has an end."""
+    """Listens from the beginning on; every wait spins and has an end.
 
-    def __init__(self, domain: int) -> None:
+    Args:
+        planner: name of the node that it deals with. name: of its own node.
+    """
+
+    def __init__(self, domain: int, planner: str = "planner", name: str = "hand") -> None:
+        self.planner = planner
         self.context = Context()
         rclpy.init(context=self.context, domain_id=domain)
-        self.node = Node("hand", context=self.context, use_global_arguments=False)
+        self.node = Node(name, context=self.context, use_global_arguments=False)
         self._executor = SingleThreadedExecutor(context=self.context)
         self._executor.add_node(self.node)
         self.statuses: list[dict[str, str]] = []
@@ -45,7 +50,7 @@ class Hand:
         self._clients: dict[str, Any] = {}
         self._publishers: dict[str, Any] = {}
         subscribe = self.node.create_subscription
-        subscribe(DiagnosticStatus, "planner/status", self._on_status, qos.LATCHED)
+        subscribe(DiagnosticStatus, f"{planner}/status", self._on_status, qos.LATCHED)
         subscribe(DiagnosticArray, "/diagnostics", self._on_diagnostics, 10)
         for name in ROBOTS:
             subscribe(TwistStamped, f"{name}/cmd_vel", lambda message, name=name: self._on_command(name, message), 50)
@@ -86,19 +91,41 @@ class Hand:
         while time.monotonic() < end:
             self._executor.spin_once(timeout_sec=0.02)
 
-    def until(self, done: Callable[[], bool], seconds: float = 20.0, what: str = "") -> None:
+    def until(self, done: Callable[[], bool], seconds: float = 60.0, what: str = "") -> None:
         """Spin until something is so; a failed assertion with the newest status when it does not come."""
         end = time.monotonic() + seconds
         while not done():
             assert time.monotonic() < end, f"{what or 'it'} did not come; newest status: {self.status}"
             self._executor.spin_once(timeout_sec=0.02)
 
-    def until_state(self, *states: str, seconds: float = 30.0) -> None:
+    def until_state(self, *states: str, seconds: float = 60.0) -> None:
         self.until(lambda: self.status["state"] in states, seconds, " or ".join(states))
+
+    def begin(self, name: str, *, to: float = 0.3) -> None:
+        """Begin a manoeuvre and let a part of it be driven."""
+        answer = self.trigger(f"begin/{name}")
+        assert answer.success, answer.message
+        self.until(lambda: self.status["state"] == "moving" and float(self.status["progress"]) > to, what="a motion")
+
+    def complete(self, name: str = "nudge") -> None:
+        """Begin a manoeuvre, see it through, and wait until the fleet is let go."""
+        self.until_heard()
+        answer = self.trigger(f"begin/{name}")
+        assert answer.success, answer.message
+        self.until_state("ended", "held", seconds=60.0)
+        assert self.status["state"] == "ended", self.status
+        assert self.status["completed"] == "true"
+        self.until_state("idle")
+
+    def warnings(self) -> set[tuple[str, str]]:
+        """Code and robot of each warning that was ever in force."""
+        return {
+            (item["code"], item["robot"]) for status in self.statuses for item in json.loads(status["warnings"])
+        }
 
     def until_heard(self) -> None:
         """Until the planner has fresh poses of all robots."""
-        names = [f"/planner: poses of {name}" for name in ROBOTS]
+        names = [f"/{self.planner}: poses of {name}" for name in ROBOTS]
         self.diagnostics.clear()
         self.until(lambda: all(name in self.diagnostics and self.diagnostics[name].level == b"\x00" for name in names),
                    what="poses at the planner")
@@ -117,21 +144,21 @@ class Hand:
         return client.call_async(request)
 
     def trigger(self, name: str) -> Trigger.Response:
-        return self.ask(Trigger, f"planner/{name}", Trigger.Request())
+        return self.ask(Trigger, f"{self.planner}/{name}", Trigger.Request())
 
     def transition(self, number: int) -> bool:
         request = ChangeState.Request()
         request.transition.id = number
-        return bool(self.ask(ChangeState, "planner/change_state", request).success)
+        return bool(self.ask(ChangeState, f"{self.planner}/change_state", request).success)
 
     def lifecycle(self) -> str:
-        return str(self.ask(GetState, "planner/get_state", GetState.Request()).current_state.label)
+        return str(self.ask(GetState, f"{self.planner}/get_state", GetState.Request()).current_state.label)
 
     def set(self, **values: Any) -> Any:
         """Set parameters together; ``__`` stands for a dot."""
         request = SetParametersAtomically.Request()
         request.parameters = [_parameter(key.replace("__", "."), value) for key, value in values.items()]
-        return self.ask(SetParametersAtomically, "planner/set_parameters_atomically", request).result
+        return self.ask(SetParametersAtomically, f"{self.planner}/set_parameters_atomically", request).result
 
     def publish(self, name: str, message: Any, profile: Any = qos.RELIABLE) -> None:
         """Publish once somebody listens."""
@@ -142,7 +169,7 @@ class Hand:
         self._publishers[name].publish(message)
 
     def request(self, **content: Any) -> None:
-        self.publish("planner/request", String(data=json.dumps(content)))
+        self.publish(f"{self.planner}/request", String(data=json.dumps(content)))
 
     def answer_to(self, request_id: str) -> dict[str, str]:
         """The first status that answers a request."""

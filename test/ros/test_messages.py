@@ -96,10 +96,10 @@ def test_an_empty_orientation_is_no_rotation() -> None:
 
 
 def test_overtaken_poses_are_not_used() -> None:
-    last = PoseSample(NOW, 0.0, 0.0, 0.0)
-    assert messages.newest(last, None) is last
+    messages.check_order(NOW, None)
+    messages.check_order(NOW, NOW)
     with pytest.raises(messages.IgnoredError, match="overtaken"):
-        messages.newest(PoseSample(NOW - 0.02, 0.0, 0.0, 0.0), last)
+        messages.check_order(NOW - 0.02, NOW)
 
 
 def test_neighbours_there_and_back() -> None:
@@ -173,3 +173,39 @@ def test_tallies_tell_what_is_new_once() -> None:
     assert not tallies.troubled("b", 20.0)
     tally = tallies.of("a")
     assert (tally.used, tally.ignored, tally.total_ignored) == (1, {"too old": 3, "wrong frame": 1}, 4)
+
+
+def test_heartbeats_there_and_back() -> None:
+    for beat in (messages.Beat("yard", "7f", "/planner", frozenset({"/a/cmd_vel"})), messages.Beat("yard", "7f")):
+        assert messages.parse_heartbeat(messages.heartbeat_text(beat)) == beat
+
+
+@pytest.mark.parametrize("text", [
+    "", "7", "{}", '{"version": true, "fleet": "a", "run": "b"}', '{"version": 1, "fleet": "a"}',
+    '{"version": 1, "fleet": "a", "run": ""}', '{"version": 1, "fleet": "a", "run": 7}',
+    '{"version": 1, "fleet": "a", "run": "b", "commands": [7]}',
+    '{"version": 1, "fleet": "a", "run": "b", "commands": "c"}',
+    f'{{"version": 1, "fleet": "a", "run": "{"b" * 1000}"}}', '{"version": 2, "fleet": "a", "run": "b"}',
+])
+def test_what_is_no_heartbeat_is_ignored(text: str) -> None:
+    with pytest.raises(messages.IgnoredError):
+        messages.parse_heartbeat(text)
+
+
+def test_what_is_told_of_a_message_is_short_whatever_stood_in_it() -> None:
+    huge = "x" * 1_000_000
+    message = pose_message()
+    message.header.frame_id = huge
+    calls = [
+        lambda: read(message), lambda: messages.parse_heartbeat(huge), lambda: messages.parse_request(huge),
+        lambda: messages.parse_neighbours(huge, NAMES, 0.0),
+        lambda: messages.parse_neighbours(
+            json.dumps({"version": 1, "stamp": 1.0, "edges": [["a", huge[:90_000]]]}), NAMES, 0.0
+        ),
+        lambda: messages.parse_request(json.dumps({"id": 1, "manoeuvre": [huge[:90_000]]})),
+        lambda: messages.parse_request(json.dumps({huge[:90_000]: 1})),
+    ]
+    for call in calls:
+        with pytest.raises(messages.IgnoredError) as caught:
+            call()
+        assert len(str(caught.value)) < 1000

@@ -62,7 +62,7 @@ def test_a_clock_set_back_in_motion_is_a_new_beginning(
     site: Any, params: Path, hand: Hand, planner: NodeProcess
 ) -> None:
     first = site.start("simulator_node", *FAST, params=params, name="first")
-    hand.until(lambda: "went back" in planner.output(), what="the new beginning of the clock")
+    hand.until(lambda: "jumped back" in planner.output(), what="the new beginning of the clock")
     hand.until_heard()
     assert hand.trigger("begin/corner_right").success
     hand.until(lambda: hand.status["state"] == "moving" and float(hand.status["progress"]) > 0.2)

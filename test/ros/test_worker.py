@@ -74,12 +74,31 @@ def test_what_a_step_or_a_job_raises_is_told_and_outlived() -> None:
     bench.until(lambda: len(bench.failures) == 1)
     assert "a tick failed: a mistake" in bench.failures[0]
     assert "ZeroDivisionError" in bench.failures[0]
-    bench.coordinator.waiting = [lambda: 1 // 0, lambda: "found"]
+    bench.coordinator.waiting = [lambda: 1 // 0]
+    bench.worker.collect()
+    bench.until(lambda: len(bench.failures) == 2)
+    assert "making a reference failed" in bench.failures[1]
+    bench.coordinator.waiting = [lambda: "found"]
     bench.worker.collect()
     bench.until(lambda: bench.coordinator.delivered == [("found", 7.0)])
-    assert "making a reference failed" in bench.failures[1]
     bench.time = 2.0
     bench.until(lambda: bench.worker.tick() is None and bool(bench.decisions))
+    bench.worker.close()
+    assert bench.worker.join(5.0)
+
+
+def test_of_waiting_work_only_the_newest_is_done() -> None:
+    bench = Bench()
+    going, release, done = threading.Event(), threading.Event(), []
+    bench.coordinator.waiting = [lambda: (going.set(), release.wait(5.0))]
+    bench.worker.collect()
+    assert going.wait(5.0)
+    for number in range(100):
+        bench.coordinator.waiting = [lambda number=number: done.append(number)]  # type: ignore[misc]
+        bench.worker.collect()
+    release.set()
+    bench.until(lambda: len(bench.coordinator.delivered) == 2)
+    assert done == [99]
     bench.worker.close()
     assert bench.worker.join(5.0)
 

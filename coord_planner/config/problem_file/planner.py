@@ -5,10 +5,12 @@ It is written by the planner when a plan fails. Beside the keys of other models 
     times, pace              nodes on the clock; seconds of the manoeuvre per second of the clock
     prices                   all of them
     watch                    for each pair: unit vectors and gaps at the nodes
+    fences                   for each line that a robot stays on one side of: unit vectors and reaches at the nodes
     robots[..].state         what the machine had reached and been commanded at the first node
     robots[..].end_state     what is asked at the last node, of the names in core.problem.STATES; free where left out
     robots[..].limits, footprint, response      as in a parameter file
-    robots[..].asked_speed, turn_speed, full_speed, bounds      in the intervals, and in force at nodes 1 .. M
+    robots[..].asked_speed, turn_speed, compare_speed, full_speed      in the intervals
+    robots[..].bounds        in force at nodes 1 .. M
     begun                    where the solver started: vector, multipliers (bounds, rows), warm
     reason                   why it was saved
 """
@@ -24,7 +26,7 @@ from ...core import ocp
 from ...core.case import PlannerCase
 from ...core.fleet import Fleet, Footprint, Limits, Response, Robot
 from ...core.parameter import Description, describe
-from ...core.problem import STATES, Bounds, Problem, Watch
+from ...core.problem import STATES, Bounds, Fences, Problem, Watch
 from ...core.settings import Coupling, Prices
 from ...core.solver import Start
 from ...errors import SettingsError
@@ -32,6 +34,7 @@ from . import common
 from .entries import REQUIRED, Entries
 
 _ANY = Description("a number", minimum=-1e9, maximum=1e9)
+_FAR = 1e9  # a reach that stands for none
 _BOUNDS = tuple(field.name for field in attrs.fields(Bounds))
 
 
@@ -49,7 +52,7 @@ def read(top: Entries) -> PlannerCase:
     pace = top.value("pace", Description("pace", above=0.0, maximum=10.0))
     alignment = top.value("alignment", describe(Coupling)["alignment"], default=0.0)
     prices = _group(top, "prices", Prices)
-    watch = _watch(top, group.names, intervals)
+    watch, fences = _watch(top, group.names, intervals), _fences(top, group.names, intervals)
     begun, reason = top.mapping("begun", "vector:, multipliers:, warm:"), top.value("reason", _ANY, "str", "")
     top.raise_any()
     try:
@@ -66,6 +69,7 @@ def read(top: Entries) -> PlannerCase:
         full_speed=np.array([each.full_speed for each in per_robot]),
         target=np.stack([each.target for each in per_robot]),
         bounds=Bounds(*(np.stack([each.bounds[i] for each in per_robot]) for i in range(len(_BOUNDS)))), watch=watch,
+        fences=fences, compare_speed=np.stack([each.compare_speed for each in per_robot]),
     )
     start, warm = _begun(begun, problem)
     top.done()
@@ -81,12 +85,17 @@ def write(case: PlannerCase) -> dict[str, Any]:
         {"pair": [names[k], names[j]], "normals": normals.tolist(), "gaps": gaps.tolist()}
         for (k, j), normals, gaps in zip(problem.watch.pairs, problem.watch.normals, problem.watch.gaps)
     ]
+    fences = [
+        {"robot": names[k], "normals": normals.tolist(), "reaches": np.nan_to_num(reaches, posinf=_FAR).tolist()}
+        for k, normals, reaches in zip(problem.fences.robots, problem.fences.normals, problem.fences.reaches)
+    ]
     document = {
         "model": "planner", "reason": case.reason, "robots": [_entry(problem, k) for k in range(len(names))],
         "edges": common.graph_entries(names, problem.edges, problem.weights), "coupling": problem.coupling,
         "alignment": problem.alignment, "prices": attrs.asdict(problem.prices),
         "duration": float(problem.times[-1] - problem.times[0]), "intervals": len(problem.times) - 1,
         "times": problem.times.tolist(), "pace": problem.pace, "watch": watch,
+        "fences": fences,
     }
     start = case.start
     if start is not None and not all(np.isfinite(part).all() for part in (start.vector, *(start.multipliers or ()))):
@@ -106,6 +115,7 @@ class _Robot:
     target: np.ndarray
     asked_speed: np.ndarray
     turn_speed: np.ndarray
+    compare_speed: np.ndarray
     full_speed: float
     bounds: tuple[np.ndarray, ...]
 
@@ -117,6 +127,9 @@ class _Robot:
         initial = np.concatenate([start, _state(entry, "state", STATES[3:], required=True)])
         target = _state(entry, "end_state", STATES, required=False)
         profiles = [entry.array(key, (intervals,), "one for each interval") for key in ("asked_speed", "turn_speed")]
+        compared = None
+        if entry.has("compare_speed"):
+            compared = entry.array("compare_speed", (intervals,), "one for each interval")
         full = entry.value("full_speed", Description("full speed", "m/s", above=0.0, maximum=20.0))
         limits = entry.mapping("bounds", "keys: " + ", ".join(_BOUNDS))
         if limits is None and not entry.has("bounds"):
@@ -128,7 +141,8 @@ class _Robot:
         entry.done()
         blank = np.ones(intervals)
         asked, turn = (blank if each is None else each for each in profiles)
-        return cls(robot, initial, target, asked, turn, 1.0 if full is None else float(full),
+        compared = turn if compared is None else compared
+        return cls(robot, initial, target, asked, turn, compared, 1.0 if full is None else float(full),
                    tuple(blank if each is None else each for each in bounds))
 
 
@@ -140,7 +154,8 @@ def _entry(problem: Problem, k: int) -> dict[str, Any]:
         "end_state": {name: value for name, value in zip(STATES, target) if value == value},
         "limits": attrs.asdict(robot.limits), "footprint": attrs.asdict(robot.footprint),
         "response": attrs.asdict(robot.response), "asked_speed": problem.asked_speed[k].tolist(),
-        "turn_speed": problem.turn_speed[k].tolist(), "full_speed": float(problem.full_speed[k]),
+        "turn_speed": problem.turn_speed[k].tolist(), "compare_speed": problem.compare_speed[k].tolist(),
+        "full_speed": float(problem.full_speed[k]),
         "bounds": {name: getattr(problem.bounds, name)[k].tolist() for name in _BOUNDS},
     }
 
@@ -198,6 +213,27 @@ def _watch(top: Entries, names: tuple[str, ...], intervals: int) -> Watch:
     count = len(pairs)
     return Watch(np.array(pairs, dtype=int).reshape(count, 2), np.array(normals).reshape(count, intervals, 2),
                  np.array(gaps).reshape(count, intervals))
+
+
+def _fences(top: Entries, names: tuple[str, ...], intervals: int) -> Fences:
+    what = "a list of {robot: NAME, normals:, reaches:}"
+    robots, normals, reaches = [], [], []
+    for i, entry in enumerate(top.listed("fences", what)):
+        below = top.at("fences", i)
+        name = below.plainly("robot") if isinstance(entry, dict) else None
+        if name not in names:
+            top.complaints.add("it names no robot of the file", f"fences[{i}]", what)
+            continue
+        normal = below.array("normals", (intervals, 2), "one vector for each node but the first")
+        reach = below.array("reaches", (intervals,), "one for each node but the first")
+        below.done()
+        if normal is not None and reach is not None:
+            robots.append(names.index(name))
+            normals.append(normal)
+            reaches.append(np.where(reach < _FAR, reach, np.inf))
+    count = len(robots)
+    return Fences(np.array(robots, dtype=int), np.array(normals).reshape(count, intervals, 2),
+                  np.array(reaches).reshape(count, intervals))
 
 
 def _begun(begun: Optional[Entries], problem: Problem) -> tuple[Optional[Start], bool]:

@@ -230,7 +230,8 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
     return Plan(
         fleet=problem.fleet, times=problem.times, states=states,
         rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point), short=short,
-        pairs=problem.watch.pairs, missed=np.abs(point.missed) * priced,
+        pairs=problem.watch.pairs, outside=np.zeros((0, len(problem.times) - 1)), fenced=problem.fences.robots,
+        missed=np.abs(point.missed) * priced,
         solved=found.gap <= ENOUGH and found.passed <= _KEPT_WITHIN, solve_time=took,
         iterations=found.steps, vector=vectors.primal(states, point, short, priced),
         multipliers=vectors.multipliers(known, point, found.forces, size),

@@ -133,7 +133,8 @@ def costates(numbers: Numbers, point: Point, found: Forces) -> np.ndarray:
         rate = point.limits[2 + i]
         costate[CURVATURE + i] = reached
         costate[CURVATURE_COMMAND + i] = (
-            answer.lag * (1.0 - answer.decay) * reached + (price * numbers.cost_h * rate + found.limits[2 + i]) / numbers.h
+            answer.lag * (1.0 - answer.decay) * reached
+            + (price * numbers.cost_h * rate + found.limits[2 + i]) / numbers.h
         )
     return costate
 

@@ -1,0 +1,12 @@
+"""What is asked of the fleet, and from it an end and a guessed way for each robot.
+
+``kinds`` holds what a parameter file may ask for, one module for each kind what it means for the poses at hand,
+``task`` the outcome: a Task, which ``core.reference`` plans.
+"""
+
+from .kinds import KINDS, End, EqualRadius, Manoeuvre, ToEnds
+from .task import Task, lay_out
+from .ways import eased_turn
+from .working_out import go_on, work_out
+
+__all__ = ["KINDS", "End", "EqualRadius", "Manoeuvre", "Task", "ToEnds", "eased_turn", "go_on", "lay_out", "work_out"]

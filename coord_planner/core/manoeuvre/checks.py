@@ -1,0 +1,72 @@
+"""What is refused before anything is planned, with the figures."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from ...errors import RefusedError
+from .. import outline
+from ..fleet import Fleet, weakest
+from ..settings import Settings
+from ..watch import margin
+
+
+def check_speed(speed: float, end_speed: float, fleet: Fleet, settings: Settings) -> None:
+    """No robot is asked for more speed than it and the site allow."""
+    cap = settings.site_rules.max_speed
+    for robot in fleet.robots:
+        top = min(robot.limits.max_speed, cap)
+        if speed > top + 1e-9:
+            raise RefusedError(
+                f"{speed:g} m/s is asked and {robot.name} may drive {top:g} m/s",
+                f"ask for at most {min(weakest(fleet.limit('max_speed')), cap):g} m/s",
+            )
+    if end_speed > speed + 1e-9:
+        raise RefusedError(
+            f"{end_speed:g} m/s is asked at the end and only {speed:g} m/s on the way there",
+            f"ask for an end speed of at most {speed:g} m/s",
+        )
+
+
+def check_start(fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:
+    """The robots stand with the site's clearance between them."""
+    check_apart(fleet, settings, poses, np.arange(len(fleet)), "stand", "move them apart by hand before it begins")
+
+
+def check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray, speed: float) -> None:
+    """Ends keep the site's clearance and the plan's margin: whatever is nearer, no plan would end on."""
+    placed = np.flatnonzero(~np.isnan(ends[:, 0]))
+    kept = 2 * float(margin(fleet, settings, speed).max())
+    check_apart(fleet, settings, ends, placed, "would end", "move the ends apart", kept)
+
+
+def check_apart(
+    fleet: Fleet, settings: Settings, poses: np.ndarray, which: np.ndarray, verb: str, remedy: str, kept: float = 0.0
+) -> None:
+    polygons = outline.outlines(fleet.corners()[which], poses[which])
+    gap, (k, j) = outline.closest(polygons, outline.all_pairs(len(which)))
+    allowed = settings.site_rules.min_clearance
+    if gap < allowed + kept - 1e-6:
+        first, second = fleet.names[which[k]], fleet.names[which[j]]
+        beyond = f" and the planner's margin of {kept:.2f} m" if kept else ""
+        raise RefusedError(
+            f"{first} and {second} {verb} {gap:.2f} m apart, {allowed + kept - gap:.2f} m short of the site's "
+            f"smallest clearance of {allowed:g} m{beyond}",
+            remedy,
+        )
+
+
+def check_bend(speed: float, radius: float, fleet: Fleet, settings: Settings) -> None:
+    """Turn rate and lateral acceleration at the asked speed and radius."""
+    for robot in fleet.robots:
+        lateral = min(robot.limits.max_lateral_acceleration, settings.site_rules.max_lateral_acceleration)
+        fastest = min(robot.limits.max_turn_rate * radius, math.sqrt(lateral * radius))
+        if speed > fastest + 1e-9:
+            raise RefusedError(
+                f"at {speed:g} m/s a radius of {radius:g} m asks {robot.name} for {speed / radius:.2f} rad/s and "
+                f"{speed**2 / radius:.2f} m/s^2 sideways; its limits allow {robot.limits.max_turn_rate:g} rad/s and "
+                f"{lateral:g} m/s^2",
+                f"ask for at most {fastest:.2f} m/s or for a wider radius",
+            )

@@ -1,0 +1,46 @@
+"""What a manoeuvre is worked out for, and what each kind makes of it."""
+
+from __future__ import annotations
+
+import math
+
+import attrs
+import numpy as np
+
+from ..dubins import ArcPath
+from ..fleet import Fleet
+from ..settings import Settings
+
+
+@attrs.frozen(eq=False)
+class Scene:
+    """The fleet as it stands or drives when a manoeuvre begins. N robots.
+
+    Attributes:
+        poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
+        neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+    """
+
+    fleet: Fleet
+    settings: Settings
+    poses: np.ndarray
+    speed_now: float
+    neighbours: np.ndarray
+
+
+@attrs.frozen(eq=False)
+class Laid:
+    """Where everyone goes.
+
+    Attributes:
+        ends: shape (N, 3), windings chosen; NaN where nothing is asked. ways: a guessed way for each robot.
+        duration: seconds that are given; 0: worked out from the longest way.
+        max_curvature: tightest bend that is asked for, 1/m.
+        strip: lines that no footprint may cross, as in Task.
+    """
+
+    ends: np.ndarray
+    ways: tuple[ArcPath, ...]
+    duration: float = 0.0
+    max_curvature: float = math.inf
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()

@@ -1,0 +1,126 @@
+"""A manoeuvre worked out: where everyone ends, on which guessed way, and when."""
+
+from __future__ import annotations
+
+import math
+from typing import Optional
+
+import attrs
+import numpy as np
+
+from ...errors import ArrivedError
+from ..dubins import ArcPath
+from ..fleet import Fleet, weakest
+from ..profile import SpeedProfile, speed_profile
+from ..settings import Settings
+
+# Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
+COMFORT = 0.7
+_SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
+_SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
+
+
+@attrs.frozen(eq=False)
+class Task:
+    """A manoeuvre worked out for the poses in which it begins. N robots.
+
+    Attributes:
+        name: of the manoeuvre.
+        ends: shape (N, 3), headings unwrapped; NaN where nothing is asked.
+        speed: asked speed of the fleet, m/s. asked: of each robot, shape (N,): who has a shorter way drives slower.
+        end_speed: m/s.
+        arrival: seconds until the fleet is at its ends as far as commands go, a whole number of intervals.
+        duration: seconds until the machines have settled there too, a whole number of intervals; in between
+            the manoeuvre goes straight on at the end speed.
+        ways: a guessed way for each robot.
+        profile: how far along the longest way the fleet is at which of its own seconds; shorter ways in proportion.
+        pacing: seconds of the manoeuvre and the seconds of the profile that they stand for, joined by straight lines.
+        coupling, alignment: in force for this manoeuvre.
+        max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
+        strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
+            the origin of the frame, a footprint may reach, metres.
+    """
+
+    name: str
+    ends: np.ndarray
+    speed: float
+    asked: np.ndarray
+    end_speed: float
+    arrival: float
+    duration: float
+    ways: tuple[ArcPath, ...]
+    profile: SpeedProfile
+    pacing: tuple[tuple[float, ...], tuple[float, ...]]
+    coupling: float
+    alignment: float
+    max_curvature: float = math.inf
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()
+
+    def asked_speed(self, s: np.ndarray) -> np.ndarray:
+        """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
+        along = self.profile.distance(self.profile_time(s))
+        full = max(self.profile.speeds[1], 1e-9)
+        return np.outer(self.asked, np.diff(along) / np.maximum(np.diff(s), 1e-9) / full)
+
+    def slower(self, stretch: float, settings: Settings) -> Task:
+        """The same task from its beginning in ``stretch`` times the time."""
+        step = settings.horizon.interval
+        arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
+        return attrs.evolve(
+            self, arrival=arrival, duration=arrival + self.duration - self.arrival,
+            pacing=((0.0, arrival), (0.0, self.profile.duration)),
+        )
+
+    def profile_time(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
+        inside = np.interp(s, *self.pacing)
+        return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
+
+    def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
+        scale = self.profile.duration / self.arrival
+        moments = self.profile_time(times)
+        along, speed = self.profile.distance(moments), self.profile.speed(moments) * scale
+        longest = max(max(way.length for way in self.ways), 1e-9)
+        parts = [way.length / longest for way in self.ways]
+        poses = np.stack([way.sample(along * part) for way, part in zip(self.ways, parts)])
+        curvatures = np.stack([_curvatures(way, along * part) for way, part in zip(self.ways, parts)])
+        return poses, np.stack([speed * part for part in parts]), curvatures
+
+
+def lay_out(
+    name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
+    end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
+    max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
+) -> Task:
+    """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
+
+    A given duration stretches or squeezes the profile: it is then driven slower or faster than asked.
+    """
+    longest = max(way.length for way in ways)
+    if longest < _SHORTEST_WAY:
+        raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
+    profile = speed_profile(
+        longest, speed_now, speed, end_speed,
+        COMFORT * weakest(fleet.limit("max_acceleration")), COMFORT * weakest(fleet.limit("max_braking")),
+    )
+    step = settings.horizon.interval
+    arrival = step * max(4, math.ceil((duration or profile.duration) / step - 1e-9))
+    # Machines that answer late come to rest late; the end holds the whole state.
+    slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
+    settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
+    lengths = np.array([way.length for way in ways])
+    asked = profile.speeds[1] * np.maximum(lengths / max(longest, 1e-9), 0.1)
+    return Task(
+        name, ends, speed, asked, end_speed, arrival, settled, ways, profile,
+        ((0.0, arrival), (0.0, profile.duration)),
+        settings.coupling.strength if coupling is None else coupling,
+        settings.coupling.alignment if alignment is None else alignment,
+        max_curvature, strip,
+    )
+
+
+def _curvatures(way: ArcPath, along: np.ndarray) -> np.ndarray:
+    curvatures = np.array([curvature for curvature, _ in way.segments])
+    ends = np.cumsum([length for _, length in way.segments])
+    return curvatures[np.minimum(np.searchsorted(ends, along), len(curvatures) - 1)]

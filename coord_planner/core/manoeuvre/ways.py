@@ -1,0 +1,96 @@
+"""Guessed ways: arcs and straight lines from where each robot stands to where it shall arrive."""
+
+from __future__ import annotations
+
+import math
+from typing import Optional
+
+import numpy as np
+
+from ..dubins import ArcPath, paths, shortest
+from ..fleet import Fleet
+from .task import COMFORT
+
+# Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
+_RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
+_LONGER = 1.12
+# Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
+# breadth past it would have to drive a full circle.)
+_THERE = 0.06
+
+
+def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.ndarray, pieces: int = 16) -> ArcPath:
+    """A turn that eases in and out: curvature rises to 1/radius at ``rate_per_metre``, holds, and falls again.
+
+    Clothoids (Fresnel integrals, DLMF 7.2) in short arcs. A turn too short to reach the radius stays wider.
+    """
+    turn = abs(angle)
+    peak = min(1.0 / radius, math.sqrt(turn * rate_per_metre))
+    ramp = peak / rate_per_metre
+    hold = turn / peak - ramp if peak > 0 else 0.0
+    side = math.copysign(1.0, angle)
+    rising = [(side * peak * (i + 0.5) / pieces, ramp / pieces) for i in range(pieces)]
+    return ArcPath(as_start(start), "eased", (*rising, (side * peak, hold), *rising[::-1]))
+
+
+def ways_to_ends(
+    fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False
+) -> tuple[tuple[ArcPath, ...], np.ndarray]:
+    """A way for each robot, and the ends with their windings chosen: those of the shortest way."""
+    wound = ends.copy()
+    found: dict[int, ArcPath] = {}
+    for k in map(int, np.flatnonzero(~np.isnan(ends[:, 2]))):
+        turning = ends[k, 2] - poses[k, 2]
+        if not keep_winding:
+            turning = math.remainder(turning, 2 * math.pi)
+        if not keep_winding and np.hypot(*(ends[k, :2] - poses[k, :2])) < _THERE and abs(turning) < _THERE:
+            found[k], wound[k] = ArcPath(as_start(poses[k]), "there", ((0.0, 0.0),)), poses[k]
+            continue
+        if np.isnan(ends[k, 0]):
+            found[k] = _turn_only(fleet, k, poses[k], turning)
+        else:
+            found[k] = _way_to_pose(fleet, k, poses[k], ends[k], turning if keep_winding else None)
+        wound[k, 2] = poses[k, 2] + (found[k].turning if not np.isnan(ends[k, 0]) else turning)
+    leaders = list(found)
+    for k in range(len(fleet)):
+        if k not in found:
+            leader = min(leaders, key=lambda j: float(neighbours[k, j]))
+            joined = np.isfinite(neighbours[k, leader])
+            segments = found[leader].segments if joined else ((0.0, found[leader].length),)
+            found[k] = ArcPath(as_start(poses[k]), "copied", segments)
+    return tuple(found[k] for k in range(len(fleet))), wound
+
+
+def _turn_only(fleet: Fleet, k: int, pose: np.ndarray, turning: float) -> ArcPath:
+    limits = fleet.robots[k].limits
+    rate = COMFORT * limits.max_curvature_rate / limits.max_speed
+    return eased_turn(turning, 2.0 / limits.max_curvature, rate, pose)
+
+
+def _way_to_pose(fleet: Fleet, k: int, pose: np.ndarray, end: np.ndarray, turning: Optional[float]) -> ArcPath:
+    """The widest way that is hardly longer than the shortest, with the asked winding where one is asked."""
+    smallest = 1.0 / fleet.robots[k].limits.max_curvature
+    start, goal = as_start(pose), as_start(end)
+
+    def candidates(radius: float) -> list[ArcPath]:
+        if turning is None:
+            return [shortest(start, goal, radius)]
+        return [path for path in paths(start, goal, radius) if abs(path.turning - turning) < 0.1]
+
+    tightest = candidates(smallest * _RADII[-1])
+    if not tightest:
+        tightest = [shortest(start, goal, smallest * _RADII[-1])]
+    best = min(tightest, key=lambda path: path.length)
+    for multiple in _RADII:
+        same = [
+            path for path in candidates(smallest * multiple)
+            if path.length <= _LONGER * best.length and abs(path.turning - best.turning) < 0.1
+        ]
+        if same:
+            return min(same, key=lambda path: path.length)
+    return best
+
+
+def as_start(pose: np.ndarray) -> tuple[float, float, float]:
+    """A pose, shape (3,), as three plain numbers."""
+    return float(pose[0]), float(pose[1]), float(pose[2])

@@ -1,0 +1,93 @@
+"""Requests of people and programs, by service and by message, each answered when it is decided."""
+
+from __future__ import annotations
+
+import functools
+from collections.abc import Callable, Iterable
+from typing import TYPE_CHECKING, Any
+
+from rclpy.callback_groups import ReentrantCallbackGroup
+from rclpy.task import Future
+from std_srvs.srv import Trigger
+
+from ..core.messages import Answer, Snapshot
+from . import messages
+
+if TYPE_CHECKING:
+    from .planner_node import PlannerNode
+
+Answered = Callable[[Answer], None]
+
+
+class Requests:
+    """Services of a planner, and whoever still waits for an answer."""
+
+    def __init__(self, node: PlannerNode, manoeuvres: Iterable[str]) -> None:
+        self._node = node
+        self._waiting: set[Future] = set()
+        group = ReentrantCallbackGroup()  # a begin that waits for its answer must not hold up anything else
+        self._services = [
+            node.create_service(Trigger, f"~/begin/{name}", functools.partial(self._on_begin, name),
+                                callback_group=group)
+            for name in manoeuvres
+        ]
+        self._services.append(node.create_service(Trigger, "~/resume", self._on_resume, callback_group=group))
+        self._services.append(node.create_service(Trigger, "~/halt", self._on_halt))
+        self._services.append(node.create_service(Trigger, "~/abandon", self._on_abandon))
+
+    def close(self) -> None:
+        """Take the services off the node."""
+        for service in self._services:
+            self._node.destroy_service(service)
+
+    def refuse_all(self, words: str) -> None:
+        """Whoever still waits is refused."""
+        for future in list(self._waiting):
+            self._settle(future, Answer(False, words))
+
+    def begin(self, request: messages.Request) -> Future:
+        """Ask for a manoeuvre; the future gets its Answer."""
+        def ask(snapshot: Snapshot, answered: Answered) -> None:
+            self._node.coordinator.begin(request.manoeuvre, snapshot, overrides=request.overrides,
+                                         request_id=request.id, answered=answered)
+
+        return self._ask(ask, request.id)
+
+    async def _on_begin(self, name: str, _request: Any, response: Trigger.Response) -> Trigger.Response:
+        return _filled(response, await self.begin(messages.Request("", name)))
+
+    async def _on_resume(self, _request: Any, response: Trigger.Response) -> Trigger.Response:
+        def ask(snapshot: Snapshot, answered: Answered) -> None:
+            self._node.coordinator.resume(snapshot, answered)
+
+        return _filled(response, await self._ask(ask))
+
+    def _on_halt(self, _request: Any, response: Trigger.Response) -> Trigger.Response:
+        return _filled(response, self._node.reporter.note(self._node.halt("told to by the halt service")))
+
+    def _on_abandon(self, _request: Any, response: Trigger.Response) -> Trigger.Response:
+        return _filled(response, self._node.reporter.note(self._node.coordinator.abandon(self._node.time())))
+
+    def _ask(self, ask: Callable[[Snapshot, Answered], None], request_id: str = "") -> Future:
+        future: Future = Future(executor=self._node.executor)
+        self._waiting.add(future)
+        refusal = self._node.refusal()
+        snapshot = self._node.snapshot()
+        if snapshot is None or refusal:
+            self._settle(future, Answer(False, refusal, request_id))
+            return future
+        ask(snapshot, lambda answer: self._node.post(functools.partial(self._settle, future, answer)))
+        self._node.collect()
+        self._node.reporter.report()
+        return future
+
+    def _settle(self, future: Future, answer: Answer) -> None:
+        if future in self._waiting:
+            self._waiting.discard(future)
+            future.set_result(answer)
+            self._node.reporter.note(answer)
+
+
+def _filled(response: Trigger.Response, answer: Answer) -> Trigger.Response:
+    response.success, response.message = answer.ok, answer.text
+    return response
