@@ -35,7 +35,7 @@ from .structure import Structure
 BARRIER = 0.2  # product of margin and push with which a solve begins
 
 _STIFFEST, _SOFTEST = 1e-9, 1e12  # compliances beyond these are cut off
-_FIXED = 1e-6  # compliance of limits without room
+_FIXED = 1e-10  # compliance of limits without room
 _SMALLEST = 1e-10  # barrier below which rounding takes over
 _SHORT_OF = 0.995  # part of the way to the nearest margin or push of 0 that a step goes
 
