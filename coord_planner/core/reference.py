@@ -218,16 +218,27 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     return np.maximum(asked, _LEAST_TURN_SPEED * task.asked[:, None])
 
 
+def compare_speeds(task: Task, turn: np.ndarray) -> np.ndarray:
+    """Speed by which turn rates are divided before neighbours are compared, shape (N, M), from turn_speeds.
+
+    Where the line turns as one it is one for all: the innermost's, so that the mismatch is not drowned in what the
+    innermost, who turns tightest, pays for its own turning.
+    """
+    return np.broadcast_to(turn.min(axis=0), turn.shape).copy() if task.turn_rates else turn
+
+
 def _problem(
     task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
     guess: np.ndarray, pairs: np.ndarray,
 ) -> Problem:
     rules = settings.site_rules
     asked = asked_speeds(task, times)
+    turn = turn_speeds(task, asked)
     return Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
-        turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
+        turn_speed=turn, compare_speed=compare_speeds(task, turn), full_speed=task.asked,
+        target=end_target(task, len(fleet)),
         bounds=bounds_in_force(
             fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
             task.max_curvature,

@@ -12,7 +12,7 @@ from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
-from .reference import Reference, asked_speeds, turn_speeds
+from .reference import Reference, asked_speeds, compare_speeds, turn_speeds
 from .rollout import rolled_out
 from .settings import Settings
 from .watch import watch
@@ -55,11 +55,11 @@ def pose_problem(
     planned = asked_speeds(task, s)
     asked = _closing_up(s, times, planned * pace, behind, task, fleet, settings)
     target = paced(reference.state(float(s[-1])), pace)
-    graph = reference.graph
+    graph, turn = reference.graph, turn_speeds(task, planned)
     problem = Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=pace, initial=initial, asked_speed=asked,
-        turn_speed=turn_speeds(task, planned) * pace,
+        turn_speed=turn * pace, compare_speed=compare_speeds(task, turn) * pace,
         full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
             fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
