@@ -81,17 +81,14 @@ class Wheel:
     def about(self) -> Optional[Pivot]:
         """The pivot; None where it is left to be worked out; SettingsError when it cannot be read."""
         words = self.pivot.split()
-        try:
-            if not words:
-                return None
-            if len(words) == 2:
-                last = _finite(float(words[1]))
-                try:
-                    return Pivot(point=(_finite(float(words[0])), last))
-                except ValueError:
-                    return Pivot(beside=words[0], distance=last)
-        except ValueError:
-            pass
+        if not words:
+            return None
+        numbers = [_number(word) for word in words]
+        if len(words) == 2 and numbers[1] is not None:
+            if numbers[0] is not None:
+                return Pivot(point=(numbers[0], numbers[1]))
+            if _number(words[0], finite=False) is None:
+                return Pivot(beside=words[0], distance=numbers[1])
         raise SettingsError(f"{self.pivot!r} cannot be read", key="pivot", allowed="'X Y' or 'NAME METRES', or nothing")
 
 
@@ -131,6 +128,14 @@ def _read_end(entry: str) -> tuple[str, End]:
         f"{entry!r} cannot be read", key="ends_deg",
         allowed="'NAME pose X Y HEADING_DEG' or 'NAME heading HEADING_DEG', finite numbers",
     )
+
+
+def _number(word: str, finite: bool = True) -> Optional[float]:
+    """The number that a word stands for; None for none, and for one that is not finite where it has to be."""
+    try:
+        return _finite(float(word)) if finite else float(word)
+    except ValueError:
+        return None
 
 
 def _finite(number: float) -> float:

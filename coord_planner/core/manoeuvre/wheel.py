@@ -40,7 +40,7 @@ class _Turn:
 
 
 def lay(name: str, wanted: Wheel, scene: Scene) -> Laid:
-    """Parallel curves about the pivot; RefusedError with the missing metres where the innermost cannot turn so tightly."""
+    """Parallel curves about the pivot; RefusedError with the missing metres where it cannot be turned about."""
     line = line_of(name, scene)
     angle = math.radians(wanted.angle_deg)
     side = math.copysign(1.0, angle)
@@ -76,12 +76,13 @@ def _radii(name: str, wanted: Wheel, scene: Scene, line: Line, side: float) -> t
         ahead, radii = 0.0, across[inner] + about.distance - across
     else:
         ahead, radii = 0.0, across[inner] - across
-        radii = radii + _nearest_pivot(abs(math.radians(wanted.angle_deg)), radii, wanted.speed, scene, wanted.end_speed)
+        moving = scene.speed_now > 0.0 or wanted.end_speed > 0.0
+        radii = radii + _least(abs(math.radians(wanted.angle_deg)), radii, wanted.speed, scene, moving)
     smallest = 1.0 / fleet.robots[inner].limits.max_curvature
     if abs(radii.min()) < 1e-6:
         raise RefusedError(
-            f"{name}: {fleet.names[inner]} is to turn on the spot; it is told speed and curvature, its smallest radius is "
-            f"{smallest:.2f} m", f"choose a pivot more than {smallest:.2f} m beside it",
+            f"{name}: {fleet.names[inner]} is to turn on the spot; it is told speed and curvature, its smallest "
+            f"radius is {smallest:.2f} m", f"choose a pivot more than {smallest:.2f} m beside it",
         )
     if radii.min() < 0.0:
         outside = [robot for robot, radius in zip(fleet.names, radii) if radius <= 0.0]
@@ -159,7 +160,7 @@ def _eased(
 
 
 def _reach(turn: _Turn, angle: float) -> float:
-    """How far the innermost comes in the direction half way between its headings (a symmetric turn comes no other way)."""
+    """How far the innermost comes in the direction half way between its headings; a symmetric turn has no other."""
     turning = turn.curvatures * turn.lengths
     middle = np.cumsum(turning) - turning / 2 - angle / 2
     return float(np.sum(turn.lengths * np.asarray(se2.sinc(turning / 2)) * np.cos(middle)))
@@ -178,11 +179,6 @@ def _held(turn: _Turn, further: np.ndarray, scene: Scene) -> bool:
         (tightest / stretch <= _RESERVE * limit("max_curvature")).all() and (speeds <= _RESERVE * top).all()
         and (rate <= _RESERVE * limit("max_turn_rate")).all() and (rate * speeds <= _RESERVE * lateral).all()
     )
-
-
-def _nearest_pivot(angle: float, further: np.ndarray, speed: float, scene: Scene, end_speed: float) -> float:
-    """Metres from the innermost to the nearest pivot about which the group can turn at the asked speed."""
-    return _least(angle, further, speed, scene, scene.speed_now > 0.0 or end_speed > 0.0)
 
 
 def _missing(angle: float, radii: np.ndarray, speed: float, scene: Scene, moving: bool) -> float:
