@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import attrs
 
+from .area import Area
 from .parameter import parameter
 
 
@@ -93,6 +94,11 @@ class SiteRules:
     max_lateral_acceleration: float = parameter(
         20.0, "largest lateral acceleration for every robot on the site", "m/s^2", above=0.0, maximum=20.0, live=True
     )
+    keep_out_clearance: float = parameter(
+        0.0, "smallest allowed distance between a footprint and a keep-out area", "m", minimum=0.0, maximum=100.0,
+        live=True,
+    )
+    keep_outs: tuple[Area, ...] = ()
 
 
 @attrs.frozen

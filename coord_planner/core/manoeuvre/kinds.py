@@ -78,6 +78,14 @@ class Wheel:
         20.0, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
     )
 
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        side, about = ("left" if self.angle_deg >= 0 else "right"), self.about()
+        where = "the nearest pivot that the innermost robot can turn about"
+        if about is not None:
+            where = f"{about.distance:g} m beside {about.beside}" if about.point is None else f"{about.point} m"
+        return f"the line {abs(self.angle_deg):g} degrees to the {side} as one, about {where}"
+
     def about(self) -> Optional[Pivot]:
         """The pivot; None where it is left to be worked out; SettingsError when it cannot be read."""
         words = self.pivot.split()

@@ -39,6 +39,7 @@ class Laid:
         max_curvature: tightest bend that is asked for, 1/m.
         speed: that was worked out, m/s; None: the asked one.
         marks, turn_rates, note: as in a Task.
+        strip: lines that no footprint may cross, as in Task.
     """
 
     ends: np.ndarray
@@ -49,3 +50,4 @@ class Laid:
     marks: Optional[np.ndarray] = None
     turn_rates: bool = False
     note: str = ""
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()

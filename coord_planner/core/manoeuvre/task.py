@@ -41,6 +41,8 @@ class Task:
             length; in between the ways are driven in proportion.
         turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
         note: what was worked out and was not asked, in words.
+        strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
+            the origin of the frame, a footprint may reach, metres.
     """
 
     name: str
@@ -59,6 +61,7 @@ class Task:
     marks: np.ndarray = attrs.Factory(lambda self: ends_as_marks(self.ways), takes_self=True)
     turn_rates: bool = False
     note: str = ""
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
@@ -121,6 +124,7 @@ def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
     max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False, note: str = "",
+    strip: tuple[tuple[tuple[float, float], float], ...] = (),
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
@@ -146,7 +150,7 @@ def lay_out(
         ((0.0, arrival), (0.0, profile.duration)),
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, marks, turn_rates, note,
+        max_curvature, marks, turn_rates, note, strip,
     )
 
 

@@ -18,6 +18,7 @@ from ...errors import RefusedError
 from .. import se2
 from ..dubins import ArcPath
 from ..fleet import weakest
+from .checks import check_speed
 from .kinds import Wheel
 from .line import Line, line_of
 from .scene import Laid, Scene
@@ -47,6 +48,7 @@ def lay(name: str, wanted: Wheel, scene: Scene) -> Laid:
     radii, ahead = _radii(name, wanted, scene, line, side)
     moving = scene.speed_now > 0.0 or wanted.end_speed > 0.0 or ahead > _PIECES * 0.01
     turn = _fastest(name, abs(angle), radii, wanted.speed, scene, moving)
+    check_speed(wanted.end_speed, wanted.end_speed, scene.fleet, scene.settings)
     _check_slowest(name, turn, radii - radii.min(), scene)
     ways, marks = _ways(scene.poses, turn, radii, side, ahead)
     return Laid(

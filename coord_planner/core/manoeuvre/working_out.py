@@ -35,7 +35,8 @@ def work_out(
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
     """
-    check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
+    if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
+        check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
     laid = _LAY[type(manoeuvre)](name, manoeuvre, Scene(fleet, settings, poses, speed_now, neighbours))
     speed = manoeuvre.speed if laid.speed is None else laid.speed
@@ -44,6 +45,7 @@ def work_out(
         name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
         speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
         max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
+        strip=laid.strip,
     )
 
 
@@ -65,5 +67,5 @@ def go_on(
     return lay_out(
         task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
         duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
-        turn_rates=task.turn_rates, note=task.note,
+        turn_rates=task.turn_rates, note=task.note, strip=task.strip,
     )
