@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Optional
 
 import attrs
 import numpy as np
@@ -19,6 +20,7 @@ class Scene:
     Attributes:
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+        bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
     """
 
     fleet: Fleet
@@ -26,6 +28,7 @@ class Scene:
     poses: np.ndarray
     speed_now: float
     neighbours: np.ndarray
+    bends: np.ndarray = attrs.Factory(lambda self: np.zeros(len(self.poses)), takes_self=True)
 
 
 @attrs.frozen(eq=False)
@@ -36,6 +39,8 @@ class Laid:
         ends: shape (N, 3), windings chosen; NaN where nothing is asked. ways: a guessed way for each robot.
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
+        speed: that was worked out, m/s; None: the asked one.
+        marks, turn_rates, note: as in a Task.
         strip: lines that no footprint may cross, as in Task.
     """
 
@@ -43,4 +48,8 @@ class Laid:
     ways: tuple[ArcPath, ...]
     duration: float = 0.0
     max_curvature: float = math.inf
+    speed: Optional[float] = None
+    marks: Optional[np.ndarray] = None
+    turn_rates: bool = False
+    note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
