@@ -595,11 +595,14 @@ class Coordinator:
 
     def _solve(self, prepared: Prepared, now: float) -> ladder.Found:
         """Solve a tick, and find what can be driven."""
-        settings, solved, failure = self._settings, None, None
+        settings = self._settings
+        solved: Optional[Plan] = None
+        failure: Optional[Caution] = None
         try:
             solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            if solved.solve_time > self._budget + self._period:  # the moment it starts from has passed
-                solved, failure = None, rules.plan_late(settings, solved.solve_time)
+            took = solved.solve_time
+            if took > self._budget + self._period:  # the moment it starts from has passed
+                solved, failure = None, rules.plan_late(settings, took)
         except SolveError as error:
             failure = rules.plan_failed(settings, str(error))
         return ladder.find(prepared, solved, failure, settings, now - self._planned_at)
