@@ -20,6 +20,7 @@ class Scene:
     Attributes:
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+        bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
     """
 
     fleet: Fleet
@@ -27,6 +28,7 @@ class Scene:
     poses: np.ndarray
     speed_now: float
     neighbours: np.ndarray
+    bends: np.ndarray = attrs.Factory(lambda self: np.zeros(len(self.poses)), takes_self=True)
 
 
 @attrs.frozen(eq=False)
@@ -38,7 +40,7 @@ class Laid:
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
         speed: that was worked out, m/s; None: the asked one.
-        marks, turn_rates, note: as in a Task.
+        marks, turn_rates, behind, note: as in a Task.
         strip: lines that no footprint may cross, as in Task.
     """
 
@@ -49,5 +51,6 @@ class Laid:
     speed: Optional[float] = None
     marks: Optional[np.ndarray] = None
     turn_rates: bool = False
+    behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()

@@ -10,27 +10,29 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, to_ends, wheel
+from . import equal_radius, in_succession, to_ends, wheel
 from .checks import check_ends, check_speed, check_start
-from .kinds import EqualRadius, Manoeuvre, ToEnds, Wheel
+from .kinds import EqualRadius, InSuccession, Manoeuvre, ToEnds, Wheel
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay,
+    InSuccession: in_succession.lay,
 }
 
 
 def work_out(
     name: str, manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings, poses: np.ndarray, speed_now: float,
-    neighbours: np.ndarray,
+    neighbours: np.ndarray, bends: Optional[np.ndarray] = None,
 ) -> Task:
     """The task that a manoeuvre means from the poses at hand.
 
     Args:
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+        bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
 
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
@@ -38,14 +40,16 @@ def work_out(
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    laid = _LAY[type(manoeuvre)](name, manoeuvre, Scene(fleet, settings, poses, speed_now, neighbours))
+    laid = _LAY[type(manoeuvre)](name, manoeuvre, Scene(
+        fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
+    ))
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
     return lay_out(
         name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
         speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-        max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
-        strip=laid.strip,
+        max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
+        note=laid.note, strip=laid.strip,
     )
 
 
@@ -67,5 +71,5 @@ def go_on(
     return lay_out(
         task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
         duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
-        turn_rates=task.turn_rates, note=task.note, strip=task.strip,
+        turn_rates=task.turn_rates, behind=task.behind, note=task.note, strip=task.strip,
     )
