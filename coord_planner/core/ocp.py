@@ -306,7 +306,8 @@ def variable_bounds(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     lower["outside"], upper["outside"] = np.zeros((len(shape.fenced), m)), np.full((len(shape.fenced), m), np.inf)
     for name in ("over", "under"):
         lower[name], upper[name] = np.zeros(free.shape), np.where(free, 0.0, np.inf)
-    lower["compared"], upper["compared"] = -np.inf, np.inf
+    lower["compared"] = np.full((n if shape.compared else 0, m), -np.inf)
+    upper["compared"] = -lower["compared"]
     layout = variable_blocks(shape)
     return layout.pack(lower), layout.pack(upper)
 

@@ -89,7 +89,7 @@ def _within(
     for m in np.flatnonzero(np.diff(passed) > _SHORT):
         begin, end = passed[m] - apart, passed[m + 1] - apart
         of_leader = shares(passed, begin, end)
-        past = _past(begin, end, float(passed[0]), apart, before[follower], known and known[leader])
+        past = _past(begin, end, float(passed[0]), apart, before[follower], known[leader] if known else None)
         own = np.zeros(len(s) - 1)
         own[m] = 1.0
         rows.append(_row(e, follower == edge[0], own, of_leader, -past, float(s[m + 1] - s[m])))
@@ -125,7 +125,7 @@ def _order(edge: np.ndarray, task: Task) -> tuple[int, int, float]:
 
 
 def _row(e: int, forward: bool, own: np.ndarray, other: np.ndarray, known: float, seconds: float) -> _Row:
-    return _Row(e, own, other, known, seconds) if forward else _Row(e, -other, -own, known, seconds)
+    return _Row(e, own, other, known, seconds) if forward else _Row(e, other, own, -known, seconds)
 
 
 def _nothing(e: int, count: int) -> _Row:

@@ -10,6 +10,6 @@ from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
-    "KINDS", "End", "EqualRadius", "InSuccession", "Manoeuvre", "Pivot", "Task", "ToEnds", "Wheel", "eased_turn", "go_on", "lay_out",
-    "work_out",
+    "KINDS", "End", "EqualRadius", "InSuccession", "Manoeuvre", "Pivot", "Task", "ToEnds", "Wheel",
+    "eased_turn", "go_on", "lay_out", "work_out",
 ]

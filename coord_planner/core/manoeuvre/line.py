@@ -65,8 +65,8 @@ def line_of(name: str, scene: Scene) -> Line:
     k = int(np.argmax(np.abs(ahead)))
     if abs(ahead[k]) > _OUT_OF_LINE:
         raise RefusedError(
-            f"{name}: {scene.fleet.names[k]} stands {abs(ahead[k]):.2f} m {'ahead of' if ahead[k] > 0 else 'behind'} the "
-            f"line, {_OUT_OF_LINE:g} m allowed", "form a line abreast first",
+            f"{name}: {scene.fleet.names[k]} stands {abs(ahead[k]):.2f} m {'ahead of' if ahead[k] > 0 else 'behind'} "
+            f"the line, {_OUT_OF_LINE:g} m allowed", "form a line abreast first",
         )
     return Line(origin, heading, across)
 
@@ -92,8 +92,8 @@ def _placed(name: str, scene: Scene) -> tuple[float, np.ndarray, np.ndarray, np.
     k = int(np.argmax(askew))
     if askew[k] > _ASKEW:
         raise RefusedError(
-            f"{name}: the robots do not look one way: {scene.fleet.names[k]} is {math.degrees(askew[k]):.1f} degrees off "
-            f"the mean, {math.degrees(_ASKEW):g} allowed", "form a line or a file first",
+            f"{name}: the robots do not look one way: {scene.fleet.names[k]} is {math.degrees(askew[k]):.1f} degrees "
+            f"off the mean, {math.degrees(_ASKEW):g} allowed", "form a line or a file first",
         )
     forward, left = _axes(heading)
     origin = poses[:, :2].mean(axis=0)
