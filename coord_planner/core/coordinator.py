@@ -11,6 +11,7 @@ import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
 from . import gate, manoeuvre, reference, rules, solver, stopping
+from .case import PlannerCase
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
@@ -34,6 +35,7 @@ _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observ
 
 Answered = Callable[[Answer], None]
 Solve = Callable[[Problem, solver.Start, bool, float], Plan]
+Refused = Callable[[PlannerCase], None]
 
 
 @attrs.frozen(eq=False)
@@ -76,13 +78,14 @@ class Coordinator:
         budget: wall time that one tick's solve may take, seconds; ``settings.horizon.budget`` when left out. A
             rehearsal gives more, so that its numbers do not depend on how busy the machine is.
         solve: solves a tick: (problem, start, warm, budget) -> Plan.
+        refused: is given the program of each reference that was refused, in the thread of its job.
     """
 
     def __init__(
         self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre],
-        budget: Optional[float] = None, solve: Solve = solver.solve,
+        budget: Optional[float] = None, solve: Solve = solver.solve, refused: Refused = lambda _case: None,
     ) -> None:
-        self._solve_tick = solve
+        self._solve_tick, self._refused = solve, refused
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
         self._budget = settings.horizon.budget if budget is None else budget
@@ -367,7 +370,7 @@ class Coordinator:
         self._token += 1
         token = self._token
         intervals, budget = self._settings.horizon.intervals, self._budget
-        fleet, rules_in_force = self._fleet, self._settings.site_rules
+        fleet, rules_in_force, refused = self._fleet, self._settings.site_rules, self._refused
 
         def job() -> Outcome:
             try:
@@ -375,6 +378,8 @@ class Coordinator:
                 silence = worst_silence(made, fleet)
                 _check_silence(silence, rules_in_force)
             except CoordPlannerError as error:
+                if isinstance(error, RefusedError) and isinstance(error.case, PlannerCase):
+                    refused(error.case)
                 return Outcome(token, None, str(error), arrived=isinstance(error, ArrivedError))
             except Exception as error:  # whatever it is: nobody may be left waiting for an answer
                 return Outcome(token, None, f"a mistake in the planner ({error!r}); please report it")

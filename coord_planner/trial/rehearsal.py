@@ -9,6 +9,7 @@ from typing import Optional
 import numpy as np
 
 from ..config import Configuration
+from ..config.failures import kept
 from ..core import solver
 from ..core.coordinator import Coordinator
 from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
@@ -112,9 +113,10 @@ class _Loop:
         self._graph = self._graph_now = configuration.graph.relative_to(self._fleet.names)
         check_targets(faults, self._graph)
         self._faults = Faults(faults, rng)
+        solve, refused = kept(configuration.failures, solver.solve, settings.site_rules.min_clearance)
         self.coordinator = Coordinator(
             self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
-            self._faults.solve(solver.solve, settings.horizon.budget),
+            self._faults.solve(solve, settings.horizon.budget), refused,
         )
         self._log = _Log()
         self._period, self._tick_period = 1.0 / settings.commands.rate, 1.0 / settings.horizon.rate
