@@ -8,6 +8,7 @@ import attrs
 import numpy as np
 
 from . import grid, ocp, solver
+from .caps import planned_caps
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
@@ -53,7 +54,9 @@ def pose_problem(
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
     planned = asked_speeds(task, s)
-    asked = _closing_up(s, times, planned * pace, behind, task, fleet, settings)
+    top = np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed))
+    asked = _closing_up(s, times, planned * pace, behind, task, np.minimum(fleet.limit("max_speed")[:, None], top),
+                        settings)
     target = paced(reference.state(float(s[-1])), pace)
     graph = reference.graph
     problem = Problem(
@@ -62,7 +65,7 @@ def pose_problem(
         turn_speed=turn_speeds(task, planned) * pace,
         full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
-            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
+            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, top,
             rules.max_lateral_acceleration, task.max_curvature,
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
@@ -101,19 +104,19 @@ def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Pla
 
 
 def _closing_up(
-    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet,
+    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, top: np.ndarray,
     settings: Settings,
 ) -> np.ndarray:
     """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
-    The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
+    Nobody is asked for more than ``top`` m/s, shape (N, M). The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
     is only noise, nothing is changed and the reference is not biased.
     """
-    progress, top = settings.progress, np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
+    progress = settings.progress
     off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
     wanted = asked + soon[None, :] * (off / progress.catch_up)[:, None]
-    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top[:, None], asked))
+    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top, asked))
 
 
 def _guess(
