@@ -13,7 +13,7 @@ from . import grid, ocp, solver
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
-from .fence import Fencing, fencing
+from .fence import OPEN, Fencing, fencing
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -60,7 +60,7 @@ class Reference:
     graph: NeighbourGraph
     clearance: float
     pair: tuple[int, int]
-    fencing: Fencing = Fencing()
+    fencing: Fencing = OPEN
 
     @property
     def end(self) -> float:

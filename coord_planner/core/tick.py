@@ -109,7 +109,8 @@ def _closing_up(
 ) -> np.ndarray:
     """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
-    Nobody is asked for more than ``top`` m/s, shape (N, M). The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
+    The horizon's end alone would let them take the whole horizon for it. Nobody is asked for more than ``top``
+    m/s, shape (N, M). Within the dead band, where there
     is only noise, nothing is changed and the reference is not biased.
     """
     progress = settings.progress
