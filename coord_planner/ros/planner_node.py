@@ -6,6 +6,7 @@ import contextlib
 import functools
 import math
 import sys
+import time
 import uuid
 from collections import deque
 from collections.abc import Callable, Sequence
@@ -19,8 +20,8 @@ from rclpy.lifecycle import LifecycleNode, LifecycleState, TransitionCallbackRet
 
 from .. import config
 from ..config.failures import kept
-from ..core import solver
 from ..core.coordinator import Coordinator
+from ..core.fast.ticks import TickSolve
 from ..core.graph import NeighbourGraph
 from ..core.messages import Answer, Decision, Snapshot, State
 from . import heartbeats, messages, parameters
@@ -208,7 +209,7 @@ class PlannerNode(LifecycleNode):
     def _start_coordinator(self) -> None:
         now = self.configuration
         solve, refused = kept(
-            now.failures, solver.solve, now.settings.site_rules.min_clearance,
+            now.failures, TickSolve(time.monotonic), now.settings.site_rules.min_clearance,
             lambda words: self.post(functools.partial(self.reporter.say, words)),
         )
         self._coordinator = Coordinator(

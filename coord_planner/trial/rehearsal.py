@@ -10,8 +10,8 @@ import numpy as np
 
 from ..config import Configuration
 from ..config.failures import kept
-from ..core import solver
 from ..core.coordinator import Coordinator
+from ..core.fast.ticks import TickSolve
 from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
@@ -113,7 +113,9 @@ class _Loop:
         self._graph = self._graph_now = configuration.graph.relative_to(self._fleet.names)
         check_targets(faults, self._graph)
         self._faults = Faults(faults, rng)
-        solve, refused = kept(configuration.failures, solver.solve, settings.site_rules.min_clearance)
+        solve, refused = kept(
+            configuration.failures, TickSolve(clock.perf_counter), settings.site_rules.min_clearance
+        )
         self.coordinator = Coordinator(
             self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
             self._faults.solve(solve, settings.horizon.budget), refused,
