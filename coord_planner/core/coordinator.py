@@ -529,7 +529,7 @@ class Coordinator:
         settings = self._settings
         try:
             solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
+            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance, prepared.reference.fencing)
             if plan is None:
                 cautions.append(rules.plan_late(settings, solved.solve_time))
         except SolveError as error:
