@@ -13,7 +13,7 @@ from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
 from ..core.judge import SHORT
-from ..core.manoeuvre import EqualRadius, Manoeuvre
+from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
 from ..core.settings import SiteRules
 from ..errors import SettingsError
 from ..trial.falling_silent import Prospect, prospect
@@ -125,6 +125,8 @@ def _asked(manoeuvre: Manoeuvre) -> str:
     if isinstance(manoeuvre, EqualRadius):
         side = "left" if manoeuvre.angle_deg >= 0 else "right"
         return f"everyone {abs(manoeuvre.angle_deg):g} degrees to the {side}, radius {manoeuvre.radius:g} m"
+    if not isinstance(manoeuvre, ToEnds):
+        return manoeuvre.in_words()
     ends = manoeuvre.ends()
     posed = [name for name, end in ends.items() if end.x is not None]
     headed = [name for name in ends if name not in posed]

@@ -680,7 +680,9 @@ class Coordinator:
 def _figures(made: Reference) -> str:
     """How long a manoeuvre takes and how near the robots come, in words."""
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
-    return f"{text}, smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else text
+    if np.isfinite(made.clearance):
+        text += f", smallest clearance {made.clearance:.2f} m"
+    return f"{text}; {made.task.note}" if made.task.note else text
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Optional
 
 import attrs
 import numpy as np
@@ -38,6 +39,8 @@ class Laid:
         ends: shape (N, 3), windings chosen; NaN where nothing is asked. ways: a guessed way for each robot.
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
+        speed: that was worked out, m/s; None: the asked one.
+        marks, turn_rates, note: as in a Task.
         strip: lines that no footprint may cross, as in Task.
     """
 
@@ -45,4 +48,8 @@ class Laid:
     ways: tuple[ArcPath, ...]
     duration: float = 0.0
     max_curvature: float = math.inf
+    speed: Optional[float] = None
+    marks: Optional[np.ndarray] = None
+    turn_rates: bool = False
+    note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()

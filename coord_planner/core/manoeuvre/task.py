@@ -37,6 +37,10 @@ class Task:
         pacing: seconds of the manoeuvre and the seconds of the profile that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
+        marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
+            length; in between the ways are driven in proportion.
+        turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
+        note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
         otherwise: the same on other sides of keep-out areas, to be tried when this cannot be kept.
@@ -55,14 +59,17 @@ class Task:
     coupling: float
     alignment: float
     max_curvature: float = math.inf
+    marks: np.ndarray = attrs.Factory(lambda self: ends_as_marks(self.ways), takes_self=True)
+    turn_rates: bool = False
+    note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
     otherwise: Optional[Task] = None
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
-        along = self.profile.distance(self.profile_time(s))
-        full = max(self.profile.speeds[1], 1e-9)
-        return np.outer(self.asked, np.diff(along) / np.maximum(np.diff(s), 1e-9) / full)
+        passed = self.profile.distance(self.profile_time(s))
+        on_way, beyond = np.diff(self._along(passed), axis=1), np.diff(np.maximum(passed - self._whole, 0.0))
+        return (on_way + beyond) / np.maximum(np.diff(s), 1e-9)
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
@@ -99,24 +106,51 @@ class Task:
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
         moments = self.profile_time(times)
-        along, speed = self.profile.distance(moments), self.profile.speed(moments) * self._rate(times)
-        longest = max(max(way.length for way in self.ways), 1e-9)
-        parts = [way.length / longest for way in self.ways]
-        poses = np.stack([way.sample(along * part) for way, part in zip(self.ways, parts)])
-        curvatures = np.stack([_curvatures(way, along * part) for way, part in zip(self.ways, parts)])
-        return poses, np.stack([speed * part for part in parts]), curvatures
+        passed, speed = self.profile.distance(moments), self.profile.speed(moments) * self._rate(times)
+        along = self._along(passed)
+        poses = np.stack([way.sample(metres) for way, metres in zip(self.ways, along)])
+        curvatures = np.stack([_curvatures(way, metres) for way, metres in zip(self.ways, along)])
+        return poses, speed * self._shares(passed), curvatures
+
+    @property
+    def _whole(self) -> float:
+        return float(common_marks(self.marks)[-1])
+
+    def _along(self, passed: np.ndarray) -> np.ndarray:
+        """Metres along each way, shape (N, K), where the fleet has passed so many of the profile's."""
+        common = common_marks(self.marks)
+        return np.stack([np.interp(passed, common, metres) for metres in self.marks])
+
+    def _shares(self, passed: np.ndarray) -> np.ndarray:
+        """Speed of each robot as a part of the profile's, shape (N, K)."""
+        common = common_marks(self.marks)
+        piece = np.clip(np.searchsorted(common, passed, side="right") - 1, 0, len(common) - 2)
+        shares: np.ndarray = (np.diff(self.marks, axis=1) / np.maximum(np.diff(common), 1e-9))[:, piece]
+        return shares
+
+
+def ends_as_marks(ways: tuple[ArcPath, ...]) -> np.ndarray:
+    """Marks at the beginning and the end of ways, shape (N, 2): everybody arrives at the same moment."""
+    return np.array([[0.0, way.length] for way in ways])
+
+
+def common_marks(marks: np.ndarray) -> np.ndarray:
+    """Metres of the profile at marks of shape (N, K): between two of them those of the robot that drives furthest."""
+    return np.concatenate([[0.0], np.cumsum(np.diff(marks, axis=1).max(axis=0))])
 
 
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
+    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False, note: str = "",
+    strip: tuple[tuple[tuple[float, float], float], ...] = (),
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
     A given duration stretches or squeezes the profile: it is then driven slower or faster than asked.
     """
-    longest = max(way.length for way in ways)
+    marks = ends_as_marks(ways) if marks is None else marks
+    longest = float(common_marks(marks)[-1])
     if longest < _SHORTEST_WAY:
         raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
     profile = speed_profile(
@@ -135,7 +169,7 @@ def lay_out(
         ((0.0, arrival), (0.0, profile.duration)),
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, strip,
+        max_curvature, marks, turn_rates, note, strip,
     )
 
 

@@ -11,16 +11,18 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, to_ends
+from . import equal_radius, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
-from .kinds import EqualRadius, Manoeuvre, ToEnds
+from .kinds import EqualRadius, Manoeuvre, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import ways_to_ends
 
-_LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {EqualRadius: equal_radius.lay, ToEnds: to_ends.lay}
+_LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
+    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay,
+}
 
 
 def work_out(
@@ -37,22 +39,25 @@ def work_out(
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
     """
-    check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
+    if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
+        check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
     bent = np.zeros(len(fleet)) if bends is None else bends
     scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
     laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
-    check_ends(fleet, settings, laid.ends, manoeuvre.speed)
+    speed = manoeuvre.speed if laid.speed is None else laid.speed
+    check_ends(fleet, settings, laid.ends, speed)
     check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
 
     def task(laid: Laid) -> Task:
         return lay_out(
-            name, fleet, settings, laid.ends, laid.ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
+            name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
             speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-            max_curvature=laid.max_curvature, strip=laid.strip,
+            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
+            strip=laid.strip,
         )
 
-    return _on_the_site(laid, scene, manoeuvre.speed, task)
+    return _on_the_site(laid, scene, speed, task)
 
 
 def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
@@ -85,7 +90,7 @@ def go_on(
         return lay_out(
             task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
             speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
-            max_curvature=laid.max_curvature, strip=laid.strip,
+            max_curvature=laid.max_curvature, turn_rates=task.turn_rates, note=task.note, strip=laid.strip,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
