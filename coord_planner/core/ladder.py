@@ -23,6 +23,7 @@ from .tick import paced, usable
 
 _NEAR = 0.5  # metres or radians by which the last plan may miss the end by now and still be driven
 _SHORT = 2e-3  # metres
+_MOST = 0.9  # part of the budget after which a solver has run out of it
 _TURNED = 1e-3  # part by which a product of speed and curvature may pass its limit, for rounding
 
 
@@ -51,7 +52,9 @@ def find(
         if plan is not None and plan.solved:
             return Found(plan, True, ())
         if plan is not None and _drivable(prepared, plan, settings):
-            return Found(plan, True, (rules.plan_unfinished(settings, solved.solve_time),))
+            # A solver that stops after so many steps leaves the rest to the next tick; that is no news.
+            short = solved.solve_time > _MOST * settings.horizon.budget
+            return Found(plan, True, (rules.plan_unfinished(settings, solved.solve_time),) if short else ())
         cautions = [rules.plan_late(settings, solved.solve_time)]
     if without <= keep:
         plan = last_plan(prepared)
@@ -73,7 +76,7 @@ def last_plan(prepared: Prepared) -> Plan:
 
 
 def common_curvature(prepared: Prepared) -> Plan:
-    """Everybody turns and drives as the reference does on average, each robot as fast as its own rates lead it there."""
+    """Everybody turns and drives as the reference does on average, as soon as each robot's own rates lead it there."""
     problem, reference = prepared.problem, prepared.reference
     asked = paced(reference.states(prepared.s[1:]), problem.pace)[:, :, [CURVATURE_COMMAND, SPEED_COMMAND]].mean(axis=0)
     bounds = problem.bounds

@@ -55,7 +55,15 @@ TABLE = (
         "predicted clearance short", Level.WARN, Response.GO_ON,
         "the plan cannot keep the smallest clearance everywhere",
     ),
-    Row("clearance breached", Level.ERROR, Response.STOP, "two robots are nearer than the site allows"),
+    Row(
+        "clearance breached", Level.ERROR, Response.STOP,
+        "two robots, or a robot and a keep-out area, are nearer than the site allows",
+    ),
+    Row("keep-out ahead", Level.WARN, Response.GO_ON, "the plan cannot keep a robot out of an area everywhere"),
+    Row(
+        "keep-out ahead", Level.ERROR, Response.STOP,
+        "driving on would make the stopping distance longer than the way to a keep-out area",
+    ),
     Row(
         "free way short", Level.ERROR, Response.STOP,
         "driving on would make the stopping distance longer than the free way",
@@ -68,7 +76,7 @@ TABLE = (
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
-    Row("plan unfinished", Level.WARN, Response.GO_ON, "a plan was not finished in time; it keeps what it must as it is"),
+    Row("plan unfinished", Level.WARN, Response.GO_ON, "a plan was not finished in time; it keeps what it must"),
     Row("plan late", Level.WARN, Response.GO_ON, "a plan came too late or unusable; the last one is driven on"),
     Row("plan failed", Level.WARN, Response.GO_ON, "a tick gave no plan; the last one is driven on"),
     Row(
@@ -76,7 +84,7 @@ TABLE = (
         "the last plan is too old or no longer keeps clear; everybody drives one curvature",
     ),
     Row(
-        "plan failed", Level.ERROR, Response.STOP, "no new plan, and neither the last one nor one curvature can be driven"
+        "plan failed", Level.ERROR, Response.STOP, "no new plan, and neither the last nor one curvature can be driven"
     ),
     Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
     Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
@@ -140,6 +148,19 @@ def clearance_short(settings: Settings, pair: Sequence[str], clearance: float) -
 def clearance_breached(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:
     figures = f"clearance {clearance:.2f} m now, {settings.site_rules.min_clearance:g} m is the site's smallest"
     return _caution(settings, "clearance breached", " and ".join(pair), Level.ERROR, figures)
+
+
+def keep_out_breached(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    return _caution(settings, "clearance breached", name, Level.ERROR, f"{missing:.2f} m too near to {area} now")
+
+
+def keep_out_ahead(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    return _caution(settings, "keep-out ahead", name, Level.WARN, f"its plan comes {missing:.2f} m too near to {area}")
+
+
+def keep_out_unavoidable(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    figures = f"a stop begun a tick later would end {missing:.2f} m too near to {area}"
+    return _caution(settings, "keep-out ahead", name, Level.ERROR, figures)
 
 
 def free_way_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:

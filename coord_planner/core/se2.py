@@ -8,7 +8,7 @@ Introduction to Robotic Manipulation*, 1994, ch. 2 (from memory).
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, cast
 
 import casadi as ca
 import numpy as np
@@ -44,11 +44,11 @@ def _cos(x: Scalar) -> Scalar:
 def sinc(x: Scalar) -> Scalar:
     """sin(x)/x, smooth through 0."""
     if isinstance(x, _SYMBOLIC):
-        symbol: Any = x
-        small = ca.fabs(symbol) < _SERIES_BELOW
+        x = cast(Any, x)
+        small = ca.fabs(x) < _SERIES_BELOW
         # A denominator that is never 0 in the branch that is not taken: its derivative would be NaN.
-        away: Any = ca.if_else(small, 1.0, symbol)
-        return ca.if_else(small, _alternating_series(symbol * symbol, 1), ca.sin(symbol) / away)
+        away = ca.if_else(small, 1.0, x)
+        return ca.if_else(small, _alternating_series(x * x, 1), ca.sin(x) / away)
     # Numbers are not differentiated: the quotient is good to the last digit down to the smallest of them.
     zero = x == 0.0
     safe = x + zero

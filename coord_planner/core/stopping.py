@@ -5,6 +5,7 @@ from __future__ import annotations
 import attrs
 import numpy as np
 
+from .fence import OPEN, Fencing
 from .fleet import Fleet
 from .motion import drive, lags
 from .observer import Estimate
@@ -27,6 +28,8 @@ class Stop:
         schedule: commands down to standstill.
         manner: "in step" or "apart".
         clearance: smallest exact clearance predicted on the way, metres. pair: who comes that near.
+        spare: smallest distance to spare from what is fenced off, metres, inf where nothing is; who comes that near,
+            and to what.
         duration: seconds to standstill of the commands.
     """
 
@@ -35,6 +38,12 @@ class Stop:
     clearance: float
     pair: tuple[int, int]
     duration: float
+    spare: tuple[float, int, str] = (np.inf, -1, "")
+
+    @property
+    def nearest(self) -> float:
+        """The smaller one of both distances, metres."""
+        return min(self.clearance, self.spare[0])
 
 
 def in_step(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
@@ -47,20 +56,23 @@ def apart(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     return _slow_down(schedule, at, fleet)[1]
 
 
-def choose(schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now: float) -> Stop:
-    """The stop with the larger predicted clearance; in step when both keep the same.
+def choose(
+    schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now: float, fencing: Fencing = OPEN
+) -> Stop:
+    """The stop with the larger predicted clearance, between robots or to keep-outs; in step when both keep the same.
 
     Args:
         schedule: in effect so far. at: moment from which it can still be changed.
-        estimate: of the robots at ``now``.
+        estimate: of the robots at ``now``. fencing: what is to be kept away from.
     """
     stops = _slow_down(schedule, at, fleet)
     paths = _paths(now, fleet, estimate, schedule, stops)
     found = []
     for stop, path, manner in zip(stops, paths, _MANNERS):
         clearance, pair = closest_along(fleet, path, estimate.growth)
-        found.append(Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0])))
-    return found[1] if found[1].clearance > found[0].clearance + 1e-3 else found[0]
+        spare = fencing.least(fleet, path, estimate.growth)
+        found.append(Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0]), spare))
+    return found[1] if found[1].nearest > found[0].nearest + 1e-3 else found[0]
 
 
 def _slow_down(schedule: Schedule, at: float, fleet: Fleet) -> list[Schedule]:

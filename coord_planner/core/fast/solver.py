@@ -16,8 +16,8 @@ from ..solver import Start
 from . import active, vectors
 from .interior import BARRIER, Interior, Iterate
 from .linearised import Linearised
-from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
 from .margins import LEAST
+from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
 from .objective import constant_blocks
 from .point import Forces, Point, cost, evaluate, excess
 from .structure import Structure, structure

@@ -16,7 +16,7 @@ from .solver import TickSolver
 _KNOWN = {
     Problem: {
         "fleet", "edges", "weights", "coupling", "alignment", "prices", "times", "pace", "initial", "asked_speed",
-        "turn_speed", "full_speed", "target", "bounds", "watch", "fences", "compare_speed",
+        "turn_speed", "full_speed", "target", "bounds", "watch", "fences", "compare_speed", "compared",
     },
     Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
     Watch: {"pairs", "normals", "gaps"},
@@ -26,7 +26,7 @@ _KNOWN = {
 
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    return all(
+    return problem.compared is None and all(
         {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
         for part in (problem, problem.bounds, problem.watch, problem.fences)
     )
