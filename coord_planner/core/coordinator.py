@@ -300,7 +300,10 @@ class Coordinator:
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
             elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
-            allowed, nonsense = gate.allow(wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules)
+            rolling = self._history.rolling(now, manoeuvre.STAND_LAGS * self._fleet.response("speed_lag"))
+            allowed, nonsense = gate.allow(
+                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, rolling
+            )
             self._history.add(now, allowed)
             if nonsense.any() and self._state is State.MOVING:
                 self._begin_stop(now, "a plan held numbers that are not finite", completed=False)

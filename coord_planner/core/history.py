@@ -24,16 +24,26 @@ class CommandHistory:
         self.effect_delay = np.asarray(command_delays, dtype=float) + period / 2  # shape (N,), seconds
         self._times: deque[float] = deque(maxlen=_KEPT)
         self._values: deque[np.ndarray] = deque(maxlen=_KEPT)
+        self._gear = np.zeros(len(self.effect_delay))
+        self._driven = np.full(len(self.effect_delay), -np.inf)  # when a speed was last sent, seconds
 
     def add(self, time: float, values: np.ndarray) -> None:
         """Remember what was sent: speeds and curvatures, shape (N, 2)."""
         self._times.append(time)
         self._values.append(np.array(values, dtype=float))
+        moving = np.abs(self._values[-1][:, 0]) > 0.0
+        self._gear = np.where(moving, np.sign(self._values[-1][:, 0]), self._gear)
+        self._driven = np.where(moving, time, self._driven)
+
+    def rolling(self, now: float, rest: np.ndarray) -> np.ndarray:
+        """Which way each robot may still be moving: 1, -1, or 0 when it was told to stand for ``rest`` seconds."""
+        return np.where(now - self._driven < rest - 1e-9, self._gear, 0.0)
 
     def clear(self) -> None:
         """Forget everything: nothing is in flight any more."""
         self._times.clear()
         self._values.clear()
+        self._driven[:] = -np.inf
 
     @property
     def last(self) -> tuple[float, np.ndarray] | None:

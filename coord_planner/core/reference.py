@@ -184,7 +184,7 @@ def _stretched(
     settle = task.duration - task.arrival
     arrival = step * int(np.ceil((start + max(task.arrival - start, 0.0) * stretch) / step - 1e-9))
     end = arrival + settle
-    pacing = ((start, arrival), (float(task.profile_time(np.array(start))), task.profile.duration))
+    pacing = ((start, arrival), (float(task.drive_time(np.array(start))), task.driven))
     slower = attrs.evolve(task, arrival=arrival, duration=end, pacing=pacing)
     times = grid.until(start, end, step)
     guess = old.states(start + (times - start) * (task.duration - start) / max(end - start, step))
@@ -205,7 +205,7 @@ def end_target(task: Task, count: int) -> np.ndarray:
 
 
 def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
-    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M): speed up, hold, slow down."""
+    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M), backward negative."""
     return task.asked_speed(s)
 
 
@@ -215,7 +215,7 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     Dividing by the full speed while the fleet starts and stops would make turning on the way to it cheap, and
     the fleet would swing out first.
     """
-    return np.maximum(asked, _LEAST_TURN_SPEED * task.asked[:, None])
+    return np.maximum(np.abs(asked), _LEAST_TURN_SPEED * task.asked[:, None])
 
 
 def _problem(
@@ -230,7 +230,7 @@ def _problem(
         turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
         bounds=bounds_in_force(
             fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
-            task.max_curvature,
+            task.max_curvature, task.gears(times[1:]),
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
     )

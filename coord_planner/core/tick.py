@@ -46,7 +46,8 @@ def pose_problem(
         initial: predicted state at ``time``, shape (N, 7). start: seconds of the manoeuvre at ``time``.
         time: seconds on the clock at the first node. pace: seconds of the manoeuvre per second of the clock.
         last: the tick before, when there is one for this reference.
-        behind: metres by which each robot is behind the group, shape (N,), as the group's progress sees it.
+        behind: metres by which each robot is behind the group in the direction in which it drives, shape (N,), as
+            the group's progress sees it.
     """
     task, rules = reference.task, settings.site_rules
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
@@ -63,7 +64,7 @@ def pose_problem(
         full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
             fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
-            rules.max_lateral_acceleration, task.max_curvature,
+            rules.max_lateral_acceleration, task.max_curvature, task.gears(s[1:]),
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
     )
@@ -108,11 +109,15 @@ def _closing_up(
     The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
     is only noise, nothing is changed and the reference is not biased.
     """
-    progress, top = settings.progress, np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
+    progress, cap = settings.progress, settings.site_rules.max_speed
     off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
-    wanted = asked + soon[None, :] * (off / progress.catch_up)[:, None]
-    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top[:, None], asked))
+    gear = task.gears((s[:-1] + s[1:]) / 2)
+    top = np.where(gear < 0, -fleet.limit("min_speed")[:, None], fleet.limit("max_speed")[:, None])
+    along = np.abs(asked)
+    wanted = np.clip(along + soon[None, :] * (off / progress.catch_up)[:, None], 0.0,
+                     np.maximum(np.minimum(top, cap), along))
+    return np.where(gear == 0, asked, gear * wanted)
 
 
 def _guess(

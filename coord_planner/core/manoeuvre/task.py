@@ -9,15 +9,15 @@ import attrs
 import numpy as np
 
 from ...errors import ArrivedError
+from ..drive import Drive
 from ..dubins import ArcPath
-from ..fleet import Fleet, weakest
-from ..profile import SpeedProfile, speed_profile
+from ..fleet import Fleet
 from ..settings import Settings
+from .driving import arriving_together, check_standing
 
-# Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
-COMFORT = 0.7
 _SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
 _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
+_LEAST_PART = 0.1  # of the fleet's speed, by which deviations of a robot that hardly drives are priced
 
 
 @attrs.frozen(eq=False)
@@ -32,11 +32,14 @@ class Task:
         arrival: seconds until the fleet is at its ends as far as commands go, a whole number of intervals.
         duration: seconds until the machines have settled there too, a whole number of intervals; in between
             the manoeuvre goes straight on at the end speed.
-        ways: a guessed way for each robot.
-        profile: how far along the longest way the fleet is at which of its own seconds; shorter ways in proportion.
-        pacing: seconds of the manoeuvre and the seconds of the profile that they stand for, joined by straight lines.
+        ways: a guessed way for each robot; segments of negative length are driven backward.
+        drives: how fast each robot goes along its way, in seconds of a common clock of their own.
+        pacing: seconds of the manoeuvre and the seconds of the drives that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
+        strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
+            the origin of the frame, a footprint may reach, metres.
+        otherwise: other ways to do the same, tried in turn where this one cannot be kept.
     """
 
     name: str
@@ -47,17 +50,37 @@ class Task:
     arrival: float
     duration: float
     ways: tuple[ArcPath, ...]
-    profile: SpeedProfile
+    drives: tuple[Drive, ...]
     pacing: tuple[tuple[float, ...], tuple[float, ...]]
     coupling: float
     alignment: float
     max_curvature: float = math.inf
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    otherwise: tuple[Task, ...] = ()
+
+    @property
+    def reversing(self) -> np.ndarray:
+        """Who drives backward somewhere on its way, shape (N,)."""
+        return np.array([bool((drive.gears < 0).any()) for drive in self.drives])
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
-        """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
-        along = self.profile.distance(self.profile_time(s))
-        full = max(self.profile.speeds[1], 1e-9)
-        return np.outer(self.asked, np.diff(along) / np.maximum(np.diff(s), 1e-9) / full)
+        """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down.
+
+        Backward speeds are negative.
+        """
+        moments = self.drive_time(s)
+        steps = np.stack([np.diff(drive.advance(moments)) for drive in self.drives])
+        return steps / np.maximum(np.diff(s), 1e-9)
+
+    def gears(self, s: np.ndarray) -> np.ndarray:
+        """1, -1, or 0 where a robot has to stand, at seconds of the manoeuvre, shape (K,) -> (N, K)."""
+        moments = self.drive_time(s)
+        return np.stack([drive.gear(moments) for drive in self.drives])
+
+    def directions(self, s: float) -> np.ndarray:
+        """1 forward or -1 backward at a second of the manoeuvre, also while a robot stands, shape (N,)."""
+        moment = float(self.drive_time(np.array(s)))
+        return np.array([drive.direction(moment) for drive in self.drives])
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
@@ -65,59 +88,66 @@ class Task:
         arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
         return attrs.evolve(
             self, arrival=arrival, duration=arrival + self.duration - self.arrival,
-            pacing=((0.0, arrival), (0.0, self.profile.duration)),
+            pacing=((0.0, arrival), (0.0, self.driven)),
         )
 
-    def profile_time(self, s: np.ndarray) -> np.ndarray:
-        """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
+    @property
+    def driven(self) -> float:
+        """Seconds of the drives' own clock until all have arrived."""
+        return max(drive.duration for drive in self.drives)
+
+    def drive_time(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the drives at seconds of the manoeuvre; after arrival both run alike."""
         inside = np.interp(s, *self.pacing)
         return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
 
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
-        scale = self.profile.duration / self.arrival
-        moments = self.profile_time(times)
-        along, speed = self.profile.distance(moments), self.profile.speed(moments) * scale
-        longest = max(max(way.length for way in self.ways), 1e-9)
-        parts = [way.length / longest for way in self.ways]
-        poses = np.stack([way.sample(along * part) for way, part in zip(self.ways, parts)])
-        curvatures = np.stack([_curvatures(way, along * part) for way, part in zip(self.ways, parts)])
-        return poses, np.stack([speed * part for part in parts]), curvatures
+        scale = self.driven / self.arrival
+        moments = self.drive_time(times)
+        passed = [drive.distance(moments) for drive in self.drives]
+        poses = np.stack([way.sample(along) for way, along in zip(self.ways, passed)])
+        curvatures = np.stack([_curvatures(way, along) for way, along in zip(self.ways, passed)])
+        return poses, np.stack([drive.speed(moments) * scale for drive in self.drives]), curvatures
 
 
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf,
+    max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
+    drives: Optional[tuple[Drive, ...]] = None,
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
-    A given duration stretches or squeezes the profile: it is then driven slower or faster than asked.
+    A given duration stretches or squeezes the drives: everything is then slower or faster than asked.
+
+    Args:
+        drives: how fast each robot goes; worked out so that all arrive together when left out.
     """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
         raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
-    profile = speed_profile(
-        longest, speed_now, speed, end_speed,
-        COMFORT * weakest(fleet.limit("max_acceleration")), COMFORT * weakest(fleet.limit("max_braking")),
-    )
+    if drives is None:
+        drives = arriving_together(fleet, settings, ways, speed, end_speed, speed_now)
+    check_standing(name, fleet, drives, end_speed)
     step = settings.horizon.interval
-    arrival = step * max(4, math.ceil((duration or profile.duration) / step - 1e-9))
+    driven = max(drive.duration for drive in drives)
+    arrival = step * max(4, math.ceil((duration or driven) / step - 1e-9))
     # Machines that answer late come to rest late; the end holds the whole state.
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
-    lengths = np.array([way.length for way in ways])
-    asked = profile.speeds[1] * np.maximum(lengths / max(longest, 1e-9), 0.1)
+    fastest = np.array([drive.fastest for drive in drives])
+    asked = np.maximum(fastest, max(_LEAST_PART * float(fastest.max()), 1e-9))
     return Task(
-        name, ends, speed, asked, end_speed, arrival, settled, ways, profile,
-        ((0.0, arrival), (0.0, profile.duration)),
+        name, ends, speed, asked, end_speed, arrival, settled, ways, drives,
+        ((0.0, arrival), (0.0, driven)),
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature,
+        max_curvature, strip,
     )
 
 
 def _curvatures(way: ArcPath, along: np.ndarray) -> np.ndarray:
     curvatures = np.array([curvature for curvature, _ in way.segments])
-    ends = np.cumsum([length for _, length in way.segments])
+    ends = np.cumsum([abs(length) for _, length in way.segments])
     return curvatures[np.minimum(np.searchsorted(ends, along), len(curvatures) - 1)]

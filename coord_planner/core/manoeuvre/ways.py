@@ -9,7 +9,7 @@ import numpy as np
 
 from ..dubins import ArcPath, paths, shortest
 from ..fleet import Fleet
-from .task import COMFORT
+from .driving import COMFORT
 
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
