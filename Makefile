@@ -56,7 +56,7 @@ unit: .venv/test.stamp .venv/test_data/recordings.stamp
 	$(ONE_THREAD) $(PY) -m pytest -q test/test_sweep_cluster.py
 
 ros: .venv/test.stamp
-	$(ONE_THREAD) $(ON_TEST_DOMAIN) timeout -k 10 600 $(PY) -m pytest -q test/ros
+	$(ONE_THREAD) $(ON_TEST_DOMAIN) timeout -k 10 900 $(PY) -m pytest -q test/ros
 
 # Builds as a ROS 2 workspace does, then looks at the result as one who has sourced that workspace.
 colcon: .venv/test.stamp

@@ -5,6 +5,7 @@ from __future__ import annotations
 import typer
 
 from .commands.advise import advise
+from .commands.bench import bench
 from .commands.check import check
 from .commands.demo import demo
 from .commands.review import review
@@ -24,6 +25,7 @@ app.command()(simulate)
 app.command()(advise)
 app.command()(sweep)
 app.command()(review)
+app.command()(bench)
 
 
 @app.callback()

@@ -19,10 +19,14 @@ class SettingsError(CoordPlannerError):
 
 
 class RefusedError(CoordPlannerError):
-    """A request that cannot be kept; nothing has moved because of it."""
+    """A request that cannot be kept; nothing has moved because of it.
+
+    ``case`` is the program (core.case.PlannerCase) whose solution was not good enough, where one was solved.
+    """
 
     def __init__(self, reason: str, remedy: str) -> None:
         self.reason, self.remedy = reason, remedy
+        self.case: object = None
         super().__init__(f"{reason}; {remedy}")
 
 

@@ -5,6 +5,7 @@ Solved references are kept, since solving is what takes time. Whoever gets one m
 
 from __future__ import annotations
 
+import time
 from collections.abc import Callable, Mapping
 from functools import lru_cache
 from types import SimpleNamespace
@@ -16,6 +17,7 @@ import numpy as np
 from coord_planner.core import graph as graphs
 from coord_planner.core import manoeuvre, reference
 from coord_planner.core.coordinator import Coordinator
+from coord_planner.core.fast.ticks import TickSolve
 from coord_planner.core.fleet import Fleet, Footprint, Limits, Response, Robot
 from coord_planner.core.graph import NeighbourGraph
 from coord_planner.core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
@@ -125,7 +127,9 @@ class Yard:
     ) -> None:
         self.fleet, self.settings = fleet, with_settings
         graph = graphs.path(fleet.names) if graph is None else graph
-        self.coordinator = Coordinator(fleet, graph, with_settings, manoeuvres, budget=60.0)
+        self.coordinator = Coordinator(
+            fleet, graph, with_settings, manoeuvres, budget=60.0, solve=TickSolve(time.perf_counter)
+        )
         starts = {name: tuple(pose) for name, pose in zip(fleet.names, poses)}
         self.machines = SimulatedFleet(
             fleet, starts, SimpleNamespace(**(PERFECT | imperfect)), dict.fromkeys(fleet.names, 0.5),

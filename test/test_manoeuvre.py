@@ -148,3 +148,12 @@ def test_ends_are_read():
     with pytest.raises(SettingsError, match="'a' has two ends"):
         ToEnds(ends_deg=("a heading 1", "a heading 2")).ends()
     assert attrs.evolve(ToEnds(ends_deg=("a heading 1",)), speed=0.5).speed == 0.5
+
+
+@pytest.mark.parametrize("past, circles", [(0.02, False), (0.3, True)])
+def test_who_stands_a_finger_past_its_end_is_there_and_drives_no_circle(past, circles):
+    """Shortest forward ways jump there: 2 cm behind one is a full circle (Dubins 1957)."""
+    made = task(ToEnds(ends_deg=("cart_1 pose 0 0 0", "cart_2 pose 9 3 0")), [[past, 0.0, 0.0], [0.0, 3.0, 0.0]])
+    assert (made.ways[0].length > 2.0) == circles
+    if not circles:
+        assert made.ends[0] == pytest.approx([past, 0.0, 0.0])

@@ -230,3 +230,23 @@ def test_what_fails_in_a_tick_is_kept_once_and_can_be_solved_again(tmp_path):
     status, found, _ = answer(store.files()[1])
     assert status == 0 and found["saved_because"] == "not finite"
     assert found["cost"] == pytest.approx(good.cost, abs=1e-3)
+
+
+def test_a_refused_rehearsal_keeps_its_problem_and_solve_finds_what_stood_in_the_way(tmp_path):
+    """An invented site: one cart stands for good between another and its end, and neither can turn out of the way."""
+    site = written(tmp_path, """
+/**:
+  ros__parameters:
+    robots: {names: [stays, passes], stays: {start_x: 6.0, start_y: 0.0}, passes: {start_x: 0.0, start_y: 0.0}}
+    robot_defaults: {max_curvature: 0.02}
+    site_rules: {min_clearance: 0.85}
+    graph: {edges: ["stays passes"]}
+    manoeuvres: {names: [through], through: {kind: to_ends, ends_deg: ["passes pose 12 0 0", "stays pose 6 0 0"]}}
+""", "site.yaml")
+    kept = tmp_path / "kept"
+    status, _, err = call("simulate", site, "--manoeuvre", "through", "--set", f"failures.folder={kept}")
+    files = FailureStore(kept).files()
+    assert status == 1 and len(files) == 1 and str(files[0]) in err
+    status, found, err = answer(files[0])
+    assert status == 1 and found["status"] in ("infeasible", "failed") and "passes" in err
+    assert call("simulate", site, "--manoeuvre", "through")[0] == 1 and len(FailureStore(kept).files()) == 1

@@ -8,6 +8,7 @@ from typing import Annotated, Any, Optional
 import typer
 
 from .. import config
+from ..config.failures import FailureStore
 from ..errors import RefusedError
 from ..trial.run import Run
 from .loading import configured
@@ -59,12 +60,16 @@ def simulate(
             prepare_file(picture, "--picture")
         if bag is not None:
             prepare_bag(bag, "--bag")
+        before = _kept(configuration)
         try:
             run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
         except RefusedError as refused:
             if as_json:
                 write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
             raise
+        finally:
+            for file in sorted(_kept(configuration) - before):
+                say(f"No plan was found for a problem; it is kept in {file}. To solve it: coord-planner solve {file}")
         if bag is not None:
             _record(run, configuration, bag)
         _report(run, as_json, page, picture)
@@ -75,6 +80,12 @@ def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
 
     with progress_shown(manoeuvre) as progress:
         return rehearse(configuration, manoeuvre, seed=seed, progress=progress)
+
+
+def _kept(configuration: config.Configuration) -> set[Path]:
+    """Problems without a plan that are kept so far."""
+    folder = configuration.failures.folder
+    return set(FailureStore(folder).files()) if folder else set()
 
 
 def _record(run: Run, configuration: config.Configuration, bag: Path) -> None:

@@ -20,7 +20,7 @@ from .configuration import Configuration, Declaration
 from .connection import Connection
 from .contradictions import check_together
 from .ends import for_turning_points
-from .groups import FleetWords, Graph, Node, Place, Simulation
+from .groups import Failures, FleetWords, Graph, Node, Place, Simulation
 from .layout import Slot, belongs_to_ros, group_types, kind_slot, layout, name_slots
 from .robots import build_robot, check_shared_topics, resolve
 from .values import allowed, convert
@@ -92,7 +92,7 @@ def assemble(flat: Mapping[str, Any], source: Source) -> Configuration:
         fleet=Fleet(tuple(robot for robot, _, _ in built)), edges=edges, manoeuvres=manoeuvres,
         frame=words.frame, fleet_name=words.name, listen_time=words.listen_time,
         invented=words.invented,
-        connections=connections, simulation=simulation,
+        connections=connections, failures=_group(Failures, "failures", known, complaints), simulation=simulation,
         starts={
             robot.name: _start(place, connection) for robot, connection, place in built if place.start_x is not None
         },

@@ -14,7 +14,7 @@ from ..core.parameter import Description
 from ..core.settings import Settings
 from ..errors import SettingsError
 from .connection import Connection, Pose
-from .groups import Simulation
+from .groups import Failures, Simulation
 
 
 @attrs.frozen
@@ -47,6 +47,7 @@ class Configuration:
         edges: (name, name, weight) of the neighbour graph.
         frame, fleet_name, listen_time (s), invented: of the group ``fleet``.
         connections: by robot.
+        failures: whether and where problems without a plan are kept.
         simulation: how imperfect simulated robots are.
         starts: (x, y, heading) by robot; robots without a start are absent.
         enabled: robots that the planner drives.
@@ -64,6 +65,7 @@ class Configuration:
     listen_time: float
     invented: bool
     connections: Mapping[str, Connection]
+    failures: Failures
     simulation: Simulation
     starts: Mapping[str, Pose]
     enabled: frozenset[str]

@@ -6,17 +6,18 @@ import json
 import os
 import re
 import threading
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any, Optional
 
 from ..core.case import PlannerCase
-from ..core.coordinator import Solve
+from ..core.coordinator import Refused, Solve
 from ..core.plan import Plan
 from ..core.problem import Problem
 from ..core.solver import Start
 from ..core.tick import usable
 from ..errors import SolveError
+from .groups import Failures
 from .problem_file import to_problem_file
 
 _OURS = re.compile(r"problem_(\d{6})(?:_[A-Za-z0-9_-]*)?\.json\Z")
@@ -30,15 +31,19 @@ class FailureStore:
         directory: made when the first failure is kept.
         most: files that are kept; the oldest are removed. max_bytes: of all of them together; a problem that alone is
             larger is not kept.
+        said: is told in words, in the caller's thread, what became of each failure.
 
     ``trouble`` says in words why the last failure was not kept, "" when it was.
     """
 
-    def __init__(self, directory: str | Path, most: int = 20, max_bytes: int = 20_000_000) -> None:
+    def __init__(
+        self, directory: str | Path, most: int = 20, max_bytes: int = 20_000_000,
+        said: Callable[[str], None] = lambda _words: None,
+    ) -> None:
         if most < 1 or max_bytes < 1:
             raise ValueError(f"most {most}, max_bytes {max_bytes}; allowed: both at least 1")
         self._directory, self._most, self._max_bytes = Path(directory), most, max_bytes
-        self._lock = threading.Lock()
+        self._lock, self._said = threading.Lock(), said
         self.trouble = ""
 
     def save(self, document: Mapping[str, Any], label: str = "") -> Optional[Path]:
@@ -47,6 +52,11 @@ class FailureStore:
         Args:
             label: a few words for the file's name, e.g. the manoeuvre.
         """
+        file = self._saved(document, label)
+        self._said(f"no plan was found: the problem is kept in {file}" if file else f"not kept: {self.trouble}")
+        return file
+
+    def _saved(self, document: Mapping[str, Any], label: str) -> Optional[Path]:
         with self._lock:
             self.trouble = ""
             try:
@@ -85,6 +95,24 @@ class FailureStore:
         unfinished.write_bytes(raw)
         os.replace(unfinished, file)  # whoever looks never finds half a file
         return file
+
+
+def kept(
+    group: Failures, solve: Solve, least_clearance: float, said: Callable[[str], None] = lambda _words: None
+) -> tuple[Solve, Refused]:
+    """What a Coordinator is given as ``solve`` and ``refused``, so that failures are kept where the file asks for it.
+
+    Args:
+        said: is told in words what became of each failure, in the thread that solves.
+    """
+    if not group.folder:
+        return solve, lambda _case: None
+    store = FailureStore(group.folder, group.most, int(1e6 * group.max_megabytes), said)
+
+    def refused(case: PlannerCase) -> None:
+        store.save(to_problem_file(case), "refused")
+
+    return keeping(solve, store, least_clearance, "tick"), refused
 
 
 def keeping(solve: Solve, store: FailureStore, least_clearance: float, label: str = "") -> Solve:

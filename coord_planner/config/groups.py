@@ -31,6 +31,15 @@ class FleetWords:
 
 
 @attrs.frozen
+class Failures:
+    """Group ``failures``: problems that no plan was found for, kept as files for ``coord-planner solve``."""
+
+    folder: str = parameter("", "folder that they are kept in, made when it is needed; empty: none are kept")
+    most: int = parameter(20, "files that are kept at most; the oldest go first", "", minimum=1, maximum=1000)
+    max_megabytes: float = parameter(20.0, "size of all of them together", "MB", above=0.0, maximum=10000.0)
+
+
+@attrs.frozen
 class Names:
     """The lists of names that other keys hang on: ``robots.names`` and ``manoeuvres.names``."""
 

@@ -14,13 +14,14 @@ from ..core.manoeuvre import KINDS
 from ..core.parameter import Description, describe
 from ..core.settings import Settings
 from .connection import Connection
-from .groups import FleetWords, Graph, Names, Node, Place, Simulation
+from .groups import Failures, FleetWords, Graph, Names, Node, Place, Simulation
 from .values import kind_of
 
 # Groups whose fields stand per robot, in robots.NAME.* and robot_defaults.*.
 ROBOT_GROUPS = (Limits, Footprint, Response, Connection, Place)
 # One key for each group of the file that does not depend on names.
-PLAIN_GROUPS: dict[str, type] = {"": Node, "fleet": FleetWords, "graph": Graph, "simulation": Simulation}
+PLAIN_GROUPS: dict[str, type] = {"": Node, "fleet": FleetWords, "graph": Graph, "failures": Failures,
+                                   "simulation": Simulation}
 # Parameters that ROS gives to every node by itself.
 _OF_ROS = re.compile(r"(use_sim_time|start_type_description_service|qos_overrides\..*)\Z")
 

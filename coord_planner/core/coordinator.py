@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import threading
 from collections.abc import Callable, Mapping
 from typing import Any, Optional
@@ -11,6 +12,7 @@ import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
 from . import gate, manoeuvre, reference, rules, solver, stopping
+from .case import PlannerCase
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
@@ -26,7 +28,7 @@ from .reference import Reference
 from .settings import Settings, SiteRules
 from .silence import Silence
 from .silence import worst as worst_silence
-from .tick import usable
+from .tick import pose_problem, usable
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
@@ -34,6 +36,7 @@ _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observ
 
 Answered = Callable[[Answer], None]
 Solve = Callable[[Problem, solver.Start, bool, float], Plan]
+Refused = Callable[[PlannerCase], None]
 
 
 @attrs.frozen(eq=False)
@@ -75,14 +78,15 @@ class Coordinator:
     Args:
         budget: wall time that one tick's solve may take, seconds; ``settings.horizon.budget`` when left out. A
             rehearsal gives more, so that its numbers do not depend on how busy the machine is.
-        solve: solves a tick: (problem, start, warm, budget) -> Plan.
+        solve: solves a tick: (problem, start, warm, budget) -> Plan; fast.ticks.TickSolve wherever a clock is at hand.
+        refused: is given the program of each reference that was refused, in the thread of its job.
     """
 
     def __init__(
         self, fleet: Fleet, graph: NeighbourGraph, settings: Settings, manoeuvres: Mapping[str, Manoeuvre],
-        budget: Optional[float] = None, solve: Solve = solver.solve,
+        budget: Optional[float] = None, solve: Solve = solver.solve, refused: Refused = lambda _case: None,
     ) -> None:
-        self._solve_tick = solve
+        self._solve_tick, self._refused = solve, refused
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
         self._budget = settings.horizon.budget if budget is None else budget
@@ -369,8 +373,8 @@ class Coordinator:
     def _ask(self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str) -> None:
         self._token += 1
         token = self._token
-        intervals, budget = self._settings.horizon.intervals, self._budget
-        fleet, rules_in_force = self._fleet, self._settings.site_rules
+        fleet, settings, rules_in_force = self._fleet, self._settings, self._settings.site_rules
+        refused = self._refused
 
         def job() -> Outcome:
             try:
@@ -378,14 +382,25 @@ class Coordinator:
                 silence = worst_silence(made, fleet)
                 _check_silence(silence, rules_in_force)
             except CoordPlannerError as error:
+                if isinstance(error, RefusedError) and isinstance(error.case, PlannerCase):
+                    refused(error.case)
                 return Outcome(token, None, str(error), arrived=isinstance(error, ArrivedError))
             except Exception as error:  # whatever it is: nobody may be left waiting for an answer
                 return Outcome(token, None, f"a mistake in the planner ({error!r}); please report it")
-            solver.prepare(attrs.evolve(_shape(made), intervals=intervals), budget)
+            self._try_out(made, fleet, settings)
             return Outcome(token, made, "", silence)
 
         self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings))
         self._jobs = [job]
+
+    def _try_out(self, made: Reference, fleet: Fleet, settings: Settings) -> None:
+        """Solve a tick beforehand: what a solver has to build for it is built now, and not in the first tick."""
+        begins = float(made.plan.times[0])
+        problem, _, start = pose_problem(
+            made, fleet, settings, made.plan.states[:, 0], begins, begins, 1.0, None, np.zeros(len(fleet))
+        )
+        with contextlib.suppress(SolveError):  # should the first tick fail as well, that is where it is told
+            self._solve_tick(problem, start, True, self._budget)
 
     def _cancel(self, why: str) -> None:
         if self._request is not None:
@@ -588,11 +603,3 @@ def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
             f"within {silence.clearance:.2f} m of each other, {short:.2f} m short, before both stand",
             "shorten their command time-outs, lower the speed or widen the spacing",
         )
-
-
-def _shape(made: Reference) -> solver.Shape:
-    edges, pairs = made.graph.index_edges(), made.pairs
-    return solver.Shape(
-        len(made.graph.names), len(made.plan.times) - 1, tuple(map(tuple, edges.tolist())),
-        tuple(map(tuple, pairs.tolist())),
-    )

@@ -10,6 +10,7 @@ import numpy as np
 
 from ..errors import RefusedError
 from . import grid, ocp, se2, solver
+from .case import PlannerCase
 from .dubins import ArcPath
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -131,9 +132,13 @@ def make(
         problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs)
         plan = solver.solve(problem, solver.start_from_states(problem, plan.states))
         problem, plan = _settle(problem, plan, settings, task.speed)
-    _check_solved(task, problem, plan)
-    clearance, pair = plan.closest()
-    _check_kept(task, plan, fleet, settings, clearance, pair, end_kept)
+    try:
+        _check_solved(task, problem, plan)
+        clearance, pair = plan.closest()
+        _check_kept(task, plan, fleet, settings, clearance, pair, end_kept)
+    except RefusedError as refused:
+        refused.case = PlannerCase(problem, solver.start_from_states(problem, guess), False, str(refused))
+        raise
     return Reference(task, plan, pairs, graph, clearance, pair)
 
 

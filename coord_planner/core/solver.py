@@ -45,11 +45,6 @@ def _solver(shape: Shape, warm: bool, budget: float) -> ca.Function:
     return ca.nlpsol("solve", "ipopt", nlp, settings)
 
 
-def prepare(shape: Shape, budget: float) -> None:
-    """Build the solvers of a shape ahead of time."""
-    _solver(shape, True, budget)
-
-
 def solve(problem: Problem, start: Start, warm: bool = False, budget: float = 60.0) -> Plan:
     """Solve a problem.
 

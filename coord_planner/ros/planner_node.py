@@ -6,6 +6,7 @@ import contextlib
 import functools
 import math
 import sys
+import time
 import uuid
 from collections import deque
 from collections.abc import Callable, Sequence
@@ -18,7 +19,9 @@ from rclpy.executors import SingleThreadedExecutor
 from rclpy.lifecycle import LifecycleNode, LifecycleState, TransitionCallbackReturn
 
 from .. import config
+from ..config.failures import kept
 from ..core.coordinator import Coordinator
+from ..core.fast.ticks import TickSolve
 from ..core.graph import NeighbourGraph
 from ..core.messages import Answer, Decision, Snapshot, State
 from . import heartbeats, messages, parameters
@@ -205,15 +208,19 @@ class PlannerNode(LifecycleNode):
 
     def _start_coordinator(self) -> None:
         now = self.configuration
+        solve, refused = kept(
+            now.failures, TickSolve(time.monotonic), now.settings.site_rules.min_clearance,
+            lambda words: self.post(functools.partial(self.reporter.say, words)),
+        )
         self._coordinator = Coordinator(
-            now.driven, self.graph.relative_to(now.driven.names), now.settings, now.manoeuvres
+            now.driven, self.graph.relative_to(now.driven.names), now.settings, now.manoeuvres, solve=solve,
+            refused=refused,
         )
         self._worker = Worker(
             self._coordinator, snapshot=self.snapshot, now=self.time,
             decided=lambda decision, ms: self.post(functools.partial(self._on_decision, decision, ms)),
             failed=lambda words, details: self.post(functools.partial(self.fail, words, details)),
         )
-        self._started_at = self.time()
         self._sent_at = math.inf  # planner time of the last commands; nothing was sent yet
         self.changes.forget()
         self.reporter.forget()
@@ -231,8 +238,7 @@ class PlannerNode(LifecycleNode):
             return
         now = self.time()
         self._check_silence(now)
-        since = max(self._coordinator.decision.time, self._started_at)  # the first decision may come after the begin
-        unplanned = now - since if since > 0.0 else 0.0
+        unplanned = now - self._coordinator.decision.time
         if self._coordinator.state is State.MOVING and unplanned > _SILENCE:
             self.reporter.note(self.halt(f"no new plan for {unplanned:.1f} s"))
         commands = self._coordinator.commands(now)

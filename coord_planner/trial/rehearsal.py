@@ -9,8 +9,9 @@ from typing import Optional
 import numpy as np
 
 from ..config import Configuration
-from ..core import solver
+from ..config.failures import kept
 from ..core.coordinator import Coordinator
+from ..core.fast.ticks import TickSolve
 from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
@@ -112,9 +113,12 @@ class _Loop:
         self._graph = self._graph_now = configuration.graph.relative_to(self._fleet.names)
         check_targets(faults, self._graph)
         self._faults = Faults(faults, rng)
+        solve, refused = kept(
+            configuration.failures, TickSolve(clock.perf_counter), settings.site_rules.min_clearance
+        )
         self.coordinator = Coordinator(
             self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
-            self._faults.solve(solver.solve, settings.horizon.budget),
+            self._faults.solve(solve, settings.horizon.budget), refused,
         )
         self._log = _Log()
         self._period, self._tick_period = 1.0 / settings.commands.rate, 1.0 / settings.horizon.rate

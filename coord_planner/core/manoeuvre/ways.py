@@ -14,6 +14,9 @@ from .driving import COMFORT
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
+# Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
+# breadth past it would have to drive a full circle.)
+_THERE = 0.06
 
 
 def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.ndarray, pieces: int = 16) -> ArcPath:
@@ -40,6 +43,9 @@ def ways_to_ends(
         turning = ends[k, 2] - poses[k, 2]
         if not keep_winding:
             turning = math.remainder(turning, 2 * math.pi)
+        if not keep_winding and np.hypot(*(ends[k, :2] - poses[k, :2])) < _THERE and abs(turning) < _THERE:
+            found[k], wound[k] = ArcPath(as_start(poses[k]), "there", ((0.0, 0.0),)), poses[k]
+            continue
         if np.isnan(ends[k, 0]):
             found[k] = _turn_only(fleet, k, poses[k], turning)
         else:

@@ -1,0 +1,249 @@
+"""The tick solver: a plan in milliseconds, from the last plan and its multipliers."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from functools import lru_cache
+
+import attrs
+import numpy as np
+
+from ...errors import SolveError
+from ..fleet import Fleet
+from ..plan import Plan
+from ..problem import POSE, Problem
+from ..solver import Start
+from . import active, vectors
+from .interior import Interior
+from .linearised import Linearised
+from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
+from .objective import constant_blocks
+from .point import Forces, Point, cost, evaluate, excess
+from .structure import Structure, structure
+
+ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step is worth its time
+
+_KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
+_ACTIVE_STEPS = 5
+_STEPS = 40
+_WANDERING = 6  # rows a robot that change in one step: the sets are lost
+_OVERSTATED = 3.0  # what is open in an interior-point iterate overstates the gap by about this
+_LEFT_OF_LAST = 0.5  # part of what the last interior-point step saved that another may still save
+_NEARBY = 0.02  # change of a heading (rad), or of a speed (part of the full one), over which a matrix is used again
+
+
+@attrs.frozen(eq=False)
+class _Found:
+    """The best so far: cost, by how much limits are passed (at least what is tolerated), predicted gap."""
+
+    point: Point
+    forces: Forces
+    cost: float
+    passed: float
+    gap: float
+    steps: int
+
+
+@attrs.frozen(eq=False)
+class Prepared:
+    """A problem linearised at the predicted state, waiting for the poses."""
+
+    problem: Problem
+    numbers: Numbers
+    structure: Structure
+    constant: np.ndarray
+    curvature: np.ndarray
+    speed: np.ndarray
+    forces: Forces | None
+    held: active.Held | None
+
+
+class TickSolver:
+    """Solves one tick's problem after another. ``solve`` may be called in several threads at once.
+
+    Nothing is built or compiled: edges, pairs, weights, limits and even the fleet may change from tick to tick.
+    """
+
+    def __init__(self) -> None:
+        self._fleet: tuple[Fleet, FleetNumbers] | None = None
+        self._ready: Prepared | None = None
+
+    def solve(
+        self, problem: Problem, start: Start, budget: float = float("inf"),
+        clock: Callable[[], float] = lambda: 0.0,
+    ) -> Plan:
+        """Prepare and feed back at once: the problem's initial state is the measured one.
+
+        Args:
+            start: primal vector (its commands count) and, when known, multipliers, as Plan holds them.
+            budget: seconds by ``clock`` after which the best plan so far is returned, marked as not solved.
+
+        Raises:
+            SolveError: no step could be made.
+        """
+        began = clock()
+        ready = self._prepared(problem, start, linearise=False)
+        return _plan(ready, _search(ready, began + budget, clock), clock() - began)
+
+    def prepare(self, problem: Problem, start: Start) -> None:
+        """Work out all that does not need the measured state, with the predicted one in the problem."""
+        self._ready = self._prepared(problem, start, linearise=True)
+
+    def feedback(
+        self, initial: np.ndarray, budget: float = float("inf"), clock: Callable[[], float] = lambda: 0.0
+    ) -> Plan:
+        """The plan from the measured state, shape (N, 7), for what was prepared. See ``solve``.
+
+        Raises:
+            SolveError: no step could be made.
+        """
+        began = clock()
+        if self._ready is None:
+            raise SolveError("feedback asked before prepare")
+        ready, self._ready = self._ready, None
+        if initial is not ready.problem.initial:
+            problem = attrs.evolve(ready.problem, initial=initial)
+            ready = attrs.evolve(ready, problem=problem, numbers=started(ready.numbers, initial))
+        return _plan(ready, _search(ready, began + budget, clock), clock() - began)
+
+    def _prepared(self, problem: Problem, start: Start, linearise: bool) -> Prepared:
+        size = vectors.sizes(problem)
+        known = numbers(problem, self._fleet_numbers(problem.fleet))
+        order = _structure(len(problem.fleet), problem.edges.tobytes(), problem.watch.pairs.tobytes())
+        curvature, speed = (
+            np.clip(commands, known.lower[i], known.upper[i])
+            for i, commands in enumerate(vectors.commands(size, start.vector))
+        )
+        forces = None if start.multipliers is None else vectors.forces(size, *start.multipliers)
+        constant = constant_blocks(known)
+        held = None
+        if linearise and forces is not None and _worth_trying(known, forces):
+            trial = active.begin(known, evaluate(known, curvature, speed), forces)
+            held = active.Held(Linearised(known, order, constant, trial.point), trial)
+        return Prepared(problem, known, order, constant, curvature, speed, forces, held)
+
+    def _fleet_numbers(self, fleet: Fleet) -> FleetNumbers:
+        last = self._fleet
+        if last is None or last[0] is not fleet:
+            self._fleet = last = fleet, fleet_numbers(fleet)
+        return last[1]
+
+
+@lru_cache(maxsize=32)
+def _structure(count: int, edges: bytes, pairs: bytes) -> Structure:
+    joined = (np.frombuffer(data, dtype=int).reshape(-1, 2) for data in (edges, pairs))
+    return structure(count, *joined)
+
+
+def _worth_trying(known: Numbers, forces: Forces) -> bool:
+    """Whether the last multipliers tell which rows are met: where ends could not be reached, fresh poses change all."""
+    dear = np.abs(forces.ends[:, POSE]) >= known.end_price[:, POSE]
+    return not (dear & (known.end_price[:, POSE] > 0)).any() and not (forces.clearances > 0).any()
+
+
+def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Found:
+    point = evaluate(ready.numbers, ready.curvature, ready.speed)
+    forces = ready.forces
+    best: _Found | None = None
+    steps = 0
+    if forces is not None and (ready.held is not None or _worth_trying(ready.numbers, forces)):
+        best = _active_steps(ready, point, forces, deadline, clock)
+        steps = best.steps
+        if best.gap <= ENOUGH or clock() >= deadline:
+            return best
+        best = None
+    if forces is None:
+        n, m = point.r.turn.shape
+        forces = Forces(np.zeros((6, n, m)), np.zeros((n, 7)), np.zeros((len(ready.numbers.pairs), m)))
+    return _interior_steps(ready, point, forces, steps, deadline, clock)
+
+
+def _active_steps(
+    ready: Prepared, point: Point, forces: Forces, deadline: float, clock: Callable[[], float]
+) -> _Found:
+    """Steps with the sets of the last tick; gap inf when they wander."""
+    known = ready.numbers
+    trial = active.begin(known, point, forces)
+    held = ready.held
+    before = [cost(known, point), np.inf]  # of the last step and of the one before it, less what curved paths left over
+    for step in range(1, _ACTIVE_STEPS + 1):
+        held = _held(ready, held, trial)
+        trial = held.step(known, trial)
+        reached, left_over = cost(known, trial.point), active.left_over(known, trial)
+        if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(reached):
+            break
+        last, saved = abs(before[0] - reached + left_over), abs(before[1] - before[0])
+        before = [reached - left_over, before[0]]
+        if trial.changed == 0 and excess(known, trial.point) < _KEPT_WITHIN:
+            gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, 1e-9)
+            if gap <= ENOUGH:
+                return _Found(trial.point, trial.forces, reached, _KEPT_WITHIN, gap, step)
+        if clock() >= deadline:
+            break
+    return _Found(trial.point, trial.forces, reached, np.inf, np.inf, step)
+
+
+def _held(ready: Prepared, held: active.Held | None, trial: active.Trial) -> active.Held:
+    """The last matrix as long as the same rows are met nearby; else another, with the last derivatives if they do."""
+    near = held is not None and held.linearised.serves(trial.point, _NEARBY)
+    if held is not None and near:
+        return active.Held(held.linearised, trial) if trial.changed else held
+    return active.Held(Linearised(ready.numbers, ready.structure, ready.constant, trial.point), trial)
+
+
+def _interior_steps(
+    ready: Prepared, point: Point, forces: Forces, steps: int, deadline: float, clock: Callable[[], float]
+) -> _Found:
+    interior = Interior(ready.numbers, ready.structure, ready.constant)
+    x = interior.begin(point, forces)
+    best: _Found | None = None
+    before = np.inf
+    for step in range(steps + 1, steps + _STEPS + 1):
+        try:
+            x = interior.step(x)
+        except SolveError:
+            if best is None:
+                raise
+            break
+        reached = cost(ready.numbers, x.point)
+        gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, 1e-9)
+        before = reached
+        if not np.isfinite(reached):
+            break
+        passed = max(excess(ready.numbers, x.point), _KEPT_WITHIN)
+        if best is None or (passed, reached) < (best.passed, best.cost):
+            best = _Found(x.point, interior.forces(x), reached, passed, gap, step)
+        if (gap <= ENOUGH and passed <= _KEPT_WITHIN) or clock() >= deadline:
+            break
+    if best is None:
+        raise SolveError("no step led anywhere")
+    return attrs.evolve(best, gap=gap)
+
+
+def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
+    known, problem = ready.numbers, ready.problem
+    size = vectors.sizes(problem)
+    point = _boxed(known, found.point)
+    states = vectors.states_of(known, point)
+    short = np.maximum(-point.clearances, 0.0)
+    priced = known.end_price > 0
+    return Plan(
+        fleet=problem.fleet, times=problem.times, states=states,
+        rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point), short=short,
+        pairs=problem.watch.pairs, outside=np.zeros((0, len(problem.times) - 1)), fenced=problem.fences.robots,
+        missed=np.abs(point.missed) * priced,
+        solved=found.gap <= ENOUGH and found.passed <= _KEPT_WITHIN, solve_time=took,
+        iterations=found.steps, vector=vectors.primal(states, point, short, priced),
+        multipliers=vectors.multipliers(known, point, found.forces, size),
+    )
+
+
+def _boxed(known: Numbers, point: Point) -> Point:
+    """The point with its commands cut to their bounds: a standstill is a standstill, not a billionth of a m/s."""
+    r = point.r
+    curvature, speed = (
+        np.clip(commands, known.lower[i], known.upper[i]) for i, commands in enumerate((r.curvature, r.speed))
+    )
+    if np.array_equal(curvature, r.curvature) and np.array_equal(speed, r.speed):
+        return point
+    return evaluate(known, curvature, speed)

@@ -1,0 +1,58 @@
+"""How ticks are solved: fast where all of a problem is understood, by the general solver where it is not."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import attrs
+
+from .. import solver
+from ..plan import Plan
+from ..problem import Bounds, Problem, Watch
+from ..solver import Start
+from .solver import TickSolver
+
+# What the fast solver has been taught. A field that it does not know might be a promise that it would not keep.
+_KNOWN = {
+    Problem: {
+        "fleet", "edges", "weights", "coupling", "alignment", "prices", "times", "pace", "initial", "asked_speed",
+        "turn_speed", "full_speed", "target", "bounds", "watch",
+        "fences", "compare_speed",
+    },
+    Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
+    Watch: {"pairs", "normals", "gaps"},
+}
+
+
+def knows(problem: Problem) -> bool:
+    """Whether the fast solver understands all that a problem holds."""
+    if len(problem.fences.robots) or problem.compare_speed is not problem.turn_speed:
+        return False
+    return all(
+        {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
+        for part in (problem, problem.bounds, problem.watch)
+    )
+
+
+class TickSolve:
+    """Solves ticks, for the coordinator. May be called in several threads at once.
+
+    Args:
+        clock: seconds that never go back, for the budget.
+    """
+
+    def __init__(self, clock: Callable[[], float]) -> None:
+        self._clock, self._fast = clock, TickSolver()
+
+    def __call__(self, problem: Problem, start: Start, warm: bool, budget: float) -> Plan:
+        """A plan within the budget (seconds); the best so far, marked as not solved, when that runs out.
+
+        Args:
+            warm: whether the start is a solution of a problem little different; only the general solver needs it told.
+
+        Raises:
+            SolveError: there is no plan at all.
+        """
+        if knows(problem):
+            return self._fast.solve(problem, start, budget, self._clock)
+        return solver.solve(problem, start, warm, budget)
