@@ -66,9 +66,10 @@ class Plan:
 
     def closest(self, between: int = 2) -> tuple[float, tuple[int, int]]:
         """Smallest exact clearance over all pairs, at the nodes and ``between`` moments in each interval."""
-        return closest_along(self.fleet, self._dense(between))
+        return closest_along(self.fleet, self.dense(between))
 
-    def _dense(self, between: int) -> np.ndarray:
+    def dense(self, between: int) -> np.ndarray:
+        """Poses at the nodes and at ``between`` moments in each interval, shape (N, K, 3)."""
         parts = np.linspace(0.0, 1.0, between + 1, endpoint=False)
         before, after = self.poses[:, :-1], self.poses[:, 1:]
         pieces = np.stack([_along_arc(before, after, part) for part in parts], axis=2)

@@ -122,6 +122,7 @@ class Pursuit:
         same = (
             np.array_equal(self.tick.reference.pairs, self.reference.pairs)
             and np.array_equal(self.tick.reference.graph.index_edges(), self.reference.graph.index_edges())
+            and np.array_equal(self.tick.reference.fencing.bound, self.reference.fencing.bound)
         )
         return attrs.evolve(self.tick, reference=self.reference) if same else None
 

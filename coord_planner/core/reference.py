@@ -12,6 +12,7 @@ from ..errors import RefusedError
 from . import grid, ocp, se2, solver
 from .case import PlannerCase
 from .dubins import ArcPath
+from .fence import Fencing, fencing
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -49,6 +50,7 @@ class Reference:
         task: what was asked. plan: its nodes. pairs: watched, shape (P, 2).
         graph: neighbours that it was made for.
         clearance: smallest exact clearance, metres. pair: who comes that near.
+        fencing: what robots stay away from, and who of them is watched.
     """
 
     task: Task
@@ -57,6 +59,7 @@ class Reference:
     graph: NeighbourGraph
     clearance: float
     pair: tuple[int, int]
+    fencing: Fencing = Fencing()
 
     @property
     def end(self) -> float:
@@ -123,23 +126,26 @@ def make(
     times = grid.until(start, task.duration, settings.horizon.interval)
     guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
-    problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs)
+    fences = fencing(settings, task.strip).watching(fleet, settings, guess[:, :, POSE])
+    problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
     plan = solver.solve(problem, solver.start_from_states(problem, guess))
-    problem, plan = _settle(problem, plan, settings, task.speed)
-    pairs_then = choose_pairs(fleet, settings, plan.poses)
-    if not _contains(pairs, pairs_then):  # the solution came near somebody whom the guess passed at a distance
-        pairs = np.unique(np.concatenate([pairs, pairs_then]), axis=0)
-        problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs)
+    problem, plan = _settle(problem, plan, settings, task.speed, fences)
+    pairs_then, fences_then = choose_pairs(fleet, settings, plan.poses), fences.watching(fleet, settings, plan.poses)
+    if not (_contains(pairs, pairs_then) and fences.covers(fences_then)):
+        # The solution came near something that the guess passed at a distance.
+        pairs, fences = np.unique(np.concatenate([pairs, pairs_then]), axis=0), fences.joined(fences_then)
+        problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs, fences)
         plan = solver.solve(problem, solver.start_from_states(problem, plan.states))
-        problem, plan = _settle(problem, plan, settings, task.speed)
+        problem, plan = _settle(problem, plan, settings, task.speed, fences)
     try:
         _check_solved(task, problem, plan)
         clearance, pair = plan.closest()
         _check_kept(task, plan, fleet, settings, clearance, pair, end_kept)
+        _check_outside(task, plan, fleet, fences)
     except RefusedError as refused:
         refused.case = PlannerCase(problem, solver.start_from_states(problem, guess), False, str(refused))
         raise
-    return Reference(task, plan, pairs, graph, clearance, pair)
+    return Reference(task, plan, pairs, graph, clearance, pair, fences)
 
 
 def make_again(
@@ -225,7 +231,7 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
 
 def _problem(
     task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
-    guess: np.ndarray, pairs: np.ndarray,
+    guess: np.ndarray, pairs: np.ndarray, fences: Fencing,
 ) -> Problem:
     rules = settings.site_rules
     asked = asked_speeds(task, times)
@@ -238,22 +244,32 @@ def _problem(
             task.max_curvature, task.gears(times[1:]),
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
+        fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),
     )
 
 
-def _settle(problem: Problem, plan: Plan, settings: Settings, speed: float) -> tuple[Problem, Plan]:
-    """Solve again with separating lines from the solution until the smallest clearance stays."""
-    if not len(problem.watch.pairs):
+def _settle(
+    problem: Problem, plan: Plan, settings: Settings, speed: float, fences: Fencing
+) -> tuple[Problem, Plan]:
+    """Solve again with separating lines from the solution until what comes nearest stays as near as it is."""
+    if not len(problem.watch.pairs) and not len(fences.bound):
         return problem, plan
-    clearance = plan.closest(0)[0]
+    nearest = _nearest(plan, fences)
     for _ in range(_ROUNDS):
         lines = watch(problem.fleet, settings, problem.watch.pairs, plan.poses, speed)
-        problem = attrs.evolve(problem, watch=lines)
+        held = fences.rows(problem.fleet, settings, plan.poses, speed)
+        problem = attrs.evolve(problem, watch=lines, fences=held)
         plan = solver.solve(problem, solver.Start(plan.vector))
-        before, clearance = clearance, plan.closest(0)[0]
-        if abs(clearance - before) < _SETTLED:
+        before, nearest = nearest, _nearest(plan, fences)
+        if np.abs(nearest - before).max() < _SETTLED:
             break
     return problem, plan
+
+
+def _nearest(plan: Plan, fences: Fencing) -> np.ndarray:
+    """Smallest clearance between robots and smallest distance to spare from fences, shape (2,); 0 where none."""
+    found = np.array([plan.closest(0)[0], fences.least(plan.fleet, plan.poses)[0]])
+    return np.where(np.isfinite(found), found, 0.0)
 
 
 def _guess(task: Task, times: np.ndarray) -> np.ndarray:
@@ -297,12 +313,24 @@ def _check_kept(
         )
 
 
+def _check_outside(task: Task, plan: Plan, fleet: Fleet, fences: Fencing) -> None:
+    spare, robot, name = fences.least(fleet, plan.dense(2))
+    if spare < -_CLEARANCE_KEPT:
+        raise RefusedError(
+            f"{task.name}: {fleet.names[robot]} would come {-spare:.2f} m too near to {name}",
+            "give the turn more room or another end, or lead it round by a pose to reach on the way",
+        )
+
+
 def _clearance_in_the_way(plan: Plan, fleet: Fleet, k: int) -> str:
-    """Who the robot comes too near to, in words; "" when it keeps its clearances."""
+    """Who or what the robot comes too near to, in words; "" when it keeps its clearances."""
     for pair, short in zip(plan.pairs, plan.short.max(axis=1, initial=0.0)):
         if k in pair and short > _CLEARANCE_KEPT:
             other = fleet.names[int(pair.sum()) - k]
             return f"the clearance to {other}, margin included, is {short:.2f} m short on the way"
+    for robot, outside in zip(plan.fenced, plan.outside.max(axis=1, initial=0.0)):
+        if k == robot and outside > _CLEARANCE_KEPT:
+            return f"what it must keep away from, margin included, leaves {outside:.2f} m too little room on the way"
     return ""
 
 

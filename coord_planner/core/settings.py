@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import attrs
 
+from .area import Area
 from .parameter import parameter
 
 
@@ -77,6 +78,14 @@ class Commands:
 
 
 @attrs.frozen
+class SpeedCap:
+    """An area in which no robot drives faster than ``max_speed``, m/s."""
+
+    area: Area
+    max_speed: float
+
+
+@attrs.frozen
 class SiteRules:
     """The rules of the site; they tighten the robots' limits and never loosen them."""
 
@@ -93,6 +102,12 @@ class SiteRules:
     max_lateral_acceleration: float = parameter(
         20.0, "largest lateral acceleration for every robot on the site", "m/s^2", above=0.0, maximum=20.0, live=True
     )
+    keep_out_clearance: float = parameter(
+        0.0, "smallest allowed distance between a footprint and a keep-out area", "m", minimum=0.0, maximum=100.0,
+        live=True,
+    )
+    keep_outs: tuple[Area, ...] = ()
+    speed_caps: tuple[SpeedCap, ...] = ()
 
 
 @attrs.frozen

@@ -67,6 +67,7 @@ def pose_problem(
             rules.max_lateral_acceleration, task.max_curvature, task.gears(s[1:]),
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
+        fences=reference.fencing.rows(fleet, settings, guess[:, :, POSE], task.speed),
     )
     if steps is None or last is None:
         return problem, s, solver.start_from_states(problem, guess)

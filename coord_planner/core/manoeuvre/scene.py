@@ -36,9 +36,11 @@ class Laid:
         ends: shape (N, 3), windings chosen; NaN where nothing is asked. ways: a guessed way for each robot.
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
+        strip: lines that no footprint may cross, as in Task.
     """
 
     ends: np.ndarray
     ways: tuple[ArcPath, ...]
     duration: float = 0.0
     max_curvature: float = math.inf
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()

@@ -40,7 +40,7 @@ def work_out(
     return lay_out(
         name, fleet, settings, laid.ends, laid.ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
         speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-        max_curvature=laid.max_curvature,
+        max_curvature=laid.max_curvature, strip=laid.strip,
     )
 
 
@@ -62,4 +62,5 @@ def go_on(
     return lay_out(
         task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
         duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
+        strip=task.strip,
     )
