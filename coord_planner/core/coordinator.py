@@ -161,7 +161,7 @@ class Coordinator:
 
             def make() -> Reference:
                 task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops())
-                return reference.make(task, fleet, graph, settings, states)
+                return reference.make_first(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
             self._ask("begin", make, answered, request_id)
@@ -425,7 +425,7 @@ class Coordinator:
             coupling = own.coupling
         if own is not None and own.alignment is not None:
             alignment = own.alignment
-        return attrs.evolve(task, coupling=coupling, alignment=alignment)
+        return attrs.evolve(task, coupling=coupling if task.alike else 0.0, alignment=alignment)
 
     def _take_rest(self, outcome: Outcome, now: float) -> None:
         if self._state is not State.MOVING or self._pursuit is None:

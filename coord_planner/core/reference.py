@@ -148,6 +148,23 @@ def make(
     return Reference(task, plan, pairs, graph, clearance, pair, fences)
 
 
+def make_first(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray
+) -> Reference:
+    """Plan a task, or the first of its other ways that can be kept.
+
+    Raises:
+        RefusedError: none of them can be kept; the reason is that of the first.
+    """
+    first: Optional[RefusedError] = None
+    for each in (task, *task.otherwise):
+        try:
+            return make(each, fleet, graph, settings, initial)
+        except RefusedError as refused:
+            first = first or refused
+    raise first or RefusedError(f"{task.name}: nothing is left to plan", "begin a new manoeuvre")
+
+
 def make_again(
     task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray
 ) -> Reference:

@@ -39,6 +39,7 @@ class Task:
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
+        alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
         otherwise: other ways to do the same, tried in turn where this one cannot be kept.
     """
 
@@ -56,6 +57,7 @@ class Task:
     alignment: float
     max_curvature: float = math.inf
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    alike: bool = True
     otherwise: tuple[Task, ...] = ()
 
     @property
@@ -115,7 +117,7 @@ def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
     max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
-    drives: Optional[tuple[Drive, ...]] = None,
+    drives: Optional[tuple[Drive, ...]] = None, alike: bool = True,
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
@@ -123,6 +125,7 @@ def lay_out(
 
     Args:
         drives: how fast each robot goes; worked out so that all arrive together when left out.
+        alike: as in Task.
     """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
@@ -141,9 +144,9 @@ def lay_out(
     return Task(
         name, ends, speed, asked, end_speed, arrival, settled, ways, drives,
         ((0.0, arrival), (0.0, driven)),
-        settings.coupling.strength if coupling is None else coupling,
+        (settings.coupling.strength if coupling is None else coupling) if alike else 0.0,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, strip,
+        max_curvature, strip, alike,
     )
 
 

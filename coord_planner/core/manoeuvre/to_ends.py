@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from ...errors import RefusedError
+from .. import reeds_shepp
 from ..dubins import shortest
 from ..fleet import Fleet
 from ..profile import speed_profile
@@ -16,7 +17,7 @@ from .ways import as_start, ways_to_ends
 def lay(name: str, wanted: ToEnds, scene: Scene) -> Laid:
     """The shortest wide way to each end; RefusedError where the given time is too short for one of them."""
     named = _named_ends(wanted, scene.fleet)
-    ways, ends = ways_to_ends(scene.fleet, scene.poses, named, scene.neighbours)
+    ways, ends = ways_to_ends(scene.fleet, scene.poses, named, scene.neighbours, reverse=wanted.reverse)
     if wanted.duration > 0.0:
         _check_duration(name, wanted, scene, named)
     return Laid(ends, ways, duration=wanted.duration)
@@ -35,12 +36,18 @@ def _named_ends(manoeuvre: ToEnds, fleet: Fleet) -> np.ndarray:
 
 
 def _check_duration(name: str, manoeuvre: ToEnds, scene: Scene, ends: np.ndarray) -> None:
-    """No way is shorter than the Dubins path of the smallest radius, and none is driven faster than allowed."""
+    """No way is shorter than the Dubins path of the smallest radius, and none is driven faster than allowed.
+
+    For who may reverse it is the path of Reeds & Shepp.
+    """
     fleet, poses = scene.fleet, scene.poses
     for k in np.flatnonzero(~np.isnan(ends[:, 0])):
         limits = fleet.robots[k].limits
-        way = shortest(as_start(poses[k]), as_start(ends[k]), 1.0 / limits.max_curvature).length
-        top = min(limits.max_speed, scene.settings.site_rules.max_speed)
+        back = manoeuvre.reverse and limits.min_speed < 0.0
+        way = (reeds_shepp.shortest if back else shortest)(
+            as_start(poses[k]), as_start(ends[k]), 1.0 / limits.max_curvature
+        ).length
+        top = min(max(limits.max_speed, -limits.min_speed), scene.settings.site_rules.max_speed)
         least = speed_profile(
             way, scene.speed_now, top, manoeuvre.end_speed, limits.max_acceleration, limits.max_braking
         ).duration

@@ -7,6 +7,7 @@ from typing import Optional
 
 import numpy as np
 
+from .. import reeds_shepp
 from ..dubins import ArcPath, paths, shortest
 from ..fleet import Fleet
 from .driving import COMFORT
@@ -14,6 +15,7 @@ from .driving import COMFORT
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
+_CHANGE = 1.5  # seconds that a change of gear takes besides slowing down and speeding up
 # Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
 # breadth past it would have to drive a full circle.)
 _THERE = 0.06
@@ -34,9 +36,14 @@ def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.nda
 
 
 def ways_to_ends(
-    fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False
+    fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False,
+    reverse: bool = False,
 ) -> tuple[tuple[ArcPath, ...], np.ndarray]:
-    """A way for each robot, and the ends with their windings chosen: those of the shortest way."""
+    """A way for each robot, and the ends with their windings chosen: those of the shortest way.
+
+    Args:
+        reverse: whether robots whose lowest speed is below 0 may drive backward where that takes less time.
+    """
     wound = ends.copy()
     found: dict[int, ArcPath] = {}
     for k in map(int, np.flatnonzero(~np.isnan(ends[:, 2]))):
@@ -49,7 +56,10 @@ def ways_to_ends(
         if np.isnan(ends[k, 0]):
             found[k] = _turn_only(fleet, k, poses[k], turning)
         else:
-            found[k] = _way_to_pose(fleet, k, poses[k], ends[k], turning if keep_winding else None)
+            chosen = turning if keep_winding else None
+            found[k] = _way_to_pose(fleet, k, poses[k], ends[k], chosen)
+            if reverse and fleet.robots[k].limits.min_speed < 0.0:
+                found[k] = _reversing(fleet, k, ends[k], found[k], chosen)
         wound[k, 2] = poses[k, 2] + (found[k].turning if not np.isnan(ends[k, 0]) else turning)
     leaders = list(found)
     for k in range(len(fleet)):
@@ -89,6 +99,37 @@ def _way_to_pose(fleet: Fleet, k: int, pose: np.ndarray, end: np.ndarray, turnin
         if same:
             return min(same, key=lambda path: path.length)
     return best
+
+
+def _reversing(fleet: Fleet, k: int, end: np.ndarray, forward: ArcPath, turning: Optional[float]) -> ArcPath:
+    """The widest way with changes of gear that is hardly longer than the shortest, where it beats the forward one."""
+    limits = fleet.robots[k].limits
+
+    def cost(path: ArcPath) -> float:
+        """Metres at the highest speed: driving backward takes longer, and so does each change of gear."""
+        slower = max(limits.max_speed / -limits.min_speed, 1.0)
+        driven = math.fsum(length if length > 0.0 else -slower * length for _, length in path.segments)
+        gears = [length > 0.0 for _, length in path.segments if length != 0.0]
+        changes = sum(before != after for before, after in zip(gears, gears[1:]))
+        return driven + changes * limits.max_speed * (
+            _CHANGE + 0.5 * limits.max_speed * (1.0 / limits.max_braking + 1.0 / limits.max_acceleration)
+        )
+
+    def best(multiple: float) -> Optional[ArcPath]:
+        found = [
+            path for path in reeds_shepp.paths(forward.start, as_start(end), multiple / limits.max_curvature)
+            if turning is None or abs(path.turning - turning) < 0.1
+        ]
+        return min(found, key=cost, default=None)
+
+    tightest = best(_RADII[-1])
+    if tightest is None or cost(tightest) >= cost(forward):
+        return forward
+    for multiple in _RADII[:-1]:
+        wider = best(multiple)
+        if wider is not None and cost(wider) <= _LONGER * cost(tightest):
+            return wider
+    return tightest
 
 
 def as_start(pose: np.ndarray) -> tuple[float, float, float]:
