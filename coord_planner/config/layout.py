@@ -85,9 +85,9 @@ def layout(
             found[key] = attrs.evolve(slot, description=attrs.evolve(slot.description, live=False))
         for name in robots:
             found |= slots(f"robots.{name}", group)
-    for group, names in named_areas.items():
+    for prefix, names in named_areas.items():
         for name in names:
-            found |= slots(f"{group}.{name}", areas.GROUPS[group])
+            found |= slots(f"{prefix}.{name}", areas.GROUPS[prefix])
     for name, kind in kinds.items():
         found[f"manoeuvres.{name}.kind"] = kind_slot(name)
         found |= slots(f"manoeuvres.{name}", KINDS[kind])

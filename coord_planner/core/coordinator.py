@@ -12,6 +12,7 @@ import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
 from . import gate, manoeuvre, reference, rules, solver, stopping
+from .caps import caps
 from .case import PlannerCase
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -107,6 +108,7 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
@@ -161,7 +163,7 @@ class Coordinator:
 
             def make() -> Reference:
                 task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops())
-                return reference.make_first(task, fleet, graph, settings, states)
+                return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
             self._ask("begin", make, answered, request_id)
@@ -198,7 +200,7 @@ class Coordinator:
 
             def make() -> Reference:
                 left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since)
                 return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
@@ -281,6 +283,7 @@ class Coordinator:
             cautions: list[Caution] = []
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
+            self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
@@ -306,7 +309,7 @@ class Coordinator:
             elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
             rolling = self._history.rolling(now, manoeuvre.STAND_LAGS * self._fleet.response("speed_lag"))
             allowed, nonsense = gate.allow(
-                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, rolling
+                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps, rolling
             )
             self._history.add(now, allowed)
             if nonsense.any() and self._state is State.MOVING:
@@ -328,6 +331,7 @@ class Coordinator:
         self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
         self._observer = Observer(self._fleet, self._settings.poses, self._history)
         self._pursuit, self._state, self._reason = None, State.IDLE, ""
+        self._caps = np.full(len(self._fleet), np.inf)
         self._decision = Decision(self._decision.time, State.IDLE, self._fleet.names)
 
     def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
@@ -550,7 +554,7 @@ class Coordinator:
         assert pursuit is not None
         estimate = estimate or self._observer.estimate(now, self._planned)
         at = now + float(self._history.effect_delay.max())
-        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now)
+        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now, pursuit.reference.fencing)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
         pursuit.freeze(now)
         # Machines stand some lags after their commands do; until then nobody is told that the fleet stands.
@@ -570,6 +574,10 @@ class Coordinator:
         clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
         if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
             cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
+        if self._state is State.MOVING and tick is not None:
+            spare, robot, area = tick.reference.fencing.least(self._fleet, tick.plan.dense(1))
+            if spare < -SHORT:
+                cautions.append(rules.keep_out_ahead(self._settings, self._fleet.names[robot], area, -spare))
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],

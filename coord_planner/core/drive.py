@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from typing import Union
 
 import attrs
 import numpy as np
@@ -87,16 +88,59 @@ class Drive:
         return along + speeds[-1] * np.maximum(np.asarray(t, dtype=float) - self.times[-1], 0.0)
 
 
-def in_proportion(profile: SpeedProfile, part: float) -> Drive:
-    """Forward only, at a part of the speed that a profile has at each moment."""
-    times, speeds = [0.0], [profile.speeds[0]]
-    for duration, speed in zip(profile.durations, (profile.speeds[1], profile.speeds[1], profile.speeds[2])):
-        if duration > _SAME:
-            times.append(times[-1] + duration)
-            speeds.append(speed)
-    if len(times) == 1:
-        times, speeds = [0.0, 1.0], [profile.speeds[2]] * 2
-    return Drive(np.array(times), part * np.array(speeds), np.ones(len(times) - 1, dtype=int))
+@attrs.frozen(eq=False)
+class InStep:
+    """Forward only, along with the others: they share a profile and pass certain marks at the same moments.
+
+    Attributes:
+        profile: of whoever drives furthest between two marks.
+        common: metres of the profile at the marks, shape (K,). metres: of this robot's way there, shape (K,).
+    """
+
+    profile: SpeedProfile
+    common: np.ndarray
+    metres: np.ndarray
+    gears: np.ndarray = attrs.field(factory=lambda: np.ones(1, dtype=int))
+
+    @property
+    def duration(self) -> float:
+        """Seconds until it has come to its end."""
+        return self.profile.duration
+
+    @property
+    def fastest(self) -> float:
+        """Largest speed, m/s."""
+        return float(self.profile.speeds[1] * self._shares.max())
+
+    def speed(self, t: np.ndarray) -> np.ndarray:
+        """Speed at seconds of the profile."""
+        passed = self.profile.distance(t)
+        piece = np.clip(np.searchsorted(self.common, passed, side="right") - 1, 0, len(self.common) - 2)
+        return np.asarray(self.profile.speed(t) * self._shares[piece])
+
+    def distance(self, t: np.ndarray) -> np.ndarray:
+        """Metres along the way; beyond its end at the profile's own last speed."""
+        passed = self.profile.distance(t)
+        return np.interp(passed, self.common, self.metres) + np.maximum(passed - self.common[-1], 0.0)
+
+    def advance(self, t: np.ndarray) -> np.ndarray:
+        """The same: it never drives backward."""
+        return self.distance(t)
+
+    def gear(self, t: np.ndarray) -> np.ndarray:
+        """Always 1."""
+        return np.ones(np.shape(t), dtype=int)
+
+    def direction(self, _t: float) -> int:
+        """Always 1."""
+        return 1
+
+    @property
+    def _shares(self) -> np.ndarray:
+        return np.asarray(np.diff(self.metres) / np.maximum(np.diff(self.common), 1e-9))
+
+
+AnyDrive = Union[Drive, InStep]
 
 
 def stretches(segments: Sequence[tuple[float, float]], stand: float) -> list[Stretch]:

@@ -18,13 +18,13 @@ _TINY = 1e-12
 
 def allow(
     wanted: np.ndarray, last: np.ndarray, elapsed: float, fleet: Fleet, rules: SiteRules,
-    rolling: Optional[np.ndarray] = None,
+    caps: np.ndarray | float = np.inf, rolling: Optional[np.ndarray] = None,
 ) -> tuple[np.ndarray, np.ndarray]:
     """Commands that may be sent.
 
     Args:
         wanted: speed and curvature of each robot, shape (N, 2). last: as sent before, shape (N, 2), finite.
-        elapsed: seconds since then.
+        elapsed: seconds since then. caps: speed cap of each robot where it is, shape (N,), m/s.
         rolling: which way each robot may still be moving, 1 or -1, 0 for one at rest, shape (N,): nobody is sent the
             other way before it stands. Taken from the last command when left out.
 
@@ -39,8 +39,9 @@ def allow(
     curvature = np.clip(wanted[:, 1], -top_curvature, top_curvature)
     curvature = np.clip(curvature, last[:, 1] - steer, last[:, 1] + steer)
     low, high = _reachable(last[:, 0], elapsed, fleet)
-    top = np.minimum(fleet.limit("max_speed"), rules.max_speed)
-    bottom = np.minimum(fleet.limit("min_speed"), 0.0)
+    cap = np.minimum(rules.max_speed, caps)
+    top = np.minimum(fleet.limit("max_speed"), cap)
+    bottom = np.maximum(np.minimum(fleet.limit("min_speed"), 0.0), -cap)
     gear = np.sign(last[:, 0]) if rolling is None else rolling
     asked = np.where(gear * wanted[:, 0] < 0.0, 0.0, wanted[:, 0])
     speed = np.clip(np.clip(asked, bottom, top), low, high)

@@ -145,7 +145,8 @@ class Shape:
 
 def bounds_in_force(
     fleet: Fleet, initial: np.ndarray, times: np.ndarray, end_time: float, end_speed: float,
-    speed_cap: float, lateral_cap: float, curvature_cap: float = np.inf, gears: Optional[np.ndarray] = None,
+    speed_cap: float | np.ndarray, lateral_cap: float, curvature_cap: float = np.inf,
+    gears: Optional[np.ndarray] = None,
 ) -> Bounds:
     """Limits at nodes 1 .. M, each an envelope that comes back at the braking or steering rate.
 
@@ -154,6 +155,7 @@ def bounds_in_force(
     the manoeuvre goes straight on at ``end_speed``.
 
     Args:
+        speed_cap: m/s, one for all or of shape (N, M).
         gears: at nodes 1 .. M, shape (N, M): 1 forward only, -1 backward only, 0 standing; every machine's whole
             range of speeds at all times when left out.
     """
@@ -185,11 +187,11 @@ def bounds_in_force(
 
 
 def _speed_range(
-    fleet: Fleet, cap: float, shape: tuple[int, int], gears: Optional[np.ndarray]
+    fleet: Fleet, cap: float | np.ndarray, shape: tuple[int, int], gears: Optional[np.ndarray]
 ) -> tuple[np.ndarray, np.ndarray]:
     """Lowest and highest speed at nodes 1 .. M in the gears asked for, each of shape (N, M)."""
-    low = np.broadcast_to(np.maximum(fleet.limit("min_speed"), -cap)[:, None], shape)
-    high = np.broadcast_to(np.minimum(fleet.limit("max_speed"), cap)[:, None], shape)
+    low = np.broadcast_to(np.maximum(fleet.limit("min_speed")[:, None], -cap), shape)
+    high = np.broadcast_to(np.minimum(fleet.limit("max_speed")[:, None], cap), shape)
     if gears is None:
         return low, high
     lower = np.where(gears > 0, np.maximum(low, 0.0), np.where(gears < 0, np.minimum(low, 0.0), 0.0))

@@ -8,6 +8,7 @@ import attrs
 import numpy as np
 
 from . import grid, ocp, solver
+from .caps import planned_caps
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
@@ -54,7 +55,10 @@ def pose_problem(
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
     planned = asked_speeds(task, s)
-    asked = _closing_up(s, times, planned * pace, behind, task, fleet, settings)
+    top = np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed))
+    gear = task.gears((s[:-1] + s[1:]) / 2)
+    own = np.where(gear < 0, -fleet.limit("min_speed")[:, None], fleet.limit("max_speed")[:, None])
+    asked = _closing_up(s, times, planned * pace, behind, task, gear, np.minimum(own, top), settings)
     target = paced(reference.state(float(s[-1])), pace)
     graph = reference.graph
     problem = Problem(
@@ -63,7 +67,7 @@ def pose_problem(
         turn_speed=turn_speeds(task, planned) * pace,
         full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
-            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
+            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, top,
             rules.max_lateral_acceleration, task.max_curvature, task.gears(s[1:]),
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
@@ -102,23 +106,21 @@ def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Pla
 
 
 def _closing_up(
-    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet,
-    settings: Settings,
+    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task,
+    gear: np.ndarray, top: np.ndarray, settings: Settings,
 ) -> np.ndarray:
     """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
-    The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
-    is only noise, nothing is changed and the reference is not biased.
+    The horizon's end alone would let them take the whole horizon for it. Nobody is asked for more than ``top``
+    m/s, shape (N, M), in the direction that ``gear`` says, nor to leave its place while it is to stand. Within the
+    dead band, where there is only noise, nothing is changed and the reference is not biased.
     """
-    progress, cap = settings.progress, settings.site_rules.max_speed
+    progress = settings.progress
     off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
-    gear = task.gears((s[:-1] + s[1:]) / 2)
-    top = np.where(gear < 0, -fleet.limit("min_speed")[:, None], fleet.limit("max_speed")[:, None])
     along = np.abs(asked)
-    wanted = np.clip(along + soon[None, :] * (off / progress.catch_up)[:, None], 0.0,
-                     np.maximum(np.minimum(top, cap), along))
-    return np.where(gear == 0, asked, gear * wanted)
+    wanted = along + soon[None, :] * (off / progress.catch_up)[:, None]
+    return np.where(gear == 0, asked, gear * np.clip(wanted, 0.0, np.maximum(top, along)))
 
 
 def _guess(

@@ -178,7 +178,8 @@ def _plain(posed: Posed) -> tuple[np.ndarray, float]:
 def _plain_solver(shape: Shape) -> ca.Function:
     program = ocp.build(shape)
     nlp = {"x": program.x, "p": program.p, "f": program.f, "g": program.g}
-    return ca.nlpsol("plain", "ipopt", nlp, {**_QUIET, "ipopt": _PLAIN})
+    options: dict[str, Any] = {**_QUIET, "ipopt": _PLAIN}
+    return ca.nlpsol("plain", "ipopt", nlp, options)
 
 
 @functools.lru_cache(maxsize=2)

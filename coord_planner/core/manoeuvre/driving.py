@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import numpy as np
+
 from ...errors import RefusedError
-from ..drive import Drive, Stretch, along, in_proportion, stretches
+from ..drive import AnyDrive, Drive, InStep, Stretch, along, stretches
 from ..dubins import ArcPath
 from ..fleet import Fleet, Robot, weakest
 from ..profile import speed_profile
@@ -46,7 +48,7 @@ def standstill(robot: Robot, settings: Settings) -> float:
 
 def arriving_together(
     fleet: Fleet, settings: Settings, ways: tuple[ArcPath, ...], speed: float, end_speed: float, speed_now: float
-) -> tuple[Drive, ...]:
+) -> tuple[AnyDrive, ...]:
     """Drives that end at one moment: in proportion where all go forward, else each slow enough for it."""
     longest = max(way.length for way in ways)
     if all(length >= 0.0 for way in ways for _, length in way.segments):
@@ -54,7 +56,8 @@ def arriving_together(
             longest, speed_now, speed, end_speed,
             COMFORT * weakest(fleet.limit("max_acceleration")), COMFORT * weakest(fleet.limit("max_braking")),
         )
-        return tuple(in_proportion(profile, way.length / longest) for way in ways)
+        common = np.array([0.0, longest])
+        return tuple(InStep(profile, common, np.array([0.0, way.length])) for way in ways)
     quickest = [
         drive_along(robot, settings, way, speed, first=speed_now, last=end_speed)
         for robot, way in zip(fleet.robots, ways)
@@ -75,7 +78,7 @@ def arriving_together(
     )
 
 
-def check_standing(name: str, fleet: Fleet, drives: tuple[Drive, ...], end_speed: float) -> None:
+def check_standing(name: str, fleet: Fleet, drives: tuple[AnyDrive, ...], end_speed: float) -> None:
     """Who has to stand or to reverse on the way must be able to."""
     for robot, drive in zip(fleet.robots, drives):
         if (drive.gears == 0).any() and robot.limits.min_speed > 0.0:

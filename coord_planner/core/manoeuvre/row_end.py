@@ -44,7 +44,8 @@ def _laid(wanted: RowEnd, scene: Scene, rows: Rows, placed: tuple[Placed, ...]) 
     ends = rows.ends(wanted.inside)
     ends[:, 2] = [each.way.end[2] for each in placed]
     alike = all(_alike(placed[0], each) for each in placed)
-    return Laid(ends, tuple(each.way for each in placed), drives=tuple(each.drive for each in placed), alike=alike)
+    return Laid(ends, tuple(each.way for each in placed), waits=np.array([each.wait for each in placed]),
+                speeds=np.array([each.speed for each in placed]), alike=alike)
 
 
 def _alike(one: Placed, other: Placed) -> bool:

@@ -11,7 +11,6 @@ import shapely
 
 from ...errors import RefusedError
 from .. import outline
-from ..drive import Drive
 from ..dubins import ArcPath
 from ..watch import margin
 from .driving import drive_along
@@ -29,16 +28,21 @@ Turns = Sequence[tuple[ArcPath, float]]
 
 @attrs.frozen(eq=False)
 class Placed:
-    """One robot's part: its way, how it is driven, and the seconds until it sets out."""
+    """One robot's part.
+
+    Attributes:
+        robot: its position. way, speed: that it drives at, m/s. wait: seconds until it sets out.
+        poses: from setting out to the end, every _STEP, shape (K, 3).
+    """
 
     robot: int
     way: ArcPath
-    drive: Drive
+    speed: float
     wait: float
-    poses: np.ndarray  # from setting out to the end, every _STEP, shape (K, 3)
+    poses: np.ndarray
 
     def later(self, wait: float) -> Placed:
-        """The same, setting out later; the drive is left as it is."""
+        """The same, setting out later."""
         return attrs.evolve(self, wait=wait)
 
     def at(self, steps: np.ndarray) -> np.ndarray:
@@ -73,7 +77,7 @@ def arranged(
         for order in sorted(orders):
             placed, blocked = _place(scene, basic, order, spare)
             if blocked is None:
-                found.append(tuple(_waiting(scene, each, turns) for each in sorted(placed, key=lambda p: p.robot)))
+                found.append(tuple(sorted(placed, key=lambda each: each.robot)))
             elif worst is None or blocked[0] > worst[0]:
                 worst = blocked
     if not found:
@@ -82,7 +86,7 @@ def arranged(
     distinct: dict[tuple[tuple[float, str], ...], tuple[Placed, ...]] = {}
     for each in found:
         distinct.setdefault(tuple((part.wait, part.way.word) for part in each), each)
-    quickest = sorted(distinct.values(), key=lambda each: max(part.drive.duration for part in each))
+    quickest = sorted(distinct.values(), key=lambda each: max(part.until for part in each))
     return quickest[:_MOST]
 
 
@@ -90,17 +94,7 @@ def _setting_out(scene: Scene, k: int, way: ArcPath, speed: float) -> Placed:
     """A robot on its way at once."""
     drive = drive_along(scene.fleet.robots[k], scene.settings, way, speed, first=scene.speed_now)
     steps = int(np.ceil(drive.duration / _STEP)) + 1
-    return Placed(k, way, drive, 0.0, way.sample(drive.distance(_STEP * np.arange(steps))))
-
-
-def _waiting(scene: Scene, placed: Placed, turns: Sequence[Turns]) -> Placed:
-    """With the drive that sets out when it is its turn."""
-    if placed.wait == 0.0:
-        return placed
-    speed = next(speed for way, speed in turns[placed.robot] if way is placed.way)
-    robot = scene.fleet.robots[placed.robot]
-    drive = drive_along(robot, scene.settings, placed.way, speed, wait=placed.wait)
-    return attrs.evolve(placed, drive=drive)
+    return Placed(k, way, speed, 0.0, way.sample(drive.distance(_STEP * np.arange(steps))))
 
 
 def _place(

@@ -8,7 +8,6 @@ from typing import Optional
 import attrs
 import numpy as np
 
-from ..drive import Drive
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
@@ -39,8 +38,7 @@ class Laid:
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
         strip: lines that no footprint may cross, as in Task.
-        drives: how fast each robot goes; all arrive together when left out.
-        alike: whether all turn alike at the same time, so that copying neighbours makes sense.
+        waits, speeds, alike: as in Task.
         otherwise: other ways to do the same, to be tried in turn where this one cannot be kept.
     """
 
@@ -49,6 +47,7 @@ class Laid:
     duration: float = 0.0
     max_curvature: float = math.inf
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
-    drives: Optional[tuple[Drive, ...]] = None
+    waits: Optional[np.ndarray] = None
+    speeds: Optional[np.ndarray] = None
     alike: bool = True
     otherwise: tuple[Laid, ...] = ()

@@ -9,11 +9,11 @@ import attrs
 import numpy as np
 
 from ...errors import ArrivedError
-from ..drive import Drive
+from ..drive import AnyDrive
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from .driving import arriving_together, check_standing
+from .driving import arriving_together, check_standing, drive_along
 
 _SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
 _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
@@ -39,8 +39,10 @@ class Task:
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
+        waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
+            (N,), m/s; None where all set out at once and arrive together.
         alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
-        otherwise: other ways to do the same, tried in turn where this one cannot be kept.
+        otherwise: another way to do the same, to be tried when this one cannot be kept.
     """
 
     name: str
@@ -51,14 +53,16 @@ class Task:
     arrival: float
     duration: float
     ways: tuple[ArcPath, ...]
-    drives: tuple[Drive, ...]
+    drives: tuple[AnyDrive, ...]
     pacing: tuple[tuple[float, ...], tuple[float, ...]]
     coupling: float
     alignment: float
     max_curvature: float = math.inf
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    waits: Optional[np.ndarray] = None
+    speeds: Optional[np.ndarray] = None
     alike: bool = True
-    otherwise: tuple[Task, ...] = ()
+    otherwise: Optional[Task] = None
 
     @property
     def reversing(self) -> np.ndarray:
@@ -86,12 +90,24 @@ class Task:
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
-        step = settings.horizon.interval
-        arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
-        return attrs.evolve(
-            self, arrival=arrival, duration=arrival + self.duration - self.arrival,
-            pacing=((0.0, arrival), (0.0, self.driven)),
+        return self.stretched(0.0, stretch, settings.horizon.interval)
+
+    def stretched(self, start: float, stretch: float, step: float) -> Task:
+        """The same task with what is left of it at second ``start`` in ``stretch`` times the time.
+
+        Args:
+            step: arrival is a whole number of these, seconds.
+        """
+        arrival = step * math.ceil((start + max(self.arrival - start, 0.0) * stretch) / step - 1e-9)
+        moments, passed = np.array(self.pacing)
+        left = moments > start + 1e-9
+        late = (moments[left] - start) * (arrival - start) / max(self.arrival - start, 1e-9)
+        if not left.any():  # it only settles
+            late, passed, left = np.array([arrival - start]), np.array([self.driven]), np.array([True])
+        pacing = (
+            (start, *(start + late).tolist()), (float(self.drive_time(np.array(start))), *passed[left].tolist())
         )
+        return attrs.evolve(self, arrival=arrival, duration=arrival + self.duration - self.arrival, pacing=pacing)
 
     @property
     def driven(self) -> float:
@@ -103,35 +119,45 @@ class Task:
         inside = np.interp(s, *self.pacing)
         return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
 
+    def _rate(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the profile per second of the manoeuvre until arrival."""
+        moments, passed = np.array(self.pacing)
+        piece = np.clip(np.searchsorted(moments, s, side="right") - 1, 0, len(moments) - 2)
+        return np.asarray((np.diff(passed) / np.maximum(np.diff(moments), 1e-9))[piece])
+
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
-        scale = self.driven / self.arrival
         moments = self.drive_time(times)
-        passed = [drive.distance(moments) for drive in self.drives]
+        passed, rate = [drive.distance(moments) for drive in self.drives], self._rate(times)
         poses = np.stack([way.sample(along) for way, along in zip(self.ways, passed)])
         curvatures = np.stack([_curvatures(way, along) for way, along in zip(self.ways, passed)])
-        return poses, np.stack([drive.speed(moments) * scale for drive in self.drives]), curvatures
+        return poses, np.stack([drive.speed(moments) * rate for drive in self.drives]), curvatures
 
 
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
     max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
-    drives: Optional[tuple[Drive, ...]] = None, alike: bool = True,
+    waits: Optional[np.ndarray] = None, speeds: Optional[np.ndarray] = None, alike: bool = True,
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
     A given duration stretches or squeezes the drives: everything is then slower or faster than asked.
 
     Args:
-        drives: how fast each robot goes; worked out so that all arrive together when left out.
-        alike: as in Task.
+        waits, speeds, alike: as in Task.
     """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
         raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
-    if drives is None:
+    drives: tuple[AnyDrive, ...]
+    if waits is None or speeds is None:
         drives = arriving_together(fleet, settings, ways, speed, end_speed, speed_now)
+    else:
+        drives = tuple(
+            drive_along(robot, settings, way, float(top), wait=float(wait), first=speed_now, last=end_speed)
+            for robot, way, top, wait in zip(fleet.robots, ways, speeds, waits)
+        )
     check_standing(name, fleet, drives, end_speed)
     step = settings.horizon.interval
     driven = max(drive.duration for drive in drives)
@@ -146,7 +172,7 @@ def lay_out(
         ((0.0, arrival), (0.0, driven)),
         (settings.coupling.strength if coupling is None else coupling) if alike else 0.0,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, strip, alike,
+        max_curvature, strip, waits, speeds, alike,
     )
 
 

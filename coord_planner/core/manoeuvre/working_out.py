@@ -12,8 +12,10 @@ from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
 from . import equal_radius, row_end, to_ends
-from .checks import check_ends, check_speed, check_start
+from .checks import check_end_speed, check_ends, check_speed, check_start
+from .detour import choices
 from .kinds import EqualRadius, Manoeuvre, RowEnd, ToEnds
+from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import ways_to_ends
@@ -38,39 +40,59 @@ def work_out(
     """
     check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    laid = _LAY[type(manoeuvre)](name, manoeuvre, Scene(fleet, settings, poses, speed_now, neighbours))
+    scene = Scene(fleet, settings, poses, speed_now, neighbours)
+    laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
     check_ends(fleet, settings, laid.ends, manoeuvre.speed)
-    first, *others = (_task(name, manoeuvre, fleet, settings, speed_now, each) for each in (laid, *laid.otherwise))
-    return attrs.evolve(first, otherwise=tuple(others))
+    check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
+
+    def task(laid: Laid) -> Task:
+        return lay_out(
+            name, fleet, settings, laid.ends, laid.ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
+            speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
+            max_curvature=laid.max_curvature, strip=laid.strip, waits=laid.waits, speeds=laid.speeds,
+            alike=laid.alike,
+        )
+
+    return _on_the_site(laid, scene, manoeuvre.speed, task)
 
 
-def _task(
-    name: str, manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings, speed_now: float, laid: Laid
-) -> Task:
-    return lay_out(
-        name, fleet, settings, laid.ends, laid.ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
-        speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-        max_curvature=laid.max_curvature, strip=laid.strip, drives=laid.drives, alike=laid.alike,
-    )
+def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
+    """A task round the site's keep-outs and within its speed caps, with others to try in turn where it is not kept."""
+    found: Optional[Task] = None
+    all_choices = [choice for each in (laid, *laid.otherwise) for choice in choices(each, scene, speed)]
+    for choice in reversed(all_choices):
+        found = attrs.evolve(paced(task(choice), scene.fleet, scene.settings), otherwise=found)
+    assert found is not None
+    return found
 
 
 def go_on(
     task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray,
-    left: tuple[Optional[ArcPath], ...],
+    left: tuple[Optional[ArcPath], ...], since: float = 0.0,
 ) -> Task:
     """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept.
 
     Args:
         left: what is left of each robot's way; None for one that stands off it and needs a new one. (A new one
             for everybody would send a robot that stands a finger's breadth past its end round a full circle.)
+        since: second of the old task at which it was left: who was still waiting then waits for the rest.
     """
     ways, ends = tuple(way for way in left if way is not None), task.ends
     if len(ways) < len(left):
-        anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, reverse=bool(task.reversing.any()))
+        reverse = bool(task.reversing.any())
+        anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, reverse=reverse)
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
-    return lay_out(
-        task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
-        duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
-        strip=task.strip, alike=task.alike,
-    )
+    laid = Laid(ends, ways, max_curvature=task.max_curvature, strip=task.strip, speeds=task.speeds, alike=task.alike)
+    if task.waits is not None:
+        laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.drive_time(np.array(since))), 0.0))
+
+    def rest(laid: Laid) -> Task:
+        return lay_out(
+            task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
+            speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
+            max_curvature=laid.max_curvature, strip=laid.strip, waits=laid.waits, speeds=laid.speeds,
+            alike=laid.alike,
+        )
+
+    return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
