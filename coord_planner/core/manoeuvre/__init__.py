@@ -11,6 +11,6 @@ from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
-    "KINDS", "STAND_LAGS", "End", "EqualRadius", "Manoeuvre", "RowEnd", "Task", "ToEnds", "eased_turn", "go_on", "lay_out",
-    "work_out",
+    "KINDS", "STAND_LAGS", "End", "EqualRadius", "Manoeuvre", "RowEnd", "Task", "ToEnds", "eased_turn", "go_on",
+    "lay_out", "work_out",
 ]

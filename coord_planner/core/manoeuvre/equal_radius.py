@@ -9,9 +9,9 @@ import numpy as np
 from ...errors import RefusedError
 from ..fleet import weakest
 from .checks import check_bend
+from .driving import COMFORT
 from .kinds import EqualRadius
 from .scene import Laid, Scene
-from .driving import COMFORT
 from .ways import eased_turn
 
 _WIDER = 1.12  # a turn of equal radius is laid out this much wider than its tightest, to leave room for corrections
