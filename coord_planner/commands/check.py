@@ -12,7 +12,7 @@ from ..config.notes import notes
 from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
-from ..core.manoeuvre import EqualRadius, Manoeuvre
+from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
 from ..errors import SettingsError
 from .speaking import CAUTION, errors_reported, say, table, write, write_heading, write_table
 from .targets import prepare_file
@@ -114,6 +114,8 @@ def _asked(manoeuvre: Manoeuvre) -> str:
     if isinstance(manoeuvre, EqualRadius):
         side = "left" if manoeuvre.angle_deg >= 0 else "right"
         return f"everyone {abs(manoeuvre.angle_deg):g} degrees to the {side}, radius {manoeuvre.radius:g} m"
+    if not isinstance(manoeuvre, ToEnds):
+        return manoeuvre.in_words()
     ends = manoeuvre.ends()
     posed = [name for name, end in ends.items() if end.x is not None]
     headed = [name for name in ends if name not in posed]

@@ -271,6 +271,8 @@ class Coordinator:
             text = f"{outcome.reference.task.name} takes {outcome.reference.end:.1f} s"
             if np.isfinite(outcome.reference.clearance):
                 text += f", smallest clearance {outcome.reference.clearance:.2f} m"
+            if outcome.reference.task.note:
+                text += f"; {outcome.reference.task.note}"
             request.answered(Answer(True, text, request.request_id))
             if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
                 self._remake(now, self._pursuit)  # something was changed while it was being made

@@ -45,7 +45,7 @@ class Drive:
         return float(self.times[-1])
 
     @property
-    def fastest(self) -> float:
+    def full(self) -> float:
         """Largest speed either way, m/s."""
         return float(np.abs(self.speeds).max())
 
@@ -108,9 +108,9 @@ class InStep:
         return self.profile.duration
 
     @property
-    def fastest(self) -> float:
-        """Largest speed, m/s."""
-        return float(self.profile.speeds[1] * self._shares.max())
+    def full(self) -> float:
+        """Mean speed between starting and stopping, m/s."""
+        return float(self.profile.speeds[1] * self.metres[-1] / max(self.common[-1], 1e-9))
 
     def speed(self, t: np.ndarray) -> np.ndarray:
         """Speed at seconds of the profile."""

@@ -228,9 +228,11 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     """Speed that makes a turn rate into turning, shape (N, M): at the asked speed the turning is the curvature.
 
     Dividing by the full speed while the fleet starts and stops would make turning on the way to it cheap, and
-    the fleet would swing out first.
+    the fleet would swing out first. Where the line turns as one it is one speed for all, so that turn rates are
+    priced and compared: the innermost's, whose turning they then are.
     """
-    return np.maximum(np.abs(asked), _LEAST_TURN_SPEED * task.asked[:, None])
+    each = np.maximum(np.abs(asked), _LEAST_TURN_SPEED * task.asked[:, None])
+    return np.repeat(each.mean(axis=0, keepdims=True), len(each), axis=0) if task.turn_rates else each
 
 
 def _problem(

@@ -12,12 +12,13 @@ from .caps import planned_caps
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
-from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, Problem, bounds_in_force
+from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, THETA, Problem, bounds_in_force
 from .reference import Reference, asked_speeds, turn_speeds
 from .rollout import rolled_out
 from .settings import Settings
 from .watch import watch
 
+_SWERVE = np.radians(2.0)  # heading by which a robot may leave its reference for what may be noise
 _SPEEDS = [SPEED, SPEED_COMMAND]
 _NEAR = 0.5  # metres or radians by which an unfinished plan may miss its end and still be driven
 
@@ -59,7 +60,10 @@ def pose_problem(
     gear = task.gears((s[:-1] + s[1:]) / 2)
     own = np.where(gear < 0, -fleet.limit("min_speed")[:, None], fleet.limit("max_speed")[:, None])
     asked = _closing_up(s, times, planned * pace, behind, task, gear, np.minimum(own, top), settings)
-    target = paced(reference.state(float(s[-1])), pace)
+    target = _without_swerve(
+        paced(reference.state(float(s[-1])), pace), reference.state(start), initial,
+        np.abs(planned) @ np.diff(s), 2 * settings.poses.noise_xy,
+    )
     graph = reference.graph
     problem = Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
@@ -103,6 +107,26 @@ def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Pla
     finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
     near = missed[:, :3].max() < _NEAR
     return finished if near and finished.closest(1)[0] >= least_clearance else None
+
+
+def _without_swerve(
+    target: np.ndarray, due: np.ndarray, initial: np.ndarray, way: np.ndarray, noise: float
+) -> np.ndarray:
+    """The target moved aside, by no more than the noise of poses, for robots with too little way left to undo it.
+
+    Going aside by d on a way w and arriving straight takes a heading that is 2 d / w off in between: near a
+    stop, robots would swerve for what is only noise.
+
+    Args:
+        due: where the reference is now, shape (N, 7). way: what is left to drive in the horizon, shape (N,), metres.
+    """
+    left = np.stack([-np.sin(due[:, THETA]), np.cos(due[:, THETA])], axis=1)
+    off = np.sum((initial[:, :2] - due[:, :2]) * left, axis=1)
+    kept = np.sign(off) * np.maximum(np.minimum(np.abs(off), noise) - _SWERVE * way / 2, 0.0)
+    moved = target.copy()
+    moved[:, 0] -= kept * np.sin(target[:, THETA])
+    moved[:, 1] += kept * np.cos(target[:, THETA])
+    return moved
 
 
 def _closing_up(

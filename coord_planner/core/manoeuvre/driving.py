@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Optional
+
 import numpy as np
 
 from ...errors import RefusedError
@@ -47,17 +49,25 @@ def standstill(robot: Robot, settings: Settings) -> float:
 
 
 def arriving_together(
-    fleet: Fleet, settings: Settings, ways: tuple[ArcPath, ...], speed: float, end_speed: float, speed_now: float
+    fleet: Fleet, settings: Settings, ways: tuple[ArcPath, ...], marks: Optional[np.ndarray], speed: float,
+    end_speed: float, speed_now: float,
 ) -> tuple[AnyDrive, ...]:
-    """Drives that end at one moment: in proportion where all go forward, else each slow enough for it."""
-    longest = max(way.length for way in ways)
+    """Drives that end at one moment: in proportion where all go forward, else each slow enough for it.
+
+    Args:
+        marks: metres along each way that are passed by all together, shape (N, K).
+    """
     if all(length >= 0.0 for way in ways for _, length in way.segments):
+        lengths = np.array([[way.length] for way in ways])
+        marks = np.array([[0.0, 1.0]]) if marks is None else marks / np.maximum(marks[:, -1:], 1e-9)
+        marks = marks * lengths  # a way may have been bent round something since
+        # Between two marks the profile's metres are those of the robot that drives furthest.
+        common = np.concatenate([[0.0], np.cumsum(np.diff(marks, axis=1).max(axis=0))])
         profile = speed_profile(
-            longest, speed_now, speed, end_speed,
+            float(common[-1]), speed_now, speed, end_speed,
             COMFORT * weakest(fleet.limit("max_acceleration")), COMFORT * weakest(fleet.limit("max_braking")),
         )
-        common = np.array([0.0, longest])
-        return tuple(InStep(profile, common, np.array([0.0, way.length])) for way in ways)
+        return tuple(InStep(profile, common, metres) for metres in marks)
     quickest = [
         drive_along(robot, settings, way, speed, first=speed_now, last=end_speed)
         for robot, way in zip(fleet.robots, ways)

@@ -104,6 +104,14 @@ class RowEnd:
         None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
     )
 
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        how = {"same": "in the same order", "mirrored": "in mirrored order", "listed": "as listed"}[self.order]
+        return (
+            f"everyone back into the next rows on the {self.side} {how}, {self.row_spacing:g} m apart, in a headland "
+            f"{self.depth:g} m deep"
+        )
+
     def listed(self) -> dict[str, int]:
         """The row of each robot that is named; SettingsError for an entry that cannot be read."""
         found: dict[str, int] = {}
@@ -118,6 +126,58 @@ class RowEnd:
 
 
 @attrs.frozen
+class Wheel:
+    """The line turns as one about a pivot: who is further out drives faster, spacing and alignment are kept."""
+
+    angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-270.0, maximum=270.0)
+    pivot: str = parameter(
+        "", "what it turns about: a point 'X Y', or 'NAME METRES', beside the robot at that end of the line"
+        " (m); left out: as near the innermost robot as the group can turn at the asked speed"
+    )
+    speed: float = parameter(
+        1.0, "highest speed asked of any robot; where the group cannot hold it, a lower one is worked out", "m/s",
+        above=0.0, maximum=20.0,
+    )
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        20.0, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        side, about = ("left" if self.angle_deg >= 0 else "right"), self.about()
+        where = "the nearest pivot that the innermost robot can turn about"
+        if about is not None:
+            where = f"{about.distance:g} m beside {about.beside}" if about.point is None else f"{about.point} m"
+        return f"the line {abs(self.angle_deg):g} degrees to the {side} as one, about {where}"
+
+    def about(self) -> Optional[Pivot]:
+        """The pivot; None where it is left to be worked out; SettingsError when it cannot be read."""
+        words = self.pivot.split()
+        if not words:
+            return None
+        numbers = [_number(word) for word in words]
+        if len(words) == 2 and numbers[1] is not None:
+            if numbers[0] is not None:
+                return Pivot(point=(numbers[0], numbers[1]))
+            if _number(words[0], finite=False) is None:
+                return Pivot(beside=words[0], distance=numbers[1])
+        raise SettingsError(f"{self.pivot!r} cannot be read", key="pivot", allowed="'X Y' or 'NAME METRES', or nothing")
+
+
+@attrs.frozen
+class Pivot:
+    """A point (m), or so many metres beside a robot, on the inner side of the turn."""
+
+    point: Optional[tuple[float, float]] = None
+    beside: str = ""
+    distance: float = 0.0
+
+
+@attrs.frozen
 class End:
     """Where one robot shall arrive: a pose, or a heading alone (x and y None). Radians, metres."""
 
@@ -126,8 +186,8 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, RowEnd]
-KINDS: dict[str, type] = {"equal_radius": EqualRadius, "to_ends": ToEnds, "row_end": RowEnd}
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, RowEnd]
+KINDS: dict[str, type] = {"equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "row_end": RowEnd}
 
 
 def _read_end(entry: str) -> tuple[str, End]:
@@ -144,6 +204,14 @@ def _read_end(entry: str) -> tuple[str, End]:
         f"{entry!r} cannot be read", key="ends_deg",
         allowed="'NAME pose X Y HEADING_DEG' or 'NAME heading HEADING_DEG', finite numbers",
     )
+
+
+def _number(word: str, finite: bool = True) -> Optional[float]:
+    """The number that a word stands for; None for none, and for one that is not finite where it has to be."""
+    try:
+        return _finite(float(word)) if finite else float(word)
+    except ValueError:
+        return None
 
 
 def _finite(number: float) -> float:

@@ -37,8 +37,8 @@ class Laid:
         ends: shape (N, 3), windings chosen; NaN where nothing is asked. ways: a guessed way for each robot.
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
-        strip: lines that no footprint may cross, as in Task.
-        waits, speeds, alike: as in Task.
+        speed: that was worked out, m/s; None: the asked one.
+        marks: as in lay_out. turn_rates, note, strip, waits, speeds, alike: as in Task.
         otherwise: other ways to do the same, to be tried in turn where this one cannot be kept.
     """
 
@@ -46,6 +46,10 @@ class Laid:
     ways: tuple[ArcPath, ...]
     duration: float = 0.0
     max_curvature: float = math.inf
+    speed: Optional[float] = None
+    marks: Optional[np.ndarray] = None
+    turn_rates: bool = False
+    note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
     waits: Optional[np.ndarray] = None
     speeds: Optional[np.ndarray] = None

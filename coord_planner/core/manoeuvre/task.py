@@ -37,6 +37,8 @@ class Task:
         pacing: seconds of the manoeuvre and the seconds of the drives that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
+        turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
+        note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
         waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
@@ -58,6 +60,8 @@ class Task:
     coupling: float
     alignment: float
     max_curvature: float = math.inf
+    turn_rates: bool = False
+    note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
     waits: Optional[np.ndarray] = None
     speeds: Optional[np.ndarray] = None
@@ -137,22 +141,25 @@ class Task:
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf, strip: tuple[tuple[tuple[float, float], float], ...] = (),
-    waits: Optional[np.ndarray] = None, speeds: Optional[np.ndarray] = None, alike: bool = True,
+    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False, note: str = "",
+    strip: tuple[tuple[tuple[float, float], float], ...] = (), waits: Optional[np.ndarray] = None,
+    speeds: Optional[np.ndarray] = None, alike: bool = True,
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
     A given duration stretches or squeezes the drives: everything is then slower or faster than asked.
 
     Args:
-        waits, speeds, alike: as in Task.
+        marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
+            length; in between the ways are driven in proportion. The beginning and the end when left out.
+        turn_rates, note, waits, speeds, alike: as in Task.
     """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
         raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
     drives: tuple[AnyDrive, ...]
     if waits is None or speeds is None:
-        drives = arriving_together(fleet, settings, ways, speed, end_speed, speed_now)
+        drives = arriving_together(fleet, settings, ways, marks, speed, end_speed, speed_now)
     else:
         drives = tuple(
             drive_along(robot, settings, way, float(top), wait=float(wait), first=speed_now, last=end_speed)
@@ -165,14 +172,14 @@ def lay_out(
     # Machines that answer late come to rest late; the end holds the whole state.
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
-    fastest = np.array([drive.fastest for drive in drives])
-    asked = np.maximum(fastest, max(_LEAST_PART * float(fastest.max()), 1e-9))
+    full = np.array([drive.full for drive in drives])
+    asked = np.maximum(full, max(_LEAST_PART * float(full.max()), 1e-9))
     return Task(
         name, ends, speed, asked, end_speed, arrival, settled, ways, drives,
         ((0.0, arrival), (0.0, driven)),
         (settings.coupling.strength if coupling is None else coupling) if alike else 0.0,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, strip, waits, speeds, alike,
+        max_curvature, turn_rates, note, strip, waits, speeds, alike,
     )
 
 

@@ -11,17 +11,17 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, row_end, to_ends
+from . import equal_radius, row_end, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
-from .kinds import EqualRadius, Manoeuvre, RowEnd, ToEnds
+from .kinds import EqualRadius, Manoeuvre, RowEnd, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
-    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, RowEnd: row_end.lay,
+    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, RowEnd: row_end.lay,
 }
 
 
@@ -38,22 +38,24 @@ def work_out(
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
     """
-    check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
+    if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
+        check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
     scene = Scene(fleet, settings, poses, speed_now, neighbours)
     laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
-    check_ends(fleet, settings, laid.ends, manoeuvre.speed)
+    speed = manoeuvre.speed if laid.speed is None else laid.speed
+    check_ends(fleet, settings, laid.ends, speed)
     check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
 
     def task(laid: Laid) -> Task:
         return lay_out(
-            name, fleet, settings, laid.ends, laid.ways, speed=manoeuvre.speed, end_speed=manoeuvre.end_speed,
+            name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
             speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-            max_curvature=laid.max_curvature, strip=laid.strip, waits=laid.waits, speeds=laid.speeds,
-            alike=laid.alike,
+            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
+            strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
         )
 
-    return _on_the_site(laid, scene, manoeuvre.speed, task)
+    return _on_the_site(laid, scene, speed, task)
 
 
 def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
@@ -83,7 +85,10 @@ def go_on(
         anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, reverse=reverse)
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
-    laid = Laid(ends, ways, max_curvature=task.max_curvature, strip=task.strip, speeds=task.speeds, alike=task.alike)
+    laid = Laid(
+        ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, note=task.note, strip=task.strip,
+        speeds=task.speeds, alike=task.alike,
+    )
     if task.waits is not None:
         laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.drive_time(np.array(since))), 0.0))
 
@@ -91,8 +96,8 @@ def go_on(
         return lay_out(
             task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
             speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
-            max_curvature=laid.max_curvature, strip=laid.strip, waits=laid.waits, speeds=laid.speeds,
-            alike=laid.alike,
+            max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, note=laid.note, strip=laid.strip,
+            waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
