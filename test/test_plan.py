@@ -40,7 +40,8 @@ def test_the_smallest_clearance_looks_between_the_nodes_too():
     plan = fleets.corner(2).plan
     crossing = type(plan)(
         fleet=fleet, times=np.array([0.0, 1.0, 2.0]), states=states, rates=np.zeros((2, 2, 2)), cost=0.0,
-        short=plan.short, pairs=plan.pairs, missed=plan.missed, solved=True, solve_time=0.0, iterations=0,
+        short=plan.short, pairs=plan.pairs, outside=plan.outside, fenced=plan.fenced, missed=plan.missed, solved=True,
+        solve_time=0.0, iterations=0,
         vector=plan.vector, multipliers=plan.multipliers,
     )
     at_nodes, pair = crossing.closest(0)

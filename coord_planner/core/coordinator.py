@@ -23,8 +23,8 @@ from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, 
 from .motion import lags
 from .observer import Estimate, Observer
 from .plan import Plan
-from .problem import POSE, SPEED_COMMAND, Problem
-from .pursuit import Prepared, Pursuit
+from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
+from .pursuit import Prepared, Pursuit, Takeover
 from .reference import Reference
 from .settings import Settings, SiteRules
 from .silence import Silence
@@ -59,10 +59,13 @@ class _Request:
     """A reference that is being made, and what becomes of it."""
 
     token: int
-    kind: str  # "begin", "resume" or "change"
+    kind: str  # "begin", "resume", "replace" or "change"
     answered: Answered
     request_id: str
     made_for: tuple[Fleet, NeighbourGraph, Settings]
+    takes_over_at: float = 0.0  # second of the last manoeuvre to come, of "replace" and "change"
+    again: Callable[[float], None] = lambda _now: None  # asks once more, from a later moment
+    supersedes_change: bool = False  # a change was on its way, to be made up for when this is refused
 
 
 class Coordinator:
@@ -146,10 +149,18 @@ class Coordinator:
         self, name: str, snapshot: Snapshot, *, overrides: Optional[Mapping[str, float]] = None, request_id: str = "",
         answered: Answered = lambda _answer: None,
     ) -> None:
-        """Ask for a manoeuvre. ``answered`` is called once: when it was refused or when it begins."""
+        """Ask for a manoeuvre. ``answered`` is called once: when it was refused or when it begins.
+
+        In motion it replaces the running one from a moment ahead, without a jump in any command; when it is refused
+        the running one goes on.
+        """
         with self._lock:
             try:
                 wanted = self._manoeuvre(name, overrides or {})
+                if self._state is State.MOVING:
+                    self._check_replaceable(snapshot)
+                    self._replace(snapshot.time, name, wanted, answered, request_id)
+                    return
                 self._check_free("begun")
                 estimate = self._look(snapshot)
                 self._check_fit(estimate, snapshot)
@@ -235,8 +246,8 @@ class Coordinator:
             if self._fleet.names != self._decision.names:
                 self._start_afresh()
             self._observer.configure(self._fleet, self._settings.poses)
-            if self._state is State.MOVING and self._pursuit is not None:
-                self._remake(now, self._pursuit)
+            if self._state is State.MOVING and (self._request is None or self._request.kind == "change"):
+                self._remake(now)
 
     # Slow work
 
@@ -253,8 +264,8 @@ class Coordinator:
             if request is None or request.token != outcome.token:
                 return
             self._request = None
-            if request.kind == "change":
-                self._take_rest(outcome, now)
+            if request.kind in ("change", "replace"):
+                self._take_over(request, outcome, now)
                 return
             if outcome.arrived and request.kind == "resume":
                 self._state, self._completed, self._ended_at, self._reason = State.ENDED, True, now, "completed"
@@ -268,14 +279,9 @@ class Coordinator:
                 return
             self._start(outcome.reference, now)
             self._silence = outcome.silence
-            text = f"{outcome.reference.task.name} takes {outcome.reference.end:.1f} s"
-            if np.isfinite(outcome.reference.clearance):
-                text += f", smallest clearance {outcome.reference.clearance:.2f} m"
-            if outcome.reference.task.note:
-                text += f"; {outcome.reference.task.note}"
+            text = _figures(outcome.reference)
             request.answered(Answer(True, text, request.request_id))
-            if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
-                self._remake(now, self._pursuit)  # something was changed while it was being made
+            self._follow_changes(request, now)
 
     # The loop
 
@@ -354,6 +360,11 @@ class Coordinator:
         if self._state not in (State.IDLE, State.ENDED):
             raise RefusedError(f"nothing can be {verb}: the fleet is {self._state.value}", "halt and abandon it first")
 
+    def _check_replaceable(self, snapshot: Snapshot) -> None:
+        """The running manoeuvre may be left for another."""
+        if snapshot.other_planner:
+            raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
+
     def _check_fit(self, estimate: Estimate, snapshot: Snapshot) -> None:
         """Every robot has a fresh pose and may be driven."""
         stale = [
@@ -376,7 +387,10 @@ class Coordinator:
         if unready:
             raise RefusedError(f"{', '.join(unready)} not ready to be driven", "make them ready or disable them")
 
-    def _ask(self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str) -> None:
+    def _ask(
+        self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str, at: float = 0.0,
+        again: Callable[[float], None] = lambda _now: None,
+    ) -> None:
         self._token += 1
         token = self._token
         fleet, settings, rules_in_force = self._fleet, self._settings, self._settings.site_rules
@@ -396,7 +410,8 @@ class Coordinator:
             self._try_out(made, fleet, settings)
             return Outcome(token, made, "", silence)
 
-        self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings))
+        self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings), at,
+                                 again)
         self._jobs = [job]
 
     def _try_out(self, made: Reference, fleet: Fleet, settings: Settings) -> None:
@@ -413,15 +428,58 @@ class Coordinator:
             self._request.answered(Answer(False, why, self._request.request_id))
         self._request, self._jobs = None, []
 
-    def _remake(self, now: float, pursuit: Pursuit) -> None:
-        at = pursuit.s(now + self._settings.horizon.lead)
-        old = pursuit.reference
-        if at > old.end - 2 * self._settings.horizon.interval:
+    def _branch(self, now: float) -> tuple[Reference, float, float]:
+        """Where a new reference can leave the one that will be followed by the time it is made.
+
+        Returns:
+            that one, the second of its own at which to leave it, and the second of the manoeuvre under way.
+        """
+        pursuit = self._pursuit
+        assert pursuit is not None
+        last = pursuit.last()
+        earlier = last.at - float(last.reference.plan.times[0])
+        at = max(pursuit.s(now + self._settings.horizon.lead), last.at)
+        return last.reference, at - earlier, at
+
+    def _remake(self, now: float) -> None:
+        """Make the rest of the manoeuvre anew, under what is now in force."""
+        old, leaves, at = self._branch(now)
+        if leaves > old.end - 2 * self._settings.horizon.interval:
             return
-        at = max(at, float(old.plan.times[0]))
         fleet, graph, settings = self._fleet, self._graph, self._settings
         task = self._in_force(old.task)
-        self._ask("change", lambda: reference.make_rest(task, fleet, graph, settings, old, at), lambda _a: None, "")
+        self._ask(
+            "change", lambda: reference.make_rest(task, fleet, graph, settings, old, leaves), lambda _a: None, "", at,
+            self._remake,
+        )
+
+    def _replace(self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str) -> None:
+        """Make a reference for another manoeuvre, which leaves the running one from a moment ahead."""
+        before = self._request
+        if before is not None and before.kind == "replace":
+            self._cancel(f"{name} was asked for instead")
+        owed = before is not None and (before.kind == "change" or before.supersedes_change)
+        old, leaves, at = self._branch(now)
+        fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
+
+        def make() -> Reference:
+            speed = float(states[:, SPEED_COMMAND].max())
+            task = manoeuvre.work_out(
+                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
+            )
+            return reference.make(task, fleet, graph, settings, states)
+
+        self._ask(
+            "replace", make, answered, request_id, at,
+            lambda later: self._replace(later, name, wanted, answered, request_id),
+        )
+        if owed and self._request is not None:
+            self._request = attrs.evolve(self._request, supersedes_change=True)
+
+    def _follow_changes(self, request: _Request, now: float) -> None:
+        """What was changed while a reference was being made is followed at once."""
+        if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
+            self._remake(now)
 
     def _in_force(self, task: Task) -> Task:
         """The task with the coupling that the settings ask for, where the manoeuvre has none of its own."""
@@ -433,17 +491,30 @@ class Coordinator:
             alignment = own.alignment
         return attrs.evolve(task, coupling=coupling if task.alike else 0.0, alignment=alignment)
 
-    def _take_rest(self, outcome: Outcome, now: float) -> None:
-        if self._state is not State.MOVING or self._pursuit is None:
-            return
-        if outcome.reference is None:
-            self._refused_change = outcome.reason
-            return
-        late = self._pursuit.s(now + self._settings.horizon.budget) > outcome.reference.plan.times[0]
-        if late:  # it starts from a moment that has passed: make it again from a later one
-            self._remake(now, self._pursuit)
+    def _take_over(self, request: _Request, outcome: Outcome, now: float) -> None:
+        """A reference for the rest, or for another manoeuvre, is there or was refused."""
+        pursuit, replaces = self._pursuit, request.kind == "replace"
+        if self._state is not State.MOVING or pursuit is None:
+            reason = f"{self._state.value} before it could take over; begin it again when the fleet is idle"
+            request.answered(Answer(False, f"the fleet was {reason}", request.request_id))
+        elif outcome.reference is None:
+            if not replaces:
+                self._refused_change = outcome.reason
+            request.answered(Answer(False, f"{outcome.reason} (the running manoeuvre goes on)", request.request_id))
+            if request.supersedes_change:
+                self._remake(now)
+            else:
+                self._follow_changes(request, now)
+        elif pursuit.s(now + self._settings.horizon.budget) > request.takes_over_at:
+            self._request = request if request.supersedes_change else None
+            request.again(now)  # it starts from a moment that has passed: make it again from a later one
         else:
-            self._pursuit.next_reference, self._silence = outcome.reference, outcome.silence
+            pursuit.expect(Takeover(outcome.reference, request.takes_over_at))
+            self._silence = outcome.silence
+            in_time = max(pursuit.clock(request.takes_over_at) - now, 0.0)
+            text = f"in {in_time:.1f} s {_figures(outcome.reference)}"
+            request.answered(Answer(True, text, request.request_id))
+            self._follow_changes(request, now)
 
     def _start(self, made: Reference, now: float) -> None:
         begins = now + self._lead_time()
@@ -488,6 +559,8 @@ class Coordinator:
             self._settle_end(now, self._pursuit)
 
     def _settle_end(self, now: float, pursuit: Pursuit) -> None:
+        if pursuit.coming:
+            return
         settle = float(self._history.effect_delay.max())
         if pursuit.s(now - settle) < pursuit.reference.end:
             return
@@ -564,8 +637,9 @@ class Coordinator:
         self._stop, self._stop_over = stop, float(stop.schedule.times[-1]) + 2 * self._period + settle
         self._state, self._completed = State.STOPPING, completed
         self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
-        if self._request is not None and self._request.kind == "change":
-            self._request, self._jobs = None, []
+        pursuit.coming = ()
+        if self._request is not None and self._request.kind in ("change", "replace"):
+            self._cancel("the fleet was stopped")
         return stop
 
     def _decide(
@@ -601,6 +675,12 @@ class Coordinator:
 
     def _names(self, pair: tuple[int, int]) -> tuple[str, str]:
         return self._fleet.names[pair[0]], self._fleet.names[pair[1]]
+
+
+def _figures(made: Reference) -> str:
+    """How long a manoeuvre takes and how near the robots come, in words."""
+    text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
+    return f"{text}, smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else text
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

@@ -35,6 +35,19 @@ class Prepared:
     reference: Reference
 
 
+@attrs.frozen(eq=False)
+class Takeover:
+    """A reference that the group changes over to.
+
+    Attributes:
+        reference: from ``reference.plan.times[0]`` on.
+        at: second of the manoeuvre under way at which that moment falls.
+    """
+
+    reference: Reference
+    at: float
+
+
 class Pursuit:
     """Not thread-safe by itself: the coordinator guards it.
 
@@ -48,7 +61,7 @@ class Pursuit:
         self.progress = GroupProgress(len(fleet))
         self.schedule: Schedule = constant(values, begins)
         self.tick: Optional[Tick] = None
-        self.next_reference: Optional[Reference] = None
+        self.coming: tuple[Takeover, ...] = ()  # in the order in which they fall due
         self._s, self._time = at, begins
         self._updated = begins
         self._schedule_pace = 1.0
@@ -87,12 +100,26 @@ class Pursuit:
         if s_now >= 0.0:
             self.progress.update(elapsed, self.behind, deficit, settings.progress, fall)
 
+    def last(self) -> Takeover:
+        """What the group will follow once all takeovers have come, and from when on."""
+        return self.coming[-1] if self.coming else Takeover(self.reference, float(self.reference.plan.times[0]))
+
+    def expect(self, takeover: Takeover) -> None:
+        """Change over to a reference when its moment has come, in the place of what was to come from then on."""
+        self.coming = (*(each for each in self.coming if each.at < takeover.at - 1e-9), takeover)
+
     def swap_when_due(self, at: float) -> bool:
-        """Take over a reference made anew once the moment has come from which it starts."""
-        due = self.next_reference is not None and self.s(at) >= self.next_reference.plan.times[0] - 1e-9
-        if due and self.next_reference is not None:
-            self.reference, self.next_reference, self.tick = self.next_reference, None, self._carried()
-        return due
+        """Change over to what has fallen due; seconds of the manoeuvre are counted as it counts them."""
+        swapped = False
+        while self.coming and self.s(at) >= self.coming[0].at - 1e-9:
+            due, *rest = self.coming
+            earlier = due.at - float(due.reference.plan.times[0])  # 0 for the rest of the same manoeuvre
+            tick = self._carried(due.reference) if abs(earlier) < 1e-9 else None
+            self.reference, self.tick = due.reference, tick
+            self._s -= earlier
+            self.coming = tuple(attrs.evolve(each, at=each.at - earlier) for each in rest)
+            swapped = True
+        return swapped
 
     def prepare(self, at: float, initial: np.ndarray, fleet: Fleet, settings: Settings) -> Prepared:
         """Pose the tick whose plan takes effect at a moment, from the state predicted for it."""
@@ -115,14 +142,16 @@ class Pursuit:
             self.schedule = self.schedule.splice(slowed(self.schedule, at, fleet, ratio), at, since)
             self._schedule_pace = self.pace
 
-    def _carried(self) -> Optional[Tick]:
-        """The last plan as a start for the new reference, where the problems have the same shape."""
+    def _carried(self, new: Reference) -> Optional[Tick]:
+        """The last plan as a start for the rest of the same manoeuvre, where the problems have the same shape."""
         if self.tick is None:
             return None
+        old = self.tick.reference
         same = (
-            np.array_equal(self.tick.reference.pairs, self.reference.pairs)
-            and np.array_equal(self.tick.reference.graph.index_edges(), self.reference.graph.index_edges())
-            and np.array_equal(self.tick.reference.fencing.bound, self.reference.fencing.bound)
+            old.task.name == new.task.name
+            and np.array_equal(old.pairs, new.pairs)
+            and np.array_equal(old.graph.index_edges(), new.graph.index_edges())
+            and np.array_equal(old.fencing.bound, new.fencing.bound)
         )
-        return attrs.evolve(self.tick, reference=self.reference) if same else None
+        return attrs.evolve(self.tick, reference=new) if same else None
 

@@ -16,11 +16,11 @@ WEAK, STRONG = 0.05, 50.0
 @pytest.fixture(scope="module")
 def planner(site: Any, hand: Hand) -> None:
     file: Path = site.params()
-    text = file.read_text().replace("names: [corner_left, corner_right]", "names: [led, further]")
+    text = file.read_text().replace("names: [corner_left, corner_right, nudge]", "names: [led, further]")
     text += "" if text.endswith("\n") else "\n"
     led = "".join(f'      {name}: {{kind: to_ends, ends_deg: ["left heading {heading}"], speed: 0.3}}\n'
                   for name, heading in (("led", 60), ("further", 120)))
-    kept = [line for line in text.splitlines(keepends=True) if not line.strip().startswith("corner_")]
+    kept = [line for line in text.splitlines(keepends=True) if not line.strip().startswith(("corner_", "nudge:"))]
     text = "".join(kept).replace("    simulation:", led + "    simulation:")
     text = text.replace("strength: 1.0", f"strength: {WEAK}")
     own = file.with_name("led.yaml")

@@ -20,6 +20,7 @@ class Scene:
     Attributes:
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+        bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
     """
 
     fleet: Fleet
@@ -27,6 +28,7 @@ class Scene:
     poses: np.ndarray
     speed_now: float
     neighbours: np.ndarray
+    bends: np.ndarray = attrs.Factory(lambda self: np.zeros(len(self.poses)), takes_self=True)
 
 
 @attrs.frozen(eq=False)

@@ -11,13 +11,15 @@ from ..fleet import Fleet
 from ..profile import speed_profile
 from .kinds import ToEnds
 from .scene import Laid, Scene
-from .ways import as_start, ways_to_ends
+from .ways import as_start, joined, straightened, ways_to_ends
 
 
 def lay(name: str, wanted: ToEnds, scene: Scene) -> Laid:
     """The shortest wide way to each end; RefusedError where the given time is too short for one of them."""
     named = _named_ends(wanted, scene.fleet)
-    ways, ends = ways_to_ends(scene.fleet, scene.poses, named, scene.neighbours, reverse=wanted.reverse)
+    after, first = straightened(scene)
+    then, ends = ways_to_ends(scene.fleet, after.poses, named, scene.neighbours, reverse=wanted.reverse)
+    ways = tuple(map(joined, first, then))
     if wanted.duration > 0.0:
         _check_duration(name, wanted, scene, named)
     return Laid(ends, ways, duration=wanted.duration)

@@ -5,17 +5,21 @@ from __future__ import annotations
 import math
 from typing import Optional
 
+import attrs
 import numpy as np
 
 from .. import reeds_shepp
 from ..dubins import ArcPath, paths, shortest
-from ..fleet import Fleet
+from ..fleet import Fleet, weakest
 from .driving import COMFORT
+from .scene import Scene
 
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
 _CHANGE = 1.5  # seconds that a change of gear takes besides slowing down and speeding up
+_STRAIGHT = 1e-3  # 1/m
+_SLOWEST = 0.1  # m/s
 # Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
 # breadth past it would have to drive a full circle.)
 _THERE = 0.06
@@ -33,6 +37,27 @@ def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.nda
     side = math.copysign(1.0, angle)
     rising = [(side * peak * (i + 0.5) / pieces, ramp / pieces) for i in range(pieces)]
     return ArcPath(as_start(start), "eased", (*rising, (side * peak, hold), *rising[::-1]))
+
+
+def straightened(scene: Scene) -> tuple[Scene, tuple[ArcPath, ...]]:
+    """How each robot comes out of the bend that it is in, and the scene after that; no way for who drives straight."""
+    rate = COMFORT * weakest(scene.fleet.limit("max_curvature_rate")) / max(scene.speed_now, _SLOWEST)
+    ways = tuple(_eased_out(pose, bend, rate) for pose, bend in zip(scene.poses, scene.bends))
+    poses = np.array([way.end for way in ways])
+    return attrs.evolve(scene, poses=poses, bends=np.zeros(len(poses))), ways
+
+
+def joined(first: ArcPath, then: ArcPath) -> ArcPath:
+    """One way after another that begins where it ends."""
+    return attrs.evolve(then, start=first.start, segments=(*first.segments, *then.segments)) if first.segments else then
+
+
+def _eased_out(pose: np.ndarray, bend: float, rate_per_metre: float, pieces: int = 8) -> ArcPath:
+    if abs(bend) < _STRAIGHT:
+        return ArcPath(as_start(pose), "straight", ())
+    length = abs(bend) / rate_per_metre / pieces
+    falling = tuple((bend * (pieces - i - 0.5) / pieces, length) for i in range(pieces))
+    return ArcPath(as_start(pose), "eased", falling)
 
 
 def ways_to_ends(

@@ -27,13 +27,14 @@ _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
 
 def work_out(
     name: str, manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings, poses: np.ndarray, speed_now: float,
-    neighbours: np.ndarray,
+    neighbours: np.ndarray, bends: Optional[np.ndarray] = None,
 ) -> Task:
     """The task that a manoeuvre means from the poses at hand.
 
     Args:
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
+        bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
 
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
@@ -41,7 +42,9 @@ def work_out(
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    scene = Scene(fleet, settings, poses, speed_now, neighbours)
+    scene = Scene(
+        fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
+    )
     laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
