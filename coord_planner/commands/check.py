@@ -13,6 +13,7 @@ from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
 from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
+from ..core.settings import SiteRules
 from ..errors import SettingsError
 from .speaking import CAUTION, errors_reported, say, table, write, write_heading, write_table
 from .targets import prepare_file
@@ -129,10 +130,20 @@ def _write_rules(configuration: config.Configuration) -> None:
     write_heading("Site rules and planning")
     write(f"From {rules.reference}: at least {rules.min_clearance:g} m between any two robots, at most "
           f"{rules.max_speed:g} m/s and {rules.max_lateral_acceleration:g} m/s^2 sideways.")
+    _write_areas(rules)
     write(f"On top of the clearance, for each robot of a pair: {margin.pose_uncertainty:g} m, and its speed times "
           f"{margin.response_uncertainty:g} s.")
     write(f"{horizon.rate:g} plans a second over {horizon.duration:g} s in {horizon.intervals} intervals; commands "
           f"{settings.commands.rate:g} times a second.\n")
+
+
+def _write_areas(rules: SiteRules) -> None:
+    for area in rules.keep_outs:
+        pieces = f"{len(area.pieces)} convex piece{'s' if len(area.pieces) > 1 else ''}"
+        write(f"Keep-out {area.name}: {area.polygon.area:.1f} m^2, {len(area.corners)} corners, planned with as "
+              f"{pieces}; footprints stay {rules.keep_out_clearance:g} m away.")
+    for cap in rules.speed_caps:
+        write(f"Speed cap {cap.area.name}: at most {cap.max_speed:g} m/s on {cap.area.polygon.area:.1f} m^2.")
 
 
 def _write_notes(configuration: config.Configuration) -> None:

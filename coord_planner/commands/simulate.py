@@ -121,6 +121,8 @@ def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) ->
 
 def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
     """What the manoeuvre promised and did not keep."""
+    from ..record.areas import intrusions, speeding
+
     found = []
     if not figures["completed"]:
         found.append(f"it was not completed, the fleet is {figures['state']}")
@@ -131,6 +133,7 @@ def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
     nearest = figures["min_clearance_m"]
     if nearest is not None and nearest < run.min_clearance:
         found.append(f"two robots came within {nearest:.3f} m, and the site allows {run.min_clearance:g} m")
+    found += [breach.words("m") for breach in intrusions(run)] + [breach.words("m/s") for breach in speeding(run)]
     return found
 
 

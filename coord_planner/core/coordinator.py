@@ -605,7 +605,7 @@ class Coordinator:
         settings = self._settings
         try:
             solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
+            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance, prepared.reference.fencing)
             if plan is None:
                 cautions.append(rules.plan_late(settings, solved.solve_time))
         except SolveError as error:
@@ -680,7 +680,8 @@ class Coordinator:
 def _figures(made: Reference) -> str:
     """How long a manoeuvre takes and how near the robots come, in words."""
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
-    return f"{text}, smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else text
+    text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
+    return f"{text}; {made.task.note}" if made.task.note else text
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

@@ -9,6 +9,7 @@ import numpy as np
 
 from . import grid, ocp, solver
 from .caps import planned_caps
+from .fence import OPEN, Fencing
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
@@ -89,14 +90,14 @@ def paced(states: np.ndarray, pace: float) -> np.ndarray:
     return scaled
 
 
-def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Plan]:
+def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencing = OPEN) -> Optional[Plan]:
     """A plan that may be driven: the solver's own, or, where it ran out of time, what its commands come to.
 
     A half-finished plan is rolled out within its limits. It is used when it stays clear and comes near its end;
     otherwise there is None.
 
     Args:
-        least_clearance: smallest exact clearance that counts as clear, metres.
+        least_clearance: smallest exact clearance that counts as clear, metres. fencing: what is to be kept away from.
     """
     if plan.solved:
         return plan
@@ -106,7 +107,8 @@ def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Pla
     missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
     finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
     near = missed[:, :3].max() < _NEAR
-    return finished if near and finished.closest(1)[0] >= least_clearance else None
+    clear = near and finished.closest(1)[0] >= least_clearance
+    return finished if clear and fencing.least(plan.fleet, finished.dense(1))[0] >= 0.0 else None
 
 
 def _without_swerve(

@@ -21,6 +21,8 @@ _SPARE = 0.1  # metres more than must be
 _SLEWED = 0.1  # part of the footprint's length by which it stands out where it turns
 _BENDS = 0.6  # part of the largest curvature that a detour takes
 _ROUNDS = 6
+_PLACES = 600  # that are looked at, at most
+_LONGEST = 3.0  # times the length of a way, and both ways to the widest, that a detour may have
 _BOTH = (1.0, -1.0)  # left, right
 
 
@@ -62,8 +64,9 @@ def _round(
     """A way past everything that is in it; as it is where nothing is, or where it is partly driven backwards."""
     if any(length < 0.0 for _, length in way.segments) or way.length < _STEP:
         return way
+    straight, longest = way, _LONGEST * way.length + 2 * _WIDEST
     for _ in range(_ROUNDS):
-        curve = way.sample(np.linspace(0.0, way.length, max(3, int(np.ceil(way.length / _STEP)) + 1)))
+        curve = way.sample(np.linspace(0.0, way.length, min(max(3, int(np.ceil(way.length / _STEP)) + 1), _PLACES)))
         line = shapely.LineString(curve[:, :2])
         met = [area for area in blocked if line.intersects(area)]
         if not met:
@@ -75,6 +78,8 @@ def _round(
         if np.abs(off).max() < 1e-3:
             break
         way = _shifted(curve, off, fixed)
+        if way.length > longest:
+            return straight  # it winds about and finds no way: the plan of the straight one says what is missing
     return way
 
 

@@ -13,6 +13,7 @@ from ..drive import AnyDrive
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
+from .driving import COMFORT as COMFORT
 from .driving import arriving_together, check_standing, drive_along
 
 _SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
@@ -78,18 +79,18 @@ class Task:
 
         Backward speeds are negative.
         """
-        moments = self.drive_time(s)
+        moments = self.profile_time(s)
         steps = np.stack([np.diff(drive.advance(moments)) for drive in self.drives])
         return steps / np.maximum(np.diff(s), 1e-9)
 
     def gears(self, s: np.ndarray) -> np.ndarray:
         """1, -1, or 0 where a robot has to stand, at seconds of the manoeuvre, shape (K,) -> (N, K)."""
-        moments = self.drive_time(s)
+        moments = self.profile_time(s)
         return np.stack([drive.gear(moments) for drive in self.drives])
 
     def directions(self, s: float) -> np.ndarray:
         """1 forward or -1 backward at a second of the manoeuvre, also while a robot stands, shape (N,)."""
-        moment = float(self.drive_time(np.array(s)))
+        moment = float(self.profile_time(np.array(s)))
         return np.array([drive.direction(moment) for drive in self.drives])
 
     def slower(self, stretch: float, settings: Settings) -> Task:
@@ -109,7 +110,7 @@ class Task:
         if not left.any():  # it only settles
             late, passed, left = np.array([arrival - start]), np.array([self.driven]), np.array([True])
         pacing = (
-            (start, *(start + late).tolist()), (float(self.drive_time(np.array(start))), *passed[left].tolist())
+            (start, *(start + late).tolist()), (float(self.profile_time(np.array(start))), *passed[left].tolist())
         )
         return attrs.evolve(self, arrival=arrival, duration=arrival + self.duration - self.arrival, pacing=pacing)
 
@@ -118,8 +119,8 @@ class Task:
         """Seconds of the drives' own clock until all have arrived."""
         return max(drive.duration for drive in self.drives)
 
-    def drive_time(self, s: np.ndarray) -> np.ndarray:
-        """Seconds of the drives at seconds of the manoeuvre; after arrival both run alike."""
+    def profile_time(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the profile, that is of the drives, at seconds of the manoeuvre; after arrival both run alike."""
         inside = np.interp(s, *self.pacing)
         return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
 
@@ -131,7 +132,7 @@ class Task:
 
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
-        moments = self.drive_time(times)
+        moments = self.profile_time(times)
         passed, rate = [drive.distance(moments) for drive in self.drives], self._rate(times)
         poses = np.stack([way.sample(along) for way, along in zip(self.ways, passed)])
         curvatures = np.stack([_curvatures(way, along) for way, along in zip(self.ways, passed)])

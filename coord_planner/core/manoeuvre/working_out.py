@@ -42,9 +42,8 @@ def work_out(
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    scene = Scene(
-        fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
-    )
+    bent = np.zeros(len(fleet)) if bends is None else bends
+    scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
     laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
@@ -93,7 +92,7 @@ def go_on(
         speeds=task.speeds, alike=task.alike,
     )
     if task.waits is not None:
-        laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.drive_time(np.array(since))), 0.0))
+        laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.profile_time(np.array(since))), 0.0))
 
     def rest(laid: Laid) -> Task:
         return lay_out(
