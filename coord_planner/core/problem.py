@@ -122,7 +122,8 @@ class Problem:
         Slowing down and speeding up change places where the robot drives backward.
         """
         backward = (self.bounds.max_speed <= 0.0) & (self.bounds.min_speed < 0.0)
-        backward = backward | np.pad(backward[:, :-1], ((0, 0), (1, 0)))  # down to standstill too
+        before = np.concatenate([self.initial[:, [SPEED_COMMAND]] < 0.0, backward[:, :-1]], axis=1)
+        backward = backward | before  # down to standstill too
         up, down = (self.fleet.limit(name)[:, None] for name in ("max_acceleration", "max_braking"))
         return np.where(backward, -up, -down), np.where(backward, down, up)
 
