@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import Optional
 
 import attrs
@@ -17,12 +18,13 @@ from .scene import Scene
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
-_CHANGE = 1.5  # seconds that a change of gear takes besides slowing down and speeding up
 _STRAIGHT = 1e-3  # 1/m
 _SLOWEST = 0.1  # m/s
 # Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
 # breadth past it would have to drive a full circle.)
 _THERE = 0.06
+
+Seconds = Callable[[int, ArcPath], float]  # that a robot, by its position, takes for a way
 
 
 def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.ndarray, pieces: int = 16) -> ArcPath:
@@ -62,12 +64,13 @@ def _eased_out(pose: np.ndarray, bend: float, rate_per_metre: float, pieces: int
 
 def ways_to_ends(
     fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False,
-    reverse: bool = False,
+    seconds: Optional[Seconds] = None, least: float = 1.0,
 ) -> tuple[tuple[ArcPath, ...], np.ndarray]:
     """A way for each robot, and the ends with their windings chosen: those of the shortest way.
 
     Args:
-        reverse: whether robots whose lowest speed is below 0 may drive backward where that takes less time.
+        seconds: that a robot takes for a way; given where robots whose lowest speed is below 0 may drive backward.
+        least: radius of their ways at the least, as a multiple of their smallest.
     """
     wound = ends.copy()
     found: dict[int, ArcPath] = {}
@@ -83,8 +86,8 @@ def ways_to_ends(
         else:
             chosen = turning if keep_winding else None
             found[k] = _way_to_pose(fleet, k, poses[k], ends[k], chosen)
-            if reverse and fleet.robots[k].limits.min_speed < 0.0:
-                found[k] = _reversing(fleet, k, ends[k], found[k], chosen)
+            if seconds is not None and fleet.robots[k].limits.min_speed < 0.0:
+                found[k] = _reversing(fleet, k, ends[k], found[k], chosen, seconds, least)
         wound[k, 2] = poses[k, 2] + (found[k].turning if not np.isnan(ends[k, 0]) else turning)
     leaders = list(found)
     for k in range(len(fleet)):
@@ -126,33 +129,28 @@ def _way_to_pose(fleet: Fleet, k: int, pose: np.ndarray, end: np.ndarray, turnin
     return best
 
 
-def _reversing(fleet: Fleet, k: int, end: np.ndarray, forward: ArcPath, turning: Optional[float]) -> ArcPath:
-    """The widest way with changes of gear that is hardly longer than the shortest, where it beats the forward one."""
-    limits = fleet.robots[k].limits
+def _reversing(
+    fleet: Fleet, k: int, end: np.ndarray, forward: ArcPath, turning: Optional[float], seconds: Seconds, least: float
+) -> ArcPath:
+    """The widest way with changes of gear that takes hardly longer than the quickest, where it beats the forward one.
 
-    def cost(path: ArcPath) -> float:
-        """Metres at the highest speed: driving backward takes longer, and so does each change of gear."""
-        slower = max(limits.max_speed / -limits.min_speed, 1.0)
-        driven = math.fsum(length if length > 0.0 else -slower * length for _, length in path.segments)
-        gears = [length > 0.0 for _, length in path.segments if length != 0.0]
-        changes = sum(before != after for before, after in zip(gears, gears[1:]))
-        return driven + changes * limits.max_speed * (
-            _CHANGE + 0.5 * limits.max_speed * (1.0 / limits.max_braking + 1.0 / limits.max_acceleration)
-        )
-
+    Args:
+        least: radius at the least, as a multiple of the smallest.
+    """
     def best(multiple: float) -> Optional[ArcPath]:
         found = [
-            path for path in reeds_shepp.paths(forward.start, as_start(end), multiple / limits.max_curvature)
-            if turning is None or abs(path.turning - turning) < 0.1
+            path for path in reeds_shepp.paths(
+                forward.start, as_start(end), multiple / fleet.robots[k].limits.max_curvature
+            ) if turning is None or abs(path.turning - turning) < 0.1
         ]
-        return min(found, key=cost, default=None)
+        return min(found, key=lambda path: seconds(k, path), default=None)
 
-    tightest = best(_RADII[-1])
-    if tightest is None or cost(tightest) >= cost(forward):
+    tightest = best(max(_RADII[-1], least))
+    if tightest is None or (seconds(k, tightest) >= seconds(k, forward) and least <= 1.0):
         return forward
-    for multiple in _RADII[:-1]:
-        wider = best(multiple)
-        if wider is not None and cost(wider) <= _LONGER * cost(tightest):
+    for multiple in _RADII:
+        wider = best(multiple) if multiple > least else None
+        if wider is not None and seconds(k, wider) <= _LONGER * seconds(k, tightest):
             return wider
     return tightest
 

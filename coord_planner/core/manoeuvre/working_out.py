@@ -14,6 +14,7 @@ from ..settings import Settings
 from . import equal_radius, row_end, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
+from .driving import drive_along
 from .kinds import EqualRadius, Manoeuvre, RowEnd, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
@@ -83,8 +84,11 @@ def go_on(
     """
     ways, ends = tuple(way for way in left if way is not None), task.ends
     if len(ways) < len(left):
-        reverse = bool(task.reversing.any())
-        anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, reverse=reverse)
+        def seconds(k: int, way: ArcPath) -> float:
+            return drive_along(fleet.robots[k], settings, way, task.speed).duration
+
+        reverse = seconds if task.reversing.any() else None
+        anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, seconds=reverse)
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     laid = Laid(
