@@ -463,6 +463,7 @@ class Coordinator:
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
 
         def make() -> Reference:
+            _check_forward(name, fleet, states)
             speed = float(states[:, SPEED_COMMAND].max())
             task = manoeuvre.work_out(
                 name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
@@ -682,6 +683,16 @@ def _figures(made: Reference) -> str:
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
     text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
     return f"{text}; {made.task.note}" if made.task.note else text
+
+
+def _check_forward(name: str, fleet: Fleet, states: np.ndarray) -> None:
+    """A manoeuvre that replaces another begins with everyone driving forward or standing."""
+    backward = [robot for robot, speed in zip(fleet.names, states[:, SPEED_COMMAND]) if speed < -_STANDING]
+    if backward:
+        raise RefusedError(
+            f"{name}: {', '.join(backward)} will be driving backward when it would take over",
+            "ask again when all drive forward, or halt the fleet first",
+        )
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
