@@ -124,9 +124,8 @@ def test_poses_that_cannot_be_believed_are_no_poses(spoilt):
     assert not answers[0].ok and "no fresh pose of cart_1" in answers[0].text
 
 
-def test_nothing_is_begun_resumed_or_abandoned_in_motion():
+def test_nothing_is_resumed_or_abandoned_in_motion():
     yard = under_way()
-    assert not yard.begin("led").ok and "moving" in yard.answers[-1].text
     assert not yard.resume().ok
     assert not yard.coordinator.abandon(yard.now).ok
     yard.run(0.5)
