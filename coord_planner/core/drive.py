@@ -172,7 +172,7 @@ def along(
 
     def stand(seconds: float) -> None:
         until = step * math.ceil((times[-1] + seconds) / step - 1e-9)
-        if seconds > 0.0:
+        if until > times[-1] + _SAME and seconds > 0.0:
             times.append(until)
             speeds.append(0.0)
             gears.append(0)

@@ -11,6 +11,7 @@ from ...errors import RefusedError
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..watch import margin
+from .checks import check_ends
 from .driving import COMFORT
 from .kinds import RowEnd
 from .row_order import Placed, arranged
@@ -34,6 +35,9 @@ def lay(name: str, wanted: RowEnd, scene: Scene) -> Laid:
     """
     rows = rows_of(name, wanted, scene.fleet, scene.poses)
     strip = (((float(rows.out[0]), float(rows.out[1])), float(rows.out @ rows.origin) + wanted.depth),)
+    ends = rows.ends(wanted.inside)
+    ends[:, 2] = rows.heading + math.pi
+    check_ends(scene.fleet, scene.settings, ends, wanted.speed)
     turns = [_turns(name, wanted, scene, rows, k) for k in range(len(scene.fleet))]
     laid = [_laid(wanted, scene, rows, each) for each in arranged(name, scene, rows, turns)]
     laid = [attrs.evolve(each, strip=strip) for each in laid]

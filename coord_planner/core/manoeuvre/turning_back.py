@@ -50,9 +50,11 @@ class TurnBack:
         return float((poses[:, :1] + c[:, None] * corners[:, 0] - s[:, None] * corners[:, 1]).max())
 
     def poses(self) -> np.ndarray:
-        """Poses along it, shape (K, 3)."""
+        """Poses along it, where pieces meet among them, shape (K, 3)."""
         way = ArcPath((0.0, 0.0, 0.0), self.kind, self.segments)
-        return way.sample(np.linspace(0.0, way.length, max(2, math.ceil(way.length / _SAMPLES))))
+        joints = np.cumsum([abs(length) for _, length in self.segments])
+        even = np.linspace(0.0, way.length, max(2, math.ceil(way.length / _SAMPLES)))
+        return way.sample(np.unique(np.concatenate([even, joints])))
 
 
 def turns_back(shift: float, radius: float, rate: float, reverse: bool) -> Iterator[TurnBack]:
