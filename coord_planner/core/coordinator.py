@@ -397,6 +397,7 @@ class Coordinator:
         refused = self._refused
 
         def job() -> Outcome:
+            silence: Optional[Silence] = None
             try:
                 made = make()
                 silence = worst_silence(made, fleet)
@@ -404,7 +405,7 @@ class Coordinator:
             except CoordPlannerError as error:
                 if isinstance(error, RefusedError) and isinstance(error.case, PlannerCase):
                     refused(error.case)
-                return Outcome(token, None, str(error), arrived=isinstance(error, ArrivedError))
+                return Outcome(token, None, str(error), silence, isinstance(error, ArrivedError))
             except Exception as error:  # whatever it is: nobody may be left waiting for an answer
                 return Outcome(token, None, f"a mistake in the planner ({error!r}); please report it")
             self._try_out(made, fleet, settings)

@@ -57,6 +57,10 @@ class Drive:
         """Metres along the way, backward ones counted positive; on at the last speed after the end."""
         return self._integral(t, np.abs(self.speeds))
 
+    def furthest(self, t: np.ndarray) -> np.ndarray:
+        """The same, of whom it is in step with: of itself."""
+        return self.distance(t)
+
     def advance(self, t: np.ndarray) -> np.ndarray:
         """Metres forward less metres backward."""
         return self._integral(t, self.speeds)
@@ -122,6 +126,10 @@ class InStep:
         """Metres along the way; beyond its end at the profile's own last speed."""
         passed = self.profile.distance(t)
         return np.interp(passed, self.common, self.metres) + np.maximum(passed - self.common[-1], 0.0)
+
+    def furthest(self, t: np.ndarray) -> np.ndarray:
+        """Metres of whoever drives furthest between any two marks."""
+        return self.profile.distance(t)
 
     def advance(self, t: np.ndarray) -> np.ndarray:
         """The same: it never drives backward."""

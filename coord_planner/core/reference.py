@@ -9,7 +9,7 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError
-from . import grid, ocp, solver
+from . import grid, ocp, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
@@ -235,6 +235,13 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     return np.repeat(each.mean(axis=0, keepdims=True), len(each), axis=0) if task.turn_rates else each
 
 
+def turnings(made: Reference) -> np.ndarray:
+    """Turning of each robot in the intervals of a reference, shape (N, M), 1/m."""
+    times = made.plan.times
+    rates = np.diff(made.plan.states[:, :, THETA], axis=1) / np.diff(times)
+    return np.asarray(rates / turn_speeds(made.task, asked_speeds(made.task, times)))
+
+
 def _problem(
     task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
     guess: np.ndarray, pairs: np.ndarray, fences: Fencing,
@@ -252,6 +259,7 @@ def _problem(
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),
+        compared=None if task.behind is None else succession.comparison(task, graph.index_edges(), times),
     )
 
 

@@ -42,7 +42,15 @@ def choices(laid: Laid, scene: Scene, speed: float) -> tuple[Laid, ...]:
         )
         if ways not in found:
             found.append(ways)
-    return tuple(attrs.evolve(laid, ways=ways) for ways in found)
+    return tuple(_with_ways(laid, ways) for ways in found)
+
+
+def _with_ways(laid: Laid, ways: tuple[ArcPath, ...]) -> Laid:
+    """Longer ways are driven past their marks in proportion."""
+    if laid.marks is None:
+        return attrs.evolve(laid, ways=ways)
+    longer = np.array([new.length / max(old.length, 1e-9) for old, new in zip(laid.ways, ways)])
+    return attrs.evolve(laid, ways=ways, marks=laid.marks * longer[:, None])
 
 
 def _blocked(fleet: Fleet, settings: Settings, k: int, speed: float) -> list[shapely.Geometry]:

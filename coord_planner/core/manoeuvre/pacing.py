@@ -13,32 +13,33 @@ from ..settings import Settings
 from .driving import COMFORT
 from .task import Task
 
-_STEP = 0.05  # seconds of the profile
+_STEP = 0.05  # seconds
 _STANDING = 1e-3  # m/s
+_SLOWEST = 0.01  # part of its speed
 
 
 def paced(task: Task, fleet: Fleet, settings: Settings) -> Task:
     """The task with its time stretched where a cap is lower than what is asked."""
     if not settings.site_rules.speed_caps:
         return task
-    moments = np.linspace(0.0, task.driven, max(2, math.ceil(task.driven / _STEP)))
-    each = np.abs(np.stack([drive.speed(moments) for drive in task.drives]))
-    asked = each.max(axis=0)
-    along = np.concatenate([[0.0], np.cumsum(np.diff(moments) * (asked[1:] + asked[:-1]) / 2)])
-    poses = np.stack([way.sample(drive.distance(moments)) for way, drive in zip(task.ways, task.drives)])
+    moments = np.linspace(0.0, task.arrival, max(2, math.ceil(task.arrival / _STEP)))
+    poses, speeds, _ = task.guess(moments)
     capped = planned_caps(fleet, settings, poses, task.speed)
     capped = np.concatenate([capped[:, :1], capped], axis=1)
-    allowed = asked * np.minimum(1.0, (capped / np.maximum(each, 1e-9)).min(axis=0))
-    if (allowed >= asked).all():
+    part = (capped / np.maximum(np.abs(speeds), _STANDING)).min(axis=0)
+    if (part >= 1.0).all():
         return task
+    asked = np.abs(speeds).max(axis=0)
+    along = np.concatenate([[0.0], np.cumsum(np.diff(moments) * (asked[1:] + asked[:-1]) / 2)])
     comfort = [COMFORT * weakest(fleet.limit(name)) for name in ("max_acceleration", "max_braking")]
-    speed = _reachable(along, allowed, *comfort)
+    speed = _reachable(along, asked * np.minimum(part, 1.0), *comfort)
     rate = np.where(asked > _STANDING, speed / np.maximum(asked, _STANDING), 1.0)
-    mean = np.maximum((rate[1:] + rate[:-1]) / 2, 1e-2)
+    mean = np.maximum((rate[1:] + rate[:-1]) / 2, _SLOWEST)
     passed = np.concatenate([[0.0], np.cumsum(np.diff(moments) / mean)])
     step = settings.horizon.interval
     arrival = step * math.ceil(passed[-1] / step - 1e-9)
-    pacing = (tuple((passed * arrival / passed[-1]).tolist()), tuple(moments.tolist()))
+    times = passed * arrival / passed[-1]
+    pacing = (tuple(times.tolist()), tuple(task.profile_time(moments).tolist()))
     return attrs.evolve(task, arrival=arrival, duration=arrival + task.duration - task.arrival, pacing=pacing)
 
 

@@ -39,6 +39,8 @@ class Task:
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
         turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
+        behind: metres by which each robot is behind the first on a way that all drive one after the other, shape (N,):
+            neighbours are then compared where they are at the same place of it. None: at the same moment.
         note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
@@ -62,6 +64,7 @@ class Task:
     alignment: float
     max_curvature: float = math.inf
     turn_rates: bool = False
+    behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
     waits: Optional[np.ndarray] = None
@@ -92,6 +95,11 @@ class Task:
         """1 forward or -1 backward at a second of the manoeuvre, also while a robot stands, shape (N,)."""
         moment = float(self.profile_time(np.array(s)))
         return np.array([drive.direction(moment) for drive in self.drives])
+
+    def passed(self, s: np.ndarray) -> np.ndarray:
+        """Metres that whoever drives furthest has driven at seconds of the manoeuvre."""
+        moments = self.profile_time(s)
+        return np.stack([drive.furthest(moments) for drive in self.drives]).max(axis=0)
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
@@ -142,7 +150,8 @@ class Task:
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False, note: str = "",
+    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False,
+    behind: Optional[np.ndarray] = None, note: str = "",
     strip: tuple[tuple[tuple[float, float], float], ...] = (), waits: Optional[np.ndarray] = None,
     speeds: Optional[np.ndarray] = None, alike: bool = True,
 ) -> Task:
@@ -153,7 +162,7 @@ def lay_out(
     Args:
         marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
             length; in between the ways are driven in proportion. The beginning and the end when left out.
-        turn_rates, note, waits, speeds, alike: as in Task.
+        turn_rates, behind, note, waits, speeds, alike: as in Task.
     """
     longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
@@ -180,7 +189,7 @@ def lay_out(
         ((0.0, arrival), (0.0, driven)),
         (settings.coupling.strength if coupling is None else coupling) if alike else 0.0,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, turn_rates, note, strip, waits, speeds, alike,
+        max_curvature, turn_rates, behind, note, strip, waits, speeds, alike,
     )
 
 

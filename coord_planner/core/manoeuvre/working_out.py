@@ -11,18 +11,19 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, row_end, to_ends, wheel
+from . import equal_radius, in_succession, row_end, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
 from .driving import drive_along
-from .kinds import EqualRadius, Manoeuvre, RowEnd, ToEnds, Wheel
+from .kinds import EqualRadius, InSuccession, Manoeuvre, RowEnd, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
-    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, RowEnd: row_end.lay,
+    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
+    RowEnd: row_end.lay,
 }
 
 
@@ -54,8 +55,8 @@ def work_out(
         return lay_out(
             name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
             speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
-            strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
+            note=laid.note, strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
         )
 
     return _on_the_site(laid, scene, speed, task)
@@ -92,8 +93,8 @@ def go_on(
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     laid = Laid(
-        ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, note=task.note, strip=task.strip,
-        speeds=task.speeds, alike=task.alike,
+        ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
+        strip=task.strip, speeds=task.speeds, alike=task.alike,
     )
     if task.waits is not None:
         laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.profile_time(np.array(since))), 0.0))
@@ -102,8 +103,8 @@ def go_on(
         return lay_out(
             task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
             speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
-            max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, note=laid.note, strip=laid.strip,
-            waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+            max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, behind=laid.behind, note=laid.note,
+            strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
