@@ -211,7 +211,7 @@ class Coordinator:
 
             def make() -> Reference:
                 left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since)
                 return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
@@ -317,8 +317,9 @@ class Coordinator:
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
             elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
+            rolling = self._history.rolling(now, manoeuvre.STAND_LAGS * self._fleet.response("speed_lag"))
             allowed, nonsense = gate.allow(
-                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps
+                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps, rolling
             )
             self._history.add(now, allowed)
             if nonsense.any() and self._state is State.MOVING:
@@ -465,6 +466,7 @@ class Coordinator:
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
 
         def make() -> Reference:
+            _check_forward(name, fleet, states)
             speed = float(states[:, SPEED_COMMAND].max())
             task = manoeuvre.work_out(
                 name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
@@ -491,7 +493,7 @@ class Coordinator:
             coupling = own.coupling
         if own is not None and own.alignment is not None:
             alignment = own.alignment
-        return attrs.evolve(task, coupling=coupling, alignment=alignment)
+        return attrs.evolve(task, coupling=coupling if task.alike else 0.0, alignment=alignment)
 
     def _take_over(self, request: _Request, outcome: Outcome, now: float) -> None:
         """A reference for the rest, or for another manoeuvre, is there or was refused."""
@@ -683,9 +685,18 @@ class Coordinator:
 def _figures(made: Reference) -> str:
     """How long a manoeuvre takes and how near the robots come, in words."""
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
-    if np.isfinite(made.clearance):
-        text += f", smallest clearance {made.clearance:.2f} m"
+    text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
     return f"{text}; {made.task.note}" if made.task.note else text
+
+
+def _check_forward(name: str, fleet: Fleet, states: np.ndarray) -> None:
+    """A manoeuvre that replaces another begins with everyone driving forward or standing."""
+    backward = [robot for robot, speed in zip(fleet.names, states[:, SPEED_COMMAND]) if speed < -_STANDING]
+    if backward:
+        raise RefusedError(
+            f"{name}: {', '.join(backward)} will be driving backward when it would take over",
+            "ask again when all drive forward, or halt the fleet first",
+        )
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
