@@ -10,16 +10,16 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, in_succession, to_ends, wheel
+from . import equal_radius, form, in_succession, to_ends, wheel
 from .checks import check_ends, check_speed, check_start
-from .kinds import EqualRadius, InSuccession, Manoeuvre, ToEnds, Wheel
+from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, ToEnds, Wheel
 from .scene import Laid, Scene
 from .task import Task, lay_out
-from .ways import ways_to_ends
+from .ways import preceded, straightened, ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay,
-    InSuccession: in_succession.lay,
+    InSuccession: in_succession.lay, Form: form.lay,
 }
 
 
@@ -40,9 +40,8 @@ def work_out(
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    laid = _LAY[type(manoeuvre)](name, manoeuvre, Scene(
-        fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
-    ))
+    scene = Scene(fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends)
+    laid = _lay(name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
     return lay_out(
@@ -51,6 +50,14 @@ def work_out(
         max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
         note=laid.note, strip=laid.strip,
     )
+
+
+def _lay(name: str, manoeuvre: Manoeuvre, scene: Scene) -> Laid:
+    lay = _LAY[type(manoeuvre)]
+    if isinstance(manoeuvre, (EqualRadius, ToEnds)):  # which know themselves what to do about bends
+        return lay(name, manoeuvre, scene)
+    after, first = straightened(scene)
+    return preceded(lay(name, manoeuvre, after), first)
 
 
 def go_on(
