@@ -12,6 +12,7 @@ import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
 from . import gate, manoeuvre, reference, rules, solver, stopping
+from .caps import caps
 from .case import PlannerCase
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -110,6 +111,7 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
@@ -289,6 +291,7 @@ class Coordinator:
             cautions: list[Caution] = []
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
+            self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
@@ -312,7 +315,9 @@ class Coordinator:
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
             elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
-            allowed, nonsense = gate.allow(wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules)
+            allowed, nonsense = gate.allow(
+                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps
+            )
             self._history.add(now, allowed)
             if nonsense.any() and self._state is State.MOVING:
                 self._begin_stop(now, "a plan held numbers that are not finite", completed=False)
@@ -333,6 +338,7 @@ class Coordinator:
         self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
         self._observer = Observer(self._fleet, self._settings.poses, self._history)
         self._pursuit, self._state, self._reason = None, State.IDLE, ""
+        self._caps = np.full(len(self._fleet), np.inf)
         self._decision = Decision(self._decision.time, State.IDLE, self._fleet.names)
 
     def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
@@ -390,6 +396,7 @@ class Coordinator:
         refused = self._refused
 
         def job() -> Outcome:
+            silence: Optional[Silence] = None
             try:
                 made = make()
                 silence = worst_silence(made, fleet)
@@ -397,7 +404,7 @@ class Coordinator:
             except CoordPlannerError as error:
                 if isinstance(error, RefusedError) and isinstance(error.case, PlannerCase):
                     refused(error.case)
-                return Outcome(token, None, str(error), arrived=isinstance(error, ArrivedError))
+                return Outcome(token, None, str(error), silence, isinstance(error, ArrivedError))
             except Exception as error:  # whatever it is: nobody may be left waiting for an answer
                 return Outcome(token, None, f"a mistake in the planner ({error!r}); please report it")
             self._try_out(made, fleet, settings)
@@ -598,7 +605,7 @@ class Coordinator:
         settings = self._settings
         try:
             solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
+            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance, prepared.reference.fencing)
             if plan is None:
                 cautions.append(rules.plan_late(settings, solved.solve_time))
         except SolveError as error:
@@ -622,7 +629,7 @@ class Coordinator:
         assert pursuit is not None
         estimate = estimate or self._observer.estimate(now, self._planned)
         at = now + float(self._history.effect_delay.max())
-        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now)
+        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now, pursuit.reference.fencing)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
         pursuit.freeze(now)
         # Machines stand some lags after their commands do; until then nobody is told that the fleet stands.
@@ -643,6 +650,10 @@ class Coordinator:
         clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
         if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
             cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
+        if self._state is State.MOVING and tick is not None:
+            spare, robot, area = tick.reference.fencing.least(self._fleet, tick.plan.dense(1))
+            if spare < -SHORT:
+                cautions.append(rules.keep_out_ahead(self._settings, self._fleet.names[robot], area, -spare))
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],

@@ -15,13 +15,14 @@ _TINY = 1e-12
 
 
 def allow(
-    wanted: np.ndarray, last: np.ndarray, elapsed: float, fleet: Fleet, rules: SiteRules
+    wanted: np.ndarray, last: np.ndarray, elapsed: float, fleet: Fleet, rules: SiteRules,
+    caps: np.ndarray | float = np.inf,
 ) -> tuple[np.ndarray, np.ndarray]:
     """Commands that may be sent.
 
     Args:
         wanted: speed and curvature of each robot, shape (N, 2). last: as sent before, shape (N, 2), finite.
-        elapsed: seconds since then.
+        elapsed: seconds since then. caps: speed cap of each robot where it is, shape (N,), m/s.
 
     Returns:
         commands that may be sent, shape (N, 2), and which robots' wishes were not finite, shape (N,) of bool;
@@ -34,8 +35,9 @@ def allow(
     curvature = np.clip(wanted[:, 1], -top_curvature, top_curvature)
     curvature = np.clip(curvature, last[:, 1] - steer, last[:, 1] + steer)
     low, high = _reachable(last[:, 0], elapsed, fleet)
-    top = np.minimum(fleet.limit("max_speed"), rules.max_speed)
-    bottom = np.minimum(fleet.limit("min_speed"), 0.0)
+    cap = np.minimum(rules.max_speed, caps)
+    top = np.minimum(fleet.limit("max_speed"), cap)
+    bottom = np.maximum(np.minimum(fleet.limit("min_speed"), 0.0), -cap)
     speed = np.clip(np.clip(wanted[:, 0], bottom, top), low, high)
     fastest = _fastest(curvature, fleet, rules)
     speed = np.clip(np.clip(speed, -fastest, fastest), low, high)

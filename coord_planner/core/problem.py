@@ -173,13 +173,13 @@ class Shape:
 
 def bounds_in_force(
     fleet: Fleet, initial: np.ndarray, times: np.ndarray, end_time: float, end_speed: float,
-    speed_cap: float, lateral_cap: float, curvature_cap: float = np.inf,
+    speed_cap: float | np.ndarray, lateral_cap: float, curvature_cap: float = np.inf,
 ) -> Bounds:
     """Limits at nodes 1 .. M, each an envelope that comes back at the braking or steering rate.
 
     A state outside a limit (the limit was lowered, a disturbance, a stand-still below min_speed) could not
     return at once; the envelope is the fastest return that the machine's own rates allow. After ``end_time``
-    the manoeuvre goes straight on at ``end_speed``.
+    the manoeuvre goes straight on at ``end_speed``. ``speed_cap``: m/s, one for all or of shape (N, M).
     """
     elapsed = (times[1:] - times[0])[None, :]
     after = (times[1:] > end_time - 1e-9)[None, :]

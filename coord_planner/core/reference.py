@@ -9,10 +9,11 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError
-from . import grid, ocp, se2, solver, succession
+from . import grid, ocp, solver, succession
+from .caps import planned_caps
 from .case import PlannerCase
-from .dubins import ArcPath
-from .fence import Fencing, fencing
+from .dubins import ArcPath, through
+from .fence import OPEN, Fencing, fencing
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -59,7 +60,7 @@ class Reference:
     graph: NeighbourGraph
     clearance: float
     pair: tuple[int, int]
-    fencing: Fencing = Fencing()
+    fencing: Fencing = OPEN
 
     @property
     def end(self) -> float:
@@ -94,19 +95,9 @@ def ways_left(made: Reference, poses: np.ndarray, since: float) -> tuple[Optiona
     off = np.abs(curves - poses[:, None]).max(axis=2)  # metres and radians alike
     nearest = np.argmin(off, axis=1)
     return tuple(
-        _along(pose, curve[i:]) if distances[i] < _ON_WAY else None
+        through(pose, curve[i:]) if distances[i] < _ON_WAY else None
         for pose, curve, distances, i in zip(poses, curves, off, nearest)
     )
-
-
-def _along(pose: np.ndarray, curve: np.ndarray) -> ArcPath:
-    """Arcs through poses of shape (K, 3), laid on from a pose."""
-    step = np.diff(curve, axis=0)
-    half, middle = step[:, 2] / 2, curve[:-1, 2] + step[:, 2] / 2
-    length = (step[:, 0] * np.cos(middle) + step[:, 1] * np.sin(middle)) / se2.sinc(half)
-    driven = np.abs(length) > 1e-6
-    segments = tuple((float(turn / way), float(way)) for turn, way in zip(step[driven, 2], length[driven]))
-    return ArcPath((float(pose[0]), float(pose[1]), float(pose[2])), "left", segments or ((0.0, 0.0),))
 
 
 def make(
@@ -121,8 +112,24 @@ def make(
         end_kept: metres or radians by which an end may be missed.
 
     Raises:
-        RefusedError: an end or the site's clearance cannot be kept, with the figures.
+        RefusedError: an end or the site's clearance cannot be kept, with the figures: not on this way nor on others.
     """
+    try:
+        return _made(task, fleet, graph, settings, initial, start, guess, end_kept)
+    except RefusedError:
+        if task.otherwise is None or guess is not None:
+            raise
+        try:
+            return make(task.otherwise, fleet, graph, settings, initial, start, None, end_kept)
+        except RefusedError:
+            pass  # the reason is that of the first
+        raise
+
+
+def _made(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, start: float,
+    guess: Optional[np.ndarray], end_kept: float,
+) -> Reference:
     times = grid.until(start, task.duration, settings.horizon.interval)
     guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
@@ -192,11 +199,8 @@ def _stretched(
 ) -> tuple[Task, Fleet, NeighbourGraph, Settings, np.ndarray, float, np.ndarray]:
     """Arguments of make for the rest in a longer time, with the old plan, slowed, as the guess."""
     step = settings.horizon.interval
-    settle = task.duration - task.arrival
-    arrival = step * int(np.ceil((start + max(task.arrival - start, 0.0) * stretch) / step - 1e-9))
-    end = arrival + settle
-    pacing = ((start, arrival), (float(task.profile_time(np.array(start))), task.profile.duration))
-    slower = attrs.evolve(task, arrival=arrival, duration=end, pacing=pacing)
+    slower = task.stretched(start, stretch, step)
+    end = slower.duration
     times = grid.until(start, end, step)
     guess = old.states(start + (times - start) * (task.duration - start) / max(end - start, step))
     guess[:, 1:, [SPEED, SPEED_COMMAND]] /= stretch
@@ -249,8 +253,9 @@ def _problem(
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
         turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
         bounds=bounds_in_force(
-            fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
-            task.max_curvature,
+            fleet, initial, times, task.arrival, task.end_speed,
+            np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed)),
+            rules.max_lateral_acceleration, task.max_curvature,
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),

@@ -55,7 +55,15 @@ TABLE = (
         "predicted clearance short", Level.WARN, Response.GO_ON,
         "the plan cannot keep the smallest clearance everywhere",
     ),
-    Row("clearance breached", Level.ERROR, Response.STOP, "two robots are nearer than the site allows"),
+    Row(
+        "clearance breached", Level.ERROR, Response.STOP,
+        "two robots, or a robot and a keep-out area, are nearer than the site allows",
+    ),
+    Row("keep-out ahead", Level.WARN, Response.GO_ON, "the plan cannot keep a robot out of an area everywhere"),
+    Row(
+        "keep-out ahead", Level.ERROR, Response.STOP,
+        "driving on would make the stopping distance longer than the way to a keep-out area",
+    ),
     Row(
         "free way short", Level.ERROR, Response.STOP,
         "driving on would make the stopping distance longer than the free way",
@@ -133,6 +141,19 @@ def clearance_short(settings: Settings, pair: Sequence[str], clearance: float) -
 def clearance_breached(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:
     figures = f"clearance {clearance:.2f} m now, {settings.site_rules.min_clearance:g} m is the site's smallest"
     return _caution(settings, "clearance breached", " and ".join(pair), Level.ERROR, figures)
+
+
+def keep_out_breached(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    return _caution(settings, "clearance breached", name, Level.ERROR, f"{missing:.2f} m too near to {area} now")
+
+
+def keep_out_ahead(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    return _caution(settings, "keep-out ahead", name, Level.WARN, f"its plan comes {missing:.2f} m too near to {area}")
+
+
+def keep_out_unavoidable(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    figures = f"a stop begun a tick later would end {missing:.2f} m too near to {area}"
+    return _caution(settings, "keep-out ahead", name, Level.ERROR, figures)
 
 
 def free_way_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:

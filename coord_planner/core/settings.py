@@ -78,6 +78,14 @@ class Commands:
 
 
 @attrs.frozen
+class SpeedCap:
+    """An area in which no robot drives faster than ``max_speed``, m/s."""
+
+    area: Area
+    max_speed: float
+
+
+@attrs.frozen
 class SiteRules:
     """The rules of the site; they tighten the robots' limits and never loosen them."""
 
@@ -99,6 +107,7 @@ class SiteRules:
         live=True,
     )
     keep_outs: tuple[Area, ...] = ()
+    speed_caps: tuple[SpeedCap, ...] = ()
 
 
 @attrs.frozen

@@ -5,6 +5,7 @@ from __future__ import annotations
 import attrs
 import numpy as np
 
+from .fence import OPEN, Fencing
 from .fleet import Fleet
 from .motion import drive, lags
 from .observer import Estimate
@@ -25,6 +26,8 @@ class Stop:
         schedule: commands down to standstill.
         manner: "in step" or "apart".
         clearance: smallest exact clearance predicted on the way, metres. pair: who comes that near.
+        spare: smallest distance to spare from what is fenced off, metres, inf where nothing is; who comes that near,
+            and to what.
         duration: seconds to standstill of the commands.
     """
 
@@ -33,6 +36,12 @@ class Stop:
     clearance: float
     pair: tuple[int, int]
     duration: float
+    spare: tuple[float, int, str] = (np.inf, -1, "")
+
+    @property
+    def nearest(self) -> float:
+        """The smaller one of both distances, metres."""
+        return min(self.clearance, self.spare[0])
 
 
 def in_step(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
@@ -50,18 +59,20 @@ def apart(schedule: Schedule, at: float, fleet: Fleet) -> Schedule:
     return _slow_down(schedule, at, fleet, together=False)
 
 
-def choose(schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now: float) -> Stop:
-    """The stop with the larger predicted clearance; in step when both keep the same.
+def choose(
+    schedule: Schedule, at: float, fleet: Fleet, estimate: Estimate, now: float, fencing: Fencing = OPEN
+) -> Stop:
+    """The stop with the larger predicted clearance, between robots or to keep-outs; in step when both keep the same.
 
     Args:
         schedule: in effect so far. at: moment from which it can still be changed.
-        estimate: of the robots at ``now``.
+        estimate: of the robots at ``now``. fencing: what is to be kept away from.
     """
     stops = [
-        _predicted(now, fleet, estimate, schedule, manner, make(schedule, at, fleet))
+        _predicted(now, fleet, estimate, schedule, manner, make(schedule, at, fleet), fencing)
         for manner, make in (("in step", in_step), ("apart", apart))
     ]
-    return stops[1] if stops[1].clearance > stops[0].clearance + 1e-3 else stops[0]
+    return stops[1] if stops[1].nearest > stops[0].nearest + 1e-3 else stops[0]
 
 
 def _slow_down(
@@ -96,7 +107,7 @@ def _slow_down(
 
 
 def _predicted(
-    now: float, fleet: Fleet, estimate: Estimate, before: Schedule, manner: str, stop: Schedule
+    now: float, fleet: Fleet, estimate: Estimate, before: Schedule, manner: str, stop: Schedule, fencing: Fencing
 ) -> Stop:
     states, factor = estimate.states, estimate.speed_factor
     settle = 4.0 * float(lags(fleet).max()) + _STEP
@@ -108,4 +119,5 @@ def _predicted(
     commands = np.where((moments < stop.times[0])[..., None], before.at(moments), stop.at(moments))
     path, _ = drive(states[:, POSE], reached, commands, np.full(len(fleet), h), lags(fleet), factor)
     clearance, pair = closest_along(fleet, path, estimate.growth)
-    return Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0]))
+    spare = fencing.least(fleet, path, estimate.growth)
+    return Stop(stop, manner, clearance, pair, float(stop.times[-1] - stop.times[0]), spare)

@@ -8,6 +8,8 @@ import attrs
 import numpy as np
 
 from . import grid, ocp, solver, succession
+from .caps import planned_caps
+from .fence import OPEN, Fencing
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
@@ -54,7 +56,9 @@ def pose_problem(
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
     planned = asked_speeds(task, s)
-    asked = _closing_up(s, times, planned * pace, behind, task, fleet, settings)
+    top = np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed))
+    asked = _closing_up(s, times, planned * pace, behind, task, np.minimum(fleet.limit("max_speed")[:, None], top),
+                        settings)
     target = _without_swerve(
         paced(reference.state(float(s[-1])), pace), reference.state(start), initial,
         np.abs(planned) @ np.diff(s), 2 * settings.poses.noise_xy,
@@ -66,7 +70,7 @@ def pose_problem(
         turn_speed=turn_speeds(task, planned) * pace,
         full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
-            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
+            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, top,
             rules.max_lateral_acceleration, task.max_curvature,
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
@@ -95,14 +99,14 @@ def paced(states: np.ndarray, pace: float) -> np.ndarray:
     return scaled
 
 
-def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Plan]:
+def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencing = OPEN) -> Optional[Plan]:
     """A plan that may be driven: the solver's own, or, where it ran out of time, what its commands come to.
 
     A half-finished plan is rolled out within its limits. It is used when it stays clear and comes near its end;
     otherwise there is None.
 
     Args:
-        least_clearance: smallest exact clearance that counts as clear, metres.
+        least_clearance: smallest exact clearance that counts as clear, metres. fencing: what is to be kept away from.
     """
     if plan.solved:
         return plan
@@ -112,7 +116,8 @@ def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Pla
     missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
     finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
     near = missed[:, :3].max() < _NEAR
-    return finished if near and finished.closest(1)[0] >= least_clearance else None
+    clear = near and finished.closest(1)[0] >= least_clearance
+    return finished if clear and fencing.least(plan.fleet, finished.dense(1))[0] >= 0.0 else None
 
 
 def _without_swerve(
@@ -136,19 +141,20 @@ def _without_swerve(
 
 
 def _closing_up(
-    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet,
+    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, top: np.ndarray,
     settings: Settings,
 ) -> np.ndarray:
     """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
-    The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
+    The horizon's end alone would let them take the whole horizon for it. Nobody is asked for more than ``top``
+    m/s, shape (N, M). Within the dead band, where there
     is only noise, nothing is changed and the reference is not biased.
     """
-    progress, top = settings.progress, np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
+    progress = settings.progress
     off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
     wanted = asked + soon[None, :] * (off / progress.catch_up)[:, None]
-    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top[:, None], asked))
+    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top, asked))
 
 
 def _guess(

@@ -3,7 +3,8 @@
 Places are assigned so that the sum of the squares of the ways is least (scipy's linear_sum_assignment); that of
 straight ways never cross. Ways of machines that only drive forward may still meet: then those are laid one after
 the other, each with the least waiting and bending that keeps it clear of those before it (prioritised planning:
-Erdmann & Lozano-Perez, Algorithmica 2 (1987) 477-521, from memory), and who finds none is laid earlier in the next round.
+Erdmann & Lozano-Perez, Algorithmica 2 (1987) 477-521, from memory), and who finds none is laid earlier in the next
+round.
 """
 
 from __future__ import annotations

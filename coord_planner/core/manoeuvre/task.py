@@ -45,6 +45,7 @@ class Task:
         note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
+        otherwise: the same on other sides of keep-out areas, to be tried when this cannot be kept.
     """
 
     name: str
@@ -65,6 +66,7 @@ class Task:
     behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    otherwise: Optional[Task] = None
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
@@ -78,23 +80,40 @@ class Task:
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
-        step = settings.horizon.interval
-        arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
-        return attrs.evolve(
-            self, arrival=arrival, duration=arrival + self.duration - self.arrival,
-            pacing=((0.0, arrival), (0.0, self.profile.duration)),
+        return self.stretched(0.0, stretch, settings.horizon.interval)
+
+    def stretched(self, start: float, stretch: float, step: float) -> Task:
+        """The same task with what is left of it at second ``start`` in ``stretch`` times the time.
+
+        Args:
+            step: arrival is a whole number of these, seconds.
+        """
+        arrival = step * math.ceil((start + max(self.arrival - start, 0.0) * stretch) / step - 1e-9)
+        moments, passed = np.array(self.pacing)
+        left = moments > start + 1e-9
+        late = (moments[left] - start) * (arrival - start) / max(self.arrival - start, 1e-9)
+        if not left.any():  # it only settles
+            late, passed, left = np.array([arrival - start]), np.array([self.profile.duration]), np.array([True])
+        pacing = (
+            (start, *(start + late).tolist()), (float(self.profile_time(np.array(start))), *passed[left].tolist())
         )
+        return attrs.evolve(self, arrival=arrival, duration=arrival + self.duration - self.arrival, pacing=pacing)
 
     def profile_time(self, s: np.ndarray) -> np.ndarray:
         """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
         inside = np.interp(s, *self.pacing)
         return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
 
+    def _rate(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the profile per second of the manoeuvre until arrival."""
+        moments, passed = np.array(self.pacing)
+        piece = np.clip(np.searchsorted(moments, s, side="right") - 1, 0, len(moments) - 2)
+        return np.asarray((np.diff(passed) / np.maximum(np.diff(moments), 1e-9))[piece])
+
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
-        scale = self.profile.duration / self.arrival
         moments = self.profile_time(times)
-        passed, speed = self.profile.distance(moments), self.profile.speed(moments) * scale
+        passed, speed = self.profile.distance(moments), self.profile.speed(moments) * self._rate(times)
         along = self._along(passed)
         poses = np.stack([way.sample(metres) for way, metres in zip(self.ways, along)])
         curvatures = np.stack([_curvatures(way, metres) for way, metres in zip(self.ways, along)])

@@ -5,14 +5,17 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Any, Optional
 
+import attrs
 import numpy as np
 
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
 from . import equal_radius, form, in_succession, to_ends, wheel
-from .checks import check_ends, check_speed, check_start
+from .checks import check_end_speed, check_ends, check_speed, check_start
+from .detour import choices
 from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, ToEnds, Wheel
+from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import preceded, straightened, ways_to_ends
@@ -40,16 +43,31 @@ def work_out(
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    scene = Scene(fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends)
+    bent = np.zeros(len(fleet)) if bends is None else bends
+    scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
     laid = _lay(name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
-    return lay_out(
-        name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
-        speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-        max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
-        note=laid.note, strip=laid.strip,
-    )
+    check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
+
+    def task(laid: Laid) -> Task:
+        return lay_out(
+            name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
+            speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
+            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
+            note=laid.note, strip=laid.strip,
+        )
+
+    return _on_the_site(laid, scene, speed, task)
+
+
+def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
+    """A task round the site's keep-outs and within its speed caps, with others to try when it cannot be kept."""
+    found: Optional[Task] = None
+    for choice in reversed(choices(laid, scene, speed)):
+        found = attrs.evolve(paced(task(choice), scene.fleet, scene.settings), otherwise=found)
+    assert found is not None
+    return found
 
 
 def _lay(name: str, manoeuvre: Manoeuvre, scene: Scene) -> Laid:
@@ -75,8 +93,14 @@ def go_on(
         anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
-    return lay_out(
-        task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
-        duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
-        turn_rates=task.turn_rates, behind=task.behind, note=task.note, strip=task.strip,
-    )
+    laid = Laid(ends, ways, max_curvature=task.max_curvature, strip=task.strip)
+
+    def rest(laid: Laid) -> Task:
+        return lay_out(
+            task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
+            speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
+            max_curvature=laid.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
+            strip=laid.strip,
+        )
+
+    return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
