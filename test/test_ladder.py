@@ -46,7 +46,7 @@ def test_a_finished_plan_is_driven_without_a_word():
 
 def test_an_unfinished_one_is_rolled_out_and_driven_where_it_keeps_what_it_must():
     ready = prepared()
-    unfinished = attrs.evolve(solved(ready), solved=False)
+    unfinished = attrs.evolve(solved(ready), solved=False, solve_time=SETTINGS.horizon.budget)
     found = ladder.find(ready, unfinished, None, SETTINGS, 0.1)
     assert found.fresh and codes(found) == ["plan unfinished"] and found.plan is not None
     assert found.plan.states == pytest.approx(unfinished.states, abs=1e-3)
