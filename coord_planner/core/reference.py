@@ -14,9 +14,9 @@ from . import grid, ocp, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
-from .fence import OPEN, Fencing, fencing
 from .fast.solver import TickSolver
 from .fast.ticks import knows
+from .fence import OPEN, Fencing, fencing
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
