@@ -69,19 +69,22 @@ class Reference:
 
     def state(self, s: float) -> np.ndarray:
         """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
-        states = self.plan.state(min(s, self.end))
-        if s > self.end:
-            ahead = self.task.end_speed * (s - self.end)
-            heading = states[:, THETA]
-            states[:, 0] += ahead * np.cos(heading)
-            states[:, 1] += ahead * np.sin(heading)
-            states[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
-            states[:, [SPEED, SPEED_COMMAND]] = self.task.end_speed
-        return states
+        return self.states(np.array([s]))[:, 0]
 
     def states(self, s: np.ndarray) -> np.ndarray:
         """States at several moments, shape (N, K, 7)."""
-        return np.stack([self.state(float(moment)) for moment in s], axis=1)
+        states = self.plan.sample(np.minimum(s, self.end))
+        after = s > self.end
+        if after.any():
+            ahead = self.task.end_speed * (s[after] - self.end)
+            heading = states[:, after, THETA]
+            states[:, after, 0] += ahead * np.cos(heading)
+            states[:, after, 1] += ahead * np.sin(heading)
+            straight = (CURVATURE, CURVATURE_COMMAND), 0.0
+            for columns, value in (straight, ((SPEED, SPEED_COMMAND), self.task.end_speed)):
+                for column in columns:
+                    states[:, after, column] = value
+        return states
 
 
 def ways_left(made: Reference, poses: np.ndarray, since: float) -> tuple[Optional[ArcPath], ...]:
