@@ -21,6 +21,7 @@ from .judge import SHORT, Judge, View
 from .manoeuvre import Manoeuvre, Task
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
+from .neighbours import Lookout
 from .observer import Estimate, Observer
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
@@ -111,6 +112,7 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._lookout = Lookout()
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
@@ -131,6 +133,11 @@ class Coordinator:
             if self._pursuit is None:
                 return np.full((len(self._fleet), 3), np.nan)
             return self._pursuit.reference.task.ends
+
+    @property
+    def graph(self) -> NeighbourGraph:
+        """The neighbour graph over the robots that are driven."""
+        return self._graph
 
     @property
     def reference(self) -> Optional[Reference]:
@@ -163,6 +170,7 @@ class Coordinator:
                     return
                 self._check_free("begun")
                 estimate = self._look(snapshot)
+                self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except CoordPlannerError as error:
                 answered(Answer(False, str(error), request_id))
@@ -200,6 +208,7 @@ class Coordinator:
                 answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
                 return
             estimate = self._look(snapshot)
+            self._look_for_neighbours(snapshot.time, estimate, at_once=True)
             try:
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
@@ -293,6 +302,7 @@ class Coordinator:
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
+            self._look_for_neighbours(snapshot.time, estimate)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
@@ -551,6 +561,12 @@ class Coordinator:
     def _look(self, snapshot: Snapshot) -> Estimate:
         self._observer.observe(self._believed(snapshot), self._planned)
         return self._observer.estimate(snapshot.time, self._planned)
+
+    def _look_for_neighbours(self, now: float, estimate: Estimate, at_once: bool = False) -> None:
+        """Take up the graph that the poses give, where it is they that give it."""
+        found = self._lookout.found(self._settings.neighbours, self._graph, estimate.states[:, :2], now, at_once)
+        if found is not None:
+            self.change(now, graph=found)
 
     def _settle(self, now: float) -> None:
         """Changes of state that time alone brings."""

@@ -195,6 +195,48 @@ class InSuccession:
 
 
 @attrs.frozen
+class Form:
+    """From where they stand into a formation, each robot to the place that suits best."""
+
+    shape: str = parameter(
+        "line", "line (abreast), file (one behind the other) or echelon (each further right and back)",
+        choices=("line", "file", "echelon"),
+    )
+    spacing: float = parameter(3.0, "distance from place to place", "m", above=0.0, maximum=1000.0)
+    slant_deg: float = parameter(
+        45.0, "echelon: by how much the line is turned back from abreast; negative: further left and back", "deg",
+        minimum=-85.0, maximum=85.0,
+    )
+    heading_deg: Optional[float] = parameter(
+        None, "heading of the formation; left out: the robots' mean one", "deg", minimum=-36000.0, maximum=36000.0
+    )
+    x: Optional[float] = parameter(
+        None, "middle of the formation; left out, with y: ahead of where they stand", "m", minimum=-1e6, maximum=1e6
+    )
+    y: Optional[float] = parameter(
+        None, "middle of the formation; left out, with x: ahead of where they stand", "m", minimum=-1e6, maximum=1e6
+    )
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        0.0, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def __attrs_post_init__(self) -> None:
+        if (self.x is None) != (self.y is None):
+            raise SettingsError("only one of x and y is given", key="x", allowed="both, or neither")
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        slant = f" slanting {self.slant_deg:g} degrees" if self.shape == "echelon" else ""
+        where = "" if self.x is None else f" about ({self.x:g}, {self.y:g})"
+        return f"into {'an' if self.shape == 'echelon' else 'a'} {self.shape}{slant}, {self.spacing:g} m apart{where}"
+
+
+@attrs.frozen
 class Pivot:
     """A point (m), or so many metres beside a robot, on the inner side of the turn."""
 
@@ -212,9 +254,10 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd]
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, Form, RowEnd]
 KINDS: dict[str, type] = {
-    "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "row_end": RowEnd,
+    "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "form": Form,
+    "row_end": RowEnd,
 }
 
 

@@ -11,19 +11,19 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, in_succession, row_end, to_ends, wheel
+from . import equal_radius, form, in_succession, row_end, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
 from .driving import drive_along
-from .kinds import EqualRadius, InSuccession, Manoeuvre, RowEnd, ToEnds, Wheel
+from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
-from .ways import ways_to_ends
+from .ways import preceded, straightened, ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
-    RowEnd: row_end.lay,
+    Form: form.lay, RowEnd: row_end.lay,
 }
 
 
@@ -46,7 +46,7 @@ def work_out(
     check_start(fleet, settings, poses)
     bent = np.zeros(len(fleet)) if bends is None else bends
     scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
-    laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
+    laid = _lay(name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
     check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
@@ -70,6 +70,14 @@ def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], 
         found = attrs.evolve(paced(task(choice), scene.fleet, scene.settings), otherwise=found)
     assert found is not None
     return found
+
+
+def _lay(name: str, manoeuvre: Manoeuvre, scene: Scene) -> Laid:
+    lay = _LAY[type(manoeuvre)]
+    if isinstance(manoeuvre, (EqualRadius, ToEnds)):  # which know themselves what to do about bends
+        return lay(name, manoeuvre, scene)
+    after, first = straightened(scene)
+    return preceded(lay(name, manoeuvre, after), first)
 
 
 def go_on(
