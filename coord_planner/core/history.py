@@ -29,12 +29,12 @@ class CommandHistory:
 
     def add(self, time: float, values: np.ndarray) -> None:
         """Remember what was sent: speeds and curvatures, shape (N, 2)."""
-        kept, values = self._sent, np.asarray(values, dtype=float)
+        kept, values = self._sent, np.array(values, dtype=float)
         self._sent = Schedule(
             np.append(kept.times[1 - _KEPT :], time),
             np.concatenate([kept.values[:, 1 - _KEPT :], values[:, None]], axis=1),
         )
-        moving = values[:, 0] != 0.0
+        moving = np.abs(values[:, 0]) > 0.0
         self._gear = np.where(moving, np.sign(values[:, 0]), self._gear)
         self._driven = np.where(moving, time, self._driven)
 

@@ -254,10 +254,10 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, Form, RowEnd]
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd, Form]
 KINDS: dict[str, type] = {
-    "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "form": Form,
-    "row_end": RowEnd,
+    "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "row_end": RowEnd,
+    "form": Form,
 }
 
 

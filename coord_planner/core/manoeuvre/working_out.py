@@ -23,7 +23,7 @@ from .ways import preceded, straightened, ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
-    Form: form.lay, RowEnd: row_end.lay,
+    RowEnd: row_end.lay, Form: form.lay,
 }
 
 
