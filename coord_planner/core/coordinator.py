@@ -182,6 +182,7 @@ class Coordinator:
     def halt(self, now: float, reason: str) -> Answer:
         """A controlled stop of everyone; the fleet is then held."""
         with self._lock:
+            now = self._moment(now)
             if self._state is State.PLANNING:
                 self._cancel("halted")
                 self._state, self._reason = State.IDLE, reason
@@ -239,6 +240,7 @@ class Coordinator:
             RefusedError: robots would join or leave while the fleet is not idle; nothing has changed.
         """
         with self._lock:
+            now = self._moment(now)
             self._check_members(fleet)
             self._settings = settings or self._settings
             self._fleet = fleet or self._fleet
@@ -260,7 +262,7 @@ class Coordinator:
     def deliver(self, outcome: Outcome, now: float) -> None:
         """The outcome of a job; outcomes that nobody waits for any more are dropped."""
         with self._lock:
-            request = self._request
+            request, now = self._request, self._moment(now)
             if request is None or request.token != outcome.token:
                 return
             self._request = None
@@ -286,7 +288,9 @@ class Coordinator:
     # The loop
 
     def step(self, snapshot: Snapshot) -> Decision:
-        """One tick: look, judge, plan, decide."""
+        """One tick: look, judge, plan, decide. Nothing is decided anew at a time that is no number."""
+        if not np.isfinite(snapshot.time):
+            return self._decision
         with self._lock:
             cautions: list[Caution] = []
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
@@ -309,7 +313,7 @@ class Coordinator:
     def commands(self, now: float) -> Optional[dict[str, Command]]:
         """What to send now; None when nothing is to be sent."""
         with self._lock:
-            if not self._state.holds_fleet or self._pursuit is None:
+            if not self._state.holds_fleet or self._pursuit is None or not np.isfinite(now):
                 return None
             wanted = self._pursuit.schedule.at(now + self._history.effect_delay)
             last = self._history.last
@@ -531,6 +535,10 @@ class Coordinator:
     def _lead_time(self) -> float:
         """From a snapshot to the first moment at which a new plan can still change what every robot does."""
         return self._settings.horizon.budget + float(self._history.effect_delay.max())
+
+    def _moment(self, now: float) -> float:
+        """A moment to reckon with: the newest known one where the clock shows no number."""
+        return now if np.isfinite(now) else max(self._decision.time, self._history.last[0] if self._history.last else 0)
 
     @property
     def _planned(self) -> Optional[Planned]:

@@ -23,6 +23,7 @@ _DRIFT = np.array([0.02, 0.02, 0.01, 0.25])
 _RUNNING = 0.4
 _ONE_SIDED = 1.5
 _AFRESH = 0.3
+_LONGEST = 30.0  # seconds over which anything is predicted: who was not heard of for so long is somewhere
 _FRESH = 0.15  # seconds; up to this age an estimate is as good as the margin of the plan takes it to be
 _SLOWLY = 0.08  # part of the newest in the running mean of squared innovations
 _FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
@@ -95,7 +96,7 @@ class Observer:
 
     def estimate(self, now: float, planned: Planned | None) -> Estimate:
         """Predicted over to a moment, without changing what is known."""
-        known = np.flatnonzero(np.isfinite(self._stamp))
+        known = np.flatnonzero(np.isfinite(self._stamp) & np.isfinite(now))
         count = len(self._fleet)
         states = np.full((count, 7), np.nan)
         factor = np.ones(count)
@@ -135,7 +136,7 @@ class Observer:
         self, which: np.ndarray, to: np.ndarray, planned: Planned | None
     ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Mean (n, 4), reached (n, 2) and the way made (n, 2) at each robot's own moment."""
-        span = np.maximum(to - self._stamp[which], 0.0)
+        span = np.clip(to - self._stamp[which], 0.0, _LONGEST)
         steps = max(1, int(np.ceil(span.max() / _SUBSTEP)))
         h = span / steps
         times = np.zeros((len(self._fleet), steps))
