@@ -11,7 +11,7 @@ import attrs
 import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
-from . import gate, manoeuvre, reference, rules, solver, stopping
+from . import gate, ladder, manoeuvre, reference, rules, solver, stopping
 from .caps import caps
 from .case import PlannerCase
 from .fleet import Fleet
@@ -29,7 +29,7 @@ from .reference import Reference
 from .settings import Settings, SiteRules
 from .silence import Silence
 from .silence import worst as worst_silence
-from .tick import pose_problem, usable
+from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
@@ -303,10 +303,12 @@ class Coordinator:
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     prepared = self._prepare(snapshot.time)
-        plan = self._solve(prepared, cautions)
+        found = None if prepared is None else self._solve(prepared, snapshot.time)
+        plan = None if found is None else found.plan
         with self._lock:
-            if prepared is not None and self._state is State.MOVING and self._pursuit is not None:
-                self._drive(prepared, plan, snapshot.time)
+            if prepared is not None and found is not None and self._state is State.MOVING:
+                cautions += found.cautions
+                self._drive(prepared, found, snapshot.time)
             self._decision = self._decide(snapshot.time, estimate, plan, cautions)
             return self._decision
 
@@ -586,7 +588,7 @@ class Coordinator:
         at = snapshot.time + float(self._history.effect_delay.max())
         found = self._watchman.look(View(
             snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
-            1.0 / self._settings.horizon.rate, self._planned_at, self._refused_change, self._silence,
+            1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
         ))
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
@@ -606,29 +608,30 @@ class Coordinator:
         predicted = self._observer.estimate(at, self._planned).states
         return pursuit.prepare(at, predicted, self._fleet, self._settings)
 
-    def _solve(self, prepared: Optional[Prepared], cautions: list[Caution]) -> Optional[Plan]:
-        """Solve a tick; None, with a warning, when what comes out cannot be driven."""
-        if prepared is None:
-            return None
+    def _solve(self, prepared: Prepared, now: float) -> ladder.Found:
+        """Solve a tick, and find what can be driven."""
         settings = self._settings
+        solved: Optional[Plan] = None
+        failure: Optional[Caution] = None
         try:
-            solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance, prepared.reference.fencing)
-            if plan is None:
-                cautions.append(rules.plan_late(settings, solved.solve_time))
+            plan = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
+            if plan.solve_time > self._budget + self._period:  # the moment it starts from has passed
+                failure = rules.plan_late(settings, plan.solve_time)
+            else:
+                solved = plan
         except SolveError as error:
-            cautions.append(rules.plan_failed(settings, str(error)))
-            return None
-        return plan
+            failure = rules.plan_failed(settings, str(error))
+        return ladder.find(prepared, solved, failure, settings, now - self._planned_at)
 
-    def _drive(self, prepared: Prepared, plan: Optional[Plan], now: float) -> None:
+    def _drive(self, prepared: Prepared, found: ladder.Found, now: float) -> None:
         pursuit = self._pursuit
         assert pursuit is not None
-        if plan is not None:
-            pursuit.install(prepared, plan, now - _SINCE)
+        if found.plan is None:
+            self._begin_stop(now, found.cautions[-1].text, completed=False)
+            return
+        pursuit.install(prepared, found.plan, now - _SINCE)
+        if found.fresh:
             self._planned_at = now
-        else:
-            pursuit.slow_old_plan(now + float(self._history.effect_delay.max()), self._fleet, now - _SINCE)
 
     def _begin_stop(
         self, now: float, reason: str, *, completed: bool, estimate: Optional[Estimate] = None

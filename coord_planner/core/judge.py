@@ -42,7 +42,6 @@ class View:
     pursuit: Pursuit
     at: float
     period: float
-    planned_at: float
     refused_change: str
     silence: Optional[Silence]
 
@@ -147,9 +146,6 @@ def _plans(view: View) -> list[Caution]:
     found = []
     if view.refused_change:
         found.append(rules.change_refused(view.settings, view.refused_change))
-    without = view.snapshot.time - view.planned_at
-    if without > view.settings.horizon.keep:
-        found.append(rules.plans_missing(view.settings, without))
     if view.silence is not None and view.silence.clearance < view.settings.site_rules.min_clearance - SHORT:
         found.append(rules.silence_unsafe(view.settings, view.silence))
     return found

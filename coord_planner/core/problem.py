@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Optional
+
 import attrs
 import numpy as np
 
@@ -56,6 +58,42 @@ class Fences:
     reaches: np.ndarray
 
 
+@attrs.frozen(eq=False)
+class Comparison:
+    """Neighbours compared otherwise than at equal moments, R rows in the place of those. Each row compares a mean of
+    the turnings of its edge's first robot with a mean of the second's, in W intervals from a certain one on.
+
+    Attributes:
+        edges: position of the edge, shape (R,).
+        first_at, second_at: the interval from which on the weights count, shape (R,).
+        first, second: weights on turnings, shape (R, W).
+        known: what is added to the difference, shape (R,), 1/m: turnings outside these intervals.
+        seconds: of the manoeuvre that the row stands for, shape (R,).
+    """
+
+    edges: np.ndarray
+    first_at: np.ndarray
+    second_at: np.ndarray
+    first: np.ndarray
+    second: np.ndarray
+    known: np.ndarray
+    seconds: np.ndarray
+
+    def places(self) -> tuple[tuple[int, int, int, int], ...]:
+        """Edge, first intervals, and how many, of each row: what a compiled problem depends on."""
+        width = self.first.shape[1]
+        columns = (self.edges.tolist(), self.first_at.tolist(), self.second_at.tolist())
+        return tuple((e, k, j, width) for e, k, j in zip(*columns))
+
+    def disagreements(self, turnings: np.ndarray, edges: np.ndarray) -> np.ndarray:
+        """Difference in each row, shape (R,), 1/m, for turnings of shape (N, M)."""
+        steps = np.arange(self.first.shape[1])
+        k, j = edges[self.edges].T if len(self.edges) else np.zeros((2, 0), dtype=int)
+        first = np.sum(self.first * turnings[k[:, None], self.first_at[:, None] + steps], axis=1)
+        second = np.sum(self.second * turnings[j[:, None], self.second_at[:, None] + steps], axis=1)
+        return np.asarray(first - second + self.known)
+
+
 def no_fences(intervals: int) -> Fences:
     """Nothing is fenced off."""
     return Fences(np.zeros(0, dtype=int), np.zeros((0, intervals, 2)), np.zeros((0, intervals)))
@@ -85,6 +123,7 @@ class Problem:
         fences: lines that footprints stay on one side of.
         compare_speed: speed by which turn rates are divided before neighbours are compared, shape (N, M), m/s; as
             turn_speed when left out. One speed for all compares turn rates, as where the line turns as one.
+        compared: at which moments neighbours are compared; at equal ones when left out.
     """
 
     fleet: Fleet
@@ -104,13 +143,14 @@ class Problem:
     watch: Watch
     fences: Fences = attrs.Factory(lambda self: no_fences(len(self.times) - 1), takes_self=True)
     compare_speed: np.ndarray = attrs.Factory(lambda self: self.turn_speed, takes_self=True)
+    compared: Optional[Comparison] = None
 
     @property
     def shape(self) -> Shape:
         return Shape(
             len(self.fleet), len(self.times) - 1,
             tuple(map(tuple, self.edges.tolist())), tuple(map(tuple, self.watch.pairs.tolist())),
-            tuple(self.fences.robots.tolist()),
+            tuple(self.fences.robots.tolist()), None if self.compared is None else self.compared.places(),
         )
 
     @property
@@ -128,6 +168,7 @@ class Shape:
     edges: tuple[tuple[int, int], ...]
     pairs: tuple[tuple[int, int], ...]
     fenced: tuple[int, ...] = ()
+    compared: Optional[tuple[tuple[int, int, int, int], ...]] = None
 
 
 def bounds_in_force(

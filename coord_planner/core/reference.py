@@ -9,7 +9,7 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError
-from . import grid, ocp, solver
+from . import grid, ocp, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
@@ -69,19 +69,22 @@ class Reference:
 
     def state(self, s: float) -> np.ndarray:
         """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
-        states = self.plan.state(min(s, self.end))
-        if s > self.end:
-            ahead = self.task.end_speed * (s - self.end)
-            heading = states[:, THETA]
-            states[:, 0] += ahead * np.cos(heading)
-            states[:, 1] += ahead * np.sin(heading)
-            states[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
-            states[:, [SPEED, SPEED_COMMAND]] = self.task.end_speed
-        return states
+        return self.states(np.array([s]))[:, 0]
 
     def states(self, s: np.ndarray) -> np.ndarray:
         """States at several moments, shape (N, K, 7)."""
-        return np.stack([self.state(float(moment)) for moment in s], axis=1)
+        states = self.plan.sample(np.minimum(s, self.end))
+        after = s > self.end
+        if after.any():
+            ahead = self.task.end_speed * (s[after] - self.end)
+            heading = states[:, after, THETA]
+            states[:, after, 0] += ahead * np.cos(heading)
+            states[:, after, 1] += ahead * np.sin(heading)
+            straight = (CURVATURE, CURVATURE_COMMAND), 0.0
+            for columns, value in (straight, ((SPEED, SPEED_COMMAND), self.task.end_speed)):
+                for column in columns:
+                    states[:, after, column] = value
+        return states
 
 
 def ways_left(made: Reference, poses: np.ndarray, since: float) -> tuple[Optional[ArcPath], ...]:
@@ -235,6 +238,13 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     return np.repeat(each.mean(axis=0, keepdims=True), len(each), axis=0) if task.turn_rates else each
 
 
+def turnings(made: Reference) -> np.ndarray:
+    """Turning of each robot in the intervals of a reference, shape (N, M), 1/m."""
+    times = made.plan.times
+    rates = np.diff(made.plan.states[:, :, THETA], axis=1) / np.diff(times)
+    return np.asarray(rates / turn_speeds(made.task, asked_speeds(made.task, times)))
+
+
 def _problem(
     task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
     guess: np.ndarray, pairs: np.ndarray, fences: Fencing,
@@ -252,6 +262,7 @@ def _problem(
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),
+        compared=None if task.behind is None else succession.comparison(task, graph.index_edges(), times),
     )
 
 

@@ -7,14 +7,14 @@ from typing import Optional
 import attrs
 import numpy as np
 
-from . import grid, ocp, solver
+from . import grid, ocp, solver, succession
 from .caps import planned_caps
 from .fence import OPEN, Fencing
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
-from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, THETA, Problem, bounds_in_force
-from .reference import Reference, asked_speeds, turn_speeds
+from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, THETA, Comparison, Problem, bounds_in_force
+from .reference import Reference, asked_speeds, turn_speeds, turnings
 from .rollout import rolled_out
 from .settings import Settings
 from .watch import watch
@@ -75,10 +75,21 @@ def pose_problem(
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
         fences=reference.fencing.rows(fleet, settings, guess[:, :, POSE], task.speed),
+        compared=_compared(reference, s, settings.horizon.interval),
     )
     if steps is None or last is None:
         return problem, s, solver.start_from_states(problem, guess)
     return problem, s, _shifted(problem, last, steps, guess)
+
+
+def _compared(reference: Reference, s: np.ndarray, step: float) -> Optional[Comparison]:
+    """At which moments neighbours are compared; None where it is at equal ones."""
+    task, times = reference.task, reference.plan.times
+    if task.behind is None:
+        return None
+    return succession.comparison_of_tick(
+        task, reference.graph.index_edges(), s, step, times, turnings(reference)
+    )
 
 
 def paced(states: np.ndarray, pace: float) -> np.ndarray:

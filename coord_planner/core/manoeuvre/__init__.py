@@ -4,12 +4,12 @@
 ``task`` the outcome: a Task, which ``core.reference`` plans.
 """
 
-from .kinds import KINDS, End, EqualRadius, Manoeuvre, Pivot, ToEnds, Wheel
+from .kinds import KINDS, End, EqualRadius, InSuccession, Manoeuvre, Pivot, ToEnds, Wheel
 from .task import Task, lay_out
 from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
-    "KINDS", "End", "EqualRadius", "Manoeuvre", "Pivot", "Task", "ToEnds", "Wheel", "eased_turn", "go_on", "lay_out",
-    "work_out",
+    "KINDS", "End", "EqualRadius", "InSuccession", "Manoeuvre", "Pivot", "Task", "ToEnds", "Wheel",
+    "eased_turn", "go_on", "lay_out", "work_out",
 ]

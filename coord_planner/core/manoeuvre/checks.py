@@ -86,6 +86,18 @@ def check_apart(
         )
 
 
+def check_radius(radius: float, fleet: Fleet) -> None:
+    """Everyone can turn so tightly."""
+    for robot in fleet.robots:
+        smallest = 1.0 / robot.limits.max_curvature
+        if radius < smallest - 1e-9:
+            raise RefusedError(
+                f"a radius of {radius:g} m is {smallest - radius:.2f} m tighter than {robot.name} can turn (smallest "
+                f"radius {smallest:.2f} m)",
+                f"ask for a radius of at least {1.0 / weakest(fleet.limit('max_curvature')):.2f} m",
+            )
+
+
 def check_bend(speed: float, radius: float, fleet: Fleet, settings: Settings) -> None:
     """Turn rate and lateral acceleration at the asked speed and radius."""
     for robot in fleet.robots:

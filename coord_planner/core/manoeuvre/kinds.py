@@ -101,6 +101,32 @@ class Wheel:
 
 
 @attrs.frozen
+class InSuccession:
+    """A file turns one after the other at the same place; neighbours are compared where they are at the same place."""
+
+    angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-270.0, maximum=270.0)
+    radius: float = parameter(5.0, "tightest radius of the turn", "m", above=0.0, maximum=1000.0)
+    before: float = parameter(
+        0.0, "how far the first robot drives straight on before the turn begins", "m", minimum=0.0, maximum=1000.0
+    )
+    after: float = parameter(
+        0.0, "how far the last robot drives straight on after it has turned", "m", minimum=0.0, maximum=1000.0
+    )
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    # Headings at equal moments differ here by intent.
+    alignment: Optional[float] = attrs.field(default=0.0, init=False)
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        side = "left" if self.angle_deg >= 0 else "right"
+        return f"one after the other {abs(self.angle_deg):g} degrees to the {side}, radius {self.radius:g} m"
+
+
+@attrs.frozen
 class Pivot:
     """A point (m), or so many metres beside a robot, on the inner side of the turn."""
 
@@ -118,8 +144,10 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, Wheel]
-KINDS: dict[str, type] = {"equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel}
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession]
+KINDS: dict[str, type] = {
+    "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession,
+}
 
 
 def _read_end(entry: str) -> tuple[str, End]:

@@ -40,7 +40,7 @@ class Laid:
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
         speed: that was worked out, m/s; None: the asked one.
-        marks, turn_rates, note: as in a Task.
+        marks, turn_rates, behind, note: as in a Task.
         strip: lines that no footprint may cross, as in Task.
     """
 
@@ -51,5 +51,6 @@ class Laid:
     speed: Optional[float] = None
     marks: Optional[np.ndarray] = None
     turn_rates: bool = False
+    behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()

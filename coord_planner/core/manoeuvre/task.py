@@ -40,6 +40,8 @@ class Task:
         marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
             length; in between the ways are driven in proportion.
         turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
+        behind: metres by which each robot is behind the first on a way that all drive one after the other, shape (N,):
+            neighbours are then compared where they are at the same place of it. None: at the same moment.
         note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
@@ -61,15 +63,20 @@ class Task:
     max_curvature: float = math.inf
     marks: np.ndarray = attrs.Factory(lambda self: ends_as_marks(self.ways), takes_self=True)
     turn_rates: bool = False
+    behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
     otherwise: Optional[Task] = None
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
-        passed = self.profile.distance(self.profile_time(s))
+        passed = self.passed(s)
         on_way, beyond = np.diff(self._along(passed), axis=1), np.diff(np.maximum(passed - self._whole, 0.0))
         return (on_way + beyond) / np.maximum(np.diff(s), 1e-9)
+
+    def passed(self, s: np.ndarray) -> np.ndarray:
+        """Metres of the profile that the fleet has driven at seconds of the manoeuvre."""
+        return self.profile.distance(self.profile_time(s))
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
@@ -142,7 +149,8 @@ def common_marks(marks: np.ndarray) -> np.ndarray:
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False, note: str = "",
+    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False,
+    behind: Optional[np.ndarray] = None, note: str = "",
     strip: tuple[tuple[tuple[float, float], float], ...] = (),
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
@@ -169,7 +177,7 @@ def lay_out(
         ((0.0, arrival), (0.0, profile.duration)),
         settings.coupling.strength if coupling is None else coupling,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, marks, turn_rates, note, strip,
+        max_curvature, marks, turn_rates, behind, note, strip,
     )
 
 

@@ -11,10 +11,10 @@ import numpy as np
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, to_ends, wheel
+from . import equal_radius, in_succession, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
-from .kinds import EqualRadius, Manoeuvre, ToEnds, Wheel
+from .kinds import EqualRadius, InSuccession, Manoeuvre, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
@@ -22,6 +22,7 @@ from .ways import ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay,
+    InSuccession: in_succession.lay,
 }
 
 
@@ -53,8 +54,8 @@ def work_out(
         return lay_out(
             name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
             speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
-            strip=laid.strip,
+            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
+            note=laid.note, strip=laid.strip,
         )
 
     return _on_the_site(laid, scene, speed, task)
@@ -90,7 +91,8 @@ def go_on(
         return lay_out(
             task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
             speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
-            max_curvature=laid.max_curvature, turn_rates=task.turn_rates, note=task.note, strip=laid.strip,
+            max_curvature=laid.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
+            strip=laid.strip,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
