@@ -33,6 +33,7 @@ from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
+_SET_BACK = 0.2  # seconds by which the clock may go back without being set back
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -111,6 +112,7 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
@@ -157,6 +159,7 @@ class Coordinator:
         with self._lock:
             try:
                 wanted = self._manoeuvre(name, overrides or {})
+                _check_time(snapshot)
                 if self._state is State.MOVING:
                     self._check_replaceable(snapshot)
                     self._replace(snapshot.time, name, wanted, answered, request_id)
@@ -200,8 +203,9 @@ class Coordinator:
             if self._state is not State.HELD or self._pursuit is None or self._request is not None:
                 answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
                 return
-            estimate = self._look(snapshot)
             try:
+                _check_time(snapshot)
+                estimate = self._look(snapshot)
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
@@ -293,6 +297,7 @@ class Coordinator:
             return self._decision
         with self._lock:
             cautions: list[Caution] = []
+            self._follow_clock(snapshot.time, "step")
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
@@ -317,6 +322,7 @@ class Coordinator:
         with self._lock:
             if not self._state.holds_fleet or self._pursuit is None or not np.isfinite(now):
                 return None
+            self._follow_clock(now, "commands")
             wanted = self._pursuit.schedule.at(now + self._history.effect_delay)
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
@@ -542,6 +548,20 @@ class Coordinator:
         """A moment to reckon with: the newest known one where the clock shows no number."""
         return now if np.isfinite(now) else max(self._decision.time, self._history.last[0] if self._history.last else 0)
 
+    def _follow_clock(self, now: float, who: str) -> None:
+        """A clock that was set back takes everything timed back with it: a stop in hand is not left for a later day."""
+        back = now - self._seen.get(who, now)
+        if back < -_SET_BACK:
+            self._seen = {each: time + back for each, time in self._seen.items()}
+            self._history.shift(back)
+            self._observer.shift(back)
+            if self._pursuit is not None:
+                self._pursuit.shift(back)
+            self._stop_over, self._planned_at = self._stop_over + back, self._planned_at + back
+            self._ended_at += back
+            self._decision = attrs.evolve(self._decision, time=self._decision.time + back)
+        self._seen[who] = now
+
     @property
     def _planned(self) -> Optional[Planned]:
         return self._pursuit.schedule.at if self._pursuit is not None and self._state.holds_fleet else None
@@ -694,6 +714,11 @@ def _figures(made: Reference) -> str:
     if np.isfinite(made.clearance):
         text += f", smallest clearance {made.clearance:.2f} m"
     return f"{text}; {made.task.note}" if made.task.note else text
+
+
+def _check_time(snapshot: Snapshot) -> None:
+    if not np.isfinite(snapshot.time):
+        raise RefusedError("it is not known what time it is", "check the clock")
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

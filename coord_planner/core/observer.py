@@ -74,6 +74,10 @@ class Observer:
         self._fleet, self._settings = fleet, settings
         self._lags = lags(fleet)
 
+    def shift(self, by: float) -> None:
+        """The clock was set: what was seen was seen so many seconds later by it."""
+        self._stamp = self._stamp + by
+
     def observe(self, poses: Mapping[str, PoseSample], planned: Planned | None) -> tuple[str, ...]:
         """Take in newer poses; returns the names of robots that jumped (they start afresh where they are)."""
         fresh = [
@@ -113,7 +117,7 @@ class Observer:
 
     def _growth(self, now: float, speed: np.ndarray) -> np.ndarray:
         """Two standard deviations of where a robot is, less those of a fresh estimate, shape (N,), metres."""
-        age = np.where(np.isfinite(self._stamp), np.maximum(now - self._stamp - _FRESH, 0.0), 0.0)
+        age = np.where(np.isfinite(self._stamp), np.clip(now - self._stamp - _FRESH, 0.0, _LONGEST), 0.0)
         drifted = _DRIFT[0] ** 2 * age + (np.sqrt(self._cov[:, 3, 3]) * np.nan_to_num(speed) * age) ** 2
         return 2.0 * np.sqrt(drifted)
 
@@ -149,7 +153,7 @@ class Observer:
 
     def _propagate(self, which: np.ndarray, to: np.ndarray, planned: Planned | None) -> None:
         before = self._mean[which].copy()
-        span = np.maximum(to - self._stamp[which], 0.0)
+        span = np.clip(to - self._stamp[which], 0.0, _LONGEST)
         mean, reached, way = self._predict(which, to, planned)
         jacobian = np.tile(np.eye(4), (len(which), 1, 1))
         moved = mean - before
