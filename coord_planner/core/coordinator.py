@@ -21,6 +21,7 @@ from .judge import SHORT, Judge, View
 from .manoeuvre import Manoeuvre, Task
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
+from .neighbours import Lookout
 from .observer import Estimate, Observer
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
@@ -113,6 +114,7 @@ class Coordinator:
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
         self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
+        self._lookout = Lookout()
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
@@ -133,6 +135,11 @@ class Coordinator:
             if self._pursuit is None:
                 return np.full((len(self._fleet), 3), np.nan)
             return self._pursuit.reference.task.ends
+
+    @property
+    def graph(self) -> NeighbourGraph:
+        """The neighbour graph over the robots that are driven."""
+        return self._graph
 
     @property
     def reference(self) -> Optional[Reference]:
@@ -166,6 +173,7 @@ class Coordinator:
                     return
                 self._check_free("begun")
                 estimate = self._look(snapshot)
+                self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except CoordPlannerError as error:
                 answered(Answer(False, str(error), request_id))
@@ -206,6 +214,7 @@ class Coordinator:
             try:
                 _check_time(snapshot)
                 estimate = self._look(snapshot)
+                self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
@@ -216,7 +225,7 @@ class Coordinator:
 
             def make() -> Reference:
                 left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since)
                 return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
@@ -302,6 +311,7 @@ class Coordinator:
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
+            self._look_for_neighbours(snapshot.time, estimate)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
@@ -327,8 +337,9 @@ class Coordinator:
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
             elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
+            rolling = self._history.rolling(now, manoeuvre.STAND_LAGS * self._fleet.response("speed_lag"))
             allowed, nonsense = gate.allow(
-                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps
+                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps, rolling
             )
             self._history.add(now, allowed)
             if nonsense.any() and self._state is State.MOVING:
@@ -475,6 +486,7 @@ class Coordinator:
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
 
         def make() -> Reference:
+            _check_forward(name, fleet, states)
             speed = float(states[:, SPEED_COMMAND].max())
             task = manoeuvre.work_out(
                 name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
@@ -501,7 +513,7 @@ class Coordinator:
             coupling = own.coupling
         if own is not None and own.alignment is not None:
             alignment = own.alignment
-        return attrs.evolve(task, coupling=coupling, alignment=alignment)
+        return attrs.evolve(task, coupling=coupling if task.alike else 0.0, alignment=alignment)
 
     def _take_over(self, request: _Request, outcome: Outcome, now: float) -> None:
         """A reference for the rest, or for another manoeuvre, is there or was refused."""
@@ -577,6 +589,12 @@ class Coordinator:
     def _look(self, snapshot: Snapshot) -> Estimate:
         self._observer.observe(self._believed(snapshot), self._planned)
         return self._observer.estimate(snapshot.time, self._planned)
+
+    def _look_for_neighbours(self, now: float, estimate: Estimate, at_once: bool = False) -> None:
+        """Take up the graph that the poses give, where it is they that give it."""
+        found = self._lookout.found(self._settings.neighbours, self._graph, estimate.states[:, :2], now, at_once)
+        if found is not None:
+            self.change(now, graph=found)
 
     def _settle(self, now: float) -> None:
         """Changes of state that time alone brings."""
@@ -711,14 +729,23 @@ class Coordinator:
 def _figures(made: Reference) -> str:
     """How long a manoeuvre takes and how near the robots come, in words."""
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
-    if np.isfinite(made.clearance):
-        text += f", smallest clearance {made.clearance:.2f} m"
+    text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
     return f"{text}; {made.task.note}" if made.task.note else text
 
 
 def _check_time(snapshot: Snapshot) -> None:
     if not np.isfinite(snapshot.time):
         raise RefusedError("it is not known what time it is", "check the clock")
+
+
+def _check_forward(name: str, fleet: Fleet, states: np.ndarray) -> None:
+    """A manoeuvre that replaces another begins with everyone driving forward or standing."""
+    backward = [robot for robot, speed in zip(fleet.names, states[:, SPEED_COMMAND]) if speed < -_STANDING]
+    if backward:
+        raise RefusedError(
+            f"{name}: {', '.join(backward)} will be driving backward when it would take over",
+            "ask again when all drive forward, or halt the fleet first",
+        )
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

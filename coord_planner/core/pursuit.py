@@ -97,13 +97,13 @@ class Pursuit:
         """Move the group on, and slow it when one of them is held up."""
         s_now = self.s(now)
         asked = self.reference.state(max(s_now, self.reference.plan.times[0]))
-        heading = asked[:, THETA]
-        ahead = np.stack([np.cos(heading), np.sin(heading)], axis=1)
+        heading, gear = asked[:, THETA], self.reference.task.directions(s_now)
+        ahead = gear[:, None] * np.stack([np.cos(heading), np.sin(heading)], axis=1)
         self.behind = np.sum((asked[:, :2] - estimate.states[:, :2]) * ahead, axis=1)
-        expected = np.minimum(estimate.states[:, SPEED_COMMAND], self.pace * asked[:, SPEED])
-        deficit = np.maximum(expected - estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
+        expected = np.minimum(gear * estimate.states[:, SPEED_COMMAND], self.pace * gear * asked[:, SPEED])
+        deficit = np.maximum(expected - gear * estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
         elapsed = max(now - self._updated, 0.0)
-        fastest = max(float(np.max(asked[:, SPEED])), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
+        fastest = max(float(np.max(np.abs(asked[:, SPEED]))), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
         fall = _FALL * float(np.min(fleet.limit("max_braking"))) / fastest
         self._s, self._time, self._updated = s_now, now, now
         if s_now >= 0.0:
