@@ -34,6 +34,7 @@ from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
+_ANOTHER_DAY = 10.0  # seconds between two looks at the clock in motion that are none of the planner's making
 _SET_BACK = 0.2  # seconds by which the clock may go back without being set back
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
@@ -557,8 +558,13 @@ class Coordinator:
         return self._settings.horizon.budget + float(self._history.effect_delay.max())
 
     def _moment(self, now: float) -> float:
-        """A moment to reckon with: the newest known one where the clock shows no number."""
-        return now if np.isfinite(now) else max(self._decision.time, self._history.last[0] if self._history.last else 0)
+        """A moment to reckon with: the newest known one where the clock shows no number.
+
+        In motion also where it shows another day than at the last tick: a stop is not put off until then.
+        """
+        newest = max(self._seen.values(), default=self._decision.time)
+        strange = self._state is State.MOVING and bool(self._seen) and abs(now - newest) > _ANOTHER_DAY
+        return newest if strange or not np.isfinite(now) else now
 
     def _follow_clock(self, now: float, who: str) -> None:
         """A clock that was set back takes everything timed back with it: a stop in hand is not left for a later day."""
