@@ -4,12 +4,13 @@
 ``task`` the outcome: a Task, which ``core.reference`` plans.
 """
 
-from .kinds import KINDS, End, EqualRadius, Form, InSuccession, Manoeuvre, Pivot, ToEnds, Wheel
+from .kinds import KINDS, End, EqualRadius, Form, InSuccession, Manoeuvre, Pivot, Sequence, Straight, ToEnds, Wheel
+from .sequence import parts_of
 from .task import Task, lay_out
 from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
-    "KINDS", "End", "EqualRadius", "Form", "InSuccession", "Manoeuvre", "Pivot", "Task", "ToEnds", "Wheel",
-    "eased_turn", "go_on", "lay_out", "work_out",
+    "KINDS", "End", "EqualRadius", "Form", "InSuccession", "Manoeuvre", "Pivot", "Sequence", "Straight", "Task",
+    "ToEnds", "Wheel", "eased_turn", "go_on", "lay_out", "parts_of", "work_out",
 ]
