@@ -582,7 +582,7 @@ class Coordinator:
         self, chain: Chain, answered: Answered = lambda _answer: None, request_id: str = ""
     ) -> None:
         assert self._pursuit is not None
-        before = self._pursuit.before(chain.expected)
+        before = self._pursuit.before(None if self._chain is None else self._chain.expected)
         old, ends = before.reference, before.at - float(before.reference.plan.times[0]) + before.reference.end
         self._ask("next", self._next_maker(chain, old.state(old.end)), answered, request_id, ends, chain=chain)
 
