@@ -7,7 +7,7 @@ from collections.abc import Mapping
 
 import attrs
 
-from ..core.manoeuvre import End, Manoeuvre, Sequence, ToEnds, Wheel
+from ..core.manoeuvre import End, Manoeuvre, RowEnd, Sequence, ToEnds, Wheel
 from ..errors import SettingsError
 from .complaints import nearest, shown
 from .connection import Connection
@@ -16,7 +16,7 @@ _FARTHEST = 1e6  # metres or degrees; beyond it lies a slip of the pen
 
 
 # The field of a kind that holds words of its own.
-WORDED: dict[type, str] = {ToEnds: "ends_deg", Wheel: "pivot", Sequence: "parts"}
+WORDED: dict[type, str] = {ToEnds: "ends_deg", Wheel: "pivot", RowEnd: "rows", Sequence: "parts"}
 
 
 def understood(manoeuvre: Manoeuvre, connections: Mapping[str, Connection]) -> Manoeuvre:
@@ -27,6 +27,8 @@ def understood(manoeuvre: Manoeuvre, connections: Mapping[str, Connection]) -> M
         about = manoeuvre.about()
         if about is not None and about.point is None and about.beside not in connections:
             raise _unknown(manoeuvre.pivot, about.beside, connections, "pivot")
+    if isinstance(manoeuvre, RowEnd):
+        _check_rows(manoeuvre, connections)
     return manoeuvre
 
 
@@ -41,6 +43,18 @@ def with_parts(sequence: Sequence, manoeuvres: Mapping[str, Manoeuvre]) -> Seque
             words = "is itself a sequence" if known else f"is not in manoeuvres.names{nearest(part, alone)}"
             raise SettingsError(f"{shown(part)} {words}", key="parts", allowed="'straight METRES', " + ", ".join(alone))
     return attrs.evolve(sequence, named={part: alone[part] for part in sequence.parts if part in alone})
+
+
+def _check_rows(manoeuvre: RowEnd, connections: Mapping[str, Connection]) -> None:
+    listed = manoeuvre.listed()
+    for entry, name in zip(manoeuvre.rows, listed):
+        if name not in connections:
+            raise _unknown(entry, name, connections, "rows")
+    if bool(listed) != (manoeuvre.order == "listed"):
+        raise SettingsError(
+            f"rows is {'given' if listed else 'empty'} and order is {manoeuvre.order!r}", key="rows",
+            allowed="a row for each robot with order 'listed', and none otherwise",
+        )
 
 
 def for_turning_points(manoeuvre: ToEnds, connections: Mapping[str, Connection]) -> ToEnds:

@@ -7,7 +7,7 @@ from typing import Optional
 import attrs
 
 from .manoeuvre import Manoeuvre, parts_of
-from .manoeuvre.sequence import Part
+from .manoeuvre.sequence import Part, ending_at
 from .reference import Reference
 from .silence import Silence
 
@@ -48,7 +48,7 @@ class Chain:
         new = parts_of(name, wanted)
         if following:  # which begins at the speed at which the part before it was to end
             speed = self.next[1].end_speed
-            new = (*new[:-1], (new[-1][0], attrs.evolve(new[-1][1], end_speed=speed)))
+            new = (*new[:-1], (new[-1][0], ending_at(new[-1][1], speed)))
         return Chain(self.name, (*self.parts[: self.index + 1], *new, *following), self.index)
 
     def progress(self, done: float) -> float:

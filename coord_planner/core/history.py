@@ -24,18 +24,32 @@ class CommandHistory:
     def __init__(self, command_delays: np.ndarray, period: float) -> None:
         self.effect_delay = np.asarray(command_delays, dtype=float) + period / 2  # shape (N,), seconds
         self._sent = self._nothing = Schedule(np.zeros(0), np.zeros((len(self.effect_delay), 0, 2)))
+        self._gear = np.zeros(len(self.effect_delay))
+        self._driven = np.full(len(self.effect_delay), -np.inf)  # when a speed was last sent, seconds
 
     def add(self, time: float, values: np.ndarray) -> None:
         """Remember what was sent: speeds and curvatures, shape (N, 2)."""
-        kept = self._sent
+        kept, values = self._sent, np.array(values, dtype=float)
         self._sent = Schedule(
             np.append(kept.times[1 - _KEPT :], time),
-            np.concatenate([kept.values[:, 1 - _KEPT :], np.asarray(values, dtype=float)[:, None]], axis=1),
+            np.concatenate([kept.values[:, 1 - _KEPT :], values[:, None]], axis=1),
         )
+        moving = np.abs(values[:, 0]) > 0.0
+        self._gear = np.where(moving, np.sign(values[:, 0]), self._gear)
+        self._driven = np.where(moving, time, self._driven)
+
+    def rolling(self, now: float, rest: np.ndarray) -> np.ndarray:
+        """Which way each robot may still be moving: 1, -1, or 0 when it was told to stand for ``rest`` seconds."""
+        return np.where(now - self._driven < rest - 1e-9, self._gear, 0.0)
 
     def clear(self) -> None:
         """Forget everything: nothing is in flight any more."""
         self._sent = self._nothing
+        self._driven[:] = -np.inf
+
+    def shift(self, by: float) -> None:
+        """The clock was set: what was sent was sent so many seconds later by it."""
+        self._sent = Schedule(self._sent.times + by, self._sent.values)
 
     @property
     def last(self) -> tuple[float, np.ndarray] | None:

@@ -300,8 +300,7 @@ def variable_bounds(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
         lower[name][:, 0] = upper[name][:, 0] = problem.initial[:, i]
     steer = np.broadcast_to(fleet.limit("max_curvature_rate")[:, None], (n, m))
     lower["curvature_rate"], upper["curvature_rate"] = -steer, steer
-    lower["acceleration"] = np.broadcast_to(-fleet.limit("max_braking")[:, None], (n, m))
-    upper["acceleration"] = np.broadcast_to(fleet.limit("max_acceleration")[:, None], (n, m))
+    lower["acceleration"], upper["acceleration"] = problem.rates_of_speed
     lower["short"], upper["short"] = np.zeros((len(shape.pairs), m)), np.full((len(shape.pairs), m), np.inf)
     lower["outside"], upper["outside"] = np.zeros((len(shape.fenced), m)), np.full((len(shape.fenced), m), np.inf)
     for name in ("over", "under"):

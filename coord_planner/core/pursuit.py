@@ -72,6 +72,11 @@ class Pursuit:
         self._plan_pace = 1.0  # of the plan being driven
         self.behind = np.zeros(len(fleet))
 
+    def shift(self, by: float) -> None:
+        """The clock was set: whatever was or is to be at a moment is so many seconds later by it."""
+        self._time, self._updated = self._time + by, self._updated + by
+        self.schedule = Schedule(self.schedule.times + by, self.schedule.values)
+
     def freeze(self, now: float) -> None:
         """The group leaves its reference for a stop: its progress stays what it is now."""
         self._s, self._time, self.progress.pace = self.s(now), now, 0.0
@@ -97,13 +102,13 @@ class Pursuit:
         """Move the group on, and slow it when one of them is held up."""
         s_now = self.s(now)
         asked = self.reference.state(max(s_now, self.reference.plan.times[0]))
-        heading = asked[:, THETA]
-        ahead = np.stack([np.cos(heading), np.sin(heading)], axis=1)
+        heading, gear = asked[:, THETA], self.reference.task.directions(s_now)
+        ahead = gear[:, None] * np.stack([np.cos(heading), np.sin(heading)], axis=1)
         self.behind = np.sum((asked[:, :2] - estimate.states[:, :2]) * ahead, axis=1)
-        expected = np.minimum(estimate.states[:, SPEED_COMMAND], self.pace * asked[:, SPEED])
-        deficit = np.maximum(expected - estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
+        expected = np.minimum(gear * estimate.states[:, SPEED_COMMAND], self.pace * gear * asked[:, SPEED])
+        deficit = np.maximum(expected - gear * estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
         elapsed = max(now - self._updated, 0.0)
-        fastest = max(float(np.max(asked[:, SPEED])), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
+        fastest = max(float(np.max(np.abs(asked[:, SPEED]))), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
         fall = _FALL * float(np.min(fleet.limit("max_braking"))) / fastest
         self._s, self._time, self._updated = s_now, now, now
         if s_now >= 0.0:

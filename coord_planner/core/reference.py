@@ -223,7 +223,7 @@ def end_target(task: Task, count: int) -> np.ndarray:
 
 
 def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
-    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M): speed up, hold, slow down."""
+    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M), backward negative."""
     return task.asked_speed(s)
 
 
@@ -234,7 +234,7 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     the fleet would swing out first. Where the line turns as one it is one speed for all, so that turn rates are
     priced and compared: the innermost's, whose turning they then are.
     """
-    each = np.maximum(asked, _LEAST_TURN_SPEED * task.asked[:, None])
+    each = np.maximum(np.abs(asked), _LEAST_TURN_SPEED * task.asked[:, None])
     return np.repeat(each.mean(axis=0, keepdims=True), len(each), axis=0) if task.turn_rates else each
 
 
@@ -258,7 +258,7 @@ def _problem(
         bounds=bounds_in_force(
             fleet, initial, times, task.arrival, task.end_speed,
             np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed)),
-            rules.max_lateral_acceleration, task.max_curvature,
+            rules.max_lateral_acceleration, task.max_curvature, task.gears(times[1:]),
         ),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),

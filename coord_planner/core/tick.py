@@ -21,6 +21,7 @@ from .watch import watch
 
 _SWERVE = np.radians(2.0)  # heading by which a robot may leave its reference for what may be noise
 _SPEEDS = [SPEED, SPEED_COMMAND]
+_OFF = 5e-3  # 1/m or m/s by which a command may be outside its limit
 _NEAR = 0.5  # metres or radians by which an unfinished plan may miss its end and still be driven
 
 
@@ -49,7 +50,8 @@ def pose_problem(
         initial: predicted state at ``time``, shape (N, 7). start: seconds of the manoeuvre at ``time``.
         time: seconds on the clock at the first node. pace: seconds of the manoeuvre per second of the clock.
         last: the tick before, when there is one for this reference.
-        behind: metres by which each robot is behind the group, shape (N,), as the group's progress sees it.
+        behind: metres by which each robot is behind the group in the direction in which it drives, shape (N,), as
+            the group's progress sees it.
     """
     task, rules = reference.task, settings.site_rules
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
@@ -57,8 +59,9 @@ def pose_problem(
     guess, steps = _guess(reference, initial, s, pace, last)
     planned = asked_speeds(task, s)
     top = np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed))
-    asked = _closing_up(s, times, planned * pace, behind, task, np.minimum(fleet.limit("max_speed")[:, None], top),
-                        settings)
+    gear = task.gears((s[:-1] + s[1:]) / 2)
+    own = np.where(gear < 0, -fleet.limit("min_speed")[:, None], fleet.limit("max_speed")[:, None])
+    asked = _closing_up(s, times, planned * pace, behind, task, gear, np.minimum(own, top), settings)
     target = _without_swerve(
         paced(reference.state(float(s[-1])), pace), reference.state(start), initial,
         np.abs(planned) @ np.diff(s), 2 * settings.poses.noise_xy,
@@ -71,7 +74,7 @@ def pose_problem(
         full_speed=task.asked * pace, target=target,
         bounds=bounds_in_force(
             fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, top,
-            rules.max_lateral_acceleration, task.max_curvature,
+            rules.max_lateral_acceleration, task.max_curvature, task.gears(s[1:]),
         ),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
         fences=reference.fencing.rows(fleet, settings, guess[:, :, POSE], task.speed),
@@ -124,16 +127,27 @@ def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencin
     Args:
         least_clearance: smallest exact clearance that counts as clear, metres. fencing: what is to be kept away from.
     """
-    if plan.solved:
-        return plan
-    if not np.isfinite(plan.rates).all():
+    if not (np.isfinite(plan.states).all() and np.isfinite(plan.rates).all()):
         return None
+    if plan.solved and _in_bounds(problem, plan):
+        return plan
     states, rates = rolled_out(problem, plan.rates)
     missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
     finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
     near = missed[:, :3].max() < _NEAR
     clear = near and finished.closest(1)[0] >= least_clearance
     return finished if clear and fencing.least(plan.fleet, finished.dense(1))[0] >= 0.0 else None
+
+
+def _in_bounds(problem: Problem, plan: Plan) -> bool:
+    """Whether the commands begin where they are and keep within the limits in force, whatever the solver says of it."""
+    commands, first = plan.states[:, 1:], plan.states[:, 0] - problem.initial
+    curvature, speed, bounds = commands[:, :, CURVATURE_COMMAND], commands[:, :, SPEED_COMMAND], problem.bounds
+    return bool(
+        np.abs(first[:, [CURVATURE_COMMAND, SPEED_COMMAND]]).max() < _OFF
+        and (np.abs(curvature) < bounds.max_curvature + _OFF).all()
+        and (speed < bounds.max_speed + _OFF).all() and (speed > bounds.min_speed - _OFF).all()
+    )
 
 
 def _without_swerve(
@@ -157,20 +171,21 @@ def _without_swerve(
 
 
 def _closing_up(
-    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, top: np.ndarray,
-    settings: Settings,
+    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task,
+    gear: np.ndarray, top: np.ndarray, settings: Settings,
 ) -> np.ndarray:
     """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
     The horizon's end alone would let them take the whole horizon for it. Nobody is asked for more than ``top``
-    m/s, shape (N, M). Within the dead band, where there
-    is only noise, nothing is changed and the reference is not biased.
+    m/s, shape (N, M), in the direction that ``gear`` says, nor to leave its place while it is to stand. Within the
+    dead band, where there is only noise, nothing is changed and the reference is not biased.
     """
     progress = settings.progress
     off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
-    wanted = asked + soon[None, :] * (off / progress.catch_up)[:, None]
-    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top, asked))
+    along = np.abs(asked)
+    wanted = along + soon[None, :] * (off / progress.catch_up)[:, None]
+    return np.where(gear == 0, asked, gear * np.clip(wanted, 0.0, np.maximum(top, along)))
 
 
 def _guess(

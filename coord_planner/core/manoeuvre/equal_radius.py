@@ -8,9 +8,9 @@ import numpy as np
 
 from ..fleet import weakest
 from .checks import check_bend, check_radius
+from .driving import COMFORT
 from .kinds import EqualRadius
 from .scene import Laid, Scene
-from .task import COMFORT
 from .ways import eased_turn, joined, straightened
 
 WIDER = 1.12  # a turn of equal radius is laid out this much wider than its tightest, to leave room for corrections

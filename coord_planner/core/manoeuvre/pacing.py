@@ -10,7 +10,8 @@ import numpy as np
 from ..caps import planned_caps
 from ..fleet import Fleet, weakest
 from ..settings import Settings
-from .task import COMFORT, Task
+from .driving import COMFORT
+from .task import Task
 
 _STEP = 0.05  # seconds
 _STANDING = 1e-3  # m/s
@@ -28,8 +29,8 @@ def paced(task: Task, fleet: Fleet, settings: Settings) -> Task:
     part = (capped / np.maximum(np.abs(speeds), _STANDING)).min(axis=0)
     if (part >= 1.0).all():
         return task
-    along = task.profile.distance(task.profile_time(moments))
-    asked = np.gradient(along, moments)
+    asked = np.abs(speeds).max(axis=0)
+    along = np.concatenate([[0.0], np.cumsum(np.diff(moments) * (asked[1:] + asked[:-1]) / 2)])
     comfort = [COMFORT * weakest(fleet.limit(name)) for name in ("max_acceleration", "max_braking")]
     speed = _reachable(along, asked * np.minimum(part, 1.0), *comfort)
     rate = np.where(asked > _STANDING, speed / np.maximum(asked, _STANDING), 1.0)
