@@ -34,6 +34,8 @@ from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
+_ANOTHER_DAY = 10.0  # seconds between two looks at the clock in motion that are none of the planner's making
+_SET_BACK = 0.2  # seconds by which the clock may go back without being set back
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -112,6 +114,7 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
         self._lookout = Lookout()
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
@@ -164,6 +167,7 @@ class Coordinator:
         with self._lock:
             try:
                 wanted = self._manoeuvre(name, overrides or {})
+                _check_time(snapshot)
                 if self._state is State.MOVING:
                     self._check_replaceable(snapshot)
                     self._replace(snapshot.time, name, wanted, answered, request_id)
@@ -190,6 +194,7 @@ class Coordinator:
     def halt(self, now: float, reason: str) -> Answer:
         """A controlled stop of everyone; the fleet is then held."""
         with self._lock:
+            now = self._moment(now)
             if self._state is State.PLANNING:
                 self._cancel("halted")
                 self._state, self._reason = State.IDLE, reason
@@ -207,9 +212,10 @@ class Coordinator:
             if self._state is not State.HELD or self._pursuit is None or self._request is not None:
                 answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
                 return
-            estimate = self._look(snapshot)
-            self._look_for_neighbours(snapshot.time, estimate, at_once=True)
             try:
+                _check_time(snapshot)
+                estimate = self._look(snapshot)
+                self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
@@ -248,6 +254,7 @@ class Coordinator:
             RefusedError: robots would join or leave while the fleet is not idle; nothing has changed.
         """
         with self._lock:
+            now = self._moment(now)
             self._check_members(fleet)
             self._settings = settings or self._settings
             self._fleet = fleet or self._fleet
@@ -269,7 +276,7 @@ class Coordinator:
     def deliver(self, outcome: Outcome, now: float) -> None:
         """The outcome of a job; outcomes that nobody waits for any more are dropped."""
         with self._lock:
-            request = self._request
+            request, now = self._request, self._moment(now)
             if request is None or request.token != outcome.token:
                 return
             self._request = None
@@ -295,9 +302,12 @@ class Coordinator:
     # The loop
 
     def step(self, snapshot: Snapshot) -> Decision:
-        """One tick: look, judge, plan, decide."""
+        """One tick: look, judge, plan, decide. Nothing is decided anew at a time that is no number."""
+        if not np.isfinite(snapshot.time):
+            return self._decision
         with self._lock:
             cautions: list[Caution] = []
+            self._follow_clock(snapshot.time, "step")
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
@@ -321,8 +331,9 @@ class Coordinator:
     def commands(self, now: float) -> Optional[dict[str, Command]]:
         """What to send now; None when nothing is to be sent."""
         with self._lock:
-            if not self._state.holds_fleet or self._pursuit is None:
+            if not self._state.holds_fleet or self._pursuit is None or not np.isfinite(now):
                 return None
+            self._follow_clock(now, "commands")
             wanted = self._pursuit.schedule.at(now + self._history.effect_delay)
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
@@ -546,6 +557,29 @@ class Coordinator:
         """From a snapshot to the first moment at which a new plan can still change what every robot does."""
         return self._settings.horizon.budget + float(self._history.effect_delay.max())
 
+    def _moment(self, now: float) -> float:
+        """A moment to reckon with: the newest known one where the clock shows no number.
+
+        In motion also where it shows another day than at the last tick: a stop is not put off until then.
+        """
+        newest = max(self._seen.values(), default=self._decision.time)
+        strange = self._state is State.MOVING and bool(self._seen) and abs(now - newest) > _ANOTHER_DAY
+        return newest if strange or not np.isfinite(now) else now
+
+    def _follow_clock(self, now: float, who: str) -> None:
+        """A clock that was set back takes everything timed back with it: a stop in hand is not left for a later day."""
+        back = now - self._seen.get(who, now)
+        if back < -_SET_BACK:
+            self._seen = {each: time + back for each, time in self._seen.items()}
+            self._history.shift(back)
+            self._observer.shift(back)
+            if self._pursuit is not None:
+                self._pursuit.shift(back)
+            self._stop_over, self._planned_at = self._stop_over + back, self._planned_at + back
+            self._ended_at += back
+            self._decision = attrs.evolve(self._decision, time=self._decision.time + back)
+        self._seen[who] = now
+
     @property
     def _planned(self) -> Optional[Planned]:
         return self._pursuit.schedule.at if self._pursuit is not None and self._state.holds_fleet else None
@@ -703,6 +737,11 @@ def _figures(made: Reference) -> str:
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
     text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
     return f"{text}; {made.task.note}" if made.task.note else text
+
+
+def _check_time(snapshot: Snapshot) -> None:
+    if not np.isfinite(snapshot.time):
+        raise RefusedError("it is not known what time it is", "check the clock")
 
 
 def _check_forward(name: str, fleet: Fleet, states: np.ndarray) -> None:

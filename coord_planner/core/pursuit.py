@@ -71,6 +71,11 @@ class Pursuit:
         self._plan_pace = 1.0  # of the plan being driven
         self.behind = np.zeros(len(fleet))
 
+    def shift(self, by: float) -> None:
+        """The clock was set: whatever was or is to be at a moment is so many seconds later by it."""
+        self._time, self._updated = self._time + by, self._updated + by
+        self.schedule = Schedule(self.schedule.times + by, self.schedule.values)
+
     def freeze(self, now: float) -> None:
         """The group leaves its reference for a stop: its progress stays what it is now."""
         self._s, self._time, self.progress.pace = self.s(now), now, 0.0
