@@ -370,6 +370,7 @@ def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
     """The limit that the robot meets for the largest part of the plan, in words."""
     limits, states, rates = fleet.robots[k].limits, plan.states[k, 1:], plan.rates[k]
     speed, bend = np.abs(states[:, SPEED_COMMAND]), np.abs(states[:, CURVATURE_COMMAND])
+    faster = rates[:, 1] * np.where(states[:, SPEED_COMMAND] < 0.0, -1.0, 1.0)
     use = {
         "max_curvature": bend / limits.max_curvature,
         "radius": bend / task.max_curvature,
@@ -377,8 +378,8 @@ def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
         "max_turn_rate": speed * bend / limits.max_turn_rate,
         "max_lateral_acceleration": speed**2 * bend / limits.max_lateral_acceleration,
         "max_curvature_rate": np.abs(rates[:, 0]) / limits.max_curvature_rate,
-        "max_acceleration": rates[:, 1] / limits.max_acceleration,
-        "max_braking": -rates[:, 1] / limits.max_braking,
+        "max_acceleration": faster / limits.max_acceleration,
+        "max_braking": -faster / limits.max_braking,
     }
     busy = {name: float(np.mean(part > 0.99)) for name, part in use.items()}
     name = max(busy, key=lambda key: busy[key])
