@@ -16,7 +16,9 @@ def parts_of(name: str, wanted: Manoeuvre) -> tuple[Part, ...]:
     if not isinstance(wanted, Sequence):
         return ((name, wanted),)
     following: tuple[Optional[str], ...] = (*wanted.parts[1:], None)
-    return tuple((part, _meant(part, wanted, _joint_speed(wanted, then))) for part, then in zip(wanted.parts, following))
+    return tuple(
+        (part, _meant(part, wanted, _joint_speed(wanted, then))) for part, then in zip(wanted.parts, following)
+    )
 
 
 def _joint_speed(wanted: Sequence, then: Optional[str]) -> float:
