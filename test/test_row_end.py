@@ -97,7 +97,7 @@ def test_who_comes_along_moving_waits_in_its_row_where_there_is_room_to_stop():
     assert made.waits[late] > 2.0 and sorted(made.waits)[0] == 0.0
     s = np.linspace(0.0, made.arrival, 600)
     poses, speeds, _ = made.guess(s)
-    assert speeds[:, 0] == pytest.approx([1.0] * 3)
+    assert speeds[:, 0] == pytest.approx([1.0] * 3, abs=0.02)
     stands = made.gears(s)[late] == 0
     assert np.abs(poses[late, stands, 0]).max() < 0.01  # where its row ends
     with pytest.raises(RefusedError, match="can wait only as long as it is in its row"):
