@@ -14,11 +14,14 @@ from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsErro
 from . import gate, ladder, manoeuvre, reference, rules, solver, stopping
 from .caps import caps
 from .case import PlannerCase
+from .fence import hazards
 from .fleet import Fleet
 from .graph import NeighbourGraph
+from .hazard import HazardWatch, Point, told
+from .hazard import nearest as hazards_near
 from .history import CommandHistory, Planned
 from .judge import SHORT, Judge, View
-from .manoeuvre import Manoeuvre, Task
+from .manoeuvre import Manoeuvre, Task, TurnAway
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
 from .neighbours import Lookout
@@ -116,6 +119,7 @@ class Coordinator:
         self._watchman = Judge()
         self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
         self._lookout = Lookout()
+        self._hazard = HazardWatch()
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
@@ -182,10 +186,12 @@ class Coordinator:
             # Nothing is known of what people sent the robots meanwhile; they must stand.
             self._history.clear()
             fleet, graph, settings, states = self._fleet, self._graph, self._settings, estimate.states
-            states[:, 3:] = 0.0
+            states[:, 3:], hazard = 0.0, self._hazard.point
 
             def make() -> Reference:
-                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops())
+                task = manoeuvre.work_out(
+                    name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops(), hazard=hazard
+                )
                 return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
@@ -223,10 +229,11 @@ class Coordinator:
             fleet, graph, settings = self._fleet, self._graph, self._settings
             old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
+            hazard = self._hazard.point
 
             def make() -> Reference:
                 left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since, hazard)
                 return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "")
@@ -264,6 +271,32 @@ class Coordinator:
             self._observer.configure(self._fleet, self._settings.poses)
             if self._state is State.MOVING and (self._request is None or self._request.kind == "change"):
                 self._remake(now)
+
+    def arm(self, name: str, now: float) -> Answer:
+        """Turn away from hazards by a manoeuvre, for ``hazard.armed_for`` seconds, instead of stopping."""
+        with self._lock:
+            wanted = self._manoeuvres.get(name)
+            if not isinstance(wanted, TurnAway):
+                return Answer(False, f"{name!r} is no manoeuvre that turns away; arm one of the kind turn_away")
+            seconds = self._settings.hazard.armed_for
+            self._hazard.armed, self._hazard.armed_until = name, self._moment(now) + seconds
+            return Answer(True, f"{name} is armed for {seconds:g} s; it begins when a hazard is seen in motion")
+
+    def hazard(self, x: float, y: float, now: float) -> Answer:
+        """A hazard is at a point of the fleet's frame. In motion everyone stops or, where it is armed, turns away.
+
+        A standing fleet is not moved by it; whoever begins or resumes keeps away from it until it has expired.
+        """
+        with self._lock:
+            now, point, watch = self._moment(now), (float(x), float(y)), self._hazard
+            if not np.isfinite(point).all():
+                return Answer(False, "that is no point")
+            watch.look(now)
+            watch.hear(point, now, self._settings)
+            if self._state is not State.MOVING or self._pursuit is None:
+                return Answer(True, f"kept away from for {self._settings.hazard.expires:g} s; nothing is moved by it")
+            self._face_hazard(now, self._observer.estimate(now, self._planned).states[:, POSE])
+            return Answer(True, watch.caution.text if watch.caution is not None else "")
 
     # Slow work
 
@@ -304,10 +337,11 @@ class Coordinator:
     def step(self, snapshot: Snapshot) -> Decision:
         """One tick: look, judge, plan, decide. Nothing is decided anew at a time that is no number."""
         if not np.isfinite(snapshot.time):
-            return self._decision
+            return attrs.evolve(self._decision, state=self._state, reason=self._reason)
         with self._lock:
             cautions: list[Caution] = []
             self._follow_clock(snapshot.time, "step")
+            self._hazard.look(snapshot.time)
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
@@ -316,6 +350,8 @@ class Coordinator:
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
+                self._face_hazard(snapshot.time, estimate.states[:, POSE])
+            if self._state is State.MOVING and self._pursuit is not None:
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     prepared = self._prepare(snapshot.time)
@@ -485,12 +521,14 @@ class Coordinator:
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
         old, leaves, at = self._branch(now)
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
+        hazard = self._hazard.point
 
         def make() -> Reference:
             _check_forward(name, fleet, states)
             speed = float(states[:, SPEED_COMMAND].max())
             task = manoeuvre.work_out(
-                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
+                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND],
+                hazard,
             )
             return reference.make(task, fleet, graph, settings, states)
 
@@ -500,6 +538,31 @@ class Coordinator:
         )
         if owed and self._request is not None:
             self._request = attrs.evolve(self._request, supersedes_change=True)
+
+    def _face_hazard(self, now: float, poses: np.ndarray) -> None:
+        """Stop for the hazard that is known, or turn away from it, where anybody is concerned; in motion."""
+        watch, pursuit = self._hazard, self._pursuit
+        if watch.point is None or watch.faced or pursuit is None:
+            return
+        near = hazards_near(watch.point, pursuit.reference, pursuit.s(now), poses, self._fleet, self._settings)
+        armed = watch.is_armed(now)
+        watch.caution = told(near, watch.point, self._settings, armed)
+        if armed and near.sees:
+            self._turn_away(now, watch.point)
+        elif near.concerned and not armed:
+            self._begin_stop(now, watch.caution.text, completed=False)
+
+    def _turn_away(self, now: float, point: Point) -> None:
+        """Begin what is armed; when it is refused everyone stops."""
+        watch, wanted = self._hazard, self._manoeuvres[self._hazard.armed]
+        watch.turned_for = point
+
+        def answered(answer: Answer) -> None:
+            if not answer.ok and self._state is State.MOVING:
+                self._begin_stop(max(self._seen.values(), default=now), f"turning away was refused: {answer.text}",
+                                 completed=False)
+
+        self._replace(now, watch.armed, wanted, answered, "")
 
     def _follow_changes(self, request: _Request, now: float) -> None:
         """What was changed while a reference was being made is followed at once."""
@@ -577,6 +640,7 @@ class Coordinator:
                 self._pursuit.shift(back)
             self._stop_over, self._planned_at = self._stop_over + back, self._planned_at + back
             self._ended_at += back
+            self._hazard.shift(back)
             self._decision = attrs.evolve(self._decision, time=self._decision.time + back)
         self._seen[who] = now
 
@@ -633,6 +697,7 @@ class Coordinator:
         found = self._watchman.look(View(
             snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
             1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
+            hazards(self._settings, self._hazard.point),
         ))
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
@@ -709,6 +774,8 @@ class Coordinator:
             spare, robot, area = tick.reference.fencing.least(self._fleet, tick.plan.dense(1))
             if spare < -SHORT:
                 cautions.append(rules.keep_out_ahead(self._settings, self._fleet.names[robot], area, -spare))
+        if self._hazard.caution is not None:
+            cautions.append(self._hazard.caution)
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],

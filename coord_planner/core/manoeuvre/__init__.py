@@ -5,13 +5,13 @@
 """
 
 from .driving import STAND_LAGS
-from .kinds import KINDS, End, EqualRadius, Form, InSuccession, Manoeuvre, Pivot, RowEnd, ToEnds, Wheel
+from .kinds import KINDS, End, EqualRadius, Form, InSuccession, Manoeuvre, Pivot, RowEnd, ToEnds, TurnAway, Wheel
 from .task import Task, lay_out
 from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
     "KINDS", "STAND_LAGS", "End", "EqualRadius", "Form", "InSuccession", "Manoeuvre", "Pivot", "RowEnd", "Task",
-    "ToEnds", "Wheel",
+    "ToEnds", "TurnAway", "Wheel",
     "eased_turn", "go_on", "lay_out", "work_out",
 ]
