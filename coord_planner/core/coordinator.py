@@ -39,6 +39,7 @@ _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
 _ANOTHER_DAY = 10.0  # seconds between two looks at the clock in motion that are none of the planner's making
 _SET_BACK = 0.2  # seconds by which the clock may go back without being set back
+_FURTHEST = 1e7  # metres from the origin of the frame; nothing that is further away is believed
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -289,8 +290,8 @@ class Coordinator:
         """
         with self._lock:
             now, point, watch = self._moment(now), (float(x), float(y)), self._hazard
-            if not np.isfinite(point).all():
-                return Answer(False, "that is no point")
+            if not np.abs(point).max() <= _FURTHEST:
+                return Answer(False, f"({x:g}, {y:g}) is no point of a site")
             watch.look(now)
             watch.hear(point, now, self._settings)
             if self._state is not State.MOVING or self._pursuit is None:
@@ -653,7 +654,7 @@ class Coordinator:
         return {
             name: pose for name, pose in snapshot.poses.items()
             if -poses.max_future <= snapshot.time - pose.stamp <= poses.max_age
-            and np.isfinite([pose.x, pose.y, pose.heading]).all()
+            and np.abs([pose.x, pose.y, pose.heading]).max() <= _FURTHEST
         }
 
     def _look(self, snapshot: Snapshot) -> Estimate:

@@ -262,7 +262,7 @@ class TurnAway:
         60.0, "angle by which those who see it turn, to the side away from it", "deg", above=0.0, maximum=180.0
     )
     after: float = parameter(
-        8.0, "how far they drive straight on after the turn, in which the others take their heading", "m",
+        10.0, "how far they drive straight on after the turn, in which the others take their heading", "m",
         minimum=0.0, maximum=1000.0,
     )
     speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
