@@ -17,7 +17,7 @@ from .case import PlannerCase
 from .fence import hazards
 from .fleet import Fleet
 from .graph import NeighbourGraph
-from .hazard import HazardWatch, Point, told
+from .hazard import FURTHEST, HazardWatch, Point, told
 from .hazard import nearest as hazards_near
 from .history import CommandHistory, Planned
 from .judge import SHORT, Judge, View
@@ -39,7 +39,6 @@ _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
 _ANOTHER_DAY = 10.0  # seconds between two looks at the clock in motion that are none of the planner's making
 _SET_BACK = 0.2  # seconds by which the clock may go back without being set back
-_FURTHEST = 1e7  # metres from the origin of the frame; nothing that is further away is believed
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -290,7 +289,7 @@ class Coordinator:
         """
         with self._lock:
             now, point, watch = self._moment(now), (float(x), float(y)), self._hazard
-            if not np.abs(point).max() <= _FURTHEST:
+            if not np.abs(point).max() <= FURTHEST:
                 return Answer(False, f"({x:g}, {y:g}) is no point of a site")
             watch.look(now)
             watch.hear(point, now, self._settings)
@@ -342,7 +341,7 @@ class Coordinator:
         with self._lock:
             cautions: list[Caution] = []
             self._follow_clock(snapshot.time, "step")
-            self._hazard.look(snapshot.time)
+            self._hazard.take(snapshot.hazard, snapshot.time, self._settings)
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
@@ -654,7 +653,7 @@ class Coordinator:
         return {
             name: pose for name, pose in snapshot.poses.items()
             if -poses.max_future <= snapshot.time - pose.stamp <= poses.max_age
-            and np.abs([pose.x, pose.y, pose.heading]).max() <= _FURTHEST
+            and np.abs([pose.x, pose.y, pose.heading]).max() <= FURTHEST
         }
 
     def _look(self, snapshot: Snapshot) -> Estimate:

@@ -10,12 +10,13 @@ import numpy as np
 from . import rules
 from .fence import Fencing, hazards
 from .fleet import Fleet
-from .messages import Caution
+from .messages import Caution, HazardPoint
 from .reference import Reference
 from .settings import Settings
 
 Point = tuple[float, float]
 
+FURTHEST = 1e7  # metres from the origin of the frame; nothing that is further away is believed
 _SAME = 1.0  # metres; a point that near to the last one is the same thing, seen again
 _STEP = 0.2  # seconds between the places of a way that are looked at
 
@@ -58,6 +59,12 @@ class HazardWatch:
         if self.point is None or self.turned_for is None:
             return False
         return float(np.hypot(*np.subtract(self.point, self.turned_for))) <= _SAME
+
+    def take(self, heard: Optional[HazardPoint], now: float, settings: Settings) -> None:
+        """What a snapshot says, and forget what has expired."""
+        if heard is not None and np.abs([heard.x, heard.y]).max() <= FURTHEST and heard.heard <= now:
+            self.hear((heard.x, heard.y), heard.heard, settings)
+        self.look(now)
 
     def look(self, now: float) -> None:
         """Forget what has expired."""
