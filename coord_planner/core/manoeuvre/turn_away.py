@@ -12,7 +12,7 @@ from .kinds import TurnAway
 from .scene import Laid, Scene
 from .ways import ways_to_ends
 
-_AHEAD = 1e-6  # sine of a bearing that is straight ahead
+_AHEAD = 1e-6  # metres to the side that are straight ahead
 
 
 def lay(_name: str, wanted: TurnAway, scene: Scene) -> Laid:
@@ -30,16 +30,16 @@ def lay(_name: str, wanted: TurnAway, scene: Scene) -> Laid:
             f"hazard.sight is {sight:g} m", "wait until one comes within sight, or raise hazard.sight",
         )
     ends = np.full((len(scene.fleet), 3), np.nan)
-    ends[seeing, 2] = scene.poses[seeing, 2] + _side(scene, off[seeing], seeing) * math.radians(wanted.angle_deg)
+    ends[seeing, 2] = scene.poses[seeing, 2] + _side(scene, off, distance) * math.radians(wanted.angle_deg)
     ways, ends = ways_to_ends(scene.fleet, scene.poses, ends, scene.neighbours, keep_winding=True)
     ways = tuple(attrs.evolve(way, segments=(*way.segments, (0.0, wanted.after))) for way in ways)
     seen_by = ", ".join(name for name, sees in zip(scene.fleet.names, seeing) if sees)
     return Laid(ends, ways, note=f"seen by {seen_by}")
 
 
-def _side(scene: Scene, off: np.ndarray, seeing: np.ndarray) -> float:
-    """1: to the left, -1: to the right: away from where the point lies to those who see it; left where it is ahead."""
-    heading = scene.poses[seeing, 2]
-    left = np.cos(heading) * off[:, 1] - np.sin(heading) * off[:, 0]
-    bearing = float(np.sum(left / np.maximum(np.hypot(off[:, 0], off[:, 1]), 1e-9)))
-    return -1.0 if bearing > _AHEAD else 1.0
+def _side(scene: Scene, off: np.ndarray, distance: np.ndarray) -> float:
+    """1: to the left, -1: to the right: away from where the point lies to who is nearest; left where it is ahead."""
+    k = int(np.argmin(distance))
+    heading = scene.poses[k, 2]
+    left = float(np.cos(heading) * off[k, 1] - np.sin(heading) * off[k, 0])
+    return -1.0 if left > _AHEAD else 1.0
