@@ -16,7 +16,7 @@ import numpy as np
 
 from coord_planner.core import graph as graphs
 from coord_planner.core import manoeuvre, reference
-from coord_planner.core.coordinator import Coordinator
+from coord_planner.core.coordinator import Coordinator, Solve
 from coord_planner.core.fast.ticks import TickSolve
 from coord_planner.core.fleet import Fleet, Footprint, Limits, Response, Robot
 from coord_planner.core.graph import NeighbourGraph
@@ -123,12 +123,12 @@ class Yard:
 
     def __init__(
         self, fleet: Fleet, poses: np.ndarray, manoeuvres: Mapping[str, Manoeuvre], with_settings: Settings,
-        graph: Optional[NeighbourGraph] = None, seed: int = 0, **imperfect: float,
+        graph: Optional[NeighbourGraph] = None, seed: int = 0, solve: Optional[Solve] = None, **imperfect: float,
     ) -> None:
         self.fleet, self.settings = fleet, with_settings
         graph = graphs.path(fleet.names) if graph is None else graph
         self.coordinator = Coordinator(
-            fleet, graph, with_settings, manoeuvres, budget=60.0, solve=TickSolve(time.perf_counter)
+            fleet, graph, with_settings, manoeuvres, budget=60.0, solve=solve or TickSolve(time.perf_counter)
         )
         starts = {name: tuple(pose) for name, pose in zip(fleet.names, poses)}
         self.machines = SimulatedFleet(
@@ -230,7 +230,9 @@ def excess(fleet: Fleet, times: np.ndarray, commands: np.ndarray) -> dict[str, f
     }
 
 
-def small_yard(count: int = 2, response: Response = LATE, **imperfect: float) -> Yard:
+def small_yard(
+    count: int = 2, response: Response = LATE, solve: Optional[Solve] = None, **imperfect: float
+) -> Yard:
     """Two carts, a short horizon: quick to plan for. ``corner``, ``led``, ``placed`` and ``passing`` can be begun."""
     manoeuvres: dict[str, Manoeuvre] = {
         "corner": EqualRadius(angle_deg=60.0, radius=3.0, speed=1.0),
@@ -240,5 +242,5 @@ def small_yard(count: int = 2, response: Response = LATE, **imperfect: float) ->
     }
     horizon = Horizon(intervals=12)
     return Yard(carts(count, response=response), abreast(count), manoeuvres, settings(horizon=attrs.asdict(horizon)),
-                **imperfect)
+                solve=solve, **imperfect)
 

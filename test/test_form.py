@@ -84,7 +84,7 @@ def test_laid_drives_keep_clear(shape, seed):
 def test_who_would_meet_waits_and_the_answer_says_so():
     made = task(Form(shape="file", spacing=2.8), abreast(3, 2.2))
     assert "waits until the others have driven" in made.note
-    waiting = [k for k, row in enumerate(made.marks) if row[3] == 0.0]
+    waiting = [k for k, drive in enumerate(made.drives) if drive.metres[3] == 0.0]
     assert waiting and len(waiting) < 3
     assert made.asked_speed(np.array([0.0, 0.25]))[waiting, 0] == pytest.approx(0.0)
 

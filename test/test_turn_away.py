@@ -70,7 +70,12 @@ def test_by_default_everyone_who_could_come_near_stops():
     run.run_to(State.HELD)
     assert run.standing() and all(value < 1e-6 for value in run.breaches().values())
     assert {caution.level for caution in found(run, "hazard seen")} == {Level.ERROR}
-    # near still, so a resume is refused or keeps away; far off it may go on once it has expired
+    # whoever resumes by it keeps away from it, and is not stopped by it again
+    assert run.resume().ok and run.coordinator.reference.task.hazard == POINT
+    run.run(1.5)
+    assert run.coordinator.state is State.MOVING
+    run.coordinator.halt(run.now, "halted")
+    run.run_to(State.HELD)
     run.run(7.0)
     assert run.resume().ok and run.coordinator.reference.task.hazard is None
 

@@ -14,6 +14,7 @@ from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsErro
 from . import gate, ladder, manoeuvre, reference, rules, solver, stopping
 from .caps import caps
 from .case import PlannerCase
+from .chain import Chain
 from .fence import hazards
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -65,12 +66,13 @@ class _Request:
     """A reference that is being made, and what becomes of it."""
 
     token: int
-    kind: str  # "begin", "resume", "replace" or "change"
+    kind: str  # "begin", "resume", "replace", "change" or "next"
     answered: Answered
     request_id: str
     made_for: tuple[Fleet, NeighbourGraph, Settings]
     takes_over_at: float = 0.0  # second of the last manoeuvre to come, of "replace" and "change"
     again: Callable[[float], None] = lambda _now: None  # asks once more, from a later moment
+    chain: Optional[Chain] = None  # the sequence that is under way once it is answered well
     supersedes_change: bool = False  # a change was on its way, to be made up for when this is refused
 
 
@@ -120,6 +122,7 @@ class Coordinator:
         self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
         self._lookout = Lookout()
         self._hazard = HazardWatch()
+        self._chain: Optional[Chain] = None
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
@@ -195,7 +198,28 @@ class Coordinator:
                 return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
-            self._ask("begin", make, answered, request_id)
+            self._ask("begin", make, answered, request_id, chain=_chain(name, wanted))
+
+    def then(
+        self, name: str, snapshot: Snapshot, *, overrides: Optional[Mapping[str, float]] = None, request_id: str = "",
+        answered: Answered = lambda _answer: None,
+    ) -> None:
+        """Ask for a manoeuvre after the one under way, in the place of what a sequence has next."""
+        with self._lock:
+            try:
+                wanted = self._manoeuvre(name, overrides or {})
+                if self._state is not State.MOVING or self._pursuit is None:
+                    raise RefusedError(f"nothing is under way: the fleet is {self._state.value}", f"begin {name}")
+                if self._request is not None and self._request.kind in ("change", "replace"):
+                    raise RefusedError("the rest of the manoeuvre is just being made anew", "ask again in a moment")
+            except CoordPlannerError as error:
+                answered(Answer(False, str(error), request_id))
+                return
+            if self._request is not None:
+                self._cancel(f"{name} was asked for instead")
+            task = self._pursuit.last().reference.task if self._chain is None else self._pursuit.reference.task
+            running = self._chain or Chain(task.name, ((task.name, self._manoeuvres.get(task.name, wanted)),))
+            self._ask_next(running.with_next(name, wanted), answered, request_id)
 
     def halt(self, now: float, reason: str) -> Answer:
         """A controlled stop of everyone; the fleet is then held."""
@@ -230,13 +254,16 @@ class Coordinator:
             old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
             hazard = self._hazard.point
+            if self._chain is not None and self._chain.more and since >= old.task.arrival - 1e-9:
+                self._ask("resume", self._next_maker(self._chain, states), answered, "", chain=self._chain.moved_on())
+                return
 
             def make() -> Reference:
                 left = reference.ways_left(old, states[:, POSE], since)
                 rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since, hazard)
                 return reference.make_again(rest, fleet, graph, settings, states)
 
-            self._ask("resume", make, answered, "")
+            self._ask("resume", make, answered, "", chain=self._chain)
 
     def abandon(self, now: float) -> Answer:
         """Give up a held manoeuvre; the fleet is idle afterwards and people may drive."""
@@ -269,7 +296,8 @@ class Coordinator:
             if self._fleet.names != self._decision.names:
                 self._start_afresh()
             self._observer.configure(self._fleet, self._settings.poses)
-            if self._state is State.MOVING and (self._request is None or self._request.kind == "change"):
+            if self._state is State.MOVING and (self._request is None or self._request.kind in ("change", "next")):
+                self._forget_next()
                 self._remake(now)
 
     def arm(self, name: str, now: float) -> Answer:
@@ -313,8 +341,15 @@ class Coordinator:
             if request is None or request.token != outcome.token:
                 return
             self._request = None
+            if request.kind == "next":
+                self._take_next(request, outcome, now)
+                return
             if request.kind in ("change", "replace"):
                 self._take_over(request, outcome, now)
+                return
+            if outcome.arrived and request.kind == "resume" and self._pursuit is not None and _goes_on(self._chain):
+                self._pursuit.freeze_at_end()
+                request.answered(Answer(True, "every robot is at the end of its part; resume for the next one"))
                 return
             if outcome.arrived and request.kind == "resume":
                 self._state, self._completed, self._ended_at, self._reason = State.ENDED, True, now, "completed"
@@ -327,7 +362,7 @@ class Coordinator:
                 request.answered(Answer(False, outcome.reason, request.request_id))
                 return
             self._start(outcome.reference, now)
-            self._silence = outcome.silence
+            self._silence, self._chain = outcome.silence, request.chain
             text = _figures(outcome.reference)
             request.answered(Answer(True, text, request.request_id))
             self._follow_changes(request, now)
@@ -354,6 +389,7 @@ class Coordinator:
             if self._state is State.MOVING and self._pursuit is not None:
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
+                    self._look_after_next(cautions)
                     prepared = self._prepare(snapshot.time)
         found = None if prepared is None else self._solve(prepared, snapshot.time)
         plan = None if found is None else found.plan
@@ -448,7 +484,7 @@ class Coordinator:
 
     def _ask(
         self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str, at: float = 0.0,
-        again: Callable[[float], None] = lambda _now: None,
+        again: Callable[[float], None] = lambda _now: None, chain: Optional[Chain] = None,
     ) -> None:
         self._token += 1
         token = self._token
@@ -471,7 +507,7 @@ class Coordinator:
             return Outcome(token, made, "", silence)
 
         self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings), at,
-                                 again)
+                                 again, chain)
         self._jobs = [job]
 
     def _try_out(self, made: Reference, fleet: Fleet, settings: Settings) -> None:
@@ -519,6 +555,7 @@ class Coordinator:
         if before is not None and before.kind == "replace":
             self._cancel(f"{name} was asked for instead")
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
+        self._forget_next()
         old, leaves, at = self._branch(now)
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
         hazard = self._hazard.point
@@ -534,7 +571,7 @@ class Coordinator:
 
         self._ask(
             "replace", make, answered, request_id, at,
-            lambda later: self._replace(later, name, wanted, answered, request_id),
+            lambda later: self._replace(later, name, wanted, answered, request_id), _chain(name, wanted),
         )
         if owed and self._request is not None:
             self._request = attrs.evolve(self._request, supersedes_change=True)
@@ -542,7 +579,7 @@ class Coordinator:
     def _face_hazard(self, now: float, poses: np.ndarray) -> None:
         """Stop for the hazard that is known, or turn away from it, where anybody is concerned; in motion."""
         watch, pursuit = self._hazard, self._pursuit
-        if watch.point is None or watch.faced or pursuit is None:
+        if watch.point is None or pursuit is None or watch.faced(pursuit.reference.task.hazard):
             return
         near = hazards_near(watch.point, pursuit.reference, pursuit.s(now), poses, self._fleet, self._settings)
         armed = watch.is_armed(now)
@@ -599,10 +636,79 @@ class Coordinator:
         else:
             pursuit.expect(Takeover(outcome.reference, request.takes_over_at))
             self._silence = outcome.silence
+            if replaces:
+                self._chain = request.chain
             in_time = max(pursuit.clock(request.takes_over_at) - now, 0.0)
             text = f"in {in_time:.1f} s {_figures(outcome.reference)}"
             request.answered(Answer(True, text, request.request_id))
             self._follow_changes(request, now)
+
+    def _next_maker(self, chain: Chain, states: np.ndarray) -> Callable[[], Reference]:
+        """Makes the reference of the next part from where the part before it ends."""
+        fleet, graph, settings, (name, wanted) = self._fleet, self._graph, self._settings, chain.next
+        speed, hazard = float(states[:, SPEED_COMMAND].max()), self._hazard.point
+
+        def make() -> Reference:
+            task = manoeuvre.work_out(
+                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), hazard=hazard
+            )
+            return reference.make(task, fleet, graph, settings, states)
+
+        return make
+
+    def _ask_next(
+        self, chain: Chain, answered: Answered = lambda _answer: None, request_id: str = ""
+    ) -> None:
+        assert self._pursuit is not None
+        before = self._pursuit.before(None if self._chain is None else self._chain.expected)
+        old, ends = before.reference, before.at - float(before.reference.plan.times[0]) + before.reference.end
+        self._ask("next", self._next_maker(chain, old.state(old.end)), answered, request_id, ends, chain=chain)
+
+    def _look_after_next(self, cautions: list[Caution]) -> None:
+        """Have the next part made, well before it begins."""
+        chain, pursuit = self._chain, self._pursuit
+        if chain is None or pursuit is None or not chain.more:
+            return
+        if chain.refused:
+            cautions.append(rules.next_refused(self._settings, chain.next[0], chain.refused))
+        elif self._request is None and chain.expected is None:
+            self._ask_next(chain)
+
+    def _take_next(self, request: _Request, outcome: Outcome, now: float) -> None:
+        """The reference of the next part is there or was refused."""
+        pursuit, chain = self._pursuit, request.chain
+        assert chain is not None
+        if self._state is not State.MOVING or pursuit is None:
+            request.answered(Answer(False, f"the fleet is {self._state.value}", request.request_id))
+        elif request.made_for != (self._fleet, self._graph, self._settings):
+            request.answered(Answer(False, "something was changed meanwhile; ask again", request.request_id))
+        elif outcome.reference is None:
+            if self._chain is not None and self._chain.parts == chain.parts:
+                self._chain = attrs.evolve(chain, refused=outcome.reason)
+            request.answered(Answer(False, f"{outcome.reason} (nothing has changed)", request.request_id))
+        else:
+            # Who stands at the joint already goes on as soon as it can.
+            at = max(request.takes_over_at, pursuit.s(now + self._settings.horizon.budget))
+            self._forget_next()
+            pursuit.expect(Takeover(outcome.reference, at))
+            self._chain = attrs.evolve(chain, expected=outcome.reference, silence=outcome.silence)
+            text = f"in {max(pursuit.clock(at) - now, 0.0):.1f} s {_figures(outcome.reference)}"
+            request.answered(Answer(True, text, request.request_id))
+
+    def _forget_next(self) -> None:
+        """The next part is to be made anew."""
+        if self._chain is not None and self._pursuit is not None and self._chain.expected is not None:
+            self._pursuit.forget(self._chain.expected)
+            self._chain = attrs.evolve(self._chain, expected=None)
+
+    def _wait_at_joint(self, now: float, pursuit: Pursuit, chain: Chain, standing: bool) -> None:
+        """The part is over and the next one is not there."""
+        if not standing:
+            self._begin_stop(now, f"{chain.next[0]} could not be planned in time", completed=False)
+        elif chain.refused:
+            pursuit.freeze(now)
+            self._state, self._reason = State.HELD, f"{chain.next[0]} cannot follow: {chain.refused}"
+            self._chain = attrs.evolve(chain, refused="")
 
     def _start(self, made: Reference, now: float) -> None:
         begins = now + self._lead_time()
@@ -683,7 +789,9 @@ class Coordinator:
         if pursuit.s(now - settle) < pursuit.reference.end:
             return
         standing = np.abs(pursuit.schedule.moment(now)[:, 0]).max() < _STANDING
-        if standing:
+        if self._chain is not None and self._chain.more:
+            self._wait_at_joint(now, pursuit, self._chain, bool(standing))
+        elif standing:
             self._completed, self._state, self._ended_at = True, State.ENDED, now
             self._reason = "completed"
         elif pursuit.reference.task.end_speed > 0.0:
@@ -708,7 +816,8 @@ class Coordinator:
         pursuit = self._pursuit
         assert pursuit is not None
         at = now + self._lead_time()
-        pursuit.swap_when_due(at)
+        if pursuit.swap_when_due(at) and self._chain is not None and pursuit.reference is self._chain.expected:
+            self._silence, self._chain = self._chain.silence, self._chain.moved_on()
         if pursuit.s(at) >= pursuit.reference.end:
             self._planned_at = now  # nothing is left to plan: the commands run out in zeros
             return None
@@ -758,7 +867,9 @@ class Coordinator:
         self._state, self._completed = State.STOPPING, completed
         self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
         pursuit.coming = ()
-        if self._request is not None and self._request.kind in ("change", "replace"):
+        if self._chain is not None:
+            self._chain = attrs.evolve(self._chain, expected=None)
+        if self._request is not None and self._request.kind in ("change", "replace", "next"):
             self._cancel("the fleet was stopped")
         return stop
 
@@ -767,7 +878,8 @@ class Coordinator:
     ) -> Decision:
         pursuit = self._pursuit
         tick = pursuit.tick if pursuit is not None else None
-        clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
+        ahead = pursuit.ahead if pursuit is not None else None
+        clearance, pair = (np.inf, (-1, -1)) if ahead is None else ahead.closest(1)
         if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
             cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
         if self._state is State.MOVING and tick is not None:
@@ -785,18 +897,30 @@ class Coordinator:
             return Decision(**common)
         task = pursuit.reference.task
         done = np.clip(pursuit.s(now) / pursuit.reference.end, 0.0, 1.0)
+        name = task.name
+        if self._chain is not None and len(self._chain.parts) > 1:
+            name, done = f"{self._chain.name}: {name}", self._chain.progress(done)
         return Decision(
-            **common, manoeuvre=task.name, progress=float(done),
+            **common, manoeuvre=name, progress=float(done),
             progress_rate=pursuit.pace if self._state is State.MOVING else 0.0,
             coupling=task.coupling, alignment=task.alignment, lag=pursuit.behind,
-            plan_times=np.zeros(0) if tick is None else tick.plan.times,
-            plan_poses=np.zeros((len(self._fleet), 0, 3)) if tick is None else tick.plan.poses,
+            plan_times=np.zeros(0) if ahead is None else ahead.times,
+            plan_poses=np.zeros((len(self._fleet), 0, 3)) if ahead is None else ahead.poses,
             clearance=float(clearance), clearance_pair=self._names(pair) if np.isfinite(clearance) else None,
             solve_time=0.0 if plan is None else plan.solve_time,
         )
 
     def _names(self, pair: tuple[int, int]) -> tuple[str, str]:
         return self._fleet.names[pair[0]], self._fleet.names[pair[1]]
+
+
+def _chain(name: str, wanted: Manoeuvre) -> Optional[Chain]:
+    parts = manoeuvre.parts_of(name, wanted)
+    return Chain(name, parts) if len(parts) > 1 else None
+
+
+def _goes_on(chain: Optional[Chain]) -> bool:
+    return chain is not None and chain.more
 
 
 def _figures(made: Reference) -> str:

@@ -53,12 +53,12 @@ class HazardWatch:
         """Keep a point."""
         self.point, self.until = point, now + settings.hazard.expires
 
-    @property
-    def faced(self) -> bool:
-        """Whether this is the point that is turned away from already."""
-        if self.point is None or self.turned_for is None:
+    def faced(self, planned: Optional[Point]) -> bool:
+        """Whether this is the point that is turned away from, or that the plan keeps away from (``planned``) already."""
+        if self.point is None:
             return False
-        return float(np.hypot(*np.subtract(self.point, self.turned_for))) <= _SAME
+        known = [other for other in (self.turned_for, planned) if other is not None]
+        return any(float(np.hypot(*np.subtract(self.point, other))) <= _SAME for other in known)
 
     def take(self, heard: Optional[HazardPoint], now: float, settings: Settings) -> None:
         """What a snapshot says, and forget what has expired."""

@@ -57,6 +57,10 @@ TABLE = (
         "the graph holds together by less than neighbours.warn_below",
     ),
     Row(
+        "next part refused", Level.WARN, Response.GO_ON,
+        "the next part of a sequence cannot be made; the fleet is held at the end of this one",
+    ),
+    Row(
         "predicted clearance short", Level.WARN, Response.GO_ON,
         "the plan cannot keep the smallest clearance everywhere",
     ),
@@ -151,6 +155,10 @@ def graph_split(settings: Settings, parts: Sequence[Sequence[str]]) -> Caution:
 def graph_thin(settings: Settings, holding: float) -> Caution:
     figures = f"second-smallest eigenvalue {holding:.3g}, {settings.neighbours.warn_below:g} is warned of"
     return _caution(settings, "graph about to split", "", Level.WARN, figures)
+
+
+def next_refused(settings: Settings, part: str, reason: str) -> Caution:
+    return _caution(settings, "next part refused", "", Level.WARN, f"{part} cannot follow: {reason}")
 
 
 def clearance_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:

@@ -102,6 +102,22 @@ def paced(states: np.ndarray, pace: float) -> np.ndarray:
     return scaled
 
 
+def through(plan: Plan, s: np.ndarray, at: float, following: Reference, pace: float) -> Plan:
+    """A plan with what follows behind the end of its manoeuvre, where that falls into the horizon.
+
+    An end holds the whole state, so what lies before it does not depend on what lies behind.
+
+    Args:
+        s: nodes of the plan in seconds of the manoeuvre. at: the second at which the reference that follows begins.
+    """
+    later = s > at + 1e-9
+    if not later.any():
+        return plan
+    states = plan.states.copy()
+    states[:, later] = paced(following.states(s[later] - at + float(following.plan.times[0])), pace)
+    return attrs.evolve(plan, states=states)
+
+
 def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencing = OPEN) -> Optional[Plan]:
     """A plan that may be driven: the solver's own, or, where it ran out of time, what its commands come to.
 

@@ -8,22 +8,24 @@ from typing import Any, Optional
 import attrs
 import numpy as np
 
+from ...errors import RefusedError
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, form, in_succession, row_end, to_ends, turn_away, wheel
+from . import equal_radius, form, in_succession, row_end, straight, to_ends, turn_away, wheel
 from .checks import check_end_speed, check_ends, check_hazard, check_speed, check_start
 from .detour import choices
 from .driving import drive_along
-from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, ToEnds, TurnAway, Wheel
+from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, Sequence, Straight, ToEnds, TurnAway, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
+from .sequence import parts_of
 from .task import Task, lay_out
 from .ways import preceded, straightened, ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
-    RowEnd: row_end.lay, Form: form.lay, TurnAway: turn_away.lay,
+    RowEnd: row_end.lay, Form: form.lay, Straight: straight.lay, TurnAway: turn_away.lay,
 }
 
 
@@ -39,9 +41,17 @@ def work_out(
         bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
         hazard: a point that everybody keeps away from; None when none is known.
 
+    Returns:
+        of a sequence the task of its first part; the others are worked out as well, from where those before end.
+
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
     """
+    if isinstance(manoeuvre, Sequence):
+        return _first_of(name, manoeuvre, Scene(
+            fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends,
+            hazard,
+        ))
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
@@ -62,6 +72,29 @@ def work_out(
         )
 
     return _on_the_site(laid, scene, speed, task)
+
+
+def _first_of(name: str, sequence: Sequence, scene: Scene) -> Task:
+    """The first part, when all can be laid out; after a part in which somebody only copies nothing more is known."""
+    first: Optional[Task] = None
+    parts = parts_of(name, sequence)
+    for i, (part, wanted) in enumerate(parts):
+        try:
+            task = work_out(
+                part, wanted, scene.fleet, scene.settings, scene.poses, scene.speed_now, scene.neighbours, scene.bends,
+                scene.hazard,
+            )
+        except RefusedError as refused:
+            raise RefusedError(f"{name}, part {i + 1} of {len(parts)}: {refused.reason}", refused.remedy) from refused
+        first = first or task
+        if np.isnan(task.ends).any():
+            break
+        past = wanted.end_speed * (task.duration - task.arrival)
+        heading = task.ends[:, 2]
+        ends = task.ends + past * np.column_stack([np.cos(heading), np.sin(heading), 0.0 * heading])
+        scene = attrs.evolve(scene, poses=ends, speed_now=wanted.end_speed, bends=np.zeros(len(ends)))
+    assert first is not None
+    return first
 
 
 def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
