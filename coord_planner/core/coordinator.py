@@ -552,8 +552,8 @@ class Coordinator:
     def _replace(self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str) -> None:
         """Make a reference for another manoeuvre, which leaves the running one from a moment ahead."""
         before = self._request
-        if before is not None and before.kind == "replace":
-            self._cancel(f"{name} was asked for instead")
+        if before is not None and before.kind == "replace" and before.answered is not answered:
+            self._cancel(f"{name} was asked for instead")  # and not only made again from a later moment
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
         self._forget_next()
         old, leaves, at = self._branch(now)
