@@ -54,7 +54,7 @@ class HazardWatch:
         self.point, self.until = point, now + settings.hazard.expires
 
     def faced(self, planned: Optional[Point]) -> bool:
-        """Whether this is the point that is turned away from already, or that the plan keeps away from (``planned``)."""
+        """Whether this is the point that is turned away from, or that the plan keeps away from (``planned``)."""
         if self.point is None:
             return False
         known = [other for other in (self.turned_for, planned) if other is not None]
