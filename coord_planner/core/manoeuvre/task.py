@@ -47,6 +47,7 @@ class Task:
         waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
             (N,), m/s; None where all set out at once and arrive together.
         alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
+        hazard: a point that everybody keeps away from; None when there is none.
         otherwise: another way to do the same, to be tried when this one cannot be kept.
     """
 
@@ -70,6 +71,7 @@ class Task:
     waits: Optional[np.ndarray] = None
     speeds: Optional[np.ndarray] = None
     alike: bool = True
+    hazard: Optional[tuple[float, float]] = None
     otherwise: Optional[Task] = None
 
     @property
