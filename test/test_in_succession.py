@@ -121,7 +121,7 @@ def test_what_is_no_file_or_too_tight_is_refused_with_figures(wanted, poses, wor
 @pytest.mark.parametrize("count, spacing, radius", [(3, 3.5, 2.0)])
 def test_a_rehearsal_ends_as_asked(count, spacing, radius):
     turn = {"kind": "in_succession", "radius": radius}
-    run = rehearse(site(in_file(count, spacing), {"file": turn}), "file", seed=count)
+    run = rehearse(site(in_file(count, spacing), {"file": turn}, horizon__intervals=12), "file", seed=count)
     figures = summary(run)
     assert figures["completed"] and figures["contacts"] == 0 and figures["limit_violations"] == 0
     assert figures["min_clearance_m"] >= 0.85
@@ -130,7 +130,8 @@ def test_a_rehearsal_ends_as_asked(count, spacing, radius):
 
 
 def test_a_file_that_was_halted_goes_on():
-    yard = fleets.Yard(carts(2, response=LATE), in_file(2), {"file": attrs.evolve(COUPLED, coupling=2.0)}, settings())
+    yard = fleets.Yard(carts(2, response=LATE), in_file(2), {"file": attrs.evolve(COUPLED, coupling=2.0)},
+                       settings(horizon={"intervals": 12}))
     assert yard.begin("file").ok
     yard.run(6.0)
     yard.coordinator.halt(yard.now, "asked")
