@@ -100,7 +100,8 @@ def _watch(rng: np.random.Generator, fleet: Fleet, guess: np.ndarray, contact: b
     nearest = outline.clearances(polygons, pairs).min(axis=1)
     kept = nearest + (rng.uniform(-0.02, 0.08, len(pairs)) if contact else -0.3)
     return Watch(
-        pairs, outline.separating_normals(polygons, pairs), np.repeat(np.maximum(kept, 0.02)[:, None], INTERVALS, axis=1)
+        pairs, outline.separating_normals(polygons, pairs),
+        np.repeat(np.maximum(kept, 0.02)[:, None], INTERVALS, axis=1),
     )
 
 

@@ -12,6 +12,7 @@ from ..config import Configuration
 from ..config.failures import kept
 from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
+from ..core.fence import Line
 from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
@@ -126,6 +127,7 @@ class _Loop:
         self._next_tick = self._next_pose = self.now = 0.0
         self._moving_since: Optional[float] = None
         self._measured: dict[str, PoseSample] = {}
+        self._strip: tuple[Line, ...] = ()
         self.over = False
 
     @property
@@ -139,6 +141,8 @@ class _Loop:
         self.coordinator.begin(manoeuvre, Snapshot(0.0, self._measured), overrides=overrides, answered=answers.append)
         self.work()
         _raise_if_refused(answers)
+        begun = self.coordinator.reference
+        self._strip = () if begun is None else begun.task.strip
         self._log.truth(0.0, self._simulated)
 
     def work(self) -> None:
@@ -202,7 +206,7 @@ class _Loop:
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
                 "seed": self._seed,
             },
-            site_rules=configuration.settings.site_rules,
+            site_rules=configuration.settings.site_rules, strip=self._strip,
         )
 
 

@@ -16,9 +16,8 @@ def parts_of(name: str, wanted: Manoeuvre) -> tuple[Part, ...]:
     if not isinstance(wanted, Sequence):
         return ((name, wanted),)
     following: tuple[Optional[str], ...] = (*wanted.parts[1:], None)
-    return tuple(
-        (part, _meant(part, wanted, _joint_speed(wanted, then))) for part, then in zip(wanted.parts, following)
-    )
+    joints = [_joint_speed(wanted, then) for then in following]
+    return tuple((part, _meant(part, wanted, speed)) for part, speed in zip(wanted.parts, joints))
 
 
 def _joint_speed(wanted: Sequence, then: Optional[str]) -> float:
