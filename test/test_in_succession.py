@@ -102,9 +102,10 @@ def test_rows_say_what_the_cost_counts():
 
 def test_a_stretch_is_shared_out_among_the_pieces_that_it_covers():
     bounds = np.array([0.0, 1.0, 3.0, 4.0])
-    assert succession.shares(bounds, 0.5, 2.5) == pytest.approx([0.25, 0.75, 0.0])
-    assert succession.shares(bounds, -2.0, 2.0) == pytest.approx([0.25, 0.25, 0.0])  # half of it lies before
-    assert succession.Steps(bounds, np.array([1.0, 2.0, 3.0])).mean(3.5, 4.5) == pytest.approx(1.5)
+    shared = succession.shares(bounds, np.array([0.5, -2.0]), np.array([2.5, 2.0]))  # half of the second lies before
+    assert shared == pytest.approx(np.array([[0.25, 0.75, 0.0], [0.25, 0.25, 0.0]]))
+    steps = succession.Steps(bounds, np.array([1.0, 2.0, 3.0]))
+    assert steps.integral(np.array([3.5, -1.0]), np.array([4.5, 2.0])) == pytest.approx([1.5, 3.0])
 
 
 @pytest.mark.parametrize("wanted, poses, words", [
