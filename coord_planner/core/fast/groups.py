@@ -80,7 +80,8 @@ def whole(problem: Problem, parts: list[tuple[Group, Problem, Plan]]) -> Plan:
     vectors = np.zeros(variables.size), np.zeros(variables.size), np.zeros(rows.size)
     for group, part, plan in parts:
         own, own_rows = ocp.variable_blocks(part.shape), ocp.row_blocks(part.shape)
-        pieces = (variables, own, plan.vector), (variables, own, plan.multipliers[0]), (rows, own_rows, plan.multipliers[1])
+        bounds, row_forces = plan.multipliers
+        pieces = (variables, own, plan.vector), (variables, own, bounds), (rows, own_rows, row_forces)
         for vector, (layout, small, piece) in zip(vectors, pieces):
             _put(layout, small, piece, group, vector)
     plans = [plan for _, _, plan in parts]
