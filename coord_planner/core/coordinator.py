@@ -26,8 +26,8 @@ from .manoeuvre import Manoeuvre, Task, TurnAway
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
 from .neighbours import Lookout
-from .parameter import describe
 from .observer import Estimate, Observer
+from .parameter import describe
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared, Pursuit, Takeover
