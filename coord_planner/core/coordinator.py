@@ -11,18 +11,19 @@ import attrs
 import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
-from . import gate, manoeuvre, reference, rules, solver, stopping
+from . import gate, manoeuvre, members, reference, rules, solver, stopping
 from .case import PlannerCase
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
 from .judge import SHORT, Judge, View
 from .manoeuvre import Manoeuvre, Task
+from .membership import Membership, overlooked
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
 from .observer import Estimate, Observer
 from .plan import Plan
-from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
+from .problem import POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared, Pursuit, Takeover
 from .reference import Reference
 from .settings import Settings, SiteRules
@@ -92,6 +93,7 @@ class Coordinator:
         self._solve_tick, self._refused = solve, refused
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
+        self._members = Membership(fleet)
         self._budget = settings.horizon.budget if budget is None else budget
         self._period = 1.0 / settings.commands.rate
         self._history = CommandHistory(fleet.response("command_delay"), self._period)
@@ -135,11 +137,20 @@ class Coordinator:
         """The reference in force."""
         return self._pursuit.reference if self._pursuit is not None else None
 
-    def cannot_change_members(self) -> str:
-        """Why no robot can join or leave just now; "" when it can."""
-        if self._state in (State.IDLE, State.ENDED):
-            return ""
-        return f"robots join or leave only while the fleet is idle, and it is {self._state.value}"
+    @property
+    def taken_over(self) -> int:
+        """How many references have taken over since the manoeuvre in hand began or was resumed."""
+        return self._pursuit.taken_over if self._pursuit is not None else 0
+
+    def cannot_join(self, fleet: Fleet, graph: Optional[NeighbourGraph] = None) -> str:
+        """Why the fleet cannot become this one just now, in words; "" when it can.
+
+        In motion, whoever joins must stand, be ready, have been seen by the last steps, and have a neighbour.
+        """
+        with self._lock:
+            if self._resting:
+                return ""
+            return self._members.cannot_join(fleet, self._fleet.names, graph or self._graph, self._settings)
 
     # Requests
 
@@ -160,6 +171,7 @@ class Coordinator:
                     self._replace(snapshot.time, name, wanted, answered, request_id)
                     return
                 self._check_free("begun")
+                self._adopt()
                 estimate = self._look(snapshot)
                 self._check_fit(estimate, snapshot)
             except CoordPlannerError as error:
@@ -167,7 +179,7 @@ class Coordinator:
                 return
             # Nothing is known of what people sent the robots meanwhile; they must stand.
             self._history.clear()
-            fleet, graph, settings, states = self._fleet, self._graph, self._settings, estimate.states
+            fleet, graph, settings, states = self._fleet, self._neighbours, self._settings, estimate.states
             states[:, 3:] = 0.0
 
             def make() -> Reference:
@@ -197,22 +209,22 @@ class Coordinator:
             if self._state is not State.HELD or self._pursuit is None or self._request is not None:
                 answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
                 return
+            self._members.waiting.clear()
+            self._grow()
             estimate = self._look(snapshot)
             try:
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
                 return
-            fleet, graph, settings = self._fleet, self._graph, self._settings
+            fleet, graph, settings, driving = self._fleet, self._neighbours, self._settings, self._driving
             old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
-
-            def make() -> Reference:
-                left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left)
-                return reference.make_again(rest, fleet, graph, settings, states)
-
-            self._ask("resume", make, answered, "")
+            wanted = self._manoeuvres.get(old.task.name)
+            self._ask(
+                "resume", lambda: members.resumed(old, since, fleet, graph, settings, states, driving, wanted),
+                answered, "",
+            )
 
     def abandon(self, now: float) -> Answer:
         """Give up a held manoeuvre; the fleet is idle afterwards and people may drive."""
@@ -231,21 +243,28 @@ class Coordinator:
 
         Limits bind the gate and the next tick at once. In motion the rest of the reference is made anew and
         swapped in when the group reaches the moment from which it was made; the decision then shows the
-        coupling in force.
+        coupling in force. Who leaves in motion comes to a stand and is let go; who joins stands until it is driven.
+
+        Args:
+            fleet: everybody who is wanted. graph: neighbours among all of them.
 
         Raises:
-            RefusedError: robots would join or leave while the fleet is not idle; nothing has changed.
+            RefusedError: a robot cannot join just now; nothing has changed.
         """
         with self._lock:
-            self._check_members(fleet)
+            reason = self.cannot_join(fleet, graph) if fleet is not None else ""
+            if reason:
+                raise RefusedError(reason, "see to it and ask again, or let it join while the fleet is idle")
             self._settings = settings or self._settings
-            self._fleet = fleet or self._fleet
-            self._graph = (graph or self._graph).relative_to(self._fleet.names)
-            if self._fleet.names != self._decision.names:
-                self._start_afresh()
+            self._members.want(fleet or self._members.wanted)
+            self._fleet = members.renewed(self._fleet, self._members.wanted)
+            everybody = members.grown(self._fleet, self._members.wanted).names
+            self._graph = (graph or self._graph).relative_to(everybody)
+            if self._resting:
+                self._adopt()
             self._observer.configure(self._fleet, self._settings.poses)
-            if self._state is State.MOVING and (self._request is None or self._request.kind == "change"):
-                self._remake(now)
+            if self._state is State.MOVING:
+                self._remake_if_free(now)
 
     # Slow work
 
@@ -287,12 +306,15 @@ class Coordinator:
         """One tick: look, judge, plan, decide."""
         with self._lock:
             cautions: list[Caution] = []
+            self._follow_members(snapshot)
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
+            estimate = overlooked(estimate, self._fleet, self._outside)
             self._settle(snapshot.time)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
-                self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
+                outside = [self._fleet.index(name) for name in self._outside]
+                self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings, outside)
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     prepared = self._prepare(snapshot.time)
@@ -300,7 +322,8 @@ class Coordinator:
         with self._lock:
             if prepared is not None and self._state is State.MOVING and self._pursuit is not None:
                 self._drive(prepared, plan, snapshot.time)
-            self._decision = self._decide(snapshot.time, estimate, plan, cautions)
+            if len(estimate.age) == len(self._fleet):  # otherwise others are wanted since
+                self._decision = self._decide(snapshot.time, estimate, plan, cautions)
             return self._decision
 
     def commands(self, now: float) -> Optional[dict[str, Command]]:
@@ -318,22 +341,97 @@ class Coordinator:
                 self._begin_stop(now, "a plan held numbers that are not finite", completed=False)
             return {
                 name: Command(float(speed), float(curvature))
-                for name, (speed, curvature) in zip(self._fleet.names, allowed)
+                for name, (speed, curvature) in zip(self._fleet.names, allowed) if name not in self._members.loose
             }
 
     # Requests, inside
 
-    def _check_members(self, fleet: Optional[Fleet]) -> None:
-        reason = self.cannot_change_members()
-        if fleet is not None and fleet.names != self._fleet.names and reason:
-            raise RefusedError(reason, "halt and abandon it first")
-
-    def _start_afresh(self) -> None:
-        """Other robots: nothing that was known of the old ones counts."""
+    def _adopt(self) -> None:
+        """While the fleet rests, others are taken as they are wanted: nothing that was known of the old ones counts."""
+        wanted = self._members.wanted
+        if wanted.names == self._fleet.names:
+            return
+        self._members.start_afresh(wanted)
+        self._fleet, self._graph = wanted, self._graph.relative_to(wanted.names)
         self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
         self._observer = Observer(self._fleet, self._settings.poses, self._history)
-        self._pursuit, self._state, self._reason = None, State.IDLE, ""
-        self._decision = Decision(self._decision.time, State.IDLE, self._fleet.names)
+        self._pursuit, self._state = None, State.IDLE
+        self._decision = Decision(
+            self._decision.time, State.IDLE, self._fleet.names, self._reason, completed=self._completed
+        )
+
+    @property
+    def _resting(self) -> bool:
+        return self._state in (State.IDLE, State.ENDED)
+
+    @property
+    def _driving(self) -> tuple[str, ...]:
+        return self._members.driving(self._fleet.names)
+
+    @property
+    def _outside(self) -> tuple[str, ...]:
+        """Carried only as obstacles: who leaves, and who does not drive yet."""
+        driven = self._members.under_command(self._fleet.names)
+        return tuple(name for name in self._fleet.names if name not in driven)
+
+    @property
+    def _neighbours(self) -> NeighbourGraph:
+        """The graph as it counts for a new reference, over all rows."""
+        return members.among(self._graph, self._fleet.names, self._driving)
+
+    def _grow(self) -> None:
+        """Rows for those who are wanted and not carried yet; they stand until they are driven."""
+        pursuit, fleet = self._pursuit, members.grown(self._fleet, self._members.wanted)
+        new = fleet.names[len(self._fleet):]
+        there = [self._members.bystanders.pose(name) for name in new]
+        if pursuit is None or not new or any(pose is None for pose in there):
+            return
+        self._history.grow(fleet.response("command_delay"), self._period)
+        self._observer.grow(fleet)
+        pursuit.grow(fleet, self._settings, np.concatenate([np.zeros((len(self._fleet), 3)), np.array(there)]))
+        self._fleet = fleet
+        self._members.loose |= frozenset(new)
+        self._observer.loose = self._members.loose
+
+    def _follow_members(self, snapshot: Snapshot) -> None:
+        """Who joins gets a row, and who has left and stands is let go."""
+        self._members.bystanders.see(snapshot)
+        if self._state is State.IDLE:
+            self._adopt()
+        pursuit, before = self._pursuit, len(self._fleet)
+        if pursuit is None or not self._state.holds_fleet:
+            return
+        if self._state is State.MOVING:
+            self._grow()
+            for name in self._members.joining(self._fleet.names):
+                reason = self._members.bystanders.unfit(name, self._settings.poses)
+                if reason:
+                    self._put_off((name,), reason, snapshot.time)
+            if len(self._fleet) > before:
+                self._remake_if_free(snapshot.time)
+        self._let_go(snapshot.time, pursuit)
+
+    def _let_go(self, now: float, pursuit: Pursuit) -> None:
+        speeds, still = pursuit.schedule.moment(now)[:, 0], self._state in (State.HELD, State.ENDED)
+        standing = {
+            name: bool(abs(speeds[k]) < _STANDING)
+            for k, name in enumerate(self._fleet.names)
+            if name not in (*self._driving, *self._members.loose) and (still or k in pursuit.reference.task.stands)
+        }
+        rest = self._settings.commands.zeros_after_end + _SETTLE_LAGS * float(lags(self._fleet).max())
+        rows = [self._fleet.index(name) for name in self._members.let_go(now, standing, rest)]
+        if rows:
+            self._history.forget(rows)
+            pursuit.schedule.values[rows] = 0.0
+            self._observer.loose = self._members.loose
+
+    def _put_off(self, names: tuple[str, ...], reason: str, now: float) -> None:
+        """Robots that cannot join the running manoeuvre wait until the fleet is idle; the others go on."""
+        self._members.put_off(names, reason)
+        for name in names:
+            if self._pursuit is not None:
+                self._pursuit.drop_drivers_of(self._fleet.index(name))
+        self._remake_if_free(now)
 
     def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
         if name not in self._manoeuvres:
@@ -360,23 +458,26 @@ class Coordinator:
 
     def _check_fit(self, estimate: Estimate, snapshot: Snapshot) -> None:
         """Every robot has a fresh pose and may be driven."""
+        driving = self._driving
         stale = [
-            name for name, age in zip(self._fleet.names, estimate.age) if not age <= self._settings.poses.max_age
+            name for name, age in zip(self._fleet.names, estimate.age)
+            if name in driving and not age <= self._settings.poses.max_age
         ]
         if stale:
             raise RefusedError(
                 f"no fresh pose of {', '.join(stale)} ({self._settings.poses.max_age:g} s allowed)",
                 "check localisation, the topic, its frame and the clocks",
             )
-        if len(self._fleet) > 1 and not self._graph.connected and not self._settings.coupling.may_split:
-            words = " | ".join(" ".join(part) for part in self._graph.components())
+        graph = self._graph.relative_to(driving)
+        if len(driving) > 1 and not graph.connected and not self._settings.coupling.may_split:
+            words = " | ".join(" ".join(part) for part in graph.components())
             raise RefusedError(
                 f"the neighbour graph falls into parts that do not copy each other: {words}",
                 "join them by an edge, or set coupling.may_split",
             )
         if snapshot.other_planner:
             raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
-        unready = sorted((snapshot.not_ready | snapshot.silent) & set(self._fleet.names))
+        unready = sorted((snapshot.not_ready | snapshot.silent) & set(driving))
         if unready:
             raise RefusedError(f"{', '.join(unready)} not ready to be driven", "make them ready or disable them")
 
@@ -434,16 +535,22 @@ class Coordinator:
         at = max(pursuit.s(now + self._settings.horizon.lead), last.at)
         return last.reference, at - earlier, at
 
+    def _remake_if_free(self, now: float) -> None:
+        """Make the rest anew, unless what is being made is looked at again when it is there."""
+        if self._request is None or self._request.kind == "change":
+            self._remake(now)
+
     def _remake(self, now: float) -> None:
         """Make the rest of the manoeuvre anew, under what is now in force."""
         old, leaves, at = self._branch(now)
         if leaves > old.end - 2 * self._settings.horizon.interval:
+            self._members.put_off(self._members.joining(self._fleet.names), "the running manoeuvre is nearly over")
             return
-        fleet, graph, settings = self._fleet, self._graph, self._settings
-        task = self._in_force(old.task)
+        fleet, graph, settings, driving = self._fleet, self._neighbours, self._settings, self._driving
+        task, wanted = self._in_force(old.task), self._manoeuvres.get(old.task.name)
         self._ask(
-            "change", lambda: reference.make_rest(task, fleet, graph, settings, old, leaves), lambda _a: None, "", at,
-            self._remake,
+            "change", lambda: members.rest(task, fleet, graph, settings, old, leaves, driving, wanted),
+            lambda _a: None, "", at, self._remake,
         )
 
     def _replace(self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str) -> None:
@@ -453,17 +560,12 @@ class Coordinator:
             self._cancel(f"{name} was asked for instead")
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
         old, leaves, at = self._branch(now)
-        fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
-
-        def make() -> Reference:
-            speed = float(states[:, SPEED_COMMAND].max())
-            task = manoeuvre.work_out(
-                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
-            )
-            return reference.make(task, fleet, graph, settings, states)
-
+        fleet, settings, states = self._fleet, self._settings, old.state(leaves)
+        driving = self._members.under_command(fleet.names)
+        graph = members.among(self._graph, fleet.names, driving)
         self._ask(
-            "replace", make, answered, request_id, at,
+            "replace", lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving),
+            answered, request_id, at,
             lambda later: self._replace(later, name, wanted, answered, request_id),
         )
         if owed and self._request is not None:
@@ -471,7 +573,12 @@ class Coordinator:
 
     def _follow_changes(self, request: _Request, now: float) -> None:
         """What was changed while a reference was being made is followed at once."""
-        if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
+        pursuit = self._pursuit
+        if pursuit is None:
+            return
+        stands = {self._fleet.names[k] for k in pursuit.last().reference.task.stands}
+        others = stands != set(self._fleet.names) - set(self._driving)
+        if others or request.made_for != (self._fleet, self._graph, self._settings):
             self._remake(now)
 
     def _in_force(self, task: Task) -> Task:
@@ -490,19 +597,23 @@ class Coordinator:
         if self._state is not State.MOVING or pursuit is None:
             reason = f"{self._state.value} before it could take over; begin it again when the fleet is idle"
             request.answered(Answer(False, f"the fleet was {reason}", request.request_id))
+        elif outcome.reference is None and not replaces and self._members.joining(self._fleet.names):
+            self._put_off(self._members.joining(self._fleet.names), outcome.reason, now)
         elif outcome.reference is None:
             if not replaces:
                 self._refused_change = outcome.reason
             request.answered(Answer(False, f"{outcome.reason} (the running manoeuvre goes on)", request.request_id))
             if request.supersedes_change:
                 self._remake(now)
-            else:
+            elif replaces or request.made_for != (self._fleet, self._graph, self._settings):
                 self._follow_changes(request, now)
         elif pursuit.s(now + self._settings.horizon.budget) > request.takes_over_at:
             self._request = request if request.supersedes_change else None
             request.again(now)  # it starts from a moment that has passed: make it again from a later one
         else:
-            pursuit.expect(Takeover(outcome.reference, request.takes_over_at))
+            poses = self._observer.estimate(now, self._planned).states[:, POSE]
+            made = members.extended(outcome.reference, self._fleet, self._settings, poses)
+            pursuit.expect(Takeover(made, request.takes_over_at))
             self._silence = outcome.silence
             in_time = max(pursuit.clock(request.takes_over_at) - now, 0.0)
             text = f"in {in_time:.1f} s {_figures(outcome.reference)}"
@@ -515,9 +626,15 @@ class Coordinator:
         values = np.zeros((len(self._fleet), 2)) if last is None else last[1]
         self._pursuit = Pursuit(made, begins, 0.0, values, self._fleet)
         self._state, self._reason, self._stop = State.MOVING, "", None
+        self._take_up(made)
         # Whoever watches for decisions that stay away counts from here, not from one of long ago.
         self._decision = attrs.evolve(self._decision, time=now)
         self._planned_at, self._refused_change, self._watchman = begins, "", Judge()
+
+    def _take_up(self, made: Reference) -> None:
+        """Whoever a reference drives is under command from now on."""
+        self._members.take_up(self._fleet.names[k] for k in made.task.stands)
+        self._observer.loose = self._members.loose
 
     # The loop, inside
 
@@ -569,9 +686,12 @@ class Coordinator:
         pursuit = self._pursuit
         assert pursuit is not None
         at = snapshot.time + float(self._history.effect_delay.max())
+        outside = frozenset(self._outside)
+        driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
         found = self._watchman.look(View(
-            snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
+            snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
             1.0 / self._settings.horizon.rate, self._planned_at, self._refused_change, self._silence,
+            outside, dict(self._members.waiting),
         ))
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
@@ -582,7 +702,8 @@ class Coordinator:
         pursuit = self._pursuit
         assert pursuit is not None
         at = now + self._lead_time()
-        pursuit.swap_when_due(at)
+        if pursuit.swap_when_due(at):
+            self._take_up(pursuit.reference)
         if pursuit.s(at) >= pursuit.reference.end:
             self._planned_at = now  # nothing is left to plan: the commands run out in zeros
             return None
@@ -646,7 +767,7 @@ class Coordinator:
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],
-            "warnings": self._watchman.hold(now, cautions),
+            "warnings": self._watchman.hold(now, cautions), "outside": self._outside,
         }
         if pursuit is None:
             return Decision(**common)

@@ -35,6 +35,17 @@ class CommandHistory:
         self._times.clear()
         self._values.clear()
 
+    def grow(self, command_delays: np.ndarray, period: float) -> None:
+        """Room for robots that come last from now on; they have been sent zeros. Delays of all, shape (N,)."""
+        more = np.zeros((len(command_delays) - len(self.effect_delay), 2))
+        self._values = deque((np.concatenate([each, more]) for each in self._values), maxlen=_KEPT)
+        self.effect_delay = np.asarray(command_delays, dtype=float) + period / 2
+
+    def forget(self, rows: list[int]) -> None:
+        """Some robots were let go: whatever they were sent no longer counts."""
+        for each in self._values:
+            each[rows] = 0.0
+
     @property
     def last(self) -> tuple[float, np.ndarray] | None:
         """Moment and values of the last sending."""

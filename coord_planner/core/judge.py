@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Optional
 
 import attrs
@@ -32,7 +33,11 @@ _SCATTER = 3.0  # times the expected scatter of poses
 
 @attrs.frozen(eq=False)
 class View:
-    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds."""
+    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds.
+
+    Robots in ``outside`` are obstacles only, and the graph is that of the others; ``waiting`` tells why some cannot
+    join.
+    """
 
     snapshot: Snapshot
     estimate: Estimate
@@ -45,6 +50,8 @@ class View:
     planned_at: float
     refused_change: str
     silence: Optional[Silence]
+    outside: frozenset[str] = frozenset()
+    waiting: Mapping[str, str] = attrs.field(factory=dict)
 
 
 class Judge:
@@ -60,7 +67,8 @@ class Judge:
         """Everything that is wrong at this moment, in motion."""
         found = [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
         found += [*_following(view), *self._limits(view), *_plans(view), *_spacing(view)]
-        return found
+        found = [caution for caution in found if caution.subject not in view.outside]
+        return found + [rules.not_joined(view.settings, name, reason) for name, reason in view.waiting.items()]
 
     def hold(self, now: float, found: list[Caution]) -> tuple[Caution, ...]:
         """What is shown: what is raised now, and what was a moment ago."""
@@ -96,7 +104,7 @@ class Judge:
         if self._graph is not None and self._graph.edges != view.graph.edges:
             found.append(rules.graph_changed(view.settings, len(view.graph.edges)))
         self._graph = view.graph
-        if len(view.fleet) > 1 and not view.graph.connected:
+        if len(view.graph.names) > 1 and not view.graph.connected:
             found.append(rules.graph_split(view.settings, view.graph.components()))
         return found
 

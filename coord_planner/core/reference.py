@@ -28,6 +28,7 @@ from .problem import (
     bounds_in_force,
 )
 from .settings import Settings
+from .standing import held
 from .watch import choose_pairs, watch
 
 _ROUNDS = 6  # re-solves with separating lines taken from the last solution
@@ -70,12 +71,13 @@ class Reference:
         """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
         states = self.plan.state(min(s, self.end))
         if s > self.end:
-            ahead = self.task.end_speed * (s - self.end)
+            speeds = np.full(len(states), self.task.end_speed)
+            speeds[list(self.task.stands)] = 0.0
             heading = states[:, THETA]
-            states[:, 0] += ahead * np.cos(heading)
-            states[:, 1] += ahead * np.sin(heading)
+            states[:, 0] += speeds * (s - self.end) * np.cos(heading)
+            states[:, 1] += speeds * (s - self.end) * np.sin(heading)
             states[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
-            states[:, [SPEED, SPEED_COMMAND]] = self.task.end_speed
+            states[:, [SPEED, SPEED_COMMAND]] = speeds[:, None]
         return states
 
     def states(self, s: np.ndarray) -> np.ndarray:
@@ -212,12 +214,15 @@ def end_target(task: Task, count: int) -> np.ndarray:
     target[:, 1] += past * np.sin(task.ends[:, 2])
     target[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
     target[:, [SPEED, SPEED_COMMAND]] = task.end_speed
+    target[list(task.stands)] = np.nan
     return target
 
 
 def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
     """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M): speed up, hold, slow down."""
-    return task.asked_speed(s)
+    asked = task.asked_speed(s)
+    asked[list(task.stands)] = 0.0
+    return asked
 
 
 def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
@@ -241,10 +246,10 @@ def _problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
         turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
-        bounds=bounds_in_force(
+        bounds=held(bounds_in_force(
             fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
             task.max_curvature,
-        ),
+        ), fleet, initial, times, task.stands),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),
     )

@@ -43,6 +43,7 @@ class Task:
         note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
+        stands: positions of robots that the manoeuvre is not for: they come to a stand and have no end.
     """
 
     name: str
@@ -62,6 +63,7 @@ class Task:
     turn_rates: bool = False
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    stands: tuple[int, ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
