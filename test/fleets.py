@@ -119,7 +119,7 @@ class Yard:
         hidden: robots whose poses do not arrive. moved: (x, y) added to measured positions, by name.
         not_ready: robots that may not be driven.
     What it keeps: ``answers``, ``decisions``, ``sent`` (time, commands of shape (N, 2), who gets none keeps the
-    last), ``track`` (time, true poses).
+    last), ``told`` (time, who gets a command), ``track`` (time, true poses).
     """
 
     def __init__(
@@ -148,6 +148,7 @@ class Yard:
         self.track: list[tuple[float, np.ndarray]] = []
         self._seen: dict[str, PoseSample] = {}
         self._told = np.zeros((len(fleet), 2))
+        self.told: list[tuple[float, frozenset[str]]] = []
 
     def part(self, names: Sequence[str]) -> Fleet:
         """Some of the machines."""
@@ -206,6 +207,7 @@ class Yard:
             for name, command in commands.items():
                 self._told[self.fleet.index(name)] = command.speed, command.curvature
             self.sent.append((self.now, self._told.copy()))
+            self.told.append((self.now, frozenset(commands)))
             for name, command in commands.items():
                 self.machines.command(name, command, self.now)
         self.track.append((self.now, self.machines.poses()))

@@ -210,9 +210,10 @@ class Coordinator:
                 answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
                 return
             self._members.waiting.clear()
-            self._grow()
-            estimate = self._look(snapshot)
             try:
+                self._check_joining()
+                self._grow()
+                estimate = self._look(snapshot)
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
@@ -245,26 +246,21 @@ class Coordinator:
         swapped in when the group reaches the moment from which it was made; the decision then shows the
         coupling in force. Who leaves in motion comes to a stand and is let go; who joins stands until it is driven.
 
+        Whoever cannot join (``cannot_join`` tells beforehand) is warned of, and joins when the fleet is idle.
+
         Args:
             fleet: everybody who is wanted. graph: neighbours among all of them.
-
-        Raises:
-            RefusedError: a robot cannot join just now; nothing has changed.
         """
         with self._lock:
-            reason = self.cannot_join(fleet, graph) if fleet is not None else ""
-            if reason:
-                raise RefusedError(reason, "see to it and ask again, or let it join while the fleet is idle")
             self._settings = settings or self._settings
             self._members.want(fleet or self._members.wanted)
             self._fleet = members.renewed(self._fleet, self._members.wanted)
-            everybody = members.grown(self._fleet, self._members.wanted).names
-            self._graph = (graph or self._graph).relative_to(everybody)
+            self._graph = (graph or self._graph).relative_to(self._members.everybody(self._fleet.names))
             if self._resting:
                 self._adopt()
             self._observer.configure(self._fleet, self._settings.poses)
-            if self._state is State.MOVING:
-                self._remake_if_free(now)
+            if self._state is State.MOVING and not self._members.absent(self._fleet.names):
+                self._remake_if_free(now)  # otherwise the next step does, when it has rows for them
 
     # Slow work
 
@@ -349,7 +345,7 @@ class Coordinator:
     def _adopt(self) -> None:
         """While the fleet rests, others are taken as they are wanted: nothing that was known of the old ones counts."""
         wanted = self._members.wanted
-        if wanted.names == self._fleet.names:
+        if wanted.names == self._members.under_command(self._fleet.names) == self._fleet.names:
             return
         self._members.start_afresh(wanted)
         self._fleet, self._graph = wanted, self._graph.relative_to(wanted.names)
@@ -381,11 +377,11 @@ class Coordinator:
 
     def _grow(self) -> None:
         """Rows for those who are wanted and not carried yet; they stand until they are driven."""
-        pursuit, fleet = self._pursuit, members.grown(self._fleet, self._members.wanted)
-        new = fleet.names[len(self._fleet):]
-        there = [self._members.bystanders.pose(name) for name in new]
-        if pursuit is None or not new or any(pose is None for pose in there):
+        pursuit, new = self._pursuit, self._members.absent(self._fleet.names)
+        if pursuit is None or not new:
             return
+        fleet = members.grown(self._fleet, self._members.wanted, new)
+        there = [self._members.bystanders.pose(name) for name in new]
         self._history.grow(fleet.response("command_delay"), self._period)
         self._observer.grow(fleet)
         pursuit.grow(fleet, self._settings, np.concatenate([np.zeros((len(self._fleet), 3)), np.array(there)]))
@@ -402,11 +398,9 @@ class Coordinator:
         if pursuit is None or not self._state.holds_fleet:
             return
         if self._state is State.MOVING:
+            for name, reason in self._members.unfit(self._fleet.names, self._settings.poses).items():
+                self._put_off((name,), reason, snapshot.time)
             self._grow()
-            for name in self._members.joining(self._fleet.names):
-                reason = self._members.bystanders.unfit(name, self._settings.poses)
-                if reason:
-                    self._put_off((name,), reason, snapshot.time)
             if len(self._fleet) > before:
                 self._remake_if_free(snapshot.time)
         self._let_go(snapshot.time, pursuit)
@@ -428,7 +422,7 @@ class Coordinator:
     def _put_off(self, names: tuple[str, ...], reason: str, now: float) -> None:
         """Robots that cannot join the running manoeuvre wait until the fleet is idle; the others go on."""
         self._members.put_off(names, reason)
-        for name in names:
+        for name in set(names) & set(self._fleet.names):
             if self._pursuit is not None:
                 self._pursuit.drop_drivers_of(self._fleet.index(name))
         self._remake_if_free(now)
@@ -455,6 +449,10 @@ class Coordinator:
         """The running manoeuvre may be left for another."""
         if snapshot.other_planner:
             raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
+
+    def _check_joining(self) -> None:
+        for reason in self._members.unfit(self._fleet.names, self._settings.poses).values():
+            raise RefusedError(reason, "see to it, or disable it")
 
     def _check_fit(self, estimate: Estimate, snapshot: Snapshot) -> None:
         """Every robot has a fresh pose and may be driven."""

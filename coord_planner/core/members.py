@@ -29,10 +29,9 @@ _FINE = 0.05  # seconds between poses that stand for a way
 _PER_ROBOT = ("ways",)  # fields of a task that hold one thing a robot without being arrays
 
 
-def grown(carried: Fleet, wanted: Fleet) -> Fleet:
+def grown(carried: Fleet, wanted: Fleet, new: Collection[str]) -> Fleet:
     """Everyone carried so far, as they are wanted now, and last those who are new."""
-    new = tuple(robot for robot in wanted.robots if robot.name not in carried.names)
-    return Fleet((*renewed(carried, wanted).robots, *new))
+    return Fleet((*renewed(carried, wanted).robots, *(wanted.robots[wanted.index(name)] for name in new)))
 
 
 def renewed(carried: Fleet, wanted: Fleet) -> Fleet:
@@ -119,7 +118,7 @@ def reassigned(
         if name in own:
             ends[k], ways[k] = _own_way(own[name], fleet, k, poses, hops)
         elif leaders[k] < 0 or not np.isfinite(hops[k, leaders[k]]) or task.coupling == 0.0:
-            raise RefusedError(f"{task.name}: {name} has no end and nobody to copy", "let it join while the fleet rests")
+            raise RefusedError(f"{task.name}: {name} has no end and nobody to copy", "let it join when all rest")
     if led and np.isnan(ends[:, 2]).all():
         raise RefusedError(
             f"{task.name}: nobody who stays has an end", "abandon it and begin one with an end for who is left"

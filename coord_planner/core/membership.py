@@ -11,7 +11,7 @@ from .bystanders import Bystanders
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .observer import Estimate
-from .settings import Settings
+from .settings import Poses, Settings
 
 
 class Membership:
@@ -38,6 +38,21 @@ class Membership:
         """Another fleet is asked for."""
         self.wanted = fleet
         self.waiting = {name: reason for name, reason in self.waiting.items() if name in fleet.names}
+
+    def everybody(self, carried: Collection[str]) -> tuple[str, ...]:
+        """Those carried, and those who are wanted besides."""
+        return (*carried, *(name for name in self.wanted.names if name not in carried))
+
+    def absent(self, carried: Collection[str]) -> tuple[str, ...]:
+        """Those who are to join and are not carried yet."""
+        return tuple(name for name in self.wanted.names if name not in carried and name not in self.waiting)
+
+    def unfit(self, carried: Collection[str], poses: Poses) -> dict[str, str]:
+        """Who is to join and could not be driven just now, with the reason."""
+        found = {
+            name: self.bystanders.unfit(name, poses) for name in (*self.absent(carried), *self.joining(carried))
+        }
+        return {name: reason for name, reason in found.items() if reason}
 
     def driving(self, carried: Iterable[str]) -> tuple[str, ...]:
         """Those carried that a new reference is to drive."""
