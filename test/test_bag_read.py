@@ -6,6 +6,7 @@ import sqlite3
 import numpy as np
 import pytest
 from foreign_bags import EPOCH, ForeignBag, corner
+from rosbags.rosbag2 import CompressionFormat, CompressionMode, StoragePlugin, Writer
 
 from coord_planner.errors import SettingsError
 from coord_planner.record import bag_messages as messages
@@ -104,6 +105,22 @@ def test_a_chunk_that_breaks_off_is_read_as_far_as_it_goes(tmp_path, compression
     assert 1_000 < content.read < 19_000 and len(content.numbers["/cart/curvature"].table) == content.read
 
 
+@pytest.mark.parametrize("told", [True, False], ids=["metadata", "no metadata"])
+@pytest.mark.parametrize("plugin", [StoragePlugin.SQLITE3, StoragePlugin.MCAP], ids=["sqlite3", "mcap"])
+def test_messages_compressed_one_by_one_are_unpacked_without_metadata_too(tmp_path, plugin, told):
+    folder = tmp_path / "bag"
+    writer = Writer(folder, version=9, storage_plugin=plugin)
+    writer.set_compression(CompressionMode.MESSAGE, CompressionFormat.ZSTD)
+    with writer:
+        connection = writer.add_connection("/cart/curvature", "std_msgs/msg/Float64", typestore=messages.store())
+        for n in range(50):
+            writer.write(connection, EPOCH + n * 10**8, messages.packed(messages.number(0.25)))
+    if not told:
+        (folder / "metadata.yaml").unlink()
+    content = read(folder)
+    assert content.read == 50 and set(content.numbers["/cart/curvature"].table.array()[:, -1]) == {0.25}
+
+
 def test_a_broken_chunk_is_left_out_and_the_rest_is_read(tmp_path):
     bag = ForeignBag()
     for n in range(3000):
@@ -190,7 +207,6 @@ def test_messages_that_cannot_be_unpacked_are_counted(tmp_path):
 
 def test_a_type_that_the_bag_defines_otherwise_is_read_as_it_says(tmp_path):
     """The bag's own definition counts: here an Odometry with a field more in front."""
-    from rosbags.rosbag2 import StoragePlugin, Writer
     from rosbags.typesys import Stores, get_types_from_msg, get_typestore
 
     definition, _ = messages.store().generate_msgdef("nav_msgs/msg/Odometry", ros_version=2)

@@ -11,6 +11,7 @@ from typer.testing import CliRunner
 
 from coord_planner.cli import app
 from coord_planner.core.graph import NeighbourGraph
+from coord_planner.core.settings import SiteRules
 from coord_planner.record.bag_write import PARAMETERS_KEY, write_bag
 from coord_planner.record.marks import marks
 
@@ -75,7 +76,7 @@ def test_markers_show_what_marks_say(written):
     _, message = messages_of(folder, "/fleet_markers")[0]
     drawn = [marker for marker in message.markers if marker.action == marker.ADD]
     graph = NeighbourGraph(run.fleet.names, run.edges)
-    wanted = marks(run.fleet, graph, run.poses[:, 0], [], run.min_clearance)
+    wanted = marks(run.fleet, graph, run.poses[:, 0], [], SiteRules(min_clearance=run.min_clearance))
     assert [marker.ns for marker in drawn] == [mark.group for mark in wanted]
     foot = next(marker for marker in drawn if marker.ns == "footprints")
     assert [(p.x, p.y) for p in foot.points] == list(next(m for m in wanted if m.group == "footprints").points)

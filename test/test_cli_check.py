@@ -91,7 +91,7 @@ def test_messages_on_stderr_results_on_stdout(tmp_path: Path) -> None:
     bad = command("check", changed(tmp_path, "strength:", "strenght:"))
     assert bad.returncode == 2 and bad.stdout == ""
     assert len(bad.stderr.splitlines()) == 1 and "Traceback" not in bad.stderr
-    good = command("check", PARK)
+    good = command("check", PARK, "--quick")
     assert good.returncode == 0 and good.stderr == ""
     for words in ("mower_6", "corner_left", "radius 4 m", "0.85 m", "not a safety function"):
         assert words in good.stdout
@@ -140,7 +140,7 @@ def test_exit_status_and_output_follow_what_happened(monkeypatch: pytest.MonkeyP
     run = attrs.evolve(turn(), completed=True, state="ended", min_clearance=0.1)
     calls = []
 
-    def rehearse(configuration, manoeuvre, *, seed, progress=None):
+    def rehearse(configuration, manoeuvre, *, seed, faults, progress=None):
         calls.append((configuration.settings.coupling.strength, manoeuvre, seed))
         return run
 

@@ -88,7 +88,7 @@ def test_a_strip_given_with_a_task_holds_every_robot():
 
 def test_what_cannot_be_kept_is_refused_with_the_missing_metres():
     with pytest.raises(RefusedError, match=r"too near to pond|too little room"):
-        led([area_of("pond", (5.0, -30.0, 7.0, -30.0, 7.0, 30.0, 5.0, 30.0))])
+        led([area_of("pond", (5.0, -90.0, 7.0, -90.0, 7.0, 90.0, 5.0, 90.0))])
 
 
 def test_fences_survive_the_file(tmp_path):

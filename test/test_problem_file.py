@@ -245,6 +245,22 @@ def test_a_program_of_the_planner_is_read_back_exactly(case, tmp_path):
     same(problem_file.load(written(tmp_path, json.dumps(to_problem_file(case.problem)))), PlannerCase(case.problem))
 
 
+def test_how_neighbours_are_compared_is_kept(case, tmp_path):
+    from coord_planner.core.problem import Comparison
+
+    whole, parts = np.array([0, 0]), np.array([[0.3, 0.7], [1.0, 0.0]])
+    at, known = np.array([0, 1]), np.array([0.1, 0.0])
+    compared = Comparison(whole, at, at[::-1].copy(), parts, parts / 3, known, whole + 0.25)
+    problem = attrs.evolve(case.problem, compared=compared)
+    document = to_problem_file(problem)
+    same(problem_file.load(written(tmp_path, json.dumps(document))), PlannerCase(problem))
+    for key, wrong, words in (("first_at", [0, 2], "from 0 to 1"), ("edges", [0, 1], "from 0 to 0"),
+                              ("known", [1.0], "2 finite numbers"), ("width", 9, "at most 3")):
+        spoilt = {**document, "compared": {**document["compared"], key: wrong}}
+        with pytest.raises(SettingsError, match=words):
+            problem_file.load(written(tmp_path, json.dumps(spoilt)))
+
+
 @pytest.mark.parametrize(
     ("change", "words"),
     [(lambda d: d.pop("times"), ["times", "has to be given"]),

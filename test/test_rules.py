@@ -27,6 +27,9 @@ RAISED = [
     rules.graph_split(SETTINGS, [["a"], ["b"]]),
     rules.clearance_short(SETTINGS, ("a", "b"), 0.4),
     rules.clearance_breached(SETTINGS, ("a", "b"), 0.3),
+    rules.keep_out_breached(SETTINGS, "a", "pond", 0.2),
+    rules.keep_out_ahead(SETTINGS, "a", "pond", 0.2),
+    rules.keep_out_unavoidable(SETTINGS, "a", "pond", 0.2),
     rules.free_way_short(SETTINGS, ("a", "b"), 0.2),
     rules.limit_reached(SETTINGS, "a", "max_curvature", 4.0),
     rules.not_following(SETTINGS, "a", 0.4),
@@ -34,12 +37,15 @@ RAISED = [
     rules.too_slow(SETTINGS, "a", 0.5),
     rules.not_ready(SETTINGS, "a"),
     rules.silent(SETTINGS, "a"),
+    rules.plan_unfinished(SETTINGS, 0.2),
     rules.plan_late(SETTINGS, 0.2),
+    rules.common_curvature(SETTINGS, 3.0),
     rules.plan_failed(SETTINGS, "no numbers"),
     rules.plans_missing(SETTINGS, 3.0),
     rules.silence_unsafe(SETTINGS, Silence(2.0, 0.3, ("a", "b"))),
     rules.other_planner(SETTINGS, "run 7"),
     rules.change_refused(SETTINGS, "too tight"),
+    rules.not_joined(SETTINGS, "cart_3", "cart_3 is not ready to be driven"),
 ]
 
 

@@ -12,9 +12,13 @@ from ..config.notes import notes
 from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
+from ..core.judge import SHORT
 from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
+from ..core.settings import SiteRules
 from ..errors import SettingsError
-from .speaking import CAUTION, errors_reported, say, table, write, write_heading, write_table
+from ..trial.falling_silent import Prospect, prospect
+from .progress import progress_shown
+from .speaking import CAUTION, DID_NOT_HOLD, errors_reported, say, table, write, write_heading, write_table
 from .targets import prepare_file
 
 
@@ -24,6 +28,10 @@ def check(
         Optional[Path],
         typer.Option("--security-policy", metavar="FILE", help="Write the planner's ROS 2 security policy (XML)."),
     ] = None,
+    quick: Annotated[
+        bool, typer.Option("--quick", help="Leave out what takes time: planning every manoeuvre to see whether robots "
+                                           "stay clear should the planner fall silent.")
+    ] = False,
     namespace: Annotated[
         Optional[str],
         typer.Option("--namespace", metavar="NS", help="With --security-policy: namespace of the planner and its "
@@ -45,7 +53,10 @@ def check(
     _write_manoeuvres(configuration)
     _write_rules(configuration)
     _write_notes(configuration)
+    kept = quick or _write_silence(configuration)
     write(CAUTION)
+    if not kept:
+        raise typer.Exit(DID_NOT_HOLD)
 
 
 def _write_policy(configuration: config.Configuration, file: Path, namespace: str) -> None:
@@ -129,10 +140,20 @@ def _write_rules(configuration: config.Configuration) -> None:
     write_heading("Site rules and planning")
     write(f"From {rules.reference}: at least {rules.min_clearance:g} m between any two robots, at most "
           f"{rules.max_speed:g} m/s and {rules.max_lateral_acceleration:g} m/s^2 sideways.")
+    _write_areas(rules)
     write(f"On top of the clearance, for each robot of a pair: {margin.pose_uncertainty:g} m, and its speed times "
           f"{margin.response_uncertainty:g} s.")
     write(f"{horizon.rate:g} plans a second over {horizon.duration:g} s in {horizon.intervals} intervals; commands "
           f"{settings.commands.rate:g} times a second.\n")
+
+
+def _write_areas(rules: SiteRules) -> None:
+    for area in rules.keep_outs:
+        pieces = f"{len(area.pieces)} convex piece{'s' if len(area.pieces) > 1 else ''}"
+        write(f"Keep-out {area.name}: {area.polygon.area:.1f} m^2, {len(area.corners)} corners, planned with as "
+              f"{pieces}; footprints stay {rules.keep_out_clearance:g} m away.")
+    for cap in rules.speed_caps:
+        write(f"Speed cap {cap.area.name}: at most {cap.max_speed:g} m/s on {cap.area.polygon.area:.1f} m^2.")
 
 
 def _write_notes(configuration: config.Configuration) -> None:
@@ -142,3 +163,37 @@ def _write_notes(configuration: config.Configuration) -> None:
         for note in found:
             write(f"- {note}")
         write()
+
+
+def _write_silence(configuration: config.Configuration) -> bool:
+    """Whether robots stay clear should the planner fall silent in any manoeuvre; False where the file forbids less."""
+    if not configuration.manoeuvres:
+        return True
+    write_heading("Should the planner fall silent")
+    if any(name not in configuration.starts for name in configuration.driven.names):
+        write("Not looked at: the file gives no start for every robot (start_x, start_y, start_heading_deg).\n")
+        return True
+    rules, kept = configuration.settings.site_rules, True
+    with progress_shown("planning every manoeuvre") as progress:
+        for done, name in enumerate(configuration.manoeuvres):
+            found = prospect(configuration, name)
+            write(f"{name}: {_in_words(found, rules)}")
+            kept = kept and not (found.refused and found.silence is not None)
+            progress((done + 1) / len(configuration.manoeuvres))
+    write()
+    return kept
+
+
+def _in_words(found: Prospect, rules: SiteRules) -> str:
+    silence = found.silence
+    if found.refused:
+        return f"would be refused from the starts of the file: {found.refused}."
+    if silence is None:
+        return "one robot, nobody to come near."
+    words = (f"robots that time out separately come within {silence.clearance:.2f} m ({' and '.join(silence.pair)}, "
+             f"silent after {silence.instant:.1f} s)")
+    short = rules.min_clearance - silence.clearance
+    if short <= SHORT:
+        return f"{words}; the site allows {rules.min_clearance:g} m."
+    return (f"{words}, {short:.2f} m less than the site allows. Shorter command time-outs, a lower speed or more "
+            "spacing would help; with site_rules.refuse_unsafe_silence it would be refused.")

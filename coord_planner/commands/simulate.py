@@ -10,6 +10,7 @@ import typer
 from .. import config
 from ..config.failures import FailureStore
 from ..errors import RefusedError
+from ..trial.faults import Fault
 from ..trial.run import Run
 from .loading import configured
 from .progress import progress_shown
@@ -35,6 +36,12 @@ def simulate(
     seed: Annotated[
         Optional[int], typer.Option("--seed", min=0, help="Seed of the random numbers; simulation.seed when left out.")
     ] = None,
+    faults: Annotated[
+        Optional[Path],
+        typer.Option("--faults", metavar="FILE",
+                     help="What goes wrong on the way (YAML): faults:, a list of {kind, robot or edge, from_s, to_s, "
+                          "value}."),
+    ] = None,
     entries: Annotated[
         Optional[list[str]],
         typer.Option("--set", metavar="KEY=VALUE", help="Another value for a key of the file; may be repeated."),
@@ -54,6 +61,7 @@ def simulate(
         configuration = configured(params, entries or [])
         configuration.manoeuvre(manoeuvre)
         configuration.all_starts()
+        struck = _faults(faults, configuration)
         if page is not None:
             prepare_file(page, "--page")
         if picture is not None:
@@ -62,7 +70,7 @@ def simulate(
             prepare_bag(bag, "--bag")
         before = _kept(configuration)
         try:
-            run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed)
+            run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed, struck)
         except RefusedError as refused:
             if as_json:
                 write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
@@ -75,11 +83,19 @@ def simulate(
         _report(run, as_json, page, picture)
 
 
-def _run(configuration: config.Configuration, manoeuvre: str, seed: int) -> Run:
+def _faults(file: Path | None, configuration: config.Configuration) -> tuple[Fault, ...]:
+    if file is None:
+        return ()
+    from ..trial.fault_file import load_faults
+
+    return load_faults(file, configuration.graph.relative_to(configuration.driven.names))
+
+
+def _run(configuration: config.Configuration, manoeuvre: str, seed: int, faults: tuple[Fault, ...]) -> Run:
     from ..trial.rehearsal import rehearse
 
     with progress_shown(manoeuvre) as progress:
-        return rehearse(configuration, manoeuvre, seed=seed, progress=progress)
+        return rehearse(configuration, manoeuvre, seed=seed, faults=faults, progress=progress)
 
 
 def _kept(configuration: config.Configuration) -> set[Path]:
@@ -121,6 +137,8 @@ def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) ->
 
 def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
     """What the manoeuvre promised and did not keep."""
+    from ..record.areas import intrusions, speeding
+
     found = []
     if not figures["completed"]:
         found.append(f"it was not completed, the fleet is {figures['state']}")
@@ -131,6 +149,7 @@ def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
     nearest = figures["min_clearance_m"]
     if nearest is not None and nearest < run.min_clearance:
         found.append(f"two robots came within {nearest:.3f} m, and the site allows {run.min_clearance:g} m")
+    found += [breach.words("m") for breach in intrusions(run)] + [breach.words("m/s") for breach in speeding(run)]
     return found
 
 

@@ -15,6 +15,7 @@ from ..core.manoeuvre import KINDS, Manoeuvre
 from ..core.parameter import describe
 from ..core.settings import Settings
 from ..errors import SettingsError
+from .areas import GROUPS, with_areas
 from .complaints import Complaints, Source, nearest, shown
 from .configuration import Configuration, Declaration
 from .connection import Connection
@@ -36,26 +37,27 @@ class Checked:
 
     Attributes:
         slots: every key that this fleet and its manoeuvres may have. given: values by key, each of its kind.
-        robots: names. kinds: kind of each manoeuvre.
+        robots: names. kinds: kind of each manoeuvre. areas: names of areas by group.
     """
 
     slots: Mapping[str, Slot]
     given: Mapping[str, Any]
     robots: tuple[str, ...]
     kinds: Mapping[str, str]
+    areas: Mapping[str, tuple[str, ...]]
 
 
 def checked(flat: Mapping[str, Any], source: Source) -> Checked:
     """Check every key and value by itself; SettingsError with all that is wrong."""
     flat = {str(key): value for key, value in flat.items() if not belongs_to_ros(str(key))}
     complaints = Complaints(source)
-    robots, kinds = _names(flat, complaints)
+    robots, kinds, areas = _names(flat, complaints)
     complaints.raise_any()
-    slots = layout(robots, kinds)
+    slots = layout(robots, kinds, areas)
     given = {}
     for key, value in flat.items():
         if key not in slots:
-            complaints.add(*_unknown(key, slots, robots, kinds))
+            complaints.add(*_unknown(key, slots, {"robots": robots, "manoeuvres": tuple(kinds), **areas}))
             continue
         slot = slots[key]
         with complaints.about(key):
@@ -64,7 +66,7 @@ def checked(flat: Mapping[str, Any], source: Source) -> Checked:
         if slot.default is attrs.NOTHING and key not in flat:
             complaints.add("it has to be given", key, slot.description.text)
     complaints.raise_any()
-    return Checked(slots, given, robots, kinds)
+    return Checked(slots, given, robots, kinds, areas)
 
 
 def assemble(flat: Mapping[str, Any], source: Source) -> Configuration:
@@ -80,6 +82,9 @@ def assemble(flat: Mapping[str, Any], source: Source) -> Configuration:
     settings = Settings(**{
         name: _group(group, name, known, complaints) for name, group in group_types(Settings).items()
     })
+    settings = attrs.evolve(
+        settings, site_rules=with_areas(settings.site_rules, known.given, known.areas, complaints)
+    )
     simulation: Simulation = _group(Simulation, "simulation", known, complaints)
     complaints.raise_any()
     built = [robot for robot in robots if robot is not None]
@@ -119,8 +124,10 @@ def declared(flat: Mapping[str, Any], source: Source) -> list[Declaration]:
     return found
 
 
-def _names(flat: Mapping[str, Any], complaints: Complaints) -> tuple[tuple[str, ...], dict[str, str]]:
-    """Names of the robots, and of the manoeuvres with their kinds."""
+def _names(
+    flat: Mapping[str, Any], complaints: Complaints
+) -> tuple[tuple[str, ...], dict[str, str], dict[str, tuple[str, ...]]]:
+    """Names of the robots, of the manoeuvres with their kinds, and of areas by group."""
     lists: dict[str, tuple[str, ...]] = {}
     for key, slot in name_slots().items():
         lists[key] = ()
@@ -139,7 +146,7 @@ def _names(flat: Mapping[str, Any], complaints: Complaints) -> tuple[tuple[str, 
             continue
         with complaints.about(slot.key):
             kinds[name] = convert(flat[slot.key], slot.kind, slot.key, slot.description)
-    return robots, kinds
+    return robots, kinds, {group: tuple(dict.fromkeys(lists[f"{group}.names"])) for group in GROUPS}
 
 
 def _check_names(key: str, names: tuple[str, ...], complaints: Complaints) -> None:
@@ -151,13 +158,13 @@ def _check_names(key: str, names: tuple[str, ...], complaints: Complaints) -> No
 
 
 def _unknown(
-    key: str, slots: Mapping[str, Slot], robots: tuple[str, ...], kinds: Mapping[str, str]
+    key: str, slots: Mapping[str, Slot], named: Mapping[str, tuple[str, ...]]
 ) -> tuple[str, str, str]:
-    """Problem, key and what is allowed for a key that is not known."""
-    for group, names in (("robots", robots), ("manoeuvres", tuple(kinds))):
-        parts = key.split(".")
-        if parts[0] == group and len(parts) > 2 and parts[1] not in names:
-            problem = f"{shown(parts[1])} is not in {group}.names{nearest(parts[1], names)}"
+    """Problem, key and what is allowed for a key that is not known; ``named``: names by group."""
+    for group, names in named.items():
+        parts = key.removeprefix(f"{group}.").split(".")
+        if key.startswith(f"{group}.") and len(parts) > 1 and parts[0] not in names:
+            problem = f"{shown(parts[0])} is not in {group}.names{nearest(parts[0], names)}"
             return problem, key, ", ".join(names) or f"no name, for {group}.names is empty"
     group, _, field = key.rpartition(".")
     fields = [other.rpartition(".")[2] for other in slots if other.rpartition(".")[0] == group]

@@ -58,6 +58,11 @@ def _check_slowest(
     cap = settings.site_rules.max_speed
     if lowest > cap:
         complaints.add(f"{lowest:g} m/s is above site_rules.max_speed, {cap:g} m/s", key, f"at most {cap:g}")
+    for area in settings.site_rules.speed_caps:
+        if lowest > area.max_speed:
+            capped = f"site_rules.speed_caps.{area.area.name}.max_speed"
+            complaints.add(f"{lowest:g} m/s is above {capped}, {area.max_speed:g} m/s", key,
+                           f"at most {area.max_speed:g}")
     for name, manoeuvre in manoeuvres.items():
         slowest = manoeuvre.speed * settings.progress.slowest
         if lowest > slowest:

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 
 import attrs
 
-from ..core.manoeuvre import End, Manoeuvre, ToEnds, Wheel
+from ..core.manoeuvre import End, Manoeuvre, RowEnd, ToEnds, Wheel
 from ..errors import SettingsError
 from .complaints import nearest, shown
 from .connection import Connection
@@ -16,7 +16,7 @@ _FARTHEST = 1e6  # metres or degrees; beyond it lies a slip of the pen
 
 
 # The field of a kind that holds words of its own.
-WORDED: dict[type, str] = {ToEnds: "ends_deg", Wheel: "pivot"}
+WORDED: dict[type, str] = {ToEnds: "ends_deg", Wheel: "pivot", RowEnd: "rows"}
 
 
 def understood(manoeuvre: Manoeuvre, connections: Mapping[str, Connection]) -> Manoeuvre:
@@ -27,7 +27,21 @@ def understood(manoeuvre: Manoeuvre, connections: Mapping[str, Connection]) -> M
         about = manoeuvre.about()
         if about is not None and about.point is None and about.beside not in connections:
             raise _unknown(manoeuvre.pivot, about.beside, connections, "pivot")
+    if isinstance(manoeuvre, RowEnd):
+        _check_rows(manoeuvre, connections)
     return manoeuvre
+
+
+def _check_rows(manoeuvre: RowEnd, connections: Mapping[str, Connection]) -> None:
+    listed = manoeuvre.listed()
+    for entry, name in zip(manoeuvre.rows, listed):
+        if name not in connections:
+            raise _unknown(entry, name, connections, "rows")
+    if bool(listed) != (manoeuvre.order == "listed"):
+        raise SettingsError(
+            f"rows is {'given' if listed else 'empty'} and order is {manoeuvre.order!r}", key="rows",
+            allowed="a row for each robot with order 'listed', and none otherwise",
+        )
 
 
 def for_turning_points(manoeuvre: ToEnds, connections: Mapping[str, Connection]) -> ToEnds:

@@ -41,10 +41,12 @@ class Failures:
 
 @attrs.frozen
 class Names:
-    """The lists of names that other keys hang on: ``robots.names`` and ``manoeuvres.names``."""
+    """The lists of names that other keys hang on: ``robots.names``, ``manoeuvres.names`` and those of areas."""
 
     robots: tuple[str, ...] = parameter(attrs.NOTHING, "the robots of the fleet, in the order of every table and array")
     manoeuvres: tuple[str, ...] = parameter((), "the manoeuvres that can be begun, each by its own service")
+    keep_outs: tuple[str, ...] = parameter((), "areas that no footprint may enter")
+    speed_caps: tuple[str, ...] = parameter((), "areas with a speed cap of their own")
 
 
 @attrs.frozen

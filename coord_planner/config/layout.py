@@ -13,6 +13,7 @@ from ..core.fleet import Footprint, Limits, Response
 from ..core.manoeuvre import KINDS
 from ..core.parameter import Description, describe
 from ..core.settings import Settings
+from . import areas
 from .connection import Connection
 from .groups import Failures, FleetWords, Graph, Names, Node, Place, Simulation
 from .values import kind_of
@@ -57,8 +58,12 @@ def slots(prefix: str, group: type) -> dict[str, Slot]:
 
 
 def name_slots() -> dict[str, Slot]:
-    """``robots.names`` and ``manoeuvres.names``."""
-    return {f"{slot.key}.names": attrs.evolve(slot, key=f"{slot.key}.names") for slot in slots("", Names).values()}
+    """``robots.names``, ``manoeuvres.names`` and the names of areas."""
+    found = {}
+    for slot in slots("", Names).values():
+        key = next((group for group in areas.GROUPS if group.endswith(f".{slot.key}")), slot.key) + ".names"
+        found[key] = attrs.evolve(slot, key=key)
+    return found
 
 
 def kind_slot(manoeuvre: str) -> Slot:
@@ -67,8 +72,10 @@ def kind_slot(manoeuvre: str) -> Slot:
     return Slot(key, "str", attrs.NOTHING, Description("what kind of turn it is", choices=tuple(KINDS)))
 
 
-def layout(robots: Iterable[str], kinds: Mapping[str, str]) -> dict[str, Slot]:
-    """All keys for a fleet and its manoeuvres (name -> kind)."""
+def layout(
+    robots: Iterable[str], kinds: Mapping[str, str], named_areas: Mapping[str, Iterable[str]]
+) -> dict[str, Slot]:
+    """All keys for a fleet, its manoeuvres (name -> kind) and the site's areas (group -> names)."""
     found = name_slots()
     for prefix, group in {**PLAIN_GROUPS, **group_types(Settings)}.items():
         found |= slots(prefix, group)
@@ -78,6 +85,9 @@ def layout(robots: Iterable[str], kinds: Mapping[str, str]) -> dict[str, Slot]:
             found[key] = attrs.evolve(slot, description=attrs.evolve(slot.description, live=False))
         for name in robots:
             found |= slots(f"robots.{name}", group)
+    for prefix, names in named_areas.items():
+        for name in names:
+            found |= slots(f"{prefix}.{name}", areas.GROUPS[prefix])
     for name, kind in kinds.items():
         found[f"manoeuvres.{name}.kind"] = kind_slot(name)
         found |= slots(f"manoeuvres.{name}", KINDS[kind])

@@ -58,6 +58,10 @@ class Again:
         """1/2 integral u'Lu, in seconds of the manoeuvre."""
         u = self.turning
         u = u * self.problem.turn_speed / self.problem.compare_speed
+        compared = self.problem.compared
+        if compared is not None:
+            rows = self.problem.weights[compared.edges] * compared.disagreements(u, self.problem.edges) ** 2
+            return float(np.sum(rows * compared.seconds)) / 2
         apart = [weight * (u[k] - u[j]) ** 2 for (k, j), weight in zip(self.problem.edges, self.problem.weights)]
         return float(np.sum(np.array(apart).reshape(-1, u.shape[1]) * self._seconds)) / 2
 

@@ -11,7 +11,8 @@ import attrs
 import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
-from . import gate, manoeuvre, members, reference, rules, solver, stopping
+from . import gate, ladder, manoeuvre, members, reference, rules, solver, stopping
+from .caps import caps
 from .case import PlannerCase
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -29,7 +30,7 @@ from .reference import Reference
 from .settings import Settings, SiteRules
 from .silence import Silence
 from .silence import worst as worst_silence
-from .tick import pose_problem, usable
+from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
@@ -112,6 +113,7 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
     @property
@@ -306,6 +308,7 @@ class Coordinator:
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             estimate = overlooked(estimate, self._fleet, self._outside)
+            self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
@@ -314,10 +317,12 @@ class Coordinator:
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     prepared = self._prepare(snapshot.time)
-        plan = self._solve(prepared, cautions)
+        found = None if prepared is None else self._solve(prepared, snapshot.time)
+        plan = None if found is None else found.plan
         with self._lock:
-            if prepared is not None and self._state is State.MOVING and self._pursuit is not None:
-                self._drive(prepared, plan, snapshot.time)
+            if prepared is not None and found is not None and self._state is State.MOVING:
+                cautions += found.cautions
+                self._drive(prepared, found, snapshot.time)
             if len(estimate.age) == len(self._fleet):  # otherwise others are wanted since
                 self._decision = self._decide(snapshot.time, estimate, plan, cautions)
             return self._decision
@@ -331,7 +336,10 @@ class Coordinator:
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
             elapsed = min(now - last[0], 2 * self._period) if last is not None else self._period
-            allowed, nonsense = gate.allow(wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules)
+            rolling = self._history.rolling(now, manoeuvre.STAND_LAGS * self._fleet.response("speed_lag"))
+            allowed, nonsense = gate.allow(
+                wanted, before, max(elapsed, 0.0), self._fleet, self._settings.site_rules, self._caps, rolling
+            )
             self._history.add(now, allowed)
             if nonsense.any() and self._state is State.MOVING:
                 self._begin_stop(now, "a plan held numbers that are not finite", completed=False)
@@ -352,6 +360,7 @@ class Coordinator:
         self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
         self._observer = Observer(self._fleet, self._settings.poses, self._history)
         self._pursuit, self._state = None, State.IDLE
+        self._caps = np.full(len(self._fleet), np.inf)
         self._decision = Decision(
             self._decision.time, State.IDLE, self._fleet.names, self._reason, completed=self._completed
         )
@@ -385,7 +394,7 @@ class Coordinator:
         self._history.grow(fleet.response("command_delay"), self._period)
         self._observer.grow(fleet)
         pursuit.grow(fleet, self._settings, np.concatenate([np.zeros((len(self._fleet), 3)), np.array(there)]))
-        self._fleet = fleet
+        self._fleet, self._caps = fleet, np.append(self._caps, np.full(len(new), np.inf))
         self._members.loose |= frozenset(new)
         self._observer.loose = self._members.loose
 
@@ -416,7 +425,7 @@ class Coordinator:
         rows = [self._fleet.index(name) for name in self._members.let_go(now, standing, rest)]
         if rows:
             self._history.forget(rows)
-            pursuit.schedule.values[rows] = 0.0
+            pursuit.schedule = pursuit.schedule.stilled(rows)
             self._observer.loose = self._members.loose
 
     def _put_off(self, names: tuple[str, ...], reason: str, now: float) -> None:
@@ -489,6 +498,7 @@ class Coordinator:
         refused = self._refused
 
         def job() -> Outcome:
+            silence: Optional[Silence] = None
             try:
                 made = make()
                 silence = worst_silence(made, fleet)
@@ -496,7 +506,7 @@ class Coordinator:
             except CoordPlannerError as error:
                 if isinstance(error, RefusedError) and isinstance(error.case, PlannerCase):
                     refused(error.case)
-                return Outcome(token, None, str(error), arrived=isinstance(error, ArrivedError))
+                return Outcome(token, None, str(error), silence, isinstance(error, ArrivedError))
             except Exception as error:  # whatever it is: nobody may be left waiting for an answer
                 return Outcome(token, None, f"a mistake in the planner ({error!r}); please report it")
             self._try_out(made, fleet, settings)
@@ -587,7 +597,7 @@ class Coordinator:
             coupling = own.coupling
         if own is not None and own.alignment is not None:
             alignment = own.alignment
-        return attrs.evolve(task, coupling=coupling, alignment=alignment)
+        return attrs.evolve(task, coupling=coupling if task.alike else 0.0, alignment=alignment)
 
     def _take_over(self, request: _Request, outcome: Outcome, now: float) -> None:
         """A reference for the rest, or for another manoeuvre, is there or was refused."""
@@ -688,7 +698,7 @@ class Coordinator:
         driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
         found = self._watchman.look(View(
             snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
-            1.0 / self._settings.horizon.rate, self._planned_at, self._refused_change, self._silence,
+            1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
             outside, dict(self._members.waiting),
         ))
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
@@ -710,29 +720,30 @@ class Coordinator:
         predicted = self._observer.estimate(at, self._planned).states
         return pursuit.prepare(at, predicted, self._fleet, self._settings)
 
-    def _solve(self, prepared: Optional[Prepared], cautions: list[Caution]) -> Optional[Plan]:
-        """Solve a tick; None, with a warning, when what comes out cannot be driven."""
-        if prepared is None:
-            return None
+    def _solve(self, prepared: Prepared, now: float) -> ladder.Found:
+        """Solve a tick, and find what can be driven."""
         settings = self._settings
+        solved: Optional[Plan] = None
+        failure: Optional[Caution] = None
         try:
-            solved = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
-            plan = usable(prepared.problem, solved, settings.site_rules.min_clearance)
-            if plan is None:
-                cautions.append(rules.plan_late(settings, solved.solve_time))
+            plan = self._solve_tick(prepared.problem, prepared.start, True, self._budget)
+            if plan.solve_time > self._budget + self._period:  # the moment it starts from has passed
+                failure = rules.plan_late(settings, plan.solve_time)
+            else:
+                solved = plan
         except SolveError as error:
-            cautions.append(rules.plan_failed(settings, str(error)))
-            return None
-        return plan
+            failure = rules.plan_failed(settings, str(error))
+        return ladder.find(prepared, solved, failure, settings, now - self._planned_at)
 
-    def _drive(self, prepared: Prepared, plan: Optional[Plan], now: float) -> None:
+    def _drive(self, prepared: Prepared, found: ladder.Found, now: float) -> None:
         pursuit = self._pursuit
         assert pursuit is not None
-        if plan is not None:
-            pursuit.install(prepared, plan, now - _SINCE)
+        if found.plan is None:
+            self._begin_stop(now, found.cautions[-1].text, completed=False)
+            return
+        pursuit.install(prepared, found.plan, now - _SINCE)
+        if found.fresh:
             self._planned_at = now
-        else:
-            pursuit.slow_old_plan(now + float(self._history.effect_delay.max()), self._fleet, now - _SINCE)
 
     def _begin_stop(
         self, now: float, reason: str, *, completed: bool, estimate: Optional[Estimate] = None
@@ -741,7 +752,7 @@ class Coordinator:
         assert pursuit is not None
         estimate = estimate or self._observer.estimate(now, self._planned)
         at = now + float(self._history.effect_delay.max())
-        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now)
+        stop = stopping.choose(pursuit.schedule, at, self._fleet, estimate, now, pursuit.reference.fencing)
         pursuit.schedule = pursuit.schedule.splice(stop.schedule, at, now - _SINCE)
         pursuit.freeze(now)
         # Machines stand some lags after their commands do; until then nobody is told that the fleet stands.
@@ -762,6 +773,10 @@ class Coordinator:
         clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
         if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
             cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
+        if self._state is State.MOVING and tick is not None:
+            spare, robot, area = tick.reference.fencing.least(self._fleet, tick.plan.dense(1))
+            if spare < -SHORT:
+                cautions.append(rules.keep_out_ahead(self._settings, self._fleet.names[robot], area, -spare))
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],
@@ -788,8 +803,7 @@ class Coordinator:
 def _figures(made: Reference) -> str:
     """How long a manoeuvre takes and how near the robots come, in words."""
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
-    if np.isfinite(made.clearance):
-        text += f", smallest clearance {made.clearance:.2f} m"
+    text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
     return f"{text}; {made.task.note}" if made.task.note else text
 
 

@@ -72,6 +72,16 @@ class DubinsPath(ArcPath):
     """A path of three forward pieces; ``word`` is one of LSL, RSR, LSR, RSL, RLR, LRL."""
 
 
+def through(pose: np.ndarray, curve: np.ndarray) -> ArcPath:
+    """Arcs through poses of shape (K, 3), headings unwrapped, laid on from a pose."""
+    step = np.diff(curve, axis=0)
+    half, middle = step[:, 2] / 2, curve[:-1, 2] + step[:, 2] / 2
+    length = (step[:, 0] * np.cos(middle) + step[:, 1] * np.sin(middle)) / np.sinc(half / np.pi)
+    driven = np.abs(length) > 1e-6
+    segments = tuple((float(turn / way), float(way)) for turn, way in zip(step[driven, 2], length[driven]))
+    return ArcPath((float(pose[0]), float(pose[1]), float(pose[2])), "through", segments or ((0.0, 0.0),))
+
+
 def shortest(start: Pose, end: Pose, radius: float) -> DubinsPath:
     """The shortest forward path between two poses whose radius is nowhere below ``radius``.
 

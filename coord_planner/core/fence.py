@@ -94,19 +94,32 @@ class Fencing:
         Args:
             poses: shape (N, K, 3).
         """
+        if not (self.pieces or self.lines):
+            return np.zeros((len(fleet), 0, poses.shape[1]))
         corners, shapes = _footprints(fleet, poses)
         columns = [_gaps(corners, shapes, piece) - piece.clearance for piece in self.pieces]
         columns += [reach - (corners @ np.array(normal)).max(axis=2) for normal, reach in self.lines]
-        return np.stack(columns, axis=1) if columns else np.zeros((len(fleet), 0, poses.shape[1]))
+        return np.stack(columns, axis=1)
 
-    def least(self, fleet: Fleet, poses: np.ndarray) -> tuple[float, int, str]:
-        """Smallest spare distance over poses of shape (N, K, 3), whose, and from what; inf when nothing is fenced."""
-        spare = self.spare(fleet, poses).min(axis=2)
-        if not spare.size:
+    def least(
+        self, fleet: Fleet, poses: np.ndarray, growth: np.ndarray | None = None
+    ) -> tuple[float, int, str]:
+        """Smallest spare distance over poses of shape (N, K, 3), whose, and from what; inf when nothing is fenced.
+
+        Args:
+            growth: by how much each outline grows all round, for doubt about where it is, shape (N,), metres.
+        """
+        if not (self.pieces or self.lines):
             return np.inf, -1, ""
+        spare = self.spare(fleet, poses).min(axis=2)
+        if growth is not None:
+            spare = spare - growth[:, None]
         robot, place = np.unravel_index(int(np.argmin(spare)), spare.shape)
         name = self.pieces[place].name if place < len(self.pieces) else "the edge of the strip"
         return float(spare[robot, place]), int(robot), name
+
+
+OPEN = Fencing()  # nothing is fenced off
 
 
 def fencing(settings: Settings, lines: Iterable[Line] = (), others: Iterable[Piece] = ()) -> Fencing:

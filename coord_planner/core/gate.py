@@ -6,6 +6,8 @@ command at the machine's own rates. A limit lowered below the present speed is m
 
 from __future__ import annotations
 
+from typing import Optional
+
 import numpy as np
 
 from .fleet import Fleet
@@ -15,13 +17,16 @@ _TINY = 1e-12
 
 
 def allow(
-    wanted: np.ndarray, last: np.ndarray, elapsed: float, fleet: Fleet, rules: SiteRules
+    wanted: np.ndarray, last: np.ndarray, elapsed: float, fleet: Fleet, rules: SiteRules,
+    caps: np.ndarray | float = np.inf, rolling: Optional[np.ndarray] = None,
 ) -> tuple[np.ndarray, np.ndarray]:
     """Commands that may be sent.
 
     Args:
         wanted: speed and curvature of each robot, shape (N, 2). last: as sent before, shape (N, 2), finite.
-        elapsed: seconds since then.
+        elapsed: seconds since then. caps: speed cap of each robot where it is, shape (N,), m/s.
+        rolling: which way each robot may still be moving, 1 or -1, 0 for one at rest, shape (N,): nobody is sent the
+            other way before it stands. Taken from the last command when left out.
 
     Returns:
         commands that may be sent, shape (N, 2), and which robots' wishes were not finite, shape (N,) of bool;
@@ -34,9 +39,12 @@ def allow(
     curvature = np.clip(wanted[:, 1], -top_curvature, top_curvature)
     curvature = np.clip(curvature, last[:, 1] - steer, last[:, 1] + steer)
     low, high = _reachable(last[:, 0], elapsed, fleet)
-    top = np.minimum(fleet.limit("max_speed"), rules.max_speed)
-    bottom = np.minimum(fleet.limit("min_speed"), 0.0)
-    speed = np.clip(np.clip(wanted[:, 0], bottom, top), low, high)
+    cap = np.minimum(rules.max_speed, caps)
+    top = np.minimum(fleet.limit("max_speed"), cap)
+    bottom = np.maximum(np.minimum(fleet.limit("min_speed"), 0.0), -cap)
+    gear = np.sign(last[:, 0]) if rolling is None else rolling
+    asked = np.where(gear * wanted[:, 0] < 0.0, 0.0, wanted[:, 0])
+    speed = np.clip(np.clip(asked, bottom, top), low, high)
     fastest = _fastest(curvature, fleet, rules)
     speed = np.clip(np.clip(speed, -fastest, fastest), low, high)
     curvature = _unwound(speed, curvature, last[:, 1], steer, fleet, rules)
@@ -48,7 +56,7 @@ def _reachable(last: np.ndarray, elapsed: float, fleet: Fleet) -> tuple[np.ndarr
     faster, slower = fleet.limit("max_acceleration") * elapsed, fleet.limit("max_braking") * elapsed
     low = np.where(last > 0, last - slower, last - faster)
     high = np.where(last < 0, last + slower, last + faster)
-    # Through zero: what is left of the step counts as speeding up the other way.
+    # Never through zero in one step.
     low = np.where((last > 0) & (low < 0), 0.0, low)
     high = np.where((last < 0) & (high > 0), 0.0, high)
     return low, high

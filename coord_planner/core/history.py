@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections import deque
 from collections.abc import Callable
 
 import numpy as np
+
+from .schedule import Schedule
 
 _KEPT = 200  # sendings; ten seconds at the usual rate
 
@@ -22,34 +23,45 @@ class CommandHistory:
 
     def __init__(self, command_delays: np.ndarray, period: float) -> None:
         self.effect_delay = np.asarray(command_delays, dtype=float) + period / 2  # shape (N,), seconds
-        self._times: deque[float] = deque(maxlen=_KEPT)
-        self._values: deque[np.ndarray] = deque(maxlen=_KEPT)
+        self._sent = self._nothing = Schedule(np.zeros(0), np.zeros((len(self.effect_delay), 0, 2)))
+        self._gear = np.zeros(len(self.effect_delay))
+        self._driven = np.full(len(self.effect_delay), -np.inf)  # when a speed was last sent, seconds
 
     def add(self, time: float, values: np.ndarray) -> None:
         """Remember what was sent: speeds and curvatures, shape (N, 2)."""
-        self._times.append(time)
-        self._values.append(np.array(values, dtype=float))
+        kept, values = self._sent, np.array(values, dtype=float)
+        self._sent = Schedule(
+            np.append(kept.times[1 - _KEPT :], time),
+            np.concatenate([kept.values[:, 1 - _KEPT :], values[:, None]], axis=1),
+        )
+        moving = np.abs(values[:, 0]) > 0.0
+        self._gear = np.where(moving, np.sign(values[:, 0]), self._gear)
+        self._driven = np.where(moving, time, self._driven)
+
+    def rolling(self, now: float, rest: np.ndarray) -> np.ndarray:
+        """Which way each robot may still be moving: 1, -1, or 0 when it was told to stand for ``rest`` seconds."""
+        return np.where(now - self._driven < rest - 1e-9, self._gear, 0.0)
 
     def clear(self) -> None:
         """Forget everything: nothing is in flight any more."""
-        self._times.clear()
-        self._values.clear()
+        self._sent = self._nothing
+        self._driven[:] = -np.inf
 
     def grow(self, command_delays: np.ndarray, period: float) -> None:
         """Room for robots that come last from now on; they have been sent zeros. Delays of all, shape (N,)."""
-        more = np.zeros((len(command_delays) - len(self.effect_delay), 2))
-        self._values = deque((np.concatenate([each, more]) for each in self._values), maxlen=_KEPT)
+        more = len(command_delays) - len(self.effect_delay)
+        self._sent, self._nothing = self._sent.grown(more), self._nothing.grown(more)
+        self._gear, self._driven = np.append(self._gear, np.zeros(more)), np.append(self._driven, [-np.inf] * more)
         self.effect_delay = np.asarray(command_delays, dtype=float) + period / 2
 
     def forget(self, rows: list[int]) -> None:
         """Some robots were let go: whatever they were sent no longer counts."""
-        for each in self._values:
-            each[rows] = 0.0
+        self._sent = self._sent.stilled(rows)
 
     @property
     def last(self) -> tuple[float, np.ndarray] | None:
         """Moment and values of the last sending."""
-        return (self._times[-1], self._values[-1]) if self._times else None
+        return (float(self._sent.times[-1]), self._sent.values[:, -1]) if len(self._sent.times) else None
 
     def in_effect(self, times: np.ndarray, planned: Planned | None) -> np.ndarray:
         """Speeds and curvatures in effect at moments of each robot's own, shape (N, K) -> (N, K, 2).
@@ -57,12 +69,8 @@ class CommandHistory:
         What was sent counts as far as it reaches; beyond it the plan does, or, without one, the last value.
         """
         found = np.zeros(times.shape + (2,)) if planned is None else planned(times)
-        if not self._times:
+        if not len(self._sent.times):
             return found
-        sent, values = np.array(self._times), np.stack(self._values)
-        for k in range(len(times)):
-            effect = sent + self.effect_delay[k]
-            known = slice(None) if planned is None else times[k] <= effect[-1]
-            for column in range(2):
-                found[k, known, column] = np.interp(times[k, known], effect, values[:, k, column])
-        return found
+        when = times - self.effect_delay[:, None]  # of sending
+        sent = self._sent.at(when)
+        return sent if planned is None else np.where((when <= self._sent.times[-1])[..., None], sent, found)

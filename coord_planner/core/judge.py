@@ -47,7 +47,6 @@ class View:
     pursuit: Pursuit
     at: float
     period: float
-    planned_at: float
     refused_change: str
     silence: Optional[Silence]
     outside: frozenset[str] = frozenset()
@@ -66,7 +65,7 @@ class Judge:
     def look(self, view: View) -> list[Caution]:
         """Everything that is wrong at this moment, in motion."""
         found = [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
-        found += [*_following(view), *self._limits(view), *_plans(view), *_spacing(view)]
+        found += [*_following(view), *self._limits(view), *_plans(view), *_spacing(view), *_fenced(view)]
         found = [caution for caution in found if caution.subject not in view.outside]
         return found + [rules.not_joined(view.settings, name, reason) for name, reason in view.waiting.items()]
 
@@ -155,9 +154,6 @@ def _plans(view: View) -> list[Caution]:
     found = []
     if view.refused_change:
         found.append(rules.change_refused(view.settings, view.refused_change))
-    without = view.snapshot.time - view.planned_at
-    if without > view.settings.horizon.keep:
-        found.append(rules.plans_missing(view.settings, without))
     if view.silence is not None and view.silence.clearance < view.settings.site_rules.min_clearance - SHORT:
         found.append(rules.silence_unsafe(view.settings, view.silence))
     return found
@@ -185,6 +181,29 @@ def _spacing(view: View) -> list[Caution]:
     if at_once.clearance <= later.clearance + SHORT:
         return []  # stopping gains nothing: the plan itself leads away
     return [rules.free_way_short(settings, _names(fleet, later.pair), later.clearance)]
+
+
+def _fenced(view: View) -> list[Caution]:
+    """Keep-outs: whether somebody is too near now, and whether a stop begun a tick later would still keep him off."""
+    settings, fleet, estimate = view.settings, view.fleet, view.estimate
+    fencing = view.pursuit.reference.fencing
+    poses = estimate.states[:, None, POSE]
+    if not (fencing.pieces or fencing.lines) or not np.isfinite(poses).all():
+        return []
+    spare, robot, name = fencing.least(fleet, poses, estimate.growth)
+    if spare < -2.0 * settings.poses.noise_xy:
+        return [rules.keep_out_breached(settings, fleet.names[robot], name, -spare)]
+    if not _troubled(view):
+        return []
+    now = view.snapshot.time
+    later = stopping.choose(view.pursuit.schedule, view.at + view.period, fleet, estimate, now, fencing)
+    spare, robot, name = later.spare
+    if spare >= 0.0:
+        return []
+    at_once = stopping.choose(view.pursuit.schedule, view.at, fleet, estimate, now, fencing)
+    if at_once.spare[0] <= spare + SHORT:
+        return []
+    return [rules.keep_out_unavoidable(settings, fleet.names[robot], name, -spare)]
 
 
 def _troubled(view: View) -> bool:

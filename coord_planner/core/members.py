@@ -25,8 +25,9 @@ from .reference import Reference
 from .settings import Settings
 from .watch import choose_pairs
 
+_STANDING = 5e-3  # m/s
 _FINE = 0.05  # seconds between poses that stand for a way
-_PER_ROBOT = ("ways",)  # fields of a task that hold one thing a robot without being arrays
+_PER_ROBOT = ("ways", "drives")  # fields of a task that hold one thing a robot without being arrays
 
 
 def grown(carried: Fleet, wanted: Fleet, new: Collection[str]) -> Fleet:
@@ -53,7 +54,9 @@ def padded(task: Task, leaders: Mapping[int, int], count: int, poses: np.ndarray
         leaders: position of each robot among ``count`` -> its position in the task.
         poses: where the ``count`` robots are, shape (count, 3).
     """
-    before = task.stands
+    before, otherwise = task.stands, task.otherwise
+    if otherwise is not None:
+        otherwise = padded(otherwise, leaders, count, poses)
     task = _picked(task, [leaders.get(k, 0) for k in range(count)])
     new = [k for k in range(count) if k not in leaders]
     ends, ways = task.ends.copy(), list(task.ways)
@@ -61,7 +64,7 @@ def padded(task: Task, leaders: Mapping[int, int], count: int, poses: np.ndarray
     for k in new:
         ways[k] = _nowhere(poses[k])
     stands = {*new, *(k for k, row in leaders.items() if row in before)}
-    return attrs.evolve(task, ends=ends, ways=tuple(ways), stands=tuple(sorted(stands)))
+    return attrs.evolve(task, ends=ends, ways=tuple(ways), stands=tuple(sorted(stands)), otherwise=otherwise)
 
 
 def extended(made: Reference, fleet: Fleet, settings: Settings, poses: np.ndarray) -> Reference:
@@ -110,7 +113,7 @@ def reassigned(
     drivers = [k for k in range(len(fleet)) if k not in stands and k not in joining]
     leaders = {k: drivers[int(np.argmin(hops[k, drivers]))] if drivers else -1 for k in joining}
     rows = [leaders.get(k, k) for k in range(len(fleet))]
-    task = attrs.evolve(_picked(task, rows), stands=stands)
+    task = attrs.evolve(_picked(task, rows), stands=stands, otherwise=None)
     ends, ways = task.ends.copy(), list(task.ways)
     ends[[*stands, *joining]] = np.nan
     for k in joining:
@@ -186,8 +189,8 @@ def resumed(
         left[k] = task.ways[k] if np.isfinite(task.ends[k, 2]) else None
     for k in task.stands:
         left[k] = _nowhere(poses[k])
-    remaining = manoeuvre.go_on(task, fleet, settings, poses, graph.hops(), tuple(left))
-    return reference.make_again(attrs.evolve(remaining, stands=task.stands), fleet, graph, settings, states)
+    remaining = manoeuvre.go_on(task, fleet, settings, poses, graph.hops(), tuple(left), since)
+    return reference.make_again(_standing_too(remaining, task.stands), fleet, graph, settings, states)
 
 
 def replaced(
@@ -202,6 +205,7 @@ def replaced(
     rows = [k for k, each in enumerate(fleet.names) if each in driving]
     if not rows:
         raise RefusedError(f"{name}: nobody is driven who could go on", "begin it when the fleet is idle")
+    _check_forward(name, fleet, states, rows)
     own = Fleet(tuple(fleet.robots[k] for k in rows))
     task = manoeuvre.work_out(
         name, wanted, own, settings, states[rows, POSE], float(states[rows, SPEED_COMMAND].max()),
@@ -209,6 +213,22 @@ def replaced(
     )
     task = padded(task, {k: i for i, k in enumerate(rows)}, len(fleet), states[:, POSE])
     return reference.make(task, fleet, graph, settings, states)
+
+
+def _standing_too(task: Task, stands: tuple[int, ...]) -> Task:
+    """A task, and those that are tried otherwise, in which some robots stand."""
+    otherwise = None if task.otherwise is None else _standing_too(task.otherwise, stands)
+    return attrs.evolve(task, stands=stands, otherwise=otherwise)
+
+
+def _check_forward(name: str, fleet: Fleet, states: np.ndarray, rows: list[int]) -> None:
+    """A manoeuvre that replaces another begins with everyone driving forward or standing."""
+    backward = [fleet.names[k] for k in rows if states[k, SPEED_COMMAND] < -_STANDING]
+    if backward:
+        raise RefusedError(
+            f"{name}: {', '.join(backward)} will be driving backward when it would take over",
+            "ask again when all drive forward, or halt the fleet first",
+        )
 
 
 def _picked(task: Task, rows: list[int]) -> Task:

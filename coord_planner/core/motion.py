@@ -28,13 +28,11 @@ def drive(
     """
     decay = np.where(lag > 0, np.exp(-h[:, None] / np.maximum(lag, 1e-6)), 0.0)
     steps = commands.shape[1]
-    path = np.empty((len(poses), steps + 1, 3))
-    path[:, 0] = pose = poses
+    nodes = np.empty((len(poses), steps + 1, 2))
+    nodes[:, 0] = reached
+    new = commands * (1.0 - decay)[:, None]
     for i in range(steps):
-        after = commands[:, i] + (reached - commands[:, i]) * decay
-        middle = (reached + after) / 2
-        distance = middle[:, 0] * h * factor
-        pose = np.stack(se2.arc(pose[:, 0], pose[:, 1], pose[:, 2], distance, distance * middle[:, 1]), axis=1)
-        path[:, i + 1] = pose
-        reached = after
-    return path, reached
+        nodes[:, i + 1] = new[:, i] + nodes[:, i] * decay
+    middle = (nodes[:, :-1] + nodes[:, 1:]) / 2
+    distances = middle[..., 0] * (h * factor)[:, None]
+    return se2.rollout(poses, distances, distances * middle[..., 1]), nodes[:, -1]

@@ -27,6 +27,7 @@ _STEP = 4.0  # factor from one coupling to the next on the way
 _HOPS = (24, 12)  # disturbances of the best at the end, and for each robot more
 _REFINED = 5  # minima that are looked at on more intervals
 _BETWEEN = 80  # intervals on which most of them drop out
+_HOPS_CLOSER = 20  # on twice as many intervals
 _HOPS_BETWEEN = 16  # disturbances there, where curls turn by more than _TIGHT radians in an interval
 _TIGHT = 1.5
 _LONG = 150  # iterations for plans on more intervals
@@ -66,10 +67,10 @@ class _Tally:
 
 
 def minima(
-    problem: ClassicalProblem, *, seed: int = 0, intervals: int = INTERVALS, hops: Optional[int] = None,
+    problem: ClassicalProblem, *, seed: int = 0, hops: Optional[int] = None,
     progress: Progress = lambda _part: None,
 ) -> Minima:
-    """Minima of the coupled problem on few intervals.
+    """Minima of the coupled problem on few intervals; on twice as many where curls are too tight for these.
 
     Args:
         seed: of the disturbances. hops: disturbances of the best at the end; more for more robots when left out.
@@ -78,6 +79,18 @@ def minima(
     Raises:
         SolveError: no first guess led to a plan that meets the ends.
     """
+    rough = _minima(problem, seed, INTERVALS, hops, progress)
+    if len(problem) == 1 or not _tight(rough.best):
+        return rough
+    closer = _minima(problem, seed, 2 * INTERVALS, _HOPS_CLOSER if hops is None else hops, progress)
+    same = [minimise(problem, resampled(plan.curvature, 2 * INTERVALS), _LONG) for plan in rough.found[:_REFINED]]
+    tried, converged = rough.tried + closer.tried, rough.converged + closer.converged
+    return Minima(tuple(distinct([*closer.found, *same])), tried, converged)
+
+
+def _minima(
+    problem: ClassicalProblem, seed: int, intervals: int, hops: Optional[int], progress: Progress
+) -> Minima:
     own = [shapes(alone(problem, robot), intervals) for robot in range(len(problem))]
     if len(problem) == 1:
         return Minima(own[0].minima, own[0].tried, own[0].converged)
@@ -113,7 +126,7 @@ def refined(problem: ClassicalProblem, rough: Minima, intervals: int, seed: int 
     plans = [plan for plan in rough.found[:_REFINED] if plan.cost <= rough.best.cost * (1 + _NEARLY[0])]
     if intervals >= _BETWEEN:
         plans = distinct(minimise(problem, resampled(plan.curvature, _BETWEEN), _LONG) for plan in plans)
-        if plans and np.abs(rough.best.curvature).max() > _TIGHT * rough.best.curvature.shape[1]:
+        if plans and _tight(rough.best):
             plans = _disturbed(problem, plans, np.random.default_rng(seed))
         plans = [plan for plan in plans if plan.cost <= plans[0].cost * (1 + _NEARLY[1])]
     plans = distinct(minimise(problem, resampled(plan.curvature, intervals), _LONG) for plan in plans)
@@ -128,6 +141,11 @@ def _disturbed(problem: ClassicalProblem, plans: list[Coarse], random: np.random
         guess = plans[min(int(random.integers(3)), len(plans) - 1)].curvature
         plans = distinct([*plans, minimise(problem, guess + disturbance(guess.shape, random), _LONG)])
     return plans
+
+
+def _tight(plan: Coarse) -> bool:
+    """Whether a robot turns so far in an interval that other minima may look alike."""
+    return bool(np.abs(plan.curvature).max() > _TIGHT * plan.curvature.shape[1])
 
 
 def distinct(plans: Iterable[Coarse], most: Optional[int] = None) -> list[Coarse]:

@@ -25,6 +25,7 @@ _ONE_SIDED = 1.5
 _AFRESH = 0.3
 _FRESH = 0.15  # seconds; up to this age an estimate is as good as the margin of the plan takes it to be
 _SLOWLY = 0.08  # part of the newest in the running mean of squared innovations
+_TELLING = 0.2  # m/s from which a machine's factor may change as fast as _DRIFT says
 _FACTOR_DOUBT = 0.08  # a speed factor nearer to 1 than this is taken for noise
 
 
@@ -168,6 +169,7 @@ class Observer:
         jacobian[:, 0, 3], jacobian[:, 1, 3] = (way / factor[:, None]).T
         jacobian[:, 2, 3] = moved[:, 2] / factor
         drift = np.diag(_DRIFT**2)[None] * span[:, None, None]
+        drift[:, 3, 3] *= np.clip(np.abs(reached[:, 0]) / _TELLING, 0.0, 1.0)  # who stands neither slips nor is held up
         self._cov[which] = jacobian @ self._cov[which] @ np.swapaxes(jacobian, 1, 2) + drift
         self._mean[which], self._reached[which], self._stamp[which] = mean, reached, to
 

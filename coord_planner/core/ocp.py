@@ -47,12 +47,13 @@ def variable_blocks(shape: Shape) -> Blocks:
     rates = {"curvature_rate": (n, m), "acceleration": (n, m)}
     missed = {"over": (n, len(STATES)), "under": (n, len(STATES))}
     slacks = {"short": (len(shape.pairs), m), "outside": (len(shape.fenced), m), **missed}
-    return Blocks({**states, **rates, **slacks})
+    return Blocks({**states, **rates, **slacks, "compared": (n if shape.compared else 0, m)})
 
 
 def parameter_blocks(shape: Shape) -> Blocks:
     """All numbers that a built program is given."""
     n, m, e, p, f = shape.robots, shape.intervals, len(shape.edges), len(shape.pairs), len(shape.fenced)
+    r, w = (len(shape.compared), shape.compared[0][3]) if shape.compared else (0, 0)
     return Blocks({
         "h": (1, m), "cost_h": (1, m), "asked_speed": (n, m), "full_speed": (n, 1), "turn_speed": (n, m),
         "compare_speed": (n, m), "coupling": (e, 1), "alignment": (e, 1),
@@ -62,6 +63,7 @@ def parameter_blocks(shape: Shape) -> Blocks:
         "normal_x": (p, m), "normal_y": (p, m), "gap": (p, m),
         "fence_x": (f, m), "fence_y": (f, m), "fence_reach": (f, m),
         "half_length": (n, 1), "half_width": (n, 1), "offset_x": (n, 1), "offset_y": (n, 1),
+        "compare_first": (r, w), "compare_second": (r, w), "compare_known": (r, 1), "compare_seconds": (r, 1),
     })
 
 
@@ -71,7 +73,7 @@ def row_blocks(shape: Shape) -> Blocks:
     motion = {f"step_{name}": (n, m) for name in STATES}
     return Blocks({
         **motion, "turn_rate": (n, m), "lateral": (n, m), "clearance": (len(shape.pairs), m),
-        "fence": (len(shape.fenced), m), "end": (n, len(STATES)),
+        "fence": (len(shape.fenced), m), "end": (n, len(STATES)), "compared": (n if shape.compared else 0, m),
     })
 
 
@@ -110,6 +112,17 @@ def turning_cost(
     for (k, j), weight in zip(edges, ca.vertsplit(weights) if edges else []):
         own = own + weight * (compared[k, :] - compared[j, :]) ** 2
     return ca.dot(own, h) / 2
+
+
+def comparison_cost(v: Named, p: Named, shape: Shape) -> Matrix:
+    """1/2 coupling times the squares of the differences that stand in the place of those at equal moments."""
+    total: Matrix = ca.SX(0)
+    for r, (e, first, second, width) in enumerate(shape.compared or ()):
+        k, j = shape.edges[e]
+        difference = ca.dot(p["compare_first"][r, :], v["compared"][k, first : first + width])
+        difference -= ca.dot(p["compare_second"][r, :], v["compared"][j, second : second + width])
+        total += p["coupling"][e] * p["compare_seconds"][r] * (difference + p["compare_known"][r]) ** 2
+    return total / 2
 
 
 def alignment_cost(theta: Matrix, weights: Matrix, edges: tuple[tuple[int, int], ...], h: Matrix) -> Matrix:
@@ -219,11 +232,12 @@ def build(shape: Shape) -> Program:
         "clearance": clearance_rows(v, p, shape.pairs),
         "fence": fence_rows(v, p, shape.fenced),
         "end": last - p["target"] - v["over"] + v["under"],
+        "compared": turn_rate / p["compare_speed"] - v["compared"] if shape.compared else v["compared"],
     })
+    at_once = () if shape.compared else shape.edges
     f = (
-        turning_cost(
-            turn_rate / p["turn_speed"], p["coupling"], shape.edges, p["cost_h"], turn_rate / p["compare_speed"]
-        )
+        turning_cost(turn_rate / p["turn_speed"], p["coupling"], at_once, p["cost_h"], turn_rate / p["compare_speed"])
+        + comparison_cost(v, p, shape)
         + alignment_cost(v["theta"], p["alignment"], shape.edges, p["cost_h"])
         + small_prices(v, p, mean_speed)
         + steep_prices(v, p)
@@ -236,6 +250,8 @@ def numbers(problem: Problem) -> np.ndarray:
     fleet, prices = problem.fleet, problem.prices
     footprints = [robot.footprint for robot in fleet.robots]
     free = np.isnan(problem.target)
+    nothing = np.zeros((0, 0))
+    compared = problem.compared if problem.shape.compared else None
     values = {
         "h": problem.intervals[None, :],
         "cost_h": problem.intervals[None, :] * problem.pace,
@@ -263,6 +279,10 @@ def numbers(problem: Problem) -> np.ndarray:
         "half_width": np.array([[f.footprint_width / 2] for f in footprints]),
         "offset_x": np.array([[f.footprint_offset_x] for f in footprints]),
         "offset_y": np.array([[f.footprint_offset_y] for f in footprints]),
+        "compare_first": nothing if compared is None else compared.first,
+        "compare_second": nothing if compared is None else compared.second,
+        "compare_known": np.zeros((0, 1)) if compared is None else compared.known[:, None],
+        "compare_seconds": np.zeros((0, 1)) if compared is None else compared.seconds[:, None],
     }
     return parameter_blocks(problem.shape).pack(values)
 
@@ -280,12 +300,13 @@ def variable_bounds(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
         lower[name][:, 0] = upper[name][:, 0] = problem.initial[:, i]
     steer = np.broadcast_to(fleet.limit("max_curvature_rate")[:, None], (n, m))
     lower["curvature_rate"], upper["curvature_rate"] = -steer, steer
-    lower["acceleration"] = np.broadcast_to(-fleet.limit("max_braking")[:, None], (n, m))
-    upper["acceleration"] = np.broadcast_to(fleet.limit("max_acceleration")[:, None], (n, m))
+    lower["acceleration"], upper["acceleration"] = problem.rates_of_speed
     lower["short"], upper["short"] = np.zeros((len(shape.pairs), m)), np.full((len(shape.pairs), m), np.inf)
     lower["outside"], upper["outside"] = np.zeros((len(shape.fenced), m)), np.full((len(shape.fenced), m), np.inf)
     for name in ("over", "under"):
         lower[name], upper[name] = np.zeros(free.shape), np.where(free, 0.0, np.inf)
+    lower["compared"] = np.full((n if shape.compared else 0, m), -np.inf)
+    upper["compared"] = -lower["compared"]
     layout = variable_blocks(shape)
     return layout.pack(lower), layout.pack(upper)
 
@@ -301,6 +322,7 @@ def row_bounds(problem: Problem) -> tuple[np.ndarray, np.ndarray]:
     lower["clearance"], upper["clearance"] = 0.0, np.inf
     lower["fence"], upper["fence"] = np.where(np.isfinite(problem.fences.reaches), 0.0, -np.inf), np.inf
     lower["end"], upper["end"] = np.where(free, -np.inf, 0.0), np.where(free, np.inf, 0.0)
+    lower["compared"] = upper["compared"] = 0.0
     layout = row_blocks(shape)
     return layout.pack(lower), layout.pack(upper)
 

@@ -53,16 +53,16 @@ class Plan:
 
     def state(self, time: float) -> np.ndarray:
         """States at one moment, shape (N, 7). The pose follows the arc of the interval; the rest is linear."""
-        i = int(np.clip(np.searchsorted(self.times, time, side="right") - 1, 0, len(self.times) - 2))
-        part = float(np.clip((time - self.times[i]) / (self.times[i + 1] - self.times[i]), 0.0, 1.0))
-        before, after = self.states[:, i], self.states[:, i + 1]
-        mixed = (1.0 - part) * before + part * after
-        mixed[:, POSE] = _along_arc(before[:, POSE], after[:, POSE], part)
-        return mixed
+        return self.sample(np.array([time]))[:, 0]
 
     def sample(self, times: np.ndarray) -> np.ndarray:
         """States at several moments, shape (N, K, 7)."""
-        return np.stack([self.state(float(time)) for time in times], axis=1)
+        i = np.clip(np.searchsorted(self.times, times, side="right") - 1, 0, len(self.times) - 2)
+        part = np.clip((times - self.times[i]) / (self.times[i + 1] - self.times[i]), 0.0, 1.0)
+        before, after = self.states[:, i], self.states[:, i + 1]
+        mixed: np.ndarray = (1.0 - part)[:, None] * before + part[:, None] * after
+        mixed[:, :, POSE] = _along_arc(before[:, :, POSE], after[:, :, POSE], part)
+        return mixed
 
     def closest(self, between: int = 2) -> tuple[float, tuple[int, int]]:
         """Smallest exact clearance over all pairs, at the nodes and ``between`` moments in each interval."""
@@ -71,8 +71,8 @@ class Plan:
     def dense(self, between: int) -> np.ndarray:
         """Poses at the nodes and at ``between`` moments in each interval, shape (N, K, 3)."""
         parts = np.linspace(0.0, 1.0, between + 1, endpoint=False)
-        before, after = self.poses[:, :-1], self.poses[:, 1:]
-        pieces = np.stack([_along_arc(before, after, part) for part in parts], axis=2)
+        before, after = self.poses[:, :-1, None], self.poses[:, 1:, None]
+        pieces = _along_arc(before, after, parts)
         return np.concatenate([pieces.reshape(len(self.states), -1, 3), self.poses[:, -1:]], axis=1)
 
 
@@ -99,8 +99,8 @@ def near_pairs(fleet: Fleet, poses: np.ndarray, gap: float) -> np.ndarray:
     return pairs[free < max(gap, float(free.min()) + 1.0)]
 
 
-def _along_arc(before: np.ndarray, after: np.ndarray, part: float) -> np.ndarray:
-    """Pose a part of the way along the arc that joins two poses (constant twist), shapes (..., 3)."""
+def _along_arc(before: np.ndarray, after: np.ndarray, part: np.ndarray) -> np.ndarray:
+    """Poses a part (...) of the way along the arcs that join poses (constant twist), shapes (..., 3)."""
     a, b = np.moveaxis(before, -1, 0), np.moveaxis(after, -1, 0)
     twist = se2.log(*se2.compose(se2.inverse(tuple(a)), tuple(b)))
     step = se2.exp(*(part * component for component in twist))

@@ -19,22 +19,26 @@ from .reference import Reference
 from .schedule import Schedule, constant, of_plan
 from .settings import Settings
 from .solver import Start
-from .stopping import slowed
 from .tick import Tick
 
 _FALL = 0.9  # part of the weakest brake with which the pace may fall
-_WORTH_SLOWING = 0.98  # part of its pace to which an old plan is slowed at the least
 _SLOW = 0.3  # part of the asked speed below which the pace falls no faster
 
 
 @attrs.frozen(eq=False)
 class Prepared:
-    """A tick that is ready to be solved."""
+    """A tick that is ready to be solved.
+
+    Attributes:
+        s: its nodes in seconds of the manoeuvre, shape (M + 1,). reference: that it ends on.
+        slower: the group's pace as a part of what it was for the plan being driven.
+    """
 
     problem: Problem
     s: np.ndarray
     start: Start
     reference: Reference
+    slower: float
 
 
 @attrs.frozen(eq=False)
@@ -67,7 +71,7 @@ class Pursuit:
         self.taken_over = 0  # references so far
         self._s, self._time = at, begins
         self._updated = begins
-        self._schedule_pace = 1.0
+        self._plan_pace = 1.0  # of the plan being driven
         self.behind = np.zeros(len(fleet))
 
     def freeze(self, now: float) -> None:
@@ -109,15 +113,15 @@ class Pursuit:
         """Move the group on, and slow it when one of them is held up; nobody waits for those at ``outside``."""
         s_now = self.s(now)
         asked = self.reference.state(max(s_now, self.reference.plan.times[0]))
-        heading = asked[:, THETA]
-        ahead = np.stack([np.cos(heading), np.sin(heading)], axis=1)
+        heading, gear = asked[:, THETA], self.reference.task.directions(s_now)
+        ahead = gear[:, None] * np.stack([np.cos(heading), np.sin(heading)], axis=1)
         self.behind = np.sum((asked[:, :2] - estimate.states[:, :2]) * ahead, axis=1)
-        expected = np.minimum(estimate.states[:, SPEED_COMMAND], self.pace * asked[:, SPEED])
-        deficit = np.maximum(expected - estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
+        expected = np.minimum(gear * estimate.states[:, SPEED_COMMAND], self.pace * gear * asked[:, SPEED])
+        deficit = np.maximum(expected - gear * estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
         aside = [*self.reference.task.stands, *outside]
         self.behind[aside] = deficit[aside] = 0.0
         elapsed = max(now - self._updated, 0.0)
-        fastest = max(float(np.max(asked[:, SPEED])), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
+        fastest = max(float(np.max(np.abs(asked[:, SPEED]))), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
         fall = _FALL * float(np.min(fleet.limit("max_braking"))) / fastest
         self._s, self._time, self._updated = s_now, now, now
         if s_now >= 0.0:
@@ -151,20 +155,13 @@ class Pursuit:
             self.reference, fleet, settings, initial, max(self.s(at), 0.0), at, self.pace, self.tick,
             self.progress.lag,
         )
-        return Prepared(problem, s, start, self.reference)
+        return Prepared(problem, s, start, self.reference, 1.0 if self.tick is None else self.pace / self._plan_pace)
 
     def install(self, prepared: Prepared, plan: Plan, since: float) -> None:
         """Drive a solved plan from its first node on."""
         self.tick = Tick(plan, prepared.s, prepared.reference)
         self.schedule = self.schedule.splice(of_plan(plan), float(plan.times[0]), since)
-        self._schedule_pace = prepared.problem.pace
-
-    def slow_old_plan(self, at: float, fleet: Fleet, since: float) -> None:
-        """Drive the last plan on, for want of a new one, but no faster than the group's pace has become."""
-        ratio = self.pace / self._schedule_pace
-        if ratio < _WORTH_SLOWING:
-            self.schedule = self.schedule.splice(slowed(self.schedule, at, fleet, ratio), at, since)
-            self._schedule_pace = self.pace
+        self._plan_pace = prepared.problem.pace
 
     def _carried(self, new: Reference) -> Optional[Tick]:
         """The last plan as a start for the rest of the same manoeuvre, where the problems have the same shape."""

@@ -9,10 +9,11 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError
-from . import grid, ocp, se2, solver
+from . import grid, ocp, solver, succession
+from .caps import planned_caps
 from .case import PlannerCase
-from .dubins import ArcPath
-from .fence import Fencing, fencing
+from .dubins import ArcPath, through
+from .fence import OPEN, Fencing, fencing
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -60,7 +61,7 @@ class Reference:
     graph: NeighbourGraph
     clearance: float
     pair: tuple[int, int]
-    fencing: Fencing = Fencing()
+    fencing: Fencing = OPEN
 
     @property
     def end(self) -> float:
@@ -69,20 +70,23 @@ class Reference:
 
     def state(self, s: float) -> np.ndarray:
         """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
-        states = self.plan.state(min(s, self.end))
-        if s > self.end:
-            speeds = np.full(len(states), self.task.end_speed)
-            speeds[list(self.task.stands)] = 0.0
-            heading = states[:, THETA]
-            states[:, 0] += speeds * (s - self.end) * np.cos(heading)
-            states[:, 1] += speeds * (s - self.end) * np.sin(heading)
-            states[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
-            states[:, [SPEED, SPEED_COMMAND]] = speeds[:, None]
-        return states
+        return self.states(np.array([s]))[:, 0]
 
     def states(self, s: np.ndarray) -> np.ndarray:
         """States at several moments, shape (N, K, 7)."""
-        return np.stack([self.state(float(moment)) for moment in s], axis=1)
+        states = self.plan.sample(np.minimum(s, self.end))
+        after = s > self.end
+        if after.any():
+            speeds = np.full((len(states), 1), self.task.end_speed)
+            speeds[list(self.task.stands)] = 0.0
+            ahead, heading = speeds * (s[after] - self.end), states[:, after, THETA]
+            states[:, after, 0] += ahead * np.cos(heading)
+            states[:, after, 1] += ahead * np.sin(heading)
+            for column in (CURVATURE, CURVATURE_COMMAND):
+                states[:, after, column] = 0.0
+            for column in (SPEED, SPEED_COMMAND):
+                states[:, after, column] = speeds
+        return states
 
 
 def ways_left(made: Reference, poses: np.ndarray, since: float) -> tuple[Optional[ArcPath], ...]:
@@ -96,19 +100,9 @@ def ways_left(made: Reference, poses: np.ndarray, since: float) -> tuple[Optiona
     off = np.abs(curves - poses[:, None]).max(axis=2)  # metres and radians alike
     nearest = np.argmin(off, axis=1)
     return tuple(
-        _along(pose, curve[i:]) if distances[i] < _ON_WAY else None
+        through(pose, curve[i:]) if distances[i] < _ON_WAY else None
         for pose, curve, distances, i in zip(poses, curves, off, nearest)
     )
-
-
-def _along(pose: np.ndarray, curve: np.ndarray) -> ArcPath:
-    """Arcs through poses of shape (K, 3), laid on from a pose."""
-    step = np.diff(curve, axis=0)
-    half, middle = step[:, 2] / 2, curve[:-1, 2] + step[:, 2] / 2
-    length = (step[:, 0] * np.cos(middle) + step[:, 1] * np.sin(middle)) / se2.sinc(half)
-    driven = np.abs(length) > 1e-6
-    segments = tuple((float(turn / way), float(way)) for turn, way in zip(step[driven, 2], length[driven]))
-    return ArcPath((float(pose[0]), float(pose[1]), float(pose[2])), "left", segments or ((0.0, 0.0),))
 
 
 def make(
@@ -123,8 +117,24 @@ def make(
         end_kept: metres or radians by which an end may be missed.
 
     Raises:
-        RefusedError: an end or the site's clearance cannot be kept, with the figures.
+        RefusedError: an end or the site's clearance cannot be kept, with the figures: not on this way nor on others.
     """
+    try:
+        return _made(task, fleet, graph, settings, initial, start, guess, end_kept)
+    except RefusedError:
+        if task.otherwise is None or guess is not None:
+            raise
+        try:
+            return make(task.otherwise, fleet, graph, settings, initial, start, None, end_kept)
+        except RefusedError:
+            pass  # the reason is that of the first
+        raise
+
+
+def _made(
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, start: float,
+    guess: Optional[np.ndarray], end_kept: float,
+) -> Reference:
     times = grid.until(start, task.duration, settings.horizon.interval)
     guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
@@ -194,11 +204,8 @@ def _stretched(
 ) -> tuple[Task, Fleet, NeighbourGraph, Settings, np.ndarray, float, np.ndarray]:
     """Arguments of make for the rest in a longer time, with the old plan, slowed, as the guess."""
     step = settings.horizon.interval
-    settle = task.duration - task.arrival
-    arrival = step * int(np.ceil((start + max(task.arrival - start, 0.0) * stretch) / step - 1e-9))
-    end = arrival + settle
-    pacing = ((start, arrival), (float(task.profile_time(np.array(start))), task.profile.duration))
-    slower = attrs.evolve(task, arrival=arrival, duration=end, pacing=pacing)
+    slower = task.stretched(start, stretch, step)
+    end = slower.duration
     times = grid.until(start, end, step)
     guess = old.states(start + (times - start) * (task.duration - start) / max(end - start, step))
     guess[:, 1:, [SPEED, SPEED_COMMAND]] /= stretch
@@ -219,7 +226,7 @@ def end_target(task: Task, count: int) -> np.ndarray:
 
 
 def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
-    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M): speed up, hold, slow down."""
+    """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M), backward negative."""
     asked = task.asked_speed(s)
     asked[list(task.stands)] = 0.0
     return asked
@@ -232,8 +239,15 @@ def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
     the fleet would swing out first. Where the line turns as one it is one speed for all, so that turn rates are
     priced and compared: the innermost's, whose turning they then are.
     """
-    each = np.maximum(asked, _LEAST_TURN_SPEED * task.asked[:, None])
+    each = np.maximum(np.abs(asked), _LEAST_TURN_SPEED * task.asked[:, None])
     return np.repeat(each.mean(axis=0, keepdims=True), len(each), axis=0) if task.turn_rates else each
+
+
+def turnings(made: Reference) -> np.ndarray:
+    """Turning of each robot in the intervals of a reference, shape (N, M), 1/m."""
+    times = made.plan.times
+    rates = np.diff(made.plan.states[:, :, THETA], axis=1) / np.diff(times)
+    return np.asarray(rates / turn_speeds(made.task, asked_speeds(made.task, times)))
 
 
 def _problem(
@@ -247,11 +261,13 @@ def _problem(
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
         turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
         bounds=held(bounds_in_force(
-            fleet, initial, times, task.arrival, task.end_speed, rules.max_speed, rules.max_lateral_acceleration,
-            task.max_curvature,
+            fleet, initial, times, task.arrival, task.end_speed,
+            np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed)),
+            rules.max_lateral_acceleration, task.max_curvature, task.gears(times[1:]),
         ), fleet, initial, times, task.stands),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),
+        compared=None if task.behind is None else succession.comparison(task, graph.index_edges(), times),
     )
 
 

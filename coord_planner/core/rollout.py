@@ -26,10 +26,10 @@ def rolled_out(problem: Problem, rates: np.ndarray) -> tuple[np.ndarray, np.ndar
     """
     fleet, bounds, h = problem.fleet, problem.bounds, problem.intervals
     steer = fleet.limit("max_curvature_rate")[:, None]
-    slower, faster = fleet.limit("max_braking")[:, None], fleet.limit("max_acceleration")[:, None]
+    steer = np.broadcast_to(steer, rates.shape[:2])
     bend = _ramp(problem.initial[:, CURVATURE_COMMAND], rates[..., 0], h, (-steer, steer),
                  (-bounds.max_curvature, bounds.max_curvature))
-    speed = _ramp(problem.initial[:, SPEED_COMMAND], rates[..., 1], h, (-slower, faster),
+    speed = _ramp(problem.initial[:, SPEED_COMMAND], rates[..., 1], h, problem.rates_of_speed,
                   (bounds.min_speed, bounds.max_speed))
     reached_bend, mean_bend = _reached(problem.initial[:, CURVATURE], bend, h, fleet.response("curvature_lag"))
     reached_speed, mean_speed = _reached(problem.initial[:, SPEED], speed, h, fleet.response("speed_lag"))
@@ -47,7 +47,7 @@ def _ramp(
     nodes = [first]
     for i, step in enumerate(h):
         wanted = np.clip(nodes[-1] + step * rates[:, i], bounds[0][:, i], bounds[1][:, i])
-        nodes.append(np.clip(wanted, nodes[-1] + step * fastest[0][:, 0], nodes[-1] + step * fastest[1][:, 0]))
+        nodes.append(np.clip(wanted, nodes[-1] + step * fastest[0][:, i], nodes[-1] + step * fastest[1][:, i]))
     return np.stack(nodes, axis=1)
 
 

@@ -55,7 +55,15 @@ TABLE = (
         "predicted clearance short", Level.WARN, Response.GO_ON,
         "the plan cannot keep the smallest clearance everywhere",
     ),
-    Row("clearance breached", Level.ERROR, Response.STOP, "two robots are nearer than the site allows"),
+    Row(
+        "clearance breached", Level.ERROR, Response.STOP,
+        "two robots, or a robot and a keep-out area, are nearer than the site allows",
+    ),
+    Row("keep-out ahead", Level.WARN, Response.GO_ON, "the plan cannot keep a robot out of an area everywhere"),
+    Row(
+        "keep-out ahead", Level.ERROR, Response.STOP,
+        "driving on would make the stopping distance longer than the way to a keep-out area",
+    ),
     Row(
         "free way short", Level.ERROR, Response.STOP,
         "driving on would make the stopping distance longer than the free way",
@@ -68,9 +76,16 @@ TABLE = (
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
-    Row("plan late", Level.WARN, Response.GO_ON, "a plan was not finished in time; the last one is driven on"),
+    Row("plan unfinished", Level.WARN, Response.GO_ON, "a plan was not finished in time; it keeps what it must"),
+    Row("plan late", Level.WARN, Response.GO_ON, "a plan came too late or unusable; the last one is driven on"),
     Row("plan failed", Level.WARN, Response.GO_ON, "a tick gave no plan; the last one is driven on"),
-    Row("plan failed", Level.ERROR, Response.STOP, "no new plan for longer than horizon.keep"),
+    Row(
+        "common curvature", Level.WARN, Response.GO_ON,
+        "the last plan is too old or no longer keeps clear; everybody drives one curvature",
+    ),
+    Row(
+        "plan failed", Level.ERROR, Response.STOP, "no new plan, and neither the last nor one curvature can be driven"
+    ),
     Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
     Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
     Row(
@@ -139,6 +154,19 @@ def clearance_breached(settings: Settings, pair: Sequence[str], clearance: float
     return _caution(settings, "clearance breached", " and ".join(pair), Level.ERROR, figures)
 
 
+def keep_out_breached(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    return _caution(settings, "clearance breached", name, Level.ERROR, f"{missing:.2f} m too near to {area} now")
+
+
+def keep_out_ahead(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    return _caution(settings, "keep-out ahead", name, Level.WARN, f"its plan comes {missing:.2f} m too near to {area}")
+
+
+def keep_out_unavoidable(settings: Settings, name: str, area: str, missing: float) -> Caution:
+    figures = f"a stop begun a tick later would end {missing:.2f} m too near to {area}"
+    return _caution(settings, "keep-out ahead", name, Level.ERROR, figures)
+
+
 def free_way_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:
     figures = (
         f"a stop begun a tick later would leave {clearance:.2f} m, {settings.site_rules.min_clearance:g} m is the "
@@ -174,8 +202,13 @@ def other_planner(settings: Settings, who: str) -> Caution:
     return _caution(settings, "other planner heard", "", Level.ERROR, f"{who} drives this fleet too")
 
 
+def plan_unfinished(settings: Settings, took: float) -> Caution:
+    figures = f"a plan was not finished after {1e3 * took:.0f} ms; it keeps limits and clearance, and is driven"
+    return _caution(settings, "plan unfinished", "", Level.WARN, figures)
+
+
 def plan_late(settings: Settings, took: float) -> Caution:
-    figures = f"a plan took {1e3 * took:.0f} ms and was not finished, {1e3 * settings.horizon.budget:.0f} ms allowed"
+    figures = f"a plan took {1e3 * took:.0f} ms, {1e3 * settings.horizon.budget:.0f} ms allowed, and cannot be driven"
     return _caution(settings, "plan late", "", Level.WARN, figures)
 
 
@@ -183,8 +216,17 @@ def plan_failed(settings: Settings, reason: str) -> Caution:
     return _caution(settings, "plan failed", "", Level.WARN, reason)
 
 
+def common_curvature(settings: Settings, seconds: float) -> Caution:
+    figures = f"no new plan for {seconds:.1f} s, and the last one cannot be driven on; everybody drives one curvature"
+    return _caution(settings, "common curvature", "", Level.WARN, figures)
+
+
 def plans_missing(settings: Settings, seconds: float) -> Caution:
-    figures = f"no new plan for {seconds:.1f} s, {settings.horizon.keep:g} s allowed"
+    keep = settings.horizon.keep
+    figures = (
+        f"no new plan for {seconds:.1f} s, and neither the last one (for {keep:g} s at most) nor one curvature for all "
+        "can be driven"
+    )
     return _caution(settings, "plan failed", "", Level.ERROR, figures)
 
 

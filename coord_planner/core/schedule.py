@@ -22,11 +22,15 @@ class Schedule:
 
     def at(self, times: np.ndarray) -> np.ndarray:
         """Values at moments of each robot's own: shape (N,) -> (N, 2), or (N, K) -> (N, K, 2)."""
-        columns = [
-            [np.interp(times[k], self.times, self.values[k, :, column]) for column in range(2)]
-            for k in range(len(self.values))
-        ]
-        return np.moveaxis(np.array(columns), 1, -1)
+        robots = np.arange(len(self.values)).reshape((-1,) + (1,) * (times.ndim - 1))
+        if len(self.times) == 1:
+            return self.values[robots, np.zeros(times.shape, dtype=int)]
+        i = np.clip(np.searchsorted(self.times, times, side="right") - 1, 0, len(self.times) - 2)
+        before = self.times[i]
+        width = np.maximum(self.times[i + 1] - before, 1e-12)  # two moments may be one
+        part = np.clip((times - before) / width, 0.0, 1.0)[..., None]
+        found: np.ndarray = (1.0 - part) * self.values[robots, i] + part * self.values[robots, i + 1]
+        return found
 
     def moment(self, time: float) -> np.ndarray:
         """Values of all robots at one moment, shape (N, 2)."""
@@ -35,6 +39,12 @@ class Schedule:
     def grown(self, count: int) -> Schedule:
         """The same with so many more robots, that stand."""
         return Schedule(self.times, np.concatenate([self.values, np.zeros((count, len(self.times), 2))]))
+
+    def stilled(self, rows: list[int]) -> Schedule:
+        """The same in which some robots stand, and always did."""
+        values = self.values.copy()
+        values[rows] = 0.0
+        return Schedule(self.times, values)
 
     def splice(self, after: Schedule, switch: float, since: float) -> Schedule:
         """This schedule until ``switch``, the other one from there on; what lies before ``since`` is dropped."""

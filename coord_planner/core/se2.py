@@ -8,7 +8,7 @@ Introduction to Robotic Manipulation*, 1994, ch. 2 (from memory).
 
 from __future__ import annotations
 
-from typing import Any
+from typing import Any, cast
 
 import casadi as ca
 import numpy as np
@@ -22,20 +22,7 @@ Scalar = Any  # float, numpy array or CasADi expression
 Pose = tuple[Scalar, Scalar, Scalar]
 
 
-def _is_symbolic(*values: Scalar) -> bool:
-    return any(isinstance(value, (ca.SX, ca.MX)) for value in values)
-
-
-def _choose(small: Any, if_small: Scalar, otherwise: Scalar) -> Scalar:
-    if _is_symbolic(if_small, otherwise):
-        return ca.if_else(small, if_small, otherwise)
-    chosen: Any = np.where(small, if_small, otherwise)
-    return chosen[()]  # a scalar for scalars
-
-
-def _away_from_zero(small: Any, x: Scalar) -> Scalar:
-    """A denominator that is never 0 in the branch that is not taken (its derivative would be NaN)."""
-    return _choose(small, 1.0 + 0.0 * x, x)
+_SYMBOLIC = (ca.SX, ca.MX)
 
 
 def _alternating_series(square: Scalar, first: int) -> Scalar:
@@ -47,17 +34,25 @@ def _alternating_series(square: Scalar, first: int) -> Scalar:
 
 
 def _sin(x: Scalar) -> Scalar:
-    return ca.sin(x) if _is_symbolic(x) else np.sin(x)
+    return ca.sin(x) if isinstance(x, _SYMBOLIC) else np.sin(x)
 
 
 def _cos(x: Scalar) -> Scalar:
-    return ca.cos(x) if _is_symbolic(x) else np.cos(x)
+    return ca.cos(x) if isinstance(x, _SYMBOLIC) else np.cos(x)
 
 
 def sinc(x: Scalar) -> Scalar:
     """sin(x)/x, smooth through 0."""
-    small = abs(x) < _SERIES_BELOW if not _is_symbolic(x) else ca.fabs(x) < _SERIES_BELOW
-    return _choose(small, _alternating_series(x * x, 1), _sin(x) / _away_from_zero(small, x))
+    if isinstance(x, _SYMBOLIC):
+        x = cast(Any, x)
+        small = ca.fabs(x) < _SERIES_BELOW
+        # A denominator that is never 0 in the branch that is not taken: its derivative would be NaN.
+        away = ca.if_else(small, 1.0, x)
+        return ca.if_else(small, _alternating_series(x * x, 1), ca.sin(x) / away)
+    # Numbers are not differentiated: the quotient is good to the last digit down to the smallest of them.
+    zero = x == 0.0
+    safe = x + zero
+    return np.sin(safe) / safe + zero * (1.0 - np.sin(1.0))
 
 
 def cosc(x: Scalar) -> Scalar:
@@ -95,7 +90,9 @@ def inverse(a: Pose) -> Pose:
 
 def arc(x: Scalar, y: Scalar, theta: Scalar, distance: Scalar, turn: Scalar) -> Pose:
     """Pose after an arc: ``distance`` metres forward while turning by ``turn`` radians. Exact."""
-    return compose((x, y, theta), exp(distance, 0.0 * distance, turn))
+    half = 0.5 * turn
+    chord, middle = distance * sinc(half), theta + half
+    return x + chord * _cos(middle), y + chord * _sin(middle), theta + turn
 
 
 def wrap(angle: Scalar) -> Scalar:

@@ -54,7 +54,8 @@ class Horizon:
     rate: float = parameter(10.0, "plans a second", "1/s", minimum=1.0, maximum=50.0)
     budget: float = parameter(0.09, "time that one plan may take", "s", minimum=0.002, maximum=1.0)
     keep: float = parameter(
-        2.0, "time for which the last plan is driven on when no new one comes", "s", minimum=0.1, maximum=5.0, live=True
+        2.0, "time for which the last plan is driven on without a new one; then, for as long, one curvature for all",
+        "s", minimum=0.1, maximum=5.0, live=True,
     )
     lead: float = parameter(
         1.0, "time given to making the rest of a manoeuvre anew while it runs", "s", minimum=0.2, maximum=10.0
@@ -75,6 +76,14 @@ class Commands:
     zeros_after_end: float = parameter(
         1.0, "time for which a standing fleet is sent zeros after the end", "s", minimum=0.0, maximum=60.0
     )
+
+
+@attrs.frozen
+class SpeedCap:
+    """An area in which no robot drives faster than ``max_speed``, m/s."""
+
+    area: Area
+    max_speed: float
 
 
 @attrs.frozen
@@ -99,6 +108,7 @@ class SiteRules:
         live=True,
     )
     keep_outs: tuple[Area, ...] = ()
+    speed_caps: tuple[SpeedCap, ...] = ()
 
 
 @attrs.frozen

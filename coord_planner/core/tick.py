@@ -7,12 +7,14 @@ from typing import Optional
 import attrs
 import numpy as np
 
-from . import grid, ocp, solver
+from . import grid, ocp, solver, succession
+from .caps import planned_caps
+from .fence import OPEN, Fencing
 from .fleet import Fleet
 from .manoeuvre import Task
 from .plan import Plan
-from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, THETA, Problem, bounds_in_force
-from .reference import Reference, asked_speeds, turn_speeds
+from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, THETA, Comparison, Problem, bounds_in_force
+from .reference import Reference, asked_speeds, turn_speeds, turnings
 from .rollout import rolled_out
 from .settings import Settings
 from .standing import held, where_seen
@@ -48,7 +50,8 @@ def pose_problem(
         initial: predicted state at ``time``, shape (N, 7). start: seconds of the manoeuvre at ``time``.
         time: seconds on the clock at the first node. pace: seconds of the manoeuvre per second of the clock.
         last: the tick before, when there is one for this reference.
-        behind: metres by which each robot is behind the group, shape (N,), as the group's progress sees it.
+        behind: metres by which each robot is behind the group in the direction in which it drives, shape (N,), as
+            the group's progress sees it.
     """
     task, rules = reference.task, settings.site_rules
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
@@ -56,7 +59,10 @@ def pose_problem(
     guess, steps = _guess(reference, initial, s, pace, last)
     guess = where_seen(guess, initial, task.stands)
     planned = asked_speeds(task, s)
-    asked = _closing_up(s, times, planned * pace, behind, task, fleet, settings)
+    top = np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed))
+    gear = task.gears((s[:-1] + s[1:]) / 2)
+    own = np.where(gear < 0, -fleet.limit("min_speed")[:, None], fleet.limit("max_speed")[:, None])
+    asked = _closing_up(s, times, planned * pace, behind, task, gear, np.minimum(own, top), settings)
     target = _without_swerve(
         paced(reference.state(float(s[-1])), pace), reference.state(start), initial,
         np.abs(planned) @ np.diff(s), 2 * settings.poses.noise_xy,
@@ -69,15 +75,26 @@ def pose_problem(
         turn_speed=turn_speeds(task, planned) * pace,
         full_speed=task.asked * pace, target=target,
         bounds=held(bounds_in_force(
-            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, rules.max_speed,
-            rules.max_lateral_acceleration, task.max_curvature,
+            fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, top,
+            rules.max_lateral_acceleration, task.max_curvature, task.gears(s[1:]),
         ), fleet, initial, times, task.stands),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
         fences=reference.fencing.rows(fleet, settings, guess[:, :, POSE], task.speed),
+        compared=_compared(reference, s, settings.horizon.interval),
     )
     if steps is None or last is None:
         return problem, s, solver.start_from_states(problem, guess)
     return problem, s, _shifted(problem, last, steps, guess)
+
+
+def _compared(reference: Reference, s: np.ndarray, step: float) -> Optional[Comparison]:
+    """At which moments neighbours are compared; None where it is at equal ones."""
+    task, times = reference.task, reference.plan.times
+    if task.behind is None:
+        return None
+    return succession.comparison_of_tick(
+        task, reference.graph.index_edges(), s, step, times, turnings(reference)
+    )
 
 
 def paced(states: np.ndarray, pace: float) -> np.ndarray:
@@ -87,14 +104,14 @@ def paced(states: np.ndarray, pace: float) -> np.ndarray:
     return scaled
 
 
-def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Plan]:
+def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencing = OPEN) -> Optional[Plan]:
     """A plan that may be driven: the solver's own, or, where it ran out of time, what its commands come to.
 
     A half-finished plan is rolled out within its limits. It is used when it stays clear and comes near its end;
     otherwise there is None.
 
     Args:
-        least_clearance: smallest exact clearance that counts as clear, metres.
+        least_clearance: smallest exact clearance that counts as clear, metres. fencing: what is to be kept away from.
     """
     if plan.solved:
         return plan
@@ -104,7 +121,8 @@ def usable(problem: Problem, plan: Plan, least_clearance: float) -> Optional[Pla
     missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
     finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
     near = missed[:, :3].max() < _NEAR
-    return finished if near and finished.closest(1)[0] >= least_clearance else None
+    clear = near and finished.closest(1)[0] >= least_clearance
+    return finished if clear and fencing.least(plan.fleet, finished.dense(1))[0] >= 0.0 else None
 
 
 def _without_swerve(
@@ -128,19 +146,21 @@ def _without_swerve(
 
 
 def _closing_up(
-    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task, fleet: Fleet,
-    settings: Settings,
+    s: np.ndarray, times: np.ndarray, asked: np.ndarray, behind: np.ndarray, task: Task,
+    gear: np.ndarray, top: np.ndarray, settings: Settings,
 ) -> np.ndarray:
     """Asked speeds, shape (N, M), m/s, with which a robot that was held up catches up and the others wait for it.
 
-    The horizon's end alone would let them take the whole horizon for it. Within the dead band, where there
-    is only noise, nothing is changed and the reference is not biased.
+    The horizon's end alone would let them take the whole horizon for it. Nobody is asked for more than ``top``
+    m/s, shape (N, M), in the direction that ``gear`` says, nor to leave its place while it is to stand. Within the
+    dead band, where there is only noise, nothing is changed and the reference is not biased.
     """
-    progress, top = settings.progress, np.minimum(fleet.limit("max_speed"), settings.site_rules.max_speed)
+    progress = settings.progress
     off = np.sign(behind) * np.maximum(np.abs(behind) - progress.dead_band, 0.0)
     soon = (times[1:] - times[0] <= progress.catch_up) & (s[1:] <= task.arrival)
-    wanted = asked + soon[None, :] * (off / progress.catch_up)[:, None]
-    return np.clip(wanted, np.minimum(asked, 0.0), np.maximum(top[:, None], asked))
+    along = np.abs(asked)
+    wanted = along + soon[None, :] * (off / progress.catch_up)[:, None]
+    return np.where(gear == 0, asked, gear * np.clip(wanted, 0.0, np.maximum(top, along)))
 
 
 def _guess(

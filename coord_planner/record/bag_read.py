@@ -70,7 +70,8 @@ class Recording:
         """
         start, stop = (self._nanoseconds(seconds) for seconds in (from_s, to_s))
         for source in self._sources:
-            yield from source.messages(start, stop)
+            for topic, nanoseconds, data in source.messages(start, stop):
+                yield topic, nanoseconds, bag_salvage.unpacked(data)
             self.losses += source.losses
 
     def _nanoseconds(self, seconds: Optional[float]) -> Optional[int]:

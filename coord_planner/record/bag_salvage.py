@@ -21,6 +21,7 @@ from .bag_source import Message as Read
 from .bag_source import Topic
 
 _LARGEST = 1 << 30  # bytes of a record; a larger length is itself damage
+_ZSTD = b"\x28\xb5\x2f\xfd"  # how a compressed frame begins (RFC 8878, section 3.1.1)
 # What the decompressors and the parser throw at bytes that are not what they seem.
 _BROKEN = (McapError, CRCValidationError, struct.error, RuntimeError, ValueError, EOFError, MemoryError, OverflowError)
 
@@ -123,6 +124,20 @@ def _decompressed(data: bytes, compression: str) -> bytes:
     if compression == "lz4":
         return bytes(lz4.frame.LZ4FrameDecompressor().decompress(data))
     return data
+
+
+def unpacked(data: bytes) -> bytes:
+    """A message that was compressed by itself, unpacked; any other as it is, also one that cannot be unpacked.
+
+    Only metadata.yaml tells of such compression, and it may be lost. A message in CDR begins with a zero byte, so it
+    cannot be taken for one.
+    """
+    if data[:4] != _ZSTD:
+        return data
+    try:
+        return zstandard.ZstdDecompressor().decompressobj().decompress(data)
+    except zstandard.ZstdError:
+        return data
 
 
 class _Channels:

@@ -11,6 +11,7 @@ from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any, Final
 
+import attrs
 import numpy as np
 from rosbags.interfaces import Qos, QosDurability, QosHistory, QosLiveliness, QosReliability, QosTime
 from rosbags.rosbag2 import StoragePlugin, Writer
@@ -155,7 +156,8 @@ def _reports(run: Run, frame: str, zero: float) -> Iterator[Entry]:
                _status(run, when, at, state, words, cautions))
         poses = run.poses[:, min(int(np.searchsorted(run.times, when)), len(run.times) - 1)]
         yield at, "/fleet_markers", "visualization_msgs/msg/MarkerArray", messages.markers(
-            messages.header(frame, at), marks(run.fleet, graph, poses, cautions, run.min_clearance))
+            messages.header(frame, at), marks(run.fleet, graph, poses, cautions,
+                                              attrs.evolve(run.site_rules, min_clearance=run.min_clearance)))
         if when in changes or when >= next_diagnostics:
             next_diagnostics = when + _DIAGNOSTICS_EVERY
             yield at, "/diagnostics", "diagnostic_msgs/msg/DiagnosticArray", messages.diagnostics(

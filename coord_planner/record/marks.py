@@ -16,6 +16,7 @@ from ..core import outline
 from ..core.fleet import Fleet
 from ..core.graph import NeighbourGraph
 from ..core.messages import Caution
+from ..core.settings import SiteRules
 
 Colour = tuple[float, float, float, float]  # red, green, blue, opacity, each 0 to 1
 _GREY, _BLUE, _RED = (0.6, 0.6, 0.6, 0.8), (0.1, 0.4, 0.8, 1.0), (0.8, 0.1, 0.1, 1.0)
@@ -50,11 +51,27 @@ class Mark:
 
 
 def marks(fleet: Fleet, graph: NeighbourGraph, poses: np.ndarray, cautions: Sequence[Caution],
-          min_clearance: float, coupling: float | None = None) -> list[Mark]:
+          rules: SiteRules, coupling: float | None = None) -> list[Mark]:
     """All marks of a moment; poses of shape (N, 3), NaN rows for robots that were never heard of.
 
     ``coupling`` is the one in force, None while no manoeuvre is in hand.
     """
+    return [*_areas(rules), *_moving(fleet, graph, poses, cautions, rules.min_clearance, coupling)]
+
+
+def _areas(rules: SiteRules) -> list[Mark]:
+    """Keep-outs, and areas with a speed cap, by their outlines and names."""
+    named = [(area, _RED, area.name) for area in rules.keep_outs]
+    named += [(cap.area, _GREY, f"{cap.area.name}: at most {cap.max_speed:g} m/s") for cap in rules.speed_caps]
+    found = []
+    for area, colour, words in named:
+        found.append(Mark("areas", "strip", _points(np.array([*area.corners, area.corners[0]])), colour))
+        found.append(Mark("areas", "words", _points(np.array(area.corners).mean(axis=0)[None]), colour, words))
+    return found
+
+
+def _moving(fleet: Fleet, graph: NeighbourGraph, poses: np.ndarray, cautions: Sequence[Caution],
+            min_clearance: float, coupling: float | None) -> list[Mark]:
     heard = np.isfinite(poses).all(axis=1) if len(poses) else np.zeros(len(fleet), dtype=bool)
     if not heard.any():
         return []

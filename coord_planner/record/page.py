@@ -14,6 +14,7 @@ import shapely
 from plotly.offline import get_plotlyjs
 
 from ..core import outline
+from ..core.settings import SiteRules
 from ..trial.run import Run, RunFrame
 from .metrics import plain, summary
 from .nearness import Nearness, nearness
@@ -87,6 +88,7 @@ def scene(run: Run, near: Nearness, kept: np.ndarray, origin: float) -> dict[str
         "ends": _rounded(run.end_poses, 4),
         "nearest": _nearest(run, near, kept),
         "minimum": plain(run.min_clearance),
+        "areas": _areas(run.site_rules),
         "plans": _plans(run.frames, origin),
         "cautions": [
             {"first": plain(first - origin), "last": plain(last - origin), "code": caution.code,
@@ -95,6 +97,17 @@ def scene(run: Run, near: Nearness, kept: np.ndarray, origin: float) -> dict[str
         ],
         "events": [{"time": plain(time - origin), "text": text} for time, text in run.events],
     }
+
+
+def _areas(rules: SiteRules) -> list[dict[str, Any]]:
+    """Keep-outs and areas with a speed cap: outlines, closed, and what they are called."""
+    named = [("out", area, area.name) for area in rules.keep_outs]
+    named += [("slow", cap.area, f"{cap.area.name}, at most {cap.max_speed:g} m/s") for cap in rules.speed_caps]
+    found = []
+    for kind, area, words in named:
+        x, y = _rounded(np.array([*area.corners, area.corners[0]]).T, 3)
+        found.append({"kind": kind, "words": words, "x": x, "y": y})
+    return found
 
 
 def _nearest(run: Run, near: Nearness, kept: np.ndarray) -> dict[str, Any]:

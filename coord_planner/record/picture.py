@@ -40,7 +40,7 @@ def picture(run: Run, moments: int = 5) -> str:
     samples = _moments(run, moments)
     corners = np.stack([_corners(run, sample) for sample in samples])
     scene = _Scene(corners, _paths(run))
-    parts, times = list(_drawn_paths(run, scene)), []
+    parts, times = [*_areas(run, scene), *_drawn_paths(run, scene)], []
     for number, sample in enumerate(samples):
         strength = 1.0 if len(samples) == 1 else 0.3 + 0.7 * number / (len(samples) - 1)
         parts += _fleet_at(run, scene, corners[number], strength, labelled=number == len(samples) - 1)
@@ -104,6 +104,17 @@ def _paths(run: Run) -> np.ndarray:
 
 def _at_least_two(run: Run) -> np.ndarray:
     return np.repeat(run.poses, 2, axis=1) if len(run.times) == 1 else run.poses
+
+
+def _areas(run: Run, scene: _Scene) -> Iterable[str]:
+    """Keep-outs, and areas with a speed cap, as far as they lie in the scene, with their names."""
+    named = [(area, "#d55e00", area.name) for area in run.site_rules.keep_outs]
+    named += [(cap.area, _GREY, f"{cap.area.name}, {cap.max_speed:g} m/s") for cap in run.site_rules.speed_caps]
+    for area, colour, words in named:
+        yield (f'<path d="{scene.data(np.array(area.corners), closed=True)}" fill="{colour}" fill-opacity="0.2" '
+               f'stroke="{colour}" stroke-width="1.5"/>')
+        x, y = scene.place(np.array(area.corners).mean(axis=0)[None])[0]
+        yield _text(x, y + 4, words, "middle", 12)
 
 
 def _drawn_paths(run: Run, scene: _Scene) -> Iterable[str]:

@@ -14,6 +14,7 @@ from scipy.interpolate import CubicHermiteSpline
 from .. import config
 from ..core.fleet import Fleet, Footprint, Robot
 from ..core.graph import NeighbourGraph
+from ..core.settings import SiteRules
 from ..errors import SettingsError
 from ..trial.run import Run, RunFrame
 from . import review_warnings
@@ -201,6 +202,7 @@ def _run(content: Content, clock: Clock, configuration: Optional[config.Configur
         min_clearance=configuration.settings.site_rules.min_clearance if configuration else math.nan,
         state=said.state, completed=said.completed, began=began, ended=ended, cautions=said.cautions,
         tick_ms=np.zeros(0), wall_time=0.0, frames=_frames(robots, said), events=said.events, facts={},
+        site_rules=configuration.settings.site_rules if configuration else SiteRules(),
     )
 
 

@@ -141,6 +141,11 @@ function makeStage(run, options) {
     const traces = [], plain = { mode: "lines", hoverinfo: "skip", type: "scatter", showlegend: false };
     const add = (kind, trace) => { (moving[kind] = moving[kind] || []).push(traces.length); traces.push(Object.assign({}, plain, trace)); };
     moving = {};
+    (run.areas || []).forEach((area) => {
+      const tone = css(area.kind === "out" ? "--bad" : "--soft");
+      add("areas", { x: area.x, y: area.y, fill: "toself", fillcolor: tone, opacity: area.kind === "out" ? 0.25 : 0.12, line: { color: tone, width: 1.5 } });
+      add("areas", { x: [Math.min(...area.x)], y: [Math.max(...area.y)], mode: "text", textposition: "bottom right", text: [safe(area.words)], textfont: { size: 11, color: tone } });
+    });
     add("starts", Object.assign(joined(robots.map((k) => outlineAt(k, run.x[k][0], run.y[k][0], run.heading[k][0]))),
       { line: { color: css("--soft"), width: 1 }, opacity: 0.55 }));
     robots.forEach((k) => {

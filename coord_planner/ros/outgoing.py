@@ -16,6 +16,7 @@ from visualization_msgs.msg import Marker, MarkerArray
 from ..core.fleet import Fleet
 from ..core.graph import NeighbourGraph
 from ..core.messages import Caution, Command, Decision
+from ..core.settings import SiteRules
 from ..record.marks import Mark, marks
 
 
@@ -73,11 +74,11 @@ def cautions_text(cautions: Sequence[Caution]) -> str:
 
 
 def fleet_markers(frame: str, fleet: Fleet, graph: NeighbourGraph, decision: Decision,
-                  min_clearance: float) -> MarkerArray:
+                  rules: SiteRules) -> MarkerArray:
     """Edges with what is copied along them, footprints, the smallest clearance and the warnings, for a viewer."""
     at = header(frame, decision.time)
     coupling = decision.coupling if decision.manoeuvre else None
-    drawn = marks(fleet, graph, decision.poses, decision.warnings, min_clearance, coupling)
+    drawn = marks(fleet, graph, decision.poses, decision.warnings, rules, coupling)
     # first of all what was drawn before is taken away: robots may have gone, warnings ended
     markers = [Marker(header=at, action=Marker.DELETEALL)]
     return MarkerArray(markers=markers + [_marker(at, number, mark) for number, mark in enumerate(drawn, start=1)])

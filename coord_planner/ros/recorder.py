@@ -126,6 +126,7 @@ class Recorder:
             times=times - zero, poses=poses, speeds=speeds, curvatures=curvatures,
             command_times=command_times - zero, commanded=commanded, end_poses=self._end_poses(),
             min_clearance=configuration.settings.site_rules.min_clearance,
+            site_rules=configuration.settings.site_rules,
             state=self.status["state"], completed=self.status["completed"] == "true",
             began=began - zero, ended=_rest(times, speeds) - zero,
             cautions=tuple((first - zero, last - zero, caution) for first, last, caution in spans),

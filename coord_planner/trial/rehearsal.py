@@ -202,6 +202,7 @@ class _Loop:
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
                 "seed": self._seed,
             },
+            site_rules=configuration.settings.site_rules,
         )
 
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from ..core.fleet import Fleet
 from ..core.messages import Caution
+from ..core.settings import SiteRules
 
 
 @attrs.frozen
@@ -45,6 +46,7 @@ class Run:
         frames: plans along the way, for the page.
         events: (seconds, text) worth a mark on the time line.
         facts: anything else worth keeping (seed, file, coupling), JSON-able.
+        site_rules: of the site, with its keep-outs and its areas with speed caps; the defaults where not known.
     """
 
     fleet: Fleet
@@ -68,3 +70,4 @@ class Run:
     frames: tuple[RunFrame, ...] = ()
     events: tuple[tuple[float, str], ...] = ()
     facts: dict[str, Any] = attrs.field(factory=dict)
+    site_rules: SiteRules = SiteRules()

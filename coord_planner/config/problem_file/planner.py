@@ -6,6 +6,7 @@ It is written by the planner when a plan fails. Beside the keys of other models 
     prices                   all of them
     watch                    for each pair: unit vectors and gaps at the nodes
     fences                   for each line that a robot stays on one side of: unit vectors and reaches at the nodes
+    compared                 rows that compare neighbours at other than equal moments (see core.problem.Comparison)
     robots[..].state         what the machine had reached and been commanded at the first node
     robots[..].end_state     what is asked at the last node, of the names in core.problem.STATES; free where left out
     robots[..].limits, footprint, response      as in a parameter file
@@ -30,7 +31,7 @@ from ...core.problem import STATES, Bounds, Fences, Problem, Watch
 from ...core.settings import Coupling, Prices
 from ...core.solver import Start
 from ...errors import SettingsError
-from . import common
+from . import common, comparison
 from .entries import REQUIRED, Entries
 
 _ANY = Description("a number", minimum=-1e9, maximum=1e9)
@@ -53,6 +54,7 @@ def read(top: Entries) -> PlannerCase:
     alignment = top.value("alignment", describe(Coupling)["alignment"], default=0.0)
     prices = _group(top, "prices", Prices)
     watch, fences = _watch(top, group.names, intervals), _fences(top, group.names, intervals)
+    compared = comparison.read(top, len(edges), intervals)
     begun, reason = top.mapping("begun", "vector:, multipliers:, warm:"), top.value("reason", _ANY, "str", "")
     top.raise_any()
     try:
@@ -70,6 +72,7 @@ def read(top: Entries) -> PlannerCase:
         target=np.stack([each.target for each in per_robot]),
         bounds=Bounds(*(np.stack([each.bounds[i] for each in per_robot]) for i in range(len(_BOUNDS)))), watch=watch,
         fences=fences, compare_speed=np.stack([each.compare_speed for each in per_robot]),
+        compared=compared,
     )
     start, warm = _begun(begun, problem)
     top.done()
@@ -97,6 +100,8 @@ def write(case: PlannerCase) -> dict[str, Any]:
         "times": problem.times.tolist(), "pace": problem.pace, "watch": watch,
         "fences": fences,
     }
+    if problem.compared is not None:
+        document["compared"] = comparison.write(problem.compared)
     start = case.start
     if start is not None and not all(np.isfinite(part).all() for part in (start.vector, *(start.multipliers or ()))):
         document["reason"] = f"{case.reason} (where the solver began was not finite, and is left out)".strip()

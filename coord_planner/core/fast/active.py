@@ -70,7 +70,7 @@ class Held:
         met, stiff = trial.met, 1.0 / _COMPLIANCE
         self.linearised, self.met = linearised, met
         self._factor = linearised.factor(trial.point, Stiffness(
-            np.abs(met.limits) * stiff, met.ends * stiff, met.clearances * stiff, trial.forces.clearances
+            np.abs(met.limits) * stiff, met.ends * stiff, met.clearances * stiff, trial.forces
         ))
 
     def step(self, numbers: Numbers, trial: Trial) -> Trial:

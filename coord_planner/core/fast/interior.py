@@ -35,8 +35,9 @@ from .structure import Structure
 BARRIER = 0.2  # product of margin and push with which a solve begins
 
 _STIFFEST, _SOFTEST = 1e-9, 1e12  # compliances beyond these are cut off
-_FIXED = 1e-6  # compliance of limits without room
+_FIXED = 1e-10  # compliance of limits without room
 _SMALLEST = 1e-10  # barrier below which rounding takes over
+_GAINED_LITTLE = 0.7  # part of what was open that a good step does not leave: if it does, second derivatives matter
 _SHORT_OF = 0.995  # part of the way to the nearest margin or push of 0 that a step goes
 
 
@@ -68,11 +69,12 @@ class Interior:
         self._numbers, self._structure, self._constant = numbers, structure, constant
         self._layout: Layout = layout(numbers)
         self._linearised: Linearised | None = None
+        self._bending = False
 
-    def begin(self, point: Point, forces: Forces) -> Iterate:
+    def begin(self, point: Point, forces: Forces, barrier: float, least: float) -> Iterate:
         """Open margins around a point, with the multipliers of the last tick."""
         known = self._layout
-        margins, pushes = opened(self._numbers, known, point, forces, BARRIER)
+        margins, pushes = opened(self._numbers, known, point, forces, barrier, least)
         return Iterate(point, margins, pushes, np.where(known.fixed, forces.limits, 0.0), 0.0)
 
     def open(self, x: Iterate) -> float:
@@ -92,14 +94,17 @@ class Interior:
         """
         if self._linearised is None or not self._linearised.serves(x.point):
             self._linearised = Linearised(self._numbers, self._structure, self._constant, x.point)
-        system = _System(self._numbers, self._layout, self._linearised, x)
-        on, before = self._layout.on, self.open(x) / self._layout.count
+        system = _System(self._numbers, self._layout, self._linearised, x, self._bending)
+        on, opened_by = self._layout.on, self.open(x)
+        before = opened_by / self._layout.count
         ahead = system.direction(np.zeros_like(x.margins))
         a, b = self._lengths(x.margins, ahead.margins), self._lengths(x.pushes, ahead.pushes)
         products = (x.margins + self._spread(a) * ahead.margins) * (x.pushes + self._spread(b) * ahead.pushes)
         left = max(float(np.sum(products * on)) / self._layout.count, 0.0)
         barrier = max((left / before) ** 3 * before, _SMALLEST)
-        return self._moved(x, system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes), barrier)
+        after = self._moved(x, system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes), barrier)
+        self._bending = self._bending or self.open(after) > _GAINED_LITTLE * opened_by
+        return after
 
     def _moved(self, x: Iterate, move: _Move, barrier: float) -> Iterate:
         a, b = self._lengths(x.margins, move.margins), self._lengths(x.pushes, move.pushes)
@@ -137,18 +142,18 @@ class _Move:
 class _System:
     """The linearised conditions at an iterate, factorised. Compliances: margin / push."""
 
-    def __init__(self, numbers: Numbers, known: Layout, linearised: Linearised, x: Iterate) -> None:
+    def __init__(self, numbers: Numbers, known: Layout, linearised: Linearised, x: Iterate, bending: bool) -> None:
         self._numbers, self._layout, self._linearised = numbers, known, linearised
         self._compliance = np.clip(x.margins / x.pushes, _STIFFEST, _SOFTEST)
         self._soft = soft = known.split(self._compliance)
         self._end = soft[OVER] + soft[UNDER]
         self._clear = soft[ROOM] + soft[SHORT]
-        self._factor = linearised.factor(x.point, Stiffness(
-            np.where(known.fixed, 1.0 / _FIXED, 1.0 / soft[UPPER] + 1.0 / soft[LOWER]),
-            known.priced / self._end, 1.0 / self._clear, known.split(x.pushes)[ROOM],
-        ))
         self._x = x
         self._forces = forces_of(known, x.pushes, x.fixed)
+        self._factor = linearised.factor(x.point, Stiffness(
+            np.where(known.fixed, 1.0 / _FIXED, 1.0 / soft[UPPER] + 1.0 / soft[LOWER]),
+            known.priced / self._end, 1.0 / self._clear, self._forces,
+        ), bending)
         self._slopes = slopes(numbers, x.point, self._forces)
 
     def direction(self, aims: np.ndarray) -> _Move:

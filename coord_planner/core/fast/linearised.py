@@ -6,24 +6,26 @@ import attrs
 import numpy as np
 
 from . import clearance, ends, limits, objective
+from .chain import pulls
 from .factor import Blocks, Factor
 from .numbers import Numbers
-from .point import Forces, Point
+from .point import Forces, Point, pose_forces
 from .structure import Structure
 
 _SOFT = 1e-2  # stiffness (1/m^2) below which a clearance row does not bend the cost noticeably
+_UNBENT = 1e-3  # second derivative by the heading (1/rad^2) below which pulls on the poses bend nothing
 _FLAT = 1e-4  # curvature (1/rad^2) of shadows below which it does not either
 NEAR = 3e-3  # change of a heading (rad), or of a speed (part of the full one), that derivatives do not feel at all
 
 
 @attrs.frozen(eq=False)
 class Stiffness:
-    """How stiffly each row is held, shapes (6, N, M), (N, 7), (P, M), and how hard pairs press, shape (P, M)."""
+    """How stiffly each row is held, shapes (6, N, M), (N, 7), (P, M), and the multipliers of all rows."""
 
     limits: np.ndarray
     ends: np.ndarray
     clearances: np.ndarray
-    pressure: np.ndarray
+    forces: Forces
 
 
 class Linearised:
@@ -39,6 +41,7 @@ class Linearised:
         self._end_rows = ends.end_rows(numbers, point.r)
         self._coupled = self._coupling()
         self._clear: clearance.Rows | None = None
+        self._headings: np.ndarray | None = None
 
     def serves(self, point: Point, near: float = NEAR) -> bool:
         """Whether a point is so near that the derivatives are good for it as well. Slopes are exact in any case."""
@@ -46,14 +49,19 @@ class Linearised:
         sped = np.abs(point.r.mean_speed - self.point.r.mean_speed) / self._numbers.full_speed
         return float(turned.max()) < near and float(sped.max()) < near
 
-    def factor(self, point: Point, stiffness: Stiffness) -> Factor:
+    def factor(self, point: Point, stiffness: Stiffness, bending: bool = False) -> Factor:
         """The factor of the matrix at a point that it serves.
+
+        Args:
+            bending: whether what pulls on the poses bends counts as well.
 
         Raises:
             SolveError: the matrix is not positive definite.
         """
-        weights = self._turning_weights(point, stiffness.pressure)
+        weights = self._turning_weights(point, stiffness.forces.clearances)
         diagonal = self._constant + np.matmul(self._turning.transpose(0, 2, 1), np.matmul(weights, self._turning))
+        if bending:
+            self._bend(diagonal, point, stiffness.forces)
         limits.stiffen(diagonal, self._numbers, point.r.curvature, point.r.speed, stiffness.limits)
         weighted = self._end_rows * stiffness.ends[:, :, None]
         diagonal += np.matmul(weighted.transpose(0, 2, 1), self._end_rows)
@@ -108,6 +116,31 @@ class Linearised:
         if by_heading is not None:
             weights += _by_turning(by_heading, self._scale(), self._scale())
         return weights
+
+    def _bend(self, diagonal: np.ndarray, point: Point, forces: Forces) -> None:
+        """Add what pulls on the poses bend: the convex part of the second derivatives of every arc's chord.
+
+        An arc of length d whose middle heads for q moves all later nodes by d (cos q, sin q). Where these are pulled
+        back along it, the second derivative by q is the pull times d, and without it steps would overshoot.
+        """
+        numbers, r = self._numbers, point.r
+        later_x, later_y, _ = pulls(r, *pose_forces(numbers, point, forces))
+        along, across = later_x * r.cos + later_y * r.sin, later_y * r.cos - later_x * r.sin
+        half = -0.5 * r.distance * along
+        largest = half + np.sqrt(half * half + across * across)  # eigenvalue of [[0, across], [across, 2 half]]
+        if largest.max() < _UNBENT:
+            return
+        if self._headings is None:
+            turns = self._turning * self._scale()[:, :, None]
+            self._headings = np.cumsum(turns, axis=1) - 0.5 * turns
+        size = np.sqrt(across * across + largest * largest)
+        root = np.sqrt(largest) / np.maximum(size, 1e-12)
+        rows = (root * largest)[:, :, None] * self._headings
+        m = len(numbers.h)
+        rows[:, :, m:] += (root * across * numbers.h)[:, :, None] * (
+            numbers.speed.mean if len(numbers.speed.mean) == 1 else numbers.speed.mean[numbers.speed.which]
+        )
+        diagonal += np.matmul(rows.transpose(0, 2, 1), rows)
 
     def _coupling(self) -> np.ndarray:
         """Blocks beside the diagonal that the edges bring, shape (E, 2M, 2M)."""

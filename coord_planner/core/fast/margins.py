@@ -18,7 +18,7 @@ from .point import Forces, Point
 UPPER, LOWER, OVER, UNDER, ROOM, SHORT = range(6)
 
 _NO_ROOM = 1e-9  # limits nearer to each other than this are kept as an equation
-_LEAST = 5e-2  # margin of a row that has none when a solve begins
+LEAST = 5e-2  # margin of a row that has none when a solve begins
 _KEPT = 0.9  # part of the last push on an end with which a solve begins: poses are new, ends are pulled elsewhere
 _WITHIN = 0.99  # part of a price that a push may have when a solve begins
 
@@ -78,15 +78,15 @@ def residuals(numbers: Numbers, point: Point) -> np.ndarray:
 
 
 def opened(
-    numbers: Numbers, known: Layout, point: Point, forces: Forces, barrier: float
+    numbers: Numbers, known: Layout, point: Point, forces: Forces, barrier: float, least: float
 ) -> tuple[np.ndarray, np.ndarray]:
     """Margins and pushes to begin with, each of shape (L,), from the last multipliers; all above 0.
 
     Args:
-        barrier: product of margin and push that no entry begins below.
+        barrier: product of margin and push that no entry begins below. least: margin of a row that has none.
     """
     raw = residuals(numbers, point)
-    margins, pushes = np.maximum(raw, _LEAST), np.empty_like(raw)
+    margins, pushes = np.maximum(raw, least), np.empty_like(raw)
     raw_parts, margin, push = known.split(raw), known.split(margins), known.split(pushes)
     np.maximum(np.maximum(forces.limits, 0.0), barrier / margin[UPPER], out=push[UPPER])
     np.maximum(np.maximum(-forces.limits, 0.0), barrier / margin[LOWER], out=push[LOWER])

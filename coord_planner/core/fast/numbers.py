@@ -20,8 +20,6 @@ class FleetNumbers:
     curvature_lag: np.ndarray
     speed_lag: np.ndarray
     max_curvature_rate: np.ndarray
-    max_acceleration: np.ndarray
-    max_braking: np.ndarray
     half_length: np.ndarray
     half_width: np.ndarray
     offset_x: np.ndarray
@@ -33,7 +31,6 @@ def fleet_numbers(fleet: Fleet) -> FleetNumbers:
     footprints = [robot.footprint for robot in fleet.robots]
     return FleetNumbers(
         fleet.response("curvature_lag"), fleet.response("speed_lag"), fleet.limit("max_curvature_rate"),
-        fleet.limit("max_acceleration"), fleet.limit("max_braking"),
         np.array([shape.footprint_length / 2 for shape in footprints]),
         np.array([shape.footprint_width / 2 for shape in footprints]),
         np.array([shape.footprint_offset_x for shape in footprints]),
@@ -165,8 +162,9 @@ def _limits(problem: Problem, fleet: FleetNumbers) -> tuple[np.ndarray, np.ndarr
     bounds = problem.bounds
     lower, upper = np.empty((2, len(LIMITS)) + bounds.max_curvature.shape)
     upper[0], upper[1] = bounds.max_curvature, bounds.max_speed
-    upper[2], upper[3] = fleet.max_curvature_rate[:, None], fleet.max_acceleration[:, None]
+    upper[2] = fleet.max_curvature_rate[:, None]
     upper[4], upper[5] = bounds.max_turn_rate, bounds.max_lateral_acceleration
     np.negative(upper, out=lower)
-    lower[1], lower[3] = bounds.min_speed, -fleet.max_braking[:, None]
+    lower[1] = bounds.min_speed
+    lower[3], upper[3] = problem.rates_of_speed
     return lower, upper

@@ -14,19 +14,27 @@ from ..plan import Plan
 from ..problem import POSE, Problem
 from ..solver import Start
 from . import active, vectors
-from .interior import Interior
+from .interior import BARRIER, Interior, Iterate
 from .linearised import Linearised
+from .margins import LEAST
 from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
 from .objective import constant_blocks
 from .point import Forces, Point, cost, evaluate, excess
 from .structure import Structure, structure
 
 ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step is worth its time
+SOLVED = 1e-2  # predicted gap below which a plan counts as finished
+
+# After so many steps so large a gap is good enough: who has come far gains little from many more steps.
+_TOLERATED = ((10, ENOUGH), (14, 3 * ENOUGH), (10_000, SOLVED))
 
 _KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
-_ACTIVE_STEPS = 5
-_STEPS = 40
+_ACTIVE_STEPS = 8
+_STEPS = 30
 _WANDERING = 6  # rows a robot that change in one step: the sets are lost
+_SETTLING = 0.5  # rows a robot that change in one step: the sets are nearly found
+_NEARLY_KEPT = 0.05  # by how much limits may be passed then
+_SLOW = 0.3  # part of what curved paths left over that a step with kept derivatives may leave
 _OVERSTATED = 3.0  # what is open in an interior-point iterate overstates the gap by about this
 _LEFT_OF_LAST = 0.5  # part of what the last interior-point step saved that another may still save
 _NEARBY = 0.02  # change of a heading (rad), or of a speed (part of the full one), over which a matrix is used again
@@ -141,70 +149,97 @@ def _worth_trying(known: Numbers, forces: Forces) -> bool:
     return not (dear & (known.end_price[:, POSE] > 0)).any() and not (forces.clearances > 0).any()
 
 
+class _Watchman:
+    """Says when to stop: the gap is small enough for the steps made, or another step would pass the deadline."""
+
+    def __init__(self, deadline: float, clock: Callable[[], float]) -> None:
+        self._deadline, self._clock, self._last = deadline, clock, clock()
+        self._longest = 0.0
+        self.steps = 0
+
+    def stepped(self) -> None:
+        """One more step was made."""
+        now = self._clock()
+        self._longest, self._last = max(self._longest, now - self._last), now
+        self.steps += 1
+
+    @property
+    def late(self) -> bool:
+        """Whether there is no time for another step."""
+        return self._last + self._longest >= self._deadline
+
+    @property
+    def tolerated(self) -> float:
+        """The predicted gap that is good enough by now."""
+        return next(gap for steps, gap in _TOLERATED if self.steps <= steps)
+
+
 def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Found:
+    watchman = _Watchman(deadline, clock)
     point = evaluate(ready.numbers, ready.curvature, ready.speed)
-    forces = ready.forces
-    best: _Found | None = None
-    steps = 0
+    forces, barrier, least = ready.forces, BARRIER, LEAST
     if forces is not None and (ready.held is not None or _worth_trying(ready.numbers, forces)):
-        best = _active_steps(ready, point, forces, deadline, clock)
-        steps = best.steps
-        if best.gap <= ENOUGH or clock() >= deadline:
-            return best
-        best = None
+        trial, found = _active_steps(ready, point, forces, watchman)
+        if found is not None:
+            return found
+        if trial is not None:
+            point, forces, barrier, least = trial.point, trial.forces, BARRIER / 10, LEAST / 5
     if forces is None:
         n, m = point.r.turn.shape
         forces = Forces(np.zeros((6, n, m)), np.zeros((n, 7)), np.zeros((len(ready.numbers.pairs), m)))
-    return _interior_steps(ready, point, forces, steps, deadline, clock)
+    interior = Interior(ready.numbers, ready.structure, ready.constant)
+    return _interior_steps(ready, interior, interior.begin(point, forces, barrier, least), watchman)
 
 
 def _active_steps(
-    ready: Prepared, point: Point, forces: Forces, deadline: float, clock: Callable[[], float]
-) -> _Found:
-    """Steps with the sets of the last tick; gap inf when they wander."""
+    ready: Prepared, point: Point, forces: Forces, watchman: _Watchman
+) -> tuple[active.Trial | None, _Found | None]:
+    """Steps with the sets of the last tick: how far they came, None when they wandered; and what they found."""
     known = ready.numbers
     trial = active.begin(known, point, forces)
     held = ready.held
     before = [cost(known, point), np.inf]  # of the last step and of the one before it, less what curved paths left over
+    slow, left_before = False, np.inf
     for step in range(1, _ACTIVE_STEPS + 1):
-        held = _held(ready, held, trial)
+        held = _held(ready, held, trial, slow)
         trial = held.step(known, trial)
+        watchman.stepped()
         reached, left_over = cost(known, trial.point), active.left_over(known, trial)
         if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(reached):
-            break
+            return None, None
         last, saved = abs(before[0] - reached + left_over), abs(before[1] - before[0])
         before = [reached - left_over, before[0]]
-        if trial.changed == 0 and excess(known, trial.point) < _KEPT_WITHIN:
+        passed = excess(known, trial.point)
+        if trial.changed == 0 and passed < _KEPT_WITHIN:
             gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, 1e-9)
-            if gap <= ENOUGH:
-                return _Found(trial.point, trial.forces, reached, _KEPT_WITHIN, gap, step)
-        if clock() >= deadline:
+            if gap <= watchman.tolerated:
+                return trial, _Found(trial.point, trial.forces, reached, _KEPT_WITHIN, gap, watchman.steps)
+        slow, left_before = left_over > _SLOW * left_before, left_over
+        settling = trial.changed <= _SETTLING * len(point.missed) and passed < _NEARLY_KEPT
+        if watchman.late or (step >= _ACTIVE_STEPS // 2 and not settling):
             break
-    return _Found(trial.point, trial.forces, reached, np.inf, np.inf, step)
+    return (trial if settling else None), None
 
 
-def _held(ready: Prepared, held: active.Held | None, trial: active.Trial) -> active.Held:
+def _held(ready: Prepared, held: active.Held | None, trial: active.Trial, slow: bool) -> active.Held:
     """The last matrix as long as the same rows are met nearby; else another, with the last derivatives if they do."""
-    near = held is not None and held.linearised.serves(trial.point, _NEARBY)
+    near = held is not None and not slow and held.linearised.serves(trial.point, _NEARBY)
     if held is not None and near:
         return active.Held(held.linearised, trial) if trial.changed else held
     return active.Held(Linearised(ready.numbers, ready.structure, ready.constant, trial.point), trial)
 
 
-def _interior_steps(
-    ready: Prepared, point: Point, forces: Forces, steps: int, deadline: float, clock: Callable[[], float]
-) -> _Found:
-    interior = Interior(ready.numbers, ready.structure, ready.constant)
-    x = interior.begin(point, forces)
+def _interior_steps(ready: Prepared, interior: Interior, x: Iterate, watchman: _Watchman) -> _Found:
     best: _Found | None = None
     before = np.inf
-    for step in range(steps + 1, steps + _STEPS + 1):
+    for _ in range(_STEPS):
         try:
             x = interior.step(x)
         except SolveError:
             if best is None:
                 raise
             break
+        watchman.stepped()
         reached = cost(ready.numbers, x.point)
         gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, 1e-9)
         before = reached
@@ -212,12 +247,14 @@ def _interior_steps(
             break
         passed = max(excess(ready.numbers, x.point), _KEPT_WITHIN)
         if best is None or (passed, reached) < (best.passed, best.cost):
-            best = _Found(x.point, interior.forces(x), reached, passed, gap, step)
-        if (gap <= ENOUGH and passed <= _KEPT_WITHIN) or clock() >= deadline:
+            best = _Found(x.point, interior.forces(x), reached, passed, gap, watchman.steps)
+        elif passed <= _KEPT_WITHIN:
+            best = attrs.evolve(best, gap=min(best.gap, gap))  # it costs no more than what has come this near
+        if (best.gap <= watchman.tolerated and best.passed <= _KEPT_WITHIN) or watchman.late:
             break
     if best is None:
         raise SolveError("no step led anywhere")
-    return attrs.evolve(best, gap=gap)
+    return attrs.evolve(best, steps=watchman.steps)
 
 
 def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
@@ -232,7 +269,7 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
         rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point), short=short,
         pairs=problem.watch.pairs, outside=np.zeros((0, len(problem.times) - 1)), fenced=problem.fences.robots,
         missed=np.abs(point.missed) * priced,
-        solved=found.gap <= ENOUGH and found.passed <= _KEPT_WITHIN, solve_time=took,
+        solved=found.gap <= SOLVED and found.passed <= _KEPT_WITHIN, solve_time=took,
         iterations=found.steps, vector=vectors.primal(states, point, short, priced),
         multipliers=vectors.multipliers(known, point, found.forces, size),
     )

@@ -17,7 +17,7 @@ _KNOWN = {
     Problem: {
         "fleet", "edges", "weights", "coupling", "alignment", "prices", "times", "pace", "initial", "asked_speed",
         "turn_speed", "full_speed", "target", "bounds", "watch",
-        "fences", "compare_speed",
+        "fences", "compare_speed", "compared",
     },
     Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
     Watch: {"pairs", "normals", "gaps"},
@@ -26,7 +26,7 @@ _KNOWN = {
 
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    if len(problem.fences.robots) or problem.compare_speed is not problem.turn_speed:
+    if problem.compared is not None or len(problem.fences.robots) or problem.compare_speed is not problem.turn_speed:
         return False
     return all(
         {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))

@@ -4,12 +4,14 @@
 ``task`` the outcome: a Task, which ``core.reference`` plans.
 """
 
-from .kinds import KINDS, End, EqualRadius, Manoeuvre, Pivot, ToEnds, Wheel
+from .driving import STAND_LAGS
+from .kinds import KINDS, End, EqualRadius, InSuccession, Manoeuvre, Pivot, RowEnd, ToEnds, Wheel
 from .task import Task, lay_out
 from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
-    "KINDS", "End", "EqualRadius", "Manoeuvre", "Pivot", "Task", "ToEnds", "Wheel", "eased_turn", "go_on", "lay_out",
-    "work_out",
+    "KINDS", "STAND_LAGS", "End", "EqualRadius", "InSuccession", "Manoeuvre", "Pivot", "RowEnd", "Task",
+    "ToEnds", "Wheel",
+    "eased_turn", "go_on", "lay_out", "work_out",
 ]

@@ -8,6 +8,8 @@ import numpy as np
 
 from ...errors import RefusedError
 from .. import outline
+from ..caps import caps
+from ..fence import fencing
 from ..fleet import Fleet, weakest
 from ..settings import Settings
 from ..watch import margin
@@ -33,6 +35,7 @@ def check_speed(speed: float, end_speed: float, fleet: Fleet, settings: Settings
 def check_start(fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:
     """The robots stand with the site's clearance between them."""
     check_apart(fleet, settings, poses, np.arange(len(fleet)), "stand", "move them apart by hand before it begins")
+    check_outside(fleet, settings, poses, "stands", "drive it away from there by hand before it begins")
 
 
 def check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray, speed: float) -> None:
@@ -40,6 +43,31 @@ def check_ends(fleet: Fleet, settings: Settings, ends: np.ndarray, speed: float)
     placed = np.flatnonzero(~np.isnan(ends[:, 0]))
     kept = 2 * float(margin(fleet, settings, speed).max())
     check_apart(fleet, settings, ends, placed, "would end", "move the ends apart", kept)
+    check_outside(fleet, settings, ends, "would end", "move its end", kept / 2)
+
+
+def check_outside(
+    fleet: Fleet, settings: Settings, poses: np.ndarray, verb: str, remedy: str, kept: float = 0.0
+) -> None:
+    """Every pose that is there, shape (N, 3), keeps away from the site's keep-outs."""
+    there = np.flatnonzero(~np.isnan(poses).any(axis=1))
+    some = Fleet(tuple(fleet.robots[k] for k in there)) if len(there) else fleet
+    spare, robot, name = fencing(settings).least(some, poses[there, None]) if len(there) else (np.inf, -1, "")
+    if spare < kept - 1e-6:
+        beyond = f", the planner's margin of {kept:.2f} m included" if kept else ""
+        raise RefusedError(f"{some.names[robot]} {verb} {kept - spare:.2f} m too near to {name}{beyond}", remedy)
+
+
+def check_end_speed(fleet: Fleet, settings: Settings, ends: np.ndarray, end_speed: float) -> None:
+    """Nobody is asked to end faster than an area allows in which the end lies."""
+    placed = np.where(np.isnan(ends).any(axis=1)[:, None], np.nan, ends)
+    capped = caps(fleet, settings, placed[:, None]).min(axis=1)
+    slowest = int(np.argmin(capped))
+    if end_speed > capped[slowest]:
+        raise RefusedError(
+            f"{end_speed:g} m/s is asked at the end, and where {fleet.names[slowest]} ends the site allows "
+            f"{capped[slowest]:g} m/s", f"ask for an end speed of at most {capped[slowest]:g} m/s",
+        )
 
 
 def check_apart(
@@ -56,6 +84,18 @@ def check_apart(
             f"smallest clearance of {allowed:g} m{beyond}",
             remedy,
         )
+
+
+def check_radius(radius: float, fleet: Fleet) -> None:
+    """Everyone can turn so tightly."""
+    for robot in fleet.robots:
+        smallest = 1.0 / robot.limits.max_curvature
+        if radius < smallest - 1e-9:
+            raise RefusedError(
+                f"a radius of {radius:g} m is {smallest - radius:.2f} m tighter than {robot.name} can turn (smallest "
+                f"radius {smallest:.2f} m)",
+                f"ask for a radius of at least {1.0 / weakest(fleet.limit('max_curvature')):.2f} m",
+            )
 
 
 def check_bend(speed: float, radius: float, fleet: Fleet, settings: Settings) -> None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import Optional, Union
+from typing import ClassVar, Optional, Union
 
 import attrs
 
@@ -34,6 +34,9 @@ class ToEnds:
     ends_deg: tuple[str, ...] = parameter(
         attrs.NOTHING, "an end for each named robot: 'NAME pose X Y HEADING_DEG' or 'NAME heading HEADING_DEG'"
     )
+    reverse: bool = parameter(
+        False, "true: robots whose min_speed is below 0 may reverse on their way where that is shorter"
+    )
     speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
     duration: float = parameter(
         0.0, "time for the manoeuvre; 0: worked out from the longest way", "s", minimum=0.0, maximum=600.0
@@ -54,6 +57,71 @@ class ToEnds:
             if name in found:
                 raise SettingsError(f"{name!r} has two ends", key="ends_deg", allowed="one end a robot")
             found[name] = end
+        return found
+
+
+@attrs.frozen
+class RowEnd:
+    """At the end of the rows everyone turns back into a row beside, within the headland."""
+
+    end_speed: ClassVar[float] = 0.0  # whoever is back in a row waits there for the others
+
+    end_x: float = parameter(
+        attrs.NOTHING, "x of a point on the middle line of any row, where it ends and the headland begins", "m",
+        minimum=-1e6, maximum=1e6,
+    )
+    end_y: float = parameter(attrs.NOTHING, "y of that point", "m", minimum=-1e6, maximum=1e6)
+    heading_deg: float = parameter(
+        attrs.NOTHING, "direction of the rows, out into the headland", "deg", minimum=-360.0, maximum=360.0
+    )
+    depth: float = parameter(
+        attrs.NOTHING, "depth of the headland from where the rows end; no footprint reaches beyond", "m", above=0.0,
+        maximum=1e3,
+    )
+    row_spacing: float = parameter(
+        attrs.NOTHING, "distance from the middle line of a row to that of the next", "m", above=0.0, maximum=1e3
+    )
+    side: str = parameter(
+        "left", "side on which the next rows lie, looking out into the headland", choices=("left", "right")
+    )
+    order: str = parameter(
+        "same", "same: all move over by the same number of rows; mirrored: the nearest takes the nearest free row; "
+        "listed: as in rows", choices=("same", "mirrored", "listed"),
+    )
+    rows: tuple[str, ...] = parameter(
+        (), "for order listed, a row for each robot: 'NAME ROW', where 1 is the first row beyond all robots"
+    )
+    skip_rows: int = parameter(0, "rows left out between those driven and the next ones", minimum=0, maximum=100)
+    inside: float = parameter(
+        0.0, "how far back in the next row everyone ends", "m", minimum=0.0, maximum=1e3
+    )
+    speed: float = parameter(1.0, "asked speed; who turns tightly drives slower", "m/s", above=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength; it counts where all turn alike at one time",
+        minimum=0.0, maximum=1e4,
+    )
+    alignment: Optional[float] = parameter(
+        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        how = {"same": "in the same order", "mirrored": "in mirrored order", "listed": "as listed"}[self.order]
+        return (
+            f"everyone back into the next rows on the {self.side} {how}, {self.row_spacing:g} m apart, in a headland "
+            f"{self.depth:g} m deep"
+        )
+
+    def listed(self) -> dict[str, int]:
+        """The row of each robot that is named; SettingsError for an entry that cannot be read."""
+        found: dict[str, int] = {}
+        for entry in self.rows:
+            words = entry.split()
+            if len(words) != 2 or not words[1].isdecimal() or int(words[1]) < 1:
+                raise SettingsError(f"{entry!r} cannot be read", key="rows", allowed="'NAME ROW', ROW 1 or more")
+            if words[0] in found or int(words[1]) in found.values():
+                raise SettingsError(f"{entry!r} names a robot or a row again", key="rows", allowed="each of them once")
+            found[words[0]] = int(words[1])
         return found
 
 
@@ -101,6 +169,32 @@ class Wheel:
 
 
 @attrs.frozen
+class InSuccession:
+    """A file turns one after the other at the same place; neighbours are compared where they are at the same place."""
+
+    angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-270.0, maximum=270.0)
+    radius: float = parameter(5.0, "tightest radius of the turn", "m", above=0.0, maximum=1000.0)
+    before: float = parameter(
+        0.0, "how far the first robot drives straight on before the turn begins", "m", minimum=0.0, maximum=1000.0
+    )
+    after: float = parameter(
+        0.0, "how far the last robot drives straight on after it has turned", "m", minimum=0.0, maximum=1000.0
+    )
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    # Headings at equal moments differ here by intent.
+    alignment: Optional[float] = attrs.field(default=0.0, init=False)
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        side = "left" if self.angle_deg >= 0 else "right"
+        return f"one after the other {abs(self.angle_deg):g} degrees to the {side}, radius {self.radius:g} m"
+
+
+@attrs.frozen
 class Pivot:
     """A point (m), or so many metres beside a robot, on the inner side of the turn."""
 
@@ -118,8 +212,10 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, Wheel]
-KINDS: dict[str, type] = {"equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel}
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd]
+KINDS: dict[str, type] = {
+    "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "row_end": RowEnd,
+}
 
 
 def _read_end(entry: str) -> tuple[str, End]:

@@ -1,4 +1,4 @@
-"""Robots that stand abreast: the line that they form."""
+"""Robots that stand abreast or in file: the line that they form."""
 
 from __future__ import annotations
 
@@ -41,28 +41,63 @@ class Line:
         return np.asarray(self.origin + ahead * forward + across * left)
 
 
+@attrs.frozen(eq=False)
+class File:
+    """N robots one behind the other.
+
+    Attributes:
+        origin: where the first one's place is, shape (2,). heading: of the robots, radians, wound as robot 0's.
+        behind: metres by which each is behind the first, shape (N,), >= 0.
+    """
+
+    origin: np.ndarray
+    heading: float
+    behind: np.ndarray
+
+    def places(self) -> np.ndarray:
+        """Where each robot's place is, shape (N, 2)."""
+        return np.asarray(self.origin - np.outer(self.behind, _axes(self.heading)[0]))
+
+
 def line_of(name: str, scene: Scene) -> Line:
     """The line abreast in which the fleet stands; RefusedError with the figure when it stands in none."""
-    poses, names = scene.poses, scene.fleet.names
-    off = np.asarray(se2.wrap(poses[:, 2] - poses[0, 2]))
-    heading = float(poses[0, 2] + off.mean())
-    askew = np.abs(se2.wrap(poses[:, 2] - heading))
-    forward, left = _axes(heading)
-    origin = poses[:, :2].mean(axis=0)
-    ahead = (poses[:, :2] - origin) @ forward
-    k = int(np.argmax(askew))
-    if askew[k] > _ASKEW:
-        raise RefusedError(
-            f"{name}: the robots do not look one way: {names[k]} is {math.degrees(askew[k]):.1f} degrees off the mean, "
-            f"{math.degrees(_ASKEW):g} allowed", "form a line abreast first",
-        )
+    heading, origin, ahead, across = _placed(name, scene)
     k = int(np.argmax(np.abs(ahead)))
     if abs(ahead[k]) > _OUT_OF_LINE:
         raise RefusedError(
-            f"{name}: {names[k]} stands {abs(ahead[k]):.2f} m {'ahead of' if ahead[k] > 0 else 'behind'} the line, "
-            f"{_OUT_OF_LINE:g} m allowed", "form a line abreast first",
+            f"{name}: {scene.fleet.names[k]} stands {abs(ahead[k]):.2f} m {'ahead of' if ahead[k] > 0 else 'behind'} "
+            f"the line, {_OUT_OF_LINE:g} m allowed", "form a line abreast first",
         )
-    return Line(origin, heading, (poses[:, :2] - origin) @ left)
+    return Line(origin, heading, across)
+
+
+def file_of(name: str, scene: Scene) -> File:
+    """The file in which the fleet stands; RefusedError with the figure when it stands in none."""
+    heading, origin, ahead, across = _placed(name, scene)
+    k = int(np.argmax(np.abs(across)))
+    if abs(across[k]) > _OUT_OF_LINE:
+        raise RefusedError(
+            f"{name}: {scene.fleet.names[k]} stands {abs(across[k]):.2f} m to the "
+            f"{'left' if across[k] > 0 else 'right'} of the file, {_OUT_OF_LINE:g} m allowed", "form a file first",
+        )
+    return File(origin + ahead.max() * _axes(heading)[0], heading, ahead.max() - ahead)
+
+
+def _placed(name: str, scene: Scene) -> tuple[float, np.ndarray, np.ndarray, np.ndarray]:
+    """The common heading, the middle, and metres ahead of it and to the left of it, shape (N,) each."""
+    poses = scene.poses
+    off = np.asarray(se2.wrap(poses[:, 2] - poses[0, 2]))
+    heading = float(poses[0, 2] + off.mean())
+    askew = np.abs(se2.wrap(poses[:, 2] - heading))
+    k = int(np.argmax(askew))
+    if askew[k] > _ASKEW:
+        raise RefusedError(
+            f"{name}: the robots do not look one way: {scene.fleet.names[k]} is {math.degrees(askew[k]):.1f} degrees "
+            f"off the mean, {math.degrees(_ASKEW):g} allowed", "form a line or a file first",
+        )
+    forward, left = _axes(heading)
+    origin = poses[:, :2].mean(axis=0)
+    return heading, origin, (poses[:, :2] - origin) @ forward, (poses[:, :2] - origin) @ left
 
 
 def _axes(heading: float) -> tuple[np.ndarray, np.ndarray]:

@@ -40,8 +40,8 @@ class Laid:
         duration: seconds that are given; 0: worked out from the longest way.
         max_curvature: tightest bend that is asked for, 1/m.
         speed: that was worked out, m/s; None: the asked one.
-        marks, turn_rates, note: as in a Task.
-        strip: lines that no footprint may cross, as in Task.
+        marks: as in lay_out. turn_rates, behind, note, strip, waits, speeds, alike: as in Task.
+        otherwise: other ways to do the same, to be tried in turn where this one cannot be kept.
     """
 
     ends: np.ndarray
@@ -51,5 +51,10 @@ class Laid:
     speed: Optional[float] = None
     marks: Optional[np.ndarray] = None
     turn_rates: bool = False
+    behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    waits: Optional[np.ndarray] = None
+    speeds: Optional[np.ndarray] = None
+    alike: bool = True
+    otherwise: tuple[Laid, ...] = ()

@@ -9,15 +9,16 @@ import attrs
 import numpy as np
 
 from ...errors import ArrivedError
+from ..drive import AnyDrive
 from ..dubins import ArcPath
-from ..fleet import Fleet, weakest
-from ..profile import SpeedProfile, speed_profile
+from ..fleet import Fleet
 from ..settings import Settings
+from .driving import COMFORT as COMFORT
+from .driving import arriving_together, check_standing, drive_along
 
-# Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
-COMFORT = 0.7
 _SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
 _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
+_LEAST_PART = 0.1  # of the fleet's speed, by which deviations of a robot that hardly drives are priced
 
 
 @attrs.frozen(eq=False)
@@ -32,17 +33,21 @@ class Task:
         arrival: seconds until the fleet is at its ends as far as commands go, a whole number of intervals.
         duration: seconds until the machines have settled there too, a whole number of intervals; in between
             the manoeuvre goes straight on at the end speed.
-        ways: a guessed way for each robot.
-        profile: how far along the longest way the fleet is at which of its own seconds; shorter ways in proportion.
-        pacing: seconds of the manoeuvre and the seconds of the profile that they stand for, joined by straight lines.
+        ways: a guessed way for each robot; segments of negative length are driven backward.
+        drives: how fast each robot goes along its way, in seconds of a common clock of their own.
+        pacing: seconds of the manoeuvre and the seconds of the drives that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
         max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
-        marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
-            length; in between the ways are driven in proportion.
         turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
+        behind: metres by which each robot is behind the first on a way that all drive one after the other, shape (N,):
+            neighbours are then compared where they are at the same place of it. None: at the same moment.
         note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
             the origin of the frame, a footprint may reach, metres.
+        waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
+            (N,), m/s; None where all set out at once and arrive together.
+        alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
+        otherwise: another way to do the same, to be tried when this one cannot be kept.
         stands: positions of robots that the manoeuvre is not for: they come to a stand and have no end.
     """
 
@@ -54,109 +59,143 @@ class Task:
     arrival: float
     duration: float
     ways: tuple[ArcPath, ...]
-    profile: SpeedProfile
+    drives: tuple[AnyDrive, ...]
     pacing: tuple[tuple[float, ...], tuple[float, ...]]
     coupling: float
     alignment: float
     max_curvature: float = math.inf
-    marks: np.ndarray = attrs.Factory(lambda self: ends_as_marks(self.ways), takes_self=True)
     turn_rates: bool = False
+    behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    waits: Optional[np.ndarray] = None
+    speeds: Optional[np.ndarray] = None
+    alike: bool = True
+    otherwise: Optional[Task] = None
+
+    @property
+    def reversing(self) -> np.ndarray:
+        """Who drives backward somewhere on its way, shape (N,)."""
+        return np.array([bool((drive.gears < 0).any()) for drive in self.drives])
     stands: tuple[int, ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
-        """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down."""
-        passed = self.profile.distance(self.profile_time(s))
-        on_way, beyond = np.diff(self._along(passed), axis=1), np.diff(np.maximum(passed - self._whole, 0.0))
-        return (on_way + beyond) / np.maximum(np.diff(s), 1e-9)
+        """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down.
+
+        Backward speeds are negative.
+        """
+        moments = self.profile_time(s)
+        steps = np.stack([np.diff(drive.advance(moments)) for drive in self.drives])
+        return steps / np.maximum(np.diff(s), 1e-9)
+
+    def gears(self, s: np.ndarray) -> np.ndarray:
+        """1, -1, or 0 where a robot has to stand, at seconds of the manoeuvre, shape (K,) -> (N, K)."""
+        moments = self.profile_time(s)
+        return np.stack([drive.gear(moments) for drive in self.drives])
+
+    def directions(self, s: float) -> np.ndarray:
+        """1 forward or -1 backward at a second of the manoeuvre, also while a robot stands, shape (N,)."""
+        moment = float(self.profile_time(np.array(s)))
+        return np.array([drive.direction(moment) for drive in self.drives])
+
+    def passed(self, s: np.ndarray) -> np.ndarray:
+        """Metres that whoever drives furthest has driven at seconds of the manoeuvre."""
+        moments = self.profile_time(s)
+        return np.stack([drive.furthest(moments) for drive in self.drives]).max(axis=0)
 
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
-        step = settings.horizon.interval
-        arrival = step * math.ceil(self.arrival * stretch / step - 1e-9)
-        return attrs.evolve(
-            self, arrival=arrival, duration=arrival + self.duration - self.arrival,
-            pacing=((0.0, arrival), (0.0, self.profile.duration)),
+        return self.stretched(0.0, stretch, settings.horizon.interval)
+
+    def stretched(self, start: float, stretch: float, step: float) -> Task:
+        """The same task with what is left of it at second ``start`` in ``stretch`` times the time.
+
+        Args:
+            step: arrival is a whole number of these, seconds.
+        """
+        arrival = step * math.ceil((start + max(self.arrival - start, 0.0) * stretch) / step - 1e-9)
+        moments, passed = np.array(self.pacing)
+        left = moments > start + 1e-9
+        late = (moments[left] - start) * (arrival - start) / max(self.arrival - start, 1e-9)
+        if not left.any():  # it only settles
+            late, passed, left = np.array([arrival - start]), np.array([self.driven]), np.array([True])
+        pacing = (
+            (start, *(start + late).tolist()), (float(self.profile_time(np.array(start))), *passed[left].tolist())
         )
+        return attrs.evolve(self, arrival=arrival, duration=arrival + self.duration - self.arrival, pacing=pacing)
+
+    @property
+    def driven(self) -> float:
+        """Seconds of the drives' own clock until all have arrived."""
+        return max(drive.duration for drive in self.drives)
 
     def profile_time(self, s: np.ndarray) -> np.ndarray:
-        """Seconds of the profile at seconds of the manoeuvre; after arrival both run alike."""
+        """Seconds of the profile, that is of the drives, at seconds of the manoeuvre; after arrival both run alike."""
         inside = np.interp(s, *self.pacing)
         return inside + np.maximum(np.asarray(s) - self.arrival, 0.0)
 
+    def _rate(self, s: np.ndarray) -> np.ndarray:
+        """Seconds of the profile per second of the manoeuvre until arrival."""
+        moments, passed = np.array(self.pacing)
+        piece = np.clip(np.searchsorted(moments, s, side="right") - 1, 0, len(moments) - 2)
+        return np.asarray((np.diff(passed) / np.maximum(np.diff(moments), 1e-9))[piece])
+
     def guess(self, times: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Guessed poses (N, K, 3), speeds (N, K) and curvatures (N, K) at seconds since the beginning."""
-        scale = self.profile.duration / self.arrival
         moments = self.profile_time(times)
-        passed, speed = self.profile.distance(moments), self.profile.speed(moments) * scale
-        along = self._along(passed)
-        poses = np.stack([way.sample(metres) for way, metres in zip(self.ways, along)])
-        curvatures = np.stack([_curvatures(way, metres) for way, metres in zip(self.ways, along)])
-        return poses, speed * self._shares(passed), curvatures
-
-    @property
-    def _whole(self) -> float:
-        return float(common_marks(self.marks)[-1])
-
-    def _along(self, passed: np.ndarray) -> np.ndarray:
-        """Metres along each way, shape (N, K), where the fleet has passed so many of the profile's."""
-        common = common_marks(self.marks)
-        return np.stack([np.interp(passed, common, metres) for metres in self.marks])
-
-    def _shares(self, passed: np.ndarray) -> np.ndarray:
-        """Speed of each robot as a part of the profile's, shape (N, K)."""
-        common = common_marks(self.marks)
-        piece = np.clip(np.searchsorted(common, passed, side="right") - 1, 0, len(common) - 2)
-        shares: np.ndarray = (np.diff(self.marks, axis=1) / np.maximum(np.diff(common), 1e-9))[:, piece]
-        return shares
-
-
-def ends_as_marks(ways: tuple[ArcPath, ...]) -> np.ndarray:
-    """Marks at the beginning and the end of ways, shape (N, 2): everybody arrives at the same moment."""
-    return np.array([[0.0, way.length] for way in ways])
-
-
-def common_marks(marks: np.ndarray) -> np.ndarray:
-    """Metres of the profile at marks of shape (N, K): between two of them those of the robot that drives furthest."""
-    return np.concatenate([[0.0], np.cumsum(np.diff(marks, axis=1).max(axis=0))])
+        passed, rate = [drive.distance(moments) for drive in self.drives], self._rate(times)
+        poses = np.stack([way.sample(along) for way, along in zip(self.ways, passed)])
+        curvatures = np.stack([_curvatures(way, along) for way, along in zip(self.ways, passed)])
+        return poses, np.stack([drive.speed(moments) * rate for drive in self.drives]), curvatures
 
 
 def lay_out(
     name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
     end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False, note: str = "",
-    strip: tuple[tuple[tuple[float, float], float], ...] = (),
+    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False,
+    behind: Optional[np.ndarray] = None, note: str = "",
+    strip: tuple[tuple[tuple[float, float], float], ...] = (), waits: Optional[np.ndarray] = None,
+    speeds: Optional[np.ndarray] = None, alike: bool = True,
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
-    A given duration stretches or squeezes the profile: it is then driven slower or faster than asked.
+    A given duration stretches or squeezes the drives: everything is then slower or faster than asked.
+
+    Args:
+        marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
+            length; in between the ways are driven in proportion. The beginning and the end when left out.
+        turn_rates, behind, note, waits, speeds, alike: as in Task.
     """
-    marks = ends_as_marks(ways) if marks is None else marks
-    longest = float(common_marks(marks)[-1])
+    longest = max(way.length for way in ways)
     if longest < _SHORTEST_WAY:
         raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
-    profile = speed_profile(
-        longest, speed_now, speed, end_speed,
-        COMFORT * weakest(fleet.limit("max_acceleration")), COMFORT * weakest(fleet.limit("max_braking")),
-    )
+    drives: tuple[AnyDrive, ...]
+    if waits is None or speeds is None:
+        drives = arriving_together(fleet, settings, ways, marks, speed, end_speed, speed_now)
+    else:
+        drives = tuple(
+            drive_along(robot, settings, way, float(top), wait=float(wait), first=speed_now, last=end_speed)
+            for robot, way, top, wait in zip(fleet.robots, ways, speeds, waits)
+        )
+    check_standing(name, fleet, drives, end_speed)
     step = settings.horizon.interval
-    arrival = step * max(4, math.ceil((duration or profile.duration) / step - 1e-9))
+    driven = max(drive.duration for drive in drives)
+    arrival = step * max(4, math.ceil((duration or driven) / step - 1e-9))
     # Machines that answer late come to rest late; the end holds the whole state.
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
-    lengths = np.array([way.length for way in ways])
-    asked = profile.speeds[1] * np.maximum(lengths / max(longest, 1e-9), 0.1)
+    full = np.array([drive.full for drive in drives])
+    asked = np.maximum(full, max(_LEAST_PART * float(full.max()), 1e-9))
     return Task(
-        name, ends, speed, asked, end_speed, arrival, settled, ways, profile,
-        ((0.0, arrival), (0.0, profile.duration)),
-        settings.coupling.strength if coupling is None else coupling,
+        name, ends, speed, asked, end_speed, arrival, settled, ways, drives,
+        ((0.0, arrival), (0.0, driven)),
+        (settings.coupling.strength if coupling is None else coupling) if alike else 0.0,
         settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, marks, turn_rates, note, strip,
+        max_curvature, turn_rates, behind, note, strip, waits, speeds, alike,
     )
 
 
 def _curvatures(way: ArcPath, along: np.ndarray) -> np.ndarray:
     curvatures = np.array([curvature for curvature, _ in way.segments])
-    ends = np.cumsum([length for _, length in way.segments])
+    ends = np.cumsum([abs(length) for _, length in way.segments])
     return curvatures[np.minimum(np.searchsorted(ends, along), len(curvatures) - 1)]

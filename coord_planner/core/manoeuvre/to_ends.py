@@ -2,26 +2,42 @@
 
 from __future__ import annotations
 
+import attrs
 import numpy as np
 
 from ...errors import RefusedError
-from ..dubins import shortest
+from .. import reeds_shepp
+from ..dubins import ArcPath, shortest
 from ..fleet import Fleet
 from ..profile import speed_profile
+from .driving import drive_along
 from .kinds import ToEnds
 from .scene import Laid, Scene
 from .ways import as_start, joined, straightened, ways_to_ends
+
+# Where ways as tight as a machine turns cannot be kept, wider ones with more changes of gear may be.
+_LEAST = (1.0, 1.5, 2.0)
 
 
 def lay(name: str, wanted: ToEnds, scene: Scene) -> Laid:
     """The shortest wide way to each end; RefusedError where the given time is too short for one of them."""
     named = _named_ends(wanted, scene.fleet)
-    after, first = straightened(scene)
-    then, ends = ways_to_ends(scene.fleet, after.poses, named, scene.neighbours)
-    ways = tuple(map(joined, first, then))
     if wanted.duration > 0.0:
         _check_duration(name, wanted, scene, named)
-    return Laid(ends, ways, duration=wanted.duration)
+    laid = [_laid(wanted, scene, named, least) for least in (_LEAST if wanted.reverse else _LEAST[:1])]
+    return attrs.evolve(laid[0], otherwise=tuple(laid[1:]))
+
+
+def _laid(wanted: ToEnds, scene: Scene, named: np.ndarray, least: float) -> Laid:
+    """Where everyone goes, with the radius of ways that may be driven backward ``least`` times the smallest or more."""
+    def seconds(k: int, way: ArcPath) -> float:
+        return drive_along(scene.fleet.robots[k], scene.settings, way, wanted.speed).duration
+
+    after, first = straightened(scene)
+    then, ends = ways_to_ends(
+        scene.fleet, after.poses, named, scene.neighbours, seconds=seconds if wanted.reverse else None, least=least
+    )
+    return Laid(ends, tuple(map(joined, first, then)), duration=wanted.duration)
 
 
 def _named_ends(manoeuvre: ToEnds, fleet: Fleet) -> np.ndarray:
@@ -37,12 +53,18 @@ def _named_ends(manoeuvre: ToEnds, fleet: Fleet) -> np.ndarray:
 
 
 def _check_duration(name: str, manoeuvre: ToEnds, scene: Scene, ends: np.ndarray) -> None:
-    """No way is shorter than the Dubins path of the smallest radius, and none is driven faster than allowed."""
+    """No way is shorter than the Dubins path of the smallest radius, and none is driven faster than allowed.
+
+    For who may reverse it is the path of Reeds & Shepp.
+    """
     fleet, poses = scene.fleet, scene.poses
     for k in np.flatnonzero(~np.isnan(ends[:, 0])):
         limits = fleet.robots[k].limits
-        way = shortest(as_start(poses[k]), as_start(ends[k]), 1.0 / limits.max_curvature).length
-        top = min(limits.max_speed, scene.settings.site_rules.max_speed)
+        back = manoeuvre.reverse and limits.min_speed < 0.0
+        way = (reeds_shepp.shortest if back else shortest)(
+            as_start(poses[k]), as_start(ends[k]), 1.0 / limits.max_curvature
+        ).length
+        top = min(max(limits.max_speed, -limits.min_speed), scene.settings.site_rules.max_speed)
         least = speed_profile(
             way, scene.speed_now, top, manoeuvre.end_speed, limits.max_acceleration, limits.max_braking
         ).duration

@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import Optional
 
 import attrs
 import numpy as np
 
+from .. import reeds_shepp
 from ..dubins import ArcPath, paths, shortest
 from ..fleet import Fleet, weakest
+from .driving import COMFORT
 from .scene import Scene
-from .task import COMFORT
 
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
@@ -21,6 +23,8 @@ _SLOWEST = 0.1  # m/s
 # Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
 # breadth past it would have to drive a full circle.)
 _THERE = 0.06
+
+Seconds = Callable[[int, ArcPath], float]  # that a robot, by its position, takes for a way
 
 
 def eased_turn(angle: float, radius: float, rate_per_metre: float, start: np.ndarray, pieces: int = 16) -> ArcPath:
@@ -59,9 +63,15 @@ def _eased_out(pose: np.ndarray, bend: float, rate_per_metre: float, pieces: int
 
 
 def ways_to_ends(
-    fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False
+    fleet: Fleet, poses: np.ndarray, ends: np.ndarray, neighbours: np.ndarray, keep_winding: bool = False,
+    seconds: Optional[Seconds] = None, least: float = 1.0,
 ) -> tuple[tuple[ArcPath, ...], np.ndarray]:
-    """A way for each robot, and the ends with their windings chosen: those of the shortest way."""
+    """A way for each robot, and the ends with their windings chosen: those of the shortest way.
+
+    Args:
+        seconds: that a robot takes for a way; given where robots whose lowest speed is below 0 may drive backward.
+        least: radius of their ways at the least, as a multiple of their smallest.
+    """
     wound = ends.copy()
     found: dict[int, ArcPath] = {}
     for k in map(int, np.flatnonzero(~np.isnan(ends[:, 2]))):
@@ -74,7 +84,10 @@ def ways_to_ends(
         if np.isnan(ends[k, 0]):
             found[k] = _turn_only(fleet, k, poses[k], turning)
         else:
-            found[k] = _way_to_pose(fleet, k, poses[k], ends[k], turning if keep_winding else None)
+            chosen = turning if keep_winding else None
+            found[k] = _way_to_pose(fleet, k, poses[k], ends[k], chosen)
+            if seconds is not None and fleet.robots[k].limits.min_speed < 0.0:
+                found[k] = _reversing(fleet, k, ends[k], found[k], chosen, seconds, least)
         wound[k, 2] = poses[k, 2] + (found[k].turning if not np.isnan(ends[k, 0]) else turning)
     leaders = list(found)
     for k in range(len(fleet)):
@@ -114,6 +127,32 @@ def _way_to_pose(fleet: Fleet, k: int, pose: np.ndarray, end: np.ndarray, turnin
         if same:
             return min(same, key=lambda path: path.length)
     return best
+
+
+def _reversing(
+    fleet: Fleet, k: int, end: np.ndarray, forward: ArcPath, turning: Optional[float], seconds: Seconds, least: float
+) -> ArcPath:
+    """The widest way with changes of gear that takes hardly longer than the quickest, where it beats the forward one.
+
+    Args:
+        least: radius at the least, as a multiple of the smallest.
+    """
+    def best(multiple: float) -> Optional[ArcPath]:
+        found = [
+            path for path in reeds_shepp.paths(
+                forward.start, as_start(end), multiple / fleet.robots[k].limits.max_curvature
+            ) if turning is None or abs(path.turning - turning) < 0.1
+        ]
+        return min(found, key=lambda path: seconds(k, path), default=None)
+
+    tightest = best(max(_RADII[-1], least))
+    if tightest is None or (seconds(k, tightest) >= seconds(k, forward) and least <= 1.0):
+        return forward
+    for multiple in _RADII:
+        wider = best(multiple) if multiple > least else None
+        if wider is not None and seconds(k, wider) <= _LONGER * seconds(k, tightest):
+            return wider
+    return tightest
 
 
 def as_start(pose: np.ndarray) -> tuple[float, float, float]:

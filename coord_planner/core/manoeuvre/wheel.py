@@ -19,10 +19,10 @@ from .. import se2
 from ..dubins import ArcPath
 from ..fleet import weakest
 from .checks import check_speed
+from .driving import COMFORT
 from .kinds import Wheel
 from .line import Line, line_of
 from .scene import Laid, Scene
-from .task import COMFORT
 from .ways import as_start
 
 _PIECES = 16  # short arcs of an easing

@@ -5,20 +5,25 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Any, Optional
 
+import attrs
 import numpy as np
 
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, to_ends, wheel
-from .checks import check_ends, check_speed, check_start
-from .kinds import EqualRadius, Manoeuvre, ToEnds, Wheel
+from . import equal_radius, in_succession, row_end, to_ends, wheel
+from .checks import check_end_speed, check_ends, check_speed, check_start
+from .detour import choices
+from .driving import drive_along
+from .kinds import EqualRadius, InSuccession, Manoeuvre, RowEnd, ToEnds, Wheel
+from .pacing import paced
 from .scene import Laid, Scene
 from .task import Task, lay_out
 from .ways import ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
-    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay,
+    EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
+    RowEnd: row_end.lay,
 }
 
 
@@ -39,36 +44,67 @@ def work_out(
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
-    laid = _LAY[type(manoeuvre)](name, manoeuvre, Scene(
-        fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
-    ))
+    bent = np.zeros(len(fleet)) if bends is None else bends
+    scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
+    laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
-    return lay_out(
-        name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
-        speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-        max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, note=laid.note,
-        strip=laid.strip,
-    )
+    check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
+
+    def task(laid: Laid) -> Task:
+        return lay_out(
+            name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
+            speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
+            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
+            note=laid.note, strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+        )
+
+    return _on_the_site(laid, scene, speed, task)
+
+
+def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
+    """A task round the site's keep-outs and within its speed caps, with others to try in turn where it is not kept."""
+    found: Optional[Task] = None
+    all_choices = [choice for each in (laid, *laid.otherwise) for choice in choices(each, scene, speed)]
+    for choice in reversed(all_choices):
+        found = attrs.evolve(paced(task(choice), scene.fleet, scene.settings), otherwise=found)
+    assert found is not None
+    return found
 
 
 def go_on(
     task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray,
-    left: tuple[Optional[ArcPath], ...],
+    left: tuple[Optional[ArcPath], ...], since: float = 0.0,
 ) -> Task:
     """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept.
 
     Args:
         left: what is left of each robot's way; None for one that stands off it and needs a new one. (A new one
             for everybody would send a robot that stands a finger's breadth past its end round a full circle.)
+        since: second of the old task at which it was left: who was still waiting then waits for the rest.
     """
     ways, ends = tuple(way for way in left if way is not None), task.ends
     if len(ways) < len(left):
-        anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True)
+        def seconds(k: int, way: ArcPath) -> float:
+            return drive_along(fleet.robots[k], settings, way, task.speed).duration
+
+        reverse = seconds if task.reversing.any() else None
+        anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, seconds=reverse)
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
-    return lay_out(
-        task.name, fleet, settings, ends, ways, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
-        duration=0.0, coupling=task.coupling, alignment=task.alignment, max_curvature=task.max_curvature,
-        turn_rates=task.turn_rates, note=task.note, strip=task.strip,
+    laid = Laid(
+        ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
+        strip=task.strip, speeds=task.speeds, alike=task.alike,
     )
+    if task.waits is not None:
+        laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.profile_time(np.array(since))), 0.0))
+
+    def rest(laid: Laid) -> Task:
+        return lay_out(
+            task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
+            speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
+            max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, behind=laid.behind, note=laid.note,
+            strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+        )
+
+    return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
