@@ -34,6 +34,7 @@ from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
+_TAKES = 1.5  # times as long as the last one took, one that came too late is given
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -108,6 +109,7 @@ class Coordinator:
         self._request: Optional[_Request] = None
         self._jobs: list[Job] = []
         self._token = 0
+        self._asked_at, self._took = 0.0, 0.0  # the last reference in motion: when it was asked for, how long one took
         self._planned_at = 0.0
         self._ended_at = 0.0
         self._refused_change = ""
@@ -540,7 +542,8 @@ class Coordinator:
         assert pursuit is not None
         last = pursuit.last()
         earlier = last.at - float(last.reference.plan.times[0])
-        at = max(pursuit.s(now + self._settings.horizon.lead), last.at)
+        self._asked_at, lead = now, max(self._settings.horizon.lead, _TAKES * self._took)
+        at = max(pursuit.s(now + lead), last.at)
         return last.reference, at - earlier, at
 
     def _remake_if_free(self, now: float) -> None:
@@ -617,8 +620,10 @@ class Coordinator:
                 self._follow_changes(request, now)
         elif pursuit.s(now + self._settings.horizon.budget) > request.takes_over_at:
             self._request = request if request.supersedes_change else None
+            self._took = now - self._asked_at
             request.again(now)  # it starts from a moment that has passed: make it again from a later one
         else:
+            self._took = 0.0
             poses = self._observer.estimate(now, self._planned).states[:, POSE]
             made = members.extended(outcome.reference, self._fleet, self._settings, poses)
             pursuit.expect(Takeover(made, request.takes_over_at))
