@@ -16,7 +16,7 @@ import numpy as np
 
 from coord_planner.core import graph as graphs
 from coord_planner.core import manoeuvre, reference
-from coord_planner.core.coordinator import Coordinator
+from coord_planner.core.coordinator import Coordinator, Solve
 from coord_planner.core.fast.ticks import TickSolve
 from coord_planner.core.fleet import Fleet, Footprint, Limits, Response, Robot
 from coord_planner.core.graph import NeighbourGraph
@@ -124,14 +124,15 @@ class Yard:
 
     def __init__(
         self, fleet: Fleet, poses: np.ndarray, manoeuvres: Mapping[str, Manoeuvre], with_settings: Settings,
-        graph: Optional[NeighbourGraph] = None, seed: int = 0, driven: tuple[str, ...] = (), **imperfect: float,
+        graph: Optional[NeighbourGraph] = None, seed: int = 0, solve: Optional[Solve] = None,
+        driven: tuple[str, ...] = (), **imperfect: float,
     ) -> None:
         self.fleet, self.settings = fleet, with_settings
         self.graph = graph = graphs.path(fleet.names) if graph is None else graph
         part = self.part(driven) if driven else fleet
         self.coordinator = Coordinator(
             part, graph.relative_to(part.names), with_settings, manoeuvres, budget=60.0,
-            solve=TickSolve(time.perf_counter),
+            solve=solve or TickSolve(time.perf_counter),
         )
         starts = {name: tuple(pose) for name, pose in zip(fleet.names, poses)}
         self.machines = SimulatedFleet(
@@ -247,7 +248,8 @@ def excess(fleet: Fleet, times: np.ndarray, commands: np.ndarray) -> dict[str, f
 
 
 def small_yard(
-    count: int = 2, response: Response = LATE, driven: tuple[str, ...] = (), **imperfect: float
+    count: int = 2, response: Response = LATE, solve: Optional[Solve] = None, driven: tuple[str, ...] = (),
+    **imperfect: float,
 ) -> Yard:
     """Two carts, a short horizon: quick to plan for. ``corner``, ``led``, ``placed`` and ``passing`` can be begun."""
     manoeuvres: dict[str, Manoeuvre] = {
@@ -258,5 +260,5 @@ def small_yard(
     }
     horizon = Horizon(intervals=12)
     return Yard(carts(count, response=response), abreast(count), manoeuvres, settings(horizon=attrs.asdict(horizon)),
-                driven=driven, **imperfect)
+                solve=solve, driven=driven, **imperfect)
 

@@ -25,6 +25,8 @@ RAISED = [
     rules.graph_changed(SETTINGS, 3),
     rules.graph_split(attrs.evolve(SETTINGS, coupling=attrs.evolve(SETTINGS.coupling, may_split=True)), [["a"], ["b"]]),
     rules.graph_split(SETTINGS, [["a"], ["b"]]),
+    rules.graph_thin(SETTINGS, 0.004),
+    rules.next_refused(SETTINGS, "corner", "too tight"),
     rules.clearance_short(SETTINGS, ("a", "b"), 0.4),
     rules.clearance_breached(SETTINGS, ("a", "b"), 0.3),
     rules.keep_out_breached(SETTINGS, "a", "pond", 0.2),

@@ -11,7 +11,7 @@ import attrs
 
 from ..core.fleet import Fleet
 from ..core.graph import Edge, NeighbourGraph
-from ..core.manoeuvre import KINDS, Manoeuvre
+from ..core.manoeuvre import KINDS, Manoeuvre, Sequence
 from ..core.parameter import describe
 from ..core.settings import Settings
 from ..errors import SettingsError
@@ -20,7 +20,7 @@ from .complaints import Complaints, Source, nearest, shown
 from .configuration import Configuration, Declaration
 from .connection import Connection
 from .contradictions import check_together
-from .ends import WORDED, understood
+from .ends import WORDED, understood, with_parts
 from .groups import Failures, FleetWords, Graph, Node, Place, Simulation
 from .layout import Slot, belongs_to_ros, group_types, kind_slot, layout, name_slots
 from .robots import build_robot, check_shared_topics, resolve
@@ -219,6 +219,10 @@ def _manoeuvres(known: Checked, connections: Mapping[str, Connection], complaint
         manoeuvre: Manoeuvre = _group(KINDS[kind], f"manoeuvres.{name}", known, complaints)
         with complaints.about(f"manoeuvres.{name}.{WORDED.get(KINDS[kind], 'kind')}"):
             found[name] = understood(manoeuvre, connections)
+    for name, manoeuvre in found.items():
+        if isinstance(manoeuvre, Sequence):
+            with complaints.about(f"manoeuvres.{name}.parts"):
+                found[name] = with_parts(manoeuvre, found)
     return found
 
 

@@ -6,10 +6,12 @@ from collections.abc import Mapping
 from typing import Any
 
 import attrs
+import numpy as np
 
 from ..core.fleet import Fleet
 from ..core.graph import Edge, NeighbourGraph
 from ..core.manoeuvre import Manoeuvre
+from ..core.neighbours import from_poses
 from ..core.parameter import Description
 from ..core.settings import Settings
 from ..errors import SettingsError
@@ -78,8 +80,12 @@ class Configuration:
 
     @property
     def graph(self) -> NeighbourGraph:
-        """The neighbour graph over the whole fleet."""
-        return NeighbourGraph(self.fleet.names, self.edges)
+        """The neighbour graph over the whole fleet: as listed, or as the starts give it."""
+        if self.settings.neighbours.source == "listed":
+            return NeighbourGraph(self.fleet.names, self.edges)
+        placed = tuple(name for name in self.fleet.names if name in self.starts)
+        places = np.array([self.starts[name][:2] for name in placed]).reshape(-1, 2)
+        return NeighbourGraph(self.fleet.names, from_poses(self.settings.neighbours, placed, places).edges)
 
     def all_starts(self) -> dict[str, Pose]:
         """Starts of all robots, for a simulation; SettingsError when one has none."""

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 
 import attrs
 
-from ..core.manoeuvre import End, Manoeuvre, RowEnd, ToEnds, Wheel
+from ..core.manoeuvre import End, Manoeuvre, RowEnd, Sequence, ToEnds, Wheel
 from ..errors import SettingsError
 from .complaints import nearest, shown
 from .connection import Connection
@@ -16,7 +16,7 @@ _FARTHEST = 1e6  # metres or degrees; beyond it lies a slip of the pen
 
 
 # The field of a kind that holds words of its own.
-WORDED: dict[type, str] = {ToEnds: "ends_deg", Wheel: "pivot", RowEnd: "rows"}
+WORDED: dict[type, str] = {ToEnds: "ends_deg", Wheel: "pivot", RowEnd: "rows", Sequence: "parts"}
 
 
 def understood(manoeuvre: Manoeuvre, connections: Mapping[str, Connection]) -> Manoeuvre:
@@ -30,6 +30,19 @@ def understood(manoeuvre: Manoeuvre, connections: Mapping[str, Connection]) -> M
     if isinstance(manoeuvre, RowEnd):
         _check_rows(manoeuvre, connections)
     return manoeuvre
+
+
+def with_parts(sequence: Sequence, manoeuvres: Mapping[str, Manoeuvre]) -> Sequence:
+    """The sequence with the manoeuvres that its parts name; SettingsError for a part that is none."""
+    if not sequence.parts:
+        raise SettingsError("it has no parts", key="parts", allowed="at least one: NAME or 'straight METRES'")
+    alone = {name: manoeuvre for name, manoeuvre in manoeuvres.items() if not isinstance(manoeuvre, Sequence)}
+    for part in sequence.parts:
+        if sequence.straight(part) is None and part not in alone:
+            known = part in manoeuvres
+            words = "is itself a sequence" if known else f"is not in manoeuvres.names{nearest(part, alone)}"
+            raise SettingsError(f"{shown(part)} {words}", key="parts", allowed="'straight METRES', " + ", ".join(alone))
+    return attrs.evolve(sequence, named={part: alone[part] for part in sequence.parts if part in alone})
 
 
 def _check_rows(manoeuvre: RowEnd, connections: Mapping[str, Connection]) -> None:

@@ -29,7 +29,7 @@ def _fleet(configuration: Configuration) -> list[str]:
 def _graph(configuration: Configuration) -> list[str]:
     if len(configuration.fleet) < 2:
         return []
-    if not configuration.edges:
+    if not configuration.graph.edges:
         return ["graph.edges is empty: nobody copies anybody"]
     found = []
     parts = configuration.graph.components()

@@ -43,6 +43,11 @@ class Bystanders:
         track = self._seen.get(name)
         return _table(track).mean(axis=0) if track else None
 
+    def places(self, names: Iterable[str]) -> np.ndarray:
+        """Where robots were seen last, shape (N, 2), metres; NaN for those that were never heard of."""
+        tracks = [self._seen.get(name) for name in names]
+        return np.array([(track[-1].x, track[-1].y) if track else (np.nan, np.nan) for track in tracks])
+
     def unfit(self, name: str, poses: Poses) -> str:
         """Why a robot could not be driven from where it stands, in words; "" when it could."""
         last, track = self._last, self._seen.get(name)

@@ -14,6 +14,7 @@ from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsErro
 from . import gate, ladder, manoeuvre, members, reference, rules, solver, stopping
 from .caps import caps
 from .case import PlannerCase
+from .chain import Chain
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .history import CommandHistory, Planned
@@ -22,6 +23,7 @@ from .manoeuvre import Manoeuvre, Task
 from .membership import Membership, overlooked
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
+from .neighbours import Lookout
 from .observer import Estimate, Observer
 from .plan import Plan
 from .problem import POSE, SPEED_COMMAND, Problem
@@ -35,6 +37,8 @@ from .tick import pose_problem
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
 _TAKES = 1.5  # times as long as the last one took, one that came too late is given
+_ANOTHER_DAY = 10.0  # seconds between two looks at the clock in motion that are none of the planner's making
+_SET_BACK = 0.2  # seconds by which the clock may go back without being set back
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
 
 Answered = Callable[[Answer], None]
@@ -61,12 +65,13 @@ class _Request:
     """A reference that is being made, and what becomes of it."""
 
     token: int
-    kind: str  # "begin", "resume", "replace" or "change"
+    kind: str  # "begin", "resume", "replace", "change" or "next"
     answered: Answered
     request_id: str
     made_for: tuple[Fleet, NeighbourGraph, Settings]
     takes_over_at: float = 0.0  # second of the last manoeuvre to come, of "replace" and "change"
     again: Callable[[float], None] = lambda _now: None  # asks once more, from a later moment
+    chain: Optional[Chain] = None  # the sequence that is under way once it is answered well
     supersedes_change: bool = False  # a change was on its way, to be made up for when this is refused
 
 
@@ -115,6 +120,9 @@ class Coordinator:
         self._refused_change = ""
         self._silence: Optional[Silence] = None
         self._watchman = Judge()
+        self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
+        self._lookout = Lookout()
+        self._chain: Optional[Chain] = None
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
 
@@ -135,6 +143,11 @@ class Coordinator:
             if self._pursuit is None:
                 return np.full((len(self._fleet), 3), np.nan)
             return self._pursuit.reference.task.ends
+
+    @property
+    def graph(self) -> NeighbourGraph:
+        """The neighbour graph over the robots that are driven."""
+        return self._graph
 
     @property
     def reference(self) -> Optional[Reference]:
@@ -170,6 +183,7 @@ class Coordinator:
         with self._lock:
             try:
                 wanted = self._manoeuvre(name, overrides or {})
+                _check_time(snapshot)
                 if self._state is State.MOVING:
                     self._check_replaceable(snapshot)
                     self._replace(snapshot.time, name, wanted, answered, request_id)
@@ -177,6 +191,7 @@ class Coordinator:
                 self._check_free("begun")
                 self._adopt()
                 estimate = self._look(snapshot)
+                self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except CoordPlannerError as error:
                 answered(Answer(False, str(error), request_id))
@@ -191,11 +206,33 @@ class Coordinator:
                 return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
-            self._ask("begin", make, answered, request_id)
+            self._ask("begin", make, answered, request_id, chain=_chain(name, wanted))
+
+    def then(
+        self, name: str, snapshot: Snapshot, *, overrides: Optional[Mapping[str, float]] = None, request_id: str = "",
+        answered: Answered = lambda _answer: None,
+    ) -> None:
+        """Ask for a manoeuvre after the one under way, in the place of what a sequence has next."""
+        with self._lock:
+            try:
+                wanted = self._manoeuvre(name, overrides or {})
+                if self._state is not State.MOVING or self._pursuit is None:
+                    raise RefusedError(f"nothing is under way: the fleet is {self._state.value}", f"begin {name}")
+                if self._request is not None and self._request.kind in ("change", "replace"):
+                    raise RefusedError("the rest of the manoeuvre is just being made anew", "ask again in a moment")
+            except CoordPlannerError as error:
+                answered(Answer(False, str(error), request_id))
+                return
+            if self._request is not None:
+                self._cancel(f"{name} was asked for instead")
+            task = self._pursuit.last().reference.task if self._chain is None else self._pursuit.reference.task
+            running = self._chain or Chain(task.name, ((task.name, self._manoeuvres.get(task.name, wanted)),))
+            self._ask_next(running.with_next(name, wanted), answered, request_id)
 
     def halt(self, now: float, reason: str) -> Answer:
         """A controlled stop of everyone; the fleet is then held."""
         with self._lock:
+            now = self._moment(now)
             if self._state is State.PLANNING:
                 self._cancel("halted")
                 self._state, self._reason = State.IDLE, reason
@@ -215,9 +252,11 @@ class Coordinator:
                 return
             self._members.waiting.clear()
             try:
+                _check_time(snapshot)
                 self._check_joining()
                 self._grow()
                 estimate = self._look(snapshot)
+                self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
@@ -225,10 +264,14 @@ class Coordinator:
             fleet, graph, settings, driving = self._fleet, self._neighbours, self._settings, self._driving
             old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
+            if self._chain is not None and self._chain.more and since >= old.task.arrival - 1e-9:
+                maker = self._next_maker(self._chain, states, driving)
+                self._ask("resume", maker, answered, "", chain=self._chain.moved_on())
+                return
             wanted = self._manoeuvres.get(old.task.name)
             self._ask(
                 "resume", lambda: members.resumed(old, since, fleet, graph, settings, states, driving, wanted),
-                answered, "",
+                answered, "", chain=self._chain,
             )
 
     def abandon(self, now: float) -> Answer:
@@ -256,6 +299,7 @@ class Coordinator:
             fleet: everybody who is wanted. graph: neighbours among all of them.
         """
         with self._lock:
+            now = self._moment(now)
             self._settings = settings or self._settings
             self._members.want(fleet or self._members.wanted)
             self._fleet = members.renewed(self._fleet, self._members.wanted)
@@ -277,12 +321,19 @@ class Coordinator:
     def deliver(self, outcome: Outcome, now: float) -> None:
         """The outcome of a job; outcomes that nobody waits for any more are dropped."""
         with self._lock:
-            request = self._request
+            request, now = self._request, self._moment(now)
             if request is None or request.token != outcome.token:
                 return
             self._request = None
+            if request.kind == "next":
+                self._take_next(request, outcome, now)
+                return
             if request.kind in ("change", "replace"):
                 self._take_over(request, outcome, now)
+                return
+            if outcome.arrived and request.kind == "resume" and self._pursuit is not None and _goes_on(self._chain):
+                self._pursuit.freeze_at_end()
+                request.answered(Answer(True, "every robot is at the end of its part; resume for the next one"))
                 return
             if outcome.arrived and request.kind == "resume":
                 self._state, self._completed, self._ended_at, self._reason = State.ENDED, True, now, "completed"
@@ -295,7 +346,7 @@ class Coordinator:
                 request.answered(Answer(False, outcome.reason, request.request_id))
                 return
             self._start(outcome.reference, now)
-            self._silence = outcome.silence
+            self._silence, self._chain = outcome.silence, request.chain
             text = _figures(outcome.reference)
             request.answered(Answer(True, text, request.request_id))
             self._follow_changes(request, now)
@@ -303,21 +354,26 @@ class Coordinator:
     # The loop
 
     def step(self, snapshot: Snapshot) -> Decision:
-        """One tick: look, judge, plan, decide."""
+        """One tick: look, judge, plan, decide. Nothing is decided anew at a time that is no number."""
+        if not np.isfinite(snapshot.time):
+            return self._decision
         with self._lock:
             cautions: list[Caution] = []
-            self._follow_members(snapshot)
+            self._follow_clock(snapshot.time, "step")
+            grew = self._follow_members(snapshot)
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             estimate = overlooked(estimate, self._fleet, self._outside)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
+            self._look_for_neighbours(snapshot.time, estimate, at_once=grew)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 outside = [self._fleet.index(name) for name in self._outside]
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings, outside)
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
+                    self._look_after_next(cautions)
                     prepared = self._prepare(snapshot.time)
         found = None if prepared is None else self._solve(prepared, snapshot.time)
         plan = None if found is None else found.plan
@@ -332,8 +388,9 @@ class Coordinator:
     def commands(self, now: float) -> Optional[dict[str, Command]]:
         """What to send now; None when nothing is to be sent."""
         with self._lock:
-            if not self._state.holds_fleet or self._pursuit is None:
+            if not self._state.holds_fleet or self._pursuit is None or not np.isfinite(now):
                 return None
+            self._follow_clock(now, "commands")
             wanted = self._pursuit.schedule.at(now + self._history.effect_delay)
             last = self._history.last
             before = last[1] if last is not None else np.zeros((len(self._fleet), 2))
@@ -391,6 +448,7 @@ class Coordinator:
         pursuit, new = self._pursuit, self._members.absent(self._fleet.names)
         if pursuit is None or not new:
             return
+        self._forget_next()
         fleet = members.grown(self._fleet, self._members.wanted, new)
         there = [self._members.bystanders.pose(name) for name in new]
         self._history.grow(fleet.response("command_delay"), self._period)
@@ -400,14 +458,14 @@ class Coordinator:
         self._members.loose |= frozenset(new)
         self._observer.loose = self._members.loose
 
-    def _follow_members(self, snapshot: Snapshot) -> None:
-        """Who joins gets a row, and who has left and stands is let go."""
+    def _follow_members(self, snapshot: Snapshot) -> bool:
+        """Who joins gets a row, and who has left and stands is let go; returns whether there are new rows."""
         self._members.bystanders.see(snapshot)
         if self._state is State.IDLE:
             self._adopt()
         pursuit, before = self._pursuit, len(self._fleet)
         if pursuit is None or not self._state.holds_fleet:
-            return
+            return False
         if self._state is State.MOVING:
             for name, reason in self._members.unfit(self._fleet.names, self._settings.poses).items():
                 self._put_off((name,), reason, snapshot.time)
@@ -415,6 +473,7 @@ class Coordinator:
             if len(self._fleet) > before:
                 self._remake_if_free(snapshot.time)
         self._let_go(snapshot.time, pursuit)
+        return len(self._fleet) > before
 
     def _let_go(self, now: float, pursuit: Pursuit) -> None:
         speeds, still = pursuit.schedule.moment(now)[:, 0], self._state in (State.HELD, State.ENDED)
@@ -433,6 +492,7 @@ class Coordinator:
     def _put_off(self, names: tuple[str, ...], reason: str, now: float) -> None:
         """Robots that cannot join the running manoeuvre wait until the fleet is idle; the others go on."""
         self._members.put_off(names, reason)
+        self._forget_next()
         for name in set(names) & set(self._fleet.names):
             if self._pursuit is not None:
                 self._pursuit.drop_drivers_of(self._fleet.index(name))
@@ -492,7 +552,7 @@ class Coordinator:
 
     def _ask(
         self, kind: str, make: Callable[[], Reference], answered: Answered, request_id: str, at: float = 0.0,
-        again: Callable[[float], None] = lambda _now: None,
+        again: Callable[[float], None] = lambda _now: None, chain: Optional[Chain] = None,
     ) -> None:
         self._token += 1
         token = self._token
@@ -515,7 +575,7 @@ class Coordinator:
             return Outcome(token, made, "", silence)
 
         self._request = _Request(token, kind, answered, request_id, (self._fleet, self._graph, self._settings), at,
-                                 again)
+                                 again, chain)
         self._jobs = [job]
 
     def _try_out(self, made: Reference, fleet: Fleet, settings: Settings) -> None:
@@ -548,7 +608,10 @@ class Coordinator:
 
     def _remake_if_free(self, now: float) -> None:
         """Make the rest anew, unless what is being made is looked at again when it is there."""
+        if self._request is not None and self._request.kind == "next":
+            self._cancel("something was changed meanwhile; ask again")
         if self._request is None or self._request.kind == "change":
+            self._forget_next()
             self._remake(now)
 
     def _remake(self, now: float) -> None:
@@ -570,14 +633,15 @@ class Coordinator:
         if before is not None and before.kind == "replace":
             self._cancel(f"{name} was asked for instead")
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
+        self._forget_next()
         old, leaves, at = self._branch(now)
         fleet, settings, states = self._fleet, self._settings, old.state(leaves)
         driving = self._members.under_command(fleet.names)
         graph = members.among(self._graph, fleet.names, driving)
         self._ask(
             "replace", lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving),
-            answered, request_id, at,
-            lambda later: self._replace(later, name, wanted, answered, request_id),
+            answered, request_id, at, lambda later: self._replace(later, name, wanted, answered, request_id),
+            _chain(name, wanted),
         )
         if owed and self._request is not None:
             self._request = attrs.evolve(self._request, supersedes_change=True)
@@ -628,10 +692,74 @@ class Coordinator:
             made = members.extended(outcome.reference, self._fleet, self._settings, poses)
             pursuit.expect(Takeover(made, request.takes_over_at))
             self._silence = outcome.silence
+            if replaces:
+                self._chain = request.chain
             in_time = max(pursuit.clock(request.takes_over_at) - now, 0.0)
             text = f"in {in_time:.1f} s {_figures(outcome.reference)}"
             request.answered(Answer(True, text, request.request_id))
             self._follow_changes(request, now)
+
+    def _next_maker(self, chain: Chain, states: np.ndarray, driving: tuple[str, ...]) -> Callable[[], Reference]:
+        """Makes the reference of the next part from where the part before it ends."""
+        fleet, settings, (name, wanted) = self._fleet, self._settings, chain.next
+        graph = members.among(self._graph, fleet.names, driving)
+        return lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving)
+
+    def _ask_next(
+        self, chain: Chain, answered: Answered = lambda _answer: None, request_id: str = ""
+    ) -> None:
+        assert self._pursuit is not None
+        before = self._pursuit.before(None if self._chain is None else self._chain.expected)
+        old, ends = before.reference, before.at - float(before.reference.plan.times[0]) + before.reference.end
+        driven = tuple(name for k, name in enumerate(self._fleet.names) if k not in old.task.stands)
+        maker = self._next_maker(chain, old.state(old.end), self._members.driving(driven))
+        self._ask("next", maker, answered, request_id, ends, chain=chain)
+
+    def _look_after_next(self, cautions: list[Caution]) -> None:
+        """Have the next part made, well before it begins."""
+        chain, pursuit = self._chain, self._pursuit
+        if chain is None or pursuit is None or not chain.more:
+            return
+        if chain.refused:
+            cautions.append(rules.next_refused(self._settings, chain.next[0], chain.refused))
+        elif self._request is None and chain.expected is None:
+            self._ask_next(chain)
+
+    def _take_next(self, request: _Request, outcome: Outcome, now: float) -> None:
+        """The reference of the next part is there or was refused."""
+        pursuit, chain = self._pursuit, request.chain
+        assert chain is not None
+        if self._state is not State.MOVING or pursuit is None:
+            request.answered(Answer(False, f"the fleet is {self._state.value}", request.request_id))
+        elif request.made_for != (self._fleet, self._graph, self._settings):
+            request.answered(Answer(False, "something was changed meanwhile; ask again", request.request_id))
+        elif outcome.reference is None:
+            if self._chain is not None and self._chain.parts == chain.parts:
+                self._chain = attrs.evolve(chain, refused=outcome.reason)
+            request.answered(Answer(False, f"{outcome.reason} (nothing has changed)", request.request_id))
+        else:
+            # Who stands at the joint already goes on as soon as it can.
+            at = max(request.takes_over_at, pursuit.s(now + self._settings.horizon.budget))
+            self._forget_next()
+            pursuit.expect(Takeover(outcome.reference, at))
+            self._chain = attrs.evolve(chain, expected=outcome.reference, silence=outcome.silence)
+            text = f"in {max(pursuit.clock(at) - now, 0.0):.1f} s {_figures(outcome.reference)}"
+            request.answered(Answer(True, text, request.request_id))
+
+    def _forget_next(self) -> None:
+        """The next part is to be made anew."""
+        if self._chain is not None and self._pursuit is not None and self._chain.expected is not None:
+            self._pursuit.forget(self._chain.expected)
+            self._chain = attrs.evolve(self._chain, expected=None)
+
+    def _wait_at_joint(self, now: float, pursuit: Pursuit, chain: Chain, standing: bool) -> None:
+        """The part is over and the next one is not there."""
+        if not standing:
+            self._begin_stop(now, f"{chain.next[0]} could not be planned in time", completed=False)
+        elif chain.refused:
+            pursuit.freeze(now)
+            self._state, self._reason = State.HELD, f"{chain.next[0]} cannot follow: {chain.refused}"
+            self._chain = attrs.evolve(chain, refused="")
 
     def _start(self, made: Reference, now: float) -> None:
         begins = now + self._lead_time()
@@ -655,6 +783,30 @@ class Coordinator:
         """From a snapshot to the first moment at which a new plan can still change what every robot does."""
         return self._settings.horizon.budget + float(self._history.effect_delay.max())
 
+    def _moment(self, now: float) -> float:
+        """A moment to reckon with: the newest known one where the clock shows no number.
+
+        In motion also where it shows another day than at the last tick: a stop is not put off until then.
+        """
+        newest = max(self._seen.values(), default=self._decision.time)
+        strange = self._state is State.MOVING and bool(self._seen) and abs(now - newest) > _ANOTHER_DAY
+        return newest if strange or not np.isfinite(now) else now
+
+    def _follow_clock(self, now: float, who: str) -> None:
+        """A clock that was set back takes everything timed back with it: a stop in hand is not left for a later day."""
+        back = now - self._seen.get(who, now)
+        if back < -_SET_BACK:
+            self._seen = {each: time + back for each, time in self._seen.items()}
+            self._history.shift(back)
+            self._observer.shift(back)
+            self._members.shift(back)
+            if self._pursuit is not None:
+                self._pursuit.shift(back)
+            self._stop_over, self._planned_at = self._stop_over + back, self._planned_at + back
+            self._ended_at += back
+            self._decision = attrs.evolve(self._decision, time=self._decision.time + back)
+        self._seen[who] = now
+
     @property
     def _planned(self) -> Optional[Planned]:
         return self._pursuit.schedule.at if self._pursuit is not None and self._state.holds_fleet else None
@@ -670,6 +822,14 @@ class Coordinator:
     def _look(self, snapshot: Snapshot) -> Estimate:
         self._observer.observe(self._believed(snapshot), self._planned)
         return self._observer.estimate(snapshot.time, self._planned)
+
+    def _look_for_neighbours(self, now: float, estimate: Estimate, at_once: bool = False) -> None:
+        """Take up the graph that the poses give, where it is they that give it."""
+        rows = [self._fleet.index(name) for name in self._driving]
+        graph, places = self._graph.relative_to(self._driving), estimate.states[rows, :2]
+        found = self._lookout.found(self._settings.neighbours, graph, places, now, at_once)
+        if found is not None:
+            self.change(now, graph=found)
 
     def _settle(self, now: float) -> None:
         """Changes of state that time alone brings."""
@@ -688,7 +848,9 @@ class Coordinator:
         if pursuit.s(now - settle) < pursuit.reference.end:
             return
         standing = np.abs(pursuit.schedule.moment(now)[:, 0]).max() < _STANDING
-        if standing:
+        if self._chain is not None and self._chain.more:
+            self._wait_at_joint(now, pursuit, self._chain, bool(standing))
+        elif standing:
             self._completed, self._state, self._ended_at = True, State.ENDED, now
             self._reason = "completed"
         elif pursuit.reference.task.end_speed > 0.0:
@@ -717,6 +879,8 @@ class Coordinator:
         at = now + self._lead_time()
         if pursuit.swap_when_due(at):
             self._take_up(pursuit.reference)
+            if self._chain is not None and pursuit.reference is self._chain.expected:
+                self._silence, self._chain = self._chain.silence, self._chain.moved_on()
         if pursuit.s(at) >= pursuit.reference.end:
             self._planned_at = now  # nothing is left to plan: the commands run out in zeros
             return None
@@ -766,7 +930,9 @@ class Coordinator:
         self._state, self._completed = State.STOPPING, completed
         self._reason = reason if completed else f"{reason}; stopping {stop.manner}"
         pursuit.coming = ()
-        if self._request is not None and self._request.kind in ("change", "replace"):
+        if self._chain is not None:
+            self._chain = attrs.evolve(self._chain, expected=None)
+        if self._request is not None and self._request.kind in ("change", "replace", "next"):
             self._cancel("the fleet was stopped")
         return stop
 
@@ -775,7 +941,8 @@ class Coordinator:
     ) -> Decision:
         pursuit = self._pursuit
         tick = pursuit.tick if pursuit is not None else None
-        clearance, pair = (np.inf, (-1, -1)) if tick is None else tick.plan.closest(1)
+        ahead = pursuit.ahead if pursuit is not None else None
+        clearance, pair = (np.inf, (-1, -1)) if ahead is None else ahead.closest(1)
         if self._state is State.MOVING and clearance < self._settings.site_rules.min_clearance - SHORT:
             cautions.append(rules.clearance_short(self._settings, self._names(pair), clearance))
         if self._state is State.MOVING and tick is not None:
@@ -791,12 +958,15 @@ class Coordinator:
             return Decision(**common)
         task = pursuit.reference.task
         done = np.clip(pursuit.s(now) / pursuit.reference.end, 0.0, 1.0)
+        name = task.name
+        if self._chain is not None and len(self._chain.parts) > 1:
+            name, done = f"{self._chain.name}: {name}", self._chain.progress(done)
         return Decision(
-            **common, manoeuvre=task.name, progress=float(done),
+            **common, manoeuvre=name, progress=float(done),
             progress_rate=pursuit.pace if self._state is State.MOVING else 0.0,
             coupling=task.coupling, alignment=task.alignment, lag=pursuit.behind,
-            plan_times=np.zeros(0) if tick is None else tick.plan.times,
-            plan_poses=np.zeros((len(self._fleet), 0, 3)) if tick is None else tick.plan.poses,
+            plan_times=np.zeros(0) if ahead is None else ahead.times,
+            plan_poses=np.zeros((len(self._fleet), 0, 3)) if ahead is None else ahead.poses,
             clearance=float(clearance), clearance_pair=self._names(pair) if np.isfinite(clearance) else None,
             solve_time=0.0 if plan is None else plan.solve_time,
         )
@@ -805,11 +975,25 @@ class Coordinator:
         return self._fleet.names[pair[0]], self._fleet.names[pair[1]]
 
 
+def _chain(name: str, wanted: Manoeuvre) -> Optional[Chain]:
+    parts = manoeuvre.parts_of(name, wanted)
+    return Chain(name, parts) if len(parts) > 1 else None
+
+
+def _goes_on(chain: Optional[Chain]) -> bool:
+    return chain is not None and chain.more
+
+
 def _figures(made: Reference) -> str:
     """How long a manoeuvre takes and how near the robots come, in words."""
     text = f"{made.task.name} takes {made.end - float(made.plan.times[0]):.1f} s"
     text += f", smallest clearance {made.clearance:.2f} m" if np.isfinite(made.clearance) else ""
     return f"{text}; {made.task.note}" if made.task.note else text
+
+
+def _check_time(snapshot: Snapshot) -> None:
+    if not np.isfinite(snapshot.time):
+        raise RefusedError("it is not known what time it is", "check the clock")
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

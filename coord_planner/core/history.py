@@ -58,6 +58,10 @@ class CommandHistory:
         """Some robots were let go: whatever they were sent no longer counts."""
         self._sent = self._sent.stilled(rows)
 
+    def shift(self, by: float) -> None:
+        """The clock was set: what was sent was sent so many seconds later by it."""
+        self._sent = Schedule(self._sent.times + by, self._sent.values)
+
     @property
     def last(self) -> tuple[float, np.ndarray] | None:
         """Moment and values of the last sending."""

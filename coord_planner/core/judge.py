@@ -8,7 +8,7 @@ from typing import Optional
 import attrs
 import numpy as np
 
-from . import outline, rules, stopping
+from . import neighbours, outline, rules, stopping
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .messages import Caution, Snapshot
@@ -105,6 +105,11 @@ class Judge:
         self._graph = view.graph
         if len(view.graph.names) > 1 and not view.graph.connected:
             found.append(rules.graph_split(view.settings, view.graph.components()))
+        elif len(view.fleet) > 1 and view.settings.neighbours.warn_below > 0.0:
+            rows = [view.fleet.index(name) for name in view.graph.names]
+            holding = neighbours.holding(view.settings.neighbours, view.graph, view.estimate.states[rows, :2])
+            if holding < view.settings.neighbours.warn_below:
+                found.append(rules.graph_thin(view.settings, holding))
         return found
 
     def _limits(self, view: View) -> list[Caution]:

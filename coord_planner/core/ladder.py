@@ -93,13 +93,14 @@ def common_curvature(prepared: Prepared) -> Plan:
 def _driven(prepared: Prepared, commands: np.ndarray) -> Plan:
     """The plan that follows from wanted commands at nodes 1 .. M, shape (N, M, 2), cut to rates and limits."""
     problem, fleet, h = prepared.problem, prepared.problem.fleet, prepared.problem.intervals
-    fastest = np.stack([
-        np.stack([-fleet.limit("max_curvature_rate"), -fleet.limit("max_braking")], axis=1),
-        np.stack([fleet.limit("max_curvature_rate"), fleet.limit("max_acceleration")], axis=1),
-    ])
+    slowest, quickest = problem.rates_of_speed
+    steer = fleet.limit("max_curvature_rate")
     before, rates = problem.initial[:, [CURVATURE_COMMAND, SPEED_COMMAND]], np.empty(commands.shape)
     for i, step in enumerate(h):
-        rates[:, i] = np.clip((commands[:, i] - before) / step, *fastest)
+        rates[:, i] = np.clip(
+            (commands[:, i] - before) / step,
+            np.stack([-steer, slowest[:, i]], axis=1), np.stack([steer, quickest[:, i]], axis=1),
+        )
         before = before + step * rates[:, i]
     states, rates = rolled_out(problem, rates)
     shape, start = problem.shape, solver.start_from_states(problem, states)

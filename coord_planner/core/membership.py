@@ -10,6 +10,7 @@ import numpy as np
 from .bystanders import Bystanders
 from .fleet import Fleet
 from .graph import NeighbourGraph
+from .neighbours import from_poses
 from .observer import Estimate
 from .settings import Poses, Settings
 
@@ -78,11 +79,18 @@ class Membership:
         if reason:
             return reason
         there = [name for name in self.driving(carried) if name in wanted.names]
+        places = self.bystanders.places((*there, *new))
+        if settings.neighbours.source != "listed" and np.isfinite(places).all():
+            graph = from_poses(settings.neighbours, (*there, *new), places)
         parts = graph.relative_to((*there, *new)).components()
         apart = [name for name in new if not any(name in part and set(part) & set(there) for part in parts)]
         if apart and not settings.coupling.may_split:
             return f"no edge of the neighbour graph joins {', '.join(apart)} to the robots that are driven"
         return ""
+
+    def shift(self, by: float) -> None:
+        """The clock was set: whatever was at a moment was so many seconds later by it."""
+        self._stood = {name: since + by for name, since in self._stood.items()}
 
     def let_go(self, now: float, standing: Mapping[str, bool], rest: float) -> tuple[str, ...]:
         """Who has stood for long enough to be let go.

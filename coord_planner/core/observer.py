@@ -23,6 +23,7 @@ _DRIFT = np.array([0.02, 0.02, 0.01, 0.25])
 _RUNNING = 0.4
 _ONE_SIDED = 1.5
 _AFRESH = 0.3
+_LONGEST = 30.0  # seconds over which anything is predicted: who was not heard of for so long is somewhere
 _FRESH = 0.15  # seconds; up to this age an estimate is as good as the margin of the plan takes it to be
 _SLOWLY = 0.08  # part of the newest in the running mean of squared innovations
 _TELLING = 0.2  # m/s from which a machine's factor may change as fast as _DRIFT says
@@ -84,6 +85,10 @@ class Observer:
             setattr(self, name, getattr(fresh, name))
         self.configure(fleet, self._settings)
 
+    def shift(self, by: float) -> None:
+        """The clock was set: what was seen was seen so many seconds later by it."""
+        self._stamp = self._stamp + by
+
     def observe(self, poses: Mapping[str, PoseSample], planned: Planned | None) -> tuple[str, ...]:
         """Take in newer poses; returns the names of robots that jumped (they start afresh where they are)."""
         fresh = [
@@ -107,7 +112,7 @@ class Observer:
 
     def estimate(self, now: float, planned: Planned | None) -> Estimate:
         """Predicted over to a moment, without changing what is known."""
-        known = np.flatnonzero(np.isfinite(self._stamp))
+        known = np.flatnonzero(np.isfinite(self._stamp) & np.isfinite(now))
         count = len(self._fleet)
         states = np.full((count, 7), np.nan)
         factor = np.ones(count)
@@ -124,7 +129,7 @@ class Observer:
 
     def _growth(self, now: float, speed: np.ndarray) -> np.ndarray:
         """Two standard deviations of where a robot is, less those of a fresh estimate, shape (N,), metres."""
-        age = np.where(np.isfinite(self._stamp), np.maximum(now - self._stamp - _FRESH, 0.0), 0.0)
+        age = np.where(np.isfinite(self._stamp), np.clip(now - self._stamp - _FRESH, 0.0, _LONGEST), 0.0)
         drifted = _DRIFT[0] ** 2 * age + (np.sqrt(self._cov[:, 3, 3]) * np.nan_to_num(speed) * age) ** 2
         return 2.0 * np.sqrt(drifted)
 
@@ -147,7 +152,7 @@ class Observer:
         self, which: np.ndarray, to: np.ndarray, planned: Planned | None
     ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Mean (n, 4), reached (n, 2) and the way made (n, 2) at each robot's own moment."""
-        span = np.maximum(to - self._stamp[which], 0.0)
+        span = np.clip(to - self._stamp[which], 0.0, _LONGEST)
         steps = max(1, int(np.ceil(span.max() / _SUBSTEP)))
         h = span / steps
         times = np.zeros((len(self._fleet), steps))
@@ -160,7 +165,7 @@ class Observer:
 
     def _propagate(self, which: np.ndarray, to: np.ndarray, planned: Planned | None) -> None:
         before = self._mean[which].copy()
-        span = np.maximum(to - self._stamp[which], 0.0)
+        span = np.clip(to - self._stamp[which], 0.0, _LONGEST)
         mean, reached, way = self._predict(which, to, planned)
         jacobian = np.tile(np.eye(4), (len(which), 1, 1))
         moved = mean - before

@@ -67,6 +67,7 @@ class Pursuit:
         self.progress = GroupProgress(len(fleet))
         self.schedule: Schedule = constant(values, begins)
         self.tick: Optional[Tick] = None
+        self.ahead: Optional[Plan] = None  # the plan of the last tick, through the end of the manoeuvre to the next
         self.coming: tuple[Takeover, ...] = ()  # in the order in which they fall due
         self.taken_over = 0  # references so far
         self._s, self._time = at, begins
@@ -74,9 +75,18 @@ class Pursuit:
         self._plan_pace = 1.0  # of the plan being driven
         self.behind = np.zeros(len(fleet))
 
+    def shift(self, by: float) -> None:
+        """The clock was set: whatever was or is to be at a moment is so many seconds later by it."""
+        self._time, self._updated = self._time + by, self._updated + by
+        self.schedule = Schedule(self.schedule.times + by, self.schedule.values)
+
     def freeze(self, now: float) -> None:
         """The group leaves its reference for a stop: its progress stays what it is now."""
         self._s, self._time, self.progress.pace = self.s(now), now, 0.0
+
+    def freeze_at_end(self) -> None:
+        """The group stands where its reference ends."""
+        self._s = max(self._s, self.reference.end)
 
     @property
     def pace(self) -> float:
@@ -100,7 +110,7 @@ class Pursuit:
         )
         self.progress.grow(more)
         self.behind = np.concatenate([self.behind, np.zeros(more)])
-        self.schedule, self.tick = self.schedule.grown(more), None
+        self.schedule, self.tick, self.ahead = self.schedule.grown(more), None, None
 
     def drop_drivers_of(self, row: int) -> None:
         """What is to come no longer comes, from the first on in which a robot is driven that must not be."""
@@ -135,6 +145,15 @@ class Pursuit:
         """Change over to a reference when its moment has come, in the place of what was to come from then on."""
         self.coming = (*(each for each in self.coming if each.at < takeover.at - 1e-9), takeover)
 
+    def before(self, reference: Optional[Reference]) -> Takeover:
+        """What the group will follow last before it changes over to a reference, or at all."""
+        kept = tuple(each for each in self.coming if each.reference is not reference)
+        return kept[-1] if kept else Takeover(self.reference, float(self.reference.plan.times[0]))
+
+    def forget(self, reference: Optional[Reference]) -> None:
+        """Do not change over to a reference after all."""
+        self.coming = tuple(each for each in self.coming if each.reference is not reference)
+
     def swap_when_due(self, at: float) -> bool:
         """Change over to what has fallen due; seconds of the manoeuvre are counted as it counts them."""
         swapped = False
@@ -160,7 +179,11 @@ class Pursuit:
     def install(self, prepared: Prepared, plan: Plan, since: float) -> None:
         """Drive a solved plan from its first node on."""
         self.tick = Tick(plan, prepared.s, prepared.reference)
-        self.schedule = self.schedule.splice(of_plan(plan), float(plan.times[0]), since)
+        self.ahead = plan
+        for each in self.coming:
+            if each.at >= self.reference.end - 1e-9:
+                self.ahead = ticks.through(plan, prepared.s, each.at, each.reference, prepared.problem.pace)
+        self.schedule = self.schedule.splice(of_plan(self.ahead), float(plan.times[0]), since)
         self._plan_pace = prepared.problem.pace
 
     def _carried(self, new: Reference) -> Optional[Tick]:

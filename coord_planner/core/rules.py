@@ -52,6 +52,14 @@ TABLE = (
     Row("graph split", Level.WARN, Response.GO_ON, "the graph falls apart and coupling.may_split allows it"),
     Row("graph split", Level.ERROR, Response.STOP, "the graph falls apart"),
     Row(
+        "graph about to split", Level.WARN, Response.GO_ON,
+        "the graph holds together by less than neighbours.warn_below",
+    ),
+    Row(
+        "next part refused", Level.WARN, Response.GO_ON,
+        "the next part of a sequence cannot be made; the fleet is held at the end of this one",
+    ),
+    Row(
         "predicted clearance short", Level.WARN, Response.GO_ON,
         "the plan cannot keep the smallest clearance everywhere",
     ),
@@ -142,6 +150,15 @@ def graph_split(settings: Settings, parts: Sequence[Sequence[str]]) -> Caution:
     words = " | ".join(" ".join(part) for part in parts)
     level = Level.WARN if settings.coupling.may_split else Level.ERROR
     return _caution(settings, "graph split", "", level, f"the neighbour graph falls into {len(parts)} parts: {words}")
+
+
+def graph_thin(settings: Settings, holding: float) -> Caution:
+    figures = f"second-smallest eigenvalue {holding:.3g}, {settings.neighbours.warn_below:g} is warned of"
+    return _caution(settings, "graph about to split", "", Level.WARN, figures)
+
+
+def next_refused(settings: Settings, part: str, reason: str) -> Caution:
+    return _caution(settings, "next part refused", "", Level.WARN, f"{part} cannot follow: {reason}")
 
 
 def clearance_short(settings: Settings, pair: Sequence[str], clearance: float) -> Caution:

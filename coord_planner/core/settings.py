@@ -25,6 +25,27 @@ class Coupling:
 
 
 @attrs.frozen
+class Neighbours:
+    """Where the neighbour graph comes from."""
+
+    source: str = parameter(
+        "listed", "listed: graph.edges and the topic neighbours; nearest: so many of each robot, counted from both "
+        "sides; within_range: all that are near enough", choices=("listed", "nearest", "within_range"),
+    )
+    count: int = parameter(2, "nearest: how many", minimum=1, maximum=100, live=True)
+    range: float = parameter(6.0, "within_range: how near", "m", above=0.0, maximum=1e4, live=True)
+    hysteresis: float = parameter(
+        0.2, "robots that are joined stay so until they are further apart by this part of the distance",
+        minimum=0.0, maximum=2.0, live=True,
+    )
+    period: float = parameter(1.0, "how often neighbours are looked for", "s", minimum=0.1, maximum=60.0, live=True)
+    warn_below: float = parameter(
+        0.01, "a second-smallest eigenvalue of the graph's Laplacian below this is warned of; 0: never",
+        minimum=0.0, maximum=100.0, live=True,
+    )
+
+
+@attrs.frozen
 class Prices:
     """Small prices beside the coupled cost, and the steep ones that stand for promises."""
 
@@ -180,6 +201,7 @@ class Settings:
     """All groups together; ``Settings()`` holds every default."""
 
     coupling: Coupling = Coupling()
+    neighbours: Neighbours = Neighbours()
     prices: Prices = Prices()
     horizon: Horizon = Horizon()
     commands: Commands = Commands()

@@ -22,6 +22,7 @@ from .watch import watch
 
 _SWERVE = np.radians(2.0)  # heading by which a robot may leave its reference for what may be noise
 _SPEEDS = [SPEED, SPEED_COMMAND]
+_OFF = 5e-3  # 1/m or m/s by which a command may be outside its limit
 _NEAR = 0.5  # metres or radians by which an unfinished plan may miss its end and still be driven
 
 
@@ -104,6 +105,22 @@ def paced(states: np.ndarray, pace: float) -> np.ndarray:
     return scaled
 
 
+def through(plan: Plan, s: np.ndarray, at: float, following: Reference, pace: float) -> Plan:
+    """A plan with what follows behind the end of its manoeuvre, where that falls into the horizon.
+
+    An end holds the whole state, so what lies before it does not depend on what lies behind.
+
+    Args:
+        s: nodes of the plan in seconds of the manoeuvre. at: the second at which the reference that follows begins.
+    """
+    later = s > at + 1e-9
+    if not later.any():
+        return plan
+    states = plan.states.copy()
+    states[:, later] = paced(following.states(s[later] - at + float(following.plan.times[0])), pace)
+    return attrs.evolve(plan, states=states)
+
+
 def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencing = OPEN) -> Optional[Plan]:
     """A plan that may be driven: the solver's own, or, where it ran out of time, what its commands come to.
 
@@ -113,16 +130,27 @@ def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencin
     Args:
         least_clearance: smallest exact clearance that counts as clear, metres. fencing: what is to be kept away from.
     """
-    if plan.solved:
-        return plan
-    if not np.isfinite(plan.rates).all():
+    if not (np.isfinite(plan.states).all() and np.isfinite(plan.rates).all()):
         return None
+    if plan.solved and _in_bounds(problem, plan):
+        return plan
     states, rates = rolled_out(problem, plan.rates)
     missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
     finished = attrs.evolve(plan, states=states, rates=rates, missed=missed)
     near = missed[:, :3].max() < _NEAR
     clear = near and finished.closest(1)[0] >= least_clearance
     return finished if clear and fencing.least(plan.fleet, finished.dense(1))[0] >= 0.0 else None
+
+
+def _in_bounds(problem: Problem, plan: Plan) -> bool:
+    """Whether the commands begin where they are and keep within the limits in force, whatever the solver says of it."""
+    commands, first = plan.states[:, 1:], plan.states[:, 0] - problem.initial
+    curvature, speed, bounds = commands[:, :, CURVATURE_COMMAND], commands[:, :, SPEED_COMMAND], problem.bounds
+    return bool(
+        np.abs(first[:, [CURVATURE_COMMAND, SPEED_COMMAND]]).max() < _OFF
+        and (np.abs(curvature) < bounds.max_curvature + _OFF).all()
+        and (speed < bounds.max_speed + _OFF).all() and (speed > bounds.min_speed - _OFF).all()
+    )
 
 
 def _without_swerve(

@@ -40,11 +40,12 @@ class IgnoredError(CoordPlannerError):
 
 @attrs.frozen
 class Request:
-    """What was asked for through ``~/request``."""
+    """What was asked for through ``~/request``; ``next``: after the manoeuvre under way."""
 
     id: str
     manoeuvre: str
     overrides: Mapping[str, float] = attrs.field(factory=dict)
+    next: bool = False
 
 
 @attrs.frozen
@@ -261,12 +262,13 @@ def parse_request(text: str) -> Request:
     """What a ``~/request`` message asks for.
 
     Args:
-        text: JSON ``{"id": .., "manoeuvre": name, "overrides": {key: number}}``; overrides may be left out.
+        text: JSON ``{"id": .., "manoeuvre": name, "overrides": {key: number}, "when": "now" or "next"}``; the last
+            two may be left out. Next: after the manoeuvre under way, in the place of what a sequence has next.
 
     Raises:
         IgnoredError: not such a text.
     """
-    content = _json_object(text, {"id", "manoeuvre", "overrides"})
+    content = _json_object(text, {"id", "manoeuvre", "overrides", "when"})
     given = content.get("id")
     if isinstance(given, bool) or not isinstance(given, (str, int)) or given == "":
         raise IgnoredError("malformed", f"id is {_short(given)}, it must be a text or a whole number")
@@ -276,7 +278,10 @@ def parse_request(text: str) -> Request:
     overrides = content.get("overrides", {})
     if not isinstance(overrides, dict) or not all(_is_number(value) for value in overrides.values()):
         raise IgnoredError("malformed", f"overrides is {_short(overrides)}, it must hold a number for each key")
-    return Request(str(given), name, {key: float(value) for key, value in overrides.items()})
+    when = content.get("when", "now")
+    if when not in ("now", "next"):
+        raise IgnoredError("malformed", f"when is {_short(when)}, it must be now or next")
+    return Request(str(given), name, {key: float(value) for key, value in overrides.items()}, when == "next")
 
 
 def heartbeat_text(beat: Beat) -> str:

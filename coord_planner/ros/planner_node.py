@@ -299,6 +299,8 @@ class PlannerNode(LifecycleNode):
 
     def _on_decision(self, decision: Decision, tick_ms: float) -> None:
         self.changes.follow(decision)
+        if self.configuration.settings.neighbours.source != "listed":
+            self._follow_neighbours(self._coordinator.graph)
         self.reporter.decided(decision, tick_ms)
 
     def fail(self, words: str, details: str = "") -> None:
@@ -357,7 +359,17 @@ class PlannerNode(LifecycleNode):
                 words, settings=configuration.settings, fleet=configuration.driven, graph=self.graph
             )
 
+    def _follow_neighbours(self, graph: NeighbourGraph) -> None:
+        """The coordinator has found other neighbours from the poses."""
+        if graph.edges != self.graph.edges:
+            self.graph = graph
+            self.outbox.tell_neighbours(graph, self.now())
+
     def _on_neighbours(self, graph: NeighbourGraph) -> None:
+        source = self.configuration.settings.neighbours.source
+        if source != "listed":
+            self.get_logger().warning(f"ignored neighbours that were sent: neighbours.source is {source}")
+            return
         if graph.edges != self.graph.edges:
             self.graph = graph
             self.changes.make("neighbours", graph=graph)

@@ -48,8 +48,9 @@ class Requests:
     def begin(self, request: messages.Request) -> Future:
         """Ask for a manoeuvre; the future gets its Answer."""
         def ask(snapshot: Snapshot, answered: Answered) -> None:
-            self._node.coordinator.begin(request.manoeuvre, snapshot, overrides=request.overrides,
-                                         request_id=request.id, answered=answered)
+            coordinator = self._node.coordinator
+            begin = coordinator.then if request.next else coordinator.begin
+            begin(request.manoeuvre, snapshot, overrides=request.overrides, request_id=request.id, answered=answered)
 
         return self._ask(ask, request.id)
 

@@ -110,15 +110,15 @@ def exact_cost(problem: Problem, rates: np.ndarray) -> float:
     """
     states = _rolled_out(problem, rates)
     missed = np.nan_to_num(states[:, -1] - problem.target)
+    variables, rows = ocp.variable_blocks(problem.shape), ocp.row_blocks(problem.shape)
     named: dict[str, Any] = {
-        **{name: states[:, :, i] for i, name in enumerate(STATES)},
-        "curvature_rate": rates[:, :, 0], "acceleration": rates[:, :, 1], "short": 0.0,
+        **dict.fromkeys(variables.shapes, 0.0), **{name: states[:, :, i] for i, name in enumerate(STATES)},
+        "curvature_rate": rates[:, :, 0], "acceleration": rates[:, :, 1],
         "over": np.maximum(missed, 0.0), "under": np.maximum(-missed, 0.0),
     }
-    variables, rows = ocp.variable_blocks(problem.shape), ocp.row_blocks(problem.shape)
     evaluated, numbers = _evaluated(problem.shape), ocp.numbers(problem)
-    clearances = rows.unpack(np.asarray(evaluated(variables.pack(named), numbers)[1]).ravel())["clearance"]
-    named["short"] = np.maximum(-clearances, 0.0)
+    lacking = rows.unpack(np.asarray(evaluated(variables.pack(named), numbers)[1]).ravel())
+    named["short"], named["outside"] = np.maximum(-lacking["clearance"], 0.0), np.maximum(-lacking["fence"], 0.0)
     return float(evaluated(variables.pack(named), numbers)[0])
 
 

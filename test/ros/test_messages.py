@@ -138,6 +138,9 @@ def test_requests() -> None:
     full = messages.parse_request('{"id": 7, "manoeuvre": "corner_left", "overrides": {"speed": 1}}')
     assert full == messages.Request("7", "corner_left", {"speed": 1.0})
     assert messages.parse_request('{"id": "x", "manoeuvre": "m"}').overrides == {}
+    assert messages.parse_request('{"id": "x", "manoeuvre": "m", "when": "next"}').next and not full.next
+    with pytest.raises(messages.IgnoredError, match="it must be now or next"):
+        messages.parse_request('{"id": "x", "manoeuvre": "m", "when": "soon"}')
 
 
 @pytest.mark.parametrize("text", [

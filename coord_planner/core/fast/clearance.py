@@ -1,4 +1,7 @@
-"""Clearances of the watched pairs on their separating lines: the rows of ocp.clearance_rows without slack."""
+"""Clearances of the watched pairs on their separating lines, and of robots from fences, all without slack.
+
+The rows of ocp.clearance_rows and, below them, of ocp.fence_rows.
+"""
 
 from __future__ import annotations
 
@@ -54,8 +57,8 @@ def look(numbers: Numbers, r: Rollout) -> Sight:
 def clearances(numbers: Numbers, r: Rollout, sight: Sight) -> np.ndarray:
     """Gap between the shadows on the line, less the gap to keep, shape (P, M), metres; negative where short."""
     first, second = numbers.pairs.T
-    between = numbers.normals[..., 0] * (r.x[second, 1:] - r.x[first, 1:])
-    between += numbers.normals[..., 1] * (r.y[second, 1:] - r.y[first, 1:])
+    between = numbers.normals[..., 0] * (numbers.second * r.x[second, 1:] - r.x[first, 1:])
+    between += numbers.normals[..., 1] * (numbers.second * r.y[second, 1:] - r.y[first, 1:])
     shadows = numbers.half_length * sight.long + numbers.half_width * sight.wide
     if numbers.offset_x.any() or numbers.offset_y.any():
         centres = numbers.offset_x * sight.along + numbers.offset_y * sight.across
@@ -94,7 +97,7 @@ def rows_of(numbers: Numbers, r: Rollout, sight: Sight, pairs: np.ndarray) -> Ro
     """Derivatives of the clearances of chosen pairs, shape (Q,), at all nodes, by the commands of their two robots."""
     robots = numbers.pairs[pairs].T
     each = robots.ravel()
-    normal = np.concatenate([-numbers.normals[pairs], numbers.normals[pairs]])
+    normal = np.concatenate([-numbers.normals[pairs], numbers.normals[pairs] * numbers.second[pairs, :, None]])
     twists = np.concatenate(list(_twists(numbers, sight)[:, pairs]))
     by_distance, by_turn = node_slopes(r, each, normal[:, :, 0], normal[:, :, 1], twists)
     by_curvature = by_turn * r.distance[each, None]

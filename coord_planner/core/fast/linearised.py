@@ -100,9 +100,10 @@ class Linearised:
         """Second derivatives by each robot's own turning, shape (N, M, M): its price, alignment, shadows."""
         numbers = self._numbers
         m = len(numbers.h)
-        weights = np.zeros((len(numbers.gain), m, m))
+        weights = np.zeros((len(numbers.coupled), m, m))
         steps = np.arange(m)
-        weights[:, steps, steps] = np.diagonal(numbers.gain)[:, None] * numbers.cost_h
+        own = 1.0 + np.diagonal(numbers.coupled)[:, None] * numbers.compared**2
+        weights[:, steps, steps] = own * numbers.cost_h
         by_heading = None
         if numbers.alignment.any():
             by_heading = np.zeros_like(point.r.turn)
@@ -146,7 +147,8 @@ class Linearised:
         """Blocks beside the diagonal that the edges bring, shape (E, 2M, 2M)."""
         numbers, turning = self._numbers, self._turning
         first, second = self._structure.edges.T
-        weighted = (numbers.gain[first, second][:, None] * numbers.cost_h)[:, :, None] * turning[second]
+        both = numbers.compared[first] * numbers.compared[second] * numbers.cost_h
+        weighted = (numbers.coupled[first, second][:, None] * both)[:, :, None] * turning[second]
         if numbers.alignment.any():
             aligned = objective.aligning_weights(numbers, self.point.r)
             pulls = _by_turning(aligned, self._scale()[first], self._scale()[second])
@@ -170,9 +172,11 @@ class Linearised:
             stiff = np.take_along_axis(stiff, stiffest, axis=1)
             by_commands = np.take_along_axis(by_commands, stiffest[:, :, None], axis=1)
         blocks = np.matmul(by_commands.transpose(0, 2, 1), by_commands * stiff[:, :, None])
-        turned = self._structure.turned[rows.pairs].tolist()
-        for k, j, around, back in zip(*rows.robots.tolist(), blocks, turned):
+        for pair, k, j, around in zip(rows.pairs.tolist(), *rows.robots.tolist(), blocks):
             diagonal[k] += around[:size, :size]
+            if k == j:  # a fence
+                continue
+            back = self._structure.turned[pair]
             diagonal[j] += around[size:, size:]
             block, place = (around[size:, :size], (j, k)) if back else (around[:size, size:], (k, j))
             if place in beside:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import attrs
 import numpy as np
 
@@ -10,6 +12,7 @@ from ..problem import CURVATURE, CURVATURE_COMMAND, SPEED, SPEED_COMMAND, Proble
 from .response import Response, response
 
 # Rows of each robot and interval (or node), in this order in every array of limits.
+_FAR = 1e3  # metres that are free where a fence does not bind
 LIMITS = ("curvature", "speed", "curvature_rate", "acceleration", "turn_rate", "lateral")
 
 
@@ -63,9 +66,12 @@ class Numbers:
         curvature, speed: how curvature and speed answer to commands.
         begins: what the initial state brings.
         turn_speed: shape (N, M). full_speed: shape (N, 1). lower, upper: of LIMITS, shape (6, N, M).
-        gain: I + coupling * weighted Laplacian, shape (N, N). edges: (E, 2). alignment: price of each edge, (E,).
+        coupled: coupling * weighted Laplacian, shape (N, N). edges: (E, 2). alignment: price of each edge, (E,).
+        compared: what neighbours compare, as a part of the turning, shape (N, M).
         target: shape (N, 7), 0 where free. end_price: shape (N, 7), 0 where free.
-        pairs: (P, 2). normals, gaps: as in Watch. short_price: of a metre of missing clearance at each node, (M,).
+        pairs: (P, 2): first those that are watched, then fences, which are pairs of a robot with nobody: the second is
+            the first again and counts 0. watched: how many are no fences. second: 1, and 0 of fences, shape (P, 1).
+        normals, gaps: as in Watch. short_price: of a metre of missing clearance at each node, (M,).
         half_length, half_width, offset_x, offset_y: footprints of the two robots of each pair, shape (2, P, 1).
         beside: 1 where a robot is the first, or the second, of a pair, shape (2, N, P). toward: the second less the
             first, shape (N, P).
@@ -82,7 +88,8 @@ class Numbers:
     full_speed: np.ndarray
     lower: np.ndarray
     upper: np.ndarray
-    gain: np.ndarray
+    coupled: np.ndarray
+    compared: np.ndarray
     edges: np.ndarray
     alignment: np.ndarray
     price_curvature_rate: float
@@ -91,6 +98,8 @@ class Numbers:
     target: np.ndarray
     end_price: np.ndarray
     pairs: np.ndarray
+    watched: int
+    second: np.ndarray
     normals: np.ndarray
     gaps: np.ndarray
     short_price: np.ndarray
@@ -108,17 +117,17 @@ def numbers(problem: Problem, fleet: FleetNumbers) -> Numbers:
     curvature, speed = response(h, fleet.curvature_lag), response(h, fleet.speed_lag)
     free = np.isnan(problem.target)
     lower, upper = _limits(problem, fleet)
-    prices, watch = problem.prices, problem.watch
+    prices = problem.prices
     return Numbers(
         fleet=fleet, h=h, cost_h=h * problem.pace, curvature=curvature, speed=speed,
         begins=_beginning(curvature, speed, problem.initial),
         asked_speed=problem.asked_speed, turn_speed=problem.turn_speed, full_speed=problem.full_speed[:, None],
-        lower=lower, upper=upper, gain=_gain(problem), edges=problem.edges,
+        lower=lower, upper=upper, coupled=_coupled(problem), compared=problem.turn_speed / problem.compare_speed,
+        edges=problem.edges,
         alignment=problem.coupling * problem.alignment * problem.weights,
         price_curvature_rate=prices.curvature_rate, price_acceleration=prices.acceleration, price_speed=prices.speed,
         target=np.where(free, 0.0, problem.target), end_price=np.where(free, 0.0, prices.end),
-        pairs=watch.pairs, normals=watch.normals, gaps=watch.gaps, short_price=prices.clearance * h,
-        **_sides(fleet, watch.pairs),
+        short_price=prices.clearance * h, **_lines(problem, fleet),
     )
 
 
@@ -136,26 +145,35 @@ def _beginning(curvature: Response, speed: Response, initial: np.ndarray) -> Beg
     )
 
 
-def _sides(fleet: FleetNumbers, pairs: np.ndarray) -> dict[str, np.ndarray]:
-    """What the two robots of each pair are."""
-    two = pairs.T
-    beside = (two[:, None, :] == np.arange(len(fleet.half_length))[:, None]).astype(float)
+def _lines(problem: Problem, fleet: FleetNumbers) -> dict[str, Any]:
+    """Pairs and fences: their lines, and what the two robots of each are."""
+    watch, fences = problem.watch, problem.fences
+    binding = np.isfinite(fences.reaches)
+    two = np.concatenate([watch.pairs, np.repeat(fences.robots[:, None], 2, axis=1)]).T
+    second = np.ones((two.shape[1], 1))
+    second[len(watch.pairs) :] = 0.0
+    counts = np.stack([np.ones_like(second), second])
+    beside = (two[:, None, :] == np.arange(len(fleet.half_length))[:, None]).astype(float) * counts[:, None, :, 0]
     return {
-        "half_length": fleet.half_length[two][..., None], "half_width": fleet.half_width[two][..., None],
-        "offset_x": fleet.offset_x[two][..., None], "offset_y": fleet.offset_y[two][..., None],
+        "pairs": np.ascontiguousarray(two.T), "watched": len(watch.pairs), "second": second,
+        "normals": np.concatenate([watch.normals, fences.normals * binding[..., None]]),
+        "gaps": np.concatenate([watch.gaps, np.where(binding, -fences.reaches, -_FAR)]),
+        "half_length": fleet.half_length[two][..., None] * counts,
+        "half_width": fleet.half_width[two][..., None] * counts,
+        "offset_x": fleet.offset_x[two][..., None] * counts, "offset_y": fleet.offset_y[two][..., None] * counts,
         "beside": beside, "toward": beside[1] - beside[0],
     }
 
 
-def _gain(problem: Problem) -> np.ndarray:
-    gain = np.eye(len(problem.fleet))
+def _coupled(problem: Problem) -> np.ndarray:
+    laplacian = np.zeros((len(problem.fleet),) * 2)
     first, second = problem.edges[:, 0], problem.edges[:, 1]
     weights = problem.coupling * problem.weights
-    np.add.at(gain, (first, first), weights)
-    np.add.at(gain, (second, second), weights)
-    np.subtract.at(gain, (first, second), weights)
-    np.subtract.at(gain, (second, first), weights)
-    return gain
+    np.add.at(laplacian, (first, first), weights)
+    np.add.at(laplacian, (second, second), weights)
+    np.subtract.at(laplacian, (first, second), weights)
+    np.subtract.at(laplacian, (second, first), weights)
+    return laplacian
 
 
 def _limits(problem: Problem, fleet: FleetNumbers) -> tuple[np.ndarray, np.ndarray]:

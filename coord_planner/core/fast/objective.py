@@ -18,7 +18,7 @@ def smooth_cost(numbers: Numbers, r: Rollout) -> float:
     steering = rates(numbers, r.curvature, CURVATURE_COMMAND)
     speeding = rates(numbers, r.speed, SPEED_COMMAND)
     each = (
-        r.turning * (numbers.gain @ r.turning)
+        r.turning * _pull(numbers, r)
         + numbers.price_speed * relative**2
         + numbers.price_curvature_rate * steering**2
         + numbers.price_acceleration * speeding**2
@@ -30,9 +30,15 @@ def smooth_cost(numbers: Numbers, r: Rollout) -> float:
     return cost
 
 
+def _pull(numbers: Numbers, r: Rollout) -> np.ndarray:
+    """Slope of turning and coupling by the turning, for each second, shape (N, M)."""
+    pull: np.ndarray = r.turning + numbers.compared * (numbers.coupled @ (numbers.compared * r.turning))
+    return pull
+
+
 def mean_slopes(numbers: Numbers, r: Rollout) -> tuple[np.ndarray, np.ndarray]:
     """Slopes of turning and of leaving the asked speed by the mean curvatures and speeds, each (N, M)."""
-    pull = (numbers.gain @ r.turning) * (numbers.cost_h / numbers.turn_speed)
+    pull = _pull(numbers, r) * (numbers.cost_h / numbers.turn_speed)
     leaving = numbers.price_speed * numbers.cost_h * (r.mean_speed - numbers.asked_speed) / numbers.full_speed**2
     return pull * r.mean_speed, pull * r.mean_curvature + leaving
 

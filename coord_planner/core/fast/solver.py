@@ -26,8 +26,9 @@ ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step
 SOLVED = 1e-2  # predicted gap below which a plan counts as finished
 
 # After so many steps so large a gap is good enough: who has come far gains little from many more steps.
-_TOLERATED = ((10, ENOUGH), (14, 3 * ENOUGH), (10_000, SOLVED))
+_TOLERATED = ((12, ENOUGH), (16, 2 * ENOUGH), (10_000, SOLVED))
 
+_LEAST_COST = 1e-2  # costs below this count as this where gaps are parts of them
 _KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
 _ACTIVE_STEPS = 8
 _STEPS = 30
@@ -211,7 +212,7 @@ def _active_steps(
         before = [reached - left_over, before[0]]
         passed = excess(known, trial.point)
         if trial.changed == 0 and passed < _KEPT_WITHIN:
-            gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, 1e-9)
+            gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, _LEAST_COST)
             if gap <= watchman.tolerated:
                 return trial, _Found(trial.point, trial.forces, reached, _KEPT_WITHIN, gap, watchman.steps)
         slow, left_before = left_over > _SLOW * left_before, left_over
@@ -241,7 +242,7 @@ def _interior_steps(ready: Prepared, interior: Interior, x: Iterate, watchman: _
             break
         watchman.stepped()
         reached = cost(ready.numbers, x.point)
-        gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, 1e-9)
+        gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, _LEAST_COST)
         before = reached
         if not np.isfinite(reached):
             break
@@ -266,11 +267,11 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
     priced = known.end_price > 0
     return Plan(
         fleet=problem.fleet, times=problem.times, states=states,
-        rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point), short=short,
-        pairs=problem.watch.pairs, outside=np.zeros((0, len(problem.times) - 1)), fenced=problem.fences.robots,
+        rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point),
+        short=short[: size.pairs], pairs=problem.watch.pairs, outside=short[size.pairs :], fenced=problem.fences.robots,
         missed=np.abs(point.missed) * priced,
         solved=found.gap <= SOLVED and found.passed <= _KEPT_WITHIN, solve_time=took,
-        iterations=found.steps, vector=vectors.primal(states, point, short, priced),
+        iterations=found.steps, vector=vectors.primal(size, states, point, short, priced),
         multipliers=vectors.multipliers(known, point, found.forces, size),
     )
 

@@ -8,7 +8,7 @@ import attrs
 
 from .. import solver
 from ..plan import Plan
-from ..problem import Bounds, Problem, Watch
+from ..problem import Bounds, Fences, Problem, Watch
 from ..solver import Start
 from .solver import TickSolver
 
@@ -16,21 +16,19 @@ from .solver import TickSolver
 _KNOWN = {
     Problem: {
         "fleet", "edges", "weights", "coupling", "alignment", "prices", "times", "pace", "initial", "asked_speed",
-        "turn_speed", "full_speed", "target", "bounds", "watch",
-        "fences", "compare_speed", "compared",
+        "turn_speed", "full_speed", "target", "bounds", "watch", "fences", "compare_speed", "compared",
     },
     Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
     Watch: {"pairs", "normals", "gaps"},
+    Fences: {"robots", "normals", "reaches"},
 }
 
 
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    if problem.compared is not None or len(problem.fences.robots) or problem.compare_speed is not problem.turn_speed:
-        return False
-    return all(
+    return problem.compared is None and all(
         {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
-        for part in (problem, problem.bounds, problem.watch)
+        for part in (problem, problem.bounds, problem.watch, problem.fences)
     )
 
 

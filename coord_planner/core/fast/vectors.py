@@ -17,11 +17,12 @@ _FAINT, _LARGEST = 1e-4, 1e4  # multipliers of limits outside this tell nothing 
 
 @attrs.frozen(eq=False)
 class Sizes:
-    """N robots, M intervals, P pairs: where the blocks of ocp.variable_blocks and ocp.row_blocks lie."""
+    """N robots, M intervals, P pairs, F fences: where the blocks of ocp.variable_blocks and ocp.row_blocks lie."""
 
     robots: int
     intervals: int
     pairs: int
+    fences: int
 
     @property
     def rates(self) -> int:
@@ -46,7 +47,9 @@ class Sizes:
 
 def sizes(problem: Problem) -> Sizes:
     """Of a problem."""
-    return Sizes(len(problem.fleet), len(problem.times) - 1, len(problem.watch.pairs))
+    return Sizes(
+        len(problem.fleet), len(problem.times) - 1, len(problem.watch.pairs), len(problem.fences.robots)
+    )
 
 
 def commands(size: Sizes, vector: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -59,15 +62,18 @@ def commands(size: Sizes, vector: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 
 def forces(size: Sizes, bounds: np.ndarray, rows: np.ndarray) -> Forces:
     """Multipliers of the rows that count from those of bounds and rows; faint ones of another solver are left out."""
-    n, m, p = size.robots, size.intervals, size.pairs
+    n, m, p, f = size.robots, size.intervals, size.pairs, size.fences
     states = bounds[: size.rates].reshape(_STATE_COUNT, m + 1, n)
     rates = bounds[size.rates : size.slacks].reshape(2, m, n)
     products = rows[size.limits : size.clearances].reshape(2, m, n)
     limit = np.concatenate([
         states[CURVATURE_COMMAND, None, 1:], states[SPEED_COMMAND, None, 1:], rates, products
     ]).transpose(0, 2, 1)
-    clear = -rows[size.clearances : size.clearances + p * m].reshape(m, p).T
-    ends = rows[size.clearances + p * m :].reshape(_STATE_COUNT, n).T
+    first = size.clearances + p * m
+    clear = np.concatenate([
+        -rows[size.clearances : first].reshape(m, p).T, -rows[first : first + f * m].reshape(m, f).T
+    ])
+    ends = rows[first + f * m :].reshape(_STATE_COUNT, n).T
     return Forces(_without_faint(limit), np.array(ends), np.maximum(_without_faint(clear), 0.0))
 
 
@@ -84,11 +90,12 @@ def states_of(numbers: Numbers, point: Point) -> np.ndarray:
     return states
 
 
-def primal(states: np.ndarray, point: Point, short: np.ndarray, priced: np.ndarray) -> np.ndarray:
-    """The primal vector. short: missing clearances, (P, M). priced: which ends count, (N, 7)."""
+def primal(size: Sizes, states: np.ndarray, point: Point, short: np.ndarray, priced: np.ndarray) -> np.ndarray:
+    """The primal vector. short: missing clearances, (P + F, M). priced: which ends count, (N, 7)."""
     missed = point.missed * priced
     return np.concatenate([
-        states.transpose(2, 1, 0).ravel(), point.limits[2:4].transpose(0, 2, 1).ravel(), short.T.ravel(),
+        states.transpose(2, 1, 0).ravel(), point.limits[2:4].transpose(0, 2, 1).ravel(),
+        short[: size.pairs].T.ravel(), short[size.pairs :].T.ravel(),
         np.maximum(missed, 0.0).T.ravel(), np.maximum(-missed, 0.0).T.ravel(),
     ])
 
@@ -101,13 +108,15 @@ def multipliers(
     states = np.zeros((_STATE_COUNT, m + 1, n))
     limit = found.limits.transpose(0, 2, 1)
     states[CURVATURE_COMMAND, 1:], states[SPEED_COMMAND, 1:] = limit[0], limit[1]
+    watched, fenced = found.clearances[: size.pairs], found.clearances[size.pairs :]
     bounds = np.concatenate([
-        states.ravel(), limit[2:4].ravel(), (found.clearances - numbers.short_price).T.ravel(),
+        states.ravel(), limit[2:4].ravel(), (watched - numbers.short_price).T.ravel(),
+        (fenced - numbers.short_price).T.ravel(),
         (found.ends - numbers.end_price).T.ravel(), (-found.ends - numbers.end_price).T.ravel(),
     ])
     rows = np.concatenate([
         costates(numbers, point, found).transpose(0, 2, 1).ravel(), limit[4:].ravel(),
-        -found.clearances.T.ravel(), found.ends.T.ravel(),
+        -watched.T.ravel(), -fenced.T.ravel(), found.ends.T.ravel(),
     ])
     return bounds, rows
 

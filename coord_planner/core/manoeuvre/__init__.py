@@ -5,13 +5,26 @@
 """
 
 from .driving import STAND_LAGS
-from .kinds import KINDS, End, EqualRadius, InSuccession, Manoeuvre, Pivot, RowEnd, ToEnds, Wheel
+from .kinds import (
+    KINDS,
+    End,
+    EqualRadius,
+    Form,
+    InSuccession,
+    Manoeuvre,
+    Pivot,
+    RowEnd,
+    Sequence,
+    Straight,
+    ToEnds,
+    Wheel,
+)
+from .sequence import parts_of
 from .task import Task, lay_out
 from .ways import eased_turn
 from .working_out import go_on, work_out
 
 __all__ = [
-    "KINDS", "STAND_LAGS", "End", "EqualRadius", "InSuccession", "Manoeuvre", "Pivot", "RowEnd", "Task",
-    "ToEnds", "Wheel",
-    "eased_turn", "go_on", "lay_out", "work_out",
+    "KINDS", "STAND_LAGS", "End", "EqualRadius", "Form", "InSuccession", "Manoeuvre", "Pivot", "RowEnd", "Sequence",
+    "Straight", "Task", "ToEnds", "Wheel", "eased_turn", "go_on", "lay_out", "parts_of", "work_out",
 ]

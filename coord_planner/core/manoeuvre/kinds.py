@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from typing import ClassVar, Optional, Union
 
 import attrs
@@ -195,6 +196,104 @@ class InSuccession:
 
 
 @attrs.frozen
+class Form:
+    """From where they stand into a formation, each robot to the place that suits best."""
+
+    shape: str = parameter(
+        "line", "line (abreast), file (one behind the other) or echelon (each further right and back)",
+        choices=("line", "file", "echelon"),
+    )
+    spacing: float = parameter(3.0, "distance from place to place", "m", above=0.0, maximum=1000.0)
+    slant_deg: float = parameter(
+        45.0, "echelon: by how much the line is turned back from abreast; negative: further left and back", "deg",
+        minimum=-85.0, maximum=85.0,
+    )
+    heading_deg: Optional[float] = parameter(
+        None, "heading of the formation; left out: the robots' mean one", "deg", minimum=-36000.0, maximum=36000.0
+    )
+    x: Optional[float] = parameter(
+        None, "middle of the formation; left out, with y: ahead of where they stand", "m", minimum=-1e6, maximum=1e6
+    )
+    y: Optional[float] = parameter(
+        None, "middle of the formation; left out, with x: ahead of where they stand", "m", minimum=-1e6, maximum=1e6
+    )
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        0.0, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def __attrs_post_init__(self) -> None:
+        if (self.x is None) != (self.y is None):
+            raise SettingsError("only one of x and y is given", key="x", allowed="both, or neither")
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        slant = f" slanting {self.slant_deg:g} degrees" if self.shape == "echelon" else ""
+        where = "" if self.x is None else f" about ({self.x:g}, {self.y:g})"
+        return f"into {'an' if self.shape == 'echelon' else 'a'} {self.shape}{slant}, {self.spacing:g} m apart{where}"
+
+
+@attrs.frozen
+class Straight:
+    """Everyone drives straight on."""
+
+    distance: float = parameter(10.0, "how far", "m", above=0.0, maximum=10000.0)
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        return f"everyone {self.distance:g} m straight on"
+
+
+@attrs.frozen
+class Sequence:
+    """Manoeuvres of the same file one after the other, with straight runs between them.
+
+    ``named`` holds the manoeuvres that its parts name; whoever reads a file fills it in.
+    """
+
+    parts: tuple[str, ...] = parameter(
+        attrs.NOTHING, "one after the other: the name of another manoeuvre, or 'straight METRES'"
+    )
+    speed: float = parameter(1.0, "asked speed of straight runs", "m/s", above=0.0, maximum=20.0)
+    joint_speed: float = parameter(
+        0.0, "speed at which one part ends and the next begins, instead of their own end_speed", "m/s",
+        minimum=0.0, maximum=20.0,
+    )
+    end_speed: float = parameter(0.0, "speed at the end of the last part", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for parts that have none of their own, instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    named: Mapping[str, Manoeuvre] = attrs.field(factory=dict, kw_only=True, eq=False)
+    alignment: Optional[float] = attrs.field(default=None, init=False)  # each part has its own
+
+    def straight(self, part: str) -> Optional[float]:
+        """Metres of a straight run; None for a part that names a manoeuvre; SettingsError for neither."""
+        words = part.split()
+        distance = _number(words[1]) if len(words) == 2 and words[0] == "straight" else None
+        if distance is not None and distance > 0.0:
+            return distance
+        if len(words) != 1:
+            raise SettingsError(f"{part!r} is no part of a sequence", key="parts", allowed="NAME or 'straight METRES'")
+        return None
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        return ", then ".join(self.parts)
+
+
+@attrs.frozen
 class Pivot:
     """A point (m), or so many metres beside a robot, on the inner side of the turn."""
 
@@ -212,9 +311,10 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd]
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd, Form, Straight, Sequence]
 KINDS: dict[str, type] = {
     "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "row_end": RowEnd,
+    "form": Form, "straight": Straight, "sequence": Sequence,
 }
 
 

@@ -13,7 +13,7 @@ from .. import reeds_shepp
 from ..dubins import ArcPath, paths, shortest
 from ..fleet import Fleet, weakest
 from .driving import COMFORT
-from .scene import Scene
+from .scene import Laid, Scene
 
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
@@ -52,6 +52,18 @@ def straightened(scene: Scene) -> tuple[Scene, tuple[ArcPath, ...]]:
 def joined(first: ArcPath, then: ArcPath) -> ArcPath:
     """One way after another that begins where it ends."""
     return attrs.evolve(then, start=first.start, segments=(*first.segments, *then.segments)) if first.segments else then
+
+
+def preceded(laid: Laid, first: tuple[ArcPath, ...]) -> Laid:
+    """What was laid for robots that come out of their bends first."""
+    marks = laid.marks
+    if marks is not None:
+        lengths = np.array([[way.length] for way in first])
+        marks = np.concatenate([np.zeros_like(lengths), lengths + marks], axis=1)
+    return attrs.evolve(
+        laid, ways=tuple(joined(out, way) for out, way in zip(first, laid.ways)), marks=marks,
+        otherwise=tuple(preceded(each, first) for each in laid.otherwise),
+    )
 
 
 def _eased_out(pose: np.ndarray, bend: float, rate_per_metre: float, pieces: int = 8) -> ArcPath:

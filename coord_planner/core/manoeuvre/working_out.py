@@ -8,22 +8,24 @@ from typing import Any, Optional
 import attrs
 import numpy as np
 
+from ...errors import RefusedError
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, in_succession, row_end, to_ends, wheel
+from . import equal_radius, form, in_succession, row_end, straight, to_ends, wheel
 from .checks import check_end_speed, check_ends, check_speed, check_start
 from .detour import choices
 from .driving import drive_along
-from .kinds import EqualRadius, InSuccession, Manoeuvre, RowEnd, ToEnds, Wheel
+from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, Sequence, Straight, ToEnds, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
+from .sequence import parts_of
 from .task import Task, lay_out
-from .ways import ways_to_ends
+from .ways import preceded, straightened, ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
-    RowEnd: row_end.lay,
+    RowEnd: row_end.lay, Form: form.lay, Straight: straight.lay,
 }
 
 
@@ -38,15 +40,22 @@ def work_out(
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
         bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
 
+    Returns:
+        of a sequence the task of its first part; the others are worked out as well, from where those before end.
+
     Raises:
         RefusedError: it cannot be kept, with the figures and what to do.
     """
+    if isinstance(manoeuvre, Sequence):
+        return _first_of(name, manoeuvre, Scene(
+            fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
+        ))
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
     bent = np.zeros(len(fleet)) if bends is None else bends
     scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
-    laid = _LAY[type(manoeuvre)](name, manoeuvre, scene)
+    laid = _lay(name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
     check_end_speed(fleet, settings, laid.ends, manoeuvre.end_speed)
@@ -62,6 +71,28 @@ def work_out(
     return _on_the_site(laid, scene, speed, task)
 
 
+def _first_of(name: str, sequence: Sequence, scene: Scene) -> Task:
+    """The first part, when all can be laid out; after a part in which somebody only copies nothing more is known."""
+    first: Optional[Task] = None
+    parts = parts_of(name, sequence)
+    for i, (part, wanted) in enumerate(parts):
+        try:
+            task = work_out(
+                part, wanted, scene.fleet, scene.settings, scene.poses, scene.speed_now, scene.neighbours, scene.bends
+            )
+        except RefusedError as refused:
+            raise RefusedError(f"{name}, part {i + 1} of {len(parts)}: {refused.reason}", refused.remedy) from refused
+        first = first or task
+        if np.isnan(task.ends).any():
+            break
+        past = wanted.end_speed * (task.duration - task.arrival)
+        heading = task.ends[:, 2]
+        ends = task.ends + past * np.column_stack([np.cos(heading), np.sin(heading), 0.0 * heading])
+        scene = attrs.evolve(scene, poses=ends, speed_now=wanted.end_speed, bends=np.zeros(len(ends)))
+    assert first is not None
+    return first
+
+
 def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], Task]) -> Task:
     """A task round the site's keep-outs and within its speed caps, with others to try in turn where it is not kept."""
     found: Optional[Task] = None
@@ -70,6 +101,14 @@ def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], 
         found = attrs.evolve(paced(task(choice), scene.fleet, scene.settings), otherwise=found)
     assert found is not None
     return found
+
+
+def _lay(name: str, manoeuvre: Manoeuvre, scene: Scene) -> Laid:
+    lay = _LAY[type(manoeuvre)]
+    if isinstance(manoeuvre, (EqualRadius, ToEnds)):  # which know themselves what to do about bends
+        return lay(name, manoeuvre, scene)
+    after, first = straightened(scene)
+    return preceded(lay(name, manoeuvre, after), first)
 
 
 def go_on(
