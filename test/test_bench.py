@@ -33,8 +33,7 @@ def printed(tmp_path_factory: pytest.TempPathFactory) -> tuple[dict, Path]:
 
 def test_it_prints_what_it_promises(printed):
     rows = printed[0]["rows"]
-    posed = [(row["case"], row["robots"], row["intervals"]) for row in rows]
-    assert posed == [("contacts", 1, 24), ("contacts", 2, 24)]
+    assert [(row["case"], row["robots"], row["intervals"]) for row in rows] == [("contacts", k, 24) for k in (1, 2)]
     for row in rows:
         assert row.keys() >= PROMISED
         assert row["ratio"] == pytest.approx(row["plain_ms_median"] / row["tick_ms_median"])

@@ -230,6 +230,8 @@ def test_the_asked_radius_is_named_where_it_stands_in_the_way():
 
 def test_a_plan_that_the_solver_did_not_finish_and_that_jumps_is_refused(monkeypatch):
     whole = solver.solve
+    monkeypatch.setattr(reference, "knows", lambda _problem: False)
+    monkeypatch.setattr(solver, "finish", lambda problem, near: near)
     monkeypatch.setattr(solver, "solve", lambda problem, start, **_: whole(problem, start, budget=1e-3))
     with pytest.raises(RefusedError, match="no plan was found in"):
         fleets.solve(EqualRadius(radius=4.0), carts(3), abreast(3), settings())

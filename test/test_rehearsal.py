@@ -113,12 +113,12 @@ def test_a_manoeuvre_that_is_refused_moves_nothing(site):
 
 def test_a_robot_that_is_not_enabled_joins_on_the_way_and_another_leaves():
     starts = np.array([[0.0, 9.0, 0.0], [0.0, 4.5, 0.0], [0.0, 0.0, 0.0]])
-    corner = {"kind": "equal_radius", "angle_deg": 120.0, "radius": 8.0, "speed": 1.0}
+    corner = {"kind": "equal_radius", "angle_deg": 45.0, "radius": 14.0, "speed": 1.0}
     site = sites.site(starts, {"corner": corner}, robots__mower_3__enabled=False)
     done = []
 
     def watch(coordinator, now):
-        for at, names in ((3.0, (0, 1, 2)), (8.0, (1, 2))):
+        for at, names in ((3.0, (0, 1, 2)), (6.0, (1, 2))):
             if now >= at and at not in done:
                 fleet = Fleet(tuple(site.fleet.robots[k] for k in names))
                 assert coordinator.cannot_join(fleet, site.graph) == ""
@@ -127,10 +127,10 @@ def test_a_robot_that_is_not_enabled_joins_on_the_way_and_another_leaves():
 
     run = rehearse(site, "corner", seed=2, watch=watch)
     figures = summary(run)
-    assert done == [3.0, 8.0] and run.fleet.names == site.fleet.names
+    assert done == [3.0, 6.0] and run.fleet.names == site.fleet.names
     assert figures["completed"] and figures["contacts"] == 0 and figures["limit_violations"] == 0
     assert np.isnan(run.end_poses[[0, 2]]).all() and figures["end_error_m"]["mower_2"] <= 0.10
-    before, joined, left = (int(np.searchsorted(run.times, at)) for at in (3.0, 6.0, 14.0))
+    before, joined, left = (int(np.searchsorted(run.times, at)) for at in (3.0, 6.0, 10.0))
     assert np.abs(run.speeds[2, :before]).max() == 0.0 and run.speeds[2, joined] > 0.3
     assert np.abs(run.speeds[0, left:]).max() < 0.01 and run.speeds[1, left] > 0.5
     assert all(frame.poses.shape[0] == 3 for frame in run.frames)

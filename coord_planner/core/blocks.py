@@ -39,7 +39,8 @@ class Blocks:
         """Vector from arrays by name (each is broadcast to its block's shape); all names must be there."""
         vector = np.empty(self.size)
         for name, place in self.slices.items():
-            vector[place] = np.broadcast_to(np.asarray(values[name], dtype=float), self.shapes[name]).ravel(order="F")
+            value, shape = np.asarray(values[name], dtype=float), self.shapes[name]
+            vector[place] = (value if value.shape == shape else np.broadcast_to(value, shape)).ravel(order="F")
         return vector
 
     def unpack(self, vector: np.ndarray) -> dict[str, np.ndarray]:

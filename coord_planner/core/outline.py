@@ -60,10 +60,10 @@ def separating_normals(polygons: np.ndarray, pairs: np.ndarray) -> np.ndarray:
     first, second = polygons[pairs[:, 0]], polygons[pairs[:, 1]]
     ends = shapely.get_coordinates(shapely.shortest_line(first, second)).reshape(first.shape + (2, 2))
     lines = ends[..., 1, :] - ends[..., 0, :]
-    between = _centres(second) - _centres(first)
-    apart = np.hypot(lines[..., 0], lines[..., 1])[..., None] > 1e-9
-    lines = np.where(apart, lines, between)
     length = np.hypot(lines[..., 0], lines[..., 1])[..., None]
+    if length.size and length.min() <= 1e-9:
+        lines = np.where(length > 1e-9, lines, _centres(second) - _centres(first))
+        length = np.hypot(lines[..., 0], lines[..., 1])[..., None]
     return np.where(length > 1e-9, lines / np.maximum(length, 1e-9), np.array([1.0, 0.0]))
 
 

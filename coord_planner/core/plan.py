@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import attrs
 import numpy as np
+import shapely
 
 from . import outline, se2
 from .fleet import Fleet
@@ -79,9 +80,37 @@ class Plan:
 def closest_along(
     fleet: Fleet, poses: np.ndarray, growth: np.ndarray | None = None
 ) -> tuple[float, tuple[int, int]]:
-    """Smallest exact clearance and its pair over poses of shape (N, K, 3); pairs that stay far apart are skipped."""
-    pairs = near_pairs(fleet, poses, np.inf if poses.shape[0] < 7 else 3.0)
-    return outline.closest(outline.outlines(fleet.corners(), poses), pairs, growth)
+    """Smallest exact clearance and its pair over poses of shape (N, K, 3); (inf, (-1, -1)) without pairs.
+
+    Exact distances are worked out only where circles round the robots' origins come nearer than what is found already.
+    """
+    pairs = outline.all_pairs(len(poses))
+    if not len(pairs):
+        return float("inf"), (-1, -1)
+    corners = fleet.corners()
+    reach = np.linalg.norm(corners, axis=2).max(axis=1) + (0.0 if growth is None else growth)
+    apart = np.linalg.norm(poses[pairs[:, 0], :, :2] - poses[pairs[:, 1], :, :2], axis=2)
+    at_least = apart - reach[pairs].sum(axis=1)[:, None]
+    nearest = np.array([np.unravel_index(int(np.argmin(at_least)), at_least.shape)])
+    gap = _gaps(corners, poses, pairs, nearest, growth)[0]
+    where = np.argwhere(at_least < gap)
+    if len(where):
+        gaps = _gaps(corners, poses, pairs, where, growth)
+        best = int(np.argmin(gaps))
+        if gaps[best] < gap:
+            gap, nearest = gaps[best], where[best : best + 1]
+    first, second = pairs[nearest[0, 0]].tolist()
+    return max(float(gap), 0.0), (first, second)
+
+
+def _gaps(
+    corners: np.ndarray, poses: np.ndarray, pairs: np.ndarray, where: np.ndarray, growth: np.ndarray | None
+) -> np.ndarray:
+    """Exact clearances at chosen places, shape (C, 2): which pair, and when; below 0 where growth makes them meet."""
+    robots, moments = pairs[where[:, 0]], where[:, 1]
+    shapes = [outline.outlines(corners[k], poses[k, moments]) for k in robots.T]
+    found: np.ndarray = shapely.distance(*shapes)
+    return found if growth is None else found - growth[robots].sum(axis=1)
 
 
 def near_pairs(fleet: Fleet, poses: np.ndarray, gap: float) -> np.ndarray:

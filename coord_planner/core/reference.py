@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Callable
 from typing import Optional
 
 import attrs
 import numpy as np
 
-from ..errors import RefusedError
+from ..errors import RefusedError, SolveError
 from . import grid, ocp, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
+from .fast.solver import TickSolver
+from .fast.ticks import knows
 from .fence import OPEN, Fencing, fencing
 from .fleet import Fleet
 from .graph import NeighbourGraph
@@ -41,6 +44,7 @@ _BROKEN = 1e-4  # largest residual, in its own unit, of a plan that the solver d
 _LEAST_TURN_SPEED = 0.25  # part of the full speed
 _FINE = 0.05  # seconds between the poses that stand for a way
 _ON_WAY = 0.3  # metres or radians from its way within which a robot goes on along it
+_QUICK = 72  # intervals up to which the fast solver, whose work grows with their cube, gains time
 _STRETCHES = (1.0, 1.25, 1.6, 2.0, 3.0)  # times tried for the rest of a manoeuvre, against the old one
 
 
@@ -140,14 +144,14 @@ def _made(
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
     fences = fencing(settings, task.strip).watching(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
-    plan = solver.solve(problem, solver.start_from_states(problem, guess))
+    plan = _converged(problem, solver.start_from_states(problem, guess))
     problem, plan = _settle(problem, plan, settings, task.speed, fences)
     pairs_then, fences_then = choose_pairs(fleet, settings, plan.poses), fences.watching(fleet, settings, plan.poses)
     if not (_contains(pairs, pairs_then) and fences.covers(fences_then)):
         # The solution came near something that the guess passed at a distance.
         pairs, fences = np.unique(np.concatenate([pairs, pairs_then]), axis=0), fences.joined(fences_then)
         problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs, fences)
-        plan = solver.solve(problem, solver.start_from_states(problem, plan.states))
+        plan = _converged(problem, solver.start_from_states(problem, plan.states))
         problem, plan = _settle(problem, plan, settings, task.speed, fences)
     try:
         _check_solved(task, problem, plan)
@@ -271,6 +275,16 @@ def _problem(
     )
 
 
+def _converged(problem: Problem, start: solver.Start) -> Plan:
+    """The converged solution; where the fast solver is quick to come near it few steps are left for the general one."""
+    if len(problem.times) - 1 <= _QUICK and knows(problem):
+        with contextlib.suppress(SolveError):
+            near = TickSolver().solve(problem, start)
+            if near.solved:
+                return solver.finish(problem, near)
+    return solver.solve(problem, start)
+
+
 def _settle(
     problem: Problem, plan: Plan, settings: Settings, speed: float, fences: Fencing
 ) -> tuple[Problem, Plan]:
@@ -282,7 +296,7 @@ def _settle(
         lines = watch(problem.fleet, settings, problem.watch.pairs, plan.poses, speed)
         held = fences.rows(problem.fleet, settings, plan.poses, speed)
         problem = attrs.evolve(problem, watch=lines, fences=held)
-        plan = solver.solve(problem, solver.Start(plan.vector))
+        plan = solver.finish(problem, plan)
         before, nearest = nearest, _nearest(plan, fences)
         if np.abs(nearest - before).max() < _SETTLED:
             break
@@ -361,6 +375,7 @@ def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
     """The limit that the robot meets for the largest part of the plan, in words."""
     limits, states, rates = fleet.robots[k].limits, plan.states[k, 1:], plan.rates[k]
     speed, bend = np.abs(states[:, SPEED_COMMAND]), np.abs(states[:, CURVATURE_COMMAND])
+    faster = rates[:, 1] * np.where(states[:, SPEED_COMMAND] < 0.0, -1.0, 1.0)
     use = {
         "max_curvature": bend / limits.max_curvature,
         "radius": bend / task.max_curvature,
@@ -368,8 +383,8 @@ def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
         "max_turn_rate": speed * bend / limits.max_turn_rate,
         "max_lateral_acceleration": speed**2 * bend / limits.max_lateral_acceleration,
         "max_curvature_rate": np.abs(rates[:, 0]) / limits.max_curvature_rate,
-        "max_acceleration": rates[:, 1] / limits.max_acceleration,
-        "max_braking": -rates[:, 1] / limits.max_braking,
+        "max_acceleration": faster / limits.max_acceleration,
+        "max_braking": -faster / limits.max_braking,
     }
     busy = {name: float(np.mean(part > 0.99)) for name, part in use.items()}
     name = max(busy, key=lambda key: busy[key])

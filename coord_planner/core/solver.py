@@ -26,6 +26,14 @@ _WARM = {
 }
 
 
+# From a solution of nearly the same problem, to the end.
+_NEAR = {
+    **_COLD, "warm_start_init_point": "yes", "mu_init": 1e-6, "mu_strategy": "monotone",
+    **{name: 1e-7 for name in _WARM if name.startswith("warm_start_") and name != "warm_start_init_point"},
+}
+_OPTIONS = {"cold": _COLD, "tick": _WARM, "near": _NEAR}
+
+
 @attrs.frozen(eq=False)
 class Start:
     """Where a solve starts: primal vector and, when known, the multipliers of bounds and rows."""
@@ -35,9 +43,9 @@ class Start:
 
 
 @lru_cache(maxsize=32)
-def _solver(shape: Shape, warm: bool, budget: float) -> ca.Function:
+def _solver(shape: Shape, kind: str, budget: float) -> ca.Function:
     program = ocp.build(shape)
-    options: dict[str, Any] = dict(_WARM if warm else _COLD)
+    options: dict[str, Any] = dict(_OPTIONS[kind])
     options.update({"print_level": 0, "sb": "yes", "max_wall_time": budget})
     options["fixed_variable_treatment"] = "make_parameter"
     nlp = {"x": program.x, "p": program.p, "f": program.f, "g": program.g}
@@ -56,6 +64,22 @@ def solve(problem: Problem, start: Start, warm: bool = False, budget: float = 60
     Raises:
         SolveError: the solver returned numbers that are not finite.
     """
+    return _solved(problem, start, "tick" if warm else "cold", budget)
+
+
+def finish(problem: Problem, near: Plan) -> Plan:
+    """Go on from a plan with multipliers of nearly the same problem until it has converged.
+
+    Where that leads nowhere the problem is solved from the plan without its multipliers.
+
+    Raises:
+        SolveError: the solver returned numbers that are not finite.
+    """
+    plan = _solved(problem, Start(near.vector, near.multipliers), "near", 60.0)
+    return plan if plan.solved else solve(problem, Start(near.vector))
+
+
+def _solved(problem: Problem, start: Start, kind: str, budget: float) -> Plan:
     program = ocp.build(problem.shape)
     lower, upper = ocp.variable_bounds(problem)
     row_lower, row_upper = ocp.row_bounds(problem)
@@ -64,7 +88,7 @@ def solve(problem: Problem, start: Start, warm: bool = False, budget: float = 60
     }
     if start.multipliers is not None:
         arguments["lam_x0"], arguments["lam_g0"] = start.multipliers
-    solver = _solver(problem.shape, warm, budget)
+    solver = _solver(problem.shape, kind, budget)
     result = solver(**arguments)
     stats = solver.stats()
     vector = np.asarray(result["x"]).ravel()

@@ -40,7 +40,7 @@ def picture(run: Run, moments: int = 5) -> str:
     samples = _moments(run, moments)
     corners = np.stack([_corners(run, sample) for sample in samples])
     scene = _Scene(corners, _paths(run))
-    parts, times = [*_areas(run, scene), *_drawn_paths(run, scene)], []
+    parts, times = [*_areas(run, scene), *_edges(run, scene, corners), *_drawn_paths(run, scene)], []
     for number, sample in enumerate(samples):
         strength = 1.0 if len(samples) == 1 else 0.3 + 0.7 * number / (len(samples) - 1)
         parts += _fleet_at(run, scene, corners[number], strength, labelled=number == len(samples) - 1)
@@ -115,6 +115,16 @@ def _areas(run: Run, scene: _Scene) -> Iterable[str]:
                f'stroke="{colour}" stroke-width="1.5"/>')
         x, y = scene.place(np.array(area.corners).mean(axis=0)[None])[0]
         yield _text(x, y + 4, words, "middle", 12)
+
+
+def _edges(run: Run, scene: _Scene, corners: np.ndarray) -> Iterable[str]:
+    """Lines that nobody was to reach across, dashed, as long as the scene."""
+    points = corners.reshape(-1, 2)
+    for normal, reach in run.strip:
+        across = np.array([-normal[1], normal[0]])
+        along = points @ across
+        ends = reach * np.array(normal) + np.outer([np.nanmin(along), np.nanmax(along)], across)
+        yield f'<path d="{scene.data(ends)}" fill="none" stroke="#d55e00" stroke-width="2" stroke-dasharray="9 6"/>'
 
 
 def _drawn_paths(run: Run, scene: _Scene) -> Iterable[str]:

@@ -24,6 +24,7 @@ TICKS = 40  # ticks of a row that are also solved by the general solver
 ROBOTS = (1, 2, 4, 6, 12, 24, 48, 64)
 _PLAIN = {"print_level": 0, "sb": "yes", "tol": 1e-6}
 _QUIET: dict[str, Any] = {"print_time": False, "calc_lam_p": False, "error_on_fail": False}
+_REST = 0.1  # of the time that a tick and all beside it takes
 _MEMORY_TICKS = 10  # of the process whose memory is measured
 
 Progress = Callable[[float], None]  # told the part of a row that is done
@@ -128,6 +129,7 @@ def _drive(course: Course, compared: float, found: _Measured) -> Iterator[float]
     count = max(round(compared), 1)
     picked = set(((np.arange(count) + 0.5) * course.ticks / count).astype(int).tolist())
     for done in range(course.ticks):
+        began = time.perf_counter()
         posed = course.pose()
         plan, tick, feedback = _tick(fast, posed)
         found.tick.append(tick)
@@ -135,6 +137,7 @@ def _drive(course: Course, compared: float, found: _Measured) -> Iterator[float]
         if done in picked:
             _compare(posed, plan, tick, found)
         course.drive(posed, plan)
+        time.sleep(_REST * (time.perf_counter() - began))  # as a planner does: who never rests is held up now and then
         yield (done + 1) / course.ticks
 
 

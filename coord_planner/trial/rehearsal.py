@@ -13,6 +13,7 @@ from ..config import Configuration
 from ..config.failures import kept
 from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
+from ..core.fence import Line
 from ..core.fleet import Fleet
 from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
 from ..errors import RefusedError
@@ -142,6 +143,7 @@ class _Loop:
         self._told = np.zeros((len(self._fleet), 2))  # who gets no command keeps the last
         self._ends = np.full((len(self._fleet), 3), np.nan)
         self._carried = set(driven.names)
+        self._strip: tuple[Line, ...] = ()
         self.over = False
 
     @property
@@ -155,6 +157,8 @@ class _Loop:
         self.coordinator.begin(manoeuvre, Snapshot(0.0, self._measured), overrides=overrides, answered=answers.append)
         self.work()
         _raise_if_refused(answers)
+        begun = self.coordinator.reference
+        self._strip = () if begun is None else begun.task.strip
         self._log.truth(0.0, self._simulated)
 
     def work(self) -> None:
@@ -229,7 +233,7 @@ class _Loop:
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
                 "seed": self._seed,
             },
-            site_rules=configuration.settings.site_rules,
+            site_rules=configuration.settings.site_rules, strip=self._strip,
         )
 
 
