@@ -172,7 +172,7 @@ def rest(
 
 def resumed(
     old: Reference, since: float, fleet: Fleet, graph: NeighbourGraph, settings: Settings, states: np.ndarray,
-    driving: Collection[str], wanted: Optional[Manoeuvre],
+    driving: Collection[str], wanted: Optional[Manoeuvre], hazard: Optional[tuple[float, float]] = None,
 ) -> Reference:
     """What is left for a fleet that was stopped on its way at second ``since``, for those who are now driven.
 
@@ -189,13 +189,13 @@ def resumed(
         left[k] = task.ways[k] if np.isfinite(task.ends[k, 2]) else None
     for k in task.stands:
         left[k] = _nowhere(poses[k])
-    remaining = manoeuvre.go_on(task, fleet, settings, poses, graph.hops(), tuple(left), since)
+    remaining = manoeuvre.go_on(task, fleet, settings, poses, graph.hops(), tuple(left), since, hazard)
     return reference.make_again(_standing_too(remaining, task.stands), fleet, graph, settings, states)
 
 
 def replaced(
     name: str, wanted: Manoeuvre, fleet: Fleet, graph: NeighbourGraph, settings: Settings, states: np.ndarray,
-    driving: Collection[str],
+    driving: Collection[str], hazard: Optional[tuple[float, float]] = None,
 ) -> Reference:
     """Another manoeuvre for those who are driven, from states in motion, shape (N, 7); the others stand.
 
@@ -210,6 +210,7 @@ def replaced(
     task = manoeuvre.work_out(
         name, wanted, own, settings, states[rows, POSE], float(states[rows, SPEED_COMMAND].max()),
         graph.relative_to(own.names).hops(), states[rows, CURVATURE_COMMAND],
+        hazard,
     )
     task = padded(task, {k: i for i, k in enumerate(rows)}, len(fleet), states[:, POSE])
     return reference.make(task, fleet, graph, settings, states)

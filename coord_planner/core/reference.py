@@ -16,7 +16,7 @@ from .case import PlannerCase
 from .dubins import ArcPath, through
 from .fast.solver import TickSolver
 from .fast.ticks import knows
-from .fence import OPEN, Fencing, fencing
+from .fence import OPEN, Fencing, fencing, hazards
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -142,7 +142,7 @@ def _made(
     times = grid.until(start, task.duration, settings.horizon.interval)
     guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
-    fences = fencing(settings, task.strip).watching(fleet, settings, guess[:, :, POSE])
+    fences = fencing(settings, task.strip, hazards(settings, task.hazard)).watching(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
     plan = _converged(problem, solver.start_from_states(problem, guess))
     problem, plan = _settle(problem, plan, settings, task.speed, fences)

@@ -15,10 +15,11 @@ from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
 from ..core.fence import Line
 from ..core.fleet import Fleet
-from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
+from ..core.messages import Answer, Caution, Decision, HazardPoint, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
 from .run import Run, RunFrame
+from .sighting import Sighting, turned_away
 from .vehicle import SimulatedFleet
 
 _LONGEST = 900.0  # seconds of simulated time
@@ -84,13 +85,14 @@ class _Log:
 
 def rehearse(
     configuration: Configuration, manoeuvre: str, *, seed: Optional[int] = None, faults: Sequence[Fault] = (),
-    watch: Optional[Watch] = None, overrides: Optional[dict[str, float]] = None,
+    watch: Optional[Watch] = None, overrides: Optional[dict[str, float]] = None, seen: Optional[Sighting] = None,
     progress: Callable[[float], None] = lambda _part: None,
 ) -> Run:
     """Run one manoeuvre from the configured starts to its end, its refusal or a stop that nobody resumes.
 
     Args:
         seed: of the noise; the file's own when left out.
+        seen: a hazard that turns up on the way.
         progress: called with the part of the manoeuvre that is done.
 
     Raises:
@@ -98,7 +100,7 @@ def rehearse(
         SettingsError: a fault strikes a robot or an edge that is not there.
     """
     began_at = clock.perf_counter()
-    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults)
+    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults, seen)
     loop.begin(manoeuvre, overrides)
     while loop.now < _LONGEST and not loop.over:
         if loop.tick_is_due:
@@ -113,8 +115,10 @@ def rehearse(
 class _Loop:
     """Planner and simulated fleet on one clock that stands still while anybody computes."""
 
-    def __init__(self, configuration: Configuration, seed: int, faults: Sequence[Fault]) -> None:
-        self._configuration, self._seed = configuration, seed
+    def __init__(
+        self, configuration: Configuration, seed: int, faults: Sequence[Fault], seen: Optional[Sighting] = None
+    ) -> None:
+        self._configuration, self._seed, self._sighting = configuration, seed, seen
         settings, driven = configuration.settings, configuration.driven
         # Who is not enabled stands by: it may be wanted on the way.
         self._fleet = Fleet(tuple(
@@ -170,7 +174,9 @@ class _Loop:
         """Look at the robots and decide."""
         self._look()
         began = clock.perf_counter()
-        decision = self.coordinator.step(Snapshot(self.now, self._measured, self._faults.not_ready()))
+        decision = self.coordinator.step(Snapshot(
+            self.now, self._measured, self._faults.not_ready(), hazard=self._seen_now()
+        ))
         self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period, self._simulated)
         self._carried |= set(decision.names)
         if decision.manoeuvre:
@@ -182,6 +188,13 @@ class _Loop:
         self._next_tick += self._tick_period
         self.over = decision.state in (State.IDLE, State.HELD)
         return decision
+
+    def _seen_now(self) -> Optional[HazardPoint]:
+        if self._sighting is None or self._moving_since is None:
+            return None
+        if self._sighting.arm:
+            self.coordinator.arm(self._sighting.arm, self.now)
+        return self._sighting.point(self.now - self._moving_since, self.now)
 
     def advance(self) -> None:
         """Send commands and let the machines move until the next sending."""
@@ -217,6 +230,7 @@ class _Loop:
         configuration, log, decision = self._configuration, self._log, self.coordinator.decision
         rows = [k for k, name in enumerate(self._fleet.names) if name in self._carried]
         frames = tuple(attrs.evolve(frame, poses=frame.poses[rows]) for frame in log.frames)
+        away = turned_away(self.coordinator, self._sighting, self._moving_since or 0.0) if self._sighting else {}
         state = State.ENDED if decision.completed else decision.state
         return Run(
             fleet=Fleet(tuple(self._fleet.robots[k] for k in rows)),
@@ -231,7 +245,7 @@ class _Loop:
             facts={
                 "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
-                "seed": self._seed,
+                "seed": self._seed, **({"turned_away": away} if away else {}),
             },
             site_rules=configuration.settings.site_rules, strip=self._strip,
         )
