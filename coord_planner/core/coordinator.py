@@ -28,6 +28,7 @@ from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, 
 from .motion import lags
 from .neighbours import Lookout
 from .observer import Estimate, Observer
+from .parameter import describe
 from .plan import Plan
 from .problem import POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared, Pursuit, Takeover
@@ -539,10 +540,9 @@ class Coordinator:
         if name not in self._manoeuvres:
             raise RefusedError(f"{name!r} is not a manoeuvre", "ask for one of " + ", ".join(self._manoeuvres))
         wanted = self._manoeuvres[name]
-        known = {field.name: field for field in attrs.fields(type(wanted))}
+        there = [key for key in describe(type(wanted)) if not isinstance(getattr(wanted, key), (tuple, str))]
         for key, value in overrides.items():
-            if key not in known or isinstance(getattr(wanted, key), tuple):
-                there = [key for key in known if not isinstance(getattr(wanted, key), tuple)]
+            if key not in there:
                 raise RefusedError(f"{name} has no number {key!r} to override", "override one of " + ", ".join(there))
             if isinstance(value, bool) or not isinstance(value, (int, float)):
                 raise SettingsError(f"{value!r} is not a number", key=key, allowed="a number")
