@@ -10,6 +10,7 @@ from .. import solver
 from ..plan import Plan
 from ..problem import Bounds, Fences, Problem, Watch
 from ..solver import Start
+from .groups import Group, groups, part_of, start_of, whole
 from .solver import TickSolver
 
 # What the fast solver has been taught. A field that it does not know might be a promise that it would not keep.
@@ -51,6 +52,22 @@ class TickSolve:
         Raises:
             SolveError: there is no plan at all.
         """
-        if knows(problem):
+        if not knows(problem):
+            return solver.solve(problem, start, warm, budget)
+        apart = groups(problem)
+        if len(apart) == 1:
             return self._fast.solve(problem, start, budget, self._clock)
-        return solver.solve(problem, start, warm, budget)
+        return self._each(problem, start, apart, budget)
+
+    def _each(self, problem: Problem, start: Start, apart: list[Group], budget: float) -> Plan:
+        """Every group by itself: none takes more steps for another's sake. What one leaves of its time others have."""
+        end, left = self._clock() + budget, len(problem.fleet)
+        solved = []
+        for group in apart:
+            part, share = part_of(problem, group), len(group.robots) / left
+            left -= len(group.robots)
+            plan = self._fast.solve(
+                part, start_of(problem, start, group, part), share * (end - self._clock()), self._clock
+            )
+            solved.append((group, part, plan))
+        return whole(problem, solved)

@@ -140,7 +140,7 @@ def go_on(
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     laid = Laid(
         ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
-        strip=task.strip, speeds=task.speeds, alike=task.alike,
+        strip=task.strip, speeds=task.speeds, alike=task.alike, marks=task.marks_left(since),
     )
     if task.waits is not None:
         laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.profile_time(np.array(since))), 0.0))
@@ -150,7 +150,7 @@ def go_on(
             task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
             speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
             max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, behind=laid.behind, note=laid.note,
-            strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+            marks=laid.marks, strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours, hazard=hazard), task.speed, rest)
