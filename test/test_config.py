@@ -378,10 +378,12 @@ def test_declarations_hold_every_key_with_the_value_in_force() -> None:
     assert attrs.evolve(again, flat={}) == attrs.evolve(config.from_parameters(flat), flat={})
 
 
-# ---- the two sites ----
+# ---- the sites ----
+
+SHIPPED = ("solar_park.yaml", "snow_yard.yaml", "orchard.yaml")
 
 
-@pytest.mark.parametrize("name", ["solar_park.yaml", "snow_yard.yaml"])
+@pytest.mark.parametrize("name", SHIPPED)
 def test_the_sites_are_sound_and_leave_nothing_to_note(name: str) -> None:
     configuration = config.load(SITES / name)
     assert notes(configuration) == []
@@ -391,7 +393,7 @@ def test_the_sites_are_sound_and_leave_nothing_to_note(name: str) -> None:
 
 def test_every_real_number_in_the_sites_has_its_decimal_point() -> None:
     # A whole number for a double fails when ROS declares it (shared/ros_notes.md); other nodes may read these files.
-    for name in ("solar_park.yaml", "snow_yard.yaml"):
+    for name in SHIPPED:
         flat, _ = read_file(SITES / name)
         for item in config.declarations(flat):
             if item.key in flat and item.kind == "float":
@@ -414,6 +416,15 @@ def test_the_snow_yard_has_two_kinds_of_car_like_machines() -> None:
     assert {connection.drive for connection in yard.connections.values()} == {"car_like"}
     assert len({robot.limits for robot in yard.fleet.robots}) == 2
     assert len({robot.footprint for robot in yard.fleet.robots}) == 2
+
+
+def test_the_orchard_has_four_different_machines_of_both_drives() -> None:
+    orchard = config.load(SITES / "orchard.yaml")
+    assert {connection.drive for connection in orchard.connections.values()} == {"car_like", "differential"}
+    robots = orchard.fleet.robots
+    assert len({robot.limits for robot in robots}) == len({robot.footprint for robot in robots}) == 4
+    backward = {robot.name for robot in robots if robot.limits.min_speed < 0.0}
+    assert backward == {"sprayer", "mulcher", "hauler"}
 
 
 def test_notes_say_what_may_not_be_meant() -> None:

@@ -3,6 +3,7 @@
 import math
 from xml.etree import ElementTree
 
+import attrs
 import numpy as np
 import pytest
 from made_up_run import standing, turn
@@ -51,3 +52,14 @@ def test_texts_are_escaped_and_poor_records_are_drawn_or_refused():
     assert len(boxes(ElementTree.fromstring(picture(two)))) == 1
     with pytest.raises(ValueError, match="needs samples"):
         picture(standing([[0, 0, 0]], count=0))
+
+
+def test_the_edge_of_a_headland_is_a_dashed_line_where_it_lies():
+    run = attrs.evolve(turn(), strip=(((0.0, 1.0), float(turn().poses[:, :, 1].max()) + 1.0),))
+    root = ElementTree.fromstring(picture(run))
+    (edge,) = [path.get("d") for path in root.iter(f"{SVG}path") if path.get("stroke-dasharray")]
+    ends = np.array([[float(n) for n in pair.split()] for pair in edge[1:].split("L")])
+    drawn = np.concatenate(boxes(root))
+    level = np.ptp(ends, axis=0).argmin()  # the axis across the edge
+    assert np.ptp(ends[:, level]) < 0.1
+    assert (drawn[:, level] > ends[0, level]).all() or (drawn[:, level] < ends[0, level]).all()

@@ -90,6 +90,20 @@ def test_robots_whose_ways_cross_set_out_one_after_the_other_and_copy_nobody():
     assert together.alike and together.coupling == EASY.coupling.strength and not together.waits.any()
 
 
+def test_who_comes_along_moving_waits_in_its_row_where_there_is_room_to_stop():
+    fleet, wanted = carts(3, LIMITS, LATE), attrs.evolve(ROWS, order="mirrored")
+    made = manoeuvre.work_out("rows", wanted, fleet, EASY, in_rows(3, x=-4.0), 1.0, path(fleet.names).hops())
+    late = int(np.argmax(made.waits))
+    assert made.waits[late] > 2.0 and sorted(made.waits)[0] == 0.0
+    s = np.linspace(0.0, made.arrival, 600)
+    poses, speeds, _ = made.guess(s)
+    assert speeds[:, 0] == pytest.approx([1.0] * 3, abs=0.02)
+    stands = made.gears(s)[late] == 0
+    assert np.abs(poses[late, stands, 0]).max() < 0.01  # where its row ends
+    with pytest.raises(RefusedError, match="can wait only as long as it is in its row"):
+        manoeuvre.work_out("rows", wanted, fleet, EASY, in_rows(3, x=-0.3), 1.0, path(fleet.names).hops())
+
+
 def test_the_reference_stays_within_the_depth_that_the_guess_alone_would_leave():
     fleet, poses, wanted = carts(2, REVERSING, LATE), in_rows(2), attrs.evolve(ROWS, order="mirrored", depth=3.1)
     states = np.concatenate([poses, np.zeros((2, 4))], axis=1)

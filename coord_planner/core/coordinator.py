@@ -15,11 +15,14 @@ from . import gate, ladder, manoeuvre, reference, rules, solver, stopping
 from .caps import caps
 from .case import PlannerCase
 from .chain import Chain
+from .fence import hazards
 from .fleet import Fleet
 from .graph import NeighbourGraph
+from .hazard import FURTHEST, HazardWatch, Point, told
+from .hazard import nearest as hazards_near
 from .history import CommandHistory, Planned
 from .judge import SHORT, Judge, View
-from .manoeuvre import Manoeuvre, Task
+from .manoeuvre import Manoeuvre, Task, TurnAway
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
 from .neighbours import Lookout
@@ -118,6 +121,7 @@ class Coordinator:
         self._watchman = Judge()
         self._seen: dict[str, float] = {}  # newest moments of ticks and of commands
         self._lookout = Lookout()
+        self._hazard = HazardWatch()
         self._chain: Optional[Chain] = None
         self._caps = np.full(len(fleet), np.inf)  # speed caps of the areas in which the robots are
         self._decision = Decision(0.0, State.IDLE, fleet.names)
@@ -185,10 +189,12 @@ class Coordinator:
             # Nothing is known of what people sent the robots meanwhile; they must stand.
             self._history.clear()
             fleet, graph, settings, states = self._fleet, self._graph, self._settings, estimate.states
-            states[:, 3:] = 0.0
+            states[:, 3:], hazard = 0.0, self._hazard.point
 
             def make() -> Reference:
-                task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops())
+                task = manoeuvre.work_out(
+                    name, wanted, fleet, settings, states[:, POSE], 0.0, graph.hops(), hazard=hazard
+                )
                 return reference.make(task, fleet, graph, settings, states)
 
             self._state, self._reason, self._completed = State.PLANNING, "", False
@@ -247,13 +253,14 @@ class Coordinator:
             fleet, graph, settings = self._fleet, self._graph, self._settings
             old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
+            hazard = self._hazard.point
             if self._chain is not None and self._chain.more and since >= old.task.arrival - 1e-9:
                 self._ask("resume", self._next_maker(self._chain, states), answered, "", chain=self._chain.moved_on())
                 return
 
             def make() -> Reference:
                 left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since)
+                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since, hazard)
                 return reference.make_again(rest, fleet, graph, settings, states)
 
             self._ask("resume", make, answered, "", chain=self._chain)
@@ -292,6 +299,32 @@ class Coordinator:
             if self._state is State.MOVING and (self._request is None or self._request.kind in ("change", "next")):
                 self._forget_next()
                 self._remake(now)
+
+    def arm(self, name: str, now: float) -> Answer:
+        """Turn away from hazards by a manoeuvre, for ``hazard.armed_for`` seconds, instead of stopping."""
+        with self._lock:
+            wanted = self._manoeuvres.get(name)
+            if not isinstance(wanted, TurnAway):
+                return Answer(False, f"{name!r} is no manoeuvre that turns away; arm one of the kind turn_away")
+            seconds = self._settings.hazard.armed_for
+            self._hazard.armed, self._hazard.armed_until = name, self._moment(now) + seconds
+            return Answer(True, f"{name} is armed for {seconds:g} s; it begins when a hazard is seen in motion")
+
+    def hazard(self, x: float, y: float, now: float) -> Answer:
+        """A hazard is at a point of the fleet's frame. In motion everyone stops or, where it is armed, turns away.
+
+        A standing fleet is not moved by it; whoever begins or resumes keeps away from it until it has expired.
+        """
+        with self._lock:
+            now, point, watch = self._moment(now), (float(x), float(y)), self._hazard
+            if not np.abs(point).max() <= FURTHEST:
+                return Answer(False, f"({x:g}, {y:g}) is no point of a site")
+            watch.look(now)
+            watch.hear(point, now, self._settings)
+            if self._state is not State.MOVING or self._pursuit is None:
+                return Answer(True, f"kept away from for {self._settings.hazard.expires:g} s; nothing is moved by it")
+            self._face_hazard(now, self._observer.estimate(now, self._planned).states[:, POSE])
+            return Answer(True, watch.caution.text if watch.caution is not None else "")
 
     # Slow work
 
@@ -339,10 +372,11 @@ class Coordinator:
     def step(self, snapshot: Snapshot) -> Decision:
         """One tick: look, judge, plan, decide. Nothing is decided anew at a time that is no number."""
         if not np.isfinite(snapshot.time):
-            return self._decision
+            return attrs.evolve(self._decision, state=self._state, reason=self._reason)
         with self._lock:
             cautions: list[Caution] = []
             self._follow_clock(snapshot.time, "step")
+            self._hazard.take(snapshot.hazard, snapshot.time, self._settings)
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
@@ -351,6 +385,8 @@ class Coordinator:
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
+                self._face_hazard(snapshot.time, estimate.states[:, POSE])
+            if self._state is State.MOVING and self._pursuit is not None:
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
                     self._look_after_next(cautions)
@@ -516,18 +552,20 @@ class Coordinator:
     def _replace(self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str) -> None:
         """Make a reference for another manoeuvre, which leaves the running one from a moment ahead."""
         before = self._request
-        if before is not None and before.kind == "replace":
-            self._cancel(f"{name} was asked for instead")
+        if before is not None and before.kind == "replace" and before.answered is not answered:
+            self._cancel(f"{name} was asked for instead")  # and not only made again from a later moment
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
         self._forget_next()
         old, leaves, at = self._branch(now)
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
+        hazard = self._hazard.point
 
         def make() -> Reference:
             _check_forward(name, fleet, states)
             speed = float(states[:, SPEED_COMMAND].max())
             task = manoeuvre.work_out(
-                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND]
+                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND],
+                hazard,
             )
             return reference.make(task, fleet, graph, settings, states)
 
@@ -537,6 +575,31 @@ class Coordinator:
         )
         if owed and self._request is not None:
             self._request = attrs.evolve(self._request, supersedes_change=True)
+
+    def _face_hazard(self, now: float, poses: np.ndarray) -> None:
+        """Stop for the hazard that is known, or turn away from it, where anybody is concerned; in motion."""
+        watch, pursuit = self._hazard, self._pursuit
+        if watch.point is None or pursuit is None or watch.faced(pursuit.reference.task.hazard):
+            return
+        near = hazards_near(watch.point, pursuit.reference, pursuit.s(now), poses, self._fleet, self._settings)
+        armed = watch.is_armed(now)
+        watch.caution = told(near, watch.point, self._settings, armed)
+        if armed and near.sees:
+            self._turn_away(now, watch.point)
+        elif near.concerned and not armed:
+            self._begin_stop(now, watch.caution.text, completed=False)
+
+    def _turn_away(self, now: float, point: Point) -> None:
+        """Begin what is armed; when it is refused everyone stops."""
+        watch, wanted = self._hazard, self._manoeuvres[self._hazard.armed]
+        watch.turned_for = point
+
+        def answered(answer: Answer) -> None:
+            if not answer.ok and self._state is State.MOVING:
+                self._begin_stop(max(self._seen.values(), default=now), f"turning away was refused: {answer.text}",
+                                 completed=False)
+
+        self._replace(now, watch.armed, wanted, answered, "")
 
     def _follow_changes(self, request: _Request, now: float) -> None:
         """What was changed while a reference was being made is followed at once."""
@@ -583,10 +646,12 @@ class Coordinator:
     def _next_maker(self, chain: Chain, states: np.ndarray) -> Callable[[], Reference]:
         """Makes the reference of the next part from where the part before it ends."""
         fleet, graph, settings, (name, wanted) = self._fleet, self._graph, self._settings, chain.next
-        speed = float(states[:, SPEED_COMMAND].max())
+        speed, hazard = float(states[:, SPEED_COMMAND].max()), self._hazard.point
 
         def make() -> Reference:
-            task = manoeuvre.work_out(name, wanted, fleet, settings, states[:, POSE], speed, graph.hops())
+            task = manoeuvre.work_out(
+                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), hazard=hazard
+            )
             return reference.make(task, fleet, graph, settings, states)
 
         return make
@@ -681,6 +746,7 @@ class Coordinator:
                 self._pursuit.shift(back)
             self._stop_over, self._planned_at = self._stop_over + back, self._planned_at + back
             self._ended_at += back
+            self._hazard.shift(back)
             self._decision = attrs.evolve(self._decision, time=self._decision.time + back)
         self._seen[who] = now
 
@@ -693,7 +759,7 @@ class Coordinator:
         return {
             name: pose for name, pose in snapshot.poses.items()
             if -poses.max_future <= snapshot.time - pose.stamp <= poses.max_age
-            and np.isfinite([pose.x, pose.y, pose.heading]).all()
+            and np.abs([pose.x, pose.y, pose.heading]).max() <= FURTHEST
         }
 
     def _look(self, snapshot: Snapshot) -> Estimate:
@@ -739,6 +805,7 @@ class Coordinator:
         found = self._watchman.look(View(
             snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
             1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
+            hazards(self._settings, self._hazard.point),
         ))
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
@@ -819,6 +886,8 @@ class Coordinator:
             spare, robot, area = tick.reference.fencing.least(self._fleet, tick.plan.dense(1))
             if spare < -SHORT:
                 cautions.append(rules.keep_out_ahead(self._settings, self._fleet.names[robot], area, -spare))
+        if self._hazard.caution is not None:
+            cautions.append(self._hazard.caution)
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],

@@ -8,6 +8,7 @@ import attrs
 import numpy as np
 
 from . import neighbours, outline, rules, stopping
+from .fence import Piece
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .messages import Caution, Snapshot
@@ -44,6 +45,7 @@ class View:
     period: float
     refused_change: str
     silence: Optional[Silence]
+    hazards: tuple[Piece, ...] = ()
 
 
 class Judge:
@@ -182,14 +184,14 @@ def _spacing(view: View) -> list[Caution]:
 def _fenced(view: View) -> list[Caution]:
     """Keep-outs: whether somebody is too near now, and whether a stop begun a tick later would still keep him off."""
     settings, fleet, estimate = view.settings, view.fleet, view.estimate
-    fencing = view.pursuit.reference.fencing
+    fencing = view.pursuit.reference.fencing.beside(view.hazards)
     poses = estimate.states[:, None, POSE]
     if not (fencing.pieces or fencing.lines) or not np.isfinite(poses).all():
         return []
     spare, robot, name = fencing.least(fleet, poses, estimate.growth)
     if spare < -2.0 * settings.poses.noise_xy:
         return [rules.keep_out_breached(settings, fleet.names[robot], name, -spare)]
-    if not _troubled(view):
+    if not _troubled(view) and not view.hazards:
         return []
     now = view.snapshot.time
     later = stopping.choose(view.pursuit.schedule, view.at + view.period, fleet, estimate, now, fencing)

@@ -16,7 +16,7 @@ from .case import PlannerCase
 from .dubins import ArcPath, through
 from .fast.solver import TickSolver
 from .fast.ticks import knows
-from .fence import OPEN, Fencing, fencing
+from .fence import OPEN, Fencing, fencing, hazards
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .manoeuvre import Task
@@ -140,7 +140,7 @@ def _made(
     times = grid.until(start, task.duration, settings.horizon.interval)
     guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
-    fences = fencing(settings, task.strip).watching(fleet, settings, guess[:, :, POSE])
+    fences = fencing(settings, task.strip, hazards(settings, task.hazard)).watching(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
     plan = _converged(problem, solver.start_from_states(problem, guess))
     problem, plan = _settle(problem, plan, settings, task.speed, fences)
@@ -370,6 +370,7 @@ def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
     """The limit that the robot meets for the largest part of the plan, in words."""
     limits, states, rates = fleet.robots[k].limits, plan.states[k, 1:], plan.rates[k]
     speed, bend = np.abs(states[:, SPEED_COMMAND]), np.abs(states[:, CURVATURE_COMMAND])
+    faster = rates[:, 1] * np.where(states[:, SPEED_COMMAND] < 0.0, -1.0, 1.0)
     use = {
         "max_curvature": bend / limits.max_curvature,
         "radius": bend / task.max_curvature,
@@ -377,8 +378,8 @@ def _busiest_limit(task: Task, plan: Plan, fleet: Fleet, k: int) -> str:
         "max_turn_rate": speed * bend / limits.max_turn_rate,
         "max_lateral_acceleration": speed**2 * bend / limits.max_lateral_acceleration,
         "max_curvature_rate": np.abs(rates[:, 0]) / limits.max_curvature_rate,
-        "max_acceleration": rates[:, 1] / limits.max_acceleration,
-        "max_braking": -rates[:, 1] / limits.max_braking,
+        "max_acceleration": faster / limits.max_acceleration,
+        "max_braking": -faster / limits.max_braking,
     }
     busy = {name: float(np.mean(part > 0.99)) for name, part in use.items()}
     name = max(busy, key=lambda key: busy[key])

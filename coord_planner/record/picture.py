@@ -19,6 +19,7 @@ _GREY = "#7d858c"
 _LABEL_BELOW = ("#0072b2", "#d55e00", "#009e73")  # colours so dark that their labels are white
 _LARGEST = (900.0, 640.0)  # pixels
 _MARGIN, _FOOT = 46.0, 40.0  # pixels round the scene, and below it for scale and caption
+_TEXT_WIDTH = 7.3  # pixels of a character, about
 _FINE = 0.01  # metres by which a drawn path may differ from the driven one
 
 
@@ -40,7 +41,7 @@ def picture(run: Run, moments: int = 5) -> str:
     samples = _moments(run, moments)
     corners = np.stack([_corners(run, sample) for sample in samples])
     scene = _Scene(corners, _paths(run))
-    parts, times = [*_areas(run, scene), *_drawn_paths(run, scene)], []
+    parts, times = [*_areas(run, scene), *_edges(run, scene, corners), *_drawn_paths(run, scene)], []
     for number, sample in enumerate(samples):
         strength = 1.0 if len(samples) == 1 else 0.3 + 0.7 * number / (len(samples) - 1)
         parts += _fleet_at(run, scene, corners[number], strength, labelled=number == len(samples) - 1)
@@ -117,6 +118,16 @@ def _areas(run: Run, scene: _Scene) -> Iterable[str]:
         yield _text(x, y + 4, words, "middle", 12)
 
 
+def _edges(run: Run, scene: _Scene, corners: np.ndarray) -> Iterable[str]:
+    """Lines that nobody was to reach across, dashed, as long as the scene."""
+    points = corners.reshape(-1, 2)
+    for normal, reach in run.strip:
+        across = np.array([-normal[1], normal[0]])
+        along = points @ across
+        ends = reach * np.array(normal) + np.outer([np.nanmin(along), np.nanmax(along)], across)
+        yield f'<path d="{scene.data(ends)}" fill="none" stroke="#d55e00" stroke-width="2" stroke-dasharray="9 6"/>'
+
+
 def _drawn_paths(run: Run, scene: _Scene) -> Iterable[str]:
     for row, path in enumerate(_paths(run)):
         yield (f'<path d="{scene.data(shapely.get_coordinates(path))}" fill="none" stroke="{_colour(row)}" '
@@ -149,8 +160,12 @@ def _time(scene: _Scene, corners: np.ndarray, text: str) -> str:
     if abs(away @ ahead) > 0.9:
         away = np.array([ahead[1], -ahead[0]]) * (1.0 if ahead[0] > 0 else -1.0)
     x, y = places[0] + away * (np.linalg.norm(known[0, 0] - known[0, 2]) / 2 * scene.scale + 9)
-    anchor = "middle" if abs(away[0]) < 0.5 else "start" if away[0] > 0 else "end"
-    return _text(x, y + 4, text, anchor, 13)
+    part = 0.5 if abs(away[0]) < 0.5 else 0.0 if away[0] > 0 else 1.0  # of the text that lies left of x
+    left, width = x - part * _TEXT_WIDTH * len(text), _TEXT_WIDTH * len(text)
+    inside = min(max(left, 4.0), scene.width - width - 4.0)
+    if inside != left and part != 0.5:  # no room beside it: below
+        y = scene.place(known[0])[:, 1].max() + 14.0
+    return _text(inside, y + 4, text, "start", 13)
 
 
 def _unit(vector: np.ndarray) -> np.ndarray:

@@ -332,7 +332,8 @@ class PlannerNode(LifecycleNode):
         if now <= 0.0:
             return None
         readiness = self.inbox.readiness
-        return Snapshot(now, self.inbox.poses(), readiness.not_ready(), readiness.silent(), self._others.newest)
+        return Snapshot(now, self.inbox.poses(), readiness.not_ready(), readiness.silent(), self._others.newest,
+                        self.inbox.hazard)
 
     def halt(self, reason: str) -> Answer:
         """Stop the fleet."""

@@ -117,7 +117,7 @@ def diagnostics(at: Situation, inbox: Inbox) -> list[DiagnosticStatus]:
     for name in at.configuration.fleet.names:
         found.append(_of_poses(at, name, poses.get(name), inbox.tallies))
     found += [_of_readiness(at, name, inbox.readiness) for name in inbox.readiness.names]
-    for topic in ("neighbours", "request", "heartbeat"):
+    for topic in ("neighbours", "hazard", "request", "heartbeat"):
         found.append(_of_messages(at, f"{topic} messages", topic, inbox.tallies))
     return found
 

@@ -12,10 +12,12 @@ from ..config import Configuration
 from ..config.failures import kept
 from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
-from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
+from ..core.fence import Line
+from ..core.messages import Answer, Caution, Decision, HazardPoint, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
 from .run import Run, RunFrame
+from .sighting import Sighting, turned_away
 from .vehicle import SimulatedFleet
 
 _LONGEST = 900.0  # seconds of simulated time
@@ -75,13 +77,14 @@ class _Log:
 
 def rehearse(
     configuration: Configuration, manoeuvre: str, *, seed: Optional[int] = None, faults: Sequence[Fault] = (),
-    watch: Optional[Watch] = None, overrides: Optional[dict[str, float]] = None,
+    watch: Optional[Watch] = None, overrides: Optional[dict[str, float]] = None, seen: Optional[Sighting] = None,
     progress: Callable[[float], None] = lambda _part: None,
 ) -> Run:
     """Run one manoeuvre from the configured starts to its end, its refusal or a stop that nobody resumes.
 
     Args:
         seed: of the noise; the file's own when left out.
+        seen: a hazard that turns up on the way.
         progress: called with the part of the manoeuvre that is done.
 
     Raises:
@@ -89,7 +92,7 @@ def rehearse(
         SettingsError: a fault strikes a robot or an edge that is not there.
     """
     began_at = clock.perf_counter()
-    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults)
+    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults, seen)
     loop.begin(manoeuvre, overrides)
     while loop.now < _LONGEST and not loop.over:
         if loop.tick_is_due:
@@ -104,8 +107,10 @@ def rehearse(
 class _Loop:
     """Planner and simulated fleet on one clock that stands still while anybody computes."""
 
-    def __init__(self, configuration: Configuration, seed: int, faults: Sequence[Fault]) -> None:
-        self._configuration, self._seed = configuration, seed
+    def __init__(
+        self, configuration: Configuration, seed: int, faults: Sequence[Fault], seen: Optional[Sighting] = None
+    ) -> None:
+        self._configuration, self._seed, self._sighting = configuration, seed, seen
         settings, self._fleet = configuration.settings, configuration.driven
         rng = np.random.default_rng(seed)
         timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
@@ -126,6 +131,7 @@ class _Loop:
         self._next_tick = self._next_pose = self.now = 0.0
         self._moving_since: Optional[float] = None
         self._measured: dict[str, PoseSample] = {}
+        self._strip: tuple[Line, ...] = ()
         self.over = False
 
     @property
@@ -139,6 +145,8 @@ class _Loop:
         self.coordinator.begin(manoeuvre, Snapshot(0.0, self._measured), overrides=overrides, answered=answers.append)
         self.work()
         _raise_if_refused(answers)
+        begun = self.coordinator.reference
+        self._strip = () if begun is None else begun.task.strip
         self._log.truth(0.0, self._simulated)
 
     def work(self) -> None:
@@ -150,13 +158,22 @@ class _Loop:
         """Look at the robots and decide."""
         self._look()
         began = clock.perf_counter()
-        decision = self.coordinator.step(Snapshot(self.now, self._measured, self._faults.not_ready()))
+        decision = self.coordinator.step(Snapshot(
+            self.now, self._measured, self._faults.not_ready(), hazard=self._seen_now()
+        ))
         self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period)
         if self._moving_since is None and decision.state is State.MOVING:
             self._moving_since = self.now
         self._next_tick += self._tick_period
         self.over = decision.state in (State.IDLE, State.HELD)
         return decision
+
+    def _seen_now(self) -> Optional[HazardPoint]:
+        if self._sighting is None or self._moving_since is None:
+            return None
+        if self._sighting.arm:
+            self.coordinator.arm(self._sighting.arm, self.now)
+        return self._sighting.point(self.now - self._moving_since, self.now)
 
     def advance(self) -> None:
         """Send commands and let the machines move until the next sending."""
@@ -188,6 +205,7 @@ class _Loop:
     def run(self, manoeuvre: str, wall_time: float) -> Run:
         """What happened."""
         configuration, log, decision = self._configuration, self._log, self.coordinator.decision
+        away = turned_away(self.coordinator, self._sighting, self._moving_since or 0.0) if self._sighting else {}
         state = State.ENDED if decision.completed else decision.state
         return Run(
             fleet=self._fleet, edges=self._graph.edges, manoeuvre=manoeuvre, times=np.array(log.times),
@@ -200,9 +218,9 @@ class _Loop:
             facts={
                 "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
-                "seed": self._seed,
+                "seed": self._seed, **({"turned_away": away} if away else {}),
             },
-            site_rules=configuration.settings.site_rules,
+            site_rules=configuration.settings.site_rules, strip=self._strip,
         )
 
 

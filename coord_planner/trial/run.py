@@ -47,6 +47,8 @@ class Run:
         events: (seconds, text) worth a mark on the time line.
         facts: anything else worth keeping (seed, file, coupling), JSON-able.
         site_rules: of the site, with its keep-outs and its areas with speed caps; the defaults where not known.
+        strip: lines that no footprint was to reach across: a unit normal towards the far side and how far along it,
+            from the origin of the frame, the line lies, metres.
     """
 
     fleet: Fleet
@@ -71,3 +73,4 @@ class Run:
     events: tuple[tuple[float, str], ...] = ()
     facts: dict[str, Any] = attrs.field(factory=dict)
     site_rules: SiteRules = SiteRules()
+    strip: tuple[tuple[tuple[float, float], float], ...] = ()

@@ -80,9 +80,10 @@ def whole(problem: Problem, parts: list[tuple[Group, Problem, Plan]]) -> Plan:
     vectors = np.zeros(variables.size), np.zeros(variables.size), np.zeros(rows.size)
     for group, part, plan in parts:
         own, own_rows = ocp.variable_blocks(part.shape), ocp.row_blocks(part.shape)
-        _put(variables, own, plan.vector, group, vectors[0])
-        _put(variables, own, plan.multipliers[0], group, vectors[1])
-        _put(rows, own_rows, plan.multipliers[1], group, vectors[2])
+        bounds, row_forces = plan.multipliers
+        pieces = (variables, own, plan.vector), (variables, own, bounds), (rows, own_rows, row_forces)
+        for vector, (layout, small, piece) in zip(vectors, pieces):
+            _put(layout, small, piece, group, vector)
     plans = [plan for _, _, plan in parts]
     return Plan(
         fleet=problem.fleet, times=problem.times,

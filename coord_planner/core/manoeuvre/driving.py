@@ -16,6 +16,7 @@ from ..settings import Settings
 # Part of a machine's rates that a manoeuvre is laid out with; the rest is left for corrections.
 COMFORT = 0.7
 STAND_LAGS = 3.0  # response lags after which a machine that is told to stand does stand
+_SHORTEST_LEAD = 0.1  # metres more than braking takes
 _SLOWEST_PART = 0.02  # of the asked speed, tried for who has much time for a short way
 
 
@@ -26,15 +27,38 @@ def drive_along(
     """How one robot drives a way by itself, with a standstill at each change of gear.
 
     Args:
-        speed: asked for, forward and, as far as the robot may, backward, m/s. wait: seconds until it sets out.
+        speed: asked for, forward and, as far as the robot may, backward, m/s. wait: seconds until it sets out; who
+            comes along moving waits where it is to begin to turn.
         first, last: speeds at the beginning and the end, m/s.
     """
     limits, step = robot.limits, settings.horizon.interval
     parts = stretches(way.segments, standstill(robot, settings)) or [Stretch(0.0)]
+    if wait > 0.0 and first > 0.0:
+        straight = lead_in(way)
+        parts = [Stretch(straight, wait), Stretch(parts[0].length - straight, parts[0].stand), *parts[1:]]
+        wait = 0.0
     return along(
         parts, wait=wait, first=first, forward=speed, backward=min(speed, max(-limits.min_speed, 1e-3)), last=last,
         acceleration=COMFORT * limits.max_acceleration, braking=COMFORT * limits.max_braking, step=step,
     )
+
+
+def lead_in(way: ArcPath) -> float:
+    """Metres until the first straight piece of a way is over; 0 when it begins with a bend and never goes straight."""
+    passed = 0.0
+    for curvature, length in way.segments:
+        if length < 0.0:
+            break
+        passed += length
+        if curvature == 0.0 and length > 0.0:
+            return passed
+    return 0.0
+
+
+def room_to_wait(robot: Robot, way: ArcPath, speed_now: float) -> bool:
+    """Whether a robot can come to a standstill before it is to begin to turn."""
+    braking = speed_now**2 / (2.0 * COMFORT * robot.limits.max_braking)
+    return lead_in(way) >= braking + _SHORTEST_LEAD
 
 
 def standstill(robot: Robot, settings: Settings) -> float:

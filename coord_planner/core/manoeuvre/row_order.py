@@ -13,7 +13,7 @@ from ...errors import RefusedError
 from .. import outline
 from ..dubins import ArcPath
 from ..watch import margin
-from .driving import drive_along
+from .driving import drive_along, room_to_wait
 from .rows import Rows
 from .scene import Scene
 
@@ -31,29 +31,27 @@ class Placed:
     """One robot's part.
 
     Attributes:
-        robot: its position. way, speed: that it drives at, m/s. wait: seconds until it sets out.
-        poses: from setting out to the end, every _STEP, shape (K, 3).
+        robot: its position. way, speed: that it drives at, m/s. wait: seconds until it sets out, or for which it
+            stands before it turns. begins: seconds until the first of its poses.
+        poses: on its way, every _STEP, shape (K, 3).
     """
 
     robot: int
     way: ArcPath
     speed: float
     wait: float
+    begins: float
     poses: np.ndarray
-
-    def later(self, wait: float) -> Placed:
-        """The same, setting out later."""
-        return attrs.evolve(self, wait=wait)
 
     def at(self, steps: np.ndarray) -> np.ndarray:
         """Poses at whole steps since the beginning, shape (K, 3)."""
-        since = steps - int(round(self.wait / _STEP))
+        since = steps - int(round(self.begins / _STEP))
         return np.asarray(self.poses[np.clip(since, 0, len(self.poses) - 1)])
 
     @property
     def until(self) -> int:
         """Steps until it has arrived."""
-        return int(round(self.wait / _STEP)) + len(self.poses)
+        return int(round(self.begins / _STEP)) + len(self.poses)
 
 
 def arranged(
@@ -90,11 +88,20 @@ def arranged(
     return quickest[:_MOST]
 
 
-def _setting_out(scene: Scene, k: int, way: ArcPath, speed: float) -> Placed:
-    """A robot on its way at once."""
-    drive = drive_along(scene.fleet.robots[k], scene.settings, way, speed, first=scene.speed_now)
+def _setting_out(scene: Scene, k: int, way: ArcPath, speed: float, wait: float = 0.0) -> Placed:
+    """A robot on its way; one that comes along moving waits where its row ends."""
+    drive = drive_along(scene.fleet.robots[k], scene.settings, way, speed, wait=wait, first=scene.speed_now)
     steps = int(np.ceil(drive.duration / _STEP)) + 1
-    return Placed(k, way, speed, 0.0, way.sample(drive.distance(_STEP * np.arange(steps))))
+    return Placed(k, way, speed, wait, 0.0, way.sample(drive.distance(_STEP * np.arange(steps))))
+
+
+def _later(scene: Scene, placed: Placed, wait: float) -> Optional[Placed]:
+    """The same with a wait; None where there is no room to stop for it."""
+    if wait == 0.0 or scene.speed_now == 0.0:
+        return attrs.evolve(placed, wait=wait, begins=wait)
+    if not room_to_wait(scene.fleet.robots[placed.robot], placed.way, scene.speed_now):
+        return None
+    return _setting_out(scene, placed.robot, placed.way, placed.speed, wait)
 
 
 def _place(
@@ -103,11 +110,14 @@ def _place(
     """Everyone as early as may be; else the largest clearance that was found for the first who cannot pass."""
     placed: list[Placed] = []
     kept = scene.settings.site_rules.min_clearance + 2 * float(margin(scene.fleet, scene.settings, 1.0).max()) + spare
-    waits = np.arange(0.0, _LONGEST if scene.speed_now == 0.0 else 0.5 * _WAITS, _WAITS)
+    waits = np.arange(0.0, _LONGEST, _WAITS)
     for k in order:
         best = (-np.inf, k, k)
         for wait in waits:
-            tried = [(*_gap(scene, each.later(float(wait)), placed), each.later(float(wait))) for each in basic[k]]
+            later = [_later(scene, each, float(wait)) for each in basic[k]]
+            tried = [(*_gap(scene, each, placed), each) for each in later if each is not None]
+            if not tried:
+                return placed, best
             clear = [each for gap, _, each in tried if gap >= kept]
             if clear:
                 placed.append(clear[0])  # the quickest
@@ -141,6 +151,7 @@ def _cannot_pass(name: str, scene: Scene, worst: tuple[float, int, int]) -> Refu
     names = scene.fleet.names
     return RefusedError(
         f"{name}: {names[k]} cannot pass {names[j]} in the headland, whoever waits: {-short:.2f} m of clearance are "
-        f"missing to the site's smallest of {scene.settings.site_rules.min_clearance:g} m and the planner's margin",
+        f"missing to the site's smallest of {scene.settings.site_rules.min_clearance:g} m and the planner's margin"
+        + ("" if scene.speed_now == 0.0 else "; who comes along moving can wait only as long as it is in its row"),
         "widen the row spacing, skip rows, choose another order of rows or let them end further inside",
     )

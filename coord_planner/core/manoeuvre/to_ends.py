@@ -24,7 +24,11 @@ def lay(name: str, wanted: ToEnds, scene: Scene) -> Laid:
     named = _named_ends(wanted, scene.fleet)
     if wanted.duration > 0.0:
         _check_duration(name, wanted, scene, named)
-    laid = [_laid(wanted, scene, named, least) for least in (_LEAST if wanted.reverse else _LEAST[:1])]
+    laid: list[Laid] = []
+    for least in _LEAST if wanted.reverse else _LEAST[:1]:
+        tried = _laid(wanted, scene, named, least)
+        if all(tried.ways != other.ways for other in laid):
+            laid.append(tried)
     return attrs.evolve(laid[0], otherwise=tuple(laid[1:]))
 
 
