@@ -26,7 +26,9 @@ def apart(seed: int, fenced: bool = True) -> tuple[Problem, np.ndarray]:
     watch = attrs.evolve(
         posed.watch, pairs=posed.watch.pairs[kept], normals=posed.watch.normals[kept], gaps=posed.watch.gaps[kept]
     )
-    return attrs.evolve(posed, watch=watch, edges=np.zeros((0, 2), dtype=int), weights=np.zeros(0)), guess
+    return attrs.evolve(
+        posed, watch=watch, edges=np.zeros((0, 2), dtype=int), weights=np.zeros(0), compared=None
+    ), guess
 
 
 def test_who_hangs_together():

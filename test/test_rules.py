@@ -50,6 +50,7 @@ RAISED = [
     rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, False),
     rules.other_planner(SETTINGS, "run 7"),
     rules.change_refused(SETTINGS, "too tight"),
+    rules.not_joined(SETTINGS, "cart_3", "cart_3 is not ready to be driven"),
 ]
 
 

@@ -132,6 +132,7 @@ class Decision:
         solve_time: seconds spent optimising in this tick.
         completed: the last manoeuvre was carried through to its end.
         warnings: what is going wrong now.
+        outside: robots that are obstacles only: they leave, or stand and wait to join.
     """
 
     time: float
@@ -152,6 +153,7 @@ class Decision:
     solve_time: float = 0.0
     completed: bool = False
     warnings: tuple[Caution, ...] = ()
+    outside: tuple[str, ...] = ()
 
 
 @attrs.frozen
