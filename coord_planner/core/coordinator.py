@@ -549,8 +549,14 @@ class Coordinator:
             self._remake,
         )
 
-    def _replace(self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str) -> None:
-        """Make a reference for another manoeuvre, which leaves the running one from a moment ahead."""
+    def _replace(
+        self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str,
+        hazard: Optional[Point] = None,
+    ) -> None:
+        """Make a reference for another manoeuvre, which leaves the running one from a moment ahead.
+
+        What it keeps away from stays ``hazard``, however often it is made again; the one that is known when left out.
+        """
         before = self._request
         if before is not None and before.kind == "replace" and before.answered is not answered:
             self._cancel(f"{name} was asked for instead")  # and not only made again from a later moment
@@ -558,7 +564,7 @@ class Coordinator:
         self._forget_next()
         old, leaves, at = self._branch(now)
         fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
-        hazard = self._hazard.point
+        hazard = hazard or self._hazard.point
 
         def make() -> Reference:
             _check_forward(name, fleet, states)
