@@ -577,7 +577,7 @@ class Coordinator:
 
         self._ask(
             "replace", make, answered, request_id, at,
-            lambda later: self._replace(later, name, wanted, answered, request_id), _chain(name, wanted),
+            lambda later: self._replace(later, name, wanted, answered, request_id, hazard), _chain(name, wanted),
         )
         if owed and self._request is not None:
             self._request = attrs.evolve(self._request, supersedes_change=True)
@@ -605,7 +605,7 @@ class Coordinator:
                 self._begin_stop(max(self._seen.values(), default=now), f"turning away was refused: {answer.text}",
                                  completed=False)
 
-        self._replace(now, watch.armed, wanted, answered, "")
+        self._replace(now, watch.armed, wanted, answered, "", point)
 
     def _follow_changes(self, request: _Request, now: float) -> None:
         """What was changed while a reference was being made is followed at once."""
