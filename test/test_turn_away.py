@@ -114,6 +114,20 @@ def test_heard_again_and_again_it_turns_away_once():
     assert seen[0] == "go" and seen[-1] == "away" and len(set(seen)) == 2
 
 
+def test_a_hazard_that_expires_while_the_turn_is_made_is_turned_away_from_all_the_same():
+    """On a busy machine what is made comes too late and is made again."""
+    run = under_way(expires=0.3)
+    run.coordinator.arm("away", run.now)
+    run.coordinator.hazard(*POINT, run.now)
+    made = [job() for job in run.coordinator.jobs()]
+    run.run(1.2)
+    for outcome in made:
+        run.coordinator.deliver(outcome, run.now)
+    assert run.coordinator.reference.task.name == "go"
+    run.run(2.0)
+    assert run.coordinator.reference.task.name == "away" and run.coordinator.reference.task.hazard == POINT
+
+
 def test_what_cannot_turn_away_stops():
     run = under_way(away=TurnAway(after=4.0, speed=9.0))
     run.coordinator.arm("away", run.now)

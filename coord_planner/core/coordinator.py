@@ -664,8 +664,14 @@ class Coordinator:
             lambda _a: None, "", at, self._remake,
         )
 
-    def _replace(self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str) -> None:
-        """Make a reference for another manoeuvre, which leaves the running one from a moment ahead."""
+    def _replace(
+        self, now: float, name: str, wanted: Manoeuvre, answered: Answered, request_id: str,
+        hazard: Optional[Point] = None,
+    ) -> None:
+        """Make a reference for another manoeuvre, which leaves the running one from a moment ahead.
+
+        What it keeps away from stays ``hazard``, however often it is made again; the one that is known when left out.
+        """
         before = self._request
         if before is not None and before.kind == "replace" and before.answered is not answered:
             self._cancel(f"{name} was asked for instead")  # and not only made again from a later moment
@@ -675,10 +681,10 @@ class Coordinator:
         fleet, settings, states = self._fleet, self._settings, old.state(leaves)
         driving = self._members.under_command(fleet.names)
         graph = members.among(self._graph, fleet.names, driving)
-        hazard = self._hazard.point
+        away = hazard or self._hazard.point
         self._ask(
-            "replace", lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving, hazard),
-            answered, request_id, at, lambda later: self._replace(later, name, wanted, answered, request_id),
+            "replace", lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving, away),
+            answered, request_id, at, lambda later: self._replace(later, name, wanted, answered, request_id, away),
             _chain(name, wanted),
         )
         if owed and self._request is not None:
@@ -707,7 +713,7 @@ class Coordinator:
                 self._begin_stop(max(self._seen.values(), default=now), f"turning away was refused: {answer.text}",
                                  completed=False)
 
-        self._replace(now, watch.armed, wanted, answered, "")
+        self._replace(now, watch.armed, wanted, answered, "", point)
 
     def _follow_changes(self, request: _Request, now: float) -> None:
         """What was changed while a reference was being made is followed at once."""
