@@ -140,7 +140,7 @@ def test_exit_status_and_output_follow_what_happened(monkeypatch: pytest.MonkeyP
     run = attrs.evolve(turn(), completed=True, state="ended", min_clearance=0.1)
     calls = []
 
-    def rehearse(configuration, manoeuvre, *, seed, faults, progress=None):
+    def rehearse(configuration, manoeuvre, *, seed, faults, seen, progress=None):
         calls.append((configuration.settings.coupling.strength, manoeuvre, seed))
         return run
 

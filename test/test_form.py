@@ -3,6 +3,7 @@
 import itertools
 import math
 
+import fleets
 import numpy as np
 import pytest
 from fleets import LATE, abreast, carts, settings
@@ -104,6 +105,22 @@ def test_half_a_place_is_told():
         Form(x=1.0)
     with pytest.raises(SettingsError, match=r"manoeuvres\.form\.x"):
         site(abreast(2), {"form": {"kind": "form", "x": 1.0}})
+
+
+def test_who_still_waited_when_all_were_halted_waits_again():
+    """The file is formed one after the other; halted while the last still stands, it goes on without a near miss."""
+    yard = fleets.Yard(carts(3, response=LATE), abreast(3, 2.2), {"form": Form(shape="file", spacing=2.8)},
+                       settings(horizon={"intervals": 12}))
+    assert yard.begin("form").ok
+    yard.run(2.5)
+    yard.coordinator.halt(yard.now, "asked")
+    yard.run_to(fleets.State.HELD)
+    assert yard.resume().ok, yard.answers[-1].text
+    yard.run_to(fleets.State.ENDED)
+    track = np.stack([poses for _, poses in yard.track], axis=1)
+    polygons = outline.outlines(yard.fleet.corners(), track)
+    assert outline.closest(polygons, outline.all_pairs(3))[0] >= 0.85
+    assert np.abs(track[:, -1] - yard.coordinator.ends)[:, :2].max() < 0.1
 
 
 @pytest.mark.parametrize("shape, seed", [("line", 1), ("file", 2), ("echelon", 3)])

@@ -22,7 +22,7 @@ from coord_planner.core import ocp, reference
 from coord_planner.core.area import area_of
 from coord_planner.core.coordinator import Coordinator
 from coord_planner.core.graph import NeighbourGraph
-from coord_planner.core.manoeuvre import EqualRadius, ToEnds
+from coord_planner.core.manoeuvre import EqualRadius, ToEnds, TurnAway
 from coord_planner.core.messages import PoseSample, Snapshot, State
 from coord_planner.core.plan import from_solution
 from coord_planner.core.settings import SpeedCap
@@ -39,6 +39,7 @@ FLEET, STARTS = fleets.carts(COUNT, LIMITS, fleets.LATE), fleets.abreast(COUNT)
 MANOEUVRES = {
     "corner": EqualRadius(angle_deg=60.0, radius=3.0, speed=1.0),
     "passing": EqualRadius(angle_deg=-30.0, radius=4.0, speed=0.8, end_speed=0.4),
+    "away": TurnAway(),
     "led": ToEnds(ends_deg=("cart_1 pose 6 4 20",), speed=1.0),
 }
 ODD = st.sampled_from([math.nan, math.inf, -math.inf, 1e300, -1e300, 0.0, 1e9])
@@ -110,6 +111,7 @@ EVENTS = st.one_of(
         st.one_of(NUMBER, st.booleans(), st.just("fast")), max_size=2)),
     st.tuples(st.sampled_from(["halt", "resume", "abandon", "work", "work", "hoard", "again"])),
     st.tuples(st.just("change"), CHANGES),
+    st.tuples(st.just("hazard"), NUMBER, NUMBER), st.tuples(st.just("arm"), st.sampled_from(["away", "led", ""])),
 )
 
 
@@ -236,6 +238,10 @@ class World:
             self.coordinator.resume(self.snapshot(), self.answers.append)
         elif kind == "abandon":
             self.coordinator.abandon(now)
+        elif kind == "hazard":
+            self.coordinator.hazard(event[1], event[2], now)
+        elif kind == "arm":
+            self.coordinator.arm(event[1], now)
         elif kind == "work":
             self.work()
         elif kind == "hoard":
@@ -271,7 +277,7 @@ def live(solve, events):
 @pytest.fixture
 def cheap(monkeypatch):
     """References that are at hand instead of solved for."""
-    at_hand = {name: made(name) for name in MANOEUVRES}
+    at_hand = {name: made("led" if name == "away" else name) for name in MANOEUVRES}
 
     def make(task, fleet, graph, chosen, initial, *_args, **_more):
         if len(fleet) != COUNT or task.name not in at_hand:

@@ -102,9 +102,10 @@ def test_rows_say_what_the_cost_counts():
 
 def test_a_stretch_is_shared_out_among_the_pieces_that_it_covers():
     bounds = np.array([0.0, 1.0, 3.0, 4.0])
-    assert succession.shares(bounds, 0.5, 2.5) == pytest.approx([0.25, 0.75, 0.0])
-    assert succession.shares(bounds, -2.0, 2.0) == pytest.approx([0.25, 0.25, 0.0])  # half of it lies before
-    assert succession.Steps(bounds, np.array([1.0, 2.0, 3.0])).mean(3.5, 4.5) == pytest.approx(1.5)
+    shared = succession.shares(bounds, np.array([0.5, -2.0]), np.array([2.5, 2.0]))  # half of the second lies before
+    assert shared == pytest.approx(np.array([[0.25, 0.75, 0.0], [0.25, 0.25, 0.0]]))
+    steps = succession.Steps(bounds, np.array([1.0, 2.0, 3.0]))
+    assert steps.integral(np.array([3.5, -1.0]), np.array([4.5, 2.0])) == pytest.approx([1.5, 3.0])
 
 
 @pytest.mark.parametrize("wanted, poses, words", [
@@ -121,7 +122,7 @@ def test_what_is_no_file_or_too_tight_is_refused_with_figures(wanted, poses, wor
 @pytest.mark.parametrize("count, spacing, radius", [(3, 3.5, 2.0)])
 def test_a_rehearsal_ends_as_asked(count, spacing, radius):
     turn = {"kind": "in_succession", "radius": radius}
-    run = rehearse(site(in_file(count, spacing), {"file": turn}), "file", seed=count)
+    run = rehearse(site(in_file(count, spacing), {"file": turn}, horizon__intervals=12), "file", seed=count)
     figures = summary(run)
     assert figures["completed"] and figures["contacts"] == 0 and figures["limit_violations"] == 0
     assert figures["min_clearance_m"] >= 0.85
@@ -130,7 +131,8 @@ def test_a_rehearsal_ends_as_asked(count, spacing, radius):
 
 
 def test_a_file_that_was_halted_goes_on():
-    yard = fleets.Yard(carts(2, response=LATE), in_file(2), {"file": attrs.evolve(COUPLED, coupling=2.0)}, settings())
+    yard = fleets.Yard(carts(2, response=LATE), in_file(2), {"file": attrs.evolve(COUPLED, coupling=2.0)},
+                       settings(horizon={"intervals": 12}))
     assert yard.begin("file").ok
     yard.run(6.0)
     yard.coordinator.halt(yard.now, "asked")

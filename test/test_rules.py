@@ -45,8 +45,12 @@ RAISED = [
     rules.plan_failed(SETTINGS, "no numbers"),
     rules.plans_missing(SETTINGS, 3.0),
     rules.silence_unsafe(SETTINGS, Silence(2.0, 0.3, ("a", "b"))),
+    rules.hazard_known(SETTINGS, (3.0, 4.0)),
+    rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, True),
+    rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, False),
     rules.other_planner(SETTINGS, "run 7"),
     rules.change_refused(SETTINGS, "too tight"),
+    rules.not_joined(SETTINGS, "cart_3", "cart_3 is not ready to be driven"),
 ]
 
 

@@ -174,6 +174,13 @@ def test_another_manoeuvre_takes_the_place_of_a_sequence():
     assert here.coordinator.decision.manoeuvre == "other"
 
 
+@pytest.mark.parametrize("key", ["alignment", "named", "parts", "nonsense"])
+def test_only_numbers_of_its_own_are_overridden(key):
+    here = yard()
+    answer = here.begin("rows", **{key: 1.0})
+    assert not answer.ok and "override one of speed, joint_speed, end_speed, coupling" in answer.text
+
+
 def test_a_later_part_that_cannot_be_is_refused_before_anything_moves():
     fleet = carts(2)
     rows = attrs.evolve(ROWS, named={"bend": attrs.evolve(BEND, radius=1.0)})

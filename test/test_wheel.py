@@ -3,6 +3,7 @@
 import math
 
 import attrs
+import fleets
 import numpy as np
 import pytest
 from fleets import LATE, LIMITS, abreast, carts, settings, solve
@@ -121,8 +122,23 @@ def test_the_plan_keeps_the_line(count, spacing, wanted):
     assert np.ptp(compared) == 0.0  # one speed for all: turn rates are compared
 
 
+def test_a_wheel_turn_that_was_halted_keeps_the_line_when_it_goes_on():
+    yard = fleets.Yard(carts(2, response=LATE), abreast(2), {"round": Wheel(angle_deg=60.0, pivot="cart_1 3")},
+                       settings(horizon={"intervals": 12}))
+    assert yard.begin("round").ok
+    yard.run(4.0)
+    yard.coordinator.halt(yard.now, "asked")
+    yard.run_to(fleets.State.HELD)
+    assert yard.resume().ok, yard.answers[-1].text
+    yard.run_to(fleets.State.ENDED)
+    track = np.stack([poses for _, poses in yard.track])
+    assert np.degrees(np.ptp(track[:, :, 2], axis=1).max()) <= 4.0
+    assert np.abs(np.linalg.norm(track[:, 1, :2] - track[:, 0, :2], axis=1) / 2.5 - 1).max() <= 0.10
+
+
 def test_a_rehearsal_keeps_the_line():
-    run = rehearse(site(abreast(3), {"round": {"kind": "wheel", "pivot": "mower_1 2.5"}}), "round", seed=2)
+    run = rehearse(site(abreast(3), {"round": {"kind": "wheel", "pivot": "mower_1 2.5"}},
+                        horizon__intervals=12), "round", seed=2)
     figures, kept = summary(run), shown(run, 2.5)
     assert figures["completed"] and figures["contacts"] == 0 and figures["limit_violations"] == 0
     assert kept["heading_deg"] <= 4.0 and kept["spacing"] <= 0.10

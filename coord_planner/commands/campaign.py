@@ -6,6 +6,7 @@ Run as ``python -m coord_planner.commands.campaign``; ``make campaign`` runs the
 from __future__ import annotations
 
 import argparse
+import contextlib
 import json
 import sys
 from collections.abc import Iterator, Sequence
@@ -19,6 +20,7 @@ from rich.table import Table
 
 from .. import config
 from ..config.places import example
+from ..core.manoeuvre import work_out
 from ..core.messages import State
 from ..errors import RefusedError
 from ..record.metrics import summary
@@ -45,10 +47,12 @@ TOLD_BY: dict[str, tuple[str, ...]] = {
 # From which size on a fault must be warned of, and within how many seconds.
 _MUST: dict[str, tuple[float, float]] = dict.fromkeys(KINDS, (0.0, 0.5))
 _MUST.update({
-    "pose_jump": (0.3, 0.5), "pose_noise": (0.3, 0.5), "command_delay": (0.3, 0.5), "robot_stuck": (0.0, 1.0),
+    "pose_jump": (0.3, 0.5), "pose_noise": (0.3, 0.5), "command_delay": (0.3, 0.5), "planner_late": (0.3, 0.5),
+    "robot_stuck": (0.0, 1.0),
     "robot_slow": (0.6, 1.0),  # below this part of its speed, not above
 })
 _ENDS = (State.ENDED.value, State.HELD.value)
+_MOST_EXCUSED = 0.02  # part of the cases in which a contact may be excused
 _LEAST_MOVING = 1.5  # seconds after the beginning before which no fault strikes
 
 
@@ -98,14 +102,27 @@ def cases(files: Sequence[str], count: int, seed: int) -> Iterator[Case]:
     rng = np.random.default_rng(seed)
     configurations = {file: config.load(file) for file in files}
     kinds = list(KINDS)
+    able = {file: begun_from_starts(configuration) for file, configuration in configurations.items()}
     for number in range(count):
         file = files[number % len(files)]
         configuration = configurations[file]
-        manoeuvre = str(rng.choice(list(configuration.manoeuvres)))
+        manoeuvre = str(rng.choice(able[file]))
         first = kinds[number % len(kinds)]
         others = [str(kind) for kind in rng.choice(kinds, size=int(rng.integers(0, 3)))]
         faults = tuple(_fault(kind, configuration, rng) for kind in (first, *others))
         yield Case(number, file, manoeuvre, int(rng.integers(1 << 31)), faults)
+
+
+def begun_from_starts(configuration: config.Configuration) -> list[str]:
+    """Manoeuvres that can be begun where the file has the robots stand."""
+    fleet, starts = configuration.driven, configuration.all_starts()
+    poses = np.array([starts[name] for name in fleet.names])
+    hops, found = configuration.graph.relative_to(fleet.names).hops(), []
+    for name, wanted in configuration.manoeuvres.items():
+        with contextlib.suppress(RefusedError):
+            work_out(name, wanted, fleet, configuration.settings, poses, 0.0, hops)
+            found.append(name)
+    return found
 
 
 def _fault(kind: str, configuration: config.Configuration, rng: np.random.Generator) -> Fault:
@@ -131,7 +148,7 @@ def play(case: Case) -> Result:
     except RefusedError:
         return Result(case, 0, False, np.inf, 0, "refused", (), ())
     figures = summary(run)
-    told, owed = zip(*(_told(fault, run) for fault in case.faults))
+    told, owed = zip(*(_told(fault, run, _hidden(fault, configuration)) for fault in case.faults))
     contacts = int(figures["contacts"])
     return Result(
         case, contacts, bool(contacts) and unavoidable(run, case.faults), float(figures["min_clearance_m"]),
@@ -139,13 +156,22 @@ def play(case: Case) -> Result:
     )
 
 
-def _told(fault: Fault, run: Run) -> tuple[float, bool]:
-    """Seconds to the first warning of a fault, and whether one was owed: it struck in motion and was large enough."""
-    onset = run.began + fault.from_s
+def _hidden(fault: Fault, configuration: config.Configuration) -> float:
+    """Seconds for which nobody can see a fault: a machine without commands drives on as told until its time-out."""
+    return configuration.connections[fault.robot].command_timeout if fault.kind == "command_lost" else 0.0
+
+
+def _told(fault: Fault, run: Run, hidden: float = 0.0) -> tuple[float, bool]:
+    """Seconds to the first warning of a fault, and whether one was owed: it struck in motion and was large enough.
+
+    Args:
+        hidden: seconds after the fault's beginning from which it shows.
+    """
+    onset = run.began + fault.from_s + hidden
     size, allowed = _MUST[fault.kind]
     moving = np.abs(run.speeds[:, (run.times >= onset) & (run.times <= onset + allowed)]) > 0.2
     large = fault.value < size if fault.kind == "robot_slow" else fault.value >= size
-    lasted = fault.to_s - fault.from_s >= allowed
+    lasted = fault.to_s - fault.from_s - hidden >= allowed
     started = onset + allowed <= run.ended
     owed = bool(moving.size and moving.all() and large and lasted and started)
     heard = [
@@ -184,7 +210,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser.add_argument("--json", action="store_true", help="one JSON object instead of a table")
     parser.add_argument("files", nargs="*", help="parameter files; the example sites when left out")
     given = parser.parse_args(arguments)
-    files = given.files or [str(example(name)) for name in ("solar_park.yaml", "snow_yard.yaml")]
+    files = given.files or [str(example(name)) for name in ("solar_park.yaml", "snow_yard.yaml", "orchard.yaml")]
     console = Console(stderr=True)
     results: list[Result] = []
     with ProcessPoolExecutor(given.workers) as pool, Progress(console=console, disable=not console.is_terminal) as bar:
@@ -201,7 +227,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
         Console().print(_table(results))
         for result in broken:
             Console().print(f"case {result.case.number}: {result}", markup=False)
-    return 1 if broken else 0
+    excused = sum(bool(result.contacts) for result in results if result.excused)
+    if excused > _MOST_EXCUSED * len(results):
+        console.print(f"{excused} contacts are excused, {100 * _MOST_EXCUSED:g} % of the cases may be", markup=False)
+    return 1 if broken or excused > _MOST_EXCUSED * len(results) else 0
 
 
 if __name__ == "__main__":

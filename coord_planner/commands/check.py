@@ -13,7 +13,7 @@ from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
 from ..core.judge import SHORT
-from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds
+from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds, TurnAway
 from ..core.settings import SiteRules
 from ..errors import SettingsError
 from ..trial.falling_silent import Prospect, prospect
@@ -176,6 +176,9 @@ def _write_silence(configuration: config.Configuration) -> bool:
     rules, kept = configuration.settings.site_rules, True
     with progress_shown("planning every manoeuvre") as progress:
         for done, name in enumerate(configuration.manoeuvres):
+            if isinstance(configuration.manoeuvres[name], TurnAway):
+                write(f"{name}: looked at when a hazard begins it.")
+                continue
             found = prospect(configuration, name)
             write(f"{name}: {_in_words(found, rules)}")
             kept = kept and not (found.refused and found.silence is not None)

@@ -9,9 +9,10 @@ import typer
 
 from .. import config
 from ..config.failures import FailureStore
-from ..errors import RefusedError
+from ..errors import RefusedError, SettingsError
 from ..trial.faults import Fault
 from ..trial.run import Run
+from ..trial.sighting import Sighting, check_arming, sighting
 from .loading import configured
 from .progress import progress_shown
 from .speaking import (
@@ -42,6 +43,15 @@ def simulate(
                      help="What goes wrong on the way (YAML): faults:, a list of {kind, robot or edge, from_s, to_s, "
                           "value}."),
     ] = None,
+    hazard: Annotated[
+        Optional[str],
+        typer.Option("--hazard", metavar="'X Y SECONDS'", help="A hazard turns up at a point, so long after the motion "
+                                                             "began; everyone who could come near it stops."),
+    ] = None,
+    arm: Annotated[
+        Optional[str],
+        typer.Option("--arm", metavar="M", help="With --hazard: this manoeuvre of the kind turn_away is armed for it."),
+    ] = None,
     entries: Annotated[
         Optional[list[str]],
         typer.Option("--set", metavar="KEY=VALUE", help="Another value for a key of the file; may be repeated."),
@@ -61,7 +71,7 @@ def simulate(
         configuration = configured(params, entries or [])
         configuration.manoeuvre(manoeuvre)
         configuration.all_starts()
-        struck = _faults(faults, configuration)
+        struck, seen = _faults(faults, configuration), _sighting(hazard, arm, configuration)
         if page is not None:
             prepare_file(page, "--page")
         if picture is not None:
@@ -70,7 +80,7 @@ def simulate(
             prepare_bag(bag, "--bag")
         before = _kept(configuration)
         try:
-            run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed, struck)
+            run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed, struck, seen)
         except RefusedError as refused:
             if as_json:
                 write_json({"completed": False, "state": "refused", "reason": refused.reason, "remedy": refused.remedy})
@@ -91,11 +101,21 @@ def _faults(file: Path | None, configuration: config.Configuration) -> tuple[Fau
     return load_faults(file, configuration.graph.relative_to(configuration.driven.names))
 
 
-def _run(configuration: config.Configuration, manoeuvre: str, seed: int, faults: tuple[Fault, ...]) -> Run:
+def _sighting(hazard: str | None, arm: str | None, configuration: config.Configuration) -> Sighting | None:
+    if arm is not None:
+        if hazard is None:
+            raise SettingsError(f"{arm!r} is armed for no hazard", key="--arm", allowed="together with --hazard")
+        check_arming(configuration.manoeuvre(arm), arm)
+    return None if hazard is None else sighting(hazard, arm or "")
+
+
+def _run(
+    configuration: config.Configuration, manoeuvre: str, seed: int, faults: tuple[Fault, ...], seen: Sighting | None
+) -> Run:
     from ..trial.rehearsal import rehearse
 
     with progress_shown(manoeuvre) as progress:
-        return rehearse(configuration, manoeuvre, seed=seed, faults=faults, progress=progress)
+        return rehearse(configuration, manoeuvre, seed=seed, faults=faults, seen=seen, progress=progress)
 
 
 def _kept(configuration: config.Configuration) -> set[Path]:
@@ -112,9 +132,12 @@ def _record(run: Run, configuration: config.Configuration, bag: Path) -> None:
 
 
 def _report(run: Run, as_json: bool, page: Path | None, picture: Path | None) -> None:
+    from ..record.hops import turned_by_hop
     from ..record.metrics import summary
 
-    figures = summary(run)
+    figures, hops = summary(run), turned_by_hop(run)
+    if hops:
+        figures["turned_by_hop"] = hops
     if as_json:
         write_json(figures)
     else:
@@ -153,6 +176,16 @@ def _failures(run: Run, figures: dict[str, Any]) -> list[str]:
     return found
 
 
+def _write_hops(hops: list[dict[str, Any]]) -> None:
+    if not hops:
+        return
+    shown = table("hops from who saw it", "robots", "turned rad", "share", "by the copying law")
+    for hop in hops:
+        shown.add_row(str(hop["hops"]), ", ".join(hop["robots"]), figure(hop["turned_rad"], 3),
+                      figure(hop["share"], 3), figure(hop["law"], 3))
+    write_table(shown)
+
+
 def _write_figures(run: Run, figures: dict[str, Any]) -> None:
     write(f"{run.manoeuvre}: {figures['state']} after {figure(figures['duration_s'], 1)} s; "
           f"{figures['contacts']} contacts, {figures['limit_violations']} commands outside a limit; smallest clearance "
@@ -163,6 +196,7 @@ def _write_figures(run: Run, figures: dict[str, Any]) -> None:
     for name in run.fleet.names:
         robots.add_row(name, *(figure(figures[key][name], 3) for key in columns))
     write_table(robots)
+    _write_hops(figures.get("turned_by_hop", []))
     for warning in figures["warnings"]:
         write(f"{figure(warning['first_s'], 1)} to {figure(warning['last_s'], 1)} s: {warning['text']}")
     ticks = figures["tick_ms"]

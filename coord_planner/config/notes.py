@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from ..core.manoeuvre import ToEnds, work_out
+from ..core.manoeuvre import ToEnds, TurnAway, work_out
 from ..errors import RefusedError
 from .configuration import Configuration
 
@@ -67,6 +67,8 @@ def _refusal(configuration: Configuration, name: str) -> list[str]:
     """Whether the manoeuvre would be refused at once when begun from the starts in the file."""
     fleet = configuration.fleet
     if any(robot not in configuration.starts for robot in fleet.names):
+        return []
+    if isinstance(configuration.manoeuvres[name], TurnAway):  # which is begun by a hazard, in motion
         return []
     poses = np.array([configuration.starts[robot] for robot in fleet.names])
     hops = configuration.graph.hops()

@@ -12,6 +12,7 @@ from collections.abc import Iterable
 
 import attrs
 
+from ..core.manoeuvre import TurnAway
 from ..errors import SettingsError
 from .configuration import Configuration
 
@@ -55,13 +56,14 @@ def interface(configuration: Configuration) -> Interface:
     """
     publishes = [*_PUBLISHED_BY_ROS, "fleet_markers", "/diagnostics",
                  "~/status", "~/neighbours_in_force", "~/heartbeat"]
-    subscribes = ["neighbours", "halt", "~/request", "~/heartbeat"]
+    subscribes = ["neighbours", "hazard", "halt", "~/request", "~/heartbeat"]
     for name, connection in configuration.connections.items():
         publishes += [f"{name}/curvature", connection.command_topic, f"{name}/planned_path"]
         subscribes += ["/tf", "/tf_static"] if connection.pose_source == "tf" else [connection.pose_topic]
         subscribes += [f"{name}/ready"] if connection.ready_required else []
     serves = [*_SERVED_BY_ROS, "~/halt", "~/resume", "~/abandon"]
     serves += [f"~/begin/{name}" for name in configuration.manoeuvres]
+    serves += [f"~/arm/{name}" for name, each in configuration.manoeuvres.items() if isinstance(each, TurnAway)]
     return Interface(*(tuple(sorted(set(names))) for names in (publishes, subscribes, serves)))
 
 

@@ -56,6 +56,10 @@ class Fencing:
         spare = self.spare(fleet, poses).min(axis=2)
         return attrs.evolve(self, bound=np.argwhere(spare < settings.clearance.reach))
 
+    def beside(self, pieces: Iterable[Piece]) -> Fencing:
+        """The same and some pieces more, nothing watched: to judge by."""
+        return Fencing((*self.pieces, *pieces), self.lines)
+
     def joined(self, other: Fencing) -> Fencing:
         """The same with what another one watches besides."""
         return attrs.evolve(self, bound=np.unique(np.concatenate([self.bound, other.bound]), axis=0))
@@ -129,6 +133,11 @@ def fencing(settings: Settings, lines: Iterable[Line] = (), others: Iterable[Pie
         Piece(area.name, corners, rules.keep_out_clearance) for area in rules.keep_outs for corners in area.pieces
     ]
     return Fencing((*pieces, *others), tuple(lines))
+
+
+def hazards(settings: Settings, point: tuple[float, float] | None) -> tuple[Piece, ...]:
+    """A point to keep away from."""
+    return () if point is None else (Piece("the hazard", np.array([point]), settings.hazard.clearance),)
 
 
 def _footprints(fleet: Fleet, poses: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

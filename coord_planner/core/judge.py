@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Optional
 
 import attrs
 import numpy as np
 
 from . import neighbours, outline, rules, stopping
+from .fence import Piece
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .messages import Caution, Snapshot
@@ -32,7 +34,11 @@ _SCATTER = 3.0  # times the expected scatter of poses
 
 @attrs.frozen(eq=False)
 class View:
-    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds."""
+    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds.
+
+    Robots in ``outside`` are obstacles only, and the graph is that of the others; ``waiting`` tells why some cannot
+    join.
+    """
 
     snapshot: Snapshot
     estimate: Estimate
@@ -44,6 +50,9 @@ class View:
     period: float
     refused_change: str
     silence: Optional[Silence]
+    hazards: tuple[Piece, ...] = ()
+    outside: frozenset[str] = frozenset()
+    waiting: Mapping[str, str] = attrs.field(factory=dict)
 
 
 class Judge:
@@ -59,7 +68,8 @@ class Judge:
         """Everything that is wrong at this moment, in motion."""
         found = [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
         found += [*_following(view), *self._limits(view), *_plans(view), *_spacing(view), *_fenced(view)]
-        return found
+        found = [caution for caution in found if caution.subject not in view.outside]
+        return found + [rules.not_joined(view.settings, name, reason) for name, reason in view.waiting.items()]
 
     def hold(self, now: float, found: list[Caution]) -> tuple[Caution, ...]:
         """What is shown: what is raised now, and what was a moment ago."""
@@ -95,10 +105,11 @@ class Judge:
         if self._graph is not None and self._graph.edges != view.graph.edges:
             found.append(rules.graph_changed(view.settings, len(view.graph.edges)))
         self._graph = view.graph
-        if len(view.fleet) > 1 and not view.graph.connected:
+        if len(view.graph.names) > 1 and not view.graph.connected:
             found.append(rules.graph_split(view.settings, view.graph.components()))
         elif len(view.fleet) > 1 and view.settings.neighbours.warn_below > 0.0:
-            holding = neighbours.holding(view.settings.neighbours, view.graph, view.estimate.states[:, :2])
+            rows = [view.fleet.index(name) for name in view.graph.names]
+            holding = neighbours.holding(view.settings.neighbours, view.graph, view.estimate.states[rows, :2])
             if holding < view.settings.neighbours.warn_below:
                 found.append(rules.graph_thin(view.settings, holding))
         return found
@@ -182,14 +193,14 @@ def _spacing(view: View) -> list[Caution]:
 def _fenced(view: View) -> list[Caution]:
     """Keep-outs: whether somebody is too near now, and whether a stop begun a tick later would still keep him off."""
     settings, fleet, estimate = view.settings, view.fleet, view.estimate
-    fencing = view.pursuit.reference.fencing
+    fencing = view.pursuit.reference.fencing.beside(view.hazards)
     poses = estimate.states[:, None, POSE]
     if not (fencing.pieces or fencing.lines) or not np.isfinite(poses).all():
         return []
     spare, robot, name = fencing.least(fleet, poses, estimate.growth)
     if spare < -2.0 * settings.poses.noise_xy:
         return [rules.keep_out_breached(settings, fleet.names[robot], name, -spare)]
-    if not _troubled(view):
+    if not _troubled(view) and not view.hazards:
         return []
     now = view.snapshot.time
     later = stopping.choose(view.pursuit.schedule, view.at + view.period, fleet, estimate, now, fencing)

@@ -26,6 +26,15 @@ class PoseSample:
 
 
 @attrs.frozen
+class HazardPoint:
+    """Something to keep away from, in the fleet's frame, metres; ``heard``: seconds on the clock of the snapshots."""
+
+    x: float
+    y: float
+    heard: float
+
+
+@attrs.frozen
 class Command:
     """What one robot is asked for: speed (m/s, forward positive) and curvature (1/m, left positive)."""
 
@@ -47,6 +56,7 @@ class Snapshot:
         poses: the newest pose of each robot that has sent one; others are absent.
         not_ready: robots that say that they may not be driven now (emergency stop, manual mode).
         silent: robots that must say that they are ready and have fallen silent.
+        hazard: the newest point that is to be kept away from; None when there was none.
         other_planner: who else drives this fleet, as it calls itself; "" when nobody is heard.
     """
 
@@ -55,6 +65,7 @@ class Snapshot:
     not_ready: frozenset[str] = frozenset()
     silent: frozenset[str] = frozenset()
     other_planner: str = ""
+    hazard: Optional[HazardPoint] = None
 
 
 class State(str, Enum):
@@ -121,6 +132,7 @@ class Decision:
         solve_time: seconds spent optimising in this tick.
         completed: the last manoeuvre was carried through to its end.
         warnings: what is going wrong now.
+        outside: robots that are obstacles only: they leave, or stand and wait to join.
     """
 
     time: float
@@ -141,6 +153,7 @@ class Decision:
     solve_time: float = 0.0
     completed: bool = False
     warnings: tuple[Caution, ...] = ()
+    outside: tuple[str, ...] = ()
 
 
 @attrs.frozen

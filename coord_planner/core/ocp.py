@@ -213,9 +213,9 @@ def steep_prices(v: Named, p: Named) -> Matrix:
     return p["price_clearance"] * short + ca.sum1(ca.vec(p["price_end"] * (v["over"] + v["under"])))
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=8)
 def build(shape: Shape) -> Program:
-    """The program for problems of a shape. Takes a while for large fleets; the result is kept."""
+    """The program for problems of a shape. Takes a while for large fleets; the last few are kept (tens of MB each)."""
     variables, parameters, rows = variable_blocks(shape), parameter_blocks(shape), row_blocks(shape)
     x, v = variables.symbols()
     p_all, p = parameters.symbols()
@@ -339,7 +339,7 @@ def _soft_abs(value: Matrix) -> Matrix:
     return ca.sqrt(value**2 + _ROUNDING**2)
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=8)
 def _evaluated(shape: Shape) -> ca.Function:
     program = build(shape)
     return ca.Function("rows", [program.x, program.p], [program.g])

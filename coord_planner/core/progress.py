@@ -14,6 +14,10 @@ class GroupProgress:
         self.pace = 1.0  # seconds of the reference per second of the clock
         self.lag = np.zeros(robots)  # filtered, metres, >= 0 behind
 
+    def grow(self, robots: int) -> None:
+        """Room for so many more robots, that are not behind."""
+        self.lag = np.concatenate([self.lag, np.zeros(robots)])
+
     def update(
         self, elapsed: float, behind: np.ndarray, deficit: np.ndarray, settings: Progress, fastest_fall: float
     ) -> float:

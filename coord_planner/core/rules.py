@@ -17,6 +17,7 @@ class Response(str, Enum):
 
     GO_ON = "goes on"
     SLOW = "slows in step"
+    TURN_AWAY = "turns away together"
     STOP = "stops, in step or apart, and is held until a person resumes"
 
 
@@ -94,8 +95,15 @@ TABLE = (
     Row(
         "plan failed", Level.ERROR, Response.STOP, "no new plan, and neither the last nor one curvature can be driven"
     ),
+    Row("hazard known", Level.WARN, Response.GO_ON, "a hazard is known that nobody on the way comes near"),
+    Row("hazard seen", Level.WARN, Response.TURN_AWAY, "a hazard is seen, and turning away from it is armed"),
+    Row("hazard seen", Level.ERROR, Response.STOP, "a hazard is seen, or lies near the way, and nothing is armed"),
     Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
     Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
+    Row(
+        "robot not joined", Level.WARN, Response.GO_ON,
+        "a robot cannot join the running manoeuvre; it joins when the fleet is idle",
+    ),
     Row("change refused", Level.ERROR, Response.STOP, "the rest of the manoeuvre cannot be kept under new settings"),
 )
 
@@ -250,6 +258,20 @@ def silence_unsafe(settings: Settings, silence: Silence) -> Caution:
         "(shorter command time-outs, less speed or more spacing would help)"
     )
     return _caution(settings, "silence unsafe", " and ".join(silence.pair), Level.WARN, figures)
+
+
+def not_joined(settings: Settings, name: str, reason: str) -> Caution:
+    return _caution(settings, "robot not joined", name, Level.WARN, f"it joins when the fleet is idle: {reason}")
+
+
+def hazard_known(settings: Settings, point: Sequence[float]) -> Caution:
+    figures = f"a hazard at ({point[0]:.1f}, {point[1]:.1f}), {settings.hazard.clearance:g} m are kept from it"
+    return _caution(settings, "hazard known", "", Level.WARN, figures)
+
+
+def hazard_seen(settings: Settings, who: str, point: Sequence[float], distance: float, armed: bool) -> Caution:
+    figures = f"a hazard at ({point[0]:.1f}, {point[1]:.1f}), {distance:.1f} m away"
+    return _caution(settings, "hazard seen", who, Level.WARN if armed else Level.ERROR, figures)
 
 
 def change_refused(settings: Settings, reason: str) -> Caution:

@@ -133,6 +133,26 @@ class SiteRules:
 
 
 @attrs.frozen
+class Hazard:
+    """What is done about points that arrive on ``hazard``."""
+
+    sight: float = parameter(
+        8.0, "a robot sees a hazard that is no further away than this", "m", above=0.0, maximum=1e3, live=True
+    )
+    clearance: float = parameter(
+        1.0, "smallest allowed distance between a footprint and a hazard, seen or not", "m", minimum=0.0,
+        maximum=100.0, live=True,
+    )
+    expires: float = parameter(
+        20.0, "a hazard that is not heard of again is forgotten after so long", "s", above=0.0, maximum=3600.0,
+        live=True,
+    )
+    armed_for: float = parameter(
+        60.0, "turning away is armed for so long by a call of its service", "s", above=0.0, maximum=3600.0, live=True
+    )
+
+
+@attrs.frozen
 class Clearance:
     """What the planner keeps beyond the site's smallest clearance."""
 
@@ -206,6 +226,7 @@ class Settings:
     horizon: Horizon = Horizon()
     commands: Commands = Commands()
     site_rules: SiteRules = SiteRules()
+    hazard: Hazard = Hazard()
     clearance: Clearance = Clearance()
     poses: Poses = Poses()
     progress: Progress = Progress()

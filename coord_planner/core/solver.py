@@ -42,7 +42,7 @@ class Start:
     multipliers: Optional[tuple[np.ndarray, np.ndarray]] = None
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=8)
 def _solver(shape: Shape, kind: str, budget: float) -> ca.Function:
     program = ocp.build(shape)
     options: dict[str, Any] = dict(_OPTIONS[kind])

@@ -8,7 +8,6 @@ speeds fix beforehand. Ticks make the same comparisons as the reference; what li
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from typing import Optional
 
 import attrs
@@ -20,8 +19,6 @@ from .problem import Comparison
 _SHORT = 1e-6  # metres driven in an interval below which nothing is compared in it
 _LATER = 2  # horizons behind this one in which followers may come to where their leaders are in it
 
-Mean = Callable[[int, float, float], float]  # a robot's mean turning between metres that the fleet has driven
-
 
 @attrs.frozen(eq=False)
 class Steps:
@@ -30,15 +27,16 @@ class Steps:
     bounds: np.ndarray
     values: np.ndarray
 
-    def mean(self, begin: float, end: float) -> float:
-        """Mean over a stretch that is not empty."""
-        return float(shares(self.bounds, begin, end) @ self.values)
+    def integral(self, begin: np.ndarray, end: np.ndarray) -> np.ndarray:
+        """Over stretches of any shape."""
+        whole = np.concatenate([[0.0], np.cumsum(self.values * np.diff(self.bounds))])
+        return np.asarray(np.interp(end, self.bounds, whole) - np.interp(begin, self.bounds, whole))
 
 
-def shares(bounds: np.ndarray, begin: float, end: float) -> np.ndarray:
-    """Part of the stretch from begin to end that lies in each piece between bounds, shape (K,)."""
-    overlap = np.minimum(bounds[1:], end) - np.maximum(bounds[:-1], begin)
-    return np.asarray(np.maximum(overlap, 0.0) / max(end - begin, 1e-12))
+def shares(bounds: np.ndarray, begin: np.ndarray, end: np.ndarray) -> np.ndarray:
+    """Part of each stretch from begin to end, shape (R,), that lies in each piece between bounds, shape (R, K)."""
+    overlap = np.minimum(bounds[1:], end[:, None]) - np.maximum(bounds[:-1], begin[:, None])
+    return np.asarray(np.maximum(overlap, 0.0) / np.maximum(end - begin, 1e-12)[:, None])
 
 
 def comparison(task: Task, edges: np.ndarray, s: np.ndarray) -> Comparison:
@@ -46,10 +44,11 @@ def comparison(task: Task, edges: np.ndarray, s: np.ndarray) -> Comparison:
 
     What leaders did before its beginning is taken to be what the followers' ways do there.
     """
-    passed, before = task.passed(s), _ways(task)
-    rows = [row for e in range(len(edges)) for row in _within(e, edges[e], task, s, passed, before, None)]
-    width = max((len(np.trim_zeros(part)) for row in rows for part in (row.first, row.second)), default=1)
-    return _packed(rows, min(width, len(s) - 1))
+    passed, before, count = task.passed(s), _ways(task), len(s) - 1
+    rows = _joined([_within(e, edge, task, s, passed, before, None) for e, edge in enumerate(edges)], count)
+    used = [_used(part) for part in (rows.first, rows.second)]
+    width = min(max(1, *(int((last - first + 1).max(initial=1)) for first, last in used)), count)
+    return _narrowed(rows, [first for first, _ in used], width)
 
 
 def comparison_of_tick(
@@ -61,59 +60,46 @@ def comparison_of_tick(
         made_s: nodes of the reference, shape (K + 1,). made: its turnings, shape (N, K), 1/m.
     """
     passed, before, count = task.passed(s), _ways(task), len(s) - 1
-    known = [Steps(task.passed(made_s), values) for values in made]
+    bounds = task.passed(made_s)
+    known = [Steps(bounds, values) for values in made]
     rows = []
     for e, edge in enumerate(edges):
-        of_edge = _within(e, edge, task, s, passed, before, known)
-        of_edge += _later(e, edge, task, s, step, passed, before, known)[: _LATER * count]
-        rows += of_edge + [_nothing(e, count)] * ((1 + _LATER) * count - len(of_edge))
-    return _packed(rows, count)
-
-
-@attrs.frozen(eq=False)
-class _Row:
-    edge: int
-    first: np.ndarray
-    second: np.ndarray
-    known: float
-    seconds: float
+        now = _within(e, edge, task, s, passed, before, known)
+        rows.append(_padded(now, e, count, count))
+        rows.append(_padded(_later(e, edge, task, s, step, passed, before, known), e, _LATER * count, count))
+    return _narrowed(_joined(rows, count), [np.zeros(0, dtype=int)] * 2, count)
 
 
 def _within(
     e: int, edge: np.ndarray, task: Task, s: np.ndarray, passed: np.ndarray, before: list[Steps],
     known: Optional[list[Steps]],
-) -> list[_Row]:
+) -> Comparison:
     """A row for each interval in which the fleet drives: the follower there, its leader where it was before."""
     follower, leader, apart = _order(edge, task)
-    rows = []
-    for m in np.flatnonzero(np.diff(passed) > _SHORT):
-        begin, end = passed[m] - apart, passed[m + 1] - apart
-        of_leader = shares(passed, begin, end)
-        past = _past(begin, end, float(passed[0]), apart, before[follower], known[leader] if known else None)
-        own = np.zeros(len(s) - 1)
-        own[m] = 1.0
-        rows.append(_row(e, follower == edge[0], own, of_leader, -past, float(s[m + 1] - s[m])))
-    return rows
+    m = np.flatnonzero(np.diff(passed) > _SHORT)
+    begin, end = passed[m] - apart, passed[m + 1] - apart
+    past = _past(begin, end, float(passed[0]), apart, before[follower], known[leader] if known else None)
+    own = np.zeros((len(m), len(s) - 1))
+    own[np.arange(len(m)), m] = 1.0
+    return _rows(e, follower == edge[0], own, shares(passed, begin, end), -past, np.diff(s)[m])
 
 
 def _later(
     e: int, edge: np.ndarray, task: Task, s: np.ndarray, step: float, passed: np.ndarray, before: list[Steps],
     known: list[Steps],
-) -> list[_Row]:
+) -> Comparison:
     """A row for each interval after the horizon in which the follower comes to where the leader is in it."""
     follower, leader, apart = _order(edge, task)
-    moments = np.arange(s[-1], max(task.duration, s[-1]) + step / 2, step)
-    there, rows = task.passed(moments), []
-    for i in np.flatnonzero(np.diff(there) > _SHORT):
-        begin, end = there[i] - apart, there[i + 1] - apart
-        of_leader = shares(passed, begin, end)
-        if not of_leader.any():
-            continue
-        past = _past(begin, end, float(passed[0]), apart, before[follower], known[leader])
-        past += known[leader].mean(max(begin, passed[-1]), end) * _part(begin, end, float(passed[-1]), np.inf)
-        own = known[follower].mean(there[i], there[i + 1])
-        rows.append(_row(e, follower == edge[0], np.zeros(len(s) - 1), of_leader, own - past, step))
-    return rows
+    there = task.passed(np.arange(s[-1], max(task.duration, s[-1]) + step / 2, step))
+    began, ended = there[:-1], there[1:]
+    inside = (ended - began > _SHORT) & (ended - apart > passed[0]) & (began - apart < passed[-1])
+    began, ended = began[inside], ended[inside]
+    begin, end = began - apart, ended - apart
+    past = _past(begin, end, float(passed[0]), apart, before[follower], known[leader])
+    past = past + known[leader].integral(np.maximum(begin, passed[-1]), np.maximum(end, passed[-1])) / (end - begin)
+    own = known[follower].integral(began, ended) / (ended - began)
+    nothing = np.zeros((len(began), len(s) - 1))
+    return _rows(e, follower == edge[0], nothing, shares(passed, begin, end), own - past, np.full(len(began), step))
 
 
 def _order(edge: np.ndarray, task: Task) -> tuple[int, int, float]:
@@ -124,27 +110,24 @@ def _order(edge: np.ndarray, task: Task) -> tuple[int, int, float]:
     return (k, j, apart) if apart >= 0 else (j, k, -apart)
 
 
-def _row(e: int, forward: bool, own: np.ndarray, other: np.ndarray, known: float, seconds: float) -> _Row:
-    return _Row(e, own, other, known, seconds) if forward else _Row(e, other, own, -known, seconds)
-
-
-def _nothing(e: int, count: int) -> _Row:
-    return _Row(e, np.zeros(count), np.zeros(count), 0.0, 0.0)
+def _rows(
+    e: int, forward: bool, own: np.ndarray, other: np.ndarray, known: np.ndarray, seconds: np.ndarray
+) -> Comparison:
+    """Rows over all intervals; ``own`` of the follower, ``other`` of its leader, in the order of the edge."""
+    nowhere = np.zeros(len(own), dtype=int)
+    first, second, sign = (own, other, 1.0) if forward else (other, own, -1.0)
+    return Comparison(nowhere + e, nowhere, nowhere, first, second, sign * known, seconds)
 
 
 def _past(
-    begin: float, end: float, horizon: float, apart: float, follower: Steps, leader: Optional[Steps]
-) -> float:
+    begin: np.ndarray, end: np.ndarray, horizon: float, apart: float, follower: Steps, leader: Optional[Steps]
+) -> np.ndarray:
     """The part of the leader's mean turning that lies before the horizon, weighted with its share."""
     planned = horizon if leader is None else float(leader.bounds[0])
-    total = follower.mean(begin + apart, min(end, planned) + apart) * _part(begin, end, -np.inf, planned)
+    total = follower.integral(np.minimum(begin, planned) + apart, np.minimum(end, planned) + apart)
     if leader is not None:
-        total += leader.mean(max(begin, planned), min(end, horizon)) * _part(begin, end, planned, horizon)
-    return total
-
-
-def _part(begin: float, end: float, lowest: float, highest: float) -> float:
-    return max(min(end, highest) - max(begin, lowest), 0.0) / (end - begin)
+        total = total + leader.integral(np.clip(begin, planned, horizon), np.clip(end, planned, horizon))
+    return np.asarray(total / (end - begin))
 
 
 def _ways(task: Task) -> list[Steps]:
@@ -156,18 +139,35 @@ def _ways(task: Task) -> list[Steps]:
     return found
 
 
-def _packed(rows: list[_Row], width: int) -> Comparison:
-    """Rows with as many places of each as are needed."""
-    at, parts = [], []
-    for row in rows:
-        for part in (row.first, row.second):
-            used = np.flatnonzero(part)
-            begin = min(int(used[0]) if len(used) else 0, len(part) - width)
-            at.append(begin)
-            parts.append(part[begin : begin + width])
-    placed = np.array(at, dtype=int).reshape(-1, 2)
-    weighted = np.array(parts).reshape(-1, 2, width)
-    return Comparison(
-        np.array([row.edge for row in rows], dtype=int), placed[:, 0], placed[:, 1], weighted[:, 0], weighted[:, 1],
-        np.array([row.known for row in rows]), np.array([row.seconds for row in rows]),
-    )
+def _joined(parts: list[Comparison], count: int) -> Comparison:
+    if not parts:
+        return _rows(0, True, np.zeros((0, count)), np.zeros((0, count)), np.zeros(0), np.zeros(0))
+    names = [field.name for field in attrs.fields(Comparison)]
+    return Comparison(*(np.concatenate([getattr(part, name) for part in parts]) for name in names))
+
+
+def _padded(rows: Comparison, e: int, wanted: int, count: int) -> Comparison:
+    """As many rows as wanted, those that are missing without weight."""
+    missing = max(wanted - len(rows.edges), 0)
+    nothing = np.zeros((missing, count))
+    filled = _joined([rows, _rows(e, True, nothing, nothing, np.zeros(missing), np.zeros(missing))], count)
+    return Comparison(*(getattr(filled, field.name)[:wanted] for field in attrs.fields(Comparison)))
+
+
+def _used(weights: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """First and last interval with a weight in each row, shape (R,) each; 0 where there is none."""
+    some = weights != 0.0
+    last = weights.shape[1] - 1 - np.argmax(some[:, ::-1], axis=1)
+    return np.argmax(some, axis=1), np.where(some.any(axis=1), last, 0)
+
+
+def _narrowed(rows: Comparison, begins: list[np.ndarray], width: int) -> Comparison:
+    """The same rows with weights for ``width`` intervals only, from where they begin."""
+    count = rows.first.shape[1]
+    if width == count:
+        return rows
+    steps = np.arange(width)
+    at = [np.minimum(begin, count - width) for begin in begins]
+    parts = [np.take_along_axis(part, begin[:, None] + steps, axis=1)
+             for part, begin in zip((rows.first, rows.second), at)]
+    return attrs.evolve(rows, first_at=at[0], second_at=at[1], first=parts[0], second=parts[1])

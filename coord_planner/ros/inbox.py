@@ -6,14 +6,14 @@ import math
 from collections.abc import Callable
 from typing import Any, Optional
 
-from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped
+from geometry_msgs.msg import PointStamped, PoseStamped, PoseWithCovarianceStamped
 from nav_msgs.msg import Odometry
 from rclpy.node import Node
 from std_msgs.msg import Bool, Empty, String
 
 from ..config import Configuration, Connection
 from ..core.graph import NeighbourGraph
-from ..core.messages import PoseSample
+from ..core.messages import HazardPoint, PoseSample
 from ..errors import SettingsError
 from . import messages, qos
 from .readiness import Readiness
@@ -46,6 +46,7 @@ class Inbox:
         self.tallies = messages.Tallies()
         self._poses: dict[str, PoseSample] = {}
         self._stamps: dict[str, float] = {}  # of the poses, as they came
+        self.hazard: Optional[HazardPoint] = None  # the newest
         self._neighbours_stamp = -math.inf
         self.readiness = Readiness({
             name: connection.ready_timeout
@@ -54,6 +55,7 @@ class Inbox:
         self._transforms = Transforms(node, configuration().frame) if _wants_transforms(configuration()) else None
         self._subscriptions = [
             node.create_subscription(String, "neighbours", self._on_neighbours, qos.NEWEST_LATCHED),
+            node.create_subscription(PointStamped, "hazard", self._on_hazard, qos.RELIABLE),
             node.create_subscription(Empty, "halt", lambda _message: halt(), qos.RELIABLE),
             node.create_subscription(String, "~/request", self._on_request, qos.RELIABLE),
         ]
@@ -85,7 +87,7 @@ class Inbox:
 
     def forget(self) -> None:
         """Drop all poses and the stamp of the neighbours: time begins anew."""
-        self._poses, self._stamps, self._neighbours_stamp = {}, {}, -math.inf
+        self._poses, self._stamps, self._neighbours_stamp, self.hazard = {}, {}, -math.inf, None
         self.tallies.begin_anew()
 
     def clock_jumped(self, jump: float) -> None:
@@ -134,6 +136,18 @@ class Inbox:
         self._neighbours_stamp = stamp
         self.tallies.use("neighbours")
         self._neighbours(graph)
+
+    def _on_hazard(self, message: PointStamped) -> None:
+        configuration = self._configuration()
+        try:
+            x, y = messages.hazard_point(
+                message, frame=configuration.frame, now=self._now(), expires=configuration.settings.hazard.expires
+            )
+        except messages.IgnoredError as error:
+            self.ignore("hazard", error)
+            return
+        self.tallies.use("hazard")
+        self.hazard = HazardPoint(x, y, self._time())
 
     def _on_request(self, message: String) -> None:
         try:

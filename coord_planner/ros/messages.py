@@ -179,6 +179,28 @@ def pose_sample(message: Any, source: str, *, frame: str, now: float, poses: Pos
     return PoseSample(stamp, x, y, heading(pose.orientation))
 
 
+def hazard_point(message: Any, *, frame: str, now: float, expires: float) -> tuple[float, float]:
+    """The point of a PointStamped on ``hazard``.
+
+    Args:
+        frame: the fleet's frame. now: seconds on the clock of the stamps. expires: age from which it is not used.
+
+    Raises:
+        IgnoredError: wrong frame, not a number, or too old.
+    """
+    given = message.header.frame_id
+    if given != frame:
+        raise IgnoredError("wrong frame", f"the hazard is in {_short(given)}, the fleet's frame is {frame!r}; "
+                                          f"see that it is sent in {frame!r}")
+    x, y = float(message.point.x), float(message.point.y)
+    if not (math.isfinite(x) and math.isfinite(y)):
+        raise IgnoredError("not a number", f"the point is ({x:g}, {y:g}); mend what sends it")
+    age = now - seconds(message.header.stamp)
+    if age > expires:
+        raise IgnoredError("too old", f"stamped {age:.1f} s ago, hazard.expires is {expires:g} s; {_CLOCK_REMEDY}")
+    return x, y
+
+
 def checked_stamp(stamp: float, now: float, poses: Poses) -> float:
     """The stamp itself, if a pose with it may be used now.
 

@@ -133,8 +133,9 @@ class Outbox:
                 if self._paths[name].get_subscription_count():
                     self._paths[name].publish(outgoing.path_message(self._frame, decision.plan_times, poses))
         if self._markers.get_subscription_count():
+            fleet = Fleet(tuple(configuration.fleet.robots[configuration.fleet.index(name)] for name in decision.names))
             self._markers.publish(outgoing.fleet_markers(
-                self._frame, configuration.driven, graph.relative_to(decision.names), decision,
+                self._frame, fleet, graph.relative_to(decision.names), decision,
                 configuration.settings.site_rules,
             ))
 

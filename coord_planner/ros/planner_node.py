@@ -251,7 +251,7 @@ class PlannerNode(LifecycleNode):
         silence = now - self._sent_at
         late = silence > 2.0 / self.configuration.settings.commands.rate
         if late and self._coordinator.state in (State.MOVING, State.STOPPING):
-            stood = self.outbox.stand_by_themselves(silence, self.configuration.driven)
+            stood = self.outbox.stand_by_themselves(silence, self.configuration.fleet)
             if stood:
                 self._begin_anew(f"the planner was held up for {silence:.1f} s; {', '.join(stood)} stopped alone")
 
@@ -332,7 +332,8 @@ class PlannerNode(LifecycleNode):
         if now <= 0.0:
             return None
         readiness = self.inbox.readiness
-        return Snapshot(now, self.inbox.poses(), readiness.not_ready(), readiness.silent(), self._others.newest)
+        return Snapshot(now, self.inbox.poses(), readiness.not_ready(), readiness.silent(), self._others.newest,
+                        self.inbox.hazard)
 
     def halt(self, reason: str) -> Answer:
         """Stop the fleet."""
@@ -349,7 +350,7 @@ class PlannerNode(LifecycleNode):
     def _cannot_take(self, configuration: config.Configuration) -> str:
         if not self._configured or configuration.enabled == self.configuration.enabled:
             return ""
-        return self._coordinator.cannot_change_members()
+        return self._coordinator.cannot_join(configuration.driven, self.graph)
 
     def _on_parameters(self, configuration: config.Configuration, keys: tuple[str, ...]) -> None:
         words = ", ".join(f"{key} = {self.get_parameter(key).value}" for key in keys)

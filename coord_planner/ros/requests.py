@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import functools
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
 
 from rclpy.callback_groups import ReentrantCallbackGroup
 from rclpy.task import Future
 from std_srvs.srv import Trigger
 
+from ..core.manoeuvre import Manoeuvre, TurnAway
 from ..core.messages import Answer, Snapshot
 from . import messages
 
@@ -22,7 +23,7 @@ Answered = Callable[[Answer], None]
 class Requests:
     """Services of a planner, and whoever still waits for an answer."""
 
-    def __init__(self, node: PlannerNode, manoeuvres: Iterable[str]) -> None:
+    def __init__(self, node: PlannerNode, manoeuvres: Mapping[str, Manoeuvre]) -> None:
         self._node = node
         self._waiting: set[Future] = set()
         group = ReentrantCallbackGroup()  # a begin that waits for its answer must not hold up anything else
@@ -30,6 +31,10 @@ class Requests:
             node.create_service(Trigger, f"~/begin/{name}", functools.partial(self._on_begin, name),
                                 callback_group=group)
             for name in manoeuvres
+        ]
+        self._services += [
+            node.create_service(Trigger, f"~/arm/{name}", functools.partial(self._on_arm, name))
+            for name, manoeuvre in manoeuvres.items() if isinstance(manoeuvre, TurnAway)
         ]
         self._services.append(node.create_service(Trigger, "~/resume", self._on_resume, callback_group=group))
         self._services.append(node.create_service(Trigger, "~/halt", self._on_halt))
@@ -62,6 +67,11 @@ class Requests:
             self._node.coordinator.resume(snapshot, answered)
 
         return _filled(response, await self._ask(ask))
+
+    def _on_arm(self, name: str, _request: Any, response: Trigger.Response) -> Trigger.Response:
+        refusal = self._node.refusal()
+        answer = Answer(False, refusal) if refusal else self._node.coordinator.arm(name, self._node.time())
+        return _filled(response, self._node.reporter.note(answer))
 
     def _on_halt(self, _request: Any, response: Trigger.Response) -> Trigger.Response:
         return _filled(response, self._node.reporter.note(self._node.halt("told to by the halt service")))

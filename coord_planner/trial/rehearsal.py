@@ -6,6 +6,7 @@ import time as clock
 from collections.abc import Callable, Sequence
 from typing import Optional
 
+import attrs
 import numpy as np
 
 from ..config import Configuration
@@ -13,10 +14,12 @@ from ..config.failures import kept
 from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
 from ..core.fence import Line
-from ..core.messages import Answer, Caution, Decision, PoseSample, Snapshot, State
+from ..core.fleet import Fleet
+from ..core.messages import Answer, Caution, Decision, HazardPoint, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
 from .run import Run, RunFrame
+from .sighting import Sighting, turned_away
 from .vehicle import SimulatedFleet
 
 _LONGEST = 900.0  # seconds of simulated time
@@ -51,8 +54,11 @@ class _Log:
         self.speeds.append(fleet.speeds())
         self.curvatures.append(fleet.curvatures())
 
-    def decision(self, decision: Decision, tick_ms: float, gap: float) -> None:
-        """Cautions that pause for less than ``gap`` seconds count as one."""
+    def decision(self, decision: Decision, tick_ms: float, gap: float, seen: SimulatedFleet) -> None:
+        """Cautions that pause for less than ``gap`` seconds count as one.
+
+        In the plans that are kept, robots that are no part of the decision stand where they are.
+        """
         self.tick_ms.append(tick_ms)
         if decision.state is not self._state:
             self._state = decision.state
@@ -66,8 +72,11 @@ class _Log:
                 spans.append((decision.time, decision.time, caution))
         if len(self.tick_ms) % _FRAME_EVERY == 0 and decision.plan_poses.shape[1]:
             picked = np.unique(np.linspace(0, decision.plan_poses.shape[1] - 1, _FRAME_POINTS).astype(int))
-            self.frames.append(RunFrame(decision.time, decision.progress_rate, decision.plan_poses[:, picked],
-                                        decision.plan_times[picked]))
+            poses = np.repeat(seen.poses()[:, None], len(picked), axis=1)
+            poses[[seen.names.index(name) for name in decision.names]] = decision.plan_poses[:, picked]
+            self.frames.append(
+                RunFrame(decision.time, decision.progress_rate, poses, decision.plan_times[picked])
+            )
 
     def cautions(self) -> tuple[tuple[float, float, Caution], ...]:
         spans = [span for group in self._cautions.values() for span in group]
@@ -76,13 +85,14 @@ class _Log:
 
 def rehearse(
     configuration: Configuration, manoeuvre: str, *, seed: Optional[int] = None, faults: Sequence[Fault] = (),
-    watch: Optional[Watch] = None, overrides: Optional[dict[str, float]] = None,
+    watch: Optional[Watch] = None, overrides: Optional[dict[str, float]] = None, seen: Optional[Sighting] = None,
     progress: Callable[[float], None] = lambda _part: None,
 ) -> Run:
     """Run one manoeuvre from the configured starts to its end, its refusal or a stop that nobody resumes.
 
     Args:
         seed: of the noise; the file's own when left out.
+        seen: a hazard that turns up on the way.
         progress: called with the part of the manoeuvre that is done.
 
     Raises:
@@ -90,7 +100,7 @@ def rehearse(
         SettingsError: a fault strikes a robot or an edge that is not there.
     """
     began_at = clock.perf_counter()
-    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults)
+    loop = _Loop(configuration, configuration.simulation.seed if seed is None else seed, faults, seen)
     loop.begin(manoeuvre, overrides)
     while loop.now < _LONGEST and not loop.over:
         if loop.tick_is_due:
@@ -105,9 +115,16 @@ def rehearse(
 class _Loop:
     """Planner and simulated fleet on one clock that stands still while anybody computes."""
 
-    def __init__(self, configuration: Configuration, seed: int, faults: Sequence[Fault]) -> None:
-        self._configuration, self._seed = configuration, seed
-        settings, self._fleet = configuration.settings, configuration.driven
+    def __init__(
+        self, configuration: Configuration, seed: int, faults: Sequence[Fault], seen: Optional[Sighting] = None
+    ) -> None:
+        self._configuration, self._seed, self._sighting = configuration, seed, seen
+        settings, driven = configuration.settings, configuration.driven
+        # Who is not enabled stands by: it may be wanted on the way.
+        self._fleet = Fleet(tuple(
+            robot for robot in configuration.fleet.robots
+            if robot.name in configuration.starts or robot.name in configuration.enabled
+        ))
         rng = np.random.default_rng(seed)
         timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
         self._simulated = SimulatedFleet(self._fleet, configuration.starts, configuration.simulation, timeouts, rng)
@@ -118,7 +135,7 @@ class _Loop:
             configuration.failures, TickSolve(clock.perf_counter), settings.site_rules.min_clearance
         )
         self.coordinator = Coordinator(
-            self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
+            driven, self._graph.relative_to(driven.names), settings, configuration.manoeuvres, _BUDGET,
             self._faults.solve(solve, settings.horizon.budget), refused,
         )
         self._log = _Log()
@@ -127,6 +144,9 @@ class _Loop:
         self._next_tick = self._next_pose = self.now = 0.0
         self._moving_since: Optional[float] = None
         self._measured: dict[str, PoseSample] = {}
+        self._told = np.zeros((len(self._fleet), 2))  # who gets no command keeps the last
+        self._ends = np.full((len(self._fleet), 3), np.nan)
+        self._carried = set(driven.names)
         self._strip: tuple[Line, ...] = ()
         self.over = False
 
@@ -154,13 +174,27 @@ class _Loop:
         """Look at the robots and decide."""
         self._look()
         began = clock.perf_counter()
-        decision = self.coordinator.step(Snapshot(self.now, self._measured, self._faults.not_ready()))
-        self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period)
+        decision = self.coordinator.step(Snapshot(
+            self.now, self._measured, self._faults.not_ready(), hazard=self._seen_now()
+        ))
+        self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period, self._simulated)
+        self._carried |= set(decision.names)
+        if decision.manoeuvre:
+            self._ends[:] = np.nan
+            for name, end in zip(decision.names, self.coordinator.ends):
+                self._ends[self._fleet.index(name)] = end
         if self._moving_since is None and decision.state is State.MOVING:
             self._moving_since = self.now
         self._next_tick += self._tick_period
         self.over = decision.state in (State.IDLE, State.HELD)
         return decision
+
+    def _seen_now(self) -> Optional[HazardPoint]:
+        if self._sighting is None or self._moving_since is None:
+            return None
+        if self._sighting.arm:
+            self.coordinator.arm(self._sighting.arm, self.now)
+        return self._sighting.point(self.now - self._moving_since, self.now)
 
     def advance(self) -> None:
         """Send commands and let the machines move until the next sending."""
@@ -168,7 +202,9 @@ class _Loop:
         commands = self.coordinator.commands(self.now)
         if commands is not None:
             self._log.command_times.append(self.now)
-            self._log.commanded.append(np.array([[c.speed, c.curvature] for c in commands.values()]))
+            for name, command in commands.items():
+                self._told[self._fleet.index(name)] = command.speed, command.curvature
+            self._log.commanded.append(self._told.copy())
         self._faults.send(self.now, commands or {}, self._simulated)
         if self._moving_since is not None:
             self._strike(self.now - self._moving_since)
@@ -192,19 +228,24 @@ class _Loop:
     def run(self, manoeuvre: str, wall_time: float) -> Run:
         """What happened."""
         configuration, log, decision = self._configuration, self._log, self.coordinator.decision
+        rows = [k for k, name in enumerate(self._fleet.names) if name in self._carried]
+        frames = tuple(attrs.evolve(frame, poses=frame.poses[rows]) for frame in log.frames)
+        away = turned_away(self.coordinator, self._sighting, self._moving_since or 0.0) if self._sighting else {}
         state = State.ENDED if decision.completed else decision.state
         return Run(
-            fleet=self._fleet, edges=self._graph.edges, manoeuvre=manoeuvre, times=np.array(log.times),
-            poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
-            curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
-            commanded=np.stack(log.commanded, axis=1), end_poses=self.coordinator.ends,
+            fleet=Fleet(tuple(self._fleet.robots[k] for k in rows)),
+            edges=self._graph.relative_to(configuration.driven.names).edges, manoeuvre=manoeuvre,
+            times=np.array(log.times), poses=np.stack(log.poses, axis=1)[rows],
+            speeds=np.stack(log.speeds, axis=1)[rows], curvatures=np.stack(log.curvatures, axis=1)[rows],
+            command_times=np.array(log.command_times), commanded=np.stack(log.commanded, axis=1)[rows],
+            end_poses=self._ends[rows],
             min_clearance=configuration.settings.site_rules.min_clearance, state=state.value,
             completed=decision.completed, began=self._moving_since or 0.0, ended=_ended(log), cautions=log.cautions(),
-            tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
+            tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=frames, events=tuple(log.events),
             facts={
                 "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
-                "seed": self._seed,
+                "seed": self._seed, **({"turned_away": away} if away else {}),
             },
             site_rules=configuration.settings.site_rules, strip=self._strip,
         )

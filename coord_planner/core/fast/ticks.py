@@ -8,8 +8,9 @@ import attrs
 
 from .. import solver
 from ..plan import Plan
-from ..problem import Bounds, Fences, Problem, Watch
+from ..problem import Bounds, Comparison, Fences, Problem, Watch
 from ..solver import Start
+from .groups import Group, groups, part_of, start_of, whole
 from .solver import TickSolver
 
 # What the fast solver has been taught. A field that it does not know might be a promise that it would not keep.
@@ -21,14 +22,15 @@ _KNOWN = {
     Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
     Watch: {"pairs", "normals", "gaps"},
     Fences: {"robots", "normals", "reaches"},
+    Comparison: {"edges", "first_at", "second_at", "first", "second", "known", "seconds"},
 }
 
 
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    return problem.compared is None and all(
+    return all(
         {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
-        for part in (problem, problem.bounds, problem.watch, problem.fences)
+        for part in (problem, problem.bounds, problem.watch, problem.fences, problem.compared) if part is not None
     )
 
 
@@ -51,6 +53,22 @@ class TickSolve:
         Raises:
             SolveError: there is no plan at all.
         """
-        if knows(problem):
+        if not knows(problem):
+            return solver.solve(problem, start, warm, budget)
+        apart = groups(problem) if problem.compared is None else []
+        if len(apart) <= 1:
             return self._fast.solve(problem, start, budget, self._clock)
-        return solver.solve(problem, start, warm, budget)
+        return self._each(problem, start, apart, budget)
+
+    def _each(self, problem: Problem, start: Start, apart: list[Group], budget: float) -> Plan:
+        """Every group by itself: none takes more steps for another's sake. What one leaves of its time others have."""
+        end, left = self._clock() + budget, len(problem.fleet)
+        solved = []
+        for group in apart:
+            part, share = part_of(problem, group), len(group.robots) / left
+            left -= len(group.robots)
+            plan = self._fast.solve(
+                part, start_of(problem, start, group, part), share * (end - self._clock()), self._clock
+            )
+            solved.append((group, part, plan))
+        return whole(problem, solved)

@@ -17,6 +17,7 @@ from .kinds import (
     Sequence,
     Straight,
     ToEnds,
+    TurnAway,
     Wheel,
 )
 from .sequence import parts_of
@@ -26,5 +27,5 @@ from .working_out import go_on, work_out
 
 __all__ = [
     "KINDS", "STAND_LAGS", "End", "EqualRadius", "Form", "InSuccession", "Manoeuvre", "Pivot", "RowEnd", "Sequence",
-    "Straight", "Task", "ToEnds", "Wheel", "eased_turn", "go_on", "lay_out", "parts_of", "work_out",
+    "Straight", "Task", "ToEnds", "TurnAway", "Wheel", "eased_turn", "go_on", "lay_out", "parts_of", "work_out",
 ]

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
+from typing import Optional
 
 import numpy as np
 
 from ...errors import RefusedError
 from .. import outline
 from ..caps import caps
-from ..fence import fencing
+from ..fence import Fencing, fencing, hazards
 from ..fleet import Fleet, weakest
 from ..settings import Settings
 from ..watch import margin
@@ -56,6 +57,18 @@ def check_outside(
     if spare < kept - 1e-6:
         beyond = f", the planner's margin of {kept:.2f} m included" if kept else ""
         raise RefusedError(f"{some.names[robot]} {verb} {kept - spare:.2f} m too near to {name}{beyond}", remedy)
+
+
+def check_hazard(
+    fleet: Fleet, settings: Settings, poses: np.ndarray, hazard: Optional[tuple[float, float]]
+) -> None:
+    """Nobody is too near to a point that is known as a hazard."""
+    spare, robot, _ = Fencing(hazards(settings, hazard)).least(fleet, poses[:, None])
+    if hazard is not None and spare < -1e-6:
+        raise RefusedError(
+            f"{fleet.names[robot]} is {-spare:.2f} m too near to the hazard at ({hazard[0]:.1f}, {hazard[1]:.1f})",
+            "see to it and drive the robot away by hand, or wait until the hazard has expired",
+        )
 
 
 def check_end_speed(fleet: Fleet, settings: Settings, ends: np.ndarray, end_speed: float) -> None:

@@ -311,10 +311,35 @@ class End:
     y: Optional[float] = None
 
 
-Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd, Form, Straight, Sequence]
+@attrs.frozen
+class TurnAway:
+    """Who sees a hazard takes a heading away from it, the others copy; begun by a hazard while it is armed."""
+
+    angle_deg: float = parameter(
+        60.0, "angle by which those who see it turn, to the side away from it", "deg", above=0.0, maximum=180.0
+    )
+    after: float = parameter(
+        10.0, "how far they drive straight on after the turn, in which the others take their heading", "m",
+        minimum=0.0, maximum=1000.0,
+    )
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+    coupling: Optional[float] = parameter(
+        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+    alignment: Optional[float] = parameter(
+        20.0, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+    def in_words(self) -> str:
+        """What is asked, for people."""
+        return f"{self.angle_deg:g} degrees away from a hazard for who sees it, then {self.after:g} m straight on"
+
+
+Manoeuvre = Union[EqualRadius, ToEnds, Wheel, InSuccession, RowEnd, Form, Straight, Sequence, TurnAway]
 KINDS: dict[str, type] = {
     "equal_radius": EqualRadius, "to_ends": ToEnds, "wheel": Wheel, "in_succession": InSuccession, "row_end": RowEnd,
-    "form": Form, "straight": Straight, "sequence": Sequence,
+    "form": Form, "straight": Straight, "sequence": Sequence, "turn_away": TurnAway,
 }
 
 

@@ -21,6 +21,7 @@ class Scene:
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
         bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
+        hazard: a point that everybody keeps away from; None when none is known.
     """
 
     fleet: Fleet
@@ -29,6 +30,7 @@ class Scene:
     speed_now: float
     neighbours: np.ndarray
     bends: np.ndarray = attrs.Factory(lambda self: np.zeros(len(self.poses)), takes_self=True)
+    hazard: Optional[tuple[float, float]] = None
 
 
 @attrs.frozen(eq=False)

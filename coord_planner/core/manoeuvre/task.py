@@ -16,6 +16,7 @@ from ..settings import Settings
 from .driving import COMFORT as COMFORT
 from .driving import arriving_together, check_standing, drive_along
 
+_MARKS = 60  # at which what is left of a manoeuvre is passed together
 _SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
 _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it was told, to a hundredth
 _LEAST_PART = 0.1  # of the fleet's speed, by which deviations of a robot that hardly drives are priced
@@ -47,7 +48,9 @@ class Task:
         waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
             (N,), m/s; None where all set out at once and arrive together.
         alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
+        hazard: a point that everybody keeps away from; None when there is none.
         otherwise: another way to do the same, to be tried when this one cannot be kept.
+        stands: positions of robots that the manoeuvre is not for: they come to a stand and have no end.
     """
 
     name: str
@@ -70,12 +73,14 @@ class Task:
     waits: Optional[np.ndarray] = None
     speeds: Optional[np.ndarray] = None
     alike: bool = True
+    hazard: Optional[tuple[float, float]] = None
     otherwise: Optional[Task] = None
 
     @property
     def reversing(self) -> np.ndarray:
         """Who drives backward somewhere on its way, shape (N,)."""
         return np.array([bool((drive.gears < 0).any()) for drive in self.drives])
+    stands: tuple[int, ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down.
@@ -121,6 +126,22 @@ class Task:
             (start, *(start + late).tolist()), (float(self.profile_time(np.array(start))), *passed[left].tolist())
         )
         return attrs.evolve(self, arrival=arrival, duration=arrival + self.duration - self.arrival, pacing=pacing)
+
+    def marks_left(self, start: float) -> Optional[np.ndarray]:
+        """Parts of what is left of each way at second ``start`` that are passed together, shape (N, K), for lay_out.
+
+        None where each robot drives at its own times.
+        """
+        if self.waits is not None or self.reversing.any():
+            return None
+        moments = np.linspace(float(self.profile_time(np.array(start))), self.driven, _MARKS)
+        passed = np.stack([drive.distance(moments) for drive in self.drives])
+        passed = passed - passed[:, :1]
+        furthest = passed[np.argmax(passed[:, -1])]
+        if furthest[-1] < _SHORTEST_WAY:
+            return None
+        whole = passed[:, -1:]
+        return np.where(whole > _SHORTEST_WAY, passed / np.maximum(whole, 1e-9), furthest / furthest[-1])
 
     @property
     def driven(self) -> float:

@@ -12,11 +12,11 @@ from ...errors import RefusedError
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
-from . import equal_radius, form, in_succession, row_end, straight, to_ends, wheel
-from .checks import check_end_speed, check_ends, check_speed, check_start
+from . import equal_radius, form, in_succession, row_end, straight, to_ends, turn_away, wheel
+from .checks import check_end_speed, check_ends, check_hazard, check_speed, check_start
 from .detour import choices
 from .driving import drive_along
-from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, Sequence, Straight, ToEnds, Wheel
+from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, Sequence, Straight, ToEnds, TurnAway, Wheel
 from .pacing import paced
 from .scene import Laid, Scene
 from .sequence import parts_of
@@ -25,13 +25,13 @@ from .ways import preceded, straightened, ways_to_ends
 
 _LAY: dict[type, Callable[[str, Any, Scene], Laid]] = {
     EqualRadius: equal_radius.lay, ToEnds: to_ends.lay, Wheel: wheel.lay, InSuccession: in_succession.lay,
-    RowEnd: row_end.lay, Form: form.lay, Straight: straight.lay,
+    RowEnd: row_end.lay, Form: form.lay, Straight: straight.lay, TurnAway: turn_away.lay,
 }
 
 
 def work_out(
     name: str, manoeuvre: Manoeuvre, fleet: Fleet, settings: Settings, poses: np.ndarray, speed_now: float,
-    neighbours: np.ndarray, bends: Optional[np.ndarray] = None,
+    neighbours: np.ndarray, bends: Optional[np.ndarray] = None, hazard: Optional[tuple[float, float]] = None,
 ) -> Task:
     """The task that a manoeuvre means from the poses at hand.
 
@@ -39,6 +39,7 @@ def work_out(
         poses: shape (N, 3), headings unwrapped. speed_now: of the fleet, m/s.
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
         bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
+        hazard: a point that everybody keeps away from; None when none is known.
 
     Returns:
         of a sequence the task of its first part; the others are worked out as well, from where those before end.
@@ -48,13 +49,15 @@ def work_out(
     """
     if isinstance(manoeuvre, Sequence):
         return _first_of(name, manoeuvre, Scene(
-            fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends
+            fleet, settings, poses, speed_now, neighbours, np.zeros(len(fleet)) if bends is None else bends,
+            hazard,
         ))
     if not isinstance(manoeuvre, Wheel):  # which works out a speed itself
         check_speed(manoeuvre.speed, manoeuvre.end_speed, fleet, settings)
     check_start(fleet, settings, poses)
+    check_hazard(fleet, settings, poses, hazard)
     bent = np.zeros(len(fleet)) if bends is None else bends
-    scene = Scene(fleet, settings, poses, speed_now, neighbours, bent)
+    scene = Scene(fleet, settings, poses, speed_now, neighbours, bent, hazard)
     laid = _lay(name, manoeuvre, scene)
     speed = manoeuvre.speed if laid.speed is None else laid.speed
     check_ends(fleet, settings, laid.ends, speed)
@@ -78,7 +81,8 @@ def _first_of(name: str, sequence: Sequence, scene: Scene) -> Task:
     for i, (part, wanted) in enumerate(parts):
         try:
             task = work_out(
-                part, wanted, scene.fleet, scene.settings, scene.poses, scene.speed_now, scene.neighbours, scene.bends
+                part, wanted, scene.fleet, scene.settings, scene.poses, scene.speed_now, scene.neighbours, scene.bends,
+                scene.hazard,
             )
         except RefusedError as refused:
             raise RefusedError(f"{name}, part {i + 1} of {len(parts)}: {refused.reason}", refused.remedy) from refused
@@ -98,7 +102,8 @@ def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], 
     found: Optional[Task] = None
     all_choices = [choice for each in (laid, *laid.otherwise) for choice in choices(each, scene, speed)]
     for choice in reversed(all_choices):
-        found = attrs.evolve(paced(task(choice), scene.fleet, scene.settings), otherwise=found)
+        planned = paced(task(choice), scene.fleet, scene.settings)
+        found = attrs.evolve(planned, otherwise=found, hazard=scene.hazard)
     assert found is not None
     return found
 
@@ -113,7 +118,7 @@ def _lay(name: str, manoeuvre: Manoeuvre, scene: Scene) -> Laid:
 
 def go_on(
     task: Task, fleet: Fleet, settings: Settings, poses: np.ndarray, neighbours: np.ndarray,
-    left: tuple[Optional[ArcPath], ...], since: float = 0.0,
+    left: tuple[Optional[ArcPath], ...], since: float = 0.0, hazard: Optional[tuple[float, float]] = None,
 ) -> Task:
     """The rest of a task for a fleet that stands still part of the way; windings of the ends are kept.
 
@@ -121,7 +126,9 @@ def go_on(
         left: what is left of each robot's way; None for one that stands off it and needs a new one. (A new one
             for everybody would send a robot that stands a finger's breadth past its end round a full circle.)
         since: second of the old task at which it was left: who was still waiting then waits for the rest.
+        hazard: a point that everybody keeps away from; None when none is known.
     """
+    check_hazard(fleet, settings, poses, hazard)
     ways, ends = tuple(way for way in left if way is not None), task.ends
     if len(ways) < len(left):
         def seconds(k: int, way: ArcPath) -> float:
@@ -133,7 +140,7 @@ def go_on(
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
     laid = Laid(
         ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
-        strip=task.strip, speeds=task.speeds, alike=task.alike,
+        strip=task.strip, speeds=task.speeds, alike=task.alike, marks=task.marks_left(since),
     )
     if task.waits is not None:
         laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.profile_time(np.array(since))), 0.0))
@@ -143,7 +150,7 @@ def go_on(
             task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
             speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
             max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, behind=laid.behind, note=laid.note,
-            strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+            marks=laid.marks, strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
         )
 
-    return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours), task.speed, rest)
+    return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours, hazard=hazard), task.speed, rest)
