@@ -932,18 +932,7 @@ class Coordinator:
         """What goes wrong while moving, and the stop that follows from it."""
         pursuit = self._pursuit
         assert pursuit is not None
-<<<<<<< HEAD
-        at = snapshot.time + float(self._history.effect_delay.max())
-        outside = frozenset(self._outside)
-        driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
-        found = self._watchman.look(View(
-            snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
-            1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
-            hazards(self._settings, self._hazard.point), outside, dict(self._members.waiting),
-        ))
-=======
         found = self._watchman.look(self._view(snapshot, estimate, pursuit))
->>>>>>> rules
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
             self._begin_stop(snapshot.time, grave[0].text, completed=False, estimate=estimate)
@@ -951,10 +940,11 @@ class Coordinator:
 
     def _view(self, snapshot: Snapshot, estimate: Estimate, pursuit: Pursuit) -> View:
         at = snapshot.time + float(self._history.effect_delay.max())
+        driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
         return View(
-            snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
+            snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
             1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
-            hazards(self._settings, self._hazard.point),
+            hazards(self._settings, self._hazard.point), frozenset(self._outside), dict(self._members.waiting),
         )
 
     def _prepare(self, now: float) -> Optional[Prepared]:
