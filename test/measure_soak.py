@@ -25,7 +25,7 @@ import numpy as np
 from coord_planner.core import graph as graphs
 from coord_planner.core.coordinator import Coordinator
 from coord_planner.core.fast.ticks import TickSolve
-from coord_planner.core.manoeuvre import EqualRadius
+from coord_planner.core.manoeuvre import ToEnds
 from coord_planner.core.messages import Snapshot, State
 from coord_planner.trial.vehicle import SimulatedFleet
 
@@ -48,28 +48,34 @@ def standing() -> Standing:
                     len(list(Path("/proc/self/fd").iterdir())))
 
 
+def _ends(x: float, y: float, heading_deg: float) -> ToEnds:
+    """Everyone turns round, to the left, and stands abreast again."""
+    return ToEnds(speed=1.2, ends_deg=tuple(
+        f"cart_{k + 1} pose {x} {start[1] + y} {heading_deg}" for k, start in enumerate(fleets.abreast(3))
+    ))
+
+
 class Operation:
     """One coordinator and its machines, for as long as one likes."""
 
     def __init__(self, seed: int = 0) -> None:
-        fleet, poses = fleets.carts(3, response=fleets.LATE), fleets.abreast(3, 4.0)
+        fleet, poses = fleets.carts(3, response=fleets.LATE), fleets.abreast(3)
         self.coordinator = Coordinator(
             fleet, graphs.path(fleet.names), fleets.settings(horizon={"intervals": 12}),
-            {"corner": EqualRadius(angle_deg=60.0, radius=4.0, speed=1.2)}, 60.0, TickSolve(time.perf_counter),
+            {"out": _ends(1.0, 6.0, 180.0), "back": _ends(0.0, 0.0, 0.0)}, 60.0, TickSolve(time.perf_counter),
         )
         starts = {name: tuple(pose) for name, pose in zip(fleet.names, poses)}
         noisy = fleets.PERFECT | {"pose_noise_xy": 0.02, "pose_noise_heading_deg": 0.5}
         self.machines = SimulatedFleet(
             fleet, starts, SimpleNamespace(**noisy), dict.fromkeys(fleet.names, 0.5), np.random.default_rng(seed)
         )
-        self.now, self._beats, self._side = 0.0, 0, -1.0
+        self.now, self._beats, self._name = 0.0, 0, "back"
 
     def once(self, seconds: float) -> bool:
         """Begin, drive, end, and stand for the rest of the time; whether it was completed."""
         until, answers = self.now + seconds, []
-        self._side = -self._side  # left and right in turn, so that they stay abreast
-        self.coordinator.begin("corner", Snapshot(self.now, self.machines.measure(self.now)),
-                               overrides={"angle_deg": 60.0 * self._side}, answered=answers.append)
+        self._name = "back" if self._name == "out" else "out"
+        self.coordinator.begin(self._name, Snapshot(self.now, self.machines.measure(self.now)), answered=answers.append)
         self._work()
         while self.now < until - 1e-9:
             if self._beats % 2 == 0:

@@ -56,3 +56,19 @@ def test_hindsight_excuses_only_what_full_braking_could_not_avoid(apart: float, 
     met = attrs.evolve(run, poses=poses, curvatures=np.zeros_like(run.curvatures))
     assert 3.2 < 2 * (0.7 + 0.5) + 1.2 < 5.0
     assert unavoidable(met, (Fault("robot_stuck", "mower_1", 4.0, 6.0),)) is excused
+
+
+@pytest.mark.parametrize("case", list(campaign.cases(SITES, 12, 7)), ids=lambda case: case.faults[0].kind)
+def test_a_dozen_with_every_kind_of_fault_break_nothing(case: campaign.Case) -> None:
+    """``make campaign`` plays 500 of them over all sites."""
+    result = campaign.play(case)
+    assert result.kept, result
+    assert result.outside == 0 and result.ended in ("ended", "held")
+
+
+def test_lost_commands_count_from_when_the_machine_misses_them() -> None:
+    configuration = config.load(SITES[1])
+    timeout = configuration.connections["plough_1"].command_timeout
+    assert campaign._hidden(Fault("command_lost", "plough_1", 2.0, 4.0), configuration) == timeout > 0.0
+    assert campaign._hidden(Fault("robot_stuck", "plough_1", 2.0, 4.0), configuration) == 0.0
+    assert "round_corner" not in campaign.begun_from_starts(config.load(Path(SITES[0]).with_name("orchard.yaml")))

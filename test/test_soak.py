@@ -9,14 +9,14 @@ from measure_soak import MOST_GROWTH, Operation, standing
 def test_turn_after_turn_leaves_nothing_behind():
     """Python's own count of bytes, since what the system says of a process jumps by whole arenas."""
     operation = Operation()
-    assert operation.once(10.0) and operation.once(10.0)  # caches and histories fill up
+    assert operation.once(16.0) and operation.once(16.0)  # caches and histories fill up
     before = standing()
     tracemalloc.start()
     try:
-        assert operation.once(10.0)
+        assert operation.once(16.0)
         gc.collect()
         first = tracemalloc.get_traced_memory()[0]
-        assert operation.once(10.0)
+        assert operation.once(16.0)
         gc.collect()
         grown = tracemalloc.get_traced_memory()[0] - first
     finally:

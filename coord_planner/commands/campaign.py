@@ -49,8 +49,11 @@ _MUST: dict[str, tuple[float, float]] = dict.fromkeys(KINDS, (0.0, 0.5))
 _MUST.update({
     "pose_jump": (0.3, 0.5), "pose_noise": (0.3, 0.5), "command_delay": (0.3, 0.5), "planner_late": (0.3, 0.5),
     "robot_stuck": (0.0, 1.0),
+    "command_lost": (0.0, 1.0),  # counted from the machine's time-out; it brakes then, and is as a stuck one
     "robot_slow": (0.6, 1.0),  # below this part of its speed, not above
 })
+# What the planner hears of, also while the fleet stops.
+_HEARD = ("pose_lost", "pose_frozen", "pose_jump", "pose_noise", "not_ready", "link_lost")
 _ENDS = (State.ENDED.value, State.HELD.value)
 _MOST_EXCUSED = 0.02  # part of the cases in which a contact may be excused
 _LEAST_MOVING = 1.5  # seconds after the beginning before which no fault strikes
@@ -148,7 +151,7 @@ def play(case: Case) -> Result:
     except RefusedError:
         return Result(case, 0, False, np.inf, 0, "refused", (), ())
     figures = summary(run)
-    told, owed = zip(*(_told(fault, run, _hidden(fault, configuration)) for fault in case.faults))
+    told, owed = zip(*(_told(fault, run, _hidden(fault, configuration), case.faults) for fault in case.faults))
     contacts = int(figures["contacts"])
     return Result(
         case, contacts, bool(contacts) and unavoidable(run, case.faults), float(figures["min_clearance_m"]),
@@ -161,11 +164,14 @@ def _hidden(fault: Fault, configuration: config.Configuration) -> float:
     return configuration.connections[fault.robot].command_timeout if fault.kind == "command_lost" else 0.0
 
 
-def _told(fault: Fault, run: Run, hidden: float = 0.0) -> tuple[float, bool]:
+def _told(fault: Fault, run: Run, hidden: float = 0.0, others: Sequence[Fault] = ()) -> tuple[float, bool]:
     """Seconds to the first warning of a fault, and whether one was owed: it struck in motion and was large enough.
 
+    No warning is owed of a planner that does not plan or of a machine that is not to follow because the fleet is
+    stopping already, nor of what is wrong with poses that do not come.
+
     Args:
-        hidden: seconds after the fault's beginning from which it shows.
+        hidden: seconds after the fault's beginning from which it shows. others: that strike as well.
     """
     onset = run.began + fault.from_s + hidden
     size, allowed = _MUST[fault.kind]
@@ -174,6 +180,13 @@ def _told(fault: Fault, run: Run, hidden: float = 0.0) -> tuple[float, bool]:
     lasted = fault.to_s - fault.from_s - hidden >= allowed
     started = onset + allowed <= run.ended
     owed = bool(moving.size and moving.all() and large and lasted and started)
+    if fault.kind not in _HEARD:
+        owed = owed and not any(text.startswith("stopping") and at <= onset + allowed for at, text in run.events)
+    if fault.kind in ("pose_jump", "pose_noise", "pose_frozen"):
+        owed = owed and not any(
+            other.kind == "pose_lost" and other.robot == fault.robot and other.from_s <= fault.from_s + allowed
+            and fault.from_s <= other.to_s for other in others
+        )
     heard = [
         max(first - onset, 0.0) for first, last, caution in run.cautions
         if caution.code in TOLD_BY[fault.kind] and last >= onset

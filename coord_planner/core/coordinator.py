@@ -408,6 +408,8 @@ class Coordinator:
                 outside = [self._fleet.index(name) for name in self._outside]
                 self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings, outside)
                 self._face_hazard(snapshot.time, estimate.states[:, POSE])
+            elif self._state in (State.STOPPING, State.HELD) and self._pursuit is not None:
+                cautions += self._watchman.look_on(self._view(snapshot, estimate, self._pursuit))
             if self._state is State.MOVING and self._pursuit is not None:
                 cautions += self._judge(snapshot, estimate)
                 if self._state is State.MOVING:
@@ -930,18 +932,20 @@ class Coordinator:
         """What goes wrong while moving, and the stop that follows from it."""
         pursuit = self._pursuit
         assert pursuit is not None
-        at = snapshot.time + float(self._history.effect_delay.max())
-        outside = frozenset(self._outside)
-        driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
-        found = self._watchman.look(View(
-            snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
-            1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
-            hazards(self._settings, self._hazard.point), outside, dict(self._members.waiting),
-        ))
+        found = self._watchman.look(self._view(snapshot, estimate, pursuit))
         grave = [caution for caution in found if rules.response(caution) is rules.Response.STOP]
         if grave:
             self._begin_stop(snapshot.time, grave[0].text, completed=False, estimate=estimate)
         return found
+
+    def _view(self, snapshot: Snapshot, estimate: Estimate, pursuit: Pursuit) -> View:
+        at = snapshot.time + float(self._history.effect_delay.max())
+        driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
+        return View(
+            snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
+            1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
+            hazards(self._settings, self._hazard.point), frozenset(self._outside), dict(self._members.waiting),
+        )
 
     def _prepare(self, now: float) -> Optional[Prepared]:
         pursuit = self._pursuit

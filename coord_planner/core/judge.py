@@ -71,6 +71,10 @@ class Judge:
         found = [caution for caution in found if caution.subject not in view.outside]
         return found + [rules.not_joined(view.settings, name, reason) for name, reason in view.waiting.items()]
 
+    def look_on(self, view: View) -> list[Caution]:
+        """What is wrong while the fleet stops or is held: what comes in is told all the same."""
+        return [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
+
     def hold(self, now: float, found: list[Caution]) -> tuple[Caution, ...]:
         """What is shown: what is raised now, and what was a moment ago."""
         for caution in found:
