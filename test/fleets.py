@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Named fleets and problems, shared by the tests of the core: invented machines, known answers.
 
 Solved references are kept, since solving is what takes time. Whoever gets one must not change its arrays.

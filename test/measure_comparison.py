@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Coupled, uncoupled and a plain follow-the-neighbour controller on the same fleets, seeds and faults, as a table.
 
     OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_comparison.py [SEEDS [LINES [CONTROLLERS]]]

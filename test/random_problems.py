@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Random ticks of invented fleets: with room and in contact, with fences, free ends, lags, odd footprints."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Faults at random moments: how a campaign draws and judges them, and what hindsight can excuse."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The plain controller that the comparison is held against: it follows, within limits, and lags from hop to hop."""
 
 import numpy as np

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parts of the fleet that neither copy each other nor could meet are solved apart, and nothing else changes."""
 
 from __future__ import annotations

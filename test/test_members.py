@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Robots that leave the group or join it in mid-turn: no jump in any command, nobody held up by who is not driven."""
 
 import attrs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Closed-loop rehearsals of the example site: what the shipped file promises, seed by seed."""
 
 from pathlib import Path

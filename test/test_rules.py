@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The table of rules is what the README shows, and every warning defers to the site's own document."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parts one after the other: joints passed without a jump, the plan beyond them, the next one changed or refused."""
 
 import attrs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Ticks end on the reference: where nothing disturbs the fleet, what is driven is the reference itself."""
 
 import fleets

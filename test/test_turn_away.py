@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Hazards in motion: everyone stops, or, where it is armed, who sees it turns away and the others copy."""
 
 import attrs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Many rehearsals with faults at random moments: who was warned how soon, how near robots came, how it ended.
 
 Run as ``python -m coord_planner.commands.campaign``; ``make campaign`` runs the whole of it.

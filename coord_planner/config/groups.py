@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parameter groups that the pure planning code does not know of: names, places, the simulation."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is known of robots from their poses alone: who stands where, and who could be driven."""
 
 from __future__ import annotations

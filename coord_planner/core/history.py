@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the robots have been sent, as it takes effect on them."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Judges each tick: what is going wrong, and whether the fleet must stop because of it."""
 
 from __future__ import annotations

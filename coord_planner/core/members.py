@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Who is part of a running manoeuvre: tasks and references for robots that leave it or join it on the way.
 
 Arrays only grow while a manoeuvre runs. A robot that leaves keeps its row, comes to a stand and stays there as an

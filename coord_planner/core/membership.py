@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Who is wanted in the fleet, who is under command, and who stands beside it: the part of it that has a memory."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What goes into the coordinator and what comes out of it, without any middleware."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where the robots are and what they have reached: measured poses joined with what they were sent."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem -> NLP: one small function for each term of the cost and each limit.
 
 Expressions are CasADi matrices of N robots by M intervals (or M + 1 nodes); every term works on whole

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How fast the group moves along its reference: everybody slows when one is held up."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A manoeuvre under way: where the group is along its reference, and the plan that is being driven."""
 
 from __future__ import annotations

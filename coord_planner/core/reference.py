@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The plan of a whole manoeuvre, made once when it begins, against which ticks are held."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is going wrong, in plain words, with what the fleet does about it and the deferral to the site's rules."""
 
 from __future__ import annotations

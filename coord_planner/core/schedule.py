@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Commands over time as they take effect: straight pieces between moments common to all robots."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """NLP -> Plan with CasADi's interior-point interface: first solves from a guess, later ones from the last plan."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Robots in the arrays that the manoeuvre is not for: they brake along their way, then stand, and are kept clear of."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One re-planning: the reference's problem over the horizon only, from the state at hand, ending on the reference."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Changes that were asked for while the planner runs, and when the plan took them up."""
 
 from __future__ import annotations

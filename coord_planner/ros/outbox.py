@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the planner says: publishers of commands, plans, status and diagnostics."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The planner as a ROS 2 lifecycle node: ROS at the rim, every decision in ``core.coordinator``."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Status and diagnostics in words and figures."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A plain controller to compare with: each robot steers to its neighbour's heading, and nobody plans.
 
 It is what one would write without this planner: heading control in proportion to the error (common practice), inside

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A closed-loop run of planner and simulated fleet, faster than real time and the same for the same seed."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How soon poses turn into commands: python test/ros/measure_latency.py [ROBOTS] [POSES_A_SECOND]
 
 Real nodes: a simulator that sends every robot's odometry, a planner that turns the line by 90 degrees. Printed, in

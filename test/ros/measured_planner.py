@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A planner that writes down its inner moments: python measured_planner.py planner_node --ros-args ...
 
 The figures go to the file that MEASURED names, as JSON, when the planner ends.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Faults in mid-turn over real processes. After each the node is alive, answers, and finishes a new manoeuvre."""
 
 from __future__ import annotations

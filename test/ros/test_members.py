@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Robots join and leave a running turn, by the ordinary parameter tools, over real DDS."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Conversions at the rim: parameters as ROS shows them, messages out, what needs packages that are not there."""
 
 from __future__ import annotations

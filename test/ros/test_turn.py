@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A whole turn over real DDS: begun by service and by request, changed on the way, refused, halted, resumed."""
 
 from __future__ import annotations

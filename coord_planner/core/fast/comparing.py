@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Neighbours compared otherwise than at equal moments: a quadratic in the turnings that stays the same in a tick."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Derivatives of cost and rows at a point, and the matrix of a step made of them."""
 
 from __future__ import annotations

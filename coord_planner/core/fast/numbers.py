@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem -> plain arrays: what every iteration of a tick needs, worked out once."""
 
 from __future__ import annotations

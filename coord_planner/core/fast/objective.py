@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The smooth part of the cost: turning, alignment and the small prices, with slopes and Gauss-Newton blocks."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The tick solver: a plan in milliseconds, from the last plan and its multipliers."""
 
 from __future__ import annotations

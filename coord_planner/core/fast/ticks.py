@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How ticks are solved: fast where all of a problem is understood, by the general solver where it is not."""
 
 from __future__ import annotations

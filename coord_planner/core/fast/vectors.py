@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Between arrays and the vectors of ocp.py: variables, rows and their multipliers, laid out as there."""
 
 from __future__ import annotations

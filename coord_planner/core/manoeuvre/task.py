@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A manoeuvre worked out: where everyone ends, on which guessed way, and when."""
 
 from __future__ import annotations
