@@ -110,8 +110,8 @@ def test_manifest_is_what_colcon_and_rosdep_expect() -> None:
 
 def test_every_source_file_states_copyright_and_licence() -> None:
     """As REP-2004, quality level 4, asks for."""
-    folders = [ROOT / name for name in ("coord_planner", "test", "launch")]
-    for file in [ROOT / "setup.py", *(file for folder in folders for file in folder.rglob("*.py"))]:
+    folders = [SOURCE / name for name in ("coord_planner", "test", "launch")]
+    for file in [SOURCE / "setup.py", *(file for folder in folders for file in folder.rglob("*.py"))]:
         head = file.read_text(encoding="utf-8")[:200]
         assert "# Copyright" in head and "# SPDX-License-Identifier: Apache-2.0" in head, file
 
