@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Named fleets and problems, shared by the tests of the core: invented machines, known answers.
 
 Solved references are kept, since solving is what takes time. Whoever gets one must not change its arrays.
@@ -6,7 +9,7 @@ Solved references are kept, since solving is what takes time. Whoever gets one m
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from functools import lru_cache
 from types import SimpleNamespace
 from typing import Optional
@@ -118,17 +121,21 @@ class Yard:
     Attributes that tests change on the way:
         hidden: robots whose poses do not arrive. moved: (x, y) added to measured positions, by name.
         not_ready: robots that may not be driven.
-    What it keeps: ``answers``, ``decisions``, ``sent`` (time, commands of shape (N, 2)), ``track`` (time, true poses).
+    What it keeps: ``answers``, ``decisions``, ``sent`` (time, commands of shape (N, 2), who gets none keeps the
+    last), ``told`` (time, who gets a command), ``track`` (time, true poses).
     """
 
     def __init__(
         self, fleet: Fleet, poses: np.ndarray, manoeuvres: Mapping[str, Manoeuvre], with_settings: Settings,
-        graph: Optional[NeighbourGraph] = None, seed: int = 0, solve: Optional[Solve] = None, **imperfect: float,
+        graph: Optional[NeighbourGraph] = None, seed: int = 0, solve: Optional[Solve] = None,
+        driven: tuple[str, ...] = (), **imperfect: float,
     ) -> None:
         self.fleet, self.settings = fleet, with_settings
-        graph = graphs.path(fleet.names) if graph is None else graph
+        self.graph = graph = graphs.path(fleet.names) if graph is None else graph
+        part = self.part(driven) if driven else fleet
         self.coordinator = Coordinator(
-            fleet, graph, with_settings, manoeuvres, budget=60.0, solve=solve or TickSolve(time.perf_counter)
+            part, graph.relative_to(part.names), with_settings, manoeuvres, budget=60.0,
+            solve=solve or TickSolve(time.perf_counter),
         )
         starts = {name: tuple(pose) for name, pose in zip(fleet.names, poses)}
         self.machines = SimulatedFleet(
@@ -144,6 +151,16 @@ class Yard:
         self.sent: list[tuple[float, np.ndarray]] = []
         self.track: list[tuple[float, np.ndarray]] = []
         self._seen: dict[str, PoseSample] = {}
+        self._told = np.zeros((len(fleet), 2))
+        self.told: list[tuple[float, frozenset[str]]] = []
+
+    def part(self, names: Sequence[str]) -> Fleet:
+        """Some of the machines."""
+        return Fleet(tuple(robot for robot in self.fleet.robots if robot.name in names))
+
+    def want(self, *names: str) -> None:
+        """Others shall be part of the fleet from now on."""
+        self.coordinator.change(self.now, fleet=self.part(names), graph=self.graph)
 
     def snapshot(self) -> Snapshot:
         """What is known now; hidden robots keep their last pose."""
@@ -191,7 +208,10 @@ class Yard:
             self.work()
         commands = self.coordinator.commands(self.now)
         if commands is not None:
-            self.sent.append((self.now, np.array([[c.speed, c.curvature] for c in commands.values()])))
+            for name, command in commands.items():
+                self._told[self.fleet.index(name)] = command.speed, command.curvature
+            self.sent.append((self.now, self._told.copy()))
+            self.told.append((self.now, frozenset(commands)))
             for name, command in commands.items():
                 self.machines.command(name, command, self.now)
         self.track.append((self.now, self.machines.poses()))
@@ -231,7 +251,8 @@ def excess(fleet: Fleet, times: np.ndarray, commands: np.ndarray) -> dict[str, f
 
 
 def small_yard(
-    count: int = 2, response: Response = LATE, solve: Optional[Solve] = None, **imperfect: float
+    count: int = 2, response: Response = LATE, solve: Optional[Solve] = None, driven: tuple[str, ...] = (),
+    **imperfect: float,
 ) -> Yard:
     """Two carts, a short horizon: quick to plan for. ``corner``, ``led``, ``placed`` and ``passing`` can be begun."""
     manoeuvres: dict[str, Manoeuvre] = {
@@ -242,5 +263,5 @@ def small_yard(
     }
     horizon = Horizon(intervals=12)
     return Yard(carts(count, response=response), abreast(count), manoeuvres, settings(horizon=attrs.asdict(horizon)),
-                solve=solve, **imperfect)
+                solve=solve, driven=driven, **imperfect)
 

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Bags as other software makes them, written with rosbags directly; invented robots on simple ways."""
 
 import math

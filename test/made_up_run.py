@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A made-up run for tests of what is done with records: simulated machines, no planner."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A small made-up yard and sweeps of it: two carts, short horizons, half a second of work for each rehearsal."""
 
 from __future__ import annotations

@@ -1,9 +1,13 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Coupled, uncoupled and a plain follow-the-neighbour controller on the same fleets, seeds and faults, as a table.
 
-    OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_comparison.py [SEEDS [LINES]]
+    OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_comparison.py [SEEDS [LINES [CONTROLLERS]]]
 
-SEEDS: how many, from 1 on (3 when left out). LINES: which of the cases, e.g. 1,4 (all when left out). Takes minutes,
-so no test collects it. The follower (trial/follower.py) neither plans nor knows of clearances; the sites are invented.
+SEEDS: how many, from 1 on (3 when left out). LINES: which of the cases, e.g. 1,4. CONTROLLERS: e.g. follower. Takes
+minutes, so no test collects it. The follower (trial/follower.py) neither plans nor knows of clearances; the sites are
+invented.
 """
 
 from __future__ import annotations
@@ -72,13 +76,14 @@ def line(title, contender, runs, allowed) -> str:
 def main() -> None:
     seeds = range(1, 1 + (int(sys.argv[1]) if len(sys.argv) > 1 else 3))
     chosen = [int(word) for word in sys.argv[2].split(",")] if len(sys.argv) > 2 else range(1, 1 + len(CASES))
+    contenders = sys.argv[3].split(",") if len(sys.argv) > 3 else CONTENDERS
     say("| fleet | controller | smallest clearance m | heading spread deg | headings apart at the end deg | time s | "
         "steering 1/m | completed | contacts |")
     say("|---|---|---|---|---|---|---|---|---|")
     for number in chosen:
         title, file, manoeuvre, faults = CASES[number - 1]
         site = config.load(CONFIG / file)
-        for contender in CONTENDERS:
+        for contender in contenders:
             try:
                 runs = [one(contender, site, manoeuvre, faults, seed) for seed in seeds]
             except RefusedError as refused:

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """An hour of simulated operation, begun and ended a hundred times: what stays behind of memory, threads and files.
 
     python test/measure_soak.py            a hundred times 36 s; prints a line for each tenth of it

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Measures what ``coord-planner solve`` promises on problems it has not seen; takes minutes, so no test collects it.
 
     OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_solve.py [COUNT [FIRST_SEED]]

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Boundary-value problems that nobody has seen before, from a seed: invented, and known to have a plan."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Random ticks of invented fleets: with room and in contact, with fences, free ends, lags, odd footprints."""
 
 from __future__ import annotations
@@ -7,7 +10,17 @@ import numpy as np
 
 from coord_planner.core import outline
 from coord_planner.core.fleet import Fleet, Footprint, Limits, Response, Robot
-from coord_planner.core.problem import POSE, STATES, Bounds, Fences, Problem, Watch, bounds_in_force, no_fences
+from coord_planner.core.problem import (
+    POSE,
+    STATES,
+    Bounds,
+    Comparison,
+    Fences,
+    Problem,
+    Watch,
+    bounds_in_force,
+    no_fences,
+)
 from coord_planner.core.rollout import rolled_out
 from coord_planner.core.settings import Prices
 
@@ -41,7 +54,21 @@ def problem(seed: int, contact: bool, fenced: bool = False) -> tuple[Problem, np
         bounds=_bounds(driven, initial),
         watch=_watch(rng, fleet, guess, contact),
         fences=_fences(fleet, guess) if fenced else no_fences(INTERVALS),
+        compared=_comparison(rng, driven.edges) if rng.random() < 0.3 else None,
     ), guess
+
+
+def _comparison(rng: np.random.Generator, edges: np.ndarray) -> Comparison:
+    """In each interval the first of an edge is compared with what the second turned three intervals earlier."""
+    count, width = len(edges) * INTERVALS, 3
+    m = np.tile(np.arange(INTERVALS), len(edges))
+    at = np.clip(m - 3, 0, INTERVALS - width)
+    first = (np.arange(width) == (m - np.minimum(m, INTERVALS - width))[:, None]).astype(float)
+    second = rng.uniform(0.2, 0.5, (count, width)) * (m >= 3)[:, None]
+    return Comparison(
+        np.repeat(np.arange(len(edges)), INTERVALS), np.minimum(m, INTERVALS - width), at, first, second,
+        np.where(m >= 3, 0.0, -0.1), np.where(rng.random(count) < 0.1, 0.0, INTERVAL),
+    )
 
 
 def _bounds(driven: Problem, initial: np.ndarray) -> Bounds:

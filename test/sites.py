@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parameter files made up for tests: the solar park's mowers in other numbers, places and manoeuvres."""
 
 from __future__ import annotations

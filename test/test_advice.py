@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Advice from the graph: the copying law, its inverse, what holds the graph together; plans and runs beside it."""
 
 import json

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Areas of a site: what is no area is refused, and pieces are convex and make up the whole."""
 
 import numpy as np

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Recordings of all kinds and in all states: what can be read is read, the loss is counted and said."""
 
 import shutil

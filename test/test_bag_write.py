@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A run written as a rosbag2 folder: complete, of real types, readable by ordinary tools, never written over."""
 
 import json

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The benchmark: what it prints, what it refuses, and that its figures mean what they say. No time is judged here."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Faults at random moments: how a campaign draws and judges them, and what hindsight can excuse."""
 
 from __future__ import annotations
@@ -75,6 +78,18 @@ def test_a_dozen_with_every_kind_of_fault_break_nothing(case: campaign.Case) -> 
 def test_lost_commands_count_from_when_the_machine_misses_them() -> None:
     configuration = config.load(SITES[1])
     timeout = configuration.connections["plough_1"].command_timeout
-    assert campaign._hidden(Fault("command_lost", "plough_1", 2.0, 4.0), configuration) == timeout > 0.0
-    assert campaign._hidden(Fault("robot_stuck", "plough_1", 2.0, 4.0), configuration) == 0.0
+    run = turn(2, later=0.0)
+    assert campaign._hidden(Fault("command_lost", "plough_1", 2.0, 4.0), configuration, run) == timeout > 0.0
+    assert campaign._hidden(Fault("robot_stuck", "plough_1", 2.0, 4.0), configuration, run) == 0.0
+
+
+def test_late_commands_count_from_when_they_tell_something_else() -> None:
+    run, configuration = turn(2, later=0.0), config.load(SITES[0])
+    told = np.zeros((2, 400, 2))
+    told[:, :, 0] = 1.0
+    told[0, 200:, 1] = 0.25  # from 10 s on it is to turn
+    run = attrs.evolve(run, command_times=0.05 * np.arange(400), commanded=told, began=0.0)
+    late = Fault("command_delay", "mower_1", 8.0, 14.0, 0.9)
+    assert campaign._hidden(late, configuration, run) == pytest.approx(2.0)
+    assert campaign._hidden(attrs.evolve(late, robot="mower_2"), configuration, run) == np.inf
     assert "round_corner" not in campaign.begun_from_starts(config.load(Path(SITES[0]).with_name("orchard.yaml")))

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The command: exit status, what goes to stdout and stderr, and bad input, which never gives a traceback."""
 
 import json

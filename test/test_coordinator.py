@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The loop from snapshots to commands: who may begin, halt and resume when, and what stops the fleet."""
 
 import math

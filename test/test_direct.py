@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One plan from one problem, in its classical form: published values, exact families, identities, order.
 
 Sources: shared check values, section 1 (Jurdjevic, Geometric Control Theory, 1997; Sachkov & Sachkova,

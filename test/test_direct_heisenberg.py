@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The driftless problem on the Heisenberg group: published values, two coupled copies, its own laws.
 
 Brockett, in New Directions in Applied Mathematics, 1981; Montgomery, A Tour of Subriemannian Geometries, 2002 (from

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Plans within limits and clearances: held exactly, against independent optimisers and published bounds."""
 
 import itertools

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The fast tick solver against the general one: the same answer, the same conditions, whatever the problem holds."""
 
 from __future__ import annotations

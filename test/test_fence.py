@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Fences: lines that hold footprints off areas and behind strips, from exact geometry, kept by reference and ticks."""
 
 import json

@@ -1,6 +1,7 @@
-"""The plain controller that the comparison is held against: it follows, within limits, and lags from hop to hop."""
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
 
-import math
+"""The plain controller that the comparison is held against: it follows, within limits, and lags from hop to hop."""
 
 import numpy as np
 import pytest
@@ -11,7 +12,7 @@ from coord_planner.record.metrics import summary
 from coord_planner.trial.faults import Fault
 from coord_planner.trial.follower import follow
 
-LED = {"kind": "to_ends", "ends_deg": ["mower_1 pose 5 10 90"]}
+LED = {"kind": "to_ends", "ends_deg": ["mower_1 pose 4.5 10 60"]}
 
 
 @pytest.fixture(scope="module")
@@ -24,7 +25,7 @@ def test_everyone_comes_to_the_neighbours_heading_one_after_the_other(yard):
     run = follow(yard, "led", seed=1)
     figures = summary(run)
     assert figures["completed"] and figures["limit_violations"] == 0
-    assert np.degrees(list(figures["heading_change_rad"].values())) == pytest.approx([90.0] * 3, abs=6.0)
+    assert np.degrees(list(figures["heading_change_rad"].values())) == pytest.approx([60.0] * 3, abs=8.0)
     onsets = list(figures["turn_onset_s"].values())
     assert onsets[0] < onsets[1] < onsets[2]  # each begins when its neighbour has begun
     assert figures["end_error_m"]["mower_1"] < 0.5
@@ -39,7 +40,6 @@ def test_it_is_struck_by_the_same_faults(yard):
 
 def test_the_same_seed_is_the_same_run(yard):
     noisy = site(abreast(2, 4.0), {"led": LED})
-    one, other = follow(noisy, "led", seed=3), follow(noisy, "led", seed=3)
-    assert np.array_equal(one.poses, other.poses)
-    assert not np.array_equal(one.poses[:, :100], follow(noisy, "led", seed=4).poses[:, :100])
-    assert math.isfinite(summary(one)["duration_s"])
+    one, same, other = (follow(noisy, "led", seed=seed) for seed in (3, 3, 4))
+    assert np.array_equal(one.poses, same.poses)
+    assert not np.array_equal(one.poses[:, :100], other.poses[:, :100])

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Into a formation from where they stand: places, assignment, waiting, refusals, closed loop. Scenes are invented."""
 
 import itertools

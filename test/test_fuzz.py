@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Whatever arrives, at whatever moment: never an exception, never a command that is not finite or outside a limit.
 
 FUZZ_EXAMPLES=10000 runs as many examples as are asked for (60 otherwise). Most of them have a solver that costs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The last gate: whatever is wished for, what goes out can be driven and keeps the limits."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parts of the fleet that neither copy each other nor could meet are solved apart, and nothing else changes."""
 
 from __future__ import annotations
@@ -26,7 +29,9 @@ def apart(seed: int, fenced: bool = True) -> tuple[Problem, np.ndarray]:
     watch = attrs.evolve(
         posed.watch, pairs=posed.watch.pairs[kept], normals=posed.watch.normals[kept], gaps=posed.watch.gaps[kept]
     )
-    return attrs.evolve(posed, watch=watch, edges=np.zeros((0, 2), dtype=int), weights=np.zeros(0)), guess
+    return attrs.evolve(
+        posed, watch=watch, edges=np.zeros((0, 2), dtype=int), weights=np.zeros(0), compared=None
+    ), guess
 
 
 def test_who_hangs_together():

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A file turns one after the other: compared where they are at the same place, in the reference and in ticks."""
 
 import math

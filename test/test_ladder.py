@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Steps down when the solver brings no finished plan, and the way back up."""
 
 from __future__ import annotations

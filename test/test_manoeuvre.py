@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is asked, worked out for the poses at hand: ends, windings, ways, times."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The figures of a run, against cases whose figures can be worked out by hand."""
 
 import itertools

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Neighbours from poses: who is joined, edges that do not flicker, the graph about to split, in motion."""
 
 import attrs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where the robots are: from noisy, late and missing poses, and from what they were sent."""
 
 import math

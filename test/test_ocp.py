@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The optimisation problem, term by term: against hand-computed numbers, numpy, fine integration and exact polygons."""
 
 import math

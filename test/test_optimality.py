@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The optimality check against programs whose answers are known: inertia by eigenvalues, residuals by hand.
 
 Nocedal & Wright, Numerical Optimization, 2nd ed., theorems 12.5, 12.6 and section 16.1 (from memory).

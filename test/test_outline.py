@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Exact distances: against closed forms for rectangles and against what a separating line must do."""
 
 import math

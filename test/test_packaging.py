@@ -108,6 +108,14 @@ def test_manifest_is_what_colcon_and_rosdep_expect() -> None:
     assert settings["install"]["install_scripts"] == settings["develop"]["script_dir"] == "$base/lib/coord_planner"
 
 
+def test_every_source_file_states_copyright_and_licence() -> None:
+    """As REP-2004, quality level 4, asks for."""
+    folders = [SOURCE / name for name in ("coord_planner", "test", "launch")]
+    for file in [SOURCE / "setup.py", *(file for folder in folders for file in folder.rglob("*.py"))]:
+        head = file.read_text(encoding="utf-8")[:200]
+        assert "# Copyright" in head and "# SPDX-License-Identifier: Apache-2.0" in head, file
+
+
 @pytest.mark.parametrize("executable", EXECUTABLES)
 def test_entry_points_lead_to_a_function(executable: str) -> None:
     entries = ast.literal_eval(setup_keywords()["entry_points"])["console_scripts"]

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The page of a run: what it holds, that it needs nothing else, and that it works in a browser."""
 
 import json

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Limits in force: from any state there is a way to keep them, and it leads back at the machine's own rates."""
 
 import numpy as np

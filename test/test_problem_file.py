@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem files: read and written alike, mistakes told with file, line, key, value and remedy; failures kept."""
 
 import json

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The group's pace along its reference when somebody is held up."""
 
 import numpy as np

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Plans of whole manoeuvres: what they promise, what the coupling does to them, and what cannot be kept."""
 
 import math

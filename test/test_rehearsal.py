@@ -1,12 +1,17 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Closed-loop rehearsals of the example site: what the shipped file promises, seed by seed."""
 
 from pathlib import Path
 
 import numpy as np
 import pytest
+import sites
 
 from coord_planner import config
 from coord_planner.core import manoeuvre, reference
+from coord_planner.core.fleet import Fleet
 from coord_planner.core.problem import POSE
 from coord_planner.errors import RefusedError
 from coord_planner.record.metrics import summary
@@ -107,3 +112,35 @@ def _only(configuration, names):
 def test_a_manoeuvre_that_is_refused_moves_nothing(site):
     with pytest.raises(RefusedError, match="radius of 1 m"):
         rehearse(site, "corner_left", seed=1, overrides={"radius": 1.0})
+
+
+def test_a_robot_that_is_not_enabled_joins_on_the_way_and_another_leaves():
+    starts = np.array([[0.0, 9.0, 0.0], [0.0, 4.5, 0.0], [0.0, 0.0, 0.0]])
+    corner = {"kind": "equal_radius", "angle_deg": 45.0, "radius": 14.0, "speed": 1.0}
+    site = sites.site(starts, {"corner": corner}, robots__mower_3__enabled=False)
+    done = []
+
+    def watch(coordinator, now):
+        for at, names in ((3.0, (0, 1, 2)), (6.0, (1, 2))):
+            if now >= at and at not in done:
+                fleet = Fleet(tuple(site.fleet.robots[k] for k in names))
+                assert coordinator.cannot_join(fleet, site.graph) == ""
+                coordinator.change(now, fleet=fleet, graph=site.graph)
+                done.append(at)
+
+    run = rehearse(site, "corner", seed=2, watch=watch)
+    figures = summary(run)
+    assert done == [3.0, 6.0] and run.fleet.names == site.fleet.names
+    assert figures["completed"] and figures["contacts"] == 0 and figures["limit_violations"] == 0
+    assert np.isnan(run.end_poses[[0, 2]]).all() and figures["end_error_m"]["mower_2"] <= 0.10
+    before, joined, left = (int(np.searchsorted(run.times, at)) for at in (3.0, 6.0, 10.0))
+    assert np.abs(run.speeds[2, :before]).max() == 0.0 and run.speeds[2, joined] > 0.3
+    assert np.abs(run.speeds[0, left:]).max() < 0.01 and run.speeds[1, left] > 0.5
+    assert all(frame.poses.shape[0] == 3 for frame in run.frames)
+
+
+def test_a_robot_that_stays_out_is_no_part_of_the_run():
+    starts = np.array([[0.0, 4.5, 0.0], [0.0, 0.0, 0.0]])
+    site = sites.site(starts, {"on": {"kind": "equal_radius", "angle_deg": 10.0}}, robots__mower_2__enabled=False)
+    run = rehearse(site, "on", seed=1)
+    assert run.fleet.names == ("mower_1",) and run.poses.shape[0] == run.commanded.shape[0] == 1 and run.completed

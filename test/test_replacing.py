@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A manoeuvre that replaces the running one: no jump in any command, nothing lost."""
 
 import attrs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Driving backward: schedules of gears, bounds, the gate, ticks, closed loop with both kinds of drive."""
 
 import math

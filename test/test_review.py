@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a review finds in recordings of which everything is known: ours, other software's, and a real one."""
 
 import json

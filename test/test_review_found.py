@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Recordings that others made with rosbag2: the test data in the source archive of PyPI's ``evo`` 1.38.1.
 
 ``make unit`` downloads the archive; the recordings are unpacked into a temporary folder and never copied into the

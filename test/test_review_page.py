@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The pages of recordings: they need nothing else, open soon, play, scrub, jump, and compare two."""
 
 import json

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A real recording of wheeled vehicles that turn: aircraft taxiing, about one position a second.
 
 The positions ship with PyPI's ``traffic`` 2.13 (MIT), as samples/onground/zurich_airport.json.gz. They come from a

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Row ends: who goes into which row, turns that fit into the headland, who waits for whom, refusals, closed loop."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The table of rules is what the README shows, and every warning defers to the site's own document."""
 
 from __future__ import annotations
@@ -50,6 +53,7 @@ RAISED = [
     rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, False),
     rules.other_planner(SETTINGS, "run 7"),
     rules.change_refused(SETTINGS, "too tight"),
+    rules.not_joined(SETTINGS, "cart_3", "cart_3 is not ready to be driven"),
 ]
 
 

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Commands over time, and how a new plan is joined to what is already under way."""
 
 import fleets

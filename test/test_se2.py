@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """SE(2) against values, scipy's matrix functions, fine integration and finite differences."""
 
 import casadi as ca

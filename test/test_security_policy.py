@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The planner's security policy. Its form is ROS 2's access control policy 0.2.0 (design.ros2.org, "ROS 2 Access
 Control Policies"): enclaves / enclave path / profiles / profile ns node / topics and services, ALLOW for a direction.
 

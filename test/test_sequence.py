@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parts one after the other: joints passed without a jump, the plan beyond them, the next one changed or refused."""
 
 import attrs
@@ -172,6 +175,13 @@ def test_another_manoeuvre_takes_the_place_of_a_sequence():
     here.run_to(State.ENDED)
     assert turned(here) == pytest.approx([-30.0, -30.0], abs=1.0)
     assert here.coordinator.decision.manoeuvre == "other"
+
+
+@pytest.mark.parametrize("key", ["alignment", "named", "parts", "nonsense"])
+def test_only_numbers_of_its_own_are_overridden(key):
+    here = yard()
+    answer = here.begin("rows", **{key: 1.0})
+    assert not answer.ok and "override one of speed, joint_speed, end_speed, coupling" in answer.text
 
 
 def test_a_later_part_that_cannot_be_is_refused_before_anything_moves():

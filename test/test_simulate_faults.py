@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``simulate --faults FILE`` and what ``check`` says of a planner that falls silent."""
 
 from pathlib import Path

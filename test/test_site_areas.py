@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Keep-outs and areas with a speed cap: read, planned round or slowed for, warned of, judged and shown."""
 
 import attrs

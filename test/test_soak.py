@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A short soak: turns begun and ended leave no memory, thread or file behind (measure_soak.py: an hour of it)."""
 
 import gc

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``coord-planner solve``: its JSON, its words, its exit status, and failures solved again."""
 
 import json

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Laws of the coupled problem, on invented problems: what may change a plan's cost, and what must not.
 
 Sources: shared check values, section 1; they follow from the problem's symmetries and from the cost being linear in

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a solve promises, whatever the method inside: its own equations, limits kept, breaches priced and reported."""
 
 import attrs

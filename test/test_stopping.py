@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Controlled stops: within every brake, along the planned curves, the one with the larger clearance."""
 
 import attrs

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Sweeps: what a file may ask for, points that do not depend on who rehearses them, and what becomes of failures."""
 
 import csv

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the rows of a sweep say together: rules, the best, the front, and which parameters matter."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The same sweep on a Dask cluster: a real scheduler, worker processes, and one of them killed in the middle."""
 
 import json

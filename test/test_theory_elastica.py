@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Closed forms of one robot against published constants, the differential equations and the reduced flow."""
 
 import math

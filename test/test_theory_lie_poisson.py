@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The general flow: structure constants, Casimirs and Lax invariants, against textbooks and the reduced equations."""
 
 import numpy as np

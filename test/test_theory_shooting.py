@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The coupled problem in its classical form: published values, exact families, identities and laws.
 
 Sources: Jurdjevic, Geometric Control Theory, 1997, and Sachkov & Sachkova, arXiv:1303.1746, for the reduced equations

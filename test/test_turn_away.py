@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Hazards in motion: everyone stops, or, where it is armed, who sees it turns away and the others copy."""
 
 import attrs
@@ -120,11 +123,11 @@ def test_a_hazard_that_expires_while_the_turn_is_made_is_turned_away_from_all_th
     run.coordinator.arm("away", run.now)
     run.coordinator.hazard(*POINT, run.now)
     made = [job() for job in run.coordinator.jobs()]
-    run.run(1.2)
+    run.run(0.95)
     for outcome in made:
         run.coordinator.deliver(outcome, run.now)
     assert run.coordinator.reference.task.name == "go"
-    run.run(2.0)
+    run.run(3.0)  # more time is taken for the next try
     assert run.coordinator.reference.task.name == "away" and run.coordinator.reference.task.hazard == POINT
 
 

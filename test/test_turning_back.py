@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Ways back into a row beside: where they end, how deep they reach, how tightly they bend."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Facts about vehicles: shared/checks.md section 6, common practice unless a source is named beside it."""
 
 import math

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The line turns as one about a pivot: rigid-body kinematics, limits, refusals, closed loop."""
 
 import math

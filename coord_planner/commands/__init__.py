@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The commands of ``coord-planner``, one module each."""
 
 import os

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Many rehearsals with faults at random moments: who was warned how soon, how near robots came, how it ended.
 
 Run as ``python -m coord_planner.commands.campaign``; ``make campaign`` runs the whole of it.
@@ -56,6 +59,7 @@ _MUST.update({
 _HEARD = ("pose_lost", "pose_frozen", "pose_jump", "pose_noise", "not_ready", "link_lost")
 _MOVING = 0.2  # m/s
 _ENDS = (State.ENDED.value, State.HELD.value)
+_MISSED = (0.3, 0.1)  # m/s and rad/s by which a machine whose commands come late is told something else
 _MOST_EXCUSED = 0.02  # part of the cases in which a contact may be excused
 _LEAST_MOVING = 1.5  # seconds after the beginning before which no fault strikes
 
@@ -152,7 +156,7 @@ def play(case: Case) -> Result:
     except RefusedError:
         return Result(case, 0, False, np.inf, 0, "refused", (), ())
     figures = summary(run)
-    told, owed = zip(*(_told(fault, run, _hidden(fault, configuration), case.faults) for fault in case.faults))
+    told, owed = zip(*(_told(fault, run, _hidden(fault, configuration, run), case.faults) for fault in case.faults))
     contacts = int(figures["contacts"])
     return Result(
         case, contacts, bool(contacts) and unavoidable(run, case.faults), float(figures["min_clearance_m"]),
@@ -160,9 +164,23 @@ def play(case: Case) -> Result:
     )
 
 
-def _hidden(fault: Fault, configuration: config.Configuration) -> float:
-    """Seconds for which nobody can see a fault: a machine without commands drives on as told until its time-out."""
-    return configuration.connections[fault.robot].command_timeout if fault.kind == "command_lost" else 0.0
+def _hidden(fault: Fault, configuration: config.Configuration, run: Run) -> float:
+    """Seconds for which nobody can see a fault.
+
+    A machine without commands drives on as told until its time-out; one that gets them late drives as it should
+    until it is told something else. Infinite where that does not happen.
+    """
+    if fault.kind == "command_lost":
+        return configuration.connections[fault.robot].command_timeout
+    if fault.kind != "command_delay":
+        return 0.0
+    times, told = run.command_times, run.commanded[run.fleet.index(fault.robot)]
+    turning = told[:, 0] * told[:, 1]
+    began = run.began + fault.from_s
+    before = np.interp(times - fault.value, times, told[:, 0]), np.interp(times - fault.value, times, turning)
+    missed = (np.abs(told[:, 0] - before[0]) > _MISSED[0]) | (np.abs(turning - before[1]) > _MISSED[1])
+    shows = np.flatnonzero(missed & (times >= began))
+    return float(times[shows[0]] - began) if len(shows) else np.inf
 
 
 def _told(fault: Fault, run: Run, hidden: float = 0.0, others: Sequence[Fault] = ()) -> tuple[float, bool]:

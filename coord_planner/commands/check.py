@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``coord-planner check``: is a parameter file sound, and what does it say?"""
 
 # No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A parameter file with the values that the command line sets in it."""
 
 from __future__ import annotations

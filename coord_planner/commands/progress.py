@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A bar for what takes longer than two seconds; on a terminal only."""
 
 from __future__ import annotations

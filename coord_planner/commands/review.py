@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``coord-planner review``: what happened in a recorded run, or in two of them side by side."""
 
 # No postponed annotations here: typer 0.9, which Ubuntu 24.04 ships, does not see through them.

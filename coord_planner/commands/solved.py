@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What ``solve`` tells of a plan: the keys of its JSON, and tables for people."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How a command speaks: results on stdout, messages for people on stderr, and the exit status."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The outcome of a sweep as tables, sentences and one JSON object."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where a command leaves its results: made and looked at before a long run, not after it."""
 
 from __future__ import annotations

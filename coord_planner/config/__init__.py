@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parameter file -> typed settings; every error names the file, the key, the value and the remedy.
 
 One format for the node and for the desk: a ROS 2 parameter file. The node hands its parameters over as flat

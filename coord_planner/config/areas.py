@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Keep-out areas and areas with a speed cap: names, and a flat list of coordinates for each."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """From flat keys to a Configuration."""
 
 from __future__ import annotations

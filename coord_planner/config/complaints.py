@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Collecting what is wrong with a parameter file, so that a person can mend it in one go."""
 
 from __future__ import annotations

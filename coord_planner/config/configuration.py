@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Configuration: everything a parameter file says, typed and checked."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How one robot is reached, and which point of it its poses mean."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Values that are right by themselves and cannot be kept together."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What manoeuvres say in words of their own: where robots shall arrive, for the point that is planned with; pivots."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Failures kept as problem files, for ``coord-planner solve`` to reproduce them; their number and size are capped."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A ROS 2 parameter file as flat dotted keys, each with the line it stands on.
 
 Values are read as ROS reads them, which is not quite as YAML 1.1 has it: ``1e-3`` is a number, a date is a word,

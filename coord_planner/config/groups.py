@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parameter groups that the pure planning code does not know of: names, places, the simulation."""
 
 from __future__ import annotations
@@ -72,7 +75,7 @@ class Place:
         0.0, "heading of the simulated robot at first, anticlockwise from the x axis", "deg",
         minimum=-36000.0, maximum=36000.0,
     )
-    enabled: bool = parameter(True, "false: the robot is no part of the fleet's next plan", live=True)
+    enabled: bool = parameter(True, "false: the robot leaves the group, or stays out of it; true: it joins", live=True)
 
 
 @attrs.frozen

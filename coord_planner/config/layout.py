@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Every key that a parameter file may hold, given the names of its robots and manoeuvres."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is sound and still worth knowing before a fleet is driven with it."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where the example sites lie that come with the package."""
 
 from __future__ import annotations

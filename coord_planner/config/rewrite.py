@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A parameter file with other values, its comments and its order kept."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The values in force for one robot, and what they must not contradict."""
 
 from __future__ import annotations

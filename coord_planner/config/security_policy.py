@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The ROS 2 security policy of a planner: exactly what its node publishes, subscribes to and serves.
 
 The form is that of ROS 2's access control policies, version 0.2.0 (design.ros2.org, "ROS 2 Access Control

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The kinds of values a ROS parameter can have, and how a raw value becomes one."""
 
 from __future__ import annotations

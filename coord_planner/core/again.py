@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A program of the planner, saved when it failed, solved again: as it was then, and from scratch; judged."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Named areas of a site: polygons, convex or not, and the convex pieces that they are taken apart into."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Named arrays laid end to end in one vector: how an optimisation problem is addressed by name."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Areas with a speed cap of their own: which robot may drive how fast where it is."""
 
 from __future__ import annotations

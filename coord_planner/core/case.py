@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A program of the planner as it was solved, so that a failure can carry it and somebody can solve it again."""
 
 from __future__ import annotations

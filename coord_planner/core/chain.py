@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A sequence under way: which part is driven, and what comes next."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The receding-horizon loop: Snapshot in, Decision out."""
 
 from __future__ import annotations
@@ -11,7 +14,7 @@ import attrs
 import numpy as np
 
 from ..errors import ArrivedError, CoordPlannerError, RefusedError, SettingsError, SolveError
-from . import gate, ladder, manoeuvre, reference, rules, solver, stopping
+from . import gate, ladder, manoeuvre, members, reference, rules, solver, stopping
 from .caps import caps
 from .case import PlannerCase
 from .chain import Chain
@@ -23,12 +26,14 @@ from .hazard import nearest as hazards_near
 from .history import CommandHistory, Planned
 from .judge import SHORT, Judge, View
 from .manoeuvre import Manoeuvre, Task, TurnAway
+from .membership import Membership, overlooked
 from .messages import Answer, Caution, Command, Decision, PoseSample, Snapshot, State
 from .motion import lags
 from .neighbours import Lookout
 from .observer import Estimate, Observer
+from .parameter import describe
 from .plan import Plan
-from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
+from .problem import POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared, Pursuit, Takeover
 from .reference import Reference
 from .settings import Settings, SiteRules
@@ -38,6 +43,7 @@ from .tick import pose_problem
 
 _STANDING = 5e-3  # m/s
 _SETTLE_LAGS = 5.0  # response lags after which a machine has stopped, to a hundredth of its speed
+_TAKES = 1.5  # times as long as the last one took, one that came too late is given
 _ANOTHER_DAY = 10.0  # seconds between two looks at the clock in motion that are none of the planner's making
 _SET_BACK = 0.2  # seconds by which the clock may go back without being set back
 _SINCE = 2.0  # seconds of the schedule that are kept behind now, for the observer
@@ -101,6 +107,7 @@ class Coordinator:
         self._solve_tick, self._refused = solve, refused
         self._lock = threading.RLock()
         self._fleet, self._graph, self._settings, self._manoeuvres = fleet, graph, settings, dict(manoeuvres)
+        self._members = Membership(fleet)
         self._budget = settings.horizon.budget if budget is None else budget
         self._period = 1.0 / settings.commands.rate
         self._history = CommandHistory(fleet.response("command_delay"), self._period)
@@ -114,6 +121,7 @@ class Coordinator:
         self._request: Optional[_Request] = None
         self._jobs: list[Job] = []
         self._token = 0
+        self._asked_at, self._took = 0.0, 0.0  # the last reference in motion: when it was asked for, how long one took
         self._planned_at = 0.0
         self._ended_at = 0.0
         self._refused_change = ""
@@ -154,11 +162,20 @@ class Coordinator:
         """The reference in force."""
         return self._pursuit.reference if self._pursuit is not None else None
 
-    def cannot_change_members(self) -> str:
-        """Why no robot can join or leave just now; "" when it can."""
-        if self._state in (State.IDLE, State.ENDED):
-            return ""
-        return f"robots join or leave only while the fleet is idle, and it is {self._state.value}"
+    @property
+    def taken_over(self) -> int:
+        """How many references have taken over since the manoeuvre in hand began or was resumed."""
+        return self._pursuit.taken_over if self._pursuit is not None else 0
+
+    def cannot_join(self, fleet: Fleet, graph: Optional[NeighbourGraph] = None) -> str:
+        """Why the fleet cannot become this one just now, in words; "" when it can.
+
+        In motion, whoever joins must stand, be ready, have been seen by the last steps, and have a neighbour.
+        """
+        with self._lock:
+            if self._resting:
+                return ""
+            return self._members.cannot_join(fleet, self._fleet.names, graph or self._graph, self._settings)
 
     # Requests
 
@@ -180,6 +197,7 @@ class Coordinator:
                     self._replace(snapshot.time, name, wanted, answered, request_id)
                     return
                 self._check_free("begun")
+                self._adopt()
                 estimate = self._look(snapshot)
                 self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
@@ -188,7 +206,7 @@ class Coordinator:
                 return
             # Nothing is known of what people sent the robots meanwhile; they must stand.
             self._history.clear()
-            fleet, graph, settings, states = self._fleet, self._graph, self._settings, estimate.states
+            fleet, graph, settings, states = self._fleet, self._neighbours, self._settings, estimate.states
             states[:, 3:], hazard = 0.0, self._hazard.point
 
             def make() -> Reference:
@@ -242,28 +260,31 @@ class Coordinator:
             if self._state is not State.HELD or self._pursuit is None or self._request is not None:
                 answered(Answer(False, f"nothing to resume: the fleet is {self._state.value}"))
                 return
+            self._members.waiting.clear()
             try:
                 _check_time(snapshot)
+                self._check_joining()
+                self._grow()
                 estimate = self._look(snapshot)
                 self._look_for_neighbours(snapshot.time, estimate, at_once=True)
                 self._check_fit(estimate, snapshot)
             except RefusedError as error:
                 answered(Answer(False, str(error)))
                 return
-            fleet, graph, settings = self._fleet, self._graph, self._settings
+            fleet, graph, settings, driving = self._fleet, self._neighbours, self._settings, self._driving
             old, since, states = self._pursuit.reference, self._pursuit.s(snapshot.time), estimate.states
             states[:, 4] = states[:, SPEED_COMMAND] = 0.0
             hazard = self._hazard.point
             if self._chain is not None and self._chain.more and since >= old.task.arrival - 1e-9:
-                self._ask("resume", self._next_maker(self._chain, states), answered, "", chain=self._chain.moved_on())
+                maker = self._next_maker(self._chain, states, driving)
+                self._ask("resume", maker, answered, "", chain=self._chain.moved_on())
                 return
-
-            def make() -> Reference:
-                left = reference.ways_left(old, states[:, POSE], since)
-                rest = manoeuvre.go_on(old.task, fleet, settings, states[:, POSE], graph.hops(), left, since, hazard)
-                return reference.make_again(rest, fleet, graph, settings, states)
-
-            self._ask("resume", make, answered, "", chain=self._chain)
+            wanted = self._manoeuvres.get(old.task.name)
+            self._ask(
+                "resume", lambda: members.resumed(
+                    old, since, fleet, graph, settings, states, driving, wanted, hazard
+                ), answered, "", chain=self._chain,
+            )
 
     def abandon(self, now: float) -> Answer:
         """Give up a held manoeuvre; the fleet is idle afterwards and people may drive."""
@@ -282,23 +303,24 @@ class Coordinator:
 
         Limits bind the gate and the next tick at once. In motion the rest of the reference is made anew and
         swapped in when the group reaches the moment from which it was made; the decision then shows the
-        coupling in force.
+        coupling in force. Who leaves in motion comes to a stand and is let go; who joins stands until it is driven.
 
-        Raises:
-            RefusedError: robots would join or leave while the fleet is not idle; nothing has changed.
+        Whoever cannot join (``cannot_join`` tells beforehand) is warned of, and joins when the fleet is idle.
+
+        Args:
+            fleet: everybody who is wanted. graph: neighbours among all of them.
         """
         with self._lock:
             now = self._moment(now)
-            self._check_members(fleet)
             self._settings = settings or self._settings
-            self._fleet = fleet or self._fleet
-            self._graph = (graph or self._graph).relative_to(self._fleet.names)
-            if self._fleet.names != self._decision.names:
-                self._start_afresh()
+            self._members.want(fleet or self._members.wanted)
+            self._fleet = members.renewed(self._fleet, self._members.wanted)
+            self._graph = (graph or self._graph).relative_to(self._members.everybody(self._fleet.names))
+            if self._resting:
+                self._adopt()
             self._observer.configure(self._fleet, self._settings.poses)
-            if self._state is State.MOVING and (self._request is None or self._request.kind in ("change", "next")):
-                self._forget_next()
-                self._remake(now)
+            if self._state is State.MOVING and not self._members.absent(self._fleet.names):
+                self._remake_if_free(now)  # otherwise the next step does, when it has rows for them
 
     def arm(self, name: str, now: float) -> Answer:
         """Turn away from hazards by a manoeuvre, for ``hazard.armed_for`` seconds, instead of stopping."""
@@ -377,14 +399,17 @@ class Coordinator:
             cautions: list[Caution] = []
             self._follow_clock(snapshot.time, "step")
             self._hazard.take(snapshot.hazard, snapshot.time, self._settings)
+            grew = self._follow_members(snapshot)
             jumped = self._observer.observe(self._believed(snapshot), self._planned)
             estimate = attrs.evolve(self._observer.estimate(snapshot.time, self._planned), jumped=jumped)
+            estimate = overlooked(estimate, self._fleet, self._outside)
             self._caps = caps(self._fleet, self._settings, estimate.states[:, None, POSE])[:, 0]
             self._settle(snapshot.time)
-            self._look_for_neighbours(snapshot.time, estimate)
+            self._look_for_neighbours(snapshot.time, estimate, at_once=grew)
             prepared = None
             if self._state is State.MOVING and self._pursuit is not None:
-                self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings)
+                outside = [self._fleet.index(name) for name in self._outside]
+                self._pursuit.advance(snapshot.time, estimate, self._fleet, self._settings, outside)
                 self._face_hazard(snapshot.time, estimate.states[:, POSE])
             elif self._state in (State.STOPPING, State.HELD) and self._pursuit is not None:
                 cautions += self._watchman.look_on(self._view(snapshot, estimate, self._pursuit))
@@ -399,7 +424,8 @@ class Coordinator:
             if prepared is not None and found is not None and self._state is State.MOVING:
                 cautions += found.cautions
                 self._drive(prepared, found, snapshot.time)
-            self._decision = self._decide(snapshot.time, estimate, plan, cautions)
+            if len(estimate.age) == len(self._fleet):  # otherwise others are wanted since
+                self._decision = self._decide(snapshot.time, estimate, plan, cautions)
             return self._decision
 
     def commands(self, now: float) -> Optional[dict[str, Command]]:
@@ -421,32 +447,107 @@ class Coordinator:
                 self._begin_stop(now, "a plan held numbers that are not finite", completed=False)
             return {
                 name: Command(float(speed), float(curvature))
-                for name, (speed, curvature) in zip(self._fleet.names, allowed)
+                for name, (speed, curvature) in zip(self._fleet.names, allowed) if name not in self._members.loose
             }
 
     # Requests, inside
 
-    def _check_members(self, fleet: Optional[Fleet]) -> None:
-        reason = self.cannot_change_members()
-        if fleet is not None and fleet.names != self._fleet.names and reason:
-            raise RefusedError(reason, "halt and abandon it first")
-
-    def _start_afresh(self) -> None:
-        """Other robots: nothing that was known of the old ones counts."""
+    def _adopt(self) -> None:
+        """While the fleet rests, others are taken as they are wanted: nothing that was known of the old ones counts."""
+        wanted = self._members.wanted
+        if wanted.names == self._members.under_command(self._fleet.names) == self._fleet.names:
+            return
+        self._members.start_afresh(wanted)
+        self._fleet, self._graph = wanted, self._graph.relative_to(wanted.names)
         self._history = CommandHistory(self._fleet.response("command_delay"), self._period)
         self._observer = Observer(self._fleet, self._settings.poses, self._history)
-        self._pursuit, self._state, self._reason = None, State.IDLE, ""
+        self._pursuit, self._state = None, State.IDLE
         self._caps = np.full(len(self._fleet), np.inf)
-        self._decision = Decision(self._decision.time, State.IDLE, self._fleet.names)
+        self._decision = Decision(
+            self._decision.time, State.IDLE, self._fleet.names, self._reason, completed=self._completed
+        )
+
+    @property
+    def _resting(self) -> bool:
+        return self._state in (State.IDLE, State.ENDED)
+
+    @property
+    def _driving(self) -> tuple[str, ...]:
+        return self._members.driving(self._fleet.names)
+
+    @property
+    def _outside(self) -> tuple[str, ...]:
+        """Carried only as obstacles: who leaves, and who does not drive yet."""
+        driven = self._members.under_command(self._fleet.names)
+        return tuple(name for name in self._fleet.names if name not in driven)
+
+    @property
+    def _neighbours(self) -> NeighbourGraph:
+        """The graph as it counts for a new reference, over all rows."""
+        return members.among(self._graph, self._fleet.names, self._driving)
+
+    def _grow(self) -> None:
+        """Rows for those who are wanted and not carried yet; they stand until they are driven."""
+        pursuit, new = self._pursuit, self._members.absent(self._fleet.names)
+        if pursuit is None or not new:
+            return
+        self._forget_next()
+        fleet = members.grown(self._fleet, self._members.wanted, new)
+        there = [self._members.bystanders.pose(name) for name in new]
+        self._history.grow(fleet.response("command_delay"), self._period)
+        self._observer.grow(fleet)
+        pursuit.grow(fleet, self._settings, np.concatenate([np.zeros((len(self._fleet), 3)), np.array(there)]))
+        self._fleet, self._caps = fleet, np.append(self._caps, np.full(len(new), np.inf))
+        self._members.loose |= frozenset(new)
+        self._observer.loose = self._members.loose
+
+    def _follow_members(self, snapshot: Snapshot) -> bool:
+        """Who joins gets a row, and who has left and stands is let go; returns whether there are new rows."""
+        self._members.bystanders.see(snapshot)
+        if self._state is State.IDLE:
+            self._adopt()
+        pursuit, before = self._pursuit, len(self._fleet)
+        if pursuit is None or not self._state.holds_fleet:
+            return False
+        if self._state is State.MOVING:
+            for name, reason in self._members.unfit(self._fleet.names, self._settings.poses).items():
+                self._put_off((name,), reason, snapshot.time)
+            self._grow()
+            if len(self._fleet) > before:
+                self._remake_if_free(snapshot.time)
+        self._let_go(snapshot.time, pursuit)
+        return len(self._fleet) > before
+
+    def _let_go(self, now: float, pursuit: Pursuit) -> None:
+        speeds, still = pursuit.schedule.moment(now)[:, 0], self._state in (State.HELD, State.ENDED)
+        standing = {
+            name: bool(abs(speeds[k]) < _STANDING)
+            for k, name in enumerate(self._fleet.names)
+            if name not in (*self._driving, *self._members.loose) and (still or k in pursuit.reference.task.stands)
+        }
+        rest = self._settings.commands.zeros_after_end + _SETTLE_LAGS * float(lags(self._fleet).max())
+        rows = [self._fleet.index(name) for name in self._members.let_go(now, standing, rest)]
+        if rows:
+            self._history.forget(rows)
+            pursuit.schedule = pursuit.schedule.stilled(rows)
+            self._observer.loose = self._members.loose
+
+    def _put_off(self, names: tuple[str, ...], reason: str, now: float) -> None:
+        """Robots that cannot join the running manoeuvre wait until the fleet is idle; the others go on."""
+        self._members.put_off(names, reason)
+        self._forget_next()
+        for name in set(names) & set(self._fleet.names):
+            if self._pursuit is not None:
+                self._pursuit.drop_drivers_of(self._fleet.index(name))
+        self._remake_if_free(now)
 
     def _manoeuvre(self, name: str, overrides: Mapping[str, float]) -> Manoeuvre:
         if name not in self._manoeuvres:
             raise RefusedError(f"{name!r} is not a manoeuvre", "ask for one of " + ", ".join(self._manoeuvres))
         wanted = self._manoeuvres[name]
-        known = {field.name: field for field in attrs.fields(type(wanted))}
+        there = [key for key in describe(type(wanted)) if not isinstance(getattr(wanted, key), (tuple, str))]
         for key, value in overrides.items():
-            if key not in known or isinstance(getattr(wanted, key), tuple):
-                there = [key for key in known if not isinstance(getattr(wanted, key), tuple)]
+            if key not in there:
                 raise RefusedError(f"{name} has no number {key!r} to override", "override one of " + ", ".join(there))
             if isinstance(value, bool) or not isinstance(value, (int, float)):
                 raise SettingsError(f"{value!r} is not a number", key=key, allowed="a number")
@@ -462,25 +563,32 @@ class Coordinator:
         if snapshot.other_planner:
             raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
 
+    def _check_joining(self) -> None:
+        for reason in self._members.unfit(self._fleet.names, self._settings.poses).values():
+            raise RefusedError(reason, "see to it, or disable it")
+
     def _check_fit(self, estimate: Estimate, snapshot: Snapshot) -> None:
         """Every robot has a fresh pose and may be driven."""
+        driving = self._driving
         stale = [
-            name for name, age in zip(self._fleet.names, estimate.age) if not age <= self._settings.poses.max_age
+            name for name, age in zip(self._fleet.names, estimate.age)
+            if name in driving and not age <= self._settings.poses.max_age
         ]
         if stale:
             raise RefusedError(
                 f"no fresh pose of {', '.join(stale)} ({self._settings.poses.max_age:g} s allowed)",
                 "check localisation, the topic, its frame and the clocks",
             )
-        if len(self._fleet) > 1 and not self._graph.connected and not self._settings.coupling.may_split:
-            words = " | ".join(" ".join(part) for part in self._graph.components())
+        graph = self._graph.relative_to(driving)
+        if len(driving) > 1 and not graph.connected and not self._settings.coupling.may_split:
+            words = " | ".join(" ".join(part) for part in graph.components())
             raise RefusedError(
                 f"the neighbour graph falls into parts that do not copy each other: {words}",
                 "join them by an edge, or set coupling.may_split",
             )
         if snapshot.other_planner:
             raise RefusedError(f"{snapshot.other_planner} drives this fleet too", "stop one of the two planners")
-        unready = sorted((snapshot.not_ready | snapshot.silent) & set(self._fleet.names))
+        unready = sorted((snapshot.not_ready | snapshot.silent) & set(driving))
         if unready:
             raise RefusedError(f"{', '.join(unready)} not ready to be driven", "make them ready or disable them")
 
@@ -536,19 +644,29 @@ class Coordinator:
         assert pursuit is not None
         last = pursuit.last()
         earlier = last.at - float(last.reference.plan.times[0])
-        at = max(pursuit.s(now + self._settings.horizon.lead), last.at)
+        self._asked_at, lead = now, max(self._settings.horizon.lead, _TAKES * self._took)
+        at = max(pursuit.s(now + lead), last.at)
         return last.reference, at - earlier, at
+
+    def _remake_if_free(self, now: float) -> None:
+        """Make the rest anew, unless what is being made is looked at again when it is there."""
+        if self._request is not None and self._request.kind == "next":
+            self._cancel("something was changed meanwhile; ask again")
+        if self._request is None or self._request.kind == "change":
+            self._forget_next()
+            self._remake(now)
 
     def _remake(self, now: float) -> None:
         """Make the rest of the manoeuvre anew, under what is now in force."""
         old, leaves, at = self._branch(now)
         if leaves > old.end - 2 * self._settings.horizon.interval:
+            self._members.put_off(self._members.joining(self._fleet.names), "the running manoeuvre is nearly over")
             return
-        fleet, graph, settings = self._fleet, self._graph, self._settings
-        task = self._in_force(old.task)
+        fleet, graph, settings, driving = self._fleet, self._neighbours, self._settings, self._driving
+        task, wanted = self._in_force(old.task), self._manoeuvres.get(old.task.name)
         self._ask(
-            "change", lambda: reference.make_rest(task, fleet, graph, settings, old, leaves), lambda _a: None, "", at,
-            self._remake,
+            "change", lambda: members.rest(task, fleet, graph, settings, old, leaves, driving, wanted),
+            lambda _a: None, "", at, self._remake,
         )
 
     def _replace(
@@ -565,21 +683,14 @@ class Coordinator:
         owed = before is not None and (before.kind == "change" or before.supersedes_change)
         self._forget_next()
         old, leaves, at = self._branch(now)
-        fleet, graph, settings, states = self._fleet, self._graph, self._settings, old.state(leaves)
-        hazard = hazard or self._hazard.point
-
-        def make() -> Reference:
-            _check_forward(name, fleet, states)
-            speed = float(states[:, SPEED_COMMAND].max())
-            task = manoeuvre.work_out(
-                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), states[:, CURVATURE_COMMAND],
-                hazard,
-            )
-            return reference.make(task, fleet, graph, settings, states)
-
+        fleet, settings, states = self._fleet, self._settings, old.state(leaves)
+        driving = self._members.under_command(fleet.names)
+        graph = members.among(self._graph, fleet.names, driving)
+        away = hazard or self._hazard.point
         self._ask(
-            "replace", make, answered, request_id, at,
-            lambda later: self._replace(later, name, wanted, answered, request_id, hazard), _chain(name, wanted),
+            "replace", lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving, away),
+            answered, request_id, at, lambda later: self._replace(later, name, wanted, answered, request_id, away),
+            _chain(name, wanted),
         )
         if owed and self._request is not None:
             self._request = attrs.evolve(self._request, supersedes_change=True)
@@ -611,7 +722,12 @@ class Coordinator:
 
     def _follow_changes(self, request: _Request, now: float) -> None:
         """What was changed while a reference was being made is followed at once."""
-        if request.made_for != (self._fleet, self._graph, self._settings) and self._pursuit is not None:
+        pursuit = self._pursuit
+        if pursuit is None:
+            return
+        stands = {self._fleet.names[k] for k in pursuit.last().reference.task.stands}
+        others = stands != set(self._fleet.names) - set(self._driving)
+        if others or request.made_for != (self._fleet, self._graph, self._settings):
             self._remake(now)
 
     def _in_force(self, task: Task) -> Task:
@@ -630,19 +746,25 @@ class Coordinator:
         if self._state is not State.MOVING or pursuit is None:
             reason = f"{self._state.value} before it could take over; begin it again when the fleet is idle"
             request.answered(Answer(False, f"the fleet was {reason}", request.request_id))
+        elif outcome.reference is None and not replaces and self._members.joining(self._fleet.names):
+            self._put_off(self._members.joining(self._fleet.names), outcome.reason, now)
         elif outcome.reference is None:
             if not replaces:
                 self._refused_change = outcome.reason
             request.answered(Answer(False, f"{outcome.reason} (the running manoeuvre goes on)", request.request_id))
             if request.supersedes_change:
                 self._remake(now)
-            else:
+            elif replaces or request.made_for != (self._fleet, self._graph, self._settings):
                 self._follow_changes(request, now)
         elif pursuit.s(now + self._settings.horizon.budget) > request.takes_over_at:
             self._request = request if request.supersedes_change else None
+            self._took = now - self._asked_at
             request.again(now)  # it starts from a moment that has passed: make it again from a later one
         else:
-            pursuit.expect(Takeover(outcome.reference, request.takes_over_at))
+            self._took = 0.0
+            poses = self._observer.estimate(now, self._planned).states[:, POSE]
+            made = members.extended(outcome.reference, self._fleet, self._settings, poses)
+            pursuit.expect(Takeover(made, request.takes_over_at))
             self._silence = outcome.silence
             if replaces:
                 self._chain = request.chain
@@ -651,18 +773,11 @@ class Coordinator:
             request.answered(Answer(True, text, request.request_id))
             self._follow_changes(request, now)
 
-    def _next_maker(self, chain: Chain, states: np.ndarray) -> Callable[[], Reference]:
+    def _next_maker(self, chain: Chain, states: np.ndarray, driving: tuple[str, ...]) -> Callable[[], Reference]:
         """Makes the reference of the next part from where the part before it ends."""
-        fleet, graph, settings, (name, wanted) = self._fleet, self._graph, self._settings, chain.next
-        speed, hazard = float(states[:, SPEED_COMMAND].max()), self._hazard.point
-
-        def make() -> Reference:
-            task = manoeuvre.work_out(
-                name, wanted, fleet, settings, states[:, POSE], speed, graph.hops(), hazard=hazard
-            )
-            return reference.make(task, fleet, graph, settings, states)
-
-        return make
+        fleet, settings, hazard, (name, wanted) = self._fleet, self._settings, self._hazard.point, chain.next
+        graph = members.among(self._graph, fleet.names, driving)
+        return lambda: members.replaced(name, wanted, fleet, graph, settings, states, driving, hazard)
 
     def _ask_next(
         self, chain: Chain, answered: Answered = lambda _answer: None, request_id: str = ""
@@ -670,7 +785,9 @@ class Coordinator:
         assert self._pursuit is not None
         before = self._pursuit.before(None if self._chain is None else self._chain.expected)
         old, ends = before.reference, before.at - float(before.reference.plan.times[0]) + before.reference.end
-        self._ask("next", self._next_maker(chain, old.state(old.end)), answered, request_id, ends, chain=chain)
+        driven = tuple(name for k, name in enumerate(self._fleet.names) if k not in old.task.stands)
+        maker = self._next_maker(chain, old.state(old.end), self._members.driving(driven))
+        self._ask("next", maker, answered, request_id, ends, chain=chain)
 
     def _look_after_next(self, cautions: list[Caution]) -> None:
         """Have the next part made, well before it begins."""
@@ -724,9 +841,15 @@ class Coordinator:
         values = np.zeros((len(self._fleet), 2)) if last is None else last[1]
         self._pursuit = Pursuit(made, begins, 0.0, values, self._fleet)
         self._state, self._reason, self._stop = State.MOVING, "", None
+        self._take_up(made)
         # Whoever watches for decisions that stay away counts from here, not from one of long ago.
         self._decision = attrs.evolve(self._decision, time=now)
         self._planned_at, self._refused_change, self._watchman = begins, "", Judge()
+
+    def _take_up(self, made: Reference) -> None:
+        """Whoever a reference drives is under command from now on."""
+        self._members.take_up(self._fleet.names[k] for k in made.task.stands)
+        self._observer.loose = self._members.loose
 
     # The loop, inside
 
@@ -750,6 +873,7 @@ class Coordinator:
             self._seen = {each: time + back for each, time in self._seen.items()}
             self._history.shift(back)
             self._observer.shift(back)
+            self._members.shift(back)
             if self._pursuit is not None:
                 self._pursuit.shift(back)
             self._stop_over, self._planned_at = self._stop_over + back, self._planned_at + back
@@ -776,7 +900,9 @@ class Coordinator:
 
     def _look_for_neighbours(self, now: float, estimate: Estimate, at_once: bool = False) -> None:
         """Take up the graph that the poses give, where it is they that give it."""
-        found = self._lookout.found(self._settings.neighbours, self._graph, estimate.states[:, :2], now, at_once)
+        rows = [self._fleet.index(name) for name in self._driving]
+        graph, places = self._graph.relative_to(self._driving), estimate.states[rows, :2]
+        found = self._lookout.found(self._settings.neighbours, graph, places, now, at_once)
         if found is not None:
             self.change(now, graph=found)
 
@@ -817,18 +943,21 @@ class Coordinator:
 
     def _view(self, snapshot: Snapshot, estimate: Estimate, pursuit: Pursuit) -> View:
         at = snapshot.time + float(self._history.effect_delay.max())
+        driven = self._graph.relative_to(self._members.under_command(self._fleet.names))
         return View(
-            snapshot, estimate, self._fleet, self._graph, self._settings, pursuit, at,
+            snapshot, estimate, self._fleet, driven, self._settings, pursuit, at,
             1.0 / self._settings.horizon.rate, self._refused_change, self._silence,
-            hazards(self._settings, self._hazard.point),
+            hazards(self._settings, self._hazard.point), frozenset(self._outside), dict(self._members.waiting),
         )
 
     def _prepare(self, now: float) -> Optional[Prepared]:
         pursuit = self._pursuit
         assert pursuit is not None
         at = now + self._lead_time()
-        if pursuit.swap_when_due(at) and self._chain is not None and pursuit.reference is self._chain.expected:
-            self._silence, self._chain = self._chain.silence, self._chain.moved_on()
+        if pursuit.swap_when_due(at):
+            self._take_up(pursuit.reference)
+            if self._chain is not None and pursuit.reference is self._chain.expected:
+                self._silence, self._chain = self._chain.silence, self._chain.moved_on()
         if pursuit.s(at) >= pursuit.reference.end:
             self._planned_at = now  # nothing is left to plan: the commands run out in zeros
             return None
@@ -902,7 +1031,7 @@ class Coordinator:
         common: dict[str, Any] = {
             "time": now, "state": self._state, "names": self._fleet.names, "reason": self._reason,
             "completed": self._completed, "poses": estimate.states[:, POSE],
-            "warnings": self._watchman.hold(now, cautions),
+            "warnings": self._watchman.hold(now, cautions), "outside": self._outside,
         }
         if pursuit is None:
             return Decision(**common)
@@ -944,16 +1073,6 @@ def _figures(made: Reference) -> str:
 def _check_time(snapshot: Snapshot) -> None:
     if not np.isfinite(snapshot.time):
         raise RefusedError("it is not known what time it is", "check the clock")
-
-
-def _check_forward(name: str, fleet: Fleet, states: np.ndarray) -> None:
-    """A manoeuvre that replaces another begins with everyone driving forward or standing."""
-    backward = [robot for robot, speed in zip(fleet.names, states[:, SPEED_COMMAND]) if speed < -_STANDING]
-    if backward:
-        raise RefusedError(
-            f"{name}: {', '.join(backward)} will be driving backward when it would take over",
-            "ask again when all drive forward, or halt the fleet first",
-        )
 
 
 def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:

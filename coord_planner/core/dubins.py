@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Shortest paths of a robot that drives forward and turns with bounded curvature.
 
 Dubins, American Journal of Mathematics 79 (1957) 497-516: a shortest path consists of at most three

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What footprints stay outside of or inside of, and the lines that hold them there: keep-outs, a hazard, a strip."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Robots: their limits, their footprint and how they respond to commands."""
 
 from __future__ import annotations

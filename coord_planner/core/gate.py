@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The last gate before publication: simple, separate from the optimiser, and never open to nonsense.
 
 Whatever comes in, what goes out is finite, within every limit of its robot, and reachable from the last

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The neighbour graph: who copies whom, and what follows from it."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Nodes at fixed moments of the manoeuvre: the first interval shrinks, the others stay where they are."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Points that arrive in motion: what is known of them, whether turning away is armed, and who would come near."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the robots have been sent, as it takes effect on them."""
 
 from __future__ import annotations
@@ -46,6 +49,17 @@ class CommandHistory:
         """Forget everything: nothing is in flight any more."""
         self._sent = self._nothing
         self._driven[:] = -np.inf
+
+    def grow(self, command_delays: np.ndarray, period: float) -> None:
+        """Room for robots that come last from now on; they have been sent zeros. Delays of all, shape (N,)."""
+        more = len(command_delays) - len(self.effect_delay)
+        self._sent, self._nothing = self._sent.grown(more), self._nothing.grown(more)
+        self._gear, self._driven = np.append(self._gear, np.zeros(more)), np.append(self._driven, [-np.inf] * more)
+        self.effect_delay = np.asarray(command_delays, dtype=float) + period / 2
+
+    def forget(self, rows: list[int]) -> None:
+        """Some robots were let go: whatever they were sent no longer counts."""
+        self._sent = self._sent.stilled(rows)
 
     def shift(self, by: float) -> None:
         """The clock was set: what was sent was sent so many seconds later by it."""

@@ -1,7 +1,11 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Judges each tick: what is going wrong, and whether the fleet must stop because of it."""
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Optional
 
 import attrs
@@ -33,7 +37,11 @@ _SCATTER = 3.0  # times the expected scatter of poses
 
 @attrs.frozen(eq=False)
 class View:
-    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds."""
+    """What is judged. ``at`` is the first moment at which a stop could take effect, seconds.
+
+    Robots in ``outside`` are obstacles only, and the graph is that of the others; ``waiting`` tells why some cannot
+    join.
+    """
 
     snapshot: Snapshot
     estimate: Estimate
@@ -46,6 +54,8 @@ class View:
     refused_change: str
     silence: Optional[Silence]
     hazards: tuple[Piece, ...] = ()
+    outside: frozenset[str] = frozenset()
+    waiting: Mapping[str, str] = attrs.field(factory=dict)
 
 
 class Judge:
@@ -61,7 +71,8 @@ class Judge:
         """Everything that is wrong at this moment, in motion."""
         found = [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
         found += [*_following(view), *self._limits(view), *_plans(view), *_spacing(view), *_fenced(view)]
-        return found
+        found = [caution for caution in found if caution.subject not in view.outside]
+        return found + [rules.not_joined(view.settings, name, reason) for name, reason in view.waiting.items()]
 
     def look_on(self, view: View) -> list[Caution]:
         """What is wrong while the fleet stops or is held: what comes in is told all the same."""
@@ -101,10 +112,11 @@ class Judge:
         if self._graph is not None and self._graph.edges != view.graph.edges:
             found.append(rules.graph_changed(view.settings, len(view.graph.edges)))
         self._graph = view.graph
-        if len(view.fleet) > 1 and not view.graph.connected:
+        if len(view.graph.names) > 1 and not view.graph.connected:
             found.append(rules.graph_split(view.settings, view.graph.components()))
         elif len(view.fleet) > 1 and view.settings.neighbours.warn_below > 0.0:
-            holding = neighbours.holding(view.settings.neighbours, view.graph, view.estimate.states[:, :2])
+            rows = [view.fleet.index(name) for name in view.graph.names]
+            holding = neighbours.holding(view.settings.neighbours, view.graph, view.estimate.states[rows, :2])
             if holding < view.settings.neighbours.warn_below:
                 found.append(rules.graph_thin(view.settings, holding))
         return found

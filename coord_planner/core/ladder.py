@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is driven when a tick brings no finished plan: one step down after another, each checked, each with its reason.
 
 1. The solver's own plan. 2. What it had found when its time ran out. 3. The last plan, shifted to now, for at most

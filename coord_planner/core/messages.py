@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What goes into the coordinator and what comes out of it, without any middleware."""
 
 from __future__ import annotations
@@ -132,6 +135,7 @@ class Decision:
         solve_time: seconds spent optimising in this tick.
         completed: the last manoeuvre was carried through to its end.
         warnings: what is going wrong now.
+        outside: robots that are obstacles only: they leave, or stand and wait to join.
     """
 
     time: float
@@ -152,6 +156,7 @@ class Decision:
     solve_time: float = 0.0
     completed: bool = False
     warnings: tuple[Caution, ...] = ()
+    outside: tuple[str, ...] = ()
 
 
 @attrs.frozen

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How machines move under commands: a lag of first order, then arcs. Many robots at once."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The global minimum of the classical form, at the windings that the headings state: many first guesses, carried along.
 
 The problem has many local minima (loops, S-shapes, who turns with whom). First guesses are combinations of the

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The neighbour graph from where the robots are: the nearest of each, or all within a range.
 
 What is joined already counts as nearer than it is, so that edges do not flicker where two distances are about equal or

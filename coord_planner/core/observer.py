@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where the robots are and what they have reached: measured poses joined with what they were sent."""
 
 from __future__ import annotations
@@ -68,12 +71,22 @@ class Observer:
         self._stamp = np.full(count, -np.inf)
         self._reached = np.zeros((count, 2))  # speed, curvature, before the speed factor
         self._one_sided = np.zeros(count)  # running mean of innovations along the heading, in standard deviations
+        self.loose: frozenset[str] = frozenset()  # not under command: each pose tells afresh where they are
         self._squared = np.ones(count)  # running mean of squared innovations, each relative to its variance
 
     def configure(self, fleet: Fleet, settings: Poses) -> None:
         """New limits or noise; what is known about the robots stays."""
         self._fleet, self._settings = fleet, settings
         self._lags = lags(fleet)
+
+    def grow(self, fleet: Fleet) -> None:
+        """Room for robots that come last from now on; nothing is known of them yet."""
+        fresh = Observer(fleet, self._settings, self._history)
+        known = len(self._fleet)
+        for name in ("_mean", "_cov", "_stamp", "_reached", "_one_sided", "_squared"):
+            getattr(fresh, name)[:known] = getattr(self, name)
+            setattr(self, name, getattr(fresh, name))
+        self.configure(fleet, self._settings)
 
     def shift(self, by: float) -> None:
         """The clock was set: what was seen was seen so many seconds later by it."""
@@ -85,8 +98,9 @@ class Observer:
             (k, poses[name]) for k, name in enumerate(self._fleet.names)
             if name in poses and poses[name].stamp > self._stamp[k] + 1e-9
         ]
-        first = [(k, pose) for k, pose in fresh if not np.isfinite(self._stamp[k])]
-        later = [(k, pose) for k, pose in fresh if np.isfinite(self._stamp[k])]
+        anew = [not np.isfinite(self._stamp[k]) or self._fleet.names[k] in self.loose for k, _ in fresh]
+        first = [each for each, afresh in zip(fresh, anew) if afresh]
+        later = [each for each, afresh in zip(fresh, anew) if not afresh]
         for k, pose in first:
             self._restart(k, pose)
         if not later:

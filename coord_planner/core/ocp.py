@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem -> NLP: one small function for each term of the cost and each limit.
 
 Expressions are CasADi matrices of N robots by M intervals (or M + 1 nodes); every term works on whole
@@ -213,9 +216,9 @@ def steep_prices(v: Named, p: Named) -> Matrix:
     return p["price_clearance"] * short + ca.sum1(ca.vec(p["price_end"] * (v["over"] + v["under"])))
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=8)
 def build(shape: Shape) -> Program:
-    """The program for problems of a shape. Takes a while for large fleets; the result is kept."""
+    """The program for problems of a shape. Takes a while for large fleets; the last few are kept (tens of MB each)."""
     variables, parameters, rows = variable_blocks(shape), parameter_blocks(shape), row_blocks(shape)
     x, v = variables.symbols()
     p_all, p = parameters.symbols()
@@ -339,7 +342,7 @@ def _soft_abs(value: Matrix) -> Matrix:
     return ca.sqrt(value**2 + _ROUNDING**2)
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=8)
 def _evaluated(shape: Shape) -> ca.Function:
     program = build(shape)
     return ca.Function("rows", [program.x, program.p], [program.g])

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Whether a solution of a nonlinear program is one: residuals by own evaluation, and the inertia of the KKT matrix.
 
 Second-order conditions: Nocedal & Wright, *Numerical Optimization*, 2nd ed., theorems 12.5 and 12.6 and section 16.1.

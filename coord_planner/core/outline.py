@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Exact outlines of robots and the distances between them (shapely), in metres."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parameters that describe themselves: unit, range and meaning stand beside the default.
 
 A settings group is a frozen attrs class whose fields are made by :func:`parameter`. The

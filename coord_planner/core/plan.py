@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Plan: every robot's states from node to node, with what it costs and what it could not keep."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem: all that one plan depends on, as data that one can look at, save and solve again."""
 
 from __future__ import annotations

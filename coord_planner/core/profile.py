@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Speed along a way: speed up, hold, slow down."""
 
 from __future__ import annotations

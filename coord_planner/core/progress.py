@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How fast the group moves along its reference: everybody slows when one is held up."""
 
 from __future__ import annotations
@@ -13,6 +16,10 @@ class GroupProgress:
     def __init__(self, robots: int) -> None:
         self.pace = 1.0  # seconds of the reference per second of the clock
         self.lag = np.zeros(robots)  # filtered, metres, >= 0 behind
+
+    def grow(self, robots: int) -> None:
+        """Room for so many more robots, that are not behind."""
+        self.lag = np.concatenate([self.lag, np.zeros(robots)])
 
     def update(
         self, elapsed: float, behind: np.ndarray, deficit: np.ndarray, settings: Progress, fastest_fall: float

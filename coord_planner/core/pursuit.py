@@ -1,7 +1,11 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A manoeuvre under way: where the group is along its reference, and the plan that is being driven."""
 
 from __future__ import annotations
 
+from collections.abc import Collection
 from typing import Optional
 
 import attrs
@@ -9,6 +13,7 @@ import numpy as np
 
 from . import tick as ticks
 from .fleet import Fleet
+from .members import extended
 from .observer import Estimate
 from .plan import Plan
 from .problem import SPEED, SPEED_COMMAND, THETA, Problem
@@ -67,6 +72,7 @@ class Pursuit:
         self.tick: Optional[Tick] = None
         self.ahead: Optional[Plan] = None  # the plan of the last tick, through the end of the manoeuvre to the next
         self.coming: tuple[Takeover, ...] = ()  # in the order in which they fall due
+        self.taken_over = 0  # references so far
         self._s, self._time = at, begins
         self._updated = begins
         self._plan_pace = 1.0  # of the plan being driven
@@ -98,8 +104,26 @@ class Pursuit:
         """Moment at which a second of the manoeuvre is reached at the present pace."""
         return self._time + (s - self._s) / self.pace
 
-    def advance(self, now: float, estimate: Estimate, fleet: Fleet, settings: Settings) -> None:
-        """Move the group on, and slow it when one of them is held up."""
+    def grow(self, fleet: Fleet, settings: Settings, poses: np.ndarray) -> None:
+        """Room for robots that come last from now on and stand; poses of all, shape (N, 3)."""
+        more = len(fleet) - len(self.behind)
+        self.reference = extended(self.reference, fleet, settings, poses)
+        self.coming = tuple(
+            attrs.evolve(each, reference=extended(each.reference, fleet, settings, poses)) for each in self.coming
+        )
+        self.progress.grow(more)
+        self.behind = np.concatenate([self.behind, np.zeros(more)])
+        self.schedule, self.tick, self.ahead = self.schedule.grown(more), None, None
+
+    def drop_drivers_of(self, row: int) -> None:
+        """What is to come no longer comes, from the first on in which a robot is driven that must not be."""
+        kept = [row in each.reference.task.stands for each in self.coming]
+        self.coming = self.coming[: kept.index(False) if False in kept else None]
+
+    def advance(
+        self, now: float, estimate: Estimate, fleet: Fleet, settings: Settings, outside: Collection[int] = ()
+    ) -> None:
+        """Move the group on, and slow it when one of them is held up; nobody waits for those at ``outside``."""
         s_now = self.s(now)
         asked = self.reference.state(max(s_now, self.reference.plan.times[0]))
         heading, gear = asked[:, THETA], self.reference.task.directions(s_now)
@@ -107,6 +131,8 @@ class Pursuit:
         self.behind = np.sum((asked[:, :2] - estimate.states[:, :2]) * ahead, axis=1)
         expected = np.minimum(gear * estimate.states[:, SPEED_COMMAND], self.pace * gear * asked[:, SPEED])
         deficit = np.maximum(expected - gear * estimate.states[:, SPEED], 0.0) * (estimate.speed_factor < 0.99)
+        aside = [*self.reference.task.stands, *outside]
+        self.behind[aside] = deficit[aside] = 0.0
         elapsed = max(now - self._updated, 0.0)
         fastest = max(float(np.max(np.abs(asked[:, SPEED]))), _SLOW * float(np.max(self.reference.task.asked)), 1e-3)
         fall = _FALL * float(np.min(fleet.limit("max_braking"))) / fastest
@@ -140,6 +166,7 @@ class Pursuit:
             tick = self._carried(due.reference) if abs(earlier) < 1e-9 else None
             self.reference, self.tick = due.reference, tick
             self._s -= earlier
+            self.taken_over += 1
             self.coming = tuple(attrs.evolve(each, at=each.at - earlier) for each in rest)
             swapped = True
         return swapped
@@ -169,6 +196,7 @@ class Pursuit:
         old = self.tick.reference
         same = (
             old.task.name == new.task.name
+            and len(old.plan.states) == len(new.plan.states)
             and np.array_equal(old.pairs, new.pairs)
             and np.array_equal(old.graph.index_edges(), new.graph.index_edges())
             and np.array_equal(old.fencing.bound, new.fencing.bound)

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Shortest paths of a robot that drives both ways and turns with bounded curvature.
 
 Reeds & Shepp, Pacific Journal of Mathematics 145 (1990) 367-393: a shortest path has one of 48 words of at most five

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The plan of a whole manoeuvre, made once when it begins, against which ticks are held."""
 
 from __future__ import annotations
@@ -32,6 +35,7 @@ from .problem import (
     bounds_in_force,
 )
 from .settings import Settings
+from .standing import held
 from .watch import choose_pairs, watch
 
 _ROUNDS = 6  # re-solves with separating lines taken from the last solution
@@ -80,14 +84,15 @@ class Reference:
         states = self.plan.sample(np.minimum(s, self.end))
         after = s > self.end
         if after.any():
-            ahead = self.task.end_speed * (s[after] - self.end)
-            heading = states[:, after, THETA]
+            speeds = np.full((len(states), 1), self.task.end_speed)
+            speeds[list(self.task.stands)] = 0.0
+            ahead, heading = speeds * (s[after] - self.end), states[:, after, THETA]
             states[:, after, 0] += ahead * np.cos(heading)
             states[:, after, 1] += ahead * np.sin(heading)
-            straight = (CURVATURE, CURVATURE_COMMAND), 0.0
-            for columns, value in (straight, ((SPEED, SPEED_COMMAND), self.task.end_speed)):
-                for column in columns:
-                    states[:, after, column] = value
+            for column in (CURVATURE, CURVATURE_COMMAND):
+                states[:, after, column] = 0.0
+            for column in (SPEED, SPEED_COMMAND):
+                states[:, after, column] = speeds
         return states
 
 
@@ -223,12 +228,15 @@ def end_target(task: Task, count: int) -> np.ndarray:
     target[:, 1] += past * np.sin(task.ends[:, 2])
     target[:, [CURVATURE, CURVATURE_COMMAND]] = 0.0
     target[:, [SPEED, SPEED_COMMAND]] = task.end_speed
+    target[list(task.stands)] = np.nan
     return target
 
 
 def asked_speeds(task: Task, s: np.ndarray) -> np.ndarray:
     """Mean asked speed in each interval between seconds of the manoeuvre, shape (N, M), backward negative."""
-    return task.asked_speed(s)
+    asked = task.asked_speed(s)
+    asked[list(task.stands)] = 0.0
+    return asked
 
 
 def turn_speeds(task: Task, asked: np.ndarray) -> np.ndarray:
@@ -259,11 +267,11 @@ def _problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=1.0, initial=initial, asked_speed=asked,
         turn_speed=turn_speeds(task, asked), full_speed=task.asked, target=end_target(task, len(fleet)),
-        bounds=bounds_in_force(
+        bounds=held(bounds_in_force(
             fleet, initial, times, task.arrival, task.end_speed,
             np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed)),
             rules.max_lateral_acceleration, task.max_curvature, task.gears(times[1:]),
-        ),
+        ), fleet, initial, times, task.stands),
         watch=watch(fleet, settings, pairs, guess[:, :, POSE], task.speed),
         fences=fences.rows(fleet, settings, guess[:, :, POSE], task.speed),
         compared=None if task.behind is None else succession.comparison(task, graph.index_edges(), times),

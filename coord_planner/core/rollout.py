@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """States that follow from commands: a plan that no solver has finished, made consistent."""
 
 from __future__ import annotations

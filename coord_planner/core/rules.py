@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is going wrong, in plain words, with what the fleet does about it and the deferral to the site's rules."""
 
 from __future__ import annotations
@@ -100,6 +103,10 @@ TABLE = (
     Row("hazard seen", Level.ERROR, Response.STOP, "a hazard is seen, or lies near the way, and nothing is armed"),
     Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
     Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
+    Row(
+        "robot not joined", Level.WARN, Response.GO_ON,
+        "a robot cannot join the running manoeuvre; it joins when the fleet is idle",
+    ),
     Row("change refused", Level.ERROR, Response.STOP, "the rest of the manoeuvre cannot be kept under new settings"),
 )
 
@@ -254,6 +261,10 @@ def silence_unsafe(settings: Settings, silence: Silence) -> Caution:
         "(shorter command time-outs, less speed or more spacing would help)"
     )
     return _caution(settings, "silence unsafe", " and ".join(silence.pair), Level.WARN, figures)
+
+
+def not_joined(settings: Settings, name: str, reason: str) -> Caution:
+    return _caution(settings, "robot not joined", name, Level.WARN, f"it joins when the fleet is idle: {reason}")
 
 
 def hazard_known(settings: Settings, point: Sequence[float]) -> Caution:

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Commands over time as they take effect: straight pieces between moments common to all robots."""
 
 from __future__ import annotations
@@ -35,6 +38,16 @@ class Schedule:
     def moment(self, time: float) -> np.ndarray:
         """Values of all robots at one moment, shape (N, 2)."""
         return self.at(np.full(len(self.values), time))
+
+    def grown(self, count: int) -> Schedule:
+        """The same with so many more robots, that stand."""
+        return Schedule(self.times, np.concatenate([self.values, np.zeros((count, len(self.times), 2))]))
+
+    def stilled(self, rows: list[int]) -> Schedule:
+        """The same in which some robots stand, and always did."""
+        values = self.values.copy()
+        values[rows] = 0.0
+        return Schedule(self.times, values)
 
     def splice(self, after: Schedule, switch: float, since: float) -> Schedule:
         """This schedule until ``switch``, the other one from there on; what lies before ``since`` is dropped."""

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """SE(2): one set of formulas for floats, numpy arrays and CasADi symbols.
 
 A pose is (x, y, theta): position in metres and heading in radians, anticlockwise from the x axis.

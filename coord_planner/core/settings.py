@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Settings of the planner, in groups named like the groups of the parameter file."""
 
 from __future__ import annotations

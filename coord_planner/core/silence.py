@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Should the planner fall silent: do robots that time out separately, and brake by themselves, stay clear?"""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """NLP -> Plan with CasADi's interior-point interface: first solves from a guess, later ones from the last plan."""
 
 from __future__ import annotations
@@ -42,7 +45,7 @@ class Start:
     multipliers: Optional[tuple[np.ndarray, np.ndarray]] = None
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=8)
 def _solver(shape: Shape, kind: str, budget: float) -> ca.Function:
     program = ocp.build(shape)
     options: dict[str, Any] = dict(_OPTIONS[kind])

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Controlled stops along the planned curves: in step, or each as hard as it may."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Robots that turn one after the other at the same place: neighbours compared at equal path coordinate.
 
 Everybody drives the same way, ``behind`` metres apart, and at the same speed at the same moment; so who is d metres

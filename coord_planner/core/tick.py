@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One re-planning: the reference's problem over the horizon only, from the state at hand, ending on the reference."""
 
 from __future__ import annotations
@@ -17,6 +20,7 @@ from .problem import CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND, STATES, THET
 from .reference import Reference, asked_speeds, turn_speeds, turnings
 from .rollout import rolled_out
 from .settings import Settings
+from .standing import held, where_seen
 from .watch import watch
 
 _SWERVE = np.radians(2.0)  # heading by which a robot may leave its reference for what may be noise
@@ -57,6 +61,7 @@ def pose_problem(
     s = grid.nodes(start, settings.horizon.interval, settings.horizon.intervals)
     times = time + (s - start) / pace
     guess, steps = _guess(reference, initial, s, pace, last)
+    guess = where_seen(guess, initial, task.stands)
     planned = asked_speeds(task, s)
     top = np.minimum(rules.max_speed, planned_caps(fleet, settings, guess[:, :, POSE], task.speed))
     gear = task.gears((s[:-1] + s[1:]) / 2)
@@ -66,16 +71,17 @@ def pose_problem(
         paced(reference.state(float(s[-1])), pace), reference.state(start), initial,
         np.abs(planned) @ np.diff(s), 2 * settings.poses.noise_xy,
     )
+    target[list(task.stands)] = np.nan
     graph = reference.graph
     problem = Problem(
         fleet=fleet, edges=graph.index_edges(), weights=graph.weights(), coupling=task.coupling,
         alignment=task.alignment, prices=settings.prices, times=times, pace=pace, initial=initial, asked_speed=asked,
         turn_speed=turn_speeds(task, planned) * pace,
         full_speed=task.asked * pace, target=target,
-        bounds=bounds_in_force(
+        bounds=held(bounds_in_force(
             fleet, initial, times, time + (task.arrival - start) / pace, task.end_speed * pace, top,
             rules.max_lateral_acceleration, task.max_curvature, task.gears(s[1:]),
-        ),
+        ), fleet, initial, times, task.stands),
         watch=watch(fleet, settings, reference.pairs, guess[:, :, POSE], task.speed),
         fences=reference.fencing.rows(fleet, settings, guess[:, :, POSE], task.speed),
         compared=_compared(reference, s, settings.horizon.interval),

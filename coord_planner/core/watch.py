@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Which pairs the optimisation watches, and the distance that it keeps between them."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Whether what was sent and what was done kept within every robot's limits.
 
 Worked out from the record alone and without the planner's own gate, so that an error there is seen here.

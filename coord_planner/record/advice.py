@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What ``advise`` has found, as the one JSON object that it prints and its tables are made from."""
 
 from __future__ import annotations

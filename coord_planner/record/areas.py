@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Did anybody enter a keep-out area or drive too fast in a capped one? Judged from record and outlines alone."""
 
 from __future__ import annotations

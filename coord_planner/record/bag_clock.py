@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One time for everything in a recording, from stamps and from times of receipt.
 
 Stamps tell when something was; times of receipt are all that messages without stamps have. Clocks may differ from

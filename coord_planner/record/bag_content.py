@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a recording says about the robots: its messages unpacked into columns of numbers.
 
 Only what a review needs is unpacked; every message is counted. Columns grow with the window that is read, by

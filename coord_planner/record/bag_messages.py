@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """ROS messages of the kinds that a bag of a run holds, made and packed without ROS (by ``rosbags``).
 
 Fields as in the interface packages of ROS 2 Jazzy. Seconds and metres in, messages out.

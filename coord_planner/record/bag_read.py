@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Messages out of recordings: rosbag2 folders and bare files, MCAP or sqlite3, whole or damaged.
 
 What can be read is read; what cannot is counted and said.

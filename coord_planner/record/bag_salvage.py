@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Reading what is left of a recording whose index is missing or wrong, record by record."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A run as a rosbag2 folder (MCAP), with real message types, so that ordinary ROS tools and viewers open it.
 
 Topics are those of the planner's and the simulator's nodes. Every message stands at the time of its stamp.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How times grow with the fleet, as a page to look at."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How much each hop turned when a fleet turned away from something, against the copying law."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Local parabolas: value, slope and bend of a noisy, unevenly sampled series.
 
 Local regression: Savitzky & Golay, Anal. Chem. 36, 1964, for even spacing; Cleveland, JASA 74, 1979, for uneven (both

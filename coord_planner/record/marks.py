@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a viewer of the fleet is shown: edges, footprints, the smallest clearance and the warnings, as plain marks.
 
 No messages here: the planner node and the writer of bags each turn marks into markers of their own kind.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The figures of a run: the one JSON object that ``simulate --json`` prints and the page tabulates."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How near the robots of a run came to each other, in exact geometry, at every sample."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A still picture of a run from above, as a small SVG file for documents."""
 
 from __future__ import annotations

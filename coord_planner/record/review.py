@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What happened in a recording: the figures that ``coord-planner review`` prints and its page shows.
 
 Every time is in seconds since the first message of the recording.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Two recordings side by side: what changed between them, e.g. before and after a change of coupling."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Stops, gaps, how late poses and commands came, and how well robots drove what was planned."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A recording as a Run: every robot on common times, with what the planner said when it was recorded."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How near each robot came to each of its limits in a recording, from what it drove; and what it was asked for."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How a robot moved, from poses that may be noisy and irregular: speed, turn rate and curvature.
 
 Over a window round each moment a parabola is fitted to x, y and heading, with weights that fall off towards its ends

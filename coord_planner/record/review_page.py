@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The page of a recording, or of two side by side: one HTML file that needs no network."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Headings, curvatures and speeds from positions alone: the shape of the way, fitted over its length.
 
 A stamp that is rounded to a second, or a position that is a second old, shifts a pose along the way by metres, but not

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Which topics of a recording belong to which robot: guessed by pattern, told, and correctable."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The figures of each turn in a recording: who began, how it spread, how well the fleet agreed, how near it came."""
 
 from __future__ import annotations

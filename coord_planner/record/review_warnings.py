@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What planners and robots said of themselves in a recording: state, ends, warnings, events."""
 
 from __future__ import annotations

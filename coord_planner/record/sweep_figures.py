@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a sweep keeps of a rehearsal: figures for its table, and the track of the turn for its page."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The page of a sweep: one HTML file that needs no network, made to be looked at, clicked through and handed on."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Turns in a record: where they are, when each robot began, how strongly it turned, and how the turn spread.
 
 One set of definitions for rehearsals and recordings. Turn rates in rad/s, anticlockwise positive.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How often something may be done: keeps a flood out of the log and off the network."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Changes that were asked for while the planner runs, and when the plan took them up."""
 
 from __future__ import annotations
@@ -7,7 +10,6 @@ from typing import TYPE_CHECKING, Any, Optional
 import attrs
 
 from ..core.messages import Decision, State
-from ..core.reference import Reference
 from .reports import Change
 
 if TYPE_CHECKING:
@@ -21,7 +23,7 @@ class Changes:
     def __init__(self, node: PlannerNode) -> None:
         self._node = node
         self.newest: Optional[Change] = None
-        self._from: Optional[Reference] = None
+        self._from = 0
 
     def make(self, words: str, **parts: Any) -> None:
         """Hand a change on.
@@ -31,7 +33,7 @@ class Changes:
         """
         coordinator, now = self._node.coordinator, self._node.now()
         moving = coordinator.state is State.MOVING
-        self._from = coordinator.reference
+        self._from = coordinator.taken_over
         self.newest = Change(words, now, None if moving else now)
         coordinator.change(self._node.time(), **parts)
         self._node.collect()
@@ -42,10 +44,10 @@ class Changes:
         change = self.newest
         if change is None or change.in_force is not None:
             return
-        if decision.state is not State.MOVING or self._node.coordinator.reference is not self._from:
+        if decision.state is not State.MOVING or self._node.coordinator.taken_over != self._from:
             self.newest = attrs.evolve(change, in_force=self._node.now())
             self._node.reporter.say(str(self.newest))
 
     def forget(self) -> None:
         """Nothing was changed."""
-        self.newest, self._from = None, None
+        self.newest, self._from = None, 0

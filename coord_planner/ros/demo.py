@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Real ROS nodes, a simulated fleet, one manoeuvre with a robot held up on the way, a page to look at."""
 
 from __future__ import annotations

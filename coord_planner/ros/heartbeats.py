@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The heartbeat that says who drives this fleet, and the ear for those of other planners."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the planner hears: subscriptions whose callbacks check a message, keep the newest and return."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Messages as they come in: which are believed, which are ignored, and how that is counted.
 
 Nothing here imports ROS: a message is anything with the fields of its definition (geometry_msgs, nav_msgs,

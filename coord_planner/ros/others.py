@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Who else drives the same robots, as the heartbeats of planners tell it."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the planner says: publishers of commands, plans, status and diagnostics."""
 
 from __future__ import annotations
@@ -133,8 +136,9 @@ class Outbox:
                 if self._paths[name].get_subscription_count():
                     self._paths[name].publish(outgoing.path_message(self._frame, decision.plan_times, poses))
         if self._markers.get_subscription_count():
+            fleet = Fleet(tuple(configuration.fleet.robots[configuration.fleet.index(name)] for name in decision.names))
             self._markers.publish(outgoing.fleet_markers(
-                self._frame, configuration.driven, graph.relative_to(decision.names), decision,
+                self._frame, fleet, graph.relative_to(decision.names), decision,
                 configuration.settings.site_rules,
             ))
 

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Decisions and commands as ROS messages; conversions only, no node."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The parameter file as ROS gives it: declared with descriptions and ranges, changed together or not at all."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The planner as a ROS 2 lifecycle node: ROS at the rim, every decision in ``core.coordinator``."""
 
 from __future__ import annotations
@@ -251,7 +254,7 @@ class PlannerNode(LifecycleNode):
         silence = now - self._sent_at
         late = silence > 2.0 / self.configuration.settings.commands.rate
         if late and self._coordinator.state in (State.MOVING, State.STOPPING):
-            stood = self.outbox.stand_by_themselves(silence, self.configuration.driven)
+            stood = self.outbox.stand_by_themselves(silence, self.configuration.fleet)
             if stood:
                 self._begin_anew(f"the planner was held up for {silence:.1f} s; {', '.join(stood)} stopped alone")
 
@@ -350,7 +353,7 @@ class PlannerNode(LifecycleNode):
     def _cannot_take(self, configuration: config.Configuration) -> str:
         if not self._configured or configuration.enabled == self.configuration.enabled:
             return ""
-        return self._coordinator.cannot_change_members()
+        return self._coordinator.cannot_join(configuration.driven, self.graph)
 
     def _on_parameters(self, configuration: config.Configuration, keys: tuple[str, ...]) -> None:
         words = ", ".join(f"{key} = {self.get_parameter(key).value}" for key in keys)

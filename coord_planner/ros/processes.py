@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Nodes as processes of their own, on a ROS domain of their own, and always brought to an end."""
 
 from __future__ import annotations

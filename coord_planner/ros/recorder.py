@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Listens to a planner and its robots, and makes a Run of what it heard."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a planner tells people and programs: its log, ``~/status``, ``/diagnostics``, plans and markers."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Status and diagnostics in words and figures."""
 
 from __future__ import annotations
@@ -88,7 +91,7 @@ def status(at: Situation) -> DiagnosticStatus:
         "clearance_pair": " and ".join(decision.clearance_pair or ()),
         "tick_ms": f"{at.tick_ms:.2f}", "ticks_left_out": at.overruns,
         "warnings": outgoing.cautions_text(decision.warnings),
-        "completed": decision.completed, "ends": _ends_text(at),
+        "completed": decision.completed, "ends": _ends_text(at), "outside": " ".join(decision.outside),
         "stamp": f"{at.now:.3f}",
     }
     level, words = _summary(at)
@@ -128,7 +131,8 @@ def _of_coupling(at: Situation) -> DiagnosticStatus:
     planned = bool(decision.manoeuvre)
     coupling = decision.coupling if planned else asked.strength
     alignment = decision.alignment if planned else asked.alignment
-    headings = np.degrees(decision.poses[:, 2]) if len(decision.poses) else np.zeros(0)
+    driven = [k for k, name in enumerate(decision.names) if name not in decision.outside and k < len(decision.poses)]
+    headings = np.degrees(decision.poses[driven, 2]) if driven else np.zeros(0)
     headings = headings[np.isfinite(headings)]
     values = {
         "coupling": f"{coupling:.6g}", "coupling_asked": f"{asked.strength:.6g}", "alignment": f"{alignment:.6g}",

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Requests of people and programs, by service and by message, each answered when it is decided."""
 
 from __future__ import annotations

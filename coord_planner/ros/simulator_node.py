@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Stands in for the robots: publishes their poses and obeys commands, each robot with its own time-out."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Running a node until it is told to end: signals are counted, mistakes are logged and outlived."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Subscriptions that also keep every message as it came, for a rosbag2 folder."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The planner's own time: it runs evenly, whatever happens to the clock that stamps messages."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Two mends to lifecycle nodes of rclpy, measured on Jazzy."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Threads beside the executor: one ticks, one makes references, so that no callback ever waits for a solver."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How fast ticks are, beside a general solver on the same problems, and how near their cost is to the converged one."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The fixed problem set of the benchmark: a corner driven in closed loop, with fresh pose noise on every tick.
 
 Everything in it is invented. One robot's corner is planned once; a fleet drives it side by side, every robot from its

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The copying law beside the plan of a manoeuvre and beside a rehearsal of it without noise."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Each manoeuvre of a file from its starts: would robots stay clear should the planner fall silent on the way?"""
 
 from __future__ import annotations

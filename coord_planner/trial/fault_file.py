@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A fault file (YAML): what goes wrong in a rehearsal, and when."""
 
 from __future__ import annotations

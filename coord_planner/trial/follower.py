@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A plain controller to compare with: each robot steers to its neighbour's heading, and nobody plans.
 
 It is what one would write without this planner: heading control in proportion to the error (common practice), inside
@@ -12,6 +15,7 @@ import time as clock
 from collections.abc import Sequence
 from typing import Optional
 
+import attrs
 import numpy as np
 
 from ..config import Configuration
@@ -25,6 +29,7 @@ from .faults import Fault, Faults, check_targets
 from .run import Run
 from .vehicle import SimulatedFleet
 
+_FILTER = 0.2  # seconds, of the filter on what is seen of headings: without it noise alone would steer
 _GAIN = 1.2  # 1/s: heading error into turn rate; with the machines' lag and delay it does not swing
 _ASIDE, _ASKEW = 0.4, 1.2  # 1/m^2, 1/m: how a leader comes back to its way
 _CREEP = 0.1  # m/s, by which turn rates are divided at the least
@@ -69,6 +74,7 @@ class _Loop:
         self._last = np.zeros((len(self._fleet), 2))
         self.now, self.until = 0.0, self.task.arrival + _AT_MOST + _LINGER
         self._done = np.zeros(len(self._fleet), dtype=bool)
+        self._headings: dict[str, float] = {}
         self._truth: list[tuple[float, np.ndarray, np.ndarray, np.ndarray]] = []
         self._sent: list[tuple[float, np.ndarray]] = []
         self._keep()
@@ -76,7 +82,7 @@ class _Loop:
     def beat(self) -> None:
         """Look, steer, and let the machines move until the next sending."""
         self._faults.at(self.now, self._machines, self._fleet.names)
-        seen = self._faults.seen(self._machines.measure(self.now))
+        seen = self._smooth(self._faults.seen(self._machines.measure(self.now)))
         wanted = self._wanted(seen)
         self._last, _ = gate.allow(
             wanted, self._last, self._period, self._fleet, self._configuration.settings.site_rules
@@ -87,6 +93,14 @@ class _Loop:
         self.now = round(len(self._truth) * self._period, 9)
         self._machines.advance(self.now)
         self._keep()
+
+    def _smooth(self, seen: dict[str, PoseSample]) -> dict[str, PoseSample]:
+        """Poses with filtered headings."""
+        part = self._period / (self._period + _FILTER)
+        for name, pose in seen.items():
+            before = self._headings.get(name, pose.heading)
+            self._headings[name] = before + part * float(se2.wrap(pose.heading - before))
+        return {name: attrs.evolve(pose, heading=self._headings[name]) for name, pose in seen.items()}
 
     def _wanted(self, seen: dict[str, PoseSample]) -> np.ndarray:
         """Speed and curvature of each robot, shape (N, 2)."""

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Could a contact have been avoided at all? Judged from the record alone, by code that knows nothing of the planner."""
 
 from __future__ import annotations

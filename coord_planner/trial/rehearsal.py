@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A closed-loop run of planner and simulated fleet, faster than real time and the same for the same seed."""
 
 from __future__ import annotations
@@ -6,6 +9,7 @@ import time as clock
 from collections.abc import Callable, Sequence
 from typing import Optional
 
+import attrs
 import numpy as np
 
 from ..config import Configuration
@@ -13,6 +17,7 @@ from ..config.failures import kept
 from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
 from ..core.fence import Line
+from ..core.fleet import Fleet
 from ..core.messages import Answer, Caution, Decision, HazardPoint, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
@@ -52,8 +57,11 @@ class _Log:
         self.speeds.append(fleet.speeds())
         self.curvatures.append(fleet.curvatures())
 
-    def decision(self, decision: Decision, tick_ms: float, gap: float) -> None:
-        """Cautions that pause for less than ``gap`` seconds count as one."""
+    def decision(self, decision: Decision, tick_ms: float, gap: float, seen: SimulatedFleet) -> None:
+        """Cautions that pause for less than ``gap`` seconds count as one.
+
+        In the plans that are kept, robots that are no part of the decision stand where they are.
+        """
         self.tick_ms.append(tick_ms)
         if decision.state is not self._state:
             self._state = decision.state
@@ -67,8 +75,11 @@ class _Log:
                 spans.append((decision.time, decision.time, caution))
         if len(self.tick_ms) % _FRAME_EVERY == 0 and decision.plan_poses.shape[1]:
             picked = np.unique(np.linspace(0, decision.plan_poses.shape[1] - 1, _FRAME_POINTS).astype(int))
-            self.frames.append(RunFrame(decision.time, decision.progress_rate, decision.plan_poses[:, picked],
-                                        decision.plan_times[picked]))
+            poses = np.repeat(seen.poses()[:, None], len(picked), axis=1)
+            poses[[seen.names.index(name) for name in decision.names]] = decision.plan_poses[:, picked]
+            self.frames.append(
+                RunFrame(decision.time, decision.progress_rate, poses, decision.plan_times[picked])
+            )
 
     def cautions(self) -> tuple[tuple[float, float, Caution], ...]:
         spans = [span for group in self._cautions.values() for span in group]
@@ -111,7 +122,12 @@ class _Loop:
         self, configuration: Configuration, seed: int, faults: Sequence[Fault], seen: Optional[Sighting] = None
     ) -> None:
         self._configuration, self._seed, self._sighting = configuration, seed, seen
-        settings, self._fleet = configuration.settings, configuration.driven
+        settings, driven = configuration.settings, configuration.driven
+        # Who is not enabled stands by: it may be wanted on the way.
+        self._fleet = Fleet(tuple(
+            robot for robot in configuration.fleet.robots
+            if robot.name in configuration.starts or robot.name in configuration.enabled
+        ))
         rng = np.random.default_rng(seed)
         timeouts = {name: link.command_timeout for name, link in configuration.connections.items()}
         self._simulated = SimulatedFleet(self._fleet, configuration.starts, configuration.simulation, timeouts, rng)
@@ -122,7 +138,7 @@ class _Loop:
             configuration.failures, TickSolve(clock.perf_counter), settings.site_rules.min_clearance
         )
         self.coordinator = Coordinator(
-            self._fleet, self._graph, settings, configuration.manoeuvres, _BUDGET,
+            driven, self._graph.relative_to(driven.names), settings, configuration.manoeuvres, _BUDGET,
             self._faults.solve(solve, settings.horizon.budget), refused,
         )
         self._log = _Log()
@@ -131,6 +147,9 @@ class _Loop:
         self._next_tick = self._next_pose = self.now = 0.0
         self._moving_since: Optional[float] = None
         self._measured: dict[str, PoseSample] = {}
+        self._told = np.zeros((len(self._fleet), 2))  # who gets no command keeps the last
+        self._ends = np.full((len(self._fleet), 3), np.nan)
+        self._carried = set(driven.names)
         self._strip: tuple[Line, ...] = ()
         self.over = False
 
@@ -161,7 +180,12 @@ class _Loop:
         decision = self.coordinator.step(Snapshot(
             self.now, self._measured, self._faults.not_ready(), hazard=self._seen_now()
         ))
-        self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period)
+        self._log.decision(decision, 1e3 * (clock.perf_counter() - began), 3 * self._tick_period, self._simulated)
+        self._carried |= set(decision.names)
+        if decision.manoeuvre:
+            self._ends[:] = np.nan
+            for name, end in zip(decision.names, self.coordinator.ends):
+                self._ends[self._fleet.index(name)] = end
         if self._moving_since is None and decision.state is State.MOVING:
             self._moving_since = self.now
         self._next_tick += self._tick_period
@@ -181,7 +205,9 @@ class _Loop:
         commands = self.coordinator.commands(self.now)
         if commands is not None:
             self._log.command_times.append(self.now)
-            self._log.commanded.append(np.array([[c.speed, c.curvature] for c in commands.values()]))
+            for name, command in commands.items():
+                self._told[self._fleet.index(name)] = command.speed, command.curvature
+            self._log.commanded.append(self._told.copy())
         self._faults.send(self.now, commands or {}, self._simulated)
         if self._moving_since is not None:
             self._strike(self.now - self._moving_since)
@@ -205,16 +231,20 @@ class _Loop:
     def run(self, manoeuvre: str, wall_time: float) -> Run:
         """What happened."""
         configuration, log, decision = self._configuration, self._log, self.coordinator.decision
+        rows = [k for k, name in enumerate(self._fleet.names) if name in self._carried]
+        frames = tuple(attrs.evolve(frame, poses=frame.poses[rows]) for frame in log.frames)
         away = turned_away(self.coordinator, self._sighting, self._moving_since or 0.0) if self._sighting else {}
         state = State.ENDED if decision.completed else decision.state
         return Run(
-            fleet=self._fleet, edges=self._graph.edges, manoeuvre=manoeuvre, times=np.array(log.times),
-            poses=np.stack(log.poses, axis=1), speeds=np.stack(log.speeds, axis=1),
-            curvatures=np.stack(log.curvatures, axis=1), command_times=np.array(log.command_times),
-            commanded=np.stack(log.commanded, axis=1), end_poses=self.coordinator.ends,
+            fleet=Fleet(tuple(self._fleet.robots[k] for k in rows)),
+            edges=self._graph.relative_to(configuration.driven.names).edges, manoeuvre=manoeuvre,
+            times=np.array(log.times), poses=np.stack(log.poses, axis=1)[rows],
+            speeds=np.stack(log.speeds, axis=1)[rows], curvatures=np.stack(log.curvatures, axis=1)[rows],
+            command_times=np.array(log.command_times), commanded=np.stack(log.commanded, axis=1)[rows],
+            end_poses=self._ends[rows],
             min_clearance=configuration.settings.site_rules.min_clearance, state=state.value,
             completed=decision.completed, began=self._moving_since or 0.0, ended=_ended(log), cautions=log.cautions(),
-            tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=tuple(log.frames), events=tuple(log.events),
+            tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=frames, events=tuple(log.events),
             facts={
                 "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What happened in a closed-loop run, whoever drove it: the rehearsal or real ROS nodes."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Simulated machines: what they are sent arrives late, is reached with a lag and is seen through noise.
 
 A simulated machine obeys: it does not clip what it is sent to its limits, so that a planner's error

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Real nodes as processes of their own, each group on a ROS domain of its own, and a hand that plays the person."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A peer gone wrong: python flooding_peer.py SECONDS_OF_JUNK SECONDS_OF_EVERYTHING ROBOT ...
 
 Sends 2,000 small messages a second and 5 of a megabyte to every input of a planner, on this machine only. The first so

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A person with the ordinary ROS tools: calls services, sets parameters, listens and publishes."""
 
 from __future__ import annotations

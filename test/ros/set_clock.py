@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Runs a node whose system clock is off by as many seconds as stand in a file: python set_clock.py MODULE ...
 
 The file's name is in the variable CLOCK_OFFSET_FILE. The steady clock is right, as on a machine whose clock is set.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Messages that cannot be used are ignored, counted and told on /diagnostics; the last good value stays in force."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The system's clock is set while the fleet moves, ahead and back, for everyone and for the planner alone."""
 
 from __future__ import annotations

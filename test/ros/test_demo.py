@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The demo on the small site: to its end, and interrupted."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How a planner ends in motion: asked once, asked twice, or killed."""
 
 from __future__ import annotations

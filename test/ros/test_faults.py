@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Faults in mid-turn over real processes. After each the node is alive, answers, and finishes a new manoeuvre."""
 
 from __future__ import annotations
@@ -102,7 +105,7 @@ NONSENSE: list[dict[str, Any]] = [
     {"coupling__strength": math.nan}, {"coupling__strength": -1.0}, {"coupling__strength": "strong"},
     {"coupling__strength": math.inf}, {"coupling__strength": [1.0, 2.0]}, {"coupling__strength": True},
     {"robots__left__max_speed": -1.0}, {"robots__left__min_speed": 9.0}, {"robots__left__enabled": 7},
-    {"robots__left__enabled": False}, {"prices__end": 0.0}, {"site_rules__min_clearance": math.nan},
+    {"prices__end": 0.0}, {"site_rules__min_clearance": math.nan},
     {"poses__max_age": 0.0}, {"robots__names": ["left"]}, {"horizon__intervals": 10**12},
     {"fleet__frame": "elsewhere"}, {"use_sim_time": True}, {"use_sim_time": 1.5}, {"no__such__key": 1.0},
     {"coupling__strength": 2.0, "robots__right__max_braking": -1.0},

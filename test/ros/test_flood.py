@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A peer floods every input with junk: the planner outlives it, answers, and finishes a new manoeuvre afterwards."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A hazard over real DDS: in motion everyone stops, armed they turn away, standing nothing moves, junk is ignored."""
 
 from __future__ import annotations

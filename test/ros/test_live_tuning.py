@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Tuning while the fleet turns: the README's worked example, over real DDS, seen on /diagnostics and in the markers."""
 
 from __future__ import annotations

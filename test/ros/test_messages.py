@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Checks of messages, without a middleware: a message is anything with the fields of its definition."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Neighbours from poses in real nodes: told on ~/neighbours_in_force, and not taken from messages as well."""
 
 from __future__ import annotations

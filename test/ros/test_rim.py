@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Conversions at the rim: parameters as ROS shows them, messages out, what needs packages that are not there."""
 
 from __future__ import annotations
@@ -22,6 +25,7 @@ from coord_planner.errors import SettingsError
 from coord_planner.ros import demo, inbox, outbox, outgoing, parameters, processes, spinning
 
 CONFIGURATION = config.load(Path(__file__).parents[2] / "config" / "solar_park.yaml")
+RULES = CONFIGURATION.settings.site_rules
 
 
 def test_open_and_closed_ranges_as_ros_shows_them() -> None:
@@ -69,16 +73,16 @@ def decision(**changes: Any) -> Decision:
 def test_markers_show_the_coupling_and_what_neighbours_make_of_it() -> None:
     poses = np.array([[0.0, 2.5 * k, 0.1 * k * k] for k in range(6)])
     moving = decision(poses=poses, manoeuvre="led_left", coupling=12.5)
-    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, moving, 0.85)
+    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, moving, RULES)
     texts = [marker.text for marker in markers.markers if marker.ns == "copying"]
     assert texts == ["6 deg", "17 deg", "29 deg", "40 deg", "52 deg", "coupling 12.5"]
-    idle = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(), 0.85)
+    idle = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(), RULES)
     assert not [marker for marker in idle.markers if marker.ns == "copying"]
 
 
 def test_markers_show_edges_footprints_clearance_and_warnings() -> None:
     warned = (Caution("robot not following", "mower_2", Level.WARN, "0.5 m behind"),)
-    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(warnings=warned), 0.85)
+    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(warnings=warned), RULES)
     groups = [marker.ns for marker in markers.markers if marker.action == marker.ADD]
     assert groups.count("footprints") == 6
     assert groups.count("edges") == 1
@@ -91,10 +95,10 @@ def test_markers_show_edges_footprints_clearance_and_warnings() -> None:
 def test_markers_leave_out_robots_never_heard_of() -> None:
     poses = decision().poses.copy()
     poses[1:] = np.nan
-    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(poses=poses), 0.85)
+    markers = outgoing.fleet_markers("map", CONFIGURATION.fleet, CONFIGURATION.graph, decision(poses=poses), RULES)
     assert [marker.ns for marker in markers.markers if marker.action == marker.ADD] == ["footprints"]
     none = outgoing.fleet_markers(
-        "map", CONFIGURATION.fleet, NeighbourGraph(CONFIGURATION.fleet.names), Decision(0.0, State.IDLE), 0.85
+        "map", CONFIGURATION.fleet, NeighbourGraph(CONFIGURATION.fleet.names), Decision(0.0, State.IDLE), RULES
     )
     assert len(none.markers) == 1
 

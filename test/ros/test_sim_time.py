@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A simulated clock: not there yet, twice as fast as ours, and set back."""
 
 from __future__ import annotations

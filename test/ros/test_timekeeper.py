@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Planner time, and what else goes by the steady clock: readiness, other planners, allowances."""
 
 from __future__ import annotations

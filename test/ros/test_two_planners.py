@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Two planners on one fleet: the second does not become active; should both be active, both stop."""
 
 from __future__ import annotations

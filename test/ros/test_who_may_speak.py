@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The security policy names exactly what the running node publishes, subscribes to and serves."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The threads beside the executor, with a stand-in for the coordinator."""
 
 from __future__ import annotations

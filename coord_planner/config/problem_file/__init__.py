@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem files (YAML or JSON): what ``coord-planner solve`` reads, and what a failure leaves behind.
 
 Three models: ``se2`` (when no model is named), the form of core/direct; ``heisenberg``, its driftless counterpart; and

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the models of a problem file have in common: names, places, graph, time."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """At which moments neighbours are compared, in a saved program: key ``compared``, left out where at equal ones."""
 
 from __future__ import annotations

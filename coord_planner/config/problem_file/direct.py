@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``model: se2``: the problems of core/direct."""
 
 from __future__ import annotations

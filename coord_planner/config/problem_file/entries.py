@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Values taken from a tree by key, each checked; everything that is wrong is told together."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``model: heisenberg``: the driftless problem. Starts and ends are x, y, z; there are no limits."""
 
 from __future__ import annotations

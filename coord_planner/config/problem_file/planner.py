@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """``model: planner``: one program of the running planner, a tick's or a reference's, with all that it depends on.
 
 It is written by the planner when a plan fails. Beside the keys of other models (where a key means the same) it holds

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A problem file as a tree of plain values, with the line of each key where it is known."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What the neighbour graph and the coupling do, worked out before anything is driven.
 
     copying.py      how much of a led robot's turning each other robot copies, robot by robot and hop by hop

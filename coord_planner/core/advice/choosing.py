@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The smallest coupling with which robots far from a led one still copy enough of its turning."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where the copying law does not hold for a manoeuvre: which of its conditions are not kept, by whom and how much."""
 
 from __future__ import annotations

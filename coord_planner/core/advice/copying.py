@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How much of a led robot's turning each other robot copies: the copying law.
 
 A robot without an end of its own has mu = 0, so that (I + chi L) u = mu fixes its turning by that of the others, at

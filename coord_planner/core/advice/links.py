@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Which links and robots hold the graph together, and what further links would gain."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Copying as it came out, in a plan or in a run, beside what the law says."""
 
 from __future__ import annotations

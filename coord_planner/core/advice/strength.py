@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A coupling that does nothing, and one that asks more of a tick than it can keep."""
 
 from __future__ import annotations

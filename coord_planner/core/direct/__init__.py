@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One plan from one problem: the curvature itself (and the speed, where it is free) is the control, constant in
 each interval.
 

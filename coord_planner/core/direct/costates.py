@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Costates recovered from the multipliers of the steps, and what stays constant along a plan.
 
 With p_x, p_y the multipliers of a robot's steps in x and y, and mu_1 that of its heading: mu_2 and mu_3 are p seen

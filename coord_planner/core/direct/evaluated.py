@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A program at a point, evaluated anew: what the optimality check is given."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """First guesses for a problem with limits, clearances or free speeds, in its own units."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The driftless problem on the Heisenberg group: two controls a copy, coupled in both, without bounds.
 
 x' = u, y' = v, z' = (x v - y u)/2; least sum of 1/2 integral of u'(I + chi L)u + v'(I + chi L)v. With controls constant

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What can be seen to be impossible before anything is solved, and what stood in the way of a solve that failed."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a solution reports of itself: its optimality check, what it conserves, and the identities it must keep."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One problem, many first guesses, the best plan, or what stands in the way of any."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem, in its own units -> nonlinear program. Curvature and speed are constant in each interval: steps are arcs."""
 
 from __future__ import annotations

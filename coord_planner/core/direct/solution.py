@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Program -> plan: solves in a problem's own units, with separating lines from the plan itself."""
 
 from __future__ import annotations

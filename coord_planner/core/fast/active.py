@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Active-set steps: rows that are met are kept as equations, all at once (primal-dual active sets).
 
 Hintermuller, Ito & Kunisch, *The primal-dual active set strategy as a semismooth Newton method*, SIAM J. Optim. 13

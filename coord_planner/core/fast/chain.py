@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Commands -> poses along exact arcs, and the way back: forces on the poses -> slopes by the commands."""
 
 from __future__ import annotations

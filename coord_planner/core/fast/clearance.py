@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Clearances of the watched pairs on their separating lines, and of robots from fences, all without slack.
 
 The rows of ocp.clearance_rows and, below them, of ocp.fence_rows.

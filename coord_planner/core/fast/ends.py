@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How far each robot's last state is from its target: seven rows a robot."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Cholesky factor of a symmetric matrix of square blocks, sparse like a graph of robots.
 
 Robots are eliminated in an order that keeps the fill small: fewest neighbours first (minimum degree: George & Liu,

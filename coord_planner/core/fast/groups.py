@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Parts of a fleet that neither copy each other nor could meet: each is a problem of its own."""
 
 from __future__ import annotations

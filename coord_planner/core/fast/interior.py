@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Primal-dual interior-point steps, condensed to the commands: one matrix a step, two right sides.
 
 Predictor and corrector: Mehrotra, *On the implementation of a primal-dual interior point method*, SIAM J. Optim. 2

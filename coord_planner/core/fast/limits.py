@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Limits of each robot's commands: boxes, rates and products, as rows of the commands at nodes 1 .. M."""
 
 from __future__ import annotations

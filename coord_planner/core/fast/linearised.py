@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Derivatives of cost and rows at a point, and the matrix of a step made of them."""
 
 from __future__ import annotations
@@ -104,6 +107,8 @@ class Linearised:
         steps = np.arange(m)
         own = 1.0 + np.diagonal(numbers.coupled)[:, None] * numbers.compared**2
         weights[:, steps, steps] = own * numbers.cost_h
+        if numbers.comparing is not None:
+            weights += numbers.comparing.own
         by_heading = None
         if numbers.alignment.any():
             by_heading = np.zeros_like(point.r.turn)
@@ -149,6 +154,10 @@ class Linearised:
         first, second = self._structure.edges.T
         both = numbers.compared[first] * numbers.compared[second] * numbers.cost_h
         weighted = (numbers.coupled[first, second][:, None] * both)[:, :, None] * turning[second]
+        if numbers.comparing is not None:
+            back = (self._structure.edges[:, 0] != numbers.edges[:, 0])[:, None, None]
+            across = numbers.comparing.across
+            weighted += np.matmul(np.where(back, across.transpose(0, 2, 1), across), turning[second])
         if numbers.alignment.any():
             aligned = objective.aligning_weights(numbers, self.point.r)
             pulls = _by_turning(aligned, self._scale()[first], self._scale()[second])

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Margins of every row and what they are traded against, laid end to end: interior-point steps keep both above 0.
 
 Six parts follow each other; in each the product of margin and push is to vanish:

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Problem -> plain arrays: what every iteration of a tick needs, worked out once."""
 
 from __future__ import annotations
@@ -9,6 +12,7 @@ import numpy as np
 
 from ..fleet import Fleet
 from ..problem import CURVATURE, CURVATURE_COMMAND, SPEED, SPEED_COMMAND, Problem
+from .comparing import Comparing, comparing
 from .response import Response, response
 
 # Rows of each robot and interval (or node), in this order in every array of limits.
@@ -67,7 +71,8 @@ class Numbers:
         begins: what the initial state brings.
         turn_speed: shape (N, M). full_speed: shape (N, 1). lower, upper: of LIMITS, shape (6, N, M).
         coupled: coupling * weighted Laplacian, shape (N, N). edges: (E, 2). alignment: price of each edge, (E,).
-        compared: what neighbours compare, as a part of the turning, shape (N, M).
+        compared: what neighbours compare, as a part of the turning, shape (N, M). comparing: where they do so otherwise
+            than at equal moments, and coupled is 0.
         target: shape (N, 7), 0 where free. end_price: shape (N, 7), 0 where free.
         pairs: (P, 2): first those that are watched, then fences, which are pairs of a robot with nobody: the second is
             the first again and counts 0. watched: how many are no fences. second: 1, and 0 of fences, shape (P, 1).
@@ -90,6 +95,7 @@ class Numbers:
     upper: np.ndarray
     coupled: np.ndarray
     compared: np.ndarray
+    comparing: Comparing | None
     edges: np.ndarray
     alignment: np.ndarray
     price_curvature_rate: float
@@ -123,7 +129,7 @@ def numbers(problem: Problem, fleet: FleetNumbers) -> Numbers:
         begins=_beginning(curvature, speed, problem.initial),
         asked_speed=problem.asked_speed, turn_speed=problem.turn_speed, full_speed=problem.full_speed[:, None],
         lower=lower, upper=upper, coupled=_coupled(problem), compared=problem.turn_speed / problem.compare_speed,
-        edges=problem.edges,
+        comparing=comparing(problem), edges=problem.edges,
         alignment=problem.coupling * problem.alignment * problem.weights,
         price_curvature_rate=prices.curvature_rate, price_acceleration=prices.acceleration, price_speed=prices.speed,
         target=np.where(free, 0.0, problem.target), end_price=np.where(free, 0.0, prices.end),
@@ -167,6 +173,8 @@ def _lines(problem: Problem, fleet: FleetNumbers) -> dict[str, Any]:
 
 def _coupled(problem: Problem) -> np.ndarray:
     laplacian = np.zeros((len(problem.fleet),) * 2)
+    if problem.compared is not None and len(problem.compared.edges):
+        return laplacian
     first, second = problem.edges[:, 0], problem.edges[:, 1]
     weights = problem.coupling * problem.weights
     np.add.at(laplacian, (first, first), weights)

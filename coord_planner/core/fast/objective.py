@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The smooth part of the cost: turning, alignment and the small prices, with slopes and Gauss-Newton blocks."""
 
 from __future__ import annotations
@@ -24,6 +27,8 @@ def smooth_cost(numbers: Numbers, r: Rollout) -> float:
         + numbers.price_acceleration * speeding**2
     )
     cost = 0.5 * float(each.sum(axis=0) @ numbers.cost_h)
+    if numbers.comparing is not None:
+        cost += numbers.comparing.cost(r.turning)
     if numbers.alignment.any():
         half = 0.5 * _heading_differences(numbers, r)
         cost += float(numbers.alignment @ (2.0 * np.sin(half) ** 2) @ numbers.cost_h)
@@ -38,7 +43,10 @@ def _pull(numbers: Numbers, r: Rollout) -> np.ndarray:
 
 def mean_slopes(numbers: Numbers, r: Rollout) -> tuple[np.ndarray, np.ndarray]:
     """Slopes of turning and of leaving the asked speed by the mean curvatures and speeds, each (N, M)."""
-    pull = _pull(numbers, r) * (numbers.cost_h / numbers.turn_speed)
+    pull = _pull(numbers, r) * numbers.cost_h
+    if numbers.comparing is not None:
+        pull += numbers.comparing.slopes(r.turning)
+    pull /= numbers.turn_speed
     leaving = numbers.price_speed * numbers.cost_h * (r.mean_speed - numbers.asked_speed) / numbers.full_speed**2
     return pull * r.mean_speed, pull * r.mean_curvature + leaving
 

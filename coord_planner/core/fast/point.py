@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Commands with all that follows from them: poses, values of every row, cost, and slopes of weighted sums of rows."""
 
 from __future__ import annotations

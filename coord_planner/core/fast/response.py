@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What machines reach under commands that run straight from node to node, as matrices: the chain is linear."""
 
 from __future__ import annotations

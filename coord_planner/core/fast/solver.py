@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The tick solver: a plan in milliseconds, from the last plan and its multipliers."""
 
 from __future__ import annotations
@@ -26,7 +29,7 @@ ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step
 SOLVED = 1e-2  # predicted gap below which a plan counts as finished
 
 # After so many steps so large a gap is good enough: who has come far gains little from many more steps.
-_TOLERATED = ((12, ENOUGH), (16, 2 * ENOUGH), (10_000, SOLVED))
+_TOLERATED = ((16, ENOUGH), (22, 2 * ENOUGH), (10_000, SOLVED))
 
 _LEAST_COST = 1e-2  # costs below this count as this where gaps are parts of them
 _KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken
@@ -36,7 +39,7 @@ _WANDERING = 6  # rows a robot that change in one step: the sets are lost
 _SETTLING = 0.5  # rows a robot that change in one step: the sets are nearly found
 _NEARLY_KEPT = 0.05  # by how much limits may be passed then
 _SLOW = 0.3  # part of what curved paths left over that a step with kept derivatives may leave
-_OVERSTATED = 3.0  # what is open in an interior-point iterate overstates the gap by about this
+_OVERSTATED = 2.0  # what is open in an interior-point iterate overstates the gap by about this
 _LEFT_OF_LAST = 0.5  # part of what the last interior-point step saved that another may still save
 _NEARBY = 0.02  # change of a heading (rad), or of a speed (part of the full one), over which a matrix is used again
 
@@ -271,7 +274,7 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
         short=short[: size.pairs], pairs=problem.watch.pairs, outside=short[size.pairs :], fenced=problem.fences.robots,
         missed=np.abs(point.missed) * priced,
         solved=found.gap <= SOLVED and found.passed <= _KEPT_WITHIN, solve_time=took,
-        iterations=found.steps, vector=vectors.primal(size, states, point, short, priced),
+        iterations=found.steps, vector=vectors.primal(known, size, states, point, short, priced),
         multipliers=vectors.multipliers(known, point, found.forces, size),
     )
 

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Who shares a block with whom, and in which order robots are eliminated. Depends on edges and pairs alone."""
 
 from __future__ import annotations

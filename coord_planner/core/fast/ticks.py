@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """How ticks are solved: fast where all of a problem is understood, by the general solver where it is not."""
 
 from __future__ import annotations
@@ -8,7 +11,7 @@ import attrs
 
 from .. import solver
 from ..plan import Plan
-from ..problem import Bounds, Fences, Problem, Watch
+from ..problem import Bounds, Comparison, Fences, Problem, Watch
 from ..solver import Start
 from .groups import Group, groups, part_of, start_of, whole
 from .solver import TickSolver
@@ -22,14 +25,15 @@ _KNOWN = {
     Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
     Watch: {"pairs", "normals", "gaps"},
     Fences: {"robots", "normals", "reaches"},
+    Comparison: {"edges", "first_at", "second_at", "first", "second", "known", "seconds"},
 }
 
 
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    return problem.compared is None and all(
+    return all(
         {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
-        for part in (problem, problem.bounds, problem.watch, problem.fences)
+        for part in (problem, problem.bounds, problem.watch, problem.fences, problem.compared) if part is not None
     )
 
 
@@ -54,8 +58,8 @@ class TickSolve:
         """
         if not knows(problem):
             return solver.solve(problem, start, warm, budget)
-        apart = groups(problem)
-        if len(apart) == 1:
+        apart = groups(problem) if problem.compared is None else []
+        if len(apart) <= 1:
             return self._fast.solve(problem, start, budget, self._clock)
         return self._each(problem, start, apart, budget)
 

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Between arrays and the vectors of ocp.py: variables, rows and their multipliers, laid out as there."""
 
 from __future__ import annotations
@@ -17,12 +20,16 @@ _FAINT, _LARGEST = 1e-4, 1e4  # multipliers of limits outside this tell nothing 
 
 @attrs.frozen(eq=False)
 class Sizes:
-    """N robots, M intervals, P pairs, F fences: where the blocks of ocp.variable_blocks and ocp.row_blocks lie."""
+    """N robots, M intervals, P pairs, F fences: where the blocks of ocp.variable_blocks and ocp.row_blocks lie.
+
+    ``compared``: whether the turnings that neighbours compare are variables of their own.
+    """
 
     robots: int
     intervals: int
     pairs: int
     fences: int
+    compared: bool
 
     @property
     def rates(self) -> int:
@@ -48,7 +55,8 @@ class Sizes:
 def sizes(problem: Problem) -> Sizes:
     """Of a problem."""
     return Sizes(
-        len(problem.fleet), len(problem.times) - 1, len(problem.watch.pairs), len(problem.fences.robots)
+        len(problem.fleet), len(problem.times) - 1, len(problem.watch.pairs), len(problem.fences.robots),
+        bool(problem.shape.compared),
     )
 
 
@@ -73,7 +81,8 @@ def forces(size: Sizes, bounds: np.ndarray, rows: np.ndarray) -> Forces:
     clear = np.concatenate([
         -rows[size.clearances : first].reshape(m, p).T, -rows[first : first + f * m].reshape(m, f).T
     ])
-    ends = rows[first + f * m :].reshape(_STATE_COUNT, n).T
+    last = first + f * m
+    ends = rows[last : last + _STATE_COUNT * n].reshape(_STATE_COUNT, n).T
     return Forces(_without_faint(limit), np.array(ends), np.maximum(_without_faint(clear), 0.0))
 
 
@@ -90,13 +99,16 @@ def states_of(numbers: Numbers, point: Point) -> np.ndarray:
     return states
 
 
-def primal(size: Sizes, states: np.ndarray, point: Point, short: np.ndarray, priced: np.ndarray) -> np.ndarray:
+def primal(
+    numbers: Numbers, size: Sizes, states: np.ndarray, point: Point, short: np.ndarray, priced: np.ndarray
+) -> np.ndarray:
     """The primal vector. short: missing clearances, (P + F, M). priced: which ends count, (N, 7)."""
     missed = point.missed * priced
     return np.concatenate([
         states.transpose(2, 1, 0).ravel(), point.limits[2:4].transpose(0, 2, 1).ravel(),
         short[: size.pairs].T.ravel(), short[size.pairs :].T.ravel(),
         np.maximum(missed, 0.0).T.ravel(), np.maximum(-missed, 0.0).T.ravel(),
+        *([(numbers.compared * point.r.turning).T.ravel()] if size.compared else []),
     ])
 
 
@@ -113,10 +125,12 @@ def multipliers(
         states.ravel(), limit[2:4].ravel(), (watched - numbers.short_price).T.ravel(),
         (fenced - numbers.short_price).T.ravel(),
         (found.ends - numbers.end_price).T.ravel(), (-found.ends - numbers.end_price).T.ravel(),
+        np.zeros(n * m if size.compared else 0),
     ])
     rows = np.concatenate([
         costates(numbers, point, found).transpose(0, 2, 1).ravel(), limit[4:].ravel(),
         -watched.T.ravel(), -fenced.T.ravel(), found.ends.T.ravel(),
+        *([_comparing_pulls(numbers, point).T.ravel()] if size.compared else []),
     ])
     return bounds, rows
 
@@ -146,6 +160,13 @@ def costates(numbers: Numbers, point: Point, found: Forces) -> np.ndarray:
             + (price * numbers.cost_h * rate + found.limits[2 + i]) / numbers.h
         )
     return costate
+
+
+def _comparing_pulls(numbers: Numbers, point: Point) -> np.ndarray:
+    """Slope of the cost by the turnings that neighbours compare, shape (N, M)."""
+    if numbers.comparing is None:
+        return np.zeros_like(numbers.compared)
+    return numbers.comparing.slopes(point.r.turning) / numbers.compared
 
 
 def _without_faint(values: np.ndarray) -> np.ndarray:

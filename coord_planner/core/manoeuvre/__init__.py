@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is asked of the fleet, and from it an end and a guessed way for each robot.
 
 ``kinds`` holds what a parameter file may ask for, one module for each kind what it means for the poses at hand,

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What is refused before anything is planned, with the figures."""
 
 from __future__ import annotations

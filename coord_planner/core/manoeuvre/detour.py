@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Guessed ways bent round keep-out areas, on one side or the other; the optimisation then stays on that side."""
 
 from __future__ import annotations

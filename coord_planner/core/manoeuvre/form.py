@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """From where they stand into a line abreast, a file or an echelon: who takes which place, on which way, and who waits.
 
 Places are assigned so that the sum of the squares of the ways is least (scipy's linear_sum_assignment); that of

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The kinds of manoeuvre that a parameter file may name, with what each needs to be told."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Robots that stand abreast or in file: the line that they form."""
 
 from __future__ import annotations

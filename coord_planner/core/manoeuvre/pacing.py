@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The group slows in step before one of it comes into an area with a speed cap, and speeds up again behind it."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Everyone turns back into its next row, inside the headland."""
 
 from __future__ import annotations

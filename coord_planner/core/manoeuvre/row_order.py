@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Who sets out when at the end of the rows, so that ways that cross are passed one after the other."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Rows that end at a headland: which one each robot is in, and which it goes into."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a manoeuvre is worked out for, and what each kind makes of it."""
 
 from __future__ import annotations

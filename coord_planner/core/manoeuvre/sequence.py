@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Manoeuvres one after the other, with straight runs between them."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A manoeuvre worked out: where everyone ends, on which guessed way, and when."""
 
 from __future__ import annotations
@@ -50,6 +53,7 @@ class Task:
         alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
         hazard: a point that everybody keeps away from; None when there is none.
         otherwise: another way to do the same, to be tried when this one cannot be kept.
+        stands: positions of robots that the manoeuvre is not for: they come to a stand and have no end.
     """
 
     name: str
@@ -79,6 +83,7 @@ class Task:
     def reversing(self) -> np.ndarray:
         """Who drives backward somewhere on its way, shape (N,)."""
         return np.array([bool((drive.gears < 0).any()) for drive in self.drives])
+    stands: tuple[int, ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down.

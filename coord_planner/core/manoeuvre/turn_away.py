@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Who sees a hazard takes a heading away from it; the others copy through the graph."""
 
 from __future__ import annotations

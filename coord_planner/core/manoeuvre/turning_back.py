@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Ways that lead back beside themselves: out along x, half a turn to the left, home along a line further left.
 
 The first piece begins at the origin heading along x, the last one ends on the line y = shift heading along -x. Loops

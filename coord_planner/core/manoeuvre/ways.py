@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Guessed ways: arcs and straight lines from where each robot stands to where it shall arrive."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The line turns as one about a pivot, easing in and out, each robot on its own radius.
 
 A line abreast that turns as a rigid body has one turn rate; robot k, d_k further from the pivot than the innermost,

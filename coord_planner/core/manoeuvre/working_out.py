@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """From what a parameter file asks for to the task that it means for the poses at hand."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The classical form of the coupled problem, which published results know: what the checks stand on.
 
 Every robot drives at unit speed for the same time from one pose to another (to a heading, or it only copies);

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The classical problem as data: what every solution method here starts from."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Minima on few intervals: the curvatures are the only unknowns, the ends the only constraints.
 
 Newton's method on the Lagrangian, with backtracking on cost plus exact penalty and a second-order correction

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One curvature profile for the whole fleet: a first guess, and a plan of last resort for any number of robots.
 
 Definition: of all curvature profiles that, driven by every robot at once, miss the asked ends by the least sum of

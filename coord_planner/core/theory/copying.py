@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One led robot, the others only copy: their turning is a fixed fraction of its turning, at every instant.
 
 With no end of its own a robot has mu_1 = 0, so u = Psi mu_1 is the column of Psi = (I + chi L)^-1 that belongs to the

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One robot: its path is an elastica, and Jacobi's elliptic functions give it in closed form.
 
 With h = u^2/2 + mu_2 and C = |p|: u'' + u^3/2 - h u = 0 and u'^2 + (u^2/2 - h)^2 = C^2. (Euler's elastica: Love,

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The driftless problem on the Heisenberg group: closed forms.
 
 x' = u, y' = v, z' = (x v - y u)/2, least 1/2 integral of u^2 + v^2 in unit time.

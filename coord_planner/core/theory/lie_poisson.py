@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The Lie-Poisson flow mu' = ad*_{dH} mu on any Lie algebra given by matrices, and what it conserves.
 
 A basis e_1 ... e_n with [e_i, e_j] = sum_k c_ijk e_k gives mu_i' = sum_jk dH_j c_jik mu_k for the Hamiltonian H(mu) of

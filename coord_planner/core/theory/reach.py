@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Where a curvature profile leads, with first and second derivatives.
 
 The plane is the complex plane of a robot's start: x forward is the real axis, y left the imaginary one. The way has

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The reduced equations of the coupled fleet, integrated to tight tolerance, and what they conserve."""
 
 from __future__ import annotations

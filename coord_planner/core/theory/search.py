@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """First guesses, and the minima they lead to: the classical problem has many, and the lowest is wanted.
 
 Everything in units of the way's length (duration 1), at the windings that the headings state.

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """The boundary-value problem by multiple shooting: costates and poses on the way that lead to the asked ends.
 
 Along a solution mu_1 = m + p x (position - start), so a robot with an end pose has three unknowns (p and m), one with

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Many rehearsals: what is varied, the rehearsals that follow from it, and what they say together.
 
     axes.py          values that a parameter goes through

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Values that a parameter goes through in a sweep."""
 
 from __future__ import annotations

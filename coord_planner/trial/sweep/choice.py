@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Figures of each setting over its rehearsals, which settings keep the rules, the best, the trade-off front."""
 
 from __future__ import annotations

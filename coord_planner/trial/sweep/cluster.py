@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A sweep on a Dask cluster: Dask's scheduler hands out the points, nothing of our own stands in between."""
 
 from __future__ import annotations

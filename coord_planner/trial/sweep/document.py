@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A YAML document as plain values, with the line of each key."""
 
 from __future__ import annotations

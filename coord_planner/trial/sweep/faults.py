@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Faults as a file lists them: ``{kind, robot or edge, from_s, to_s, value}``."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A sweep file (YAML) -> a sweep; everything that is wrong with it is told before anything runs."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Records as they come, one JSON object a line, so that a sweep that was killed goes on where it stopped."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A sweep on this machine's cores: processes of their own, each with one thread for its linear algebra."""
 
 from __future__ import annotations

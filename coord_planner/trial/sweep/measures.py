@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """What a sweep measures in each rehearsal, and which way is better."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """A sweep as data, and its points: each one rehearsal."""
 
 from __future__ import annotations

@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """One point -> one record, whatever happens to it."""
 
 from __future__ import annotations

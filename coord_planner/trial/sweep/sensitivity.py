@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Which parameters matter: rank correlation with intervals, and the share of the spread that a parameter explains."""
 
 from __future__ import annotations

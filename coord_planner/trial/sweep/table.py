@@ -1,3 +1,6 @@
+# Copyright 2026 coord_planner maintainers
+# SPDX-License-Identifier: Apache-2.0
+
 """Records -> a table, Parquet or CSV: written beside and then put in its place, so that it is whole at any moment."""
 
 from __future__ import annotations
