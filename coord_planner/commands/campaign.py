@@ -57,6 +57,7 @@ _MUST.update({
 })
 # What the planner hears of, also while the fleet stops.
 _HEARD = ("pose_lost", "pose_frozen", "pose_jump", "pose_noise", "not_ready", "link_lost")
+_MOVING = 0.2  # m/s
 _ENDS = (State.ENDED.value, State.HELD.value)
 _MISSED = (0.3, 0.1)  # m/s and rad/s by which a machine whose commands come late is told something else
 _MOST_EXCUSED = 0.02  # part of the cases in which a contact may be excused
@@ -191,25 +192,34 @@ def _told(fault: Fault, run: Run, hidden: float = 0.0, others: Sequence[Fault] =
     Args:
         hidden: seconds after the fault's beginning from which it shows. others: that strike as well.
     """
-    onset = run.began + fault.from_s + hidden
-    size, allowed = _MUST[fault.kind]
-    moving = np.abs(run.speeds[:, (run.times >= onset) & (run.times <= onset + allowed)]) > 0.2
-    large = fault.value < size if fault.kind == "robot_slow" else fault.value >= size
-    lasted = fault.to_s - fault.from_s - hidden >= allowed
-    started = onset + allowed <= run.ended
-    owed = bool(moving.size and moving.all() and large and lasted and started)
-    if fault.kind not in _HEARD:
-        owed = owed and not any(text.startswith("stopping") and at <= onset + allowed for at, text in run.events)
-    if fault.kind in ("pose_jump", "pose_noise", "pose_frozen"):
-        owed = owed and not any(
-            other.kind == "pose_lost" and other.robot == fault.robot and other.from_s <= fault.from_s + allowed
-            and fault.from_s <= other.to_s for other in others
-        )
-    heard = [
+    struck, (size, allowed) = run.began + fault.from_s, _MUST[fault.kind]
+    onset = struck + hidden
+    heard = min((
         max(first - onset, 0.0) for first, last, caution in run.cautions
         if caution.code in TOLD_BY[fault.kind] and last >= onset
-    ]
-    return min(heard, default=np.inf), owed
+    ), default=np.inf)
+    stop = min((at for at, text in run.events if text.startswith("stopping")), default=np.inf)
+    large = fault.value < size if fault.kind == "robot_slow" else fault.value >= size
+    lasted = fault.to_s - fault.from_s - hidden >= allowed
+    owed = large and lasted and onset + allowed <= run.ended and _driving(run, struck, min(onset + allowed, stop))
+    if fault.kind not in _HEARD and stop <= onset + min(heard, allowed) - 1e-6:
+        owed = False
+    return heard, owed and not _hidden_by_loss(fault, others)
+
+
+def _driving(run: Run, struck: float, until: float) -> bool:
+    """Whether everybody moved when a fault struck, and was to move on until a moment."""
+    before = np.abs(run.speeds[:, (run.times >= struck - 0.2) & (run.times <= struck)])
+    after = np.abs(run.commanded[:, (run.command_times >= struck) & (run.command_times < until), 0])
+    return bool(before.size and (before > _MOVING).all() and (after > _MOVING).all())
+
+
+def _hidden_by_loss(fault: Fault, others: Sequence[Fault]) -> bool:
+    """Whether poses that are wrong do not come at all."""
+    return fault.kind in ("pose_jump", "pose_noise", "pose_frozen") and any(
+        other.kind == "pose_lost" and other.robot == fault.robot
+        and other.from_s <= fault.from_s + _MUST[fault.kind][1] and fault.from_s <= other.to_s for other in others
+    )
 
 
 def _table(results: Sequence[Result]) -> Table:
