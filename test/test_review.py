@@ -19,6 +19,7 @@ from coord_planner.cli import app
 from coord_planner.record import bag_messages as messages
 from coord_planner.record.bag_write import write_bag
 from coord_planner.record.metrics import summary
+from coord_planner.record.page import data
 from coord_planner.record.review import review
 
 TIMES = np.arange(0.0, 20.0, 0.05)
@@ -77,6 +78,27 @@ def test_a_rehearsal_reviewed_gives_its_own_figures(rehearsal):
     assert seen["commands_outside_limits"] == own["limit_violations"] == 0
     assert seen["contacts"] == own["contacts"]
     assert seen["messages_read"] == seen["messages_expected"] and seen["losses"] == [] and seen["notes"] == []
+
+
+def test_a_graph_that_changes_is_shown_as_it_was_at_each_moment(tmp_path):
+    """A link is lost from 3 to 6 s after the motion has begun, and comes back."""
+    from coord_planner.trial.faults import Fault
+    from coord_planner.trial.rehearsal import rehearse
+
+    site = config.load("config/solar_park.yaml")
+    site = config.from_parameters({**site.flat, "coupling.may_split": True})
+    fault = Fault("link_lost", "", 3.0, 6.0, edge=("mower_3", "mower_4"))
+    run = rehearse(site, "corner_left", seed=1, faults=[fault])
+    whole, lost = set(run.edges), {("mower_3", "mower_4", 1.0)}
+    assert [set(edges) for _, edges in run.edge_changes] == [whole - lost, whole]
+    assert run.edge_changes[0][0] == pytest.approx(run.began + 3.0, abs=0.2)
+    write_bag(run, tmp_path / "bag")
+    again = review(tmp_path / "bag").record.run
+    assert [set(edges) for _, edges in again.edge_changes] == [set(edges) for _, edges in run.edge_changes]
+    begun = run.edge_changes[0][0] - run.times[0]
+    assert again.edge_changes[0][0] - again.times[0] == pytest.approx(begun, abs=0.06)
+    shown = data(again)["edge_changes"]
+    assert len(shown) == len(run.edge_changes) and len(shown[0][1]) == len(run.edges) - 1
 
 
 def test_limits_and_plans_of_a_rehearsal(rehearsal):

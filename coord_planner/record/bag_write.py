@@ -142,13 +142,14 @@ def _plans(run: Run, frame: str, zero: float) -> Iterator[Entry]:
 
 
 def _reports(run: Run, frame: str, zero: float) -> Iterator[Entry]:
-    """Neighbours once; status, markers and diagnostics at every plan and every change."""
+    """Neighbours at every change of the graph; status, markers and diagnostics at every plan and every change."""
     if not len(run.times):
         return
     graph = NeighbourGraph(run.fleet.names, run.edges)
-    begun = nanoseconds(0.0)
-    told = {"version": 1, "stamp": begun / messages.NANOSECONDS, "edges": [list(edge) for edge in run.edges]}
-    yield (begun, f"{PLANNER}/neighbours_in_force", "std_msgs/msg/String", messages.text(json.dumps(told)))
+    for when, edges in ((zero, run.edges), *run.edge_changes):
+        changed = nanoseconds(when - zero)
+        told = {"version": 1, "stamp": changed / messages.NANOSECONDS, "edges": [list(edge) for edge in edges]}
+        yield (changed, f"{PLANNER}/neighbours_in_force", "std_msgs/msg/String", messages.text(json.dumps(told)))
     changes = _changes(run)
     next_diagnostics = -np.inf
     for when in sorted({*changes, *(plan.time for plan in run.frames)}):

@@ -8,6 +8,7 @@ from __future__ import annotations
 import json
 import math
 import re
+from collections.abc import Sequence
 from importlib import resources
 from pathlib import Path
 from typing import Any
@@ -69,6 +70,10 @@ def data(run: Run) -> dict[str, Any]:
     return shown | {"facts": plain(run.facts), "summary": summary(run, near)}
 
 
+def _indexed(run: Run, edges: Sequence[tuple[str, str, float]]) -> list[list[Any]]:
+    return [[run.fleet.index(a), run.fleet.index(b), plain(weight)] for a, b, weight in edges]
+
+
 def scene(run: Run, near: Nearness, kept: np.ndarray, origin: float) -> dict[str, Any]:
     """What happened, as plain JSON values: what every page shows from above and over time.
 
@@ -81,7 +86,8 @@ def scene(run: Run, near: Nearness, kept: np.ndarray, origin: float) -> dict[str
         "manoeuvre": _in_words(run.manoeuvre),
         "names": list(run.fleet.names),
         "corners": _rounded(run.fleet.corners(), 4),
-        "edges": [[run.fleet.index(a), run.fleet.index(b), plain(weight)] for a, b, weight in run.edges],
+        "edges": _indexed(run, run.edges),
+        "edge_changes": [[plain(when - origin), _indexed(run, edges)] for when, edges in run.edge_changes],
         "times": _rounded(run.times[kept] - origin, 3),
         "x": _rounded(run.poses[:, kept, 0], 3),
         "y": _rounded(run.poses[:, kept, 1], 3),

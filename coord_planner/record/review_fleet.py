@@ -199,7 +199,8 @@ def _run(content: Content, clock: Clock, configuration: Optional[config.Configur
     moving = np.flatnonzero((np.abs(np.nan_to_num(speeds)) > 0.02).any(axis=0))
     began, ended = (float(times[moving[0]]), float(times[moving[-1]])) if len(moving) else (math.nan, math.nan)
     return Run(
-        fleet=fleet, edges=_edges(content, configuration, names), manoeuvre=said.manoeuvre or "recording", times=times,
+        fleet=fleet, edges=_edges(content, configuration, names), edge_changes=_edge_changes(content, clock, names),
+        manoeuvre=said.manoeuvre or "recording", times=times,
         poses=poses, speeds=speeds, curvatures=np.stack([curvature(*pair) for pair in zip(speeds, rates)]),
         command_times=command_times, commanded=commanded, end_poses=said.ends,
         min_clearance=configuration.settings.site_rules.min_clearance if configuration else math.nan,
@@ -215,11 +216,23 @@ def _edges(content: Content, configuration: Optional[config.Configuration], name
     told: list[Any] = [list(edge) for edge in configuration.edges] if configuration else []
     for _, edges in content.neighbours[:1]:
         told = edges
-    kept = tuple((str(edge[0]), str(edge[1]), float(edge[2]) if len(edge) > 2 else 1.0) for edge in told
-                 if edge[0] in names and edge[1] in names)
+    return _sound(told, names)
+
+
+def _edge_changes(content: Content, clock: Clock, names: tuple[str, ...]
+                  ) -> tuple[tuple[float, tuple[tuple[str, str, float], ...]], ...]:
+    """Graphs that were recorded after the first one, on the common time."""
+    times = clock.received(np.array([received for received, _ in content.neighbours])).times[1:]
+    return tuple((float(time), _sound(edges, names)) for time, (_, edges) in zip(times, content.neighbours[1:]))
+
+
+def _sound(told: list[Any], names: tuple[str, ...]) -> tuple[tuple[str, str, float], ...]:
+    """The edges between robots that are known; none where what was recorded is no graph."""
     try:
+        kept = tuple((str(edge[0]), str(edge[1]), float(edge[2]) if len(edge) > 2 else 1.0) for edge in told
+                     if edge[0] in names and edge[1] in names)
         return NeighbourGraph(names, kept).edges
-    except SettingsError:
+    except (SettingsError, TypeError, ValueError, LookupError):
         return ()
 
 

@@ -189,11 +189,15 @@ function makeStage(run, options) {
       yaxis: axis({ range: [box[2], box[3]], scaleanchor: "x", scaleratio: 1 }),
     });
   }
+  function edgesAt(when) {
+    const passed = (run.edge_changes || []).filter((change) => change[0] <= when);
+    return passed.length ? passed[passed.length - 1][1] : run.edges;
+  }
   function drawMoment() {
     const m = moment(time), upTo = m.w.low + 1, put = [], which = [];
     const from = options.trail ? at(time - options.trail).low : 0;
     const set = (kind, n, piece) => { which.push(moving[kind][n]); put.push(piece); };
-    set("edges", 0, joined(run.edges.map((e) => ({ x: [m.poses[e[0]][0], m.poses[e[1]][0]], y: [m.poses[e[0]][1], m.poses[e[1]][1]] }))));
+    set("edges", 0, joined(edgesAt(time).map((e) => ({ x: [m.poses[e[0]][0], m.poses[e[1]][0]], y: [m.poses[e[0]][1], m.poses[e[1]][1]] }))));
     robots.forEach((k) => {
       const [x, y, heading] = m.poses[k];
       set("trails", k, { x: run.x[k].slice(from, upTo).concat([x]), y: run.y[k].slice(from, upTo).concat([y]) });

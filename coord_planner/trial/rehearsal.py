@@ -18,6 +18,7 @@ from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
 from ..core.fence import Line
 from ..core.fleet import Fleet
+from ..core.graph import Edge
 from ..core.messages import Answer, Caution, Decision, HazardPoint, PoseSample, Snapshot, State
 from ..errors import RefusedError
 from .faults import Fault, Faults, check_targets
@@ -141,6 +142,8 @@ class _Loop:
             driven, self._graph.relative_to(driven.names), settings, configuration.manoeuvres, _BUDGET,
             self._faults.solve(solve, settings.horizon.budget), refused,
         )
+        self._edges_now = self.coordinator.graph.edges
+        self._edge_changes: list[tuple[float, tuple[Edge, ...]]] = []
         self._log = _Log()
         self._period, self._tick_period = 1.0 / settings.commands.rate, 1.0 / settings.horizon.rate
         self._pose_period = 1.0 / configuration.simulation.pose_rate
@@ -176,6 +179,10 @@ class _Loop:
     def tick(self) -> Decision:
         """Look at the robots and decide."""
         self._look()
+        edges = self.coordinator.graph.edges
+        if edges != self._edges_now:
+            self._edges_now = edges
+            self._edge_changes.append((self.now, edges))
         began = clock.perf_counter()
         decision = self.coordinator.step(Snapshot(
             self.now, self._measured, self._faults.not_ready(), hazard=self._seen_now()
@@ -235,8 +242,9 @@ class _Loop:
         frames = tuple(attrs.evolve(frame, poses=frame.poses[rows]) for frame in log.frames)
         away = turned_away(self.coordinator, self._sighting, self._moving_since or 0.0) if self._sighting else {}
         state = State.ENDED if decision.completed else decision.state
+        fleet = Fleet(tuple(self._fleet.robots[k] for k in rows))
         return Run(
-            fleet=Fleet(tuple(self._fleet.robots[k] for k in rows)),
+            fleet=fleet,
             edges=self._graph.relative_to(configuration.driven.names).edges, manoeuvre=manoeuvre,
             times=np.array(log.times), poses=np.stack(log.poses, axis=1)[rows],
             speeds=np.stack(log.speeds, axis=1)[rows], curvatures=np.stack(log.curvatures, axis=1)[rows],
@@ -244,6 +252,7 @@ class _Loop:
             end_poses=self._ends[rows],
             min_clearance=configuration.settings.site_rules.min_clearance, state=state.value,
             completed=decision.completed, began=self._moving_since or 0.0, ended=_ended(log), cautions=log.cautions(),
+            edge_changes=tuple((when, _among(edges, fleet.names)) for when, edges in self._edge_changes),
             tick_ms=np.array(log.tick_ms), wall_time=wall_time, frames=frames, events=tuple(log.events),
             facts={
                 "simulated": True, "invented": configuration.invented, "site": configuration.fleet_name,
@@ -252,6 +261,11 @@ class _Loop:
             },
             site_rules=configuration.settings.site_rules, strip=self._strip,
         )
+
+
+def _among(edges: Sequence[Edge], names: Sequence[str]) -> tuple[Edge, ...]:
+    """The edges between robots that are named."""
+    return tuple(edge for edge in edges if edge[0] in names and edge[1] in names)
 
 
 def _raise_if_refused(answers: Sequence[Answer]) -> None:

@@ -50,6 +50,7 @@ class Run:
         events: (seconds, text) worth a mark on the time line.
         facts: anything else worth keeping (seed, file, coupling), JSON-able.
         site_rules: of the site, with its keep-outs and its areas with speed caps; the defaults where not known.
+        edge_changes: later graphs, each with the moment from which it was in force, seconds.
         strip: lines that no footprint was to reach across: a unit normal towards the far side and how far along it,
             from the origin of the frame, the line lies, metres.
     """
@@ -76,4 +77,5 @@ class Run:
     events: tuple[tuple[float, str], ...] = ()
     facts: dict[str, Any] = attrs.field(factory=dict)
     site_rules: SiteRules = SiteRules()
+    edge_changes: tuple[tuple[float, tuple[tuple[str, str, float], ...]], ...] = ()
     strip: tuple[tuple[tuple[float, float], float], ...] = ()
