@@ -50,13 +50,14 @@ lint: .venv/test.stamp
 types: .venv/test.stamp
 	$(PY) -m mypy coord_planner
 
+# Groups of ROS tests mostly wait, each on a domain of its own: two at a time.
 # The cluster's processes need the cores for themselves, or they take each other for dead.
 unit: .venv/test.stamp .venv/test_data/recordings.stamp
 	$(ONE_THREAD) $(PY) -m pytest -q -n 2 --ignore test/ros --ignore test/test_sweep_cluster.py test
 	$(ONE_THREAD) $(PY) -m pytest -q test/test_sweep_cluster.py
 
 ros: .venv/test.stamp
-	$(ONE_THREAD) $(ON_TEST_DOMAIN) timeout -k 10 900 $(PY) -m pytest -q test/ros
+	$(ONE_THREAD) $(ON_TEST_DOMAIN) timeout -k 10 900 $(PY) -m pytest -q -n 2 --dist loadfile test/ros
 
 # Builds as a ROS 2 workspace does, then looks at the result as one who has sourced that workspace.
 colcon: .venv/test.stamp

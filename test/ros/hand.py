@@ -30,6 +30,8 @@ from coord_planner.ros import outgoing, qos
 ROBOTS = ("left", "middle", "right")
 CONFIGURE, ACTIVATE = Transition.TRANSITION_CONFIGURE, Transition.TRANSITION_ACTIVATE
 DEACTIVATE, CLEANUP = Transition.TRANSITION_DEACTIVATE, Transition.TRANSITION_CLEANUP
+_REACHED = {CONFIGURE: "inactive", ACTIVATE: "active", DEACTIVATE: "inactive", CLEANUP: "unconfigured"}
+_MATCHED = 0.2  # seconds
 
 
 class Hand:
@@ -140,19 +142,29 @@ class Hand:
         return future.result()
 
     def ask_later(self, kind: type, name: str, request: Any) -> Any:
-        if name not in self._clients:
+        new = name not in self._clients
+        if new:
             self._clients[name] = self.node.create_client(kind, name)
         client = self._clients[name]
         self.until(client.service_is_ready, what=name)
+        if new:
+            self.spin(_MATCHED)  # ready means that the request would arrive; the way back is found a little later
         return client.call_async(request)
 
     def trigger(self, name: str) -> Trigger.Response:
         return self.ask(Trigger, f"{self.planner}/{name}", Trigger.Request())
 
     def transition(self, number: int) -> bool:
+        """Ask for a transition. When no answer comes, the state that is reached tells whether it succeeded."""
         request = ChangeState.Request()
         request.transition.id = number
-        return bool(self.ask(ChangeState, f"{self.planner}/change_state", request).success)
+        future = self.ask_later(ChangeState, f"{self.planner}/change_state", request)
+        end = time.monotonic() + 20.0
+        while not future.done() and time.monotonic() < end:
+            self._executor.spin_once(timeout_sec=0.02)
+        if future.done():
+            return bool(future.result().success)
+        return self.lifecycle() == _REACHED.get(number, "")  # DDS may lose an answer to a client that is new to it
 
     def lifecycle(self) -> str:
         return str(self.ask(GetState, f"{self.planner}/get_state", GetState.Request()).current_state.label)
