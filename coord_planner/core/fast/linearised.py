@@ -173,7 +173,7 @@ class Linearised:
             known = near if self._clear is None else np.union1d(near, self._clear.pairs)
             self._clear = clearance.rows_of(self._numbers, self.point.r, self.point.sight, known)
         rows, size = self._clear, diagonal.shape[1]
-        stiff = stiffness[rows.pairs]
+        stiff = np.where(stiffness[rows.pairs] > _SOFT, stiffness[rows.pairs], 0.0)
         by_commands = rows.by_commands
         most = int((stiff > _SOFT).sum(axis=1).max())
         if 2 * most < stiff.shape[1]:
