@@ -125,7 +125,7 @@ def line(label, rows, failed):
         f"{at['clearance'].min():.3f} m", f"{at['end'].max():.3f} m",
         f"{at['heading'].max():.2f} deg", f"{at['edge'].max():+.3f} m", f"{at['spread'].max():.1f} deg",
         f"{100 * at['spacing'].max():.1f} %", f"{np.median(at['duration']):.1f} s", f"{np.median(at['tick']):.0f} ms",
-        f"{np.median(at['begins']):.0f} s",
+        f"{np.median(at['processor']):.0f} s",
     ]
     return "  ".join(f"{cell:>12}" for cell in [label, *cells])
 
