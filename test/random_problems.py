@@ -21,6 +21,7 @@ from coord_planner.core.problem import (
     bounds_in_force,
     no_fences,
 )
+from coord_planner.core.rectangles import separating_normals
 from coord_planner.core.rollout import rolled_out
 from coord_planner.core.settings import Prices
 
@@ -50,7 +51,6 @@ def problem(seed: int, contact: bool, fenced: bool = False) -> tuple[Problem, np
     return attrs.evolve(
         driven, initial=initial, target=target, coupling=float(rng.choice([0.0, 0.3, 2.0, 20.0])),
         alignment=float(rng.choice([0.0, 0.0, 1.0])),
-        compare_speed=driven.turn_speed * (1.0 if rng.random() < 0.7 else rng.uniform(0.6, 1.6, (count, 1))),
         bounds=_bounds(driven, initial),
         watch=_watch(rng, fleet, guess, contact),
         fences=_fences(fleet, guess) if fenced else no_fences(INTERVALS),
@@ -127,7 +127,7 @@ def _watch(rng: np.random.Generator, fleet: Fleet, guess: np.ndarray, contact: b
     nearest = outline.clearances(polygons, pairs).min(axis=1)
     kept = nearest + (rng.uniform(-0.02, 0.08, len(pairs)) if contact else -0.3)
     return Watch(
-        pairs, outline.separating_normals(polygons, pairs),
+        pairs, separating_normals(fleet.corners(), guess[:, 1:, POSE], pairs),
         np.repeat(np.maximum(kept, 0.02)[:, None], INTERVALS, axis=1),
     )
 

@@ -174,7 +174,7 @@ class World:
         self.sent = values
 
     def check(self, values):
-        fleet = self.coordinator._fleet
+        fleet = self.coordinator.fleet
         assert np.isfinite(values).all()
         before = np.zeros_like(values) if self.sent is None or len(self.sent) != len(values) else self.sent
         limit, speed, bend = fleet.limit, np.abs(values[:, 0]), np.abs(values[:, 1])
@@ -204,11 +204,11 @@ class World:
         if what[0] == "limit":
             self.lowered = True
             robots = tuple(attrs.evolve(robot, limits=attrs.evolve(robot.limits, **{what[1]: what[2]}))
-                           for robot in self.coordinator._fleet.robots)
-            change["fleet"] = attrs.evolve(self.coordinator._fleet, robots=robots)
+                           for robot in self.coordinator.fleet.robots)
+            change["fleet"] = attrs.evolve(self.coordinator.fleet, robots=robots)
         elif what[0] == "edges":
-            edges = (("cart_1", "cart_2", 1.0),) if what[1] and len(self.coordinator._fleet) == 2 else ()
-            change["graph"] = NeighbourGraph(self.coordinator._fleet.names, edges)
+            edges = (("cart_1", "cart_2", 1.0),) if what[1] and len(self.coordinator.fleet) == 2 else ()
+            change["graph"] = NeighbourGraph(self.coordinator.fleet.names, edges)
         elif what[0] == "members":
             change["fleet"] = attrs.evolve(FLEET, robots=FLEET.robots[: what[1]])
             change["graph"] = graphs.path(FLEET.names[: what[1]])

@@ -57,3 +57,9 @@ class Chain:
     def progress(self, done: float) -> float:
         """Part of the whole that is done, from the part of this part that is."""
         return (self.index + done) / len(self.parts)
+
+
+def chain_of(name: str, wanted: Manoeuvre) -> Optional[Chain]:
+    """The sequence that a manoeuvre is; None when it is not one of several parts."""
+    parts = parts_of(name, wanted)
+    return Chain(name, parts) if len(parts) > 1 else None
