@@ -88,20 +88,28 @@ def engine(numbers: Numbers, structure: Structure) -> Engine:
 _LOCK = threading.Lock()
 
 
-def kernels() -> Any:
+def kernels() -> Optional[Any]:
     """The compiled functions, loaded or compiled at the first call (seconds); None without numba."""
     with _LOCK:
-        return _kernels()
+        return _kernels()[0]
+
+
+def told() -> str:
+    """How steps are taken, for people; loads what ``kernels`` loads."""
+    with _LOCK:
+        return _kernels()[1]
 
 
 @functools.lru_cache(maxsize=1)
-def _kernels() -> Any:
+def _kernels() -> tuple[Optional[Any], str]:
     try:
         import numba
-    except ImportError:
-        return None
+    except ImportError as error:
+        missing = isinstance(error, ModuleNotFoundError)
+        reason = "numba is not installed" if missing else f"numba cannot be loaded ({error})"
+        return None, f"ticks are solved by numpy alone, several times slower: {reason}; pip install numba"
     if numba.config.DISABLE_JIT:
-        return None
+        return None, "ticks are solved by numpy alone, several times slower: NUMBA_DISABLE_JIT is set; unset it"
     from .kernels import entry
 
-    return entry.entries()
+    return entry.entries(), f"ticks are solved by kernels that numba {numba.__version__} compiled"

@@ -15,24 +15,23 @@ from .structure import Structure
 
 @attrs.frozen(eq=False)
 class Packed:
-    """One problem, contiguous; rows as kernels/fields.py names them. N robots, M intervals, E edges, P pairs and fences.
+    """One problem, contiguous; rows as kernels/fields.py names them. N robots, M intervals, E edges, P pairs, fences.
 
     Attributes:
-        which: lags of curvature and speed of each robot, (2, N). mean_k, mean_v, last_k, last_v: of each lag, see Response.
-        span (3, M), prices (3,), field (5, N, M), robot (8, N), foot (9, P), lines (3, P, M): see kernels/fields.py.
-        lower, upper: (6, N, M). target, end_price: (N, 7). edges: (E, 2). edge_price: of turning and of alignment, (2, E).
+        which: lags of curvature and speed of each robot, (2, N). mean, last: of each lag, first of curvature, then of
+            speed, (2, U, M, M) and (2, U, M): see Response.mean, and .reached at the last node.
+        span (3, M), prices (3,), field (4, N, M), robot (8, N), foot (9, P), lines (3, P, M): see kernels/fields.py.
+        lower, upper: (6, N, M). target, end_price: (N, 7). edges: (E, 2). edge_price: of turning and alignment, (2, E).
         coupled: sum of the first over each robot's edges, (N,).
         rows, means, row_numbers: of Comparing: robots (2, R), means (2, R, M), known and price (2, R).
         compared_own, compared_across: of Comparing; empty where neighbours are compared at equal moments.
-        pairs: (P, 2). order, place: of elimination, (N,). joins: (J, 6), see kernels/matrix.py.
+        pairs: (P, 2). order: of elimination, (N,). joins: (J, 6), see kernels/matrix.py.
         layout, owners: of margins; owners: the two robots of each entry, (2, L).
     """
 
     which: np.ndarray
-    mean_k: np.ndarray
-    mean_v: np.ndarray
-    last_k: np.ndarray
-    last_v: np.ndarray
+    mean: np.ndarray
+    last: np.ndarray
     span: np.ndarray
     prices: np.ndarray
     field: np.ndarray
@@ -53,7 +52,6 @@ class Packed:
     lines: np.ndarray
     foot: np.ndarray
     order: np.ndarray
-    place: np.ndarray
     joins: np.ndarray
     layout: Layout
     owners: np.ndarray
@@ -67,8 +65,8 @@ def packed(numbers: Numbers, structure: Structure) -> Packed:
     apart = numbers.coupled[numbers.edges[:, 0], numbers.edges[:, 1]]
     none = np.zeros((0, m, m))
     return Packed(
-        which=_whole([curvature.which, speed.which]), mean_k=curvature.mean, mean_v=speed.mean,
-        last_k=_flat(curvature.reached[:, -1]), last_v=_flat(speed.reached[:, -1]),
+        which=_whole([curvature.which, speed.which]), mean=_both(curvature.mean, speed.mean),
+        last=_both(curvature.reached[:, -1], speed.reached[:, -1]),
         span=_flat([numbers.h, numbers.cost_h, numbers.short_price]),
         prices=np.array([numbers.price_curvature_rate, numbers.price_acceleration, numbers.price_speed]),
         field=_field(numbers), robot=_robot(numbers), lower=_flat(numbers.lower), upper=_flat(numbers.upper),
@@ -85,7 +83,7 @@ def packed(numbers: Numbers, structure: Structure) -> Packed:
             *numbers.half_length[..., 0], *numbers.half_width[..., 0], *numbers.offset_x[..., 0],
             *numbers.offset_y[..., 0], numbers.second[:, 0],
         ]),
-        order=np.array(structure.order, np.int64), place=structure.place, joins=structure.joins,
+        order=np.array(structure.order, np.int64), joins=structure.joins,
         layout=layout(numbers), owners=_owners(n, m, numbers.pairs),
     )
 
@@ -98,7 +96,7 @@ def restarted(known: Packed, numbers: Numbers) -> Packed:
 def _field(numbers: Numbers) -> np.ndarray:
     begins = numbers.begins
     return _flat([
-        numbers.asked_speed, numbers.turn_speed, numbers.compared, begins.mean_curvature, begins.mean_speed,
+        numbers.asked_speed, numbers.turn_speed, begins.mean_curvature, begins.mean_speed,
     ])
 
 
@@ -113,6 +111,13 @@ def _owners(n: int, m: int, pairs: np.ndarray) -> np.ndarray:
     limit, end = np.tile(np.repeat(robots, m), 12), np.tile(np.repeat(robots, 7), 2)
     own = np.concatenate([limit, end])
     return np.stack([np.concatenate([own, np.tile(np.repeat(pairs[:, side], m), 2)]) for side in range(2)])
+
+
+def _both(one: np.ndarray, other: np.ndarray) -> np.ndarray:
+    """Two stacks, of which one may be shorter, in one."""
+    found = np.zeros((2, max(len(one), len(other)), *one.shape[1:]))
+    found[0, : len(one)], found[1, : len(other)] = one, other
+    return found
 
 
 def _flat(values: object) -> np.ndarray:

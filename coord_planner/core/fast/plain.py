@@ -1,7 +1,7 @@
 # Copyright 2026 coord_planner maintainers
 # SPDX-License-Identifier: Apache-2.0
 
-"""The engine of the tick solver in numpy alone, where numba is not installed, and what the compiled one is held against."""
+"""The engine of the tick solver in numpy alone: where numba is missing, and what the compiled one is held against."""
 
 from __future__ import annotations
 
@@ -84,7 +84,7 @@ class PlainEngine:
         return PlainTrial(point, active.begin(self._numbers, point.point, forces), np.inf)
 
     def hold(self, held: Optional[active.Held], trial: PlainTrial, near: float) -> active.Held:
-        """The matrix for the met rows; with the last derivatives where ``held`` serves the point (see Linearised.serves)."""
+        """The matrix for the met rows, with the last derivatives where they serve the point (see Linearised.serves)."""
         if held is not None and held.linearised.serves(trial.point.point, near):
             return active.Held(held.linearised, trial.trial) if trial.changed else held
         linearised = Linearised(self._numbers, self._structure, self._constant, trial.point.point)

@@ -17,7 +17,7 @@ from ..plan import Plan
 from ..problem import POSE, Problem
 from ..solver import Start
 from . import vectors
-from .engine import Engine, Held, Iterate, Pointed, Trial, engine
+from .engine import Engine, Held, Iterate, Pointed, Trial, engine, kernels
 from .interior import BARRIER
 from .linearised import NEAR
 from .margins import LEAST
@@ -72,10 +72,12 @@ class Prepared:
 class TickSolver:
     """Solves one tick's problem after another. ``solve`` may be called in several threads at once.
 
-    Nothing is built or compiled: edges, pairs, weights, limits and even the fleet may change from tick to tick.
+    Edges, pairs, weights, limits and even the fleet may change from tick to tick: nothing is built for them. Making the
+    first solver of a process loads the kernels, or compiles them, once for a machine: that takes half a minute.
     """
 
     def __init__(self) -> None:
+        kernels()
         self._fleet: tuple[Fleet, FleetNumbers] | None = None
         self._ready: Prepared | None = None
 
@@ -214,8 +216,9 @@ def _active_steps(
         if trial.changed == 0 and passed < _KEPT_WITHIN:
             gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, _LEAST_COST)
             if gap <= watchman.tolerated:
-                forces = trial.forces
-                return trial, _Found(trial.point, lambda: forces, reached, _KEPT_WITHIN, gap, watchman.steps)
+                return trial, _Found(
+                    trial.point, partial(getattr, trial, "forces"), reached, _KEPT_WITHIN, gap, watchman.steps
+                )
         slow, left_before = left_over > _SLOW * left_before, left_over
         settling = trial.changed <= _SETTLING * robots and passed < _NEARLY_KEPT
         if watchman.late or (step >= _ACTIVE_STEPS // 2 and not settling):

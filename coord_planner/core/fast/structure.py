@@ -18,16 +18,14 @@ class Structure:
     Attributes:
         order: every robot once. edges, pairs: shapes (E, 2) and (P, 2), the robot that is eliminated first in front.
         turned: whether a pair was turned round for that, shape (P,).
-        place: of each robot in the order, shape (N,).
-        joins: pairs of robots that share a block, shape (J, 6): the one that is eliminated first, the other; position of
-            their edge, or -1; of their pair, or -1; whether the edge, and the pair, were turned round.
+        joins: pairs of robots that share a block, shape (J, 6): the one that is eliminated first, the other; position
+            of their edge, or -1; of their pair, or -1; whether the edge, and the pair, were turned round.
     """
 
     order: list[int]
     edges: np.ndarray
     pairs: np.ndarray
     turned: np.ndarray
-    place: np.ndarray
     joins: np.ndarray
 
 
@@ -43,7 +41,7 @@ def structure(count: int, edges: np.ndarray, pairs: np.ndarray) -> Structure:
             join = joins.setdefault((k, j), [k, j, -1, -1, 0, 0])
             join[2 + which], join[4 + which] = position, int(other)
     return Structure(
-        order, own_edges, own_pairs, turned, place, np.array(list(joins.values()), np.int64).reshape(-1, 6)
+        order, own_edges, own_pairs, turned, np.array(list(joins.values()), np.int64).reshape(-1, 6)
     )
 
 

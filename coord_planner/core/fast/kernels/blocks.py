@@ -3,8 +3,8 @@
 
 """Blocks of the matrix of a step by means of curvature and speed: sums of wrenches seen through levers.
 
-A row of poses is a wrench g at a node n; its derivative by an interval i <= n is e_i' g, with e_i the lever of the interval
-(x, y, heading). So the sum over nodes of stiffness * row' row is, for intervals i <= l, e_i' C_l e_l, with
+A row of poses is a wrench g at a node n; its derivative by an interval i <= n is e_i' g, with e_i the lever of the
+interval (x, y, heading). So the sum over nodes of stiffness * row' row is, for intervals i <= l, e_i' C_l e_l, with
 C_l the sum of stiffness * g g' over the nodes from l on. See chain.lever and clearance.look.
 """
 
@@ -15,10 +15,10 @@ import math
 import numpy as np
 
 from .compiled import inner
-from .fields import COMPARED, COS, COST_H, FULL_SPEED, LEAVE, MEAN_K, MEAN_V, SIN, TURN_SPEED, X0, Y0, H, X, Y
+from .fields import COS, COST_H, FULL_SPEED, LEAVE, MEAN_K, MEAN_V, SIN, TURN_SPEED, X0, Y0, H, X, Y
 from .objective import aligning
 
-SOFT = 1e-2  # stiffness (1/m^2) below which a clearance row does not bend the cost noticeably
+SOFT = 1e-2  # stiffness (1/m^2) of all rows of a pair below which it does not bend the cost noticeably
 FLAT = 1e-4  # curvature (1/rad^2) of shadows below which it does not either
 UNBENT = 1e-3  # second derivative by the heading (1/rad^2) below which pulls on the poses bend nothing
 
@@ -37,7 +37,7 @@ def sums(pairs, wrench, bent, near, stiff, pressure, robot, roll, ends, span, ed
             k = pairs[p, side]
             for i in range(m):
                 heads[k, i] += pressure[p, i] * bent[side, p, i]
-                if near[p] and stiff[p, i] > SOFT:
+                if near[p]:
                     _square(found, k, i, stiff[p, i], wrench, side, p)
     most = 0.0
     for k in range(n):
@@ -135,9 +135,10 @@ def own(k, tensors, levers, span, prices, field, robot, coupled, compared_own, r
             across_v[j] = vx * e3[j] + vy * e4[j] + vt * e5[j]
     for i in range(m):
         by_k, by_v = roll[MEAN_V, k, i] / field[TURN_SPEED, k, i], roll[MEAN_K, k, i] / field[TURN_SPEED, k, i]
-        price = (1.0 + coupled * field[COMPARED, k, i] * field[COMPARED, k, i]) * span[COST_H, i]
+        price = (1.0 + coupled) * span[COST_H, i]
         leave = prices[LEAVE] * span[COST_H, i] / (robot[FULL_SPEED, k] * robot[FULL_SPEED, k])
-        _add_own(block, i, i, price * by_k * by_k, price * by_k * by_v, price * by_k * by_v, price * by_v * by_v + leave)
+        mixed = price * by_k * by_v
+        _add_own(block, i, i, price * by_k * by_k, mixed, mixed, price * by_v * by_v + leave)
         if len(compared_own):
             for j in range(i + 1):
                 price = compared_own[k, i, j]
@@ -185,7 +186,7 @@ def apart(pair, turned, wrench, stiff, tensors):
     first, second = (1, 0) if turned else (0, 1)
     m = tensors.shape[1]
     for i in range(m - 1, -1, -1):
-        price = stiff[pair, i] if stiff[pair, i] > SOFT else 0.0
+        price = stiff[pair, i]
         for a in range(3):
             for b in range(3):
                 value = price * wrench[first, a, pair, i] * wrench[second, b, pair, i]
@@ -223,7 +224,7 @@ def between(k, j, tensors, levers, block):
 
 @inner
 def couple(e, back, k, j, price, span, field, across, roll, block):
-    """Add an edge's coupling of turnings to the block of robots k and j. back: the edge's own order is the other one."""
+    """Add an edge's coupling of turnings to the block of robots k and j. back: the edge names j first."""
     m = span.shape[1]
     for i in range(m):
         own_k, own_v = roll[MEAN_V, k, i] / field[TURN_SPEED, k, i], roll[MEAN_K, k, i] / field[TURN_SPEED, k, i]
@@ -231,7 +232,7 @@ def couple(e, back, k, j, price, span, field, across, roll, block):
         for c in range(begin, end):
             weight = 0.0
             if c == i:
-                weight = -price * field[COMPARED, k, i] * field[COMPARED, j, i] * span[COST_H, i]
+                weight = -price * span[COST_H, i]
             if len(across):
                 weight += across[e, c, i] if back else across[e, i, c]
             other_k = roll[MEAN_V, j, c] / field[TURN_SPEED, j, c]

@@ -13,8 +13,6 @@ from .fields import (
     COS,
     FROM_K,
     FROM_V,
-    H,
-    K,
     MEAN_K,
     MEAN_V,
     NODE_COS,
@@ -25,11 +23,13 @@ from .fields import (
     THETA0,
     TURN_SPEED,
     TURNING,
+    X0,
+    Y0,
+    H,
+    K,
     V,
     X,
-    X0,
     Y,
-    Y0,
 )
 
 
@@ -67,14 +67,14 @@ def respond_back(mean, values, found):
 
 
 @inner
-def drive(which, mean_k, mean_v, span, field, robot, roll):
+def drive(which, mean, span, field, robot, roll):
     """Fill all rows of ``roll`` from its rows K and V."""
     m = span.shape[1]
     for k in range(roll.shape[1]):
         for i in range(m):
             roll[MEAN_K, k, i], roll[MEAN_V, k, i] = field[FROM_K, k, i], field[FROM_V, k, i]
-        respond(mean_k[which[0, k]], roll[K, k, :m], roll[MEAN_K, k, :m])
-        respond(mean_v[which[1, k]], roll[V, k, :m], roll[MEAN_V, k, :m])
+        respond(mean[0, which[0, k]], roll[K, k, :m], roll[MEAN_K, k, :m])
+        respond(mean[1, which[1, k]], roll[V, k, :m], roll[MEAN_V, k, :m])
         x, y, theta = robot[X0, k], robot[Y0, k], robot[THETA0, k]
         roll[X, k, 0], roll[Y, k, 0], roll[THETA, k, 0] = x, y, theta
         for i in range(m):
@@ -94,7 +94,7 @@ def drive(which, mean_k, mean_v, span, field, robot, roll):
 
 @inner
 def lever(span, robot, roll, found):
-    """Fill the twist about each robot's first place by mean curvature, and by mean speed, of each interval, shape (6, N, M).
+    """Fill the twist about each robot's first place by mean curvature, and by mean speed, of intervals, (6, N, M).
 
     Rows: x, y, heading by mean curvature; the same by mean speed. A node's x moves by x - y' * heading, where y' is the
     node's place as seen from the robot's first one.

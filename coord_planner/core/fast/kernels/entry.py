@@ -15,27 +15,26 @@ import numba
 from numba.core.caching import FunctionCache
 from numba.core.registry import CPUDispatcher
 
-from . import active, blocks, chain, clearance, factor, fields, interior, limits, margins, matrix, objective, point, rows
-from . import sweeps
+from . import active, blocks, chain, clearance, factor, fields, interior, limits, matrix, objective, point, rows, sweeps
 from .compiled import OPTIONS
 
 _MODULES = (
-    active, blocks, chain, clearance, factor, fields, interior, limits, margins, matrix, objective, point, rows, sweeps,
+    active, blocks, chain, clearance, factor, fields, interior, limits, matrix, objective, point, rows, sweeps,
 )
-_F = numba.float64
+_F, _I = numba.float64, numba.int64
 _F1, _F2, _F3, _F4 = (numba.types.Array(_F, d, "C") for d in (1, 2, 3, 4))
-_I1, _I2 = (numba.types.Array(numba.int64, d, "C") for d in (1, 2))
-_B, (_B1, _B2, _B3) = numba.boolean, (numba.types.Array(numba.boolean, d, "C") for d in (1, 2, 3))
+_I1, _I2 = (numba.types.Array(_I, d, "C") for d in (1, 2))
+_B, _B1 = numba.boolean, numba.types.Array(numba.boolean, 1, "C")
 
-_RESPONSE = (_I2, _F3, _F3, _F2, _F2)  # which, mean_k, mean_v, last_k, last_v
+_RESPONSE = (_I2, _F4, _F3)  # which, mean, last
 _COSTS = (_F2, _F1, _F3, _F2)  # span, prices, field, robot
-_BOUNDS = (_F3, _F3)  # lower, upper
 _EDGES = (_I2, _F2)
 _COMPARING = (_I2, _F3, _F2)  # rows, means, row_numbers
 _PAIRS = (_I2, _F3, _F2)  # pairs, lines, foot
-_ROWS = (_F3, _F3, _F2, _F2, _F4)  # roll, limits, missed, clearances, wrenches
+_AT = (_F3, _F3, _F4)  # roll, levers, wrenches
 _OF_ROWS = (_F3, _F2, _F2)  # of limits, ends, clearances
-_SETS = (_F3, _B2, _B2)  # met limits, ends, clearances
+_FLAT = (_F1, _F1, _F1)  # the same, flat
+_FLAT_SETS = (_F1, _B1, _B1)
 _FACTOR = (_I1, _F1, _I1, _I2, _I1)  # order, panels, begins, later, counts
 
 
@@ -44,39 +43,38 @@ class Entries:
     """The compiled functions."""
 
     evaluate: Callable[..., Any]
+    linearise: Callable[..., Any]
     assemble: Callable[..., Any]
     factorise: Callable[..., Any]
-    stiffen_interior: Callable[..., Any]
-    direct_interior: Callable[..., Any]
-    advance_interior: Callable[..., Any]
+    respond: Callable[..., Any]
+    stiffen: Callable[..., Any]
+    aim: Callable[..., Any]
+    follow: Callable[..., Any]
+    advance: Callable[..., Any]
     settle_interior: Callable[..., Any]
-    stiffen_active: Callable[..., Any]
-    direct_active: Callable[..., Any]
+    want: Callable[..., Any]
     settle_active: Callable[..., Any]
 
 
 _KNOWN: dict[str, tuple[Callable[..., Any], tuple[Any, ...]]] = {
     "evaluate": (
-        point.evaluate, (*_RESPONSE, *_COSTS, *_BOUNDS, _F2, _F2, *_EDGES, *_COMPARING, *_PAIRS, _F2)
+        point.evaluate, (*_RESPONSE, *_COSTS, _F3, _F3, _F2, _F2, *_EDGES, *_COMPARING, *_PAIRS, _F2)
     ),
+    "linearise": (matrix.linearise, (_F2, _F2, _I2, _F3, _F4, _F2, _F2, _F2, _B)),
     "assemble": (matrix.assemble, (
-        *_RESPONSE, *_COSTS, *_EDGES, _F1, _F3, _F3, _I2, _I1, _I2, _F3, _F3, _F3, _F4, _F3, _B1, *_OF_ROWS, _F2, _B, _F3,
+        *_RESPONSE, *_COSTS, *_EDGES, _F1, _F3, _F3, _I2, _I1, _I2, _F3, *_AT, _F3, _B1, *_OF_ROWS, _F2, _B, _F3,
     )),
-    "factorise": (factor.factorise, (_F1, _I1, _I1, _I2, _I1, _I2, numba.int64)),
-    "stiffen_interior": (
-        interior.stiffen, (_F2, _F2, _F2, *_EDGES, _I2, _B3, _F3, _F4, _F1, _F1, _F3, _B)
-    ),
-    "direct_interior": (interior.direct, (
-        *_RESPONSE, *_COSTS, *_BOUNDS, _F2, *_EDGES, *_COMPARING, _I2, *_FACTOR, _B3, _F1, _I2, *_ROWS, _F3, _B1, _F1, _F1,
-        _F3, _F1, _F2, _F1,
+    "factorise": (factor.factorise, (_F1, _I1, _I1, _I2, _I1, _I2, _I)),
+    "respond": (point.respond, (
+        *_RESPONSE, *_COSTS, *_EDGES, *_COMPARING, _I2, *_FACTOR, _B1, *_AT, *_OF_ROWS, *_AT, *_OF_ROWS, _B,
     )),
-    "advance_interior": (interior.advance, (_I2, _F3, _F1, _F1, _F3, _F2, _F1, _F1, _F3)),
-    "settle_interior": (interior.settle, (_F2, _F2, _F2, _F1, _F1, _F1, _F)),
-    "stiffen_active": (active.stiffen, (_F2, _F2, _I2, _F3, *_SETS, _F3, _B)),
-    "direct_active": (active.direct, (
-        *_RESPONSE, *_COSTS, *_BOUNDS, *_EDGES, *_COMPARING, _I2, *_FACTOR, _B1, _F3, _F3, _F4, *_ROWS, *_OF_ROWS, *_SETS,
-    )),
-    "settle_active": (active.settle, (_F2, *_BOUNDS, _F2, *_OF_ROWS, *_OF_ROWS, *_SETS)),
+    "stiffen": (interior.stiffen, (_B1, _F1, _I, _F1, _F1, _F1)),
+    "aim": (interior.aim, (_B1, _F1, _F1, _F1, _F1, _F1, *_FLAT, _F1, _F1)),
+    "follow": (interior.follow, (_B1, _F1, _F1, _F1, _F1, _F1, _F1, _F1, _I2, _I, _F1, *_FLAT, *_FLAT)),
+    "advance": (interior.advance, (_I2, _F3, _F1, _F1, _F1, _F2, _F1, _F1, _F1)),
+    "settle_interior": (interior.settle, (_F1, _F1, _F1, _F1, _F1, _F1, _F)),
+    "want": (active.want, (_F1, _F1, *_FLAT, _F1, *_FLAT_SETS)),
+    "settle_active": (active.settle, (_F1, _F1, _F1, _F1, *_FLAT, *_FLAT, *_FLAT, *_FLAT, *_FLAT_SETS)),
 }
 
 

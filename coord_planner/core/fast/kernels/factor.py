@@ -3,7 +3,7 @@
 
 """Cholesky factor of a matrix of square blocks, sparse like a graph of robots: factor.py as kernels.
 
-Robots are eliminated in a given order. The row of blocks of each is one panel: its own block (upper half), and beside it
+Robots are eliminated in a given order. The row of blocks of each is one panel: its own block (upper half), beside it
 the blocks with those robots that come later and share one with it. Blocks are padded to a multiple of four rows.
 """
 
@@ -22,8 +22,8 @@ def pattern(order, joins, on, later, counts, beside):
     """Fill which blocks there are, with those that fill up.
 
     Args:
-        order: robots as they are eliminated. joins: pairs of robots in its first two columns, the one that is eliminated
-            first in front. on: whether the pair's block is not empty.
+        order: robots as they are eliminated. joins: pairs of robots in its first two columns, the one that is
+            eliminated first in front. on: whether the pair's block is not empty.
         later: filled to the left with the robots that share a block with each and come later, (N, N). counts: how many,
             (N,), 0 to begin with. beside: place of a block in its panel, or -1, (N, N).
     """

@@ -10,8 +10,8 @@ Indices ``i`` of arrays of shape (.., M): interval i, or the node at its end.
 K, V, MEAN_K, MEAN_V, TURNING, COS, SIN, CHORD, STRETCH, NODE_COS, NODE_SIN, X, Y, THETA = range(14)
 ROLL = 14
 
-# field, shape (5, N, M): asked speed; speeds that turn rates are divided by; turning as compared; part of the first state
-ASKED, TURN_SPEED, COMPARED, FROM_K, FROM_V = range(5)
+# field, shape (4, N, M): asked speed; speeds that turn rates are divided by; part of the first state in the means
+ASKED, TURN_SPEED, FROM_K, FROM_V = range(4)
 
 # span, shape (3, M): length of the intervals, as the cost counts it, price of a metre of missing clearance
 H, COST_H, SHORT_PRICE = range(3)

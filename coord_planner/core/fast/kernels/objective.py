@@ -12,7 +12,6 @@ import numpy as np
 from .compiled import inner
 from .fields import (
     ASKED,
-    COMPARED,
     COST_H,
     FULL_SPEED,
     LAST_K,
@@ -45,14 +44,14 @@ def difference(rows, means, row_numbers, roll, r):
 
 
 @inner
-def miss(which, last_k, last_v, robot, target, roll, missed):
+def miss(which, last, robot, target, roll, missed):
     """Fill the last state less the target, shape (N, 7), in the order of STATES."""
-    m = last_k.shape[1]
+    m = last.shape[2]
     for k in range(missed.shape[0]):
         curvature, speed = robot[LAST_K, k], robot[LAST_V, k]
         for i in range(m):
-            curvature += last_k[which[0, k], i] * roll[K, k, i]
-            speed += last_v[which[1, k], i] * roll[V, k, i]
+            curvature += last[0, which[0, k], i] * roll[K, k, i]
+            speed += last[1, which[1, k], i] * roll[V, k, i]
         missed[k, 0] = roll[X, k, m] - target[k, 0]
         missed[k, 1] = roll[Y, k, m] - target[k, 1]
         missed[k, 2] = roll[THETA, k, m] - target[k, 2]
@@ -80,7 +79,7 @@ def cost(
     for e in range(edges.shape[0]):
         k, j = edges[e, 0], edges[e, 1]
         for i in range(m):
-            apart = field[COMPARED, k, i] * roll[TURNING, k, i] - field[COMPARED, j, i] * roll[TURNING, j, i]
+            apart = roll[TURNING, k, i] - roll[TURNING, j, i]
             half = math.sin(0.5 * (roll[THETA, k, i + 1] - roll[THETA, j, i + 1])) if edge_price[1, e] > 0.0 else 0.0
             total += span[COST_H, i] * (0.5 * edge_price[0, e] * apart * apart + 2.0 * edge_price[1, e] * half * half)
     for r in range(rows.shape[1]):
@@ -103,10 +102,9 @@ def pull_turnings(span, field, edges, edge_price, rows, means, row_numbers, roll
     for e in range(edges.shape[0]):
         k, j = edges[e, 0], edges[e, 1]
         for i in range(m):
-            apart = field[COMPARED, k, i] * roll[TURNING, k, i] - field[COMPARED, j, i] * roll[TURNING, j, i]
-            apart *= edge_price[0, e] * span[COST_H, i]
-            found[k, i] += field[COMPARED, k, i] * apart
-            found[j, i] -= field[COMPARED, j, i] * apart
+            apart = edge_price[0, e] * span[COST_H, i] * (roll[TURNING, k, i] - roll[TURNING, j, i])
+            found[k, i] += apart
+            found[j, i] -= apart
     for r in range(rows.shape[1]):
         apart = row_numbers[1, r] * difference(rows, means, row_numbers, roll, r)
         for i in range(m):

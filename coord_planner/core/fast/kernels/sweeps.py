@@ -49,35 +49,35 @@ def pull_means(levers, later, by_mean):
 
 
 @inner
-def pull_commands(which, mean_k, mean_v, last_k, last_v, ends, by_mean, found):
+def pull_commands(which, mean, last, ends, by_mean, found):
     """Add slopes by the commands, shape (N, 2M), of those by the means and of the last four states' ends."""
     m = by_mean.shape[2]
     for k in range(found.shape[0]):
-        respond_back(mean_k[which[0, k]], by_mean[0, k], found[k, :m])
-        respond_back(mean_v[which[1, k]], by_mean[1, k], found[k, m:])
+        respond_back(mean[0, which[0, k]], by_mean[0, k], found[k, :m])
+        respond_back(mean[1, which[1, k]], by_mean[1, k], found[k, m:])
         for i in range(m):
-            found[k, i] += ends[k, 3] * last_k[which[0, k], i]
-            found[k, m + i] += ends[k, 4] * last_v[which[1, k], i]
+            found[k, i] += ends[k, 3] * last[0, which[0, k], i]
+            found[k, m + i] += ends[k, 4] * last[1, which[1, k], i]
         found[k, m - 1] += ends[k, 5]
         found[k, 2 * m - 1] += ends[k, 6]
 
 
 @inner
-def move(which, mean_k, mean_v, last_k, last_v, pairs, robot, roll, levers, wrench, near, commands, ends, clear):
+def move(which, mean, last, pairs, robot, roll, levers, wrench, near, commands, ends, clear):
     """Fill the changes of the ends, (N, 7), and of the clearances of near pairs, (P, M), when commands (N, 2M) move."""
     n, m = levers.shape[1], levers.shape[2]
     twists = np.zeros((3, n, m))
     by_mean = np.zeros((2, m))
     for k in range(n):
         by_mean[:] = 0.0
-        respond(mean_k[which[0, k]], commands[k, :m], by_mean[0])
-        respond(mean_v[which[1, k]], commands[k, m:], by_mean[1])
+        respond(mean[0, which[0, k]], commands[k, :m], by_mean[0])
+        respond(mean[1, which[1, k]], commands[k, m:], by_mean[1])
         for c in range(3):
             total = 0.0
             for i in range(m):
                 total += levers[c, k, i] * by_mean[0, i] + levers[3 + c, k, i] * by_mean[1, i]
                 twists[c, k, i] = total
-        _move_end(which, last_k, last_v, robot, roll, twists, commands, k, ends)
+        _move_end(which, last, robot, roll, twists, commands, k, ends)
     for p in range(pairs.shape[0]):
         for i in range(m):
             clear[p, i] = 0.0
@@ -89,7 +89,7 @@ def move(which, mean_k, mean_v, last_k, last_v, pairs, robot, roll, levers, wren
 
 
 @inner
-def _move_end(which, last_k, last_v, robot, roll, twists, commands, k, ends):
+def _move_end(which, last, robot, roll, twists, commands, k, ends):
     m = twists.shape[2]
     turn = twists[2, k, m - 1]
     ends[k, 0] = twists[0, k, m - 1] - (roll[Y, k, m] - robot[Y0, k]) * turn
@@ -97,7 +97,7 @@ def _move_end(which, last_k, last_v, robot, roll, twists, commands, k, ends):
     ends[k, 2] = turn
     curvature = speed = 0.0
     for i in range(m):
-        curvature += last_k[which[0, k], i] * commands[k, i]
-        speed += last_v[which[1, k], i] * commands[k, m + i]
+        curvature += last[0, which[0, k], i] * commands[k, i]
+        speed += last[1, which[1, k], i] * commands[k, m + i]
     ends[k, 3], ends[k, 4] = curvature, speed
     ends[k, 5], ends[k, 6] = commands[k, m - 1], commands[k, 2 * m - 1]
