@@ -30,7 +30,8 @@ def write_figure(rows: Sequence[Row], path: Path) -> None:
     Raises:
         OSError: the file cannot be written.
     """
-    path.write_text(figure(rows).to_html(include_plotlyjs=True, full_html=True, config={"displaylogo": False}), encoding="utf-8")
+    page = figure(rows).to_html(include_plotlyjs=True, full_html=True, config={"displaylogo": False})
+    path.write_text(page, encoding="utf-8")
 
 
 def figure(rows: Sequence[Row]) -> go.Figure:
