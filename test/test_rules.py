@@ -13,7 +13,7 @@ import pytest
 from coord_planner.core import rules
 from coord_planner.core.messages import Level
 from coord_planner.core.settings import Settings, SiteRules
-from coord_planner.core.silence import Silence
+from coord_planner.core.silence import Entering, Nearing
 
 README = Path(__file__).parent.parent / "README.md"
 SETTINGS = Settings(site_rules=SiteRules(reference="the yard's rules, edition 3"))
@@ -47,7 +47,8 @@ RAISED = [
     rules.common_curvature(SETTINGS, 3.0),
     rules.plan_failed(SETTINGS, "no numbers"),
     rules.plans_missing(SETTINGS, 3.0),
-    rules.silence_unsafe(SETTINGS, Silence(2.0, 0.3, ("a", "b"))),
+    rules.silence_unsafe(SETTINGS, Nearing(2.0, 0.3, ("a", "b"))),
+    rules.silence_unsafe_near(SETTINGS, Entering(2.0, -0.3, "a", "pond")),
     rules.hazard_known(SETTINGS, (3.0, 4.0)),
     rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, True),
     rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, False),

@@ -168,8 +168,11 @@ def _plans(view: View) -> list[Caution]:
     found = []
     if view.refused_change:
         found.append(rules.change_refused(view.settings, view.refused_change))
-    if view.silence is not None and view.silence.clearance < view.settings.site_rules.min_clearance - SHORT:
-        found.append(rules.silence_unsafe(view.settings, view.silence))
+    silence, allowed = view.silence, view.settings.site_rules.min_clearance
+    if silence is not None and silence.nearing is not None and silence.nearing.clearance < allowed - SHORT:
+        found.append(rules.silence_unsafe(view.settings, silence.nearing))
+    if silence is not None and silence.entering is not None and silence.entering.spare < -SHORT:
+        found.append(rules.silence_unsafe_near(view.settings, silence.entering))
     return found
 
 

@@ -12,7 +12,7 @@ import attrs
 
 from .messages import Caution, Level
 from .settings import Settings
-from .silence import Silence
+from .silence import Entering, Nearing
 
 
 class Response(str, Enum):
@@ -101,7 +101,10 @@ TABLE = (
     Row("hazard known", Level.WARN, Response.GO_ON, "a hazard is known that nobody on the way comes near"),
     Row("hazard seen", Level.WARN, Response.TURN_AWAY, "a hazard is seen, and turning away from it is armed"),
     Row("hazard seen", Level.ERROR, Response.STOP, "a hazard is seen, or lies near the way, and nothing is armed"),
-    Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
+    Row(
+        "silence unsafe", Level.WARN, Response.GO_ON,
+        "robots that time out separately would come too near to each other or to a keep-out area",
+    ),
     Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
     Row(
         "robot not joined", Level.WARN, Response.GO_ON,
@@ -254,13 +257,21 @@ def plans_missing(settings: Settings, seconds: float) -> Caution:
     return _caution(settings, "plan failed", "", Level.ERROR, figures)
 
 
-def silence_unsafe(settings: Settings, silence: Silence) -> Caution:
+def silence_unsafe(settings: Settings, silence: Nearing) -> Caution:
     figures = (
         f"should the planner fall silent {silence.instant:.1f} s into the manoeuvre they come within "
         f"{silence.clearance:.2f} m before both stand, {settings.site_rules.min_clearance:g} m is the site's smallest "
         "(shorter command time-outs, less speed or more spacing would help)"
     )
     return _caution(settings, "silence unsafe", " and ".join(silence.pair), Level.WARN, figures)
+
+
+def silence_unsafe_near(settings: Settings, silence: Entering) -> Caution:
+    figures = (
+        f"should the planner fall silent {silence.instant:.1f} s into the manoeuvre it comes {-silence.spare:.2f} m "
+        f"too near to {silence.area} before it stands (a shorter command time-out, less speed or more room would help)"
+    )
+    return _caution(settings, "silence unsafe", silence.robot, Level.WARN, figures)
 
 
 def not_joined(settings: Settings, name: str, reason: str) -> Caution:
