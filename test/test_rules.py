@@ -22,6 +22,7 @@ RAISED = [
     rules.pose_old(SETTINGS, "a", 0.3),
     rules.pose_old(SETTINGS, "a", 3.0),
     rules.pose_jumped(SETTINGS, "a"),
+    rules.pose_frozen(SETTINGS, "a", 0.1),
     rules.pose_unsteady(SETTINGS, "a", 4.0),
     rules.clock_offset(SETTINGS, "a", 1.0),
     rules.clock_jumped(SETTINGS, -2.0),

@@ -88,7 +88,8 @@ class Judge:
     def _inputs(self, view: View) -> list[Caution]:
         settings, poses, now = view.settings, view.snapshot.poses, view.snapshot.time
         found = [rules.pose_jumped(settings, name) for name in view.estimate.jumped]
-        for name, age, scatter in zip(view.fleet.names, view.estimate.age, view.estimate.scatter):
+        estimate = view.estimate
+        for name, age, scatter, repeats in zip(view.fleet.names, estimate.age, estimate.scatter, estimate.repeats):
             newest = poses.get(name)
             if newest is not None and not np.isfinite([newest.stamp, newest.x, newest.y, newest.heading]).all():
                 found.append(rules.pose_invalid(settings, name))
@@ -96,6 +97,8 @@ class Judge:
                 found.append(rules.clock_offset(settings, name, newest.stamp - now))
             if age > _AGING * settings.poses.max_age:
                 found.append(rules.pose_old(settings, name, float(age)))
+            if repeats > 0.0:
+                found.append(rules.pose_frozen(settings, name, float(repeats)))
             if scatter > _SCATTER:
                 found.append(rules.pose_unsteady(settings, name, float(scatter)))
         return found

@@ -46,6 +46,10 @@ TABLE = (
     ),
     Row("pose old", Level.STALE, Response.STOP, "no pose for longer than poses.max_age"),
     Row("pose jumped", Level.ERROR, Response.STOP, "a pose lies further than poses.max_jump from where it must be"),
+    Row(
+        "pose frozen", Level.WARN, Response.GO_ON,
+        "a pose repeats exactly while the robot is to drive; it counts as if none came",
+    ),
     Row("pose unsteady", Level.WARN, Response.GO_ON, "poses scatter far more than the file says"),
     Row("clock offset", Level.WARN, Response.GO_ON, "stamps lie in the future; such poses are not used"),
     Row("clock jumped", Level.ERROR, Response.STOP, "the planner's own clock jumped"),
@@ -136,6 +140,11 @@ def pose_old(settings: Settings, name: str, age: float) -> Caution:
 def pose_jumped(settings: Settings, name: str) -> Caution:
     figures = f"its pose jumped by more than {settings.poses.max_jump:g} m"
     return _caution(settings, "pose jumped", name, Level.ERROR, figures)
+
+
+def pose_frozen(settings: Settings, name: str, driven: float) -> Caution:
+    figures = f"its pose repeats exactly although it must have driven {driven:.2f} m; it counts as if none came"
+    return _caution(settings, "pose frozen", name, Level.WARN, figures)
 
 
 def pose_unsteady(settings: Settings, name: str, times: float) -> Caution:
