@@ -21,6 +21,7 @@ from coord_planner.core.problem import (
     bounds_in_force,
     no_fences,
 )
+from coord_planner.core.rectangles import separating_normals
 from coord_planner.core.rollout import rolled_out
 from coord_planner.core.settings import Prices
 
@@ -127,7 +128,7 @@ def _watch(rng: np.random.Generator, fleet: Fleet, guess: np.ndarray, contact: b
     nearest = outline.clearances(polygons, pairs).min(axis=1)
     kept = nearest + (rng.uniform(-0.02, 0.08, len(pairs)) if contact else -0.3)
     return Watch(
-        pairs, outline.separating_normals(polygons, pairs),
+        pairs, separating_normals(fleet.corners(), guess[:, 1:, POSE], pairs),
         np.repeat(np.maximum(kept, 0.02)[:, None], INTERVALS, axis=1),
     )
 

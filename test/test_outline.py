@@ -7,11 +7,12 @@ import math
 
 import numpy as np
 import pytest
+import shapely
 from fleets import carts
 from hypothesis import given
 from hypothesis import strategies as st
 
-from coord_planner.core import outline
+from coord_planner.core import outline, rectangles
 from coord_planner.core.fleet import Footprint
 from coord_planner.core.plan import near_pairs
 
@@ -52,8 +53,8 @@ def test_closest_names_the_pair_over_all_moments():
 
 @given(*[st.floats(-5.0, 5.0)] * 2, *[st.floats(-4.0, 4.0)] * 2)
 def test_the_separating_line_shows_the_whole_distance(x, y, first, second):
-    polygons = outline.outlines(np.stack([RECTANGLE] * 2), np.array([(0.0, 0.0, first), (x, y, second)]))
-    normal = outline.separating_normals(polygons, PAIR)[0]
+    corners, poses = np.stack([RECTANGLE] * 2), np.array([(0.0, 0.0, first), (x, y, second)])
+    polygons, normal = outline.outlines(corners, poses), rectangles.separating_normals(corners, poses, PAIR)[0]
     assert np.hypot(*normal) == pytest.approx(1.0)
     gap = float(outline.clearances(polygons, PAIR).item())
     if gap > 1e-6:
@@ -70,3 +71,22 @@ def test_no_near_pair_is_left_out():
     near = {tuple(pair) for pair in near_pairs(fleet, poses, 2.0)}
     assert {tuple(pair) for pair in every[close]} <= near
     assert outline.closest(polygons, np.array(sorted(near)))[0] == outline.closest(polygons, every)[0]
+
+
+def test_rectangles_are_as_far_apart_as_shapely_says():
+    rng = np.random.default_rng(3)
+    count = 4000
+    corners = np.stack([
+        Footprint(*size, footprint_offset_x=ahead, footprint_offset_y=left).corners()
+        for *size, ahead, left in rng.uniform([0.2, 0.2, -1.0, -1.0], [3.0, 2.0, 1.0, 1.0], (2 * count, 4))
+    ]).reshape(2, count, 4, 2)
+    poses = rng.uniform([-3.0, -3.0, -7.0], [3.0, 3.0, 7.0], (2, count, 3))
+    poses[:, :200, 2] = np.round(poses[:, :200, 2] / (np.pi / 2)) * (np.pi / 2)  # side to side
+    corners[1, :20, :, 1] *= 0.1
+    corners[0, :20, :, 0] *= 0.1
+    poses[1, :20] = poses[0, :20]  # crossed: neither has a corner inside the other
+    shapes = [outline.outlines(corners[k], poses[k]) for k in range(2)]
+    expected = shapely.distance(*shapes)
+    assert 500 < np.count_nonzero(expected == 0.0) < count - 500
+    found = rectangles.distances((corners[0], corners[1]), (poses[0], poses[1]))
+    assert found == pytest.approx(expected, abs=1e-9)

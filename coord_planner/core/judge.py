@@ -11,13 +11,13 @@ from typing import Optional
 import attrs
 import numpy as np
 
-from . import neighbours, outline, rules, stopping
+from . import neighbours, rules, stopping
 from .fence import Piece
 from .fleet import Fleet
 from .graph import NeighbourGraph
 from .messages import Caution, Snapshot
 from .observer import Estimate
-from .plan import near_pairs
+from .plan import closest_along
 from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND
 from .pursuit import Pursuit
 from .settings import Settings
@@ -186,8 +186,7 @@ def _spacing(view: View) -> list[Caution]:
     if len(fleet) < 2 or not np.isfinite(poses).all():
         return []
     allowed = settings.site_rules.min_clearance
-    pairs = near_pairs(fleet, poses, allowed + 0.5 + 2 * float(estimate.growth.max()))
-    gap, pair = outline.closest(outline.outlines(fleet.corners(), poses), pairs, estimate.growth)
+    gap, pair = closest_along(fleet, poses, estimate.growth)
     # The estimate itself is uncertain: only what is clearly short is called a breach.
     if gap < allowed - 2.0 * settings.poses.noise_xy:
         return [rules.clearance_breached(settings, _names(fleet, pair), gap)]

@@ -51,24 +51,3 @@ def closest(
         each = np.maximum(each - growth[pairs].sum(axis=1), 0.0)
     worst = int(np.argmin(each))
     return float(each[worst]), (int(pairs[worst, 0]), int(pairs[worst, 1]))
-
-
-def separating_normals(polygons: np.ndarray, pairs: np.ndarray) -> np.ndarray:
-    """Unit vectors along the shortest line from the first of a pair to the second, shape (P, ..., 2).
-
-    The distance of two convex shapes equals the gap between their shadows on this line, and no other line
-    shows a larger gap: with the line kept, a gap that is kept keeps the distance. Overlapping shapes get
-    the line between their centres.
-    """
-    first, second = polygons[pairs[:, 0]], polygons[pairs[:, 1]]
-    ends = shapely.get_coordinates(shapely.shortest_line(first, second)).reshape(first.shape + (2, 2))
-    lines = ends[..., 1, :] - ends[..., 0, :]
-    length = np.hypot(lines[..., 0], lines[..., 1])[..., None]
-    if length.size and length.min() <= 1e-9:
-        lines = np.where(length > 1e-9, lines, _centres(second) - _centres(first))
-        length = np.hypot(lines[..., 0], lines[..., 1])[..., None]
-    return np.where(length > 1e-9, lines / np.maximum(length, 1e-9), np.array([1.0, 0.0]))
-
-
-def _centres(polygons: np.ndarray) -> np.ndarray:
-    return shapely.get_coordinates(shapely.centroid(polygons)).reshape(polygons.shape + (2,))

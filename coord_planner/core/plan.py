@@ -7,9 +7,8 @@ from __future__ import annotations
 
 import attrs
 import numpy as np
-import shapely
 
-from . import outline, se2
+from . import outline, rectangles, se2
 from .fleet import Fleet
 from .problem import POSE, STATES, Problem
 
@@ -111,8 +110,8 @@ def _gaps(
 ) -> np.ndarray:
     """Exact clearances at chosen places, shape (C, 2): which pair, and when; below 0 where growth makes them meet."""
     robots, moments = pairs[where[:, 0]], where[:, 1]
-    shapes = [outline.outlines(corners[k], poses[k, moments]) for k in robots.T]
-    found: np.ndarray = shapely.distance(*shapes)
+    first, second = robots.T
+    found = rectangles.distances((corners[first], corners[second]), (poses[first, moments], poses[second, moments]))
     return found if growth is None else found - growth[robots].sum(axis=1)
 
 

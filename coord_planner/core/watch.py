@@ -11,6 +11,7 @@ from . import outline
 from .fleet import Fleet
 from .plan import near_pairs
 from .problem import Watch
+from .rectangles import separating_normals
 from .settings import Settings
 
 
@@ -40,8 +41,7 @@ def watch(fleet: Fleet, settings: Settings, pairs: np.ndarray, poses: np.ndarray
     nodes = poses.shape[1] - 1
     if not len(pairs):
         return Watch(pairs, np.zeros((0, nodes, 2)), np.zeros((0, nodes)))
-    polygons = outline.outlines(fleet.corners(), poses[:, 1:])
-    normals = outline.separating_normals(polygons, pairs)
+    normals = separating_normals(fleet.corners(), poses[:, 1:], pairs)
     smallest = settings.site_rules.min_clearance
     kept = smallest + margin(fleet, settings, speed)[pairs].sum(axis=1)[:, None]
     apart = poses[pairs[:, 1], :, :2] - poses[pairs[:, 0], :, :2]

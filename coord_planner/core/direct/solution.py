@@ -12,7 +12,8 @@ import attrs
 import casadi as ca
 import numpy as np
 
-from .. import outline, se2
+from .. import se2
+from ..rectangles import separating_normals
 from ..theory.search import resampled
 from . import program as programs
 from .problem import DirectProblem
@@ -209,7 +210,7 @@ def lines_of(problem: DirectProblem, poses: np.ndarray) -> Lines:
     pairs, nodes = problem.pairs, poses.shape[1] - 1
     if not len(pairs):
         return Lines(np.zeros((0, nodes, 2)), np.zeros((0, nodes)))
-    normals = outline.separating_normals(outline.outlines(problem.corners, poses[:, 1:]), pairs)
+    normals = separating_normals(problem.corners, poses[:, 1:], pairs)
     apart = poses[pairs[:, 1], :, :2] - poses[pairs[:, 0], :, :2]
     moved = np.linalg.norm(np.diff(apart, axis=1), axis=2)
     least = problem.min_clearance
