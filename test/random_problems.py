@@ -51,7 +51,6 @@ def problem(seed: int, contact: bool, fenced: bool = False) -> tuple[Problem, np
     return attrs.evolve(
         driven, initial=initial, target=target, coupling=float(rng.choice([0.0, 0.3, 2.0, 20.0])),
         alignment=float(rng.choice([0.0, 0.0, 1.0])),
-        compare_speed=driven.turn_speed * (1.0 if rng.random() < 0.7 else rng.uniform(0.6, 1.6, (count, 1))),
         bounds=_bounds(driven, initial),
         watch=_watch(rng, fleet, guess, contact),
         fences=_fences(fleet, guess) if fenced else no_fences(INTERVALS),

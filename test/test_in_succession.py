@@ -93,7 +93,7 @@ def test_rows_say_what_the_cost_counts():
     problem = tick.pose_problem(planned, planned.plan.fleet, settings(), planned.state(2.0), 2.0, 2.0, 1.0, None,
                                 np.zeros(3))[0]
     tick_rows = problem.compared
-    u_tick = np.diff(planned.states(problem.times)[:, :, 2], axis=1) / problem.intervals / problem.compare_speed
+    u_tick = np.diff(planned.states(problem.times)[:, :, 2], axis=1) / problem.intervals / problem.turn_speed
     kept = tick_rows.disagreements(u_tick, edges)
     assert 0 < 20.0 * np.sum(tick_rows.seconds * kept**2) / 2 <= counted * (1 + 1e-9)
     shape = problem.shape

@@ -60,7 +60,6 @@ class Again:
     def disagreement(self) -> float:
         """1/2 integral u'Lu, in seconds of the manoeuvre."""
         u = self.turning
-        u = u * self.problem.turn_speed / self.problem.compare_speed
         compared = self.problem.compared
         if compared is not None:
             rows = self.problem.weights[compared.edges] * compared.disagreements(u, self.problem.edges) ** 2

@@ -59,7 +59,7 @@ def parameter_blocks(shape: Shape) -> Blocks:
     r, w = (len(shape.compared), shape.compared[0][3]) if shape.compared else (0, 0)
     return Blocks({
         "h": (1, m), "cost_h": (1, m), "asked_speed": (n, m), "full_speed": (n, 1), "turn_speed": (n, m),
-        "compare_speed": (n, m), "coupling": (e, 1), "alignment": (e, 1),
+        "coupling": (e, 1), "alignment": (e, 1),
         "price_curvature_rate": (1, 1), "price_acceleration": (1, 1), "price_speed": (1, 1),
         "price_clearance": (1, 1), "price_end": (n, len(STATES)),
         "curvature_lag": (n, 1), "speed_lag": (n, 1), "target": (n, len(STATES)),
@@ -103,17 +103,11 @@ def lag_residual(command: Matrix, reached: Matrix, rate: Matrix, lag: Matrix, h:
     return reached[:, 1:] - settled - (reached[:, :-1] - command[:, :-1] + rate * lags) * decay
 
 
-def turning_cost(
-    turning: Matrix, weights: Matrix, edges: tuple[tuple[int, int], ...], h: Matrix, compared: Matrix = None
-) -> Matrix:
-    """1/2 integral u'(I + chi L)u, the coupling times the weight of each edge in ``weights``.
-
-    ``compared`` is what neighbours compare, where that is not the turning itself: turn rates counted at one speed.
-    """
-    compared = turning if compared is None else compared
+def turning_cost(turning: Matrix, weights: Matrix, edges: tuple[tuple[int, int], ...], h: Matrix) -> Matrix:
+    """1/2 integral u'(I + chi L)u, the coupling times the weight of each edge in ``weights``."""
     own = ca.sum1(turning**2)
     for (k, j), weight in zip(edges, ca.vertsplit(weights) if edges else []):
-        own = own + weight * (compared[k, :] - compared[j, :]) ** 2
+        own = own + weight * (turning[k, :] - turning[j, :]) ** 2
     return ca.dot(own, h) / 2
 
 
@@ -228,7 +222,7 @@ def build(shape: Shape, joint: bool = True) -> Program:
     p_all, p = parameters.symbols()
     mean_speed = mean_over_interval(v["speed_command"], v["speed"], p["speed_lag"], p["h"])
     mean_curvature = mean_over_interval(v["curvature_command"], v["curvature"], p["curvature_lag"], p["h"])
-    turn_rate = mean_speed * mean_curvature
+    turning = mean_speed * mean_curvature / p["turn_speed"]
     v["centre_x"], v["centre_y"] = footprint_centres(v, p)
     kappa, speed = v["curvature_command"][:, 1:], v["speed_command"][:, 1:]
     last = ca.horzcat(*[v[name][:, -1] for name in STATES])
@@ -239,11 +233,11 @@ def build(shape: Shape, joint: bool = True) -> Program:
         "clearance": clearance_rows(v, p, shape.pairs),
         "fence": fence_rows(v, p, shape.fenced),
         "end": last - p["target"] - v["over"] + v["under"],
-        "compared": turn_rate / p["compare_speed"] - v["compared"] if shape.compared else v["compared"],
+        "compared": turning - v["compared"] if shape.compared else v["compared"],
     })
     at_once = () if shape.compared else shape.edges
     f = (
-        turning_cost(turn_rate / p["turn_speed"], p["coupling"], at_once, p["cost_h"], turn_rate / p["compare_speed"])
+        turning_cost(turning, p["coupling"], at_once, p["cost_h"])
         + (comparison_cost(v, p, shape) if joint else 0)
         + alignment_cost(v["theta"], p["alignment"], shape.edges, p["cost_h"])
         + small_prices(v, p, mean_speed)
@@ -265,7 +259,6 @@ def numbers(problem: Problem) -> np.ndarray:
         "asked_speed": problem.asked_speed,
         "full_speed": problem.full_speed[:, None],
         "turn_speed": problem.turn_speed,
-        "compare_speed": problem.compare_speed,
         "coupling": problem.coupling * problem.weights[:, None],
         "alignment": problem.coupling * problem.alignment * problem.weights[:, None],
         "price_curvature_rate": prices.curvature_rate,

@@ -124,8 +124,6 @@ class Problem:
         bounds: limits in force.
         watch: pairs with a clearance to keep.
         fences: lines that footprints stay on one side of.
-        compare_speed: speed by which turn rates are divided before neighbours are compared, shape (N, M), m/s; as
-            turn_speed when left out. One speed for all compares turn rates, as where the line turns as one.
         compared: at which moments neighbours are compared; at equal ones when left out.
     """
 
@@ -145,7 +143,6 @@ class Problem:
     bounds: Bounds
     watch: Watch
     fences: Fences = attrs.Factory(lambda self: no_fences(len(self.times) - 1), takes_self=True)
-    compare_speed: np.ndarray = attrs.Factory(lambda self: self.turn_speed, takes_self=True)
     compared: Optional[Comparison] = None
 
     @property

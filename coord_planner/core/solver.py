@@ -115,7 +115,7 @@ def start_from_states(problem: Problem, states: np.ndarray) -> Start:
     named["short"] = np.zeros((len(problem.watch.pairs), len(problem.times) - 1))
     named["outside"] = np.zeros((len(problem.fences.robots), len(problem.times) - 1))
     named["over"], named["under"] = np.maximum(missed, 0.0), np.maximum(-missed, 0.0)
-    compared = np.diff(named["theta"], axis=1) / h / problem.compare_speed
+    compared = np.diff(named["theta"], axis=1) / h / problem.turn_speed
     named["compared"] = compared if problem.shape.compared else np.zeros((0, len(problem.times) - 1))
     return Start(ocp.variable_blocks(problem.shape).pack(named))
 

@@ -13,7 +13,7 @@ It is written by the planner when a plan fails. Beside the keys of other models 
     robots[..].state         what the machine had reached and been commanded at the first node
     robots[..].end_state     what is asked at the last node, of the names in core.problem.STATES; free where left out
     robots[..].limits, footprint, response      as in a parameter file
-    robots[..].asked_speed, turn_speed, compare_speed, full_speed      in the intervals
+    robots[..].asked_speed, turn_speed, full_speed      in the intervals
     robots[..].bounds        in force at nodes 1 .. M
     begun                    where the solver started: vector, multipliers (bounds, rows), warm
     reason                   why it was saved
@@ -74,7 +74,7 @@ def read(top: Entries) -> PlannerCase:
         full_speed=np.array([each.full_speed for each in per_robot]),
         target=np.stack([each.target for each in per_robot]),
         bounds=Bounds(*(np.stack([each.bounds[i] for each in per_robot]) for i in range(len(_BOUNDS)))), watch=watch,
-        fences=fences, compare_speed=np.stack([each.compare_speed for each in per_robot]),
+        fences=fences,
         compared=compared,
     )
     start, warm = _begun(begun, problem)
@@ -123,7 +123,6 @@ class _Robot:
     target: np.ndarray
     asked_speed: np.ndarray
     turn_speed: np.ndarray
-    compare_speed: np.ndarray
     full_speed: float
     bounds: tuple[np.ndarray, ...]
 
@@ -135,9 +134,6 @@ class _Robot:
         initial = np.concatenate([start, _state(entry, "state", STATES[3:], required=True)])
         target = _state(entry, "end_state", STATES, required=False)
         profiles = [entry.array(key, (intervals,), "one for each interval") for key in ("asked_speed", "turn_speed")]
-        compared = None
-        if entry.has("compare_speed"):
-            compared = entry.array("compare_speed", (intervals,), "one for each interval")
         full = entry.value("full_speed", Description("full speed", "m/s", above=0.0, maximum=20.0))
         limits = entry.mapping("bounds", "keys: " + ", ".join(_BOUNDS))
         if limits is None and not entry.has("bounds"):
@@ -149,8 +145,7 @@ class _Robot:
         entry.done()
         blank = np.ones(intervals)
         asked, turn = (blank if each is None else each for each in profiles)
-        compared = turn if compared is None else compared
-        return cls(robot, initial, target, asked, turn, compared, 1.0 if full is None else float(full),
+        return cls(robot, initial, target, asked, turn, 1.0 if full is None else float(full),
                    tuple(blank if each is None else each for each in bounds))
 
 
@@ -162,7 +157,7 @@ def _entry(problem: Problem, k: int) -> dict[str, Any]:
         "end_state": {name: value for name, value in zip(STATES, target) if value == value},
         "limits": attrs.asdict(robot.limits), "footprint": attrs.asdict(robot.footprint),
         "response": attrs.asdict(robot.response), "asked_speed": problem.asked_speed[k].tolist(),
-        "turn_speed": problem.turn_speed[k].tolist(), "compare_speed": problem.compare_speed[k].tolist(),
+        "turn_speed": problem.turn_speed[k].tolist(),
         "full_speed": float(problem.full_speed[k]),
         "bounds": {name: getattr(problem.bounds, name)[k].tolist() for name in _BOUNDS},
     }

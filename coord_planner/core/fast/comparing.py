@@ -53,13 +53,12 @@ def comparing(problem: Problem) -> Comparing | None:
     if rows is None or not len(rows.edges):
         return None
     count, m = problem.turn_speed.shape
-    ratio = problem.turn_speed / problem.compare_speed
     kept = np.flatnonzero(rows.seconds > 0.0)
     edges = rows.edges[kept]
     robots = problem.edges[edges].T
     means = np.stack([
         _spread(rows.first[kept], rows.first_at[kept], m), _spread(rows.second[kept], rows.second_at[kept], m)
-    ]) * ratio[robots]
+    ])
     price = problem.coupling * problem.weights[edges] * rows.seconds[kept]
     own, across = np.zeros((count, m, m)), np.zeros((len(problem.edges), m, m))
     for e in range(len(problem.edges)):

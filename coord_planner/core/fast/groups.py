@@ -56,8 +56,7 @@ def part_of(problem: Problem, group: Group) -> Problem:
         problem, fleet=Fleet(tuple(problem.fleet.robots[k] for k in robots)),
         edges=place[problem.edges[group.edges]], weights=problem.weights[group.edges],
         initial=problem.initial[robots], asked_speed=problem.asked_speed[robots],
-        turn_speed=problem.turn_speed[robots], compare_speed=problem.compare_speed[robots],
-        full_speed=problem.full_speed[robots], target=problem.target[robots],
+        turn_speed=problem.turn_speed[robots], full_speed=problem.full_speed[robots], target=problem.target[robots],
         bounds=Bounds(*(getattr(bounds, field.name)[robots] for field in attrs.fields(Bounds))),
         watch=Watch(place[watch.pairs[group.pairs]], watch.normals[group.pairs], watch.gaps[group.pairs]),
         fences=Fences(

@@ -105,7 +105,7 @@ class Linearised:
         m = len(numbers.h)
         weights = np.zeros((len(numbers.coupled), m, m))
         steps = np.arange(m)
-        own = 1.0 + np.diagonal(numbers.coupled)[:, None] * numbers.compared**2
+        own = 1.0 + np.diagonal(numbers.coupled)[:, None]
         weights[:, steps, steps] = own * numbers.cost_h
         if numbers.comparing is not None:
             weights += numbers.comparing.own
@@ -152,8 +152,7 @@ class Linearised:
         """Blocks beside the diagonal that the edges bring, shape (E, 2M, 2M)."""
         numbers, turning = self._numbers, self._turning
         first, second = self._structure.edges.T
-        both = numbers.compared[first] * numbers.compared[second] * numbers.cost_h
-        weighted = (numbers.coupled[first, second][:, None] * both)[:, :, None] * turning[second]
+        weighted = (numbers.coupled[first, second][:, None] * numbers.cost_h)[:, :, None] * turning[second]
         if numbers.comparing is not None:
             back = (self._structure.edges[:, 0] != numbers.edges[:, 0])[:, None, None]
             across = numbers.comparing.across

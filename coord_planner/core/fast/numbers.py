@@ -71,8 +71,7 @@ class Numbers:
         begins: what the initial state brings.
         turn_speed: shape (N, M). full_speed: shape (N, 1). lower, upper: of LIMITS, shape (6, N, M).
         coupled: coupling * weighted Laplacian, shape (N, N). edges: (E, 2). alignment: price of each edge, (E,).
-        compared: what neighbours compare, as a part of the turning, shape (N, M). comparing: where they do so otherwise
-            than at equal moments, and coupled is 0.
+        comparing: where neighbours are compared otherwise than at equal moments, and coupled is 0.
         target: shape (N, 7), 0 where free. end_price: shape (N, 7), 0 where free.
         pairs: (P, 2): first those that are watched, then fences, which are pairs of a robot with nobody: the second is
             the first again and counts 0. watched: how many are no fences. second: 1, and 0 of fences, shape (P, 1).
@@ -94,7 +93,6 @@ class Numbers:
     lower: np.ndarray
     upper: np.ndarray
     coupled: np.ndarray
-    compared: np.ndarray
     comparing: Comparing | None
     edges: np.ndarray
     alignment: np.ndarray
@@ -128,7 +126,7 @@ def numbers(problem: Problem, fleet: FleetNumbers) -> Numbers:
         fleet=fleet, h=h, cost_h=h * problem.pace, curvature=curvature, speed=speed,
         begins=_beginning(curvature, speed, problem.initial),
         asked_speed=problem.asked_speed, turn_speed=problem.turn_speed, full_speed=problem.full_speed[:, None],
-        lower=lower, upper=upper, coupled=_coupled(problem), compared=problem.turn_speed / problem.compare_speed,
+        lower=lower, upper=upper, coupled=_coupled(problem),
         comparing=comparing(problem), edges=problem.edges,
         alignment=problem.coupling * problem.alignment * problem.weights,
         price_curvature_rate=prices.curvature_rate, price_acceleration=prices.acceleration, price_speed=prices.speed,

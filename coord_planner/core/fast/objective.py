@@ -37,7 +37,7 @@ def smooth_cost(numbers: Numbers, r: Rollout) -> float:
 
 def _pull(numbers: Numbers, r: Rollout) -> np.ndarray:
     """Slope of turning and coupling by the turning, for each second, shape (N, M)."""
-    pull: np.ndarray = r.turning + numbers.compared * (numbers.coupled @ (numbers.compared * r.turning))
+    pull: np.ndarray = r.turning + numbers.coupled @ r.turning
     return pull
 
 

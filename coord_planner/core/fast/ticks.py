@@ -20,7 +20,7 @@ from .solver import TickSolver
 _KNOWN = {
     Problem: {
         "fleet", "edges", "weights", "coupling", "alignment", "prices", "times", "pace", "initial", "asked_speed",
-        "turn_speed", "full_speed", "target", "bounds", "watch", "fences", "compare_speed", "compared",
+        "turn_speed", "full_speed", "target", "bounds", "watch", "fences", "compared",
     },
     Bounds: {"max_curvature", "min_speed", "max_speed", "max_turn_rate", "max_lateral_acceleration"},
     Watch: {"pairs", "normals", "gaps"},

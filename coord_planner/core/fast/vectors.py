@@ -108,7 +108,7 @@ def primal(
         states.transpose(2, 1, 0).ravel(), point.limits[2:4].transpose(0, 2, 1).ravel(),
         short[: size.pairs].T.ravel(), short[size.pairs :].T.ravel(),
         np.maximum(missed, 0.0).T.ravel(), np.maximum(-missed, 0.0).T.ravel(),
-        *([(numbers.compared * point.r.turning).T.ravel()] if size.compared else []),
+        *([point.r.turning.T.ravel()] if size.compared else []),
     ])
 
 
@@ -165,8 +165,8 @@ def costates(numbers: Numbers, point: Point, found: Forces) -> np.ndarray:
 def _comparing_pulls(numbers: Numbers, point: Point) -> np.ndarray:
     """Slope of the cost by the turnings that neighbours compare, shape (N, M)."""
     if numbers.comparing is None:
-        return np.zeros_like(numbers.compared)
-    return numbers.comparing.slopes(point.r.turning) / numbers.compared
+        return np.zeros_like(point.r.turning)
+    return numbers.comparing.slopes(point.r.turning)
 
 
 def _without_faint(values: np.ndarray) -> np.ndarray:

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from typing import ClassVar, Optional, Union
+from typing import Any, ClassVar, Optional, Union
 
 import attrs
 
@@ -15,24 +15,48 @@ from ...errors import SettingsError
 from ..parameter import parameter
 
 
+def _coupling(default: Optional[float]) -> Any:
+    return parameter(
+        default, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
+    )
+
+
+def _alignment(default: Optional[float]) -> Any:
+    return parameter(
+        default, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
+    )
+
+
+@attrs.frozen(kw_only=True)
+class _Coupled:
+    """What every kind may be told besides.
+
+    Attributes:
+        coupling, alignment: instead of those of the settings; None where those count.
+    """
+
+    coupling: Optional[float] = _coupling(None)
+    alignment: Optional[float] = _alignment(None)
+
+
+@attrs.frozen(kw_only=True)
+class _Driven(_Coupled):
+    """What every kind may be told besides that drives at one asked speed."""
+
+    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
+    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
+
+
 @attrs.frozen
-class EqualRadius:
+class EqualRadius(_Driven):
     """Everyone turns by the same angle at the same radius, easing in and out of the turn."""
 
     angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-720.0, maximum=720.0)
     radius: float = parameter(5.0, "tightest radius of the turn", "m", above=0.0, maximum=1000.0)
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
-    )
-    alignment: Optional[float] = parameter(
-        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
-    )
 
 
 @attrs.frozen
-class ToEnds:
+class ToEnds(_Driven):
     """Named robots get an end pose or an end heading; the others copy their neighbours."""
 
     ends_deg: tuple[str, ...] = parameter(
@@ -41,16 +65,8 @@ class ToEnds:
     reverse: bool = parameter(
         False, "true: robots whose min_speed is below 0 may reverse on their way where that is shorter"
     )
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
     duration: float = parameter(
         0.0, "time for the manoeuvre; 0: worked out from the longest way", "s", minimum=0.0, maximum=600.0
-    )
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
-    )
-    alignment: Optional[float] = parameter(
-        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
     )
 
     def ends(self) -> dict[str, End]:
@@ -65,7 +81,7 @@ class ToEnds:
 
 
 @attrs.frozen
-class RowEnd:
+class RowEnd(_Coupled):
     """At the end of the rows everyone turns back into a row beside, within the headland."""
 
     end_speed: ClassVar[float] = 0.0  # whoever is back in a row waits there for the others
@@ -104,9 +120,6 @@ class RowEnd:
         None, "coupling for this manoeuvre instead of coupling.strength; it counts where all turn alike at one time",
         minimum=0.0, maximum=1e4,
     )
-    alignment: Optional[float] = parameter(
-        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
-    )
 
     def in_words(self) -> str:
         """What is asked, for people."""
@@ -130,7 +143,7 @@ class RowEnd:
 
 
 @attrs.frozen
-class Wheel:
+class Wheel(_Driven):
     """The line turns as one about a pivot: who is further out drives faster, spacing and alignment are kept."""
 
     angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-270.0, maximum=270.0)
@@ -142,13 +155,7 @@ class Wheel:
         1.0, "highest speed asked of any robot; where the group cannot hold it, a lower one is worked out", "m/s",
         above=0.0, maximum=20.0,
     )
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
-    )
-    alignment: Optional[float] = parameter(
-        20.0, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
-    )
+    alignment: Optional[float] = _alignment(20.0)
 
     def in_words(self) -> str:
         """What is asked, for people."""
@@ -173,7 +180,7 @@ class Wheel:
 
 
 @attrs.frozen
-class InSuccession:
+class InSuccession(_Driven):
     """A file turns one after the other at the same place; neighbours are compared where they are at the same place."""
 
     angle_deg: float = parameter(90.0, "angle of the turn, left positive", "deg", minimum=-270.0, maximum=270.0)
@@ -183,11 +190,6 @@ class InSuccession:
     )
     after: float = parameter(
         0.0, "how far the last robot drives straight on after it has turned", "m", minimum=0.0, maximum=1000.0
-    )
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
     )
     # Headings at equal moments differ here by intent.
     alignment: Optional[float] = attrs.field(default=0.0, init=False)
@@ -199,7 +201,7 @@ class InSuccession:
 
 
 @attrs.frozen
-class Form:
+class Form(_Driven):
     """From where they stand into a formation, each robot to the place that suits best."""
 
     shape: str = parameter(
@@ -220,14 +222,7 @@ class Form:
     y: Optional[float] = parameter(
         None, "middle of the formation; left out, with x: ahead of where they stand", "m", minimum=-1e6, maximum=1e6
     )
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        0.0, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
-    )
-    alignment: Optional[float] = parameter(
-        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
-    )
+    coupling: Optional[float] = _coupling(0.0)
 
     def __attrs_post_init__(self) -> None:
         if (self.x is None) != (self.y is None):
@@ -241,18 +236,10 @@ class Form:
 
 
 @attrs.frozen
-class Straight:
+class Straight(_Driven):
     """Everyone drives straight on."""
 
     distance: float = parameter(10.0, "how far", "m", above=0.0, maximum=10000.0)
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
-    )
-    alignment: Optional[float] = parameter(
-        None, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
-    )
 
     def in_words(self) -> str:
         """What is asked, for people."""
@@ -260,7 +247,7 @@ class Straight:
 
 
 @attrs.frozen
-class Sequence:
+class Sequence(_Driven):
     """Manoeuvres of the same file one after the other, with straight runs between them.
 
     ``named`` holds the manoeuvres that its parts name; whoever reads a file fills it in.
@@ -315,7 +302,7 @@ class End:
 
 
 @attrs.frozen
-class TurnAway:
+class TurnAway(_Driven):
     """Who sees a hazard takes a heading away from it, the others copy; begun by a hazard while it is armed."""
 
     angle_deg: float = parameter(
@@ -325,14 +312,7 @@ class TurnAway:
         10.0, "how far they drive straight on after the turn, in which the others take their heading", "m",
         minimum=0.0, maximum=1000.0,
     )
-    speed: float = parameter(1.0, "asked speed", "m/s", above=0.0, maximum=20.0)
-    end_speed: float = parameter(0.0, "speed at the end of the manoeuvre", "m/s", minimum=0.0, maximum=20.0)
-    coupling: Optional[float] = parameter(
-        None, "coupling for this manoeuvre instead of coupling.strength", minimum=0.0, maximum=1e4
-    )
-    alignment: Optional[float] = parameter(
-        20.0, "alignment for this manoeuvre instead of coupling.alignment", "1/m^2", minimum=0.0, maximum=1e3
-    )
+    alignment: Optional[float] = _alignment(20.0)
 
     def in_words(self) -> str:
         """What is asked, for people."""

@@ -65,25 +65,25 @@ class File:
 def line_of(name: str, scene: Scene) -> Line:
     """The line abreast in which the fleet stands; RefusedError with the figure when it stands in none."""
     heading, origin, ahead, across = _placed(name, scene)
-    k = int(np.argmax(np.abs(ahead)))
-    if abs(ahead[k]) > _OUT_OF_LINE:
-        raise RefusedError(
-            f"{name}: {scene.fleet.names[k]} stands {abs(ahead[k]):.2f} m {'ahead of' if ahead[k] > 0 else 'behind'} "
-            f"the line, {_OUT_OF_LINE:g} m allowed", "form a line abreast first",
-        )
+    _check_near(name, scene, ahead, ("ahead of the line", "behind the line"), "form a line abreast first")
     return Line(origin, heading, across)
 
 
 def file_of(name: str, scene: Scene) -> File:
     """The file in which the fleet stands; RefusedError with the figure when it stands in none."""
     heading, origin, ahead, across = _placed(name, scene)
-    k = int(np.argmax(np.abs(across)))
-    if abs(across[k]) > _OUT_OF_LINE:
-        raise RefusedError(
-            f"{name}: {scene.fleet.names[k]} stands {abs(across[k]):.2f} m to the "
-            f"{'left' if across[k] > 0 else 'right'} of the file, {_OUT_OF_LINE:g} m allowed", "form a file first",
-        )
+    _check_near(name, scene, across, ("to the left of the file", "to the right of the file"), "form a file first")
     return File(origin + ahead.max() * _axes(heading)[0], heading, ahead.max() - ahead)
+
+
+def _check_near(name: str, scene: Scene, off: np.ndarray, sides: tuple[str, str], remedy: str) -> None:
+    """Nobody stands too far off, shape (N,), metres; ``sides`` are the words for more and less than 0."""
+    k = int(np.argmax(np.abs(off)))
+    if abs(off[k]) > _OUT_OF_LINE:
+        raise RefusedError(
+            f"{name}: {scene.fleet.names[k]} stands {abs(off[k]):.2f} m {sides[0] if off[k] > 0 else sides[1]}, "
+            f"{_OUT_OF_LINE:g} m allowed", remedy,
+        )
 
 
 def _placed(name: str, scene: Scene) -> tuple[float, np.ndarray, np.ndarray, np.ndarray]:

@@ -5,15 +5,14 @@
 
 from __future__ import annotations
 
-import math
 from typing import Optional
 
 import attrs
 import numpy as np
 
-from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
+from .course import Course
 
 
 @attrs.frozen(eq=False)
@@ -37,29 +36,18 @@ class Scene:
 
 
 @attrs.frozen(eq=False)
-class Laid:
-    """Where everyone goes.
+class Laid(Course):
+    """A course, and what is still to be made of it.
 
     Attributes:
-        ends: shape (N, 3), windings chosen; NaN where nothing is asked. ways: a guessed way for each robot.
         duration: seconds that are given; 0: worked out from the longest way.
-        max_curvature: tightest bend that is asked for, 1/m.
         speed: that was worked out, m/s; None: the asked one.
-        marks: as in lay_out. turn_rates, behind, note, strip, waits, speeds, alike: as in Task.
+        marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
+            length; in between the ways are driven in proportion. The beginning and the end when left out.
         otherwise: other ways to do the same, to be tried in turn where this one cannot be kept.
     """
 
-    ends: np.ndarray
-    ways: tuple[ArcPath, ...]
     duration: float = 0.0
-    max_curvature: float = math.inf
     speed: Optional[float] = None
     marks: Optional[np.ndarray] = None
-    turn_rates: bool = False
-    behind: Optional[np.ndarray] = None
-    note: str = ""
-    strip: tuple[tuple[tuple[float, float], float], ...] = ()
-    waits: Optional[np.ndarray] = None
-    speeds: Optional[np.ndarray] = None
-    alike: bool = True
     otherwise: tuple[Laid, ...] = ()

@@ -16,8 +16,10 @@ from ..drive import AnyDrive
 from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
+from .course import Course, as_given
 from .driving import COMFORT as COMFORT
 from .driving import arriving_together, check_standing, drive_along
+from .scene import Laid
 
 _MARKS = 60  # at which what is left of a manoeuvre is passed together
 _SHORTEST_WAY = 0.01  # metres; a fleet that has less to drive is where it is to end
@@ -25,65 +27,43 @@ _SETTLE_LAGS = 5.0  # response lags after which a machine has reached what it wa
 _LEAST_PART = 0.1  # of the fleet's speed, by which deviations of a robot that hardly drives are priced
 
 
-@attrs.frozen(eq=False)
-class Task:
+@attrs.frozen(eq=False, kw_only=True)
+class Task(Course):
     """A manoeuvre worked out for the poses in which it begins. N robots.
 
     Attributes:
         name: of the manoeuvre.
-        ends: shape (N, 3), headings unwrapped; NaN where nothing is asked.
         speed: asked speed of the fleet, m/s. asked: of each robot, shape (N,): who has a shorter way drives slower.
         end_speed: m/s.
         arrival: seconds until the fleet is at its ends as far as commands go, a whole number of intervals.
         duration: seconds until the machines have settled there too, a whole number of intervals; in between
             the manoeuvre goes straight on at the end speed.
-        ways: a guessed way for each robot; segments of negative length are driven backward.
         drives: how fast each robot goes along its way, in seconds of a common clock of their own.
         pacing: seconds of the manoeuvre and the seconds of the drives that they stand for, joined by straight lines.
         coupling, alignment: in force for this manoeuvre.
-        max_curvature: tightest bend that the manoeuvre asks for, 1/m; inf when only the machines' limits count.
-        turn_rates: neighbours compare turn rates, not turnings: the line turns as one.
-        behind: metres by which each robot is behind the first on a way that all drive one after the other, shape (N,):
-            neighbours are then compared where they are at the same place of it. None: at the same moment.
-        note: what was worked out and was not asked, in words.
-        strip: lines that no footprint may cross: a unit normal towards the forbidden side and how far along it, from
-            the origin of the frame, a footprint may reach, metres.
-        waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
-            (N,), m/s; None where all set out at once and arrive together.
-        alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
         hazard: a point that everybody keeps away from; None when there is none.
         otherwise: another way to do the same, to be tried when this one cannot be kept.
         stands: positions of robots that the manoeuvre is not for: they come to a stand and have no end.
     """
 
     name: str
-    ends: np.ndarray
     speed: float
     asked: np.ndarray
     end_speed: float
     arrival: float
     duration: float
-    ways: tuple[ArcPath, ...]
     drives: tuple[AnyDrive, ...]
     pacing: tuple[tuple[float, ...], tuple[float, ...]]
     coupling: float
     alignment: float
-    max_curvature: float = math.inf
-    turn_rates: bool = False
-    behind: Optional[np.ndarray] = None
-    note: str = ""
-    strip: tuple[tuple[tuple[float, float], float], ...] = ()
-    waits: Optional[np.ndarray] = None
-    speeds: Optional[np.ndarray] = None
-    alike: bool = True
     hazard: Optional[tuple[float, float]] = None
     otherwise: Optional[Task] = None
+    stands: tuple[int, ...] = ()
 
     @property
     def reversing(self) -> np.ndarray:
         """Who drives backward somewhere on its way, shape (N,)."""
         return np.array([bool((drive.gears < 0).any()) for drive in self.drives])
-    stands: tuple[int, ...] = ()
 
     def asked_speed(self, s: np.ndarray) -> np.ndarray:
         """Mean asked speed between seconds of the manoeuvre, shape (K,) -> (N, K - 1): speed up, hold, slow down.
@@ -172,48 +152,42 @@ class Task:
 
 
 def lay_out(
-    name: str, fleet: Fleet, settings: Settings, ends: np.ndarray, ways: tuple[ArcPath, ...], *, speed: float,
-    end_speed: float, speed_now: float, duration: float, coupling: Optional[float], alignment: Optional[float],
-    max_curvature: float = math.inf, marks: Optional[np.ndarray] = None, turn_rates: bool = False,
-    behind: Optional[np.ndarray] = None, note: str = "",
-    strip: tuple[tuple[tuple[float, float], float], ...] = (), waits: Optional[np.ndarray] = None,
-    speeds: Optional[np.ndarray] = None, alike: bool = True,
+    name: str, fleet: Fleet, settings: Settings, laid: Laid, *, speed: float, end_speed: float, speed_now: float,
+    coupling: Optional[float], alignment: Optional[float],
 ) -> Task:
     """Times and speeds for ways that are known; RefusedError when there is nothing to drive.
 
     A given duration stretches or squeezes the drives: everything is then slower or faster than asked.
 
     Args:
-        marks: metres along each robot's way that everybody passes at the same moment, shape (N, K), from 0 to its
-            length; in between the ways are driven in proportion. The beginning and the end when left out.
-        turn_rates, behind, note, waits, speeds, alike: as in Task.
+        speed: asked, m/s; not that of ``laid``.
+        coupling, alignment: of the manoeuvre; None where those of the settings count.
     """
-    longest = max(way.length for way in ways)
+    longest = max(way.length for way in laid.ways)
     if longest < _SHORTEST_WAY:
         raise ArrivedError(f"{name}: every robot is where it is to end already", "ask for something else")
     drives: tuple[AnyDrive, ...]
-    if waits is None or speeds is None:
-        drives = arriving_together(fleet, settings, ways, marks, speed, end_speed, speed_now)
+    if laid.waits is None or laid.speeds is None:
+        drives = arriving_together(fleet, settings, laid.ways, laid.marks, speed, end_speed, speed_now)
     else:
         drives = tuple(
             drive_along(robot, settings, way, float(top), wait=float(wait), first=speed_now, last=end_speed)
-            for robot, way, top, wait in zip(fleet.robots, ways, speeds, waits)
+            for robot, way, top, wait in zip(fleet.robots, laid.ways, laid.speeds, laid.waits)
         )
     check_standing(name, fleet, drives, end_speed)
     step = settings.horizon.interval
     driven = max(drive.duration for drive in drives)
-    arrival = step * max(4, math.ceil((duration or driven) / step - 1e-9))
+    arrival = step * max(4, math.ceil((laid.duration or driven) / step - 1e-9))
     # Machines that answer late come to rest late; the end holds the whole state.
     slowest = float(np.max(np.maximum(fleet.response("speed_lag"), fleet.response("curvature_lag"))))
     settled = arrival + step * max(1, math.ceil(_SETTLE_LAGS * slowest / step - 1e-9))
     full = np.array([drive.full for drive in drives])
     asked = np.maximum(full, max(_LEAST_PART * float(full.max()), 1e-9))
     return Task(
-        name, ends, speed, asked, end_speed, arrival, settled, ways, drives,
-        ((0.0, arrival), (0.0, driven)),
-        (settings.coupling.strength if coupling is None else coupling) if alike else 0.0,
-        settings.coupling.alignment if alignment is None else alignment,
-        max_curvature, turn_rates, behind, note, strip, waits, speeds, alike,
+        **as_given(laid), name=name, speed=speed, asked=asked, end_speed=end_speed, arrival=arrival, duration=settled,
+        drives=drives, pacing=((0.0, arrival), (0.0, driven)),
+        coupling=(settings.coupling.strength if coupling is None else coupling) if laid.alike else 0.0,
+        alignment=settings.coupling.alignment if alignment is None else alignment,
     )
 
 

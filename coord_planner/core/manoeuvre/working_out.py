@@ -17,6 +17,7 @@ from ..fleet import Fleet
 from ..settings import Settings
 from . import equal_radius, form, in_succession, row_end, straight, to_ends, turn_away, wheel
 from .checks import check_end_speed, check_ends, check_hazard, check_speed, check_start
+from .course import as_given
 from .detour import choices
 from .driving import drive_along
 from .kinds import EqualRadius, Form, InSuccession, Manoeuvre, RowEnd, Sequence, Straight, ToEnds, TurnAway, Wheel
@@ -68,10 +69,8 @@ def work_out(
 
     def task(laid: Laid) -> Task:
         return lay_out(
-            name, fleet, settings, laid.ends, laid.ways, speed=speed, end_speed=manoeuvre.end_speed,
-            speed_now=speed_now, duration=laid.duration, coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
-            max_curvature=laid.max_curvature, marks=laid.marks, turn_rates=laid.turn_rates, behind=laid.behind,
-            note=laid.note, strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+            name, fleet, settings, laid, speed=speed, end_speed=manoeuvre.end_speed, speed_now=speed_now,
+            coupling=manoeuvre.coupling, alignment=manoeuvre.alignment,
         )
 
     return _on_the_site(laid, scene, speed, task)
@@ -141,19 +140,14 @@ def go_on(
         anew, wound = ways_to_ends(fleet, poses, task.ends, neighbours, keep_winding=True, seconds=reverse)
         ways = tuple(new if old is None else old for old, new in zip(left, anew))
         ends = np.where(np.array([way is None for way in left])[:, None], wound, ends)
-    laid = Laid(
-        ends, ways, max_curvature=task.max_curvature, turn_rates=task.turn_rates, behind=task.behind, note=task.note,
-        strip=task.strip, speeds=task.speeds, alike=task.alike, marks=task.marks_left(since),
-    )
+    laid = Laid(**{**as_given(task), "ends": ends, "ways": ways}, marks=task.marks_left(since))
     if task.waits is not None:
         laid = attrs.evolve(laid, waits=np.maximum(task.waits - float(task.profile_time(np.array(since))), 0.0))
 
     def rest(laid: Laid) -> Task:
         return lay_out(
-            task.name, fleet, settings, laid.ends, laid.ways, speed=task.speed, end_speed=task.end_speed,
-            speed_now=0.0, duration=0.0, coupling=task.coupling, alignment=task.alignment,
-            max_curvature=laid.max_curvature, turn_rates=laid.turn_rates, behind=laid.behind, note=laid.note,
-            marks=laid.marks, strip=laid.strip, waits=laid.waits, speeds=laid.speeds, alike=laid.alike,
+            task.name, fleet, settings, laid, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
+            coupling=task.coupling, alignment=task.alignment,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours, hazard=hazard), task.speed, rest)
