@@ -33,6 +33,7 @@ _LONG = 3.0  # seconds
 _TROUBLE = 0.9  # speed factor below which stopping distances are looked at
 _GAP = 2.0  # seconds between snapshots that are a jump of the clock
 _SCATTER = 3.0  # times the expected scatter of poses
+_ASTRAY = 1.5  # standard deviations; fault-free rehearsals stay below 1.1
 
 
 @attrs.frozen(eq=False)
@@ -157,13 +158,16 @@ def _readiness(view: View) -> list[Caution]:
 def _following(view: View) -> list[Caution]:
     progress = view.settings.progress
     found = []
-    lags, factors = view.pursuit.progress.lag, view.estimate.speed_factor
-    speeds = view.estimate.states[:, SPEED_COMMAND]
-    for name, lag, factor, speed in zip(view.fleet.names, lags, factors, speeds):
-        if lag > progress.dead_band + progress.full_lag / 2:
-            found.append(rules.not_following(view.settings, name, float(lag)))
-        elif factor < _SLOW_FACTOR and abs(speed) > _DRIVING:
-            found.append(rules.too_slow(view.settings, name, float(factor)))
+    lags, estimate = view.pursuit.progress.lag, view.estimate
+    told = np.abs(estimate.states[:, SPEED_COMMAND]) > _DRIVING
+    slow = told & ((estimate.speed_factor < _SLOW_FACTOR) | estimate.held_up)
+    for k, name in enumerate(view.fleet.names):
+        if lags[k] > progress.dead_band + progress.full_lag / 2:
+            found.append(rules.not_following(view.settings, name, float(lags[k])))
+        elif slow[k]:
+            found.append(rules.too_slow(view.settings, name, float(estimate.speed_factor[k])))
+        if told[k] and estimate.astray[k] > _ASTRAY:
+            found.append(rules.astray(view.settings, name, float(estimate.astray[k])))
     return found
 
 
@@ -229,7 +233,7 @@ def _troubled(view: View) -> bool:
     """Whether some robot does not do as planned; while all do, planned configurations are kept by a stop in step."""
     estimate, progress = view.estimate, view.settings.progress
     late = view.pursuit.progress.lag.max() > progress.dead_band or estimate.speed_factor.min() < _TROUBLE
-    return bool(late or estimate.growth.max() > SHORT)
+    return bool(late or estimate.growth.max() > SHORT or estimate.astray.max() > _ASTRAY)
 
 
 def _names(fleet: Fleet, pair: tuple[int, int]) -> tuple[str, str]:

@@ -90,6 +90,10 @@ TABLE = (
     ),
     Row("robot not following", Level.WARN, Response.SLOW, "a robot falls behind; the others wait for it"),
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
+    Row(
+        "robot astray", Level.WARN, Response.GO_ON,
+        "a robot turns or slips aside otherwise than it is told; whether a stop would still be clear is watched",
+    ),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
     Row("plan unfinished", Level.WARN, Response.GO_ON, "a plan was not finished in time; it keeps what it must"),
@@ -224,6 +228,14 @@ def not_following(settings: Settings, name: str, lag: float) -> Caution:
 def too_slow(settings: Settings, name: str, factor: float) -> Caution:
     figures = f"reaches {100 * factor:.0f} % of its commanded speed"
     return _caution(settings, "robot not following", name, Level.WARN, figures)
+
+
+def astray(settings: Settings, name: str, deviations: float) -> Caution:
+    figures = (
+        f"turns or slips aside otherwise than it is told, {deviations:.1f} times as far as poses scatter and always to "
+        "one side"
+    )
+    return _caution(settings, "robot astray", name, Level.WARN, figures)
 
 
 def not_ready(settings: Settings, name: str) -> Caution:
