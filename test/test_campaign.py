@@ -126,7 +126,8 @@ def test_late_commands_count_from_when_the_machine_moves_otherwise() -> None:
     expected = 2.0 + lag.command_delay + lag.curvature_lag * np.log(0.25 / 0.15)
     assert at == pytest.approx(expected, abs=0.06)
     assert campaign._hidden(attrs.evolve(late, robot="mower_2"), configuration, slow) == np.inf
-    assert campaign._hidden(attrs.evolve(late, value=1.0), configuration, slow) == 0.5  # the time-out: it brakes
+    braked = attrs.evolve(run, speeds=np.where((times > 8.8) & (times < 9.6), 0.5, np.ones((2, 400))))
+    assert campaign._hidden(attrs.evolve(late, value=1.6), configuration, braked) == 0.5  # its time-out
     assert "round_corner" not in campaign.begun_from_starts(config.load(Path(SITES[0]).with_name("orchard.yaml")))
 
 

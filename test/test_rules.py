@@ -41,6 +41,7 @@ RAISED = [
     rules.not_following(SETTINGS, "a", 0.4),
     rules.not_following(SETTINGS, "a", 4.0),
     rules.too_slow(SETTINGS, "a", 0.5),
+    rules.too_fast(SETTINGS, "a", 1.4),
     rules.astray(SETTINGS, "a", 2.0),
     rules.not_ready(SETTINGS, "a"),
     rules.silent(SETTINGS, "a"),

@@ -190,7 +190,8 @@ def _hidden(fault: Fault, configuration: config.Configuration, run: Run) -> floa
     shows = run.times[np.flatnonzero(held)]
     if not len(shows) or shows[0] >= run.began + fault.to_s:
         return np.inf
-    return timeout if fault.value > timeout else float(shows[0] - began)
+    after = float(shows[0] - began)
+    return timeout if timeout < after <= fault.value else after
 
 
 def _unmoved(fault: Fault, run: Run) -> float:

@@ -166,7 +166,9 @@ def _following(view: View) -> list[Caution]:
             found.append(rules.not_following(view.settings, name, float(lags[k])))
         elif slow[k]:
             found.append(rules.too_slow(view.settings, name, float(estimate.speed_factor[k])))
-        if told[k] and estimate.astray[k] > _ASTRAY:
+        if told[k] and estimate.runs_on[k]:
+            found.append(rules.too_fast(view.settings, name, float(estimate.speed_factor[k])))
+        elif told[k] and estimate.astray[k] > _ASTRAY:
             found.append(rules.astray(view.settings, name, float(estimate.astray[k])))
     return found
 
@@ -233,7 +235,8 @@ def _troubled(view: View) -> bool:
     """Whether some robot does not do as planned; while all do, planned configurations are kept by a stop in step."""
     estimate, progress = view.estimate, view.settings.progress
     late = view.pursuit.progress.lag.max() > progress.dead_band or estimate.speed_factor.min() < _TROUBLE
-    return bool(late or estimate.growth.max() > SHORT or estimate.astray.max() > _ASTRAY)
+    astray = estimate.runs_on.any() or estimate.astray.max() > _ASTRAY
+    return bool(late or astray or estimate.growth.max() > SHORT)
 
 
 def _names(fleet: Fleet, pair: tuple[int, int]) -> tuple[str, str]:

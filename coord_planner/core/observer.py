@@ -27,9 +27,9 @@ _RUNNING = 0.4
 _ONE_SIDED = 1.5
 _AFRESH = 0.3
 _LONGER = 0.25  # the same running mean over longer, for what is told rather than followed: 0.38 for noise alone
-# A factor this low, and by so many deviations below 1, is no noise (fault-free rehearsals stay above 0.78, or
+# A factor this far from 1, and by so many deviations, is no noise (fault-free rehearsals stay between 0.78 and 1.2, or
 # within 1.6 deviations).
-_HELD_UP = 0.75
+_HELD_UP, _RUNS_ON = 0.75, 1.3
 _SURE = 2.0
 _LONGEST = 30.0  # seconds over which anything is predicted: who was not heard of for so long is somewhere
 _FRESH = 0.15  # seconds; up to this age an estimate is as good as the margin of the plan takes it to be
@@ -55,7 +55,8 @@ class Estimate:
         scatter: how much the poses scatter, in multiples of what the settings say, shape (N,).
         repeats: how far each robot must have driven while its pose repeats exactly, shape (N,), metres; 0 for one
             whose poses count. Poses that repeat so are no news of where it is.
-        held_up: robots that surely do not reach the speed that they are told, shape (N,) of bool.
+        held_up: robots that surely do not reach the speed that they are told, shape (N,) of bool; runs_on: that
+            surely exceed it.
         astray: how steadily each robot moves aside or turns otherwise than told, shape (N,), in standard deviations.
     """
 
@@ -67,6 +68,7 @@ class Estimate:
     scatter: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
     repeats: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
     held_up: np.ndarray = attrs.field(factory=lambda: np.zeros(0, dtype=bool))
+    runs_on: np.ndarray = attrs.field(factory=lambda: np.zeros(0, dtype=bool))
     astray: np.ndarray = attrs.field(factory=lambda: np.zeros(0))
 
 
@@ -184,8 +186,9 @@ class Observer:
         repeats = np.where(self._hangs, np.maximum(self._repeats, _HANGS * self._settings.noise_xy), 0.0)
         raw, doubt = np.nan_to_num(self._mean[:, 3], nan=1.0), np.sqrt(self._cov[:, 3, 3])
         held_up = (raw < _HELD_UP) & (1.0 - raw > _SURE * doubt)
+        runs_on = (raw > _RUNS_ON) & (raw - 1.0 > _SURE * doubt)
         return Estimate(
-            states, factor, now - self._stamp, (), growth, np.sqrt(self._squared), repeats, held_up,
+            states, factor, now - self._stamp, (), growth, np.sqrt(self._squared), repeats, held_up, runs_on,
             np.abs(self._astray).max(axis=1, initial=0.0),
         )
 

@@ -92,7 +92,7 @@ TABLE = (
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
     Row(
         "robot astray", Level.WARN, Response.GO_ON,
-        "a robot turns or slips aside otherwise than it is told; whether a stop would still be clear is watched",
+        "a robot is faster than told, or turns or slips aside otherwise; whether a stop would still be clear is watched",
     ),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
@@ -228,6 +228,10 @@ def not_following(settings: Settings, name: str, lag: float) -> Caution:
 def too_slow(settings: Settings, name: str, factor: float) -> Caution:
     figures = f"reaches {100 * factor:.0f} % of its commanded speed"
     return _caution(settings, "robot not following", name, Level.WARN, figures)
+
+
+def too_fast(settings: Settings, name: str, factor: float) -> Caution:
+    return _caution(settings, "robot astray", name, Level.WARN, f"makes {100 * factor:.0f} % of its commanded speed")
 
 
 def astray(settings: Settings, name: str, deviations: float) -> Caution:
