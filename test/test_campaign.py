@@ -33,7 +33,7 @@ YARD = """\
     manoeuvres:
       names: [corner, aside]
       corner: {kind: equal_radius, angle_deg: 90.0, radius: 5.0, speed: 1.0}
-      aside: {kind: to_ends, ends_deg: ["a pose 12.0 6.5 0.0", "b pose 12.0 4.0 0.0", "c pose 12.0 1.5 0.0"], speed: 1.0}
+      aside: {kind: to_ends, ends_deg: ["a pose 12 6.5 0", "b pose 12 4 0", "c pose 12 1.5 0"], speed: 1.0}
 """
 SITES = [str(Path(__file__).parent.parent / "config" / name) for name in ("solar_park.yaml", "snow_yard.yaml")]
 

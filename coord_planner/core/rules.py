@@ -92,7 +92,7 @@ TABLE = (
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
     Row(
         "robot astray", Level.WARN, Response.GO_ON,
-        "a robot is faster than told, or turns or slips aside otherwise; whether a stop would still be clear is watched",
+        "a robot is faster than told, or turns or slips aside; whether a stop would still be clear is watched",
     ),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
