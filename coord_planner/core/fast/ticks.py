@@ -5,7 +5,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Hashable
+from functools import lru_cache
 
 import attrs
 
@@ -31,10 +32,14 @@ _KNOWN = {
 
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    return all(
-        {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
-        for part in (problem, problem.bounds, problem.watch, problem.fences, problem.compared) if part is not None
-    )
+    parts = (problem, problem.bounds, problem.watch, problem.fences, problem.compared)
+    return all(_fields(type(part)) == _KNOWN.get(type(part)) for part in parts if part is not None)
+
+
+@lru_cache
+def _fields(kind: Hashable) -> set[str]:
+    assert isinstance(kind, type)
+    return {field.name for field in attrs.fields(kind)}
 
 
 class TickSolve:
