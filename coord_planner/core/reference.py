@@ -13,7 +13,7 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError, SolveError
-from . import grid, ocp, solver, succession
+from . import grid, ocp, se2, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
@@ -76,13 +76,23 @@ class Reference:
         return self.task.duration
 
     def state(self, s: float) -> np.ndarray:
-        """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
+        """States at a moment of the manoeuvre, shape (N, 7), also before its first node and after its end."""
         return self.states(np.array([s]))[:, 0]
 
     def states(self, s: np.ndarray) -> np.ndarray:
-        """States at several moments, shape (N, K, 7)."""
+        """States at several moments, shape (N, K, 7).
+
+        After the end everyone goes straight on at the end speed. Before the first node everyone came along as it
+        drives there: one that takes over in motion is looked at some moments before it begins.
+        """
         states = self.plan.sample(np.minimum(s, self.end))
-        after = s > self.end
+        before, after = s < self.plan.times[0], s > self.end
+        if before.any():
+            x, y, heading = np.moveaxis(states[:, before][:, :, POSE], 2, 0)
+            metres = states[:, before, SPEED] * (s[before] - self.plan.times[0])
+            states[:, before, POSE] = np.stack(
+                se2.arc(x, y, heading, metres, metres * states[:, before, CURVATURE]), axis=2
+            )
         if after.any():
             speeds = np.full((len(states), 1), self.task.end_speed)
             speeds[list(self.task.stands)] = 0.0
