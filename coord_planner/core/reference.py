@@ -155,7 +155,8 @@ def _made(
     times = grid.until(start, task.duration, settings.horizon.interval)
     guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
-    fences = fencing(settings, task.strip, hazards(settings, task.hazard)).watching(fleet, settings, guess[:, :, POSE])
+    fences = fencing(settings, task.strip, (*task.pieces, *hazards(settings, task.hazard)))
+    fences = fences.watching(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
     plan = _converged(problem, solver.start_from_states(problem, guess))
     problem, plan = _settle(problem, plan, settings, task.speed, fences)
