@@ -122,7 +122,7 @@ def test_the_reference_stays_within_the_depth_that_the_guess_alone_would_leave()
     assert (speeds * gears >= -1e-6).all() and (np.abs(speeds[gears == 0]) < 1e-6).all() and speeds.min() < -0.1
 
 
-LONG = attrs.evolve(carts(1, REVERSING, LATE).robots[0], footprint=Footprint(footprint_length=2.4, footprint_width=1.0))
+LONG = attrs.evolve(carts(1, REVERSING, LATE).robots[0], footprint=Footprint(footprint_length=2.8, footprint_width=1.0))
 
 
 @pytest.mark.parametrize("depth", [7.0, 4.5])

@@ -13,7 +13,7 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError, SolveError
-from . import grid, ocp, se2, solver, succession
+from . import bypass, grid, ocp, se2, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
@@ -136,9 +136,14 @@ def make(
     Raises:
         RefusedError: an end or the site's clearance cannot be kept, with the figures: not on this way nor on others.
     """
+    times = grid.until(start, task.duration, settings.horizon.interval)
+    first = _guess(task, times) if guess is None else guess
     try:
-        return _made(task, fleet, graph, settings, initial, start, guess, end_kept)
+        return _made(task, fleet, graph, settings, initial, times, first, end_kept)
     except RefusedError:
+        for bent in bypass.guesses(task, fleet, settings, first):
+            with contextlib.suppress(RefusedError):
+                return _made(task, fleet, graph, settings, initial, times, bent, end_kept)
         if task.otherwise is None or guess is not None:
             raise
         try:
@@ -149,11 +154,9 @@ def make(
 
 
 def _made(
-    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, start: float,
-    guess: Optional[np.ndarray], end_kept: float,
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
+    guess: np.ndarray, end_kept: float,
 ) -> Reference:
-    times = grid.until(start, task.duration, settings.horizon.interval)
-    guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
     fences = fencing(settings, task.strip, (*task.pieces, *hazards(settings, task.hazard)))
     fences = fences.watching(fleet, settings, guess[:, :, POSE])
@@ -204,12 +207,19 @@ def make_rest(
     Raises:
         RefusedError: it cannot be kept even at a third of the speed; the reason is that of the first try.
     """
-    return _first_kept(task, lambda stretch: make(*_stretched(task, fleet, graph, settings, old, start, stretch)))
+    left = old.states(grid.until(start, task.duration, settings.horizon.interval))
+    blocked = bypass.in_the_way(task, fleet, settings, left)
+    return _first_kept(
+        task, lambda stretch: make(*_stretched(task, fleet, graph, settings, old, start, stretch)),
+        _STRETCHES[:1] if blocked else _STRETCHES,  # who stands in the way stands there for longer, too
+    )
 
 
-def _first_kept(task: Task, attempt: Callable[[float], Reference]) -> Reference:
+def _first_kept(
+    task: Task, attempt: Callable[[float], Reference], stretches: tuple[float, ...] = _STRETCHES
+) -> Reference:
     first: Optional[RefusedError] = None
-    for stretch in _STRETCHES:
+    for stretch in stretches:
         try:
             return attempt(stretch)
         except RefusedError as refused:
