@@ -6,7 +6,7 @@
     OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_conditioning.py [ROBOTS [COUPLING ...]]
 
 The benchmark's quiet corner, robots in a line, at each coupling: the condition of I + chi L, steps of a tick (mean,
-p99), ticks that were not solved, and by how much rolled-out controls cost more than converged ones (parts; p95, largest).
+p99), ticks that were not solved, and by how much controls cost more than converged ones, rolled out (p95, largest).
 """
 
 from __future__ import annotations

@@ -72,7 +72,9 @@ def test_growth_is_the_exponent_between_two_sizes():
     rows = [row("quiet", 4, 2.0), row("quiet", 64, 32.0), row("contacts", 4, 1.0), row("contacts", 64, 16.0**1.5)]
     assert bench.growth(rows, "quiet") == pytest.approx(1.0) and bench.growth(rows, "contacts") == pytest.approx(1.5)
     assert bench.growth(rows[:1], "quiet") is None
-    assert len(figure(rows).data) == 10
+    drawn = figure(rows)
+    assert len(drawn.data) == 10
+    assert [axis.type for axis in drawn.select_yaxes()] == ["log", "log"]  # shared: one straight, one bent misleads
 
 
 # The problem set

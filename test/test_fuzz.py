@@ -19,7 +19,6 @@ import pytest
 from hypothesis import HealthCheck, Phase, given, settings
 from hypothesis import strategies as st
 
-from coord_planner.core import coordinator as module
 from coord_planner.core import graph as graphs
 from coord_planner.core import ocp, reference
 from coord_planner.core.area import area_of
@@ -292,9 +291,9 @@ def cheap(monkeypatch):
     def rest(task, fleet, graph, chosen, old, start):
         return attrs.evolve(cut(old, start), graph=graph, task=task)
 
-    monkeypatch.setattr(module.reference, "make", make)
-    monkeypatch.setattr(module.reference, "make_again", make)
-    monkeypatch.setattr(module.reference, "make_rest", rest)
+    monkeypatch.setattr(reference, "make", make)
+    monkeypatch.setattr(reference, "make_again", make)
+    monkeypatch.setattr(reference, "make_rest", rest)
     return reference
 
 

@@ -136,6 +136,58 @@ def test_noise_is_no_jump_and_no_slow_machine():
     assert np.abs(np.array(factors) - 1.0).max() < 0.1
 
 
+def test_poses_noisier_than_the_settings_say_are_trusted_less_and_no_slow_machine():
+    """2.5 times as noisy: nobody is called slow (below 0.7), and the estimate is still better than the poses."""
+    watching, factors, errors = Watching(noise_xy=0.05, noise_deg=1.25, seed=5), [], []
+    watching.run(3.0)
+
+    def look(w):
+        factors.append(w.observer.estimate(w.now, None).speed_factor)
+        errors.append(w.errors()[0])
+
+    watching.run(20.0, look)
+    assert np.array(factors).min() > 0.8
+    assert math.sqrt(np.mean(np.array(errors) ** 2)) < 0.6 * 0.05 * math.sqrt(2)
+
+
+def test_a_slowed_machine_is_found_out_also_where_poses_are_noisier_than_the_settings_say():
+    watching = Watching(noise_xy=0.05, noise_deg=1.25, seed=5)
+    watching.run(3.0)
+    watching.machines.slow("cart_2", 0.0)
+    watching.run(1.0)
+    factor = watching.observer.estimate(watching.now, None).speed_factor
+    assert factor[1] < 0.5 and factor[0] > 0.8
+
+
+@pytest.mark.parametrize("noise_xy", [0.0, 0.02])
+def test_a_pose_that_repeats_while_the_robot_is_to_drive_is_no_news_and_told(noise_xy):
+    """At 1 m/s three times the noise of the settings, 0.06 m, are driven in two poses."""
+    watching, kept, told = Watching(noise_xy=noise_xy, noise_deg=0.0), {}, []
+    watching.run(3.0)
+
+    def frozen(poses):
+        kept.setdefault("cart_1", poses["cart_1"])
+        return poses | {"cart_1": attrs.evolve(kept["cart_1"], stamp=poses["cart_1"].stamp)}
+
+    watching.change = frozen
+    watching.run(0.5, lambda w: told.append(w.observer.estimate(w.now, None)))
+    assert [each.repeats[0] > 0.0 for each in told[:4]] == [False, False, True, True]
+    assert all(each.repeats[1] == 0.0 for each in told)
+    assert told[-1].age[0] > 0.3 and told[-1].age[1] < 0.1
+    assert watching.errors()[0][0] < 0.15  # predicted on, not held back
+    watching.change = lambda poses: poses
+    watching.run(0.3)
+    assert watching.observer.estimate(watching.now, None).repeats == pytest.approx([0.0, 0.0])
+
+
+def test_who_stands_may_send_the_same_pose_for_ever():
+    observer = Observer(carts(1), settings().poses, CommandHistory(np.zeros(1), PERIOD))
+    for i in range(100):
+        observer.observe({"cart_1": PoseSample(0.05 * i, 1.0, 2.0, 0.5)}, None)
+    estimate = observer.estimate(5.0, None)
+    assert estimate.repeats == [0.0] and estimate.age == pytest.approx([0.05])
+
+
 def test_a_slowed_machine_is_found_out_and_so_is_its_recovery():
     watching = Watching()
     watching.run(3.0)

@@ -13,7 +13,7 @@ import pytest
 from coord_planner.core import rules
 from coord_planner.core.messages import Level
 from coord_planner.core.settings import Settings, SiteRules
-from coord_planner.core.silence import Silence
+from coord_planner.core.silence import Entering, Nearing
 
 README = Path(__file__).parent.parent / "README.md"
 SETTINGS = Settings(site_rules=SiteRules(reference="the yard's rules, edition 3"))
@@ -22,6 +22,7 @@ RAISED = [
     rules.pose_old(SETTINGS, "a", 0.3),
     rules.pose_old(SETTINGS, "a", 3.0),
     rules.pose_jumped(SETTINGS, "a"),
+    rules.pose_frozen(SETTINGS, "a", 0.1),
     rules.pose_unsteady(SETTINGS, "a", 4.0),
     rules.clock_offset(SETTINGS, "a", 1.0),
     rules.clock_jumped(SETTINGS, -2.0),
@@ -40,6 +41,8 @@ RAISED = [
     rules.not_following(SETTINGS, "a", 0.4),
     rules.not_following(SETTINGS, "a", 4.0),
     rules.too_slow(SETTINGS, "a", 0.5),
+    rules.too_fast(SETTINGS, "a", 1.4),
+    rules.astray(SETTINGS, "a", 2.0),
     rules.not_ready(SETTINGS, "a"),
     rules.silent(SETTINGS, "a"),
     rules.plan_unfinished(SETTINGS, 0.2),
@@ -47,7 +50,8 @@ RAISED = [
     rules.common_curvature(SETTINGS, 3.0),
     rules.plan_failed(SETTINGS, "no numbers"),
     rules.plans_missing(SETTINGS, 3.0),
-    rules.silence_unsafe(SETTINGS, Silence(2.0, 0.3, ("a", "b"))),
+    rules.silence_unsafe(SETTINGS, Nearing(2.0, 0.3, ("a", "b"))),
+    rules.silence_unsafe_near(SETTINGS, Entering(2.0, -0.3, "a", "pond")),
     rules.hazard_known(SETTINGS, (3.0, 4.0)),
     rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, True),
     rules.hazard_seen(SETTINGS, "a", (3.0, 4.0), 5.0, False),

@@ -118,7 +118,26 @@ def test_unsafe_silence_is_told_with_instant_pair_and_remedy_and_refused_where_t
     code, said = call("check", written(tmp_path, strict, "site.yaml"))
     assert code == 1 and "would be refused" in said and "fall silent after" in said
     found = prospect(config.load(written(tmp_path, strict, "site.yaml")), "corner")
-    assert found.refused and found.silence is not None and found.silence.pair == ("a", "b")
+    assert found.refused and found.silence is not None
+    assert found.silence.nearing is not None and found.silence.nearing.pair == ("a", "b")
+
+
+def test_a_silent_planners_robots_also_stay_out_of_keep_outs_or_it_is_told_and_refused(tmp_path):
+    """a ends a metre before a bed that lies ahead; with 2 s of time-out it drives into it."""
+    bed = SITE.replace("min_clearance: 0.85", """min_clearance: 0.85
+      keep_outs:
+        names: [bed]
+        bed: {corners: [4.7, 4.9, 5.7, 4.9, 5.7, 5.9, 4.7, 5.9]}""")
+    prompt, late = (bed.replace("start_y: 2.5}", f"start_y: 2.5, command_timeout: {wait}}}") for wait in (0.2, 2.0))
+    code, said = call("check", written(tmp_path, prompt, "site.yaml"))
+    assert code == 0 and "m to spare to bed (a, silent after" in said and "too near to bed" not in said
+    code, said = call("check", written(tmp_path, late, "site.yaml"))
+    assert code == 0 and "m too near to bed (a, silent after" in said and "time-outs" in said
+    code, said = call("simulate", written(tmp_path, late, "site.yaml"), "--manoeuvre", "corner")
+    assert code == 0 and "a: should the planner fall silent" in said and "too near to bed before it stands" in said
+    strict = late.replace("min_clearance: 0.85", "min_clearance: 0.85\n      refuse_unsafe_silence: true")
+    code, said = call("check", written(tmp_path, strict, "site.yaml"))
+    assert code == 1 and "would come" in said and "too near to bed before it stands" in said and "time-out" in said
 
 
 def test_what_is_refused_from_the_starts_is_said_and_no_mistake_of_the_file(tmp_path):

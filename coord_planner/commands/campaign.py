@@ -35,15 +35,15 @@ from ..trial.run import Run
 # Which warnings tell of which fault. Any of them counts.
 TOLD_BY: dict[str, tuple[str, ...]] = {
     "pose_lost": ("pose old",),
-    "pose_frozen": ("robot not following", "pose jumped", "pose unsteady"),
+    "pose_frozen": ("pose frozen", "robot not following", "pose jumped", "pose unsteady"),
     "pose_jump": ("pose jumped", "pose unsteady"),
     "pose_noise": ("pose unsteady", "pose jumped"),
     "robot_stuck": ("robot not following", "free way short", "pose unsteady"),
     "robot_slow": ("robot not following", "free way short", "pose unsteady"),
     "not_ready": ("robot not ready",),
     "link_lost": ("graph changed", "graph split"),
-    "command_delay": ("robot not following", "pose unsteady", "free way short"),
-    "command_lost": ("robot not following", "pose unsteady", "free way short"),
+    "command_delay": ("robot not following", "robot astray", "pose unsteady", "free way short"),
+    "command_lost": ("robot not following", "robot astray", "pose unsteady", "free way short"),
     "planner_late": ("plan late", "plan failed"),
     "planner_fails": ("plan late", "plan failed"),
 }
@@ -59,7 +59,9 @@ _MUST.update({
 _HEARD = ("pose_lost", "pose_frozen", "pose_jump", "pose_noise", "not_ready", "link_lost")
 _MOVING = 0.2  # m/s
 _ENDS = (State.ENDED.value, State.HELD.value)
-_MISSED = (0.3, 0.1)  # m/s and rad/s by which a machine whose commands come late is told something else
+_MISSED = (0.3, 0.1)  # m/s and rad/s by which a machine whose commands come late moves otherwise than told
+_MOVED = 0.1  # metres
+_AS_LOST = 1.0  # seconds for commands that come so late that the machine brakes first
 _MOST_EXCUSED = 0.02  # part of the cases in which a contact may be excused
 _LEAST_MOVING = 1.5  # seconds after the beginning before which no fault strikes
 
@@ -83,7 +85,7 @@ class Result:
         contacts: footprints that touched. excused: contacts that no braking could have avoided.
         clearance: smallest, metres. outside: published commands outside a limit. ended: the last state.
         told_after: seconds from each fault's onset to its first warning, inf for none, by the fault's place.
-        owed: whether that warning was owed within the time, by the fault's place.
+        owed: whether that warning was owed, by the fault's place. allowed: within how many seconds.
     """
 
     case: Case
@@ -94,13 +96,13 @@ class Result:
     ended: str
     told_after: tuple[float, ...]
     owed: tuple[bool, ...]
+    allowed: tuple[float, ...]
 
     @property
     def kept(self) -> bool:
         """Whether nothing went wrong that must not."""
         late = any(
-            owed and after > _MUST[fault.kind][1] + 1e-6
-            for fault, after, owed in zip(self.case.faults, self.told_after, self.owed)
+            owed and after > allowed + 1e-6 for after, owed, allowed in zip(self.told_after, self.owed, self.allowed)
         )
         return (not self.contacts or self.excused) and not self.outside and self.ended in _ENDS and not late
 
@@ -154,49 +156,88 @@ def play(case: Case) -> Result:
     try:
         run = rehearse(configuration, case.manoeuvre, seed=case.seed, faults=case.faults)
     except RefusedError:
-        return Result(case, 0, False, np.inf, 0, "refused", (), ())
+        return Result(case, 0, False, np.inf, 0, "refused", (), (), ())
     figures = summary(run)
-    told, owed = zip(*(_told(fault, run, _hidden(fault, configuration, run), case.faults) for fault in case.faults))
+    told, owed = zip(*(_told(fault, run, configuration, case.faults) for fault in case.faults))
     contacts = int(figures["contacts"])
     return Result(
         case, contacts, bool(contacts) and unavoidable(run, case.faults), float(figures["min_clearance_m"]),
         int(figures["limit_violations"]), run.state, told, owed,
+        tuple(_allowed(fault, configuration) for fault in case.faults),
     )
 
 
 def _hidden(fault: Fault, configuration: config.Configuration, run: Run) -> float:
     """Seconds for which nobody can see a fault.
 
-    A machine without commands drives on as told until its time-out; one that gets them late drives as it should
-    until it is told something else. Infinite where that does not happen.
+    A pose that stays where it was is right until its robot has moved. A machine without commands drives on as told
+    until its time-out, also where they only come later than that; one that gets them late drives as it should until
+    it is told something else. Infinite where it does not move otherwise for long enough to be warned of.
     """
-    if fault.kind == "command_lost":
-        return configuration.connections[fault.robot].command_timeout
-    if fault.kind != "command_delay":
+    if fault.kind == "pose_frozen":
+        return _unmoved(fault, run)
+    if fault.kind not in ("command_lost", "command_delay"):
         return 0.0
-    times, told = run.command_times, run.commanded[run.fleet.index(fault.robot)]
-    turning = told[:, 0] * told[:, 1]
-    began = run.began + fault.from_s
-    before = np.interp(times - fault.value, times, told[:, 0]), np.interp(times - fault.value, times, turning)
-    missed = (np.abs(told[:, 0] - before[0]) > _MISSED[0]) | (np.abs(turning - before[1]) > _MISSED[1])
-    shows = np.flatnonzero(missed & (times >= began))
-    return float(times[shows[0]] - began) if len(shows) else np.inf
+    timeout = configuration.connections[fault.robot].command_timeout
+    if fault.kind == "command_lost":
+        return timeout
+    k, began = run.fleet.index(fault.robot), run.began + fault.from_s
+    speed, turning = _as_told(run, k)
+    off = np.abs(run.speeds[k] - speed), np.abs(run.speeds[k] * run.curvatures[k] - turning)
+    missed = ((off[0] > _MISSED[0]) | (off[1] > _MISSED[1])) & (run.times >= began)
+    lasting = int(np.ceil(_MUST[fault.kind][1] / float(np.diff(run.times).max())))
+    held = np.convolve(missed, np.ones(lasting), mode="valid") >= lasting
+    shows = run.times[np.flatnonzero(held)]
+    if not len(shows) or shows[0] >= run.began + fault.to_s:
+        return np.inf
+    after = float(shows[0] - began)
+    return timeout if timeout < after <= fault.value else after
 
 
-def _told(fault: Fault, run: Run, hidden: float = 0.0, others: Sequence[Fault] = ()) -> tuple[float, bool]:
+def _unmoved(fault: Fault, run: Run) -> float:
+    """Seconds until a robot has moved by more than poses scatter; infinite where it does not, as long as it lasts."""
+    poses, began = run.poses[run.fleet.index(fault.robot)], run.began + fault.from_s
+    struck = int(np.searchsorted(run.times, began))
+    moved = np.linalg.norm(poses[struck:, :2] - poses[min(struck, len(poses) - 1), :2], axis=1) > _MOVED
+    shows = run.times[struck:][moved]
+    return float(shows[0] - began) if len(shows) and shows[0] < run.began + fault.to_s else np.inf
+
+
+def _as_told(run: Run, k: int) -> tuple[np.ndarray, np.ndarray]:
+    """Speed and turn rate of a machine that gets its commands in time, at the times of a run: lags of first order."""
+    response = run.fleet.robots[k].response
+    sent = np.searchsorted(run.command_times, run.times - response.command_delay + 1e-9, side="right") - 1
+    told = np.where((sent >= 0)[:, None], run.commanded[k, np.maximum(sent, 0)], 0.0)
+    reached = np.zeros((len(run.times), 2))
+    for i, step in enumerate(np.diff(run.times)):
+        fading = [np.exp(-step / lag) if lag > 0.0 else 0.0 for lag in (response.speed_lag, response.curvature_lag)]
+        reached[i + 1] = told[i] + (reached[i] - told[i]) * fading
+    return reached[:, 0], reached[:, 0] * reached[:, 1]
+
+
+def _allowed(fault: Fault, configuration: config.Configuration) -> float:
+    """Seconds within which a fault must be warned of, from when it shows."""
+    late = fault.kind == "command_delay" and fault.value > configuration.connections[fault.robot].command_timeout
+    return _AS_LOST if late else _MUST[fault.kind][1]
+
+
+def _told(
+    fault: Fault, run: Run, configuration: config.Configuration, others: Sequence[Fault] = ()
+) -> tuple[float, bool]:
     """Seconds to the first warning of a fault, and whether one was owed: it struck in motion and was large enough.
 
     No warning is owed of a planner that does not plan or of a machine that is not to follow because the fleet is
     stopping already, nor of what is wrong with poses that do not come.
 
     Args:
-        hidden: seconds after the fault's beginning from which it shows. others: that strike as well.
+        others: faults that strike as well.
     """
-    struck, (size, allowed) = run.began + fault.from_s, _MUST[fault.kind]
+    struck, size, allowed = run.began + fault.from_s, _MUST[fault.kind][0], _allowed(fault, configuration)
+    hidden = _hidden(fault, configuration, run)
     onset = struck + hidden
     heard = min((
         max(first - onset, 0.0) for first, last, caution in run.cautions
-        if caution.code in TOLD_BY[fault.kind] and last >= onset
+        if caution.code in TOLD_BY[fault.kind] and last >= struck and _names(caution.subject, fault.robot)
     ), default=np.inf)
     stop = min((at for at, text in run.events if text.startswith("stopping")), default=np.inf)
     large = fault.value < size if fault.kind == "robot_slow" else fault.value >= size
@@ -205,6 +246,11 @@ def _told(fault: Fault, run: Run, hidden: float = 0.0, others: Sequence[Fault] =
     if fault.kind not in _HEARD and stop <= onset + min(heard, allowed) - 1e-6:
         owed = False
     return heard, owed and not _hidden_by_loss(fault, others)
+
+
+def _names(subject: str, robot: str) -> bool:
+    """Whether a warning is of the robot that was struck, alone or in a pair; any is, where it was none of them."""
+    return not robot or robot in subject.split(" and ")
 
 
 def _driving(run: Run, struck: float, until: float) -> bool:
@@ -231,7 +277,7 @@ def _table(results: Sequence[Result]) -> Table:
         if not struck:
             continue
         after = [r.told_after[i] for r, i in struck if r.owed[i]]
-        late = sum(value > _MUST[kind][1] + 1e-6 for value in after)
+        late = sum(r.told_after[i] > r.allowed[i] + 1e-6 for r, i in struck if r.owed[i])
         runs = [r for r, _ in struck]
         median = f"{np.median(after):.2f}, at most {max(after):.2f}" if after else "-"
         table.add_row(

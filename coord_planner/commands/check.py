@@ -194,12 +194,23 @@ def _in_words(found: Prospect, rules: SiteRules) -> str:
     silence = found.silence
     if found.refused:
         return f"would be refused from the starts of the file: {found.refused}."
-    if silence is None:
-        return "one robot, nobody to come near."
-    words = (f"robots that time out separately come within {silence.clearance:.2f} m ({' and '.join(silence.pair)}, "
-             f"silent after {silence.instant:.1f} s)")
-    short = rules.min_clearance - silence.clearance
-    if short <= SHORT:
-        return f"{words}; the site allows {rules.min_clearance:g} m."
-    return (f"{words}, {short:.2f} m less than the site allows. Shorter command time-outs, a lower speed or more "
-            "spacing would help; with site_rules.refuse_unsafe_silence it would be refused.")
+    words, unsafe = [], False
+    if silence is not None and silence.nearing is not None:
+        near = silence.nearing
+        short = rules.min_clearance - near.clearance
+        unsafe = short > SHORT
+        compared = f"; the site allows {rules.min_clearance:g} m"
+        if unsafe:
+            compared = f", {short:.2f} m less than the site allows"
+        words.append(f"robots that time out separately come within {near.clearance:.2f} m ({' and '.join(near.pair)}, "
+                     f"silent after {near.instant:.1f} s){compared}.")
+    if silence is not None and silence.entering is not None:
+        into = silence.entering
+        inside = into.spare < -SHORT
+        unsafe = unsafe or inside
+        gap = f"{-into.spare:.2f} m too near to" if inside else f"with {into.spare:.2f} m to spare to"
+        words.append(f"One comes {gap} {into.area} ({into.robot}, silent after {into.instant:.1f} s).")
+    if unsafe:
+        words.append("Shorter command time-outs, a lower speed or more room would help; with "
+                     "site_rules.refuse_unsafe_silence it would be refused.")
+    return " ".join(words) or "one robot, nobody and nothing to come near."

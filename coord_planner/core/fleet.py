@@ -7,6 +7,8 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from functools import cached_property
+from typing import Any
 
 import attrs
 import numpy as np
@@ -105,7 +107,7 @@ class Fleet:
     def __len__(self) -> int:
         return len(self.robots)
 
-    @property
+    @cached_property
     def names(self) -> tuple[str, ...]:
         return tuple(robot.name for robot in self.robots)
 
@@ -115,11 +117,11 @@ class Fleet:
 
     def limit(self, name: str) -> np.ndarray:
         """One limit for every robot, shape (N,), e.g. ``fleet.limit("max_speed")``."""
-        return np.array([getattr(robot.limits, name) for robot in self.robots])
+        return self._limits[name]
 
     def response(self, name: str) -> np.ndarray:
         """One response constant for every robot, shape (N,), seconds."""
-        return np.array([getattr(robot.response, name) for robot in self.robots])
+        return self._responses[name]
 
     def timeouts(self) -> np.ndarray:
         """How long each robot drives on without a command, shape (N,), seconds."""
@@ -127,7 +129,32 @@ class Fleet:
 
     def corners(self) -> np.ndarray:
         """Footprint corners in the robots' frames, shape (N, 4, 2), metres."""
-        return np.stack([robot.footprint.corners() for robot in self.robots])
+        return self._corners
+
+    # What the loop asks for on every tick is worked out once. Nobody may write into it.
+
+    @cached_property
+    def _limits(self) -> dict[str, np.ndarray]:
+        return _columns([robot.limits for robot in self.robots])
+
+    @cached_property
+    def _responses(self) -> dict[str, np.ndarray]:
+        return _columns([robot.response for robot in self.robots])
+
+    @cached_property
+    def _corners(self) -> np.ndarray:
+        return _kept(np.stack([robot.footprint.corners() for robot in self.robots]))
+
+
+def _columns(groups: Sequence[Any]) -> dict[str, np.ndarray]:
+    """One array for each field of settings groups of one class."""
+    names = [field.name for field in attrs.fields(type(groups[0]))]
+    return {name: _kept(np.array([getattr(group, name) for group in groups])) for name in names}
+
+
+def _kept(values: np.ndarray) -> np.ndarray:
+    values.setflags(write=False)
+    return values
 
 
 def car_like_limits(wheelbase: float, max_angle: float, max_rate: float) -> tuple[float, float]:

@@ -33,6 +33,7 @@ _LONG = 3.0  # seconds
 _TROUBLE = 0.9  # speed factor below which stopping distances are looked at
 _GAP = 2.0  # seconds between snapshots that are a jump of the clock
 _SCATTER = 3.0  # times the expected scatter of poses
+_ASTRAY = 1.5  # standard deviations; fault-free rehearsals stay below 1.1
 
 
 @attrs.frozen(eq=False)
@@ -88,7 +89,8 @@ class Judge:
     def _inputs(self, view: View) -> list[Caution]:
         settings, poses, now = view.settings, view.snapshot.poses, view.snapshot.time
         found = [rules.pose_jumped(settings, name) for name in view.estimate.jumped]
-        for name, age, scatter in zip(view.fleet.names, view.estimate.age, view.estimate.scatter):
+        estimate = view.estimate
+        for name, age, scatter, repeats in zip(view.fleet.names, estimate.age, estimate.scatter, estimate.repeats):
             newest = poses.get(name)
             if newest is not None and not np.isfinite([newest.stamp, newest.x, newest.y, newest.heading]).all():
                 found.append(rules.pose_invalid(settings, name))
@@ -96,6 +98,8 @@ class Judge:
                 found.append(rules.clock_offset(settings, name, newest.stamp - now))
             if age > _AGING * settings.poses.max_age:
                 found.append(rules.pose_old(settings, name, float(age)))
+            if repeats > 0.0:
+                found.append(rules.pose_frozen(settings, name, float(repeats)))
             if scatter > _SCATTER:
                 found.append(rules.pose_unsteady(settings, name, float(scatter)))
         return found
@@ -154,13 +158,18 @@ def _readiness(view: View) -> list[Caution]:
 def _following(view: View) -> list[Caution]:
     progress = view.settings.progress
     found = []
-    lags, factors = view.pursuit.progress.lag, view.estimate.speed_factor
-    speeds = view.estimate.states[:, SPEED_COMMAND]
-    for name, lag, factor, speed in zip(view.fleet.names, lags, factors, speeds):
-        if lag > progress.dead_band + progress.full_lag / 2:
-            found.append(rules.not_following(view.settings, name, float(lag)))
-        elif factor < _SLOW_FACTOR and abs(speed) > _DRIVING:
-            found.append(rules.too_slow(view.settings, name, float(factor)))
+    lags, estimate = view.pursuit.progress.lag, view.estimate
+    told = np.abs(estimate.states[:, SPEED_COMMAND]) > _DRIVING
+    slow = told & ((estimate.speed_factor < _SLOW_FACTOR) | estimate.held_up)
+    for k, name in enumerate(view.fleet.names):
+        if lags[k] > progress.dead_band + progress.full_lag / 2:
+            found.append(rules.not_following(view.settings, name, float(lags[k])))
+        elif slow[k]:
+            found.append(rules.too_slow(view.settings, name, float(estimate.speed_factor[k])))
+        if told[k] and estimate.runs_on[k]:
+            found.append(rules.too_fast(view.settings, name, float(estimate.speed_factor[k])))
+        elif told[k] and estimate.astray[k] > _ASTRAY:
+            found.append(rules.astray(view.settings, name, float(estimate.astray[k])))
     return found
 
 
@@ -168,8 +177,11 @@ def _plans(view: View) -> list[Caution]:
     found = []
     if view.refused_change:
         found.append(rules.change_refused(view.settings, view.refused_change))
-    if view.silence is not None and view.silence.clearance < view.settings.site_rules.min_clearance - SHORT:
-        found.append(rules.silence_unsafe(view.settings, view.silence))
+    silence, allowed = view.silence, view.settings.site_rules.min_clearance
+    if silence is not None and silence.nearing is not None and silence.nearing.clearance < allowed - SHORT:
+        found.append(rules.silence_unsafe(view.settings, silence.nearing))
+    if silence is not None and silence.entering is not None and silence.entering.spare < -SHORT:
+        found.append(rules.silence_unsafe_near(view.settings, silence.entering))
     return found
 
 
@@ -223,7 +235,8 @@ def _troubled(view: View) -> bool:
     """Whether some robot does not do as planned; while all do, planned configurations are kept by a stop in step."""
     estimate, progress = view.estimate, view.settings.progress
     late = view.pursuit.progress.lag.max() > progress.dead_band or estimate.speed_factor.min() < _TROUBLE
-    return bool(late or estimate.growth.max() > SHORT)
+    astray = estimate.runs_on.any() or estimate.astray.max() > _ASTRAY
+    return bool(late or astray or estimate.growth.max() > SHORT)
 
 
 def _names(fleet: Fleet, pair: tuple[int, int]) -> tuple[str, str]:

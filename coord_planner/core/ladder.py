@@ -22,7 +22,7 @@ from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared
 from .rollout import rolled_out
 from .settings import Settings
-from .tick import paced, usable
+from .tick import paced, sound, usable
 
 _NEAR = 0.5  # metres or radians by which the last plan may miss the end by now and still be driven
 _SHORT = 2e-3  # metres
@@ -51,9 +51,9 @@ def find(
     problem, keep = prepared.problem, settings.horizon.keep
     cautions = [] if failure is None else [failure]
     if solved is not None:
+        if sound(problem, solved):
+            return Found(solved, True, ())
         plan = usable(problem, solved, _least(prepared, settings))
-        if plan is not None and plan.solved:
-            return Found(plan, True, ())
         if plan is not None and _drivable(prepared, plan, settings):
             # A solver that stops after so many steps leaves the rest to the next tick; that is no news.
             short = solved.solve_time > _MOST * settings.horizon.budget

@@ -211,8 +211,12 @@ def steep_prices(v: Named, p: Named) -> Matrix:
 
 
 @lru_cache(maxsize=8)
-def build(shape: Shape) -> Program:
-    """The program for problems of a shape. Takes a while for large fleets; the last few are kept (tens of MB each)."""
+def build(shape: Shape, joint: bool = True) -> Program:
+    """The program for problems of a shape, as one expression.
+
+    Args:
+        joint: with what is compared at moments that lie apart, the only cost that is no sum over the intervals.
+    """
     variables, parameters, rows = variable_blocks(shape), parameter_blocks(shape), row_blocks(shape)
     x, v = variables.symbols()
     p_all, p = parameters.symbols()
@@ -234,7 +238,7 @@ def build(shape: Shape) -> Program:
     at_once = () if shape.compared else shape.edges
     f = (
         turning_cost(turning, p["coupling"], at_once, p["cost_h"])
-        + comparison_cost(v, p, shape)
+        + (comparison_cost(v, p, shape) if joint else 0)
         + alignment_cost(v["theta"], p["alignment"], shape.edges, p["cost_h"])
         + small_prices(v, p, mean_speed)
         + steep_prices(v, p)

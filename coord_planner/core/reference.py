@@ -161,15 +161,13 @@ def _made(
     fences = fencing(settings, task.strip, (*task.pieces, *hazards(settings, task.hazard)))
     fences = fences.watching(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
-    plan = _converged(problem, solver.start_from_states(problem, guess))
-    problem, plan = _settle(problem, plan, settings, task.speed, fences)
+    problem, plan = _settled(problem, guess, settings, task.speed, fences)
     pairs_then, fences_then = choose_pairs(fleet, settings, plan.poses), fences.watching(fleet, settings, plan.poses)
     if not (_contains(pairs, pairs_then) and fences.covers(fences_then)):
         # The solution came near something that the guess passed at a distance.
         pairs, fences = np.unique(np.concatenate([pairs, pairs_then]), axis=0), fences.joined(fences_then)
         problem = _problem(task, fleet, graph, settings, initial, times, plan.states, pairs, fences)
-        plan = _converged(problem, solver.start_from_states(problem, plan.states))
-        problem, plan = _settle(problem, plan, settings, task.speed, fences)
+        problem, plan = _settled(problem, plan.states, settings, task.speed, fences)
     try:
         _check_solved(task, problem, plan)
         clearance, pair = plan.closest()
@@ -299,22 +297,19 @@ def _problem(
     )
 
 
-def _converged(problem: Problem, start: solver.Start) -> Plan:
-    """The converged solution; where the fast solver is quick to come near it few steps are left for the general one."""
-    if len(problem.times) - 1 <= _QUICK and knows(problem):
-        with contextlib.suppress(SolveError):
-            near = TickSolver().solve(problem, start)
-            if near.solved:
-                return solver.finish(problem, near)
-    return solver.solve(problem, start)
-
-
-def _settle(
-    problem: Problem, plan: Plan, settings: Settings, speed: float, fences: Fencing
+def _settled(
+    problem: Problem, guess: np.ndarray, settings: Settings, speed: float, fences: Fencing
 ) -> tuple[Problem, Plan]:
-    """Solve again with separating lines from the solution until what comes nearest stays as near as it is."""
+    """The converged solution with separating lines from where it leads itself, and its problem.
+
+    Lines are taken anew from each solution until what comes nearest stays as near as it is. The fast solver comes
+    near the first one; where it does not know the way the general one finds it.
+    """
+    start = solver.start_from_states(problem, guess)
+    near = _near(problem, start)
+    plan = solver.solve(problem, start) if near is None else near
     if not len(problem.watch.pairs) and not len(fences.bound):
-        return problem, plan
+        return problem, plan if near is None else solver.finish(problem, plan)
     nearest = _nearest(plan, fences)
     for _ in range(_ROUNDS):
         lines = watch(problem.fleet, settings, problem.watch.pairs, plan.poses, speed)
@@ -325,6 +320,16 @@ def _settle(
         if np.abs(nearest - before).max() < _SETTLED:
             break
     return problem, plan
+
+
+def _near(problem: Problem, start: solver.Start) -> Optional[Plan]:
+    """What the fast solver comes to, where it is quick and comes near the solution."""
+    if len(problem.times) - 1 <= _QUICK and knows(problem):
+        with contextlib.suppress(SolveError):
+            near = TickSolver().solve(problem, start)
+            if near.solved:
+                return near
+    return None
 
 
 def _nearest(plan: Plan, fences: Fencing) -> np.ndarray:

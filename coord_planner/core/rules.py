@@ -12,7 +12,7 @@ import attrs
 
 from .messages import Caution, Level
 from .settings import Settings
-from .silence import Silence
+from .silence import Entering, Nearing
 
 
 class Response(str, Enum):
@@ -46,6 +46,10 @@ TABLE = (
     ),
     Row("pose old", Level.STALE, Response.STOP, "no pose for longer than poses.max_age"),
     Row("pose jumped", Level.ERROR, Response.STOP, "a pose lies further than poses.max_jump from where it must be"),
+    Row(
+        "pose frozen", Level.WARN, Response.GO_ON,
+        "a pose repeats exactly while the robot is to drive; it counts as if none came",
+    ),
     Row("pose unsteady", Level.WARN, Response.GO_ON, "poses scatter far more than the file says"),
     Row("clock offset", Level.WARN, Response.GO_ON, "stamps lie in the future; such poses are not used"),
     Row("clock jumped", Level.ERROR, Response.STOP, "the planner's own clock jumped"),
@@ -86,6 +90,10 @@ TABLE = (
     ),
     Row("robot not following", Level.WARN, Response.SLOW, "a robot falls behind; the others wait for it"),
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
+    Row(
+        "robot astray", Level.WARN, Response.GO_ON,
+        "a robot is faster than told, or turns or slips aside; whether a stop would still be clear is watched",
+    ),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
     Row("plan unfinished", Level.WARN, Response.GO_ON, "a plan was not finished in time; it keeps what it must"),
@@ -101,7 +109,10 @@ TABLE = (
     Row("hazard known", Level.WARN, Response.GO_ON, "a hazard is known that nobody on the way comes near"),
     Row("hazard seen", Level.WARN, Response.TURN_AWAY, "a hazard is seen, and turning away from it is armed"),
     Row("hazard seen", Level.ERROR, Response.STOP, "a hazard is seen, or lies near the way, and nothing is armed"),
-    Row("silence unsafe", Level.WARN, Response.GO_ON, "robots that time out separately would come too near"),
+    Row(
+        "silence unsafe", Level.WARN, Response.GO_ON,
+        "robots that time out separately would come too near to each other or to a keep-out area",
+    ),
     Row("other planner heard", Level.ERROR, Response.STOP, "another planner drives this fleet"),
     Row(
         "robot not joined", Level.WARN, Response.GO_ON,
@@ -133,6 +144,11 @@ def pose_old(settings: Settings, name: str, age: float) -> Caution:
 def pose_jumped(settings: Settings, name: str) -> Caution:
     figures = f"its pose jumped by more than {settings.poses.max_jump:g} m"
     return _caution(settings, "pose jumped", name, Level.ERROR, figures)
+
+
+def pose_frozen(settings: Settings, name: str, driven: float) -> Caution:
+    figures = f"its pose repeats exactly although it must have driven {driven:.2f} m; it counts as if none came"
+    return _caution(settings, "pose frozen", name, Level.WARN, figures)
 
 
 def pose_unsteady(settings: Settings, name: str, times: float) -> Caution:
@@ -214,6 +230,18 @@ def too_slow(settings: Settings, name: str, factor: float) -> Caution:
     return _caution(settings, "robot not following", name, Level.WARN, figures)
 
 
+def too_fast(settings: Settings, name: str, factor: float) -> Caution:
+    return _caution(settings, "robot astray", name, Level.WARN, f"makes {100 * factor:.0f} % of its commanded speed")
+
+
+def astray(settings: Settings, name: str, deviations: float) -> Caution:
+    figures = (
+        f"turns or slips aside otherwise than it is told, {deviations:.1f} times as far as poses scatter and always to "
+        "one side"
+    )
+    return _caution(settings, "robot astray", name, Level.WARN, figures)
+
+
 def not_ready(settings: Settings, name: str) -> Caution:
     return _caution(settings, "robot not ready", name, Level.ERROR, "not ready to be driven")
 
@@ -254,13 +282,21 @@ def plans_missing(settings: Settings, seconds: float) -> Caution:
     return _caution(settings, "plan failed", "", Level.ERROR, figures)
 
 
-def silence_unsafe(settings: Settings, silence: Silence) -> Caution:
+def silence_unsafe(settings: Settings, silence: Nearing) -> Caution:
     figures = (
         f"should the planner fall silent {silence.instant:.1f} s into the manoeuvre they come within "
         f"{silence.clearance:.2f} m before both stand, {settings.site_rules.min_clearance:g} m is the site's smallest "
         "(shorter command time-outs, less speed or more spacing would help)"
     )
     return _caution(settings, "silence unsafe", " and ".join(silence.pair), Level.WARN, figures)
+
+
+def silence_unsafe_near(settings: Settings, silence: Entering) -> Caution:
+    figures = (
+        f"should the planner fall silent {silence.instant:.1f} s into the manoeuvre it comes {-silence.spare:.2f} m "
+        f"too near to {silence.area} before it stands (a shorter command time-out, less speed or more room would help)"
+    )
+    return _caution(settings, "silence unsafe", silence.robot, Level.WARN, figures)
 
 
 def not_joined(settings: Settings, name: str, reason: str) -> Caution:

@@ -28,11 +28,13 @@ class Schedule:
         robots = np.arange(len(self.values)).reshape((-1,) + (1,) * (times.ndim - 1))
         if len(self.times) == 1:
             return self.values[robots, np.zeros(times.shape, dtype=int)]
-        i = np.clip(np.searchsorted(self.times, times, side="right") - 1, 0, len(self.times) - 2)
+        # Asked for many times a tick: np.clip would take half of the time that is left.
+        i = np.minimum(np.maximum(self.times.searchsorted(times, side="right") - 1, 0), len(self.times) - 2)
         before = self.times[i]
         width = np.maximum(self.times[i + 1] - before, 1e-12)  # two moments may be one
-        part = np.clip((times - before) / width, 0.0, 1.0)[..., None]
-        found: np.ndarray = (1.0 - part) * self.values[robots, i] + part * self.values[robots, i + 1]
+        part = np.minimum(np.maximum((times - before) / width, 0.0), 1.0)[..., None]
+        first = self.values[robots, i]
+        found: np.ndarray = first + part * (self.values[robots, i + 1] - first)
         return found
 
     def moment(self, time: float) -> np.ndarray:

@@ -1,13 +1,19 @@
 # Copyright 2026 coord_planner maintainers
 # SPDX-License-Identifier: Apache-2.0
 
-"""Should the planner fall silent: do robots that time out separately, and brake by themselves, stay clear?"""
+"""Should the planner fall silent: do robots that time out separately, and brake by themselves, stay clear?
+
+Of each other, and of what the site, a strip or a hazard keeps them out of.
+"""
 
 from __future__ import annotations
+
+from typing import Optional
 
 import attrs
 import numpy as np
 
+from .fence import Fencing
 from .fleet import Fleet
 from .motion import drive, lags
 from .plan import closest_along
@@ -19,11 +25,11 @@ _EVERY = 0.25  # seconds of the manoeuvre between the instants that are tried
 
 
 @attrs.frozen
-class Silence:
-    """The worst instant at which the planner could fall silent.
+class Nearing:
+    """The worst instant for two robots.
 
     Attributes:
-        instant: seconds of the manoeuvre. clearance: smallest exact clearance until all stand, metres.
+        instant: seconds of the manoeuvre. clearance: smallest exact clearance until both stand, metres.
         pair: who comes that near.
     """
 
@@ -32,19 +38,53 @@ class Silence:
     pair: tuple[str, str]
 
 
-def worst(reference: Reference, fleet: Fleet) -> Silence | None:
-    """Try every quarter of a second of a reference; None for a fleet of one.
+@attrs.frozen
+class Entering:
+    """The worst instant for a robot and what it is to be kept out of.
+
+    Attributes:
+        instant: seconds of the manoeuvre. spare: how much nearer the robot could come until it stands, metres; below
+            0 by what is missing. robot, area: their names.
+    """
+
+    instant: float
+    spare: float
+    robot: str
+    area: str
+
+
+@attrs.frozen
+class Silence:
+    """What would come of the planner's silence at its worst; None where there is nobody, or nothing, to come near."""
+
+    nearing: Optional[Nearing]
+    entering: Optional[Entering]
+
+
+def worst(reference: Reference, fleet: Fleet) -> Silence:
+    """Try every quarter of a second of a reference.
 
     Each robot holds its last command until its own time-out, then brakes at its own rate along its last curvature.
     """
+    instants = np.arange(float(reference.plan.times[0]), reference.end + 1e-9, _EVERY)
+    paths = _paths(reference, fleet, instants)
+    return Silence(_nearing(fleet, instants, paths), _entering(fleet, instants, paths, reference.fencing))
+
+
+def _nearing(fleet: Fleet, instants: np.ndarray, paths: np.ndarray) -> Optional[Nearing]:
     if len(fleet) < 2:
         return None
-    start = float(reference.plan.times[0])
-    instants = np.arange(start, reference.end + 1e-9, _EVERY)
-    paths = _paths(reference, fleet, instants)
     found = [(closest_along(fleet, path), instant) for path, instant in zip(paths, instants)]
     (clearance, pair), instant = min(found, key=lambda entry: entry[0][0])
-    return Silence(float(instant), clearance, (fleet.names[pair[0]], fleet.names[pair[1]]))
+    return Nearing(float(instant), clearance, (fleet.names[pair[0]], fleet.names[pair[1]]))
+
+
+def _entering(fleet: Fleet, instants: np.ndarray, paths: np.ndarray, fencing: Fencing) -> Optional[Entering]:
+    if not (fencing.pieces or fencing.lines):
+        return None
+    found = [(fencing.least(fleet, path), instant) for path, instant in zip(paths, instants)]
+    (spare, robot, area), instant = min(found, key=lambda entry: entry[0][0])
+    return Entering(float(instant), spare, fleet.names[robot], area)
 
 
 def _paths(reference: Reference, fleet: Fleet, instants: np.ndarray) -> np.ndarray:

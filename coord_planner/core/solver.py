@@ -16,6 +16,7 @@ from ..errors import SolveError
 from . import ocp
 from .plan import Plan, from_solution
 from .problem import STATES, Problem, Shape
+from .staged import staged
 
 _ENDS = ("over", "under", "end")  # blocks of the last node alone: they do not shift
 _QUIET = {"print_time": False, "record_time": True, "calc_lam_p": False, "error_on_fail": False}
@@ -47,13 +48,13 @@ class Start:
 
 @lru_cache(maxsize=8)
 def _solver(shape: Shape, kind: str, budget: float) -> ca.Function:
-    program = ocp.build(shape)
+    parts = staged(shape)
     options: dict[str, Any] = dict(_OPTIONS[kind])
     options.update({"print_level": 0, "sb": "yes", "max_wall_time": budget})
     options["fixed_variable_treatment"] = "make_parameter"
-    nlp = {"x": program.x, "p": program.p, "f": program.f, "g": program.g}
-    settings: dict[str, Any] = {**_QUIET, "ipopt": options}
-    return ca.nlpsol("solve", "ipopt", nlp, settings)
+    derivatives = {"grad_f": parts.gradient, "jac_g": parts.jacobian, "hess_lag": parts.hessian, "no_nlp_grad": True}
+    settings: dict[str, Any] = {**_QUIET, **derivatives, "ipopt": options}
+    return ca.nlpsol("solve", "ipopt", parts.program, settings)
 
 
 def solve(problem: Problem, start: Start, warm: bool = False, budget: float = 60.0) -> Plan:
@@ -83,7 +84,6 @@ def finish(problem: Problem, near: Plan) -> Plan:
 
 
 def _solved(problem: Problem, start: Start, kind: str, budget: float) -> Plan:
-    program = ocp.build(problem.shape)
     lower, upper = ocp.variable_bounds(problem)
     row_lower, row_upper = ocp.row_bounds(problem)
     arguments = {
@@ -98,8 +98,9 @@ def _solved(problem: Problem, start: Start, kind: str, budget: float) -> Plan:
     if not np.all(np.isfinite(vector)):
         raise SolveError("the solver returned numbers that are not finite")
     return from_solution(
-        problem, program.variables.unpack(vector), cost=float(result["f"]), solved=bool(stats["success"]),
-        solve_time=float(stats["t_wall_total"]), iterations=int(stats["iter_count"]), vector=vector,
+        problem, ocp.variable_blocks(problem.shape).unpack(vector), cost=float(result["f"]),
+        solved=bool(stats["success"]), solve_time=float(stats["t_wall_total"]), iterations=int(stats["iter_count"]),
+        vector=vector,
         multipliers=(np.asarray(result["lam_x"]).ravel(), np.asarray(result["lam_g"]).ravel()),
     )
 

@@ -133,9 +133,9 @@ def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencin
     Args:
         least_clearance: smallest exact clearance that counts as clear, metres. fencing: what is to be kept away from.
     """
-    if not (np.isfinite(plan.states).all() and np.isfinite(plan.rates).all()):
+    if not _finite(plan):
         return None
-    if plan.solved and _in_bounds(problem, plan):
+    if sound(problem, plan):
         return plan
     states, rates = rolled_out(problem, plan.rates)
     missed = np.nan_to_num(np.abs(states[:, -1] - problem.target))
@@ -143,6 +143,15 @@ def usable(problem: Problem, plan: Plan, least_clearance: float, fencing: Fencin
     near = missed[:, :3].max() < _NEAR
     clear = near and finished.closest(1)[0] >= least_clearance
     return finished if clear and fencing.least(plan.fleet, finished.dense(1))[0] >= 0.0 else None
+
+
+def sound(problem: Problem, plan: Plan) -> bool:
+    """Whether a plan may be driven as it is: solved, finite and within the limits in force."""
+    return plan.solved and _finite(plan) and _in_bounds(problem, plan)
+
+
+def _finite(plan: Plan) -> bool:
+    return bool(np.isfinite(plan.states).all() and np.isfinite(plan.rates).all())
 
 
 def _in_bounds(problem: Problem, plan: Plan) -> bool:

@@ -22,7 +22,7 @@ class Prospect:
 
     Attributes:
         manoeuvre: its name. refused: why it would not begin; "" when it would.
-        silence: the worst instant to fall silent; None for one robot alone, or when it would not begin.
+        silence: the worst instants to fall silent; None when it would not begin.
     """
 
     manoeuvre: str

@@ -161,7 +161,12 @@ class Faults:
         """Commands on their way to the machines."""
         lost = {fault.robot for fault in self._now("command_lost")}
         late = {fault.robot: fault.value for fault in self._now("command_delay")}
-        self._queue += [(now + late.get(name, 0.0), name, each) for name, each in commands.items() if name not in lost]
+        for name, each in commands.items():
+            if name not in lost:
+                arrives = now + late.get(name, 0.0)
+                # Nothing overtakes: what was on its way when a delay ended is outdated by what comes after it.
+                self._queue = [entry for entry in self._queue if entry[1] != name or entry[0] < arrives - 1e-9]
+                self._queue.append((arrives, name, each))
         due = [entry for entry in self._queue if entry[0] <= now + 1e-9]
         self._queue = [entry for entry in self._queue if entry[0] > now + 1e-9]
         for _, name, each in sorted(due, key=lambda entry: entry[0]):

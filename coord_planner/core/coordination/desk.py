@@ -143,13 +143,20 @@ def figures(made: Reference) -> str:
     return f"{text}; {made.task.note}" if made.task.note else text
 
 
-def _check_silence(silence: Optional[Silence], site_rules: SiteRules) -> None:
-    if silence is None or not site_rules.refuse_unsafe_silence:
+def _check_silence(silence: Silence, site_rules: SiteRules) -> None:
+    if not site_rules.refuse_unsafe_silence:
         return
-    short = site_rules.min_clearance - silence.clearance
-    if short > SHORT:
+    near, into = silence.nearing, silence.entering
+    if near is not None and site_rules.min_clearance - near.clearance > SHORT:
         raise RefusedError(
-            f"should the planner fall silent after {silence.instant:.1f} s, {' and '.join(silence.pair)} would come "
-            f"within {silence.clearance:.2f} m of each other, {short:.2f} m short, before both stand",
+            f"should the planner fall silent after {near.instant:.1f} s, {' and '.join(near.pair)} would come within "
+            f"{near.clearance:.2f} m of each other, {site_rules.min_clearance - near.clearance:.2f} m short, before "
+            "both stand",
             "shorten their command time-outs, lower the speed or widen the spacing",
+        )
+    if into is not None and into.spare < -SHORT:
+        raise RefusedError(
+            f"should the planner fall silent after {into.instant:.1f} s, {into.robot} would come {-into.spare:.2f} m "
+            f"too near to {into.area} before it stands",
+            "shorten its command time-out, lower the speed or leave more room",
         )
