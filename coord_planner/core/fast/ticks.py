@@ -5,8 +5,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Hashable
-from functools import lru_cache
+from collections.abc import Callable
 
 import attrs
 
@@ -30,16 +29,15 @@ _KNOWN = {
 }
 
 
+_UNDERSTOOD = {
+    kind for kind, names in _KNOWN.items() if {field.name for field in attrs.fields(kind)} == names
+}
+
+
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
     parts = (problem, problem.bounds, problem.watch, problem.fences, problem.compared)
-    return all(_fields(type(part)) == _KNOWN.get(type(part)) for part in parts if part is not None)
-
-
-@lru_cache
-def _fields(kind: Hashable) -> set[str]:
-    assert isinstance(kind, type)
-    return {field.name for field in attrs.fields(kind)}
+    return all(type(part) in _UNDERSTOOD for part in parts if part is not None)
 
 
 class TickSolve:
