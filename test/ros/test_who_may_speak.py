@@ -69,7 +69,7 @@ def _names(found: list[tuple[str, Any]]) -> set[str]:
 
 
 def test_where_security_is_enforced_and_cannot_be_had_nobody_speaks(site: Site) -> None:
-    """An enclave without certificates. The wheels' middleware has no security plugins at all: nor does it start then."""
+    """An enclave without certificates. The wheels have no security plugins at all: the same."""
     (site.folder / "keys" / "enclaves" / "planner").mkdir(parents=True)
     secured = {
         "ROS_SECURITY_KEYSTORE": str(site.folder / "keys"), "ROS_SECURITY_ENABLE": "true",
