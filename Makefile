@@ -82,6 +82,7 @@ clean:
 
 .venv/test.stamp: .venv/run.stamp
 	$(PY) -m pip install -qq --use-pep517 --editable '.[ros,test]'
+	$(PY) -c 'from coord_planner.trial.kernels import load_kernels; load_kernels(print)'
 	@touch $@
 
 # Recordings that ship with packages of PyPI: only read, from where they were downloaded to. Where they cannot be had,

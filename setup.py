@@ -58,6 +58,7 @@ setup(
         "lz4>=4.0",
         "mcap>=1.2",  # reads recordings that break off, with lz4 and zstandard
         "networkx>=2.8",
+        "numba>=0.59",  # compiles the tick solver; what runs without it, runs slower
         "numpy>=1.26",
         "plotly>=5.15",
         "pyyaml>=6.0",

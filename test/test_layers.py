@@ -16,7 +16,7 @@ import coord_planner
 
 PACKAGE = Path(coord_planner.__file__).parent
 ORDER = ["errors", "core", "config", "trial", "record", "ros", "commands", "cli"]
-CORE_LIBRARIES = {"attrs", "casadi", "networkx", "numpy", "scipy", "shapely"}
+CORE_LIBRARIES = {"attrs", "casadi", "networkx", "numba", "numpy", "scipy", "shapely"}
 # Clocks, randomness, files, processes and prints: what core/ must be handed instead of fetching it.
 NOT_IN_CORE = {
     "asyncio", "builtins", "datetime", "glob", "io", "logging", "multiprocessing", "os", "pathlib", "random", "secrets",

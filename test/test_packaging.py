@@ -23,9 +23,9 @@ SOURCE = Path(__file__).parent.parent
 EXECUTABLES = ("coord-planner", "planner_node", "simulator_node")
 # Keys of rosdep's python.yaml by the name under which pip knows the library; PIP_ONLY have none there.
 ROSDEP_KEYS = {
-    "attrs": "python3-attrs", "casadi": "casadi-pip", "networkx": "python3-networkx", "numpy": "python3-numpy",
-    "pyyaml": "python3-yaml", "rich": "python3-rich", "rosbags": "python3-rosbags-pip", "scipy": "python3-scipy",
-    "shapely": "python3-shapely", "typer": "python3-typer",
+    "attrs": "python3-attrs", "casadi": "casadi-pip", "networkx": "python3-networkx", "numba": "python3-numba",
+    "numpy": "python3-numpy", "pyyaml": "python3-yaml", "rich": "python3-rich", "rosbags": "python3-rosbags-pip",
+    "scipy": "python3-scipy", "shapely": "python3-shapely", "typer": "python3-typer",
 }
 IMPORTED_AS = {"pyyaml": "yaml"}
 PIP_ONLY = {"lz4", "mcap", "plotly", "zstandard"}

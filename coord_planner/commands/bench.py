@@ -15,6 +15,7 @@ from ..errors import SettingsError
 from ..record.bench_figure import write_figure
 from ..trial import bench as measuring
 from ..trial.bench_set import SPACINGS
+from ..trial.kernels import load_kernels
 from .progress import progress_shown
 from .speaking import errors_reported, say, table, write, write_json, write_table
 from .targets import prepare_file
@@ -42,6 +43,7 @@ def bench(
         sizes, cases = _sizes(robots), _cases(case)
         if plot is not None:
             prepare_file(plot, "--plot")
+    load_kernels(say)
     rows: list[measuring.Row] = []
     with progress_shown("bench") as progress:
         for size in sizes:

@@ -29,6 +29,7 @@ from ..errors import RefusedError
 from ..record.metrics import summary
 from ..trial.faults import KINDS, Fault
 from ..trial.hindsight import unavoidable
+from ..trial.kernels import load_kernels
 from ..trial.rehearsal import rehearse
 from ..trial.run import Run
 
@@ -299,6 +300,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     given = parser.parse_args(arguments)
     files = given.files or [str(example(name)) for name in ("solar_park.yaml", "snow_yard.yaml", "orchard.yaml")]
     console = Console(stderr=True)
+    load_kernels(console.print)
     results: list[Result] = []
     with ProcessPoolExecutor(given.workers) as pool, Progress(console=console, disable=not console.is_terminal) as bar:
         task = bar.add_task("rehearsals", total=given.count)

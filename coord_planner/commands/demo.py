@@ -13,6 +13,7 @@ import typer
 
 from .. import config
 from ..config.places import example
+from ..trial.kernels import load_kernels
 from .speaking import BAD_INPUT, errors_reported, say
 from .targets import prepare_folder
 
@@ -43,5 +44,6 @@ def demo(
             say(_NO_ROS.format(reason=f" in full ({error})"))
             raise typer.Exit(BAD_INPUT) from None
         prepare_folder(out, "--out")
+        load_kernels(say)  # before nodes wait for each other
         status = run_demo(file, out)
     raise typer.Exit(status)

@@ -14,6 +14,7 @@ from .. import config
 from ..config.failures import FailureStore
 from ..errors import RefusedError, SettingsError
 from ..trial.faults import Fault
+from ..trial.kernels import load_kernels
 from ..trial.run import Run
 from ..trial.sighting import Sighting, check_arming, sighting
 from .loading import configured
@@ -81,6 +82,7 @@ def simulate(
             prepare_file(picture, "--picture")
         if bag is not None:
             prepare_bag(bag, "--bag")
+        load_kernels(say)
         before = _kept(configuration)
         try:
             run = _run(configuration, manoeuvre, configuration.simulation.seed if seed is None else seed, struck, seen)

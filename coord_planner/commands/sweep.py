@@ -16,6 +16,7 @@ import typer
 
 from ..errors import SettingsError
 from ..record.sweep_figures import figures
+from ..trial.kernels import load_kernels
 from ..trial.sweep import cluster, local
 from ..trial.sweep.file import load_sweep
 from ..trial.sweep.journal import Journal
@@ -86,6 +87,8 @@ def _carry_on(journal: Journal, todo: Sequence[Point], table: Path, workers: int
     missing = [point for point in todo if point.key not in journal.records]
     if journal.records and missing:
         say(f"{len(journal.records)} of {len(todo)} rehearsals were done before; going on with the rest.")
+    if missing:
+        load_kernels(say)  # before many processes each do
     written = time.monotonic()
     try:
         with count_shown("rehearsals", len(todo), len(todo) - len(missing)) as count:

@@ -9,6 +9,7 @@ import attrs
 import numpy as np
 
 from . import outline, rectangles, se2
+from .fast.engine import kernels
 from .fleet import Fleet
 from .problem import POSE, STATES, Problem
 
@@ -86,10 +87,21 @@ def closest_along(
 
     Exact distances are worked out only where circles round the robots' origins come nearer than what is found already.
     """
+    compiled = kernels()
+    if compiled is None:
+        return _closest_along(fleet.corners(), poses, growth)
+    grown = np.zeros(len(poses)) if growth is None else np.ascontiguousarray(growth)
+    gap, first, second = compiled.nearest(fleet.corners(), np.ascontiguousarray(poses), grown)
+    return max(gap, 0.0), (first, second)
+
+
+def _closest_along(
+    corners: np.ndarray, poses: np.ndarray, growth: np.ndarray | None
+) -> tuple[float, tuple[int, int]]:
+    """The same without what is compiled."""
     pairs = outline.all_pairs(len(poses))
     if not len(pairs):
         return float("inf"), (-1, -1)
-    corners = fleet.corners()
     reach = np.linalg.norm(corners, axis=2).max(axis=1) + (0.0 if growth is None else growth)
     apart = np.linalg.norm(poses[pairs[:, 0], :, :2] - poses[pairs[:, 1], :, :2], axis=2)
     at_least = apart - reach[pairs].sum(axis=1)[:, None]

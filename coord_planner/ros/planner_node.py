@@ -20,6 +20,7 @@ from rclpy.clock_type import ClockType
 from rclpy.exceptions import InvalidHandle
 from rclpy.executors import SingleThreadedExecutor
 from rclpy.lifecycle import LifecycleNode, LifecycleState, TransitionCallbackReturn
+from rclpy.logging import get_logger
 
 from .. import config
 from ..config.failures import kept
@@ -27,6 +28,7 @@ from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
 from ..core.graph import NeighbourGraph
 from ..core.messages import Answer, Decision, Snapshot, State
+from ..trial.kernels import load_kernels
 from . import heartbeats, messages, parameters
 from .changes import Changes
 from .ending import Ending
@@ -410,6 +412,7 @@ class PlannerNode(LifecycleNode):
 
 
 def _body(arguments: Sequence[str], signals: Signals) -> int:
+    load_kernels(get_logger("planner").info)  # before there is a node that others wait for
     node = PlannerNode(arguments)
     executor = SingleThreadedExecutor()
     executor.add_node(node)

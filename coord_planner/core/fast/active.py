@@ -50,13 +50,17 @@ class Trial:
 
 def begin(numbers: Numbers, point: Point, forces: Forces) -> Trial:
     """The rows that were met when the multipliers were found."""
+    return Trial(point, forces, met_rows(numbers, forces), 0)
+
+
+def met_rows(numbers: Numbers, forces: Forces) -> Met:
+    """Rows that multipliers say are met."""
     pushed = np.sign(forces.limits) * (np.abs(forces.limits) > _FAINT)
-    met = Met(
+    return Met(
         np.where(numbers.upper - numbers.lower < _NO_ROOM, 1.0, pushed),
         np.abs(forces.ends) < numbers.end_price,
         (forces.clearances > _FAINT) & (forces.clearances < numbers.short_price),
     )
-    return Trial(point, forces, met, 0)
 
 
 def left_over(numbers: Numbers, trial: Trial) -> float:

@@ -40,7 +40,7 @@ BARRIER = 0.2  # product of margin and push with which a solve begins
 _STIFFEST, _SOFTEST = 1e-9, 1e12  # compliances beyond these are cut off
 _FIXED = 1e-10  # compliance of limits without room
 _SMALLEST = 1e-10  # barrier below which rounding takes over
-_GAINED_LITTLE = 0.7  # part of what was open that a good step does not leave: if it does, second derivatives matter
+GAINED_LITTLE = 0.7  # part of what was open that a good step does not leave: if it does, second derivatives matter
 _SHORT_OF = 0.995  # part of the way to the nearest margin or push of 0 that a step goes
 
 
@@ -106,7 +106,7 @@ class Interior:
         left = max(float(np.sum(products * on)) / self._layout.count, 0.0)
         barrier = max((left / before) ** 3 * before, _SMALLEST)
         after = self._moved(x, system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes), barrier)
-        self._bending = self._bending or self.open(after) > _GAINED_LITTLE * opened_by
+        self._bending = self._bending or self.open(after) > GAINED_LITTLE * opened_by
         return after
 
     def _moved(self, x: Iterate, move: _Move, barrier: float) -> Iterate:

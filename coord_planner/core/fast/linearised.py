@@ -172,13 +172,7 @@ class Linearised:
             known = near if self._clear is None else np.union1d(near, self._clear.pairs)
             self._clear = clearance.rows_of(self._numbers, self.point.r, self.point.sight, known)
         rows, size = self._clear, diagonal.shape[1]
-        stiff = stiffness[rows.pairs]
-        by_commands = rows.by_commands
-        most = int((stiff > _SOFT).sum(axis=1).max())
-        if 2 * most < stiff.shape[1]:
-            stiffest = np.argpartition(stiff, -most, axis=1)[:, -most:]
-            stiff = np.take_along_axis(stiff, stiffest, axis=1)
-            by_commands = np.take_along_axis(by_commands, stiffest[:, :, None], axis=1)
+        stiff, by_commands = stiffness[rows.pairs], rows.by_commands
         blocks = np.matmul(by_commands.transpose(0, 2, 1), by_commands * stiff[:, :, None])
         for pair, k, j, around in zip(rows.pairs.tolist(), *rows.robots.tolist(), blocks):
             diagonal[k] += around[:size, :size]

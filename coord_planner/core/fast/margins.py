@@ -16,7 +16,7 @@ import attrs
 import numpy as np
 
 from .numbers import Numbers
-from .point import Forces, Point
+from .point import Forces, Rows
 
 UPPER, LOWER, OVER, UNDER, ROOM, SHORT = range(6)
 
@@ -72,7 +72,7 @@ def layout(numbers: Numbers) -> Layout:
     )
 
 
-def residuals(numbers: Numbers, point: Point) -> np.ndarray:
+def residuals(numbers: Numbers, point: Rows) -> np.ndarray:
     """Margins as the rows stand, some below 0, shape (L,)."""
     return np.concatenate([part.ravel() for part in (
         numbers.upper - point.limits, point.limits - numbers.lower, point.missed, -point.missed,
@@ -81,7 +81,7 @@ def residuals(numbers: Numbers, point: Point) -> np.ndarray:
 
 
 def opened(
-    numbers: Numbers, known: Layout, point: Point, forces: Forces, barrier: float, least: float
+    numbers: Numbers, known: Layout, point: Rows, forces: Forces, barrier: float, least: float
 ) -> tuple[np.ndarray, np.ndarray]:
     """Margins and pushes to begin with, each of shape (L,), from the last multipliers; all above 0.
 
@@ -106,7 +106,7 @@ def opened(
     return margins, pushes
 
 
-def fit(known: Layout, point: Point, margins: np.ndarray, barrier: float) -> None:
+def fit(known: Layout, point: Rows, margins: np.ndarray, barrier: float) -> None:
     """Fit the margins of ends and clearances, in place, to what the rows are where a step along curved paths has led.
 
     The difference of a row's two margins is known: the one that is too large shrinks, by half at most, the other grows.

@@ -5,6 +5,8 @@
 
 from __future__ import annotations
 
+from typing import Protocol
+
 import attrs
 import numpy as np
 
@@ -20,6 +22,19 @@ class Forces:
     limits: np.ndarray
     ends: np.ndarray
     clearances: np.ndarray
+
+
+class Rows(Protocol):
+    """Values of all rows at a point: limits (6, N, M), missed ends (N, 7), clearances (P, M)."""
+
+    @property
+    def limits(self) -> np.ndarray: ...
+
+    @property
+    def missed(self) -> np.ndarray: ...
+
+    @property
+    def clearances(self) -> np.ndarray: ...
 
 
 @attrs.frozen(eq=False)

@@ -6,7 +6,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from functools import lru_cache
+from functools import lru_cache, partial
 
 import attrs
 import numpy as np
@@ -16,13 +16,13 @@ from ..fleet import Fleet
 from ..plan import Plan
 from ..problem import POSE, Problem
 from ..solver import Start
-from . import active, vectors
-from .interior import BARRIER, Interior, Iterate
-from .linearised import Linearised
+from . import vectors
+from .engine import Engine, Held, Iterate, Pointed, Trial, engine, kernels
+from .interior import BARRIER
+from .linearised import NEAR
 from .margins import LEAST
 from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
-from .objective import constant_blocks
-from .point import Forces, Point, cost, evaluate, excess
+from .point import Forces, Point, cost, evaluate
 from .structure import Structure, structure
 
 ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step is worth its time
@@ -48,8 +48,8 @@ _NEARBY = 0.02  # change of a heading (rad), or of a speed (part of the full one
 class _Found:
     """The best so far: cost, by how much limits are passed (at least what is tolerated), predicted gap."""
 
-    point: Point
-    forces: Forces
+    point: Pointed
+    forces: Callable[[], Forces]
     cost: float
     passed: float
     gap: float
@@ -62,21 +62,22 @@ class Prepared:
 
     problem: Problem
     numbers: Numbers
-    structure: Structure
-    constant: np.ndarray
+    engine: Engine
     curvature: np.ndarray
     speed: np.ndarray
     forces: Forces | None
-    held: active.Held | None
+    held: Held | None
 
 
 class TickSolver:
     """Solves one tick's problem after another. ``solve`` may be called in several threads at once.
 
-    Nothing is built or compiled: edges, pairs, weights, limits and even the fleet may change from tick to tick.
+    Edges, pairs, weights, limits and even the fleet may change from tick to tick: nothing is built for them. Making the
+    first solver of a process loads the kernels, or compiles them, once for a machine: that takes half a minute.
     """
 
     def __init__(self) -> None:
+        kernels()
         self._fleet: tuple[Fleet, FleetNumbers] | None = None
         self._ready: Prepared | None = None
 
@@ -115,7 +116,8 @@ class TickSolver:
         ready, self._ready = self._ready, None
         if initial is not ready.problem.initial:
             problem = attrs.evolve(ready.problem, initial=initial)
-            ready = attrs.evolve(ready, problem=problem, numbers=started(ready.numbers, initial))
+            begun = started(ready.numbers, initial)
+            ready = attrs.evolve(ready, problem=problem, numbers=begun, engine=ready.engine.started(begun))
         return _plan(ready, _search(ready, began + budget, clock), clock() - began)
 
     def _prepared(self, problem: Problem, start: Start, linearise: bool) -> Prepared:
@@ -127,12 +129,11 @@ class TickSolver:
             for i, commands in enumerate(vectors.commands(size, start.vector))
         )
         forces = None if start.multipliers is None else vectors.forces(size, *start.multipliers)
-        constant = constant_blocks(known)
+        steps = engine(known, order)
         held = None
         if linearise and forces is not None and _worth_trying(known, forces):
-            trial = active.begin(known, evaluate(known, curvature, speed), forces)
-            held = active.Held(Linearised(known, order, constant, trial.point), trial)
-        return Prepared(problem, known, order, constant, curvature, speed, forces, held)
+            held = steps.hold(None, steps.trial(steps.point(curvature, speed), forces), NEAR)
+        return Prepared(problem, known, steps, curvature, speed, forces, held)
 
     def _fleet_numbers(self, fleet: Fleet) -> FleetNumbers:
         last = self._fleet
@@ -180,7 +181,7 @@ class _Watchman:
 
 def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Found:
     watchman = _Watchman(deadline, clock)
-    point = evaluate(ready.numbers, ready.curvature, ready.speed)
+    point = ready.engine.point(ready.curvature, ready.speed)
     forces, barrier, least = ready.forces, BARRIER, LEAST
     if forces is not None and (ready.held is not None or _worth_trying(ready.numbers, forces)):
         trial, found = _active_steps(ready, point, forces, watchman)
@@ -189,69 +190,61 @@ def _search(ready: Prepared, deadline: float, clock: Callable[[], float]) -> _Fo
         if trial is not None:
             point, forces, barrier, least = trial.point, trial.forces, BARRIER / 10, LEAST / 5
     if forces is None:
-        n, m = point.r.turn.shape
+        n, m = ready.curvature.shape
         forces = Forces(np.zeros((6, n, m)), np.zeros((n, 7)), np.zeros((len(ready.numbers.pairs), m)))
-    interior = Interior(ready.numbers, ready.structure, ready.constant)
-    return _interior_steps(ready, interior, interior.begin(point, forces, barrier, least), watchman)
+    return _interior_steps(ready, ready.engine.open(point, forces, barrier, least), watchman)
 
 
 def _active_steps(
-    ready: Prepared, point: Point, forces: Forces, watchman: _Watchman
-) -> tuple[active.Trial | None, _Found | None]:
+    ready: Prepared, point: Pointed, forces: Forces, watchman: _Watchman
+) -> tuple[Trial | None, _Found | None]:
     """Steps with the sets of the last tick: how far they came, None when they wandered; and what they found."""
-    known = ready.numbers
-    trial = active.begin(known, point, forces)
+    steps, robots = ready.engine, len(ready.curvature)
+    trial = steps.trial(point, forces)
     held = ready.held
-    before = [cost(known, point), np.inf]  # of the last step and of the one before it, less what curved paths left over
+    before = [point.cost, np.inf]  # of the last step and of the one before it, less what curved paths left over
     slow, left_before = False, np.inf
     for step in range(1, _ACTIVE_STEPS + 1):
-        held = _held(ready, held, trial, slow)
-        trial = held.step(known, trial)
+        held = steps.hold(None if slow else held, trial, _NEARBY)
+        trial = steps.active_step(held, trial)
         watchman.stepped()
-        reached, left_over = cost(known, trial.point), active.left_over(known, trial)
-        if trial.changed > _WANDERING * len(point.missed) or not np.isfinite(reached):
+        reached, left_over, passed = trial.point.cost, trial.left_over, trial.point.excess
+        if trial.changed > _WANDERING * robots or not np.isfinite(reached):
             return None, None
         last, saved = abs(before[0] - reached + left_over), abs(before[1] - before[0])
         before = [reached - left_over, before[0]]
-        passed = excess(known, trial.point)
         if trial.changed == 0 and passed < _KEPT_WITHIN:
             gap = (left_over + last * min(last / max(saved, 1e-300), 0.5)) / max(reached, _LEAST_COST)
             if gap <= watchman.tolerated:
-                return trial, _Found(trial.point, trial.forces, reached, _KEPT_WITHIN, gap, watchman.steps)
+                return trial, _Found(
+                    trial.point, partial(getattr, trial, "forces"), reached, _KEPT_WITHIN, gap, watchman.steps
+                )
         slow, left_before = left_over > _SLOW * left_before, left_over
-        settling = trial.changed <= _SETTLING * len(point.missed) and passed < _NEARLY_KEPT
+        settling = trial.changed <= _SETTLING * robots and passed < _NEARLY_KEPT
         if watchman.late or (step >= _ACTIVE_STEPS // 2 and not settling):
             break
     return (trial if settling else None), None
 
 
-def _held(ready: Prepared, held: active.Held | None, trial: active.Trial, slow: bool) -> active.Held:
-    """The last matrix as long as the same rows are met nearby; else another, with the last derivatives if they do."""
-    near = held is not None and not slow and held.linearised.serves(trial.point, _NEARBY)
-    if held is not None and near:
-        return active.Held(held.linearised, trial) if trial.changed else held
-    return active.Held(Linearised(ready.numbers, ready.structure, ready.constant, trial.point), trial)
-
-
-def _interior_steps(ready: Prepared, interior: Interior, x: Iterate, watchman: _Watchman) -> _Found:
+def _interior_steps(ready: Prepared, x: Iterate, watchman: _Watchman) -> _Found:
     best: _Found | None = None
     before = np.inf
     for _ in range(_STEPS):
         try:
-            x = interior.step(x)
+            x = ready.engine.interior_step(x)
         except SolveError:
             if best is None:
                 raise
             break
         watchman.stepped()
-        reached = cost(ready.numbers, x.point)
-        gap = max(interior.open(x) / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, _LEAST_COST)
+        reached = x.point.cost
+        gap = max(x.open / _OVERSTATED, abs(before - reached) * _LEFT_OF_LAST) / max(reached, _LEAST_COST)
         before = reached
         if not np.isfinite(reached):
             break
-        passed = max(excess(ready.numbers, x.point), _KEPT_WITHIN)
+        passed = max(x.point.excess, _KEPT_WITHIN)
         if best is None or (passed, reached) < (best.passed, best.cost):
-            best = _Found(x.point, interior.forces(x), reached, passed, gap, watchman.steps)
+            best = _Found(x.point, partial(ready.engine.forces, x), reached, passed, gap, watchman.steps)
         elif passed <= _KEPT_WITHIN:
             best = attrs.evolve(best, gap=min(best.gap, gap))  # it costs no more than what has come this near
         if (best.gap <= watchman.tolerated and best.passed <= _KEPT_WITHIN) or watchman.late:
@@ -275,16 +268,13 @@ def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
         missed=np.abs(point.missed) * priced,
         solved=found.gap <= SOLVED and found.passed <= _KEPT_WITHIN, solve_time=took,
         iterations=found.steps, vector=vectors.primal(known, size, states, point, short, priced),
-        multipliers=vectors.multipliers(known, point, found.forces, size),
+        multipliers=vectors.multipliers(known, point, found.forces(), size),
     )
 
 
-def _boxed(known: Numbers, point: Point) -> Point:
+def _boxed(known: Numbers, point: Pointed) -> Point:
     """The point with its commands cut to their bounds: a standstill is a standstill, not a billionth of a m/s."""
-    r = point.r
     curvature, speed = (
-        np.clip(commands, known.lower[i], known.upper[i]) for i, commands in enumerate((r.curvature, r.speed))
+        np.clip(commands, known.lower[i], known.upper[i]) for i, commands in enumerate(point.commands)
     )
-    if np.array_equal(curvature, r.curvature) and np.array_equal(speed, r.speed):
-        return point
     return evaluate(known, curvature, speed)
