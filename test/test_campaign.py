@@ -112,6 +112,13 @@ def test_without_faults_nothing_is_warned_of(seed: int, tmp_path: Path) -> None:
         assert run.completed and [caution for *_, caution in run.cautions if caution.code != "plan unfinished"] == []
 
 
+def test_poses_two_and_a_half_times_as_noisy_as_the_file_says_stop_nobody() -> None:
+    """5 cm; taken for slow machines they once had the fleet stopped for a free way that was predicted short."""
+    flat = {**config.load(SITES[0]).flat, "simulation.pose_noise_xy": 0.05}
+    run = rehearse(config.from_parameters(flat), "corner_left", seed=1)
+    assert run.completed and not [text for _, text in run.events if text.startswith("stopping")]
+
+
 def test_lost_commands_count_from_when_the_machine_misses_them() -> None:
     configuration = config.load(SITES[1])
     timeout = configuration.connections["plough_1"].command_timeout
