@@ -85,6 +85,13 @@ def test_laid_drives_keep_clear(shape, seed):
     assert guessed[:, -1] == pytest.approx(made.ends, abs=1e-6)
 
 
+def test_eight_find_their_ways_into_a_file():
+    """Laid one after the other by the lengths of their ways alone, in no order did they all find one."""
+    made = task(Form(shape="file", spacing=2.8, heading_deg=0.0), scattered(308, 8))
+    polygons = outline.outlines(carts(8).corners(), made.guess(np.linspace(0.0, made.arrival, 157))[0])
+    assert outline.closest(polygons, outline.all_pairs(8))[0] > 0.85
+
+
 def test_who_would_meet_waits_and_the_answer_says_so():
     made = task(Form(shape="file", spacing=2.8), abreast(3, 2.2))
     assert "waits until the others have driven" in made.note

@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 
 from coord_planner.core import outline, se2
-from coord_planner.core.plan import closest_along
+from coord_planner.core.fast.engine import kernels
+from coord_planner.core.plan import _closest_along, closest_along
 from coord_planner.core.problem import POSE
 
 
@@ -57,3 +58,20 @@ def test_skipping_pairs_that_stay_far_apart_changes_nothing():
     fleet, poses = fleets.carts(9), rng.uniform(-15.0, 15.0, (9, 6, 3))
     gap, pair = outline.closest(outline.outlines(fleet.corners(), poses), outline.all_pairs(9))
     assert closest_along(fleet, poses) == (pytest.approx(gap, abs=1e-12), pair)
+
+
+def test_what_is_compiled_finds_the_same_nearest_two():
+    compiled = kernels()
+    if compiled is None:
+        pytest.skip("numba is not installed")
+    rng = np.random.default_rng(5)
+    fleet, met = fleets.carts(5), 0
+    for _ in range(200):
+        poses, growth = rng.uniform([-8.0, -8.0, -7.0], [8.0, 8.0, 7.0], (5, 4, 3)), rng.uniform(0.0, 0.5, 5)
+        gap, pair = _closest_along(fleet.corners(), poses, growth)
+        found, *two = compiled.nearest(fleet.corners(), poses, growth)
+        assert max(found, 0.0) == pytest.approx(gap, abs=1e-12)
+        met += gap == 0.0
+        assert gap == 0.0 or tuple(two) == pair
+    assert 20 < met < 180
+    assert closest_along(fleets.carts(1), np.zeros((1, 2, 3))) == (np.inf, (-1, -1))

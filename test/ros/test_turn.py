@@ -75,6 +75,29 @@ def test_coupling_changed_in_mid_turn_takes_force_and_says_when(hand: Hand, plan
     assert hand.status["completed"] == "true"
 
 
+def test_what_comes_next_is_put_in_its_place_and_changed_before_it_begins(hand: Hand, planner: NodeProcess) -> None:
+    hand.until_state("idle")
+    hand.request(id="early", manoeuvre="nudge", when="next")
+    assert hand.answer_to("early")["request_ok"] == "false", "nothing is under way"
+    hand.request(id="first", manoeuvre="corner_left")
+    assert hand.answer_to("first")["request_ok"] == "true"
+    hand.until_state("moving")
+    for request_id, manoeuvre, ok in (("second", "corner_right", "true"), ("tight", "tight", "false"),
+                                      ("instead", "nudge", "true")):
+        overrides = {"radius": 0.4} if manoeuvre == "tight" else {}
+        hand.request(id=request_id, manoeuvre="corner_right" if overrides else manoeuvre, overrides=overrides,
+                     when="next")
+        answer = hand.answer_to(request_id)
+        assert answer["request_ok"] == ok, answer["request_text"]
+    heard = len(hand.statuses)
+    hand.until(lambda: hand.status["manoeuvre"].endswith("nudge"), what="the next one")
+    hand.until_state("ended", "held")
+    assert hand.status["state"] == "ended" and hand.status["completed"] == "true"
+    driven = [status["manoeuvre"] for status in hand.statuses[heard:] if status["state"] == "moving"]
+    assert driven[0].endswith("corner_left") and driven[-1].endswith("nudge")
+    assert not any(name.endswith("corner_right") for name in driven)
+
+
 def test_refusals_come_with_a_reason_and_move_nothing(hand: Hand, planner: NodeProcess) -> None:
     hand.until_state("idle")
     hand.spin(0.3)

@@ -113,8 +113,7 @@ def _clear_drives(name: str, scene: Scene, ways: list[ArcPath]) -> list[_Drive]:
     at_once = [_Drive(way, 0.0) for way in ways]
     if _nearest(scene, dict(enumerate(at_once)))[0] >= 0.0:
         return at_once
-    longest_first = sorted(range(len(ways)), key=lambda k: -ways[k].length)
-    for order in (longest_first, longest_first[::-1]):
+    for order in _orders(ways):
         laid = _in_order(scene, ways, order)
         if laid is not None:
             return laid
@@ -124,6 +123,14 @@ def _clear_drives(name: str, scene: Scene, ways: list[ArcPath]) -> list[_Drive]:
         f"{name}: on their ways {names[first]} and {names[second]} would come nearer than allowed by {-short:.2f} m, "
         "and neither waiting nor bending out keeps them apart", "widen the spacing, or choose another place or heading",
     )
+
+
+def _orders(ways: list[ArcPath]) -> list[list[int]]:
+    """In which the ways are laid, to be tried in turn: the longest first or last, the furthest ahead first or last."""
+    ahead = [np.cos(way.end[2]) * way.end[0] + np.sin(way.end[2]) * way.end[1] for way in ways]
+    robots = range(len(ways))
+    keys = ([-way.length for way in ways], [way.length for way in ways], [-each for each in ahead], ahead)
+    return [sorted(robots, key=lambda k: float(key[k])) for key in keys]
 
 
 def _in_order(scene: Scene, ways: list[ArcPath], order: list[int]) -> Optional[list[_Drive]]:

@@ -15,15 +15,32 @@ import numba
 from numba.core.caching import FunctionCache
 from numba.core.registry import CPUDispatcher
 
-from . import active, blocks, chain, clearance, factor, fields, interior, limits, matrix, objective, point, rows, sweeps
+from . import (
+    active,
+    blocks,
+    chain,
+    clearance,
+    factor,
+    fields,
+    footprints,
+    interior,
+    limits,
+    matrix,
+    objective,
+    point,
+    rows,
+    sweeps,
+)
 from .compiled import OPTIONS
 
 _MODULES = (
-    active, blocks, chain, clearance, factor, fields, interior, limits, matrix, objective, point, rows, sweeps,
+    active, blocks, chain, clearance, factor, fields, footprints, interior, limits, matrix, objective, point, rows,
+    sweeps,
 )
 _F, _I = numba.float64, numba.int64
 _F1, _F2, _F3, _F4 = (numba.types.Array(_F, d, "C") for d in (1, 2, 3, 4))
 _I1, _I2 = (numba.types.Array(_I, d, "C") for d in (1, 2))
+_KEPT = numba.types.Array(_F, 3, "C", readonly=True)
 _B, _B1 = numba.boolean, numba.types.Array(numba.boolean, 1, "C")
 
 _RESPONSE = (_I2, _F4, _F3)  # which, mean, last
@@ -54,6 +71,7 @@ class Entries:
     settle_interior: Callable[..., Any]
     want: Callable[..., Any]
     settle_active: Callable[..., Any]
+    nearest: Callable[..., Any]
 
 
 _KNOWN: dict[str, tuple[Callable[..., Any], tuple[Any, ...]]] = {
@@ -75,6 +93,7 @@ _KNOWN: dict[str, tuple[Callable[..., Any], tuple[Any, ...]]] = {
     "settle_interior": (interior.settle, (_F1, _F1, _F1, _F1, _F1, _F1, _F)),
     "want": (active.want, (_F1, _F1, *_FLAT, _F1, *_FLAT_SETS)),
     "settle_active": (active.settle, (_F1, _F1, _F1, _F1, *_FLAT, *_FLAT, *_FLAT, *_FLAT, *_FLAT_SETS)),
+    "nearest": (footprints.nearest, (_KEPT, _F3, _F1)),
 }
 
 
