@@ -92,7 +92,7 @@ _KNOWN: dict[str, tuple[Callable[..., Any], tuple[Any, ...]]] = {
     "stiffen": (interior.stiffen, (_B1, _F1, _I, _F1, _F1, _F1)),
     "aim": (interior.aim, (_B1, _F1, _F1, _F1, _F1, _F1, *_FLAT, _F1, _F1)),
     "follow": (interior.follow, (_B1, _F1, _F1, _F1, _F1, _F1, _F1, _F1, _I2, _I, _F1, *_FLAT, *_FLAT)),
-    "advance": (interior.advance, (_I2, _F3, _F1, _F1, _F1, _F2, _F1, _F1, _F1)),
+    "advance": (interior.advance, (_I2, _F3, _F1, _F1, _F1, _F2, _F1, _F1, _F1, _F)),
     "settle_interior": (interior.settle, (_F1, _F1, _F1, _F1, _F1, _F1, _F)),
     "want": (active.want, (_F1, _F1, *_FLAT, _F1, *_FLAT_SETS)),
     "settle_active": (active.settle, (_F1, _F1, _F1, _F1, *_FLAT, *_FLAT, *_FLAT, *_FLAT, *_FLAT_SETS)),
