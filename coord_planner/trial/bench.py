@@ -21,12 +21,14 @@ from ..core import ocp, solver
 from ..core.fast.solver import TickSolver
 from ..core.plan import Plan
 from ..core.problem import STATES, Problem, Shape
+from ..core.settings import Horizon
 from .bench_set import FORMATIONS, GRAPHS, INTERVALS, Course, Posed, driven
 
 TICKS = 40  # ticks of a row that are also solved by the general solver
 ROBOTS = (1, 2, 4, 6, 12, 24, 48, 64)
 _PLAIN = {"print_level": 0, "sb": "yes", "tol": 1e-6}
 _QUIET: dict[str, Any] = {"print_time": False, "calc_lam_p": False, "error_on_fail": False}
+_BUDGET = Horizon().budget  # seconds
 _REST = 0.1  # of the time that a tick and all beside it takes
 _MEMORY_TICKS = 10  # of the process whose memory is measured
 
@@ -145,11 +147,11 @@ def _drive(course: Course, compared: float, found: _Measured) -> Iterator[float]
 
 
 def _tick(fast: TickSolver, posed: Posed) -> tuple[Plan, float, float]:
-    """The plan, and seconds: prepare and feed back; feed back alone."""
+    """The plan within the shipped budget, and seconds: prepare and feed back; feed back alone."""
     began = time.perf_counter()
     fast.prepare(posed.predicted, posed.start)
     ready = time.perf_counter()
-    plan = fast.feedback(posed.problem.initial)
+    plan = fast.feedback(posed.problem.initial, _BUDGET - (ready - began), time.perf_counter)
     ended = time.perf_counter()
     return plan, ended - began, ended - ready
 
