@@ -16,6 +16,7 @@ from coord_planner import config
 from coord_planner.commands import campaign
 from coord_planner.trial.faults import KINDS, Fault, check_targets
 from coord_planner.trial.hindsight import unavoidable
+from coord_planner.trial.rehearsal import rehearse
 
 YARD = """\
 /**:
@@ -99,6 +100,23 @@ def test_four_more_of_each_kind_on_a_small_yard_break_nothing(kind: str, tmp_pat
     for case in drawn:
         result = campaign.play(case)
         assert result.contacts == 0 and result.kept, result
+
+
+@pytest.mark.parametrize("seed", range(10))
+def test_without_faults_nothing_is_warned_of(seed: int, tmp_path: Path) -> None:
+    """``test/measure_calm.py`` looks at every manoeuvre of every site."""
+    file = tmp_path / "yard.yaml"
+    file.write_text(YARD, encoding="utf-8")
+    for manoeuvre in ("corner", "aside"):
+        run = rehearse(config.load(file), manoeuvre, seed=seed)
+        assert run.completed and [caution for *_, caution in run.cautions if caution.code != "plan unfinished"] == []
+
+
+def test_poses_two_and_a_half_times_as_noisy_as_the_file_says_stop_nobody() -> None:
+    """5 cm; taken for slow machines they once had the fleet stopped for a free way that was predicted short."""
+    flat = {**config.load(SITES[0]).flat, "simulation.pose_noise_xy": 0.05}
+    run = rehearse(config.from_parameters(flat), "corner_left", seed=1)
+    assert run.completed and not [text for _, text in run.events if text.startswith("stopping")]
 
 
 def test_lost_commands_count_from_when_the_machine_misses_them() -> None:

@@ -13,7 +13,7 @@ import numpy as np
 import pytest
 from random_problems import problem
 
-from coord_planner.core import solver
+from coord_planner.core import motion, solver
 from coord_planner.core.fast import engine, vectors
 from coord_planner.core.fast.compiled import CompiledEngine
 from coord_planner.core.fast.interior import BARRIER
@@ -24,6 +24,7 @@ from coord_planner.core.fast.point import Forces
 from coord_planner.core.fast.solver import TickSolver
 from coord_planner.core.fast.structure import structure
 from coord_planner.core.problem import Problem
+from coord_planner.core.schedule import Schedule
 
 KINDS = {"quiet": (False, False), "contact": (True, False), "contact and fences": (True, True)}
 COMPILED = pytest.mark.skipif(engine.kernels() is None, reason="numba is not installed")
@@ -154,3 +155,23 @@ def test_where_numba_is_missing_it_is_told():
     program = "import sys; sys.modules['numba'] = None; from coord_planner.core.fast.engine import told; print(told())"
     found = subprocess.run([sys.executable, "-c", program], capture_output=True, text=True, timeout=60, check=True)
     assert "numba is not installed" in found.stdout
+
+
+@COMPILED
+def test_commands_over_time_and_machines_that_follow_them_are_the_plain_ones():
+    rng = np.random.default_rng(8)
+    for count, pieces in ((1, 1), (3, 2), (4, 9)):
+        times = np.sort(rng.uniform(0.0, 5.0, pieces))
+        times[-1] = times[-2] if pieces > 2 else times[-1]  # two moments are one
+        held = Schedule(times, rng.normal(size=(count, pieces, 3))[:, :, 1:])  # part of a larger array
+        moments = rng.uniform(-1.0, 6.0, (count, 7))
+        moments[0, :2] = times[0], times[-1]
+        assert held.at(moments) == pytest.approx(held._at(moments), abs=1e-12)
+        assert held.at(moments[:, 0]) == pytest.approx(held._at(moments[:, 0]), abs=1e-12)
+        moments[-1, -1] = np.nan
+        assert pieces == 1 or np.isnan(held.at(moments)[-1, -1]).all()  # the last gate finds it
+    poses, reached, commands = (rng.normal(size=size) for size in ((5, 3), (5, 2), (5, 6, 2)))
+    lag, h, factor = rng.uniform(0.0, 0.5, (5, 2)), rng.uniform(0.0, 0.2, 5), rng.uniform(0.2, 1.2, 5)
+    lag[0], reached[1, 1], commands[1, :, 1] = 0.0, 0.0, 0.0  # no lag; straight on
+    found, expected = (each(poses, reached, commands, h, lag, factor) for each in (motion.drive, motion._drive))
+    assert found[0] == pytest.approx(expected[0], abs=1e-12) and found[1] == pytest.approx(expected[1], abs=1e-12)

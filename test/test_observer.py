@@ -180,6 +180,49 @@ def test_a_pose_that_repeats_while_the_robot_is_to_drive_is_no_news_and_told(noi
     assert watching.observer.estimate(watching.now, None).repeats == pytest.approx([0.0, 0.0])
 
 
+def astray(watching):
+    return watching.observer.estimate(watching.now, None).astray
+
+
+def test_who_turns_otherwise_than_told_is_found_out_within_half_a_second_and_nobody_else():
+    """0.2 rad/s less than told: 6 degrees after half a second, against 0.5 degrees of noise."""
+    watching, calm = Watching(seed=4), []
+    watching.run(20.0, lambda w: calm.append(astray(w).max()))
+    assert max(calm) < 1.5
+    began = watching.now
+
+    def off(poses):
+        late = watching.now - began
+        return poses | {"cart_1": attrs.evolve(poses["cart_1"], heading=poses["cart_1"].heading - 0.2 * late)}
+
+    watching.change = off
+    watching.run(0.5)
+    assert astray(watching)[0] > 1.5 > astray(watching)[1]
+
+
+def test_who_moves_on_although_told_to_stand_is_found_out():
+    fleet, history = carts(1), CommandHistory(np.zeros(1), PERIOD)
+    observer, rng = Observer(fleet, settings().poses, history), np.random.default_rng(1)
+    for i in range(60):
+        history.add(PERIOD * i, np.zeros((1, 2)))
+        x = 0.3 * max(PERIOD * i - 2.0, 0.0)  # from 2 s on it creeps ahead with 0.3 m/s
+        pose = np.array([x, 0.0, 0.0]) + rng.normal(size=3) * [0.02, 0.02, 0.0087]
+        observer.observe({"cart_1": PoseSample(PERIOD * i, *pose)}, None)
+        strange = observer.estimate(PERIOD * i, None).astray[0]
+        assert strange < 1.5 or i > 40
+    assert strange > 1.5
+
+
+def test_who_runs_on_faster_than_told_is_found_out_and_who_is_slow_is_held_up():
+    watching = Watching()
+    watching.run(3.0)
+    watching.machines.slow("cart_2", 1.6)
+    watching.machines.slow("cart_1", 0.4)
+    watching.run(0.8)
+    estimate = watching.observer.estimate(watching.now, None)
+    assert estimate.runs_on.tolist() == [False, True] and estimate.held_up.tolist() == [True, False]
+
+
 def test_who_stands_may_send_the_same_pose_for_ever():
     observer = Observer(carts(1), settings().poses, CommandHistory(np.zeros(1), PERIOD))
     for i in range(100):

@@ -108,11 +108,10 @@ class Result:
         return (not self.contacts or self.excused) and not self.outside and self.ended in _ENDS and not late
 
 
-def cases(files: Sequence[str], count: int, seed: int) -> Iterator[Case]:
+def cases(files: Sequence[str], count: int, seed: int, kinds: Sequence[str] = tuple(KINDS)) -> Iterator[Case]:
     """Cases drawn at random: one to three faults each, every kind as often as the others."""
     rng = np.random.default_rng(seed)
     configurations = {file: config.load(file) for file in files}
-    kinds = list(KINDS)
     able = {file: begun_from_starts(configuration) for file, configuration in configurations.items()}
     for number in range(count):
         file = files[number % len(files)]
@@ -294,6 +293,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     parser = argparse.ArgumentParser(description=__doc__, prog="python -m coord_planner.commands.campaign")
     parser.add_argument("--count", type=int, default=500, help="rehearsals")
     parser.add_argument("--seed", type=int, default=1, help="of the faults and the noise")
+    parser.add_argument("--kinds", nargs="+", choices=list(KINDS), default=list(KINDS), help="of faults; all")
     parser.add_argument("--workers", type=int, default=2, help="processes")
     parser.add_argument("--json", action="store_true", help="one JSON object instead of a table")
     parser.add_argument("files", nargs="*", help="parameter files; the example sites when left out")
@@ -304,7 +304,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     results: list[Result] = []
     with ProcessPoolExecutor(given.workers) as pool, Progress(console=console, disable=not console.is_terminal) as bar:
         task = bar.add_task("rehearsals", total=given.count)
-        for future in as_completed([pool.submit(play, case) for case in cases(files, given.count, given.seed)]):
+        drawn = cases(files, given.count, given.seed, given.kinds)
+        for future in as_completed([pool.submit(play, case) for case in drawn]):
             results.append(future.result())
             bar.advance(task)
     results.sort(key=lambda result: result.case.number)

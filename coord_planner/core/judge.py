@@ -76,8 +76,10 @@ class Judge:
         return found + [rules.not_joined(view.settings, name, reason) for name, reason in view.waiting.items()]
 
     def look_on(self, view: View) -> list[Caution]:
-        """What is wrong while the fleet stops or is held: what comes in is told all the same."""
-        return [*self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view)]
+        """What is wrong while the fleet stops or is held: what comes in is told all the same, and who does not stop."""
+        return [
+            *self._inputs(view), *self._clock(view), *self._neighbours(view), *_readiness(view), *_astray(view)
+        ]
 
     def hold(self, now: float, found: list[Caution]) -> tuple[Caution, ...]:
         """What is shown: what is raised now, and what was a moment ago."""
@@ -157,7 +159,7 @@ def _readiness(view: View) -> list[Caution]:
 
 def _following(view: View) -> list[Caution]:
     progress = view.settings.progress
-    found = []
+    found = _astray(view)
     lags, estimate = view.pursuit.progress.lag, view.estimate
     told = np.abs(estimate.states[:, SPEED_COMMAND]) > _DRIVING
     slow = told & ((estimate.speed_factor < _SLOW_FACTOR) | estimate.held_up)
@@ -166,9 +168,17 @@ def _following(view: View) -> list[Caution]:
             found.append(rules.not_following(view.settings, name, float(lags[k])))
         elif slow[k]:
             found.append(rules.too_slow(view.settings, name, float(estimate.speed_factor[k])))
+    return found
+
+
+def _astray(view: View) -> list[Caution]:
+    """Robots that do something else than they are told, also in a stop and when they are to stand."""
+    estimate, found = view.estimate, list[Caution]()
+    told = np.abs(estimate.states[:, SPEED_COMMAND]) > _DRIVING
+    for k, name in enumerate(view.fleet.names):
         if told[k] and estimate.runs_on[k]:
             found.append(rules.too_fast(view.settings, name, float(estimate.speed_factor[k])))
-        elif told[k] and estimate.astray[k] > _ASTRAY:
+        elif estimate.astray[k] > _ASTRAY:
             found.append(rules.astray(view.settings, name, float(estimate.astray[k])))
     return found
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 import numpy as np
 
 from . import se2
+from .fast.engine import kernels
 from .fleet import Fleet
 
 
@@ -29,6 +30,17 @@ def drive(
     Returns:
         poses after each step, the start first, shape (n, K + 1, 3); what is reached at the end, shape (n, 2).
     """
+    compiled = kernels()
+    if compiled is not None:
+        path, ends = compiled.drive(poses, reached, commands, h, lag, factor)
+        return path, ends
+    return _drive(poses, reached, commands, h, lag, factor)
+
+
+def _drive(
+    poses: np.ndarray, reached: np.ndarray, commands: np.ndarray, h: np.ndarray, lag: np.ndarray, factor: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """The same without what is compiled."""
     decay = np.where(lag > 0, np.exp(-h[:, None] / np.maximum(lag, 1e-6)), 0.0)
     steps = commands.shape[1]
     nodes = np.empty((len(poses), steps + 1, 2))

@@ -57,7 +57,8 @@ class Estimate:
             whose poses count. Poses that repeat so are no news of where it is.
         held_up: robots that surely do not reach the speed that they are told, shape (N,) of bool; runs_on: that
             surely exceed it.
-        astray: how steadily each robot moves aside or turns otherwise than told, shape (N,), in standard deviations.
+        astray: how steadily each robot moves aside or turns otherwise than told, or moves at all when told to stand,
+            shape (N,), in standard deviations.
     """
 
     states: np.ndarray
@@ -92,7 +93,7 @@ class Observer:
         self._stamp = np.full(count, -np.inf)
         self._reached = np.zeros((count, 2))  # speed, curvature, before the speed factor
         self._one_sided = np.zeros(count)  # running mean of innovations along the heading, in standard deviations
-        self._astray = np.zeros((count, 2))  # of those aside and of the heading
+        self._astray = np.zeros((count, 3))  # of those ahead while it is to stand, aside, and of the heading
         self.loose: frozenset[str] = frozenset()  # not under command: each pose tells afresh where they are
         self._squared = np.ones(count)  # running mean of squared innovations, each relative to its variance
         self._innovation = np.zeros((count, 3))  # the last one
@@ -288,7 +289,9 @@ class Observer:
         spread = np.einsum("nij,njk,nik->ni", turned, cov[:, :3, :3] + noise, turned)
         scaled = np.einsum("nij,nj->ni", turned, innovation) / np.sqrt(spread)
         self._one_sided[which] += _RUNNING * (scaled[:, 0] - self._one_sided[which])
-        self._astray[which] += _LONGER * (scaled[:, 1:] - self._astray[which])
+        rolls = np.abs(self._reached[which, 0]) > _ROLLS
+        strange = np.stack([np.where(rolls, 0.0, scaled[:, 0]), scaled[:, 1], scaled[:, 2]], axis=1)
+        self._astray[which] += _LONGER * (strange - self._astray[which])
         changed = np.abs(self._one_sided[which]) > _ONE_SIDED
         cov[changed, 3, 3] += _AFRESH**2
         return cov

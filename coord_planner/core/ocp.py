@@ -43,6 +43,7 @@ class Program:
     g: Matrix
 
 
+@lru_cache(maxsize=64)
 def variable_blocks(shape: Shape) -> Blocks:
     """Node states, then rates in the intervals, then slacks."""
     n, m = shape.robots, shape.intervals
@@ -53,6 +54,7 @@ def variable_blocks(shape: Shape) -> Blocks:
     return Blocks({**states, **rates, **slacks, "compared": (n if shape.compared else 0, m)})
 
 
+@lru_cache(maxsize=64)
 def parameter_blocks(shape: Shape) -> Blocks:
     """All numbers that a built program is given."""
     n, m, e, p, f = shape.robots, shape.intervals, len(shape.edges), len(shape.pairs), len(shape.fenced)
@@ -70,6 +72,7 @@ def parameter_blocks(shape: Shape) -> Blocks:
     })
 
 
+@lru_cache(maxsize=64)
 def row_blocks(shape: Shape) -> Blocks:
     """Constraint rows: the motion (equal to 0), limits of products, clearances, fences, ends."""
     n, m = shape.robots, shape.intervals

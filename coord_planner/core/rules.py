@@ -92,7 +92,7 @@ TABLE = (
     Row("robot not following", Level.ERROR, Response.STOP, "a robot is further behind than progress.max_lag"),
     Row(
         "robot astray", Level.WARN, Response.GO_ON,
-        "a robot is faster than told, or turns or slips aside; whether a stop would still be clear is watched",
+        "a robot is faster than told, turns or slips aside, or moves when told to stand; its way to stop is watched",
     ),
     Row("robot not ready", Level.ERROR, Response.STOP, "a robot says that it must not be driven"),
     Row("robot silent", Level.STALE, Response.STOP, "a robot no longer says that it is ready"),
@@ -236,8 +236,8 @@ def too_fast(settings: Settings, name: str, factor: float) -> Caution:
 
 def astray(settings: Settings, name: str, deviations: float) -> Caution:
     figures = (
-        f"turns or slips aside otherwise than it is told, {deviations:.1f} times as far as poses scatter and always to "
-        "one side"
+        f"turns, slips aside, or moves on otherwise than it is told, by {deviations:.1f} times the scatter of poses "
+        "and always one way"
     )
     return _caution(settings, "robot astray", name, Level.WARN, figures)
 

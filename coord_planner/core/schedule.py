@@ -8,6 +8,7 @@ from __future__ import annotations
 import attrs
 import numpy as np
 
+from .fast.engine import kernels
 from .plan import Plan
 from .problem import CURVATURE_COMMAND, SPEED_COMMAND
 
@@ -25,14 +26,21 @@ class Schedule:
 
     def at(self, times: np.ndarray) -> np.ndarray:
         """Values at moments of each robot's own: shape (N,) -> (N, 2), or (N, K) -> (N, K, 2)."""
+        compiled = kernels()
+        if compiled is None:
+            return self._at(times)
+        found: np.ndarray = compiled.at(self.times, self.values, times.reshape(len(times), -1))
+        return found.reshape((*times.shape, 2))
+
+    def _at(self, times: np.ndarray) -> np.ndarray:
+        """The same without what is compiled."""
         robots = np.arange(len(self.values)).reshape((-1,) + (1,) * (times.ndim - 1))
         if len(self.times) == 1:
             return self.values[robots, np.zeros(times.shape, dtype=int)]
-        # Asked for many times a tick: np.clip would take half of the time that is left.
-        i = np.minimum(np.maximum(self.times.searchsorted(times, side="right") - 1, 0), len(self.times) - 2)
+        i = np.clip(self.times.searchsorted(times, side="right") - 1, 0, len(self.times) - 2)
         before = self.times[i]
         width = np.maximum(self.times[i + 1] - before, 1e-12)  # two moments may be one
-        part = np.minimum(np.maximum((times - before) / width, 0.0), 1.0)[..., None]
+        part = np.clip((times - before) / width, 0.0, 1.0)[..., None]
         first = self.values[robots, i]
         found: np.ndarray = first + part * (self.values[robots, i + 1] - first)
         return found

@@ -14,6 +14,7 @@ import numpy as np
 
 from ..errors import SolveError
 from . import ocp
+from .blocks import Blocks
 from .plan import Plan, from_solution
 from .problem import STATES, Problem, Shape
 from .staged import staged
@@ -122,18 +123,20 @@ def start_from_states(problem: Problem, states: np.ndarray) -> Start:
 
 def start_from_plan(plan: Plan, shape: Shape, steps: int) -> Start:
     """The last plan and its multipliers, shifted by whole intervals; the last column is repeated."""
-    layouts = (ocp.variable_blocks(shape), ocp.row_blocks(shape))
     bounds, rows = plan.multipliers
-    moved = [
-        _shift(layout, vector, steps)
-        for layout, vector in ((layouts[0], plan.vector), (layouts[0], bounds), (layouts[1], rows))
-    ]
-    return Start(moved[0], (moved[1], moved[2]))
+    variables, of_rows = _shifted_places(shape, steps)
+    return Start(plan.vector[variables], (bounds[variables], rows[of_rows]))
 
 
-def _shift(layout: Any, vector: np.ndarray, steps: int) -> np.ndarray:
-    blocks = layout.unpack(vector)
+@lru_cache(maxsize=64)
+def _shifted_places(shape: Shape, steps: int) -> tuple[np.ndarray, np.ndarray]:
+    """Where the entries of vectors of variables and of rows come from when they are shifted."""
+    return _places(ocp.variable_blocks(shape), steps), _places(ocp.row_blocks(shape), steps)
+
+
+def _places(layout: Blocks, steps: int) -> np.ndarray:
+    blocks = layout.unpack(np.arange(layout.size))
     for name, block in blocks.items():
         if name not in _ENDS and steps:
             blocks[name] = np.concatenate([block[:, steps:], np.repeat(block[:, -1:], steps, axis=1)], axis=1)
-    return layout.pack(blocks)
+    return layout.pack(blocks).astype(int)

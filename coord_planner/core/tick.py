@@ -222,11 +222,10 @@ def _guess(
 def _shifted(problem: Problem, last: Tick, steps: int, guess: np.ndarray) -> solver.Start:
     """The last plan shifted, with the nodes that are new taken from the guess."""
     begun = solver.start_from_plan(last.plan, problem.shape, steps)
-    layout = ocp.variable_blocks(problem.shape)
-    blocks = layout.unpack(begun.vector)
-    for i, name in enumerate(STATES):
-        blocks[name] = guess[:, :, i]
-    h = problem.intervals
-    blocks["curvature_rate"] = np.diff(guess[:, :, CURVATURE_COMMAND], axis=1) / h
-    blocks["acceleration"] = np.diff(guess[:, :, SPEED_COMMAND], axis=1) / h
-    return solver.Start(layout.pack(blocks), begun.multipliers)
+    places, h = ocp.variable_blocks(problem.shape).slices, problem.intervals
+    known = {name: guess[:, :, i] for i, name in enumerate(STATES)}
+    known["curvature_rate"] = np.diff(guess[:, :, CURVATURE_COMMAND], axis=1) / h
+    known["acceleration"] = np.diff(guess[:, :, SPEED_COMMAND], axis=1) / h
+    for name, values in known.items():
+        begun.vector[places[name]] = values.ravel(order="F")
+    return begun

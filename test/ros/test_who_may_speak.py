@@ -68,6 +68,18 @@ def _names(found: list[tuple[str, Any]]) -> set[str]:
     return {name for name, _types in found}
 
 
+def test_where_security_is_enforced_and_cannot_be_had_nobody_speaks(site: Site) -> None:
+    """An enclave without certificates. The wheels have no security plugins at all: the same."""
+    (site.folder / "keys" / "enclaves" / "planner").mkdir(parents=True)
+    secured = {
+        "ROS_SECURITY_KEYSTORE": str(site.folder / "keys"), "ROS_SECURITY_ENABLE": "true",
+        "ROS_SECURITY_STRATEGY": "Enforce", "ROS_SECURITY_ENCLAVE_OVERRIDE": "/planner",
+    }
+    with site.start("planner_node", name="secured", variables=secured) as node:
+        assert node.wait(20.0) == 2, node.output()
+        assert "security" in node.output() and "Traceback" not in node.output()
+
+
 @pytest.mark.skipif(find_spec("tf2_ros") is not None, reason="it is installed here")
 def test_what_cannot_be_configured_leaves_nothing_behind(site: Site, hand: Hand) -> None:
     """Poses from tf need tf2_ros; that is found out when the publishers are already made."""

@@ -18,7 +18,7 @@ from .linearised import Linearised, Stiffness
 from .numbers import Numbers
 from .point import Forces, Point, evaluate, slopes
 
-_COMPLIANCE = 1e-6  # of rows that are met: they give way by this much per unit of push, and less after every step
+_COMPLIANCE = 1e-8  # of rows that are met: they give way by this much per unit of push, and less after every step
 _PASSED = 1e-7  # a row passed by more is met from now on
 _FAINT = 1e-9
 _NO_ROOM = 1e-9

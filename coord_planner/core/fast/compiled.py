@@ -15,7 +15,7 @@ import numpy as np
 from ...errors import SolveError
 from . import active
 from .active import Met
-from .interior import GAINED_LITTLE
+from .interior import GAINED_LITTLE, SHARES
 from .margins import forces_of, opened, settled
 from .numbers import Numbers
 from .packed import Packed, packed, restarted
@@ -153,12 +153,15 @@ class CompiledEngine:
         move = partial(self._move, x, soft, old, factor, near, at)
         *_, barrier, aims = move(np.zeros_like(soft))
         *moved, _, _ = move(aims)
-        commands, margins, pushes, held, length = call.advance(
-            k.owners, point.roll, x.margins, x.pushes, x.fixed, *moved
-        )
-        after = self._driven(commands)
-        _, missed, clear = after.flat
-        still_open = call.settle_interior(self._price, missed, clear, k.layout.on, margins, pushes, barrier)
+        for share in SHARES:
+            commands, margins, pushes, held, length = call.advance(
+                k.owners, point.roll, x.margins, x.pushes, x.fixed, *moved, share
+            )
+            after = self._driven(commands)
+            _, missed, clear = after.flat
+            still_open = call.settle_interior(self._price, missed, clear, k.layout.on, margins, pushes, barrier)
+            if still_open <= x.open or after.cost <= point.cost:
+                break
         bending = x.bending or still_open > GAINED_LITTLE * x.open
         return CompiledIterate(after, margins, pushes, held, length, still_open, bending)
 

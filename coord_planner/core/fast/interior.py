@@ -32,7 +32,7 @@ from .margins import (
     spread,
 )
 from .numbers import Numbers
-from .point import Forces, Point, evaluate, slopes
+from .point import Forces, Point, cost, evaluate, slopes
 from .structure import Structure
 
 BARRIER = 0.2  # product of margin and push with which a solve begins
@@ -41,7 +41,8 @@ _STIFFEST, _SOFTEST = 1e-9, 1e12  # compliances beyond these are cut off
 _FIXED = 1e-10  # compliance of limits without room
 _SMALLEST = 1e-10  # barrier below which rounding takes over
 GAINED_LITTLE = 0.7  # part of what was open that a good step does not leave: if it does, second derivatives matter
-_SHORT_OF = 0.995  # part of the way to the nearest margin or push of 0 that a step goes
+SHARES = (1.0, 0.5, 0.25)  # of a step, tried in turn while cost and what is open both grow: paths are too curved
+_SHORT_OF = 0.92  # part of the way to the nearest margin or push of 0 that a step goes
 
 
 @attrs.frozen(eq=False)
@@ -105,12 +106,17 @@ class Interior:
         products = (x.margins + self._spread(a) * ahead.margins) * (x.pushes + self._spread(b) * ahead.pushes)
         left = max(float(np.sum(products * on)) / self._layout.count, 0.0)
         barrier = max((left / before) ** 3 * before, _SMALLEST)
-        after = self._moved(x, system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes), barrier)
+        move = system.direction((barrier - ahead.margins * ahead.pushes) / x.pushes)
+        before_cost = cost(self._numbers, x.point)
+        for share in SHARES:
+            after = self._moved(x, move, barrier, share)
+            if self.open(after) <= opened_by or cost(self._numbers, after.point) <= before_cost:
+                break
         self._bending = self._bending or self.open(after) > GAINED_LITTLE * opened_by
         return after
 
-    def _moved(self, x: Iterate, move: _Move, barrier: float) -> Iterate:
-        a, b = self._lengths(x.margins, move.margins), self._lengths(x.pushes, move.pushes)
+    def _moved(self, x: Iterate, move: _Move, barrier: float, share: float) -> Iterate:
+        a, b = share * self._lengths(x.margins, move.margins), share * self._lengths(x.pushes, move.pushes)
         commands = a[:, None] * move.commands
         r, m = x.point.r, x.point.r.turn.shape[1]
         point = evaluate(self._numbers, r.curvature + commands[:, :m], r.speed + commands[:, m:])

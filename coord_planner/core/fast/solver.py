@@ -29,7 +29,7 @@ ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step
 SOLVED = 1e-2  # predicted gap below which a plan counts as finished
 
 # After so many steps so large a gap is good enough: who has come far gains little from many more steps.
-_TOLERATED = ((16, ENOUGH), (22, 2 * ENOUGH), (10_000, SOLVED))
+_TOLERATED = ((19, ENOUGH), (23, 2 * ENOUGH), (10_000, SOLVED))
 
 _LEAST_COST = 1e-2  # costs below this count as this where gaps are parts of them
 _KEPT_WITHIN = 2e-4  # a plan that passes a limit by more is not taken

@@ -12,7 +12,7 @@ import numpy as np
 
 from .compiled import inner
 
-_COMPLIANCE = 1e-6
+_COMPLIANCE = 1e-8
 _PASSED = 1e-7
 _NO_ROOM = 1e-9
 

@@ -26,6 +26,7 @@ from . import (
     interior,
     limits,
     matrix,
+    motion,
     objective,
     point,
     rows,
@@ -34,13 +35,13 @@ from . import (
 from .compiled import OPTIONS
 
 _MODULES = (
-    active, blocks, chain, clearance, factor, fields, footprints, interior, limits, matrix, objective, point, rows,
-    sweeps,
+    active, blocks, chain, clearance, factor, fields, footprints, interior, limits, matrix, motion, objective, point,
+    rows, sweeps,
 )
 _F, _I = numba.float64, numba.int64
 _F1, _F2, _F3, _F4 = (numba.types.Array(_F, d, "C") for d in (1, 2, 3, 4))
 _I1, _I2 = (numba.types.Array(_I, d, "C") for d in (1, 2))
-_KEPT = numba.types.Array(_F, 3, "C", readonly=True)
+_S1, _S2, _S3 = (numba.types.Array(_F, d, "A", readonly=True) for d in (1, 2, 3))  # also parts of larger arrays
 _B, _B1 = numba.boolean, numba.types.Array(numba.boolean, 1, "C")
 
 _RESPONSE = (_I2, _F4, _F3)  # which, mean, last
@@ -72,6 +73,8 @@ class Entries:
     want: Callable[..., Any]
     settle_active: Callable[..., Any]
     nearest: Callable[..., Any]
+    at: Callable[..., Any]
+    drive: Callable[..., Any]
 
 
 _KNOWN: dict[str, tuple[Callable[..., Any], tuple[Any, ...]]] = {
@@ -89,11 +92,13 @@ _KNOWN: dict[str, tuple[Callable[..., Any], tuple[Any, ...]]] = {
     "stiffen": (interior.stiffen, (_B1, _F1, _I, _F1, _F1, _F1)),
     "aim": (interior.aim, (_B1, _F1, _F1, _F1, _F1, _F1, *_FLAT, _F1, _F1)),
     "follow": (interior.follow, (_B1, _F1, _F1, _F1, _F1, _F1, _F1, _F1, _I2, _I, _F1, *_FLAT, *_FLAT)),
-    "advance": (interior.advance, (_I2, _F3, _F1, _F1, _F1, _F2, _F1, _F1, _F1)),
+    "advance": (interior.advance, (_I2, _F3, _F1, _F1, _F1, _F2, _F1, _F1, _F1, _F)),
     "settle_interior": (interior.settle, (_F1, _F1, _F1, _F1, _F1, _F1, _F)),
     "want": (active.want, (_F1, _F1, *_FLAT, _F1, *_FLAT_SETS)),
     "settle_active": (active.settle, (_F1, _F1, _F1, _F1, *_FLAT, *_FLAT, *_FLAT, *_FLAT, *_FLAT_SETS)),
-    "nearest": (footprints.nearest, (_KEPT, _F3, _F1)),
+    "nearest": (footprints.nearest, (_S3, _F3, _F1)),
+    "at": (motion.at, (_S1, _S3, _S2)),
+    "drive": (motion.drive, (_S2, _S2, _S3, _S1, _S2, _S1)),
 }
 
 

@@ -17,7 +17,7 @@ from .fields import K, V
 _STIFFEST, _SOFTEST = 1e-9, 1e12
 _FIXED = 1e-10
 _SMALLEST = 1e-10
-_SHORT_OF = 0.995
+_SHORT_OF = 0.92
 
 
 def stiffen(fixed, price, clearances, margin, push, held):
@@ -141,8 +141,8 @@ def _lengths(owners, values, changes, worst):
         worst[k] = _SHORT_OF / worst[k]
 
 
-def advance(owners, roll, margin, push, held, commands, by_margin, by_push, held_after):
-    """Go each robot's longest step that leaves its margins and pushes above 0.
+def advance(owners, roll, margin, push, held, commands, by_margin, by_push, held_after, share):
+    """Go a share of each robot's longest step that leaves its margins and pushes above 0.
 
     Returns:
         commands (N, 2M), margins, pushes (L,), multipliers of fixed limits (A,); the smallest part of the step that
@@ -152,6 +152,8 @@ def advance(owners, roll, margin, push, held, commands, by_margin, by_push, held
     ahead, pushed = np.empty(n), np.empty(n)
     _lengths(owners, margin, by_margin, ahead)
     _lengths(owners, push, by_push, pushed)
+    for k in range(n):
+        ahead[k], pushed[k] = share * ahead[k], share * pushed[k]
     least = 1.0
     moved, next_held = np.empty((n, 2 * m)), np.empty(len(held))
     for k in range(n):
