@@ -13,16 +13,16 @@ import attrs
 import numpy as np
 
 from ...errors import SolveError
-from . import active
+from . import active, clearance
 from .active import Met
+from .chain import Rollout
 from .interior import GAINED_LITTLE, SHARES
+from .kernels import fields
 from .margins import forces_of, opened, settled
 from .numbers import Numbers
 from .packed import Packed, packed, restarted
-from .point import Forces
+from .point import Forces, Point
 from .structure import Structure
-
-_K, _V, _MEAN_V, _THETA = 0, 1, 3, 13  # rows of roll: kernels/fields.py, which only loads with numba
 
 
 @attrs.frozen(eq=False)
@@ -45,7 +45,7 @@ class CompiledPoint:
     @property
     def commands(self) -> tuple[np.ndarray, np.ndarray]:
         """Curvature and speed at nodes 1 .. M, each (N, M)."""
-        return self.roll[_K, :, :-1].copy(), self.roll[_V, :, :-1].copy()
+        return self.roll[fields.K, :, :-1].copy(), self.roll[fields.V, :, :-1].copy()
 
 
 @attrs.frozen(eq=False)
@@ -103,6 +103,16 @@ class CompiledEngine:
     def point(self, curvature: np.ndarray, speed: np.ndarray) -> CompiledPoint:
         """What commands, each (N, M), lead to."""
         return self._driven(np.ascontiguousarray(np.concatenate([curvature, speed], axis=1)))
+
+    def boxed(self, point: CompiledPoint) -> tuple[Point, float]:
+        """See plain.PlainEngine.boxed."""
+        k, commands = self._known, _commands(point)
+        kept = np.clip(commands, np.concatenate(list(k.lower[:2]), axis=1), np.concatenate(list(k.upper[:2]), axis=1))
+        if not np.array_equal(kept, commands):
+            point = self._driven(kept)
+        r = _rollout(self._numbers, point.roll)
+        sight = clearance.look(self._numbers, r) if len(self._numbers.pairs) else None
+        return Point(r, sight, point.limits, point.missed, point.clearances), point.cost
 
     def trial(self, point: CompiledPoint, forces: Forces) -> CompiledTrial:
         """The rows that were met when the multipliers were found."""
@@ -230,9 +240,21 @@ class CompiledEngine:
 
     def _serves(self, held: CompiledHeld, point: CompiledPoint, near: float) -> bool:
         roll = held.at[0]
-        turned = np.abs(point.roll[_THETA] - roll[_THETA])
-        sped = np.abs(point.roll[_MEAN_V] - roll[_MEAN_V]) / self._numbers.full_speed
+        turned = np.abs(point.roll[fields.THETA] - roll[fields.THETA])
+        sped = np.abs(point.roll[fields.MEAN_V] - roll[fields.MEAN_V]) / self._numbers.full_speed
         return float(turned.max()) < near and float(sped.max()) < near
+
+
+def _rollout(numbers: Numbers, roll: np.ndarray) -> Rollout:
+    """The rows of ``roll`` under the names that numpy's modules know."""
+    arcs = roll[:, :, :-1]
+    distance = numbers.h * arcs[fields.MEAN_V]
+    return Rollout(
+        curvature=arcs[fields.K], speed=arcs[fields.V], mean_curvature=arcs[fields.MEAN_K],
+        mean_speed=arcs[fields.MEAN_V], distance=distance, turn=distance * arcs[fields.MEAN_K],
+        theta=roll[fields.THETA], x=roll[fields.X], y=roll[fields.Y], cos=arcs[fields.COS], sin=arcs[fields.SIN],
+        chord=arcs[fields.CHORD], chord_slope=arcs[fields.STRETCH], turning=arcs[fields.TURNING],
+    )
 
 
 def _parts(rows: Forces | Met) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

@@ -14,7 +14,7 @@ import numpy as np
 from .compiled import CompiledEngine
 from .numbers import Numbers
 from .plain import PlainEngine
-from .point import Forces
+from .point import Forces, Point
 from .structure import Structure
 
 Held = Any  # an engine's own: the factor of an active-set step
@@ -65,6 +65,8 @@ class Engine(Protocol):
     def started(self, numbers: Numbers) -> Any: ...
 
     def point(self, curvature: np.ndarray, speed: np.ndarray) -> Any: ...
+
+    def boxed(self, point: Any) -> tuple[Point, float]: ...
 
     def trial(self, point: Any, forces: Forces) -> Any: ...
 

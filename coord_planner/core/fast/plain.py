@@ -79,6 +79,17 @@ class PlainEngine:
         """What commands, each (N, M), lead to."""
         return self._costed(evaluate(self._numbers, curvature, speed))
 
+    def boxed(self, point: PlainPoint) -> tuple[Point, float]:
+        """The point with its commands cut to their bounds, and its cost.
+
+        A standstill is a standstill, not a billionth of a m/s.
+        """
+        known = self._numbers
+        found = evaluate(known, *(
+            np.clip(commands, known.lower[i], known.upper[i]) for i, commands in enumerate(point.commands)
+        ))
+        return found, cost(known, found)
+
     def trial(self, point: PlainPoint, forces: Forces) -> PlainTrial:
         """The rows that were met when the multipliers were found."""
         return PlainTrial(point, active.begin(self._numbers, point.point, forces), np.inf)

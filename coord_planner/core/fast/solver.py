@@ -22,7 +22,7 @@ from .interior import BARRIER
 from .linearised import NEAR
 from .margins import LEAST
 from .numbers import FleetNumbers, Numbers, fleet_numbers, numbers, started
-from .point import Forces, Point, cost, evaluate
+from .point import Forces
 from .structure import Structure, structure
 
 ENOUGH = 1e-3  # predicted gap, as a part of the cost, below which no other step is worth its time
@@ -257,24 +257,16 @@ def _interior_steps(ready: Prepared, x: Iterate, watchman: _Watchman) -> _Found:
 def _plan(ready: Prepared, found: _Found, took: float) -> Plan:
     known, problem = ready.numbers, ready.problem
     size = vectors.sizes(problem)
-    point = _boxed(known, found.point)
+    point, total = ready.engine.boxed(found.point)
     states = vectors.states_of(known, point)
     short = np.maximum(-point.clearances, 0.0)
     priced = known.end_price > 0
     return Plan(
         fleet=problem.fleet, times=problem.times, states=states,
-        rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=cost(known, point),
+        rates=point.limits[2:4].transpose(1, 2, 0).copy(), cost=total,
         short=short[: size.pairs], pairs=problem.watch.pairs, outside=short[size.pairs :], fenced=problem.fences.robots,
         missed=np.abs(point.missed) * priced,
         solved=found.gap <= SOLVED and found.passed <= _KEPT_WITHIN, solve_time=took,
         iterations=found.steps, vector=vectors.primal(known, size, states, point, short, priced),
         multipliers=vectors.multipliers(known, point, found.forces(), size),
     )
-
-
-def _boxed(known: Numbers, point: Pointed) -> Point:
-    """The point with its commands cut to their bounds: a standstill is a standstill, not a billionth of a m/s."""
-    curvature, speed = (
-        np.clip(commands, known.lower[i], known.upper[i]) for i, commands in enumerate(point.commands)
-    )
-    return evaluate(known, curvature, speed)
