@@ -31,12 +31,11 @@ import time
 from collections import Counter
 
 import numpy as np
-import shapely
 from sites import shown
 from sites import site as made_up
 
 from coord_planner import config
-from coord_planner.core import outline
+from coord_planner.core.fence import Fencing
 from coord_planner.core.manoeuvre import TurnAway
 from coord_planner.errors import CoordPlannerError
 from coord_planner.record.areas import intrusions, speeding
@@ -77,11 +76,9 @@ def say(text):
 
 
 def beyond(run):
-    """How far any footprint reached beyond an edge of its strip, metres; below 0 by what was to spare, NaN without."""
-    if not run.strip:
-        return math.nan
-    corners = shapely.get_coordinates(outline.outlines(run.fleet.corners(), run.poses))
-    return max(float((corners @ np.array(normal)).max() - reach) for normal, reach in run.strip)
+    """How far any footprint reached over an edge of headland or rows, metres; below 0: to spare; NaN without any."""
+    spare = Fencing(run.pieces, run.strip).least(run.fleet, run.poses)[0]
+    return -spare if math.isfinite(spare) else math.nan
 
 
 def not_kept(run, figures, row):

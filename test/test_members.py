@@ -3,13 +3,19 @@
 
 """Robots that leave the group or join it in mid-turn: no jump in any command, nobody held up by who is not driven."""
 
+import re
+
 import attrs
 import numpy as np
 import pytest
-from fleets import abreast, small_yard
+from fleets import LATE, Yard, abreast, carts, settings, small_yard
 
+from coord_planner.core import outline
+from coord_planner.core.area import Area
 from coord_planner.core.graph import NeighbourGraph, path
+from coord_planner.core.manoeuvre import Straight
 from coord_planner.core.messages import Command, State
+from coord_planner.core.settings import SiteRules
 
 ONE, TWO, THREE = "cart_1", "cart_2", "cart_3"
 NOISY = {"pose_noise_xy": 0.02, "pose_noise_heading_deg": 0.5}
@@ -89,6 +95,37 @@ def test_one_that_left_is_an_obstacle_where_it_is_seen():
     yard.moved[THREE] = (beside[0], beside[1] - 1.2)
     yard.run_to(State.HELD)
     assert "clearance" in yard.coordinator.decision.reason and kept(yard) < 1e-6
+
+
+def in_file(walls=()):
+    """Two carts, one 4 m behind the other, that drive straight on; the first leaves in front of the second."""
+    rules = SiteRules(min_clearance=0.85, keep_out_clearance=0.0, keep_outs=walls)
+    chosen = attrs.evolve(settings(horizon={"intervals": 16}), site_rules=rules)
+    yard = Yard(carts(2, response=LATE), np.array([[0.0, 0.0, 0.0], [-4.0, 0.0, 0.0]]),
+                {"on": Straight(distance=18.0)}, chosen, **NOISY)
+    yard.run(1.0)
+    assert yard.begin("on").ok
+    yard.run(2.5)
+    yard.want(TWO)
+    return yard
+
+
+def test_one_that_left_and_stands_in_the_way_is_gone_round():
+    yard = in_file()
+    yard.run_to(State.ENDED)
+    assert yard.decisions[-1].completed and kept(yard) < 1e-6 and yard.codes() <= {"graph changed"}
+    assert np.abs(yard.machines.poses()[1] - yard.coordinator.ends[1]).max() < 0.1
+    track = np.stack([poses for _, poses in yard.track], axis=1)
+    gaps = outline.closest(outline.outlines(yard.fleet.corners(), track), outline.all_pairs(2))
+    assert gaps[0] >= 0.85 and track[1, -1, 0] > track[0, -1, 0] + 8.0 and np.abs(track[1, :, 1]).max() > 1.5
+
+
+def test_one_that_left_and_cannot_be_gone_round_stops_the_others_with_figures():
+    yard = in_file(tuple(Area(name, ((-9.0, y), (30.0, y), (30.0, y + 1.0), (-9.0, y + 1.0)))
+                         for name, y in (("hedge", 1.4), ("wall", -2.4))))
+    yard.run_to(State.HELD)
+    assert re.search(r"cart_2.* \d\.\d\d m", yard.coordinator.decision.reason) and kept(yard) < 1e-6
+    assert yard.standing()
 
 
 def test_the_graph_of_those_that_stay_counts():

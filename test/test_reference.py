@@ -83,6 +83,17 @@ def test_after_its_end_a_reference_goes_straight_on():
     assert (after[:, SPEED] == 0.5).all() and (after[:, CURVATURE] == 0.0).all()
 
 
+def test_before_its_first_node_everyone_came_along_as_it_drives_there():
+    fleet = carts(1)
+    start = np.array([[0.0, 0.0, 0.0, 0.2, 0.8, 0.2, 0.8]])  # a bend of 5 m radius at 0.8 m/s
+    made = fleets.solve(ToEnds(ends_deg=("cart_1 pose 6 3 60",)), fleet, abreast(1), settings())
+    made = attrs.evolve(made, plan=attrs.evolve(made.plan, states=made.plan.states - made.plan.states[:, :1]
+                                                + start[:, None]))
+    x, y, heading = made.state(-0.5)[0, :3]
+    assert (x, y, heading) == pytest.approx((-5.0 * math.sin(0.08), 5.0 * (1.0 - math.cos(0.08)), -0.08))
+    assert made.state(-0.5)[0, 3:] == pytest.approx(start[0, 3:])
+
+
 def test_what_is_left_of_the_ways_is_measured_from_where_each_robot_stands():
     made = fleets.corner()
     poses = np.stack([made.state(s)[k, :3] for k, s in enumerate((5.0, 6.0, 7.5))])

@@ -43,6 +43,15 @@ def test_the_other_way_round_in_mid_turn(imperfect):
     assert names.count("corner") > 40
 
 
+def test_nobody_is_behind_or_ahead_because_of_a_change_over():
+    """A reference is looked at from some moments before its first node on."""
+    yard = turning()
+    assert yard.begin("corner", angle_deg=-60.0).ok
+    yard.run(2.5)
+    lags = np.array([decision.lag for decision in yard.decisions[20:]])
+    assert yard.coordinator.taken_over == 1 and np.abs(lags).max() < 0.05  # 0.2 s at 1 m/s would be 0.2 m
+
+
 def test_another_kind_takes_over_and_shows_on_the_way():
     yard = turning()
     assert yard.begin("placed").ok

@@ -13,6 +13,8 @@ from fleets import LATE, LIMITS, Yard, abreast, carts, settings
 from sites import site
 
 from coord_planner.core import manoeuvre, outline, reference
+from coord_planner.core.fence import Fencing
+from coord_planner.core.fleet import Fleet, Footprint
 from coord_planner.core.graph import path
 from coord_planner.core.manoeuvre import RowEnd
 from coord_planner.core.messages import State
@@ -86,11 +88,14 @@ def test_robots_whose_ways_cross_set_out_one_after_the_other_and_copy_nobody():
     wanted = attrs.evolve(ROWS, order="mirrored")
     made = task(wanted, in_rows(3))
     assert made.waits.min() == 0.0 and made.waits.max() > 1.0 and not made.alike and made.coupling == 0.0
+    late = int(np.argmax(made.waits))
+    assert f"cart_{late + 1} sets out after {made.waits[late]:.0f} s" in made.note and "nobody copies" in made.note
     fleet, s = carts(3), np.linspace(0.0, made.duration, 400)
     polygons = outline.outlines(fleet.corners(), made.guess(s)[0])
     assert outline.closest(polygons, outline.all_pairs(3))[0] > 0.5 + 2 * 0.05
     together = task(attrs.evolve(ROWS, order="same"), in_rows(2))
     assert together.alike and together.coupling == EASY.coupling.strength and not together.waits.any()
+    assert not together.note
 
 
 def test_who_comes_along_moving_waits_in_its_row_where_there_is_room_to_stop():
@@ -117,7 +122,32 @@ def test_the_reference_stays_within_the_depth_that_the_guess_alone_would_leave()
     assert (speeds * gears >= -1e-6).all() and (np.abs(speeds[gears == 0]) < 1e-6).all() and speeds.min() < -0.1
 
 
+LONG = attrs.evolve(carts(1, REVERSING, LATE).robots[0], footprint=Footprint(footprint_length=2.8, footprint_width=1.0))
+
+
+@pytest.mark.parametrize("depth", [7.0, 4.5])
+def test_a_long_machine_does_not_swing_over_the_edge_of_its_row(depth):
+    fleet, wanted = Fleet((LONG,)), attrs.evolve(ROWS, order="mirrored", depth=depth)
+    wide, narrow = (
+        task(attrs.evolve(wanted, row_width=width), in_rows(1), fleet=fleet) for width in (0.0, 1.25)
+    )
+    first = [made.ways[0].segments[0] for made in (wide, narrow)]  # straight on, from 1 m inside the row
+    assert first[0] == (0.0, pytest.approx(1.0)) and first[1][0] == 0.0 and first[1][1] > 1.3
+    edges = Fencing(narrow.pieces)
+    assert edges.least(fleet, wide.guess(np.linspace(0.0, wide.arrival, 800))[0])[0] < 0.0
+    states = np.concatenate([in_rows(1), np.zeros((1, 4))], axis=1)
+    made = reference.make(narrow, fleet, path(fleet.names), EASY, states)
+    assert edges.least(fleet, made.plan.dense(4))[0] >= 0.0 and depth_reached(fleet, made.plan.dense(4)) <= depth
+
+
+def test_a_row_is_not_wider_than_rows_are_apart():
+    with pytest.raises(SettingsError, match="row_width: 3 m is wider than row_spacing; allowed: at most 2.5, or 0"):
+        attrs.evolve(ROWS, row_width=3.0)
+
+
 @pytest.mark.parametrize("changed, poses, limits, words", [
+    ({"row_width": 1.4}, in_rows(2) + [0.0, 0.4, 0.0], LIMITS, r"cart_2 reaches 0\.10 m over the edge of its row"),
+    ({"row_width": 0.9}, in_rows(2), LIMITS, r"cart_1 needs a row 1\.00 m wide, 0\.10 m more"),
     ({"depth": 3.0}, in_rows(1), LIMITS,
      r"cart_1 needs 4\.\d\d m of headland to turn into a row 2\.5 m away \(bulb\), 1\.\d\d m more than the 3 m"),
     ({"depth": 3.0}, in_rows(1), LIMITS, r"with changes of gear 2\.\d\d m would do.*does not let it reverse"),

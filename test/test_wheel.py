@@ -139,6 +139,30 @@ def test_a_wheel_turn_that_was_halted_keeps_the_line_when_it_goes_on():
     assert np.abs(np.linalg.norm(track[:, 1, :2] - track[:, 0, :2], axis=1) / 2.5 - 1).max() <= 0.10
 
 
+@pytest.mark.parametrize("angle", [60.0, -60.0])
+def test_a_wheel_turn_replaces_another_and_the_line_is_kept(angle):
+    wheels = {"round": Wheel(pivot="cart_1 3"), "again": Wheel(angle_deg=angle)}
+    yard = fleets.Yard(carts(2, response=LATE), abreast(2), wheels, settings(horizon={"intervals": 12}))
+    assert yard.begin("round").ok
+    yard.run(5.0)
+    heading = yard.machines.poses()[0, 2]
+    assert yard.begin("again").ok, yard.answers[-1].text
+    yard.run_to(fleets.State.ENDED)
+    track = np.stack([poses for _, poses in yard.track])
+    assert np.degrees(np.ptp(track[:, :, 2], axis=1).max()) <= 4.0
+    assert np.abs(np.linalg.norm(track[:, 1, :2] - track[:, 0, :2], axis=1) / 2.5 - 1).max() <= 0.10
+    turned = np.degrees(yard.machines.poses()[0, 2] - heading)
+    assert 0.0 < turned - angle < 30.0  # by the angle from where it took over, a second later
+    assert max(yard.breaches().values()) < 1e-6
+
+
+def test_robots_that_turn_each_round_its_own_centre_are_told_what_to_do_for_a_wheel_turn():
+    """Abreast at first, they are in echelon half way."""
+    bends, poses = np.full(3, 0.25), abreast(3) + [0.0, 0.0, 0.8]
+    with pytest.raises(RefusedError, match=r"cart_\d stands 1\.\d\d m .* ask again after this turn, or form a line"):
+        manoeuvre.work_out("round", Wheel(), carts(3), settings(), poses, 1.0, path(carts(3).names).hops(), bends)
+
+
 def test_a_rehearsal_keeps_the_line():
     run = rehearse(site(abreast(3), {"round": {"kind": "wheel", "pivot": "mower_1 2.5"}},
                         horizon__intervals=12), "round", seed=2)

@@ -71,6 +71,13 @@ class ArcPath:
         return poses
 
 
+    def curvature(self, distances: np.ndarray) -> np.ndarray:
+        """Curvature after the given distances along the way, shape (K,), 1/m."""
+        curvatures = np.array([curvature for curvature, _ in self.segments])
+        ends = np.cumsum([abs(length) for _, length in self.segments])
+        return curvatures[np.minimum(np.searchsorted(ends, distances), len(curvatures) - 1)]
+
+
 class DubinsPath(ArcPath):
     """A path of three forward pieces; ``word`` is one of LSL, RSR, LSR, RSL, RLR, LRL."""
 

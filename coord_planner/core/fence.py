@@ -27,11 +27,14 @@ class Piece:
     Attributes:
         name: of the area, for messages. corners: shape (K, 2), anticlockwise; one row for a point.
         clearance: smallest allowed distance from a footprint, metres.
+        reach: it is watched where a footprint comes nearer than this to that distance; and only where it comes nearer
+            than clearance.reach.
     """
 
     name: str
     corners: np.ndarray
     clearance: float
+    reach: float = np.inf
 
     @property
     def shape(self) -> shapely.Geometry:
@@ -57,7 +60,8 @@ class Fencing:
         if not (self.pieces or self.lines):
             return self
         spare = self.spare(fleet, poses).min(axis=2)
-        return attrs.evolve(self, bound=np.argwhere(spare < settings.clearance.reach))
+        reaches = np.array([*(piece.reach for piece in self.pieces), *(np.inf for _ in self.lines)])
+        return attrs.evolve(self, bound=np.argwhere(spare < np.minimum(reaches, settings.clearance.reach)))
 
     def beside(self, pieces: Iterable[Piece]) -> Fencing:
         """The same and some pieces more, nothing watched: to judge by."""

@@ -5,6 +5,8 @@
 
 from __future__ import annotations
 
+from functools import cached_property
+
 import attrs
 import numpy as np
 
@@ -65,18 +67,23 @@ class Plan:
         part = np.clip((times - self.times[i]) / (self.times[i + 1] - self.times[i]), 0.0, 1.0)
         before, after = self.states[:, i], self.states[:, i + 1]
         mixed: np.ndarray = (1.0 - part)[:, None] * before + part[:, None] * after
-        mixed[:, :, POSE] = _along_arc(before[:, :, POSE], after[:, :, POSE], part)
+        mixed[:, :, POSE] = _along_arcs(before[:, :, POSE], self._twists[:, i], part)
         return mixed
 
     def closest(self, between: int = 2) -> tuple[float, tuple[int, int]]:
         """Smallest exact clearance over all pairs, at the nodes and ``between`` moments in each interval."""
         return closest_along(self.fleet, self.dense(between))
 
+    @cached_property
+    def _twists(self) -> np.ndarray:
+        """Of the arcs that join the nodes (constant twist over the interval), shape (N, M, 3)."""
+        before, after = (tuple(np.moveaxis(nodes, -1, 0)) for nodes in (self.poses[:, :-1], self.poses[:, 1:]))
+        return np.stack(se2.log(*se2.compose(se2.inverse(before), after)), axis=-1)
+
     def dense(self, between: int) -> np.ndarray:
         """Poses at the nodes and at ``between`` moments in each interval, shape (N, K, 3)."""
         parts = np.linspace(0.0, 1.0, between + 1, endpoint=False)
-        before, after = self.poses[:, :-1, None], self.poses[:, 1:, None]
-        pieces = _along_arc(before, after, parts)
+        pieces = _along_arcs(self.poses[:, :-1, None], self._twists[:, :, None], parts)
         return np.concatenate([pieces.reshape(len(self.states), -1, 3), self.poses[:, -1:]], axis=1)
 
 
@@ -142,12 +149,13 @@ def near_pairs(fleet: Fleet, poses: np.ndarray, gap: float) -> np.ndarray:
     return pairs[free < max(gap, float(free.min()) + 1.0)]
 
 
-def _along_arc(before: np.ndarray, after: np.ndarray, part: np.ndarray) -> np.ndarray:
-    """Poses a part (...) of the way along the arcs that join poses (constant twist), shapes (..., 3)."""
-    a, b = np.moveaxis(before, -1, 0), np.moveaxis(after, -1, 0)
-    twist = se2.log(*se2.compose(se2.inverse(tuple(a)), tuple(b)))
-    step = se2.exp(*(part * component for component in twist))
-    return np.stack(np.broadcast_arrays(*se2.compose(tuple(a), step)), axis=-1)
+def _along_arcs(before: np.ndarray, twists: np.ndarray, part: np.ndarray) -> np.ndarray:
+    """Poses a part (...) of the way along arcs from poses, shapes (..., 3)."""
+    step = se2.exp(*(part * twists[..., column] for column in range(3)))
+    x, y, theta = se2.compose((before[..., 0], before[..., 1], before[..., 2]), step)
+    found = np.empty((*theta.shape, 3))
+    found[..., 0], found[..., 1], found[..., 2] = x, y, theta
+    return found
 
 
 def from_solution(problem: Problem, variables: dict[str, np.ndarray], **solver: object) -> Plan:

@@ -125,7 +125,7 @@ class Pursuit:
     ) -> None:
         """Move the group on, and slow it when one of them is held up; nobody waits for those at ``outside``."""
         s_now = self.s(now)
-        asked = self.reference.state(max(s_now, self.reference.plan.times[0]))
+        asked = self.reference.state(s_now)
         heading, gear = asked[:, THETA], self.reference.task.directions(s_now)
         ahead = gear[:, None] * np.stack([np.cos(heading), np.sin(heading)], axis=1)
         self.behind = np.sum((asked[:, :2] - estimate.states[:, :2]) * ahead, axis=1)

@@ -13,7 +13,7 @@ import attrs
 import numpy as np
 
 from ..errors import RefusedError, SolveError
-from . import grid, ocp, solver, succession
+from . import bypass, grid, ocp, se2, solver, succession
 from .caps import planned_caps
 from .case import PlannerCase
 from .dubins import ArcPath, through
@@ -76,13 +76,23 @@ class Reference:
         return self.task.duration
 
     def state(self, s: float) -> np.ndarray:
-        """States at a moment of the manoeuvre, shape (N, 7); straight on at the end speed after the end."""
+        """States at a moment of the manoeuvre, shape (N, 7), also before its first node and after its end."""
         return self.states(np.array([s]))[:, 0]
 
     def states(self, s: np.ndarray) -> np.ndarray:
-        """States at several moments, shape (N, K, 7)."""
+        """States at several moments, shape (N, K, 7).
+
+        After the end everyone goes straight on at the end speed. Before the first node everyone came along as it
+        drives there: one that takes over in motion is looked at some moments before it begins.
+        """
         states = self.plan.sample(np.minimum(s, self.end))
-        after = s > self.end
+        before, after = s < self.plan.times[0], s > self.end
+        if before.any():
+            x, y, heading = np.moveaxis(states[:, before][:, :, POSE], 2, 0)
+            metres = states[:, before, SPEED] * (s[before] - self.plan.times[0])
+            states[:, before, POSE] = np.stack(
+                se2.arc(x, y, heading, metres, metres * states[:, before, CURVATURE]), axis=2
+            )
         if after.any():
             speeds = np.full((len(states), 1), self.task.end_speed)
             speeds[list(self.task.stands)] = 0.0
@@ -126,9 +136,14 @@ def make(
     Raises:
         RefusedError: an end or the site's clearance cannot be kept, with the figures: not on this way nor on others.
     """
+    times = grid.until(start, task.duration, settings.horizon.interval)
+    first = _guess(task, times) if guess is None else guess
     try:
-        return _made(task, fleet, graph, settings, initial, start, guess, end_kept)
+        return _made(task, fleet, graph, settings, initial, times, first, end_kept)
     except RefusedError:
+        for bent in bypass.guesses(task, fleet, settings, first):
+            with contextlib.suppress(RefusedError):
+                return _made(task, fleet, graph, settings, initial, times, bent, end_kept)
         if task.otherwise is None or guess is not None:
             raise
         try:
@@ -139,13 +154,12 @@ def make(
 
 
 def _made(
-    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, start: float,
-    guess: Optional[np.ndarray], end_kept: float,
+    task: Task, fleet: Fleet, graph: NeighbourGraph, settings: Settings, initial: np.ndarray, times: np.ndarray,
+    guess: np.ndarray, end_kept: float,
 ) -> Reference:
-    times = grid.until(start, task.duration, settings.horizon.interval)
-    guess = _guess(task, times) if guess is None else guess
     pairs = choose_pairs(fleet, settings, guess[:, :, POSE])
-    fences = fencing(settings, task.strip, hazards(settings, task.hazard)).watching(fleet, settings, guess[:, :, POSE])
+    fences = fencing(settings, task.strip, (*task.pieces, *hazards(settings, task.hazard)))
+    fences = fences.watching(fleet, settings, guess[:, :, POSE])
     problem = _problem(task, fleet, graph, settings, initial, times, guess, pairs, fences)
     problem, plan = _settled(problem, guess, settings, task.speed, fences)
     pairs_then, fences_then = choose_pairs(fleet, settings, plan.poses), fences.watching(fleet, settings, plan.poses)
@@ -191,12 +205,19 @@ def make_rest(
     Raises:
         RefusedError: it cannot be kept even at a third of the speed; the reason is that of the first try.
     """
-    return _first_kept(task, lambda stretch: make(*_stretched(task, fleet, graph, settings, old, start, stretch)))
+    left = old.states(grid.until(start, task.duration, settings.horizon.interval))
+    blocked = bypass.in_the_way(task, fleet, settings, left)
+    return _first_kept(
+        task, lambda stretch: make(*_stretched(task, fleet, graph, settings, old, start, stretch)),
+        _STRETCHES[:1] if blocked else _STRETCHES,  # who stands in the way stands there for longer, too
+    )
 
 
-def _first_kept(task: Task, attempt: Callable[[float], Reference]) -> Reference:
+def _first_kept(
+    task: Task, attempt: Callable[[float], Reference], stretches: tuple[float, ...] = _STRETCHES
+) -> Reference:
     first: Optional[RefusedError] = None
-    for stretch in _STRETCHES:
+    for stretch in stretches:
         try:
             return attempt(stretch)
         except RefusedError as refused:

@@ -122,7 +122,10 @@ def _areas(run: Run, scene: _Scene) -> Iterable[str]:
 
 
 def _edges(run: Run, scene: _Scene, corners: np.ndarray) -> Iterable[str]:
-    """Lines that nobody was to reach across, dashed, as long as the scene."""
+    """What nobody was to come near, and lines that nobody was to reach across, dashed, as long as the scene."""
+    for piece in run.pieces:
+        yield (f'<path d="{scene.data(piece.corners, closed=True)}" fill="{_GREY}" fill-opacity="0.2" '
+               f'stroke="{_GREY}" stroke-width="1"/>')
     points = corners.reshape(-1, 2)
     for normal, reach in run.strip:
         across = np.array([-normal[1], normal[0]])

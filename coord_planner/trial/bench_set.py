@@ -78,6 +78,11 @@ class Course:
         """How many there are from standing still until the corner is behind the fleet."""
         return int(self._reference.end / EVERY)
 
+    @property
+    def states(self) -> np.ndarray:
+        """Where the robots really are, shape (N, 7)."""
+        return self._states
+
     def pose(self) -> Posed:
         """The next tick."""
         s = grid.nodes(self._s, INTERVAL, INTERVALS)

@@ -16,7 +16,7 @@ from ..config import Configuration
 from ..config.failures import kept
 from ..core.coordinator import Coordinator
 from ..core.fast.ticks import TickSolve
-from ..core.fence import Line
+from ..core.fence import Line, Piece
 from ..core.fleet import Fleet
 from ..core.graph import Edge
 from ..core.messages import Answer, Caution, Decision, HazardPoint, PoseSample, Snapshot, State
@@ -153,7 +153,7 @@ class _Loop:
         self._told = np.zeros((len(self._fleet), 2))  # who gets no command keeps the last
         self._ends = np.full((len(self._fleet), 3), np.nan)
         self._carried = set(driven.names)
-        self._strip: tuple[Line, ...] = ()
+        self._edges: tuple[tuple[Line, ...], tuple[Piece, ...]] = ((), ())
         self.over = False
 
     @property
@@ -168,7 +168,7 @@ class _Loop:
         self.work()
         _raise_if_refused(answers)
         begun = self.coordinator.reference
-        self._strip = () if begun is None else begun.task.strip
+        self._edges = ((), ()) if begun is None else (begun.task.strip, begun.task.pieces)
         self._log.truth(0.0, self._simulated)
 
     def work(self) -> None:
@@ -259,7 +259,7 @@ class _Loop:
                 "file": configuration.file, "coupling": decision.coupling, "alignment": decision.alignment,
                 "seed": self._seed, **({"turned_away": away} if away else {}),
             },
-            site_rules=configuration.settings.site_rules, strip=self._strip,
+            site_rules=configuration.settings.site_rules, strip=self._edges[0], pieces=self._edges[1],
         )
 
 

@@ -10,6 +10,7 @@ from typing import Any
 import attrs
 import numpy as np
 
+from ..core.fence import Line, Piece
 from ..core.fleet import Fleet
 from ..core.messages import Caution
 from ..core.settings import SiteRules
@@ -53,6 +54,7 @@ class Run:
         edge_changes: later graphs, each with the moment from which it was in force, seconds.
         strip: lines that no footprint was to reach across: a unit normal towards the far side and how far along it,
             from the origin of the frame, the line lies, metres.
+        pieces: what no footprint was to come near besides, as the manoeuvre began.
     """
 
     fleet: Fleet
@@ -78,4 +80,5 @@ class Run:
     facts: dict[str, Any] = attrs.field(factory=dict)
     site_rules: SiteRules = SiteRules()
     edge_changes: tuple[tuple[float, tuple[tuple[str, str, float], ...]], ...] = ()
-    strip: tuple[tuple[tuple[float, float], float], ...] = ()
+    strip: tuple[Line, ...] = ()
+    pieces: tuple[Piece, ...] = ()

@@ -29,12 +29,15 @@ _KNOWN = {
 }
 
 
+_UNDERSTOOD = {
+    kind for kind, names in _KNOWN.items() if {field.name for field in attrs.fields(kind)} == names
+}
+
+
 def knows(problem: Problem) -> bool:
     """Whether the fast solver understands all that a problem holds."""
-    return all(
-        {field.name for field in attrs.fields(type(part))} == _KNOWN.get(type(part))
-        for part in (problem, problem.bounds, problem.watch, problem.fences, problem.compared) if part is not None
-    )
+    parts = (problem, problem.bounds, problem.watch, problem.fences, problem.compared)
+    return all(type(part) in _UNDERSTOOD for part in parts if part is not None)
 
 
 class TickSolve:

@@ -12,7 +12,7 @@ import attrs
 import numpy as np
 
 from ..dubins import ArcPath
-from ..fence import Line
+from ..fence import Line, Piece
 
 
 @attrs.frozen(eq=False)
@@ -28,7 +28,7 @@ class Course:
             neighbours are then compared where they are at the same place of it. None: at the same moment.
         note: what was worked out and was not asked, in words.
         strip: lines that no footprint may cross; how far along their normals one may reach counts from the origin of
-            the frame.
+            the frame. pieces: what no footprint may come near besides.
         waits, speeds: seconds of the drives until each robot sets out and the speed that it then drives at, shape
             (N,), m/s; None where all set out at once and arrive together.
         alike: whether all turn alike at the same time; where they do not, nobody copies anybody.
@@ -41,6 +41,7 @@ class Course:
     behind: Optional[np.ndarray] = None
     note: str = ""
     strip: tuple[Line, ...] = ()
+    pieces: tuple[Piece, ...] = ()
     waits: Optional[np.ndarray] = None
     speeds: Optional[np.ndarray] = None
     alike: bool = True

@@ -12,7 +12,7 @@ import numpy as np
 import shapely
 
 from ..dubins import ArcPath, through
-from ..fleet import Fleet
+from ..fleet import Fleet, Robot
 from ..settings import Settings
 from ..watch import margin
 from .scene import Laid, Scene
@@ -27,6 +27,7 @@ _ROUNDS = 6
 _PLACES = 600  # that are looked at, at most
 _LONGEST = 3.0  # times the length of a way, and both ways to the widest, that a detour may have
 _BOTH = (1.0, -1.0)  # left, right
+SIDES = (None, *_BOTH)  # the nearer one for each, and all to one side
 
 
 def choices(laid: Laid, scene: Scene, speed: float) -> tuple[Laid, ...]:
@@ -38,10 +39,12 @@ def choices(laid: Laid, scene: Scene, speed: float) -> tuple[Laid, ...]:
         return (laid,)
     fixed = ~np.isnan(laid.ends[:, 0])
     found: list[tuple[ArcPath, ...]] = []
-    for side in (None, *_BOTH):
+    for side in SIDES:
         ways = tuple(
-            _round(way, _blocked(scene.fleet, scene.settings, k, speed), side, _bend(scene.fleet, laid, k), fixed[k])
-            for k, way in enumerate(laid.ways)
+            round_areas(
+                way, blocked_by_site(scene.fleet, scene.settings, k, speed), side,
+                bend_of(scene.fleet.robots[k], laid.max_curvature), fixed[k],
+            ) for k, way in enumerate(laid.ways)
         )
         if ways not in found:
             found.append(ways)
@@ -56,23 +59,35 @@ def _with_ways(laid: Laid, ways: tuple[ArcPath, ...]) -> Laid:
     return attrs.evolve(laid, ways=ways, marks=laid.marks * longer[:, None])
 
 
-def _blocked(fleet: Fleet, settings: Settings, k: int, speed: float) -> list[shapely.Geometry]:
+def blocked_by_site(fleet: Fleet, settings: Settings, k: int, speed: float) -> list[shapely.Geometry]:
     """Where the middle of a robot may not be, joined where there is no way between two areas."""
-    footprint, rules = fleet.robots[k].footprint, settings.site_rules
-    wide = footprint.footprint_width / 2 + abs(footprint.footprint_offset_y) + _SLEWED * footprint.footprint_length
-    wide += rules.keep_out_clearance + float(margin(fleet, settings, speed)[k]) + _SPARE
+    rules = settings.site_rules
+    wide = half_width(fleet.robots[k]) + rules.keep_out_clearance + float(margin(fleet, settings, speed)[k])
     union = shapely.union_all([area.polygon.buffer(wide) for area in rules.keep_outs])
     return list(shapely.get_parts(union))
 
 
-def _bend(fleet: Fleet, laid: Laid, k: int) -> float:
-    return _BENDS * min(fleet.robots[k].limits.max_curvature, laid.max_curvature)
+def half_width(robot: Robot) -> float:
+    """How far a robot reaches to the side of its way, and some more, metres."""
+    footprint = robot.footprint
+    wide = footprint.footprint_width / 2 + abs(footprint.footprint_offset_y)
+    return wide + _SLEWED * footprint.footprint_length + _SPARE
 
 
-def _round(
+def bend_of(robot: Robot, max_curvature: float) -> float:
+    """Largest curvature of a detour, 1/m, in a manoeuvre that asks for no tighter bends than one, 1/m."""
+    return _BENDS * min(robot.limits.max_curvature, max_curvature)
+
+
+def round_areas(
     way: ArcPath, blocked: list[shapely.Geometry], side: Optional[float], bend: float, fixed: bool
 ) -> ArcPath:
-    """A way past everything that is in it; as it is where nothing is, or where it is partly driven backwards."""
+    """A way past everything that is in it; as it is where nothing is, or where it is partly driven backwards.
+
+    Args:
+        blocked: where it may not lead. side: 1 left, -1 right, None the nearer one. bend: largest curvature, 1/m.
+        fixed: whether it ends where it ends.
+    """
     if any(length < 0.0 for _, length in way.segments) or way.length < _STEP:
         return way
     straight, longest = way, _LONGEST * way.length + 2 * _WIDEST

@@ -101,6 +101,10 @@ class RowEnd(_Coupled):
     row_spacing: float = parameter(
         attrs.NOTHING, "distance from the middle line of a row to that of the next", "m", above=0.0, maximum=1e3
     )
+    row_width: float = parameter(
+        0.0, "free width of a row: beside it nobody drives where the rows are; 0: the whole row spacing", "m",
+        minimum=0.0, maximum=1e3,
+    )
     side: str = parameter(
         "left", "side on which the next rows lie, looking out into the headland", choices=("left", "right")
     )
@@ -128,6 +132,13 @@ class RowEnd(_Coupled):
             f"everyone back into the next rows on the {self.side} {how}, {self.row_spacing:g} m apart, in a headland "
             f"{self.depth:g} m deep"
         )
+
+    def __attrs_post_init__(self) -> None:
+        if self.row_width > self.row_spacing:
+            raise SettingsError(
+                f"{self.row_width:g} m is wider than row_spacing", key="row_width",
+                allowed=f"at most {self.row_spacing:g}, or 0",
+            )
 
     def listed(self) -> dict[str, int]:
         """The row of each robot that is named; SettingsError for an entry that cannot be read."""

@@ -82,7 +82,7 @@ def _check_near(name: str, scene: Scene, off: np.ndarray, sides: tuple[str, str]
     if abs(off[k]) > _OUT_OF_LINE:
         raise RefusedError(
             f"{name}: {scene.fleet.names[k]} stands {abs(off[k]):.2f} m {sides[0] if off[k] > 0 else sides[1]}, "
-            f"{_OUT_OF_LINE:g} m allowed", remedy,
+            f"{_OUT_OF_LINE:g} m allowed", f"ask again after this turn, or {remedy}" if scene.turning else remedy,
         )
 
 

@@ -11,10 +11,12 @@ import attrs
 import numpy as np
 
 from ...errors import RefusedError
+from ..fence import Piece
 from ..fleet import Fleet
 from .kinds import RowEnd
 
 _BESIDE = 0.35  # part of the row spacing by which a robot may stand beside the middle of its row
+_WATCHED = 1.0  # metres from the edge of a row within which a footprint is held off it
 _SKEW = math.radians(15.0)  # by which its heading may leave that of the rows
 
 
@@ -50,6 +52,22 @@ class Rows:
         """Where a robot is, on the middle of its row and along it."""
         place = self.origin + self.along[k] * self.out + self.spacing * self.now[k] * self.across
         return float(place[0]), float(place[1]), float(self.heading[k])
+
+    def edges(self, width: float, back: float) -> tuple[Piece, ...]:
+        """What lies between the rows, beside and beyond all that are driven, as far back as ``back`` metres.
+
+        Args:
+            width: free width of each row, metres.
+        """
+        numbers = np.concatenate([self.now, self.then])
+        half = (self.spacing - width) / 2 * self.across
+        found = []
+        for i in range(int(numbers.min()) - 1, int(numbers.max()) + 1):
+            end = self.origin + (i + 0.5) * self.spacing * self.across
+            far = end - back * self.out
+            corners = np.array([far - half, end - half, end + half, far + half] if width < self.spacing else [far, end])
+            found.append(Piece("the edge of a row", corners if self.side > 0.0 else corners[::-1], 0.0, _WATCHED))
+        return tuple(found)
 
     def ends(self, inside: float) -> np.ndarray:
         """In the next rows, so far inside, shape (N, 3); the heading is left open."""

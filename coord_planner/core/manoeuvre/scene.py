@@ -14,6 +14,8 @@ from ..fleet import Fleet
 from ..settings import Settings
 from .course import Course
 
+_STRAIGHT = 1e-3  # 1/m
+
 
 @attrs.frozen(eq=False)
 class Scene:
@@ -24,6 +26,7 @@ class Scene:
         neighbours: hops from robot to robot in the neighbour graph, shape (N, N), inf where there is no way.
         bends: curvatures that the robots drive at, shape (N,), 1/m; none when left out.
         hazard: a point that everybody keeps away from; None when none is known.
+        turning: whether somebody was in a bend when it was asked for, though the scene may be what follows it.
     """
 
     fleet: Fleet
@@ -33,6 +36,7 @@ class Scene:
     neighbours: np.ndarray
     bends: np.ndarray = attrs.Factory(lambda self: np.zeros(len(self.poses)), takes_self=True)
     hazard: Optional[tuple[float, float]] = None
+    turning: bool = attrs.Factory(lambda self: bool(np.abs(self.bends).max() > _STRAIGHT), takes_self=True)
 
 
 @attrs.frozen(eq=False)

@@ -13,7 +13,6 @@ import numpy as np
 
 from ...errors import ArrivedError
 from ..drive import AnyDrive
-from ..dubins import ArcPath
 from ..fleet import Fleet
 from ..settings import Settings
 from .course import Course, as_given
@@ -147,7 +146,7 @@ class Task(Course):
         moments = self.profile_time(times)
         passed, rate = [drive.distance(moments) for drive in self.drives], self._rate(times)
         poses = np.stack([way.sample(along) for way, along in zip(self.ways, passed)])
-        curvatures = np.stack([_curvatures(way, along) for way, along in zip(self.ways, passed)])
+        curvatures = np.stack([way.curvature(along) for way, along in zip(self.ways, passed)])
         return poses, np.stack([drive.speed(moments) * rate for drive in self.drives]), curvatures
 
 
@@ -189,9 +188,3 @@ def lay_out(
         coupling=(settings.coupling.strength if coupling is None else coupling) if laid.alike else 0.0,
         alignment=settings.coupling.alignment if alignment is None else alignment,
     )
-
-
-def _curvatures(way: ArcPath, along: np.ndarray) -> np.ndarray:
-    curvatures = np.array([curvature for curvature, _ in way.segments])
-    ends = np.cumsum([abs(length) for _, length in way.segments])
-    return curvatures[np.minimum(np.searchsorted(ends, along), len(curvatures) - 1)]

@@ -26,8 +26,11 @@ from .driving import COMFORT
 from .kinds import Wheel
 from .line import Line, line_of
 from .scene import Laid, Scene
-from .ways import as_start
+from .ways import as_start, joined, preceded, straightened
 
+_STRAIGHT = 1e-3  # 1/m
+_AS_ONE = 0.03  # 1/m by which a bend may differ from that of a line that turns as one
+_LEAST_SPEED = 0.1  # m/s
 _PIECES = 16  # short arcs of an easing
 _RESERVE = 0.9  # part of a limit that is asked for; the rest is left for corrections
 _SLOWEST = 0.1  # part of the asked speed below which a wheel turn is not slowed to fit
@@ -44,11 +47,53 @@ class _Turn:
 
 
 def lay(name: str, wanted: Wheel, scene: Scene) -> Laid:
-    """Parallel curves about the pivot; RefusedError with the missing metres where it cannot be turned about."""
+    """Parallel curves about the pivot; RefusedError with the missing metres where it cannot be turned about.
+
+    A line that is wheeling already comes out of that turn as one first; the angle counts from where it began.
+    """
+    angle, out = math.radians(wanted.angle_deg), _out_of_wheeling(scene)
+    if out is None:
+        scene, first = straightened(scene)
+        return preceded(_laid(name, wanted, scene, angle), first)
+    turned = attrs.evolve(scene, poses=np.array([way.end for way in out.ways]), bends=np.zeros(len(out.ways)))
+    after = _laid(name, wanted, turned, angle - out.ways[0].turning)
+    assert after.marks is not None
+    marks = np.concatenate([out.marks, out.marks[:, -1:] + after.marks[:, 1:]], axis=1)
+    return attrs.evolve(after, ways=tuple(map(joined, out.ways, after.ways)), marks=marks)
+
+
+@attrs.frozen(eq=False)
+class _Out:
+    """How a line comes out of a wheel turn: a way for each robot, and metres on them that all pass together."""
+
+    ways: tuple[ArcPath, ...]
+    marks: np.ndarray
+
+
+def _out_of_wheeling(scene: Scene) -> Optional[_Out]:
+    """Parallel curves on which the line straightens; None where it does not turn as one."""
+    if np.abs(scene.bends).max() < _STRAIGHT:
+        return None
+    try:
+        line = line_of("", scene)
+    except RefusedError:
+        return None
+    inner = int(np.argmax(np.abs(scene.bends)))
+    tightest, side = abs(float(scene.bends[inner])), math.copysign(1.0, float(scene.bends[inner]))
+    further = side * (line.across[inner] - line.across)
+    as_one = side * tightest / (1 + tightest * np.maximum(further, 0.0))
+    if further.min() < -line.tolerance or np.abs(scene.bends - as_one).max() > _AS_ONE:
+        return None
+    further = np.maximum(further, 0.0)
+    middles, lengths = _ramp(tightest, max(scene.speed_now, _LEAST_SPEED), further, scene, True)
+    turn = _Turn(middles[::-1], lengths[::-1], scene.speed_now)
+    return _Out(*_ways(scene.poses, turn, further, side, 0.0))
+
+
+def _laid(name: str, wanted: Wheel, scene: Scene, angle: float) -> Laid:
     line = line_of(name, scene)
-    angle = math.radians(wanted.angle_deg)
     side = math.copysign(1.0, angle)
-    radii, ahead = _radii(name, wanted, scene, line, side)
+    radii, ahead = _radii(name, wanted, scene, line, angle)
     moving = scene.speed_now > 0.0 or wanted.end_speed > 0.0 or ahead > _PIECES * 0.01
     turn = _fastest(name, abs(angle), radii, wanted.speed, scene, moving)
     check_speed(wanted.end_speed, wanted.end_speed, scene.fleet, scene.settings)
@@ -60,9 +105,9 @@ def lay(name: str, wanted: Wheel, scene: Scene) -> Laid:
     )
 
 
-def _radii(name: str, wanted: Wheel, scene: Scene, line: Line, side: float) -> tuple[np.ndarray, float]:
+def _radii(name: str, wanted: Wheel, scene: Scene, line: Line, angle: float) -> tuple[np.ndarray, float]:
     """Distance of each robot from the pivot across the line, shape (N,), and how far ahead of the line it lies, m."""
-    about, fleet = wanted.about(), scene.fleet
+    about, fleet, side = wanted.about(), scene.fleet, math.copysign(1.0, angle)
     across = side * line.across  # to the inner side
     inner = int(np.argmax(across))
     if about is not None and about.point is not None:
@@ -82,7 +127,7 @@ def _radii(name: str, wanted: Wheel, scene: Scene, line: Line, side: float) -> t
     else:
         ahead, radii = 0.0, across[inner] - across
         moving = scene.speed_now > 0.0 or wanted.end_speed > 0.0
-        radii = radii + _least(abs(math.radians(wanted.angle_deg)), radii, wanted.speed, scene, moving)
+        radii = radii + _least(abs(angle), radii, wanted.speed, scene, moving)
     smallest = 1.0 / fleet.robots[inner].limits.max_curvature
     if abs(radii.min()) < 1e-6:
         raise RefusedError(
@@ -149,19 +194,26 @@ def _eased(
     Steering binds: d kappa / dt is largest for everybody where the turn begins. So does the braking of the innermost
     where the group comes along at full speed: d/dt of v / (1 + kappa D) is -v D kappa' / (1 + kappa D)^2.
     """
-    width, fleet = float(further.max()), scene.fleet
-    middles = tightest * (np.arange(_PIECES) + 0.5) / _PIECES
-    rate = np.full(_PIECES, COMFORT * weakest(fleet.limit("max_curvature_rate")) / speed)
-    if moving and width > 0.0:
-        brake = COMFORT * min(weakest(fleet.limit("max_braking")), weakest(fleet.limit("max_acceleration")))
-        rate = np.minimum(rate, brake * (1 + middles * width) ** 2 / (speed**2 * width))
-    lengths = tightest / _PIECES / rate / (1 + middles * width)
+    middles, lengths = _ramp(tightest, speed, further, scene, moving)
     held = (angle - 2 * float(np.dot(middles, lengths))) / tightest
     if held < 0.0:
         return None
     return _Turn(
         np.concatenate([middles, [tightest], middles[::-1]]), np.concatenate([lengths, [held], lengths[::-1]]), speed
     )
+
+
+def _ramp(
+    tightest: float, speed: float, further: np.ndarray, scene: Scene, moving: bool
+) -> tuple[np.ndarray, np.ndarray]:
+    """Curvatures and lengths of the innermost's arcs in which it comes into a bend."""
+    width, fleet = float(further.max()), scene.fleet
+    middles = tightest * (np.arange(_PIECES) + 0.5) / _PIECES
+    rate = np.full(_PIECES, COMFORT * weakest(fleet.limit("max_curvature_rate")) / speed)
+    if moving and width > 0.0:
+        brake = COMFORT * min(weakest(fleet.limit("max_braking")), weakest(fleet.limit("max_acceleration")))
+        rate = np.minimum(rate, brake * (1 + middles * width) ** 2 / (speed**2 * width))
+    return middles, tightest / _PIECES / rate / (1 + middles * width)
 
 
 def _reach(turn: _Turn, angle: float) -> float:

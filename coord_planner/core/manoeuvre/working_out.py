@@ -112,7 +112,7 @@ def _on_the_site(laid: Laid, scene: Scene, speed: float, task: Callable[[Laid], 
 
 def _lay(name: str, manoeuvre: Manoeuvre, scene: Scene) -> Laid:
     lay = _LAY[type(manoeuvre)]
-    if isinstance(manoeuvre, (EqualRadius, ToEnds)):  # which know themselves what to do about bends
+    if isinstance(manoeuvre, (EqualRadius, ToEnds, Wheel)):  # which know themselves what to do about bends
         return lay(name, manoeuvre, scene)
     after, first = straightened(scene)
     return preceded(lay(name, manoeuvre, after), first)
