@@ -6,12 +6,13 @@
 import attrs
 import numpy as np
 import pytest
+import shapely
 from fleets import LATE, State, Yard, abreast, carts, settings
 from sites import site
 
-from coord_planner.core import manoeuvre
+from coord_planner.core import manoeuvre, outline
 from coord_planner.core.graph import path
-from coord_planner.core.manoeuvre import EqualRadius, Sequence, Straight, parts_of
+from coord_planner.core.manoeuvre import EqualRadius, Sequence, Straight, TurnAway, parts_of
 from coord_planner.core.settings import Horizon
 from coord_planner.errors import RefusedError, SettingsError
 from coord_planner.record.metrics import summary
@@ -165,6 +166,36 @@ def test_a_change_on_the_way_holds_for_the_next_part_too():
     assert here.coordinator.decision.coupling == 9.0
     here.run_to(State.ENDED)
     assert turned(here) == pytest.approx([30.0, 30.0], abs=1.0)
+
+
+def test_members_come_and_go_on_the_way_and_all_turn_away_from_a_hazard():
+    """Neighbours come from the poses; the sequence has a coupling of its own, whatever is made anew."""
+    rows = Sequence(("straight 6", "bend", "straight 8"), joint_speed=0.8, coupling=7.0, named={"bend": BEND})
+    chosen = settings(horizon={"intervals": 12}, neighbours={"source": "nearest"},
+                      hazard={"sight": 6.0, "expires": 30.0, "clearance": 1.0})
+    here = Yard(carts(3, response=LATE), abreast(3, 3.0), {"rows": rows, "away": TurnAway(after=4.0)}, chosen,
+                pose_noise_xy=0.02, pose_noise_heading_deg=0.5)
+    here.run(1.0)
+    assert here.begin("rows").ok
+    here.run(1.5)
+    here.want("cart_1", "cart_2")
+    until_part(here, "bend")
+    assert here.coordinator.decision.outside == ("cart_3",) and here.coordinator.decision.coupling == 7.0
+    here.run(2.0)
+    here.want("cart_1", "cart_2", "cart_3")  # too late for this part
+    until_part(here, "straight 8")
+    here.run(2.5)
+    assert here.coordinator.decision.outside == () and here.machines.speeds()[2] > 0.2
+    assert {edge[:2] for edge in here.coordinator.graph.edges} >= {("cart_1", "cart_2")}
+    ahead = here.machines.poses()[0]
+    point = ahead[:2] + 5.0 * np.array([np.cos(ahead[2]), np.sin(ahead[2])])
+    here.coordinator.arm("away", here.now)
+    assert here.coordinator.hazard(*map(float, point), here.now).ok
+    here.run_to(State.ENDED)
+    assert "away" in {decision.manoeuvre for decision in here.decisions} and max(here.breaches().values()) < 1e-6
+    shapes = outline.outlines(here.fleet.corners(), np.stack([poses for _, poses in here.track], axis=1))
+    assert shapely.distance(shapes, shapely.Point(point)).min() >= 1.0
+    assert outline.closest(shapes, outline.all_pairs(3))[0] >= here.settings.site_rules.min_clearance
 
 
 def test_another_manoeuvre_takes_the_place_of_a_sequence():

@@ -13,7 +13,7 @@ import attrs
 from .. import members
 from ..chain import chain_of
 from ..hazard import Point
-from ..manoeuvre import Manoeuvre, Task
+from ..manoeuvre import Manoeuvre
 from ..reference import Reference
 from .desk import Answered, Request
 from .joints import forget_next
@@ -50,12 +50,13 @@ def remake_if_free(situation: Situation, now: float) -> None:
 def remake(situation: Situation, now: float) -> None:
     """Make the rest of the manoeuvre anew, under what is now in force."""
     old, leaves, at = _branch(situation, now)
-    if leaves > old.end - 2 * situation.settings.horizon.interval:
+    if leaves > old.task.arrival - 2 * situation.settings.horizon.interval:  # it only settles from then on
         joining = situation.members.joining(situation.fleet.names)
-        situation.members.put_off(joining, "the running manoeuvre is nearly over")
+        if situation.chain is None or not situation.chain.more:  # otherwise they join the next part
+            situation.members.put_off(joining, "the running manoeuvre is nearly over")
         return
     fleet, graph, settings, driving = situation.fleet, situation.neighbours, situation.settings, situation.driving
-    task, wanted = _under_settings(situation, old.task), situation.manoeuvres.get(old.task.name)
+    task, wanted = old.task.under(settings), situation.manoeuvres.get(old.task.name)
     situation.desk.ask(
         situation.in_force, "change", lambda: members.rest(task, fleet, graph, settings, old, leaves, driving, wanted),
         lambda _a: None, "", at, partial(remake, situation),
@@ -88,17 +89,6 @@ def replace(
     )
     if owed and situation.desk.request is not None:
         situation.desk.request = attrs.evolve(situation.desk.request, supersedes_change=True)
-
-
-def _under_settings(situation: Situation, task: Task) -> Task:
-    """The task with the coupling that the settings ask for, where the manoeuvre has none of its own."""
-    own = situation.manoeuvres.get(task.name)
-    coupling, alignment = situation.settings.coupling.strength, situation.settings.coupling.alignment
-    if own is not None and own.coupling is not None:
-        coupling = own.coupling
-    if own is not None and own.alignment is not None:
-        alignment = own.alignment
-    return attrs.evolve(task, coupling=coupling if task.alike else 0.0, alignment=alignment)
 
 
 def follow_changes(situation: Situation, request: Request, now: float) -> None:

@@ -25,6 +25,7 @@ from .changing import look_for_neighbours
 from .ending import settle, stop
 from .facing import face_hazard
 from .joints import look_after_next
+from .renewal import remake_if_free
 from .situation import SINCE, Situation
 from .turnout import follow_members
 
@@ -107,6 +108,8 @@ def _prepare(situation: Situation, now: float) -> Optional[Prepared]:
         situation.take_up(pursuit.reference)
         if situation.chain is not None and pursuit.reference is situation.chain.expected:
             situation.silence, situation.chain = situation.chain.silence, situation.chain.moved_on()
+            if situation.members.joining(situation.fleet.names):  # who came too late for the part before
+                remake_if_free(situation, now)
     if pursuit.s(at) >= pursuit.reference.end:
         situation.planned_at = now  # nothing is left to plan: the commands run out in zeros
         return None

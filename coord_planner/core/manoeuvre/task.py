@@ -39,7 +39,8 @@ class Task(Course):
             the manoeuvre goes straight on at the end speed.
         drives: how fast each robot goes along its way, in seconds of a common clock of their own.
         pacing: seconds of the manoeuvre and the seconds of the drives that they stand for, joined by straight lines.
-        coupling, alignment: in force for this manoeuvre.
+        coupling, alignment: in force for this manoeuvre. own_coupling, own_alignment: whether they are its own and not
+            those of the settings.
         hazard: a point that everybody keeps away from; None when there is none.
         otherwise: another way to do the same, to be tried when this one cannot be kept.
         stands: positions of robots that the manoeuvre is not for: they come to a stand and have no end.
@@ -55,6 +56,8 @@ class Task(Course):
     pacing: tuple[tuple[float, ...], tuple[float, ...]]
     coupling: float
     alignment: float
+    own_coupling: bool = False
+    own_alignment: bool = False
     hazard: Optional[tuple[float, float]] = None
     otherwise: Optional[Task] = None
     stands: tuple[int, ...] = ()
@@ -88,6 +91,14 @@ class Task(Course):
         moments = self.profile_time(s)
         return np.stack([drive.furthest(moments) for drive in self.drives]).max(axis=0)
 
+    def under(self, settings: Settings) -> Task:
+        """The same task under other settings: where the manoeuvre has no coupling of its own, theirs counts."""
+        coupling = self.coupling if self.own_coupling else settings.coupling.strength
+        return attrs.evolve(
+            self, coupling=coupling if self.alike else 0.0,
+            alignment=self.alignment if self.own_alignment else settings.coupling.alignment,
+        )
+
     def slower(self, stretch: float, settings: Settings) -> Task:
         """The same task from its beginning in ``stretch`` times the time."""
         return self.stretched(0.0, stretch, settings.horizon.interval)
@@ -98,12 +109,12 @@ class Task(Course):
         Args:
             step: arrival is a whole number of these, seconds.
         """
-        arrival = step * math.ceil((start + max(self.arrival - start, 0.0) * stretch) / step - 1e-9)
+        if start >= self.arrival - 1e-9:  # it only settles
+            return self
+        arrival = step * math.ceil((start + (self.arrival - start) * stretch) / step - 1e-9)
         moments, passed = np.array(self.pacing)
         left = moments > start + 1e-9
-        late = (moments[left] - start) * (arrival - start) / max(self.arrival - start, 1e-9)
-        if not left.any():  # it only settles
-            late, passed, left = np.array([arrival - start]), np.array([self.driven]), np.array([True])
+        late = (moments[left] - start) * (arrival - start) / (self.arrival - start)
         pacing = (
             (start, *(start + late).tolist()), (float(self.profile_time(np.array(start))), *passed[left].tolist())
         )
@@ -187,4 +198,5 @@ def lay_out(
         drives=drives, pacing=((0.0, arrival), (0.0, driven)),
         coupling=(settings.coupling.strength if coupling is None else coupling) if laid.alike else 0.0,
         alignment=settings.coupling.alignment if alignment is None else alignment,
+        own_coupling=coupling is not None, own_alignment=alignment is not None,
     )

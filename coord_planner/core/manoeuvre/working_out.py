@@ -147,7 +147,8 @@ def go_on(
     def rest(laid: Laid) -> Task:
         return lay_out(
             task.name, fleet, settings, laid, speed=task.speed, end_speed=task.end_speed, speed_now=0.0,
-            coupling=task.coupling, alignment=task.alignment,
+            coupling=task.coupling if task.own_coupling else None,
+            alignment=task.alignment if task.own_alignment else None,
         )
 
     return _on_the_site(laid, Scene(fleet, settings, poses, 0.0, neighbours, hazard=hazard), task.speed, rest)
