@@ -111,9 +111,9 @@ def test_robots_too_far_apart_are_refused():
 
 
 def test_neighbours_change_on_the_way_and_the_rest_is_made_for_them():
-    """From abreast into file: who was two places away comes near. No command jumps."""
+    """Into a wider line: who was two places away and near goes out of reach. No command jumps."""
     chosen = Neighbours(source="within_range", range=5.5, hysteresis=0.05)
-    yard = sensing(3, chosen, form=Form(shape="line", spacing=3.2, heading_deg=0.0, coupling=1.0))
+    yard = sensing(3, chosen, form=Form(shape="line", spacing=4.0, heading_deg=0.0, coupling=1.0))
     assert yard.begin("form").ok
     before = pairs(yard.coordinator.graph)
     assert len(before) == 3
