@@ -342,6 +342,7 @@ class PlannerNode(LifecycleNode):
 
     def halt(self, reason: str) -> Answer:
         """Stop the fleet."""
+        self._requests.call_off("the fleet was halted")
         answer: Answer = self._coordinator.halt(self.time(), reason)
         self.collect()
         return answer

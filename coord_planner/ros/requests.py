@@ -6,10 +6,13 @@
 from __future__ import annotations
 
 import functools
+import time
 from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
 
 from rclpy.callback_groups import ReentrantCallbackGroup
+from rclpy.clock import Clock
+from rclpy.clock_type import ClockType
 from rclpy.task import Future
 from std_srvs.srv import Trigger
 
@@ -21,6 +24,12 @@ if TYPE_CHECKING:
     from .planner_node import PlannerNode
 
 Answered = Callable[[Answer], None]
+_Ask = Callable[[Snapshot, Answered], None]
+
+# Seconds after configuration for which a request waits for poses that were never heard: until then those who send them
+# may not have been found yet.
+_FINDING = 3.0
+_AGAIN = 0.05  # seconds
 
 
 class Requests:
@@ -29,6 +38,8 @@ class Requests:
     def __init__(self, node: PlannerNode, manoeuvres: Mapping[str, Manoeuvre]) -> None:
         self._node = node
         self._waiting: set[Future] = set()
+        self._unheard: set[Future] = set()  # wait for poses
+        self._made, self._steady = time.monotonic(), Clock(clock_type=ClockType.STEADY_TIME)
         group = ReentrantCallbackGroup()  # a begin that waits for its answer must not hold up anything else
         self._services = [
             node.create_service(Trigger, f"~/begin/{name}", functools.partial(self._on_begin, name),
@@ -51,6 +62,11 @@ class Requests:
     def refuse_all(self, words: str) -> None:
         """Whoever still waits is refused."""
         for future in list(self._waiting):
+            self._settle(future, Answer(False, words))
+
+    def call_off(self, words: str) -> None:
+        """Whoever still waits for poses is refused: the fleet was halted meanwhile."""
+        for future in list(self._unheard):
             self._settle(future, Answer(False, words))
 
     def begin(self, request: messages.Request) -> Future:
@@ -82,20 +98,40 @@ class Requests:
     def _on_abandon(self, _request: Any, response: Trigger.Response) -> Trigger.Response:
         return _filled(response, self._node.reporter.note(self._node.coordinator.abandon(self._node.time())))
 
-    def _ask(self, ask: Callable[[Snapshot, Answered], None], request_id: str = "") -> Future:
+    def _ask(self, ask: _Ask, request_id: str = "") -> Future:
         future: Future = Future(executor=self._node.executor)
         self._waiting.add(future)
-        refusal = self._node.refusal()
-        snapshot = self._node.snapshot()
-        if snapshot is None or refusal:
-            self._settle(future, Answer(False, refusal, request_id))
-            return future
-        ask(snapshot, lambda answer: self._node.post(functools.partial(self._settle, future, answer)))
-        self._node.collect()
-        self._node.reporter.report()
+        self._put(future, ask, request_id)
         return future
 
+    def _put(self, future: Future, ask: _Ask, request_id: str) -> None:
+        if future not in self._waiting:
+            return
+        refusal, snapshot = self._node.refusal(), self._node.snapshot()
+        if snapshot is None or refusal:
+            self._settle(future, Answer(False, refusal, request_id))
+        elif self._finding and not set(self._node.coordinator.fleet.names) <= set(snapshot.poses):
+            self._unheard.add(future)
+            self._later(functools.partial(self._put, future, ask, request_id))
+        else:
+            self._unheard.discard(future)
+            ask(snapshot, lambda answer: self._node.post(functools.partial(self._settle, future, answer)))
+            self._node.collect()
+            self._node.reporter.report()
+
+    @property
+    def _finding(self) -> bool:
+        return time.monotonic() - self._made < _FINDING
+
+    def _later(self, again: Callable[[], None]) -> None:
+        def fire() -> None:
+            self._node.destroy_timer(timer)
+            again()
+
+        timer = self._node.create_timer(_AGAIN, fire, clock=self._steady)
+
     def _settle(self, future: Future, answer: Answer) -> None:
+        self._unheard.discard(future)
         if future in self._waiting:
             self._waiting.discard(future)
             future.set_result(answer)
