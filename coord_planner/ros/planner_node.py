@@ -172,6 +172,7 @@ class PlannerNode(LifecycleNode):
             self.create_timer(1.0 / settings.commands.rate, self._send, clock=clock),
         ]
         self.active = True
+        self._requests.open()
         self._beat()
         self.reporter.tell()
         return TransitionCallbackReturn.SUCCESS

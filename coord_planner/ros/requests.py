@@ -26,8 +26,8 @@ if TYPE_CHECKING:
 Answered = Callable[[Answer], None]
 _Ask = Callable[[Snapshot, Answered], None]
 
-# Seconds after configuration for which a request waits for poses that were never heard: until then those who send them
-# may not have been found yet.
+# Seconds after activation for which a request waits for fresh poses: those who send them may not have been found yet,
+# and nothing was taken in while the planner listened for others.
 _FINDING = 3.0
 _AGAIN = 0.05  # seconds
 
@@ -39,7 +39,7 @@ class Requests:
         self._node = node
         self._waiting: set[Future] = set()
         self._unheard: set[Future] = set()  # wait for poses
-        self._made, self._steady = time.monotonic(), Clock(clock_type=ClockType.STEADY_TIME)
+        self._activated, self._steady = time.monotonic(), Clock(clock_type=ClockType.STEADY_TIME)
         group = ReentrantCallbackGroup()  # a begin that waits for its answer must not hold up anything else
         self._services = [
             node.create_service(Trigger, f"~/begin/{name}", functools.partial(self._on_begin, name),
@@ -63,6 +63,10 @@ class Requests:
         """Whoever still waits is refused."""
         for future in list(self._waiting):
             self._settle(future, Answer(False, words))
+
+    def open(self) -> None:
+        """The planner is active from now on."""
+        self._activated = time.monotonic()
 
     def call_off(self, words: str) -> None:
         """Whoever still waits for poses is refused: the fleet was halted meanwhile."""
@@ -110,7 +114,7 @@ class Requests:
         refusal, snapshot = self._node.refusal(), self._node.snapshot()
         if snapshot is None or refusal:
             self._settle(future, Answer(False, refusal, request_id))
-        elif self._finding and not set(self._node.coordinator.fleet.names) <= set(snapshot.poses):
+        elif time.monotonic() - self._activated < _FINDING and not self._all_fresh(snapshot):
             self._unheard.add(future)
             self._later(functools.partial(self._put, future, ask, request_id))
         else:
@@ -119,9 +123,10 @@ class Requests:
             self._node.collect()
             self._node.reporter.report()
 
-    @property
-    def _finding(self) -> bool:
-        return time.monotonic() - self._made < _FINDING
+    def _all_fresh(self, snapshot: Snapshot) -> bool:
+        oldest = snapshot.time - self._node.configuration.settings.poses.max_age
+        names, poses = self._node.coordinator.fleet.names, snapshot.poses
+        return all(name in poses and poses[name].stamp > oldest for name in names)
 
     def _later(self, again: Callable[[], None]) -> None:
         def fire() -> None:
