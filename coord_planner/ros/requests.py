@@ -26,9 +26,9 @@ if TYPE_CHECKING:
 Answered = Callable[[Answer], None]
 _Ask = Callable[[Snapshot, Answered], None]
 
-# Seconds after activation for which a request waits for fresh poses: those who send them may not have been found yet,
+# Seconds after activation for which a request waits for fresh poses: who sends them may not be found yet, or just start,
 # and nothing was taken in while the planner listened for others.
-_FINDING = 3.0
+_FINDING = 10.0
 _AGAIN = 0.05  # seconds
 
 
