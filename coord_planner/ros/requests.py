@@ -26,8 +26,8 @@ if TYPE_CHECKING:
 Answered = Callable[[Answer], None]
 _Ask = Callable[[Snapshot, Answered], None]
 
-# Seconds after activation for which a request waits for fresh poses: who sends them may not be found yet, or just start,
-# and nothing was taken in while the planner listened for others.
+# Seconds after activation for which a request waits for fresh poses: who sends them may not be found yet, or just
+# starts, and nothing was taken in while the planner listened for others.
 _FINDING = 10.0
 _AGAIN = 0.05  # seconds
 
