@@ -69,7 +69,8 @@ def test_a_stronger_coupling_in_mid_turn_is_seen_at_once_and_brings_the_headings
     taken = hand.set(coupling__strength=STRONG)
     assert taken.successful, taken.reason
     hand.until(lambda: coupling(hand).get("coupling") == f"{STRONG:g}", what="the new coupling on /diagnostics")
-    assert "in force since" in coupling(hand)["change"] and hand.status["state"] == "moving"
+    hand.until(lambda: "in force since" in coupling(hand)["change"], seconds=2.0, what="the change in force")
+    assert hand.status["state"] == "moving"
     hand.until(lambda: f"coupling {STRONG:g}" in shown, what="the new coupling among the markers")
     hand.until_state("ended", seconds=60.0)
     hand.spin(1.2)
