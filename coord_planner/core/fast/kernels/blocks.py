@@ -17,6 +17,7 @@ import numpy as np
 from .compiled import inner
 from .fields import COS, COST_H, FULL_SPEED, LEAVE, MEAN_K, MEAN_V, SIN, TURN_SPEED, X0, Y0, H, X, Y
 from .objective import aligning
+from .sweeps import gather_later
 
 SOFT = 1e-2  # stiffness (1/m^2) of all rows of a pair below which it does not bend the cost noticeably
 FLAT = 1e-4  # curvature (1/rad^2) of shadows below which it does not either
@@ -59,7 +60,7 @@ def sums(pairs, wrench, bent, near, stiff, pressure, robot, roll, ends, span, ed
                 weight = aligning(span, edges, edge_price, roll, e, i)
                 found[5, edges[e, 0], i] += weight
                 found[5, edges[e, 1], i] += weight
-    _from_the_end(found)
+    gather_later(found)
 
 
 @inner
@@ -71,14 +72,6 @@ def _square(found, k, i, stiff, wrench, side, p):
     found[3, k, i] += stiff * y * y
     found[4, k, i] += stiff * y * torque
     found[5, k, i] += stiff * torque * torque
-
-
-@inner
-def _from_the_end(values):
-    for c in range(values.shape[0]):
-        for k in range(values.shape[1]):
-            for i in range(values.shape[2] - 2, -1, -1):
-                values[c, k, i] += values[c, k, i + 1]
 
 
 @inner

@@ -30,12 +30,12 @@ def gather(pairs, wrench, robot, roll, push, ends, wrenches):
 
 
 @inner
-def gather_later(wrenches):
-    """Of each node and all later ones, in place."""
-    for c in range(wrenches.shape[0]):
-        for k in range(wrenches.shape[1]):
-            for i in range(wrenches.shape[2] - 2, -1, -1):
-                wrenches[c, k, i] += wrenches[c, k, i + 1]
+def gather_later(values):
+    """Sums over each node and all later ones, in place, of values at the nodes, shape (C, N, M)."""
+    for c in range(values.shape[0]):
+        for k in range(values.shape[1]):
+            for i in range(values.shape[2] - 2, -1, -1):
+                values[c, k, i] += values[c, k, i + 1]
 
 
 @inner
