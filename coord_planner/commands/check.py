@@ -15,7 +15,6 @@ from ..config.notes import notes
 from ..config.security_policy import policy
 from ..core.fleet import Robot
 from ..core.graph import hop_fraction
-from ..core.judge import SHORT
 from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds, TurnAway
 from ..core.settings import SiteRules
 from ..errors import SettingsError
@@ -23,6 +22,8 @@ from ..trial.falling_silent import Prospect, prospect
 from .progress import progress_shown
 from .speaking import CAUTION, DID_NOT_HOLD, errors_reported, say, table, write, write_heading, write_table
 from .targets import prepare_file
+
+_NOBODY = "one robot, nobody and nothing to come near."
 
 
 def check(
@@ -194,23 +195,23 @@ def _in_words(found: Prospect, rules: SiteRules) -> str:
     silence = found.silence
     if found.refused:
         return f"would be refused from the starts of the file: {found.refused}."
-    words, unsafe = [], False
-    if silence is not None and silence.nearing is not None:
+    if silence is None:
+        return _NOBODY
+    words, unsafe = [], silence.unsafe(rules.min_clearance)
+    if silence.nearing is not None:
         near = silence.nearing
-        short = rules.min_clearance - near.clearance
-        unsafe = short > SHORT
         compared = f"; the site allows {rules.min_clearance:g} m"
-        if unsafe:
-            compared = f", {short:.2f} m less than the site allows"
+        if unsafe.nearing is not None:
+            compared = f", {rules.min_clearance - near.clearance:.2f} m less than the site allows"
         words.append(f"robots that time out separately come within {near.clearance:.2f} m ({' and '.join(near.pair)}, "
                      f"silent after {near.instant:.1f} s){compared}.")
-    if silence is not None and silence.entering is not None:
+    if silence.entering is not None:
         into = silence.entering
-        inside = into.spare < -SHORT
-        unsafe = unsafe or inside
-        gap = f"{-into.spare:.2f} m too near to" if inside else f"with {into.spare:.2f} m to spare to"
+        gap = f"with {into.spare:.2f} m to spare to"
+        if unsafe.entering is not None:
+            gap = f"{-into.spare:.2f} m too near to"
         words.append(f"One comes {gap} {into.area} ({into.robot}, silent after {into.instant:.1f} s).")
-    if unsafe:
+    if unsafe.nearing is not None or unsafe.entering is not None:
         words.append("Shorter command time-outs, a lower speed or more room would help; with "
                      "site_rules.refuse_unsafe_silence it would be refused.")
-    return " ".join(words) or "one robot, nobody and nothing to come near."
+    return " ".join(words) or _NOBODY

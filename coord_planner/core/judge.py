@@ -17,13 +17,12 @@ from .fleet import Fleet
 from .graph import NeighbourGraph
 from .messages import Caution, Snapshot
 from .observer import Estimate
-from .plan import closest_along
+from .plan import SHORT, closest_along
 from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND
 from .pursuit import Pursuit
 from .settings import Settings
 from .silence import Silence
 
-SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
 _HOLD = 1.0  # seconds for which a warning stays after it was last raised, so that none flickers
 _AGING = 0.5  # part of poses.max_age from which a pose is called old
 _SLOW_FACTOR = 0.7  # part of its commanded speed below which a robot is called slow
@@ -187,11 +186,12 @@ def _plans(view: View) -> list[Caution]:
     found = []
     if view.refused_change:
         found.append(rules.change_refused(view.settings, view.refused_change))
-    silence, allowed = view.silence, view.settings.site_rules.min_clearance
-    if silence is not None and silence.nearing is not None and silence.nearing.clearance < allowed - SHORT:
-        found.append(rules.silence_unsafe(view.settings, silence.nearing))
-    if silence is not None and silence.entering is not None and silence.entering.spare < -SHORT:
-        found.append(rules.silence_unsafe_near(view.settings, silence.entering))
+    if view.silence is not None:
+        unsafe = view.silence.unsafe(view.settings.site_rules.min_clearance)
+        if unsafe.nearing is not None:
+            found.append(rules.silence_unsafe(view.settings, unsafe.nearing))
+        if unsafe.entering is not None:
+            found.append(rules.silence_unsafe_near(view.settings, unsafe.entering))
     return found
 
 

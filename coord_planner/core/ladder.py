@@ -17,7 +17,7 @@ import numpy as np
 
 from . import ocp, rules, solver
 from .messages import Caution
-from .plan import Plan, closest_along
+from .plan import SHORT, Plan, closest_along
 from .problem import CURVATURE_COMMAND, POSE, SPEED_COMMAND, Problem
 from .pursuit import Prepared
 from .rollout import rolled_out
@@ -25,7 +25,6 @@ from .settings import Settings
 from .tick import paced, sound, usable
 
 _NEAR = 0.5  # metres or radians by which the last plan may miss the end by now and still be driven
-_SHORT = 2e-3  # metres
 _MOST = 0.9  # part of the budget after which a solver has run out of it
 _TURNED = 1e-3  # part by which a product of speed and curvature may pass its limit, for rounding
 
@@ -137,7 +136,7 @@ def _turns_within_limits(problem: Problem, plan: Plan) -> bool:
 def _least(prepared: Prepared, settings: Settings) -> float:
     """Clearance that counts as kept, metres: the site's, or, where robots are nearer already, what they have."""
     poses = prepared.problem.initial[:, None, POSE]
-    return min(settings.site_rules.min_clearance, closest_along(prepared.problem.fleet, poses)[0]) - _SHORT
+    return min(settings.site_rules.min_clearance, closest_along(prepared.problem.fleet, poses)[0]) - SHORT
 
 
 def _clear_of_fences(prepared: Prepared, plan: Plan, settings: Settings) -> bool:
@@ -145,4 +144,4 @@ def _clear_of_fences(prepared: Prepared, plan: Plan, settings: Settings) -> bool
     if not (fencing.pieces or fencing.lines):
         return True
     now = fencing.least(fleet, prepared.problem.initial[:, None, POSE])[0]
-    return bool(fencing.least(fleet, plan.dense(1))[0] >= min(now, 0.0) - _SHORT)
+    return bool(fencing.least(fleet, plan.dense(1))[0] >= min(now, 0.0) - SHORT)

@@ -15,6 +15,8 @@ from .fast.engine import kernels
 from .fleet import Fleet
 from .problem import POSE, STATES, Problem
 
+SHORT = 2e-3  # metres by which a clearance may be short for the sake of rounding
+
 
 @attrs.frozen(eq=False)
 class Plan:

@@ -16,7 +16,7 @@ import numpy as np
 from .fence import Fencing
 from .fleet import Fleet
 from .motion import drive, lags
-from .plan import closest_along
+from .plan import SHORT, closest_along
 from .problem import CURVATURE, CURVATURE_COMMAND, POSE, SPEED, SPEED_COMMAND
 from .reference import Reference
 
@@ -59,6 +59,14 @@ class Silence:
 
     nearing: Optional[Nearing]
     entering: Optional[Entering]
+
+    def unsafe(self, allowed: float) -> Silence:
+        """What of it comes too near, None where nothing does. allowed: smallest clearance between robots, metres."""
+        near, into = self.nearing, self.entering
+        return Silence(
+            near if near is not None and near.clearance < allowed - SHORT else None,
+            into if into is not None and into.spare < -SHORT else None,
+        )
 
 
 def worst(reference: Reference, fleet: Fleet) -> Silence:

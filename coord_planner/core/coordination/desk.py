@@ -17,7 +17,6 @@ from ..case import PlannerCase
 from ..chain import Chain
 from ..fleet import Fleet
 from ..graph import NeighbourGraph
-from ..judge import SHORT
 from ..messages import Answer
 from ..plan import Plan
 from ..problem import Problem
@@ -146,15 +145,16 @@ def figures(made: Reference) -> str:
 def _check_silence(silence: Silence, site_rules: SiteRules) -> None:
     if not site_rules.refuse_unsafe_silence:
         return
-    near, into = silence.nearing, silence.entering
-    if near is not None and site_rules.min_clearance - near.clearance > SHORT:
+    unsafe = silence.unsafe(site_rules.min_clearance)
+    near, into = unsafe.nearing, unsafe.entering
+    if near is not None:
         raise RefusedError(
             f"should the planner fall silent after {near.instant:.1f} s, {' and '.join(near.pair)} would come within "
             f"{near.clearance:.2f} m of each other, {site_rules.min_clearance - near.clearance:.2f} m short, before "
             "both stand",
             "shorten their command time-outs, lower the speed or widen the spacing",
         )
-    if into is not None and into.spare < -SHORT:
+    if into is not None:
         raise RefusedError(
             f"should the planner fall silent after {into.instant:.1f} s, {into.robot} would come {-into.spare:.2f} m "
             f"too near to {into.area} before it stands",

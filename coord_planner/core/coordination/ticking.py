@@ -14,11 +14,11 @@ from ...errors import SolveError
 from .. import ladder, rules
 from ..caps import caps
 from ..fence import hazards
-from ..judge import SHORT, View
+from ..judge import View
 from ..membership import overlooked
 from ..messages import Caution, Decision, Snapshot, State
 from ..observer import Estimate
-from ..plan import Plan
+from ..plan import SHORT, Plan
 from ..problem import POSE
 from ..pursuit import Prepared, Pursuit
 from .changing import look_for_neighbours
