@@ -26,7 +26,7 @@ _STILL = 1e-3  # metres that who stands may seem to drive
 def in_the_way(task: Task, fleet: Fleet, settings: Settings, states: np.ndarray) -> bool:
     """Whether somebody who stands is in anybody's way, for guessed states of shape (N, K, 7)."""
     return any(
-        way.length > 0.0 and _line(way).intersects(shapely.union_all(_blocked(task, fleet, settings, states, k)))
+        way.length > 0.0 and _line(way).intersects(_blocked(task, fleet, settings, states, k))
         for k, way in _ways(task, states).items()
     )
 
@@ -40,9 +40,10 @@ def guesses(task: Task, fleet: Fleet, settings: Settings, states: np.ndarray) ->
         states: the guess as it is, in which those who stand come to a stand.
     """
     ways = _ways(task, states)
+    standing = {k: _blocked(task, fleet, settings, states, k) for k in ways}
     found: list[dict[int, ArcPath]] = []
     for side in SIDES:
-        bent = {k: _bent(task, fleet, settings, states, k, way, side) for k, way in ways.items()}
+        bent = {k: _bent(task, fleet, settings, standing[k], k, way, side) for k, way in ways.items()}
         other = {k: way for k, way in bent.items() if way is not None and way is not ways[k]}
         if other and None not in bent.values() and other not in found:
             found.append(other)
@@ -50,16 +51,16 @@ def guesses(task: Task, fleet: Fleet, settings: Settings, states: np.ndarray) ->
 
 
 def _bent(
-    task: Task, fleet: Fleet, settings: Settings, states: np.ndarray, k: int, way: ArcPath, side: Optional[float]
+    task: Task, fleet: Fleet, settings: Settings, standing: shapely.Geometry, k: int, way: ArcPath,
+    side: Optional[float],
 ) -> Optional[ArcPath]:
     """Robot k's way round those who stand and the site's keep-outs; None where it leads into one of them."""
-    standing = _blocked(task, fleet, settings, states, k)
-    if not standing or not _line(way).intersects(shapely.union_all(standing)):
+    if not _line(way).intersects(standing):
         return way
-    blocked = list(shapely.get_parts(shapely.union_all([*standing, *blocked_by_site(fleet, settings, k, task.speed)])))
-    end = bool(np.isfinite(task.ends[k, 0]))
-    bent = round_areas(way, blocked, side, bend_of(fleet.robots[k], task.max_curvature), end)
-    return None if _line(bent).intersects(shapely.union_all(blocked)) else bent
+    blocked = shapely.union_all([standing, *blocked_by_site(fleet, settings, k, task.speed)])
+    end, bend = bool(np.isfinite(task.ends[k, 0])), bend_of(fleet.robots[k], task.max_curvature)
+    bent = round_areas(way, list(shapely.get_parts(blocked)), side, bend, end)
+    return None if _line(bent).intersects(blocked) else bent
 
 
 def _line(way: ArcPath) -> shapely.LineString:
@@ -76,16 +77,12 @@ def _ways(task: Task, states: np.ndarray) -> dict[int, ArcPath]:
     }
 
 
-def _blocked(
-    task: Task, fleet: Fleet, settings: Settings, states: np.ndarray, k: int
-) -> list[shapely.Geometry]:
+def _blocked(task: Task, fleet: Fleet, settings: Settings, states: np.ndarray, k: int) -> shapely.Geometry:
     """Where the middle of robot k may not be, for the sake of those who stand."""
     rows, kept = list(task.stands), margin(fleet, settings, task.speed)
     shapes = outline.outlines(fleet.corners()[rows], states[rows, -1, POSE])
     wide = half_width(fleet.robots[k]) + settings.site_rules.min_clearance + kept[k]
-    return list(shapely.get_parts(shapely.union_all(
-        [shapely.buffer(shape, wide + float(kept[j])) for j, shape in zip(rows, shapes)]
-    )))
+    return shapely.union_all([shapely.buffer(shape, wide + float(kept[j])) for j, shape in zip(rows, shapes)])
 
 
 def _driven(states: np.ndarray, ways: dict[int, ArcPath], bent: dict[int, ArcPath]) -> np.ndarray:
