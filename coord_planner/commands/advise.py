@@ -13,6 +13,7 @@ from .. import config
 from ..errors import RefusedError, SettingsError
 from ..record.advice import Question, of_graph, of_manoeuvre
 from ..trial.copying import beside_law, quiet, with_coupling
+from ..trial.kernels import load_kernels
 from ..trial.rehearsal import rehearse
 from .advised import write_advice
 from .loading import configured
@@ -58,6 +59,7 @@ def advise(
             configuration.manoeuvre(name)
         if rehearsed:
             configuration.all_starts()
+            load_kernels(say)
         found = of_graph(configuration, question)
         found["manoeuvres"] = _manoeuvres(configuration, chosen or list(configuration.manoeuvres)) if rehearsed else {}
     if as_json:

@@ -19,6 +19,7 @@ from ..core.manoeuvre import EqualRadius, Manoeuvre, ToEnds, TurnAway
 from ..core.settings import SiteRules
 from ..errors import SettingsError
 from ..trial.falling_silent import Prospect, prospect
+from ..trial.kernels import load_kernels
 from .progress import progress_shown
 from .speaking import CAUTION, DID_NOT_HOLD, errors_reported, say, table, write, write_heading, write_table
 from .targets import prepare_file
@@ -57,6 +58,8 @@ def check(
     _write_manoeuvres(configuration)
     _write_rules(configuration)
     _write_notes(configuration)
+    if not quick:
+        load_kernels(say)
     kept = quick or _write_silence(configuration)
     write(CAUTION)
     if not kept:
