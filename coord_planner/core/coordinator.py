@@ -140,7 +140,7 @@ class Coordinator:
                 situation.desk.cancel("halted")
                 situation.state, situation.reason = State.IDLE, reason
                 return Answer(True, "nothing has moved")
-            if situation.state is State.MOVING:
+            if situation.moving:
                 found = stop(situation, now, reason)
                 return Answer(True, f"stopping {found.manner}, {found.duration:.1f} s")
             if situation.state is State.HELD:
@@ -203,7 +203,7 @@ class Coordinator:
                 return Answer(False, f"({x:g}, {y:g}) is no point of a site")
             watch.look(now)
             watch.hear(point, now, situation.settings)
-            if situation.state is not State.MOVING:
+            if not situation.moving:
                 seconds = situation.settings.hazard.expires
                 return Answer(True, f"kept away from for {seconds:g} s; nothing is moved by it")
             face_hazard(situation, now, situation.observer.estimate(now, situation.planned).states[:, POSE])
@@ -250,7 +250,7 @@ class Coordinator:
                 wanted, before, max(elapsed, 0.0), fleet, situation.settings.site_rules, situation.caps, rolling
             )
             history.add(now, allowed)
-            if nonsense.any() and situation.state is State.MOVING:
+            if nonsense.any() and situation.moving:
                 stop(situation, now, "a plan held numbers that are not finite")
             return {
                 name: Command(float(speed), float(curvature))

@@ -68,7 +68,7 @@ class PlannerNode(LifecycleNode):
         self.signalled = False  # a transition to the end of the node's life: the same as a first signal
         self.run_id = uuid.uuid4().hex[:12]
         self._timekeeper = Timekeeper(self.now, bool(self.get_parameter("use_sim_time").value))
-        self._steady = Clock(clock_type=ClockType.STEADY_TIME)
+        self.steady = Clock(clock_type=ClockType.STEADY_TIME)
         self._leaving = ""
         self.active, self._configured = False, False
         self._mail: deque[Callable[[], None]] = deque()
@@ -151,7 +151,7 @@ class PlannerNode(LifecycleNode):
         self._start_coordinator()
         made.callback(lambda: self._worker.close())
         for period, body in ((1.0, self._on_second), (1.0 / heartbeats.RATE, self._beat)):
-            made.callback(self.destroy_timer, self.create_timer(period, body, clock=self._steady))
+            made.callback(self.destroy_timer, self.create_timer(period, body, clock=self.steady))
 
     @logged
     def on_activate(self, _state: LifecycleState) -> TransitionCallbackReturn:
@@ -166,7 +166,7 @@ class PlannerNode(LifecycleNode):
         self._renew()
         settings = self.configuration.settings
         # When the system's clock is set back, timers that go by it stand still.
-        clock = None if self.simulated_time else self._steady
+        clock = None if self.simulated_time else self.steady
         self._running = [
             self.create_timer(1.0 / settings.horizon.rate, self._tick, clock=clock),
             self.create_timer(1.0 / settings.commands.rate, self._send, clock=clock),

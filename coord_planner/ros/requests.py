@@ -11,8 +11,6 @@ from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING, Any
 
 from rclpy.callback_groups import ReentrantCallbackGroup
-from rclpy.clock import Clock
-from rclpy.clock_type import ClockType
 from rclpy.task import Future
 from std_srvs.srv import Trigger
 
@@ -39,7 +37,7 @@ class Requests:
         self._node = node
         self._waiting: set[Future] = set()
         self._unheard: set[Future] = set()  # wait for poses
-        self._activated, self._steady = time.monotonic(), Clock(clock_type=ClockType.STEADY_TIME)
+        self._activated = time.monotonic()
         group = ReentrantCallbackGroup()  # a begin that waits for its answer must not hold up anything else
         self._services = [
             node.create_service(Trigger, f"~/begin/{name}", functools.partial(self._on_begin, name),
@@ -133,7 +131,7 @@ class Requests:
             self._node.destroy_timer(timer)
             again()
 
-        timer = self._node.create_timer(_AGAIN, fire, clock=self._steady)
+        timer = self._node.create_timer(_AGAIN, fire, clock=self._node.steady)
 
     def _settle(self, future: Future, answer: Answer) -> None:
         self._unheard.discard(future)

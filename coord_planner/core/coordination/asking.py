@@ -30,7 +30,7 @@ def begin(
     try:
         wanted = manoeuvre_of(situation, name, overrides)
         check_time(snapshot)
-        if situation.state is State.MOVING:
+        if situation.moving:
             check_alone(snapshot)
             replace(situation, snapshot.time, name, wanted, answered, request_id)
             return
@@ -67,7 +67,7 @@ def then(
     try:
         wanted = manoeuvre_of(situation, name, overrides)
         check_time(snapshot)
-        if situation.state is not State.MOVING or pursuit is None:
+        if not situation.moving or pursuit is None:
             raise RefusedError(f"nothing is under way: the fleet is {situation.state.value}", f"begin {name}")
         if desk.request is not None and desk.request.kind in ("change", "replace"):
             raise RefusedError("the rest of the manoeuvre is just being made anew", "ask again in a moment")

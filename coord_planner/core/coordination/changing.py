@@ -10,7 +10,6 @@ from typing import Optional
 from .. import members
 from ..fleet import Fleet
 from ..graph import NeighbourGraph
-from ..messages import State
 from ..observer import Estimate
 from ..settings import Settings
 from .renewal import remake_if_free
@@ -31,7 +30,7 @@ def change(
     if situation.resting:
         situation.adopt()
     situation.observer.configure(situation.fleet, situation.settings.poses)
-    if situation.state is State.MOVING and not situation.members.absent(situation.fleet.names):
+    if situation.moving and not situation.members.absent(situation.fleet.names):
         remake_if_free(situation, now)  # otherwise the next step does, when it has rows for them
 
 

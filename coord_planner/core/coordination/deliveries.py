@@ -58,7 +58,7 @@ def _arrive(situation: Situation, request: Request, now: float) -> None:
 def _take_over(situation: Situation, request: Request, outcome: Outcome, now: float) -> None:
     """A reference for the rest, or for another manoeuvre, is there or was refused."""
     pursuit, replaces = situation.pursuit, request.kind == "replace"
-    if situation.state is not State.MOVING or pursuit is None:
+    if not situation.moving or pursuit is None:
         reason = f"{situation.state.value} before it could take over; begin it again when the fleet is idle"
         request.answer(False, f"the fleet was {reason}")
     elif outcome.reference is None and not replaces and situation.members.joining(situation.fleet.names):

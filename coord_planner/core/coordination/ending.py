@@ -48,7 +48,7 @@ def settle(situation: Situation, now: float) -> None:
         situation.ended_at = now
     elif situation.state is State.ENDED and now >= situation.ended_at + situation.settings.commands.zeros_after_end:
         situation.state = State.IDLE
-    elif situation.state is State.MOVING and situation.pursuit is not None:
+    elif situation.moving and situation.pursuit is not None:
         _settle_end(situation, now, situation.pursuit)
 
 

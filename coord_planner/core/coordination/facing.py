@@ -8,7 +8,7 @@ from __future__ import annotations
 import numpy as np
 
 from ..hazard import Point, nearest, told
-from ..messages import Answer, State
+from ..messages import Answer
 from .ending import stop
 from .renewal import replace
 from .situation import Situation
@@ -34,7 +34,7 @@ def _turn_away(situation: Situation, now: float, point: Point) -> None:
     watch.turned_for = point
 
     def answered(answer: Answer) -> None:
-        if not answer.ok and situation.state is State.MOVING:
+        if not answer.ok and situation.moving:
             newest = max(situation.seen.values(), default=now)
             stop(situation, newest, f"turning away was refused: {answer.text}")
 

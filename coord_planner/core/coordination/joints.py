@@ -12,7 +12,7 @@ import numpy as np
 
 from .. import members, rules
 from ..chain import Chain
-from ..messages import Caution, State
+from ..messages import Caution
 from ..pursuit import Takeover
 from ..reference import Reference
 from .desk import Answered, Outcome, Request, figures
@@ -63,7 +63,7 @@ def take_next(situation: Situation, request: Request, outcome: Outcome, now: flo
     """The reference of the next part is there or was refused."""
     pursuit, chain = situation.pursuit, request.chain
     assert chain is not None
-    if situation.state is not State.MOVING or pursuit is None:
+    if not situation.moving or pursuit is None:
         request.answer(False, f"the fleet is {situation.state.value}")
     elif request.made_for != situation.in_force:
         request.answer(False, "something was changed meanwhile; ask again")

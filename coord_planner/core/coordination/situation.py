@@ -96,7 +96,7 @@ class Situation:
         In motion also where it shows another day than at the last tick: a stop is not put off until then.
         """
         newest = max(self.seen.values(), default=self.decision.time)
-        strange = self.state is State.MOVING and bool(self.seen) and abs(now - newest) > _ANOTHER_DAY
+        strange = self.moving and bool(self.seen) and abs(now - newest) > _ANOTHER_DAY
         return newest if strange or not np.isfinite(now) else now
 
     def follow_clock(self, now: float, who: str) -> None:

@@ -53,7 +53,7 @@ def look(situation: Situation, snapshot: Snapshot) -> Look:
     pursuit = situation.pursuit
     if situation.state in (State.STOPPING, State.HELD) and pursuit is not None:
         cautions += situation.watchman.look_on(_view(situation, snapshot, estimate, pursuit))
-    elif situation.state is State.MOVING and pursuit is not None:
+    elif situation.moving and pursuit is not None:
         outside = [situation.fleet.index(name) for name in situation.outside]
         pursuit.advance(now, estimate, situation.fleet, situation.settings, outside)
         face_hazard(situation, now, estimate.states[:, POSE])
@@ -155,9 +155,9 @@ def _decide(
     tick = pursuit.tick if pursuit is not None else None
     ahead = pursuit.ahead if pursuit is not None else None
     clearance, pair = (np.inf, (-1, -1)) if ahead is None else ahead.closest(1)
-    if situation.state is State.MOVING and clearance < situation.settings.site_rules.min_clearance - SHORT:
+    if situation.moving and clearance < situation.settings.site_rules.min_clearance - SHORT:
         cautions.append(rules.clearance_short(situation.settings, situation.names(pair), clearance))
-    if situation.state is State.MOVING and tick is not None:
+    if situation.moving and tick is not None:
         spare, robot, area = tick.reference.fencing.least(situation.fleet, tick.plan.dense(1))
         if spare < -SHORT:
             cautions.append(rules.keep_out_ahead(situation.settings, situation.fleet.names[robot], area, -spare))
@@ -177,7 +177,7 @@ def _decide(
         name, done = f"{situation.chain.name}: {name}", situation.chain.progress(done)
     return Decision(
         **common, manoeuvre=name, progress=float(done),
-        progress_rate=pursuit.pace if situation.state is State.MOVING else 0.0,
+        progress_rate=pursuit.pace if situation.moving else 0.0,
         coupling=task.coupling, alignment=task.alignment, lag=pursuit.behind,
         plan_times=np.zeros(0) if ahead is None else ahead.times,
         plan_poses=np.zeros((len(situation.fleet), 0, 3)) if ahead is None else ahead.poses,

@@ -39,7 +39,7 @@ def follow_members(situation: Situation, snapshot: Snapshot) -> bool:
     pursuit, before = situation.pursuit, len(situation.fleet)
     if pursuit is None or not situation.state.holds_fleet:
         return False
-    if situation.state is State.MOVING:
+    if situation.moving:
         for name, reason in situation.members.unfit(situation.fleet.names, situation.settings.poses).items():
             put_off(situation, (name,), reason, snapshot.time)
         grow(situation)
