@@ -5,7 +5,7 @@
 
     OPENBLAS_NUM_THREADS=1 PYTHONPATH=. python test/measure_closed_loop.py [ROBOTS [SEEDS]]
 
-The benchmark's corner, driven twice with the same pose noise: by the tick solver, and by IPOPT to 1e-6. What counts
+The benchmark's corner, driven twice with the same pose noise: by the tick solver, and by IPOPT to the end. What counts
 is what was driven: 1/2 integral u'(I + chi L)u, steering, accelerating and leaving the asked speed, as the program
 prices them, from the states that the robots really went through.
 """
