@@ -14,7 +14,7 @@ from ..fleet import Fleet
 from ..settings import Settings
 from .course import Course
 
-_STRAIGHT = 1e-3  # 1/m
+STRAIGHT = 1e-3  # 1/m; a smaller bend is none
 
 
 @attrs.frozen(eq=False)
@@ -36,7 +36,7 @@ class Scene:
     neighbours: np.ndarray
     bends: np.ndarray = attrs.Factory(lambda self: np.zeros(len(self.poses)), takes_self=True)
     hazard: Optional[tuple[float, float]] = None
-    turning: bool = attrs.Factory(lambda self: bool(np.abs(self.bends).max() > _STRAIGHT), takes_self=True)
+    turning: bool = attrs.Factory(lambda self: bool(np.abs(self.bends).max() > STRAIGHT), takes_self=True)
 
 
 @attrs.frozen(eq=False)

@@ -16,12 +16,11 @@ from .. import reeds_shepp
 from ..dubins import ArcPath, paths, shortest
 from ..fleet import Fleet, weakest
 from .driving import COMFORT
-from .scene import Laid, Scene
+from .scene import STRAIGHT, Laid, Scene
 
 # Radii tried for a way to an end, as multiples of the machine's smallest: the widest that is hardly longer wins.
 _RADII = (6.0, 4.0, 3.0, 2.0, 1.5, 1.25, 1.1)
 _LONGER = 1.12
-_STRAIGHT = 1e-3  # 1/m
 _SLOWEST = 0.1  # m/s
 # Metres and radians, about the noise of a pose: who stands that near to its end is there. (Who stands a finger's
 # breadth past it would have to drive a full circle.)
@@ -70,7 +69,7 @@ def preceded(laid: Laid, first: tuple[ArcPath, ...]) -> Laid:
 
 
 def _eased_out(pose: np.ndarray, bend: float, rate_per_metre: float, pieces: int = 8) -> ArcPath:
-    if abs(bend) < _STRAIGHT:
+    if abs(bend) < STRAIGHT:
         return ArcPath(as_start(pose), "straight", ())
     length = abs(bend) / rate_per_metre / pieces
     falling = tuple((bend * (pieces - i - 0.5) / pieces, length) for i in range(pieces))

@@ -28,7 +28,6 @@ from .line import Line, line_of
 from .scene import Laid, Scene
 from .ways import as_start, joined, preceded, straightened
 
-_STRAIGHT = 1e-3  # 1/m
 _AS_ONE = 0.03  # 1/m by which a bend may differ from that of a line that turns as one
 _LEAST_SPEED = 0.1  # m/s
 _PIECES = 16  # short arcs of an easing
@@ -72,7 +71,7 @@ class _Out:
 
 def _out_of_wheeling(scene: Scene) -> Optional[_Out]:
     """Parallel curves on which the line straightens; None where it does not turn as one."""
-    if np.abs(scene.bends).max() < _STRAIGHT:
+    if not scene.turning:
         return None
     try:
         line = line_of("", scene)
