@@ -280,6 +280,20 @@ def test_trouble_stops_everybody_and_says_why(code):
     assert yard.standing() and kept_its_limits(yard)
 
 
+def test_a_robot_that_slips_aside_is_warned_of_by_name_and_nobody_else():
+    yard = under_way(1.5)
+    yard.run(1.0)
+    assert "robot astray" not in yard.codes()
+
+    def slip(here):  # by 0.2 m/s, a tick lasts 0.1 s
+        x, y = here.moved.get("cart_2", (0.0, 0.0))
+        here.moved["cart_2"] = (x, y + 0.02)
+
+    yard.run(2.0, slip)
+    found = {c.subject for d in yard.decisions for c in d.warnings if c.code == "robot astray"}
+    assert found == {"cart_2"}
+
+
 def test_only_a_persons_call_moves_a_stopped_robot_again():
     yard = under_way()
     yard.not_ready = frozenset({"cart_2"})
