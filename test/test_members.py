@@ -10,15 +10,20 @@ import numpy as np
 import pytest
 from fleets import LATE, Yard, abreast, carts, settings, small_yard
 
-from coord_planner.core import outline
+from coord_planner.core import bypass, outline
 from coord_planner.core.area import Area
 from coord_planner.core.graph import NeighbourGraph, path
-from coord_planner.core.manoeuvre import Straight
+from coord_planner.core.manoeuvre import Straight, work_out
 from coord_planner.core.messages import Command, State
+from coord_planner.core.plan import closest_along
+from coord_planner.core.problem import POSE
 from coord_planner.core.settings import SiteRules
 
 ONE, TWO, THREE = "cart_1", "cart_2", "cart_3"
 NOISY = {"pose_noise_xy": 0.02, "pose_noise_heading_deg": 0.5}
+IN_FILE = np.array([[0.0, 0.0, 0.0], [-4.0, 0.0, 0.0]])
+WALLS = tuple(Area(name, ((-9.0, y), (30.0, y), (30.0, y + 1.0), (-9.0, y + 1.0)))
+              for name, y in (("hedge", 1.4), ("wall", -2.4)))
 
 
 def turning(driven=(), manoeuvre="corner", seconds=2.5, **imperfect):
@@ -97,12 +102,12 @@ def test_one_that_left_is_an_obstacle_where_it_is_seen():
     assert "clearance" in yard.coordinator.decision.reason and kept(yard) < 1e-6
 
 
-def in_file(walls=()):
+def in_file(walls=(), **imperfect):
     """Two carts, one 4 m behind the other, that drive straight on; the first leaves in front of the second."""
     rules = SiteRules(min_clearance=0.85, keep_out_clearance=0.0, keep_outs=walls)
     chosen = attrs.evolve(settings(horizon={"intervals": 16}), site_rules=rules)
-    yard = Yard(carts(2, response=LATE), np.array([[0.0, 0.0, 0.0], [-4.0, 0.0, 0.0]]),
-                {"on": Straight(distance=18.0)}, chosen, **NOISY)
+    yard = Yard(carts(2, response=LATE), IN_FILE,
+                {"on": Straight(distance=18.0)}, chosen, **imperfect)
     yard.run(1.0)
     assert yard.begin("on").ok
     yard.run(2.5)
@@ -110,8 +115,9 @@ def in_file(walls=()):
     return yard
 
 
-def test_one_that_left_and_stands_in_the_way_is_gone_round():
-    yard = in_file()
+@pytest.mark.parametrize("imperfect", [{}, NOISY], ids=["exactly in line", "noisy"])
+def test_one_that_left_and_stands_in_the_way_is_gone_round(imperfect):
+    yard = in_file(**imperfect)
     yard.run_to(State.ENDED)
     assert yard.decisions[-1].completed and kept(yard) < 1e-6 and yard.codes() <= {"graph changed"}
     assert np.abs(yard.machines.poses()[1] - yard.coordinator.ends[1]).max() < 0.1
@@ -120,9 +126,28 @@ def test_one_that_left_and_stands_in_the_way_is_gone_round():
     assert gaps[0] >= 0.85 and track[1, -1, 0] > track[0, -1, 0] + 8.0 and np.abs(track[1, :, 1]).max() > 1.5
 
 
+@pytest.mark.parametrize("walls, sides", [((), {1.0, -1.0}), ((WALLS[0],), {-1.0}), (WALLS, set())])
+def test_ways_lead_round_one_that_stands_by_every_side_that_has_room(walls, sides):
+    rules = SiteRules(min_clearance=0.85, keep_out_clearance=0.0, keep_outs=walls)
+    fleet, chosen = carts(2), attrs.evolve(settings(), site_rules=rules)
+    further = IN_FILE + np.array([[4.0, 0.0, 0.0], [0.0, 0.0, 0.0]])  # the second comes to it in a straight line
+    task = work_out("on", Straight(distance=18.0), fleet, chosen, further, 0.0, path(fleet.names).hops())
+    task = attrs.evolve(task, stands=(0,))
+    poses, speeds, bends = task.guess(np.arange(0.0, task.arrival, 0.25))
+    guess = np.concatenate([poses, np.stack([bends, speeds, bends, speeds], axis=2)], axis=2)
+    guess[0], guess[0, :, 3:] = guess[0, 0], 0.0
+    assert bypass.in_the_way(task, fleet, chosen, guess)
+    found = bypass.guesses(task, fleet, chosen, guess)
+    assert {float(np.sign(each[1, np.argmax(np.abs(each[1, :, 1])), 1])) for each in found} == sides
+    for each in found:
+        assert closest_along(fleet, each[:, :, POSE])[0] >= 0.85 and each[0] == pytest.approx(guess[0])
+        assert each[1, -1, POSE] == pytest.approx(guess[1, -1, POSE], abs=0.2)  # it is where solving begins, no plan
+    clear = guess + np.array([0.0, 4.0, 0.0, 0.0, 0.0, 0.0, 0.0]) * np.array([0.0, 1.0])[:, None, None]
+    assert not bypass.in_the_way(task, fleet, chosen, clear) and bypass.guesses(task, fleet, chosen, clear) == []
+
+
 def test_one_that_left_and_cannot_be_gone_round_stops_the_others_with_figures():
-    yard = in_file(tuple(Area(name, ((-9.0, y), (30.0, y), (30.0, y + 1.0), (-9.0, y + 1.0)))
-                         for name, y in (("hedge", 1.4), ("wall", -2.4))))
+    yard = in_file(WALLS, **NOISY)
     yard.run_to(State.HELD)
     assert re.search(r"cart_2.* \d\.\d\d m", yard.coordinator.decision.reason) and kept(yard) < 1e-6
     assert yard.standing()

@@ -21,6 +21,7 @@ from .watch import margin
 
 _PLACES = 200  # of a way that are looked at
 _STILL = 1e-3  # metres that who stands may seem to drive
+_GRAZED = 0.1  # metres by which a guess, which is led along the edge of what it passes, may reach over it
 
 
 def in_the_way(task: Task, fleet: Fleet, settings: Settings, states: np.ndarray) -> bool:
@@ -60,7 +61,7 @@ def _bent(
     blocked = shapely.union_all([standing, *blocked_by_site(fleet, settings, k, task.speed)])
     end, bend = bool(np.isfinite(task.ends[k, 0])), bend_of(fleet.robots[k], task.max_curvature)
     bent = round_areas(way, list(shapely.get_parts(blocked)), side, bend, end)
-    return None if _line(bent).intersects(blocked) else bent
+    return None if _line(bent).intersects(shapely.buffer(blocked, -_GRAZED)) else bent
 
 
 def _line(way: ArcPath) -> shapely.LineString:
