@@ -168,6 +168,19 @@ def test_a_change_on_the_way_holds_for_the_next_part_too():
     assert turned(here) == pytest.approx([30.0, 30.0], abs=1.0)
 
 
+def test_a_change_that_comes_when_a_part_only_settles_makes_nothing_anew():
+    here = yard(rows=attrs.evolve(ROWS, joint_speed=0.0))
+    assert here.begin("rows").ok
+    part = here.coordinator.reference
+    horizon, arrives = here.settings.horizon, part.task.arrival
+    here.run(arrives - horizon.lead)  # what is made now takes over when the part's ways are driven
+    coupled = attrs.evolve(here.settings, coupling=attrs.evolve(here.settings.coupling, strength=9.0))
+    here.coordinator.change(here.now, settings=coupled)
+    assert here.coordinator.jobs() == [] and here.now + horizon.lead < part.end - 2 * horizon.interval
+    here.run_to(State.ENDED)
+    assert here.coordinator.decision.completed
+
+
 def test_members_come_and_go_on_the_way_and_all_turn_away_from_a_hazard():
     """Neighbours come from the poses; the sequence has a coupling of its own, whatever is made anew."""
     rows = Sequence(("straight 6", "bend", "straight 8"), joint_speed=0.8, coupling=7.0, named={"bend": BEND})
